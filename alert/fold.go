@@ -1,0 +1,232 @@
+package alert
+
+import (
+	"strings"
+
+	"midwatch/configs"
+	"midwatch/detect"
+)
+
+// Families: kinds that are one trouble when they come to one subject at one time.
+const (
+	familyLimit   = "limit"
+	familySwing   = "swing"
+	familySlow    = "slow"
+	familyMeasure = "measurement"
+	familyMode    = "mode"
+	familyTuning  = "tuning"
+	familyData    = "data"
+	familySource  = "source"
+)
+
+var families = map[detect.Kind]string{
+	// An OP at its limit, the offset it leaves and the wind-up after it.
+	detect.OutputSaturation: familyLimit,
+	detect.SustainedOffset:  familyLimit,
+	// One loop swings for one reason at a time; a sticking valve is a reason to swing.
+	detect.GrowingOscillation:   familySwing,
+	detect.SustainedOscillation: familySwing,
+	detect.SharedOscillation:    familySwing,
+	detect.ValveStickingKind:    familySwing,
+	detect.SluggishRecovery:     familySlow,
+	detect.FrozenPV:             familyMeasure,
+	detect.PVAtRangeEnd:         familyMeasure,
+	detect.NotInNormalMode:      familyMode,
+	detect.TuningChanged:        familyTuning,
+	detect.StaleData:            familyData,
+	detect.SourceDown:           familySource,
+	detect.SourceLate:           familySource,
+}
+
+// loopFamilies are those in which a loop can have an episode.
+var loopFamilies = []string{familyLimit, familySwing, familySlow, familyMeasure, familyMode, familyTuning, familyData}
+
+func familyOf(k detect.Kind) string {
+	if f, ok := families[k]; ok {
+		return f
+	}
+	return string(k)
+}
+
+// momentary kinds are events, not states: they are over as soon as they are said.
+func momentary(k detect.Kind) bool { return k == detect.TuningChanged || k == detect.ClockStepKind }
+
+// place is where an episode is looked up.
+func place(subject, family string) string { return subject + "\x00" + family }
+
+// samePeriod says whether two findings may be one swing: periods within a factor
+// of two, or not known.
+func samePeriod(a, b *detect.Finding) bool {
+	x, okx := a.Measures.Get("period_s")
+	y, oky := b.Measures.Get("period_s")
+	return !okx || !oky || x <= 0 || y <= 0 || (x <= 2*y && y <= 2*x)
+}
+
+// relatives of a loop: those in one cascade with it.
+type relatives map[string][]string
+
+func cascades(loops []*configs.Loop) relatives {
+	known := map[string]bool{}
+	for _, l := range loops {
+		known[l.Name] = true
+	}
+	near := map[string][]string{}
+	for _, l := range loops {
+		if l.Inner != "" && l.Inner != l.Name && known[l.Inner] {
+			near[l.Name] = append(near[l.Name], l.Inner)
+			near[l.Inner] = append(near[l.Inner], l.Name)
+		}
+	}
+	out := relatives{}
+	for name := range near {
+		seen, todo := map[string]bool{name: true}, []string{name}
+		for len(todo) > 0 {
+			x := todo[0]
+			todo = todo[1:]
+			for _, y := range near[x] {
+				if !seen[y] {
+					seen[y] = true
+					todo = append(todo, y)
+					out[name] = append(out[name], y)
+				}
+			}
+		}
+	}
+	return out
+}
+
+// home finds the episode a finding belongs to: the one it is in, the open one of
+// its place, an open one of its cascade or dead source, one that ended less than
+// a day ago; nil when it is a new trouble.
+func (d *Desk) home(f *detect.Finding, family string) *Episode {
+	m := &d.mem
+	if e := m.resolve(m.heard[memberKey(f)].Episode); e != nil && e.Open() && e.member(f) != nil && e.member(f).Open {
+		return e
+	}
+	own := m.episodes[m.index[place(subjectKey(f.Subject), family)]]
+	if own != nil && own.Open() && (own.has(f.Subject) || own.compatible(f)) {
+		return own
+	}
+	if family == familyData {
+		if e := m.episodes[m.index[place("source:"+d.set.source[f.Loop], familySource)]]; e != nil && e.openKind(detect.SourceDown) {
+			return e
+		}
+	}
+	if f.Loop != "" && (family == familySwing || family == familyLimit) {
+		for _, r := range d.set.cascade[f.Loop] {
+			if e := m.episodes[m.index[place("loop:"+r, family)]]; e != nil && e.Open() && e.compatible(f) {
+				return e
+			}
+		}
+	}
+	// Only what the subject itself had comes back: a loop that was once part of
+	// another's episode starts one of its own.
+	if own != nil && own.Into == "" && own.Subject == f.Subject && f.At-own.Cleared <= day {
+		return own
+	}
+	return nil
+}
+
+// resolve follows folded episodes to where they went on.
+func (m *memory) resolve(id string) *Episode {
+	e := m.episodes[id]
+	for n := 0; e != nil && e.Into != "" && n < 8; n++ {
+		e = m.episodes[e.Into]
+	}
+	return e
+}
+
+func (e *Episode) member(f *detect.Finding) *Member {
+	for i := range e.Members {
+		if g := &e.Members[i].Finding; g.Kind == f.Kind && g.Subject == f.Subject {
+			return &e.Members[i]
+		}
+	}
+	return nil
+}
+
+func (e *Episode) has(s detect.Subject) bool {
+	for i := range e.Members {
+		if e.Members[i].Finding.Subject == s {
+			return true
+		}
+	}
+	return false
+}
+
+func (e *Episode) compatible(f *detect.Finding) bool {
+	for i := range e.Members {
+		if e.Members[i].Open && samePeriod(&e.Members[i].Finding, f) {
+			return true
+		}
+	}
+	return false
+}
+
+func (e *Episode) openKind(k detect.Kind) bool {
+	for i := range e.Members {
+		if e.Members[i].Open && e.Members[i].Finding.Kind == k {
+			return true
+		}
+	}
+	return false
+}
+
+// gather folds into e what was raised before the common trouble was seen.
+func (b *batch) gather(e *Episode, f *detect.Finding) error {
+	m := &b.d.mem
+	var loops []string
+	family := familySwing
+	switch f.Kind {
+	case detect.SharedOscillation:
+		loops = f.Loops
+	case detect.SourceDown:
+		loops, family = b.d.set.bySource[f.Subject.Source], familyData
+	default:
+		return nil
+	}
+	for _, l := range loops {
+		p := place("loop:"+l, family)
+		o := m.episodes[m.index[p]]
+		if o != nil && o != e && o.Open() && !o.openKind(detect.SharedOscillation) && o.compatible(f) {
+			if err := b.foldInto(o, e, f.At); err != nil {
+				return err
+			}
+		}
+		if family == familySwing && (o == nil || !o.Open() || o.Into != "") {
+			m.index[p] = e.ID
+		}
+	}
+	return nil
+}
+
+func (b *batch) foldInto(o, e *Episode, at int64) error {
+	for i := range o.Members {
+		if !o.Members[i].Open {
+			continue
+		}
+		g := o.Members[i].Finding
+		if t := e.member(&g); t != nil {
+			*t = o.Members[i]
+		} else {
+			e.Members = append(e.Members, o.Members[i])
+		}
+		b.d.mem.index[place(subjectKey(g.Subject), familyOf(g.Kind))] = e.ID
+		if err := b.hearIn(&g, e.ID); err != nil {
+			return err
+		}
+	}
+	o.Into, o.Cleared, o.Last = e.ID, at, at
+	if err := b.journal(o, Entry{At: at, What: "folded into " + e.ID}); err != nil {
+		return err
+	}
+	if err := b.journal(e, Entry{At: at, What: "took in " + o.ID + " (" + strings.Join(o.Loops(), ", ") + ")"}); err != nil {
+		return err
+	}
+	// What nobody was told of yet need not be told.
+	dropped, err := b.dropSteps(o.ID)
+	if err != nil || o.Steps == 0 || dropped == o.Steps {
+		return err
+	}
+	return b.step(o, detect.Cleared, at, true, false)
+}

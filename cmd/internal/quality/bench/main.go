@@ -1,0 +1,72 @@
+// Command bench scores detection on the labelled scenarios of package quality and
+// on the recorded runs, and prints the tables.
+package main
+
+import (
+	"flag"
+	"fmt"
+	"os"
+	"path/filepath"
+	"regexp"
+	"sync/atomic"
+	"time"
+
+	"midwatch/cmd/internal/quality"
+)
+
+func main() {
+	n := flag.Int("n", 20, "scenarios per family")
+	days := flag.Float64("d", 14, "days of a healthy loop recorded at 10 s (faster ones fewer, slower ones more)")
+	seed := flag.Uint64("seed", 1, "seed")
+	fam := flag.String("family", "", "only families whose name matches the regular expression")
+	hold := flag.Bool("hold", false, "use the held-back space of seeds")
+	nuisance := flag.Float64("nuisance", 0, "nuisance_per_loop_year handed to detection (0: its default)")
+	verbose := flag.Bool("v", false, "list what was missed, wrong or false, a line each")
+	te := flag.String("te", "", "score the recorded runs of this folder instead (testdata/te)")
+	dump := flag.String("dump", "", "write one scenario (-family, -index) as trend CSV and loop list into this folder")
+	index := flag.Int("index", 0, "of the scenario for -dump or -one")
+	one := flag.Bool("one", false, "run only the scenario -index of each family and print its findings")
+	list := flag.Bool("list", false, "list the families")
+	flag.Parse()
+	if flag.NArg() > 0 {
+		fmt.Fprintf(os.Stderr, "unexpected argument %q; hint: see -h\n", flag.Arg(0))
+		os.Exit(2)
+	}
+	re, err := regexp.Compile(*fam)
+	if err != nil {
+		fmt.Fprintf(os.Stderr, "-family: %v; hint: a regular expression such as 'growing|edge'\n", err)
+		os.Exit(2)
+	}
+	o := quality.Options{Loops: *n, Days: *days, Seed: *seed, Hold: *hold, Nuisance: *nuisance, Match: re.MatchString}
+	switch {
+	case *list:
+		quality.List(os.Stdout)
+	case *te != "":
+		err = quality.ScoreRecorded(os.Stdout, *te, *verbose)
+	case *dump != "":
+		if err = os.MkdirAll(*dump, 0o755); err == nil {
+			err = quality.Dump(o, *index, filepath.Clean(*dump))
+		}
+	case *one:
+		err = quality.One(os.Stdout, o, *index)
+	default:
+		begin := time.Now()
+		var done atomic.Int64
+		o.Each = func(r *quality.Result) {
+			if k := done.Add(1); k%50 == 0 {
+				fmt.Fprintf(os.Stderr, "\r%d scenarios, %.0f s", k, time.Since(begin).Seconds())
+			}
+		}
+		results := quality.Run(o)
+		fmt.Fprintln(os.Stderr)
+		if *verbose {
+			quality.Details(os.Stdout, results)
+		}
+		quality.Table(os.Stdout, results)
+		fmt.Fprintf(os.Stderr, "%.0f s\n", time.Since(begin).Seconds())
+	}
+	if err != nil {
+		fmt.Fprintln(os.Stderr, err)
+		os.Exit(1)
+	}
+}

@@ -1,0 +1,110 @@
+package quality
+
+import (
+	"math"
+	"math/rand/v2"
+
+	"midwatch/collector"
+	"midwatch/detect"
+)
+
+// cascadeOf draws an inner flow loop and an outer loop that sets its SP; ratio is
+// how much slower the outer one is at least. It is nil where the draw does not fit.
+func cascadeOf(r *rand.Rand) *scenario {
+	inner := drawRig(r, "inner", wish{shapes: []shape{flowShape, lagShape}, minS: 2, maxS: 60, noD: true, plainLaw: true, perPeriod: 6})
+	slower := inner.recovery * between(r, 2, 8)
+	outer := drawRig(r, "outer", wish{shapes: []shape{temperature, lagShape, twoLags, level}, minS: slower, maxS: 6 * slower, noD: true})
+	if outer.recovery < 5*inner.recovery {
+		return nil
+	}
+	// The inner loop is a lag of the outer one.
+	closed := inner.theta + inner.law.ti/math.Max(1, inner.law.kc*inner.k)
+	outer.valve.lag = 0
+	outer.proc.in = curve{}
+	outer.proc.theta = outer.h * math.Max(1, math.Round(outer.proc.theta/outer.h))
+	outer.law.kc *= 0.8
+	outer.perOP = between(r, 0.5, 1)
+	outer.drives = inner
+	outer.h = inner.h
+	outer.valve.lag = closed // for the analysis only: the element is the inner loop
+	outer.measure()
+	if maxSensitivity(outer.plant(), outer.wScale(), outer.law.kc, outer.law.ti, outer.law.td) > 1.9 {
+		return nil
+	}
+	outer.row.Inner, outer.row.Element = "inner", "inner-loop"
+	inner.row.NormalMode = "cascade"
+	inner.setCascade()
+	if !math.IsNaN(outer.row.GainPct) {
+		enter(outer, outer.row, 1)
+	}
+	inner.sp.every, inner.load.daily = 0, 0
+	inner.load.stepEvery = outer.recovery * between(r, 2, 20)
+	s := &scenario{rigs: []*rig{outer, inner}}
+	s.couple = func(_ float64, rigs []*rig) {
+		o, i := rigs[0], rigs[1]
+		i.sp.target = i.proc.y0 + o.perOP*(o.law.u-o.proc.u0)
+	}
+	return s
+}
+
+func (l *rig) setCascade() { l.mode = collector.Cascade }
+
+func cascadeSound(r *rand.Rand, days float64) *scenario {
+	s := retry(func() *scenario { return cascadeOf(r) })
+	h := healthyFor(s.rigs[0], days)
+	s.duration = h.duration / 2 // two loops
+	s.truth = h.truth
+	return s
+}
+
+func cascadeGrowing(r *rand.Rand, _ float64) *scenario {
+	return retry(func() *scenario {
+		s := cascadeOf(r)
+		if s == nil {
+			return nil
+		}
+		l := s.rigs[0]
+		growth := between(r, 1.06, 1.35)
+		kc, ti, period, ok := unstableFor(l, growth, true)
+		if !ok || !playable(l, kc, ti, period) {
+			return nil
+		}
+		right := knobs(l, kc)
+		if !has(right, detect.ResetTooShort) {
+			return nil
+		}
+		base := l.baseline(r)
+		l.setOnset(base, func(l *rig) { l.law.retune(kc, ti, l.law.td) })
+		l.ringLag = int(math.Round(period / 2 / l.h))
+		s.duration = base + period*math.Min(math.Max(math.Log(60)/math.Log(growth)+25, 40), 120)
+		s.truth = truth{onset: base, kinds: kinds{detect.GrowingOscillation}, also: append(kinds{detect.SustainedOscillation, detect.SharedOscillation}, saturating...),
+			causes: right, unit: period, cycles: true, subtle: ringUnder(3, 2),
+			forbid: func(s *scenario, loop string, c detect.Cause) bool {
+				return loop == "inner" && (noTuningCause(s, loop, c) || c == detect.ValveSticking)
+			}}
+		return s
+	})
+}
+
+func cascadeSticking(r *rand.Rand, _ float64) *scenario {
+	return retry(func() *scenario {
+		s := cascadeOf(r)
+		if s == nil {
+			return nil
+		}
+		o, l := s.rigs[0], s.rigs[1]
+		st := logBetween(r, 3, 8)
+		j := st * between(r, 0.4, 1)
+		if l.law.kc*l.sensor.sigma > 0.2*st || l.k*j < 8*l.sensor.sigma {
+			return nil
+		}
+		base := o.baseline(r)
+		l.setOnset(base, func(l *rig) { l.valve.kind, l.valve.fs, l.valve.fd = twoParam, (st+j)/2, (st-j)/2 })
+		l.load.ou = math.Min(l.load.ou, 0.1*st)
+		s.duration = base + 120*o.pu
+		s.truth = truth{onset: base, member: 1, kinds: kinds{detect.ValveStickingKind, detect.SustainedOscillation},
+			also: kinds{detect.SharedOscillation, detect.SluggishRecovery}, causes: causes{detect.ValveSticking}, unit: 3 * o.pu, cycles: true, subtle: rmsUnder(1.5),
+			forbid: func(s *scenario, loop string, c detect.Cause) bool { return noTuningCause(s, loop, c) }}
+		return s
+	})
+}

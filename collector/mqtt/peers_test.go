@@ -1,0 +1,536 @@
+package mqtt
+
+import (
+	"bytes"
+	"encoding/csv"
+	"encoding/json"
+	"fmt"
+	"math"
+	"net"
+	"os"
+	"os/exec"
+	"path/filepath"
+	"strconv"
+	"strings"
+	"sync"
+	"testing"
+	"time"
+
+	"midwatch/collector"
+	"midwatch/configs"
+)
+
+const feedDir = "../../testdata/peers/mqtt"
+
+// needPeers skips without the independent peers, or fails when MIDWATCH_PEERS says
+// that they must be there.
+func needPeers(t *testing.T) {
+	t.Helper()
+	missing := ""
+	for _, p := range []string{"mosquitto", "mosquitto_passwd", "node"} {
+		if _, err := exec.LookPath(p); err != nil {
+			missing += " " + p
+		}
+	}
+	if _, err := os.Stat(filepath.Join(feedDir, "node_modules", "mqtt")); err != nil {
+		missing += " testdata/peers/mqtt/node_modules (npm install there)"
+	}
+	switch {
+	case missing == "":
+	case os.Getenv("MIDWATCH_PEERS") != "":
+		t.Fatalf("MIDWATCH_PEERS is set, but missing:%s", missing)
+	default:
+		t.Skipf("missing:%s", missing)
+	}
+}
+
+// mosquitto is a real broker as a child process.
+type mosquitto struct {
+	t    *testing.T
+	port int
+	conf string
+	cmd  *exec.Cmd
+	log  bytes.Buffer
+}
+
+func newMosquitto(t *testing.T, lines ...string) *mosquitto {
+	t.Helper()
+	needPeers(t)
+	l, err := net.Listen("tcp", "127.0.0.1:0")
+	if err != nil {
+		t.Fatal(err)
+	}
+	m := &mosquitto{t: t, port: l.Addr().(*net.TCPAddr).Port, conf: filepath.Join(t.TempDir(), "mosquitto.conf")}
+	l.Close()
+	if len(lines) == 0 {
+		lines = []string{"allow_anonymous true"}
+	}
+	text := fmt.Sprintf("listener %d 127.0.0.1\nuser root\npersistence false\nmax_queued_messages 10000\n%s\n", m.port, strings.Join(lines, "\n"))
+	if err := os.WriteFile(m.conf, []byte(text), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	m.up()
+	t.Cleanup(m.down)
+	return m
+}
+
+func (m *mosquitto) url() string { return fmt.Sprintf("mqtt://127.0.0.1:%d", m.port) }
+
+func (m *mosquitto) up() {
+	m.t.Helper()
+	m.cmd = exec.Command("mosquitto", "-c", m.conf)
+	m.log.Reset()
+	m.cmd.Stderr = &m.log
+	if err := m.cmd.Start(); err != nil {
+		m.t.Fatal(err)
+	}
+	eventually(m.t, "mosquitto listens", func() bool {
+		c, err := net.Dial("tcp", fmt.Sprintf("127.0.0.1:%d", m.port))
+		if err == nil {
+			c.Close()
+		}
+		return err == nil
+	})
+}
+
+func (m *mosquitto) down() {
+	if m.cmd != nil {
+		m.cmd.Process.Kill()
+		m.cmd.Wait()
+		m.cmd = nil
+	}
+}
+
+// feedReport is what feed.mjs prints at its end.
+type feedReport struct {
+	Published, Samples, Foreign, Ncmd, Ticks int
+	ForeignTopics                            map[string]int
+	Faults                                   []string
+}
+
+// truth is what the feed published, by loop, in order.
+type truth map[string][]truthRow
+
+type truthRow struct {
+	time       int64
+	pv, sp, op float64
+}
+
+// feed is a running feed.mjs.
+type feed struct {
+	t     *testing.T
+	cmd   *exec.Cmd
+	out   bytes.Buffer
+	errs  bytes.Buffer
+	truth string
+}
+
+func startFeed(t *testing.T, m *mosquitto, zone string, args ...string) *feed {
+	t.Helper()
+	f := &feed{t: t, truth: filepath.Join(t.TempDir(), "truth.csv")}
+	args = append([]string{"feed.mjs", "--port", strconv.Itoa(m.port), "--truth", f.truth, "--quiet"}, args...)
+	f.cmd = exec.Command("node", args...)
+	f.cmd.Dir = feedDir
+	f.cmd.Env = append(os.Environ(), "TZ="+zone)
+	f.cmd.Stdout, f.cmd.Stderr = &f.out, &f.errs
+	if err := f.cmd.Start(); err != nil {
+		t.Fatal(err)
+	}
+	done := false
+	t.Cleanup(func() {
+		if !done && f.cmd.ProcessState == nil {
+			f.cmd.Process.Kill()
+			f.cmd.Wait()
+		}
+	})
+	return f
+}
+
+// end waits for the feed. Its exit code proves that nobody else published.
+func (f *feed) end() (feedReport, truth) {
+	f.t.Helper()
+	if err := f.cmd.Wait(); err != nil {
+		f.t.Fatalf("feed: %v (exit 3 means that somebody else published)\n%s%s", err, f.out.String(), f.errs.String())
+	}
+	var rep feedReport
+	if err := json.Unmarshal(f.out.Bytes(), &rep); err != nil {
+		f.t.Fatal(err)
+	}
+	file, err := os.Open(f.truth)
+	if err != nil {
+		f.t.Fatal(err)
+	}
+	defer file.Close()
+	rows, err := csv.NewReader(file).ReadAll()
+	if err != nil {
+		f.t.Fatal(err)
+	}
+	num := func(s string) float64 {
+		if s == "" {
+			return math.NaN()
+		}
+		v, err := strconv.ParseFloat(s, 64)
+		if err != nil {
+			f.t.Fatal(err)
+		}
+		return v
+	}
+	tr := truth{}
+	for _, r := range rows[1:] {
+		at, err := time.Parse(time.RFC3339Nano, r[0])
+		if err != nil {
+			f.t.Fatal(err)
+		}
+		tr[r[1]] = append(tr[r[1]], truthRow{at.UnixMilli(), num(r[2]), num(r[3]), num(r[4])})
+	}
+	return rep, tr
+}
+
+// feedLoop is the name and area that feed.mjs gives its loop i of n in 4 areas.
+func feedLoop(i int) (name, area string) {
+	return fmt.Sprintf("%s-%04d", []string{"LIC", "FIC", "PIC", "AIC", "TIC"}[i%5], i+1), fmt.Sprintf("bay%d", i%4+1)
+}
+
+// feedBindings address PV, SP and OP (and mode for objects) of n loops in a form.
+func feedBindings(form string, n int) (out []collector.Binding) {
+	for i := range n {
+		name, area := feedLoop(i)
+		head := "kestrelfen/" + area + "/" + name
+		add := func(r collector.Role, address string) {
+			out = append(out, collector.Binding{Loop: collector.LoopID(i), Name: name, Role: r, Address: address, Sample: 1000})
+		}
+		for k, r := range map[string]collector.Role{"pv": collector.RolePV, "sp": collector.RoleSP, "op": collector.RoleOP} {
+			switch form {
+			case "plain", "json":
+				add(r, head+"/"+k)
+			case "object":
+				add(r, head+"#"+k)
+			case "wide":
+				add(r, fmt.Sprintf("kestrelfen/%s/all#['%s.%s']", area, name, strings.ToUpper(k)))
+			case "sparkplug":
+				add(r, fmt.Sprintf("KestrelFen/edge-1/%s#%s/%s", area, name, strings.ToUpper(k)))
+			}
+		}
+		if form == "object" {
+			add(collector.RoleMode, head+"#mode")
+		}
+	}
+	return out
+}
+
+func TestTextFormsAgainstFeed(t *testing.T) {
+	cases := []struct {
+		form, time string
+		cfg        configs.MQTT
+		faults     []string
+		badPV      int // PV samples that the truth does not know to be bad
+		old        int // PV samples an hour too early
+	}{
+		{"plain", "none", configs.MQTT{Payload: "plain"}, []string{"null@1", "nan@3", "garbage@4"}, 2, 0},
+		{"json", "rfc3339", configs.MQTT{Payload: "json", Value: "value", Time: "timestamp", Quality: "quality"}, []string{"null@1", "nan@3", "garbage@4", "bad@5", "old@6.5"}, 2, 1},
+		{"json", "local", configs.MQTT{Payload: "json", Value: "value", Time: "timestamp", Quality: "quality", TimeZone: "Australia/Adelaide", QoS: 1}, []string{"bad@2"}, 0, 0},
+		{"object", "ms", configs.MQTT{Payload: "json", Time: "ts", Quality: "quality"}, []string{"null@1", "bad@3", "old@5"}, 0, 1},
+		{"wide", "s", configs.MQTT{Payload: "json", Time: "ts"}, []string{"null@1"}, 0, 0},
+	}
+	for _, c := range cases {
+		t.Run(c.form+" "+c.time, func(t *testing.T) {
+			t.Parallel()
+			m := newMosquitto(t)
+			const n = 8
+			c.cfg.Broker = m.url()
+			s := build(t, c.cfg, Options{StateDir: t.TempDir()}, feedBindings(c.form, n)...)
+			r := start(t, s)
+			eventually(t, "watching", watching(s))
+			args := []string{"--loops", strconv.Itoa(n), "--rate", "4", "--form", c.form, "--time", c.time, "--seconds", "8"}
+			for _, x := range c.faults {
+				args = append(args, "--fault", x)
+			}
+			rep, tr := startFeed(t, m, "Australia/Adelaide", args...).end()
+			if len(rep.Faults) != len(c.faults) {
+				t.Errorf("faults %v", rep.Faults)
+			}
+			bad, old := 0, 0
+			for i := range n {
+				name, _ := feedLoop(i)
+				rows := tr[name]
+				if len(rows) < 20 {
+					t.Fatalf("%s: only %d rows of truth", name, len(rows))
+				}
+				within(t, 5*time.Second, name+" is complete", func() bool { return len(r.of(collector.LoopID(i), collector.RolePV)) >= len(rows) })
+				for role, of := range map[collector.Role]func(truthRow) float64{
+					collector.RolePV: func(x truthRow) float64 { return x.pv },
+					collector.RoleSP: func(x truthRow) float64 { return x.sp },
+					collector.RoleOP: func(x truthRow) float64 { return x.op }} {
+					got := r.of(collector.LoopID(i), role)
+					if len(got) != len(rows) {
+						t.Errorf("%s role %d: %d samples, %d published", name, role, len(got), len(rows))
+						continue
+					}
+					for k, x := range got {
+						want := of(rows[k])
+						// Bad quality of an object or a topic makes its values bad, whatever the truth holds.
+						if role == collector.RolePV {
+							switch {
+							case x.Quality == collector.Bad && want == want:
+								bad++
+								continue
+							case x.Time == rows[k].time-3600_000:
+								old++
+							case c.time != "none" && x.Time != rows[k].time:
+								t.Errorf("%s PV %d: time off by %d ms", name, k, x.Time-rows[k].time)
+							}
+						}
+						if x.Quality == collector.Good && !sameFloat(x.Value, want) || x.Quality != collector.Good && !math.IsNaN(x.Value) {
+							t.Errorf("%s role %d, %d: %v, published %v", name, role, k, x.Value, want)
+						}
+						if x.Lost || x.Unconfirmed {
+							t.Errorf("%s role %d, %d is flagged: %+v", name, role, k, x)
+						}
+					}
+				}
+			}
+			if bad != c.badPV || old != c.old {
+				t.Errorf("%d bad PV, want %d; %d old, want %d", bad, c.badPV, old, c.old)
+			}
+			for i, k := range r.tickList() {
+				if !k.Alive || k.Arrived-k.Through != defaultMargin.Milliseconds() {
+					t.Errorf("tick %d: %+v", i, k)
+				}
+			}
+			if st := s.State(); st.Counts["dropped"] != 0 || st.Counts["unmatched"] != 0 || len(st.Refused) != 0 {
+				t.Errorf("state %+v", st)
+			}
+		})
+	}
+}
+
+func TestMosquittoRestartAndSilentACL(t *testing.T) {
+	t.Parallel()
+	dir := t.TempDir()
+	acl, pass := filepath.Join(dir, "acl"), filepath.Join(dir, "pass")
+	if err := os.WriteFile(acl, []byte("user midwatch\ntopic read kestrelfen/LIC-1/pv\nuser plant\ntopic readwrite #\n"), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	needPeers(t)
+	for _, u := range [][]string{{"-c", "-b", pass, "midwatch", "kestrel"}, {"-b", pass, "plant", "fen"}} {
+		if out, err := exec.Command("mosquitto_passwd", u...).CombinedOutput(); err != nil {
+			t.Fatalf("%v: %s", err, out)
+		}
+	}
+	m := newMosquitto(t, "allow_anonymous false", "password_file "+pass, "acl_file "+acl)
+	s := build(t, configs.MQTT{Broker: m.url(), User: "midwatch", Password: "wrong"}, Options{}, bind(1, collector.RolePV, "kestrelfen/LIC-1/pv"), bind(2, collector.RolePV, "kestrelfen/LIC-2/pv"))
+	wrong := start(t, s)
+	eventually(t, "the refusal is explained", func() bool { return strings.Contains(s.State().Problem, "refused the login") })
+	s2 := build(t, configs.MQTT{Broker: m.url(), User: "midwatch", Password: "kestrel"}, Options{}, bind(1, collector.RolePV, "kestrelfen/LIC-1/pv"), bind(2, collector.RolePV, "kestrelfen/LIC-2/pv"))
+	r := start(t, s2)
+	pub := func(topic, v string) {
+		out, err := exec.Command("mosquitto_pub", "-p", strconv.Itoa(m.port), "-u", "plant", "-P", "fen", "-t", topic, "-m", v).CombinedOutput()
+		if err != nil {
+			t.Fatalf("%v: %s", err, out)
+		}
+	}
+	for round := range 2 {
+		eventually(t, "watching", watching(s2))
+		pub("kestrelfen/LIC-2/pv", "9")
+		pub("kestrelfen/LIC-1/pv", "5")
+		eventually(t, "a value", func() bool { return len(r.of(1, collector.RolePV)) == round+1 })
+		eventually(t, "the silent tag is named, though its subscription was granted", func() bool {
+			x := s2.State().Refused
+			return len(x) == 1 && x[0].Address == "kestrelfen/LIC-2/pv" && strings.Contains(x[0].Why, "permission or wrong topic")
+		})
+		if round == 0 {
+			m.down()
+			eventually(t, "down", func() bool { return s2.State().Counts["losses"] == 1 })
+			m.up()
+		}
+	}
+	if len(wrong.samples) != 0 {
+		t.Error("values without a login")
+	}
+}
+
+// kept is a birth store in memory.
+type kept struct {
+	mu sync.Mutex
+	m  map[string][]byte
+}
+
+func (k *kept) Get(key string) ([]byte, error) {
+	k.mu.Lock()
+	defer k.mu.Unlock()
+	return k.m[key], nil
+}
+
+func (k *kept) Put(key string, v []byte) error {
+	k.mu.Lock()
+	defer k.mu.Unlock()
+	if k.m == nil {
+		k.m = map[string][]byte{}
+	}
+	if k.m[key] = v; len(v) == 0 {
+		delete(k.m, key)
+	}
+	return nil
+}
+
+func TestSparkplugAgainstFeed(t *testing.T) {
+	for _, form := range [][]string{{"--alias", "on"}, {"--alias", "on", "--bare"}, {"--alias", "off"}} {
+		t.Run(strings.Join(form, " "), func(t *testing.T) {
+			t.Parallel()
+			m := newMosquitto(t)
+			const n = 8
+			s := build(t, configs.MQTT{Broker: m.url(), Payload: "sparkplug"}, Options{Births: &kept{}}, feedBindings("sparkplug", n)...)
+			r := start(t, s)
+			eventually(t, "watching", watching(s))
+			args := []string{"--loops", strconv.Itoa(n), "--rate", "4", "--form", "sparkplug", "--seconds", "22"}
+			faults := []string{"seq-gap@1", "unknown-alias@2", "null@3", "bad@5", "stale@7", "historical@8.5", "rebirth@9", "realias@10", "ddeath@11", "ndeath@17.1"}
+			for _, x := range faults {
+				args = append(args, "--fault", x)
+			}
+			rep, tr := startFeed(t, m, "UTC", append(args, form...)...).end()
+			if len(rep.Faults) != len(faults) {
+				t.Fatalf("faults %v", rep.Faults)
+			}
+			eventually(t, "the last death", func() bool { return s.State().Counts["deaths"] == 3 })
+			checkSparkplug(t, r, tr, n)
+			c := s.State().Counts
+			for name, want := range map[string]uint64{"seq_gaps": 1, "unresolved": 1, "historical": 20, "births": 5 + 5 + 5 + 1 + 5, "malformed": 0, "dropped": 0, "ignored": 0} {
+				if c[name] != want {
+					t.Errorf("count %s is %d, want %d", name, c[name], want)
+				}
+			}
+			lost, uncertain := 0, 0
+			for _, x := range r.samples {
+				if x.Lost && x.Role == collector.RolePV {
+					lost++
+				}
+				if x.Quality == collector.Uncertain {
+					uncertain++
+				}
+				if x.Unconfirmed {
+					t.Fatalf("unconfirmed although the birth was heard: %+v", x)
+				}
+			}
+			if lost != n || uncertain < 4 || uncertain > 6 {
+				t.Errorf("%d PV flagged lost (want %d: one gap), %d uncertain (want 5)", lost, n, uncertain)
+			}
+			dead := map[uint16]int{}
+			for _, k := range r.tickList() {
+				if !k.Alive {
+					dead[k.Group.Sub]++
+				}
+			}
+			// Device of loop 0: its own death, the node's, the end. The others: two.
+			if len(dead) != 4 || dead[0] != 3 || dead[1] != 2 {
+				t.Errorf("ends by group: %v", dead)
+			}
+			for _, x := range s.State().Refused {
+				if !strings.Contains(x.Why, "offline") {
+					t.Errorf("refused %+v", x)
+				}
+			}
+		})
+	}
+}
+
+// checkSparkplug compares every published row with the sample at its time.
+func checkSparkplug(t *testing.T, r *recorder, tr truth, n int) {
+	t.Helper()
+	rows := 0
+	for i := range n {
+		name, _ := feedLoop(i)
+		type key struct {
+			role collector.Role
+			time int64
+		}
+		at := map[key]collector.Sample{}
+		for _, role := range []collector.Role{collector.RolePV, collector.RoleSP, collector.RoleOP} {
+			for _, x := range r.of(collector.LoopID(i), role) {
+				at[key{role, x.Time}] = x
+			}
+		}
+		missing := 0
+		for _, row := range tr[name] {
+			rows++
+			pv, ok := at[key{collector.RolePV, row.time}]
+			op, okOP := at[key{collector.RoleOP, row.time}]
+			if !ok || !okOP {
+				missing++
+				continue
+			}
+			if !sameFloat(pv.Value, row.pv) || op.Value != row.op {
+				t.Errorf("%s at %d: PV %v OP %v, published %v %v", name, row.time, pv.Value, op.Value, row.pv, row.op)
+			}
+			var sp collector.Sample
+			for _, x := range r.of(collector.LoopID(i), collector.RoleSP) {
+				if x.Time <= row.time {
+					sp = x
+				}
+			}
+			if sp.Value != row.sp {
+				t.Errorf("%s at %d: SP %v, published %v", name, row.time, sp.Value, row.sp)
+			}
+		}
+		// The feed may note one row that the broken connection swallows.
+		if missing > 1 {
+			t.Errorf("%s: %d of %d rows did not arrive", name, missing, len(tr[name]))
+		}
+	}
+	if rows < 60*n {
+		t.Errorf("only %d rows of truth", rows)
+	}
+}
+
+// TestSparkplugLateJoiner restarts the watch under a running node that speaks in
+// aliases: once without memory, once with.
+func TestSparkplugLateJoiner(t *testing.T) {
+	t.Parallel()
+	m := newMosquitto(t)
+	const n = 4
+	store := &kept{}
+	cfg := configs.MQTT{Broker: m.url(), Payload: "sparkplug"}
+	first := build(t, cfg, Options{Births: store}, feedBindings("sparkplug", n)...)
+	ctx, cancel := contextWithin(time.Minute)
+	defer cancel()
+	done := make(chan error, 1)
+	r1 := &recorder{}
+	go func() { done <- first.Run(ctx, r1) }()
+	eventually(t, "watching", watching(first))
+	f := startFeed(t, m, "UTC", "--loops", strconv.Itoa(n), "--rate", "4", "--form", "sparkplug", "--seconds", "12", "--fault", "realias@8")
+	eventually(t, "values by alias", func() bool { return len(r1.of(0, collector.RolePV)) > 3 })
+	cancel()
+	<-done
+
+	blind := build(t, cfg, Options{}, feedBindings("sparkplug", n)...)
+	rb := start(t, blind)
+	with := build(t, cfg, Options{Births: store}, feedBindings("sparkplug", n)...)
+	rw := start(t, with)
+	eventually(t, "the blind one says what it waits for", func() bool {
+		st := blind.State()
+		return strings.Contains(st.Problem, "waiting for the birth of KestrelFen/edge-1/bay") && strings.Contains(st.Hint, "host") && len(st.Refused) == 3*n
+	})
+	if len(rb.samples) != 0 || len(rb.tickList()) != 0 {
+		t.Errorf("the blind one made %d samples and %d ticks of values that it cannot name", len(rb.samples), len(rb.ticks))
+	}
+	eventually(t, "the other one goes on, unconfirmed", func() bool {
+		got := rw.of(0, collector.RolePV)
+		return len(got) > 2 && got[0].Unconfirmed && len(rw.tickList()) > 0
+	})
+	eventually(t, "both know the names after the birth", func() bool {
+		b, w := rb.of(0, collector.RolePV), rw.of(0, collector.RolePV)
+		return len(b) > 2 && !b[len(b)-1].Unconfirmed && !w[len(w)-1].Unconfirmed
+	})
+	_, tr := f.end()
+	name, _ := feedLoop(0)
+	rows := map[int64]truthRow{}
+	for _, x := range tr[name] {
+		rows[x.time] = x
+	}
+	for _, r := range []*recorder{rb, rw} {
+		for _, x := range r.of(0, collector.RolePV) {
+			if row, ok := rows[x.Time]; ok && row.pv != x.Value {
+				t.Errorf("PV %v, published %v", x.Value, row.pv)
+			}
+		}
+	}
+}

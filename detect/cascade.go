@@ -1,0 +1,50 @@
+package detect
+
+import "math"
+
+// The cascade averages e, its integral and OP over 2^L slots, so that each
+// octave of time is watched at its own pace for the cost of about two steps a
+// slot in all.
+
+// halfBlock is the first half of a block of the next level.
+type halfBlock struct {
+	E, S, OP float64
+	Half     bool
+}
+
+func (w *Watch) levels() int {
+	// Cycles up to 24 samples of the top level; 13 h is the slowest that a watch
+	// of days can judge.
+	n := 1 + int(math.Ceil(math.Log2(math.Max(1, 2000/w.s.Grid.DT))))
+	return min(max(n, 4), maxLevels)
+}
+
+func (w *Watch) stepCascade() {
+	s, in := &w.s, &w.in
+	if in.first {
+		s.Int = 0
+	}
+	if in.hasOP {
+		s.Tune.OPMean += (in.op - s.Tune.OPMean) / 400
+	}
+	// Trapezoid over the slot; the common constant dies in the band pass.
+	s.Int += in.e * in.dt
+	e, si, op := in.e, s.Int-in.e*in.dt/2, in.op
+	top := w.levels()
+	for l := 0; l < top; l++ {
+		w.stepCycles(l, e)
+		if l%2 == 0 && l/2 < fitBanks && in.hasOP {
+			w.stepFit(l/2, l, e, si, op)
+		}
+		if s.Track.On && int(s.Track.Level) == l {
+			w.stepTrack(e, op)
+		}
+		c := &s.Casc[l]
+		if !c.Half {
+			*c = halfBlock{e, si, op, true}
+			return
+		}
+		c.Half = false
+		e, si, op = (e+c.E)/2, (si+c.S)/2, (op+c.OP)/2
+	}
+}

@@ -1,0 +1,251 @@
+package detect
+
+import (
+	"math"
+
+	"midwatch/configs"
+)
+
+// What each detector claims and measures. Measures are in the order of its row;
+// NaN is left out.
+
+func claimGrowing(w *Watch) claim {
+	o := &w.s.Osc
+	return claim{o.Grow, o.Since, o.Cause, o.Also, o.Conf, float32(o.Amp)}
+}
+
+func claimSustained(w *Watch) claim {
+	o := &w.s.Osc
+	on := o.Sus && !o.Sticking && !o.Grow // what grew stays a growing one until it is over
+	c := o.Cause
+	if c == 0 {
+		c = causeIndex(Undetermined)
+	}
+	return claim{on && o.Evals > 0, o.Since, c, o.Also, o.Conf, float32(o.Amp)}
+}
+
+func claimSticking(w *Watch) claim {
+	o := &w.s.Osc
+	return claim{o.Sus && o.Sticking && !o.Grow, o.Since, o.Cause, o.Also, o.Conf, float32(o.Amp)}
+}
+
+func claimOffset(w *Watch) claim {
+	o := &w.s.Off
+	return claim{o.Offset, o.Since, o.Cause, [2]uint8{}, o.Conf, float32(math.Abs(o.Mean))}
+}
+
+func claimSaturation(w *Watch) claim {
+	o, z := &w.s.Off, &w.s.Sat
+	if z.WindUp && !o.Sat {
+		return claim{true, z.WindSince, causeIndex(WindUp), [2]uint8{causeIndex(OutputLimit)}, 0.85, float32(z.Over)}
+	}
+	return claim{o.Sat, o.Since, o.Cause, [2]uint8{causeIndex(OutsideDisturbance)}, o.Conf, float32(math.Abs(o.Mean))}
+}
+
+func claimSluggish(w *Watch) claim {
+	r := &w.s.Recov
+	return claim{r.Slow, r.SlowSince, r.Cause, [2]uint8{causeIndex(ResetTooLong), causeIndex(GainTooLow)}, r.Conf, r.Now}
+}
+
+func claimFrozen(w *Watch) claim {
+	x := &w.s.Misc
+	return claim{x.Frozen, x.StillFrom, causeIndex(MeasurementCause), [2]uint8{}, 0.9, 1}
+}
+
+func claimRangeEnd(w *Watch) claim {
+	x := &w.s.Misc
+	return claim{x.Pegged, x.EndSince, causeIndex(MeasurementCause), [2]uint8{causeIndex(OutputLimit), causeIndex(OutsideDisturbance)}, 0.7, 1}
+}
+
+func claimMode(w *Watch) claim {
+	x := &w.s.Misc
+	return claim{x.OffNormal, x.OffNormalSince, causeIndex(Undetermined), [2]uint8{}, 0.9, 1}
+}
+
+func claimTuning(w *Watch) claim {
+	c := &w.s.Change
+	return claim{c.On, c.At, causeIndex(Undetermined), [2]uint8{}, 0.9, 1}
+}
+
+func claimStale(w *Watch) claim {
+	x := &w.s.Misc
+	return claim{x.Stale, x.GoodAt, causeIndex(MeasurementCause), [2]uint8{}, 0.95, 1}
+}
+
+func (w *Watch) pvUnits(pct float64) float64 { return pct * w.s.Scale.PVSpan / 100 }
+
+// tuningNow is the tuning to show with a finding: at the cycle where there is one.
+func (w *Watch) tuningNow() (gain, reset float64) {
+	gain, reset = math.NaN(), math.NaN()
+	kc, ti, ok := w.s.Osc.Kc, w.s.Osc.Ti, w.s.Osc.Kc != 0
+	if !(w.s.Osc.Grow || w.s.Osc.Sus) {
+		kc, ti, ok = w.tuning(0, 0)
+	}
+	if !ok {
+		return
+	}
+	gain = math.Abs(kc)
+	if ti > 0 && ti < 1e5 {
+		reset = ti
+	}
+	return
+}
+
+func measureCycle(w *Watch, m []float64) {
+	o := &w.s.Osc
+	m[0], m[1], m[2], m[3] = o.P, o.Growth, o.Amp, w.pvUnits(o.Amp)
+	m[4], m[5] = w.tuningNow()
+	if o.Kc != 0 {
+		m[6] = o.PhiDeg
+	}
+	m[7], m[8] = w.timeLeft()
+}
+
+// timeLeft is the time, s, until the growing swing of OP meets a limit and that of
+// PV an alarm; NaN where it does not or has.
+func (w *Watch) timeLeft() (op, alarm float64) {
+	o := &w.s.Osc
+	op, alarm = math.NaN(), math.NaN()
+	rate := math.Log(o.Growth) / o.P
+	if !(rate > 0) {
+		return
+	}
+	lo, hi := w.opLimits()
+	if o.Kc != 0 && o.Ti != 0 {
+		om := 2 * math.Pi / o.P
+		swing := o.Amp * math.Abs(o.Kc) * math.Hypot(1, 1/(om*o.Ti))
+		if r := min(hi-w.s.Tune.OPMean, w.s.Tune.OPMean-lo); r > swing && swing > 0 {
+			op = math.Log(r/swing) / rate
+		}
+	}
+	room := math.Inf(1)
+	pv := w.s.Motion.SP
+	if a := w.loop.PVAlarmHigh; a == a {
+		room = min(room, (a-w.s.Scale.PVLow)/w.s.Scale.PVSpan*100-pv)
+	}
+	if a := w.loop.PVAlarmLow; a == a {
+		room = min(room, pv-(a-w.s.Scale.PVLow)/w.s.Scale.PVSpan*100)
+	}
+	if room > o.Amp && !math.IsInf(room, 0) {
+		alarm = math.Log(room/o.Amp) / rate
+	}
+	return
+}
+
+func measureSustained(w *Watch, m []float64) {
+	o := &w.s.Osc
+	sh := w.shapes()
+	m[0], m[1], m[2], m[3] = o.P, o.Amp, w.pvUnits(o.Amp), math.Min(o.Regular, 99)
+	m[4], m[5] = w.tuningNow()
+	m[6], m[7] = w.stickIndex(sh), sh.h3OP
+}
+
+func measureSticking(w *Watch, m []float64) {
+	o := &w.s.Osc
+	sh := w.shapes()
+	lo, hi := w.opSwing()
+	m[0], m[1], m[2], m[3] = o.P, o.Amp, w.pvUnits(o.Amp), hi-lo
+	m[4], m[5] = w.stickIndex(sh), sh.h3OP
+}
+
+// opSwing is the range of OP, %, over the cycles held by the track.
+func (w *Watch) opSwing() (lo, hi float64) {
+	k := &w.s.Track
+	lo, hi = math.NaN(), math.NaN()
+	for i := range int(k.N) {
+		v := float64(k.OP[i])*trackStep + 50
+		if !(lo <= v) {
+			lo = v
+		}
+		if !(hi >= v) {
+			hi = v
+		}
+	}
+	return
+}
+
+func measureOffset(w *Watch, m []float64) {
+	o := &w.s.Off
+	m[0], m[1], m[2] = o.Mean, w.pvUnits(o.Mean), w.in.t-o.Since
+	if kc, ok := w.gainPct(); ok {
+		m[3] = math.Abs(kc)
+	}
+	if causes[o.Cause] != IntegralMissing {
+		if rt := w.resetS(); rt > 0 {
+			m[4] = rt
+		}
+	}
+}
+
+func measureSaturation(w *Watch, m []float64) {
+	o, z := &w.s.Off, &w.s.Sat
+	m[2] = w.s.Motion.OP
+	if o.Sat {
+		m[0], m[1], m[3] = o.Mean, w.pvUnits(o.Mean), w.in.t-o.Since
+	}
+	if z.WindUp {
+		m[4], m[5] = z.Over, z.Peak
+	}
+}
+
+func measureSluggish(w *Watch, m []float64) {
+	r := &w.s.Recov
+	m[0] = float64(r.Now)
+	if r.Was > 0 {
+		m[1] = float64(r.Was)
+	}
+	if p := float64(r.recent(0).Prop); p > 0 && p < 50 {
+		m[2] = p
+	}
+	m[3], m[4] = w.tuningNow()
+}
+
+func measureFrozen(w *Watch, m []float64) {
+	m[0], m[1] = w.in.t-w.s.Misc.StillFrom, w.s.Misc.OPTravel
+}
+
+func measureRangeEnd(w *Watch, m []float64) {
+	m[0], m[1] = float64(w.s.Last.PV), w.in.t-w.s.Misc.EndSince
+}
+
+func measureMode(w *Watch, m []float64) { m[0] = w.in.t - w.s.Misc.OffNormalSince }
+
+func measureTuning(w *Watch, m []float64) {
+	c := &w.s.Change
+	set := func(i int, v float32) {
+		if v > 0 {
+			m[i] = float64(v)
+		}
+	}
+	if c.What&1 != 0 {
+		set(0, c.GainNow)
+		set(1, c.GainWas)
+	}
+	if c.What&2 != 0 {
+		set(2, c.ResetNow)
+		set(3, c.ResetWas)
+	}
+}
+
+func measureStale(w *Watch, m []float64) {
+	m[0] = float64(w.s.Through-w.s.Grid.T0)/1000 - w.s.Misc.GoodAt
+}
+
+// judges says whether a kind is judged in this duty (documented in
+// DEVELOPERS.md, table duty x kind).
+func (w *Watch) judges(k int) bool {
+	switch w.loop.Duty {
+	case configs.Averaging, configs.GapDuty:
+		return k != kOffset && k != kSluggish
+	case configs.Batch, configs.StartStop:
+		return k != kSluggish && k != kMode && k != kSaturation
+	case configs.Ratio:
+		return k != kSluggish
+	case configs.Selector, configs.Standby:
+		return k != kOffset && k != kSaturation && k != kMode && k != kSluggish
+	}
+	if w.loop.PropOnly && k == kOffset {
+		return false
+	}
+	return true
+}

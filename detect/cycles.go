@@ -1,0 +1,217 @@
+package detect
+
+import (
+	"math"
+
+	"midwatch/detect/num"
+)
+
+// One cycle bank per level watches e through a band pass centred on a period of
+// 16 samples of that level, with a half-cycle machine behind it (zero crossings
+// with hysteresis, interpolated; Hägglund 1995 for the idea of judging between
+// crossings). Periods of 11 to 23 samples are this bank's own; the edges overlap.
+
+const (
+	ringLen   = 20
+	bankP     = 16.0 // samples a period at the centre
+	bankLowP  = 8.5
+	bankHighP = 26.0
+)
+
+// Band pass: low pass twice with 0.06 periods, high pass with 0.3 periods. Narrow
+// enough to follow one period, wide enough not to ring on noise.
+var (
+	bankAL = 1 - math.Exp(-1/(0.06*bankP))
+	bankAH = 1 - math.Exp(-1/(0.3*bankP))
+)
+
+// bankGain is the gain of block average and band pass at a period of p samples.
+func bankGain(level int, p float64) float64 {
+	w := 2 * math.Pi / p
+	lp := bankAL / math.Sqrt(1-2*(1-bankAL)*math.Cos(w)+(1-bankAL)*(1-bankAL))
+	// high pass: 1 - ah/(1-(1-ah)z^-1)
+	q := 1 - bankAH
+	re, im := 1-q*math.Cos(w), q*math.Sin(w)
+	d := re*re + im*im
+	hr, hi := 1-bankAH*re/d, bankAH*im/d
+	g := lp * lp * math.Hypot(hr, hi)
+	if level > 0 {
+		g *= math.Sin(w/2) / (w / 2)
+	}
+	return g
+}
+
+// bankCentre is bankGain at the centre, the scale of the half-cycle machine.
+var bankCentre = [2]float64{bankGain(0, bankP), bankGain(1, bankP)}
+
+func centreGain(level int) float64 { return bankCentre[min(level, 1)] }
+
+// halfCycle is one half-cycle: its length in 1/64 samples of the level and the
+// logarithm of its peak (%, as in e) in 1/2048.
+type halfCycle struct {
+	Len uint16
+	Ln  int16
+}
+
+func (h halfCycle) length() float64 { return float64(h.Len) / 64 }
+func (h halfCycle) ln() float64     { return float64(h.Ln) / 2048 }
+func (h halfCycle) peak() float64   { return math.Exp(h.ln()) }
+
+type cycleBank struct {
+	A, B, H float32
+	X       float32 // last output
+	Peak    float32 // of the running half-cycle, in output units
+	Warm    uint16  // samples since the restart, saturating
+	Sign    int8
+	N       uint8        // half-cycles in the ring
+	Head    uint8        // where the next goes
+	Conf    uint8        // half-cycles running at which growth was seen
+	Zero    float64      // s, last zero crossing
+	Cross   float64      // s, the one that began the running half-cycle
+	Usual   num.Quantile // 75 % quantile of the peaks while nothing is suspected, %
+	Ring    [ringLen]halfCycle
+}
+
+func (b *cycleBank) reset() {
+	b.Warm, b.N, b.Sign, b.Conf, b.Head = 0, 0, 0, 0, 0
+}
+
+func (b *cycleBank) drop() { b.N, b.Sign, b.Conf, b.Head = 0, 0, 0, 0 }
+
+// at gives the i-th newest half-cycle, 0 the newest.
+func (b *cycleBank) at(i int) halfCycle {
+	return b.Ring[(int(b.Head)+2*ringLen-1-i)%ringLen]
+}
+
+func (b *cycleBank) push(h halfCycle) {
+	b.Ring[b.Head] = h
+	b.Head = (b.Head + 1) % ringLen
+	if b.N < ringLen {
+		b.N++
+	}
+}
+
+// levelS is the sample interval of a level, s.
+func (w *Watch) levelS(level int) float64 { return w.s.Grid.DT * float64(int(1)<<level) }
+
+func (w *Watch) stepCycles(level int, e float64) {
+	b := &w.s.Cycles[level]
+	if b.Warm == 0 {
+		b.A, b.B, b.H, b.X = float32(e), float32(e), float32(e), 0
+	}
+	if b.Warm < math.MaxUint16 {
+		b.Warm++
+	}
+	a := float64(b.A) + bankAL*(e-float64(b.A))
+	bb := float64(b.B) + bankAL*(a-float64(b.B))
+	h := float64(b.H) + bankAH*(bb-float64(b.H))
+	b.A, b.B, b.H = float32(a), float32(bb), float32(h)
+	x := bb - h
+	px := float64(b.X)
+	b.X = float32(x)
+	if b.Warm < bankP {
+		return
+	}
+	hs := w.levelS(level)
+	t := w.in.t - (hs-w.in.dt)/2
+	if x*px <= 0 && x != px {
+		b.Zero = t - hs + hs*px/(px-x)
+	}
+	g := centreGain(level)
+	ref := 0.0
+	if b.N > 0 {
+		ref = math.Min(b.at(0).peak(), 50) * g
+	}
+	hy := math.Max(0.25*ref, math.Max(0.25*w.s.Noise.sigma()/math.Sqrt(float64(int(1)<<level)), 0.02))
+	sign := int8(0)
+	if x > hy {
+		sign = 1
+	} else if x < -hy {
+		sign = -1
+	}
+	if sign != 0 && sign != b.Sign {
+		if b.Sign != 0 {
+			w.endHalf(level, b, hs, g)
+		}
+		b.Sign, b.Peak, b.Cross = sign, 0, b.Zero
+	}
+	// Nothing for long: half-cycles must follow each other without rest.
+	if b.N > 0 && t-b.Cross > 2.5*bankP*hs {
+		b.drop()
+		w.oscGone(level)
+	}
+	if math.Abs(x) > math.Abs(float64(b.Peak)) {
+		b.Peak = float32(x)
+	}
+}
+
+// endHalf closes the running half-cycle at the last zero crossing.
+func (w *Watch) endHalf(level int, b *cycleBank, hs, g float64) {
+	n := (b.Zero - b.Cross) / hs
+	if b.N == 0 && b.Cross == 0 {
+		return // its beginning was not seen
+	}
+	p := math.Abs(float64(b.Peak)) / g
+	ln := math.Log(math.Max(p, 1e-6))
+	b.push(halfCycle{uint16(math.Min(math.Max(n*64, 1), math.MaxUint16)), int16(math.Round(ln * 2048))})
+	w.judgeCycles(level, b)
+}
+
+// ringStat sums up the newest n half-cycles of a ring.
+type ringStat struct {
+	period  float64 // samples of the level
+	regular float64 // mean over deviation of the half-cycle lengths
+	amp     float64 // mean peak, %, corrected for the gain at the period
+	least   float64 // smallest peak over mean
+	spread  float64 // deviation of neighbouring peak-to-peak values over their mean
+	growth  float64 // per cycle
+	t       float64 // of the growth
+}
+
+func (b *cycleBank) stat(level, n int) (r ringStat, ok bool) {
+	if int(b.N) < n {
+		return r, false
+	}
+	var ln, pk [ringLen]float64 // oldest first
+	var m, am float64
+	least := math.Inf(1)
+	for i := range n {
+		h := b.at(n - 1 - i)
+		ln[i], pk[i] = h.length(), h.peak()
+		m += ln[i]
+		am += pk[i]
+		least = math.Min(least, pk[i])
+	}
+	m /= float64(n)
+	am /= float64(n)
+	var s float64
+	for i := range n {
+		s += (ln[i] - m) * (ln[i] - m)
+	}
+	s = math.Sqrt(s / float64(n-1))
+	r.period, r.regular, r.least = 2*m, m/math.Max(s, 1e-9), least/am
+	// Neighbouring peaks together: drift cancels.
+	var pp [ringLen]float64
+	var mm, ss float64
+	for i := 1; i < n; i++ {
+		v := pk[i] + pk[i-1]
+		pp[i-1] = math.Log(v)
+		mm += v
+	}
+	mm /= float64(n - 1)
+	for i := 1; i < n; i++ {
+		v := pk[i] + pk[i-1] - mm
+		ss += v * v
+	}
+	r.spread = math.Sqrt(ss/float64(n-1)) / mm
+	beta, se := num.Slope(pp[:n-1])
+	r.growth, r.t = math.Exp(2*beta), beta/math.Max(se, 1e-9)
+	r.amp = am
+	if r.period > 4 {
+		r.amp *= centreGain(level) / bankGain(level, math.Max(r.period, 5))
+	}
+	return r, true
+}
+
+// tip is the mean of the newest two peaks, %.
+func (b *cycleBank) tip() float64 { return (b.at(0).peak() + b.at(1).peak()) / 2 }

@@ -1,0 +1,173 @@
+package detect
+
+import (
+	"math"
+
+	"midwatch/collector"
+	"midwatch/configs"
+	"midwatch/detect/num"
+)
+
+// Inside detection PV, SP and OP are in % of their range, times in seconds since
+// the first frame of the memory, and e is SP - PV.
+
+// maxLevels bounds the octaves of the cascade; level L averages 2^L frames.
+const maxLevels = 13
+
+// Limits of the grid.
+const (
+	learnIntervals = 24   // intervals whose median gives the sample interval when none is configured
+	holdPeriodic   = 5    // missing slots filled by holding, periodic reporting
+	holdExceptionS = 1900 // s held at most between changes, by exception: half an hour is a usual longest silence (common practice, no source)
+)
+
+// input is one slot of the loop's time grid.
+type input struct {
+	t      float64 // s since T0
+	dt     float64 // s
+	pv, sp float64 // %
+	op     float64 // %
+	e      float64 // %
+	spStep float64 // change of SP since the last slot, %
+	mode   collector.Mode
+	hasOP  bool // OP is known
+	held   bool // PV was held, not measured
+	active bool // the law acts: mode, active_when, not suppressed, PV known
+	limit  bool // OP at a limit of its range
+	frozen bool // PV stands suspiciously still: it teaches nothing
+	first  bool // first slot after a gap or a spell in which the law did not act
+}
+
+// grid puts frames on even slots.
+type grid struct {
+	T0               int64   // ms UTC of the first frame
+	At               float64 // s since T0 of the last slot
+	DT               float64 // s; 0 while it is learnt
+	Guess            [learnIntervals]float32
+	N                uint8
+	Begun            bool
+	Fast, Slow, Seen uint16  // frames faster and slower than the grid, of those seen
+	LastFrame        float64 // s since T0
+}
+
+// scale maps units of the source to %.
+type scale struct {
+	PVLow, PVSpan, OPLow, OPSpan float64
+	Guessed                      bool // no range was given and the values do not fit the default
+}
+
+func (s *scale) init(l *configs.Loop, f *collector.Frame) {
+	s.PVLow, s.PVSpan = l.PVLow, l.PVSpan()
+	s.OPLow, s.OPSpan = l.OPLow, l.OPSpan()
+	if !(s.OPSpan > 0) {
+		s.OPLow, s.OPSpan = 0, 100
+	}
+	pv, sp := float64(f.PV), float64(f.SP)
+	outside := func(v float64) bool { return v < s.PVLow-0.2*s.PVSpan || v > s.PVLow+1.2*s.PVSpan }
+	if !(s.PVSpan > 0) || !l.PVRangeGiven && (outside(pv) || outside(sp)) {
+		ref := math.Max(math.Abs(pv), math.Abs(sp))
+		if math.IsNaN(ref) || ref == 0 {
+			ref = 50
+		}
+		s.PVLow, s.PVSpan, s.Guessed = 0, 2*ref, true
+	}
+}
+
+// motion is what PV, SP and OP have been doing: stillness, steps, extremes.
+type motion struct {
+	PV, SP, OP, E      float64 // of the last slot, %
+	Mode               collector.Mode
+	ModeSince          float64 // s
+	PVSame, OPSame     float64 // s, since when the value has not changed
+	PVRunMax, OPRunMax float64 // s, longest still run in the past
+	Changes            uint32  // of PV
+	SPStep             float64 // s, last step of SP over 0.3 %
+	SPPrevStep         float64 // s, the one before
+	SPSteps            uint32  // steps over 0.3 % counted with 60 slots between them
+	SPBusy             float32 // share of slots in which SP moved, slow mean
+	Active             bool
+	ActiveSince        float64
+	LawSeen            bool       // OP was seen answering e
+	EF                 float64    // e through a lag of three slots
+	OPMin, OPMax       float32    // while active
+	HalfLo, HalfHi     [2]float32 // OP extremes of the running and the last half hour (or 60 slots)
+	SPLo, SPHi         [2]float32
+	ELo, EHi           [2]float32
+	HalfAt             float64 // s, when the running half window began
+	EStill             float64 // range of e since OP stands still
+	EStillLo, EStillHi float32
+	Update             num.Quantile // median interval between changes of PV, slots
+	Frozen             bool
+	JumpRuns           uint16
+}
+
+// noise is the noise level of PV, learnt from differences (methods: blind to
+// level and slow drift).
+type noise struct {
+	Ring       [4]float32 // last PVs, %
+	N          uint32
+	D1, DD, D4 num.Quantile // medians of first, second and fourth-lag differences, %
+	Least      num.Quantile // low quantile of the non-zero first differences: the resolution
+	Long       num.Quantile // 30 % quantile of the running estimate: robust against spells of trouble
+	OPLeast    num.Quantile // resolution of OP, %
+}
+
+// White noise: 1.0484 * median|d| is one standard deviation (1.4826/sqrt 2, Rousseeuw &
+// Croux 1993 for the factor of the median deviation); a second difference has sqrt 3 times the
+// deviation of a first one.
+const (
+	sigmaOfD1 = 1.0484
+	sigmaOfDD = 1.0484 / 1.7320508
+)
+
+// The smallest noise level taken for true, %: below the resolution of any
+// transmitter (common practice, no source).
+const leastNoise = 0.005
+
+func (n *noise) step(pv float64, exception, learn bool) {
+	if exception && n.N > 0 && float64(n.Ring[0]) == pv {
+		return
+	}
+	if n.N >= 4 && learn {
+		d1 := math.Abs(pv - float64(n.Ring[0]))
+		dd := math.Abs(pv - 2*float64(n.Ring[0]) + float64(n.Ring[1]))
+		d4 := math.Abs(pv - float64(n.Ring[3]))
+		n.D1.Add(d1, 0.5, 0.02, leastNoise/4)
+		n.DD.Add(dd, 0.5, 0.02, leastNoise/4)
+		n.D4.Add(d4, 0.5, 0.02, leastNoise/4)
+		if d1 > 1e-9 {
+			n.Least.Add(d1, 0.1, 0.02, 1e-6)
+		}
+		if n.N%128 == 0 {
+			n.Long.Add(n.now(), 0.3, 0.03, leastNoise)
+		}
+	}
+	n.Ring[3], n.Ring[2], n.Ring[1], n.Ring[0] = n.Ring[2], n.Ring[1], n.Ring[0], float32(pv)
+	n.N++
+}
+
+// now is the running estimate, %. The first difference sees a fast oscillation
+// as noise, the second does so less; the fourth lag sees noise that is correlated.
+func (n *noise) now() float64 {
+	s := math.Min(sigmaOfD1*n.D1.Value(), 1.5*sigmaOfDD*n.DD.Value())
+	s = math.Max(s, math.Min(sigmaOfD1*n.D4.Value(), 2*s))
+	// Quantised data: a uniform error of one step has q/sqrt 12.
+	if n.Least.N > 20 {
+		s = math.Max(s, math.Min(0.289*n.Least.Value(), 2*sigmaOfD1*math.Max(n.D4.Value(), n.D1.Value())+leastNoise))
+	}
+	return math.Max(s, leastNoise)
+}
+
+// sigma is the noise level, % of range, one standard deviation.
+func (n *noise) sigma() float64 {
+	if n.Long.N >= 3 {
+		return math.Max(n.Long.Value(), leastNoise)
+	}
+	if n.N > 60 {
+		return n.now()
+	}
+	return 0.3
+}
+
+// known says whether the noise level rests on enough data.
+func (n *noise) known() bool { return n.Long.N >= 3 }

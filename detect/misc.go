@@ -1,0 +1,151 @@
+package detect
+
+import (
+	"math"
+
+	"midwatch/collector"
+	"midwatch/configs"
+)
+
+// miscState is what the simple detectors hold.
+type miscState struct {
+	// Stale data.
+	GoodAt float64 // s, last usable frame
+	BadN   uint32  // unusable frames running
+	Stale  bool
+	// Frozen PV.
+	OPAtStill float64 // %, OP when PV stopped moving
+	OPTravel  float64 // %, travel of OP since
+	StillE    float64 // % s, integral of |e| since
+	StillFrom float64
+	Frozen    bool
+	// PV at the end of its range.
+	EndSince float64 // s; 0 not there
+	EndHigh  bool
+	InsideN  uint32 // slots inside the range, saturating
+	OutsideN uint32
+	Pegged   bool
+	// Mode.
+	OffNormal      bool
+	OffNormalSince float64
+}
+
+// stepStale follows frames without usable values. It sees every frame, the other
+// detectors only slots.
+func (w *Watch) stepStale(f *collector.Frame, t float64, bad bool) {
+	x := &w.s.Misc
+	if !bad {
+		x.GoodAt, x.BadN = t, 0
+		if x.Stale {
+			x.Stale = false
+			w.verdictAt(t)
+		}
+		return
+	}
+	x.BadN++
+	limit := w.loop.SilenceS
+	if !(limit > 0) {
+		limit = math.Max(300, 20*w.s.Grid.DT)
+	}
+	silent := f.Flags&collector.Gap != 0 && f.PV != f.PV
+	if !x.Stale && (silent || t-x.GoodAt > limit && x.BadN > 3) {
+		x.Stale = true
+		w.verdictAt(t)
+	}
+}
+
+// Frozen: PV stands to the last bit for far longer than it ever did, while the
+// controller goes on moving OP or the error stays.
+func stepFrozen(w *Watch) {
+	s, in := &w.s, &w.in
+	x, m := &s.Misc, &s.Motion
+	if m.PVSame != x.StillFrom {
+		*x = miscState{GoodAt: x.GoodAt, BadN: x.BadN, Stale: x.Stale, OPAtStill: in.op, StillFrom: m.PVSame,
+			EndSince: x.EndSince, EndHigh: x.EndHigh, InsideN: x.InsideN, OutsideN: x.OutsideN, Pegged: x.Pegged,
+			OffNormal: x.OffNormal, OffNormalSince: x.OffNormalSince}
+		return
+	}
+	if !in.frozen || in.held && w.loop.Report != configs.Exception {
+		return
+	}
+	if in.hasOP {
+		x.OPTravel = math.Max(x.OPTravel, math.Abs(in.op-x.OPAtStill))
+	}
+	run := in.t - m.PVSame
+	usual := m.PVRunMax
+	limit := math.Max(math.Max(2700, 300*in.dt), 6*usual)
+	limit = math.Min(limit, math.Max(math.Max(4*3600, 300*in.dt), 2*usual))
+	if x.OPTravel > math.Max(2, 20*s.Noise.sigma()) && in.active {
+		// The controller has noticed: OP travels and nothing comes back.
+		limit = math.Min(limit, math.Max(math.Max(600, 200*in.dt), 4*usual))
+	}
+	if w.loop.Report == configs.Exception {
+		limit = math.Max(6*3600, 3*usual)
+		if x.OPTravel > math.Max(5, 20*s.Noise.sigma()) && in.active {
+			limit = math.Max(3600, 4*usual)
+		}
+	}
+	if run > limit*w.strict {
+		x.Frozen = true
+	}
+}
+
+// At the end of the range: PV pegged at 0 or full scale while SP asks for
+// something else, in a loop that usually lives inside.
+// rangeEnd is how near to the end of its range PV counts as pegged, %: noise and
+// offset of a dead transmitter (common practice, no source).
+const rangeEnd = 0.3
+
+func stepRangeEnd(w *Watch) {
+	s, in := &w.s, &w.in
+	x := &s.Misc
+	if s.Scale.Guessed || !w.loop.PVRangeGiven {
+		return
+	}
+	low, high := in.pv <= rangeEnd, in.pv >= 100-rangeEnd
+	if !low && !high {
+		if x.InsideN < math.MaxUint32 {
+			x.InsideN++
+		}
+		x.EndSince, x.Pegged = 0, false
+		return
+	}
+	x.OutsideN++
+	usual := float64(x.InsideN) > 5*float64(x.OutsideN)
+	if x.EndSince == 0 || x.EndHigh != high {
+		x.EndSince, x.EndHigh = in.t, high
+	}
+	asks := low && in.sp > 3 || high && in.sp < 97
+	if in.active && asks && (usual || x.Pegged) && x.InsideN > 200 && in.t-x.EndSince > math.Max(math.Max(300, 60*in.dt), 2*w.s.Motion.PVRunMax) {
+		x.Pegged = true
+	}
+}
+
+// Not in normal mode: the law has not acted as planned for hours.
+const offNormalS = 4 * 3600.0 // s; a shift's half: a spell of manual work is over by then (common practice, no source)
+
+func stepMode(w *Watch) {
+	s, in := &w.s, &w.in
+	x, m := &s.Misc, &s.Motion
+	normal, _ := collector.ParseMode(w.loop.NormalMode)
+	since := m.ModeSince
+	off := false
+	switch {
+	case in.mode == collector.ModeUnknown:
+		off = !m.Active && w.inferredManual() && normal != collector.Manual
+		since = m.OPSame
+	case normal == collector.Manual || normal == collector.OutOfService:
+		off = false
+	case normal == collector.Cascade || normal == collector.RemoteSP:
+		off = in.mode != normal
+	default:
+		off = !in.mode.LawActive()
+	}
+	if !off {
+		x.OffNormal = false
+		return
+	}
+	if in.t-since > offNormalS {
+		x.OffNormal, x.OffNormalSince = true, since
+	}
+}

@@ -1,0 +1,179 @@
+package detect
+
+import (
+	"math"
+
+	"midwatch/collector"
+)
+
+func (m *motion) first() {
+	*m = motion{PV: math.NaN(), SP: math.NaN(), OP: math.NaN(), SPStep: -1e12, SPPrevStep: -1e12, OPMin: 1e9, OPMax: -1e9}
+	m.clearHalf()
+	m.HalfLo[1], m.HalfHi[1] = m.HalfLo[0], m.HalfHi[0]
+	m.SPLo[1], m.SPHi[1] = m.SPLo[0], m.SPHi[0]
+	m.ELo[1], m.EHi[1] = m.ELo[0], m.EHi[0]
+}
+
+func (m *motion) clearHalf() {
+	m.HalfLo[0], m.HalfHi[0] = 1e9, -1e9
+	m.SPLo[0], m.SPHi[0] = 1e9, -1e9
+	m.ELo[0], m.EHi[0] = 1e9, -1e9
+}
+
+// opRange is the lowest and highest OP, %, of the last 30 to 60 minutes (60 to
+// 120 slots of slower data).
+func (m *motion) opRange() (lo, hi float64) {
+	return float64(min(m.HalfLo[0], m.HalfLo[1])), float64(max(m.HalfHi[0], m.HalfHi[1]))
+}
+
+func (m *motion) spRange() float64 {
+	return float64(max(m.SPHi[0], m.SPHi[1]) - min(m.SPLo[0], m.SPLo[1]))
+}
+
+func (m *motion) eRange() float64 {
+	return float64(max(m.EHi[0], m.EHi[1]) - min(m.ELo[0], m.ELo[1]))
+}
+
+// Tolerances of OP, %.
+const (
+	opAtLimit = 0.5  // nearer to a limit than this is at it (methods section 8)
+	opSame    = 1e-6 // less is no change
+)
+
+// opLimits are the limits of OP in % of its range, as set in the controller.
+func (w *Watch) opLimits() (lo, hi float64) {
+	lo, hi = 0, 100
+	l := w.loop
+	if l.OPLimitLow == l.OPLimitLow {
+		lo = (l.OPLimitLow - w.s.Scale.OPLow) / w.s.Scale.OPSpan * 100
+	}
+	if l.OPLimitHigh == l.OPLimitHigh {
+		hi = (l.OPLimitHigh - w.s.Scale.OPLow) / w.s.Scale.OPSpan * 100
+	}
+	if !(hi > lo) {
+		return 0, 100
+	}
+	return lo, hi
+}
+
+// stepMotion updates what PV, SP and OP do and completes the input.
+func (w *Watch) stepMotion(flags collector.Flags) {
+	m, in := &w.s.Motion, &w.in
+	begin := m.PV != m.PV
+	if begin || in.first {
+		m.PV, m.SP, m.E, m.EF = in.pv, in.sp, in.e, in.e
+		if in.hasOP {
+			m.OP = in.op
+		} else if m.OP != m.OP {
+			m.OP = 0
+		}
+		m.PVSame, m.OPSame = in.t, in.t
+		m.EStillLo, m.EStillHi = float32(in.e), float32(in.e)
+		m.HalfAt = in.t
+		if begin {
+			m.Mode, m.ModeSince, m.ActiveSince = in.mode, in.t, in.t
+		}
+	}
+	if in.mode != m.Mode {
+		m.Mode, m.ModeSince = in.mode, in.t
+	}
+	in.spStep = in.sp - m.SP
+	w.stepSP()
+	w.stepStill()
+	m.EF += (1 - math.Exp(-1./3)) * (in.e - m.EF)
+
+	half := math.Max(1800, 60*in.dt)
+	if in.t-m.HalfAt >= half {
+		m.HalfLo[1], m.HalfHi[1] = m.HalfLo[0], m.HalfHi[0]
+		m.SPLo[1], m.SPHi[1] = m.SPLo[0], m.SPHi[0]
+		m.ELo[1], m.EHi[1] = m.ELo[0], m.EHi[0]
+		m.clearHalf()
+		m.HalfAt = in.t
+	}
+	op, sp, e := float32(in.op), float32(in.sp), float32(in.e)
+	m.HalfLo[0], m.HalfHi[0] = min(m.HalfLo[0], op), max(m.HalfHi[0], op)
+	m.SPLo[0], m.SPHi[0] = min(m.SPLo[0], sp), max(m.SPHi[0], sp)
+	m.ELo[0], m.EHi[0] = min(m.ELo[0], e), max(m.EHi[0], e)
+
+	lo, hi := w.opLimits()
+	in.limit = in.hasOP && (in.op <= lo+opAtLimit || in.op >= hi-opAtLimit)
+	active := in.mode.LawActive() && flags&(collector.Suppressed|collector.Inactive|collector.Unconfirmed) == 0 && !w.inferredManual()
+	if active != m.Active {
+		m.Active, m.ActiveSince = active, in.t
+		if active {
+			in.first = true
+		}
+		w.restart(in.t)
+	}
+	in.active = active
+	if active && in.hasOP {
+		m.OPMin, m.OPMax = min(m.OPMin, op), max(m.OPMax, op)
+	}
+	m.PV, m.SP, m.OP, m.E = in.pv, in.sp, in.op, in.e
+}
+
+func (w *Watch) stepSP() {
+	m, in := &w.s.Motion, &w.in
+	d := math.Abs(in.spStep)
+	moved := float32(0)
+	if d > 1e-9 {
+		moved = 1
+	}
+	m.SPBusy += (moved - m.SPBusy) / 60
+	if d > 0.3 {
+		if in.t-m.SPStep > 60*in.dt {
+			m.SPSteps++
+			m.SPPrevStep = m.SPStep
+		}
+		m.SPStep = in.t
+	}
+}
+
+// stepStill follows how long PV and OP stand still, and what still runs are usual.
+func (w *Watch) stepStill() {
+	m, in := &w.s.Motion, &w.in
+	if in.pv != m.PV {
+		run := in.t - m.PVSame
+		m.Update.Add(run/in.dt, 0.5, 0.03, 1)
+		if m.Changes > 5 {
+			m.PVRunMax = math.Max(m.PVRunMax, run)
+		}
+		m.Changes++
+		m.PVSame = in.t
+	}
+	if in.hasOP && math.Abs(in.op-m.OP) > opSame {
+		if m.Active && in.t-m.OPSame > m.OPRunMax {
+			m.OPRunMax = in.t - m.OPSame
+		}
+		m.OPSame = in.t
+		m.EStillLo, m.EStillHi = float32(in.e), float32(in.e)
+	}
+	m.EStillLo, m.EStillHi = min(m.EStillLo, float32(in.e)), max(m.EStillHi, float32(in.e))
+	inside := in.pv > 0.1 && in.pv < 99.9
+	in.frozen = inside && m.Changes > 30 && in.t-m.PVSame > math.Max(10*in.dt, 2*m.PVRunMax)
+	m.Frozen = in.frozen
+}
+
+// inferredManual: without a mode tag, OP that stands still while e moves, off
+// its limits, is a controller in manual.
+func (w *Watch) inferredManual() bool {
+	m, in := &w.s.Motion, &w.in
+	if in.mode != collector.ModeUnknown || !in.hasOP || in.limit {
+		return false
+	}
+	still := in.t - m.OPSame
+	if still < math.Max(300, 40*in.dt) || still < 4*math.Min(m.OPRunMax, 6*3600) {
+		return false
+	}
+	return float64(m.EStillHi-m.EStillLo) > 6*w.s.Noise.sigma()+0.2
+}
+
+// updateS is the interval, s, at which PV really changes: an analyser may give a
+// new value only every few minutes.
+func (w *Watch) updateS() float64 {
+	u := w.s.Motion.Update.Value()
+	if u < 1 {
+		u = 1
+	}
+	return u * w.s.Grid.DT
+}

@@ -1,0 +1,186 @@
+package detect
+
+import (
+	"math"
+	"math/cmplx"
+
+	"midwatch/configs"
+)
+
+// Why a loop cycles. For growing cycles the lag of the controller at the complex
+// frequency names gain or reset (the process must supply the rest of the phase,
+// methods section 5); for sustained ones only shape with corroboration, company,
+// a change of the loop's own tuning, or growth seen before name anything.
+
+// Bands of the lag, degrees, measured on simulated loops of three classes: below
+// the first the gain has no margin, above the second it has plenty.
+const (
+	phiGain  = 35.0
+	phiReset = 45.0
+)
+
+// lagDeg is the lag of OP against a*e of a PI law at period P growing by G a cycle.
+func lagDeg(a, kc, ti, period, growth float64) float64 {
+	sigma := 0.0
+	if growth > 0 {
+		sigma = math.Log(growth) / period
+	}
+	s := complex(sigma, 2*math.Pi/period)
+	c := complex(a*kc, 0) + complex(a*kc/ti, 0)/s
+	return -cmplx.Phase(c) * 180 / math.Pi
+}
+
+func (w *Watch) judgeOscCause(b *cycleBank) {
+	s := &w.s
+	o := &s.Osc
+	p := o.P
+	kc, ti, ok := w.tuning(w.in.t-14*p, p)
+	phi := math.NaN()
+	if ok && kc != 0 && ti != 0 {
+		o.Kc, o.Ti = kc, ti
+		a := w.loop.Sign()
+		if a == 0 {
+			a = 1
+			if kc < 0 {
+				a = -1
+			}
+			// A reset far too short leaves the gain unseen: the integral tells the sign.
+			if ki := kc / ti; math.Abs(kc) < 0.2*math.Abs(ki)*p/(2*math.Pi) && ki < 0 {
+				a = -1
+			} else if ki := kc / ti; math.Abs(kc) < 0.2*math.Abs(ki)*p/(2*math.Pi) {
+				a = 1
+			}
+		}
+		g := 1.0
+		if o.Grow && o.Evals < 30 {
+			g = math.Max(1, math.Min(o.Growth, 2))
+		}
+		phi = math.Max(0, lagDeg(a, kc, ti, p, g))
+		o.PhiDeg = phi
+	}
+	byPhi, also := Undetermined, [2]Cause{ResetTooShort, GainTooHigh}
+	switch {
+	case phi > phiReset:
+		byPhi, also = ResetTooShort, [2]Cause{GainTooHigh}
+	case phi < phiGain:
+		byPhi, also = GainTooHigh, [2]Cause{ResetTooShort}
+	}
+	k0, t0, okb := w.usualTuning(o.Since - 2*p)
+	rk, rt := 0.0, 0.0
+	if okb && ok && ti > 0 && t0 > 0 {
+		rk, rt = math.Abs(kc)/k0, ti/t0
+	}
+	// Between the bands what changed before the growth decides.
+	if rk > 0 && rt > 0 {
+		between := phi > 25 && phi < 65
+		switch lk, lt := math.Log(rk), math.Log(rt); {
+		case lt < -0.7 && math.Abs(lk) < 0.25: // plainly the reset was shortened, and only it
+			byPhi, also = ResetTooShort, [2]Cause{GainTooHigh}
+		case lk > 0.5 && math.Abs(lt) < 0.25:
+			byPhi, also = GainTooHigh, [2]Cause{ResetTooShort}
+		case !between:
+		case lk > 0.22 && math.Abs(lt) < 0.5*lk:
+			byPhi, also = GainTooHigh, [2]Cause{ResetTooShort}
+		case lt < -0.22 && math.Abs(lk) < -0.5*lt:
+			byPhi, also = ResetTooShort, [2]Cause{GainTooHigh}
+		}
+	}
+	if w.loop.Process == configs.Runaway && byPhi == GainTooHigh {
+		// A runaway process also cycles with too little gain: no direction is given.
+		byPhi, also = Undetermined, [2]Cause{GainTooHigh, GainTooLow}
+	}
+	if s.Track.On && s.Track.Bank == o.Bank && s.Track.led() {
+		// The inner loop of a cascade, or a loop whose set point is moved with the
+		// cycle: following is no fault of its own tuning.
+		o.Sticking = false
+		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, ValveSticking}, 0.5)
+		return
+	}
+	sh := w.shapes()
+	si := w.stickIndex(sh)
+	changed := (rk > 1.4 && rt < 2 || rt > 0 && rt < 0.65) && !(si > 0.5)
+	o.Changed = o.Changed || changed
+
+	if o.Grow {
+		// Once OP is clipped the fit fails: the cause found before stands.
+		early := o.Evals < 25 && o.Growth > 1.01
+		sure := (phi < phiGain-4 || phi > phiReset+5) && o.Evals < 120 && w.in.t-s.Tune.LimitAt > 6*p
+		if ok && (o.GrowCause == 0 || (byPhi != Undetermined || o.Evals < 10) && (early || sure)) {
+			o.GrowCause = causeIndex(byPhi)
+			o.setCause(byPhi, also, phiConfidence(phi, ok))
+		} else if o.GrowCause == 0 {
+			o.setCause(Undetermined, also, 0.5)
+		}
+		if !o.Sus || o.Evals < 60 {
+			return
+		}
+	}
+	if o.Sus {
+		w.judgeSustainedCause(b, phi, byPhi, also, si, sh, changed)
+	}
+}
+
+func phiConfidence(phi float64, ok bool) float64 {
+	if !ok || math.IsNaN(phi) {
+		return 0.5
+	}
+	// The farther from the undecided band, the surer.
+	d := math.Max(phi-phiReset, phiGain-phi)
+	return math.Min(0.97, 0.8+0.012*math.Max(d, 0))
+}
+
+func (o *oscState) setCause(c Cause, also [2]Cause, conf float64) {
+	o.Cause = causeIndex(c)
+	o.Also = [2]uint8{causeIndex(also[0]), causeIndex(also[1])}
+	o.Conf = float32(conf)
+}
+
+func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also [2]Cause, si float64, sh shapes, changed bool) {
+	s := &w.s
+	o := &s.Osc
+	q, _ := b.stat(int(o.Bank), min(int(b.N), ringLen))
+	move := o.AmpHi / math.Max(o.AmpLo, 1e-9)
+	tri := si > 0.58
+	o.Sticking = false
+	switch {
+	case o.GrowCause != 0 && causes[o.GrowCause] != Undetermined:
+		o.setCause(causes[o.GrowCause], also, 0.85)
+	case o.LastCause != 0 && w.in.t-o.LastAt < 60*o.P && math.Abs(math.Log(o.P/o.LastP)) < 0.75:
+		o.setCause(causes[o.LastCause], also, 0.8)
+		o.LastAt, o.LastP = w.in.t, o.P
+	case tri && sh.h3OP > 0.25:
+		// OP square: what drives the loop is square, a sticking valve makes OP a triangle.
+		o.setCause(OutsideDisturbance, [2]Cause{ValveSticking}, 0.75)
+	case tri && !changed && sh.looks < 3:
+		o.setCause(Undetermined, [2]Cause{ValveSticking, ProcessNonlinear}, 0.6)
+	case tri && !changed && w.propOnlySeen():
+		o.setCause(Undetermined, [2]Cause{ValveSticking, OutsideDisturbance}, 0.5)
+	case tri && !changed:
+		o.Sticking = true
+		c := ValveSticking
+		if w.loop.Process == configs.Integrating && si < 0.65 {
+			o.setCause(c, [2]Cause{ValveDeadBand}, 0.75)
+		} else {
+			o.setCause(c, [2]Cause{ProcessNonlinear}, math.Min(0.95, 0.7+0.6*(si-0.58)))
+		}
+	case changed:
+		o.setCause(byPhi, also, 0.85)
+	case o.SharedWith > 1 && !tri:
+		o.setCause(OutsideDisturbance, [2]Cause{}, 0.8)
+	case si < 0.45 && o.Outside && move < 1.6:
+		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.7)
+	case si < 0.45 && q.spread < 0.12 && move < 1.4 && o.Evals > 12:
+		o.Outside = true
+		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.7)
+	case si < 0.45 && phi < 25 && move > 1.5:
+		o.setCause(GainTooHigh, [2]Cause{OutsideDisturbance}, 0.75)
+	case si < 0.5 && (move > 1.7 || phi > 60 && q.spread > 0.14 && move > 1.4):
+		o.setCause(byPhi, [2]Cause{OutsideDisturbance}, 0.75)
+	default:
+		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, byPhi}, 0.5)
+	}
+	if w.loop.Process == configs.Integrating && causes[o.Cause] == GainTooHigh && phi > 30 && o.GrowCause == 0 {
+		// Slow swings of integrating loops want more gain or a longer reset (Skogestad 2003).
+		o.setCause(Undetermined, [2]Cause{ResetTooShort, GainTooLow}, 0.5)
+	}
+}

@@ -1,0 +1,333 @@
+package detect
+
+import (
+	"math"
+
+	"midwatch/configs"
+)
+
+// oscState is the loop's live oscillation, if any.
+type oscState struct {
+	Grow, Sus  bool
+	Bank       uint8
+	Evals      uint32  // half-cycles of the bank since the episode began
+	Bad        uint16  // half-cycles running without the cycle
+	Since      float64 // s
+	Grown      float64 // s, growth last seen; 0 never
+	P          float64 // s, period
+	Amp        float64 // %, mean peak of e
+	AmpHi      float64
+	AmpLo      float64
+	AmpOn      bool
+	Growth     float64 // per cycle, newest
+	GrowCause  uint8   // cause found while growing
+	Outside    bool    // judged outside once
+	Changed    bool    // the loop's own tuning changed before
+	Cause      uint8
+	Also       [2]uint8
+	Conf       float32
+	PhiDeg     float64
+	Kc, Ti     float64 // in service at the cycle, signed; 0 unknown
+	Regular    float64
+	Sticking   bool
+	SharedWith uint16 // loops in the group the site detector put it into
+	// The last growing episode, in case it comes back as a sustained one.
+	LastAt, LastP float64
+	LastCause     uint8
+}
+
+// Thresholds of growth (methods section 4: rules D and E and two longer ones;
+// regularity of half-cycles, t of the slope, growth over the window, times the
+// loop's own usual amplitude). Each held for three half-cycles running.
+var growthRules = [...]struct {
+	n       int
+	regular float64
+	t       float64
+	over    float64 // growth over the window
+	usual   float64
+}{
+	{8, 4, 6, 1.5, 4},
+	{12, 5, 8, 1.5, 3},
+	{20, 5, 10, 1.5, 2.5},
+}
+
+const growConfirm = 3
+
+// judgeCycles looks at a bank after each of its half-cycles.
+func (w *Watch) judgeCycles(level int, b *cycleBank) {
+	s := &w.s
+	o := &s.Osc
+	st, ok := b.stat(level, 8)
+	in := ok && st.period > bankLowP && st.period < bankHighP
+	if !in && w.violent(level, b) {
+		st, in = b.stat(level, 5)
+	}
+	suspect := b.Conf > 0 || o.Grow || o.Sus
+	// Noise teaches the usual size, a regular cycle hardly: a slow growth must not
+	// teach itself.
+	if !suspect && (b.Usual.N < 40 || !(ok && st.regular > 3.5)) {
+		b.Usual.Add(b.at(0).peak(), 0.75, 0.006, 1e-3)
+	}
+	if !in {
+		b.Conf = 0
+		w.oscGone(level)
+		return
+	}
+	sigma := s.Noise.sigma()
+	own := o.Grow || o.Sus
+	if !own && st.regular > 2.5 && st.amp > math.Max(1.3*sigma, 0.08) && w.betterTrack(level, st) {
+		w.startTrack(level)
+	}
+	if s.Track.On && int(s.Track.Bank) == level {
+		s.Track.grow(b.tip())
+		s.Track.Half++
+		if s.Track.Half >= 2 {
+			s.Track.Half = 0
+			s.Track.swing()
+			w.lookTrack(st.period * w.levelS(level))
+		}
+	}
+	w.judgeGrowth(level, b, st)
+	w.judgeSustained(level, b, st)
+	if own && int(o.Bank) == level || (o.Grow || o.Sus) && int(o.Bank) == level {
+		w.followOsc(level, b, st)
+	}
+}
+
+// betterTrack: the track follows the largest regular cycle.
+func (w *Watch) betterTrack(level int, st ringStat) bool {
+	k := &w.s.Track
+	if !k.On || int(k.Bank) == level {
+		return true
+	}
+	cur, ok := w.s.Cycles[k.Bank].stat(int(k.Bank), 8)
+	return !ok || w.s.Cycles[k.Bank].N < 8 || st.amp > 1.5*cur.amp && w.in.t-k.Begun > 4*bankP*w.levelS(int(k.Bank))
+}
+
+func (w *Watch) usualKnown(b *cycleBank) bool { return b.Usual.N >= 40 }
+
+func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
+	s := &w.s
+	o := &s.Osc
+	sigma := s.Noise.sigma()
+	usual := b.Usual.Value()
+	tip := b.tip()
+	known := w.usualKnown(b)
+	least := math.Max(1.6*sigma, 0.12)
+	if !known {
+		least = math.Max(3*sigma, 1)
+	}
+	grow := false
+	if w.violent(level, b) {
+		grow = true
+		b.Conf = max(b.Conf, growConfirm-1)
+	}
+	if tip > least && w.calmSP(st.period*w.levelS(level)) {
+		for _, r := range growthRules {
+			if q, ok := b.stat(level, r.n); ok && q.regular >= r.regular*math.Sqrt(w.strict) && q.t >= r.t*w.strict &&
+				math.Pow(q.growth, float64(r.n-2)/2) >= r.over && tip > r.usual*usual {
+				grow = true
+				break
+			}
+		}
+		if k := &s.Track; !grow && k.On && int(k.Bank) == level && k.GN >= 36 {
+			// Slow growth shows over the whole episode only.
+			beta, t := k.slope()
+			if q, ok := b.stat(level, 20); ok && q.regular >= 5 && t >= 14*w.strict && beta*k.GN > math.Log(1.8) && tip > 2*usual && q.growth > 1.005 {
+				grow = true
+			}
+		}
+	}
+	if grow {
+		if b.Conf < 200 {
+			b.Conf++
+		}
+	} else if b.Conf > 0 {
+		b.Conf--
+	}
+	if b.Conf < growConfirm {
+		return
+	}
+	o.Grown = w.in.t
+	if !o.Grow {
+		o.Grow = true
+		if !o.Sus {
+			w.beginOsc(level, b, 10)
+		}
+	}
+	if int(o.Bank) != level && !o.Sus {
+		w.beginOsc(level, b, 10)
+	}
+	o.Growth = math.Max(st.growth, 1)
+}
+
+// violent: loops of hours never show eight half-cycles in time; few but violent
+// ones count: four that each outgrow the last, far over noise and usual size.
+func (w *Watch) violent(level int, b *cycleBank) bool {
+	q, ok := b.stat(level, 5)
+	if !ok || q.regular < 3*w.strict || q.period < bankLowP || q.period > bankHighP {
+		return false
+	}
+	p, tip := q.period*w.levelS(level), b.tip()
+	if p < 1200 || tip < math.Max(3, 4*w.s.Noise.sigma()) || tip < 5*w.usualNear(level) || !w.steadySP(2.5*p) {
+		return false
+	}
+	for i := range 4 {
+		if b.at(i).ln() < b.at(i+1).ln()+math.Log(1.22) {
+			return false
+		}
+	}
+	return true
+}
+
+// usualNear is the usual size at a level, or at the slowest one below it that has
+// seen enough half-cycles: wandering is not smaller there.
+func (w *Watch) usualNear(level int) float64 {
+	for l := level; l >= 0 && l >= level-3; l-- {
+		if q := &w.s.Cycles[l].Usual; q.N >= 20 {
+			return q.Value()
+		}
+	}
+	return 0
+}
+
+// calmSP: no set-point ramp and no step within the last cycles explains the swing.
+func (w *Watch) calmSP(period float64) bool {
+	m := &w.s.Motion
+	if w.in.t-m.SPStep < 1.5*period && m.SPBusy < 0.3 {
+		return false
+	}
+	return true
+}
+
+func (w *Watch) beginOsc(level int, b *cycleBank, back int) {
+	o := &w.s.Osc
+	back = min(back, int(b.N))
+	var len float64
+	for i := range back {
+		len += b.at(i).length()
+	}
+	keep := *o
+	*o = oscState{Grow: keep.Grow, Sus: keep.Sus, Grown: keep.Grown, Bank: uint8(level), Since: b.Zero - len*w.levelS(level),
+		LastAt: keep.LastAt, LastP: keep.LastP, LastCause: keep.LastCause}
+	w.startTrack(level)
+}
+
+// judgeSustained: half-cycles that follow each other without rest, regular, large
+// against noise and against the loop's own usual.
+func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
+	s := &w.s
+	o := &s.Osc
+	if o.Sus || o.Grow && w.in.t-o.Since < 40*st.period*w.levelS(level) && s.Osc.Bad == 0 {
+		return
+	}
+	sigma := s.Noise.sigma()
+	usual := b.Usual.Value()
+	known := w.usualKnown(b) && b.Usual.N >= 60
+	period := st.period * w.levelS(level)
+	n := 18
+	if q, ok := b.stat(level, 14); ok && q.regular > 7 && q.least > 0.25 {
+		n = 14
+	}
+	q, ok := b.stat(level, n)
+	if ok && st.period*float64(int(1)<<level) > 12 && s.Noise.known() {
+		big := q.amp > math.Max(3*sigma, 0.6)
+		own := q.amp > math.Max(1.9*sigma, 0.4) && known && q.amp > 2*usual
+		if (q.regular > 5*w.strict && q.least > 0.4 && big && (!known || q.amp > 1.6*usual) ||
+			q.regular > 4*w.strict && q.least > 0.3 && own ||
+			q.regular > 4*w.strict && q.least > 0.3 && !known && q.amp > math.Max(1.2, 5*sigma)) && w.steadySP(float64(n)/2*period) {
+			o.Sus = true
+			w.beginOsc(level, b, n)
+			return
+		}
+	}
+	// Irregular sticking leaves cycles out: the shape of OP makes up for it.
+	if q, ok := b.stat(level, 10); ok && s.Noise.known() && s.Track.On && int(s.Track.Bank) == level && s.Track.Looks >= 4 &&
+		q.regular > 1.6 && q.least > 0.2 && q.amp > math.Max(3.4*sigma, 0.55) && st.period*float64(int(1)<<level) > 20 &&
+		s.Motion.LawSeen && !w.propOnlySeen() && w.steadySP(7*period) && (!known || q.amp > 1.6*usual) {
+		sh := w.shapes()
+		if si := w.stickIndex(sh); si > 0.66 && sh.h3OP < 0.25 {
+			o.Sus = true
+			w.beginOsc(level, b, 10)
+		}
+	}
+}
+
+// steadySP: SP has not stepped for so long, s, and is not ramped.
+func (w *Watch) steadySP(span float64) bool {
+	m := &w.s.Motion
+	return w.in.t-m.SPStep > span || m.SPBusy > 0.3
+}
+
+// stickIndex is the sine-triangle index where sticking shows: OP, but PV for
+// integrating loops (He et al. 2007).
+func (w *Watch) stickIndex(sh shapes) float64 {
+	if w.loop.Process == configs.Integrating {
+		return sh.siPV
+	}
+	return sh.siOP
+}
+
+// followOsc keeps the live oscillation up to date and ends it.
+func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
+	s := &w.s
+	o := &s.Osc
+	o.Evals++
+	o.P, o.Amp, o.Regular = st.period*w.levelS(level), st.amp, st.regular
+	o.Growth = st.growth
+	if (o.Evals > 8 || o.AmpHi == 0) && w.in.t-s.Motion.SPStep > 5*o.P {
+		if o.AmpHi == 0 || !o.AmpOn && o.Evals > 8 {
+			o.AmpOn = o.Evals > 8
+			o.AmpHi, o.AmpLo = st.amp, st.amp
+		}
+		o.AmpHi, o.AmpLo = math.Max(o.AmpHi, st.amp), math.Min(o.AmpLo, st.amp)
+	}
+	// Growth that stops with OP off its limits was no instability: a linear one goes
+	// on until something clips.
+	if q, ok := b.stat(level, 12); o.Grow && ok && o.Evals > 12 && q.growth < 1.012 && q.least > 0.7 && w.in.t-s.Tune.LimitAt > 8*o.P && q.amp < 25 {
+		o.Grow, o.GrowCause, o.Sus = false, 0, true
+		b.Conf = 0
+		o.Cause, o.Conf = 0, 0.5
+	}
+	floor := math.Max(1.6*s.Noise.sigma(), 0.3)
+	if o.Grow {
+		floor = math.Max(1.6*s.Noise.sigma(), 0.12)
+	}
+	if st.amp < 0.5*floor || w.usualKnown(b) && st.amp < 1.2*b.Usual.Value() {
+		o.Bad++
+	} else {
+		o.Bad = 0
+	}
+	if o.Bad > 8 {
+		w.endOsc()
+		return
+	}
+	if o.Evals%3 == 1 {
+		w.judgeOscCause(b)
+	}
+}
+
+// oscGone: the bank of the live oscillation has nothing regular now.
+func (w *Watch) oscGone(level int) {
+	o := &w.s.Osc
+	if !(o.Grow || o.Sus) || int(o.Bank) != level {
+		return
+	}
+	o.Bad++
+	if o.Bad > 12 {
+		w.endOsc()
+	}
+}
+
+func (w *Watch) endOsc() {
+	o := &w.s.Osc
+	keep := *o
+	*o = oscState{LastAt: keep.LastAt, LastP: keep.LastP, LastCause: keep.LastCause}
+	if keep.Grow && keep.GrowCause != 0 {
+		o.LastAt, o.LastP, o.LastCause = w.in.t, keep.P, keep.GrowCause
+	}
+	for i := range w.s.Cycles {
+		w.s.Cycles[i].Conf = 0
+	}
+	w.s.Track.reset()
+}

@@ -1,0 +1,193 @@
+package detect
+
+import (
+	"math"
+
+	"midwatch/detect/num"
+)
+
+// Recoveries: from rest, an error rises above the noise and is worked off. Load
+// and set-point events are kept apart, since they take different times. A loop is
+// sluggish against its own history, or by what its set-point steps say about the
+// process, never by a fixed time.
+
+const recRing = 6
+
+// recovery is one finished event.
+type recovery struct {
+	At    float64 // s, end
+	T0    float64 // s, begin
+	Dur   float32 // s, from leaving the band to 12 % of the peak
+	Rise  float32 // s, to the peak
+	Peak  float32 // %
+	Prop  float32 // share of proportional action at the peak, Kc |e| / |dOP|
+	Area  float32 // closed-loop residence over the process' own (set-point events; 0 unknown)
+	Kc    float32
+	Ti    float32
+	SP    bool
+	Cut   bool    // still not over when something else came: at least this long
+	Ratio float32 // to the usual of its kind; 0 unknown
+}
+
+type recoveryState struct {
+	On, SP, Sat, Late bool
+	T0, TPeak         float64 // s
+	Peak              float64 // %
+	Sign              float64
+	OP0, PV0, DSP     float64 // %, before the event
+	Quiet             float64 // s at rest before
+	IntE              float64 // % s
+	IntOP, IntPV      float64 // % s, of the deviations from OP0, PV0
+	OPMean, PVMean    float64 // %, means at rest (lag of 20 slots)
+	MeanN             uint32
+	Ring              [recRing]recovery
+	Count             uint32
+	Usual             [2]num.Quantile // median duration, s: load, set point
+	Slow              bool
+	SlowSince         float64
+	Cause             uint8
+	Conf              float32
+	By                uint8   // what proved it: 1 own history, 2 residence, 3 shape
+	Now, Was          float32 // s, median now and usual
+}
+
+func (r *recoveryState) abandon() {
+	r.On, r.Quiet, r.MeanN = false, 0, 0
+}
+
+func kindOf(sp bool) int {
+	if sp {
+		return 1
+	}
+	return 0
+}
+
+func stepRecovery(w *Watch) {
+	s, in := &w.s, &w.in
+	r := &s.Recov
+	if !in.active || in.frozen {
+		return
+	}
+	sigma := math.Max(s.Noise.sigma(), 0.02)
+	thr := math.Max(3*sigma, 0.7)
+	a := math.Abs(s.Motion.EF)
+	if r.On && math.Abs(in.spStep) > 0.2 && in.t-r.T0 > 2*in.dt {
+		w.cutRecovery()
+		r.On = false
+		r.Quiet = 0
+	}
+	if s.Motion.SPBusy > 0.5 || s.Osc.Grow || s.Osc.Sus { // ramps, following loops, cycles: no rest to start from
+		r.abandon()
+		return
+	}
+	if r.On && !r.Late {
+		if q := r.Usual[kindOf(r.SP)]; q.N >= 4 && in.t-r.T0 > 5*q.Value() {
+			r.Late = true
+			w.cutRecovery()
+		}
+	}
+	if !r.On {
+		if a < 0.4*thr {
+			r.Quiet += in.dt
+			if r.MeanN == 0 {
+				r.OPMean, r.PVMean = in.op, in.pv
+			}
+			r.MeanN++
+			r.OPMean += (in.op - r.OPMean) / 20
+			r.PVMean += (in.pv - r.PVMean) / 20
+			return
+		}
+		if a > thr {
+			if r.Quiet > 20*in.dt {
+				sp := in.t-s.Motion.SPStep < 8*in.dt
+				usual, count, ring := r.Usual, r.Count, r.Ring
+				keep := *r
+				*r = recoveryState{On: true, SP: sp, T0: in.t, TPeak: in.t, Peak: a, Sign: math.Copysign(1, s.Motion.EF),
+					OP0: keep.OPMean, PV0: keep.PVMean, Ring: ring, Count: count, Usual: usual,
+					Slow: keep.Slow, SlowSince: keep.SlowSince, Cause: keep.Cause, Conf: keep.Conf, By: keep.By, Now: keep.Now, Was: keep.Was}
+				r.DSP = in.sp - keep.PVMean
+			}
+			r.Quiet, r.MeanN = 0, 0
+		}
+		return
+	}
+	r.Sat = r.Sat || in.limit
+	r.IntE += in.e * in.dt
+	r.IntOP += (in.op - r.OP0) * in.dt
+	r.IntPV += (in.pv - r.PV0) * in.dt
+	x := s.Motion.EF * r.Sign
+	if x > r.Peak {
+		r.Peak, r.TPeak = x, in.t
+	}
+	if x < 0.12*r.Peak || x < 0.7*sigma && x < 0.3*r.Peak {
+		w.endRecovery(thr)
+		r.On = false
+	}
+}
+
+func (w *Watch) endRecovery(thr float64) {
+	s, in := &w.s, &w.in
+	r := &s.Recov
+	if r.Late || r.Peak < 1.2*thr || r.Sat || !in.hasOP {
+		return
+	}
+	e := recovery{At: in.t, T0: r.T0, Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP}
+	dop := in.op - r.OP0
+	if r.SP && math.Abs(r.DSP) > 2 {
+		dpv := in.pv - r.PV0
+		if math.Abs(dop) > 0.3*math.Abs(dpv) && dpv != 0 {
+			// Areas between normalised curves: closed-loop residence time over the
+			// process' own (average residence time, Åström & Hägglund 1995).
+			tcl := float64(e.Dur) - r.IntPV/dpv
+			tar := r.IntOP/dop - r.IntPV/dpv
+			if !(tar < 0 && -tar > 0.3*tcl) { // else the load moved meanwhile
+				e.Area = float32(tcl / math.Max(tar, 0.5*in.dt))
+			}
+		}
+	}
+	kc, ti, _ := w.tuning(in.t-3*float64(e.Dur), 0)
+	e.Kc, e.Ti = float32(math.Abs(kc)), float32(ti)
+	e.Prop = float32(math.Abs(kc) * r.Peak / math.Max(math.Abs(dop), 1e-6))
+	w.keepRecovery(e)
+}
+
+// cutRecovery keeps an event that was not over when something else came, if it
+// was long already.
+func (w *Watch) cutRecovery() {
+	s, in := &w.s, &w.in
+	r := &s.Recov
+	q := r.Usual[kindOf(r.SP)]
+	if q.N < 4 || r.Sat || in.t-r.T0 < 3*q.Value() {
+		return
+	}
+	e := recovery{At: in.t, T0: r.T0, Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP, Cut: true}
+	kc, ti, _ := w.tuning(in.t-3*float64(e.Dur), 0)
+	e.Kc, e.Ti = float32(math.Abs(kc)), float32(ti)
+	e.Prop = float32(math.Abs(kc) * r.Peak / math.Max(math.Abs(in.op-r.OP0), 1e-6))
+	w.keepRecovery(e)
+}
+
+func (w *Watch) keepRecovery(e recovery) {
+	r := &w.s.Recov
+	q := &r.Usual[kindOf(e.SP)]
+	if q.N >= 4 {
+		e.Ratio = e.Dur / q.V
+	}
+	i := r.Count % recRing
+	if r.Count >= recRing {
+		// What is old enough not to be the trouble at hand is the usual.
+		if old := &r.Ring[i]; !r.Slow && !old.Cut {
+			r.Usual[kindOf(old.SP)].Add(float64(old.Dur), 0.5, 0.05, 1e-3)
+		}
+	} else if r.Count < recRing-2 && !e.Cut {
+		q.Add(float64(e.Dur), 0.5, 0.05, 1e-3) // the first ones teach at once
+	}
+	r.Ring[i] = e
+	r.Count++
+	w.judgeSlow()
+}
+
+// recent gives the i-th newest recovery, 0 the newest.
+func (r *recoveryState) recent(i int) *recovery {
+	return &r.Ring[(int(r.Count)+recRing*2-1-i)%recRing]
+}

@@ -1,0 +1,144 @@
+package detect
+
+import (
+	"math"
+
+	"midwatch/detect/num"
+)
+
+// judgeSlow decides after each recovery. Three proofs, the strongest first: the
+// loop's own usual recovery, the residence times of set-point steps, and the
+// scale-free ratio of recovery to rise (methods section 7: over 9 the reset is
+// about three times too long). The last needs the loop's own tuning or five
+// events in agreement, since load changes have shapes of their own.
+func (w *Watch) judgeSlow() {
+	r := &w.s.Recov
+	n := int(min(r.Count, recRing))
+	if n < 3 {
+		return
+	}
+	own := 0
+	var ratios, durs [recRing]float64
+	nr := 0
+	for i := range 3 {
+		e := r.recent(i)
+		durs[i] = float64(e.Dur)
+		if e.Ratio > 0 {
+			ratios[nr] = float64(e.Ratio)
+			nr++
+		}
+	}
+	if nr == 3 {
+		m, lo := num.Median(ratios[:3]), math.Min(ratios[0], math.Min(ratios[1], ratios[2]))
+		if m > 3.5*w.strict && lo > 2 {
+			own = 1
+		}
+		if !r.recent(0).Cut && ratios[0] > 4.5 && ratios[1] > 4.5 && ratios[2] > 1.5 {
+			own = 1
+		}
+	}
+	area := 0
+	var ar [recRing]float64
+	na := 0
+	lo := math.Inf(1)
+	for i := range n {
+		if a := float64(r.recent(i).Area); a > 0 {
+			ar[na] = a
+			lo = math.Min(lo, a)
+			na++
+		}
+	}
+	if na >= 3 {
+		if m := num.Median(ar[:na]); m > 2.6 && lo > 2 || m > 3.2 && lo > 1.7 {
+			area = 1
+		}
+	}
+	shape := 0
+	if n >= 5 {
+		var t9 [5]float64
+		lo := math.Inf(1)
+		for i := range 5 {
+			e := r.recent(i)
+			t9[i] = float64(e.Dur-e.Rise) / math.Max(float64(e.Rise), 3*w.s.Grid.DT)
+			lo = math.Min(lo, t9[i])
+		}
+		if num.Median(t9[:]) > 12*w.strict && lo > 8 {
+			shape = 1
+		}
+	}
+	w.slowCause(own, area, shape, durs[:3])
+}
+
+func (w *Watch) slowCause(own, area, shape int, durs []float64) {
+	r := &w.s.Recov
+	if own+area+shape == 0 {
+		if r.Slow {
+			// Over once the newest recoveries are the usual ones again.
+			ok := 0
+			for i := range 2 {
+				if e := r.recent(i); !e.Cut && (e.Ratio > 0 && e.Ratio < 1.75 || e.Ratio == 0) {
+					ok++
+				}
+			}
+			if ok == 2 {
+				r.Slow = false
+			}
+		}
+		return
+	}
+	first := r.recent(2)
+	kc, ti, ok := w.tuning(first.T0, 0)
+	since := first.T0
+	if r.Slow {
+		since = r.SlowSince
+	}
+	kb, tb, okb := w.usualTuning(since - 2*float64(first.Dur))
+	rk, rt := 1.0, 1.0
+	if ok && okb && ti > 0 && tb > 0 && kb > 0 {
+		rk, rt = math.Abs(kc)/kb, ti/tb
+	}
+	var ps [recRing]float64
+	np := 0
+	for i := range 3 {
+		if p := float64(r.recent(i).Prop); p > 0 {
+			ps[np] = p
+			np++
+		}
+	}
+	p := math.NaN()
+	if np > 0 {
+		p = num.Median(ps[:np])
+	}
+	cause, conf := Undetermined, 0.6
+	switch {
+	case rt > 2.2 && rk > 0.6:
+		cause, conf = ResetTooLong, 0.93
+	case rk < 0.45 && rt < 2:
+		cause, conf = GainTooLow, 0.93
+	case p > 0.45:
+		cause, conf = ResetTooLong, 0.8
+	case p < 0.13:
+		cause, conf = GainTooLow, 0.8
+	}
+	if !r.Slow {
+		r.Slow, r.SlowSince = true, first.T0
+	}
+	r.Cause, r.Conf = causeIndex(cause), float32(conf)
+	r.By = uint8(map3(own, area))
+	r.Now = float32(num.Median(durs))
+	q := r.Usual[kindOf(r.recent(0).SP)]
+	r.Was = 0
+	if q.N >= 4 {
+		r.Was = q.V
+	}
+}
+
+func map3(own, area int) int {
+	switch {
+	case own > 0:
+		return 1
+	case area > 0:
+		return 2
+	}
+	return 3
+}

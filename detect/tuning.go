@@ -1,0 +1,247 @@
+package detect
+
+import (
+	"math"
+
+	"midwatch/detect/num"
+)
+
+// The tuning in service is read from OP = c + Kc e + Ki Int e, which holds
+// whatever the process does while the law acts off its limits. e, Int e and OP
+// pass the same band pass (low pass twice with Tl, high pass with Th), so the
+// relation survives and the constant dies; least squares on what comes out.
+// Six time scales T, a factor of 4 apart, on every second level of the cascade;
+// with h the sample interval of the level, Tl = h, Th = 6.5 h, T = 5 h.
+
+const (
+	fitBanks = 6
+	fitTh    = 6.5 // high pass, samples of the level
+	fitTl    = 1.0 // low pass, samples
+	fitScale = 5.0 // T, samples
+	fitRing  = 6
+)
+
+var (
+	fitAL = 1 - math.Exp(-1/fitTl)
+	fitAH = 1 - math.Exp(-1/fitTh)
+	// Signal over sampled noise in the integral regressor (excitation), closed
+	// form for this filter: X = Var(I_f) / (sigma^2 dt Th^2/(2 (Tl+Th))).
+	fitNoise = fitTh * fitTh / (2 * (fitTl + fitTh))
+)
+
+// Gates of a fit: R2 is not validity, so excitation counts more.
+const (
+	fitX      = 20.0
+	fitR2     = 0.9
+	fitBlock  = 10 * fitTh // samples at least in a block
+	fitBlockX = 60 * fitTh // samples after which a block without excitation is dropped
+)
+
+// fit is one estimate of the tuning in service.
+type fit struct {
+	Kc float32 // %/%, signed: positive for reverse action
+	Ti float32 // s; negative or huge: no integral action seen
+	R2 float32
+	X  float32
+	At float64 // s
+	T0 float64 // s, begin of its block
+}
+
+func (f *fit) ok() bool { return f.R2 > fitR2 && f.X > fitX }
+
+type fitBank struct {
+	Lo, Mi, Hi                [3]float64 // filter states of e, Int e, OP
+	A00, A01, A11, B0, B1, YY float64
+	Start                     float64 // s, of the block
+	Warm                      uint32  // samples since the restart
+	N                         uint32  // samples in the block
+	Last                      fit
+	Ring                      [fitRing]fit
+	Count                     uint32       // good fits ever
+	BaseK, BaseT              num.Quantile // medians of good fits older than the ring
+}
+
+// tuneState is what is common to the fits.
+type tuneState struct {
+	LimitAt  float64 // s, OP last at a limit
+	OPMean   float64 // %, slow mean of OP (200 slots)
+	Sign     float32 // of the gain as seen; 0 unknown
+	BestBank uint8
+}
+
+func (w *Watch) stepFit(k, level int, e, si, op float64) {
+	b := &w.s.Fits[k]
+	v := [3]float64{e, si, op}
+	if b.Warm == 0 {
+		b.Lo, b.Mi, b.Hi = v, v, v
+		b.clear(w.in.t)
+	}
+	b.Warm++
+	var o [3]float64
+	for i := range v {
+		b.Lo[i] += fitAL * (v[i] - b.Lo[i])
+		b.Mi[i] += fitAL * (b.Lo[i] - b.Mi[i])
+		b.Hi[i] += fitAH * (b.Mi[i] - b.Hi[i])
+		o[i] = b.Mi[i] - b.Hi[i]
+	}
+	h := w.levelS(level)
+	if w.in.limit {
+		w.s.Tune.LimitAt = w.in.t
+	}
+	if b.Warm < 4*fitTh || w.in.t-w.s.Tune.LimitAt < 3*fitTh*h && w.s.Tune.LimitAt > 0 {
+		return
+	}
+	b.A00 += o[0] * o[0]
+	b.A01 += o[0] * o[1]
+	b.A11 += o[1] * o[1]
+	b.B0 += o[0] * o[2]
+	b.B1 += o[1] * o[2]
+	b.YY += o[2] * o[2]
+	b.N++
+	if b.N < fitBlock || b.N%8 != 0 {
+		return
+	}
+	r := w.solveFit(k)
+	if !(r.ok() && r.X > fitX*1.25) && b.N < fitBlockX {
+		return
+	}
+	if r.ok() && r.X > fitX*1.25 {
+		w.keepFit(k, r)
+	} else if r.R2 > fitR2 {
+		b.Last = r
+	}
+	b.clear(w.in.t)
+}
+
+func (b *fitBank) clear(t float64) {
+	b.A00, b.A01, b.A11, b.B0, b.B1, b.YY, b.N = 0, 0, 0, 0, 0, 0, 0
+	b.Start = t
+}
+
+func (w *Watch) keepFit(k int, r fit) {
+	b := &w.s.Fits[k]
+	i := b.Count % fitRing
+	if b.Count >= fitRing {
+		old := &b.Ring[i]
+		b.BaseK.Add(math.Abs(float64(old.Kc)), 0.5, 0.02, 1e-6)
+		if old.Ti > 0 {
+			b.BaseT.Add(float64(old.Ti), 0.5, 0.02, 1e-3)
+		}
+	}
+	b.Ring[i] = r
+	b.Last = r
+	b.Count++
+	w.s.Tune.Sign = 1
+	if r.Kc < 0 {
+		w.s.Tune.Sign = -1
+	}
+	w.s.Motion.LawSeen = true
+	w.tuneCheck(k)
+}
+
+// solveFit solves the normal equations of the running block.
+func (w *Watch) solveFit(k int) (r fit) {
+	b := &w.s.Fits[k]
+	det := b.A00*b.A11 - b.A01*b.A01
+	if !(det > 0) || !(b.YY > 0) || b.N < 20 {
+		return
+	}
+	kc := (b.B0*b.A11 - b.B1*b.A01) / det
+	ki := (b.B1*b.A00 - b.B0*b.A01) / det
+	rss := b.YY - kc*b.B0 - ki*b.B1
+	h := w.levelS(2 * k)
+	s := math.Max(w.s.Noise.sigma(), 0.01)
+	r = fit{Kc: float32(kc), Ti: float32(kc / ki), R2: float32(1 - rss/b.YY), At: w.in.t, T0: b.Start}
+	r.X = float32(b.A11 / float64(b.N) / (s * s * w.s.Grid.DT * h * fitNoise))
+	return
+}
+
+// tuning gives the best present estimate: newest valid fits at or after since;
+// with a period the scale nearest to a sixth of it, running block included.
+func (w *Watch) tuning(since, period float64) (kc, ti float64, ok bool) {
+	best := math.Inf(-1)
+	for k := range w.s.Fits {
+		b := &w.s.Fits[k]
+		r := b.Last
+		if period > 0 && float64(b.N) > 3*fitTh {
+			if q := w.solveFit(k); q.ok() {
+				r = q
+			}
+		}
+		if r.At < since || !r.ok() {
+			continue
+		}
+		score := 10*float64(r.R2) + math.Min(1, float64(r.X)/2000)
+		if period > 0 {
+			score -= 0.6 * math.Abs(math.Log(fitScale*w.levelS(2*k)*6/period))
+		}
+		if score > best {
+			best, kc, ti, ok = score, float64(r.Kc), float64(r.Ti), true
+		}
+	}
+	return
+}
+
+// usualTuning is the tuning before time t: medians of the older good fits of the
+// scale that has most of them.
+func (w *Watch) usualTuning(t float64) (kc, ti float64, ok bool) {
+	most := 1
+	for k := range w.s.Fits {
+		b := &w.s.Fits[k]
+		var ks, ts [fitRing]float64
+		n, nt := 0, 0
+		for i := range min(int(b.Count), fitRing) {
+			f := &b.Ring[i]
+			if f.At < t && f.R2 > 0.95 {
+				ks[n] = math.Abs(float64(f.Kc))
+				n++
+				if f.Ti > 0 {
+					ts[nt] = float64(f.Ti)
+					nt++
+				}
+			}
+		}
+		old := int(b.BaseK.N)
+		if n+old <= most || nt == 0 && b.BaseT.N == 0 {
+			continue
+		}
+		most = n + old
+		if old >= 3 || n == 0 {
+			kc = b.BaseK.Value()
+		} else {
+			kc = num.Median(ks[:n])
+		}
+		if b.BaseT.N >= 3 || nt == 0 {
+			ti = b.BaseT.Value()
+		} else {
+			ti = num.Median(ts[:nt])
+		}
+		ok = true
+	}
+	return
+}
+
+// sign is the sign with which OP answers e: from the loop list, else as seen.
+func (w *Watch) sign() float64 {
+	if s := w.loop.Sign(); s != 0 {
+		return s
+	}
+	return float64(w.s.Tune.Sign)
+}
+
+// propOnlySeen: OP is a scaled copy of e, no integral action in it.
+func (w *Watch) propOnlySeen() bool {
+	n := 0
+	for k := range w.s.Fits {
+		q := w.s.Fits[k].Last
+		if q.At == 0 || q.R2 < fitR2 {
+			continue
+		}
+		if q.R2 > 0.95 && q.Kc != 0 && math.Abs(float64(q.Ti)) > 40*fitScale*w.levelS(2*k) {
+			n++
+		} else {
+			n--
+		}
+	}
+	return n > 0
+}

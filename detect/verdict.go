@@ -1,0 +1,160 @@
+package detect
+
+import (
+	"math"
+
+	"midwatch/collector"
+)
+
+// The verdict is the one place that decides which claims stand and which fold
+// into which, and that turns them into findings.
+
+func (w *Watch) verdict() { w.verdictAt(w.in.t) }
+
+func (w *Watch) verdictAt(t float64) {
+	s := &w.s
+	changed := false
+	for k := range table {
+		c := table[k].claim(w)
+		c.On = c.On && w.judges(k)
+		s.Claim[k] = c
+		if c.On || s.Open[k].On {
+			changed = true
+		}
+	}
+	if !changed {
+		return
+	}
+	// Saturation explains the offset; growth explains the swing; pegged or frozen
+	// PV explains what the controller makes of it.
+	c := &s.Claim
+	rejudge := [kinds]bool{}
+	fold := func(child int) {
+		if c[child].On {
+			c[child].On = false
+			rejudge[child] = true
+		}
+	}
+	if c[kSaturation].On && causes[c[kSaturation].Cause] != WindUp {
+		fold(kOffset)
+	}
+	if c[kSticking].On {
+		fold(kSustained)
+	}
+	if c[kFrozen].On {
+		fold(kOffset)
+		fold(kSluggish)
+	}
+	for k := range table {
+		w.settle(k, t, rejudge[k])
+	}
+}
+
+// settle compares what is claimed with what was said.
+func (w *Watch) settle(k int, t float64, rejudged bool) {
+	s := &w.s
+	c, o := &s.Claim[k], &s.Open[k]
+	switch {
+	case c.On && !o.On:
+		*o = openFinding{On: true, Cause: c.Cause, Conf: c.Conf, Since: c.Since, At: t, Strength: c.Strength}
+		w.say(k, Raised, t, "")
+	case c.On:
+		moved := math.Abs(float64(c.Conf-o.Conf)) >= 0.1
+		worse := c.Strength >= 2*o.Strength && o.Strength > 0
+		if c.Cause != o.Cause || moved || worse {
+			o.Cause, o.Conf = c.Cause, c.Conf
+			if worse {
+				o.Strength = c.Strength
+			}
+			o.Updates++
+			w.say(k, Updated, t, "")
+		}
+	case o.On:
+		// Without sight of the law nothing clears: the ledger holds the episode.
+		if !s.Motion.Active && k != kStale && k != kMode && k != kFrozen && k != kTuning {
+			return
+		}
+		if s.Misc.Stale && k != kStale {
+			return
+		}
+		why := Over
+		if rejudged {
+			why = Rejudged
+		} else if collector.Mode(s.Motion.Mode) == collector.OutOfService {
+			why = OutOfService
+		}
+		w.say(k, Cleared, t, why)
+		*o = openFinding{}
+	}
+}
+
+// say emits the finding of a kind as it stands.
+func (w *Watch) say(k int, e Event, t float64, reason string) {
+	if w.emit == nil || w.mute {
+		return
+	}
+	f := w.finding(k, e, t)
+	f.Reason = reason
+	w.emit(&f)
+}
+
+func (w *Watch) ms(t float64) int64 { return w.s.Grid.T0 + int64(math.Round(t*1000)) }
+
+func (w *Watch) finding(k int, e Event, t float64) Finding {
+	s := &w.s
+	row, o := &table[k], &s.Open[k]
+	f := Finding{ID: w.id, Subject: Subject{Loop: w.loop.Name}, Loop: w.loop.Name, Kind: row.Kind, Event: e,
+		At: w.ms(t), Since: w.ms(o.Since), Cause: causes[o.Cause], Confidence: float64(o.Conf)}
+	if f.Since > f.At {
+		f.Since = f.At
+	}
+	if f.At > s.Through {
+		f.At = s.Through
+	}
+	if e == Cleared {
+		f.Confidence = 0
+		f.Text, f.TextShort = w.textOver(k)
+		return f
+	}
+	m := make([]float64, len(row.Measures))
+	for i := range m {
+		m[i] = math.NaN()
+	}
+	row.measure(w, m)
+	for i, v := range m {
+		if v == v && !math.IsInf(v, 0) {
+			f.Measures = append(f.Measures, Measure{row.Measures[i], v})
+		}
+	}
+	for _, a := range s.Claim[k].Also {
+		if c := causes[a]; c != NoCause && c != f.Cause && c != Undetermined {
+			f.AlsoPossible = append(f.AlsoPossible, c)
+		}
+	}
+	f.Text, f.TextShort = w.text(k, &f)
+	return f
+}
+
+// Restate emits again what is held to be so now, as of the last frame.
+func (w *Watch) Restate(emit func(*Finding)) {
+	w.emit = emit
+	t := float64(w.s.Through-w.s.Grid.T0) / 1000
+	for k := range table {
+		if w.s.Open[k].On {
+			w.say(k, Raised, t, "")
+		}
+	}
+	w.emit = nil
+}
+
+// strictness turns the nuisance budget into a factor on persistence: the default
+// of 0.1 false findings per loop and year is 1. Times between false decisions
+// grow exponentially with the evidence asked for (as with the CUSUM of Page
+// 1954, Siegmund's formula), so a tenfold budget moves the factor by 0.15.
+func strictness(perLoopYear float64) float64 {
+	if !(perLoopYear > 0) {
+		return 1
+	}
+	f := 1 - 0.15*math.Log10(perLoopYear/0.1)
+	return math.Max(0.7, math.Min(1.6, f))
+}

@@ -1,0 +1,218 @@
+package detect
+
+import (
+	"fmt"
+	"math"
+
+	"midwatch/collector"
+	"midwatch/configs"
+)
+
+// State of a loop's watch in one word.
+type State string
+
+// States of a watch. The four counts of every summary are judged, cannot judge,
+// not in normal mode and held.
+const (
+	Judged      State = "judged"
+	Learning    State = "learning"     // baseline not complete: counted as cannot judge
+	CannotJudge State = "cannot-judge" // a blind spot hides the loop
+	NotNormal   State = "not-in-normal-mode"
+	HeldState   State = "held"    // an open finding that cannot be seen now
+	NoData      State = "no-data" // counted as cannot judge
+)
+
+// View is what a watch knows of its loop now: for status, page and dossier.
+// Numbers that are not known are NaN.
+type View struct {
+	State               State
+	Why                 string // in words, where State is not Judged
+	BlindSpots          []string
+	Last                collector.Frame
+	SampleS             float64 // s, interval of the data
+	NoisePV             float64 // noise level of PV, PV units (one standard deviation)
+	TimeScaleS          float64 // s, usual recovery time
+	PeriodS             float64 // s, of a live oscillation
+	GainPct             float64 // tuning in service, %/%
+	GainLow, GainHigh   float64
+	ResetS              float64 // s
+	ResetLow, ResetHigh float64
+	Open                []Finding
+}
+
+// View gives what is known now.
+func (w *Watch) View() View {
+	s := &w.s
+	nan := math.NaN()
+	v := View{State: Judged, Last: s.Last, SampleS: s.Grid.DT, NoisePV: nan, TimeScaleS: nan, PeriodS: nan,
+		GainPct: nan, GainLow: nan, GainHigh: nan, ResetS: nan, ResetLow: nan, ResetHigh: nan}
+	if !s.Grid.Begun {
+		v.State, v.Why = NoData, "no value yet"
+		return v
+	}
+	if s.Noise.known() {
+		v.NoisePV = w.pvUnits(s.Noise.sigma())
+	}
+	for _, q := range s.Recov.Usual {
+		if q.N >= 3 {
+			v.TimeScaleS = q.Value()
+		}
+	}
+	if s.Osc.Grow || s.Osc.Sus {
+		v.PeriodS = s.Osc.P
+	}
+	v.GainPct, v.GainLow, v.GainHigh, v.ResetS, v.ResetLow, v.ResetHigh = w.tuningRange()
+	v.BlindSpots = w.blindSpots()
+	held := false
+	for k := range table {
+		if s.Open[k].On {
+			v.Open = append(v.Open, w.finding(k, Raised, float64(s.Through-s.Grid.T0)/1000))
+			held = held || !s.Motion.Active && k != kMode
+		}
+	}
+	switch {
+	case s.Misc.Stale:
+		v.State, v.Why = NoData, "no usable value"
+	case held:
+		v.State, v.Why = HeldState, "cannot be seen while the law does not act"
+	case !s.Motion.Active:
+		v.State, v.Why = NotNormal, w.whyInactive()
+	case !s.Noise.known():
+		v.State, v.Why = Learning, "learning its noise level"
+	case len(v.BlindSpots) > 0 && w.blind():
+		v.State, v.Why = CannotJudge, v.BlindSpots[0]
+	}
+	return v
+}
+
+func (w *Watch) whyInactive() string {
+	s := &w.s
+	switch {
+	case s.Last.Flags&collector.Suppressed != 0:
+		return "suppressed by design"
+	case s.Last.Flags&collector.Inactive != 0:
+		return "active_when does not hold"
+	case s.Motion.Mode != collector.ModeUnknown:
+		return "in " + s.Motion.Mode.String()
+	}
+	return "OP stands still while PV moves: looks like manual"
+}
+
+// tuningRange gives the best estimate in service with the spread of the newest
+// fits of its scale.
+func (w *Watch) tuningRange() (k, k0, k1, t, t0, t1 float64) {
+	n := math.NaN()
+	k, k0, k1, t, t0, t1 = n, n, n, n, n, n
+	kc, ti, ok := w.tuning(0, 0)
+	if !ok {
+		return
+	}
+	k, t = math.Abs(kc), ti
+	if !(ti > 0 && ti < 1e6) {
+		t = n
+	}
+	for i := range w.s.Fits {
+		b := &w.s.Fits[i]
+		if float64(b.Last.Kc) != kc {
+			continue
+		}
+		// Five per cent for what the interval of the fit does not cover.
+		k0, k1, t0, t1 = k/1.05, k*1.05, t/1.05, t*1.05
+		for j := range min(int(b.Count), fitRing) {
+			f := &b.Ring[j]
+			g := math.Abs(float64(f.Kc))
+			k0, k1 = math.Min(k0, g), math.Max(k1, g)
+			if f.Ti > 0 {
+				t0, t1 = math.Min(t0, float64(f.Ti)), math.Max(t1, float64(f.Ti))
+			}
+		}
+	}
+	return
+}
+
+// blindSpots says what keeps the watch from seeing, in words.
+func (w *Watch) blindSpots() (b []string) {
+	s := &w.s
+	m := &s.Motion
+	if !s.Grid.Begun || s.Grid.DT == 0 {
+		return nil
+	}
+	if s.Last.OP != s.Last.OP && m.OPMin > m.OPMax {
+		b = append(b, "no OP: saturation, sticking, tuning and most causes cannot be seen")
+	}
+	if m.Mode == collector.ModeUnknown {
+		if m.LawSeen {
+			b = append(b, "no mode: manual is inferred from OP")
+		} else {
+			b = append(b, "no mode, and the law was not seen acting yet: no finding on offset, saturation or sluggish recovery")
+		}
+	}
+	if r := w.resetS(); r > 0 && r < 3*s.Grid.DT {
+		b = append(b, fmt.Sprintf("sampled every %s, too slowly for a reset time of %s", duration(s.Grid.DT), duration(r)))
+	}
+	if u := w.updateS(); m.Changes > 20 && u > 4*s.Grid.DT && w.loop.Report == configs.Periodic {
+		b = append(b, fmt.Sprintf("PV really changes only about every %s", duration(u)))
+	}
+	if s.Noise.known() && s.Noise.sigma() <= leastNoise*1.01 && w.loop.Report == configs.Exception {
+		b = append(b, "compression hides the noise of PV")
+	}
+	if s.Recov.Count == 0 && s.Noise.N > 20000 {
+		b = append(b, "not disturbed yet: recovery cannot be judged")
+	}
+	if m.OPMax > -1e8 && float64(m.OPMax-m.OPMin) < 0.5 && s.Noise.N > 2000 {
+		b = append(b, "OP has hardly moved: always at a limit, or not this loop's output")
+	}
+	if s.Scale.Guessed {
+		b = append(b, "no range given: percentages and gain are guesses")
+	}
+	return b
+}
+
+// blind: a blind spot that hides the loop whole.
+func (w *Watch) blind() bool {
+	m := &w.s.Motion
+	return w.s.Last.OP != w.s.Last.OP && m.OPMin > m.OPMax || m.Mode == collector.ModeUnknown && !m.LawSeen && w.s.Noise.N > 20000
+}
+
+// Explain gives the evidence held now, a line each, readable by an engineer.
+func (w *Watch) Explain() []string {
+	s := &w.s
+	if !s.Grid.Begun {
+		return []string{"no usable frame yet"}
+	}
+	out := []string{
+		fmt.Sprintf("sample interval %s; noise level %s (%.3f %% of range)", duration(s.Grid.DT), w.pvText(s.Noise.sigma()), s.Noise.sigma()),
+		fmt.Sprintf("PV %.4g, SP %.4g, OP %.1f %%, mode %q, law acting: %v", s.Last.PV, s.Last.SP, s.Motion.OP, s.Motion.Mode.String(), s.Motion.Active),
+	}
+	if k, k0, k1, t, t0, t1 := w.tuningRange(); k == k {
+		out = append(out, fmt.Sprintf("tuning in service: gain %.3g (%.3g to %.3g), reset %.3g s (%.3g to %.3g)", k, k0, k1, t, t0, t1))
+	} else {
+		out = append(out, "tuning in service: not excited enough to read")
+	}
+	for l := range w.levels() {
+		b := &s.Cycles[l]
+		if st, ok := b.stat(l, 8); ok && st.regular > 2.5 {
+			out = append(out, fmt.Sprintf("cycle of %s: amplitude %.3g %%, usual %.3g %%, regularity %.1f, growth %.2f a cycle (t %.1f)",
+				duration(st.period*w.levelS(l)), st.amp, b.Usual.Value(), st.regular, st.growth, st.t))
+		}
+	}
+	if s.Osc.Grow || s.Osc.Sus {
+		sh := w.shapes()
+		out = append(out, fmt.Sprintf("live oscillation since %s: period %s, lag of the controller %.0f degrees (direct %.0f), shape index %.2f, third harmonic %.2f, looks %d, swing of SP %.2f %% and PV %.2f %%",
+			FormatTime(w.ms(s.Osc.Since)), duration(s.Osc.P), s.Osc.PhiDeg, sh.phiDeg, w.stickIndex(sh), sh.h3OP, sh.looks, s.Track.SPSwing, s.Track.PVSwing))
+	}
+	for i := range int(min(s.Recov.Count, recRing)) {
+		e := s.Recov.recent(i)
+		out = append(out, fmt.Sprintf("recovery at %s: %s, peak %.2f %%, rise %s, ratio to usual %.2f, proportional share %.2f, residence ratio %.2f, set point %v",
+			FormatTime(w.ms(e.At)), duration(float64(e.Dur)), e.Peak, duration(float64(e.Rise)), e.Ratio, e.Prop, e.Area, e.SP))
+	}
+	if s.Off.Sign != 0 {
+		out = append(out, fmt.Sprintf("one-sided error for %s, mean %.2f %%", duration(w.in.t-s.Off.T0), s.Off.Int/math.Max(s.Off.Dur, 1e-9)))
+	}
+	for k := range table {
+		if s.Open[k].On {
+			out = append(out, fmt.Sprintf("open: %s since %s, cause %s, confidence %.2f", table[k].Kind, FormatTime(w.ms(s.Open[k].Since)), causes[s.Open[k].Cause], s.Open[k].Conf))
+		}
+	}
+	return out
+}
