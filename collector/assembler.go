@@ -38,17 +38,21 @@ type Counts struct {
 	Foreign    uint64 // samples of no loop or role of this assembler
 }
 
-func (c *Counts) add(d *Counts) {
-	c.Samples += d.Samples
-	c.Frames += d.Frames
-	c.Held += d.Held
-	c.Gaps += d.Gaps
-	c.Late += d.Late
-	c.Duplicates += d.Duplicates
-	c.Clock += d.Clock
-	c.Lost += d.Lost
-	c.Thinned += d.Thinned
-	c.Foreign += d.Foreign
+// tally is Counts of one loop, at half the size.
+type tally struct {
+	Samples, Frames, Held, Gaps, Late, Duplicates, Clock, Lost, Thinned uint32
+}
+
+func (c *Counts) add(d *tally) {
+	c.Samples += uint64(d.Samples)
+	c.Frames += uint64(d.Frames)
+	c.Held += uint64(d.Held)
+	c.Gaps += uint64(d.Gaps)
+	c.Late += uint64(d.Late)
+	c.Duplicates += uint64(d.Duplicates)
+	c.Clock += uint64(d.Clock)
+	c.Lost += uint64(d.Lost)
+	c.Thinned += uint64(d.Thinned)
 }
 
 // Assembler makes frames of the samples of its loops. It has no goroutine and
@@ -136,7 +140,7 @@ type state struct {
 	seeded      bool  // that PV was an old one: it is held but opened no frame
 	fresh       bool  // the newest PV was news, not an old value
 	dark        bool  // out of sight
-	counts      Counts
+	counts      tally
 }
 
 // New makes an assembler for a loop list; ids are the indexes. emit is called
@@ -146,8 +150,9 @@ func New(loops []*configs.Loop, o Options, emit func(LoopID, *Frame)) (*Assemble
 	if a.graceMs <= 0 {
 		a.graceMs = defaultGraceMs
 	}
+	modes := map[string]*ModeMap{}
 	for i := a.shard; i < len(loops); i += a.shards {
-		set, err := newSetting(loops[i])
+		set, err := newSetting(loops[i], modes)
 		if err != nil {
 			return nil, err
 		}
@@ -178,11 +183,11 @@ func (a *Assembler) local(id LoopID) (int32, bool) {
 func (a *Assembler) id(i int32) LoopID { return LoopID(int(i)*a.shards + a.shard) }
 
 // Counts of one loop.
-func (a *Assembler) Counts(id LoopID) Counts {
+func (a *Assembler) Counts(id LoopID) (c Counts) {
 	if i, ok := a.local(id); ok {
-		return a.loops[i].counts
+		c.add(&a.loops[i].counts)
 	}
-	return Counts{}
+	return c
 }
 
 // Totals of all loops.
@@ -203,16 +208,29 @@ func (a *Assembler) Lost(id LoopID) {
 	}
 }
 
-// Feed takes the samples of parts, in the order of arrival. Within one call the
-// samples of a loop are taken by their time, since servers deliver a backlog tag
-// by tag.
-func (a *Assembler) Feed(parts ...[]Sample) {
-	for _, p := range parts {
-		a.feed(p)
+// Adopt takes over what another assembler knows of a loop, which must have the
+// same tags, sampling and conditions here: after a reload the set point of a
+// source that reports changes only would else be missing until it changes. The
+// other assembler must not be used for that loop any more.
+func (a *Assembler) Adopt(id LoopID, from *Assembler, was LoopID) {
+	i, ok := a.local(id)
+	k, have := from.local(was)
+	if !ok || !have {
+		return
 	}
+	if a.wall == 0 {
+		a.wall, a.clock, a.swept = from.wall, from.clock, from.clock
+	}
+	l := &a.loops[i]
+	set := l.set
+	*l = from.loops[k]
+	l.set, l.group = set, -1
+	l.heard += a.clock - from.clock
 }
 
-func (a *Assembler) feed(samples []Sample) {
+// Feed takes samples in the order of arrival. Within one call the samples of a
+// loop are taken by their time, since servers deliver a backlog tag by tag.
+func (a *Assembler) Feed(samples []Sample) {
 	if len(samples) == 0 {
 		return
 	}
@@ -293,172 +311,6 @@ func sortByTime(s []Sample) {
 		}
 		s[k] = x
 	}
-}
-
-// take a sample whose time is settled.
-func (a *Assembler) take(i int32, l *state, s *Sample) {
-	l.counts.Samples++
-	if s.Lost {
-		l.counts.Lost++
-	}
-	if s.Role == RolePV {
-		if !a.takePV(i, l, s) && s.Lost {
-			l.pending |= Lost
-		}
-		return
-	}
-	if s.Lost {
-		l.pending |= Lost
-	}
-	switch s.Role {
-	case RoleAlive:
-		a.takeAlive(i, l, s)
-	default:
-		a.takeValue(l, s)
-	}
-}
-
-// takePV says whether the PV opened a frame.
-func (a *Assembler) takePV(i int32, l *state, s *Sample) bool {
-	l.heard = a.clock
-	p := openPV{time: s.Time, value: NaN32}
-	if s.Quality != Bad {
-		p.value = Clean32(s.Value)
-	}
-	if s.Quality == Uncertain {
-		p.flags |= UncertainPV
-	}
-	if s.Unconfirmed {
-		p.flags |= Unconfirmed
-	}
-	if s.Lost {
-		p.flags |= Lost
-	}
-	first := !l.seen
-	l.seen = true
-	if l.set.exception && first && a.isOld(l, s) {
-		// The last value known, from before we looked: it holds from now on,
-		// and makes no frames of the past.
-		l.pv, l.pvFlags = p.value, p.flags&^Lost
-		l.started, l.seeded, l.fresh = true, true, false
-		l.newest = max(l.newest, s.Time)
-		return false
-	}
-	if s.Time <= l.closed {
-		if s.Time == l.newest {
-			l.counts.Duplicates++
-		} else {
-			l.counts.Late++
-			a.learnOffset(l, s, first) // it shows how late values may be
-		}
-		return false
-	}
-	at := len(l.open)
-	for at > 0 && l.open[at-1].time >= p.time {
-		if at--; l.open[at].time == p.time {
-			l.counts.Duplicates++
-			return false
-		}
-	}
-	l.open = slices.Insert(l.open, at, p)
-	if s.Time > l.newest {
-		l.learnInterval(s.Time)
-		l.newest = s.Time
-	}
-	l.started, l.seeded, l.fresh = true, false, true
-	a.learnOffset(l, s, first)
-	if !l.set.exception || !a.ticking(l) {
-		a.reach(i, l, l.newest)
-	}
-	if len(l.open) > maxWaiting {
-		a.reach(i, l, l.open[len(l.open)-maxWaiting].time+l.halfMs())
-	}
-	return true
-}
-
-// isOld says that the first PV since a join is the last value known of a tag
-// that did not change, not news.
-func (a *Assembler) isOld(l *state, s *Sample) bool {
-	return s.Time <= l.closed || s.Arrived-s.Time > max(30_000, 10*l.stepMs())
-}
-
-// takeAlive is a tick of one loop.
-func (a *Assembler) takeAlive(i int32, l *state, s *Sample) {
-	if s.Quality == Bad {
-		return
-	}
-	l.heard = a.clock
-	l.off.alive = max(l.off.alive, s.Time)
-	a.tickLoop(i, l, nil, l.off.alive)
-}
-
-// takeValue takes any value but PV.
-func (a *Assembler) takeValue(l *state, s *Sample) {
-	v := s.Value
-	if s.Quality == Bad || math.IsInf(v, 0) {
-		v = math.NaN()
-	}
-	reg := l.register(s.Role)
-	if reg == nil {
-		return // a condition the loop does not have
-	}
-	if s.Time <= l.horizon {
-		switch {
-		case s.Time > reg.time:
-			reg.time, reg.value = s.Time, v
-			if s.Time <= l.closed {
-				l.counts.Late++
-			}
-		case s.Time == reg.time:
-			l.counts.Duplicates++
-		default:
-			l.counts.Late++
-		}
-		return
-	}
-	at := len(l.wait)
-	for at > 0 && l.wait[at-1].time > s.Time {
-		at--
-	}
-	for k := at; k > 0 && l.wait[k-1].time == s.Time; k-- {
-		if l.wait[k-1].role == s.Role {
-			l.counts.Duplicates++
-			return
-		}
-	}
-	if s.Time == reg.time {
-		l.counts.Duplicates++
-		return
-	}
-	l.wait = slices.Insert(l.wait, at, waiting{s.Time, v, s.Role})
-	if len(l.wait) > maxWaiting {
-		l.settle(l.wait[0].time)
-	}
-}
-
-func (l *state) register(r Role) *register {
-	if r >= RoleCond0 {
-		if l.conds == nil {
-			return nil
-		}
-		return &l.conds[r-RoleCond0]
-	}
-	return &l.regs[registerOf(r)]
-}
-
-// settle takes the waiting values up to a time over into the registers.
-func (l *state) settle(to int64) {
-	k := 0
-	for ; k < len(l.wait) && l.wait[k].time <= to; k++ {
-		w := &l.wait[k]
-		if r := l.register(w.role); w.time > r.time {
-			r.time, r.value = w.time, w.value
-		}
-	}
-	if k > 0 {
-		l.wait = l.wait[:copy(l.wait, l.wait[k:])]
-	}
-	l.horizon = max(l.horizon, to)
 }
 
 // learnInterval follows the median of the intervals between PVs.

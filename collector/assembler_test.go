@@ -4,11 +4,11 @@ import (
 	"fmt"
 	"math"
 	"math/rand"
+	"runtime"
 	"slices"
 	"strings"
 	"testing"
 	"time"
-	"unsafe"
 
 	"midwatch/configs"
 )
@@ -539,6 +539,96 @@ func TestThinning(t *testing.T) {
 	}
 }
 
+func TestNewQualityUnderTheOldTime(t *testing.T) {
+	r := newRig(t, exception, 1)
+	r.a.Join(Group{}, []LoopID{0})
+	r.put(RoleSP, 0, 5)
+	r.put(RolePV, 1, 1)
+	r.tick(1)
+	r.tick(2)
+	bad := []Sample{{Role: RolePV, Quality: Bad, Time: ms(1), Arrived: ms(2.5), Value: 1}, {Role: RoleSP, Quality: Bad, Time: ms(0), Arrived: ms(2.5)}}
+	r.feed(bad...)
+	r.feed(bad...)
+	r.tick(3)
+	r.tick(4)
+	r.feed(Sample{Role: RolePV, Time: ms(1), Arrived: ms(4.5), Value: 1})
+	r.tick(5)
+	r.want("1 1/5/-; 2 -/-/- held; 3 -/-/- held; 4 1/-/- held")
+	if c := r.a.Counts(0); c.Duplicates != 2 || c.Late != 0 {
+		t.Errorf("%+v", c)
+	}
+}
+
+func TestAdopt(t *testing.T) {
+	r := newRig(t, exception, 2)
+	g := Group{1, 0}
+	r.a.Join(g, []LoopID{0, 1})
+	r.put(RoleSP, 0, 5) // will not change again
+	r.put(RolePV, 1, 1)
+	tick := func(at float64) { r.a.Tick(Tick{Group: g, Through: ms(at), Arrived: ms(at + 0.2), Alive: true}) }
+	tick(2)
+	before := r.a
+	renumbered := newRig(t, exception, 3)
+	r.a, renumbered.got = renumbered.a, r.got
+	r.a.emit = func(id LoopID, f *Frame) { r.got[id-2] = append(r.got[id-2], *f) }
+	r.a.Adopt(2, before, 0)
+	r.a.Adopt(0, before, 77) // a loop that was not there
+	r.a.Join(g, []LoopID{2})
+	r.feed(Sample{Loop: 2, Role: RolePV, Time: ms(2.5), Arrived: ms(2.6), Value: 2})
+	tick(3)
+	tick(4)
+	r.want("1 1/5/-; 2.5 2/5/-; 3.5 2/5/- held"[:len(r.text())])
+	if len(r.got[0]) < 2 || r.a.Counts(2).Samples != 3 {
+		t.Errorf("%s %+v", r.text(), r.a.Counts(2))
+	}
+}
+
+// A long run of a server whose clock is neither that of the controllers nor
+// keeps pace with it: no sample is late, nothing is made up, frames lag little.
+func TestForeignClocksForADay(t *testing.T) {
+	for _, c := range []struct{ offset, drift, news float64 }{
+		{0, 0, 0.05}, {-3600, 0, 0.2}, {240, 0, 0.05}, {0, 100e-6, 0.05}, {0, -100e-6, 0.05}, {-20, 50e-6, 0.003}, {40, -50e-6, 0.003},
+	} {
+		rng := rand.New(rand.NewSource(3))
+		r := newRig(t, exception, 1)
+		r.a.Join(Group{}, []LoopID{0})
+		var changes []openPV
+		worst := 0.0
+		for s := 1.0; s < 86_400; s++ {
+			value := func(at float64) float64 { return at + c.offset + c.drift*at } // the controllers' clock
+			var batch []Sample
+			if s == 1 || rng.Float64() < c.news {
+				x := Sample{Role: RolePV, Time: ms(value(s - 0.9*rng.Float64())), Arrived: ms(s + 0.3*rng.Float64()), Value: float64(len(changes))}
+				changes = append(changes, openPV{x.Time, float32(x.Value), 0})
+				batch = append(batch, x)
+			}
+			r.feed(batch...)
+			r.a.Tick(Tick{Through: ms(s), Arrived: ms(s + 0.31), Alive: true})
+			if n := len(r.got[0]); n > 0 && s > 10 {
+				worst = max(worst, value(s)-float64(r.got[0][n-1].Time-t0)/1000)
+			}
+		}
+		k := 0
+		for i, f := range r.got[0] {
+			for k+1 < len(changes) && changes[k+1].time <= f.Time {
+				k++
+			}
+			if f.PV != changes[k].value {
+				t.Errorf("%+v: frame %d at %d shows %g, the value was %g", c, i, f.Time-t0, f.PV, changes[k].value)
+				break
+			}
+		}
+		n := r.a.Counts(0)
+		if n.Late+n.Gaps+n.Clock != 0 || n.Frames < 80_000 {
+			t.Errorf("%+v: %+v", c, n)
+		}
+		// What equal clocks may be apart, and what drifts in 64 news.
+		if limit := 8 + 2*math.Abs(c.drift)*64/c.news; worst > limit {
+			t.Errorf("%+v: frames lag %.1f s, want less than %.1f s", c, worst, limit)
+		}
+	}
+}
+
 func TestTuningTags(t *testing.T) {
 	r := newRig(t, func(l *configs.Loop) { l.GainUnit, l.ResetUnit = configs.GainBand, configs.ResetRepeatsPerMinute }, 1)
 	r.put(RoleGain, 0, 125)
@@ -721,10 +811,7 @@ func TestArrivalOrderDoesNotMatter(t *testing.T) {
 	}
 }
 
-func TestStateIsSmallAndSteadyStateAllocatesNothing(t *testing.T) {
-	if n := unsafe.Sizeof(state{}); n > 600 {
-		t.Errorf("%d bytes per loop", n)
-	}
+func TestSteadyStateAllocatesNothing(t *testing.T) {
 	batch, feed := loadOf(t, 100)
 	for range 20 {
 		feed(batch)
@@ -732,6 +819,47 @@ func TestStateIsSmallAndSteadyStateAllocatesNothing(t *testing.T) {
 	if n := testing.AllocsPerRun(100, func() { feed(batch) }); n != 0 {
 		t.Errorf("%g allocations per batch", n)
 	}
+}
+
+// What a loop costs in the assembler, its settings and its waiting values
+// included.
+func TestMemoryPerLoop(t *testing.T) {
+	const n = 2000
+	batch, feed := loadOf(t, n)
+	heap := func() uint64 {
+		var m runtime.MemStats
+		runtime.GC()
+		runtime.ReadMemStats(&m)
+		return m.HeapAlloc
+	}
+	_ = batch
+	var loops []*configs.Loop
+	for i := range n {
+		l := configs.NewLoop(fmt.Sprint("FIC-", i))
+		l.SampleS = 1
+		loops = append(loops, l)
+	}
+	before := heap()
+	a, err := New(loops, Options{}, func(LoopID, *Frame) {})
+	if err != nil {
+		t.Fatal(err)
+	}
+	for s := int64(0); s < 10; s++ {
+		for k := 0; k < len(batch); k += 100 { // small batches: their own memory is not at issue
+			for i := range batch[k : k+100] {
+				batch[k+i].Time += 1000
+				batch[k+i].Arrived += 1000
+			}
+			a.Feed(batch[k : k+100])
+		}
+	}
+	per := float64(heap()-before) / n
+	t.Logf("%.0f bytes per loop", per)
+	if per > 700 {
+		t.Errorf("%.0f bytes per loop", per)
+	}
+	runtime.KeepAlive(a)
+	runtime.KeepAlive(feed)
 }
 
 // loadOf makes a batch of one scan of n loops (PV, SP, OP, tag by tag) and a
@@ -760,6 +888,28 @@ func loadOf(t testing.TB, n int) ([]Sample, func([]Sample)) {
 		}
 		a.Feed(b)
 	}
+}
+
+// Loops that report changes only and are silent: one held frame per tick each.
+func BenchmarkHeld(b *testing.B) {
+	const n = 1000
+	r := newRig(b, exception, n)
+	r.a.emit = func(LoopID, *Frame) {}
+	var ids []LoopID
+	for i := range LoopID(n) {
+		ids = append(ids, i)
+	}
+	r.a.Join(Group{}, ids)
+	for i := range LoopID(n) {
+		r.feed(Sample{Loop: i, Role: RolePV, Time: ms(0), Arrived: ms(0.1), Value: 1})
+	}
+	s := 0.0
+	b.ReportAllocs()
+	for b.Loop() {
+		s++
+		r.tick(s)
+	}
+	b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N)/n, "ns/frame")
 }
 
 func BenchmarkAssembler(b *testing.B) {

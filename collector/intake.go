@@ -197,6 +197,7 @@ type Batch struct {
 	ring     ring
 	controls []control
 	lost     []LoopID
+	joined   []Sample // a span that goes round the end of the ring
 }
 
 // Wait blocks until something waits in the shard or the context ends; it says
@@ -253,5 +254,9 @@ func (b *Batch) Feed(a *Assembler) {
 
 func (b *Batch) feedSpan(a *Assembler, from, to uint64) {
 	x, y := b.ring.span(from, to)
-	a.Feed(x, y)
+	if len(y) > 0 { // one delivery must stay in one piece
+		b.joined = append(append(b.joined[:0], x...), y...)
+		x = b.joined
+	}
+	a.Feed(x)
 }

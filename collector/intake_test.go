@@ -124,6 +124,25 @@ func TestDroppedSamplesFlagTheNextFrame(t *testing.T) {
 	}
 }
 
+func TestBacklogRoundTheEndOfTheRing(t *testing.T) {
+	in := NewShards(1, 40)
+	in.Put(numbered(7, 0, 25)) // of a loop that is not there
+	var backlog []Sample
+	for _, role := range []Role{RolePV, RoleSP} {
+		for s := 1.0; s <= 15; s++ {
+			backlog = append(backlog, Sample{Role: role, Time: ms(s), Arrived: ms(16), Value: s})
+		}
+	}
+	in.Put(backlog)
+	want := ""
+	for s := 1; s <= 14; s++ {
+		want += fmt.Sprintf("%d %d/%d/-; ", s, s, s)
+	}
+	if got := feedAll(t, in); got+"; " != want {
+		t.Errorf("%s", got)
+	}
+}
+
 func TestControlsKeepTheirPlaceAndAreNeverDropped(t *testing.T) {
 	in := NewShards(1, 2)
 	g := Group{1, 2}

@@ -21,7 +21,8 @@ type setting struct {
 	suppress   condition
 }
 
-func newSetting(l *configs.Loop) (*setting, error) {
+// newSetting shares the mode maps of equal text.
+func newSetting(l *configs.Loop, modes map[string]*ModeMap) (*setting, error) {
 	s := &setting{loop: l, exception: l.Report == configs.Exception, aliveTag: l.AliveTag != ""}
 	if l.SampleS > 0 {
 		s.sampleMs = max(1, int64(math.Round(l.SampleS*1000)))
@@ -30,9 +31,12 @@ func newSetting(l *configs.Loop) (*setting, error) {
 	if l.SilenceS > 0 {
 		s.silenceMs, s.ownSilence = max(1, int64(math.Round(l.SilenceS*1000))), true
 	}
-	var err error
-	if s.modes, err = ParseModeMap(l.ModeMap); err != nil {
-		return nil, fmt.Errorf("loop %s: mode_map: %w", l.Name, err)
+	if s.modes = modes[l.ModeMap]; s.modes == nil {
+		m, err := ParseModeMap(l.ModeMap)
+		if err != nil {
+			return nil, fmt.Errorf("loop %s: mode_map: %w", l.Name, err)
+		}
+		s.modes, modes[l.ModeMap] = m, m
 	}
 	if n := max(len(l.ActiveWhen.Terms), len(l.SuppressWhen.Terms)); n > MaxConds/2 {
 		return nil, fmt.Errorf("loop %s: %d comparisons in one condition; hint: at most %d", l.Name, n, MaxConds/2)

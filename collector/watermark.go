@@ -13,12 +13,12 @@ import "math"
 //   - News is any PV but the first since a join, which may be old; the first
 //     counts when it is fresh by its arrival, and the first tick after it is
 //     compared with it over the time between their arrivals.
-//   - An offset between 0 and a few samples is what sampling and publishing
-//     make of equal clocks: then the tick is taken at its word.
-//   - Otherwise the watermark stays another half sample behind.
+//   - An offset between 0 and a few samples and ticks is what sampling and
+//     publishing make of equal clocks: then the tick is taken at its word.
+//   - Otherwise the watermark stays another half second behind.
 //
 // A loop without news takes the offset of the last loop of its group that had
-// some.
+// some; after half a minute without any, the clocks are taken to be equal.
 type offset struct {
 	low, before int64 // least of the running and of the last bucket, ms
 	n           int   // news in the running bucket
@@ -28,7 +28,8 @@ type offset struct {
 
 const (
 	offsetBucket = 32
-	equalClockMs = 10_000 // besides two samples
+	slackMs      = 500
+	equalClockMs = 2000 // besides two samples and two ticks
 )
 
 // life is the state of a life group.
@@ -38,6 +39,7 @@ type life struct {
 	first   int64 // through of the first tick since the join
 	through int64 // of the last tick, ms, made continuous over steps of its clock
 	adjust  int64 // what makes it so
+	every   int64 // the longer of the last intervals between ticks, ms
 	arrived int64 // wall clock of the last tick
 	heard   int64 // Assembler.clock of the last tick while alive
 	down    int64 // Assembler.clock of the loss of the link
@@ -111,6 +113,9 @@ func (a *Assembler) Tick(t Tick) {
 	if s.ticks == 0 || s.first == 0 {
 		s.first = through
 	}
+	if s.through != 0 {
+		s.every = max(through-s.through, s.every*7/8)
+	}
 	s.through = max(s.through, through)
 	s.arrived, s.heard, s.alive = t.Arrived, a.clock, true
 	s.ticks++
@@ -146,12 +151,12 @@ func (a *Assembler) tickLoop(i int32, l *state, s *life, through int64) {
 	}
 	if !l.off.known && l.fresh {
 		d := l.newest - through + a.clock - l.heard
-		if max(d, -d) <= l.equalMs() {
+		if max(d, -d) <= a.equalMs(l, s) {
 			d = 0
 		}
 		l.off.low, l.off.before, l.off.known = d, math.MaxInt64, true
 	}
-	off, ok := l.off.value(l)
+	off, ok := l.off.value(a.equalMs(l, s))
 	switch {
 	case ok:
 	case s != nil && s.known:
@@ -162,18 +167,26 @@ func (a *Assembler) tickLoop(i int32, l *state, s *life, through int64) {
 	a.reach(i, l, through+off)
 }
 
-func (l *state) equalMs() int64 { return equalClockMs + 2*l.stepMs() }
+// equalMs is how far values may be ahead of the tick before them while the
+// clocks are equal; s is nil for the ticks of an alive tag.
+func (a *Assembler) equalMs(l *state, s *life) int64 {
+	ms := equalClockMs + 2*l.stepMs()
+	if s != nil {
+		ms += 2 * min(s.every, 60_000)
+	}
+	return ms
+}
 
 // value is the offset in force, ms.
-func (o *offset) value(l *state) (ms int64, ok bool) {
+func (o *offset) value(equal int64) (ms int64, ok bool) {
 	if !o.known {
 		return 0, false
 	}
 	low := min(o.low, o.before)
-	if low >= 0 && low <= l.equalMs() {
+	if low >= 0 && low <= equal {
 		return 0, true
 	}
-	return low - l.halfMs(), true
+	return low - slackMs, true
 }
 
 // learnOffset takes the news of a PV.
@@ -191,6 +204,6 @@ func (a *Assembler) learnOffset(l *state, s *Sample, first bool) {
 	}
 	if l.group >= 0 && !l.set.aliveTag {
 		g := a.groups[l.group]
-		g.off, g.known = o.value(l)
+		g.off, g.known = o.value(a.equalMs(l, g))
 	}
 }

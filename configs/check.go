@@ -218,6 +218,9 @@ func (d *decoder) hostPort(key, s, example string) (host string) {
 func (d *decoder) checkPage(c *Config) {
 	p := &c.Page
 	before := len(d.list)
+	if p.Listen == "" {
+		return // told as without a value
+	}
 	host := d.hostPort("page.listen", p.Listen, "127.0.0.1:8420")
 	ip, err := netip.ParseAddr(host)
 	loopback := host == "localhost" || err == nil && ip.IsLoopback()

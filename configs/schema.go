@@ -391,7 +391,7 @@ func itemWhat(n *node) string {
 }
 
 func (d *decoder) scalar(n *node, v value, key string) {
-	if _, isText := v.(textValue); n.text == "" && !isText {
+	if strings.TrimSpace(n.text) == "" {
 		d.add(n.at, key, "write a value or remove the key", "the key has no value")
 		return
 	}

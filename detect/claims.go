@@ -137,7 +137,10 @@ func measureSustained(w *Watch, m []float64) {
 	sh := w.shapes()
 	m[0], m[1], m[2], m[3] = o.P, o.Amp, w.pvUnits(o.Amp), math.Min(o.Regular, 99)
 	m[4], m[5] = w.tuningNow()
-	m[6], m[7] = w.stickIndex(sh), sh.h3OP
+	m[6], m[7], m[8] = w.stickIndex(sh), sh.h3OP, sh.stick
+	if o.Kc != 0 {
+		m[9], m[10] = o.PhiDeg, sh.phiDeg
+	}
 }
 
 func measureSticking(w *Watch, m []float64) {
@@ -145,7 +148,10 @@ func measureSticking(w *Watch, m []float64) {
 	sh := w.shapes()
 	lo, hi := w.opSwing()
 	m[0], m[1], m[2], m[3] = o.P, o.Amp, w.pvUnits(o.Amp), hi-lo
-	m[4], m[5] = w.stickIndex(sh), sh.h3OP
+	m[4], m[5], m[6], m[7] = w.stickIndex(sh), sh.h3OP, sh.stick, math.Min(o.Regular, 99)
+	if o.Kc != 0 {
+		m[8], m[9] = o.PhiDeg, sh.phiDeg
+	}
 }
 
 // opSwing is the range of OP, %, over the cycles held by the track.
@@ -244,7 +250,7 @@ func (w *Watch) judges(k int) bool {
 	case configs.Selector, configs.Standby:
 		return k != kOffset && k != kSaturation && k != kMode && k != kSluggish
 	}
-	if w.loop.PropOnly && k == kOffset {
+	if w.loop.PropOnly && (k == kOffset || k == kSluggish) {
 		return false
 	}
 	return true

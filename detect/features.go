@@ -75,30 +75,31 @@ func (s *scale) init(l *configs.Loop, f *collector.Frame) {
 
 // motion is what PV, SP and OP have been doing: stillness, steps, extremes.
 type motion struct {
-	PV, SP, OP, E      float64 // of the last slot, %
-	Mode               collector.Mode
-	ModeSince          float64 // s
-	PVSame, OPSame     float64 // s, since when the value has not changed
-	PVRunMax, OPRunMax float64 // s, longest still run in the past
-	Changes            uint32  // of PV
-	SPStep             float64 // s, last step of SP over 0.3 %
-	SPPrevStep         float64 // s, the one before
-	SPSteps            uint32  // steps over 0.3 % counted with 60 slots between them
-	SPBusy             float32 // share of slots in which SP moved, slow mean
-	Active             bool
-	ActiveSince        float64
-	LawSeen            bool       // OP was seen answering e
-	EF                 float64    // e through a lag of three slots
-	OPMin, OPMax       float32    // while active
-	HalfLo, HalfHi     [2]float32 // OP extremes of the running and the last half hour (or 60 slots)
-	SPLo, SPHi         [2]float32
-	ELo, EHi           [2]float32
-	HalfAt             float64 // s, when the running half window began
-	EStill             float64 // range of e since OP stands still
-	EStillLo, EStillHi float32
-	Update             num.Quantile // median interval between changes of PV, slots
-	Frozen             bool
-	JumpRuns           uint16
+	PV, SP, OP, E       float64 // of the last slot, %
+	Mode                collector.Mode
+	ModeSince           float64 // s
+	PVSame, OPSame      float64 // s, since when the value has not changed
+	PVRunMax, OPRunMax  float64 // s, longest still run in the past
+	Changes             uint32  // of PV
+	SPStep              float64 // s, last step of SP over 0.3 %
+	SPPrevStep          float64 // s, the one before
+	SPSteps             uint32  // steps over 0.3 % counted with 60 slots between them
+	SPBusy              float32 // share of slots in which SP moved, slow mean
+	Active              bool
+	ActiveSince         float64
+	LawSeen             bool       // OP was seen answering e
+	EF                  float64    // e through a lag of three slots
+	OPMin, OPMax        float32    // while active
+	HalfLo, HalfHi      [2]float32 // OP extremes of the running and the last half hour (or 60 slots)
+	SPLo, SPHi          [2]float32
+	ELo, EHi            [2]float32
+	HalfAt              float64 // s, when the running half window began
+	EStill              float64 // range of e since OP stands still
+	EStillLo, EStillHi  float32
+	Update              num.Quantile // median interval between changes of PV, slots
+	Frozen              bool
+	Manual              bool    // inferred from OP, where there is no mode tag
+	OPBusy, OPBusyUsual float32 // share of slots in which OP moved: last 20 slots, and usual
 }
 
 // noise is the noise level of PV, learnt from differences (methods: blind to

@@ -132,8 +132,8 @@ func stepMode(w *Watch) {
 	off := false
 	switch {
 	case in.mode == collector.ModeUnknown:
-		off = !m.Active && w.inferredManual() && normal != collector.Manual
-		since = m.OPSame
+		off = m.Manual && normal != collector.Manual
+		since = m.ActiveSince
 	case normal == collector.Manual || normal == collector.OutOfService:
 		off = false
 	case normal == collector.Cascade || normal == collector.RemoteSP:

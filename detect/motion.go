@@ -141,7 +141,16 @@ func (w *Watch) stepStill() {
 		m.Changes++
 		m.PVSame = in.t
 	}
-	if in.hasOP && math.Abs(in.op-m.OP) > opSame {
+	moved := in.hasOP && math.Abs(in.op-m.OP) > opSame
+	if moved {
+		m.OPBusy += (1 - m.OPBusy) / 20
+	} else {
+		m.OPBusy -= m.OPBusy / 20
+	}
+	if m.Active && !m.Manual {
+		m.OPBusyUsual += (m.OPBusy - m.OPBusyUsual) / 500
+	}
+	if moved {
 		if m.Active && in.t-m.OPSame > m.OPRunMax {
 			m.OPRunMax = in.t - m.OPSame
 		}
@@ -158,14 +167,23 @@ func (w *Watch) stepStill() {
 // its limits, is a controller in manual.
 func (w *Watch) inferredManual() bool {
 	m, in := &w.s.Motion, &w.in
-	if in.mode != collector.ModeUnknown || !in.hasOP || in.limit {
+	if in.mode != collector.ModeUnknown || !in.hasOP {
+		m.Manual = false
+		return false
+	}
+	if m.Manual { // steps of OP by hand do not end it, moving as the law does will
+		m.Manual = !(m.OPBusy > max(0.3*m.OPBusyUsual, 0.04))
+		return m.Manual
+	}
+	if in.limit {
 		return false
 	}
 	still := in.t - m.OPSame
 	if still < math.Max(300, 40*in.dt) || still < 4*math.Min(m.OPRunMax, 6*3600) {
 		return false
 	}
-	return float64(m.EStillHi-m.EStillLo) > 6*w.s.Noise.sigma()+0.2
+	m.Manual = float64(m.EStillHi-m.EStillLo) > 6*w.s.Noise.sigma()+0.2
+	return m.Manual
 }
 
 // updateS is the interval, s, at which PV really changes: an analyser may give a

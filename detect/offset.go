@@ -293,8 +293,10 @@ func (w *Watch) offsetCause(kc float64, known bool, rt, d, push, lo, hi float64,
 		return Undetermined, 0.5, 8 * 3600
 	case math.Abs(o.Es) < 0.6*math.Abs(float64(a.E)):
 		return c, conf, -1 // it is being worked off
-	case !o.WasStill && (implied < 0 || implied > 3*span && implied > 4*rt || rt > 0 && implied > 5*rt) && expect > 1.5 && math.Abs(dop-kc*de) < math.Max(0.2*expect, 0.5):
+	case !o.WasStill && (implied < 0 || implied > 3*span && implied > 4*rt || rt > 0 && implied > 5*rt) && expect > 1.5 && math.Abs(dop-kc*de) < math.Max(0.2*expect, 0.5) && hi-lo < 2.5*math.Abs(kc)*eRange+1:
 		return IntegralMissing, 0.9, 0
+	case w.crossesSplit(lo, hi):
+		return Undetermined, 0.5, 4 * 3600
 	case math.Abs(dop) > 15 && lo > 1 && hi < 99 && math.Abs(o.Es) > 0.9*math.Abs(float64(a.E)) && math.Abs(o.Es) > 2 && push*dop > 0:
 		o.NotFollow = true
 		return FinalElementNotFollowing, 0.85, 0
@@ -363,4 +365,15 @@ func stepSaturation(w *Watch) {
 	if z.WindUp && in.t-z.LastWind > 86400 {
 		z.WindUp, z.WindUps = false, 0
 	}
+}
+
+// crossesSplit: OP has been on both sides of the change-over of a split range,
+// where the process answers by another element, or by none for a while.
+func (w *Watch) crossesSplit(lo, hi float64) bool {
+	x := w.loop.OPSplit
+	if x != x {
+		return false
+	}
+	p := (x - w.s.Scale.OPLow) / w.s.Scale.OPSpan * 100
+	return lo < p+3 && hi > p-3
 }

@@ -129,8 +129,20 @@ func phiConfidence(phi float64, ok bool) float64 {
 	return math.Min(0.97, 0.8+0.012*math.Max(d, 0))
 }
 
+// setCause takes a judgement. One that differs from what was named before must
+// come three times running: a cause that flickers is none.
 func (o *oscState) setCause(c Cause, also [2]Cause, conf float64) {
-	o.Cause = causeIndex(c)
+	k := causeIndex(c)
+	if o.Cause != 0 && k != o.Cause && causes[o.Cause] != Undetermined {
+		if o.Next != k {
+			o.Next, o.NextN = k, 0
+		}
+		if o.NextN++; o.NextN < 3 {
+			return
+		}
+	}
+	o.Next, o.NextN = 0, 0
+	o.Cause = k
 	o.Also = [2]uint8{causeIndex(also[0]), causeIndex(also[1])}
 	o.Conf = float32(conf)
 }
@@ -140,8 +152,8 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	o := &s.Osc
 	q, _ := b.stat(int(o.Bank), min(int(b.N), ringLen))
 	move := o.AmpHi / math.Max(o.AmpLo, 1e-9)
-	tri := si > 0.58
-	o.Sticking = false
+	tri := si > 0.64
+	integrating := w.loop.Process == configs.Integrating
 	switch {
 	case o.GrowCause != 0 && causes[o.GrowCause] != Undetermined:
 		o.setCause(causes[o.GrowCause], also, 0.85)
@@ -151,18 +163,18 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	case tri && sh.h3OP > 0.25:
 		// OP square: what drives the loop is square, a sticking valve makes OP a triangle.
 		o.setCause(OutsideDisturbance, [2]Cause{ValveSticking}, 0.75)
-	case tri && !changed && sh.looks < 3:
+	case tri && !changed && sh.looks < 4:
 		o.setCause(Undetermined, [2]Cause{ValveSticking, ProcessNonlinear}, 0.6)
 	case tri && !changed && w.propOnlySeen():
 		o.setCause(Undetermined, [2]Cause{ValveSticking, OutsideDisturbance}, 0.5)
+	case integrating && phi > 55 && si < 0.78 && q.spread > 0.12:
+		// A slow swing far beyond the reset time: an integrating loop with too little
+		// gain is poorly damped for any reset (Skogestad 2003).
+		o.setCause(GainTooLow, [2]Cause{ResetTooShort}, 0.75)
+	case integrating && !changed && si > 0.52 && phi < 55 && sh.looks >= 6 && q.regular > 4 && si < 0.7:
+		o.setCause(ValveDeadBand, [2]Cause{ValveSticking}, 0.7)
 	case tri && !changed:
-		o.Sticking = true
-		c := ValveSticking
-		if w.loop.Process == configs.Integrating && si < 0.65 {
-			o.setCause(c, [2]Cause{ValveDeadBand}, 0.75)
-		} else {
-			o.setCause(c, [2]Cause{ProcessNonlinear}, math.Min(0.95, 0.7+0.6*(si-0.58)))
-		}
+		o.setCause(ValveSticking, [2]Cause{ProcessNonlinear}, math.Min(0.95, 0.72+0.6*(si-0.64)))
 	case changed:
 		o.setCause(byPhi, also, 0.85)
 	case o.SharedWith > 1 && !tri:
@@ -179,8 +191,5 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	default:
 		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, byPhi}, 0.5)
 	}
-	if w.loop.Process == configs.Integrating && causes[o.Cause] == GainTooHigh && phi > 30 && o.GrowCause == 0 {
-		// Slow swings of integrating loops want more gain or a longer reset (Skogestad 2003).
-		o.setCause(Undetermined, [2]Cause{ResetTooShort, GainTooLow}, 0.5)
-	}
+	o.Sticking = causes[o.Cause] == ValveSticking
 }

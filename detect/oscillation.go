@@ -24,6 +24,8 @@ type oscState struct {
 	Outside    bool    // judged outside once
 	Changed    bool    // the loop's own tuning changed before
 	Cause      uint8
+	Next       uint8 // a differing judgement, and how often running
+	NextN      uint8
 	Also       [2]uint8
 	Conf       float32
 	PhiDeg     float64

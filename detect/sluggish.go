@@ -3,6 +3,7 @@ package detect
 import (
 	"math"
 
+	"midwatch/configs"
 	"midwatch/detect/num"
 )
 
@@ -54,7 +55,7 @@ func (w *Watch) judgeSlow() {
 		}
 	}
 	shape := 0
-	if n >= 5 {
+	if n >= 5 && w.loop.Process != configs.Runaway && w.loop.Report != configs.Exception {
 		var t9 [5]float64
 		lo := math.Inf(1)
 		for i := range 5 {
@@ -62,7 +63,9 @@ func (w *Watch) judgeSlow() {
 			t9[i] = float64(e.Dur-e.Rise) / math.Max(float64(e.Rise), 3*w.s.Grid.DT)
 			lo = math.Min(lo, t9[i])
 		}
-		if num.Median(t9[:]) > 12*w.strict && lo > 8 {
+		_, ti, ok := w.tuning(r.recent(4).T0, 0)
+		d := float64(r.recent(2).Dur)
+		if num.Median(t9[:]) > 12*w.strict && lo > 8 && ok && ti > 0 && d > 1.3*ti && d < 6*ti {
 			shape = 1
 		}
 	}

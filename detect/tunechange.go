@@ -33,7 +33,7 @@ const (
 func (w *Watch) tuneCheck(k int) {
 	s := &w.s
 	b := &s.Fits[k]
-	if b.Count < fitRing || b.BaseK.N < 4 || s.Osc.Sus && s.Osc.Grow {
+	if b.Count < fitRing || b.BaseK.N < 6 || s.Osc.Sus && s.Osc.Grow {
 		return
 	}
 	var ks, ts [changeFits]float64
@@ -55,13 +55,13 @@ func (w *Watch) tuneCheck(k int) {
 	}
 	kn, tn := num.Median(ks[:]), num.Median(ts[:])
 	what := uint8(0)
-	if r := kn / math.Max(b.BaseK.Value(), 1e-9); (r > changeRatio || r < 1/changeRatio) && span(ks[:]) < changeSpread {
+	if r := kn / math.Max(b.BaseK.Value(), 1e-9); math.Abs(math.Log(r)) > math.Max(math.Log(changeRatio), 3.5*b.DevK.Value())*w.strict && span(ks[:]) < changeSpread {
 		what |= 1
 	}
 	if b.BaseT.N >= 4 && tn > 0 && math.Min(math.Min(ts[0], ts[1]), math.Min(ts[2], ts[3])) > 0 {
 		// The scale must see the reset: neither far below the filter nor far above.
 		th := fitTh * w.levelS(2*k)
-		if r := tn / math.Max(b.BaseT.Value(), 1e-9); (r > changeRatio || r < 1/changeRatio) && span(ts[:]) < changeSpread && tn < 20*th {
+		if r := tn / math.Max(b.BaseT.Value(), 1e-9); math.Abs(math.Log(r)) > math.Max(math.Log(changeRatio), 3.5*b.DevT.Value())*w.strict && span(ts[:]) < changeSpread && tn < 20*th {
 			what |= 2
 		}
 	}
@@ -80,7 +80,7 @@ func (w *Watch) tuneCheck(k int) {
 	*c = tuneChange{On: true, At: oldest, Seen: w.in.t, GainWas: b.BaseK.V, GainNow: float32(kn), ResetWas: b.BaseT.V, ResetNow: float32(tn),
 		What: what, TagGain: c.TagGain, TagReset: c.TagReset}
 	// From here on the new tuning is the usual one.
-	b.BaseK, b.BaseT = num.Quantile{V: float32(kn), N: 4}, num.Quantile{V: float32(math.Max(tn, 1e-3)), N: 4}
+	b.BaseK, b.BaseT = num.Quantile{V: float32(kn), N: 6}, num.Quantile{V: float32(math.Max(tn, 1e-3)), N: 6}
 }
 
 // readTuning follows tuning tags: a change there is a fact, not an estimate.

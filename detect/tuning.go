@@ -59,6 +59,7 @@ type fitBank struct {
 	Ring                      [fitRing]fit
 	Count                     uint32       // good fits ever
 	BaseK, BaseT              num.Quantile // medians of good fits older than the ring
+	DevK, DevT                num.Quantile // 80 % quantile of their deviations, ln
 }
 
 // tuneState is what is common to the fits.
@@ -123,6 +124,12 @@ func (w *Watch) keepFit(k int, r fit) {
 	i := b.Count % fitRing
 	if b.Count >= fitRing {
 		old := &b.Ring[i]
+		if b.BaseK.N > 2 {
+			b.DevK.Add(math.Abs(math.Log(math.Abs(float64(old.Kc))/b.BaseK.Value())), 0.8, 0.05, 0.01)
+		}
+		if b.BaseT.N > 2 && old.Ti > 0 {
+			b.DevT.Add(math.Abs(math.Log(float64(old.Ti)/b.BaseT.Value())), 0.8, 0.05, 0.01)
+		}
 		b.BaseK.Add(math.Abs(float64(old.Kc)), 0.5, 0.02, 1e-6)
 		if old.Ti > 0 {
 			b.BaseT.Add(float64(old.Ti), 0.5, 0.02, 1e-3)

@@ -25,6 +25,7 @@ import (
 type mailer struct {
 	conf  configs.Mail
 	host  string
+	ssl   bool // TLS from the first byte
 	opts  []mail.Option
 	env   Env
 	names string // domain of message ids
@@ -61,8 +62,8 @@ func newMail(c *configs.Sender, env Env) (alert.Sender, error) {
 	conf.ServerName = host
 	m.opts = []mail.Option{mail.WithPort(n), mail.WithTLSConfig(conf), mail.WithTimeout(15 * time.Second), mail.WithoutNoop()}
 	switch {
-	case m.conf.TLS == "never" && m.conf.Password != "":
-		return nil, errors.New("a password without TLS would cross the network in the clear and is not sent; hint: tls: required, or a relay that asks for no password")
+	case m.conf.TLS == "never" && m.conf.User != "" && !m.conf.AllowClearPassword:
+		return nil, errors.New("a password without TLS would cross the network in the clear and is not sent; hint: tls: required, or a relay that asks for no password, or allow_clear_password: true on a network you trust")
 	case m.conf.TLS == "never":
 		m.opts = append(m.opts, mail.WithTLSPolicy(mail.NoTLS))
 	case n == 465:
@@ -72,8 +73,13 @@ func newMail(c *configs.Sender, env Env) (alert.Sender, error) {
 	default:
 		m.opts = append(m.opts, mail.WithTLSPolicy(mail.TLSMandatory))
 	}
+	m.ssl = n == 465 && m.conf.TLS != "never"
 	if m.conf.User != "" {
-		m.opts = append(m.opts, mail.WithSMTPAuth(mail.SMTPAuthAutoDiscover), mail.WithUsername(m.conf.User), mail.WithPassword(m.conf.Password))
+		auth := mail.SMTPAuthAutoDiscover
+		if m.conf.AllowClearPassword && m.conf.TLS != "required" && m.conf.TLS != "" {
+			auth = mail.SMTPAuthPlainNoEnc
+		}
+		m.opts = append(m.opts, mail.WithSMTPAuth(auth), mail.WithUsername(m.conf.User), mail.WithPassword(m.conf.Password))
 	}
 	return m, nil
 }
@@ -83,18 +89,28 @@ func (m *mailer) Send(ctx context.Context, msg alert.Message) error {
 		return &alert.Permanent{Reason: alert.ReasonClient, Err: errors.New("a line break in a header of the message: refused, it could carry headers of its own")}
 	}
 	picture := m.picture(ctx, msg)
-	c, err := mail.NewClient(m.host, m.opts...)
+	opts := m.opts
+	if !m.ssl {
+		// The library heeds the context while it dials only: its end ends what
+		// follows by closing the connection. With TLS from the first byte the
+		// library must dial itself, and its own timeout has to do.
+		opts = append(opts[:len(opts):len(opts)], mail.WithDialContextFunc(func(dial context.Context, network, addr string) (net.Conn, error) {
+			conn, err := (&net.Dialer{}).DialContext(dial, network, addr)
+			if err == nil {
+				stop := context.AfterFunc(ctx, func() { _ = conn.Close() })
+				return &stopped{conn, stop}, nil
+			}
+			return nil, err
+		}))
+	}
+	c, err := mail.NewClient(m.host, opts...)
 	if err != nil {
 		return &alert.Failure{Reason: alert.ReasonOther, Err: err}
 	}
 	if err := c.DialWithContext(ctx); err != nil {
-		return m.explain(err)
+		return m.explain(ctx, err)
 	}
 	defer c.Close()
-	// The library knows a deadline for dialling only: the end of the context ends
-	// what follows by closing the connection.
-	stop := context.AfterFunc(ctx, func() { _ = c.Close() })
-	defer stop()
 	var refused, later []error
 	for _, to := range m.conf.To {
 		if m.has(msg.Key, to) {
@@ -104,7 +120,7 @@ func (m *mailer) Send(ctx context.Context, msg alert.Message) error {
 		if err != nil {
 			return &alert.Permanent{Reason: alert.ReasonClient, Err: err}
 		}
-		err = m.explain(c.Send(x))
+		err = m.explain(ctx, c.Send(x))
 		switch {
 		case err == nil:
 			m.mark(msg.Key, to)
@@ -113,8 +129,8 @@ func (m *mailer) Send(ctx context.Context, msg alert.Message) error {
 		default:
 			later = append(later, fmt.Errorf("%s: %w", to, err))
 		}
-		if err := ctx.Err(); err != nil {
-			return failure(err)
+		if ctx.Err() != nil {
+			break
 		}
 	}
 	if len(later) > 0 {
@@ -204,9 +220,12 @@ func (m *mailer) picture(ctx context.Context, msg alert.Message) []byte {
 }
 
 // explain turns an error of the mail library into one of the desk.
-func (m *mailer) explain(err error) error {
+func (m *mailer) explain(ctx context.Context, err error) error {
 	if err == nil {
 		return nil
+	}
+	if ctx.Err() != nil {
+		return failure(ctx.Err())
 	}
 	code, enhanced := 0, ""
 	if s, ok := errors.AsType[*mail.SendError](err); ok {
@@ -218,11 +237,11 @@ func (m *mailer) explain(err error) error {
 	text := strings.Join(strings.Fields(err.Error()), " ")
 	e := fmt.Errorf("%s", text)
 	switch {
-	case code == 530 || code == 534 || code == 535 || code == 538 || is[*textproto.Error](err) && strings.Contains(text, "AUTH"):
+	case code == 530 || code == 534 || code == 535 || code == 538 || code >= 500 && strings.Contains(strings.ToLower(text), "authenticat"):
 		return &alert.Failure{Reason: alert.ReasonAuth, Err: fmt.Errorf("%w; hint: compare user and password_file with what the relay wants", e)}
 	case strings.Contains(text, "STARTTLS"):
 		return &alert.Failure{Reason: alert.ReasonTLS, Err: fmt.Errorf("%w; hint: the relay offers no TLS; only on a network you trust: tls: allowed, or never", e)}
-	case strings.Contains(text, "unencrypted connection"), strings.Contains(text, "no supported SMTP auth"):
+	case strings.Contains(text, "unencrypted connection"), strings.Contains(text, "autodiscover"):
 		return &alert.Failure{Reason: alert.ReasonAuth, Err: fmt.Errorf("%w; hint: a password is sent over TLS only; use a relay with TLS, or one that asks for no password", e)}
 	case code == 552 && !strings.HasPrefix(enhanced, "5.2.2") && !strings.Contains(text, "5.2.2"), code == 523:
 		return &alert.Permanent{Reason: alert.ReasonTooLarge, Err: e}
@@ -241,6 +260,14 @@ func (m *mailer) explain(err error) error {
 	}
 	return &alert.Failure{Reason: r, Err: e}
 }
+
+// stopped is a connection that forgets the context when it is closed.
+type stopped struct {
+	net.Conn
+	stop func() bool
+}
+
+func (s *stopped) Close() error { s.stop(); return s.Conn.Close() }
 
 // hasBreak finds what would end a header line.
 func hasBreak(s string) bool { return strings.ContainsAny(s, "\r\n\x00") }

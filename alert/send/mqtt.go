@@ -20,11 +20,14 @@ import (
 // process uses. Its will tells that the watch is gone.
 type mqttSender struct {
 	prefix string
-	client paho.Client
-	first  paho.Token // of the first connection
+	opts   *paho.ClientOptions
+	cancel context.CancelFunc
+	done   chan struct{}
 
-	mu   sync.Mutex
-	last error // why there is no connection
+	mu     sync.Mutex
+	client paho.Client   // nil: not connected
+	up     chan struct{} // closed at the first connection
+	last   error         // why there is no connection
 }
 
 // Payloads of the retained topic <prefix>/status.
@@ -42,10 +45,13 @@ func newMQTT(c *configs.Sender, env Env) (alert.Sender, error) {
 	if err != nil || u.Host == "" {
 		return nil, fmt.Errorf("broker %q cannot be read; hint: write mqtt://host:1883 or mqtts://host:8883", m.Broker)
 	}
-	s := &mqttSender{prefix: m.Prefix}
+	if secure := u.Scheme == "mqtts" || u.Scheme == "ssl" || u.Scheme == "tls" || u.Scheme == "wss"; m.Password != "" && !secure && !m.AllowClearPassword {
+		return nil, errors.New("a password without TLS would cross the network in the clear and is not sent; hint: mqtts://, or allow_clear_password: true on a network you trust")
+	}
+	s := &mqttSender{prefix: m.Prefix, up: make(chan struct{}), done: make(chan struct{})}
 	o := paho.NewClientOptions().AddBroker(m.Broker).SetClientID(m.ClientID).SetUsername(m.User).SetPassword(m.Password).
-		SetCleanSession(true).SetAutoReconnect(true).SetConnectRetry(true).SetConnectRetryInterval(5*time.Second).
-		SetMaxReconnectInterval(time.Minute).SetConnectTimeout(10*time.Second).SetWriteTimeout(10*time.Second).SetKeepAlive(30*time.Second).
+		SetCleanSession(true).SetAutoReconnect(false).SetConnectRetry(false).
+		SetConnectTimeout(10*time.Second).SetWriteTimeout(10*time.Second).SetKeepAlive(30*time.Second).
 		SetWill(m.Prefix+"/status", statusOffline, 1, true)
 	if m.ClientID == "" {
 		o.SetClientID("midwatch-advise-" + digest(env.Site + m.Prefix)[:10])
@@ -63,25 +69,75 @@ func newMQTT(c *configs.Sender, env Env) (alert.Sender, error) {
 		conf.Certificates = []tls.Certificate{pair}
 	}
 	o.SetTLSConfig(conf)
-	// Nothing waits in the library: the desk's outbox keeps what was not taken.
-	o.SetStore(paho.NewMemoryStore()).SetMaxResumePubInFlight(1)
-	o.SetOnConnectHandler(func(c paho.Client) {
-		s.because(nil)
-		c.Publish(s.prefix+"/status", 1, true, statusOnline)
-	})
-	o.SetConnectionNotificationHandler(func(_ paho.Client, n paho.ConnectionNotification) {
-		switch n := n.(type) {
-		case paho.ConnectionNotificationBrokerFailed:
-			s.because(n.Reason)
-		case paho.ConnectionNotificationFailed:
-			s.because(n.Reason)
-		case paho.ConnectionNotificationLost:
-			s.because(n.Reason)
-		}
-	})
-	s.client = paho.NewClient(o)
-	s.first = s.client.Connect()
+	s.opts = o
+	ctx, cancel := context.WithCancel(context.Background())
+	s.cancel = cancel
+	go s.keep(ctx)
 	return s, nil
+}
+
+// keep holds the connection, so that the will stands for the watch. The library
+// does not reconnect by itself: its pauses cannot be ended.
+func (s *mqttSender) keep(ctx context.Context) {
+	defer close(s.done)
+	pause := time.Second
+	for ctx.Err() == nil {
+		lost := make(chan error, 1)
+		o := *s.opts
+		o.SetConnectionLostHandler(func(_ paho.Client, err error) { lost <- err })
+		o.SetConnectionNotificationHandler(func(_ paho.Client, n paho.ConnectionNotification) {
+			// What one broker of several answered is told here only.
+			if f, ok := n.(paho.ConnectionNotificationBrokerFailed); ok {
+				s.set(nil, f.Reason)
+			}
+		})
+		c := paho.NewClient(&o)
+		t := c.Connect()
+		select {
+		case <-t.Done():
+		case <-ctx.Done():
+			<-t.Done() // bounded by the connect timeout
+		}
+		if err := t.Error(); err != nil {
+			s.set(nil, err)
+			select {
+			case <-ctx.Done():
+			case <-time.After(pause):
+			}
+			pause = min(2*pause, time.Minute)
+			continue
+		}
+		pause = time.Second
+		c.Publish(s.prefix+"/status", 1, true, statusOnline)
+		s.set(c, nil)
+		select {
+		case err := <-lost:
+			s.set(nil, err)
+		case <-ctx.Done():
+			s.set(nil, errors.New("closed"))
+			c.Publish(s.prefix+"/status", 1, true, statusOffline).WaitTimeout(2 * time.Second)
+		}
+		c.Disconnect(100)
+	}
+}
+
+func (s *mqttSender) set(c paho.Client, err error) {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	s.client, s.last = c, err
+	if c != nil {
+		select {
+		case <-s.up:
+		default:
+			close(s.up)
+		}
+	}
+}
+
+func (s *mqttSender) connection() paho.Client {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	return s.client
 }
 
 // checkPrefix keeps advisories out of every namespace in which a process lives.
@@ -117,12 +173,6 @@ func overlaps(filter, prefix string) bool {
 	return true
 }
 
-func (s *mqttSender) because(err error) {
-	s.mu.Lock()
-	defer s.mu.Unlock()
-	s.last = err
-}
-
 func (s *mqttSender) Send(ctx context.Context, m alert.Message) error {
 	body, err := event(m)
 	if err != nil {
@@ -142,16 +192,17 @@ func (s *mqttSender) Publish(ctx context.Context, topic string, retained bool, b
 		return &alert.Permanent{Reason: alert.ReasonClient, Err: fmt.Errorf("topic %q is not below the prefix %q", topic, s.prefix)}
 	}
 	select {
-	case <-s.first.Done():
+	case <-s.up:
 	case <-ctx.Done():
 		return s.down()
 	case <-time.After(3 * time.Second):
 		return s.down()
 	}
-	if !s.client.IsConnectionOpen() {
+	c := s.connection()
+	if c == nil {
 		return s.down()
 	}
-	t := s.client.Publish(topic, 1, retained, body)
+	t := c.Publish(topic, 1, retained, body)
 	select {
 	case <-t.Done():
 	case <-ctx.Done():
@@ -181,10 +232,8 @@ func (s *mqttSender) down() error {
 
 // Close says that the watch goes, and disconnects.
 func (s *mqttSender) Close() error {
-	if s.client.IsConnectionOpen() {
-		s.client.Publish(s.prefix+"/status", 1, true, statusOffline).WaitTimeout(2 * time.Second)
-	}
-	s.client.Disconnect(100)
+	s.cancel()
+	<-s.done
 	return nil
 }
 
@@ -193,4 +242,3 @@ func escapeLevel(s string) string {
 	s = url.PathEscape(s)
 	return strings.NewReplacer("+", "%2B", "#", "%23", "$", "%24").Replace(s)
 }
-

@@ -24,7 +24,7 @@ import (
 // peers spend their time waiting.
 func TestMain(m *testing.M) {
 	flag.Parse()
-	if !set("test.parallel") {
+	if !set("test.parallel") && !set("test.fuzz") {
 		flag.Set("test.parallel", "12")
 	}
 	goleak.VerifyTestMain(m)

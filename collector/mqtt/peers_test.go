@@ -24,7 +24,7 @@ const feedDir = "../../testdata/peers/mqtt"
 
 // needPeers skips without the independent peers, or fails when MIDWATCH_PEERS says
 // that they must be there.
-func needPeers(t *testing.T) {
+func needPeers(t testing.TB) {
 	t.Helper()
 	missing := ""
 	for _, p := range []string{"mosquitto", "mosquitto_passwd", "node"} {
@@ -46,14 +46,14 @@ func needPeers(t *testing.T) {
 
 // mosquitto is a real broker as a child process.
 type mosquitto struct {
-	t    *testing.T
+	t    testing.TB
 	port int
 	conf string
 	cmd  *exec.Cmd
 	log  bytes.Buffer
 }
 
-func newMosquitto(t *testing.T, lines ...string) *mosquitto {
+func newMosquitto(t testing.TB, lines ...string) *mosquitto {
 	t.Helper()
 	needPeers(t)
 	l, err := net.Listen("tcp", "127.0.0.1:0")
@@ -118,14 +118,14 @@ type truthRow struct {
 
 // feed is a running feed.mjs.
 type feed struct {
-	t     *testing.T
+	t     testing.TB
 	cmd   *exec.Cmd
 	out   bytes.Buffer
 	errs  bytes.Buffer
 	truth string
 }
 
-func startFeed(t *testing.T, m *mosquitto, zone string, args ...string) *feed {
+func startFeed(t testing.TB, m *mosquitto, zone string, args ...string) *feed {
 	t.Helper()
 	f := &feed{t: t, truth: filepath.Join(t.TempDir(), "truth.csv")}
 	args = append([]string{"feed.mjs", "--port", strconv.Itoa(m.port), "--truth", f.truth, "--quiet"}, args...)
@@ -136,9 +136,8 @@ func startFeed(t *testing.T, m *mosquitto, zone string, args ...string) *feed {
 	if err := f.cmd.Start(); err != nil {
 		t.Fatal(err)
 	}
-	done := false
 	t.Cleanup(func() {
-		if !done && f.cmd.ProcessState == nil {
+		if f.cmd.ProcessState == nil {
 			f.cmd.Process.Kill()
 			f.cmd.Wait()
 		}

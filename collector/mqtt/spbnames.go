@@ -180,10 +180,24 @@ func (p *sparkplug) whyMissing(t *tag) string {
 		return fmt.Sprintf("edge node %s is offline (its death was heard)", d.node.name)
 	case d.trust == unborn && d.blind > 0:
 		return fmt.Sprintf("waiting for the birth of %s, its values come without names; hint: ask for a rebirth at the plant's own Sparkplug host", d)
-	case d.trust == confirmed && d.names[name] == nil && !strings.Contains(name, "/"):
+	case d.trust == confirmed && !d.declares(name):
 		return fmt.Sprintf("the birth of %s has no metric %q", d, name)
 	}
 	return ""
+}
+
+// declares says whether the birth has a metric, or a template that may hold it.
+func (d *device) declares(name string) bool {
+	for {
+		if d.names[name] != nil {
+			return true
+		}
+		i := strings.LastIndexByte(name, '/')
+		if i < 0 {
+			return false
+		}
+		name = name[:i]
+	}
 }
 
 // problem sums up the devices whose values cannot be named.

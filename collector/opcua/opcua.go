@@ -65,21 +65,21 @@ type Source struct {
 	now   func() time.Time
 	pace  pace
 
-	subs     []*subscription // fixed by the bindings; their state outlives connections
-	own      *identity       // own certificate and key, nil while not needed
-	counts   counts
-	sessions []time.Time // starts of sessions within the last minute
+	subs   []*subscription // fixed by the bindings; their state outlives connections
+	own    *identity       // own certificate and key, nil while not needed
+	counts counts
 
-	mu    sync.Mutex // guards all below, and the refusals of items
-	link  string
-	since int64
-	last  int64 // wall clock of the last sign of life, ms
-	fault *fault
-	lag   median
-	skew  median
-	late  time.Time // since when the source has been late
-	certs certDays
-	live  *session // the session in use while watching, for history
+	mu       sync.Mutex  // guards all below, and the refusals of items
+	sessions []time.Time // made within the last minute
+	link     string
+	since    int64
+	last     int64 // wall clock of the last sign of life, ms
+	fault    *fault
+	lag      median
+	skew     median
+	late     time.Time // since when the source has been late
+	certs    certDays
+	live     *session // the session in use while watching, for history
 }
 
 // New checks the settings and the addresses of the bindings and plans the

@@ -13,19 +13,41 @@ import (
 
 func TestSecuredPolicies(t *testing.T) {
 	t.Parallel()
-	p := startPeer(t, "--loops", "1", "--rate", "2", "--user", "midwatch:secret",
+	p := startPeer(t, "--loops", "1", "--rate", "2", "--user", "midwatch:secret", "--trust", "list",
 		"--policies", "None,Basic256Sha256,Aes128_Sha256_RsaOaep,Aes256_Sha256_RsaPss")
 	x := startProxy(t, p.port)
 	user := func(security, mode string) configs.OPCUA {
 		return configs.OPCUA{Endpoint: p.url, Security: security, Mode: mode, User: "midwatch", Password: "secret"}
 	}
+	keys := t.TempDir()
+	t.Run("an untrusted client learns what to copy where", func(t *testing.T) {
+		s, err := newSource(user("Basic256Sha256", "SignAndEncrypt"), "works", 0, bind(1), Options{KeyDir: keys})
+		if err != nil {
+			t.Fatal(err)
+		}
+		own := filepath.Join(keys, ownCertFile)
+		if _, err = s.Probe(t.Context()); err == nil || !strings.Contains(err.Error(), "copy "+own+" into the server's trusted folder") {
+			t.Fatalf("got %v", err)
+		}
+		b, err := os.ReadFile(own)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if err := os.WriteFile(filepath.Join(p.pki, "trusted", "certs", "midwatch.der"), b, 0o600); err != nil {
+			t.Fatal(err)
+		}
+		eventually(t, 20*time.Second, "the server trusts the copied certificate", func() bool {
+			_, err := s.Probe(t.Context())
+			return err == nil
+		})
+	})
 	t.Run("each policy and mode", func(t *testing.T) {
 		for _, c := range []configs.OPCUA{
 			user("None", "None"), // the password travels encrypted with the server's key
 			user("Basic256Sha256", "Sign"), user("Basic256Sha256", "SignAndEncrypt"),
 			user("Aes128_Sha256_RsaOaep", "SignAndEncrypt"), user("Aes256_Sha256_RsaPss", "Sign"), user("Aes256_Sha256_RsaPss", "SignAndEncrypt"),
 		} {
-			s, err := newSource(c, "works", 0, bind(1), Options{KeyDir: t.TempDir()})
+			s, err := newSource(c, "works", 0, bind(1), Options{KeyDir: keys})
 			if err != nil {
 				t.Fatal(err)
 			}
@@ -41,7 +63,7 @@ func TestSecuredPolicies(t *testing.T) {
 	t.Run("resumed on a secured link", func(t *testing.T) {
 		c := user("Aes256_Sha256_RsaPss", "SignAndEncrypt")
 		c.Endpoint = x.url()
-		w := run(t, c, bind(1), nil)
+		w := run(t, c, bind(1), func(s *Source) { s.keys = keys })
 		w.flows(t, 20*time.Second)
 		x.cut()
 		eventually(t, 10*time.Second, "resumed", func() bool { return w.State().Counts["resumed"] == 1 })
@@ -53,7 +75,7 @@ func TestSecuredPolicies(t *testing.T) {
 	t.Run("wrong password is tried once", func(t *testing.T) {
 		c := user("Basic256Sha256", "SignAndEncrypt")
 		c.Password = "wrong"
-		w := run(t, c, bind(1), nil)
+		w := run(t, c, bind(1), func(s *Source) { s.keys = keys })
 		eventually(t, 10*time.Second, "refused", func() bool { return w.State().Problem != "" })
 		time.Sleep(1500 * time.Millisecond) // in which a hasty client would try again
 		st := w.State()
@@ -81,7 +103,7 @@ func TestSecuredPolicies(t *testing.T) {
 			{Endpoint: p.url, Security: "Basic256Sha256", User: "midwatch", Password: "secret", ServerCertFile: file},
 			{Endpoint: p.url, Security: "Basic256Sha256", User: "midwatch", Password: "secret", CAFile: file},
 		} {
-			w := run(t, c, bind(1), nil)
+			w := run(t, c, bind(1), func(s *Source) { s.keys = keys })
 			eventually(t, 10*time.Second, "refused", func() bool { return w.State().Problem != "" })
 			time.Sleep(time.Second) // in which a hasty client would try again
 			st := w.State()
@@ -92,40 +114,24 @@ func TestSecuredPolicies(t *testing.T) {
 		}
 	})
 	t.Run("remembered certificate", func(t *testing.T) {
-		dir := t.TempDir()
-		s, err := newSource(user("Basic256Sha256", ""), "works", 0, bind(1), Options{KeyDir: dir})
+		s, err := newSource(user("Basic256Sha256", ""), "other", 0, bind(1), Options{KeyDir: keys})
 		if err != nil {
 			t.Fatal(err)
 		}
 		if _, err := s.Probe(t.Context()); err != nil {
 			t.Fatal(err)
 		}
-		other := filepath.Join(dir, ownCertFile)
-		b, err := os.ReadFile(other)
+		b, err := os.ReadFile(filepath.Join(keys, ownCertFile))
 		if err != nil {
 			t.Fatal(err)
 		}
-		if err := os.WriteFile(filepath.Join(dir, "server-works.der"), b, 0o600); err != nil {
+		if err := os.WriteFile(filepath.Join(keys, "server-other.der"), b, 0o600); err != nil {
 			t.Fatal(err)
 		}
 		if _, err := s.Probe(t.Context()); err == nil || !strings.Contains(err.Error(), "not trusted") {
 			t.Errorf("a changed certificate gave %v", err)
 		}
 	})
-}
-
-func TestUntrustedClientIsExplained(t *testing.T) {
-	t.Parallel()
-	p := startPeer(t, "--loops", "1", "--policies", "Basic256Sha256", "--trust", "list")
-	dir := t.TempDir()
-	s, err := newSource(configs.OPCUA{Endpoint: p.url, Security: "Basic256Sha256"}, "works", 0, bind(1), Options{KeyDir: dir})
-	if err != nil {
-		t.Fatal(err)
-	}
-	_, err = s.Probe(t.Context())
-	if err == nil || !strings.Contains(err.Error(), "copy "+filepath.Join(dir, ownCertFile)+" into the server's trusted folder") {
-		t.Errorf("got %v, want what to copy where", err)
-	}
 }
 
 func TestClearPasswordIsRefused(t *testing.T) {

@@ -19,7 +19,7 @@ type counts struct {
 	serverTime, arrivalTime, clockSteps atomic.Uint64
 	strays                              atomic.Uint64 // values or answers that belong to nothing known
 	attempts, sessions, fresh, resumed  atomic.Uint64
-	throttled                           atomic.Uint64
+	throttled, askedAgain               atomic.Uint64
 	watched, slowed                     atomic.Uint64 // gauges: items, and those sampled more slowly than wished
 	roundTrip                           atomic.Uint64 // gauge: ms of the last publish request
 }
@@ -32,7 +32,7 @@ func (c *counts) all() map[string]uint64 {
 		"bad": c.bad.Load(), "uncertain": c.uncertain.Load(),
 		"server_time": c.serverTime.Load(), "arrival_time": c.arrivalTime.Load(), "clock_steps": c.clockSteps.Load(),
 		"strays": c.strays.Load(), "attempts": c.attempts.Load(), "sessions": c.sessions.Load(),
-		"fresh": c.fresh.Load(), "resumed": c.resumed.Load(), "throttled": c.throttled.Load(),
+		"fresh": c.fresh.Load(), "resumed": c.resumed.Load(), "throttled": c.throttled.Load(), "asked_again": c.askedAgain.Load(),
 		"watched": c.watched.Load(), "slowed": c.slowed.Load(), "publish_ms": c.roundTrip.Load(),
 	}
 }

@@ -192,6 +192,9 @@ func (s *Source) enterFresh(ctx context.Context) (*link, *kept, error) {
 		return nil, nil, err
 	}
 	s.counts.sessions.Add(1)
+	s.mu.Lock()
+	s.sessions = append(s.sessions, time.Now())
+	s.mu.Unlock()
 	err = l.begin(ctx, cfg)
 	var sess *session
 	if err == nil {
@@ -208,16 +211,20 @@ func (s *Source) enterFresh(ctx context.Context) (*link, *kept, error) {
 // must not be flooded by its watchdog.
 func (s *Source) underCeiling(ctx context.Context) error {
 	for {
-		now := time.Now()
+		s.mu.Lock()
+		now, wait := time.Now(), time.Duration(0)
 		for len(s.sessions) > 0 && now.Sub(s.sessions[0]) >= time.Minute {
 			s.sessions = s.sessions[1:]
 		}
-		if len(s.sessions) < s.pace.sessionsPerMinute {
-			s.sessions = append(s.sessions, now)
+		if len(s.sessions) >= s.pace.sessionsPerMinute {
+			wait = s.sessions[0].Add(time.Minute).Sub(now)
+		}
+		s.mu.Unlock()
+		if wait == 0 {
 			return nil
 		}
 		s.counts.throttled.Add(1)
-		if !sleep(ctx, s.sessions[0].Add(time.Minute).Sub(now)) {
+		if !sleep(ctx, wait) {
 			return ctx.Err()
 		}
 	}

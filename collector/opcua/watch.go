@@ -260,6 +260,7 @@ func (w *watcher) askAgain(ctx context.Context) {
 			}
 		}
 		return func() error {
+			w.counts.askedAgain.Add(1)
 			for _, p := range parts {
 				w.apply(p.sub, p.got)
 				for _, o := range p.got {

@@ -2,6 +2,7 @@ package opcua
 
 import (
 	"slices"
+	"strings"
 	"testing"
 	"time"
 
@@ -11,9 +12,31 @@ import (
 
 func plainConfig(url string) configs.OPCUA { return configs.OPCUA{Endpoint: url} }
 
-func TestValuesModesAndTicks(t *testing.T) {
+// TestAgainstPeer watches one server in several ways at a time. When all have
+// ended, no session may be left on it.
+func TestAgainstPeer(t *testing.T) {
 	t.Parallel()
-	p := startPeer(t, "--loops", "5", "--rate", "2")
+	p := startPeer(t, "--loops", "5", "--rate", "2", "--odd", "--flat")
+	t.Cleanup(func() {
+		eventually(t, 5*time.Second, "all sessions are closed on the server", func() bool { return p.counts().Sessions == 0 })
+	})
+	for _, c := range []struct {
+		name string
+		test func(*testing.T, *peer)
+	}{
+		{"values, modes and ticks", valuesModesAndTicks},
+		{"a cut link is resumed without loss", cutLink},
+		{"a stalled link is noticed", stalledLink},
+		{"odd types", oddTypes},
+	} {
+		t.Run(c.name, func(t *testing.T) {
+			t.Parallel()
+			c.test(t, p)
+		})
+	}
+}
+
+func valuesModesAndTicks(t *testing.T, p *peer) {
 	w := run(t, plainConfig(p.url), bind(5), nil)
 	eventually(t, 15*time.Second, "ten PVs of each loop", func() bool {
 		for i := range 5 {
@@ -50,32 +73,27 @@ func TestValuesModesAndTicks(t *testing.T) {
 	if late := time.Now().UnixMilli() - tick.Through; tick.Group != g || late < 0 || late > 10_000 {
 		t.Errorf("last tick %+v is %d ms behind", tick, late)
 	}
-	// A tick says that all up to its time has come: no later put may hold an older, newer-than-known value.
 	st := w.State()
 	if st.Link != "watching" || st.Problem != "" || st.Counts["values"] == 0 || st.Counts["watched"] != 20 || st.LastData == 0 {
 		t.Errorf("state %+v", st)
 	}
-	p.ask("/mode?loop="+tagName(0)+"&value=2", nil)
+	p.ask("/mode?loop="+tagName(3)+"&value=2", nil)
 	eventually(t, 5*time.Second, "mode change", func() bool {
-		m := w.in.of(0, collector.RoleMode)
+		m := w.in.of(3, collector.RoleMode)
 		return (&collector.ModeMap{}).Mode(m[len(m)-1].Value, 0) == collector.Cascade
 	})
-	p.ask("/state?loop="+tagName(1)+"&code=BadSensorFailure", nil)
+	p.ask("/state?loop="+tagName(4)+"&code=BadSensorFailure", nil)
 	eventually(t, 5*time.Second, "bad PV", func() bool {
-		pv := w.in.of(1, collector.RolePV)
+		pv := w.in.of(4, collector.RolePV)
 		last := pv[len(pv)-1]
 		return last.Quality == collector.Bad && last.Value != last.Value
 	})
 	if s := w.State(); s.Counts["bad"] == 0 {
 		t.Error("bad values were not counted")
 	}
-	w.stop()
-	eventually(t, 5*time.Second, "the session is closed on the server", func() bool { return p.counts().Sessions == 0 })
 }
 
-func TestCutLinkIsResumedWithoutLoss(t *testing.T) {
-	t.Parallel()
-	p := startPeer(t, "--loops", "3", "--rate", "2")
+func cutLink(t *testing.T, p *peer) {
 	x := startProxy(t, p.port)
 	w := run(t, plainConfig(x.url()), bind(3), nil)
 	w.flows(t, 15*time.Second)
@@ -95,7 +113,7 @@ func TestCutLinkIsResumedWithoutLoss(t *testing.T) {
 		return time.Now().UnixMilli()-pv[len(pv)-1].Time < 3000
 	})
 	st := w.State()
-	if st.Counts["fresh"] != 1 || st.Counts["resumed"] < 6 || st.Counts["gaps"] != 0 {
+	if st.Counts["fresh"] != 1 || st.Counts["sessions"] != 1 || st.Counts["resumed"] < 6 || st.Counts["gaps"] != 0 {
 		t.Errorf("counts %v, want one fresh session, all else resumed, no gap", st.Counts)
 	}
 	for i := range 3 {
@@ -105,9 +123,6 @@ func TestCutLinkIsResumedWithoutLoss(t *testing.T) {
 				t.Errorf("loop %d: %d ms between neighbouring samples, written every 500 ms", i, d)
 			}
 		}
-	}
-	if n := p.counts().Counts["CreateSessionRequest"]; n != 1 {
-		t.Errorf("%d sessions were made, want 1", n)
 	}
 	dead := 0
 	for _, tick := range w.in.ticks {
@@ -120,9 +135,7 @@ func TestCutLinkIsResumedWithoutLoss(t *testing.T) {
 	}
 }
 
-func TestStalledLinkIsNoticed(t *testing.T) {
-	t.Parallel()
-	p := startPeer(t, "--loops", "2", "--rate", "2")
+func stalledLink(t *testing.T, p *peer) {
 	x := startProxy(t, p.port)
 	cfg := plainConfig(x.url())
 	cfg.KeepAliveCount = 4 // dead after 2 * 4 * 0.5 s + 1 s
@@ -172,9 +185,28 @@ func TestServerForgets(t *testing.T) {
 	if !lost {
 		t.Error("no sample says that values may be missing after a fresh session")
 	}
+	w.stop()
+
+	// Sessions that break at once are made at a bounded rate.
+	before := p.counts().Counts["CreateSessionRequest"]
+	w = run(t, plainConfig(p.url), bind(1), func(s *Source) { s.pace.sessionsPerMinute = 3; s.pace.stable = time.Hour })
+	eventually(t, 30*time.Second, "the ceiling is met", func() bool {
+		p.ask("/drop-sessions", nil)
+		return w.State().Counts["throttled"] > 0
+	})
+	for range 20 {
+		p.ask("/drop-sessions", nil)
+		time.Sleep(100 * time.Millisecond) // the server's trouble goes on
+	}
+	if st := w.State(); st.Counts["sessions"] != 3 {
+		t.Errorf("counts %v, want 3 sessions", st.Counts)
+	}
+	if n := p.counts().Counts["CreateSessionRequest"] - before; n != 3 {
+		t.Errorf("the server counted %d sessions, want 3", n)
+	}
 }
 
-func TestRestartShiftsNamespaces(t *testing.T) {
+func TestRestartMovesNamespaceAndClock(t *testing.T) {
 	t.Parallel()
 	p := startPeer(t, "--loops", "2", "--rate", "2")
 	bindings := bind(2)
@@ -184,12 +216,21 @@ func TestRestartShiftsNamespaces(t *testing.T) {
 	p.readOnly()
 	p.stop()
 	eventually(t, 10*time.Second, "down", func() bool { st := w.State(); return st.Link != "watching" && st.Problem != "" && st.Hint != "" })
-	p.start("--loops", "2", "--rate", "2", "--shift-ns", "3")
+	p.start("--loops", "2", "--rate", "2", "--shift-ns", "3", "--skew-ms=-3600000")
 	w.flows(t, 20*time.Second)
 	if p.index == was {
 		t.Fatalf("the namespace did not move: %d", p.index)
 	}
-	if st := w.State(); len(st.Refused) != 0 || st.Problem != "" {
+	if st := w.State(); len(st.Refused) != 0 {
 		t.Errorf("state after the restart: %+v", st)
+	}
+	// The server came back with a wrong time zone: said, never mended silently.
+	eventually(t, 60*time.Second, "the zone fault is named", func() bool { return strings.Contains(w.State().Problem, "time zone") })
+	pv := w.in.of(0, collector.RolePV)
+	if last := pv[len(pv)-1]; last.Arrived-last.Time < 3_590_000 {
+		t.Errorf("the source's time was shifted: %+v", last)
+	}
+	if w.State().Counts["clock_steps"] == 0 {
+		t.Error("the step of the source's time was not counted")
 	}
 }

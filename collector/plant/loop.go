@@ -47,7 +47,7 @@ func newLoop(s spec, seed, index uint64, demandNow float64) *loop {
 	l.scanSteps = max(1, int(math.Round(s.scan/l.dt)))
 	l.proc = NewProcess(s.kind, s.k, s.tau, s.tau2, s.theta, l.dt)
 	kc, ti, td := s.tuning()
-	l.ctrl = Controller{Form: s.form, Sign: s.sign(), Kc: kc, Ti: ti, Td: td, High: 100, Windup: s.noWindupGuard, Gap: s.gap}
+	l.ctrl = Controller{Form: s.form, Sign: s.sign(), Kc: kc, Ti: ti, Td: td, High: 100, Windup: s.noWindupGuard, Gap: s.gap, GapShare: s.gapShare}
 	l.valve = Valve{S: s.s, J: s.j, Slew: s.slew}
 	l.load = Load{Sigma: s.ar, Tau: s.arTau, StepSize: s.step, StepEvery: s.stepEvery}
 	l.load.Begin(stream(seed, index*4), l.dt)

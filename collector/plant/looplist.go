@@ -2,6 +2,7 @@ package plant
 
 import (
 	"math"
+	"strings"
 
 	"midwatch/configs"
 )
@@ -46,7 +47,7 @@ func (s Sources) tag(i int, upper, lower string) string {
 	return topic(&works[i]) + "#" + lower
 }
 
-func topic(s *spec) string { return Prefix + "/" + s.area + "/" + s.name }
+func topic(s *spec) string { return Prefix + "/" + strings.ToLower(s.area) + "/" + s.name }
 
 // LoopList is the loop list of the works: what a well-kept site would have
 // written down of it when all was well. [configs.WriteLoopList] makes CSV of it.
@@ -76,8 +77,9 @@ func LoopList(src Sources) []*configs.Loop {
 		kc, ti, td := s.tuning()
 		l.Gain, l.GainPct, l.Form, l.ScanS, l.SampleS = kc, kc, s.form, s.scan, math.Max(1, float64(s.sample))
 		l.RateS = td
+		l.ResetGiven = true
 		if ti > 0 {
-			l.ResetS, l.IdealReset, l.ResetGiven = ti, ti, true
+			l.ResetS, l.IdealReset = ti, ti
 		} else {
 			l.PropOnly = true
 		}

@@ -282,7 +282,7 @@ func TestWritesAreCounted(t *testing.T) {
 	}
 	got := &seen{times: map[string][]int64{}}
 	mq := subscriber(t, s, got)
-	if k := mq.Publish(Prefix+"/Dosing/AIC-208", 1, false, `{"sp":1}`); !k.WaitTimeout(5*time.Second) || k.Error() != nil {
+	if k := mq.Publish(Prefix+"/dosing/AIC-208", 1, false, `{"sp":1}`); !k.WaitTimeout(5*time.Second) || k.Error() != nil {
 		t.Errorf("publish: %v", k.Error())
 	}
 	wait(t, "foreign publish counted", 5*time.Second, func() bool { return s.ForeignPublishes() == 1 })

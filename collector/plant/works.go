@@ -42,7 +42,7 @@ type spec struct {
 	demand                    float64 // % of load per unit of daily demand
 	header                    float64 // % of load per % of swing on the raw water header
 	slew, s, j                float64 // of the final element: %/s, %, %
-	gap                       float64 // %
+	gap, gapShare             float64 // %; share of the error that counts inside it
 	knee                      float64 // of the titration curve, %
 	duty                      configs.Duty
 	mode                      string // normal mode; empty = auto
@@ -88,7 +88,7 @@ var works = []spec{
 	{name: "TIC-225", service: "laboratory sample water temperature", area: "Dosing", unit: "degC", low: 0, high: 40, sp: 20, op0: 54, element: "actuator",
 		kind: SecondOrder, k: 0.9, tau: 90, tau2: 15, theta: 6, td: 8, tauC: 15, form: configs.Ideal, scan: 1, sample: 1, noise: 0.06, ar: 1, arTau: 1800, demand: 12, role: splitRange},
 	{name: "LIC-320", service: "wash water sump level", area: "Filtration", unit: "m", high: 3, sp: 1.5, op0: 50, element: "valve",
-		kind: Integrator, k: -0.006, theta: 4, kc: 1.2, ti: 1800, gap: 8, scan: 1, sample: 5, noise: 0.15, ar: 6, arTau: 600, slew: 5, duty: configs.GapDuty},
+		kind: Integrator, k: -0.006, theta: 4, kc: 1.2, ti: 1800, gap: 8, gapShare: 0.25, scan: 1, sample: 5, noise: 0.15, ar: 6, arTau: 600, slew: 5, duty: configs.GapDuty},
 	{name: "PIC-330", service: "air scour header pressure", area: "Filtration", unit: "kPa", high: 100, sp: 50, op0: 50, element: "valve",
 		k: 1.0, tau: 6, theta: 1, kc: 2, pOnly: true, scan: 0.5, noise: 0.2, ar: 0.8, arTau: 60, slew: 20},
 	{name: "FIC-125", service: "filter backwash flow", area: "Filtration", unit: "m3/h", high: 900, sp: 540, op0: 0, element: "valve",

@@ -21,7 +21,7 @@ func (c *clock) scan(b []byte, i int) (ms int64, next int, ok bool) {
 	if t[10] != 'T' || t[13] != ':' || t[16] != ':' {
 		return 0, i, false
 	}
-	if [10]byte(t[:10]) != c.date {
+	if [10]byte(t[:10]) != c.date || t[0] == 0 {
 		day, ok := daysOf(t[:10])
 		if !ok {
 			return 0, i, false
@@ -63,6 +63,8 @@ func (c *clock) scan(b []byte, i int) (ms int64, next int, ok bool) {
 		}
 		ms += off
 		i += 6
+	default:
+		return 0, i, false
 	}
 	return ms, i, i == len(b) || b[i] == ','
 }
@@ -98,7 +100,7 @@ func parseTime(s string) (ms int64, ok bool) {
 	return t.UnixMilli(), true
 }
 
-// appendTime writes ms UTC as RFC 3339 with three digits.
+// append writes ms UTC as RFC 3339 with three digits.
 func (c *clock) append(dst []byte, ms int64) ([]byte, bool) {
 	in := ms % dayMs
 	if in < 0 {
