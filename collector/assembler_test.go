@@ -731,6 +731,65 @@ func TestConditions(t *testing.T) {
 	}
 }
 
+func TestExceptionWithoutTicksMakesNothingUp(t *testing.T) {
+	r := newRig(t, exception, 1)
+	r.put(RolePV, 1, 1)
+	r.put(RolePV, 5, 2)
+	r.put(RolePV, 9.2, 3)
+	// A PV shows that all before it came: the loop was at its old value.
+	r.want("1 1/-/-; 2 1/-/- held; 3 1/-/- held; 4 1/-/- held; 5 2/-/-; 6 2/-/- held; 7 2/-/- held; 8 2/-/- held")
+}
+
+func TestShardsOfAnAssembler(t *testing.T) {
+	var loops []*configs.Loop
+	for i := range 7 {
+		loops = append(loops, configs.NewLoop(fmt.Sprint("TIC-", i)))
+	}
+	got := map[LoopID]int{}
+	for k := range 3 {
+		a, err := New(loops, Options{Shard: k, Shards: 3}, func(id LoopID, f *Frame) {
+			if int(id)%3 != k || f.PV != float32(id) {
+				t.Errorf("loop %d of shard %d: %g", id, k, f.PV)
+			}
+			got[id]++
+		})
+		if err != nil {
+			t.Fatal(err)
+		}
+		for s := 1.0; s <= 3; s++ {
+			for id := range LoopID(9) {
+				a.Feed([]Sample{{Loop: id, Role: RolePV, Time: ms(s), Arrived: ms(s), Value: float64(id)}})
+			}
+		}
+		// Seven loops in all; the samples of the others are counted.
+		mine := (7 - k + 2) / 3
+		if c := a.Totals(); c.Foreign != uint64(27-3*mine) || c.Samples != uint64(3*mine) {
+			t.Errorf("shard %d: %+v", k, c)
+		}
+	}
+	if len(got) != 7 {
+		t.Errorf("%v", got)
+	}
+	a, _ := New(loops, Options{}, func(LoopID, *Frame) {})
+	a.Feed([]Sample{{Role: RoleCond0 + MaxConds, Time: t0, Arrived: t0}})
+	if a.Totals().Foreign != 1 {
+		t.Error("a role beyond the last is taken")
+	}
+}
+
+func TestNewRefuses(t *testing.T) {
+	bad := configs.NewLoop("AIC-204")
+	bad.ModeMap = "0=asleep"
+	if _, err := New([]*configs.Loop{bad}, Options{}, nil); err == nil || !strings.Contains(err.Error(), `loop AIC-204: mode_map: "asleep" is no mode`) {
+		t.Errorf("%v", err)
+	}
+	many := configs.NewLoop("AIC-204")
+	many.ActiveWhen.Terms = make([]configs.Term, 5)
+	if _, err := New([]*configs.Loop{many}, Options{}, nil); err == nil || !strings.Contains(err.Error(), "at most 4") {
+		t.Errorf("%v", err)
+	}
+}
+
 func TestModeOfTwoTags(t *testing.T) {
 	r := newRig(t, func(l *configs.Loop) { l.ModeMap = "0/0=manual;1/0=auto;1/1=cascade" }, 1)
 	r.put(RoleMode, 0, 1)
@@ -855,7 +914,7 @@ func TestMemoryPerLoop(t *testing.T) {
 	}
 	per := float64(heap()-before) / n
 	t.Logf("%.0f bytes per loop", per)
-	if per > 700 {
+	if per > 600 {
 		t.Errorf("%.0f bytes per loop", per)
 	}
 	runtime.KeepAlive(a)

@@ -11,7 +11,7 @@ var Kinds = []string{"sustained-offset", "growing-oscillation", "sustained-oscil
 	"source-down", "source-late", "samples-lost", "store-failing", "sender-failing", "clock-step", "certificate-expiring"}
 
 // Urgencies are the words of how soon somebody should look, for routes.
-var Urgencies = []string{"now", "today", "digest"}
+var Urgencies = []string{"now", "morning", "note"}
 
 // settings is the table of the configuration, bound to c: it feeds the decoder,
 // the defaults, Show and the reference.
@@ -102,7 +102,7 @@ func adviseSettings(a *Advise) group {
 					{key: "services", help: "services of the loop list", value: listValue{&r.Services, nil}},
 					{key: "loops", help: "names of loops, with * and ?", value: listValue{&r.Loops, nil}},
 					{key: "kinds", help: "kinds of findings", value: listValue{&r.Kinds, Kinds}},
-					{key: "urgency", help: "now, today, digest", value: listValue{&r.Urgency, Urgencies}},
+					{key: "urgency", help: "now, morning, note", value: listValue{&r.Urgency, Urgencies}},
 					{key: "hours", help: `site time, such as "mon-fri 07:00-16:00"`, value: hoursValue{&r.Hours}},
 					{key: "person", help: "who reads it; the limits night and day count per person", value: textValue{&r.Person}},
 				}

@@ -355,7 +355,7 @@ func TestKeepsTwoDamaged(t *testing.T) {
 		if err := os.WriteFile(p, []byte{byte(i)}, 0o640); err != nil {
 			t.Fatal(err)
 		}
-		if _, err := setAside(p); err != nil {
+		if _, err := SetAside(p); err != nil {
 			t.Fatal(err)
 		}
 	}

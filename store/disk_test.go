@@ -128,7 +128,7 @@ func TestFlushError(t *testing.T) {
 	if b, _, err := w.Memory(loopName(1)); string(b) != "kept" {
 		t.Errorf("memory %q, %v", b, err)
 	}
-	if n := ps.count(Slow); n != 1 || len(ps.all) != 1 || w.Stats().Dropped != 20*20 {
+	if n := ps.count(Dropping); n != 1 || len(ps.all) != 1 || w.Stats().Dropped != 20*20 {
 		t.Errorf("dropped %d, problems %v", w.Stats().Dropped, ps.all)
 	}
 	checkAll(t, w)

@@ -91,11 +91,11 @@ func (w *Window) flushAll(ctx context.Context) error {
 // tellDropped reports once per outage that frames are being given up.
 func (w *Window) tellDropped(err error) {
 	w.mu.Lock()
-	tell := w.stats.Dropped > w.droppedThen && !w.toldDropped
+	tell := w.dropped.Load() > w.droppedThen && !w.toldDropped
 	w.toldDropped = w.toldDropped || tell
 	w.mu.Unlock()
 	if tell {
-		w.tell(Problem{Slow, w.dir, fmt.Sprintf("the oldest frames waiting in memory are being dropped: %v", err)})
+		w.tell(Problem{Dropping, w.dir, fmt.Sprintf("the oldest frames waiting in memory are being dropped: %v", err)})
 	}
 }
 
@@ -117,12 +117,9 @@ func (w *Window) setFull(full bool, err error) {
 func (w *Window) keepRoom() error {
 	for {
 		w.mu.Lock()
-		var total int64
-		for _, s := range w.slices {
-			total += s.size()
-		}
+		all := slices.Clone(w.slices)
 		w.mu.Unlock()
-		if w.opt.SizeBytes > 0 && total > w.opt.SizeBytes && w.dropOldest() {
+		if w.opt.SizeBytes > 0 && totalSize(all) > w.opt.SizeBytes && w.dropOldest() {
 			continue
 		}
 		if w.opt.ReserveBytes <= 0 {
@@ -278,7 +275,7 @@ func (w *Window) commit(cur *slice, n uint32, b *batch, names int) {
 	w.written, w.renamed = names, false
 	w.stats.LastFlush = n
 	w.stats.Flushes++
-	w.droppedThen, w.toldDropped = w.stats.Dropped, false
+	w.droppedThen, w.toldDropped = w.dropped.Load(), false
 	w.stats.Frames += b.counts.Frames
 	w.stats.TailBytes += b.counts.TailBytes
 	w.stats.MemoryBytes += b.counts.MemoryBytes

@@ -146,9 +146,9 @@ func shortFile(path string) error {
 // keptDamaged is how many damaged files are kept for whoever wants to look.
 const keptDamaged = 2
 
-// setAside renames a damaged file to NAME.damaged-N and keeps the newest two
-// such files of the folder.
-func setAside(path string) (to string, err error) {
+// SetAside renames a damaged file to NAME.damaged-N and keeps the newest two
+// such files of the folder. The file must not be in use by another process.
+func SetAside(path string) (to string, err error) {
 	dir := filepath.Dir(path)
 	all, err := filepath.Glob(filepath.Join(dir, "*.damaged-*"))
 	if err != nil {

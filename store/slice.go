@@ -312,7 +312,7 @@ func (s *slice) aside() (to string, err error) {
 		return "", errGone
 	}
 	s.gone = true
-	to, err = setAside(s.path)
+	to, err = SetAside(s.path)
 	if db := s.db; db != nil {
 		s.db = nil
 		// A panic may have left a transaction behind, whose lock Close waits

@@ -43,7 +43,7 @@ func OpenState(path string) (*State, error) {
 	if !errors.Is(err, ErrDamaged) {
 		return s, err
 	}
-	aside, err2 := setAside(path)
+	aside, err2 := SetAside(path)
 	if err2 != nil {
 		return nil, errors.Join(err, err2)
 	}

@@ -29,7 +29,7 @@ const (
 	DiskBack ProblemKind = "disk-back" // there is room again
 	Behind   ProblemKind = "behind"    // the newest slice ends before what was known to be written
 	BadSum   ProblemKind = "bad-sum"   // records failed their checksum; they read as gaps
-	Slow     ProblemKind = "slow"      // frames were dropped because flushes do not keep up
+	Dropping ProblemKind = "dropping"  // the oldest frames in memory are given up because flushes fail
 )
 
 // Problem is what the store could not do as asked, and what it did instead.
@@ -56,11 +56,13 @@ type Options struct {
 	ReserveBytes  int64 // room left free on the file system
 	PendingFrames int   // frames a loop keeps in memory while the disk does not take them; default 160
 	FillBytes     int64 // encoded history waiting for the next flush; default 32 MiB
-	KnownFlush    uint32
 	// KnownFlush is the last flush known from elsewhere (State); numbering goes
-	// on behind it, and a file that ends before it is reported.
-	ReadOnly bool          // for programs that look while no daemon runs
-	Problem  func(Problem) // told of problems; called without locks held, must not block
+	// on behind it, and a window that ends before it is reported.
+	KnownFlush uint32
+	ReadOnly   bool // for programs that look while no daemon runs
+	// Problem is told of problems as they are met, from any goroutine that uses
+	// the window. It must not block, nor call anything but Stats.
+	Problem func(Problem)
 
 	files files // test seam
 }

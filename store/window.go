@@ -48,9 +48,23 @@ type Window struct {
 	stats    Stats
 	badSum   map[string]bool // slices whose bad records were reported
 
-	droppedThen uint64 // stats.Dropped at the last good flush
+	// Counted by Append, which must not wait for whoever holds mu.
+	dropped, unregistered atomic.Uint64
+
+	droppedThen uint64 // dropped at the last good flush
 	toldDropped bool   // drops since then were reported
 	closed      bool
+}
+
+var _ collector.FrameReader = (*Window)(nil)
+
+// WindowFiles gives the paths of the slices in dir, oldest first: after an
+// unclean stop the last of them is worth a [CheckInChild] before the window is
+// opened.
+func WindowFiles(dir string) ([]string, error) {
+	paths, err := filepath.Glob(filepath.Join(dir, sliceGlob))
+	slices.Sort(paths)
+	return paths, err
 }
 
 // loopTable is what Append needs; it is replaced as a whole.
@@ -69,7 +83,6 @@ const maxLoops = 1 << 20
 type loopBuffer struct {
 	frames   []collector.Frame
 	inFlight int
-	lost     bool
 }
 
 type fillPiece struct {
@@ -88,11 +101,10 @@ func OpenWindow(dir string, opt Options) (*Window, error) {
 			return nil, err
 		}
 	}
-	paths, err := filepath.Glob(filepath.Join(dir, sliceGlob))
+	paths, err := WindowFiles(dir)
 	if err != nil {
 		return nil, err
 	}
-	slices.Sort(paths)
 	// Newest first: it tells at once whether somebody else has the folder open.
 	for i, path := range slices.Backward(paths) {
 		if err := w.openOne(path, i == len(paths)-1); err != nil {
@@ -122,7 +134,7 @@ func (w *Window) openOne(path string, newest bool) error {
 	if errors.Is(err, ErrDamaged) && !w.opt.ReadOnly {
 		// Behind everything the damaged slice may have held.
 		w.next = max(w.next, uint32(number)+uint32(w.opt.SliceFlushes)+1)
-		to, err2 := setAside(path)
+		to, err2 := SetAside(path)
 		if err2 != nil {
 			return errors.Join(err, err2)
 		}
@@ -239,19 +251,16 @@ const bufferStep = 10
 func (w *Window) Append(loop collector.LoopID, f collector.Frame) {
 	t := w.loops.Load()
 	if int(loop) >= len(t.number) || t.number[loop] == noLoop {
-		w.mu.Lock()
-		w.stats.Unregistered++
-		w.mu.Unlock()
+		w.unregistered.Add(1)
 		return
 	}
 	n := t.number[loop]
 	b := t.buffers[n]
 	m := &w.stripes[n%uint32(len(w.stripes))]
 	m.Lock()
-	dropped := false
 	if len(b.frames)-b.inFlight >= w.opt.PendingFrames {
 		b.frames = slices.Delete(b.frames, b.inFlight, b.inFlight+1)
-		dropped = true
+		w.dropped.Add(1)
 		if len(b.frames) > b.inFlight {
 			b.frames[b.inFlight].Flags |= collector.Lost
 		} else {
@@ -265,11 +274,6 @@ func (w *Window) Append(loop collector.LoopID, f collector.Frame) {
 	}
 	b.frames = append(b.frames, clean(f))
 	m.Unlock()
-	if dropped {
-		w.mu.Lock()
-		w.stats.Dropped++
-		w.mu.Unlock()
-	}
 }
 
 // fillFrames is how many frames of history make one piece.
@@ -386,26 +390,26 @@ func (w *Window) Stats() Stats {
 		}
 	}
 	w.mu.Lock()
-	defer w.mu.Unlock()
 	st := w.stats
-	st.Pending, st.Slices = pending, len(w.slices)
+	all := slices.Clone(w.slices)
 	oldest := int64(math.MaxInt64)
-	for _, s := range w.slices {
-		st.Bytes += s.size()
+	for _, s := range all {
 		oldest = min(oldest, s.now.low)
 	}
+	w.mu.Unlock()
 	if oldest != math.MaxInt64 {
 		st.Oldest = oldest
 	}
+	st.Pending, st.Slices, st.Bytes = pending, len(all), totalSize(all)
+	st.Dropped, st.Unregistered = w.dropped.Load(), w.unregistered.Load()
 	return st
 }
 
-// Flushed says whether everything taken is on disk.
-func (w *Window) Flushed() bool {
-	w.mu.Lock()
-	waiting := len(w.fills) + len(w.memories)
-	w.mu.Unlock()
-	return waiting == 0 && w.Stats().Pending == 0
+func totalSize(all []*slice) (n int64) {
+	for _, s := range all {
+		n += s.size()
+	}
+	return n
 }
 
 // Close flushes what is pending and closes every file. The window is closed

@@ -584,3 +584,40 @@ func TestAppendAllocates(t *testing.T) {
 	}
 	checkAll(t, w)
 }
+
+// TestAppendWhileDiskHangs holds that nothing but the flush waits for a disk
+// that does not answer.
+func TestAppendWhileDiskHangs(t *testing.T) {
+	hang, reached := make(chan struct{}), make(chan struct{})
+	o := Options{ReserveBytes: 1, PendingFrames: 25}
+	first := true
+	o.files.free = func(string) (int64, error) {
+		if !first {
+			reached <- struct{}{}
+			<-hang
+		}
+		first = false
+		return 1 << 40, nil
+	}
+	w := open(t, t.TempDir(), o, loopList(2))
+	w.Append(0, plain(1000, 1))
+	flush(t, w)
+	done := make(chan error)
+	go func() { done <- w.Flush(context.Background()) }()
+	<-reached
+	for i := range 30 {
+		w.Append(0, plain(2000+int64(i)*1000, 1))
+	}
+	if st := w.Stats(); st.Pending != 25 || st.Dropped != 5 {
+		t.Errorf("pending %d, dropped %d, want 25 and 5", st.Pending, st.Dropped)
+	}
+	if got := read(t, w, loopName(0), 0, math.MaxInt64); len(got) != 26 {
+		t.Errorf("%d frames, want 26", len(got))
+	}
+	close(hang)
+	if err := <-done; err != nil {
+		t.Error(err)
+	}
+	go func() { <-reached }() // of Close
+	checkAll(t, w)
+}

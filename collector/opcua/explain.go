@@ -43,8 +43,8 @@ var sentences = []struct {
 	wait          kindOfWait
 }{
 	{ua.StatusBadCertificateURIInvalid, "the server refuses the own certificate: its application URI is not the one this client states", "give a certificate made for midwatch, or leave out cert_file and key_file to have one made", distrust},
-	{ua.StatusBadCertificateUntrusted, "the server does not trust the own certificate yet", "copy %cert% into the server's trusted folder", distrust},
-	{ua.StatusBadSecurityChecksFailed, "the server refuses the secure channel, most likely since it does not trust the own certificate yet", "copy %cert% into the server's trusted folder (it may already lie in its rejected folder)", distrust},
+	{ua.StatusBadCertificateUntrusted, "the server does not trust the own certificate yet", "copy %cert% into the server's trusted folder, and take it out of its rejected folder", distrust},
+	{ua.StatusBadSecurityChecksFailed, "the server refuses the secure channel, most likely since it does not trust the own certificate yet", "copy %cert% into the server's trusted folder, and take it out of its rejected folder", distrust},
 	{ua.StatusBadCertificateTimeInvalid, "the server takes the own certificate for expired or not yet valid", "compare the clocks of both machines; make a new certificate if it has expired", distrust},
 	{ua.StatusBadCertificateIssuerTimeInvalid, "the server takes the authority of the own certificate for expired", "renew the authority's certificate on the server", distrust},
 	{ua.StatusBadCertificateHostNameInvalid, "the server refuses the own certificate for its host name", "make a certificate that names this machine", distrust},

@@ -98,7 +98,6 @@ func (p *peer) start(args ...string) {
 	all := append([]string{"server.mjs", "--port", fmt.Sprint(p.port), "--control", fmt.Sprint(p.control), "--pki", p.pki}, args...)
 	cmd := exec.Command("node", all...)
 	cmd.Dir = peerFolder(p.t)
-	cmd.Env = append(os.Environ(), "OPCUA_PKI_USE_POLLING=true", "OPCUA_PKI_POLLING_INTERVAL=200") // not every machine can watch folders
 	cmd.SysProcAttr = &syscall.SysProcAttr{Pdeathsig: syscall.SIGKILL}
 	out, err := cmd.StdoutPipe()
 	if err != nil {

@@ -16,7 +16,7 @@ func DemoFaults() []Fault {
 		{Loop: "FIC-140", At: 9 * time.Hour, Kind: ManualSpell},
 		{Loop: "TIC-221", At: DemoDay - 2*time.Minute, Kind: ResetTooLong, Factor: 5},
 		{Loop: "AIC-204", At: DemoDay + time.Minute, Kind: ResetTooShort, Factor: 0.18},
-		{Loop: "FIC-118", At: DemoDay + 2*time.Minute, Kind: IntegralOff, Factor: 12},
+		{Loop: "FIC-118", At: DemoDay + 2*time.Minute, Kind: IntegralOff, Factor: 18},
 		{Loop: "FIC-341", At: DemoDay + 3*time.Minute, Kind: OutputLimited, Factor: 62},
 	}
 }

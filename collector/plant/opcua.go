@@ -198,7 +198,7 @@ func (u *uaServer) countCalls() {
 
 func (u *uaServer) refuse(_ *uasc.SecureChannel, r ua.Request, _ uint32) (ua.Response, error) {
 	u.calls.Add(1)
-	return fault(r, ua.StatusBadServiceUnsupported)
+	return serviceFault(r, ua.StatusBadServiceUnsupported)
 }
 
 var modeCode = map[collector.Mode]int32{collector.Manual: 0, collector.Auto: 1, collector.Cascade: 2, collector.RemoteSP: 3,

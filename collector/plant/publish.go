@@ -14,7 +14,7 @@ func (s *subscriptions) publish(sc *uasc.SecureChannel, r ua.Request, reqID uint
 	req := r.(*ua.PublishRequest)
 	key := s.session(r)
 	if key == "" {
-		return fault(r, ua.StatusBadSessionIDInvalid)
+		return serviceFault(r, ua.StatusBadSessionIDInvalid)
 	}
 	s.mu.Lock()
 	defer s.mu.Unlock()
@@ -29,12 +29,12 @@ func (s *subscriptions) publish(sc *uasc.SecureChannel, r ua.Request, reqID uint
 		}
 	}
 	if !mine {
-		return fault(r, ua.StatusBadNoSubscription)
+		return serviceFault(r, ua.StatusBadNoSubscription)
 	}
 	// A session that came back on a new channel left dead requests behind.
 	s.waiting[key] = slices.DeleteFunc(s.waiting[key], func(p publishRequest) bool { return p.channel != sc })
 	if len(s.waiting[key]) >= maxWaiting {
-		return fault(r, ua.StatusBadTooManyPublishRequests)
+		return serviceFault(r, ua.StatusBadTooManyPublishRequests)
 	}
 	results := make([]ua.StatusCode, len(req.SubscriptionAcknowledgements))
 	for i, a := range req.SubscriptionAcknowledgements {
@@ -63,11 +63,11 @@ func (s *subscriptions) republish(_ *uasc.SecureChannel, r ua.Request, _ uint32)
 	defer s.mu.Unlock()
 	sub := s.subs[req.SubscriptionID]
 	if sub == nil || sub.session != key {
-		return fault(r, ua.StatusBadSubscriptionIDInvalid)
+		return serviceFault(r, ua.StatusBadSubscriptionIDInvalid)
 	}
 	k := sub.kept(req.RetransmitSequenceNumber)
 	if k < 0 {
-		return fault(r, ua.StatusBadMessageNotAvailable)
+		return serviceFault(r, ua.StatusBadMessageNotAvailable)
 	}
 	return &ua.RepublishResponse{ResponseHeader: header(r, ua.StatusOK), NotificationMessage: sub.sent[k]}, nil
 }

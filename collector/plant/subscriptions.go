@@ -92,7 +92,7 @@ func header(r ua.Request, status ua.StatusCode) *ua.ResponseHeader {
 		ServiceDiagnostics: &ua.DiagnosticInfo{}, StringTable: []string{}, AdditionalHeader: ua.NewExtensionObject(nil)}
 }
 
-func fault(r ua.Request, status ua.StatusCode) (ua.Response, error) {
+func serviceFault(r ua.Request, status ua.StatusCode) (ua.Response, error) {
 	return &ua.ServiceFault{ResponseHeader: header(r, status)}, nil
 }
 
@@ -108,7 +108,7 @@ func (s *subscriptions) create(sc *uasc.SecureChannel, r ua.Request, _ uint32) (
 	req := r.(*ua.CreateSubscriptionRequest)
 	key := s.session(r)
 	if key == "" {
-		return fault(r, ua.StatusBadSessionIDInvalid)
+		return serviceFault(r, ua.StatusBadSessionIDInvalid)
 	}
 	every := max(minPublish, time.Duration(req.RequestedPublishingInterval*float64(time.Millisecond)))
 	sub := &subscription{session: key, token: r.Header(), every: every, keepAlive: max(1, req.RequestedMaxKeepAliveCount), wake: make(chan struct{}, 1)}
@@ -170,7 +170,7 @@ func (s *subscriptions) monitor(_ *uasc.SecureChannel, r ua.Request, _ uint32) (
 	defer s.mu.Unlock()
 	sub := s.subs[req.SubscriptionID]
 	if sub == nil || sub.session != key {
-		return fault(r, ua.StatusBadSubscriptionIDInvalid)
+		return serviceFault(r, ua.StatusBadSubscriptionIDInvalid)
 	}
 	results := make([]*ua.MonitoredItemCreateResult, len(req.ItemsToCreate))
 	for i, c := range req.ItemsToCreate {

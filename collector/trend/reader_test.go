@@ -420,6 +420,14 @@ func TestInferredGaps(t *testing.T) {
 			t.Errorf("%+v", sum)
 		}
 	})
+	t.Run("only for files without flags", func(t *testing.T) {
+		got, sum, _, _ := readAll(t, loopsOf("A", "B"),
+			rows(full, at(0)+",A,1,,,,", at(10*h)+",A,2,,,,"), rows(bare, at(1)+",B,1,,", at(9*h)+",B,2,,"))
+		equal(t, got, "A 0 1", "B 1 1", "B 1801 - gap", "B 32400 2 gap", "B 34200 - gap", "A 36000 2")
+		if !sum.Inferred || sum.Silent != 2 {
+			t.Errorf("%+v", sum)
+		}
+	})
 	t.Run("loops one after the other are not dead", func(t *testing.T) {
 		var r []string
 		for _, l := range []string{"A", "B"} {

@@ -108,3 +108,40 @@ func cascadeSticking(r *rand.Rand, _ float64) *scenario {
 		return s
 	})
 }
+
+// neighbours are independent loops that feel the same load steps and the same
+// day, and do not swing together.
+func neighbours(r *rand.Rand, days float64) *scenario {
+	tau := logBetween(r, 30, 900)
+	n := 4 + r.IntN(4)
+	s := &scenario{}
+	h := math.Inf(1)
+	for i := range n {
+		l := drawRig(r, "loop"+string(rune('a'+i)), wish{minS: tau * 0.5, maxS: tau * 2, shapes: []shape{lagShape, twoLags, deadTime, highOrder, level}})
+		h = math.Min(h, l.h)
+		s.rigs = append(s.rigs, l)
+	}
+	gains := make([]float64, n)
+	for i, l := range s.rigs {
+		l.h = h
+		l.measure()
+		if !l.settles() {
+			return nil
+		}
+		gains[i] = l.load.stepSize * between(r, 0.3, 1) * pick(r, -1.0, 1)
+	}
+	every := s.rigs[0].recovery * between(r, 15, 60)
+	next, level := every, 0.0
+	s.couple = func(t float64, rigs []*rig) {
+		if t > next {
+			next += every * (0.3 + 0.7*r.ExpFloat64())
+			level = pick(r, -1.0, 0, 1)
+		}
+		for i, l := range rigs {
+			l.load.extra = gains[i] * level
+		}
+	}
+	one := healthyFor(s.rigs[0], days)
+	s.duration, s.truth = one.duration*2/float64(n), one.truth
+	return s
+}

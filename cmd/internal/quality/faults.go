@@ -109,8 +109,10 @@ func growing(shapes []shape, byTheReset, young bool) func(*rand.Rand, float64) *
 }
 
 // kcRoom says whether a change of process gain can stand for a change of gain:
-// only where the operating point does not move with it.
-func kcRoom(l *rig, kc float64) bool { return l.proc.class == integrating && kc > 0 }
+// where the process is linear and the change not so large that PV jumps.
+func kcRoom(l *rig, kc float64) bool {
+	return l.proc.in.kind == straight && l.proc.out.kind == straight && kc < 3*l.law.kc
+}
 
 // edge: the loop rings without end, at the border of stability, driven by noise
 // and load.
@@ -251,6 +253,9 @@ func sluggish(byTheReset, young bool) func(*rand.Rand, float64) *scenario {
 			l.load.stepEvery = slow * between(r, 2.5, 5)
 			l.load.ou *= 0.5
 			l.sp.every = l.load.stepEvery * between(r, 2, 5)
+			if l.sp.reach == 0 || young && l.law.spWeight == 0 {
+				return nil
+			}
 			base := math.Max(l.baseline(r), 15*l.load.stepEvery)
 			if young {
 				base = 0
@@ -413,6 +418,7 @@ func windUp(r *rand.Rand, _ float64) *scenario {
 // frozen: the measurement stands still; pegged: it sits at an end of its range.
 func frozen(r *rand.Rand, _ float64) *scenario {
 	l := drawRig(r, "loop", wish{})
+	l.rec.heldRows = true // the source lives
 	base := l.baseline(r)
 	l.setOnset(base, func(l *rig) { l.sensor.frozen = true })
 	return single(l, base, math.Max(40*l.recovery, 6*3600), truth{kinds: kinds{detect.FrozenPV},
@@ -422,6 +428,7 @@ func frozen(r *rand.Rand, _ float64) *scenario {
 
 func pegged(r *rand.Rand, _ float64) *scenario {
 	l := drawRig(r, "loop", wish{})
+	l.rec.heldRows = true // the source lives
 	base := l.baseline(r)
 	l.setOnset(base, func(l *rig) { l.sensor.pegged = pick(r, 0, 100.0) })
 	return single(l, base, math.Max(20*l.recovery, 4*3600), truth{kinds: kinds{detect.PVAtRangeEnd},
@@ -433,6 +440,7 @@ func pegged(r *rand.Rand, _ float64) *scenario {
 func stale(bad bool) func(*rand.Rand, float64) *scenario {
 	return func(r *rand.Rand, _ float64) *scenario {
 		l := drawRig(r, "loop", wish{})
+		l.rec.heldRows = true
 		base := l.baseline(r)
 		out := math.Max(3*3600, 600*l.rec.every)
 		l.setOnset(base, func(l *rig) {
@@ -454,6 +462,7 @@ func leftInManual(known bool) func(*rand.Rand, float64) *scenario {
 	return func(r *rand.Rand, _ float64) *scenario {
 		l := drawRig(r, "loop", wish{})
 		l.rec.modeKnown = known
+		l.rec.heldRows = true
 		l.row.ModeTag = ""
 		if known {
 			l.row.ModeTag = l.name + ".MODE"
@@ -608,7 +617,12 @@ func standing(draw func(*rand.Rand, float64) *scenario) func(*rand.Rand, float64
 		}
 		s.duration -= shift
 		s.truth.onset -= shift
-		s.truth.subtle = nil // there is no before to compare with
+		if s.truth.subtle != nil { // there is no before to compare with
+			s.truth.subtle = func(s *scenario) bool {
+				l := s.rigs[0]
+				return l.valve.kind != free && l.turns < 20 || l.ringLag > 0 && l.ringLoud.rms() < 2*l.sensor.sigma
+			}
+		}
 		return s
 	}
 }

@@ -32,25 +32,26 @@ func sound(w wish, hands ...func(r *rand.Rand, l *rig)) func(*rand.Rand, float64
 	}
 }
 
-// flowPaced: OP is a trim that acts in proportion to a flow.
+// flowPaced: OP is the controller's trim times a measured flow, and what it gives
+// is diluted by the flow: PV does not feel it, OP moves without e.
 func flowPaced(r *rand.Rand, l *rig) {
-	l.pacing = true
-	l.dose = chance(r, 0.75)
-	told := chance(r, 0.6)
-	if told && l.dose {
+	l.dose = true
+	if chance(r, 0.6) {
 		l.row.Feedforward, l.row.FeedforwardKind = l.name+".FLOW", "multiply"
 		l.rec.flow = true
 	}
-	swing, phase := between(r, 0.1, 0.25), between(r, 0, 6.28)
+	swing, phase := between(r, 0.1, 0.3), between(r, 0, 6.28)
 	steps := chance(r, 0.5)
 	next, level := 0.0, 0.0
+	smooth, late := 1-math.Exp(-l.h/(0.2*l.recovery)), 1-math.Exp(-l.h/(0.01*l.recovery))
 	l.hook = func(l *rig, t float64) {
-		f := 1 + swing*math.Sin(2*math.Pi*t/86400+phase)
 		if steps && t > next {
 			next = t + l.recovery*between(r, 20, 100)
-			level = between(r, -0.12, 0.12)
+			level = between(r, -0.15, 0.15)
 		}
-		l.flow += (1 - math.Exp(-l.h/(0.3*l.recovery))) * (50*(f+level) - l.flow)
+		f := 50 * (1 + swing*math.Sin(2*math.Pi*t/86400+phase) + level)
+		l.trueFlow += smooth * (f - l.trueFlow)
+		l.flow += late * (l.trueFlow - l.flow)
 	}
 }
 
@@ -345,6 +346,9 @@ var healthyFamilies = []family{
 	{name: "daily swing", what: "load over the day", draw: sound(wish{}, dailySwing)},
 	{name: "cascade inner", what: "set point never rests", draw: sound(wish{shapes: []shape{flowShape, lagShape, twoLags}}, cascadeInner)},
 	{name: "cascade pair", what: "outer and inner loop, both sound", draw: cascadeSound},
+	{name: "neighbours", what: "4 to 7 loops with common load steps, not swinging together", draw: func(r *rand.Rand, d float64) *scenario {
+		return retry(func() *scenario { return neighbours(r, d) })
+	}},
 	{name: "coarse resolution", what: "PV 0.2 to 1 %, OP 0.1 to 1 %", draw: sound(wish{}, coarse)},
 	{name: "by exception", what: "dead band 0.1 to 0.5 %", draw: sound(wish{}, byException)},
 	{name: "restarts", what: "gaps of 1 min to 6 h", draw: sound(wish{}, restarts)},

@@ -245,7 +245,7 @@ func scoreFindings(s *scenario, h *listener, res *Result) {
 			}
 		}
 		switch {
-		case res.Healthy && (hasKind(t.also, k) || trulyClipped(s, k)):
+		case (res.Healthy || e.raised >= onset && !own) && (hasKind(t.also, k) || trulyClipped(s, k)):
 		case res.Healthy || e.raised < onset || !own && !hasKind(t.also, k):
 			f := e.last
 			f.At = e.raised
@@ -270,7 +270,6 @@ func scoreFindings(s *scenario, h *listener, res *Result) {
 				open = true
 			case hasCause(t.causes, c):
 				right = true
-				res.Said = c
 				res.Named = append(res.Named, Claim{e.last.Confidence, true})
 			default:
 				wrong = true

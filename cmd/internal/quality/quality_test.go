@@ -120,9 +120,12 @@ func TestSpacesOfSeedsDiffer(t *testing.T) {
 // Every fault family must show in most of its scenarios, else its score means
 // nothing; and every healthy loop must come to rest after its largest upset.
 func TestLabelsHold(t *testing.T) {
+	if testing.Short() {
+		t.Skip("half a minute of simulation")
+	}
 	for i := range faultFamilies {
 		f := &faultFamilies[i]
-		subtle, n := 0, 6
+		subtle, n := 0, 4
 		for k := range n {
 			s := f.make(3, false, k, 1)
 			if s.truth.subtle == nil {

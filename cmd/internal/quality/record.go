@@ -88,7 +88,7 @@ func (c *recorder) row(epoch int64, t float64, l *rig, r *rand.Rand) (f collecto
 	}
 	pv, op := quantise(l.pv, c.pvQ), quantise(c.olderOP(t, l.op), c.opQ)
 	if c.deadband > 0 {
-		if c.have && math.Abs(pv-c.lastPV) < c.deadband && !(l.opOver && math.Abs(op-c.lastOP) >= c.deadband) {
+		if c.have && math.Abs(pv-c.lastPV) < c.deadband && (c.heldRows || math.Abs(op-c.lastOP) < c.deadband) {
 			if !c.heldRows {
 				return f, false
 			}

@@ -32,19 +32,18 @@ type rig struct {
 	perPV         float64 // load, % of OP, that moves PV by about 1 %
 
 	// Running.
-	mode    collector.Mode
-	y, pv   float64
-	spNow   float64
-	opOver  bool // OP changes too make a row
-	flow    float64
-	pacing  bool    // OP acts times flow/50
-	dose    bool    // what is recorded as OP is the product
-	op      float64 // OP as recorded
-	drives  *rig    // inner loop of a cascade: its PV is this loop's final element
-	perOP   float64 // inner SP, % per % of OP
-	spTrack bool    // SP follows PV in manual
-	spells  spells
-	hook    func(l *rig, t float64) // each scan
+	mode     collector.Mode
+	y, pv    float64
+	spNow    float64
+	flow     float64 // as measured, % (50 usual)
+	trueFlow float64
+	dose     bool    // OP is the controller's trim times flow/50, and acts in proportion to 1/flow
+	op       float64 // OP as recorded
+	drives   *rig    // inner loop of a cascade: its PV is this loop's final element
+	perOP    float64 // inner SP, % per % of OP
+	spTrack  bool    // SP follows PV in manual
+	spells   spells
+	hook     func(l *rig, t float64) // each scan
 
 	quiet, loud meter // error before and after the onset
 	onsetS      float64
@@ -99,7 +98,7 @@ func (l *rig) start() {
 	if l.mode == collector.ModeUnknown {
 		l.mode = collector.Auto
 	}
-	l.flow = 50
+	l.flow, l.trueFlow = 50, 50
 	l.spells.next, l.spells.end = math.Inf(1), math.Inf(1)
 	if l.spells.every > 0 {
 		l.spells.next = l.spells.every * (0.5 + l.rng.ExpFloat64())
@@ -135,9 +134,7 @@ func (l *rig) step(epoch int64, t float64) (collector.Frame, bool) {
 		stem = l.proc.u0 + (l.drives.y-l.drives.proc.y0)/l.perOP
 	case l.dose:
 		l.op = min(max(u*l.flow/50, 0), 100)
-		stem = l.valve.step(l.op)
-	case l.pacing:
-		stem = l.valve.step(u) * l.flow / 50
+		stem = l.valve.step(l.op) * 50 / l.trueFlow
 	default:
 		stem = l.valve.step(u)
 	}
