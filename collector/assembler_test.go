@@ -470,6 +470,24 @@ func TestClock(t *testing.T) {
 			}
 		}
 	})
+	t.Run("a value from the near future does not carry the loop along", func(t *testing.T) {
+		r := newRig(t, nil, 1)
+		for s := 1.0; s <= 400; s++ {
+			r.put(RolePV, s, s)
+			if s == 10 {
+				r.feed(Sample{Role: RolePV, Time: ms(s + 240), Arrived: ms(s), Value: -1})
+			}
+		}
+		n := len(r.got[0])
+		if f := r.got[0][n-1]; f.Time != ms(399) || f.PV != 399 || n != 399 {
+			t.Errorf("%d frames, the last %+v", n, f)
+		}
+		for i, f := range r.got[0] {
+			if f.PV != float32(i+1) && i+1 != 250 || f.Time != ms(float64(i+1)) {
+				t.Fatalf("frame %d: %+v", i, f)
+			}
+		}
+	})
 	t.Run("set forward", func(t *testing.T) {
 		r := newRig(t, nil, 1)
 		r.put(RolePV, -3600, 1)

@@ -70,9 +70,14 @@ func (a *Assembler) when(l *state, s *Sample) bool {
 }
 
 // shiftTo gives a PV of a wrong clock a time by the loop's shift; where there
-// is none, or where it no longer leads near now, the shift is made anew.
+// is none, or where it no longer leads near the arrival, the shift is made anew.
+// While frames are ahead of the arrivals, after a value from a few minutes in the
+// future, PVs are too late until the arrivals have caught up.
 func (a *Assembler) shiftTo(l *state, s *Sample) {
-	now := max(s.Arrived, l.closed+1)
+	now := s.Arrived
+	if now < year2000Ms {
+		now = l.closed + 1
+	}
 	t := s.Time + l.shift
 	if d := t - now; l.shift == 0 || d > stepLimitMs || d < -stepLimitMs {
 		l.shift = now - s.Time

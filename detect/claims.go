@@ -11,12 +11,12 @@ import (
 
 func claimGrowing(w *Watch) claim {
 	o := &w.s.Osc
-	return claim{o.Grow, o.Since, o.Cause, o.Also, o.Conf, float32(o.Amp)}
+	return claim{o.Grow && !w.led(), o.Since, o.Cause, o.Also, o.Conf, float32(o.Amp)}
 }
 
 func claimSustained(w *Watch) claim {
 	o := &w.s.Osc
-	on := o.Sus && !o.Sticking && !o.Grow // what grew stays a growing one until it is over
+	on := o.Sus && !o.Sticking && !o.Grow && !(w.led() && o.Amp < 1.5) // what grew stays a growing one until it is over
 	c := o.Cause
 	if c == 0 {
 		c = causeIndex(Undetermined)

@@ -179,10 +179,16 @@ func (w *Watch) inferredManual() bool {
 		return false
 	}
 	still := in.t - m.OPSame
-	if still < math.Max(300, 40*in.dt) || still < 4*math.Min(m.OPRunMax, 6*3600) {
+	if still < math.Max(300, 60*in.dt) || still < 5*math.Min(m.OPRunMax, 6*3600) || m.Frozen {
 		return false
 	}
-	m.Manual = float64(m.EStillHi-m.EStillLo) > 6*w.s.Noise.sigma()+0.2
+	moved := float64(m.EStillHi - m.EStillLo)
+	if kc, ok := w.gainPct(); ok {
+		// The law would have moved OP by so much that no resolution hides it.
+		m.Manual = moved > 6*w.s.Noise.sigma() && math.Abs(kc)*moved > 2
+	} else {
+		m.Manual = moved > 6*w.s.Noise.sigma()+1
+	}
 	return m.Manual
 }
 

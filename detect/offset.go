@@ -200,7 +200,11 @@ func (w *Watch) judgeOffset(thr float64) {
 	d := in.t - o.T0
 	mean := o.Int / o.Dur
 	o.Mean = mean
-	if math.Abs(mean) < thr || math.Abs(o.Es) < 0.6*thr || !in.hasOP {
+	recent := mean
+	if a := o.anchorAt(0.7 * d); a != nil {
+		recent = (o.Int - float64(a.Int)) / math.Max(d-float64(a.T), in.dt)
+	}
+	if math.Abs(mean) < thr || math.Abs(recent) < 0.6*thr || !in.hasOP {
 		o.Offset, o.Sat = false, false
 		return
 	}
@@ -215,7 +219,11 @@ func (w *Watch) judgeOffset(thr float64) {
 	flat := hi-lo < 0.35
 	need := math.Max(math.Max(8*60, 100*in.dt), math.Max(4*rt, 2.5*w.timeScale())) * w.strict
 	need = math.Max(need, 3*o.PrevDur) // PV that comes and goes is a cycle, not an offset
-	atLimit := !in.frozen && (push > 0 && o.OPs >= l1-1 || push < 0 && o.OPs <= l0+1)
+	// An own limit: OP stands still at the extreme it ever reached, on the side to
+	// which e pushes (a limit or selector that nobody listed).
+	own := flat && in.t-m.OPSame > math.Max(120*in.dt, 300) && m.OPRunMax < (in.t-m.OPSame)/2 &&
+		(push > 0 && in.op >= float64(m.OPMax)-0.05 || push < 0 && in.op <= float64(m.OPMin)+0.05)
+	atLimit := own || !in.frozen && (push > 0 && o.OPs >= l1-1 || push < 0 && o.OPs <= l0+1)
 	if atLimit {
 		if s.Sat.AtSince == 0 {
 			s.Sat.AtSince = in.t
@@ -226,13 +234,14 @@ func (w *Watch) judgeOffset(thr float64) {
 			o.Sat, o.Offset = true, false
 			o.Since = s.Sat.AtSince
 			o.Cause, o.Conf = causeIndex(OutputLimit), 0.9
+			if own {
+				o.Conf = 0.75
+			}
 		}
 		return
 	}
 	s.Sat.AtSince = 0
-	if o.Sat && !in.limit {
-		o.Sat = false
-	}
+	o.Sat = false
 	if in.limit || in.frozen {
 		return
 	}
@@ -262,14 +271,7 @@ func (w *Watch) offsetCause(kc float64, known bool, rt, d, push, lo, hi float64,
 	if !known || kc == 0 || o.AnchorN == 0 {
 		return c, conf, 8 * 3600
 	}
-	// The anchor nearest to 0.3 of the run.
-	best := 0
-	for k := 1; k < int(o.AnchorN); k++ {
-		if math.Abs(float64(o.Anchors[k].T)-0.3*d) < math.Abs(float64(o.Anchors[best].T)-0.3*d) {
-			best = k
-		}
-	}
-	a := o.Anchors[best]
+	a := o.anchorAt(0.3 * d)
 	span := d - float64(a.T)
 	if span < 30*in.dt {
 		return c, conf, 1e12
@@ -291,13 +293,13 @@ func (w *Watch) offsetCause(kc float64, known bool, rt, d, push, lo, hi float64,
 		return Undetermined, 0.6, 0
 	case still:
 		return Undetermined, 0.5, 8 * 3600
-	case math.Abs(o.Es) < 0.6*math.Abs(float64(a.E)):
+	case a.T > 0 && math.Abs(ie/span) < 0.6*math.Abs(float64(a.Int/a.T)):
 		return c, conf, -1 // it is being worked off
-	case !o.WasStill && (implied < 0 || implied > 3*span && implied > 4*rt || rt > 0 && implied > 5*rt) && expect > 1.5 && math.Abs(dop-kc*de) < math.Max(0.2*expect, 0.5) && hi-lo < 2.5*math.Abs(kc)*eRange+1:
+	case !o.WasStill && (s.Tune.Law == 0 || s.Tune.Law > 0.5) && (implied < 0 || implied > 3*span && implied > 4*rt || rt > 0 && implied > 5*rt) && expect > 1.5 && math.Abs(dop-kc*de) < math.Max(0.2*expect, 0.5) && hi-lo < 2.5*math.Abs(kc)*eRange+1:
 		return IntegralMissing, 0.9, 0
 	case w.crossesSplit(lo, hi):
 		return Undetermined, 0.5, 4 * 3600
-	case math.Abs(dop) > 15 && lo > 1 && hi < 99 && math.Abs(o.Es) > 0.9*math.Abs(float64(a.E)) && math.Abs(o.Es) > 2 && push*dop > 0:
+	case math.Abs(dop) > 20 && lo > 1 && hi < 99 && math.Abs(ie/span) > 0.9*math.Abs(float64(a.Int/a.T)) && math.Abs(ie/span) > 1 && push*dop > 0:
 		o.NotFollow = true
 		return FinalElementNotFollowing, 0.85, 0
 	case o.NotFollow:
@@ -376,4 +378,18 @@ func (w *Watch) crossesSplit(lo, hi float64) bool {
 	}
 	p := (x - w.s.Scale.OPLow) / w.s.Scale.OPSpan * 100
 	return lo < p+3 && hi > p-3
+}
+
+// anchorAt is the anchor nearest to an age of the run, s; nil before the first.
+func (o *offsetState) anchorAt(age float64) *anchor {
+	if o.AnchorN == 0 {
+		return nil
+	}
+	best := 0
+	for k := 1; k < int(o.AnchorN); k++ {
+		if math.Abs(float64(o.Anchors[k].T)-age) < math.Abs(float64(o.Anchors[best].T)-age) {
+			best = k
+		}
+	}
+	return &o.Anchors[best]
 }

@@ -89,7 +89,7 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 		// A runaway process also cycles with too little gain: no direction is given.
 		byPhi, also = Undetermined, [2]Cause{GainTooHigh, GainTooLow}
 	}
-	if s.Track.On && s.Track.Bank == o.Bank && s.Track.led() {
+	if w.led() {
 		// The inner loop of a cascade, or a loop whose set point is moved with the
 		// cycle: following is no fault of its own tuning.
 		o.Sticking = false
@@ -153,6 +153,9 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	q, _ := b.stat(int(o.Bank), min(int(b.N), ringLen))
 	move := o.AmpHi / math.Max(o.AmpLo, 1e-9)
 	tri := si > 0.64
+	if phi > 60 && si < 0.72 && !(sh.stick > 0.58) {
+		tri = false // a slow swing far beyond the reset time looks like this too
+	}
 	integrating := w.loop.Process == configs.Integrating
 	switch {
 	case o.GrowCause != 0 && causes[o.GrowCause] != Undetermined:
@@ -192,4 +195,13 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, byPhi}, 0.5)
 	}
 	o.Sticking = causes[o.Cause] == ValveSticking
+	if o.Sticking && o.Grow {
+		o.Grow = false
+	}
+}
+
+// led: the cycle comes with the set point, from an outer loop or a program.
+func (w *Watch) led() bool {
+	k := &w.s.Track
+	return k.On && k.Bank == w.s.Osc.Bank && k.led()
 }

@@ -49,6 +49,7 @@ type recoveryState struct {
 	Conf              float32
 	By                uint8   // what proved it: 1 own history, 2 residence, 3 shape
 	Now, Was          float32 // s, median now and usual
+	Hold              uint8   // recoveries that teach no usual time, after the tuning was made slower
 }
 
 func (r *recoveryState) abandon() {
@@ -69,7 +70,7 @@ func stepRecovery(w *Watch) {
 		return
 	}
 	sigma := math.Max(s.Noise.sigma(), 0.02)
-	thr := math.Max(3*sigma, 0.7)
+	thr := math.Max(3*sigma, 0.3)
 	a := math.Abs(s.Motion.EF)
 	if r.On && math.Abs(in.spStep) > 0.2 && in.t-r.T0 > 2*in.dt {
 		w.cutRecovery()
@@ -104,7 +105,7 @@ func stepRecovery(w *Watch) {
 				keep := *r
 				*r = recoveryState{On: true, SP: sp, T0: in.t, TPeak: in.t, Peak: a, Sign: math.Copysign(1, s.Motion.EF),
 					OP0: keep.OPMean, PV0: keep.PVMean, Ring: ring, Count: count, Usual: usual,
-					Slow: keep.Slow, SlowSince: keep.SlowSince, Cause: keep.Cause, Conf: keep.Conf, By: keep.By, Now: keep.Now, Was: keep.Was}
+					Slow: keep.Slow, SlowSince: keep.SlowSince, Cause: keep.Cause, Conf: keep.Conf, By: keep.By, Now: keep.Now, Was: keep.Was, Hold: keep.Hold}
 				r.DSP = in.sp - keep.PVMean
 			}
 			r.Quiet, r.MeanN = 0, 0
@@ -176,7 +177,7 @@ func (w *Watch) keepRecovery(e recovery) {
 	i := r.Count % recRing
 	if r.Count >= recRing {
 		// What is old enough not to be the trouble at hand is the usual.
-		if old := &r.Ring[i]; !r.Slow && !old.Cut {
+		if old := &r.Ring[i]; !r.Slow && !old.Cut && r.Hold == 0 {
 			r.Usual[kindOf(old.SP)].Add(float64(old.Dur), 0.5, 0.05, 1e-3)
 		}
 	} else if r.Count < recRing-2 && !e.Cut {
@@ -184,6 +185,9 @@ func (w *Watch) keepRecovery(e recovery) {
 	}
 	r.Ring[i] = e
 	r.Count++
+	if r.Hold > 0 {
+		r.Hold--
+	}
 	w.judgeSlow()
 }
 

@@ -34,6 +34,9 @@ func (w *Watch) judgeSlow() {
 		if m > 3.5*w.strict && lo > 2 {
 			own = 1
 		}
+		if w.madeSlower(r.recent(2).T0) && m > 1.8*w.strict && lo > 1.3 {
+			own = 1
+		}
 		if !r.recent(0).Cut && ratios[0] > 4.5 && ratios[1] > 4.5 && ratios[2] > 1.5 {
 			own = 1
 		}
@@ -63,9 +66,17 @@ func (w *Watch) judgeSlow() {
 			t9[i] = float64(e.Dur-e.Rise) / math.Max(float64(e.Rise), 3*w.s.Grid.DT)
 			lo = math.Min(lo, t9[i])
 		}
-		_, ti, ok := w.tuning(r.recent(4).T0, 0)
-		d := float64(r.recent(2).Dur)
-		if num.Median(t9[:]) > 12*w.strict && lo > 8 && ok && ti > 0 && d > 1.3*ti && d < 6*ti {
+		// The tail must be that of the integral: time constant Ti (1 + 1/(Kc K)), which
+		// is Ti over the proportional share; 2.1 of them to 12 %.
+		var tail [5]float64
+		nt := 0
+		for i := range 5 {
+			if e := r.recent(i); !e.SP && e.Ti > 0 && e.Prop > 0 {
+				tail[nt] = float64(e.Dur) / (2.1 * float64(e.Ti) / math.Min(1, math.Max(0.03, float64(e.Prop))))
+				nt++
+			}
+		}
+		if m := num.Median(tail[:nt]); num.Median(t9[:]) > 11*w.strict && lo > 4.5 && nt >= 3 && m > 0.5 && m < 1.8 {
 			shape = 1
 		}
 	}
@@ -96,6 +107,15 @@ func (w *Watch) slowCause(own, area, shape int, durs []float64) {
 		since = r.SlowSince
 	}
 	kb, tb, okb := w.usualTuning(since - 2*float64(first.Dur))
+	if c := &w.s.Change; w.madeSlower(first.T0) {
+		okb = true
+		if c.What&1 != 0 {
+			kb = float64(c.GainWas)
+		}
+		if c.What&2 != 0 {
+			tb = float64(c.ResetWas)
+		}
+	}
 	rk, rt := 1.0, 1.0
 	if ok && okb && ti > 0 && tb > 0 && kb > 0 {
 		rk, rt = math.Abs(kc)/kb, ti/tb
@@ -103,7 +123,8 @@ func (w *Watch) slowCause(own, area, shape int, durs []float64) {
 	var ps [recRing]float64
 	np := 0
 	for i := range 3 {
-		if p := float64(r.recent(i).Prop); p > 0 {
+		if e := r.recent(i); e.Prop > 0 && !e.SP {
+			p := float64(e.Prop)
 			ps[np] = p
 			np++
 		}
@@ -144,4 +165,14 @@ func map3(own, area int) int {
 		return 2
 	}
 	return 3
+}
+
+// madeSlower: a change of the tuning to less gain or a longer reset, at or before t
+// and within a month.
+func (w *Watch) madeSlower(t float64) bool {
+	c := &w.s.Change
+	if c.Seen == 0 || c.At > t+w.s.Recov.Usual[0].Value() || w.in.t-c.Seen > 30*86400 {
+		return false
+	}
+	return c.What&1 != 0 && c.GainNow < c.GainWas/1.5 || c.What&2 != 0 && c.ResetNow > c.ResetWas*1.5
 }

@@ -79,6 +79,9 @@ func (w *Watch) tuneCheck(k int) {
 	}
 	*c = tuneChange{On: true, At: oldest, Seen: w.in.t, GainWas: b.BaseK.V, GainNow: float32(kn), ResetWas: b.BaseT.V, ResetNow: float32(tn),
 		What: what, TagGain: c.TagGain, TagReset: c.TagReset}
+	if w.madeSlower(w.in.t) {
+		s.Recov.Hold = 12 // the recoveries to come are compared with those before
+	}
 	// From here on the new tuning is the usual one.
 	b.BaseK, b.BaseT = num.Quantile{V: float32(kn), N: 6}, num.Quantile{V: float32(math.Max(tn, 1e-3)), N: 6}
 }

@@ -37,6 +37,9 @@ const (
 	fitBlockX = 60 * fitTh // samples after which a block without excitation is dropped
 )
 
+// leastOP is the least movement of OP, % rms, from which a tuning is read.
+const leastOP = 0.02
+
 // fit is one estimate of the tuning in service.
 type fit struct {
 	Kc float32 // %/%, signed: positive for reverse action
@@ -66,6 +69,7 @@ type fitBank struct {
 type tuneState struct {
 	LimitAt  float64 // s, OP last at a limit
 	OPMean   float64 // %, slow mean of OP (200 slots)
+	Law      float32 // share of excited blocks that the PI law explains; 0 before the first
 	Sign     float32 // of the gain as seen; 0 unknown
 	BestBank uint8
 }
@@ -105,6 +109,17 @@ func (w *Watch) stepFit(k, level int, e, si, op float64) {
 	r := w.solveFit(k)
 	if !(r.ok() && r.X > fitX*1.25) && b.N < fitBlockX {
 		return
+	}
+	if r.X > fitX*1.25 {
+		good := float32(0.01)
+		if r.R2 > 0.95 {
+			good = 1
+		}
+		if t := &w.s.Tune; t.Law == 0 {
+			t.Law = good
+		} else {
+			t.Law += (good - t.Law) / 8
+		}
 	}
 	if r.ok() && r.X > fitX*1.25 {
 		w.keepFit(k, r)
@@ -150,7 +165,8 @@ func (w *Watch) keepFit(k int, r fit) {
 func (w *Watch) solveFit(k int) (r fit) {
 	b := &w.s.Fits[k]
 	det := b.A00*b.A11 - b.A01*b.A01
-	if !(det > 0) || !(b.YY > 0) || b.N < 20 {
+	// OP that hardly moves (held, or one step of its resolution) says nothing.
+	if !(det > 0) || b.N < 20 || b.YY/float64(b.N) < leastOP*leastOP {
 		return
 	}
 	kc := (b.B0*b.A11 - b.B1*b.A01) / det

@@ -3,7 +3,6 @@ package store
 import (
 	"cmp"
 	"context"
-	"encoding/binary"
 	"errors"
 	"fmt"
 	"maps"
@@ -19,13 +18,6 @@ const (
 	tailPackBytes  = 40 << 10
 	chunkPackBytes = 32 << 10
 )
-
-// record is a pack ready to be put.
-type record struct {
-	bucket   []byte
-	n        uint32
-	key, val []byte
-}
 
 // batch is what one flush writes.
 type batch struct {
@@ -162,7 +154,7 @@ func (w *Window) current() (*slice, error) {
 	if len(w.slices) > 0 && !w.broken {
 		cur = w.slices[len(w.slices)-1]
 	}
-	names := slices.Clone(w.names)
+	names, renames := slices.Clone(w.names), w.renames
 	w.mu.Unlock()
 	if cur != nil && (w.next == cur.first || w.next-cur.first < uint32(w.opt.SliceFlushes) && cur.size() < w.opt.SliceBytes) {
 		return cur, nil
@@ -178,7 +170,7 @@ func (w *Window) current() (*slice, error) {
 	defer w.mu.Unlock()
 	w.slices = append(w.slices, s)
 	w.broken = false
-	w.written, w.renamed = len(names), false
+	w.written, w.renamed = len(names), renames
 	w.stats.Slice = s.first
 	return s, nil
 }
@@ -201,11 +193,11 @@ func (w *Window) flush(cur *slice) error {
 		return err
 	}
 	w.mu.Lock()
-	from, names, renamed := w.written, slices.Clone(w.names), w.renamed
-	w.mu.Unlock()
-	if renamed {
+	from, names, renames := w.written, slices.Clone(w.names), w.renames
+	if renames != w.renamed {
 		from = 0
 	}
+	w.mu.Unlock()
 	if len(b.records) == 0 && from == len(names) {
 		w.release(false)
 		return nil
@@ -230,28 +222,15 @@ func (w *Window) flush(cur *slice) error {
 		return err
 	}
 	w.next++
-	w.commit(cur, n, b, len(names))
-	return nil
-}
-
-// putRecords creates one bucket per flush and kind: filled at once and dropped
-// at once, each page of it is written once.
-func putRecords(tx *bolt.Tx, records []record) error {
-	for _, r := range records {
-		b, err := tx.Bucket(r.bucket).CreateBucketIfNotExists(flushKey(r.n))
-		if err != nil {
-			return err
-		}
-		b.FillPercent = 1
-		if err := b.Put(r.key, r.val); err != nil {
-			return err
-		}
-	}
+	w.commit(cur, n, b)
+	w.mu.Lock()
+	w.written, w.renamed = len(names), renames
+	w.mu.Unlock()
 	return nil
 }
 
 // commit takes out of memory what is on disk now.
-func (w *Window) commit(cur *slice, n uint32, b *batch, names int) {
+func (w *Window) commit(cur *slice, n uint32, b *batch) {
 	w.release(true)
 	w.mu.Lock()
 	defer w.mu.Unlock()
@@ -272,7 +251,6 @@ func (w *Window) commit(cur *slice, n uint32, b *batch, names int) {
 		w.newest[number] = memoryPlace{cur, n}
 	}
 	cur.now = b.now
-	w.written, w.renamed = names, false
 	w.stats.LastFlush = n
 	w.stats.Flushes++
 	w.droppedThen, w.toldDropped = w.dropped.Load(), false
@@ -368,230 +346,4 @@ func (w *Window) gatherFills(cur *slice, n uint32, b *batch) {
 		out.full(b)
 	}
 	out.emit(b)
-}
-
-// packer cuts a run of entries into records.
-type packer struct {
-	p      pack
-	bucket []byte
-	n      uint32
-	bytes  uint64
-}
-
-// full ends the record if it is big enough; never called between the entries
-// of one loop, so that all of them are in one record.
-func (o *packer) full(b *batch) {
-	if len(o.p.blobs) >= chunkPackBytes {
-		o.emit(b)
-	}
-}
-
-func (o *packer) emit(b *batch) {
-	if o.p.n == 0 {
-		return
-	}
-	k, v := o.p.value(o.n)
-	b.records = append(b.records, record{o.bucket, o.n, k, v})
-	o.bytes += uint64(len(v))
-	o.p.reset()
-}
-
-// closeGroups reads the tails of groups up to flush last back and encodes each
-// loop's frames as one chunk, to be put under flush n. So an open chunk costs no
-// memory.
-func (w *Window) closeGroups(s *slice, groups []uint32, last, n uint32, b *batch) error {
-	out := packer{p: pack{kind: kindChunk}, bucket: bucketChunk, n: n}
-	bad := 0
-	var frames []frame
-	err := s.view(func(tx *bolt.Tx) error {
-		for _, g := range groups {
-			rows := map[uint32][]tailBlob{}
-			from := s.lastClose(g, last)
-			err := eachFlush(tx.Bucket(bucketTail), from, last, func(nk uint32, bk *bolt.Bucket) error {
-				return eachPack(nk, bk, g<<20, g<<20|(1<<20-1), &bad, func(base int64, e packEntry) {
-					rows[e.ord] = append(rows[e.ord], tailBlob{e.blob, base})
-				})
-			})
-			if err != nil {
-				return err
-			}
-			for _, ord := range slices.Sorted(maps.Keys(rows)) {
-				frames = frames[:0]
-				for _, t := range rows[ord] {
-					var err error
-					if frames, err = w.dec.append(frames, t.blob, t.base); err != nil {
-						bad++
-					}
-				}
-				frames = inOrder(frames)
-				b.counts.ChunkFrames += uint64(len(frames))
-				for rest := frames; len(rest) > 0; {
-					c := rest[:min(maxPiece, len(rest))]
-					rest = rest[len(c):]
-					at := len(out.p.blobs)
-					out.p.blobs = w.enc.append(out.p.blobs, c, 0)
-					out.p.add(ord, at, c[0].Time, c[len(c)-1].Time)
-				}
-				out.full(b)
-			}
-		}
-		return nil
-	})
-	if err != nil {
-		return err
-	}
-	out.emit(b)
-	b.counts.ChunkBytes += out.bytes
-	w.countBad(s, bad)
-	return nil
-}
-
-// tailBlob is an encoded piece of a tail and the base of its times.
-type tailBlob struct {
-	blob []byte
-	base int64
-}
-
-// eachFlush visits the buckets of the flushes from to last.
-func eachFlush(top *bolt.Bucket, from, last uint32, f func(n uint32, b *bolt.Bucket) error) error {
-	if top == nil {
-		return fmt.Errorf("%w: a bucket is missing", ErrDamaged)
-	}
-	c := top.Cursor()
-	for k, v := c.Seek(flushKey(from)); k != nil; k, v = c.Next() {
-		if len(k) != 4 || v != nil {
-			return fmt.Errorf("%w: key %x among flushes", ErrDamaged, k)
-		}
-		n := binary.BigEndian.Uint32(k)
-		if n > last {
-			break
-		}
-		b := top.Bucket(k)
-		if b == nil {
-			return fmt.Errorf("%w: flush %d cannot be read", ErrDamaged, n)
-		}
-		if err := f(n, b); err != nil {
-			return err
-		}
-	}
-	return nil
-}
-
-// eachPack visits the entries with low <= ord <= high of one flush. Packs that
-// fail their checksum are counted in bad and left out.
-func eachPack(n uint32, b *bolt.Bucket, low, high uint32, bad *int, f func(base int64, e packEntry)) error {
-	c := b.Cursor()
-	var entries []packEntry
-	for k, v := seekPack(c, low); k != nil; k, v = c.Next() {
-		if len(k) != 4 {
-			return fmt.Errorf("%w: key %x among packs", ErrDamaged, k)
-		}
-		first := binary.BigEndian.Uint32(k)
-		if first > high {
-			break
-		}
-		entries = entries[:0]
-		base, err := readPack(n, first, v, func(e packEntry) bool {
-			if e.ord >= low && e.ord <= high {
-				entries = append(entries, e)
-			}
-			return e.ord <= high
-		})
-		if errors.Is(err, errVersion) {
-			return err
-		}
-		if err != nil {
-			*bad++
-			continue
-		}
-		for _, e := range entries {
-			f(base, e)
-		}
-	}
-	return nil
-}
-
-// countBad counts records that failed their checksum, and reports a slice once.
-func (w *Window) countBad(s *slice, bad int) {
-	if bad == 0 {
-		return
-	}
-	w.mu.Lock()
-	w.stats.BadRecords += uint64(bad)
-	told := w.badSum[s.path]
-	w.badSum[s.path] = true
-	w.mu.Unlock()
-	if !told {
-		w.tell(Problem{BadSum, s.path, "records failed their checksum and read as gaps; hint: look at the disk and at how the box loses power"})
-	}
-}
-
-// sealSome goes on with closing slices that were cut, some groups per flush, so
-// that there is no peak of work at a cut.
-func (w *Window) sealSome(ctx context.Context) error {
-	w.mu.Lock()
-	var todo []*slice
-	for i, s := range w.slices {
-		if (i < len(w.slices)-1 || w.broken) && !s.sealed(s.now) {
-			todo = append(todo, s)
-		}
-	}
-	w.mu.Unlock()
-	for _, s := range todo {
-		if ctx.Err() != nil {
-			return nil // the frames are on disk; sealing goes on at the next flush
-		}
-		err := w.sealStep(s)
-		switch {
-		case errors.Is(err, ErrDamaged):
-			w.abandon(s, err)
-		case errors.Is(err, ErrDiskFull), errors.Is(err, berrors.ErrMaxSizeReached), errors.Is(err, errGone):
-			// Its tails can be read as they are; sealing only saves room.
-		case err != nil:
-			return err
-		}
-	}
-	return nil
-}
-
-// sealSteps is over how many flushes the groups of a slice are closed.
-const sealSteps = 8
-
-func (w *Window) sealStep(s *slice) error {
-	b := &batch{now: s.now}
-	var due []uint32
-	for g := s.now.closed; g < min(s.now.closed+(s.groups+sealSteps-1)/sealSteps, s.groups); g++ {
-		due = append(due, g)
-	}
-	b.now.closed += uint32(len(due))
-	// Behind the flushes of the slice, a number for each step.
-	if err := w.closeGroups(s, due, s.now.last, s.now.last+1+s.now.closed, b); err != nil {
-		return err
-	}
-	err := s.update(func(tx *bolt.Tx) error {
-		if err := putRecords(tx, b.records); err != nil {
-			return err
-		}
-		if s.sealed(b.now) {
-			if err := tx.DeleteBucket(bucketTail); err != nil {
-				return err
-			}
-			if _, err := tx.CreateBucket(bucketTail); err != nil {
-				return err
-			}
-		}
-		return tx.Bucket(bucketHead).Put(keyNow, encodeNow(b.now))
-	})
-	if err != nil {
-		return err
-	}
-	w.mu.Lock()
-	s.now = b.now
-	w.count(b.counts)
-	done := s.sealed(s.now)
-	w.mu.Unlock()
-	if done {
-		return s.seal()
-	}
-	return nil
 }

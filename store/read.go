@@ -88,8 +88,11 @@ func (w *Window) Frames(ctx context.Context, loop string, from, to int64) iter.S
 func (w *Window) parts(ctx context.Context, loop string, from, to int64) ([]part, error) {
 	w.mu.Lock()
 	number, ok := w.numbers[loop]
-	fills := w.fills[number]
+	fills, closed := w.fills[number], w.closed
 	w.mu.Unlock()
+	if closed {
+		return nil, errors.New("window is closed")
+	}
 	if !ok {
 		return nil, nil
 	}

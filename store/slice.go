@@ -49,6 +49,7 @@ type slice struct {
 	db       *bolt.DB
 	gone     bool // removed or set aside
 	readOnly bool
+	full     bool   // has no room to be sealed; used by the flush only
 	used     uint64 // for closing the least recently used; guarded by Window.mu
 
 	now sliceNow // of the last commit; guarded by Window.mu

@@ -27,7 +27,7 @@ type Window struct {
 	loops   atomic.Pointer[loopTable]
 	stripes [64]sync.Mutex // of loopBuffer, by number
 
-	flushMu sync.Mutex // one flush, expiry, registration or close at a time
+	flushMu sync.Mutex // one flush, expiry or close at a time
 	enc     encoder    // of the flush
 	dec     decoder
 	next    uint32 // number of the next flush
@@ -38,7 +38,8 @@ type Window struct {
 	names    []string // by number, as in force
 	numbers  map[string]uint32
 	written  int // names[:written] are in the open slice
-	renamed  bool
+	renames  int // how often a loop was renamed,
+	renamed  int // and how much of that is in the open slice
 	fills    map[uint32][]fillPiece
 	fillSize int64
 	memories map[uint32]memory
@@ -194,8 +195,6 @@ func (w *Window) tell(p Problem) { w.opt.Problem(p) }
 // frames already taken stay. A loop whose name is new and whose Was is known
 // takes over the window of Was, unless Was is itself in the list.
 func (w *Window) Register(loops []Loop) error {
-	w.flushMu.Lock()
-	defer w.flushMu.Unlock()
 	w.mu.Lock()
 	defer w.mu.Unlock()
 	listed := make(map[string]bool, len(loops))
@@ -221,7 +220,7 @@ func (w *Window) Register(loops []Loop) error {
 			delete(w.numbers, l.Was)
 			n, ok = was, true
 			w.names[n], w.numbers[l.Name] = l.Name, n
-			w.renamed = true
+			w.renames++
 		}
 		if !ok {
 			n = uint32(len(w.names))
@@ -424,9 +423,9 @@ func (w *Window) Close() error {
 	if !w.opt.ReadOnly && w.loops.Load().buffers != nil {
 		err = w.flushAll(context.Background())
 	}
-	w.closed = true
 	w.mu.Lock()
 	defer w.mu.Unlock()
+	w.closed = true
 	for _, s := range w.slices {
 		err = errors.Join(err, s.close())
 		s.mu.Lock()

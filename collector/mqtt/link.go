@@ -68,8 +68,9 @@ func (s *source) stayConnected(ctx context.Context) {
 		s.log.Warn("the client id cannot be kept and will differ after a restart; hint: make the data folder writable", "err", err)
 	}
 	wait := s.pace.backoff
-	told := ""
-	for ctx.Err() == nil {
+	var told string
+	var toldAt time.Time
+	for tries := 1; ctx.Err() == nil; tries++ {
 		began := time.Now()
 		watched, err := s.session(ctx, id)
 		if ctx.Err() != nil {
@@ -83,9 +84,14 @@ func (s *source) stayConnected(ctx context.Context) {
 		}
 		problem, hint := s.explain(err, watched, time.Since(began))
 		s.link.set("down", problem, hint, s.now())
-		if problem != told {
-			s.log.Warn("broker: "+problem, "hint", hint)
-			told = problem
+		// Once per kind of trouble, then every ten minutes: the text after the
+		// colon may differ from try to try.
+		if kind, _, _ := strings.Cut(problem, ":"); watched || kind != told || time.Since(toldAt) > 10*time.Minute {
+			s.log.Warn("broker: "+problem, "hint", hint, "tries", tries)
+			told, toldAt = kind, time.Now()
+		}
+		if watched {
+			tries = 0
 		}
 		// Full jitter in the upper half: many boxes must not come back at once.
 		pause := wait/2 + rand.N(wait/2+1)

@@ -1,6 +1,7 @@
 package mqtt
 
 import (
+	"context"
 	"fmt"
 	"io"
 	"net"
@@ -347,4 +348,46 @@ func TestRing(t *testing.T) {
 	if big.bytes > ringBytes || big.n != 4 {
 		t.Errorf("%d messages of %d bytes held", big.n, big.bytes)
 	}
+}
+
+// TestOverload: more comes than can be decoded. The oldest is dropped, what
+// follows is flagged, ticks go on and the end is heard.
+func TestOverload(t *testing.T) {
+	t.Parallel()
+	s := build(t, configs.MQTT{}, Options{}, bind(1, collector.RolePV, "k/pv"))
+	s.ring = newRing(512)
+	r := &recorder{}
+	ctx, cancel := context.WithCancel(context.Background())
+	decoded, stop := make(chan struct{}), make(chan struct{})
+	go func() { s.decode(ctx, r); close(decoded) }()
+	var putting sync.WaitGroup
+	for range 2 {
+		putting.Go(func() {
+			for {
+				select {
+				case <-stop:
+					return
+				default:
+					s.ring.put(message{"k/pv", []byte("1"), false, time.Now().UnixMilli()})
+				}
+			}
+		})
+	}
+	eventually(t, "ticks under load", func() bool { return len(r.tickList()) > 3 })
+	eventually(t, "drops are flagged", func() bool {
+		for _, x := range r.of(1, collector.RolePV) {
+			if x.Lost {
+				return s.State().Counts["dropped"] > 0
+			}
+		}
+		return false
+	})
+	cancel()
+	select {
+	case <-decoded:
+	case <-time.After(10 * time.Second):
+		t.Error("the decoder did not hear the end")
+	}
+	close(stop)
+	putting.Wait()
 }

@@ -65,6 +65,7 @@ type source struct {
 	filters []string // what to subscribe to
 	ring    *ring
 	seen    func(*tag, collector.Sample, raw, bool) // probe only: each value, retained ones too
+	each    func(*message)                          // survey only: each message, instead of decoding
 
 	generation atomic.Uint64 // of the connection; messages of older ones are void
 	downAt     atomic.Int64  // last byte of a lost connection, until the decoder has told; 0 = none
@@ -81,6 +82,8 @@ type source struct {
 	lags    lags
 	watched int64 // ms UTC since when all subscriptions stand; 0 = not now
 }
+
+var _ collector.Prober = (*source)(nil)
 
 // pace holds the time constants; tests shorten them.
 type pace struct {
@@ -173,6 +176,13 @@ func (s *source) Run(ctx context.Context, in collector.Intake) error {
 	return nil
 }
 
+// ready is a channel that never blocks a receiver.
+var ready = func() chan struct{} {
+	c := make(chan struct{})
+	close(c)
+	return c
+}()
+
 // decode takes messages from the ring, in order, until ctx ends.
 func (s *source) decode(ctx context.Context, in collector.Intake) {
 	batch := make([]message, 0, 256)
@@ -195,13 +205,13 @@ func (s *source) decode(ctx context.Context, in collector.Intake) {
 		}
 		s.mu.Unlock()
 		s.flush(in)
+		wake := s.ring.wake
 		if len(batch) == cap(batch) {
-			continue
+			wake = ready // more waits, but ticks and the end must not starve
 		}
 		select {
 		case <-ctx.Done():
 			return
-		case <-s.ring.wake:
 		case <-beat.C:
 			s.mu.Lock()
 			s.tickGroups()
@@ -210,12 +220,17 @@ func (s *source) decode(ctx context.Context, in collector.Intake) {
 			}
 			s.mu.Unlock()
 			s.flush(in)
+		case <-wake:
 		}
 	}
 }
 
 func (s *source) message(m *message) {
 	s.counts.messages++
+	if s.each != nil {
+		s.each(m)
+		return
+	}
 	if s.spb != nil {
 		s.spb.message(m)
 		return

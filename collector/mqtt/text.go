@@ -120,7 +120,9 @@ func (s *source) place(t *topic, g *tag, path string, hasPath bool) (err error) 
 		}
 	}
 	if !hasPath {
-		path = s.cfg.Value
+		if path = s.cfg.Value; path == "" {
+			return fmt.Errorf("no path says where the value is; hint: set value: PATH for the source, or write %s#PATH", t.name)
+		}
 	}
 	g.slot, err = t.plan.want(path)
 	return err

@@ -433,6 +433,7 @@ func TestConfigurationIsRefused(t *testing.T) {
 		{"payload", configs.MQTT{Payload: "xml"}, "a", "plain, json or sparkplug"},
 		{"zone", configs.MQTT{TimeZone: "Mars/Olympus"}, "a", "Europe/London"},
 		{"time path", configs.MQTT{Payload: "json", Time: "a..b"}, "a#b", "time: path"},
+		{"no value path", configs.MQTT{Payload: "json"}, "a", "set value: PATH"},
 		{"no scheme", configs.MQTT{Broker: "10.1.0.6:8883"}, "a", "mqtts://10.1.0.6:8883"},
 		{"scheme", configs.MQTT{Broker: "ws://10.1.0.6"}, "a", "not supported"},
 		{"user in address", configs.MQTT{Broker: "mqtt://me:pw@10.1.0.6"}, "a", "password_file"},

@@ -14,13 +14,12 @@ import (
 
 // build makes all subscriptions anew on a fresh session.
 func (s *Source) build(ctx context.Context, sess *session) error {
-	var slowed uint64
 	for _, sub := range s.subs {
 		if err := s.buildOne(ctx, sess, sub); err != nil {
 			return err
 		}
 	}
-	var watched uint64
+	var watched, slowed, shortened uint64
 	var refused []string
 	for _, sub := range s.subs {
 		for _, it := range sub.items {
@@ -32,16 +31,23 @@ func (s *Source) build(ctx context.Context, sess *session) error {
 				if it.granted > 2*it.sampling {
 					slowed++
 				}
+				if it.covers < s.pace.queue/2 {
+					shortened++
+				}
 			}
 		}
 	}
 	s.counts.watched.Store(watched)
 	s.counts.slowed.Store(slowed)
+	s.counts.shortened.Store(shortened)
 	if len(refused) > 0 {
 		s.log.Warn("tags cannot be watched; they are asked for again every few minutes", "count", len(refused), "first", refused[0])
 	}
 	if slowed > 0 {
 		s.log.Warn("the server samples tags more slowly than wished", "count", slowed)
+	}
+	if shortened > 0 {
+		s.log.Warn("the server keeps fewer samples than asked for; outages will lose some", "count", shortened, "asked", s.pace.queue)
 	}
 	return nil
 }
@@ -76,7 +82,8 @@ func (s *Source) buildOne(ctx context.Context, sess *session, sub *subscription)
 
 // watchClock monitors the server's CurrentTime in the subscription, as its last
 // item: it always changes, and what it says says what has been delivered. A
-// server that refuses is watched by its publish times instead.
+// server that refuses it, or whose clock stands still, is watched by its publish
+// times instead.
 func (s *Source) watchClock(ctx context.Context, sess *session, sub *subscription) error {
 	got, err := sess.monitor(ctx, sub.id, []*ua.MonitoredItemCreateRequest{{
 		ItemToMonitor: value(ua.NewNumericNodeID(0, id.Server_ServerStatus_CurrentTime)), MonitoringMode: ua.MonitoringModeReporting,
@@ -86,8 +93,9 @@ func (s *Source) watchClock(ctx context.Context, sess *session, sub *subscriptio
 	if err != nil {
 		return fmt.Errorf("watching the server's clock: %w", err)
 	}
-	sub.clock = got[0].StatusCode>>30 == 0
-	if !sub.clock {
+	sub.clock = time.Now()
+	if got[0].StatusCode>>30 != 0 {
+		sub.clock = time.Time{}
 		s.log.Warn("the server's clock (i=2258) cannot be watched; publish times are used instead", "status", statusName(got[0].StatusCode))
 	}
 	return nil
@@ -106,7 +114,8 @@ type outcome struct {
 	it      *item
 	to      target
 	words   map[int64]string
-	granted time.Duration
+	granted time.Duration // sampling
+	covers  time.Duration // by the queue
 	refusal *fault
 }
 
@@ -163,6 +172,7 @@ func (s *Source) create(ctx context.Context, sess *session, sub uint32, out []ou
 		switch {
 		case r.StatusCode>>30 == 0:
 			out[i].granted = time.Duration(r.RevisedSamplingInterval * float64(time.Millisecond))
+			out[i].covers = max(out[i].granted, out[i].it.sampling) * time.Duration(r.RevisedQueueSize)
 		case !handled(i, r.StatusCode):
 			out[i].refusal = s.explain(r.StatusCode)
 		}
@@ -219,7 +229,7 @@ func (s *Source) apply(sub *subscription, got []outcome) {
 	defer s.mu.Unlock()
 	for _, o := range got {
 		it := o.it
-		it.node, it.index, it.words, it.refusal, it.granted = o.to.node, o.to.index, o.words, o.refusal, o.granted
+		it.node, it.index, it.words, it.refusal, it.granted, it.covers = o.to.node, o.to.index, o.words, o.refusal, o.granted, o.covers
 		it.watched = o.refusal == nil
 	}
 	sub.sampling = sub.interval

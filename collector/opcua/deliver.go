@@ -88,7 +88,7 @@ func clockOf(v *ua.DataValue) int64 {
 func (s *Source) tick(in collector.Intake, sub *subscription, m message, clock, arrived int64) {
 	through := sub.pending
 	if clock > 0 {
-		sub.pending = clock
+		sub.pending, sub.clock = clock, time.Now()
 	}
 	switch {
 	case !m.more && !m.again && clock > 0:
@@ -114,6 +114,9 @@ func (s *Source) samples(batch []collector.Sample, it *item, v *ua.DataValue, ar
 	if overflowed(v.Status) {
 		it.lost = true
 		s.counts.overflow.Add(1)
+	}
+	if v.Status != 0 && v.Status < 0x400 {
+		s.counts.oddStatus.Add(1) // a code of an older interface in the low bits: a fault of the server, and good
 	}
 	q := quality(v.Status)
 	x, text := math.NaN(), ""

@@ -37,6 +37,8 @@ var makingPair sync.Mutex
 // needIdentity loads the configured pair, or the one in the key folder, which
 // is made when there is none. It is not needed for an unsecured, anonymous link.
 func (s *Source) needIdentity() error {
+	s.pairing.Lock() // a check may run beside the watch
+	defer s.pairing.Unlock()
 	if s.own != nil || (s.cfg.Security == "None" && s.cfg.User == "") {
 		return nil
 	}

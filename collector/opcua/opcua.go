@@ -65,9 +65,10 @@ type Source struct {
 	now   func() time.Time
 	pace  pace
 
-	subs   []*subscription // fixed by the bindings; their state outlives connections
-	own    *identity       // own certificate and key, nil while not needed
-	counts counts
+	subs    []*subscription // fixed by the bindings; their state outlives connections
+	own     *identity       // own certificate and key, nil while not needed
+	pairing sync.Mutex      // held while own is loaded or made
+	counts  counts
 
 	mu       sync.Mutex  // guards all below, and the refusals of items
 	sessions []time.Time // made within the last minute

@@ -22,7 +22,7 @@ type subscription struct {
 	interval  time.Duration // publishing
 	keepAlive time.Duration
 	sampling  time.Duration // slowest granted
-	clock     bool          // CurrentTime is watched
+	clock     time.Time     // last value of CurrentTime, monotonic
 
 	seq     sequence
 	heard   time.Time // last answer, monotonic
@@ -45,6 +45,7 @@ type item struct {
 	index   int
 	words   map[int64]string // of a mode's values, as the server has them
 	granted time.Duration    // sampling
+	covers  time.Duration    // what the granted queue covers at that sampling
 	watched bool
 	refusal *fault // why it is not watched; guarded by Source.mu
 

@@ -20,7 +20,9 @@ type counts struct {
 	strays                              atomic.Uint64 // values or answers that belong to nothing known
 	attempts, sessions, fresh, resumed  atomic.Uint64
 	throttled, askedAgain               atomic.Uint64
-	watched, slowed                     atomic.Uint64 // gauges: items, and those sampled more slowly than wished
+	oddStatus                           atomic.Uint64
+	watched                             atomic.Uint64 // gauge: items
+	slowed, shortened                   atomic.Uint64 // gauges: items sampled more slowly, or queued less, than wished
 	roundTrip                           atomic.Uint64 // gauge: ms of the last publish request
 }
 
@@ -31,9 +33,9 @@ func (c *counts) all() map[string]uint64 {
 		"republished": c.republished.Load(), "overflow": c.overflow.Load(),
 		"bad": c.bad.Load(), "uncertain": c.uncertain.Load(),
 		"server_time": c.serverTime.Load(), "arrival_time": c.arrivalTime.Load(), "clock_steps": c.clockSteps.Load(),
-		"strays": c.strays.Load(), "attempts": c.attempts.Load(), "sessions": c.sessions.Load(),
+		"strays": c.strays.Load(), "odd_status": c.oddStatus.Load(), "attempts": c.attempts.Load(), "sessions": c.sessions.Load(),
 		"fresh": c.fresh.Load(), "resumed": c.resumed.Load(), "throttled": c.throttled.Load(), "asked_again": c.askedAgain.Load(),
-		"watched": c.watched.Load(), "slowed": c.slowed.Load(), "publish_ms": c.roundTrip.Load(),
+		"watched": c.watched.Load(), "slowed": c.slowed.Load(), "short_queues": c.shortened.Load(), "publish_ms": c.roundTrip.Load(),
 	}
 }
 

@@ -159,8 +159,18 @@ func oddTypes(t *testing.T, p *peer) {
 func TestLimitsProbeSurveyHistory(t *testing.T) {
 	t.Parallel()
 	p := startPeer(t, "--loops", "30", "--rate", "2", "--max-per-call", "7", "--max-browse", "2", "--history", "--flat", "--host", "plc-7.kestrel-fen.example")
-	w := run(t, plainConfig(p.url), bind(30), nil)
+	// Six subscriptions of five loops each: five times four tags and the clock.
+	w := run(t, plainConfig(p.url), bind(30), func(s *Source) { s.subs = plan(bind(30), 3, 21) })
 	w.flows(t, 20*time.Second)
+	eventually(t, 10*time.Second, "each life group ticks", func() bool {
+		w.in.mu.Lock()
+		defer w.in.mu.Unlock()
+		ticking := map[collector.Group]bool{}
+		for _, tick := range w.in.ticks {
+			ticking[tick.Group] = tick.Alive
+		}
+		return len(ticking) == 6 && len(w.in.joined) == 6
+	})
 	if st := w.State(); st.Counts["watched"] != 120 || len(st.Refused) != 0 {
 		t.Errorf("state %+v, want 120 tags watched", st)
 	}

@@ -58,7 +58,7 @@ func (s *Source) enter(ctx context.Context) (door, *uasc.SessionConfig, error) {
 	}
 	if u, err := url.Parse(offer.EndpointURL); err == nil {
 		if own, _ := url.Parse(s.cfg.Endpoint); own != nil && u.Hostname() != own.Hostname() {
-			s.log.Debug("the server announces another host name; the configured one is dialled", "announced", u.Host)
+			s.log.Info("the server announces another host name; the configured one is dialled", "announced", u.Host)
 		}
 	}
 	app := &ua.ApplicationDescription{ApplicationURI: "urn:midwatch", ProductURI: "urn:midwatch",

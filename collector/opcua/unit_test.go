@@ -311,7 +311,7 @@ func TestModeCodes(t *testing.T) {
 func TestTicksSayWhatWasDelivered(t *testing.T) {
 	s, _ := sampler(t, collector.Binding{Loop: 1, Role: collector.RolePV, Address: "ns=2;s=x"})
 	sub := s.subs[0]
-	sub.sampling, sub.clock = time.Second, true
+	sub.sampling = time.Second
 	in := &catch{}
 	at := func(sec int64) message {
 		return message{NotificationMessage: &ua.NotificationMessage{NotificationData: []*ua.ExtensionObject{{Value: &ua.DataChangeNotification{

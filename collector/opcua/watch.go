@@ -130,7 +130,10 @@ func (w *watcher) deliverAll(sub *subscription, ready []message) error {
 
 // byPublishTime makes ticks for a server whose clock cannot be watched.
 func (w *watcher) byPublishTime(sub *subscription, m *ua.NotificationMessage) {
-	if t := millis(m.PublishTime); !sub.clock && t > 0 && !sub.seq.missing() {
+	if time.Since(sub.clock) < w.silence {
+		return
+	}
+	if t := millis(m.PublishTime); t > 0 && !sub.seq.missing() {
 		w.tell(w.in, sub, t-(sub.sampling+sub.interval).Milliseconds(), w.now().UnixMilli())
 	}
 }

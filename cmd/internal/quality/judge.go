@@ -3,6 +3,7 @@ package quality
 import (
 	"math"
 	"runtime"
+	"slices"
 	"sort"
 	"sync"
 
@@ -190,15 +191,6 @@ func (h *listener) episodes() []*episode {
 	return all
 }
 
-func hasKind(k []detect.Kind, x detect.Kind) bool {
-	for _, y := range k {
-		if x == y {
-			return true
-		}
-	}
-	return false
-}
-
 // aboutData says whether a kind is about the data, not the loop.
 func aboutData(k detect.Kind) bool {
 	switch k {
@@ -230,7 +222,7 @@ func scoreFindings(s *scenario, h *listener, res *Result) {
 		if aboutData(k) || e.raised > end {
 			continue
 		}
-		own := hasKind(t.kinds, k)
+		own := slices.Contains(t.kinds, k)
 		member := t.member < 0 || len(s.rigs) == 1 || e.last.Loop == s.rigs[t.member].name || k == detect.SharedOscillation
 		if t.early > 0 && own && e.raised < onset && e.raised >= onset-int64(t.early*1000) {
 			e.raised = onset
@@ -245,8 +237,8 @@ func scoreFindings(s *scenario, h *listener, res *Result) {
 			}
 		}
 		switch {
-		case (res.Healthy || e.raised >= onset && !own) && (hasKind(t.also, k) || trulyClipped(s, k)):
-		case res.Healthy || e.raised < onset || !own && !hasKind(t.also, k):
+		case (res.Healthy || e.raised >= onset && !own) && (slices.Contains(t.also, k) || trulyClipped(s, k)):
+		case res.Healthy || e.raised < onset || !own && !slices.Contains(t.also, k):
 			f := e.last
 			f.At = e.raised
 			res.Extra = append(res.Extra, f)
@@ -266,9 +258,9 @@ func scoreFindings(s *scenario, h *listener, res *Result) {
 			}
 			c := e.last.Cause
 			switch {
-			case c == detect.NoCause || c == detect.Undetermined || hasCause(t.soft, c):
+			case c == detect.NoCause || c == detect.Undetermined || slices.Contains(t.soft, c):
 				open = true
-			case hasCause(t.causes, c):
+			case slices.Contains(t.causes, c):
 				right = true
 				res.Named = append(res.Named, Claim{e.last.Confidence, true})
 			default:
@@ -295,15 +287,6 @@ func trulyClipped(s *scenario, k detect.Kind) bool {
 	l := s.rigs[0]
 	return l.clipLongest > 2*l.recovery && (k == detect.OutputSaturation || k == detect.SustainedOffset) ||
 		l.endLongest > 60 && k == detect.PVAtRangeEnd
-}
-
-func hasCause(c []detect.Cause, x detect.Cause) bool {
-	for _, y := range c {
-		if x == y {
-			return true
-		}
-	}
-	return false
 }
 
 func scoreTuning(s *scenario, h *listener, watches []*detect.Watch, res *Result) {

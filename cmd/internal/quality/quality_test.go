@@ -83,7 +83,7 @@ func TestRecordedRuns(t *testing.T) {
 	}
 	if sc.Found < minRecordedFound || sc.False > maxRecordedFalse || sc.ForbiddenCauses > maxForbiddenCauses || sc.CauseWrong > sc.CauseRight {
 		var b strings.Builder
-		if err := ScoreRecorded(&b, dir, true); err != nil {
+		if err := ScoreRecorded(&b, dir); err != nil {
 			t.Fatal(err)
 		}
 		t.Errorf("recorded runs out of bounds:\n%s", b.String())

@@ -22,19 +22,13 @@ import (
 
 // recordedTruth is a row of the recorded runs' truth.csv.
 type recordedTruth struct {
-	file, loop   string
-	onset        int64
-	expect       []string // kinds, or none, or any
-	cause        []string
-	also         []string
-	notTuning    bool // no cause on its own tuning may be named
-	note         string
-	hasOnset     bool
-	end          int64
-	causeIsSaid  bool
-	expectNone   bool
-	expectAny    bool
-	expectOrNone bool
+	file, loop          string
+	onset               int64
+	expect, cause, also []string
+	notTuning           bool // no cause on its own tuning may be named
+	expectNone          bool
+	expectAny           bool
+	expectOrNone        bool
 }
 
 // RecordedScore is what was made of the recorded runs.
@@ -150,20 +144,13 @@ func readTruth(path string) ([]recordedTruth, error) {
 	}
 	var out []recordedTruth
 	for _, m := range rows {
-		t := recordedTruth{file: m["file"], loop: m["loop"], expect: words(m["expect"]), also: words(m["also_ok"]), note: m["note"]}
+		t := recordedTruth{file: m["file"], loop: m["loop"], expect: words(m["expect"]), also: words(m["also_ok"])}
 		if m["onset"] != "" {
 			at, err := time.Parse(time.RFC3339, m["onset"])
 			if err != nil {
 				return nil, fmt.Errorf("%s: %w", path, err)
 			}
-			t.onset, t.hasOnset = at.UnixMilli(), true
-		}
-		if m["end"] != "" {
-			at, err := time.Parse(time.RFC3339, m["end"])
-			if err != nil {
-				return nil, fmt.Errorf("%s: %w", path, err)
-			}
-			t.end = at.UnixMilli()
+			t.onset = at.UnixMilli()
 		}
 		t.expectAny = slices.Contains(t.expect, "any")
 		t.expectOrNone = slices.Contains(t.expect, "none") || slices.Contains(t.also, "none")
@@ -396,7 +383,7 @@ func sharedAllowed(truths []recordedTruth, file string, members []string) bool {
 }
 
 // ScoreRecorded writes the score of the recorded runs.
-func ScoreRecorded(w io.Writer, dir string, verbose bool) error {
+func ScoreRecorded(w io.Writer, dir string) error {
 	sc, err := Recorded(dir)
 	if err != nil {
 		return err

@@ -49,7 +49,6 @@ type rig struct {
 	onsetS      float64
 	turns       int // reversals of the stem after the onset
 	turnDir     float64
-	clipped     float64 // s of OP at a limit after the onset
 	clipRun     float64 // s, of the stretch now
 	clipLongest float64 // s, over the whole run, law active
 	endRun      float64 // s, of PV at an end of its range now
@@ -147,9 +146,6 @@ func (l *rig) step(epoch int64, t float64) (collector.Frame, bool) {
 		if d := l.valve.seat - before; l.valve.kind != free && d*l.turnDir <= 0 && d != 0 {
 			l.turnDir = math.Copysign(1, d)
 			l.turns++
-		}
-		if u <= l.law.lo || u >= l.law.hi {
-			l.clipped += l.h
 		}
 	}
 	if !l.law.manual && (u <= l.law.lo || u >= l.law.hi) {

@@ -15,7 +15,6 @@ type load struct {
 	rampRate    float64 // %/s, on while not 0
 	wave        wave    // from outside
 	extra       float64 // set by other loops of the scene
-	flowWave    bool
 	bias        float64
 	ouState     float64
 	ouA, ouS    float64
@@ -26,7 +25,6 @@ type load struct {
 type wave struct {
 	amplitude, period, phase float64
 	square                   bool
-	drift                    float64 // relative random wander of the period
 }
 
 func (w *wave) at(t float64) float64 {
@@ -135,7 +133,6 @@ type sensor struct {
 	arA, arS float64
 	last     float64
 	nextHold float64
-	bias     float64
 }
 
 func (s *sensor) start(h, y float64, r *rand.Rand) {
@@ -164,7 +161,7 @@ func (s *sensor) step(t, h, y float64, r *rand.Rand) float64 {
 		}
 		s.nextHold = t + s.hold
 	}
-	y += s.sigma*n + s.bias
+	y += s.sigma * n
 	if s.spikes > 0 && r.Float64() < s.spikes*h {
 		y += s.spike * (2*r.Float64() - 1)
 	}

@@ -42,7 +42,7 @@ func main() {
 	case *list:
 		quality.List(os.Stdout)
 	case *te != "":
-		err = quality.ScoreRecorded(os.Stdout, *te, *verbose)
+		err = quality.ScoreRecorded(os.Stdout, *te)
 	case *dump != "":
 		if err = os.MkdirAll(*dump, 0o755); err == nil {
 			err = quality.Dump(o, *index, filepath.Clean(*dump))

@@ -3,10 +3,101 @@ package quality
 import (
 	"math"
 	"math/rand/v2"
+	"slices"
 
 	"midwatch/collector"
 	"midwatch/detect"
 )
+
+// shared: several loops swing together, from an outside wave or from a loop
+// whose valve sticks.
+func shared(stickyRoot bool) func(*rand.Rand, float64) *scenario {
+	return func(r *rand.Rand, _ float64) *scenario {
+		return retry(func() *scenario {
+			n := 3 + r.IntN(4)
+			tau := logBetween(r, 15, 600)
+			var rigs []*rig
+			base := 0.0
+			for i := range n {
+				w := wish{minS: tau * 0.5, maxS: tau * 2, shapes: []shape{lagShape, twoLags, deadTime, highOrder}}
+				if i > 0 {
+					w.shapes = append(w.shapes, level)
+				}
+				rigs = append(rigs, drawRig(r, "loop"+string(rune('a'+i)), w))
+				base = math.Max(base, rigs[i].baseline(r))
+			}
+			h := math.Inf(1)
+			for _, l := range rigs {
+				h = math.Min(h, l.h)
+			}
+			for _, l := range rigs { // one clock for all
+				l.h = h
+				l.measure()
+			}
+			root := rigs[0]
+			t := truth{kinds: kinds{detect.SharedOscillation}, also: kinds{detect.SustainedOscillation, detect.ValveStickingKind},
+				cycles: true, member: -1, forbid: noTuningCause}
+			s := &scenario{rigs: rigs, truth: t}
+			s.truth.onset = base
+			if stickyRoot {
+				st := logBetween(r, 3, 8)
+				j := st * between(r, 0.4, 1)
+				if root.law.kc*root.sensor.sigma > 0.2*st || root.k*j < 10*root.sensor.sigma {
+					return nil
+				}
+				root.load.ou = math.Min(root.load.ou, 0.08*st)
+				root.load.stepEvery *= 4
+				root.setOnset(base, func(l *rig) { l.valve.kind, l.valve.fs, l.valve.fd = twoParam, (st+j)/2, (st-j)/2 })
+				gains := make([]float64, n)
+				for i := range gains {
+					gains[i] = between(r, 0.6, 2) * rigs[i].perPV * pick(r, -1.0, 1)
+				}
+				s.couple = func(_ float64, rigs []*rig) {
+					d := rigs[0].y - rigs[0].spNow
+					for i := 1; i < len(rigs); i++ {
+						rigs[i].load.extra = gains[i] * d
+					}
+				}
+				s.truth.unit = 4 * root.pu
+				s.truth.causes = causes{detect.ValveSticking}
+				s.truth.forbid = func(s *scenario, loop string, c detect.Cause) bool {
+					return noTuningCause(s, loop, c) || c == detect.ValveSticking && loop != "" && loop != s.rigs[0].name
+				}
+				s.truth.soft = causes{detect.OutsideDisturbance}
+				s.truth.subtle = rmsUnder(1.8)
+			} else {
+				period := 0.0
+				for _, l := range rigs {
+					period = math.Max(period, l.pu*between(r, 1.5, 5))
+				}
+				for _, l := range rigs {
+					if period < 8*l.rec.every {
+						return nil
+					}
+					a := math.Max(between(r, 0.6, 3), 5*l.sensor.sigma) / loadGain(l, period)
+					if a > 20 {
+						return nil
+					}
+					ph := between(r, 0, 6.28)
+					l.setOnset(base, func(l *rig) { l.load.wave = wave{amplitude: a, period: period, phase: ph} })
+				}
+				s.truth.unit = period
+				s.truth.causes = causes{detect.OutsideDisturbance}
+			}
+			s.duration = base + 80*s.truth.unit
+			return s
+		})
+	}
+}
+
+// noTuningCause: nobody's tuning is at fault.
+func noTuningCause(_ *scenario, _ string, c detect.Cause) bool {
+	switch c {
+	case detect.ResetTooShort, detect.GainTooHigh, detect.ResetTooLong, detect.GainTooLow:
+		return true
+	}
+	return false
+}
 
 // cascadeOf draws an inner flow loop and an outer loop that sets its SP; ratio is
 // how much slower the outer one is at least. It is nil where the draw does not fit.
@@ -33,7 +124,7 @@ func cascadeOf(r *rand.Rand) *scenario {
 	}
 	outer.row.Inner, outer.row.Element = "inner", "inner-loop"
 	inner.row.NormalMode = "cascade"
-	inner.setCascade()
+	inner.mode = collector.Cascade
 	if !math.IsNaN(outer.row.GainPct) {
 		enter(outer, outer.row, 1)
 	}
@@ -46,8 +137,6 @@ func cascadeOf(r *rand.Rand) *scenario {
 	}
 	return s
 }
-
-func (l *rig) setCascade() { l.mode = collector.Cascade }
 
 func cascadeSound(r *rand.Rand, days float64) *scenario {
 	s := retry(func() *scenario { return cascadeOf(r) })
@@ -70,7 +159,7 @@ func cascadeGrowing(r *rand.Rand, _ float64) *scenario {
 			return nil
 		}
 		right := knobs(l, kc)
-		if !has(right, detect.ResetTooShort) {
+		if !slices.Contains(right, detect.ResetTooShort) {
 			return nil
 		}
 		base := l.baseline(r)

@@ -1,0 +1,122 @@
+package daemon
+
+import (
+	"bytes"
+	"encoding/gob"
+	"fmt"
+
+	"midwatch/collector"
+	"midwatch/configs"
+	"midwatch/detect"
+)
+
+// gathering hands the evidence of all lanes to the site detectors, slot by slot
+// of data time, when the lanes have all passed the end of the slot. Evidence of
+// later slots waits here, so that a lane that is ahead changes nothing.
+type gathering struct {
+	loops   []*configs.Loop // by id; nil: gone
+	sites   *detect.Sites
+	waiting map[int64][]record // by end of the slot
+	done    int64              // end of the last slot judged, ms UTC; 0 none
+}
+
+func newGathering(loops []*configs.Loop) *gathering {
+	return &gathering{loops: loops, sites: detect.NewSites(present(loops)), waiting: map[int64][]record{}}
+}
+
+// present fills the places of loops that are gone, for whoever indexes by id.
+func present(loops []*configs.Loop) []*configs.Loop {
+	out := make([]*configs.Loop, len(loops))
+	for i, l := range loops {
+		if out[i] = l; l == nil {
+			out[i] = configs.NewLoop("")
+		}
+	}
+	return out
+}
+
+func (g *gathering) record(rs []record) {
+	for _, r := range rs {
+		if r.Slot > g.done {
+			g.waiting[r.Slot] = append(g.waiting[r.Slot], r)
+		}
+	}
+}
+
+// advance judges every slot that ends at or before t, the time up to which the
+// evidence is complete.
+func (g *gathering) advance(t int64, emit func(*detect.Finding)) {
+	if g.done == 0 {
+		first := int64(0)
+		for end := range g.waiting {
+			if first == 0 || end < first {
+				first = end
+			}
+		}
+		if first == 0 || first > t {
+			return
+		}
+		g.done = first - detect.SiteSlotMs
+	}
+	for end := g.done + detect.SiteSlotMs; end <= t; end += detect.SiteSlotMs {
+		for _, r := range g.waiting[end] {
+			g.sites.Record(r.id, r.Evidence)
+		}
+		delete(g.waiting, end)
+		g.sites.Slot(end, emit)
+		g.done = end
+	}
+}
+
+// gatheringMemory is what a gathering keeps over a restart; loops by name.
+type gatheringMemory struct {
+	Done    int64
+	Sites   []byte
+	Waiting []waitingEvidence
+}
+
+type waitingEvidence struct {
+	Loop     string
+	Evidence detect.Evidence
+}
+
+// save keeps what the site detectors hold and the evidence that waits.
+func (g *gathering) save() ([]byte, error) {
+	m := gatheringMemory{Done: g.done, Sites: g.sites.Save(nil)}
+	for _, rs := range g.waiting {
+		for _, r := range rs {
+			if l := g.loops[r.id]; l != nil {
+				m.Waiting = append(m.Waiting, waitingEvidence{l.Name, r.Evidence})
+			}
+		}
+	}
+	var b bytes.Buffer
+	if err := gob.NewEncoder(&b).Encode(m); err != nil {
+		return nil, fmt.Errorf("memory of the site detectors: %w", err)
+	}
+	return b.Bytes(), nil
+}
+
+// load restores what save kept; loops that are gone are left out.
+func (g *gathering) load(b []byte) error {
+	var m gatheringMemory
+	if err := gob.NewDecoder(bytes.NewReader(b)).Decode(&m); err != nil {
+		return fmt.Errorf("memory of the site detectors: %w", err)
+	}
+	if err := g.sites.Load(m.Sites); err != nil {
+		return fmt.Errorf("memory of the site detectors: %w", err)
+	}
+	ids := map[string]collector.LoopID{}
+	for i, l := range g.loops {
+		if l != nil {
+			ids[l.Name] = collector.LoopID(i)
+		}
+	}
+	g.done = m.Done
+	for _, w := range m.Waiting {
+		if id, ok := ids[w.Loop]; ok {
+			g.record([]record{{id, w.Evidence}})
+		}
+	}
+	return nil
+}
