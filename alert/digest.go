@@ -83,7 +83,8 @@ func (d *Desk) byRank(items []Item) {
 }
 
 // digests sends what is due of the daily and the weekly one. Without a daily one,
-// what waits goes out when work begins.
+// what waits goes out in working hours, once an hour at most; what is of note only
+// goes along with something that is more.
 func (d *Desk) digests(now time.Time) error {
 	local := now.In(d.set.Zone)
 	ms := now.UnixMilli()
@@ -128,10 +129,11 @@ func (d *Desk) digests(now time.Time) error {
 			return err
 		}
 	}
-	if d.set.daily != nil || len(m.waiting) == 0 || !within(d.set.working(), local) {
+	if d.set.daily != nil || !d.pressing() || !within(d.set.working(), local) || ms-m.meta.Waiting < time.Hour.Milliseconds() && m.meta.Waiting <= ms {
 		return nil
 	}
 	return d.update(func(b *batch) error {
+		m.meta.Waiting = ms
 		by := map[string][]Item{}
 		for _, w := range m.waiting {
 			by[w.Sender] = append(by[w.Sender], w.Item)
@@ -146,6 +148,11 @@ func (d *Desk) digests(now time.Time) error {
 		}
 		return b.dropWaiting()
 	})
+}
+
+// pressing says whether something waits that is more than of note.
+func (d *Desk) pressing() bool {
+	return slices.ContainsFunc(d.mem.waiting, func(w waiting) bool { return w.HeldBack || w.Urgency != Note })
 }
 
 func (b *batch) dropWaiting() error {

@@ -15,7 +15,7 @@ import (
 type meta struct {
 	Daily    int64  `json:"daily,omitempty"`  // when the last one was made
 	Weekly   int64  `json:"weekly,omitempty"` // when the last one was made
-	Waiting  int64  `json:"waiting,omitempty"`
+	Waiting  int64  `json:"waiting,omitempty"` // when what waits was last sent without a daily digest
 	Standing int64  `json:"standing,omitempty"` // when the list was made
 	Seq      uint64 `json:"seq"`                // of the last delivery
 }
@@ -97,8 +97,12 @@ func (d *Desk) nextWake(now time.Time) time.Time {
 	local := now.In(d.set.Zone)
 	if d.set.daily != nil {
 		at(d.set.daily.next(local).UnixMilli())
-	} else if len(d.mem.waiting) > 0 {
-		at(nextChange(d.set.working(), local).UnixMilli())
+	} else if d.pressing() {
+		if within(d.set.working(), local) {
+			at(d.mem.meta.Waiting + time.Hour.Milliseconds())
+		} else {
+			at(nextChange(d.set.working(), local).UnixMilli())
+		}
 	}
 	if d.set.weekly != nil {
 		at(d.set.weekly.next(local).UnixMilli())
@@ -222,11 +226,12 @@ func (b *batch) routeStep(s *step, local time.Time, people map[string][]candidat
 func (b *batch) routePerson(s *step, it Item, to string, r *configs.Route, local time.Time, people map[string][]candidate) error {
 	d := b.d
 	if e := d.mem.episodes[it.Episode]; e != nil {
-		switch e.State() {
+		switch state := e.State(); state {
 		case Shelved, SuppressedByDesign, OutOfService, Held, Folded:
-			// Somebody decided that, or nobody can act on it: the digest shows it.
+			// Somebody decided that, or nobody can act on it. The digest lists it
+			// as open, and the end of shelving tells of it.
 			if it.Event != detect.Cleared {
-				return b.wait(to, it, false)
+				return b.markTold(it.Episode, it.Step, to, string(state))
 			}
 		}
 	}

@@ -257,7 +257,7 @@ func (d *Desk) renderMany(m *Message, x *delivery) {
 		}
 	}
 	m.Subject = d.subject(m.Urgency, false, title)
-	m.TextShort = cut(clean(d.set.Site)+": "+title, 145) + " Advisory only."
+	m.TextShort = cut(clean(d.set.Site)+": "+title, 143) + ". Advisory only."
 	body.foot("", m.Key, nil)
 	m.Text, m.HTML = body.text(m), body.html(m)
 }
@@ -276,7 +276,8 @@ func (d *Desk) itemLines(items []Item, n int) []string {
 		s := clean(subjectName(&it.Finding)) + ": " + eventWord(it) + kindWord(it.Finding.Kind) + more(len(it.Loops)) + ", since " + short(it.Since, d.set.Zone)
 		if it.Event != detect.Cleared {
 			if at, limit, ok := limitAt(&it.Finding); ok {
-				s += "; " + timeLeft(at, limit, it.At, d.set.Zone)
+				// Lists are read later than messages: the time itself, not what is left.
+				s += "; " + limit + " expected " + short(at, d.set.Zone)
 			}
 			if w := causeWords[it.Finding.Cause]; w != "" {
 				s += "; perhaps " + w
@@ -287,9 +288,14 @@ func (d *Desk) itemLines(items []Item, n int) []string {
 	return out
 }
 
-// common names what all loops share: the source, the area or the service; empty
-// when nothing.
+// common names what all loops share and others of the site do not: source, area,
+// service; empty when nothing.
 func (d *Desk) common(loops []string) string {
+	in := map[string]bool{}
+	for _, n := range loops {
+		in[n] = true
+	}
+	var out []string
 	for _, c := range []struct {
 		word string
 		of   func(*configs.Loop) string
@@ -298,26 +304,27 @@ func (d *Desk) common(loops []string) string {
 		{"in area ", func(l *configs.Loop) string { return l.Area }},
 		{"of service ", func(l *configs.Loop) string { return l.Service }},
 	} {
-		value, all := "", true
-		others := false // a factor that every loop of the site has tells nothing
-		in := map[string]bool{}
+		values, others := map[string]bool{}, map[string]bool{}
 		for _, n := range loops {
-			in[n] = true
-			l := d.set.loops[n]
-			if l == nil || c.of(l) == "" || value != "" && c.of(l) != value {
-				all = false
-				break
+			if l := d.set.loops[n]; l != nil {
+				values[c.of(l)] = true
+			} else {
+				values[""] = true
 			}
-			value = c.of(l)
 		}
 		for _, l := range d.set.Loops {
-			others = others || !in[l.Name] && c.of(l) != value
+			if !in[l.Name] {
+				others[c.of(l)] = true
+			}
 		}
-		if all && value != "" && len(loops) > 1 && others {
-			return c.word + clean(value)
+		for v := range values {
+			// A factor that every loop of the site has tells nothing.
+			if len(values) == 1 && v != "" && len(loops) > 1 && len(others) > 0 && !(len(others) == 1 && others[v]) {
+				out = append(out, c.word+clean(v))
+			}
 		}
 	}
-	return ""
+	return strings.Join(out, ", ")
 }
 
 func where(area string) string {

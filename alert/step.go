@@ -195,7 +195,9 @@ func (d *Desk) rank(it *Item) float64 {
 			r -= 2e5
 		}
 	}
-	if at, _, ok := limitAt(&it.Finding); ok {
+	if _, blind := deaf(&it.Finding); blind || it.Finding.Kind == detect.OutputSaturation {
+		r += 1e5 // reached already
+	} else if at, _, ok := limitAt(&it.Finding); ok {
 		r += 1e5 / (1 + math.Max(0, float64(at-it.At))/3.6e6)
 	}
 	if collects(it.Finding.Kind) {

@@ -142,7 +142,7 @@ func measureLines(f *detect.Finding, unit string) []string {
 			continue
 		}
 		name, value := m.Name, string(detect.AppendSig(nil, m.Value))
-		for _, u := range []struct{ suffix, unit string }{{"_pct", " %"}, {"_deg", "°"}, {"_pv", " " + unit}, {"_per_cycle", " per cycle"}} {
+		for _, u := range []struct{ suffix, unit string }{{"_pct", " %"}, {"_deg", "°"}, {"_pv", " " + clean(unit)}, {"_per_cycle", " per cycle"}} {
 			if n, ok := strings.CutSuffix(name, u.suffix); ok {
 				name, value = n, strings.TrimSpace(value+u.unit)
 				break

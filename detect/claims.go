@@ -11,7 +11,7 @@ import (
 
 func claimGrowing(w *Watch) claim {
 	o := &w.s.Osc
-	return claim{o.Grow && !w.led(), o.Since, o.Cause, o.Also, o.Conf, float32(o.Amp)}
+	return claim{o.Grow && w.s.Track.PVSwing > 0 && !w.led(), o.Since, o.Cause, o.Also, o.Conf, float32(o.Amp)}
 }
 
 func claimSustained(w *Watch) claim {

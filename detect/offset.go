@@ -299,7 +299,7 @@ func (w *Watch) offsetCause(kc float64, known bool, rt, d, push, lo, hi float64,
 		return IntegralMissing, 0.9, 0
 	case w.crossesSplit(lo, hi):
 		return Undetermined, 0.5, 4 * 3600
-	case math.Abs(dop) > 20 && lo > 1 && hi < 99 && math.Abs(ie/span) > 0.9*math.Abs(float64(a.Int/a.T)) && math.Abs(ie/span) > 1 && push*dop > 0:
+	case math.Abs(dop) > 30 && d > 8*rt && lo > 1 && hi < 99 && math.Abs(ie/span) > 0.9*math.Abs(float64(a.Int/a.T)) && math.Abs(ie/span) > 1 && push*dop > 0:
 		o.NotFollow = true
 		return FinalElementNotFollowing, 0.85, 0
 	case o.NotFollow:
@@ -310,7 +310,7 @@ func (w *Watch) offsetCause(kc float64, known bool, rt, d, push, lo, hi float64,
 	case rt > 0 && implied < 3*rt:
 		return OutsideDisturbance, 0.6, math.Max(8*3600, 12*rt) // the load outruns the integral, which does what it must
 	}
-	return c, conf, math.Max(2*3600, 8*rt)
+	return c, conf, math.Max(6*3600, 20*rt)
 }
 
 func stepSaturation(w *Watch) {

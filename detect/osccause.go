@@ -74,9 +74,9 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 	if rk > 0 && rt > 0 {
 		between := phi > 25 && phi < 65
 		switch lk, lt := math.Log(rk), math.Log(rt); {
-		case lt < -0.7 && math.Abs(lk) < 0.25: // plainly the reset was shortened, and only it
+		case lt < -0.7 && math.Abs(lk) < 0.25 && !(phi < 4): // plainly the reset was shortened, and only it
 			byPhi, also = ResetTooShort, [2]Cause{GainTooHigh}
-		case lk > 0.5 && math.Abs(lt) < 0.25:
+		case lk > 0.5 && math.Abs(lt) < 0.25 && !(phi > 55):
 			byPhi, also = GainTooHigh, [2]Cause{ResetTooShort}
 		case !between:
 		case lk > 0.22 && math.Abs(lt) < 0.5*lk:
@@ -98,6 +98,11 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 	}
 	sh := w.shapes()
 	si := w.stickIndex(sh)
+	if d := math.Abs(sh.phiDeg - phi); sh.looks >= 3 && o.Grow && d > 15 && byPhi != Undetermined {
+		// Directly read and fitted lag disagree: a hidden filter or late OP; the fit
+		// cannot be trusted to name a knob.
+		byPhi, also = Undetermined, [2]Cause{GainTooHigh, ResetTooShort}
+	}
 	changed := (rk > 1.4 && rt < 2 || rt > 0 && rt < 0.65) && !(si > 0.5)
 	o.Changed = o.Changed || changed
 

@@ -120,6 +120,10 @@ func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 		least = math.Max(3*sigma, 1)
 	}
 	grow := false
+	if o.Sus && o.Evals > 24 && tip < 1.8*o.AmpLo {
+		b.Conf = 0 // what has long been there must really have grown
+		return
+	}
 	if w.violent(level, b) {
 		grow = true
 		b.Conf = max(b.Conf, growConfirm-1)

@@ -31,15 +31,12 @@ func (w *Watch) judgeSlow() {
 	}
 	if nr == 3 {
 		m, lo := num.Median(ratios[:3]), math.Min(ratios[0], math.Min(ratios[1], ratios[2]))
-		if m > 3.5*w.strict && lo > 2 {
-			own = 1
-		}
 		if w.madeSlower(r.recent(2).T0) && m > 1.8*w.strict && lo > 1.3 {
 			own = 1
 		}
-		if !r.recent(0).Cut && ratios[0] > 4.5 && ratios[1] > 4.5 && ratios[2] > 1.5 {
-			own = 1
-		}
+	}
+	if own == 0 && w.slowByHistory(n) {
+		own = 1
 	}
 	area := 0
 	var ar [recRing]float64
@@ -81,6 +78,37 @@ func (w *Watch) judgeSlow() {
 		}
 	}
 	w.slowCause(own, area, shape, durs[:3])
+}
+
+// slowByHistory compares with the loop's own usual recovery. Where the tuning in
+// service is known not to have changed, ramps and second disturbances are the
+// likelier reason, and all of the last five must agree.
+func (w *Watch) slowByHistory(n int) bool {
+	r := &w.s.Recov
+	need, over, least := 4, 3.0, 4.0
+	k0, t0, okb := w.usualTuning(r.recent(min(n, 5) - 1).T0)
+	kc, ti, ok := w.tuning(r.recent(2).T0, 0)
+	if ok && okb && ti > 0 && t0 > 0 && math.Abs(math.Log(math.Abs(kc)/k0)) < 0.35 && math.Abs(math.Log(ti/t0)) < 0.35 {
+		need, over = 5, 2.5
+	}
+	if n < need {
+		return false
+	}
+	// The yardstick of a sound PI loop is 2.3 reset times (methods section 7): what
+	// is not slower than that twice over is not slow.
+	floor := 0.0
+	if okb && t0 > 0 {
+		floor = 4 * t0
+	}
+	var ratios [5]float64
+	for i := range need {
+		e := r.recent(i)
+		if e.Ratio == 0 || r.Usual[kindOf(e.SP)].N < 8 || float64(e.Dur) < floor || float64(e.Ratio) < over {
+			return false
+		}
+		ratios[i] = float64(e.Ratio)
+	}
+	return num.Median(ratios[:need]) > least*w.strict
 }
 
 func (w *Watch) slowCause(own, area, shape int, durs []float64) {

@@ -162,7 +162,8 @@ func BenchmarkFrames(b *testing.B) {
 	checkAll(b, w)
 }
 
-func BenchmarkAppend(b *testing.B) {
+// BenchmarkAppendWhileFull is a frame that pushes out the oldest of its loop.
+func BenchmarkAppendWhileFull(b *testing.B) {
 	w := open(b, b.TempDir(), Options{PendingFrames: 100}, loopList(1000))
 	f := mix[0].trace(rand.New(rand.NewPCG(1, 1)), t2026, 1)[0]
 	for i := 0; b.Loop(); i++ {

@@ -128,7 +128,7 @@ func (r *relay) serve(t *testing.T, withTLS bool) (addr, ca string) {
 	}
 	done := make(chan struct{})
 	go func() { defer close(done); _ = srv.Serve(l) }()
-	t.Cleanup(func() { _ = srv.Close(); <-done })
+	t.Cleanup(func() { _, _ = srv.Close(), l.Close(); <-done })
 	return l.Addr().String(), ca
 }
 

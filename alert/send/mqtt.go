@@ -117,7 +117,7 @@ func (s *mqttSender) keep(ctx context.Context) {
 			s.set(nil, errors.New("closed"))
 			c.Publish(s.prefix+"/status", 1, true, statusOffline).WaitTimeout(2 * time.Second)
 		}
-		c.Disconnect(100)
+		c.Disconnect(500)
 	}
 }
 

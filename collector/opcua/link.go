@@ -1,12 +1,15 @@
 package opcua
 
 import (
+	"cmp"
 	"context"
 	"crypto/rsa"
 	"errors"
 	"fmt"
 	"io"
 	"net"
+	"sync"
+	"syscall"
 	"time"
 
 	opcualib "github.com/gopcua/opcua"
@@ -41,6 +44,7 @@ type door struct {
 	tokens      []*ua.UserTokenPolicy
 	dial, call  time.Duration
 	wait        time.Duration // longest wait for a publish answer
+	token       time.Duration // lifetime of the channel's key; 0 = an hour
 }
 
 // link is one connection to a server. A link is used once: after an error a
@@ -49,6 +53,33 @@ type door struct {
 type link struct {
 	client *opcualib.Client
 	call   time.Duration
+	socket *sockets
+}
+
+// sockets are the sockets of one dial. The library holds a lock while it renews
+// its key, whatever becomes of the context of others: on a dead link only the
+// end of the socket frees them at once.
+type sockets struct {
+	mu  sync.Mutex
+	raw []syscall.RawConn
+}
+
+func (s *sockets) control(_, _ string, c syscall.RawConn) error {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	s.raw = append(s.raw, c)
+	return nil
+}
+
+// hangUp ends the connection at once, without a word to the server.
+func (l *link) hangUp() {
+	l.socket.mu.Lock()
+	defer l.socket.mu.Unlock()
+	for _, c := range l.socket.raw {
+		_ = c.Control(func(fd uintptr) { // fails on a closed one, which is as well
+			_ = syscall.Shutdown(int(fd), syscall.SHUT_RDWR)
+		})
+	}
 }
 
 // ticket is a session that can be resumed on another link.
@@ -57,11 +88,13 @@ type ticket struct {
 	life    time.Duration
 }
 
-func (d door) options() []opcualib.Option {
+func (d door) options(s *sockets) []opcualib.Option {
 	o := []opcualib.Option{
 		opcualib.AutoReconnect(false),
 		opcualib.RequestTimeout(d.wait),
-		opcualib.Dialer(&uacp.Dialer{Dialer: &net.Dialer{Timeout: d.dial, KeepAlive: 15 * time.Second}, ClientACK: uacp.DefaultClientACK}),
+		opcualib.Lifetime(cmp.Or(d.token, time.Hour)),
+		opcualib.Dialer(&uacp.Dialer{ClientACK: uacp.DefaultClientACK,
+			Dialer: &net.Dialer{Timeout: d.dial, KeepAlive: 15 * time.Second, Control: s.control}}),
 	}
 	if d.policy == "" || d.policy == ua.SecurityPolicyURINone {
 		if d.cert != nil { // an encrypted password needs the key even without a secured channel
@@ -76,7 +109,8 @@ func (d door) options() []opcualib.Option {
 
 // open dials the configured address and opens the secure channel.
 func (d door) open(ctx context.Context) (*link, error) {
-	c, err := opcualib.NewClient(d.url, d.options()...)
+	socket := new(sockets)
+	c, err := opcualib.NewClient(d.url, d.options(socket)...)
 	if err != nil {
 		return nil, err
 	}
@@ -88,7 +122,7 @@ func (d door) open(ctx context.Context) (*link, error) {
 		}
 		return nil, err
 	}
-	return &link{client: c, call: d.call}, nil
+	return &link{client: c, call: d.call, socket: socket}, nil
 }
 
 // endpoints asks what the server offers, over an unsecured channel of its own.
@@ -150,6 +184,7 @@ func (l *link) leave() *ticket {
 func (l *link) close(limit time.Duration) {
 	ctx, cancel := context.WithTimeout(context.Background(), limit)
 	defer cancel()
+	defer time.AfterFunc(limit+time.Second, l.hangUp).Stop()
 	_ = l.client.Close(ctx) // nothing can be done about a failed farewell
 }
 

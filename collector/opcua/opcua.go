@@ -38,6 +38,7 @@ type pace struct {
 	slack                    time.Duration // added to two keep-alives before the link is called dead
 	look                     time.Duration // between looks of the watchdog
 	sessionLife              time.Duration // asked of the server; short, so that a lost session frees its place soon
+	token                    time.Duration // lifetime of the secure channel's key; 0 = an hour
 	queue                    time.Duration // what the server's queues are asked to cover
 	sessionsPerMinute        int
 	maxItems, maxOutstanding int

@@ -77,7 +77,7 @@ func scripted(t *testing.T, sc *script) (s *Source, in *catch, ended chan error,
 	ctx, cancel := context.WithCancel(t.Context())
 	in, ended = &catch{}, make(chan error, 1)
 	sess := &session{reader: sc, reads: 10, items: 10}
-	go func() { ended <- s.watch(ctx, sess, in) }()
+	go func() { ended <- s.watch(ctx, sess, in, func() {}) }()
 	return s, in, ended, cancel
 }
 

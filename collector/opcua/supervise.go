@@ -35,7 +35,7 @@ func (s *Source) supervise(ctx context.Context, in collector.Intake) {
 		if err == nil {
 			up := time.Now()
 			s.set("watching", nil)
-			err = s.watch(ctx, keep.sess, in)
+			err = s.watch(ctx, keep.sess, in, l.hangUp)
 			if time.Since(up) >= s.pace.stable {
 				failures = 0
 			}

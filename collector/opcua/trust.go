@@ -43,7 +43,7 @@ func (s *Source) enter(ctx context.Context) (door, *uasc.SessionConfig, error) {
 	}
 	offer := offers[at]
 	d := door{url: s.cfg.Endpoint, policy: policy, mode: mode, tokens: offer.UserIdentityTokens,
-		dial: s.pace.dial, call: s.pace.call, wait: s.publishWait()}
+		dial: s.pace.dial, call: s.pace.call, wait: s.publishWait(), token: s.pace.token}
 	if s.own != nil {
 		d.cert, d.key = s.own.cert.Raw, s.own.key
 	}

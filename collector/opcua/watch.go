@@ -22,8 +22,9 @@ var errSubscriptionSilent = errors.New("a subscription went silent while others 
 
 // watch takes over what the server publishes until the link or the session ends,
 // and returns why. It never waits for a request of its own: those run beside it
-// and hand their result back as a job.
-func (s *Source) watch(ctx context.Context, sess *session, in collector.Intake) error {
+// and hand their result back as a job. hangUp ends the connection, for requests
+// that do not end by themselves.
+func (s *Source) watch(ctx context.Context, sess *session, in collector.Intake, hangUp func()) (err error) {
 	ctx, cancel := context.WithCancel(ctx)
 	pump := startPump(ctx, sess.reader, min(s.pace.maxOutstanding, len(s.subs)+1))
 	jobs := make(chan func() error, 1)
@@ -37,6 +38,11 @@ func (s *Source) watch(ctx context.Context, sess *session, in collector.Intake) 
 	s.live = sess
 	s.mu.Unlock()
 	defer func() {
+		if ctx.Err() == nil && !needsFresh(err) {
+			hangUp() // the link is dead, the session is to be resumed on another
+		} else {
+			defer time.AfterFunc(2*time.Second, hangUp).Stop()
+		}
 		cancel()
 		pump.wg.Wait()
 		w.beside.Wait()
@@ -47,7 +53,6 @@ func (s *Source) watch(ctx context.Context, sess *session, in collector.Intake) 
 	look := time.NewTicker(s.pace.look)
 	defer look.Stop()
 	for {
-		var err error
 		select {
 		case <-ctx.Done():
 			return ctx.Err()

@@ -137,13 +137,16 @@ func stalledLink(t *testing.T, p *peer) {
 	cfg := plainConfig(x.url())
 	cfg.KeepAliveCount = 4 // dead after 2 * 4 * 0.5 s + 1 s
 	whole := run(t, plainConfig(p.url), bind(2), nil)
-	w := run(t, cfg, bind(2), func(s *Source) { s.pace.dial, s.pace.call = time.Second, 2*time.Second })
+	w := run(t, cfg, bind(2), func(s *Source) {
+		s.pace.dial, s.pace.call = time.Second, 2*time.Second
+		s.pace.token = 4 * time.Second // the key of the channel falls due while the link is stalled
+	})
 	w.flows(t, 15*time.Second)
 	x.stalled.Store(true)
 	start := time.Now()
 	eventually(t, 10*time.Second, "the watchdog fires", func() bool { return w.State().Link != "watching" })
-	if d := time.Since(start); d < 4*time.Second {
-		t.Errorf("the watchdog fired after %s, before two keep-alives and a second", d)
+	if d := time.Since(start); d < 4*time.Second || d > 14*time.Second {
+		t.Errorf("the watchdog fired after %s, want two keep-alives and a second: 5 s", d)
 	}
 	time.Sleep(time.Until(start.Add(15 * time.Second)))
 	x.stalled.Store(false)

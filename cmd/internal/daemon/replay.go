@@ -60,7 +60,7 @@ func Replay(ctx context.Context, r *trend.Reader, o ReplayOptions) (ReplaySummar
 	if n <= 0 {
 		n = runtime.GOMAXPROCS(0)
 	}
-	p := &replay{o: o, gather: newGathering(o.Loops), left: n, out: json.NewEncoder(o.Findings)}
+	p := &replay{o: o, gather: newGathering(o.Loops), out: json.NewEncoder(o.Findings), at: make([]int, n)}
 	p.out.SetEscapeHTML(false)
 	for w := range n {
 		p.lanes = append(p.lanes, newLane(o.Loops, w, n, o.Detect))
@@ -68,13 +68,11 @@ func Replay(ctx context.Context, r *trend.Reader, o ReplayOptions) (ReplaySummar
 	if err := p.start(); err != nil {
 		return ReplaySummary{}, err
 	}
-	rounds := make([]int64, n)
 	err := r.Spread(ctx, n, func(w int, b *trend.Batch) error {
 		l := p.lanes[w]
 		for i := range b.Items {
 			l.step(b.Items[i].ID, &b.Items[i].Frame)
 		}
-		rounds[w] += int64(len(b.Items))
 		return p.done(l, b.Through, int64(len(b.Items)))
 	})
 	if ctx.Err() == nil {
@@ -91,18 +89,22 @@ type replay struct {
 	out    *json.Encoder
 
 	mu     sync.Mutex // all below
-	left   int        // lanes that have not finished the running round
-	sites  int64      // least limits of the round so far
-	order  int64
-	newest int64
-	held   []said // findings whose place in the order is not settled
+	rounds []*round   // not settled yet, in order
+	at     []int      // by lane: rounds it has finished since the first of rounds
+	held   []said     // findings whose place in the order is not settled
 	raised int
 	rows   int64
 }
 
+// round is one batch of every lane.
+type round struct {
+	left         int // lanes that have not finished it
+	sites, order int64
+	newest       int64
+}
+
 // start loads the memories.
 func (p *replay) start() error {
-	p.sites, p.order = math.MaxInt64, math.MaxInt64
 	for i, l := range p.o.Loops {
 		lane := p.lanes[i%len(p.lanes)]
 		id := collector.LoopID(i)
@@ -135,31 +137,110 @@ func (p *replay) say(s string) {
 	}
 }
 
-// done takes what a lane says after one round; the last lane of a round settles
-// it. Rounds end in their order, since every lane has them in order.
+// done takes what a lane says after one round. The last lane of a round settles
+// it; lanes may be ahead by some rounds.
 func (p *replay) done(l *lane, newest, rows int64) error {
 	n := l.take()
 	sites, order := l.limits(newest)
 	p.mu.Lock()
 	defer p.mu.Unlock()
 	p.rows += rows
-	// A lane may be ahead by some rounds: its limits are then later than the
-	// others', and the least of them counts.
 	p.gather.record(n.evidence)
 	p.held = append(p.held, n.findings...)
-	return p.settle(l, newest, sites, order)
-}
-
-func (p *replay) settle(l *lane, newest, sites, order int64) error {
-	p.sites, p.order, p.newest = min(p.sites, sites), min(p.order, order), newest
-	if p.left--; p.left > 0 {
+	k := p.at[l.n]
+	p.at[l.n]++
+	if k == len(p.rounds) {
+		p.rounds = append(p.rounds, &round{left: len(p.lanes), sites: newest, order: newest, newest: newest})
+	}
+	r := p.rounds[k]
+	r.sites, r.order = min(r.sites, sites), min(r.order, order)
+	if r.left--; r.left > 0 {
 		return nil
 	}
-	p.left = len(p.lanes)
-	sites, order = min(p.sites, p.newest), min(p.order, p.newest)
-	p.sites, p.order = math.MaxInt64, math.MaxInt64
+	// Lanes have their rounds in order, so this one is the first.
+	p.rounds = slices.Delete(p.rounds, 0, 1)
+	for i := range p.at {
+		p.at[i]--
+	}
 	if p.o.Progress != nil {
 		p.o.Progress(p.rows)
 	}
-	return p.release(sites, order)
+	p.gather.advance(r.sites, func(f *detect.Finding) { p.held = append(p.held, said{Finding: *f}) })
+	return p.release(min(r.order, r.sites))
+}
+
+// release writes the findings up to a time, in order.
+func (p *replay) release(upTo int64) error {
+	slices.SortStableFunc(p.held, func(a, b said) int { return less(&a.Finding, &b.Finding) })
+	k := 0
+	for ; k < len(p.held) && p.held[k].At <= upTo; k++ {
+		s := &p.held[k]
+		if s.Event == detect.Raised {
+			p.raised++
+		}
+		if err := p.out.Encode(s.Finding); err != nil {
+			return fmt.Errorf("writing findings: %w", err)
+		}
+		if len(s.why) > 0 && p.o.Evidence != nil {
+			fmt.Fprintf(p.o.Evidence, "%s %s %s %s\n", detect.FormatTime(s.At), s.Loop, s.Kind, s.Event)
+			writeLines(p.o.Evidence, s.why)
+		}
+	}
+	p.held = slices.Delete(p.held, 0, k)
+	return nil
+}
+
+// end writes what is left, and what is held of the loop to be explained.
+func (p *replay) end() error {
+	err := p.release(math.MaxInt64)
+	for _, l := range p.lanes {
+		if l.explain != nil && p.o.Evidence != nil {
+			fmt.Fprintf(p.o.Evidence, "%s %s at the end\n", detect.FormatTime(l.explain.Through()), p.o.Explain)
+			writeLines(p.o.Evidence, l.explain.Explain())
+		}
+	}
+	return err
+}
+
+func writeLines(w io.Writer, lines []string) {
+	for _, line := range lines {
+		fmt.Fprintln(w, "  "+line)
+	}
+}
+
+func (p *replay) summary(t trend.Summary) ReplaySummary {
+	s := ReplaySummary{Loops: len(p.o.Loops), Rows: t.Rows, Frames: t.Frames, Malformed: t.Malformed, Late: t.Late, Foreign: t.Foreign, Raised: p.raised}
+	if t.Frames > 0 {
+		s.From, s.To = detect.FormatTime(t.From), detect.FormatTime(t.To)
+	}
+	for i := range p.o.Loops {
+		l := p.lanes[i%len(p.lanes)]
+		s.count(l.watches[i/len(p.lanes)].View().State)
+		if d := &l.pace[i/len(p.lanes)]; d.last != 0 {
+			s.LoopYears += float64(d.last-d.first) / (365.25 * 24 * 3600 * 1000)
+		}
+	}
+	budget := p.o.Detect.NuisancePerLoopYear
+	if !(budget > 0) {
+		budget = DefaultNuisance
+	}
+	s.ExpectFalse = s.LoopYears * budget
+	return s
+}
+
+// DefaultNuisance is the budget of false findings per loop and year where none
+// is set.
+const DefaultNuisance = 0.1
+
+func (s *ReplaySummary) count(st detect.State) {
+	switch st {
+	case detect.Judged:
+		s.Judged++
+	case detect.NotNormal:
+		s.NotInNormal++
+	case detect.HeldState:
+		s.Held++
+	default:
+		s.CannotJudge++
+	}
 }

@@ -263,7 +263,7 @@ func retuned(theReset bool) func(*rand.Rand, float64) *scenario {
 			l.load.stepEvery = math.Min(l.load.stepEvery, 25*l.recovery)
 			l.setOnset(base, func(l *rig) { l.law.retune(kc, ti, l.law.td) })
 			return single(l, base, math.Max(80*l.recovery, 20*l.load.stepEvery), truth{kinds: kinds{detect.TuningChanged},
-				also: kinds{detect.SluggishRecovery, detect.SustainedOscillation}, unit: l.recovery})
+				also: kinds{detect.SluggishRecovery, detect.SustainedOffset, detect.SustainedOscillation}, unit: l.recovery})
 		})
 	}
 }

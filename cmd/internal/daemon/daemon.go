@@ -1,0 +1,2 @@
+// Package daemon is the pipeline as a value.
+package daemon
