@@ -62,7 +62,7 @@ func (d *Desk) standing() []Item {
 
 // openItems lists open episodes that keep, by rank.
 func (d *Desk) openItems(keep func(*Episode) bool) []Item {
-	work := d.workAhead(d.o.Clock().In(d.set.Zone)).UnixMilli()
+	work := d.workAhead(d.o.Clock().In(d.set.Zone))
 	var items []Item
 	for _, e := range d.mem.episodes {
 		if e.Open() && keep(e) {

@@ -13,9 +13,9 @@ import (
 
 // meta is what dispatch remembers between two wakes. Times are wall time, ms UTC.
 type meta struct {
-	Daily    int64  `json:"daily,omitempty"`  // when the last one was made
-	Weekly   int64  `json:"weekly,omitempty"` // when the last one was made
-	Waiting  int64  `json:"waiting,omitempty"` // when what waits was last sent without a daily digest
+	Daily    int64  `json:"daily,omitempty"`    // when the last one was made
+	Weekly   int64  `json:"weekly,omitempty"`   // when the last one was made
+	Waiting  int64  `json:"waiting,omitempty"`  // when what waits was last sent without a daily digest
 	Standing int64  `json:"standing,omitempty"` // when the list was made
 	Seq      uint64 `json:"seq"`                // of the last delivery
 }
@@ -165,7 +165,7 @@ func (b *batch) routeStep(s *step, local time.Time, people map[string][]candidat
 	it := s.Item
 	it.Finding.Event = it.Event
 	var why string
-	it.Urgency, why = urgency(&it.Finding, d.set.loops[it.Finding.Loop], d.workAhead(local).UnixMilli())
+	it.Urgency, why = urgency(&it.Finding, d.set.loops[it.Finding.Loop], d.workAhead(local))
 	if it.Why == "" {
 		it.Why = why
 	}
@@ -263,8 +263,13 @@ func (b *batch) toldBefore(id string, before uint32, sender string) bool {
 	return false
 }
 
-// workAhead is the next working hour; inside working hours, their end.
-func (d *Desk) workAhead(local time.Time) time.Time { return nextChange(d.set.working(), local) }
+func (d *Desk) workAhead(local time.Time) horizon {
+	h := horizon{nextChange(d.set.working(), local).UnixMilli(), "the next working hour"}
+	if within(d.set.working(), local) {
+		h.words = "working hours end"
+	}
+	return h
+}
 
 // Beyond one message in 10 minutes, several become one; more than ten in 10
 // minutes are a flood (EEMUA 191).

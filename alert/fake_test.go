@@ -5,6 +5,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"iter"
 	"slices"
 	"strings"
 	"sync"
@@ -75,7 +76,7 @@ func (t fakeTx) Delete(bucket string, key []byte) error {
 	delete(t.data, k)
 	return nil
 }
-func (t fakeTx) Scan(bucket string, prefix []byte, f func(k, v []byte) error) error {
+func (t fakeTx) Scan(bucket string, prefix []byte) iter.Seq2[[]byte, []byte] {
 	p := bucket + "\x00" + string(prefix)
 	var keys []string
 	for k := range t.data {
@@ -84,12 +85,13 @@ func (t fakeTx) Scan(bucket string, prefix []byte, f func(k, v []byte) error) er
 		}
 	}
 	slices.Sort(keys)
-	for _, k := range keys {
-		if err := f([]byte(k[len(bucket)+1:]), []byte(t.data[k])); err != nil {
-			return err
+	return func(yield func(k, v []byte) bool) {
+		for _, k := range keys {
+			if !yield([]byte(k[len(bucket)+1:]), []byte(t.data[k])) {
+				return
+			}
 		}
 	}
-	return nil
 }
 
 func (s *fakeStore) Update(f func(fakeTx) error) error {
@@ -120,7 +122,9 @@ func (s *fakeStore) View(f func(fakeTx) error) error {
 
 func (s *fakeStore) count(bucket string) int {
 	n := 0
-	_ = fakeTx{s.data, nil}.Scan(bucket, nil, func(_, _ []byte) error { n++; return nil })
+	for range (fakeTx{s.data, nil}).Scan(bucket, nil) {
+		n++
+	}
 	return n
 }
 

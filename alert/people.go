@@ -197,7 +197,7 @@ func (d *Desk) Episodes() []Episode {
 		out = append(out, e.clone())
 	}
 	local := d.o.Clock().In(d.set.Zone)
-	work := d.workAhead(local).UnixMilli()
+	work := d.workAhead(local)
 	ranks := map[string]float64{}
 	for i := range out {
 		ranks[out[i].ID] = d.episodeRank(&out[i], work)
@@ -214,7 +214,7 @@ func (e *Episode) clone() Episode {
 	return c
 }
 
-func (d *Desk) episodeRank(e *Episode, work int64) float64 {
+func (d *Desk) episodeRank(e *Episode, work horizon) float64 {
 	it := e.item()
 	it.Urgency, _ = urgency(&it.Finding, d.set.loops[it.Finding.Loop], work)
 	r := d.rank(&it)
@@ -229,12 +229,13 @@ func (d *Desk) Urgency(e *Episode) (Urgency, string) {
 	d.mu.Lock()
 	defer d.mu.Unlock()
 	f := e.Lead()
-	return urgency(&f, d.set.loops[f.Loop], d.workAhead(d.o.Clock().In(d.set.Zone)).UnixMilli())
+	return urgency(&f, d.set.loops[f.Loop], d.workAhead(d.o.Clock().In(d.set.Zone)))
 }
 
 // Episode gives one episode, however old, and its journal, oldest line first.
 func (d *Desk) Episode(id string) (Episode, []Entry, error) {
 	var e Episode
+	hide := d.hider()
 	var js []Entry
 	err := d.o.Store.View(func(tx Tx) error {
 		had, err := get(tx, bucketEpisodes, []byte(id), &e)
@@ -245,7 +246,7 @@ func (d *Desk) Episode(id string) (Episode, []Entry, error) {
 			return err
 		}
 		_, err = scan(tx, bucketJournal, append([]byte(id), 0), func(_ string, x Entry) error {
-			js = append(js, d.hideName(x))
+			js = append(js, hide(x))
 			return nil
 		})
 		return err
@@ -253,31 +254,41 @@ func (d *Desk) Episode(id string) (Episode, []Entry, error) {
 	return e, js, err
 }
 
-// hideName leaves out a name that was kept long enough.
-func (d *Desk) hideName(x Entry) Entry {
+// hider leaves out names that were kept long enough. It takes the lock before a
+// view of the store is open: a writer that holds the lock may wait for views.
+func (d *Desk) hider() func(Entry) Entry {
 	d.mu.Lock()
 	defer d.mu.Unlock()
-	if d.set.Names > 0 && x.Who != "" && d.wall()-x.Wall > d.set.Names.Milliseconds() {
-		x.Who = "(name no longer kept)"
+	keep, now := d.set.Names.Milliseconds(), d.wall()
+	return func(x Entry) Entry {
+		if keep > 0 && x.Who != "" && now-x.Wall > keep {
+			x.Who = "(name no longer kept)"
+		}
+		return x
 	}
-	return x
 }
 
-// Journal gives every journal line of every episode, for export.
+// Journal gives every journal line of every episode, by episode and number, for
+// export.
 func (d *Desk) Journal() iter.Seq2[Entry, error] {
 	return func(yield func(Entry, error) bool) {
-		stop := errors.New("stop")
+		hide := d.hider()
+		var all []Entry
 		err := d.o.Store.View(func(tx Tx) error {
 			_, err := scan(tx, bucketJournal, nil, func(_ string, x Entry) error {
-				if !yield(d.hideName(x), nil) {
-					return stop
-				}
+				all = append(all, hide(x))
 				return nil
 			})
 			return err
 		})
-		if err != nil && !errors.Is(err, stop) {
+		if err != nil {
 			yield(Entry{}, err)
+			return
+		}
+		for _, x := range all {
+			if !yield(x, nil) {
+				return
+			}
 		}
 	}
 }

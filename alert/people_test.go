@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"slices"
 	"strings"
+	"sync/atomic"
 	"testing"
 	"testing/synctest"
 	"time"
@@ -52,7 +53,7 @@ func TestUrgency(t *testing.T) {
 		{"sluggish, however near a limit", f("A", detect.SluggishRecovery, detect.Raised, at(night), measure("time_to_op_limit_s", 1)), nil, Note},
 		{"over", f("A", detect.FrozenPV, detect.Cleared, at(night)), nil, Note},
 	} {
-		if got, _ := urgency(&c.f, c.l, d.workAhead(night).UnixMilli()); got != c.want {
+		if got, _ := urgency(&c.f, c.l, d.workAhead(night)); got != c.want {
 			t.Errorf("%s: %q, want %q", c.name, got, c.want)
 		}
 	}
@@ -117,7 +118,7 @@ func TestFloodIsOneMessage(t *testing.T) {
 	if len(got) != 1 || got[0].Type != TypeCollected || len(got[0].Items) != 15 {
 		t.Fatalf("%d messages, want one collected of 15", len(got))
 	}
-	if !strings.Contains(got[0].Subject, "15 advisories at once, all in area filters") {
+	if !strings.Contains(got[0].Subject, "15 advisories at once, all of source works, in area filters") {
 		t.Errorf("subject %q does not name what is common", got[0].Subject)
 	}
 	if n := len(r.hook.take()); n != 15 {
@@ -414,10 +415,10 @@ func TestRun(t *testing.T) {
 	synctest.Test(t, func(t *testing.T) {
 		s := newStore()
 		hook := &fakeSender{}
-		tries := 0
+		var tries atomic.Int32
 		began := time.Now()
 		hook.answer = func(Message) error {
-			if tries++; tries == 1 {
+			if tries.Add(1) == 1 {
 				return &RetryAfter{After: 3 * time.Minute, Reason: ReasonServer, Err: errDisk}
 			}
 			return nil
@@ -437,17 +438,17 @@ func TestRun(t *testing.T) {
 		}
 		time.Sleep(30*time.Second - time.Millisecond)
 		synctest.Wait()
-		if tries != 0 {
+		if tries.Load() != 0 {
 			t.Fatal("told before it had settled")
 		}
 		time.Sleep(2 * time.Millisecond)
 		synctest.Wait()
-		if tries != 1 {
-			t.Fatalf("%d attempts after it settled, want 1", tries)
+		if tries.Load() != 1 {
+			t.Fatalf("%d attempts after it settled, want 1", tries.Load())
 		}
 		time.Sleep(3*time.Minute - 10*time.Millisecond)
 		synctest.Wait()
-		if tries != 1 {
+		if tries.Load() != 1 {
 			t.Fatal("tried again before the other side wished")
 		}
 		time.Sleep(20 * time.Millisecond)

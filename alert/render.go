@@ -202,7 +202,11 @@ func (d *Desk) textShort(it *Item, name string, old bool) string {
 	if strings.Contains(strings.ToLower(s), "advisory only") {
 		return cut(s, 160)
 	}
-	return cut(s, 160-len(tail)) + tail
+	s = strings.TrimRight(cut(s, 160-len(tail)-1), ".")
+	if !strings.HasSuffix(s, "…") {
+		s += "."
+	}
+	return s + tail
 }
 
 func (d *Desk) links(it *Item) []Link {

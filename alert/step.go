@@ -157,9 +157,15 @@ func digestOnly(k detect.Kind) bool {
 	return false
 }
 
-// urgency ranks an item at wall time now (ms UTC). work is the next working
-// hour, or inside working hours their end.
-func urgency(f *detect.Finding, l *configs.Loop, work int64) (Urgency, string) {
+// horizon is the time before which a limit must not be reached unseen: the next
+// working hour, or inside working hours their end.
+type horizon struct {
+	at    int64 // wall time, ms UTC
+	words string
+}
+
+// urgency ranks a finding: from what it predicts and what that means.
+func urgency(f *detect.Finding, l *configs.Loop, h horizon) (Urgency, string) {
 	if f.Event == detect.Cleared || digestOnly(f.Kind) {
 		return Note, ""
 	}
@@ -170,8 +176,8 @@ func urgency(f *detect.Finding, l *configs.Loop, work int64) (Urgency, string) {
 		if at <= f.At {
 			return Now, what + " is reached"
 		}
-		if at < work {
-			return Now, what + " expected before the next working hour"
+		if at < h.at {
+			return Now, what + " expected before " + h.words
 		}
 		return Morning, ""
 	}

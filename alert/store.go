@@ -5,17 +5,17 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
+	"iter"
 )
 
-// Tx is one transaction on named buckets of bytes. Slices given by Get and Scan
-// are valid until the transaction ends or the bucket is changed; Scan goes in
-// order of the keys that begin with prefix and must not be used to change the
-// bucket. Get of what is not there is nil.
+// Tx is one transaction on named buckets of bytes. Get of what is not there is
+// nil. Scan walks the keys that begin with prefix in ascending order; the bucket
+// is changed only after the walk.
 type Tx interface {
 	Get(bucket string, key []byte) []byte
 	Put(bucket string, key, value []byte) error
 	Delete(bucket string, key []byte) error
-	Scan(bucket string, prefix []byte, f func(key, value []byte) error) error
+	Scan(bucket string, prefix []byte) iter.Seq2[[]byte, []byte]
 }
 
 // Store keeps the desk's state. Update is synced when it returns nil.
@@ -82,15 +82,17 @@ func get(tx Tx, bucket string, key []byte, v any) (bool, error) {
 // scan reads a bucket. A value that cannot be read is counted and left alone:
 // one spoiled record must not silence the desk.
 func scan[V any](tx Tx, bucket string, prefix []byte, f func(key string, v V) error) (spoiled int, err error) {
-	err = tx.Scan(bucket, prefix, func(k, b []byte) error {
+	for k, b := range tx.Scan(bucket, prefix) {
 		var v V
 		if json.Unmarshal(b, &v) != nil {
 			spoiled++
-			return nil
+			continue
 		}
-		return f(string(k), v)
-	})
-	return spoiled, err
+		if err := f(string(k), v); err != nil {
+			return spoiled, err
+		}
+	}
+	return spoiled, nil
 }
 
 // ErrUnknown is returned for an episode or loop that the desk does not have.

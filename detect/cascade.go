@@ -8,16 +8,20 @@ import "math"
 
 // halfBlock is the first half of a block of the next level.
 type halfBlock struct {
-	E, S, OP float64
-	Half     bool
+	S     float64
+	E, OP float32
+	Half  bool
 }
 
-func (w *Watch) levels() int {
-	// Cycles up to 24 samples of the top level; 13 h is the slowest that a watch
-	// of days can judge.
-	n := 1 + int(math.Ceil(math.Log2(math.Max(1, 2000/w.s.Grid.DT))))
-	return min(max(n, 4), maxLevels)
+// levelsFor is the number of levels worth running at a sample interval, s: cycles
+// up to 24 samples of the top level; 13 h is the slowest that a watch of days can
+// judge.
+func levelsFor(dt float64) uint8 {
+	n := 1 + int(math.Ceil(math.Log2(max(1, 2000/dt))))
+	return uint8(min(max(n, 4), maxLevels))
 }
+
+func (w *Watch) levels() int { return int(w.s.Grid.Levels) }
 
 func (w *Watch) stepCascade() {
 	s, in := &w.s, &w.in
@@ -41,10 +45,10 @@ func (w *Watch) stepCascade() {
 		}
 		c := &s.Casc[l]
 		if !c.Half {
-			*c = halfBlock{e, si, op, true}
+			*c = halfBlock{si, float32(e), float32(op), true}
 			return
 		}
 		c.Half = false
-		e, si, op = (e+c.E)/2, (si+c.S)/2, (op+c.OP)/2
+		e, si, op = (e+float64(c.E))/2, (si+c.S)/2, (op+float64(c.OP))/2
 	}
 }

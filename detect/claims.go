@@ -135,7 +135,7 @@ func (w *Watch) timeLeft() (op, alarm float64) {
 func measureSustained(w *Watch, m []float64) {
 	o := &w.s.Osc
 	sh := w.shapes()
-	m[0], m[1], m[2], m[3] = o.P, o.Amp, w.pvUnits(o.Amp), math.Min(o.Regular, 99)
+	m[0], m[1], m[2], m[3] = o.P, o.Amp, w.pvUnits(o.Amp), min(o.Regular, 99)
 	m[4], m[5] = w.tuningNow()
 	m[6], m[7], m[8] = w.stickIndex(sh), sh.h3OP, sh.stick
 	if o.Kc != 0 {
@@ -148,7 +148,7 @@ func measureSticking(w *Watch, m []float64) {
 	sh := w.shapes()
 	lo, hi := w.opSwing()
 	m[0], m[1], m[2], m[3] = o.P, o.Amp, w.pvUnits(o.Amp), hi-lo
-	m[4], m[5], m[6], m[7] = w.stickIndex(sh), sh.h3OP, sh.stick, math.Min(o.Regular, 99)
+	m[4], m[5], m[6], m[7] = w.stickIndex(sh), sh.h3OP, sh.stick, min(o.Regular, 99)
 	if o.Kc != 0 {
 		m[8], m[9] = o.PhiDeg, sh.phiDeg
 	}

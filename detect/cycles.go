@@ -55,7 +55,16 @@ type halfCycle struct {
 
 func (h halfCycle) length() float64 { return float64(h.Len) / 64 }
 func (h halfCycle) ln() float64     { return float64(h.Ln) / 2048 }
-func (h halfCycle) peak() float64   { return math.Exp(h.ln()) }
+func (h halfCycle) peak() float64   { return expHigh[uint16(h.Ln)>>8] * expLow[uint16(h.Ln)&255] }
+
+// exp of the packed logarithm as a product of two table values.
+var expHigh, expLow = func() (hi, lo [256]float64) {
+	for i := range hi {
+		hi[i] = math.Exp(float64(int16(uint16(i)<<8)) / 2048)
+		lo[i] = math.Exp(float64(i) / 2048)
+	}
+	return
+}()
 
 type cycleBank struct {
 	A, B, H float32
@@ -120,9 +129,9 @@ func (w *Watch) stepCycles(level int, e float64) {
 	g := centreGain(level)
 	ref := 0.0
 	if b.N > 0 {
-		ref = math.Min(b.at(0).peak(), 50) * g
+		ref = min(b.at(0).peak(), 50) * g
 	}
-	hy := math.Max(0.25*ref, math.Max(0.25*w.s.Noise.sigma()/math.Sqrt(float64(int(1)<<level)), 0.02))
+	hy := max(0.25*ref, max(0.25*w.s.Noise.sigma()/math.Sqrt(float64(int(1)<<level)), 0.02))
 	sign := int8(0)
 	if x > hy {
 		sign = 1
@@ -152,8 +161,8 @@ func (w *Watch) endHalf(level int, b *cycleBank, hs, g float64) {
 		return // its beginning was not seen
 	}
 	p := math.Abs(float64(b.Peak)) / g
-	ln := math.Log(math.Max(p, 1e-6))
-	b.push(halfCycle{uint16(math.Min(math.Max(n*64, 1), math.MaxUint16)), int16(math.Round(ln * 2048))})
+	ln := math.Log(max(p, 1e-6))
+	b.push(halfCycle{uint16(min(max(n*64, 1), math.MaxUint16)), int16(math.Round(ln * 2048))})
 	w.judgeCycles(level, b)
 }
 
@@ -168,6 +177,22 @@ type ringStat struct {
 	t       float64 // of the growth
 }
 
+// lengths is the cheap part of stat: period (samples of the level) and regularity.
+func (b *cycleBank) lengths(n int) (period, regular float64, ok bool) {
+	if int(b.N) < n {
+		return 0, 0, false
+	}
+	var sum, sq float64
+	for i := range n {
+		l := b.at(i).length()
+		sum += l
+		sq += l * l
+	}
+	m := sum / float64(n)
+	s := math.Sqrt(max(0, sq/float64(n)-m*m) * float64(n) / float64(n-1))
+	return 2 * m, m / max(s, 1e-9), true
+}
+
 func (b *cycleBank) stat(level, n int) (r ringStat, ok bool) {
 	if int(b.N) < n {
 		return r, false
@@ -180,7 +205,7 @@ func (b *cycleBank) stat(level, n int) (r ringStat, ok bool) {
 		ln[i], pk[i] = h.length(), h.peak()
 		m += ln[i]
 		am += pk[i]
-		least = math.Min(least, pk[i])
+		least = min(least, pk[i])
 	}
 	m /= float64(n)
 	am /= float64(n)
@@ -189,7 +214,7 @@ func (b *cycleBank) stat(level, n int) (r ringStat, ok bool) {
 		s += (ln[i] - m) * (ln[i] - m)
 	}
 	s = math.Sqrt(s / float64(n-1))
-	r.period, r.regular, r.least = 2*m, m/math.Max(s, 1e-9), least/am
+	r.period, r.regular, r.least = 2*m, m/max(s, 1e-9), least/am
 	// Neighbouring peaks together: drift cancels.
 	var pp [ringLen]float64
 	var mm, ss float64
@@ -205,10 +230,10 @@ func (b *cycleBank) stat(level, n int) (r ringStat, ok bool) {
 	}
 	r.spread = math.Sqrt(ss/float64(n-1)) / mm
 	beta, se := num.Slope(pp[:n-1])
-	r.growth, r.t = math.Exp(2*beta), beta/math.Max(se, 1e-9)
+	r.growth, r.t = math.Exp(2*beta), beta/max(se, 1e-9)
 	r.amp = am
 	if r.period > 4 {
-		r.amp *= centreGain(level) / bankGain(level, math.Max(r.period, 5))
+		r.amp *= centreGain(level) / bankGain(level, max(r.period, 5))
 	}
 	return r, true
 }

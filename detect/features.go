@@ -12,11 +12,11 @@ import (
 // the first frame of the memory, and e is SP - PV.
 
 // maxLevels bounds the octaves of the cascade; level L averages 2^L frames.
-const maxLevels = 13
+const maxLevels = 12
 
 // Limits of the grid.
 const (
-	learnIntervals = 24   // intervals whose median gives the sample interval when none is configured
+	learnIntervals = 16   // intervals whose median gives the sample interval when none is configured
 	holdPeriodic   = 5    // missing slots filled by holding, periodic reporting
 	holdExceptionS = 1900 // s held at most between changes, by exception: half an hour is a usual longest silence (common practice, no source)
 )
@@ -47,6 +47,7 @@ type grid struct {
 	N                uint8
 	Begun            bool
 	Fast, Slow, Seen uint16  // frames faster and slower than the grid, of those seen
+	Levels           uint8   // of the cascade
 	LastFrame        float64 // s since T0
 }
 
@@ -65,7 +66,7 @@ func (s *scale) init(l *configs.Loop, f *collector.Frame) {
 	pv, sp := float64(f.PV), float64(f.SP)
 	outside := func(v float64) bool { return v < s.PVLow-0.2*s.PVSpan || v > s.PVLow+1.2*s.PVSpan }
 	if !(s.PVSpan > 0) || !l.PVRangeGiven && (outside(pv) || outside(sp)) {
-		ref := math.Max(math.Abs(pv), math.Abs(sp))
+		ref := max(math.Abs(pv), math.Abs(sp))
 		if math.IsNaN(ref) || ref == 0 {
 			ref = 50
 		}
@@ -150,19 +151,19 @@ func (n *noise) step(pv float64, exception, learn bool) {
 // now is the running estimate, %. The first difference sees a fast oscillation
 // as noise, the second does so less; the fourth lag sees noise that is correlated.
 func (n *noise) now() float64 {
-	s := math.Min(sigmaOfD1*n.D1.Value(), 1.5*sigmaOfDD*n.DD.Value())
-	s = math.Max(s, math.Min(sigmaOfD1*n.D4.Value(), 2*s))
+	s := min(sigmaOfD1*n.D1.Value(), 1.5*sigmaOfDD*n.DD.Value())
+	s = max(s, min(sigmaOfD1*n.D4.Value(), 2*s))
 	// Quantised data: a uniform error of one step has q/sqrt 12.
 	if n.Least.N > 20 {
-		s = math.Max(s, math.Min(0.289*n.Least.Value(), 2*sigmaOfD1*math.Max(n.D4.Value(), n.D1.Value())+leastNoise))
+		s = max(s, min(0.289*n.Least.Value(), 2*sigmaOfD1*max(n.D4.Value(), n.D1.Value())+leastNoise))
 	}
-	return math.Max(s, leastNoise)
+	return max(s, leastNoise)
 }
 
 // sigma is the noise level, % of range, one standard deviation.
 func (n *noise) sigma() float64 {
 	if n.Long.N >= 3 {
-		return math.Max(n.Long.Value(), leastNoise)
+		return max(n.Long.Value(), leastNoise)
 	}
 	if n.N > 60 {
 		return n.now()

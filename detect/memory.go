@@ -2,13 +2,16 @@ package detect
 
 import (
 	"bytes"
+	"compress/flate"
 	"encoding/binary"
 	"errors"
 	"fmt"
+	"io"
+	"sync"
 )
 
-// Memories: the state as it stands, little-endian, after a head of engine version
-// and time. Written whole, never merged.
+// Memories: the state as it stands, little-endian and deflated, after a head of
+// engine version and time. Written whole, never merged.
 
 // ErrEngine is returned by Load when a memory is of another engine: its profile
 // was taken, the rest must be warmed up.
@@ -20,7 +23,7 @@ var ErrMemory = errors.New("not a memory")
 type memoryHead struct {
 	Magic   uint16
 	Engine  uint16
-	Size    uint32 // of the state, bytes
+	Profile uint32 // its size, bytes
 	Through int64  // ms UTC
 }
 
@@ -41,18 +44,27 @@ type profile struct {
 	}
 }
 
-// Save appends the memory of the loop: profile and transient state, at most
-// 4 KiB, stamped with engine version and Through.
+// deflaters are kept: each holds more than half a megabyte.
+var deflaters = sync.Pool{New: func() any {
+	z, _ := flate.NewWriter(nil, flate.BestSpeed)
+	return z
+}}
+
+// Save appends the memory of the loop: profile and transient state, some 3 KiB,
+// stamped with engine version and Through.
 func (w *Watch) Save(dst []byte) []byte {
-	size := binary.Size(&w.s)
-	psize := binary.Size(profile{})
-	h := memoryHead{memoryMagic, Engine, uint32(size), w.s.Through}
-	b := bytes.NewBuffer(dst)
-	binary.Write(b, binary.LittleEndian, h)
-	binary.Write(b, binary.LittleEndian, uint32(psize))
 	p := w.profile()
-	binary.Write(b, binary.LittleEndian, &p)
-	binary.Write(b, binary.LittleEndian, &w.s)
+	raw := make([]byte, 0, 8<<10)
+	raw, _ = binary.Append(raw, binary.LittleEndian, &p)
+	h := memoryHead{memoryMagic, Engine, uint32(len(raw)), w.s.Through}
+	raw, _ = binary.Append(raw, binary.LittleEndian, &w.s)
+	dst, _ = binary.Append(dst, binary.LittleEndian, h)
+	b := bytes.NewBuffer(dst)
+	z := deflaters.Get().(*flate.Writer)
+	z.Reset(b)
+	z.Write(raw)
+	z.Close()
+	deflaters.Put(z)
 	return b.Bytes()
 }
 
@@ -88,32 +100,27 @@ func (w *Watch) Load(b []byte) error {
 	if err != nil || h.Magic != memoryMagic {
 		return ErrMemory
 	}
-	b = b[n:]
-	var psize uint32
-	if n, err = binary.Decode(b, binary.LittleEndian, &psize); err != nil {
-		return ErrMemory
-	}
-	b = b[n:]
-	if int(psize) > len(b) {
+	raw, err := io.ReadAll(io.LimitReader(flate.NewReader(bytes.NewReader(b[n:])), 64<<10))
+	if err != nil || int(h.Profile) > len(raw) {
 		return ErrMemory
 	}
 	if h.Engine != Engine {
 		var p profile
-		if int(psize) != binary.Size(p) {
+		if int(h.Profile) != binary.Size(p) {
 			return fmt.Errorf("%w: engine %d, this is %d; its profile has another form", ErrEngine, h.Engine, Engine)
 		}
-		if _, err := binary.Decode(b[:psize], binary.LittleEndian, &p); err != nil {
+		if _, err := binary.Decode(raw, binary.LittleEndian, &p); err != nil {
 			return ErrMemory
 		}
 		w.takeProfile(&p)
 		return fmt.Errorf("%w: engine %d, this is %d", ErrEngine, h.Engine, Engine)
 	}
-	b = b[psize:]
+	raw = raw[h.Profile:]
 	var s state
-	if int(h.Size) != binary.Size(&s) || len(b) < int(h.Size) {
+	if len(raw) != binary.Size(&s) {
 		return ErrMemory
 	}
-	if _, err := binary.Decode(b, binary.LittleEndian, &s); err != nil {
+	if _, err := binary.Decode(raw, binary.LittleEndian, &s); err != nil || s.Through != h.Through {
 		return ErrMemory
 	}
 	w.s = s

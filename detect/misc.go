@@ -45,7 +45,7 @@ func (w *Watch) stepStale(f *collector.Frame, t float64, bad bool) {
 	x.BadN++
 	limit := w.loop.SilenceS
 	if !(limit > 0) {
-		limit = math.Max(300, 20*w.s.Grid.DT)
+		limit = max(300, 20*w.s.Grid.DT)
 	}
 	silent := f.Flags&collector.Gap != 0 && f.PV != f.PV
 	if !x.Stale && (silent || t-x.GoodAt > limit && x.BadN > 3) {
@@ -69,20 +69,20 @@ func stepFrozen(w *Watch) {
 		return
 	}
 	if in.hasOP {
-		x.OPTravel = math.Max(x.OPTravel, math.Abs(in.op-x.OPAtStill))
+		x.OPTravel = max(x.OPTravel, math.Abs(in.op-x.OPAtStill))
 	}
 	run := in.t - m.PVSame
 	usual := m.PVRunMax
-	limit := math.Max(math.Max(2700, 300*in.dt), 6*usual)
-	limit = math.Min(limit, math.Max(math.Max(4*3600, 300*in.dt), 2*usual))
-	if x.OPTravel > math.Max(2, 20*s.Noise.sigma()) && in.active {
+	limit := max(max(2700, 300*in.dt), 6*usual)
+	limit = min(limit, max(max(4*3600, 300*in.dt), 2*usual))
+	if x.OPTravel > max(2, 20*s.Noise.sigma()) && in.active {
 		// The controller has noticed: OP travels and nothing comes back.
-		limit = math.Min(limit, math.Max(math.Max(600, 200*in.dt), 4*usual))
+		limit = min(limit, max(max(600, 200*in.dt), 4*usual))
 	}
 	if w.loop.Report == configs.Exception {
-		limit = math.Max(6*3600, 3*usual)
-		if x.OPTravel > math.Max(5, 20*s.Noise.sigma()) && in.active {
-			limit = math.Max(3600, 4*usual)
+		limit = max(6*3600, 3*usual)
+		if x.OPTravel > max(5, 20*s.Noise.sigma()) && in.active {
+			limit = max(3600, 4*usual)
 		}
 	}
 	if run > limit*w.strict {
@@ -116,7 +116,7 @@ func stepRangeEnd(w *Watch) {
 		x.EndSince, x.EndHigh = in.t, high
 	}
 	asks := low && in.sp > 3 || high && in.sp < 97
-	if in.active && asks && (usual || x.Pegged) && x.InsideN > 200 && in.t-x.EndSince > math.Max(math.Max(300, 60*in.dt), 2*w.s.Motion.PVRunMax) {
+	if in.active && asks && (usual || x.Pegged) && x.InsideN > 200 && in.t-x.EndSince > max(max(300, 60*in.dt), 2*w.s.Motion.PVRunMax) {
 		x.Pegged = true
 	}
 }
@@ -127,7 +127,7 @@ const offNormalS = 4 * 3600.0 // s; a shift's half: a spell of manual work is ov
 func stepMode(w *Watch) {
 	s, in := &w.s, &w.in
 	x, m := &s.Misc, &s.Motion
-	normal, _ := collector.ParseMode(w.loop.NormalMode)
+	normal := w.normal
 	since := m.ModeSince
 	off := false
 	switch {

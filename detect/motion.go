@@ -34,6 +34,9 @@ func (m *motion) eRange() float64 {
 	return float64(max(m.EHi[0], m.EHi[1]) - min(m.ELo[0], m.ELo[1]))
 }
 
+// efStep is the step of a lag of three slots.
+var efStep = 1 - math.Exp(-1./3)
+
 // Tolerances of OP, %.
 const (
 	opAtLimit = 0.5  // nearer to a limit than this is at it (methods section 8)
@@ -80,9 +83,9 @@ func (w *Watch) stepMotion(flags collector.Flags) {
 	in.spStep = in.sp - m.SP
 	w.stepSP()
 	w.stepStill()
-	m.EF += (1 - math.Exp(-1./3)) * (in.e - m.EF)
+	m.EF += efStep * (in.e - m.EF)
 
-	half := math.Max(1800, 60*in.dt)
+	half := max(1800, 60*in.dt)
 	if in.t-m.HalfAt >= half {
 		m.HalfLo[1], m.HalfHi[1] = m.HalfLo[0], m.HalfHi[0]
 		m.SPLo[1], m.SPHi[1] = m.SPLo[0], m.SPHi[0]
@@ -136,7 +139,7 @@ func (w *Watch) stepStill() {
 		run := in.t - m.PVSame
 		m.Update.Add(run/in.dt, 0.5, 0.03, 1)
 		if m.Changes > 5 {
-			m.PVRunMax = math.Max(m.PVRunMax, run)
+			m.PVRunMax = max(m.PVRunMax, run)
 		}
 		m.Changes++
 		m.PVSame = in.t
@@ -159,7 +162,7 @@ func (w *Watch) stepStill() {
 	}
 	m.EStillLo, m.EStillHi = min(m.EStillLo, float32(in.e)), max(m.EStillHi, float32(in.e))
 	inside := in.pv > 0.1 && in.pv < 99.9
-	in.frozen = inside && m.Changes > 30 && in.t-m.PVSame > math.Max(10*in.dt, 2*m.PVRunMax)
+	in.frozen = inside && m.Changes > 30 && in.t-m.PVSame > max(10*in.dt, 2*m.PVRunMax)
 	m.Frozen = in.frozen
 }
 
@@ -179,7 +182,7 @@ func (w *Watch) inferredManual() bool {
 		return false
 	}
 	still := in.t - m.OPSame
-	if still < math.Max(300, 60*in.dt) || still < 5*math.Min(m.OPRunMax, 6*3600) || m.Frozen {
+	if still < max(300, 60*in.dt) || still < 5*min(m.OPRunMax, 6*3600) || m.Frozen {
 		return false
 	}
 	moved := float64(m.EStillHi - m.EStillLo)

@@ -66,10 +66,10 @@ func stepOffset(w *Watch) {
 	if !in.active {
 		return
 	}
-	sigma := math.Max(s.Noise.sigma(), 0.02)
-	thr := math.Max(1.8*sigma, 0.8)
+	sigma := max(s.Noise.sigma(), 0.02)
+	thr := max(1.8*sigma, 0.8)
 	if w.loop.OffsetOK > 0 {
-		thr = math.Max(thr, w.loop.OffsetOK/s.Scale.PVSpan*100)
+		thr = max(thr, w.loop.OffsetOK/s.Scale.PVSpan*100)
 	}
 	ef := s.Motion.EF
 	sign := 0.0
@@ -87,7 +87,7 @@ func stepOffset(w *Watch) {
 	if sign != 0 && sign != o.Sign {
 		prev := 0.0
 		if o.Sign != 0 {
-			prev = math.Max(in.t-o.T0, 0.5*o.PrevDur)
+			prev = max(in.t-o.T0, 0.5*o.PrevDur)
 		}
 		*o = offsetState{PrevDur: prev, Sign: sign, T0: in.t, In: in.t, OP0: in.op, E0: in.e, OPs: in.op, Es: in.e, Checked: in.t}
 	}
@@ -95,7 +95,7 @@ func stepOffset(w *Watch) {
 		return
 	}
 	d := in.t - o.T0
-	if in.t-o.In > math.Max(math.Max(60*in.dt, math.Min(1200, 3*w.timeScale())), 0.15*d) {
+	if in.t-o.In > max(max(60*in.dt, min(1200, 3*w.timeScale())), 0.15*d) {
 		o.restart()
 		return
 	}
@@ -113,7 +113,7 @@ func stepOffset(w *Watch) {
 	if o.Far == 0 && math.Abs(in.op-o.OP0) > 15 {
 		o.Far, o.FarE = in.t, math.Abs(o.Es)
 	}
-	if in.t-o.Checked < math.Max(60, 10*in.dt) || o.Dur < 60*in.dt {
+	if in.t-o.Checked < max(60, 10*in.dt) || o.Dur < 60*in.dt {
 		return
 	}
 	o.Checked = in.t
@@ -127,7 +127,7 @@ func (w *Watch) timeScale() float64 {
 	t := 0.0
 	for _, q := range s.Recov.Usual {
 		if q.N >= 3 {
-			t = math.Max(t, q.Value())
+			t = max(t, q.Value())
 		}
 	}
 	if t == 0 {
@@ -185,7 +185,7 @@ func (w *Watch) idleAtLow(sigma float64) bool {
 	if !(o.OP0 < lo+12 || w.sign() == 0 || in.t-o.T0 > 3600 || o.Zero) {
 		return false
 	}
-	if !o.Zero && math.Abs(o.Int)/math.Max(o.Dur, 1) > 3 {
+	if !o.Zero && math.Abs(o.Int)/max(o.Dur, 1) > 3 {
 		o.Stuck = true
 		return false
 	}
@@ -202,7 +202,7 @@ func (w *Watch) judgeOffset(thr float64) {
 	o.Mean = mean
 	recent := mean
 	if a := o.anchorAt(0.7 * d); a != nil {
-		recent = (o.Int - float64(a.Int)) / math.Max(d-float64(a.T), in.dt)
+		recent = (o.Int - float64(a.Int)) / max(d-float64(a.T), in.dt)
 	}
 	if math.Abs(mean) < thr || math.Abs(recent) < 0.6*thr || !in.hasOP {
 		o.Offset, o.Sat = false, false
@@ -217,11 +217,11 @@ func (w *Watch) judgeOffset(thr float64) {
 	rt := w.resetS()
 	push := w.sign() * o.Sign // +1: OP should rise
 	flat := hi-lo < 0.35
-	need := math.Max(math.Max(8*60, 100*in.dt), math.Max(4*rt, 2.5*w.timeScale())) * w.strict
-	need = math.Max(need, 3*o.PrevDur) // PV that comes and goes is a cycle, not an offset
+	need := max(max(8*60, 100*in.dt), max(4*rt, 2.5*w.timeScale())) * w.strict
+	need = max(need, 3*o.PrevDur) // PV that comes and goes is a cycle, not an offset
 	// An own limit: OP stands still at the extreme it ever reached, on the side to
 	// which e pushes (a limit or selector that nobody listed).
-	own := flat && in.t-m.OPSame > math.Max(120*in.dt, 300) && m.OPRunMax < (in.t-m.OPSame)/2 &&
+	own := flat && in.t-m.OPSame > max(120*in.dt, 300) && m.OPRunMax < (in.t-m.OPSame)/2 &&
 		(push > 0 && in.op >= float64(m.OPMax)-0.05 || push < 0 && in.op <= float64(m.OPMin)+0.05)
 	atLimit := own || !in.frozen && (push > 0 && o.OPs >= l1-1 || push < 0 && o.OPs <= l0+1)
 	if atLimit {
@@ -229,7 +229,7 @@ func (w *Watch) judgeOffset(thr float64) {
 			s.Sat.AtSince = in.t
 		}
 		// At a limit the evidence is plain: no need to wait for what the integral does.
-		wait := math.Max(math.Max(900, 100*in.dt), math.Min(2.5*w.timeScale(), 7200)) * w.strict
+		wait := max(max(900, 100*in.dt), min(2.5*w.timeScale(), 7200)) * w.strict
 		if in.t-s.Sat.AtSince > wait {
 			o.Sat, o.Offset = true, false
 			o.Since = s.Sat.AtSince
@@ -253,7 +253,7 @@ func (w *Watch) judgeOffset(thr float64) {
 	if longer < 0 {
 		return
 	}
-	need = math.Max(need, longer)
+	need = max(need, longer)
 	if d > need && !o.Offset && !s.Osc.Grow && !s.Osc.Sus {
 		o.Offset, o.Since = true, o.T0
 	}
@@ -295,7 +295,7 @@ func (w *Watch) offsetCause(kc float64, known bool, rt, d, push, lo, hi float64,
 		return Undetermined, 0.5, 8 * 3600
 	case a.T > 0 && math.Abs(ie/span) < 0.6*math.Abs(float64(a.Int/a.T)):
 		return c, conf, -1 // it is being worked off
-	case !o.WasStill && (s.Tune.Law == 0 || s.Tune.Law > 0.5) && (implied < 0 || implied > 3*span && implied > 4*rt || rt > 0 && implied > 5*rt) && expect > 1.5 && math.Abs(dop-kc*de) < math.Max(0.2*expect, 0.5) && hi-lo < 2.5*math.Abs(kc)*eRange+1:
+	case !o.WasStill && (s.Tune.Law == 0 || s.Tune.Law > 0.5) && (implied < 0 || implied > 3*span && implied > 4*rt || rt > 0 && implied > 5*rt) && expect > 1.5 && math.Abs(dop-kc*de) < max(0.2*expect, 0.5) && hi-lo < 2.5*math.Abs(kc)*eRange+1:
 		return IntegralMissing, 0.9, 0
 	case w.crossesSplit(lo, hi):
 		return Undetermined, 0.5, 4 * 3600
@@ -308,9 +308,9 @@ func (w *Watch) offsetCause(kc float64, known bool, rt, d, push, lo, hi float64,
 		o.NotFollow = true
 		return FinalElementNotFollowing, 0.8, 0
 	case rt > 0 && implied < 3*rt:
-		return OutsideDisturbance, 0.6, math.Max(8*3600, 12*rt) // the load outruns the integral, which does what it must
+		return OutsideDisturbance, 0.6, max(8*3600, 12*rt) // the load outruns the integral, which does what it must
 	}
-	return c, conf, math.Max(6*3600, 20*rt)
+	return c, conf, max(6*3600, 20*rt)
 }
 
 func stepSaturation(w *Watch) {
@@ -328,27 +328,27 @@ func stepSaturation(w *Watch) {
 		side = -1
 	}
 	a := w.sign()
-	sigma := math.Max(s.Noise.sigma(), 0.02)
+	sigma := max(s.Noise.sigma(), 0.02)
 	// Wind-up: a sound controller leaves the limit at or before the change of sign
 	// of e (with conditional integration or tracking OP = limit needs Kc e + I >=
 	// limit and I <= limit); one that stays is wound up.
 	if z.CrossAt > 0 {
-		if side == z.Side && a*s.Motion.EF*side < -math.Max(3*sigma, 0.3) {
+		if side == z.Side && a*s.Motion.EF*side < -max(3*sigma, 0.3) {
 			if z.Frames < 250 {
 				z.Frames++
 			}
 		}
-		z.Peak = math.Max(z.Peak, math.Abs(in.e))
+		z.Peak = max(z.Peak, math.Abs(in.e))
 		if side != z.Side {
 			over := in.t - z.CrossAt
 			rt := w.resetS()
-			if z.Frames >= 5 && over > math.Max(8*in.dt, 0.25*rt) && rt > 0 && z.WindUps < 250 {
+			if z.Frames >= 5 && over > max(8*in.dt, 0.25*rt) && rt > 0 && z.WindUps < 250 {
 				if z.WindUps == 0 || in.t-z.LastWind > 7*86400 {
 					z.WindUps, z.WindSince, z.Over = 0, z.CrossAt, 0
 				}
 				z.WindUps++
 				z.LastWind = in.t
-				z.Over = math.Max(z.Over, over)
+				z.Over = max(z.Over, over)
 				if z.WindUps >= 3 || over > 1.2*rt {
 					z.WindUp = true
 				}

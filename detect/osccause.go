@@ -53,9 +53,9 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 		}
 		g := 1.0
 		if o.Grow && o.Evals < 30 {
-			g = math.Max(1, math.Min(o.Growth, 2))
+			g = max(1, min(o.Growth, 2))
 		}
-		phi = math.Max(0, lagDeg(a, kc, ti, p, g))
+		phi = max(0, lagDeg(a, kc, ti, p, g))
 		o.PhiDeg = phi
 	}
 	byPhi, also := Undetermined, [2]Cause{ResetTooShort, GainTooHigh}
@@ -130,8 +130,8 @@ func phiConfidence(phi float64, ok bool) float64 {
 		return 0.5
 	}
 	// The farther from the undecided band, the surer.
-	d := math.Max(phi-phiReset, phiGain-phi)
-	return math.Min(0.97, 0.8+0.012*math.Max(d, 0))
+	d := max(phi-phiReset, phiGain-phi)
+	return min(0.97, 0.8+0.012*max(d, 0))
 }
 
 // setCause takes a judgement. One that differs from what was named before must
@@ -156,7 +156,7 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	s := &w.s
 	o := &s.Osc
 	q, _ := b.stat(int(o.Bank), min(int(b.N), ringLen))
-	move := o.AmpHi / math.Max(o.AmpLo, 1e-9)
+	move := o.AmpHi / max(o.AmpLo, 1e-9)
 	tri := si > 0.64
 	if phi > 60 && si < 0.72 && !(sh.stick > 0.58) {
 		tri = false // a slow swing far beyond the reset time looks like this too
@@ -182,7 +182,7 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	case integrating && !changed && si > 0.52 && phi < 55 && sh.looks >= 6 && q.regular > 4 && si < 0.7:
 		o.setCause(ValveDeadBand, [2]Cause{ValveSticking}, 0.7)
 	case tri && !changed:
-		o.setCause(ValveSticking, [2]Cause{ProcessNonlinear}, math.Min(0.95, 0.72+0.6*(si-0.64)))
+		o.setCause(ValveSticking, [2]Cause{ProcessNonlinear}, min(0.95, 0.72+0.6*(si-0.64)))
 	case changed:
 		o.setCause(byPhi, also, 0.85)
 	case o.SharedWith > 1 && !tri:

@@ -59,15 +59,20 @@ const growConfirm = 3
 func (w *Watch) judgeCycles(level int, b *cycleBank) {
 	s := &w.s
 	o := &s.Osc
-	st, ok := b.stat(level, 8)
-	in := ok && st.period > bankLowP && st.period < bankHighP
+	period, regular, ok := b.lengths(8)
+	in := ok && period > bankLowP && period < bankHighP
+	var st ringStat
+	watched := o.Grow || o.Sus || b.Conf > 0 || s.Track.On && int(s.Track.Bank) == level
+	if in && (watched || regular > 2.5) {
+		st, _ = b.stat(level, 8)
+	}
 	if !in && w.violent(level, b) {
 		st, in = b.stat(level, 5)
 	}
 	suspect := b.Conf > 0 || o.Grow || o.Sus
 	// Noise teaches the usual size, a regular cycle hardly: a slow growth must not
 	// teach itself.
-	if !suspect && (b.Usual.N < 40 || !(ok && st.regular > 3.5)) {
+	if !suspect && (b.Usual.N < 40 || !(ok && regular > 3.5)) {
 		b.Usual.Add(b.at(0).peak(), 0.75, 0.006, 1e-3)
 	}
 	if !in {
@@ -75,15 +80,18 @@ func (w *Watch) judgeCycles(level int, b *cycleBank) {
 		w.oscGone(level)
 		return
 	}
+	if st.period == 0 {
+		return // irregular: nothing to judge yet
+	}
 	sigma := s.Noise.sigma()
 	own := o.Grow || o.Sus
-	if !own && st.regular > 2.5 && st.amp > math.Max(1.3*sigma, 0.08) && w.betterTrack(level, st) {
+	if !own && st.regular > 3 && st.amp > max(1.3*sigma, 0.08) && (!w.usualKnown(b) || st.amp > 1.2*b.Usual.Value()) && w.betterTrack(level, st) {
 		w.startTrack(level)
 	}
 	if s.Track.On && int(s.Track.Bank) == level {
 		s.Track.grow(b.tip())
 		s.Track.Half++
-		if s.Track.Half >= 2 {
+		if s.Track.Half >= 4 || s.Track.Half >= 2 && (own || s.Track.Looks < 2) {
 			s.Track.Half = 0
 			s.Track.swing()
 			w.lookTrack(st.period * w.levelS(level))
@@ -115,9 +123,9 @@ func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 	usual := b.Usual.Value()
 	tip := b.tip()
 	known := w.usualKnown(b)
-	least := math.Max(1.6*sigma, 0.12)
+	least := max(1.6*sigma, 0.12)
 	if !known {
-		least = math.Max(3*sigma, 1)
+		least = max(3*sigma, 1)
 	}
 	grow := false
 	if o.Sus && o.Evals > 24 && tip < 1.8*o.AmpLo {
@@ -130,8 +138,11 @@ func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 	}
 	if tip > least && w.calmSP(st.period*w.levelS(level)) {
 		for _, r := range growthRules {
+			if tip <= r.usual*usual {
+				continue
+			}
 			if q, ok := b.stat(level, r.n); ok && q.regular >= r.regular*math.Sqrt(w.strict) && q.t >= r.t*w.strict &&
-				math.Pow(q.growth, float64(r.n-2)/2) >= r.over && tip > r.usual*usual {
+				math.Pow(q.growth, float64(r.n-2)/2) >= r.over {
 				grow = true
 				break
 			}
@@ -164,18 +175,22 @@ func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 	if int(o.Bank) != level && !o.Sus {
 		w.beginOsc(level, b, 10)
 	}
-	o.Growth = math.Max(st.growth, 1)
+	o.Growth = max(st.growth, 1)
 }
 
 // violent: loops of hours never show eight half-cycles in time; few but violent
 // ones count: four that each outgrow the last, far over noise and usual size.
 func (w *Watch) violent(level int, b *cycleBank) bool {
-	q, ok := b.stat(level, 5)
-	if !ok || q.regular < 3*w.strict || q.period < bankLowP || q.period > bankHighP {
+	if b.N < 5 || b.at(0).ln() < 0 {
 		return false
 	}
+	period, regular, _ := b.lengths(5)
+	if regular < 3*w.strict || period < bankLowP || period > bankHighP {
+		return false
+	}
+	q := ringStat{period: period}
 	p, tip := q.period*w.levelS(level), b.tip()
-	if p < 1200 || tip < math.Max(3, 4*w.s.Noise.sigma()) || tip < 5*w.usualNear(level) || !w.steadySP(2.5*p) {
+	if p < 1200 || tip < max(3, 4*w.s.Noise.sigma()) || tip < 5*w.usualNear(level) || !w.steadySP(2.5*p) {
 		return false
 	}
 	for i := range 4 {
@@ -230,6 +245,9 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 	sigma := s.Noise.sigma()
 	usual := b.Usual.Value()
 	known := w.usualKnown(b) && b.Usual.N >= 60
+	if st.amp < max(1.5*sigma, 0.3) {
+		return
+	}
 	period := st.period * w.levelS(level)
 	n := 18
 	if q, ok := b.stat(level, 14); ok && q.regular > 7 && q.least > 0.25 {
@@ -237,11 +255,11 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 	}
 	q, ok := b.stat(level, n)
 	if ok && st.period*float64(int(1)<<level) > 12 && s.Noise.known() {
-		big := q.amp > math.Max(3*sigma, 0.6)
-		own := q.amp > math.Max(1.9*sigma, 0.4) && known && q.amp > 2*usual
+		big := q.amp > max(3*sigma, 0.6)
+		own := q.amp > max(1.9*sigma, 0.4) && known && q.amp > 2*usual
 		if (q.regular > 5*w.strict && q.least > 0.4 && big && (!known || q.amp > 1.6*usual) ||
 			q.regular > 4*w.strict && q.least > 0.3 && own ||
-			q.regular > 4*w.strict && q.least > 0.3 && !known && q.amp > math.Max(1.2, 5*sigma)) && w.steadySP(float64(n)/2*period) {
+			q.regular > 4*w.strict && q.least > 0.3 && !known && q.amp > max(1.2, 5*sigma)) && w.steadySP(float64(n)/2*period) {
 			o.Sus = true
 			w.beginOsc(level, b, n)
 			return
@@ -249,7 +267,7 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 	}
 	// Irregular sticking leaves cycles out: the shape of OP makes up for it.
 	if q, ok := b.stat(level, 10); ok && s.Noise.known() && s.Track.On && int(s.Track.Bank) == level && s.Track.Looks >= 4 &&
-		q.regular > 1.6 && q.least > 0.2 && q.amp > math.Max(3.4*sigma, 0.55) && st.period*float64(int(1)<<level) > 20 &&
+		q.regular > 1.6 && q.least > 0.2 && q.amp > max(3.4*sigma, 0.55) && st.period*float64(int(1)<<level) > 20 &&
 		s.Motion.LawSeen && !w.propOnlySeen() && w.steadySP(7*period) && (!known || q.amp > 1.6*usual) {
 		sh := w.shapes()
 		if si := w.stickIndex(sh); si > 0.66 && sh.h3OP < 0.25 {
@@ -286,7 +304,7 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 			o.AmpOn = o.Evals > 8
 			o.AmpHi, o.AmpLo = st.amp, st.amp
 		}
-		o.AmpHi, o.AmpLo = math.Max(o.AmpHi, st.amp), math.Min(o.AmpLo, st.amp)
+		o.AmpHi, o.AmpLo = max(o.AmpHi, st.amp), min(o.AmpLo, st.amp)
 	}
 	// Growth that stops with OP off its limits was no instability: a linear one goes
 	// on until something clips.
@@ -295,9 +313,9 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 		b.Conf = 0
 		o.Cause, o.Conf = 0, 0.5
 	}
-	floor := math.Max(1.6*s.Noise.sigma(), 0.3)
+	floor := max(1.6*s.Noise.sigma(), 0.3)
 	if o.Grow {
-		floor = math.Max(1.6*s.Noise.sigma(), 0.12)
+		floor = max(1.6*s.Noise.sigma(), 0.12)
 	}
 	if st.amp < 0.5*floor || w.usualKnown(b) && st.amp < 1.2*b.Usual.Value() {
 		o.Bad++

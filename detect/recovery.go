@@ -15,8 +15,8 @@ const recRing = 6
 
 // recovery is one finished event.
 type recovery struct {
-	At    float64 // s, end
-	T0    float64 // s, begin
+	At    float32 // s, end
+	T0    float32 // s, begin
 	Dur   float32 // s, from leaving the band to 12 % of the peak
 	Rise  float32 // s, to the peak
 	Peak  float32 // %
@@ -69,8 +69,8 @@ func stepRecovery(w *Watch) {
 	if !in.active || in.frozen {
 		return
 	}
-	sigma := math.Max(s.Noise.sigma(), 0.02)
-	thr := math.Max(3*sigma, 0.3)
+	sigma := max(s.Noise.sigma(), 0.02)
+	thr := max(3*sigma, 0.3)
 	a := math.Abs(s.Motion.EF)
 	if r.On && math.Abs(in.spStep) > 0.2 && in.t-r.T0 > 2*in.dt {
 		w.cutRecovery()
@@ -132,7 +132,7 @@ func (w *Watch) endRecovery(thr float64) {
 	if r.Late || r.Peak < 1.2*thr || r.Sat || !in.hasOP {
 		return
 	}
-	e := recovery{At: in.t, T0: r.T0, Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP}
+	e := recovery{At: float32(in.t), T0: float32(r.T0), Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP}
 	dop := in.op - r.OP0
 	if r.SP && math.Abs(r.DSP) > 2 {
 		dpv := in.pv - r.PV0
@@ -142,13 +142,13 @@ func (w *Watch) endRecovery(thr float64) {
 			tcl := float64(e.Dur) - r.IntPV/dpv
 			tar := r.IntOP/dop - r.IntPV/dpv
 			if !(tar < 0 && -tar > 0.3*tcl) { // else the load moved meanwhile
-				e.Area = float32(tcl / math.Max(tar, 0.5*in.dt))
+				e.Area = float32(tcl / max(tar, 0.5*in.dt))
 			}
 		}
 	}
 	kc, ti, _ := w.tuning(in.t-3*float64(e.Dur), 0)
 	e.Kc, e.Ti = float32(math.Abs(kc)), float32(ti)
-	e.Prop = float32(math.Abs(kc) * r.Peak / math.Max(math.Abs(dop), 1e-6))
+	e.Prop = float32(math.Abs(kc) * r.Peak / max(math.Abs(dop), 1e-6))
 	w.keepRecovery(e)
 }
 
@@ -161,10 +161,10 @@ func (w *Watch) cutRecovery() {
 	if q.N < 4 || r.Sat || in.t-r.T0 < 3*q.Value() {
 		return
 	}
-	e := recovery{At: in.t, T0: r.T0, Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP, Cut: true}
+	e := recovery{At: float32(in.t), T0: float32(r.T0), Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP, Cut: true}
 	kc, ti, _ := w.tuning(in.t-3*float64(e.Dur), 0)
 	e.Kc, e.Ti = float32(math.Abs(kc)), float32(ti)
-	e.Prop = float32(math.Abs(kc) * r.Peak / math.Max(math.Abs(in.op-r.OP0), 1e-6))
+	e.Prop = float32(math.Abs(kc) * r.Peak / max(math.Abs(in.op-r.OP0), 1e-6))
 	w.keepRecovery(e)
 }
 

@@ -40,8 +40,18 @@ func (w *Watch) closeSlot(ms int64) {
 	}
 	end := ms / SiteSlotMs * SiteSlotMs
 	s.Slot = end + SiteSlotMs
+	w.evEnd, w.hasEv = end, true
+}
+
+// TakeEvidence gives the record that the last Step closed, once.
+func (w *Watch) TakeEvidence() (Evidence, bool) {
+	if !w.hasEv {
+		return Evidence{}, false
+	}
+	w.hasEv = false
+	s := &w.s
 	o := &s.Osc
-	e := Evidence{Slot: end}
+	e := Evidence{Slot: w.evEnd}
 	if (o.Sus || o.Grow) && o.Bad < 6 && s.Motion.Active && o.P > 0 {
 		b := &s.Cycles[o.Bank]
 		e.Live, e.Growing, e.PeriodS, e.Regular, e.Amp, e.Since, e.Cause = true, o.Grow, o.P, o.Regular, o.Amp, w.ms(o.Since), causes[o.Cause]
@@ -57,16 +67,7 @@ func (w *Watch) closeSlot(ms int64) {
 			e.N++
 		}
 	}
-	w.ev, w.hasEv = e, true
-}
-
-// TakeEvidence gives the record that the last Step closed, once.
-func (w *Watch) TakeEvidence() (Evidence, bool) {
-	if !w.hasEv {
-		return Evidence{}, false
-	}
-	w.hasEv = false
-	return w.ev, true
+	return e, true
 }
 
 // Sites are the site detectors: they see the evidence of all loops once per slot

@@ -30,8 +30,8 @@ func (w *Watch) judgeSlow() {
 		}
 	}
 	if nr == 3 {
-		m, lo := num.Median(ratios[:3]), math.Min(ratios[0], math.Min(ratios[1], ratios[2]))
-		if w.madeSlower(r.recent(2).T0) && m > 1.8*w.strict && lo > 1.3 {
+		m, lo := num.Median(ratios[:3]), min(ratios[0], min(ratios[1], ratios[2]))
+		if w.madeSlower(float64(r.recent(2).T0)) && m > 1.8*w.strict && lo > 1.3 {
 			own = 1
 		}
 	}
@@ -45,7 +45,7 @@ func (w *Watch) judgeSlow() {
 	for i := range n {
 		if a := float64(r.recent(i).Area); a > 0 {
 			ar[na] = a
-			lo = math.Min(lo, a)
+			lo = min(lo, a)
 			na++
 		}
 	}
@@ -60,8 +60,8 @@ func (w *Watch) judgeSlow() {
 		lo := math.Inf(1)
 		for i := range 5 {
 			e := r.recent(i)
-			t9[i] = float64(e.Dur-e.Rise) / math.Max(float64(e.Rise), 3*w.s.Grid.DT)
-			lo = math.Min(lo, t9[i])
+			t9[i] = float64(e.Dur-e.Rise) / max(float64(e.Rise), 3*w.s.Grid.DT)
+			lo = min(lo, t9[i])
 		}
 		// The tail must be that of the integral: time constant Ti (1 + 1/(Kc K)), which
 		// is Ti over the proportional share; 2.1 of them to 12 %.
@@ -69,7 +69,7 @@ func (w *Watch) judgeSlow() {
 		nt := 0
 		for i := range 5 {
 			if e := r.recent(i); !e.SP && e.Ti > 0 && e.Prop > 0 {
-				tail[nt] = float64(e.Dur) / (2.1 * float64(e.Ti) / math.Min(1, math.Max(0.03, float64(e.Prop))))
+				tail[nt] = float64(e.Dur) / (2.1 * float64(e.Ti) / min(1, max(0.03, float64(e.Prop))))
 				nt++
 			}
 		}
@@ -86,8 +86,8 @@ func (w *Watch) judgeSlow() {
 func (w *Watch) slowByHistory(n int) bool {
 	r := &w.s.Recov
 	need, over, least := 4, 3.0, 4.0
-	k0, t0, okb := w.usualTuning(r.recent(min(n, 5) - 1).T0)
-	kc, ti, ok := w.tuning(r.recent(2).T0, 0)
+	k0, t0, okb := w.usualTuning(float64(r.recent(min(n, 5) - 1).T0))
+	kc, ti, ok := w.tuning(float64(r.recent(2).T0), 0)
 	if ok && okb && ti > 0 && t0 > 0 && math.Abs(math.Log(math.Abs(kc)/k0)) < 0.35 && math.Abs(math.Log(ti/t0)) < 0.35 {
 		need, over = 5, 2.5
 	}
@@ -129,13 +129,13 @@ func (w *Watch) slowCause(own, area, shape int, durs []float64) {
 		return
 	}
 	first := r.recent(2)
-	kc, ti, ok := w.tuning(first.T0, 0)
-	since := first.T0
+	kc, ti, ok := w.tuning(float64(first.T0), 0)
+	since := float64(first.T0)
 	if r.Slow {
 		since = r.SlowSince
 	}
 	kb, tb, okb := w.usualTuning(since - 2*float64(first.Dur))
-	if c := &w.s.Change; w.madeSlower(first.T0) {
+	if c := &w.s.Change; w.madeSlower(float64(first.T0)) {
 		okb = true
 		if c.What&1 != 0 {
 			kb = float64(c.GainWas)
@@ -173,7 +173,7 @@ func (w *Watch) slowCause(own, area, shape int, durs []float64) {
 		cause, conf = GainTooLow, 0.8
 	}
 	if !r.Slow {
-		r.Slow, r.SlowSince = true, first.T0
+		r.Slow, r.SlowSince = true, float64(first.T0)
 	}
 	r.Cause, r.Conf = causeIndex(cause), float32(conf)
 	r.By = uint8(map3(own, area))

@@ -30,9 +30,7 @@ type openFinding struct {
 	Cause    uint8
 	Conf     float32
 	Since    float64
-	At       float64
 	Strength float32
-	Updates  uint16
 }
 
 const kinds = 11

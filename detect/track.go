@@ -10,7 +10,7 @@ import (
 // period, and sums up its shape cycle by cycle: the sine-triangle index of He et
 // al. (2007), the third harmonic, the travel of PV, the phase of OP against e.
 
-const trackLen = 128
+const trackLen = 104
 
 // Samples are kept as int16 of 0.002 %: finer than any transmitter, wide enough
 // for full scale.
@@ -61,7 +61,7 @@ func (k *track) forget() {
 }
 
 func pack(v float64) int16 {
-	return int16(math.Max(-32767, math.Min(32767, math.Round(v/trackStep))))
+	return int16(max(-32767, min(32767, math.Round(v/trackStep))))
 }
 
 func (w *Watch) startTrack(level int) {
@@ -153,7 +153,7 @@ func ratio(a, b float64) float64 {
 	if !(b > 1e-12) {
 		return 0
 	}
-	return math.Min(a/b, 10)
+	return min(a/b, 10)
 }
 
 // weight is the sum of the fading weights of the looks.
@@ -301,7 +301,7 @@ func busiestFifth(x []float64) float64 {
 
 // grow adds one amplitude to the regression over the episode.
 func (k *track) grow(amp float64) {
-	x, y := k.GN, math.Log(math.Max(amp, 1e-9))
+	x, y := k.GN, math.Log(max(amp, 1e-9))
 	k.GN++
 	k.GX += x
 	k.GY += y
@@ -320,6 +320,6 @@ func (k *track) slope() (beta, t float64) {
 	sxy := k.GXY - k.GX*k.GY/n
 	syy := k.GYY - k.GY*k.GY/n
 	beta = sxy / sxx
-	rss := math.Max(syy-beta*sxy, 1e-12)
+	rss := max(syy-beta*sxy, 1e-12)
 	return beta, beta / math.Sqrt(rss/(n-2)/sxx)
 }

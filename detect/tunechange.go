@@ -44,24 +44,24 @@ func (w *Watch) tuneCheck(k int) {
 			return
 		}
 		ks[i], ts[i] = math.Abs(float64(f.Kc)), float64(f.Ti)
-		oldest = math.Min(oldest, f.T0)
+		oldest = min(oldest, float64(f.T0))
 	}
 	span := func(x []float64) float64 {
 		lo, hi := math.Inf(1), math.Inf(-1)
 		for _, v := range x {
-			lo, hi = math.Min(lo, v), math.Max(hi, v)
+			lo, hi = min(lo, v), max(hi, v)
 		}
-		return hi / math.Max(lo, 1e-12)
+		return hi / max(lo, 1e-12)
 	}
 	kn, tn := num.Median(ks[:]), num.Median(ts[:])
 	what := uint8(0)
-	if r := kn / math.Max(b.BaseK.Value(), 1e-9); math.Abs(math.Log(r)) > math.Max(math.Log(changeRatio), 3.5*b.DevK.Value())*w.strict && span(ks[:]) < changeSpread {
+	if r := kn / max(b.BaseK.Value(), 1e-9); math.Abs(math.Log(r)) > max(math.Log(changeRatio), 3.5*b.DevK.Value())*w.strict && span(ks[:]) < changeSpread {
 		what |= 1
 	}
-	if b.BaseT.N >= 4 && tn > 0 && math.Min(math.Min(ts[0], ts[1]), math.Min(ts[2], ts[3])) > 0 {
+	if b.BaseT.N >= 4 && tn > 0 && min(min(ts[0], ts[1]), min(ts[2], ts[3])) > 0 {
 		// The scale must see the reset: neither far below the filter nor far above.
 		th := fitTh * w.levelS(2*k)
-		if r := tn / math.Max(b.BaseT.Value(), 1e-9); math.Abs(math.Log(r)) > math.Max(math.Log(changeRatio), 3.5*b.DevT.Value())*w.strict && span(ts[:]) < changeSpread && tn < 20*th {
+		if r := tn / max(b.BaseT.Value(), 1e-9); math.Abs(math.Log(r)) > max(math.Log(changeRatio), 3.5*b.DevT.Value())*w.strict && span(ts[:]) < changeSpread && tn < 20*th {
 			what |= 2
 		}
 	}
@@ -74,7 +74,7 @@ func (w *Watch) tuneCheck(k int) {
 	if s.Motion.SPStep > oldest && s.Motion.SPPrevStep < oldest {
 		return
 	}
-	if w.in.t-oldest < math.Max(600, math.Min(3*tn, 4*3600)) {
+	if w.in.t-oldest < max(600, min(3*tn, 4*3600)) {
 		return
 	}
 	*c = tuneChange{On: true, At: oldest, Seen: w.in.t, GainWas: b.BaseK.V, GainNow: float32(kn), ResetWas: b.BaseT.V, ResetNow: float32(tn),
@@ -83,7 +83,7 @@ func (w *Watch) tuneCheck(k int) {
 		s.Recov.Hold = 12 // the recoveries to come are compared with those before
 	}
 	// From here on the new tuning is the usual one.
-	b.BaseK, b.BaseT = num.Quantile{V: float32(kn), N: 6}, num.Quantile{V: float32(math.Max(tn, 1e-3)), N: 6}
+	b.BaseK, b.BaseT = num.Quantile{V: float32(kn), N: 6}, num.Quantile{V: float32(max(tn, 1e-3)), N: 6}
 }
 
 // readTuning follows tuning tags: a change there is a fact, not an estimate.

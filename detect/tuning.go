@@ -18,7 +18,7 @@ const (
 	fitTh    = 6.5 // high pass, samples of the level
 	fitTl    = 1.0 // low pass, samples
 	fitScale = 5.0 // T, samples
-	fitRing  = 6
+	fitRing  = 5
 )
 
 var (
@@ -46,14 +46,15 @@ type fit struct {
 	Ti float32 // s; negative or huge: no integral action seen
 	R2 float32
 	X  float32
-	At float64 // s
-	T0 float64 // s, begin of its block
+	At float32 // s
+	T0 float32 // s, begin of its block
 }
 
 func (f *fit) ok() bool { return f.R2 > fitR2 && f.X > fitX }
 
 type fitBank struct {
-	Lo, Mi, Hi                [3]float64 // filter states of e, Int e, OP
+	E, OP                     [3]float32 // filter states: low pass, low pass again, high pass
+	S                         [3]float64 // of Int e, which grows large
 	A00, A01, A11, B0, B1, YY float64
 	Start                     float64 // s, of the block
 	Warm                      uint32  // samples since the restart
@@ -76,19 +77,17 @@ type tuneState struct {
 
 func (w *Watch) stepFit(k, level int, e, si, op float64) {
 	b := &w.s.Fits[k]
-	v := [3]float64{e, si, op}
 	if b.Warm == 0 {
-		b.Lo, b.Mi, b.Hi = v, v, v
+		e, op := float32(e), float32(op)
+		b.E, b.S, b.OP = [3]float32{e, e, e}, [3]float64{si, si, si}, [3]float32{op, op, op}
 		b.clear(w.in.t)
 	}
 	b.Warm++
-	var o [3]float64
-	for i := range v {
-		b.Lo[i] += fitAL * (v[i] - b.Lo[i])
-		b.Mi[i] += fitAL * (b.Lo[i] - b.Mi[i])
-		b.Hi[i] += fitAH * (b.Mi[i] - b.Hi[i])
-		o[i] = b.Mi[i] - b.Hi[i]
-	}
+	o := [3]float64{pass(&b.E, e), 0, pass(&b.OP, op)}
+	b.S[0] += fitAL * (si - b.S[0])
+	b.S[1] += fitAL * (b.S[0] - b.S[1])
+	b.S[2] += fitAH * (b.S[1] - b.S[2])
+	o[1] = b.S[1] - b.S[2]
 	h := w.levelS(level)
 	if w.in.limit {
 		w.s.Tune.LimitAt = w.in.t
@@ -127,6 +126,15 @@ func (w *Watch) stepFit(k, level int, e, si, op float64) {
 		b.Last = r
 	}
 	b.clear(w.in.t)
+}
+
+// pass is the band pass of the fits.
+func pass(f *[3]float32, v float64) float64 {
+	lo := float64(f[0]) + fitAL*(v-float64(f[0]))
+	mi := float64(f[1]) + fitAL*(lo-float64(f[1]))
+	hi := float64(f[2]) + fitAH*(mi-float64(f[2]))
+	f[0], f[1], f[2] = float32(lo), float32(mi), float32(hi)
+	return mi - hi
 }
 
 func (b *fitBank) clear(t float64) {
@@ -173,8 +181,8 @@ func (w *Watch) solveFit(k int) (r fit) {
 	ki := (b.B1*b.A00 - b.B0*b.A01) / det
 	rss := b.YY - kc*b.B0 - ki*b.B1
 	h := w.levelS(2 * k)
-	s := math.Max(w.s.Noise.sigma(), 0.01)
-	r = fit{Kc: float32(kc), Ti: float32(kc / ki), R2: float32(1 - rss/b.YY), At: w.in.t, T0: b.Start}
+	s := max(w.s.Noise.sigma(), 0.01)
+	r = fit{Kc: float32(kc), Ti: float32(kc / ki), R2: float32(1 - rss/b.YY), At: float32(w.in.t), T0: float32(b.Start)}
 	r.X = float32(b.A11 / float64(b.N) / (s * s * w.s.Grid.DT * h * fitNoise))
 	return
 }
@@ -191,10 +199,10 @@ func (w *Watch) tuning(since, period float64) (kc, ti float64, ok bool) {
 				r = q
 			}
 		}
-		if r.At < since || !r.ok() {
+		if float64(r.At) < since || !r.ok() {
 			continue
 		}
-		score := 10*float64(r.R2) + math.Min(1, float64(r.X)/2000)
+		score := 10*float64(r.R2) + min(1, float64(r.X)/2000)
 		if period > 0 {
 			score -= 0.6 * math.Abs(math.Log(fitScale*w.levelS(2*k)*6/period))
 		}
@@ -215,7 +223,7 @@ func (w *Watch) usualTuning(t float64) (kc, ti float64, ok bool) {
 		n, nt := 0, 0
 		for i := range min(int(b.Count), fitRing) {
 			f := &b.Ring[i]
-			if f.At < t && f.R2 > 0.95 {
+			if float64(f.At) < t && f.R2 > 0.95 {
 				ks[n] = math.Abs(float64(f.Kc))
 				n++
 				if f.Ti > 0 {

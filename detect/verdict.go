@@ -13,21 +13,16 @@ func (w *Watch) verdict() { w.verdictAt(w.in.t) }
 
 func (w *Watch) verdictAt(t float64) {
 	s := &w.s
-	changed := false
-	for k := range table {
-		c := table[k].claim(w)
-		c.On = c.On && w.judges(k)
-		s.Claim[k] = c
-		if c.On || s.Open[k].On {
-			changed = true
-		}
-	}
-	if !changed {
+	if s.OpenN == 0 && !w.suspects() {
 		return
+	}
+	var c [kinds]claim
+	for k := range table {
+		c[k] = table[k].claim(w)
+		c[k].On = c[k].On && w.judges(k)
 	}
 	// Saturation explains the offset; growth explains the swing; pegged or frozen
 	// PV explains what the controller makes of it.
-	c := &s.Claim
 	rejudge := [kinds]bool{}
 	fold := func(child int) {
 		if c[child].On {
@@ -46,17 +41,18 @@ func (w *Watch) verdictAt(t float64) {
 		fold(kSluggish)
 	}
 	for k := range table {
-		w.settle(k, t, rejudge[k])
+		w.settle(k, t, &c[k], rejudge[k])
 	}
 }
 
 // settle compares what is claimed with what was said.
-func (w *Watch) settle(k int, t float64, rejudged bool) {
+func (w *Watch) settle(k int, t float64, c *claim, rejudged bool) {
 	s := &w.s
-	c, o := &s.Claim[k], &s.Open[k]
+	o := &s.Open[k]
 	switch {
 	case c.On && !o.On:
-		*o = openFinding{On: true, Cause: c.Cause, Conf: c.Conf, Since: c.Since, At: t, Strength: c.Strength}
+		s.OpenN++
+		*o = openFinding{On: true, Cause: c.Cause, Conf: c.Conf, Since: c.Since, Strength: c.Strength}
 		w.say(k, Raised, t, "")
 	case c.On:
 		moved := math.Abs(float64(c.Conf-o.Conf)) >= 0.1
@@ -66,7 +62,6 @@ func (w *Watch) settle(k int, t float64, rejudged bool) {
 			if worse {
 				o.Strength = c.Strength
 			}
-			o.Updates++
 			w.say(k, Updated, t, "")
 		}
 	case o.On:
@@ -85,7 +80,16 @@ func (w *Watch) settle(k int, t float64, rejudged bool) {
 		}
 		w.say(k, Cleared, t, why)
 		*o = openFinding{}
+		s.OpenN--
 	}
+}
+
+// suspects says whether any detector has something to claim: the common slot has
+// nothing, and is spared the rest.
+func (w *Watch) suspects() bool {
+	s := &w.s
+	return s.Osc.Grow || s.Osc.Sus || s.Off.Offset || s.Off.Sat || s.Sat.WindUp || s.Recov.Slow ||
+		s.Misc.Frozen || s.Misc.Pegged || s.Misc.OffNormal || s.Misc.Stale || s.Change.On
 }
 
 // say emits the finding of a kind as it stands.
@@ -126,7 +130,7 @@ func (w *Watch) finding(k int, e Event, t float64) Finding {
 			f.Measures = append(f.Measures, Measure{row.Measures[i], v})
 		}
 	}
-	for _, a := range s.Claim[k].Also {
+	for _, a := range table[k].claim(w).Also {
 		if c := causes[a]; c != NoCause && c != f.Cause && c != Undetermined {
 			f.AlsoPossible = append(f.AlsoPossible, c)
 		}
@@ -156,5 +160,5 @@ func strictness(perLoopYear float64) float64 {
 		return 1
 	}
 	f := 1 - 0.15*math.Log10(perLoopYear/0.1)
-	return math.Max(0.7, math.Min(1.6, f))
+	return max(0.7, min(1.6, f))
 }

@@ -121,9 +121,9 @@ func (w *Watch) tuningRange() (k, k0, k1, t, t0, t1 float64) {
 		for j := range min(int(b.Count), fitRing) {
 			f := &b.Ring[j]
 			g := math.Abs(float64(f.Kc))
-			k0, k1 = math.Min(k0, g), math.Max(k1, g)
+			k0, k1 = min(k0, g), max(k1, g)
 			if f.Ti > 0 {
-				t0, t1 = math.Min(t0, float64(f.Ti)), math.Max(t1, float64(f.Ti))
+				t0, t1 = min(t0, float64(f.Ti)), max(t1, float64(f.Ti))
 			}
 		}
 	}
@@ -204,10 +204,10 @@ func (w *Watch) Explain() []string {
 	for i := range int(min(s.Recov.Count, recRing)) {
 		e := s.Recov.recent(i)
 		out = append(out, fmt.Sprintf("recovery at %s: %s, peak %.2f %%, rise %s, ratio to usual %.2f, proportional share %.2f, residence ratio %.2f, set point %v",
-			FormatTime(w.ms(e.At)), duration(float64(e.Dur)), e.Peak, duration(float64(e.Rise)), e.Ratio, e.Prop, e.Area, e.SP))
+			FormatTime(w.ms(float64(e.At))), duration(float64(e.Dur)), e.Peak, duration(float64(e.Rise)), e.Ratio, e.Prop, e.Area, e.SP))
 	}
 	if s.Off.Sign != 0 {
-		out = append(out, fmt.Sprintf("one-sided error for %s, mean %.2f %%", duration(w.in.t-s.Off.T0), s.Off.Int/math.Max(s.Off.Dur, 1e-9)))
+		out = append(out, fmt.Sprintf("one-sided error for %s, mean %.2f %%", duration(w.in.t-s.Off.T0), s.Off.Int/max(s.Off.Dur, 1e-9)))
 	}
 	for k := range table {
 		if s.Open[k].On {

@@ -31,12 +31,13 @@ type Options struct {
 type Watch struct {
 	loop   *configs.Loop
 	id     collector.LoopID
-	strict float64 // factor on persistence from the nuisance budget, 1 at the default
+	normal collector.Mode // of the loop
+	strict float64        // factor on persistence from the nuisance budget, 1 at the default
 	s      state
 	in     input
 	emit   func(*Finding)
-	mute   bool // warm-up: nothing is learnt or said
-	ev     Evidence
+	mute   bool  // warm-up: nothing is learnt or said
+	evEnd  int64 // end of the slot closed by the last Step, ms UTC
 	hasEv  bool
 }
 
@@ -62,14 +63,14 @@ type state struct {
 	Misc    miscState
 	Change  tuneChange
 	Open    [kinds]openFinding
-	Claim   [kinds]claim
+	OpenN   uint8 // findings open
 	Slot    int64 // end of the running evidence slot, ms UTC
 }
 
 // New makes the watch of a loop. id is put into its findings.
 func New(l *configs.Loop, id collector.LoopID, o Options) *Watch {
-	w := &Watch{loop: l, id: id, strict: strictness(o.NuisancePerLoopYear)}
-	return w
+	normal, _ := collector.ParseMode(l.NormalMode)
+	return &Watch{loop: l, id: id, normal: normal, strict: strictness(o.NuisancePerLoopYear)}
 }
 
 // Step takes the next frame and emits what it makes of it. A frame not newer
@@ -151,7 +152,7 @@ func (w *Watch) learnInterval(t float64) bool {
 	g := &w.s.Grid
 	said := w.loop.SampleS
 	if said > 0 && w.loop.Report == configs.Exception {
-		g.DT, g.At = said, t
+		g.DT, g.At, g.Levels = said, t, levelsFor(said)
 		return true
 	}
 	if g.N == 0 {
@@ -172,10 +173,11 @@ func (w *Watch) learnInterval(t float64) bool {
 		m = quantile(x[:], 0.1)
 	}
 	// Milliseconds are all a frame holds; a shorter interval is a burst.
-	g.DT = math.Max(m, 0.05)
+	g.DT = max(m, 0.05)
 	if said > 0 && math.Abs(m/said-1) < 0.3 {
 		g.DT = said
 	}
+	g.Levels = levelsFor(g.DT)
 	g.At, g.Fast, g.Slow, g.Seen, g.N = t, 0, 0, 0, 0
 	return true
 }
@@ -200,7 +202,7 @@ func (w *Watch) relearn(k int) bool {
 	// Filters and rings count in slots: they begin anew, the noise level too.
 	keep := w.s
 	w.s = state{Through: keep.Through, Grid: grid{T0: keep.Grid.T0, Begun: true, At: keep.Grid.At, LastFrame: keep.Grid.LastFrame},
-		Scale: keep.Scale, Last: keep.Last, Misc: keep.Misc, Change: keep.Change, Open: keep.Open, Slot: keep.Slot}
+		Scale: keep.Scale, Last: keep.Last, Misc: keep.Misc, Change: keep.Change, Open: keep.Open, OpenN: keep.OpenN, Slot: keep.Slot}
 	w.s.Motion.first()
 	return true
 }

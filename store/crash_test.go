@@ -305,7 +305,9 @@ func spoilOne(t *testing.T, d damage, paths []string, r *rand.Rand, noticed, los
 	// As a daemon does after an unclean stop: a spoiled free list shows nowhere
 	// else before new frames are written over old ones.
 	if newest := filepath.Join(dir, filepath.Base(paths[len(paths)-1])); victim == len(paths)-1 {
-		err := CheckInChild(context.Background(), os.Args[:1], newest)
+		ctx, cancel := context.WithTimeout(context.Background(), 10*time.Second)
+		defer cancel()
+		err := CheckInChild(ctx, os.Args[:1], newest)
 		if errors.Is(err, ErrDamaged) {
 			ps.add(Problem{Damaged, newest, err.Error()})
 			if _, err = SetAside(newest); err != nil {
@@ -420,6 +422,11 @@ func TestCheckInChild(t *testing.T) {
 	t.Logf("%d zeroed pages of %d found", found, len(b)/pageBytes/3)
 	if found == 0 {
 		t.Error("no zeroed page was found")
+	}
+	late, cancel := context.WithTimeout(context.Background(), -1)
+	defer cancel()
+	if err := CheckInChild(late, os.Args[:1], path); !errors.Is(err, ErrDamaged) {
+		t.Errorf("a check that does not end says %v", err)
 	}
 	if err := CheckInChild(context.Background(), []string{"/nonexistent"}, path); err == nil || errors.Is(err, ErrDamaged) {
 		t.Errorf("a check that cannot run says %v", err)

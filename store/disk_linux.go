@@ -22,3 +22,8 @@ func diskBytes(st os.FileInfo) int64 {
 	}
 	return st.Size()
 }
+
+// limitMemory bounds what this process may allocate from now on.
+func limitMemory(bytes uint64) error {
+	return syscall.Setrlimit(syscall.RLIMIT_DATA, &syscall.Rlimit{Cur: bytes, Max: bytes})
+}

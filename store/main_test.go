@@ -18,7 +18,7 @@ func TestMain(m *testing.M) {
 		childWrite(os.Args[len(os.Args)-1])
 		os.Exit(1)
 	case "check":
-		if err := Check(os.Args[len(os.Args)-1]); err != nil {
+		if err := CheckAlone(os.Args[len(os.Args)-1]); err != nil {
 			fmt.Fprintln(os.Stderr, err)
 			os.Exit(1)
 		}

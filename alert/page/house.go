@@ -16,6 +16,8 @@ import (
 // methods are safe for concurrent use, quick unless said otherwise, and return
 // what the caller may keep.
 type House interface {
+	// Site is where the box stands; Zone is not nil.
+	Site() configs.Site
 	// Summary is the state of the watch in a few numbers. It is asked for every
 	// two seconds by every open page.
 	Summary() Summary

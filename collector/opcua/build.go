@@ -80,16 +80,21 @@ func (s *Source) buildOne(ctx context.Context, sess *session, sub *subscription)
 	return s.watchClock(ctx, sess, sub)
 }
 
-// watchClock monitors the server's CurrentTime in the subscription, as its last
-// item: it always changes, and what it says says what has been delivered. A
+// watchClock monitors the server's CurrentTime in the subscription, after its
+// tags, and in the first also the server's state. The clock always changes, and what it says says what has been delivered. A
 // server that refuses it, or whose clock stands still, is watched by its publish
 // times instead.
 func (s *Source) watchClock(ctx context.Context, sess *session, sub *subscription) error {
-	got, err := sess.monitor(ctx, sub.id, []*ua.MonitoredItemCreateRequest{{
-		ItemToMonitor: value(ua.NewNumericNodeID(0, id.Server_ServerStatus_CurrentTime)), MonitoringMode: ua.MonitoringModeReporting,
-		RequestedParameters: &ua.MonitoringParameters{ClientHandle: clockHandle, SamplingInterval: float64(sub.interval.Milliseconds()),
-			QueueSize: s.queueFor(sub.interval), DiscardOldest: true},
-	}})
+	own := func(node, handle uint32) *ua.MonitoredItemCreateRequest {
+		return &ua.MonitoredItemCreateRequest{ItemToMonitor: value(ua.NewNumericNodeID(0, node)), MonitoringMode: ua.MonitoringModeReporting,
+			RequestedParameters: &ua.MonitoringParameters{ClientHandle: handle, SamplingInterval: float64(sub.interval.Milliseconds()),
+				QueueSize: s.queueFor(sub.interval), DiscardOldest: true}}
+	}
+	items := []*ua.MonitoredItemCreateRequest{own(id.Server_ServerStatus_CurrentTime, clockHandle)}
+	if sub == s.subs[0] { // a server without it just has none to tell
+		items = append(items, own(id.Server_ServerStatus_State, stateHandle))
+	}
+	got, err := sess.monitorAll(ctx, sub.id, items)
 	if err != nil {
 		return fmt.Errorf("watching the server's clock: %w", err)
 	}

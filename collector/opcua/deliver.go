@@ -43,6 +43,10 @@ func (s *Source) deliver(in collector.Intake, sub *subscription, m message, batc
 					clock = max(clock, clockOf(change.Value))
 					continue
 				}
+				if change.ClientHandle == stateHandle {
+					s.heardState(change.Value)
+					continue
+				}
 				if int(change.ClientHandle) >= len(sub.items) {
 					s.counts.strays.Add(1)
 					continue
@@ -79,6 +83,17 @@ func clockOf(v *ua.DataValue) int64 {
 	}
 	t, _ := v.Value.Value().(time.Time)
 	return millis(t)
+}
+
+// heardState notes what the server says of itself.
+func (s *Source) heardState(v *ua.DataValue) {
+	x, _, ok := number(v.Value, -1)
+	if !ok || quality(v.Status) == collector.Bad {
+		return
+	}
+	s.mu.Lock()
+	s.server = ua.ServerState(x)
+	s.mu.Unlock()
 }
 
 // tick says what has been delivered: the server's clock as it was sampled in the

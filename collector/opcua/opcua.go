@@ -16,6 +16,8 @@ import (
 	"sync"
 	"time"
 
+	"github.com/gopcua/opcua/ua"
+
 	"midwatch/collector"
 	"midwatch/configs"
 )
@@ -81,7 +83,8 @@ type Source struct {
 	skew     median
 	late     time.Time // since when the source has been late
 	certs    certDays
-	live     *session // the session in use while watching, for history
+	server   ua.ServerState // as the server says of itself; 0 is running
+	live     *session       // the session in use while watching, for history
 }
 
 // New checks the settings and the addresses of the bindings and plans the

@@ -60,8 +60,11 @@ type item struct {
 	text    string
 }
 
-// clockHandle is the client handle of the server's CurrentTime.
-const clockHandle = ^uint32(0) >> 1
+// Client handles of the server's CurrentTime and State.
+const (
+	clockHandle = ^uint32(0) >> 1
+	stateHandle = clockHandle - 1
+)
 
 // plan packs loops into subscriptions of at most maxItems items; the tags of a
 // loop stay together. There is always one subscription, so that a source without
@@ -90,7 +93,7 @@ func plan(bindings []collector.Binding, source uint16, maxItems int) []*subscrip
 			}
 		}
 		sub := subs[len(subs)-1]
-		if len(sub.items)+len(fresh)+1 > maxItems && len(sub.items) > 0 { // one place is the clock's
+		if len(sub.items)+len(fresh)+2 > maxItems && len(sub.items) > 0 { // two places are the server's own
 			open()
 			sub = subs[len(subs)-1]
 		}

@@ -4,8 +4,11 @@ import (
 	"fmt"
 	"math"
 	"slices"
+	"strings"
 	"sync/atomic"
 	"time"
+
+	"github.com/gopcua/opcua/ua"
 
 	"midwatch/collector"
 )
@@ -135,6 +138,9 @@ func (s *Source) State() collector.SourceState {
 	switch {
 	case s.fault != nil:
 		st.Problem, st.Hint = s.fault.problem, s.fault.hint
+	case s.link == "watching" && s.server != ua.ServerStateRunning:
+		st.Problem = "the server says of itself: " + strings.TrimPrefix(s.server.String(), "ServerState")
+		st.Hint = "look at the server; its values may stand still"
 	case s.certs.server != (time.Time{}) && now.After(s.certs.server):
 		st.Problem = "the server's certificate expired on " + s.certs.server.Format(time.DateOnly)
 		st.Hint = "renew it on the server"

@@ -159,8 +159,8 @@ func oddTypes(t *testing.T, p *peer) {
 func TestLimitsProbeSurveyHistory(t *testing.T) {
 	t.Parallel()
 	p := startPeer(t, "--loops", "30", "--rate", "2", "--max-per-call", "7", "--max-browse", "2", "--history", "--flat", "--host", "plc-7.kestrel-fen.example")
-	// Six subscriptions of five loops each: five times four tags and the clock.
-	w := run(t, plainConfig(p.url), bind(30), func(s *Source) { s.subs = plan(bind(30), 3, 21) })
+	// Six subscriptions of five loops each: five times four tags, and two of the server.
+	w := run(t, plainConfig(p.url), bind(30), func(s *Source) { s.subs = plan(bind(30), 3, 22) })
 	w.flows(t, 20*time.Second)
 	eventually(t, 10*time.Second, "each life group ticks", func() bool {
 		w.in.mu.Lock()

@@ -145,11 +145,11 @@ func TestPlanKeepsLoopsTogether(t *testing.T) {
 	// The OP of loop 0 is the SP of loop 11: one item where both lie together.
 	bindings = append(bindings, collector.Binding{Loop: 11, Role: collector.RoleSP, Address: "ns=2;s=9.OP", Sample: 250},
 		collector.Binding{Loop: 11, Role: collector.RolePV, Address: "ns=2;s=11.PV"})
-	subs := plan(bindings, 7, 10)
+	subs := plan(bindings, 7, 11)
 	where := map[collector.LoopID]int{}
 	total := 0
 	for i, sub := range subs {
-		if len(sub.items)+1 > 10 || sub.group != (collector.Group{Source: 7, Sub: uint16(i)}) {
+		if len(sub.items)+2 > 11 || sub.group != (collector.Group{Source: 7, Sub: uint16(i)}) {
 			t.Errorf("subscription %d: group %v, %d items", i, sub.group, len(sub.items))
 		}
 		for _, it := range sub.items {
@@ -331,6 +331,12 @@ func TestTicksSayWhatWasDelivered(t *testing.T) {
 	// While more messages wait, the clock of the second is not yet a promise.
 	if diff := cmp.Diff([]int64{99_000, 101_000}, got); diff != "" {
 		t.Error(diff)
+	}
+	unwell := message{NotificationMessage: &ua.NotificationMessage{NotificationData: []*ua.ExtensionObject{{Value: &ua.DataChangeNotification{
+		MonitoredItems: []*ua.MonitoredItemNotification{{ClientHandle: stateHandle, Value: &ua.DataValue{Value: ua.MustVariant(int32(ua.ServerStateCommunicationFault))}}}}}}}}
+	s.set("watching", nil)
+	if _, err := s.deliver(in, sub, unwell, nil); err != nil || !strings.Contains(s.State().Problem, "CommunicationFault") {
+		t.Errorf("%v, state %+v: want what the server says of itself", err, s.State())
 	}
 	ended := message{NotificationMessage: &ua.NotificationMessage{NotificationData: []*ua.ExtensionObject{{Value: &ua.StatusChangeNotification{Status: ua.StatusBadTimeout}}}}}
 	if _, err := s.deliver(in, sub, ended, nil); !needsFresh(err) {

@@ -195,7 +195,7 @@ func SineTriangle(x []float64) (mseSine, mseTriangle float64) {
 	mseTriangle = math.Inf(1)
 	for k := 1; k <= 17; k++ {
 		p := 0.05 + 0.05*float64(k)
-		mseTriangle = math.Min(mseTriangle, fit(func(u float64) float64 {
+		mseTriangle = min(mseTriangle, fit(func(u float64) float64 {
 			if u > p {
 				return (1 - u) / (1 - p)
 			}

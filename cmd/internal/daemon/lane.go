@@ -16,6 +16,7 @@ import (
 type lane struct {
 	n, of   int
 	watches []*detect.Watch // by id / of; nil: the loop is gone
+	names   []string
 	pace    []pace
 	emit    func(*detect.Finding)
 
@@ -52,6 +53,7 @@ type pace struct {
 	d1    int64
 	hold  int64 // ms; how far back its decisions may reach over missing frames
 	dark  bool  // the newest frame says: out of sight from here on
+	late  bool  // catching up: everybody waits
 }
 
 // exceptionHoldMs is more than the watch fills in by holding, by exception.
@@ -116,13 +118,17 @@ func (l *lane) put(c *configs.Loop, id collector.LoopID, o detect.Options) *dete
 	for len(l.watches) <= k {
 		l.watches = append(l.watches, nil)
 		l.pace = append(l.pace, pace{})
+		l.names = append(l.names, "")
 	}
-	l.watches[k], l.pace[k] = nil, pace{}
+	l.watches[k], l.pace[k], l.names[k] = nil, pace{}, ""
 	if c != nil {
-		l.watches[k], l.pace[k] = detect.New(c, id, o), newPace(c)
+		l.watches[k], l.pace[k], l.names[k] = detect.New(c, id, o), newPace(c), c.Name
 	}
 	return l.watches[k]
 }
+
+// at gives the index of a loop in the lane.
+func (l *lane) at(id collector.LoopID) int { return int(id) / l.of }
 
 func (l *lane) watch(id collector.LoopID) *detect.Watch {
 	if k := int(id) / l.of; k < len(l.watches) {
@@ -134,7 +140,10 @@ func (l *lane) watch(id collector.LoopID) *detect.Watch {
 // loaded takes over where the frames of a loop stood when its memory was made.
 func (l *lane) loaded(id collector.LoopID) {
 	k := int(id) / l.of
-	w, p := l.watches[k], &l.pace[k]
+	l.pace[k].resume(l.watches[k])
+}
+
+func (p *pace) resume(w *detect.Watch) {
 	t := w.Through()
 	if t == 0 {
 		return
@@ -154,12 +163,17 @@ func (l *lane) loaded(id collector.LoopID) {
 // nothing.
 func (l *lane) step(id collector.LoopID, f *collector.Frame) {
 	k := int(id) / l.of
-	w, p := l.watches[k], &l.pace[k]
+	l.pace[k].judge(l.watches[k], id, f, l.emit, &l.news)
+}
+
+// judge is the step of one loop: the watch, and its evidence at the end of a
+// slot.
+func (p *pace) judge(w *detect.Watch, id collector.LoopID, f *collector.Frame, emit func(*detect.Finding), n *news) {
 	if f.Time <= p.last {
 		return
 	}
 	waited := p.pass(f)
-	w.Step(f, l.emit)
+	w.Step(f, emit)
 	if f.Time < p.slot {
 		return
 	}
@@ -171,7 +185,7 @@ func (l *lane) step(id collector.LoopID, f *collector.Frame) {
 	// Evidence that nobody waited for may or may not come in time, as batches
 	// fall: it never counts.
 	if waited {
-		l.news.evidence = append(l.news.evidence, record{id, e})
+		n.evidence = append(n.evidence, record{id, e})
 	}
 }
 
@@ -190,6 +204,10 @@ func (l *lane) limits(newest int64) (sites, order int64) {
 	sites, order = math.MaxInt64, math.MaxInt64
 	for k := range l.pace {
 		p := &l.pace[k]
+		if p.late {
+			sites, order = min(sites, p.last), min(order, p.last)
+			continue
+		}
 		if p.last == 0 {
 			continue
 		}

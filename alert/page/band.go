@@ -1,0 +1,197 @@
+package page
+
+import (
+	"math"
+	"strconv"
+	"time"
+
+	"midwatch/detect"
+)
+
+// band is one strip, ready for the template. X and W are per cent of the width.
+type band struct {
+	Name, Path string // Path: name as a path segment
+	Service    string
+	Area       string
+	Class      string // of the most urgent open trouble; empty where all is well
+	Width      int    // buckets
+	Trace      string // SVG path over Width x 60
+	Blind      bool   // drawn dotted: nothing of it is judged
+	Spans      []bandSpan
+	Strong     string
+	Rest       string
+	Mark       string // of Strong
+}
+
+// bandSpan is a marked stretch of a strip and a link to it.
+type bandSpan struct {
+	Class    string // now, morning, note, past, aside, off, gone, limit
+	Mark     string
+	X, W     string
+	Moment   bool
+	Label    string // for readers
+	From, To int64  // ms UTC, of the link
+	MarkX    string
+}
+
+func percent(v float64) string {
+	return strconv.FormatFloat(math.Round(max(0, min(100, v))*100)/100, 'f', -1, 64) + "%"
+}
+
+// leastBand is the least PV span, in % of range, that fills a strip: a quiet
+// loop looks quiet.
+const leastBand = 4
+
+// trace draws least to greatest PV of every bucket as one path of whole
+// numbers, 60 high.
+func trace(b []bucket) string {
+	low, high := math.Inf(1), math.Inf(-1)
+	for _, x := range b {
+		if x.saw&sawData != 0 {
+			low, high = min(low, widenPV(x.low)), max(high, widenPV(x.high))
+		}
+	}
+	if low > high {
+		return ""
+	}
+	mid, half := (low+high)/2, max(high-low, leastBand)/2
+	y := func(v int16) int64 { return int64(math.Round(30 - (widenPV(v)-mid)/half*28)) }
+	out := make([]byte, 0, 8*len(b))
+	pen, lastX, lastY := false, int64(0), int64(0)
+	for i, x := range b {
+		if x.saw&sawData == 0 {
+			pen = false
+			continue
+		}
+		top, bottom := y(x.high), y(x.low)
+		// The nearer end comes first: one stroke from bucket to bucket.
+		if pen && abs(bottom-lastY) < abs(top-lastY) {
+			top, bottom = bottom, top
+		}
+		if !pen {
+			out = append(out, 'M')
+			out = strconv.AppendInt(out, int64(i), 10)
+			out = append(out, ' ')
+			out = strconv.AppendInt(out, top, 10)
+		} else {
+			out = append(out, 'l')
+			out = strconv.AppendInt(out, int64(i)-lastX, 10)
+			out = appendStep(out, top-lastY)
+		}
+		if bottom != top {
+			out = append(out, 'v')
+			out = strconv.AppendInt(out, bottom-top, 10)
+		} else if !pen {
+			out = append(out, "h0"...)
+		}
+		pen, lastX, lastY = true, int64(i), bottom
+	}
+	return string(out)
+}
+
+func appendStep(b []byte, v int64) []byte {
+	if v >= 0 {
+		b = append(b, ' ')
+	}
+	return strconv.AppendInt(b, v, 10)
+}
+
+func abs(v int64) int64 {
+	if v < 0 {
+		return -v
+	}
+	return v
+}
+
+// bandOf makes the strip of a loop from from to now.
+func bandOf(l *LoopState, ts []trouble, b []bucket, now time.Time, span time.Duration, zone *time.Location) band {
+	out := band{Name: l.Loop.Name, Path: pathName(l.Loop.Name), Service: l.Loop.Service, Area: l.Loop.Area, Width: len(b), Trace: trace(b)}
+	end := now.UnixMilli()
+	start := end - span.Milliseconds()
+	out.Blind = l.State == detect.CannotJudge
+	// What buckets saw lies below what was found.
+	states := out.runs(b, sawInactive|sawHidden, "off", "manual", "law not acting", end, now, zone)
+	gone := out.runsGone(b, end, now, zone)
+	out.runs(b, sawLimit, "limit", "", "OP at a limit", end, now, zone)
+	for i := len(ts) - 1; i >= 0; i-- {
+		t := &ts[i]
+		until := t.Until
+		if until == 0 {
+			until = end
+		}
+		if until < start || t.Since > end {
+			continue
+		}
+		x := float64(t.Since-start) / float64(end-start) * 100
+		w := float64(until-max(t.Since, start)) / float64(end-start) * 100
+		strong, rest := t.say(now, zone)
+		if rest != "" {
+			strong += ", " + rest
+		}
+		pad := max((until-t.Since)/4, 15*60*1000)
+		out.Spans = append(out.Spans, bandSpan{Class: t.class(), Mark: t.Mark, X: percent(x), W: percent(w), MarkX: percent(min(x, 98)),
+			Moment: isMoment(t.Kind), Label: strong, From: t.Since - pad, To: min(until+pad, end)})
+	}
+	switch {
+	case len(ts) > 0 && ts[0].open():
+		out.Class, out.Mark = ts[0].class(), ts[0].Mark
+		out.Strong, out.Rest = ts[0].say(now, zone)
+	case l.State != detect.Judged && l.State != "":
+		out.Rest = stateWords[l.State]
+		if l.Why != "" {
+			out.Rest += ": " + l.Why
+		}
+	case len(ts) > 0 && ts[0].Until >= start:
+		out.Strong, out.Rest = ts[0].say(now, zone)
+		out.Mark = ts[0].Mark
+	case states != "":
+		out.Rest = states
+	case gone != "":
+		out.Rest = gone
+	}
+	return out
+}
+
+// runs marks the stretches whose buckets saw any of what, and says the last.
+func (o *band) runs(b []bucket, what uint8, class, mark, word string, end int64, now time.Time, zone *time.Location) string {
+	return o.stretches(b, func(x bucket) bool { return x.saw&what != 0 }, 1, class, mark, word, end, now, zone)
+}
+
+// runsGone marks the stretches without data. A single empty bucket is only a
+// slow loop.
+func (o *band) runsGone(b []bucket, end int64, now time.Time, zone *time.Location) string {
+	return o.stretches(b, func(x bucket) bool { return x.saw&sawData == 0 }, 3, "gone", "stale", "no data", end, now, zone)
+}
+
+func (o *band) stretches(b []bucket, in func(bucket) bool, least int, class, mark, word string, end int64, now time.Time, zone *time.Location) string {
+	said := ""
+	first := end/bucketMs - int64(len(b)) + 1
+	for i := 0; i < len(b); i++ {
+		if !in(b[i]) {
+			continue
+		}
+		j := i
+		for j < len(b) && in(b[j]) {
+			j++
+		}
+		// The bucket that has just begun says nothing yet.
+		if j-i < least || class == "gone" && i >= len(b)-2 {
+			i = j
+			continue
+		}
+		from, to := (first+int64(i))*bucketMs, min((first+int64(j))*bucketMs, end)
+		text := word + " " + clock(from, now, zone) + " – " + clock(to, now, zone)
+		if j == len(b) {
+			text = word + " since " + clock(from, now, zone)
+		}
+		if i == 0 && j == len(b) {
+			text = word
+		}
+		s := bandSpan{Class: class, Mark: mark, X: percent(float64(i) / float64(len(b)) * 100), W: percent(float64(j-i) / float64(len(b)) * 100),
+			MarkX: percent(min(float64(i)/float64(len(b))*100, 98)), Label: text, From: from - 15*60*1000, To: min(to+15*60*1000, end)}
+		o.Spans = append(o.Spans, s)
+		said = text
+		i = j
+	}
+	return said
+}

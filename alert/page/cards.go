@@ -1,0 +1,181 @@
+package page
+
+import (
+	"context"
+	"strings"
+	"sync"
+	"time"
+
+	"midwatch/alert"
+	"midwatch/configs"
+	"midwatch/detect"
+)
+
+// card is one open episode that needs a look.
+type card struct {
+	ID      string
+	Subject string
+	Link    string // below the root, relative
+	Service string
+	Class   string
+	Mark    string
+	Urgency alert.Urgency
+	Why     string // why this urgency
+	State   alert.State
+	Text    string
+	Since   string
+	UTC     string
+	Left    string
+	Sure    string
+	Loop    string // subject, where it is a loop
+	Path    string // of Loop
+	Others  int    // further loops of the episode
+	Trace   string // SVG path over 300 x 60
+	OnsetX  string
+	OnsetW  string
+	Span    string // what the trend covers
+	Count   int
+	Hold    string
+	Group   bool
+}
+
+// cards gives what needs a look, the most urgent first, at most maxCards. only
+// is a loop's name, or empty for all.
+func (p *Page) cards(ctx context.Context, l *look, only string) (out []card, more int) {
+	byName := map[string]*configs.Loop{}
+	for i := range l.loops {
+		byName[l.loops[i].Loop.Name] = l.loops[i].Loop
+	}
+	for i := range l.eps {
+		e := &l.eps[i]
+		st := e.State()
+		if !e.Open() || st == alert.Shelved || st == alert.SuppressedByDesign || st == alert.OutOfService {
+			continue
+		}
+		if only != "" && e.Subject.Loop != only {
+			continue
+		}
+		if len(out) == maxCards {
+			more++
+			continue
+		}
+		out = append(out, p.card(ctx, l, e, byName))
+	}
+	return out, more
+}
+
+func (p *Page) card(ctx context.Context, l *look, e *alert.Episode, byName map[string]*configs.Loop) card {
+	f := e.Lead()
+	look := lookOf(f.Kind)
+	u, why := p.o.House.Urgency(e)
+	c := card{ID: e.ID, Class: string(u), Mark: look.Mark, Urgency: u, Why: why, State: e.State(), Text: f.Text, Sure: sure(&f),
+		Since: clock(f.Since, l.now, l.zone), UTC: utc(f.Since), Count: e.Count, Others: max(0, len(e.Loops())-1)}
+	if c.Text == "" {
+		c.Text = strings.ToUpper(look.Word[:1]) + look.Word[1:] + "."
+	}
+	if e.Hold != nil {
+		c.Hold = "cannot be seen since " + clock(e.Hold.Since, l.now, l.zone) + ": " + e.Hold.Why
+	}
+	if what, ok := timeLeft(&f); ok {
+		left := float64(f.At)/1000 + leftSeconds(&f) - float64(l.now.UnixMilli())/1000
+		c.Left = what + " about " + clock(l.now.UnixMilli()+int64(left*1000), l.now, l.zone)
+		if left > 60 {
+			c.Left += ", " + seconds(left) + " left"
+		}
+	}
+	name := e.Subject.Loop
+	c.Group = f.Kind == detect.SharedOscillation
+	switch {
+	case c.Group:
+		c.Subject, c.Link = strings.Join(first(e.Loops(), 3), ", "), "episodes/"+pathName(e.ID)
+		if n := len(e.Loops()); n > 3 {
+			c.Subject += " and " + number(float64(n-3), 6) + " more"
+		}
+		if ls := e.Loops(); len(ls) > 0 {
+			name = ls[0]
+		}
+	case name != "":
+		c.Subject, c.Loop, c.Path, c.Link = name, name, pathName(name), "loops/"+pathName(name)
+	case e.Subject.Source != "":
+		c.Subject, c.Link = e.Subject.Source, "watch"
+	default:
+		c.Subject, c.Link = e.Subject.Part, "watch"
+	}
+	if lp := byName[name]; lp != nil {
+		if !c.Group {
+			c.Service = lp.Service
+		}
+		p.cardTrend(ctx, &c, lp, f.Since, l.now)
+	}
+	return c
+}
+
+func first(s []string, n int) []string { return s[:min(n, len(s))] }
+
+// cardTrend draws PV from before the onset to now, at most two days of it.
+func (p *Page) cardTrend(ctx context.Context, c *card, l *configs.Loop, since int64, now time.Time) {
+	end := now.UnixMilli()
+	before := max((end-since)*2/3, 30*60*1000)
+	from := max(since-before, end-2*24*3600*1000)
+	t := p.sparks.get(sparkKey{c.ID, end / 60000}, func() string { return p.spark(ctx, l, from, end) })
+	c.Trace = t
+	x := max(0, float64(since-from)/float64(end-from)*100)
+	c.OnsetX, c.OnsetW = percent(x), percent(100-x)
+	c.Span = clock(from, now, p.o.House.Site().Zone) + " – now"
+}
+
+// spark draws least and greatest PV of 300 buckets as a path 60 high.
+func (p *Page) spark(ctx context.Context, l *configs.Loop, from, to int64) string {
+	const n = 300
+	b := make([]bucket, n)
+	for f, err := range p.o.House.Frames(ctx, l.Name, from, to+1) {
+		if err != nil {
+			return ""
+		}
+		if f.PV != f.PV {
+			continue
+		}
+		x := &b[min(int64(n-1), (f.Time-from)*n/max(1, to-from))]
+		v := squeezePV((float64(f.PV) - l.PVLow) / l.PVSpan() * 100)
+		if x.saw == 0 {
+			x.low, x.high, x.saw = v, v, sawData
+		}
+		x.low, x.high = min(x.low, v), max(x.high, v)
+	}
+	return trace(b)
+}
+
+// sparks keeps small trends for a minute: many pages ask for the same.
+type sparks struct {
+	mu  sync.Mutex
+	has map[sparkKey]string
+}
+
+type sparkKey struct {
+	id     string
+	minute int64
+}
+
+func (s *sparks) get(k sparkKey, draw func() string) string {
+	s.mu.Lock()
+	v, ok := s.has[k]
+	s.mu.Unlock()
+	if ok {
+		return v
+	}
+	v = draw()
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	for old := range s.has {
+		if old.minute != k.minute {
+			delete(s.has, old)
+		}
+	}
+	if s.has == nil {
+		s.has = map[sparkKey]string{}
+	}
+	if v != "" {
+		s.has[k] = v
+	}
+	return v
+}

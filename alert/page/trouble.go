@@ -1,0 +1,159 @@
+package page
+
+import (
+	"cmp"
+	"slices"
+	"strings"
+	"time"
+
+	"midwatch/alert"
+	"midwatch/detect"
+)
+
+// trouble is one finding of one loop as a span of time: what a strip marks and
+// a chart shades.
+type trouble struct {
+	Episode string
+	Kind    detect.Kind
+	Mark    string
+	Word    string
+	Urgency alert.Urgency
+	State   alert.State
+	Since   int64 // ms UTC
+	Until   int64 // 0: it stands
+	Finding detect.Finding
+	Hold    *alert.Hold
+	Shelf   *alert.Mark
+}
+
+// open says that it stands and is not put aside by anyone.
+func (t *trouble) open() bool { return t.Until == 0 }
+
+// quietNow says that somebody decided not to be bothered.
+func (t *trouble) quietNow() bool {
+	return t.State == alert.Shelved || t.State == alert.SuppressedByDesign || t.State == alert.OutOfService
+}
+
+// class names the colour: urgency where it stands, past where it is over.
+func (t *trouble) class() string {
+	switch {
+	case !t.open():
+		return "past"
+	case t.quietNow():
+		return "aside"
+	}
+	return string(t.Urgency)
+}
+
+// troubles of all loops, by loop; each loop's the most urgent first. Those of a
+// group are listed with every loop of it.
+func troubles(d Desk, eps []alert.Episode) map[string][]trouble {
+	out := map[string][]trouble{}
+	for i := range eps {
+		e := &eps[i]
+		if e.Into != "" {
+			continue
+		}
+		u, _ := d.Urgency(e)
+		state := e.State()
+		for j := range e.Members {
+			m := &e.Members[j]
+			f := m.Finding
+			look := lookOf(f.Kind)
+			t := trouble{Episode: e.ID, Kind: f.Kind, Mark: look.Mark, Word: look.Word, Urgency: u, State: state,
+				Since: f.Since, Finding: f, Hold: e.Hold, Shelf: e.Shelf}
+			if !m.Open {
+				t.Until = f.At
+				if f.Event != detect.Cleared {
+					t.Until = max(e.Cleared, e.Last)
+				}
+			}
+			loops := []string{f.Loop}
+			if f.Kind == detect.SharedOscillation {
+				loops = append(loops, f.Loops...)
+				loops = append(loops, e.Group...)
+			}
+			slices.Sort(loops)
+			for _, l := range slices.Compact(loops) {
+				if l != "" {
+					out[l] = append(out[l], t)
+				}
+			}
+		}
+	}
+	for _, ts := range out {
+		slices.SortFunc(ts, func(a, b trouble) int {
+			return cmp.Or(boolOrder(b.open(), a.open()), boolOrder(a.quietNow(), b.quietNow()),
+				cmp.Compare(urgencyOrder(a.Urgency), urgencyOrder(b.Urgency)), cmp.Compare(b.Since, a.Since), strings.Compare(a.Episode, b.Episode))
+		})
+	}
+	return out
+}
+
+// boolOrder sorts false before true.
+func boolOrder(a, b bool) int {
+	switch {
+	case a == b:
+		return 0
+	case a:
+		return 1
+	}
+	return -1
+}
+
+// say is a trouble in a few words with the time: strong first, then the rest.
+func (t *trouble) say(now time.Time, zone *time.Location) (strong, rest string) {
+	f := &t.Finding
+	switch {
+	case isMoment(t.Kind):
+		strong = t.Word + " at " + clock(t.Since, now, zone)
+	case t.open():
+		strong = t.Word + " since " + clock(t.Since, now, zone)
+	default:
+		return "was " + t.Word + " " + clock(t.Since, now, zone) + " – " + clock(t.Until, now, zone), "over"
+	}
+	var more []string
+	if t.Kind == detect.SharedOscillation && len(f.Loops) > 0 {
+		more = append(more, quantity(float64(len(f.Loops)), "loops"))
+	}
+	if left, ok := timeLeft(f); ok {
+		more = append(more, left+" about "+clock(f.At+int64(leftSeconds(f)*1000), now, zone))
+	} else if w := sure(f); w != "" && t.Kind != detect.NotInNormalMode && !strings.HasPrefix(w, t.Word) {
+		more = append(more, w)
+	} else if v, ok := f.Measures.Get("period_s"); ok {
+		more = append(more, "cycle "+seconds(v))
+	}
+	switch t.State {
+	case alert.Shelved:
+		more = append(more, "shelved")
+	case alert.Held:
+		if t.Hold != nil {
+			more = append(more, "cannot be seen since "+clock(t.Hold.Since, now, zone)+": "+t.Hold.Why)
+		}
+	case alert.Acknowledged:
+		more = append(more, "acknowledged")
+	}
+	return strong, strings.Join(more, " · ")
+}
+
+// timeLeft names what a growing swing meets first.
+func timeLeft(f *detect.Finding) (string, bool) {
+	op, okOP := f.Measures.Get("time_to_op_limit_s")
+	pv, okPV := f.Measures.Get("time_to_pv_alarm_s")
+	switch {
+	case okPV && (!okOP || pv < op):
+		return "PV alarm", true
+	case okOP:
+		return "OP limit", true
+	}
+	return "", false
+}
+
+func leftSeconds(f *detect.Finding) float64 {
+	op, okOP := f.Measures.Get("time_to_op_limit_s")
+	pv, okPV := f.Measures.Get("time_to_pv_alarm_s")
+	if okPV && (!okOP || pv < op) {
+		return pv
+	}
+	return op
+}
