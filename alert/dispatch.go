@@ -263,12 +263,15 @@ func (b *batch) toldBefore(id string, before uint32, sender string) bool {
 	return false
 }
 
+// workAhead is the next working hour; inside working hours, the one after they end:
+// what goes wrong in the coming night is said before people go home.
 func (d *Desk) workAhead(local time.Time) horizon {
-	h := horizon{nextChange(d.set.working(), local).UnixMilli(), "the next working hour"}
-	if within(d.set.working(), local) {
-		h.words = "working hours end"
+	hs := d.set.working()
+	next := nextChange(hs, local)
+	if !within(hs, local) {
+		return horizon{next.UnixMilli(), "the next working hour"}
 	}
-	return h
+	return horizon{nextChange(hs, next).UnixMilli(), "work begins again"}
 }
 
 // Beyond one message in 10 minutes, several become one; more than ten in 10
@@ -411,14 +414,12 @@ func (b *batch) enqueue(to string, t Type, items []Item, sections []Section, tit
 	d.mem.meta.Seq++
 	x := &delivery{Seq: d.mem.meta.Seq, Sender: to, Type: t, Items: items, Sections: sections, Title: title,
 		Written: now.UnixMilli(), Next: now.UnixMilli()}
-	switch {
-	case t == TypeAdvisory:
+	if t == TypeAdvisory {
 		x.ID, x.Step = items[0].Episode, items[0].Step
-	case len(items) > 0:
-		// The first item is nowhere else told to this sender: it makes the key stable.
-		x.ID, x.Step = string(t)+"-"+items[0].Episode, items[0].Step
-	default:
-		x.ID = fmt.Sprintf("%s-%s", t, now.UTC().Format("20060102-1504"))
+	} else {
+		// Written down with the message, so the key stays the same; the number keeps
+		// apart what is made in one minute.
+		x.ID = fmt.Sprintf("%s-%s-%d", t, now.UTC().Format("20060102-1504"), x.Seq)
 	}
 	for i := range items {
 		if err := b.markTold(items[i].Episode, items[i].Step, to, "queued"); err != nil {

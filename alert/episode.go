@@ -91,6 +91,7 @@ type toldState struct {
 	Strength   float64      `json:"strength,omitempty"` // amplitude or offset, %
 	Loops      int          `json:"loops,omitempty"`
 	Urgent     bool         `json:"urgent,omitempty"`
+	LimitAt    int64        `json:"limit_at,omitempty"` // predicted, data time
 }
 
 // Open says whether any of its findings stands.

@@ -40,6 +40,8 @@ func TestUrgency(t *testing.T) {
 	}{
 		{"limit before work begins", f("A", detect.GrowingOscillation, detect.Raised, at(night), measure("time_to_op_limit_s", 3600)), nil, Now},
 		{"limit after work begins", f("A", detect.GrowingOscillation, detect.Raised, at(night), measure("time_to_op_limit_s", 12*3600)), nil, Morning},
+		{"in working hours, a limit in the coming night", f("A", detect.GrowingOscillation, detect.Raised, 300, measure("time_to_op_limit_s", 12*3600)), nil, Now},
+		{"in working hours, a limit tomorrow at work", f("A", detect.GrowingOscillation, detect.Raised, 300, measure("time_to_op_limit_s", 20*3600)), nil, Morning},
 		{"PV alarm reached", f("A", detect.SustainedOffset, detect.Raised, at(night), measure("time_to_pv_alarm_s", 0)), nil, Now},
 		{"the nearer of two limits", f("A", detect.SustainedOffset, detect.Raised, at(night), measure("time_to_op_limit_s", 90000), measure("time_to_pv_alarm_s", 60)), nil, Now},
 		{"OP at its limit", f("A", detect.OutputSaturation, detect.Raised, at(night)), nil, Now},
@@ -53,7 +55,7 @@ func TestUrgency(t *testing.T) {
 		{"sluggish, however near a limit", f("A", detect.SluggishRecovery, detect.Raised, at(night), measure("time_to_op_limit_s", 1)), nil, Note},
 		{"over", f("A", detect.FrozenPV, detect.Cleared, at(night)), nil, Note},
 	} {
-		if got, _ := urgency(&c.f, c.l, d.workAhead(night)); got != c.want {
+		if got, _ := urgency(&c.f, c.l, d.workAhead(time.UnixMilli(c.f.At).UTC())); got != c.want {
 			t.Errorf("%s: %q, want %q", c.name, got, c.want)
 		}
 	}
@@ -99,6 +101,47 @@ func TestNightAndDay(t *testing.T) {
 	}
 	if got := r.hook.take(); len(got) != 4 {
 		t.Errorf("the program got %d messages, want all 4", len(got))
+	}
+}
+
+// TestLimitThatComesSooner: what could wait for the morning wakes someone once it
+// cannot.
+func TestLimitThatComesSooner(t *testing.T) {
+	r := newRig(t, func(s *Settings) { s.Advise.Digest.Daily = "07:00" })
+	r.run(start)
+	swings := func(minute, hours float64, ev detect.Event) detect.Finding {
+		return f("AIC-204", detect.GrowingOscillation, ev, minute, measure("time_to_op_limit_s", hours*3600))
+	}
+	r.hear(swings(at(night), 20, detect.Raised))
+	r.run(night)
+	if n := len(r.mail.take()); n != 0 {
+		t.Fatalf("%d messages about a limit reached tomorrow at work", n)
+	}
+	r.hear(swings(at(night)+60, 4, detect.Updated))
+	r.run(night.Add(time.Hour))
+	if got := r.mail.take(); len(got) != 1 || got[0].Urgency != Now {
+		t.Fatalf("%d messages once it is reached in the night, want one that wakes", len(got))
+	}
+}
+
+// TestDailyAndWeeklyAtOnce: neither digest swallows the other.
+func TestDailyAndWeeklyAtOnce(t *testing.T) {
+	r := newRig(t, func(s *Settings) { s.Advise.Digest = configs.Digest{Daily: "07:00", Weekly: "mon 07:00"} })
+	r.run(start)
+	for day := range 7 {
+		r.run(start.Add(time.Duration(21+24*day) * time.Hour))
+	}
+	var daily, weekly int
+	for _, m := range r.mail.take() {
+		if strings.Contains(m.Subject, "daily digest") {
+			daily++
+		}
+		if strings.Contains(m.Subject, "weekly digest") {
+			weekly++
+		}
+	}
+	if daily != 7 || weekly != 1 {
+		t.Errorf("%d daily and %d weekly digests in a week, want 7 and 1", daily, weekly)
 	}
 }
 
@@ -321,7 +364,7 @@ func TestLifeCycle(t *testing.T) {
 		defer r.desk.Stop()
 		minute := 0.0
 		open, exists, acked, shelved, why := false, false, false, false, ""
-		entries := uint32(0)
+		entries := map[string]uint32{}
 		for range rapid.IntRange(1, 30).Draw(rt, "steps") {
 			minute += float64(rapid.IntRange(1, 300).Draw(rt, "minutes"))
 			now := start.Add(time.Duration(minute) * time.Minute)
@@ -395,10 +438,10 @@ func TestLifeCycle(t *testing.T) {
 			if e.State() != want {
 				rt.Fatalf("after %s: %q, want %q", act, e.State(), want)
 			}
-			if uint32(len(js)) != e.Entries || e.Count == 1 && e.Entries < entries {
+			if uint32(len(js)) != e.Entries || e.Entries < entries[e.ID] {
 				rt.Fatalf("the journal lost lines: %d of %d", len(js), e.Entries)
 			}
-			entries = e.Entries
+			entries[e.ID] = e.Entries
 		}
 	})
 }

@@ -54,7 +54,8 @@ func (b *batch) step(e *Episode, event detect.Event, at int64, quiet, worse bool
 	e.Steps++
 	b.touch(e)
 	lead := e.Lead()
-	e.Told = toldState{Event: event, Cause: lead.Cause, Kind: lead.Kind, Confidence: lead.Confidence, Strength: strength(&lead),
+	limit, _, _ := limitAt(&lead)
+	e.Told = toldState{LimitAt: limit, Event: event, Cause: lead.Cause, Kind: lead.Kind, Confidence: lead.Confidence, Strength: strength(&lead),
 		Loops: len(e.Loops()), Urgent: urgentSoon(&lead)}
 	s := step{Item: e.item(), Wall: b.d.wall(), Quiet: quiet, Worse: worse}
 	s.Event, s.At = event, at
@@ -81,6 +82,11 @@ func (e *Episode) news() (news, worse, quiet bool) {
 	s := strength(&lead)
 	doubled := s > 0 && s >= 2*told.Strength
 	urgent := urgentSoon(&lead) && !told.Urgent
+	// A limit that comes in half the time told before is news: it may fall into
+	// the night now.
+	if at, _, ok := limitAt(&lead); ok && told.LimitAt != 0 && at-lead.At <= (told.LimitAt-lead.At)/2 {
+		urgent = true
+	}
 	grew := len(e.Loops()) >= 2*max(told.Loops, 1)
 	cause := lead.Cause != told.Cause && named(lead.Cause)
 	kind := lead.Kind != told.Kind
@@ -157,8 +163,7 @@ func digestOnly(k detect.Kind) bool {
 	return false
 }
 
-// horizon is the time before which a limit must not be reached unseen: the next
-// working hour, or inside working hours their end.
+// horizon is the time before which a limit must not be reached unseen.
 type horizon struct {
 	at    int64 // wall time, ms UTC
 	words string

@@ -67,6 +67,7 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 	}
 	k0, t0, okb := w.usualTuning(o.Since - 2*p)
 	rk, rt := 0.0, 0.0
+	byChange := false
 	if okb && ok && ti > 0 && t0 > 0 {
 		rk, rt = math.Abs(kc)/k0, ti/t0
 	}
@@ -75,9 +76,9 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 		between := phi > 25 && phi < 65
 		switch lk, lt := math.Log(rk), math.Log(rt); {
 		case lt < -0.7 && math.Abs(lk) < 0.25 && !(phi < 4): // plainly the reset was shortened, and only it
-			byPhi, also = ResetTooShort, [2]Cause{GainTooHigh}
+			byPhi, also, byChange = ResetTooShort, [2]Cause{GainTooHigh}, true
 		case lk > 0.5 && math.Abs(lt) < 0.25 && !(phi > 55):
-			byPhi, also = GainTooHigh, [2]Cause{ResetTooShort}
+			byPhi, also, byChange = GainTooHigh, [2]Cause{ResetTooShort}, true
 		case !between:
 		case lk > 0.22 && math.Abs(lt) < 0.5*lk:
 			byPhi, also = GainTooHigh, [2]Cause{ResetTooShort}
@@ -110,8 +111,12 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 		// Once OP is clipped the fit fails: the cause found before stands.
 		early := o.Evals < 25 && o.Growth > 1.01
 		sure := (phi < phiGain-4 || phi > phiReset+5) && o.Evals < 120 && w.in.t-s.Tune.LimitAt > 6*p
+		if o.ByChange && !byChange || !byChange && o.Evals < 4 && o.GrowCause == 0 {
+			ok = false // named once by what changed, or too early to name
+		}
 		if ok && (o.GrowCause == 0 || (byPhi != Undetermined || o.Evals < 10) && (early || sure)) {
 			o.GrowCause = causeIndex(byPhi)
+			o.ByChange = byChange
 			o.setCause(byPhi, also, phiConfidence(phi, ok))
 		} else if o.GrowCause == 0 {
 			o.setCause(Undetermined, also, 0.5)

@@ -26,6 +26,7 @@ type oscState struct {
 	Cause      uint8
 	Next       uint8 // a differing judgement, and how often running
 	NextN      uint8
+	ByChange   bool // the cause rests on a change of the loop's own tuning: later fits cannot overturn it
 	Also       [2]uint8
 	Conf       float32
 	PhiDeg     float64

@@ -134,7 +134,7 @@ func (s *shared) Judge(end int64, live []SiteEvidence, emit func(*Finding)) {
 func (s *shared) group(live []SiteEvidence, g []int) sharedGroup {
 	var out sharedGroup
 	out.Since = math.MaxInt64
-	best, second := -1.0, -1.0
+	best, second, sticking := -1.0, -1.0, false
 	for _, i := range g {
 		e := &live[i]
 		out.Loops = append(out.Loops, s.loops[e.ID].Name)
@@ -142,7 +142,7 @@ func (s *shared) group(live []SiteEvidence, g []int) sharedGroup {
 		out.Period += e.PeriodS / float64(len(g))
 		if e.Shape > best {
 			best, second = e.Shape, best
-			out.Root = s.loops[e.ID].Name
+			out.Root, sticking = s.loops[e.ID].Name, e.Cause == ValveSticking
 		} else if e.Shape > second {
 			second = e.Shape
 		}
@@ -154,8 +154,10 @@ func (s *shared) group(live []SiteEvidence, g []int) sharedGroup {
 	switch {
 	case out.Key != "":
 		out.Root = out.Key
-	case best > 0.58 && best > second+0.05:
+	case best > 0.68 && best > second+0.08 && sticking:
 		out.Cause, out.Key = ValveSticking, out.Root
+	case best < 0.52:
+		out.Root, out.Cause, out.Key = "", OutsideDisturbance, out.Loops[0]
 	default:
 		out.Root, out.Cause, out.Key = "", Undetermined, out.Loops[0]
 	}

@@ -39,7 +39,7 @@ func (d *Daemon) catchUp(ctx context.Context, ids []collector.LoopID) {
 				n, err := d.catchUpLoop(ctx, ids[k])
 				frames.Add(int64(n))
 				if err != nil && ctx.Err() == nil {
-					d.log.Error("a loop begins anew", "loop", d.loopName(ids[k]), "err", err)
+					d.log.Error("a loop could not catch up and goes on from here", "loop", d.loopName(ids[k]), "err", err)
 				}
 				d.catching.Add(-1)
 			}
@@ -60,7 +60,9 @@ func (d *Daemon) catchUpLoop(ctx context.Context, id collector.LoopID) (frames i
 	w, name, p := s.lane.watches[k], s.lane.names[k], s.lane.pace[k]
 	s.mu.Unlock()
 	c := chase{d: d, shard: s, id: id, watch: w, name: name, pace: p}
-	err = c.load()
+	if err := c.load(); err != nil {
+		d.log.Error("a loop begins anew with the frames that are kept: its memory cannot be used", "loop", name, "err", err)
+	}
 	// Passes without the lock until little is left, then one with it.
 	for range 4 {
 		var n int
