@@ -66,12 +66,12 @@ func (p *Page) cards(ctx context.Context, l *look, only string) (out []card, mor
 
 func (p *Page) card(ctx context.Context, l *look, e *alert.Episode, byName map[string]*configs.Loop) card {
 	f := e.Lead()
-	look := lookOf(f.Kind)
+	how := lookOf(f.Kind)
 	u, why := p.o.House.Urgency(e)
-	c := card{ID: e.ID, Class: string(u), Mark: look.Mark, Urgency: u, Why: why, State: e.State(), Text: f.Text, Sure: sure(&f),
+	c := card{ID: e.ID, Class: string(u), Mark: how.Mark, Urgency: u, Why: why, State: e.State(), Text: f.Text, Sure: sure(&f),
 		Since: clock(f.Since, l.now, l.zone), UTC: utc(f.Since), Count: e.Count, Others: max(0, len(e.Loops())-1)}
 	if c.Text == "" {
-		c.Text = strings.ToUpper(look.Word[:1]) + look.Word[1:] + "."
+		c.Text = capital(how.Word) + "."
 	}
 	if e.Hold != nil {
 		c.Hold = "cannot be seen since " + clock(e.Hold.Since, l.now, l.zone) + ": " + e.Hold.Why

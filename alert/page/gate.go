@@ -208,7 +208,7 @@ func (g *gate) askToken(w http.ResponseWriter, r *http.Request) {
 		return
 	}
 	if r.Method == http.MethodGet && r.Header.Get("Sec-Fetch-Site") == "cross-site" && r.Header.Get("Sec-Fetch-Mode") == "navigate" {
-		g.p.show(w, r, "again", g.p.frame(r, up(r), nil))
+		g.p.show(w, r, "again", g.p.shell(r, up(r), nil))
 		return
 	}
 	g.p.signInPage(w, r, http.StatusUnauthorized, "")

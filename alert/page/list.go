@@ -192,7 +192,7 @@ func (p *Page) rows(ctx context.Context, l *look, picked []*LoopState, f filter)
 
 // listPage is what the template of the list takes.
 type listPage struct {
-	frame
+	shell
 	Cards      []card
 	More       int // open episodes beyond the cards
 	Filter     filter
@@ -228,7 +228,7 @@ func (p *Page) serveList(w http.ResponseWriter, r *http.Request) {
 		p.fail(w, r, err)
 		return
 	}
-	v := listPage{frame: p.frame(r, "", &l), Filter: f, Rows: rs, All: len(l.loops), Marks: kindLooks[:12], Kinds: kindLooks[:12]}
+	v := listPage{shell: p.shell(r, "", &l), Filter: f, Rows: rs, All: len(l.loops), Marks: kindLooks[:12], Kinds: kindLooks[:12]}
 	v.Cards, v.More = p.cards(r.Context(), &l, "")
 	for i := range l.loops {
 		v.Areas, v.Sources = append(v.Areas, l.loops[i].Loop.Area), append(v.Sources, l.loops[i].Loop.Source)
@@ -285,7 +285,7 @@ func (p *Page) servePart(w http.ResponseWriter, r *http.Request) {
 		}
 		p.show(w, r, "rows", rs)
 	case "need":
-		v := listPage{frame: p.frame(r, "", &l)}
+		v := listPage{shell: p.shell(r, "", &l)}
 		v.Cards, v.More = p.cards(r.Context(), &l, "")
 		p.show(w, r, "need", v)
 	default:

@@ -1,0 +1,504 @@
+package page
+
+import (
+	"bufio"
+	"context"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"math"
+	"net/http"
+	"net/url"
+	"strconv"
+	"strings"
+	"time"
+
+	"midwatch/collector"
+	"midwatch/configs"
+	"midwatch/detect"
+)
+
+// column is a row of numbers in JSON: not a number is null.
+type column []float32
+
+// MarshalJSON writes the shortest form that reads back the same float32.
+func (c column) MarshalJSON() ([]byte, error) {
+	b := make([]byte, 0, 8*len(c)+2)
+	b = append(b, '[')
+	for i, v := range c {
+		if i > 0 {
+			b = append(b, ',')
+		}
+		if v != v {
+			b = append(b, "null"...)
+		} else {
+			b = strconv.AppendFloat(b, float64(v), 'g', -1, 32)
+		}
+	}
+	return append(b, ']'), nil
+}
+
+// run is a stretch of time in which something held.
+type run struct {
+	What string `json:"what"` // inactive, limit, overhang, gap, hidden, lost, held
+	Word string `json:"word"`
+	From int64  `json:"from"` // ms UTC
+	To   int64  `json:"to"`
+}
+
+// change is a step of something that people set.
+type change struct {
+	At   int64  `json:"at"` // ms UTC
+	Word string `json:"word"`
+}
+
+// trend is a span of a loop, thinned so that least and greatest values of every
+// bucket are kept, in the order in which they came.
+type trend struct {
+	Loop     string      `json:"loop"`
+	Unit     string      `json:"unit"`
+	From     int64       `json:"from"` // ms UTC
+	To       int64       `json:"to"`
+	BucketMs int64       `json:"bucket_ms"` // at most two rows of a bucket; 0: every frame is there
+	Frames   int         `json:"frames"`    // read
+	Newest   int64       `json:"newest"`    // ms UTC of the newest frame of the span; 0: none
+	Times    []int64     `json:"t"`
+	PV       column      `json:"pv"`
+	SP       column      `json:"sp"`
+	OP       column      `json:"op"`
+	Runs     []run       `json:"runs,omitempty"`
+	Changes  []change    `json:"changes,omitempty"`
+	Overlays []overlay   `json:"overlays,omitempty"`
+	Troubles []span      `json:"troubles,omitempty"`
+	Lines    []level     `json:"lines,omitempty"`
+	PVScale  [2]number64 `json:"pv_scale"`
+	tuning   []TuningReading
+	last     collector.Frame
+}
+
+// number64 is a number in JSON; not a number is null.
+type number64 float64
+
+// MarshalJSON writes null for what is not finite.
+func (n number64) MarshalJSON() ([]byte, error) {
+	if f := float64(n); math.IsNaN(f) || math.IsInf(f, 0) {
+		return []byte("null"), nil
+	}
+	return json.Marshal(float64(n))
+}
+
+// span is a trouble as the chart draws it.
+type span struct {
+	Kind  string `json:"kind"`
+	Class string `json:"class"`
+	Label string `json:"label"`
+	From  int64  `json:"from"`
+	To    int64  `json:"to"` // 0: it stands
+}
+
+// level is a horizontal line: a limit or an alarm.
+type level struct {
+	On    string  `json:"on"` // pv or op
+	Value float64 `json:"value"`
+	Label string  `json:"label"`
+}
+
+// pot gathers the frames of one bucket.
+type pot struct {
+	n              int
+	first, last    collector.Frame
+	pvLow, pvHigh  float32
+	opLow, opHigh  float32
+	pvFell, opFell bool // the least came after the greatest
+}
+
+func (b *pot) add(f *collector.Frame) {
+	if b.n == 0 {
+		*b = pot{first: *f, pvLow: f.PV, pvHigh: f.PV, opLow: f.OP, opHigh: f.OP}
+	}
+	b.n++
+	b.last = *f
+	if f.PV < b.pvLow || b.pvLow != b.pvLow {
+		b.pvLow, b.pvFell = f.PV, true
+	}
+	if f.PV > b.pvHigh || b.pvHigh != b.pvHigh {
+		b.pvHigh, b.pvFell = f.PV, false
+	}
+	if f.OP < b.opLow || b.opLow != b.opLow {
+		b.opLow, b.opFell = f.OP, true
+	}
+	if f.OP > b.opHigh || b.opHigh != b.opHigh {
+		b.opHigh, b.opFell = f.OP, false
+	}
+}
+
+func (t *trend) row(at int64, pv, sp, op float32) {
+	t.Times = append(t.Times, at)
+	t.PV, t.SP, t.OP = append(t.PV, pv), append(t.SP, sp), append(t.OP, op)
+}
+
+func (t *trend) empty(b *pot) {
+	switch b.n {
+	case 0:
+		return
+	case 1:
+		t.row(b.first.Time, b.first.PV, b.first.SP, b.first.OP)
+	default:
+		p0, p1 := b.pvLow, b.pvHigh
+		if b.pvFell {
+			p0, p1 = p1, p0
+		}
+		o0, o1 := b.opLow, b.opHigh
+		if b.opFell {
+			o0, o1 = o1, o0
+		}
+		t.row(b.first.Time, p0, b.first.SP, o0)
+		t.row(b.last.Time, p1, b.last.SP, o1)
+	}
+	b.n = 0
+}
+
+// readTrend reads a span and thins it to about points buckets.
+func readTrend(ctx context.Context, frames collector.FrameReader, l *configs.Loop, from, to int64, points int) (*trend, error) {
+	t := &trend{Loop: l.Name, Unit: l.Unit, From: from, To: to, PVScale: [2]number64{number64(l.PVLow), number64(l.PVHigh)}}
+	width := max(1, (to-from)/int64(points))
+	var b pot
+	at := int64(math.MinInt64)
+	w := &watcher{l: l, t: t, join: 3 * width, on: map[string]int{}}
+	thinned := false
+	for f, err := range frames.Frames(ctx, l.Name, from, to) {
+		if err != nil {
+			return nil, err
+		}
+		t.Frames++
+		t.Newest, t.last = f.Time, f
+		w.frame(&f)
+		k := (f.Time - from) / width
+		if k != at || f.PV != f.PV || f.Flags&collector.Gap != 0 {
+			t.empty(&b)
+			at = k
+		}
+		if f.Flags&collector.Gap != 0 && len(t.Times) > 0 && f.PV == f.PV {
+			t.row(f.Time-1, collector.NaN32, collector.NaN32, collector.NaN32)
+		}
+		if f.PV != f.PV {
+			t.row(f.Time, f.PV, f.SP, f.OP)
+			continue
+		}
+		b.add(&f)
+		thinned = thinned || b.n > 2
+	}
+	t.empty(&b)
+	w.end()
+	if thinned {
+		t.BucketMs = width
+	}
+	return t, nil
+}
+
+// watcher notes runs and changes while frames go by.
+type watcher struct {
+	l    *configs.Loop
+	t    *trend
+	join int64          // runs nearer than this are one, ms
+	on   map[string]int // open run of a kind, index
+	was  collector.Frame
+	seen bool
+	sp   float32 // before the last step
+}
+
+func (w *watcher) hold(on bool, what, word string, at int64) {
+	i, is := w.on[what]
+	switch {
+	case on && is && w.t.Runs[i].Word == word:
+		w.t.Runs[i].To = at
+	case on:
+		// A flicker is no new run.
+		for j := len(w.t.Runs) - 1; j >= 0; j-- {
+			if r := &w.t.Runs[j]; r.What == what {
+				if r.Word == word && at-r.To <= w.join {
+					r.To, w.on[what] = at, j
+					return
+				}
+				break
+			}
+		}
+		w.on[what] = len(w.t.Runs)
+		w.t.Runs = append(w.t.Runs, run{what, word, at, at})
+	case is:
+		w.t.Runs[i].To = at
+		delete(w.on, what)
+	}
+}
+
+func (w *watcher) frame(f *collector.Frame) {
+	l, at := w.l, f.Time
+	if len(w.t.Runs) > 2000 {
+		w.join *= 2 // a storm of short runs: the picture cannot show them apart
+	}
+	mode := "in " + f.Mode.String()
+	w.hold(!f.Mode.LawActive(), "inactive", mode, at)
+	w.hold(f.Flags&collector.Suppressed != 0, "hidden", "suppressed by design", at)
+	w.hold(f.PV != f.PV, "gap", "no usable value", at)
+	limit := f.PV == f.PV && atLimit(f, l)
+	w.hold(limit, "limit", "OP at a limit", at)
+	if s := l.Sign(); s != 0 {
+		push := s * (float64(f.SP) - float64(f.PV))
+		high := float64(f.OP) > (l.OPLimitLow+l.OPLimitHigh)/2
+		w.hold(limit && (high && push < 0 || !high && push > 0), "overhang", "OP stays at its limit though the error has changed sign: wind-up", at)
+	}
+	w.hold(f.Flags&collector.Lost != 0, "lost", "samples lost", at)
+	if f.Flags&collector.ClockStep != 0 {
+		w.say(at, "clock of the source stepped")
+	}
+	if f.Flags&collector.Marked != 0 {
+		w.say(at, "range, action or tags changed in the list")
+	}
+	if w.seen {
+		w.compare(f)
+	}
+	w.was, w.seen = *f, true
+}
+
+func (w *watcher) compare(f *collector.Frame) {
+	l := w.l
+	if f.Mode != w.was.Mode && f.Mode != collector.ModeUnknown {
+		w.say(f.Time, "mode "+f.Mode.String())
+	}
+	if d := math.Abs(float64(f.SP) - float64(w.was.SP)); d > 0.005*math.Abs(l.PVSpan()) && f.Mode != collector.Cascade && math.IsNaN(l.SPRamp) {
+		w.say(f.Time, "SP "+number(float64(w.was.SP), 4)+" → "+quantity(float64(f.SP), l.Unit))
+	}
+	if f.Gain != w.was.Gain && f.Gain != 0 && w.was.Gain != 0 {
+		w.say(f.Time, "gain "+number(float64(w.was.Gain), 3)+" → "+number(float64(f.Gain), 3)+" (read)")
+	}
+	if f.Reset != w.was.Reset && f.Reset != 0 && w.was.Reset != 0 {
+		w.say(f.Time, "reset "+number(float64(w.was.Reset), 3)+" → "+number(float64(f.Reset), 3)+" s (read)")
+	}
+	if (f.Gain != w.was.Gain || f.Reset != w.was.Reset) && f.Gain != 0 {
+		n := math.NaN()
+		w.t.tuning = append(w.t.tuning, TuningReading{Time: f.Time, Gain: float64(f.Gain), GainLow: n, GainHigh: n, ResetS: float64(f.Reset), ResetLow: n, ResetHigh: n, Read: true})
+	}
+}
+
+// maxChanges bounds what is said of a span; a set point that moves all the time
+// is seen in the trend.
+const maxChanges = 60
+
+func (w *watcher) say(at int64, word string) {
+	if len(w.t.Changes) < maxChanges {
+		w.t.Changes = append(w.t.Changes, change{at, word})
+	}
+}
+
+func (w *watcher) end() {
+	out := w.t.Runs[:0]
+	for _, r := range w.t.Runs {
+		if r.To > r.From || r.What == "gap" || r.What == "lost" {
+			out = append(out, r)
+		}
+	}
+	w.t.Runs = out
+}
+
+// span of time that is wanted, as it stands in the address.
+type wanted struct {
+	From, To int64
+	Hours    float64 // > 0: it ends now and goes on with the time
+}
+
+// longest is the longest span that is read at once.
+const longest = 400 * 24 * time.Hour
+
+// readSpan reads from= and to= (RFC 3339 or ms UTC), or hours= up to now.
+func readSpan(q url.Values, now time.Time, hours float64) (wanted, error) {
+	if q.Get("from") == "" && q.Get("to") == "" {
+		if s := q.Get("hours"); s != "" {
+			h, err := strconv.ParseFloat(s, 64)
+			if err != nil || !(h > 0 && h <= longest.Hours()) {
+				return wanted{}, fmt.Errorf("hours=%q; hint: a number above 0 and up to %g", cutText(s, 20), longest.Hours())
+			}
+			hours = h
+		}
+		return wanted{now.UnixMilli() - int64(hours*3600e3), now.UnixMilli() + 1, hours}, nil
+	}
+	from, err := readTime(q.Get("from"))
+	if err != nil {
+		return wanted{}, fmt.Errorf("from: %w", err)
+	}
+	to := now.UnixMilli() + 1
+	if q.Get("to") != "" {
+		if to, err = readTime(q.Get("to")); err != nil {
+			return wanted{}, fmt.Errorf("to: %w", err)
+		}
+	}
+	if to <= from || to-from > longest.Milliseconds() {
+		return wanted{}, errors.New("the span is empty or longer than 400 days; hint: from lies before to")
+	}
+	return wanted{From: from, To: to}, nil
+}
+
+func readTime(s string) (int64, error) {
+	if n, err := strconv.ParseInt(s, 10, 64); err == nil && n >= 0 && n < 1<<45 {
+		return n, nil
+	}
+	t, err := time.Parse(time.RFC3339Nano, s)
+	if err != nil || t.UnixMilli() < 0 || t.UnixMilli() >= 1<<45 {
+		return 0, fmt.Errorf("%q is no time; hint: RFC 3339 such as 2026-01-06T02:44:00Z, or ms since 1970", cutText(s, 40))
+	}
+	return t.UnixMilli(), nil
+}
+
+// spanTrend is what every form of a loop's trend starts from.
+func (p *Page) spanTrend(r *http.Request, points int) (*trend, *LoopState, *look, error) {
+	l := p.look()
+	s := l.loop(loopName(r))
+	if s == nil {
+		return nil, nil, &l, errNoLoop
+	}
+	w, err := readSpan(r.URL.Query(), l.now, 4)
+	if err != nil {
+		return nil, s, &l, badRequest{err}
+	}
+	done, err := p.read(r.Context())
+	if err != nil {
+		return nil, s, &l, err
+	}
+	defer done()
+	t, err := readTrend(r.Context(), p.o.House, s.Loop, w.From, w.To, points)
+	if err != nil {
+		return nil, s, &l, err
+	}
+	p.annotate(t, s, &l)
+	return t, s, &l, nil
+}
+
+var errNoLoop = errors.New("there is no loop of this name in the list")
+
+type badRequest struct{ error }
+
+// answer turns the errors of a loop's views into answers.
+func (p *Page) answer(w http.ResponseWriter, r *http.Request, err error) {
+	if bad, ok := errors.AsType[badRequest](err); ok {
+		what, hint, _ := strings.Cut(bad.Error(), "; hint: ")
+		p.refuse(w, r, http.StatusBadRequest, what, hint)
+		return
+	}
+	if errors.Is(err, errNoLoop) {
+		p.notFound(w, r, err.Error())
+		return
+	}
+	p.fail(w, r, err)
+}
+
+// annotate adds limits, alarms, troubles and the evidence.
+func (p *Page) annotate(t *trend, s *LoopState, l *look) {
+	lp := s.Loop
+	if lp.OPLimitHigh != lp.OPHigh || lp.OPLimitLow != lp.OPLow {
+		t.Lines = append(t.Lines, level{"op", lp.OPLimitLow, "low limit " + quantity(lp.OPLimitLow, "%")}, level{"op", lp.OPLimitHigh, "high limit " + quantity(lp.OPLimitHigh, "%")})
+	}
+	for _, a := range []struct {
+		v float64
+		w string
+	}{{lp.PVAlarmLow, "low alarm "}, {lp.PVAlarmHigh, "high alarm "}} {
+		if !math.IsNaN(a.v) {
+			t.Lines = append(t.Lines, level{"pv", a.v, a.w + quantity(a.v, lp.Unit)})
+		}
+	}
+	ts := l.found[lp.Name]
+	for i := range ts {
+		x := &ts[i]
+		if x.Since > t.To || x.Until != 0 && x.Until < t.From {
+			continue
+		}
+		label, _ := x.say(l.now, l.zone)
+		t.Troubles = append(t.Troubles, span{string(x.Kind), x.class(), label, x.Since, x.Until})
+	}
+	v, _ := p.o.House.View(lp.Name)
+	t.Overlays = overlays(t, ts, &v)
+}
+
+func (p *Page) serveTrend(w http.ResponseWriter, r *http.Request) {
+	points := 1200
+	if n, err := strconv.Atoi(r.URL.Query().Get("points")); err == nil {
+		points = max(10, min(n, 5000))
+	}
+	t, _, _, err := p.spanTrend(r, points)
+	if err != nil {
+		p.answer(w, r, err)
+		return
+	}
+	b, err := json.Marshal(t)
+	if err != nil {
+		p.fail(w, r, err)
+		return
+	}
+	reply(w, r, http.StatusOK, "application/json", b)
+}
+
+// serveTrendCSV exports every frame of the span in the form of the trend CSV.
+func (p *Page) serveTrendCSV(w http.ResponseWriter, r *http.Request) {
+	l := p.look()
+	s := l.loop(loopName(r))
+	if s == nil {
+		p.answer(w, r, errNoLoop)
+		return
+	}
+	span, err := readSpan(r.URL.Query(), l.now, 4)
+	if err != nil {
+		p.answer(w, r, badRequest{err})
+		return
+	}
+	done, err := p.read(r.Context())
+	if err != nil {
+		p.answer(w, r, err)
+		return
+	}
+	defer done()
+	w.Header().Set("Content-Type", "text/csv; charset=utf-8")
+	w.Header().Set("Content-Disposition", `attachment; filename="trend.csv"`)
+	rc := http.NewResponseController(w)
+	out := bufio.NewWriterSize(w, 64<<10)
+	out.WriteString("time,loop,pv,sp,op,mode,flags\n")
+	n := 0
+	for f, err := range p.o.House.Frames(r.Context(), s.Loop.Name, span.From, span.To) {
+		if err != nil {
+			p.once("reading", err)
+			panic(http.ErrAbortHandler) // the header is out: only a broken answer tells
+		}
+		if n%10000 == 0 {
+			// A long export is no slow client: it may go on while it moves.
+			rc.SetWriteDeadline(time.Now().Add(time.Minute))
+		}
+		n++
+		writeFrame(out, s.Loop.Name, &f)
+	}
+	out.Flush()
+}
+
+func writeFrame(w *bufio.Writer, loop string, f *collector.Frame) {
+	num := func(v float32) {
+		w.WriteByte(',')
+		if v == v {
+			w.WriteString(strconv.FormatFloat(float64(v), 'g', -1, 32))
+		}
+	}
+	w.WriteString(detect.FormatTime(f.Time))
+	w.WriteByte(',')
+	if strings.ContainsAny(loop, ",\"\r\n") {
+		w.WriteString(`"` + strings.ReplaceAll(loop, `"`, `""`) + `"`)
+	} else {
+		w.WriteString(loop)
+	}
+	num(f.PV)
+	num(f.SP)
+	num(f.OP)
+	w.WriteString("," + f.Mode.String() + ",")
+	plus := ""
+	for i, word := range collector.FlagWords {
+		if f.Flags&(1<<i) != 0 {
+			w.WriteString(plus + word)
+			plus = "+"
+		}
+	}
+	w.WriteByte('\n')
+}
