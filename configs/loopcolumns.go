@@ -256,9 +256,13 @@ var resetCol = column{"reset", groupControl, "", "integral action, in reset_unit
 		return formatNumber(l.Reset)
 	}}
 
-var resetSecondsCol = column{"reset_s", groupControl, "", "reset time in seconds; instead of reset", ChangeText,
+var resetSecondsCol = column{"reset_s", groupControl, "", "reset time in seconds, or none; instead of reset", ChangeText,
 	func(l *Loop, s string) *mistake {
 		l.ResetGiven = true
+		if strings.EqualFold(s, "none") {
+			l.PropOnly = true
+			return nil
+		}
 		x, m := parseReset(s)
 		if m == nil {
 			l.ResetS = x
@@ -276,11 +280,8 @@ func parseReset(s string) (float64, *mistake) {
 	x, m := parseNumber(s)
 	switch {
 	case m != nil:
-		if strings.EqualFold(s, "none") {
-			m = wrong("write none in the column reset", "%q is no number", s)
-		}
 	case x == 0:
-		m = wrong("write none in the column reset for a controller without integral action", "0 means something else in every make")
+		m = wrong("write none for a controller without integral action", "0 means something else in every make")
 	case x < 0:
 		m = wrong("write a number above 0", "%s is negative", s)
 	}

@@ -15,7 +15,7 @@ var values = map[string][]string{
 	"op_limit_low": {"5", "4"}, "op_limit_high": {"19.5", "20"}, "sp_limit_low": {"0.01"}, "sp_limit_high": {"0.2"},
 	"pv_alarm_low": {"0.1", "0.05"}, "pv_alarm_high": {"0.25"}, "action": actionWords,
 	"gain": {"1", "0.3", "123.456789", "1e-3"}, "gain_unit": gainUnitWords, "reset": {"none", "2", "0.3333333", "1e3"},
-	"reset_unit": resetUnits, "reset_s": {"30", "0.1"}, "rate": {"0", "2.5"}, "rate_unit": rateUnits, "rate_s": {"0", "7"},
+	"reset_unit": resetUnits, "reset_s": {"30", "0.1", "none"}, "rate": {"0", "2.5"}, "rate_unit": rateUnits, "rate_s": {"0", "7"},
 	"form": formWords, "scan_s": {"0.25"}, "sample_s": {"1", "60"}, "report": reportWords, "silence_s": {"600"},
 	"pv_filter_s": {"0", "3"}, "sp_ramp": {"0", "0.1"}, "process": processWords, "element": elementWords, "stroke_s": {"0", "90"},
 	"op_split": {"12"}, "inner": {""}, "was": {""}, "feedforward_kind": ffWords, "normal_mode": ModeWords, "duty": dutyWords,

@@ -50,6 +50,7 @@ func TestTuningConversions(t *testing.T) {
 		{"parallel with reset_s", "L,,,2,,,,20,,,,parallel", 2, 20, 0},
 		{"P only", "L,,,2,,none,,,,,,", 2, nan, 0},
 		{"P only, series with rate", "L,,,2,,none,,,3,,,series", 2, nan, 3},
+		{"P only by reset_s", "L,,,2,,,,none,,,,", 2, nan, 0},
 		{"nothing known", "L,,,,,,,,,,,", nan, nan, 0},
 	} {
 		t.Run(x.name, func(t *testing.T) {
