@@ -11,12 +11,24 @@ import (
 
 func claimGrowing(w *Watch) claim {
 	o := &w.s.Osc
-	return claim{o.Grow && w.s.Track.PVSwing > 0 && !w.led(), o.Since, o.Cause, o.Also, o.Conf, float32(o.Amp)}
+	return claim{o.Grow && w.leadKnown() && !w.led(), o.Since, o.Cause, o.Also, o.Conf, float32(o.Amp)}
+}
+
+// leadKnown: whether the set point leads is known after a cycle, or at once where it
+// rests.
+func (w *Watch) leadKnown() bool {
+	return w.s.Track.PVSwing > 0 || w.s.Motion.spRange() < 0.2*w.s.Osc.Amp
 }
 
 func claimSustained(w *Watch) claim {
 	o := &w.s.Osc
-	on := o.Sus && !o.Sticking && !o.Grow && !(w.led() && o.Amp < 1.5) // what grew stays a growing one until it is over
+	on := o.Sus && !o.Sticking && !o.Grow && w.leadKnown() // what grew stays a growing one until it is over
+	if on && w.led() {
+		// A program or an outer loop moves the set point. News of this loop is only an
+		// error larger than the set point's own swing: no following at all would do better.
+		b := &w.s.Cycles[o.Bank]
+		on = w.usualKnown(b) && o.Amp > max(4*b.Usual.Value(), 1) && 2*o.Amp > 1.2*float64(w.s.Track.SPSwing)
+	}
 	c := o.Cause
 	if c == 0 {
 		c = causeIndex(Undetermined)
@@ -26,20 +38,24 @@ func claimSustained(w *Watch) claim {
 
 func claimSticking(w *Watch) claim {
 	o := &w.s.Osc
-	return claim{o.Sus && o.Sticking && !o.Grow, o.Since, o.Cause, o.Also, o.Conf, float32(o.Amp)}
+	return claim{o.Sus && o.Sticking && !o.Grow && w.leadKnown(), o.Since, o.Cause, o.Also, o.Conf, float32(o.Amp)}
 }
 
 func claimOffset(w *Watch) claim {
-	o := &w.s.Off
-	return claim{o.Offset, o.Since, o.Cause, [2]uint8{}, o.Conf, float32(math.Abs(o.Mean))}
+	o := &w.s.OffPast.Offset
+	also := [2]uint8{}
+	if causes[o.Cause] == Undetermined {
+		also = [2]uint8{causeIndex(OutsideDisturbance), causeIndex(FinalElementNotFollowing)}
+	}
+	return claim{o.On, o.Since, o.Cause, also, o.Conf, float32(math.Abs(o.Mean))}
 }
 
 func claimSaturation(w *Watch) claim {
-	o, z := &w.s.Off, &w.s.Sat
-	if z.WindUp && !o.Sat {
+	o, z := &w.s.OffPast.Sat, &w.s.Sat
+	if z.WindUp && !o.On {
 		return claim{true, z.WindSince, causeIndex(WindUp), [2]uint8{causeIndex(OutputLimit)}, 0.85, float32(z.Over)}
 	}
-	return claim{o.Sat, o.Since, o.Cause, [2]uint8{causeIndex(OutsideDisturbance)}, o.Conf, float32(math.Abs(o.Mean))}
+	return claim{o.On, o.Since, o.Cause, [2]uint8{causeIndex(OutsideDisturbance)}, o.Conf, float32(math.Abs(o.Mean))}
 }
 
 func claimSluggish(w *Watch) claim {
@@ -171,22 +187,22 @@ func (w *Watch) opSwing() (lo, hi float64) {
 }
 
 func measureOffset(w *Watch, m []float64) {
-	o := &w.s.Off
+	o := &w.s.OffPast.Offset
 	m[0], m[1], m[2] = o.Mean, w.pvUnits(o.Mean), w.in.t-o.Since
 	if kc, ok := w.gainPct(); ok {
 		m[3] = math.Abs(kc)
 	}
 	if causes[o.Cause] != IntegralMissing {
-		if rt := w.resetS(); rt > 0 {
+		if rt, _ := w.resetS(); rt > 0 {
 			m[4] = rt
 		}
 	}
 }
 
 func measureSaturation(w *Watch, m []float64) {
-	o, z := &w.s.Off, &w.s.Sat
+	o, z := &w.s.OffPast.Sat, &w.s.Sat
 	m[2] = w.s.Motion.OP
-	if o.Sat {
+	if o.On {
 		m[0], m[1], m[3] = o.Mean, w.pvUnits(o.Mean), w.in.t-o.Since
 	}
 	if z.WindUp {

@@ -178,43 +178,39 @@ type ringStat struct {
 }
 
 // lengths is the cheap part of stat: period (samples of the level) and regularity.
+// Up and down half-cycles have means of their own: a cycle may be as regular as a
+// clock and yet twice as long above as below (a sticking valve with an offset).
 func (b *cycleBank) lengths(n int) (period, regular float64, ok bool) {
 	if int(b.N) < n {
 		return 0, 0, false
 	}
-	var sum, sq float64
+	var sum, sq, cnt [2]float64
 	for i := range n {
 		l := b.at(i).length()
-		sum += l
-		sq += l * l
+		sum[i&1] += l
+		sq[i&1] += l * l
+		cnt[i&1]++
 	}
-	m := sum / float64(n)
-	s := math.Sqrt(max(0, sq/float64(n)-m*m) * float64(n) / float64(n-1))
-	return 2 * m, m / max(s, 1e-9), true
+	m := (sum[0] + sum[1]) / float64(n)
+	v := max(0, sq[0]-sum[0]*sum[0]/cnt[0]) + max(0, sq[1]-sum[1]*sum[1]/cnt[1])
+	return 2 * m, m / max(math.Sqrt(v/float64(n-2)), 1e-9), true
 }
 
 func (b *cycleBank) stat(level, n int) (r ringStat, ok bool) {
 	if int(b.N) < n {
 		return r, false
 	}
-	var ln, pk [ringLen]float64 // oldest first
-	var m, am float64
-	least := math.Inf(1)
+	r.period, r.regular, _ = b.lengths(n)
+	var pk [ringLen]float64 // oldest first
+	var am, cnt [2]float64
+	least := [2]float64{math.Inf(1), math.Inf(1)}
 	for i := range n {
-		h := b.at(n - 1 - i)
-		ln[i], pk[i] = h.length(), h.peak()
-		m += ln[i]
-		am += pk[i]
-		least = min(least, pk[i])
+		pk[i] = b.at(n - 1 - i).peak()
+		am[i&1] += pk[i]
+		cnt[i&1]++
+		least[i&1] = min(least[i&1], pk[i])
 	}
-	m /= float64(n)
-	am /= float64(n)
-	var s float64
-	for i := range n {
-		s += (ln[i] - m) * (ln[i] - m)
-	}
-	s = math.Sqrt(s / float64(n-1))
-	r.period, r.regular, r.least = 2*m, m/max(s, 1e-9), least/am
+	r.least = min(least[0]/am[0]*cnt[0], least[1]/am[1]*cnt[1])
 	// Neighbouring peaks together: drift cancels.
 	var pp [ringLen]float64
 	var mm, ss float64
@@ -231,7 +227,7 @@ func (b *cycleBank) stat(level, n int) (r ringStat, ok bool) {
 	r.spread = math.Sqrt(ss/float64(n-1)) / mm
 	beta, se := num.Slope(pp[:n-1])
 	r.growth, r.t = math.Exp(2*beta), beta/max(se, 1e-9)
-	r.amp = am
+	r.amp = (am[0] + am[1]) / float64(n)
 	if r.period > 4 {
 		r.amp *= centreGain(level) / bankGain(level, max(r.period, 5))
 	}

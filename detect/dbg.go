@@ -12,3 +12,6 @@ func (w *Watch) Rings() {
 		fmt.Println()
 	}
 }
+
+// Dbg prints where a decision came from.
+var Dbg = func(string, ...any) {}

@@ -127,7 +127,7 @@ const (
 const leastNoise = 0.005
 
 func (n *noise) step(pv float64, exception, learn bool) {
-	if exception && n.N > 0 && float64(n.Ring[0]) == pv {
+	if exception && n.N > 0 && n.Ring[0] == float32(pv) {
 		return
 	}
 	if n.N >= 4 && learn {

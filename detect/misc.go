@@ -75,7 +75,7 @@ func stepFrozen(w *Watch) {
 	usual := m.PVRunMax
 	limit := max(max(2700, 300*in.dt), 6*usual)
 	limit = min(limit, max(max(4*3600, 300*in.dt), 2*usual))
-	if x.OPTravel > max(2, 20*s.Noise.sigma()) && in.active {
+	if x.OPTravel > max(2, max(20*s.Noise.sigma(), 10*s.Noise.Least.Value())) && in.active {
 		// The controller has noticed: OP travels and nothing comes back.
 		limit = min(limit, max(max(600, 200*in.dt), 4*usual))
 	}

@@ -33,32 +33,70 @@ type offsetState struct {
 	WasStill  bool
 	NotFollow bool
 	Checked   float64 // s, last decision
-	// The decision.
-	Offset  bool
-	Sat     bool
-	Cause   uint8
-	Conf    float32
-	Since   float64
-	Mean    float64 // %
-	PrevDur float64 // s, length of the run before, of the other sign; 0 none
+	Mean      float64 // %
+	PrevDur   float64 // s, length of the run before, of the other sign; 0 none
+	Missed    bool    // in this run the integral did not do what it must
 }
 
 func (o *offsetState) restart() { *o = offsetState{} }
 
-type saturationState struct {
-	WindUps   uint8   // occurrences of OP staying at its limit past the change of sign
-	LastWind  float64 // s
-	Over      float64 // s, longest overhang
-	Peak      float64 // %, overshoot after it
-	CrossAt   float64 // s, e changed sign with OP at the limit; 0 none
-	Side      float64
-	AtSince   float64 // s, since when OP is at the limit that e pushes towards
-	WindSince float64
-	WindUp    bool
-	Frames    uint8
+// offsetPast outlives the runs.
+type offsetPast struct {
+	Offset  stand   // PV misses the set point with OP free
+	Sat     stand   // and with OP at its limit
+	EF      float64 // e through a lag of half the loop's time scale, %
+	Longest float64 // s, longest run that was no finding; forgets a tenth with each new run of note
+	Runs    uint8   // runs on end in which the integral was missing
+	Since   float64 // s, begin of the first of them
 }
 
-func (z *saturationState) restart(t float64) { z.CrossAt, z.AtSince, z.Side, z.Frames = 0, 0, 0, 0 }
+// stand is a decision that holds until calm has lasted.
+type stand struct {
+	On          bool
+	Cause       uint8
+	Conf        float32
+	Since, Mean float64 // s, %
+	Calm        float64 // s without support
+}
+
+func (d *stand) support(since, mean float64, c Cause, conf float64) {
+	if !d.On {
+		d.Since = since
+	}
+	d.On, d.Calm, d.Mean, d.Cause, d.Conf = true, 0, mean, causeIndex(c), float32(conf)
+}
+
+// rest counts time without support; after twice the time to come back, and half an
+// hour, it is over.
+func (w *Watch) rest(d *stand) {
+	if !d.On {
+		return
+	}
+	if d.Calm += w.in.dt; d.Calm > max(max(1800, 120*w.in.dt), 2*w.timeScale()) {
+		*d = stand{}
+	}
+}
+
+// endOfRun remembers a run: how long runs last is the loop's own yardstick, and
+// where set points change often several short runs tell what a long one would.
+func (w *Watch) endOfRun() {
+	o, p := &w.s.Off, &w.s.OffPast
+	if o.Sign == 0 || p.Offset.On || p.Sat.On {
+		return
+	}
+	d := w.in.t - o.T0
+	if math.Abs(o.Int) > 0.3*o.Dur && o.Dur > 60*w.in.dt { // of some size, % on average
+		p.Longest = max(0.9*p.Longest, d)
+	}
+	if o.Missed {
+		if p.Runs == 0 {
+			p.Since = o.T0
+		}
+		p.Runs = min(p.Runs+1, 200)
+	} else if d > 2*w.timeScale() {
+		p.Runs = 0
+	}
+}
 
 func stepOffset(w *Watch) {
 	s, in := &w.s, &w.in
@@ -71,15 +109,25 @@ func stepOffset(w *Watch) {
 	if w.loop.OffsetOK > 0 {
 		thr = max(thr, w.loop.OffsetOK/s.Scale.PVSpan*100)
 	}
-	ef := s.Motion.EF
+	past := &s.OffPast
+	w.rest(&past.Offset)
+	w.rest(&past.Sat)
+	if in.first {
+		past.EF = in.e
+	}
+	past.EF += (in.e - past.EF) * min(1./3, in.dt/(0.5*w.timeScale()))
 	sign := 0.0
-	if ef > 0.5*thr {
+	if past.EF > 0.5*thr {
 		sign = 1
-	} else if ef < -0.5*thr {
+	} else if past.EF < -0.5*thr {
 		sign = -1
 	}
-	if math.Abs(in.spStep) > 0.3 && o.Sign != 0 {
-		o.restart() // a new set point is a new question
+	if math.Abs(in.spStep) > 0.3 {
+		past.EF += in.spStep // the step itself is no matter of the lag
+		if o.Sign != 0 && !w.pushesAtLimit() {
+			w.endOfRun()
+			o.restart() // a new set point is a new question
+		}
 	}
 	if sign != 0 && sign == o.Sign {
 		o.In = in.t
@@ -88,6 +136,7 @@ func stepOffset(w *Watch) {
 		prev := 0.0
 		if o.Sign != 0 {
 			prev = max(in.t-o.T0, 0.5*o.PrevDur)
+			w.endOfRun()
 		}
 		*o = offsetState{PrevDur: prev, Sign: sign, T0: in.t, In: in.t, OP0: in.op, E0: in.e, OPs: in.op, Es: in.e, Checked: in.t}
 	}
@@ -96,6 +145,7 @@ func stepOffset(w *Watch) {
 	}
 	d := in.t - o.T0
 	if in.t-o.In > max(max(60*in.dt, min(1200, 3*w.timeScale())), 0.15*d) {
+		w.endOfRun()
 		o.restart()
 		return
 	}
@@ -120,6 +170,13 @@ func stepOffset(w *Watch) {
 	w.judgeOffset(thr)
 }
 
+// pushesAtLimit: OP lies at the limit to which e pushes, and still does after a
+// step of the set point: the same question as before.
+func (w *Watch) pushesAtLimit() bool {
+	in, o := &w.in, &w.s.Off
+	return w.s.Sat.AtSince > 0 && in.e*o.Sign > 0
+}
+
 // timeScale is the loop's usual time to come back, s; a guess from the sampling
 // before recoveries were seen.
 func (w *Watch) timeScale() float64 {
@@ -131,7 +188,7 @@ func (w *Watch) timeScale() float64 {
 		}
 	}
 	if t == 0 {
-		if ti := w.resetS(); ti > 0 {
+		if ti, _ := w.resetS(); ti > 0 {
 			t = 3 * ti
 		} else {
 			t = 60 * s.Grid.DT
@@ -141,18 +198,18 @@ func (w *Watch) timeScale() float64 {
 }
 
 // resetS is the reset time to reckon with, s: as it was seen to be usual, else as
-// configured; 0 unknown.
-func (w *Watch) resetS() float64 {
+// configured, else as seen now; 0 unknown.
+func (w *Watch) resetS() (ti float64, seen bool) {
 	if _, ti, ok := w.usualTuning(w.s.Off.T0); ok && ti > 0 && ti < 4e4 {
-		return ti
+		return ti, true
 	}
 	if r := w.loop.IdealReset; r > 0 {
-		return r
+		return r, false
 	}
 	if _, ti, ok := w.tuning(0, 0); ok && ti > 0 && ti < 4e4 {
-		return ti
+		return ti, true
 	}
-	return 0
+	return 0, false
 }
 
 // gainPct is the gain to reckon with, %/%, signed; ok false when unknown.
@@ -195,7 +252,7 @@ func (w *Watch) idleAtLow(sigma float64) bool {
 
 func (w *Watch) judgeOffset(thr float64) {
 	s, in := &w.s, &w.in
-	o := &s.Off
+	o, past := &s.Off, &s.OffPast
 	m := &s.Motion
 	d := in.t - o.T0
 	mean := o.Int / o.Dur
@@ -205,7 +262,6 @@ func (w *Watch) judgeOffset(thr float64) {
 		recent = (o.Int - float64(a.Int)) / max(d-float64(a.T), in.dt)
 	}
 	if math.Abs(mean) < thr || math.Abs(recent) < 0.6*thr || !in.hasOP {
-		o.Offset, o.Sat = false, false
 		return
 	}
 	if in.mode == 0 && !m.LawSeen {
@@ -213,8 +269,7 @@ func (w *Watch) judgeOffset(thr float64) {
 	}
 	lo, hi := m.opRange()
 	l0, l1 := w.opLimits()
-	kc, known := w.gainPct()
-	rt := w.resetS()
+	rt, _ := w.resetS()
 	push := w.sign() * o.Sign // +1: OP should rise
 	flat := hi-lo < 0.35
 	need := max(max(8*60, 100*in.dt), max(4*rt, 2.5*w.timeScale())) * w.strict
@@ -231,165 +286,42 @@ func (w *Watch) judgeOffset(thr float64) {
 		// At a limit the evidence is plain: no need to wait for what the integral does.
 		wait := max(max(900, 100*in.dt), min(2.5*w.timeScale(), 7200)) * w.strict
 		if in.t-s.Sat.AtSince > wait {
-			o.Sat, o.Offset = true, false
-			o.Since = s.Sat.AtSince
-			o.Cause, o.Conf = causeIndex(OutputLimit), 0.9
+			conf := 0.9
 			if own {
-				o.Conf = 0.75
+				conf = 0.75
 			}
+			past.Sat.support(s.Sat.AtSince, mean, OutputLimit, conf)
+			past.Offset = stand{}
 		}
 		return
 	}
 	s.Sat.AtSince = 0
-	o.Sat = false
 	if in.limit || in.frozen {
 		return
 	}
-	if m.spRange() > 0.4 { // the set point is on its way
+	if m.spRange() > 0.4 && m.SPBusy > 0.02 { // the set point is on its way
 		o.restart()
 		return
 	}
-	cause, conf, longer := w.offsetCause(kc, known, rt, d, push, lo, hi, flat)
+	cause, conf, longer := w.offsetCause(push, lo, hi)
+	Dbg("offset t %.0f d %.0f mean %.2f cause %s conf %.2f longer %.0f need %.0f rt %.1f law %.2f\n", in.t, d, mean, cause, conf, longer, need, rt, s.Tune.Law)
 	if longer < 0 {
 		return
 	}
 	need = max(need, longer)
-	if d > need && !o.Offset && !s.Osc.Grow && !s.Osc.Sus {
-		o.Offset, o.Since = true, o.T0
-	}
-	if o.Offset {
-		o.Cause, o.Conf = causeIndex(cause), float32(conf)
-	}
-}
-
-// offsetCause compares the travel of OP with what the integral must do. longer is
-// the time, s, to wait beyond the usual before saying so; negative: no offset.
-func (w *Watch) offsetCause(kc float64, known bool, rt, d, push, lo, hi float64, flat bool) (c Cause, conf, longer float64) {
-	s, in := &w.s, &w.in
-	o := &s.Off
-	c, conf = Undetermined, 0.6
-	if !known || kc == 0 || o.AnchorN == 0 {
-		return c, conf, 8 * 3600
-	}
-	a := o.anchorAt(0.3 * d)
-	span := d - float64(a.T)
-	if span < 30*in.dt {
-		return c, conf, 1e12
-	}
-	ie := o.Int - float64(a.Int)
-	de, dop := o.Es-float64(a.E), o.OPs-float64(a.OP)
-	di := dop - kc*de
-	implied := kc * ie / di // reset time at which the integral would have made this travel
-	eRange := s.Motion.eRange()
-	still := hi-lo < 0.25*math.Abs(kc)*eRange && math.Abs(kc)*eRange > 0.3 || hi-lo < opSame
-	expect := math.Inf(1)
-	if rt > 0 {
-		expect = math.Abs(kc * ie / rt) // % of OP that the integral should have travelled
-	}
-	switch {
-	case still && expect > 3:
-		// OP does not answer e at all: manual, tracking, or not this loop's output.
-		o.WasStill = true
-		return Undetermined, 0.6, 0
-	case still:
-		return Undetermined, 0.5, 8 * 3600
-	case a.T > 0 && math.Abs(ie/span) < 0.6*math.Abs(float64(a.Int/a.T)):
-		return c, conf, -1 // it is being worked off
-	case !o.WasStill && (s.Tune.Law == 0 || s.Tune.Law > 0.5) && (implied < 0 || implied > 3*span && implied > 4*rt || rt > 0 && implied > 5*rt) && expect > 1.5 && math.Abs(dop-kc*de) < max(0.2*expect, 0.5) && hi-lo < 2.5*math.Abs(kc)*eRange+1:
-		return IntegralMissing, 0.9, 0
-	case w.crossesSplit(lo, hi):
-		return Undetermined, 0.5, 4 * 3600
-	case math.Abs(dop) > 30 && d > 8*rt && lo > 1 && hi < 99 && math.Abs(ie/span) > 0.9*math.Abs(float64(a.Int/a.T)) && math.Abs(ie/span) > 1 && push*dop > 0:
-		o.NotFollow = true
-		return FinalElementNotFollowing, 0.85, 0
-	case o.NotFollow:
-		return FinalElementNotFollowing, 0.85, 0
-	case o.Far > 0 && in.t-o.Far > 0.3*d && push*(o.OPs-o.OP0) > 30 && o.FarE > 3 && math.Abs(o.Es) > 0.9*o.FarE:
-		o.NotFollow = true
-		return FinalElementNotFollowing, 0.8, 0
-	case rt > 0 && implied < 3*rt:
-		return OutsideDisturbance, 0.6, max(8*3600, 12*rt) // the load outruns the integral, which does what it must
-	}
-	return c, conf, max(6*3600, 20*rt)
-}
-
-func stepSaturation(w *Watch) {
-	s, in := &w.s, &w.in
-	z := &s.Sat
-	if !in.active || !in.hasOP {
-		z.CrossAt, z.Side = 0, 0
-		return
-	}
-	l0, l1 := w.opLimits()
-	side := 0.0
-	if in.op >= l1-opAtLimit {
-		side = 1
-	} else if in.op <= l0+opAtLimit {
-		side = -1
-	}
-	a := w.sign()
-	sigma := max(s.Noise.sigma(), 0.02)
-	// Wind-up: a sound controller leaves the limit at or before the change of sign
-	// of e (with conditional integration or tracking OP = limit needs Kc e + I >=
-	// limit and I <= limit); one that stays is wound up.
-	if z.CrossAt > 0 {
-		if side == z.Side && a*s.Motion.EF*side < -max(3*sigma, 0.3) {
-			if z.Frames < 250 {
-				z.Frames++
-			}
-		}
-		z.Peak = max(z.Peak, math.Abs(in.e))
-		if side != z.Side {
-			over := in.t - z.CrossAt
-			rt := w.resetS()
-			if z.Frames >= 5 && over > max(8*in.dt, 0.25*rt) && rt > 0 && z.WindUps < 250 {
-				if z.WindUps == 0 || in.t-z.LastWind > 7*86400 {
-					z.WindUps, z.WindSince, z.Over = 0, z.CrossAt, 0
-				}
-				z.WindUps++
-				z.LastWind = in.t
-				z.Over = max(z.Over, over)
-				if z.WindUps >= 3 || over > 1.2*rt {
-					z.WindUp = true
-				}
-			}
-			z.CrossAt, z.Side, z.Frames = 0, 0, 0
-		}
-	} else if side != 0 {
-		if a*in.e*side > sigma {
-			z.Side = side // e pushes OP towards this limit
-		} else if z.Side == side && a*s.Motion.EF*side < 0 {
-			z.CrossAt, z.Frames, z.Peak = in.t, 0, 0
+	since := o.T0
+	if cause == IntegralMissing {
+		o.Missed = d > need/4
+		if past.Runs >= 3 { // where set points change often
+			need, since = need/4, past.Since
 		}
 	} else {
-		z.Side = 0
+		need = max(need, 3*past.Longest)
 	}
-	if z.WindUp && in.t-z.LastWind > 86400 {
-		z.WindUp, z.WindUps = false, 0
+	if past.Offset.On {
+		need /= 4
 	}
-}
-
-// crossesSplit: OP has been on both sides of the change-over of a split range,
-// where the process answers by another element, or by none for a while.
-func (w *Watch) crossesSplit(lo, hi float64) bool {
-	x := w.loop.OPSplit
-	if x != x {
-		return false
+	if d > need && !s.Osc.Grow && !s.Osc.Sus {
+		past.Offset.support(since, mean, cause, conf)
 	}
-	p := (x - w.s.Scale.OPLow) / w.s.Scale.OPSpan * 100
-	return lo < p+3 && hi > p-3
-}
-
-// anchorAt is the anchor nearest to an age of the run, s; nil before the first.
-func (o *offsetState) anchorAt(age float64) *anchor {
-	if o.AnchorN == 0 {
-		return nil
-	}
-	best := 0
-	for k := 1; k < int(o.AnchorN); k++ {
-		if math.Abs(float64(o.Anchors[k].T)-age) < math.Abs(float64(o.Anchors[best].T)-age) {
-			best = k
-		}
-	}
-	return &o.Anchors[best]
 }

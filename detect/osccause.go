@@ -66,6 +66,15 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 		byPhi, also = GainTooHigh, [2]Cause{ResetTooShort}
 	}
 	k0, t0, okb := w.usualTuning(o.Since - 2*p)
+	if c := &s.Change; c.Seen > 0 && c.At > o.Since-max(50*p, 86400) {
+		// The change was noticed and is the usual tuning by now: before it, it was not.
+		if c.What&1 != 0 {
+			k0 = float64(c.GainWas)
+		}
+		if c.What&2 != 0 {
+			t0 = float64(c.ResetWas)
+		}
+	}
 	rk, rt := 0.0, 0.0
 	byChange := false
 	if okb && ok && ti > 0 && t0 > 0 {
@@ -111,7 +120,7 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 		// Once OP is clipped the fit fails: the cause found before stands.
 		early := o.Evals < 25 && o.Growth > 1.01
 		sure := (phi < phiGain-4 || phi > phiReset+5) && o.Evals < 120 && w.in.t-s.Tune.LimitAt > 6*p
-		if o.ByChange && !byChange || !byChange && o.Evals < 4 && o.GrowCause == 0 {
+		if o.ByChange && !byChange || !byChange && o.Evals < 4 && o.GrowCause == 0 && phi > 15 && phi < 60 {
 			ok = false // named once by what changed, or too early to name
 		}
 		if ok && (o.GrowCause == 0 || (byPhi != Undetermined || o.Evals < 10) && (early || sure)) {
@@ -190,8 +199,6 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		o.setCause(ValveSticking, [2]Cause{ProcessNonlinear}, min(0.95, 0.72+0.6*(si-0.64)))
 	case changed:
 		o.setCause(byPhi, also, 0.85)
-	case o.SharedWith > 1 && !tri:
-		o.setCause(OutsideDisturbance, [2]Cause{}, 0.8)
 	case si < 0.45 && o.Outside && move < 1.6:
 		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.7)
 	case si < 0.45 && q.spread < 0.12 && move < 1.4 && o.Evals > 12:

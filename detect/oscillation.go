@@ -33,7 +33,6 @@ type oscState struct {
 	Kc, Ti     float64 // in service at the cycle, signed; 0 unknown
 	Regular    float64
 	Sticking   bool
-	SharedWith uint16 // loops in the group the site detector put it into
 	// The last growing episode, in case it comes back as a sustained one.
 	LastAt, LastP float64
 	LastCause     uint8
@@ -68,7 +67,7 @@ func (w *Watch) judgeCycles(level int, b *cycleBank) {
 		st, _ = b.stat(level, 8)
 	}
 	if !in && w.violent(level, b) {
-		st, in = b.stat(level, 5)
+		st, in = b.stat(level, min(int(b.N), 5))
 	}
 	suspect := b.Conf > 0 || o.Grow || o.Sus
 	// Noise teaches the usual size, a regular cycle hardly: a slow growth must not
@@ -173,33 +172,50 @@ func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 			w.beginOsc(level, b, 10)
 		}
 	}
-	if int(o.Bank) != level && !o.Sus {
+	// A period between two banks grows in both: the first keeps it while it sees it.
+	if live := &s.Cycles[o.Bank]; int(o.Bank) != level && !o.Sus && (live.Conf < growConfirm || live.N < 4 || tip > 1.5*live.tip()) {
 		w.beginOsc(level, b, 10)
 	}
 	o.Growth = max(st.growth, 1)
 }
 
 // violent: loops of hours never show eight half-cycles in time; few but violent
-// ones count: four that each outgrow the last, far over noise and usual size.
+// ones count: four that each outgrow the last, far over noise and usual size; three
+// where the tuning in service is far more aggressive than what was set up.
 func (w *Watch) violent(level int, b *cycleBank) bool {
-	if b.N < 5 || b.at(0).ln() < 0 {
+	if b.N < 4 || b.at(0).ln() < 0 {
 		return false
 	}
-	period, regular, _ := b.lengths(5)
-	if regular < 3*w.strict || period < bankLowP || period > bankHighP {
+	period, regular, _ := b.lengths(4)
+	p, tip := period*w.levelS(level), b.tip()
+	if regular < 3*w.strict || period < bankLowP || period > 1.5*bankHighP || p < 1200 ||
+		tip < max(2.5, 2.5*w.s.Noise.sigma()) || !w.steadySP(2.5*p) {
 		return false
 	}
-	q := ringStat{period: period}
-	p, tip := q.period*w.levelS(level), b.tip()
-	if p < 1200 || tip < max(3, 4*w.s.Noise.sigma()) || tip < 5*w.usualNear(level) || !w.steadySP(2.5*p) {
-		return false
+	n := 3
+	if !w.aggressive() {
+		if n = 4; b.N < 5 || tip < 5*w.usualNear(level) {
+			return false
+		}
 	}
-	for i := range 4 {
+	for i := range n {
 		if b.at(i).ln() < b.at(i+1).ln()+math.Log(1.22) {
 			return false
 		}
 	}
 	return true
+}
+
+// aggressive: the reset time in service is less than half of what the loop list
+// says, or the gain more than twice, with no other knob the other way.
+func (w *Watch) aggressive() bool {
+	kc, ti, ok := w.tuning(0, 0)
+	g, r := w.loop.GainPct, w.loop.IdealReset
+	if !ok || !(g > 0) || !(r > 0) || !(ti > 0) {
+		return false
+	}
+	k := math.Abs(kc) / g
+	return k > 0.7 && ti < r/2 || k > 2 && ti < 1.5*r
 }
 
 // usualNear is the usual size at a level, or at the slowest one below it that has
@@ -230,6 +246,10 @@ func (w *Watch) beginOsc(level int, b *cycleBank, back int) {
 		len += b.at(i).length()
 	}
 	keep := *o
+	if keep.P > 0 && keep.Grow && math.Abs(math.Log(keep.P/(2*len/float64(back)*w.levelS(level)))) < 0.2 {
+		o.Bank, o.Bad = uint8(level), 0 // the same cycle, seen by the neighbour: what is known of it stands
+		return
+	}
 	*o = oscState{Grow: keep.Grow, Sus: keep.Sus, Grown: keep.Grown, Bank: uint8(level), Since: b.Zero - len*w.levelS(level),
 		LastAt: keep.LastAt, LastP: keep.LastP, LastCause: keep.LastCause}
 	w.startTrack(level)
@@ -250,6 +270,9 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 		return
 	}
 	period := st.period * w.levelS(level)
+	if w.scheduled(b, period) {
+		return
+	}
 	n := 18
 	if q, ok := b.stat(level, 14); ok && q.regular > 7 && q.least > 0.25 {
 		n = 14
@@ -276,6 +299,26 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 			w.beginOsc(level, b, 10)
 		}
 	}
+}
+
+// scheduled: far slower than the loop's own dynamics and with the beat of the day
+// or of a planned upset (short above, long below): not a cycle of control.
+func (w *Watch) scheduled(b *cycleBank, period float64) bool {
+	rt, _ := w.resetS()
+	if period < 5*3600 || period < 6*rt { // 6 reset times: a lag of 44 degrees, no own swing is slower but few
+		return false
+	}
+	for k := 1.; k <= 3; k++ {
+		if math.Abs(period*k/86400-1) < 0.05 {
+			return true
+		}
+	}
+	var odd, even float64
+	for i := 0; i+1 < int(b.N); i += 2 {
+		odd += b.at(i).length()
+		even += b.at(i + 1).length()
+	}
+	return max(odd, even) > 1.4*min(odd, even)
 }
 
 // steadySP: SP has not stepped for so long, s, and is not ramped.
@@ -307,9 +350,9 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 		}
 		o.AmpHi, o.AmpLo = max(o.AmpHi, st.amp), min(o.AmpLo, st.amp)
 	}
-	// Growth that stops with OP off its limits was no instability: a linear one goes
-	// on until something clips.
-	if q, ok := b.stat(level, 12); o.Grow && ok && o.Evals > 12 && q.growth < 1.012 && q.least > 0.7 && w.in.t-s.Tune.LimitAt > 8*o.P && q.amp < 25 {
+	// Growth that stops early with OP off its limits was no instability: a linear one
+	// goes on until something clips, be it a limit further down a cascade.
+	if q, ok := b.stat(level, 12); o.Grow && ok && o.Evals > 12 && (o.Evals < 40 || st.amp < 3*o.AmpLo) && q.growth < 1.012 && q.least > 0.7 && w.in.t-s.Tune.LimitAt > 8*o.P && q.amp < 25 {
 		o.Grow, o.GrowCause, o.Sus = false, 0, true
 		b.Conf = 0
 		o.Cause, o.Conf = 0, 0.5

@@ -129,7 +129,7 @@ func stepRecovery(w *Watch) {
 func (w *Watch) endRecovery(thr float64) {
 	s, in := &w.s, &w.in
 	r := &s.Recov
-	if r.Late || r.Peak < 1.2*thr || r.Sat || !in.hasOP {
+	if r.Late || r.Peak < 1.2*thr || in.t-r.T0 < 3*w.updateS() && w.updateS() > 3*in.dt || r.Sat || !in.hasOP {
 		return
 	}
 	e := recovery{At: float32(in.t), T0: float32(r.T0), Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP}

@@ -185,27 +185,37 @@ func (s *Sites) Load(b []byte) error {
 	return nil
 }
 
-// phaseKept is the mean resultant length of b's crossings against a's, either
-// sign, and how many of a's crossings were compared.
+// phaseKept is the mean resultant length of b's crossings against a's, up and down
+// ones apart (a cycle need not be symmetric), for the better of the two signs, and
+// how many of a's crossings were compared.
 func phaseKept(a, b *Evidence) (r float64, n int) {
+	for sign := range 2 {
+		if q, m := phaseOfSign(a, b, sign); q > r {
+			r, n = q, m
+		}
+	}
+	return
+}
+
+func phaseOfSign(a, b *Evidence, sign int) (r float64, n int) {
 	p := a.PeriodS
-	var re, im float64
+	var re, im [2]float64
 	for i := range a.N {
 		best := math.Inf(1)
-		for j := range b.N {
+		for j := (i + sign) % 2; j < b.N; j += 2 {
 			if d := a.Cross[i] - b.Cross[j]; math.Abs(d) < math.Abs(best) {
 				best = d
 			}
 		}
 		if math.Abs(best) < p {
-			x := 4 * math.Pi * best / p
-			re += math.Cos(x)
-			im += math.Sin(x)
+			x := 2 * math.Pi * best / p
+			re[i&1] += math.Cos(x)
+			im[i&1] += math.Sin(x)
 			n++
 		}
 	}
 	if n == 0 {
 		return 0, 0
 	}
-	return math.Hypot(re, im) / float64(n), n
+	return (math.Hypot(re[0], im[0]) + math.Hypot(re[1], im[1])) / float64(n), n
 }

@@ -65,10 +65,11 @@ func (w *Watch) judgeSlow() {
 		}
 		// The tail must be that of the integral: time constant Ti (1 + 1/(Kc K)), which
 		// is Ti over the proportional share; 2.1 of them to 12 %.
+		// A share over 1 is that of a runaway process, for which this does not hold.
 		var tail [5]float64
 		nt := 0
 		for i := range 5 {
-			if e := r.recent(i); !e.SP && e.Ti > 0 && e.Prop > 0 {
+			if e := r.recent(i); !e.SP && e.Ti > 0 && e.Prop > 0 && e.Prop < 1.3 {
 				tail[nt] = float64(e.Dur) / (2.1 * float64(e.Ti) / min(1, max(0.03, float64(e.Prop))))
 				nt++
 			}

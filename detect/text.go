@@ -146,19 +146,19 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 		brief = fmt.Sprintf("apparent sticking, cycle %s, OP swing %s %%", duration(s.Osc.P), sig2(get("op_swing_pct")))
 	case kOffset:
 		side := "below"
-		if s.Off.Mean < 0 {
+		if s.OffPast.Offset.Mean < 0 {
 			side = "above"
 		}
-		what = fmt.Sprintf("PV stays %s %s its set point for %s with room left in OP (%s %%)", w.pvText(s.Off.Mean), side, duration(get("duration_s")), sig2(s.Motion.OP))
-		brief = fmt.Sprintf("PV %s %s SP for %s, OP free", w.pvText(s.Off.Mean), side, duration(get("duration_s")))
+		what = fmt.Sprintf("PV stays %s %s its set point for %s with room left in OP (%s %%)", w.pvText(s.OffPast.Offset.Mean), side, duration(get("duration_s")), sig2(s.Motion.OP))
+		brief = fmt.Sprintf("PV %s %s SP for %s, OP free", w.pvText(s.OffPast.Offset.Mean), side, duration(get("duration_s")))
 	case kSaturation:
 		if f.Cause == WindUp {
 			what = fmt.Sprintf("OP stays at its limit %s after PV has crossed the set point, then PV overshoots by %s", duration(get("overhang_s")), w.pvText(get("overshoot_pct")))
 			brief = fmt.Sprintf("wind-up: OP late by %s at its limit", duration(get("overhang_s")))
 			break
 		}
-		what = fmt.Sprintf("OP lies at its limit (%s %%) for %s while PV misses the set point by %s", sig2(s.Motion.OP), duration(get("duration_s")), w.pvText(s.Off.Mean))
-		brief = fmt.Sprintf("OP at limit %s for %s, PV off by %s", sig2(s.Motion.OP), duration(get("duration_s")), w.pvText(s.Off.Mean))
+		what = fmt.Sprintf("OP lies at its limit (%s %%) for %s while PV misses the set point by %s", sig2(s.Motion.OP), duration(get("duration_s")), w.pvText(s.OffPast.Sat.Mean))
+		brief = fmt.Sprintf("OP at limit %s for %s, PV off by %s", sig2(s.Motion.OP), duration(get("duration_s")), w.pvText(s.OffPast.Sat.Mean))
 	case kSluggish:
 		what = fmt.Sprintf("PV creeps back after disturbances: about %s", duration(get("recovery_s")))
 		if u := get("usual_s"); u == u {

@@ -52,6 +52,16 @@ type fit struct {
 
 func (f *fit) ok() bool { return f.R2 > fitR2 && f.X > fitX }
 
+// hasReset: integral action was seen. noReset: reset times over so many time scales T of a fit mean that OP is a scaled
+// copy of e; PI loops stay under 2.3 (99 %), P-only ones are over 800 (methods
+// section 3).
+const noReset = 30.0
+
+func (f *fit) hasReset() bool { return f.Ti > 0 && f.Ti < noTi }
+
+// noTi, s, stands for a reset time that is not there.
+const noTi = 1e9
+
 type fitBank struct {
 	E, OP                     [3]float32 // filter states: low pass, low pass again, high pass
 	S                         [3]float64 // of Int e, which grows large
@@ -91,6 +101,10 @@ func (w *Watch) stepFit(k, level int, e, si, op float64) {
 	h := w.levelS(level)
 	if w.in.limit {
 		w.s.Tune.LimitAt = w.in.t
+	}
+	// PV that stands between the values of an analyser shows no law at scales below.
+	if u := w.s.Motion.Update.Value(); u > 3 && u*w.s.Grid.DT > fitScale*h {
+		return
 	}
 	if b.Warm < 4*fitTh || w.in.t-w.s.Tune.LimitAt < 3*fitTh*h && w.s.Tune.LimitAt > 0 {
 		return
@@ -150,11 +164,11 @@ func (w *Watch) keepFit(k int, r fit) {
 		if b.BaseK.N > 2 {
 			b.DevK.Add(math.Abs(math.Log(math.Abs(float64(old.Kc))/b.BaseK.Value())), 0.8, 0.05, 0.01)
 		}
-		if b.BaseT.N > 2 && old.Ti > 0 {
+		if b.BaseT.N > 2 && old.hasReset() {
 			b.DevT.Add(math.Abs(math.Log(float64(old.Ti)/b.BaseT.Value())), 0.8, 0.05, 0.01)
 		}
 		b.BaseK.Add(math.Abs(float64(old.Kc)), 0.5, 0.02, 1e-6)
-		if old.Ti > 0 {
+		if old.hasReset() {
 			b.BaseT.Add(float64(old.Ti), 0.5, 0.02, 1e-3)
 		}
 	}
@@ -183,6 +197,9 @@ func (w *Watch) solveFit(k int) (r fit) {
 	h := w.levelS(2 * k)
 	s := max(w.s.Noise.sigma(), 0.01)
 	r = fit{Kc: float32(kc), Ti: float32(kc / ki), R2: float32(1 - rss/b.YY), At: float32(w.in.t), T0: float32(b.Start)}
+	if math.Abs(kc/ki) > noReset*fitScale*h {
+		r.Ti = noTi
+	}
 	r.X = float32(b.A11 / float64(b.N) / (s * s * w.s.Grid.DT * h * fitNoise))
 	return
 }
@@ -226,7 +243,7 @@ func (w *Watch) usualTuning(t float64) (kc, ti float64, ok bool) {
 			if float64(f.At) < t && f.R2 > 0.95 {
 				ks[n] = math.Abs(float64(f.Kc))
 				n++
-				if f.Ti > 0 {
+				if f.hasReset() {
 					ts[nt] = float64(f.Ti)
 					nt++
 				}
@@ -264,13 +281,12 @@ func (w *Watch) sign() float64 {
 func (w *Watch) propOnlySeen() bool {
 	n := 0
 	for k := range w.s.Fits {
-		q := w.s.Fits[k].Last
-		if q.At == 0 || q.R2 < fitR2 {
-			continue
-		}
-		if q.R2 > 0.95 && q.Kc != 0 && math.Abs(float64(q.Ti)) > 40*fitScale*w.levelS(2*k) {
+		q := &w.s.Fits[k].Last
+		switch {
+		case q.At == 0 || q.R2 < fitR2:
+		case q.R2 > 0.95 && q.Kc != 0 && (q.Ti < 0 || q.Ti == noTi):
 			n++
-		} else {
+		default:
 			n--
 		}
 	}

@@ -88,7 +88,7 @@ func (w *Watch) settle(k int, t float64, c *claim, rejudged bool) {
 // nothing, and is spared the rest.
 func (w *Watch) suspects() bool {
 	s := &w.s
-	return s.Osc.Grow || s.Osc.Sus || s.Off.Offset || s.Off.Sat || s.Sat.WindUp || s.Recov.Slow ||
+	return s.Osc.Grow || s.Osc.Sus || s.OffPast.Offset.On || s.OffPast.Sat.On || s.Sat.WindUp || s.Recov.Slow ||
 		s.Misc.Frozen || s.Misc.Pegged || s.Misc.OffNormal || s.Misc.Stale || s.Change.On
 }
 

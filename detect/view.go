@@ -122,7 +122,7 @@ func (w *Watch) tuningRange() (k, k0, k1, t, t0, t1 float64) {
 			f := &b.Ring[j]
 			g := math.Abs(float64(f.Kc))
 			k0, k1 = min(k0, g), max(k1, g)
-			if f.Ti > 0 {
+			if f.hasReset() {
 				t0, t1 = min(t0, float64(f.Ti)), max(t1, float64(f.Ti))
 			}
 		}
@@ -147,7 +147,7 @@ func (w *Watch) blindSpots() (b []string) {
 			b = append(b, "no mode, and the law was not seen acting yet: no finding on offset, saturation or sluggish recovery")
 		}
 	}
-	if r := w.resetS(); r > 0 && r < 3*s.Grid.DT {
+	if r, _ := w.resetS(); r > 0 && r < 3*s.Grid.DT {
 		b = append(b, fmt.Sprintf("sampled every %s, too slowly for a reset time of %s", duration(s.Grid.DT), duration(r)))
 	}
 	if u := w.updateS(); m.Changes > 20 && u > 4*s.Grid.DT && w.loop.Report == configs.Periodic {

@@ -59,6 +59,7 @@ type state struct {
 	Osc     oscState
 	Recov   recoveryState
 	Off     offsetState
+	OffPast offsetPast
 	Sat     saturationState
 	Misc    miscState
 	Change  tuneChange
@@ -262,7 +263,7 @@ func (w *Watch) slot(flags collector.Flags) {
 	}
 	in.e = in.sp - in.pv
 	w.stepMotion(flags)
-	s.Noise.step(in.pv, w.loop.Report == configs.Exception || in.held, in.active && !in.frozen && !s.Osc.Sus && !s.Osc.Grow)
+	s.Noise.step(in.pv, w.loop.Report == configs.Exception || in.held || s.Motion.Update.Value() > 3, in.active && !in.frozen && !s.Osc.Sus && !s.Osc.Grow)
 	if in.active && !in.frozen {
 		w.stepCascade()
 	}

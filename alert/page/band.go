@@ -42,8 +42,9 @@ func percent(v float64) string {
 // loop looks quiet.
 const leastBand = 4
 
-// trace draws least to greatest PV of every bucket as one path of whole
-// numbers, 60 high.
+// trace draws the range of PV of every bucket as one ribbon of whole numbers,
+// 60 high: a swing faster than a bucket is as wide as it is, and no shape is
+// made up for it.
 func trace(b []bucket) string {
 	low, high := math.Inf(1), math.Inf(-1)
 	for _, x := range b {
@@ -56,37 +57,36 @@ func trace(b []bucket) string {
 	}
 	mid, half := (low+high)/2, max(high-low, leastBand)/2
 	y := func(v int16) int64 { return int64(math.Round(30 - (widenPV(v)-mid)/half*28)) }
-	out := make([]byte, 0, 8*len(b))
-	pen, lastX, lastY := false, int64(0), int64(0)
-	for i, x := range b {
-		if x.saw&sawData == 0 {
-			pen = false
+	out := make([]byte, 0, 12*len(b))
+	for i := 0; i < len(b); i++ {
+		if b[i].saw&sawData == 0 {
 			continue
 		}
-		top, bottom := y(x.high), y(x.low)
-		// The nearer end comes first: one stroke from bucket to bucket.
-		if pen && abs(bottom-lastY) < abs(top-lastY) {
-			top, bottom = bottom, top
+		j := i
+		for j < len(b) && b[j].saw&sawData != 0 {
+			j++
 		}
-		if !pen {
-			out = append(out, 'M')
-			out = strconv.AppendInt(out, int64(i), 10)
-			out = append(out, ' ')
-			out = strconv.AppendInt(out, top, 10)
-		} else {
-			out = append(out, 'l')
-			out = strconv.AppendInt(out, int64(i)-lastX, 10)
-			out = appendStep(out, top-lastY)
+		out = append(out, 'M')
+		out = strconv.AppendInt(out, int64(i), 10)
+		at := y(b[i].high)
+		out = appendStep(out, at)
+		out = append(out, 'l')
+		for k := i + 1; k < j; k++ {
+			out, at = appendEdge(out, 1, y(b[k].high), at)
 		}
-		if bottom != top {
-			out = append(out, 'v')
-			out = strconv.AppendInt(out, bottom-top, 10)
-		} else if !pen {
-			out = append(out, "h0"...)
+		out, at = appendEdge(out, 0, y(b[j-1].low), at)
+		for k := j - 2; k >= i; k-- {
+			out, at = appendEdge(out, -1, y(b[k].low), at)
 		}
-		pen, lastX, lastY = true, int64(i), bottom
+		out = append(out, 'z')
+		i = j
 	}
 	return string(out)
+}
+
+// appendEdge goes one bucket on, from height at to height to.
+func appendEdge(b []byte, dx, to, at int64) ([]byte, int64) {
+	return appendStep(appendStep(b, dx), to-at), to
 }
 
 func appendStep(b []byte, v int64) []byte {
@@ -110,7 +110,13 @@ func bandOf(l *LoopState, ts []trouble, b []bucket, now time.Time, span time.Dur
 	start := end - span.Milliseconds()
 	out.Blind = l.State == detect.CannotJudge
 	// What buckets saw lies below what was found.
-	states := out.runs(b, sawInactive|sawHidden, "off", "manual", "law not acting", end, now, zone)
+	states := out.runs(b, sawManual, "off", "manual", "in manual", end, now, zone)
+	if other := out.runs(b, sawInactive, "off", "manual", "law not acting", end, now, zone); states == "" {
+		states = other
+	}
+	if hidden := out.runs(b, sawHidden, "off", "manual", "suppressed by design", end, now, zone); states == "" {
+		states = hidden
+	}
 	gone := out.runsGone(b, end, now, zone)
 	out.runs(b, sawLimit, "limit", "", "OP at a limit", end, now, zone)
 	for i := len(ts) - 1; i >= 0; i-- {

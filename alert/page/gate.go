@@ -138,6 +138,7 @@ func (g *gate) ServeHTTP(w http.ResponseWriter, r *http.Request) {
 		return
 	}
 	r.Body = http.MaxBytesReader(w, r.Body, maxBody)
+	limitTime(w, r)
 	if err := g.origins.Check(r); err != nil {
 		g.p.o.Log.Warn("request from another site refused", "audit", true, "path", path, "from", remote(r), "origin", r.Header.Get("Origin"))
 		g.p.refuse(w, r, http.StatusForbidden, "this request came from another site", "use the forms of the page itself")
@@ -160,6 +161,22 @@ func (g *gate) ServeHTTP(w http.ResponseWriter, r *http.Request) {
 		return
 	}
 	g.next.ServeHTTP(w, r.WithContext(context.WithValue(r.Context(), visitorKey{}, v)))
+}
+
+// limitTime keeps a slow client from holding anything for long, whatever server
+// we stand in. Streams move the limit on for themselves. Only a body has a read
+// limit: a read that ends in time would end the request of who sent none.
+func limitTime(w http.ResponseWriter, r *http.Request) {
+	rc := http.NewResponseController(w)
+	most := time.Minute
+	if strings.HasSuffix(r.URL.Path, "/export") || strings.HasSuffix(r.URL.Path, "/dossier") {
+		most = 15 * time.Minute
+	}
+	// A writer that knows no deadlines is none of the network.
+	_ = rc.SetWriteDeadline(time.Now().Add(most))
+	if r.ContentLength != 0 {
+		_ = rc.SetReadDeadline(time.Now().Add(30 * time.Second))
+	}
 }
 
 // visitor finds out who asks: by cookie or by Authorization: Bearer.
@@ -216,7 +233,7 @@ func (g *gate) askToken(w http.ResponseWriter, r *http.Request) {
 
 func (g *gate) signIn(w http.ResponseWriter, r *http.Request) {
 	if g.tokens == nil {
-		http.Redirect(w, r, "./", http.StatusSeeOther)
+		seeOther(w, "./")
 		return
 	}
 	if !g.allow(g.tries, remote(r), rate.Every(6*time.Second), 10) {
@@ -244,7 +261,7 @@ func (g *gate) signIn(w http.ResponseWriter, r *http.Request) {
 	g.mu.Unlock()
 	g.p.o.Log.Info("signed in", "audit", true, "who", v.Name, "from", remote(r))
 	http.SetCookie(w, g.cookie(r, id, int(sessionAge.Seconds())))
-	http.Redirect(w, r, backTo(r.PostFormValue("to")), http.StatusSeeOther)
+	seeOther(w, backTo(r.PostFormValue("to")))
 }
 
 func (g *gate) signOut(w http.ResponseWriter, r *http.Request, v Visitor) {
@@ -255,7 +272,14 @@ func (g *gate) signOut(w http.ResponseWriter, r *http.Request, v Visitor) {
 		g.p.o.Log.Info("signed out", "audit", true, "who", v.Name, "from", remote(r))
 	}
 	http.SetCookie(w, g.cookie(r, "", -1))
-	http.Redirect(w, r, "./sign-in", http.StatusSeeOther)
+	seeOther(w, "./sign-in")
+}
+
+// seeOther sends on by a relative way: http.Redirect would make it absolute, and
+// the path a proxy serves us under would be lost.
+func seeOther(w http.ResponseWriter, to string) {
+	w.Header().Set("Location", to)
+	w.WriteHeader(http.StatusSeeOther)
 }
 
 func (g *gate) cookie(r *http.Request, value string, age int) *http.Cookie {

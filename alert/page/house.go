@@ -2,6 +2,7 @@ package page
 
 import (
 	"context"
+	"errors"
 	"io"
 	"iter"
 	"time"
@@ -40,6 +41,9 @@ type House interface {
 	Settings(w io.Writer) error
 	Desk
 }
+
+// ErrUnknownLoop is the error for a name that is not in the loop list.
+var ErrUnknownLoop = errors.New("there is no loop of this name in the list")
 
 // Desk is the part of [alert.Desk] that the page uses.
 type Desk interface {

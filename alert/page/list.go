@@ -67,7 +67,8 @@ func (f filter) query() string {
 
 func (f filter) at(offset int) filter { f.Offset = offset; return f }
 
-func (f filter) narrowed() bool { return f.Text+f.Area+f.Source+f.Kind != "" || f.See }
+// Narrowed says that the list is not whole.
+func (f filter) Narrowed() bool { return f.Text+f.Area+f.Source+f.Kind != "" || f.See }
 
 // look is one reading of the house that a whole answer is made from.
 type look struct {
@@ -79,33 +80,41 @@ type look struct {
 }
 
 func (p *Page) look() look {
-	l := look{now: p.o.Clock(), zone: p.o.House.Site().Zone, loops: p.o.House.Loops(), eps: p.o.House.Episodes()}
+	l := look{now: p.o.Clock(), zone: p.o.House.Site().Zone, eps: p.o.House.Episodes()}
+	l.loops = p.loops(l.now)
 	l.found = troubles(p.o.House, l.eps)
 	return l
 }
 
-// need is the place of a loop in order of need: the less, the more.
+// need is the place of a loop in order of need: the less, the more. What cannot
+// be seen now stands below what can, at the same urgency.
 func need(s *LoopState, ts []trouble, since int64) int {
 	if len(ts) > 0 && ts[0].open() {
-		if ts[0].quietNow() {
-			return 4
+		switch {
+		case ts[0].quietNow():
+			return 6
+		case ts[0].State == alert.Held:
+			return 2*urgencyOrder(ts[0].Urgency) + 1
 		}
-		return urgencyOrder(ts[0].Urgency)
+		return 2 * urgencyOrder(ts[0].Urgency)
 	}
 	switch {
 	case len(ts) > 0 && ts[0].Until >= since:
-		return 5
-	case s.State == detect.HeldState:
-		return 6
-	case s.State == detect.NotNormal:
 		return 7
-	case s.State == detect.NoData:
+	case s.State == detect.HeldState:
 		return 8
+	case s.State == detect.NotNormal:
+		return lastToSee
+	case s.State == detect.NoData:
+		return 10
 	case s.State == detect.CannotJudge:
-		return 9
+		return 11
 	}
-	return 10
+	return 12
 }
+
+// lastToSee is the last place with something to see.
+const lastToSee = 9
 
 // pick gives the loops that pass the filter, in order of need, then by name.
 func (l *look) pick(f filter) []*LoopState {
@@ -124,7 +133,7 @@ func (l *look) pick(f filter) []*LoopState {
 			continue
 		}
 		r := ranked{s, need(s, ts, since), 0}
-		if f.See && r.need > 7 {
+		if f.See && r.need > lastToSee {
 			continue
 		}
 		if len(ts) > 0 {

@@ -18,13 +18,15 @@ type overlay struct {
 	Dots  bool    `json:"dots,omitempty"`
 }
 
+const noiseLevel = "noise level"
+
 // overlays makes the evidence that numbers of the watch allow: the noise level
 // about SP, the envelope of a swing, the offset, half-cycles, the decay of a
 // slow recovery.
 func overlays(t *trend, ts []trouble, v *detect.View) []overlay {
 	var out []overlay
 	if n := v.NoisePV; n > 0 && !math.IsInf(n, 0) {
-		o := overlay{Name: "noise level", On: "pv", Shown: true}
+		o := overlay{Name: noiseLevel, On: "pv", Shown: true}
 		for i, at := range t.Times {
 			sp := float64(t.SP[i])
 			o.add(at, sp-2*n, sp+2*n)

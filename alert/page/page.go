@@ -9,6 +9,8 @@
 //
 // The page is for people; programs use the JSON below /api/. Both go through
 // the same gate: Host check, tokens, origin check of every POST, limits.
+//
+//go:generate go run ./web/generate
 package page
 
 import (
@@ -41,6 +43,7 @@ type Page struct {
 	o       Options
 	gate    *gate
 	local   http.Handler
+	glance  glance
 	strips  strips
 	sparks  sparks
 	reading chan struct{} // bounds how many spans are read at once
@@ -90,10 +93,10 @@ func (p *Page) Handler() http.Handler { return p.gate }
 // socket needs no token.
 func (p *Page) Local() http.Handler { return p.local }
 
-// Server is an http.Server for a handler of the page, with limits on headers
-// and slow clients. Streams lift the write limit for themselves.
+// Server is an http.Server for a handler of the page, with limits on headers and
+// idle clients; the gate limits bodies and slow readers.
 func Server(h http.Handler, log *slog.Logger) *http.Server {
-	return &http.Server{Handler: h, ReadHeaderTimeout: 10 * time.Second, ReadTimeout: 30 * time.Second, WriteTimeout: 60 * time.Second,
+	return &http.Server{Handler: h, ReadHeaderTimeout: 10 * time.Second,
 		IdleTimeout: 2 * time.Minute, MaxHeaderBytes: 32 << 10, ErrorLog: slog.NewLogLogger(log.Handler(), slog.LevelDebug),
 		TLSConfig: &tls.Config{MinVersion: tls.VersionTLS12}}
 }

@@ -18,8 +18,9 @@ const (
 
 // What a bucket saw.
 const (
-	sawData     = 1 << iota
-	sawInactive // the law could not act: manual, tracking, out of service, by condition
+	sawData = 1 << iota
+	sawManual
+	sawInactive // the law could not act for another reason: tracking, out of service, by condition
 	sawLimit    // OP at one of its limits
 	sawBad      // a gap or bad quality
 	sawHidden   // suppressed by design
@@ -35,7 +36,11 @@ type bucket struct {
 // ring is a day of one loop in buckets. It reads the window once and then only
 // what is new, when somebody looks.
 type ring struct {
-	mu      sync.Mutex
+	mu sync.Mutex
+	day
+}
+
+type day struct {
 	loop    configs.Loop // of the reading: another range begins anew
 	begun   bool
 	first   int64 // number of the oldest bucket held
@@ -98,7 +103,7 @@ func (s *strips) upTo(ctx context.Context, frames collector.FrameReader, l *conf
 	r.mu.Lock()
 	defer r.mu.Unlock()
 	if r.begun && (r.loop.PVLow != l.PVLow || r.loop.PVHigh != l.PVHigh || r.loop.OPLimitLow != l.OPLimitLow || r.loop.OPLimitHigh != l.OPLimitHigh) {
-		*r = ring{}
+		r.day = day{}
 	}
 	last := now.UnixMilli() / bucketMs
 	r.slide(last, l)
@@ -118,11 +123,11 @@ func (s *strips) upTo(ctx context.Context, frames collector.FrameReader, l *conf
 	return out, nil
 }
 
-// slide moves the ring so that last is its newest bucket.
-func (r *ring) slide(last int64, l *configs.Loop) {
+// slide moves the day so that last is its newest bucket.
+func (r *day) slide(last int64, l *configs.Loop) {
 	first := last - ringBuckets + 1
 	if !r.begun {
-		*r = ring{begun: true, loop: *l, first: first}
+		*r = day{begun: true, loop: *l, first: first}
 		return
 	}
 	r.loop = *l
@@ -133,7 +138,7 @@ func (r *ring) slide(last int64, l *configs.Loop) {
 	r.first = max(r.first, first)
 }
 
-func (r *ring) add(f *collector.Frame, l *configs.Loop) {
+func (r *day) add(f *collector.Frame, l *configs.Loop) {
 	r.through = f.Time
 	b := f.Time / bucketMs
 	if b < r.first || b >= r.first+ringBuckets {
@@ -154,7 +159,10 @@ func (r *ring) add(f *collector.Frame, l *configs.Loop) {
 	}
 	r.low[i], r.high[i] = min(r.low[i], v), max(r.high[i], v)
 	saw |= sawData
-	if !f.Mode.LawActive() || f.Flags&collector.Inactive != 0 {
+	switch {
+	case f.Mode == collector.Manual:
+		saw |= sawManual
+	case !f.Mode.LawActive() || f.Flags&collector.Inactive != 0:
 		saw |= sawInactive
 	}
 	if f.Flags&collector.Suppressed != 0 {

@@ -12,6 +12,8 @@ import (
 	"strconv"
 	"strings"
 	"time"
+
+	"midwatch/detect"
 )
 
 //go:embed assets
@@ -98,7 +100,9 @@ var viewFiles embed.FS
 
 var views = template.Must(template.New("").Funcs(template.FuncMap{
 	"path": pathName, "tag": func() string { return assetTag }, "marks": func() template.HTML { return marks },
-	"capital": capital, "bytes": bytesText, "number": number, "join": strings.Join,
+	"capital": capital, "bytes": bytesText, "number": number, "words": func(c detect.Cause) string { return strings.ReplaceAll(string(c), "-", " ") },
+	// A query is made by url.Values.Encode: only what must not be encoded again.
+	"q": func(s string) template.URL { return template.URL("?" + s) },
 }).ParseFS(viewFiles, "views/*.html"))
 
 func capital(s string) string {
@@ -141,7 +145,7 @@ func (p *Page) shell(r *http.Request, up string, l *look) shell {
 		s.Site, s.Title = "midwatch", "midwatch"
 	}
 	if l != nil {
-		s.Sum, s.Total = p.o.House.Summary(), len(l.loops)
+		s.Sum, s.Total = p.summary(now), len(l.loops)
 		s.Age, s.AgeS, s.Stale = dataAge(&s.Sum, now)
 	}
 	return s
@@ -239,7 +243,7 @@ type signInView struct {
 
 func (p *Page) signInPage(w http.ResponseWriter, r *http.Request, code int, problem string) {
 	v := signInView{shell: p.shell(r, up(r), nil), Problem: problem, To: r.PostFormValue("to")}
-	if v.To == "" && !strings.HasPrefix(v.Here, "sign-in") {
+	if v.To == "" && r.Method == http.MethodGet && !strings.HasPrefix(v.Here, "sign-in") {
 		v.To = v.Here
 	}
 	p.showAs(w, r, code, "sign-in", v)

@@ -353,7 +353,7 @@ func (p *Page) spanTrend(r *http.Request, points int) (*trend, *LoopState, *look
 	l := p.look()
 	s := l.loop(loopName(r))
 	if s == nil {
-		return nil, nil, &l, errNoLoop
+		return nil, nil, &l, ErrUnknownLoop
 	}
 	w, err := readSpan(r.URL.Query(), l.now, 4)
 	if err != nil {
@@ -372,8 +372,6 @@ func (p *Page) spanTrend(r *http.Request, points int) (*trend, *LoopState, *look
 	return t, s, &l, nil
 }
 
-var errNoLoop = errors.New("there is no loop of this name in the list")
-
 type badRequest struct{ error }
 
 // answer turns the errors of a loop's views into answers.
@@ -383,7 +381,7 @@ func (p *Page) answer(w http.ResponseWriter, r *http.Request, err error) {
 		p.refuse(w, r, http.StatusBadRequest, what, hint)
 		return
 	}
-	if errors.Is(err, errNoLoop) {
+	if errors.Is(err, ErrUnknownLoop) {
 		p.notFound(w, r, err.Error())
 		return
 	}
@@ -440,7 +438,7 @@ func (p *Page) serveTrendCSV(w http.ResponseWriter, r *http.Request) {
 	l := p.look()
 	s := l.loop(loopName(r))
 	if s == nil {
-		p.answer(w, r, errNoLoop)
+		p.answer(w, r, ErrUnknownLoop)
 		return
 	}
 	span, err := readSpan(r.URL.Query(), l.now, 4)

@@ -113,6 +113,9 @@ func (t *trouble) say(now time.Time, zone *time.Location) (strong, rest string) 
 		return "was " + t.Word + " " + clock(t.Since, now, zone) + " – " + clock(t.Until, now, zone), "over"
 	}
 	var more []string
+	if t.State == alert.Held && t.Hold != nil {
+		return strong, "held since " + clock(t.Hold.Since, now, zone) + ": " + t.Hold.Why
+	}
 	if t.Kind == detect.SharedOscillation && len(f.Loops) > 0 {
 		more = append(more, quantity(float64(len(f.Loops)), "loops"))
 	}
@@ -123,15 +126,8 @@ func (t *trouble) say(now time.Time, zone *time.Location) (strong, rest string) 
 	} else if v, ok := f.Measures.Get("period_s"); ok {
 		more = append(more, "cycle "+seconds(v))
 	}
-	switch t.State {
-	case alert.Shelved:
-		more = append(more, "shelved")
-	case alert.Held:
-		if t.Hold != nil {
-			more = append(more, "cannot be seen since "+clock(t.Hold.Since, now, zone)+": "+t.Hold.Why)
-		}
-	case alert.Acknowledged:
-		more = append(more, "acknowledged")
+	if t.State == alert.Shelved || t.State == alert.Acknowledged || t.quietNow() {
+		more = append(more, string(t.State))
 	}
 	return strong, strings.Join(more, " · ")
 }

@@ -12,9 +12,9 @@ import (
 
 // verbs lists the verbs in the order of help. A new verb is one file and one row.
 var verbs = []func(*house) *cobra.Command{
-	replayVerb,
-
-	versionVerb,
+	runVerb, demoVerb, checkVerb, replayVerb,
+	statusVerb, acknowledgeVerb, shelveVerb, unshelveVerb,
+	exportVerb, dossierVerb, versionVerb, checkFileVerb,
 }
 
 // Exit codes, and how help lists them.

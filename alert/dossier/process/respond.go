@@ -3,9 +3,9 @@ package process
 import "math"
 
 // Respond computes the answer of the model with gain 1 to an input that is held
-// from each sample to the next, dt seconds apart, as deviation from what was
-// before the first sample: u before the first sample is u[0], at rest. dst has
-// the length of u. Dead times need not be whole samples.
+// from each sample to the next, dt seconds apart. The input is a deviation from
+// rest: it was zero before the first sample. dst has the length of u. Dead times
+// need not be whole samples.
 func (m Model) Respond(dst, u []float64, dt float64) {
 	d := int(math.Floor(m.ThetaS / dt))
 	f := m.ThetaS/dt - float64(d)
@@ -29,12 +29,11 @@ func (m Model) Respond(dst, u []float64, dt float64) {
 		}
 	}
 	x, y := 0.0, 0.0
-	u0 := u[0]
 	at := func(k int) float64 {
 		if k < 0 {
 			return 0
 		}
-		return u[k] - u0
+		return u[k]
 	}
 	for k := range u {
 		if m.Integrating {

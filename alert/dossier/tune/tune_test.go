@@ -140,8 +140,8 @@ func TestRulesAndMargins(t *testing.T) {
 		m := plants[r[0]]
 		c := rule(t, r[1], m)
 		name := r[0] + " " + r[1]
-		near(t, name+" Kc", c.Kc, num(t, r[2]), 1e-5)
-		near(t, name+" Ti", c.TiS, num(t, r[3]), 1e-5)
+		near(t, name+" Kc", c.Kc, num(t, r[2]), 2e-5)
+		near(t, name+" Ti", c.TiS, num(t, r[3]), 2e-5)
 		g := tune.Limits(m, c)
 		if !g.Stable {
 			t.Errorf("%s: called unstable", name)
@@ -252,7 +252,10 @@ func TestLimitsAndScanInSimulation(t *testing.T) {
 		t.Errorf("limit: rise %v against %v, overshoot %v against %v: wound up or not limited", a.RiseS, b.RiseS, a.OvershootPct, b.OvershootPct)
 	}
 	rms, travel := tune.Simulate(m, c, tune.Setup{NoisePct: 0.1, ScanS: 1, SpanS: 4000, Seed: 3}).OPNoise()
-	// P action alone makes Kc sigma = 0.25 % of it, and 2/sqrt(pi) of that a scan.
-	near(t, "OP noise", rms, 0.25, 0.15)
+	// P action alone makes Kc sigma = 0.25 % of it, and 2/sqrt(pi) of that a
+	// scan; the loop adds what it amplifies.
+	if rms < 0.25 || rms > 0.25*1.59 {
+		t.Errorf("OP noise %.3f, want 0.25 to 0.25 Ms", rms)
+	}
 	near(t, "OP travel by noise", travel, 0.25*2/math.Sqrt(math.Pi)*3600, 0.15)
 }

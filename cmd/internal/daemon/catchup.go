@@ -87,7 +87,9 @@ func (d *Daemon) catchUpLoop(ctx context.Context, id collector.LoopID) (frames i
 	c.pace.late = false
 	s.lane.pace[k] = c.pace
 	if t := w.Through(); t != 0 {
-		w.Restate(func(f *detect.Finding) { c.news.findings = append(c.news.findings, said{Finding: *f}) })
+		w.Restate(func(f *detect.Finding) {
+			c.news.findings = append(c.news.findings, said{Finding: *f, again: true})
+		})
 		c.post()
 		s.see(id, t, true)
 	}
@@ -104,6 +106,7 @@ type chase struct {
 	pace  pace
 	news  news
 	warm  bool
+	anew  int64 // frames up to here are of another loop, ms UTC
 }
 
 // load takes the newest memory there is: of the window, or the profile kept in
@@ -120,7 +123,10 @@ func (c *chase) load() error {
 	if newer(kept, b) {
 		b = kept
 	}
-	if b == nil {
+	c.d.mu.RLock()
+	c.anew = c.d.anew[c.name]
+	c.d.mu.RUnlock()
+	if t, err := detect.MemoryThrough(b); b == nil || err == nil && t <= c.anew {
 		return nil
 	}
 	err = c.watch.Load(b)
@@ -150,6 +156,9 @@ func (c *chase) read(ctx context.Context) (n int, err error) {
 	from := c.watch.Through() + 1
 	if from == 1 {
 		from = math.MinInt64
+	}
+	if c.anew != 0 {
+		from = max(from, c.anew+1)
 	}
 	if c.warm && from == math.MinInt64 {
 		from = c.d.clock.Now().Add(-warmSpan).UnixMilli()

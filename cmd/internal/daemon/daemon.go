@@ -1,6 +1,6 @@
 // Package daemon is the pipeline as a value: sources, rings, assemblers, window,
 // watches, ledger, desk. [New] builds it, [Daemon.Start] runs it, [Daemon.Stop]
-// ends it, [Daemon.Reload] changes it while it runs. [Replay] runs the same
+// ends it, [Daemon.Apply] changes it while it runs. [Replay] runs the same
 // steps over recorded frames.
 //
 // Who owns what: one goroutine per shard owns the assembler and the watches of
@@ -68,9 +68,11 @@ type Daemon struct {
 	newest   atomic.Int64 // data time of the newest frame, ms UTC
 	catching atomic.Int64 // loops that have not caught up
 	caught   chan struct{}
+	acts     atomic.Uint64 // what people did
+	counted  atomic.Pointer[countedLoops]
 	started  atomic.Int64 // wall clock, ms UTC
 
-	life    sync.Mutex // Start, Stop and Reload, one at a time
+	life    sync.Mutex // Start, Stop and Apply, one at a time
 	made    undo       // of New
 	running undo       // of Start
 	stopped error
@@ -82,6 +84,7 @@ type Daemon struct {
 	ids     map[string]collector.LoopID
 	feeds   []*feed // by index of the source; nil: gone
 	senders map[string]alert.Sender
+	anew    map[string]int64 // by loop: frames and memories up to here are of another loop
 	beat    *heart
 }
 
@@ -106,7 +109,7 @@ func New(o Options) (d *Daemon, err error) {
 	if o.Notify == nil {
 		o.Notify = func(string) {}
 	}
-	d = &Daemon{o: o, log: o.Logger, clock: o.Clock, cfg: o.Config, caught: make(chan struct{}), ids: map[string]collector.LoopID{}}
+	d = &Daemon{o: o, log: o.Logger, clock: o.Clock, cfg: o.Config, caught: make(chan struct{}), ids: map[string]collector.LoopID{}, anew: map[string]int64{}}
 	defer func() {
 		if err != nil {
 			_ = d.made.run(context.Background(), d.log) // what failed first is what counts
@@ -148,6 +151,9 @@ func New(o Options) (d *Daemon, err error) {
 			return d, err
 		}
 		d.shards = append(d.shards, s)
+	}
+	if err = d.meet(); err != nil {
+		return d, err
 	}
 	d.catching.Store(int64(len(d.roster)))
 	d.keeper = &keeper{d: d, log: d.log, clock: d.clock}

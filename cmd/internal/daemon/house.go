@@ -4,92 +4,80 @@ import (
 	"context"
 	"io"
 	"iter"
-	"math"
 	"time"
 
-	"midwatch/alert"
-	"midwatch/alert/page"
+	"midwatch/alert/page/api"
 	"midwatch/collector"
 	"midwatch/configs"
 	"midwatch/detect"
-	"midwatch/store"
 )
 
-// house shows the daemon to the page and to the verbs.
-type house struct {
-	*alert.Desk
-	d *Daemon
-}
+var _ api.House = (*Daemon)(nil)
 
-var _ page.House = house{}
-
-// House is the daemon as the page sees it.
-func (d *Daemon) House() page.House { return house{d.desk, d} }
-
-func (h house) Summary() page.Summary {
-	var s page.Summary
-	for _, l := range h.Loops() {
-		switch l.State {
-		case detect.Judged:
-			s.Judged++
-		case detect.NotNormal:
-			s.NotNormal++
-		case detect.HeldState:
-			s.Held++
-		default:
-			s.CannotJudge++
-		}
+// Status is the state of the watch in numbers.
+func (d *Daemon) Status() api.Status {
+	c, n := d.config(), d.counts()
+	now := d.clock.ms()
+	s := api.Status{Running: true, Version: d.o.Version, Site: c.Site.Name, Started: detect.FormatTime(d.started.Load()), Now: detect.FormatTime(now),
+		Sources: d.sourceStates(), Senders: d.desk.Senders(), Shelves: d.desk.Shelves(), Episodes: openOnly(api.Episodes(d.desk))}
+	s.Well, s.Unwell = d.Health()
+	s.Loops = d.loopCounts()
+	for _, p := range d.parts() {
+		s.Parts = append(s.Parts, api.Part{Name: p.name, AgeS: float64(now-p.last) / 1000, State: p.state})
 	}
-	s.CatchingUp = int(h.d.catching.Load())
-	for _, st := range h.d.sourceStates() {
-		s.Sources++
-		if st.Link == linkWatching {
-			s.Alive++
-		}
-		s.Newest = max(s.Newest, st.LastData)
+	s.Trends = trends(n.window.Bytes, c.Keep.Size, n.window.Frames, n.window.Dropped, n.window.Oldest)
+	s.Trends.Flushed = detect.FormatTime(d.keeper.flushed.Load())
+	if p := d.keeper.problem.Load(); p != nil {
+		s.Trends.Problem = *p
 	}
-	s.Revision = h.d.ledger.heard.Load()
+	s.Counts = n.all()
 	return s
 }
 
-func (h house) Watch() page.WatchState {
-	d := h.d
-	w := page.WatchState{Version: d.o.Version, Started: d.started.Load(), Sources: d.sourceStates()}
-	var frames uint64
-	for _, s := range d.shards {
-		frames += s.frames.Load()
+// loopCounts are remembered for a moment: every open page asks for them.
+func (d *Daemon) loopCounts() api.LoopCounts {
+	now := d.clock.ms()
+	if k := d.counted.Load(); k != nil && now-k.at < 1000 && now >= k.at && k.CatchingUp == 0 {
+		return k.LoopCounts
 	}
-	if t := d.clock.ms() - w.Started; t > 0 {
-		w.Rate = math.Round(float64(frames)*1e5/float64(t)) / 100
+	k := &countedLoops{at: now}
+	for _, l := range d.Loops() {
+		k.Add(l.State)
 	}
-	for _, p := range d.parts() {
-		w.Parts = append(w.Parts, page.Part{Name: p.name, Last: p.last, State: p.state, Well: p.state == "well"})
-	}
-	st := d.window.Stats()
-	w.Store = page.StoreState{Bytes: st.Bytes, Limit: d.config().Keep.Size, LastFlush: d.keeper.flushed.Load(), Dropped: st.Dropped}
-	if p := d.keeper.problem.Load(); p != nil {
-		w.Store.Problem = *p
-	}
-	kinds := map[string]string{}
-	for _, c := range d.config().Advise.Senders {
-		kinds[c.Name] = senderKind(&c)
-	}
-	for _, s := range d.desk.Senders() {
-		w.Senders = append(w.Senders, page.SenderState{Name: s.Name, Kind: kinds[s.Name], Waiting: s.Queued, Last: s.LastOK, Problem: s.Problem})
-	}
-	for _, s := range w.Sources {
-		w.Clock.Steps += s.Counts["clock_steps"]
-	}
-	return w
+	k.CatchingUp = int(d.catching.Load())
+	d.counted.Store(k)
+	return k.LoopCounts
 }
 
-// Loops gives the loops in the order of the loop list.
-func (h house) Loops() []page.LoopState {
-	cfg := h.d.config()
-	out := make([]page.LoopState, 0, len(cfg.Loops))
-	for _, l := range cfg.Loops {
-		s := page.LoopState{Loop: l, State: detect.NoData}
-		if v, ok := h.View(l.Name); ok {
+type countedLoops struct {
+	api.LoopCounts
+	at int64 // wall clock, ms UTC
+}
+
+func trends(bytes, limit int64, frames, dropped uint64, oldest int64) api.Trends {
+	t := api.Trends{Bytes: bytes, Limit: limit, Frames: frames, Dropped: dropped}
+	if oldest != 0 {
+		t.Oldest = detect.FormatTime(oldest)
+	}
+	return t
+}
+
+func openOnly(es []api.Episode) (out []api.Episode) {
+	for _, e := range es {
+		if e.Open {
+			out = append(out, e)
+		}
+	}
+	return out
+}
+
+// Loops gives the loops in the order of the loop list with their states.
+func (d *Daemon) Loops() []api.LoopState {
+	loops := d.config().Loops
+	out := make([]api.LoopState, 0, len(loops))
+	for _, l := range loops {
+		s := api.LoopState{Loop: l, State: detect.NoData}
+		if v, ok := d.View(l.Name); ok {
 			s.State, s.Why = v.State, v.Why
 		}
 		out = append(out, s)
@@ -97,63 +85,61 @@ func (h house) Loops() []page.LoopState {
 	return out
 }
 
-func (h house) View(loop string) (detect.View, bool) {
-	id, ok := h.d.idOf(loop)
+// View is what the watch of a loop knows now; false for an unknown loop.
+func (d *Daemon) View(loop string) (detect.View, bool) {
+	id, ok := d.idOf(loop)
 	if !ok {
 		return detect.View{}, false
 	}
-	v, _, ok := h.d.shardOf(id).view(id)
-	return v, ok
+	return d.shardOf(id).view(id)
 }
 
-func (h house) Explain(loop string) ([]string, error) {
-	if id, ok := h.d.idOf(loop); ok {
-		if lines, ok := h.d.shardOf(id).explain(id); ok {
-			return lines, nil
-		}
+// Explain gives the evidence held of a loop; false for an unknown loop.
+func (d *Daemon) Explain(loop string) ([]string, bool) {
+	id, ok := d.idOf(loop)
+	if !ok {
+		return nil, false
 	}
-	return nil, page.ErrUnknownLoop
+	return d.shardOf(id).explain(id)
 }
 
-func (h house) Frames(ctx context.Context, loop string, from, to int64) iter.Seq2[collector.Frame, error] {
-	return h.d.window.Frames(ctx, loop, from, to)
+// Frames reads kept frames of a loop, oldest first, from <= Time < to.
+func (d *Daemon) Frames(ctx context.Context, loop string, from, to int64) iter.Seq2[collector.Frame, error] {
+	return d.window.Frames(ctx, loop, from, to)
 }
 
-// Tuning gives nothing: readings of the tuning are not kept apart from memories.
-func (h house) Tuning(context.Context, string, int64) ([]page.TuningReading, error) { return nil, nil }
-
-func (h house) Settings(w io.Writer) error { return h.d.config().Show(w) }
-
-func senderKind(c *configs.Sender) string {
-	switch {
-	case c.Mail != nil:
-		return "mail"
-	case c.Webhook != nil:
-		return "webhook"
-	case c.MQTT != nil:
-		return "mqtt"
-	case c.Syslog != nil:
-		return "syslog"
-	case c.Log != nil:
-		return "log"
-	}
-	return "command"
+// Export writes trends, the loop list or memories.
+func (d *Daemon) Export(ctx context.Context, w io.Writer, e api.Export) error {
+	return writeExport(ctx, w, d.window, d.config().Loops, e)
 }
 
-// counts are the numbers of /metrics and of status.
+// Config is the configuration in force.
+func (d *Daemon) Config() *configs.Config { return d.config() }
+
+// Sources tells how the sources are.
+func (d *Daemon) Sources() []collector.SourceState { return d.sourceStates() }
+
+// Started is when Start was called; Now is the clock of the daemon.
+func (d *Daemon) Started() time.Time { return time.UnixMilli(d.started.Load()) }
+func (d *Daemon) Now() time.Time     { return d.clock.Now() }
+
+// CatchingUp is the number of loops that have not caught up since the start.
+func (d *Daemon) CatchingUp() int { return int(d.catching.Load()) }
+
+// counts are the numbers of status and metrics.
 type counts struct {
-	samples, dropped, frames, late, lost uint64
-	heard                                uint64
-	window                               store.Stats
-	asm                                  collector.Counts
+	samples, dropped, frames, stale, heard, lost uint64
+	waiting                                      int
+	asm                                          collector.Counts
+	window                                       storeStats
 }
 
 func (d *Daemon) counts() (c counts) {
 	in := d.intake.Counts()
-	c.samples, c.dropped = in.Put, in.Dropped
+	c.samples, c.dropped, c.waiting = in.Put, in.Dropped, in.Waiting
 	for _, s := range d.shards {
 		c.frames += s.frames.Load()
-		c.late += s.stale.Load()
+		c.stale += s.stale.Load()
 		s.mu.Lock()
 		t := s.asm.Totals()
 		s.mu.Unlock()
@@ -170,18 +156,9 @@ func (d *Daemon) counts() (c counts) {
 	return c
 }
 
-// memoriesAt gathers what export --memory writes: the memories of loops as of a
-// time, and of the site detectors.
-func memoriesAt(w *store.Window, loops []*configs.Loop, t time.Time) (*Memories, error) {
-	m := &Memories{Loops: map[string][]byte{}}
-	for _, l := range loops {
-		b, _, err := w.MemoryAt(l.Name, t.UnixMilli())
-		if err == nil {
-			m.Loops[l.Name] = b
-		}
-	}
-	if b, _, err := w.MemoryAt(sitesName, t.UnixMilli()); err == nil {
-		m.Sites = b
-	}
-	return m, nil
+func (c *counts) all() map[string]uint64 {
+	return map[string]uint64{"samples": c.samples, "samples_dropped": c.dropped, "frames": c.frames, "frames_held": c.asm.Held,
+		"frames_gap": c.asm.Gaps, "frames_stale": c.stale, "samples_late": c.asm.Late, "samples_duplicate": c.asm.Duplicates,
+		"clock_corrections": c.asm.Clock, "losses_reported": c.asm.Lost, "frames_thinned": c.asm.Thinned,
+		"findings": c.heard, "findings_lost": c.lost}
 }

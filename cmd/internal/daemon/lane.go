@@ -33,7 +33,8 @@ type news struct {
 // said is a finding, with the evidence behind it where that was asked for.
 type said struct {
 	detect.Finding
-	why []string
+	why   []string
+	again bool // a restatement of what was said before
 }
 
 // record is the evidence of one loop at the end of a slot of data time.

@@ -22,6 +22,7 @@ type ledger struct {
 	newest *atomic.Int64 // data time of the newest frame, ms UTC
 	clock  Clock
 	log    *slog.Logger
+	tap    func(*said) // sees every finding on its way; for tests
 
 	mu    sync.Mutex
 	inbox []post
@@ -117,7 +118,7 @@ func (l *ledger) work() bool {
 	for _, t := range l.limits {
 		least = min(least, t)
 	}
-	l.gather.advance(least, func(f *detect.Finding) { l.held = append(l.held, *f) })
+	l.gather.advance(least, func(f *detect.Finding) { l.hold(&said{Finding: *f}) })
 	if n := len(l.held) - heldMost; n > 0 {
 		l.held = slices.Delete(l.held, 0, n)
 		l.lost.Add(uint64(n))
@@ -128,7 +129,7 @@ func (l *ledger) work() bool {
 func (l *ledger) take(p *post) {
 	l.gather.record(p.news.evidence)
 	for i := range p.news.findings {
-		l.held = append(l.held, p.news.findings[i].Finding)
+		l.hold(&p.news.findings[i])
 	}
 	l.sights = append(l.sights, p.sights...)
 	if p.sites >= 0 {
@@ -152,6 +153,13 @@ func (l *ledger) take(p *post) {
 			l.log.Error("a memory is not kept", "loop", m.loop, "err", err)
 		}
 	}
+}
+
+func (l *ledger) hold(s *said) {
+	if l.tap != nil {
+		l.tap(s)
+	}
+	l.held = append(l.held, s.Finding)
 }
 
 // tell hands what is held to the desk.

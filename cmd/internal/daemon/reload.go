@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"slices"
 
 	"midwatch/alert/send"
 	"midwatch/collector"
@@ -11,12 +12,12 @@ import (
 	"midwatch/detect"
 )
 
-// Reload puts a new configuration in force. First all that can fail is done,
+// Apply puts a new configuration in force. First all that can fail is done,
 // touching nothing that runs; then the swap. A loop is the same by name, or by
 // the name it was: what did not change keeps everything. A source is restarted
 // only if its settings or tags changed. The data folder and the address of the
 // page stay as they are until a restart.
-func (d *Daemon) Reload(ctx context.Context, c *configs.Config) error {
+func (d *Daemon) Apply(ctx context.Context, c *configs.Config) error {
 	d.life.Lock()
 	defer d.life.Unlock()
 	if d.over || d.started.Load() == 0 {
@@ -65,7 +66,8 @@ func (d *Daemon) Reload(ctx context.Context, c *configs.Config) error {
 			f.leave(d.intake)
 		}
 	}
-	late = append(late, d.swap(p))
+	anew, err := d.swap(p)
+	late = append(late, err, d.remind(p, anew))
 	d.mu.Lock()
 	before := d.feeds
 	d.cfg, d.roster, d.ids, d.feeds, d.senders, d.beat = c, p.roster, p.ids, feeds, senders, beat
@@ -145,7 +147,7 @@ func (d *Daemon) plan(c *configs.Config) *reloadPlan {
 
 // swap changes loops under the locks of all shards and of the ledger, so that
 // every frame is judged by the old list or by the new one.
-func (d *Daemon) swap(p *reloadPlan) error {
+func (d *Daemon) swap(p *reloadPlan) (anew map[string]int64, err error) {
 	for _, s := range d.shards {
 		s.mu.Lock()
 		defer s.mu.Unlock()
@@ -154,6 +156,14 @@ func (d *Daemon) swap(p *reloadPlan) error {
 	d.ledger.work()
 	d.ledger.turn.Lock()
 	defer d.ledger.turn.Unlock()
+	anew = map[string]int64{}
+	for i, l := range p.roster {
+		id := collector.LoopID(i)
+		if l != nil && p.was[i] != nil && p.change[i] == configs.ChangeMemory {
+			s := d.shardOf(id)
+			anew[l.Name] = s.lane.pace[s.lane.at(id)].last
+		}
+	}
 	errs := []error{d.register(p.roster)}
 	for _, s := range d.shards {
 		errs = append(errs, s.reload(p, d.detectOptions()))
@@ -164,7 +174,40 @@ func (d *Daemon) swap(p *reloadPlan) error {
 		err = g.load(b)
 	}
 	d.ledger.gather = g
-	return errors.Join(append(errs, err)...)
+	return anew, errors.Join(append(errs, err)...)
+}
+
+// remind keeps what the loops are now, beside their memories.
+func (d *Daemon) remind(p *reloadPlan, anew map[string]int64) error {
+	put := map[string]identity{}
+	var gone []string
+	d.mu.Lock()
+	defer d.mu.Unlock()
+	for i, l := range p.roster {
+		was := p.was[i]
+		if was != nil && (l == nil || l.Name != was.Name) {
+			gone = append(gone, was.Name)
+		}
+		if l == nil || was != nil && p.change[i] == configs.ChangeNone && l.Name == was.Name {
+			continue
+		}
+		at := int64(0)
+		if was != nil {
+			at = max(anew[l.Name], d.anew[was.Name])
+		}
+		x, err := newIdentity(l, at)
+		if err != nil {
+			return err
+		}
+		put[l.Name], d.anew[l.Name] = x, at
+	}
+	for _, name := range gone {
+		if _, again := put[name]; !again {
+			delete(d.anew, name)
+		}
+	}
+	gone = slices.DeleteFunc(gone, func(name string) bool { _, again := put[name]; return again })
+	return d.keepIdentities(put, gone)
 }
 
 // reload changes the loops of a shard; mu is held.
@@ -244,8 +287,8 @@ func endings(w *detect.Watch, why string) (out []said) {
 	return out
 }
 
-// ReloadFrom reads the configuration anew by Options.Load and puts it in force.
-func (d *Daemon) ReloadFrom(ctx context.Context) error {
+// Reload reads the configuration anew by Options.Load and puts it in force.
+func (d *Daemon) Reload(ctx context.Context) error {
 	if d.o.Load == nil {
 		return errors.New("this watch cannot reload; hint: restart it")
 	}
@@ -253,6 +296,5 @@ func (d *Daemon) ReloadFrom(ctx context.Context) error {
 	if err != nil {
 		return err
 	}
-	return d.Reload(ctx, c)
+	return d.Apply(ctx, c)
 }
-

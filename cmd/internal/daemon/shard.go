@@ -2,6 +2,7 @@ package daemon
 
 import (
 	"context"
+	"math"
 	"sync"
 	"sync/atomic"
 	"time"
@@ -146,19 +147,21 @@ type loopMemory struct {
 	b       []byte
 }
 
-// view gives what the watch of a loop knows, and whether it has caught up.
-func (s *shard) view(id collector.LoopID) (v detect.View, late, ok bool) {
+// view gives what the watch of a loop knows. Until it has caught up, its watch
+// belongs to the one who catches up.
+func (s *shard) view(id collector.LoopID) (v detect.View, ok bool) {
 	s.mu.Lock()
 	defer s.mu.Unlock()
 	w := s.lane.watch(id)
 	if w == nil {
-		return detect.View{}, false, false
+		return detect.View{}, false
 	}
 	if s.lane.pace[s.lane.at(id)].late {
-		// Its watch belongs to the one who catches up.
-		return detect.View{State: detect.NoData, Why: "catching up"}, true, true
+		n := math.NaN()
+		return detect.View{State: detect.NoData, Why: "catching up", NoisePV: n, TimeScaleS: n, PeriodS: n,
+			GainPct: n, GainLow: n, GainHigh: n, ResetS: n, ResetLow: n, ResetHigh: n}, true
 	}
-	return w.View(), false, true
+	return w.View(), true
 }
 
 func (s *shard) explain(id collector.LoopID) ([]string, bool) {

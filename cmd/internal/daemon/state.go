@@ -1,32 +1,5 @@
 package daemon
 
-import (
-	"midwatch/alert"
-	"midwatch/store"
-)
-
-// deskStore gives the desk its transactions on the state.
-type deskStore struct{ s *store.State }
-
-func (d deskStore) Update(f func(alert.Tx) error) error {
-	return d.s.Update(func(t *store.Tx) error { return f(deskTx{t}) })
-}
-
-func (d deskStore) View(f func(alert.Tx) error) error {
-	return d.s.View(func(t *store.Tx) error { return f(deskTx{t}) })
-}
-
-type deskTx struct{ *store.Tx }
-
-func (t deskTx) Scan(bucket string, prefix []byte, f func(key, value []byte) error) error {
-	for k, v := range t.Tx.Scan(bucket, prefix) {
-		if err := f(k, v); err != nil {
-			return err
-		}
-	}
-	return nil
-}
-
 // Buckets of the daemon in the state.
 const (
 	bucketProfiles = "profiles" // loop -> memory, once a day

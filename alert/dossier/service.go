@@ -1,0 +1,205 @@
+package dossier
+
+import (
+	"fmt"
+	"math"
+	"slices"
+	"strings"
+
+	"midwatch/collector"
+	"midwatch/configs"
+	"midwatch/detect"
+)
+
+// tuningChange is a change of the tuning in service.
+type tuningChange struct {
+	at            int64
+	k0, k1        float64 // %/%; NaN unknown
+	t0, t1        float64 // s
+	read          bool
+	cause         string
+	before, after string
+}
+
+// changes lists the changes read from tags, then those found by the watch.
+func changes(l *configs.Loop, frames []collector.Frame, eps []Episode) []tuningChange {
+	var out []tuningChange
+	var k, t float32
+	for i := range frames {
+		f := &frames[i]
+		if f.Gain <= 0 && f.Reset <= 0 {
+			continue
+		}
+		nk, nt := k, t
+		if f.Gain > 0 {
+			nk = f.Gain
+		}
+		if f.Reset > 0 {
+			nt = f.Reset
+		}
+		if k > 0 && differs(k, nk) || t > 0 && differs(t, nt) {
+			out = append(out, tuningChange{at: f.Time, k0: known(k), k1: known(nk), t0: known(t), t1: known(nt), read: true})
+		}
+		k, t = nk, nt
+	}
+	for _, e := range eps {
+		if e.Kind != detect.TuningChanged {
+			continue
+		}
+		get := func(n string) float64 {
+			if v, ok := e.Measures.Get(n); ok {
+				return v
+			}
+			return math.NaN()
+		}
+		if slices.ContainsFunc(out, func(c tuningChange) bool { return math.Abs(float64(c.at-e.since)) < 3600e3 }) {
+			continue
+		}
+		out = append(out, tuningChange{at: e.since, k0: get("gain_before"), k1: get("gain"), t0: get("reset_before_s"), t1: get("reset_s")})
+	}
+	slices.SortFunc(out, func(a, b tuningChange) int { return int(sign(float64(a.at - b.at))) })
+	for i := range out {
+		out[i].before, out[i].after = faceplate(l, out[i].k0, out[i].t0), faceplate(l, out[i].k1, out[i].t1)
+	}
+	return out
+}
+
+func differs(a, b float32) bool { return math.Abs(float64(a)/float64(b)-1) > 1e-3 }
+
+func known(v float32) float64 {
+	if v > 0 {
+		return float64(v)
+	}
+	return math.NaN()
+}
+
+// faceplate is a tuning as the loop's faceplate would show it.
+func faceplate(l *configs.Loop, k, t float64) string {
+	if s := l.DescribeIdeal(k, t); s != "" {
+		return s
+	}
+	return "unknown"
+}
+
+// tuning sums up the tuning in service against the list.
+func (s *series) tuning(l *configs.Loop, w watched, cs []tuningChange, eps []Episode) []Fact {
+	out := []Fact{say("list", "on the list", l.DescribeTuning())}
+	v := w.view
+	if n := len(w.readings); n > 0 {
+		r := w.readings[n-1]
+		out = append(out, fact("gain", "gain in service, newest reading", r.Gain, "read from how OP follows the error; the range includes 5 % for what such a reading does not cover"),
+			fact("reset_s", "reset in service, newest reading", r.Reset, ""),
+			say("faceplate", "as the faceplate would show it", faceplate(l, r.Gain.Value, r.Reset.Value)))
+		out = append(out, against(l, r)...)
+	} else {
+		why := "not excited enough to be read: it needs moves of the error well above noise, with the law acting off its limits"
+		for _, b := range v.BlindSpots {
+			if strings.Contains(b, "no OP") {
+				why = b
+			}
+		}
+		out = append(out, fact("gain", "gain in service", none(why), ""), fact("reset_s", "reset in service", none(why), ""))
+	}
+	if len(cs) == 0 {
+		out = append(out, say("changes", "changes of the tuning", "none seen in the span"))
+	}
+	for _, c := range cs {
+		how := "found in the data"
+		if c.read {
+			how = "read from its tags"
+		}
+		out = append(out, say("change", detect.FormatTime(c.at), fmt.Sprintf("from %s to %s (%s)", c.before, c.after, how)))
+	}
+	if f, ok := windUp(eps); ok {
+		out = append(out, f)
+	}
+	return out
+}
+
+// against compares a reading with the list, and knows the errors of units.
+func against(l *configs.Loop, r Reading) []Fact {
+	var out []Fact
+	check := func(key, label string, read Number, list float64) {
+		if !read.Known() || !(list > 0) {
+			return
+		}
+		q := read.Value / list
+		text := fmt.Sprintf("%s times the list", short(q))
+		for _, u := range []struct {
+			f float64
+			s string
+		}{{60, "60: minutes and seconds"}, {1 / 60.0, "1/60: minutes and seconds"}, {3600, "3600: hours and seconds"}} {
+			if math.Abs(math.Log(q/u.f)) < 0.2 {
+				text += "; near " + u.s + " taken for each other"
+			}
+		}
+		if key == "gain_against_list" && math.Abs(math.Log(read.Value*list/100)) < 0.15 && math.Abs(math.Log(q)) > 0.4 {
+			text += "; near 100/x: a proportional band taken for a gain"
+		}
+		if key == "reset_against_list" && math.Abs(math.Log(read.Value*list/3600)) < 0.15 && math.Abs(math.Log(q)) > 0.4 {
+			text += "; near 1/x: repeats per minute taken for minutes"
+		}
+		if q < 1.5 && q > 1/1.5 {
+			text += "; they agree within a factor of 1.5"
+		}
+		out = append(out, say(key, label, text))
+	}
+	check("gain_against_list", "gain read against the list", r.Gain, l.GainPct)
+	check("reset_against_list", "reset read against the list", r.Reset, l.IdealReset)
+	return out
+}
+
+func windUp(eps []Episode) (Fact, bool) {
+	for _, e := range eps {
+		if e.Cause == detect.WindUp {
+			return say("wind_up", "anti-wind-up", "OP stayed at its limit after the error had changed sign: wound up, since "+e.Since), true
+		}
+	}
+	for _, e := range eps {
+		if e.Kind == detect.OutputSaturation {
+			return say("wind_up", "anti-wind-up", "OP was at a limit and left it as it should: no wind-up seen"), true
+		}
+	}
+	return say("wind_up", "anti-wind-up", "not seen: OP was never held at a limit by the error long enough"), true
+}
+
+// scheduled says whether the gain in service goes with PV.
+func (s *series) scheduled(w watched) []Fact {
+	type bin struct{ k []float64 }
+	if len(w.readings) < 8 {
+		return nil
+	}
+	var pv, lk []float64
+	for _, r := range w.readings {
+		if r.Gain.Known() && r.atPV == r.atPV {
+			pv, lk = append(pv, r.atPV), append(lk, math.Log(r.Gain.Value))
+		}
+	}
+	if len(pv) < 8 {
+		return nil
+	}
+	c := correlate(pv, lk)
+	sorted := slices.Sorted(slices.Values(pv))
+	lo, hi := quantile(sorted, 0.33), quantile(sorted, 0.67)
+	var bins [3]bin
+	for i := range pv {
+		switch {
+		case pv[i] <= lo:
+			bins[0].k = append(bins[0].k, math.Exp(lk[i]))
+		case pv[i] >= hi:
+			bins[2].k = append(bins[2].k, math.Exp(lk[i]))
+		default:
+			bins[1].k = append(bins[1].k, math.Exp(lk[i]))
+		}
+	}
+	a, b := median(bins[0].k), median(bins[2].k)
+	if !(math.Abs(c) > 0.7) || !(math.Abs(math.Log(a/b)) > math.Log(1.3)) {
+		return []Fact{say("scheduled", "gain against operating point", fmt.Sprintf("the gain in service does not go with PV (correlation %s over %d readings)", short(c), len(pv)))}
+	}
+	return []Fact{
+		Fact{Key: "scheduled", Label: "gain against operating point", Text: fmt.Sprintf("the gain in service goes with PV (correlation %s over %d readings): a schedule, not a change", short(c), len(pv))},
+		fact("scheduled_low", fmt.Sprintf("gain with PV up to %s %s", short(lo), s.unit()), spreadOf(bins[0].k, "%/%", ""), ""),
+		fact("scheduled_mid", "gain between", spreadOf(bins[1].k, "%/%", "no reading there"), ""),
+		fact("scheduled_high", fmt.Sprintf("gain with PV from %s %s", short(hi), s.unit()), spreadOf(bins[2].k, "%/%", ""), ""),
+	}
+}

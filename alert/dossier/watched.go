@@ -1,0 +1,246 @@
+package dossier
+
+import (
+	"fmt"
+	"math"
+	"slices"
+
+	"midwatch/collector"
+	"midwatch/detect"
+)
+
+// watched is what a watch of the loop says over the span.
+type watched struct {
+	findings []detect.Finding
+	spells   []spell
+	readings []Reading
+	view     detect.View
+}
+
+// spell is a stretch of slots of data time in which the loop swung with one
+// period.
+type spell struct {
+	from, to        int64 // ms UTC
+	period, amp     []float64
+	regular, shape  []float64
+	growing         bool
+	periodLow, high float64
+}
+
+// look runs a watch over the frames: the same judgement as the live one, begun
+// at the beginning of the span.
+func look(in *Input, frames []collector.Frame) watched {
+	var out watched
+	w := detect.New(in.Loop, 0, in.Detect)
+	var lastK, lastT float64
+	for i := range frames {
+		f := &frames[i]
+		w.Step(f, func(x *detect.Finding) { out.findings = append(out.findings, *x) })
+		e, ok := w.TakeEvidence()
+		if !ok {
+			continue
+		}
+		out.take(e)
+		v := w.View()
+		if v.GainPct == v.GainPct && (v.GainPct != lastK || v.ResetS != lastT && v.ResetS == v.ResetS) {
+			lastK, lastT = v.GainPct, v.ResetS
+			r := Reading{at: f.Time, At: detect.FormatTime(f.Time), Gain: ranged(v.GainPct, v.GainLow, v.GainHigh, "%/%"),
+				Reset: none("no integral action seen"), atPV: float64(f.PV)}
+			if v.ResetS == v.ResetS {
+				r.Reset = ranged(v.ResetS, v.ResetLow, v.ResetHigh, "s")
+			}
+			r.AtOP = number((float64(f.OP)-in.Loop.OPLow)/in.Loop.OPSpan()*100, "%")
+			out.readings = append(out.readings, r)
+		}
+	}
+	out.view = w.View()
+	return out
+}
+
+func (o *watched) take(e detect.Evidence) {
+	if !e.Live {
+		return
+	}
+	n := len(o.spells)
+	if n == 0 || e.Slot-o.spells[n-1].to > max(2*detect.SiteSlotMs, int64(3000*e.PeriodS)) || e.PeriodS > 1.4*o.spells[n-1].high || e.PeriodS < o.spells[n-1].periodLow/1.4 {
+		o.spells = append(o.spells, spell{from: min(e.Slot, max(e.Since, 0)), periodLow: e.PeriodS, high: e.PeriodS})
+		if n > 0 {
+			o.spells[n].from = max(o.spells[n].from, o.spells[n-1].to)
+		}
+		n++
+	}
+	s := &o.spells[n-1]
+	s.to = e.Slot
+	s.growing = s.growing || e.Growing
+	s.period, s.amp = append(s.period, e.PeriodS), append(s.amp, e.Amp)
+	s.regular = append(s.regular, e.Regular)
+	s.periodLow, s.high = math.Min(s.periodLow, e.PeriodS), math.Max(s.high, e.PeriodS)
+	if e.Shape == e.Shape {
+		s.shape = append(s.shape, e.Shape)
+	}
+}
+
+// episodes joins the findings of the loop to episodes, newest first among equals
+// of one kind folded into one.
+func episodes(loop string, fs []detect.Finding, from, to int64) []Episode {
+	var out []Episode
+	open := map[detect.Kind]int{}
+	own := slices.Clone(fs)
+	slices.SortStableFunc(own, func(a, b detect.Finding) int {
+		switch {
+		case a.At < b.At:
+			return -1
+		case a.At > b.At:
+			return 1
+		}
+		return 0
+	})
+	for _, f := range own {
+		if f.Loop != loop && f.Subject.Loop != loop && !slices.Contains(f.Loops, loop) || f.Since > to && to > 0 {
+			continue
+		}
+		i, is := open[f.Kind]
+		switch {
+		case f.Event == detect.Cleared:
+			if is {
+				out[i].Cleared, out[i].end = detect.FormatTime(f.At), f.At
+				delete(open, f.Kind)
+			}
+			continue
+		case !is:
+			i = len(out)
+			out = append(out, Episode{Kind: f.Kind, Since: detect.FormatTime(f.Since), Raised: detect.FormatTime(f.At), since: f.Since, end: math.MaxInt64})
+			open[f.Kind] = i
+		}
+		e := &out[i]
+		e.Cause, e.Confidence, e.Also, e.Text = f.Cause, math.Round(f.Confidence*100)/100, f.AlsoPossible, f.Text
+		if len(f.Measures) > 0 {
+			e.Measures = f.Measures
+		}
+	}
+	return slices.DeleteFunc(out, func(e Episode) bool { return e.end < from })
+}
+
+// growths are the growth figures of the growing swings of the span.
+func growth(eps []Episode, c *Cycle) Number {
+	for _, e := range eps {
+		if e.Kind == detect.GrowingOscillation && e.since <= c.to && e.end >= c.from {
+			if g, ok := e.Measures.Get("growth_per_cycle"); ok {
+				return number(g, "times a cycle")
+			}
+		}
+	}
+	return none("it did not grow, or too little to be told from noise")
+}
+
+// cycles describes the spells in which the loop swung.
+func (s *series) cycles(w watched, eps []Episode) []Cycle {
+	var out []Cycle
+	for _, sp := range w.spells {
+		a, b := max(0, s.slot(sp.from)), min(s.n(), s.slot(sp.to))
+		p := median(sp.period)
+		if b-a < 8 || float64(b-a)*s.dt < p {
+			continue
+		}
+		c := Cycle{From: detect.FormatTime(sp.from), To: detect.FormatTime(sp.to), from: sp.from, to: sp.to, periodS: p}
+		c.Period = spreadOf(sp.period, "s", "")
+		c.Cycles = number(math.Round(float64(sp.to-sp.from)/1000/p), "cycles")
+		var amp []float64
+		for _, x := range sp.amp {
+			amp = append(amp, s.pvUnits(x))
+		}
+		c.Amplitude = spreadOf(amp, s.unit(), "")
+		c.Regularity = spreadOf(sp.regular, "mean over deviation of half-cycles", "")
+		c.Shape = spreadOf(sp.shape, "0 sine, 1 triangle", "its form is too unclear to say")
+		c.Growth = growth(eps, &c)
+		c.OP, c.Harmonic3 = s.outputCycle(a, b, p)
+		out = append(out, c)
+	}
+	return out
+}
+
+// outputCycle measures OP at the period and at a third of it, over stretches of
+// four periods.
+func (s *series) outputCycle(a, b int, periodS float64) (amp, h3 Number) {
+	per := periodS / s.dt
+	var as, hs []float64
+	step := int(4 * per)
+	for k := a; step > 0 && k+step <= b; k += max(step, (b-a)/200) {
+		x, _ := phasor(s.op, k, k+step, per)
+		if !(x > 2*s.quantOP) || !(x > 0.02) {
+			continue
+		}
+		as = append(as, x)
+		if per >= 12 {
+			y, _ := phasor(s.op, k, k+step, per/3)
+			hs = append(hs, y/x)
+		}
+	}
+	why := "fewer than 12 samples a period"
+	if per >= 12 {
+		why = "OP hardly moves with it"
+	}
+	return spreadOf(as, "% of OP", "OP hardly moves with it, or fewer than four periods"), spreadOf(hs, "of the first; triangle 0.11, square 0.33", why)
+}
+
+// manualSpells says of each cycle what natural manual spells tell: the trade's
+// test of whether a cycle comes from outside.
+func (s *series) manualSpells(cs []Cycle, outer bool) []Fact {
+	type stretch struct{ a, b int }
+	var man []stretch
+	for k := 0; k < s.n(); k++ {
+		if s.law[k] || s.pv[k] != s.pv[k] {
+			continue
+		}
+		a := k
+		for k < s.n() && !s.law[k] && s.pv[k] == s.pv[k] {
+			k++
+		}
+		man = append(man, stretch{a, k})
+	}
+	var out []Fact
+	for i := range cs {
+		c := &cs[i]
+		per := c.periodS / s.dt
+		c.InManual = "no manual spell of three periods beside it"
+		if !s.known {
+			c.InManual = "no mode: a manual spell cannot be told"
+		}
+		for _, m := range man {
+			at := s.at(m.a)
+			near := at <= c.to+int64(6000*c.periodS) && s.at(m.b) >= c.from-int64(6000*c.periodS)
+			if !near || float64(m.b-m.a) < 3*per || outer {
+				if near && outer {
+					c.InManual = "an outer loop of a cascade: in manual its inner loop still works, the test says nothing"
+				}
+				continue
+			}
+			moved := 0.0
+			for k := m.a + 1; k < m.b; k++ {
+				if d := math.Abs(s.op[k] - s.op[k-1]); d == d {
+					moved += d
+				}
+			}
+			amp, _ := phasor(s.pv, m.a, m.a+int(math.Floor(float64(m.b-m.a)/per)*per), per)
+			was := c.Amplitude.Value / s.pvUnits(1)
+			floor := 3 * s.sigma * math.Sqrt(2/float64(m.b-m.a))
+			r := amp / was
+			text := fmt.Sprintf("manual from %s for %s: PV swung with %s of the amplitude it had", detect.FormatTime(at), duration(float64(m.b-m.a)*s.dt), percent(r))
+			switch {
+			case moved > 20*was:
+				text += "; OP was moved too much by hand to tell"
+			case r > 0.6:
+				text += "; the cycle went on: it comes from outside this loop"
+			case r < 0.25 || amp < floor:
+				text += "; the cycle stopped: valve or tuning of this loop"
+			default:
+				text += "; it cannot be told"
+			}
+			c.InManual = text
+			out = append(out, say("manual_spell", "natural manual spell", text))
+		}
+	}
+	return out
+}
+
+func percent(r float64) string { return short(100*r) + " %" }

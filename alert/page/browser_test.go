@@ -1,0 +1,224 @@
+package page
+
+import (
+	"context"
+	"flag"
+	"net"
+	"os"
+	"os/exec"
+	"path/filepath"
+	"strings"
+	"sync"
+	"testing"
+	"time"
+
+	"github.com/chromedp/cdproto/cdp"
+	"github.com/chromedp/cdproto/emulation"
+	"github.com/chromedp/cdproto/runtime"
+	"github.com/chromedp/chromedp"
+
+	"midwatch/configs"
+)
+
+var update = flag.Bool("update", false, "write screenshots of the main views (with -run Screens)")
+
+var browser struct {
+	once   sync.Once
+	ctx    context.Context
+	cancel func()
+	err    error
+}
+
+func TestMain(m *testing.M) {
+	flag.Parse()
+	code := m.Run()
+	if browser.cancel != nil {
+		browser.cancel()
+	}
+	os.Exit(code)
+}
+
+// findBrowser gives the first headless browser of the usual names.
+func findBrowser() string {
+	for _, n := range []string{"chromium-headless-shell", "chromium", "chromium-browser", "google-chrome"} {
+		if p, err := exec.LookPath(n); err == nil {
+			return p
+		}
+	}
+	return ""
+}
+
+// tab opens a tab of the one browser all tests share, in a profile of its own.
+// What the page's scripts throw or log as an error fails the test.
+func tab(t *testing.T, width, height int64) context.Context {
+	t.Helper()
+	path := findBrowser()
+	if path == "" {
+		if os.Getenv("MIDWATCH_PEERS") == "1" {
+			t.Fatal("no browser found; hint: apt-get install chromium-headless-shell")
+		}
+		t.Skip("no browser found; hint: apt-get install chromium-headless-shell")
+	}
+	browser.once.Do(func() {
+		opts := append(chromedp.DefaultExecAllocatorOptions[:], chromedp.ExecPath(path))
+		if os.Geteuid() == 0 {
+			opts = append(opts, chromedp.NoSandbox)
+		}
+		alloc, stop := chromedp.NewExecAllocator(context.Background(), opts...)
+		ctx, close := chromedp.NewContext(alloc)
+		// The first call starts the browser; a deadline on it would end it.
+		browser.err = chromedp.Do(ctx)
+		browser.ctx, browser.cancel = ctx, func() { close(); stop() }
+	})
+	if browser.err != nil {
+		t.Fatal(browser.err)
+	}
+	ctx, close := chromedp.NewContext(browser.ctx, chromedp.WithNewBrowserContext())
+	t.Cleanup(close)
+	if err := chromedp.Do(ctx, chromedp.EmulateViewport(width, height)); err != nil {
+		t.Fatal(err)
+	}
+	thrown := chromedp.Events(ctx, runtime.ExceptionThrown)
+	go func() {
+		for ev, err := range thrown {
+			if err != nil {
+				return
+			}
+			t.Errorf("script failed: %s", ev.ExceptionDetails.Text)
+			if x := ev.ExceptionDetails.Exception; x != nil {
+				t.Error(x.Description)
+			}
+		}
+	}()
+	ctx, cancel := context.WithTimeout(ctx, 40*time.Second)
+	t.Cleanup(cancel)
+	return ctx
+}
+
+func do(t *testing.T, ctx context.Context, steps ...chromedp.Action[chromedp.Void]) {
+	t.Helper()
+	if err := chromedp.Do(ctx, steps...); err != nil {
+		t.Fatal(err)
+	}
+}
+
+// eval gives the value of an expression in the page.
+func eval[T any](t *testing.T, ctx context.Context, js string) T {
+	t.Helper()
+	v, err := chromedp.Run(ctx, chromedp.Evaluate[T](js))
+	if err != nil {
+		t.Fatalf("%s: %v", js, err)
+	}
+	return v
+}
+
+// wait waits until an expression is true in the page.
+func wait(t *testing.T, ctx context.Context, js string) {
+	t.Helper()
+	deadline := time.Now().Add(15 * time.Second)
+	for !eval[bool](t, ctx, "!!("+js+")") {
+		if time.Now().After(deadline) {
+			t.Fatalf("never true: %s\n%.2000s", js, eval[string](t, ctx, "document.body.innerText"))
+		}
+		time.Sleep(30 * time.Millisecond)
+	}
+}
+
+func media(name, value string) chromedp.Action[chromedp.Void] {
+	return func(ctx context.Context, target *chromedp.Target) (chromedp.Void, error) {
+		_, err := cdp.Call(ctx, target, emulation.SetEmulatedMedia, emulation.SetEmulatedMediaParams{Features: []*emulation.MediaFeature{{Name: name, Value: value}}})
+		return chromedp.Void{}, err
+	}
+}
+
+func dark(on bool) chromedp.Action[chromedp.Void] {
+	v := "light"
+	if on {
+		v = "dark"
+	}
+	return media("prefers-color-scheme", v)
+}
+
+// house serves a page over a fake house and gives its address.
+func serve(t *testing.T, h *fakeHouse, c configs.Page) (*Page, string) {
+	t.Helper()
+	ln, err := net.Listen("tcp", "127.0.0.1:0")
+	if err != nil {
+		t.Fatal(err)
+	}
+	if c.Listen == "" {
+		c.Listen = "127.0.0.1:0"
+	}
+	p, err := New(Options{House: h, Page: c, Clock: h.clock})
+	if err != nil {
+		t.Fatal(err)
+	}
+	srv := Server(p.Handler(), p.o.Log)
+	go srv.Serve(ln)
+	t.Cleanup(func() { srv.Close() })
+	return p, "http://" + ln.Addr().String() + "/"
+}
+
+// TestScreens makes pictures of the main views: go test ./alert/page -run
+// Screens -update. They go into a folder under the temporary one, and three
+// small ones into screens/ for the README.
+func TestScreens(t *testing.T) {
+	if !*update {
+		t.Skip("pictures are made with -update")
+	}
+	dir := filepath.Join(os.TempDir(), "midwatch-screens")
+	if err := os.MkdirAll(dir, 0o755); err != nil {
+		t.Fatal(err)
+	}
+	h := newFake()
+	h.frozen = true
+	h.many(60)
+	_, url := serve(t, h, configs.Page{})
+	calm := newFake()
+	calm.frozen, calm.eps = true, nil
+	_, calmURL := serve(t, calm, configs.Page{})
+	shot := func(name, url string, w, hgt int64, night bool, ready string) {
+		ctx := tab(t, w, hgt)
+		do(t, ctx, dark(night), chromedp.Navigate(url))
+		if ready != "" {
+			wait(t, ctx, ready)
+		}
+		time.Sleep(250 * time.Millisecond) // the last paint
+		b, err := chromedp.Run(ctx, chromedp.CaptureScreenshot())
+		if err != nil {
+			t.Fatal(err)
+		}
+		if err := os.WriteFile(filepath.Join(dir, name+".png"), b, 0o644); err != nil {
+			t.Fatal(err)
+		}
+		if small, ok := strings.CutPrefix(name, "readme-"); ok {
+			if len(b) > 120<<10 {
+				t.Errorf("%s has %d bytes", name, len(b))
+			}
+			if err := os.WriteFile(filepath.Join("screens", small+".png"), b, 0o644); err != nil {
+				t.Fatal(err)
+			}
+		}
+	}
+	chart := "document.querySelectorAll('.uplot').length == 2"
+	shot("list", url, 1440, 1400, false, "")
+	shot("list-dark", url, 1440, 1100, true, "")
+	shot("list-phone", url, 390, 1800, false, "")
+	shot("list-wall", url, 2560, 1440, true, "")
+	shot("calm", calmURL, 1440, 900, false, "")
+	shot("loop", url+"loops/AIC-204", 1440, 1700, false, chart)
+	shot("loop-dark", url+"loops/AIC-204", 1440, 1200, true, chart)
+	shot("loop-phone", url+"loops/AIC-204", 390, 2000, false, chart)
+	shot("loop-sluggish", url+"loops/LIC-310", 1440, 900, false, chart)
+	shot("loop-offset", url+"loops/AIC-212?hours=12", 1440, 900, false, chart)
+	shot("loop-manual", url+"loops/FIC-131?hours=12", 1440, 900, false, chart)
+	shot("group", url+"episodes/20260106-0004-kfen", 1440, 900, false, "")
+	shot("cascade", url+"episodes/cascade:AIC-201", 1440, 800, false, "")
+	shot("watch", url+"watch", 1440, 1400, false, "")
+	shot("trend-svg", url+"loops/AIC-204/trend.svg?hours=4", 1000, 500, false, "")
+	shot("none", url+"loops/XX-1", 1000, 500, false, "")
+	shot("readme-list", url, 1000, 640, false, "")
+	shot("readme-loop", url+"loops/AIC-204", 1000, 640, false, chart)
+	shot("readme-phone", url, 390, 760, true, "")
+	t.Log("pictures are in", dir)
+}

@@ -1,0 +1,309 @@
+package page
+
+import (
+	"cmp"
+	"html/template"
+	"math"
+	"net/http"
+	"net/url"
+	"slices"
+	"strconv"
+	"time"
+
+	"midwatch/alert"
+	"midwatch/configs"
+	"midwatch/detect"
+)
+
+// loopPage is what the template of a loop takes.
+type loopPage struct {
+	shell
+	Loop    *configs.Loop
+	Path    string
+	State   string
+	Why     string
+	Blind   []string
+	Said    []said
+	Facts   []measureLine
+	Tuning  []measureLine
+	Changes []line
+	Journal []line
+	Explain []string
+	Query   string // of the span, for exports
+	Spans   []spanLink
+	From    string
+	To      string
+	FromUTC string
+	ToUTC   string
+	FromMs  int64
+	ToMs    int64
+	Hours   float64 // > 0: goes on with the time
+	XY      template.HTML
+	TuneSVG template.HTML
+	Shelf   *alert.Shelf
+	ShelfTo string
+	Inner   *configs.Loop
+	Outer   *configs.Loop
+	Empty   bool
+	WhoWant bool // a name must be given with a form
+	Done    string
+}
+
+// said is one trouble of the loop in full.
+type said struct {
+	trouble
+	Class     string
+	Text      string
+	Strong    string
+	Rest      string
+	SinceWord string
+	UTC       string
+	Measures  []measureLine
+	Also      []detect.Cause
+	Cause     string
+	Count     int
+	Group     bool
+	Open      bool
+	CanAck    bool
+	AckWord   string
+	Why       string // of the urgency
+}
+
+// line is a dated line.
+type line struct {
+	When string
+	UTC  string
+	Text string
+	Who  string
+}
+
+type spanLink struct {
+	Word  string
+	Query string
+	On    bool
+}
+
+func (p *Page) serveLoop(w http.ResponseWriter, r *http.Request) {
+	l := p.look()
+	s := l.loop(loopName(r))
+	if s == nil {
+		p.answer(w, r, ErrUnknownLoop)
+		return
+	}
+	ts := l.found[s.Loop.Name]
+	span, err := readSpan(r.URL.Query(), l.now, defaultHours(ts, l.now))
+	if err != nil {
+		p.answer(w, r, badRequest{err})
+		return
+	}
+	done, err := p.read(r.Context())
+	if err != nil {
+		p.answer(w, r, err)
+		return
+	}
+	defer done()
+	t, err := readTrend(r.Context(), p.o.House, s.Loop, span.From, span.To, 700)
+	if err != nil {
+		p.answer(w, r, err)
+		return
+	}
+	v := loopPage{shell: p.shell(r, up(r), &l), Loop: s.Loop, Path: pathName(s.Loop.Name), FromMs: span.From, ToMs: span.To, Hours: span.Hours,
+		Empty: t.Frames == 0, Done: r.URL.Query().Get("done")}
+	v.Title = s.Loop.Name + " · " + v.Site
+	v.WhoWant = v.Visitor.Name == ""
+	v.From, v.To = clock(span.From, l.now, l.zone), clock(span.To, l.now, l.zone)
+	v.FromUTC, v.ToUTC = utc(span.From), utc(span.To)
+	v.Query = spanQuery(span)
+	view, known := p.o.House.View(s.Loop.Name)
+	p.fillState(&v, s, &view, known)
+	p.fillSaid(r, &v, ts, &l)
+	v.Explain, _ = p.o.House.Explain(s.Loop.Name)
+	v.Changes = changeLines(t, &l)
+	v.Spans = spanLinks(span, &l, ts)
+	xyFrom, xyWord := xySpan(ts, t)
+	xy, err := readXY(r.Context(), p.o.House, s.Loop.Name, xyFrom, span.To)
+	if err != nil {
+		p.answer(w, r, err)
+		return
+	}
+	v.XY = xySVG(xy, s.Loop, xyWord)
+	readings, err := p.o.House.Tuning(r.Context(), s.Loop.Name, l.now.Add(-14*24*time.Hour).UnixMilli())
+	if err != nil {
+		p.once("tuning", err)
+	}
+	v.TuneSVG = tuningSVG(append(readings, t.tuning...), &view, s.Loop, l.now, l.zone)
+	for _, sh := range p.o.House.Shelves() {
+		if sh.Loop == s.Loop.Name {
+			v.Shelf, v.ShelfTo = &sh, clock(sh.Until, l.now, l.zone)
+		}
+	}
+	for i := range l.loops {
+		o := l.loops[i].Loop
+		if o.Name == s.Loop.Inner {
+			v.Inner = o
+		}
+		if o.Inner == s.Loop.Name {
+			v.Outer = o
+		}
+	}
+	p.show(w, r, "loop", v)
+}
+
+// defaultHours shows the trouble with as much before it, else four hours.
+func defaultHours(ts []trouble, now time.Time) float64 {
+	if len(ts) > 0 && ts[0].open() {
+		h := float64(now.UnixMilli()-ts[0].Since) / 3600e3
+		return math.Ceil(max(4, min(1.7*h, 48)))
+	}
+	return 4
+}
+
+func spanQuery(s wanted) string {
+	if s.Hours > 0 {
+		return "hours=" + strconv.FormatFloat(s.Hours, 'f', -1, 64)
+	}
+	return url.Values{"from": {strconv.FormatInt(s.From, 10)}, "to": {strconv.FormatInt(s.To, 10)}}.Encode()
+}
+
+// spanLinks are the usual spans and the ways to move.
+func spanLinks(s wanted, l *look, ts []trouble) []spanLink {
+	var out []spanLink
+	for _, h := range []float64{1, 4, 12, 24, 168, 336} {
+		word := number(h, 4) + " h"
+		if h == 168 {
+			word = "week"
+		} else if h == 336 {
+			word = "2 weeks"
+		}
+		out = append(out, spanLink{word, "hours=" + number(h, 4), s.Hours == h})
+	}
+	if len(ts) > 0 {
+		until := ts[0].Until
+		if until == 0 {
+			until = l.now.UnixMilli()
+		}
+		pad := max((until-ts[0].Since)/2, 30*60*1000)
+		w := wanted{From: ts[0].Since - pad, To: min(until+pad, l.now.UnixMilli())}
+		out = append(out, spanLink{"the finding", spanQuery(w), s.Hours == 0 && s.From == w.From})
+	}
+	return out
+}
+
+func (p *Page) fillState(v *loopPage, s *LoopState, view *detect.View, known bool) {
+	lp := s.Loop
+	v.State, v.Why = stateWords[s.State], s.Why
+	v.Blind = view.BlindSpots
+	unit := lp.Unit
+	if !known {
+		v.Facts = []measureLine{{"state", "not watched yet"}}
+		return
+	}
+	f := &view.Last
+	add := func(name, value string) { v.Facts = append(v.Facts, measureLine{name, value}) }
+	if f.Time != 0 {
+		add("PV", quantity(float64(f.PV), unit))
+		add("SP", quantity(float64(f.SP), unit))
+		opUnit := ""
+		if lp.OPLow == 0 && lp.OPHigh == 100 {
+			opUnit = "%"
+		}
+		add("OP", quantity(float64(f.OP), opUnit))
+		mode := f.Mode.String()
+		if mode == "" {
+			mode = "not known"
+		}
+		add("mode", mode+", normal is "+lp.NormalMode)
+		age := p.o.Clock().Sub(time.UnixMilli(f.Time)).Seconds()
+		add("newest value", seconds(math.Max(0, math.Round(age)))+" old")
+	} else {
+		add("values", "none yet")
+	}
+	add("sampled every", seconds(view.SampleS))
+	add("noise level of PV", quantity(view.NoisePV, unit))
+	add("usual recovery", seconds(view.TimeScaleS))
+	if view.PeriodS > 0 {
+		add("cycle now", seconds(view.PeriodS))
+	}
+	add("range of PV", number(lp.PVLow, 5)+" to "+quantity(lp.PVHigh, unit))
+	tune := func(name, value string) { v.Tuning = append(v.Tuning, measureLine{name, value}) }
+	tune("gain in service", ranged(view.GainPct, view.GainLow, view.GainHigh, "%/%"))
+	tune("gain in the list", quantity(lp.GainPct, "%/%"))
+	tune("reset in service", ranged(view.ResetS, view.ResetLow, view.ResetHigh, "s"))
+	list := quantity(lp.IdealReset, "s")
+	if lp.PropOnly {
+		list = "none, P-only by design"
+	}
+	tune("reset in the list", list)
+}
+
+func ranged(v, low, high float64, unit string) string {
+	if math.IsNaN(v) {
+		return "not excited enough to read"
+	}
+	s := number(v, 3) + "\u00a0" + unit
+	if !math.IsNaN(low) && !math.IsNaN(high) {
+		s += " (" + number(low, 3) + " to " + number(high, 3) + ")"
+	}
+	return s
+}
+
+// fillSaid puts in what was found of the loop, open first, and the journal.
+func (p *Page) fillSaid(r *http.Request, v *loopPage, ts []trouble, l *look) {
+	seen := map[string]bool{}
+	var journal []alert.Entry
+	for i := range ts {
+		t := ts[i]
+		x := said{trouble: t, Class: t.class(), Text: t.Finding.Text, Open: t.open(), SinceWord: clock(t.Since, l.now, l.zone), UTC: utc(t.Since),
+			Cause: sure(&t.Finding), Also: t.Finding.AlsoPossible, Measures: measureLines(&t.Finding, v.Loop.Unit), Group: t.Kind == detect.SharedOscillation}
+		x.Strong, x.Rest = t.say(l.now, l.zone)
+		e, entries, err := p.o.House.Episode(t.Episode)
+		if err == nil {
+			_, x.Why = p.o.House.Urgency(&e)
+			x.Count = e.Count
+			if e.Ack != nil {
+				x.AckWord = "acknowledged by " + e.Ack.Who
+				if e.Ack.Why != "" {
+					x.AckWord += ": " + e.Ack.Why
+				}
+			}
+			x.CanAck = v.Visitor.Act && !seen[t.Episode] && (e.State() == alert.Unacknowledged || e.State() == alert.ReturnedToNormal || e.State() == alert.Held)
+			if !seen[t.Episode] {
+				journal = append(journal, entries...)
+			}
+		}
+		seen[t.Episode] = true
+		v.Said = append(v.Said, x)
+	}
+	v.Journal = journalLines(journal, l)
+}
+
+// maxJournal bounds the lines of a view; the export has all.
+const maxJournal = 80
+
+func journalLines(es []alert.Entry, l *look) []line {
+	slices.SortStableFunc(es, func(a, b alert.Entry) int { return cmp.Compare(b.Wall, a.Wall) })
+	var out []line
+	for i := range es[:min(len(es), maxJournal)] {
+		e := &es[i]
+		x := line{When: clock(e.Wall, l.now, l.zone), UTC: utc(e.Wall), Text: e.What, Who: e.Who}
+		if e.Finding != nil && e.Who == "" {
+			x.Text += ": " + lookOf(e.Finding.Kind).Word
+		}
+		if e.Why != "" {
+			x.Text += ": " + e.Why
+		}
+		if e.Until != 0 {
+			x.Text += ", until " + clock(e.Until, l.now, l.zone)
+		}
+		out = append(out, x)
+	}
+	return out
+}
+
+func changeLines(t *trend, l *look) []line {
+	var out []line
+	for _, c := range slices.Backward(t.Changes) {
+		out = append(out, line{When: clock(c.At, l.now, l.zone), UTC: utc(c.At), Text: c.Word})
+	}
+	return out
+}

@@ -1,0 +1,298 @@
+package main
+
+import (
+	"context"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"io"
+	"log/slog"
+	"math"
+	"strings"
+	"text/tabwriter"
+	"time"
+
+	"github.com/spf13/cobra"
+
+	"midwatch/alert"
+	"midwatch/alert/send"
+	"midwatch/cmd/internal/daemon"
+	"midwatch/collector"
+	"midwatch/configs"
+	"midwatch/detect"
+)
+
+// checkFlags are the flags of check.
+type checkFlags struct {
+	config                       string
+	connect, trial, show, asJSON bool
+	within                       time.Duration
+}
+
+func checkVerb(h *house) *cobra.Command {
+	var f checkFlags
+	c := &cobra.Command{
+		Use:   "check -c FILE",
+		Short: "says whether the configuration stands",
+		Long: `Reads the configuration, the loop list and the secrets they name, and reports
+every mistake with file, line and column. When there is none it shows what was
+understood: the tuning of each loop in both usual forms, to be read against the
+faceplate, cascades, and what loops share.
+
+  --connect  also reads every tag once, and shows its value, range and unit
+  --send     also sends a marked trial advisory through every sender
+  --show     prints every setting in force, secrets masked
+
+It changes nothing on any server.`,
+		Args: cobra.NoArgs,
+		RunE: func(*cobra.Command, []string) error { return h.check(&f) },
+	}
+	configFlag(c, &f.config)
+	c.Flags().BoolVar(&f.connect, "connect", false, "read every tag once")
+	c.Flags().BoolVar(&f.trial, "send", false, "send a trial advisory through every sender")
+	c.Flags().BoolVar(&f.show, "show", false, "print the settings in force")
+	c.Flags().BoolVar(&f.asJSON, "json", false, "print JSON")
+	c.Flags().DurationVar(&f.within, "within", 20*time.Second, "how long --connect waits for each source")
+	return c
+}
+
+// checked is what check found out, and its JSON.
+type checked struct {
+	File     string        `json:"file"`
+	Warnings []string      `json:"warnings,omitempty"`
+	Loops    []loopChecked `json:"loops"`
+	Links    []string      `json:"links,omitempty"`
+	Sources  []probed      `json:"sources,omitempty"`
+	Senders  []trialSent   `json:"senders,omitempty"`
+}
+
+type loopChecked struct {
+	Loop   string `json:"loop"`
+	Tuning string `json:"tuning,omitempty"`
+	Doubt  string `json:"doubt,omitempty"` // where the data contradict the tuning
+}
+
+type probed struct {
+	Source string      `json:"source"`
+	Error  string      `json:"error,omitempty"`
+	Tags   []tagProbed `json:"tags,omitempty"`
+}
+
+type tagProbed struct {
+	Loop    string `json:"loop"`
+	Address string `json:"address"`
+	Value   string `json:"value,omitempty"`
+	Range   string `json:"range,omitempty"`
+	Error   string `json:"error,omitempty"`
+}
+
+type trialSent struct {
+	Sender string `json:"sender"`
+	Error  string `json:"error,omitempty"`
+}
+
+func (h *house) check(f *checkFlags) error {
+	c, err := loadConfig(f.config)
+	if err != nil {
+		return err
+	}
+	if f.show {
+		return c.Show(h.stdout)
+	}
+	r := checked{File: c.File, Warnings: c.Warnings, Loops: h.loopsChecked(c)}
+	for _, l := range configs.Structure(c.Loops) {
+		r.Links = append(r.Links, l.String())
+	}
+	failed := false
+	if f.connect {
+		var bad bool
+		if r.Sources, bad, err = h.probe(c, f.within); err != nil {
+			return err
+		}
+		failed = failed || bad
+	}
+	if f.trial {
+		var bad bool
+		if r.Senders, bad, err = h.trials(c); err != nil {
+			return err
+		}
+		failed = failed || bad
+	}
+	if f.asJSON {
+		err = json.NewEncoder(h.stdout).Encode(r)
+	} else {
+		err = r.print(h.stdout, c)
+	}
+	if err == nil && failed {
+		err = told{exitFailed}
+	}
+	return err
+}
+
+// loopsChecked shows the tuning, and doubts it where a watch on this data folder
+// has read another one by a usual mistake of units.
+func (h *house) loopsChecked(c *configs.Config) []loopChecked {
+	views := func(string) (detect.View, bool) { return detect.View{}, false }
+	if f, err := daemon.Look(c); err == nil { // else: no watch yet, or it runs
+		defer f.Close()
+		views = f.View
+	}
+	var out []loopChecked
+	for _, l := range c.Loops {
+		x := loopChecked{Loop: l.Name, Tuning: l.DescribeTuning()}
+		if v, ok := views(l.Name); ok {
+			x.Doubt = doubt(l, &v)
+		}
+		out = append(out, x)
+	}
+	return out
+}
+
+// doubt says where the tuning in the loop list differs from that which the data
+// show by a usual mistake of units.
+func doubt(l *configs.Loop, v *detect.View) string {
+	near := func(x, y float64) bool { return x > 0 && y > 0 && math.Abs(math.Log(x/y)) < 0.25 }
+	var out []string
+	if a, b := l.IdealReset, v.ResetS; a > 0 && b > 0 {
+		for _, k := range []struct {
+			factor float64
+			what   string
+		}{{60, "minutes and seconds"}, {3600, "hours and seconds"}} {
+			switch {
+			case near(a, b*k.factor), near(a*k.factor, b):
+				out = append(out, fmt.Sprintf("the data show a reset time of about %.3g s, the list %.3g s: %s confused?", b, a, k.what))
+			}
+		}
+		if !near(a, b) && (near(a, 1/b) || near(a, 3600/b)) {
+			out = append(out, fmt.Sprintf("the data show a reset time of about %.3g s, the list %.3g s: time and repeats confused?", b, a))
+		}
+	}
+	if a, b := math.Abs(l.GainPct), v.GainPct; a > 0 && b > 0 && !near(a, b) {
+		switch {
+		case near(a, 100/b):
+			out = append(out, fmt.Sprintf("the data show a gain of about %.3g, the list %.3g: gain and proportional band confused?", b, a))
+		case near(a, 1/b):
+			out = append(out, fmt.Sprintf("the data show a gain of about %.3g, the list %.3g: the list holds its inverse?", b, a))
+		}
+	}
+	return strings.Join(out, "; ")
+}
+
+// probe reads every tag of every source once.
+func (h *house) probe(c *configs.Config, within time.Duration) (out []probed, failed bool, err error) {
+	bindings, err := daemon.Bindings(c.Loops)
+	if err != nil {
+		return nil, false, err
+	}
+	log := slog.New(slog.NewTextHandler(h.stderr, &slog.HandlerOptions{Level: slog.LevelWarn}))
+	for i, s := range c.Sources {
+		src, err := daemon.NewSource(daemon.SourceKinds, s, daemon.SourceEnv{Site: c.Site.Name, Index: uint16(i), Bindings: bindings[s.Name],
+			Data: c.Data, Clock: time.Now, Log: log})
+		if err != nil {
+			return nil, false, err
+		}
+		p := probed{Source: s.Name}
+		prober, ok := src.(collector.Prober)
+		if !ok {
+			p.Error = "this kind of source cannot be asked once"
+			out = append(out, p)
+			continue
+		}
+		ctx, cancel := context.WithTimeout(h.ctx, within)
+		got, err := prober.Probe(ctx)
+		cancel()
+		if h.ctx.Err() != nil {
+			return nil, false, errors.New("stopped by a signal")
+		}
+		if err != nil {
+			p.Error, failed = err.Error(), true
+		}
+		for _, t := range got {
+			x := tagProbed{Loop: t.Binding.Name, Address: t.Binding.Address, Value: t.Text}
+			if t.Unit != "" && x.Value != "" {
+				x.Value += " " + t.Unit
+			}
+			if t.EULow < t.EUHigh {
+				x.Range = fmt.Sprintf("%g to %g", t.EULow, t.EUHigh)
+			}
+			if t.Err != nil {
+				x.Error, failed = t.Err.Error(), true
+			}
+			p.Tags = append(p.Tags, x)
+		}
+		out = append(out, p)
+	}
+	return out, failed, nil
+}
+
+// trials sends a marked trial advisory through every sender.
+func (h *house) trials(c *configs.Config) (out []trialSent, failed bool, err error) {
+	senders, err := send.All(c.Advise.Senders, send.Env{Site: c.Site.Name, Zone: c.Site.Zone, Clock: time.Now, Stdout: h.stdout})
+	if err != nil {
+		return nil, false, err
+	}
+	defer func() { err = errors.Join(err, send.Close(senders)) }()
+	for _, s := range c.Advise.Senders {
+		t := trialSent{Sender: s.Name}
+		m, err := alert.NewTrial(alert.Settings{Site: c.Site.Name, Zone: c.Site.Zone, Loops: c.Loops, Advise: c.Advise, PageURL: c.Page.URL, Senders: senders}, s.Name, time.Now())
+		if err == nil {
+			ctx, cancel := context.WithTimeout(h.ctx, 30*time.Second)
+			err = senders[s.Name].Send(ctx, m)
+			cancel()
+		}
+		if err != nil {
+			t.Error, failed = err.Error(), true
+		}
+		out = append(out, t)
+	}
+	return out, failed, nil
+}
+
+func (r *checked) print(w io.Writer, c *configs.Config) error {
+	fmt.Fprintf(w, "%s: %d loops, %d sources, %d senders: no mistakes\n", r.File, len(c.Loops), len(c.Sources), len(c.Advise.Senders))
+	for _, s := range r.Warnings {
+		fmt.Fprintf(w, "note: %s\n", s)
+	}
+	t := tabwriter.NewWriter(w, 0, 8, 2, ' ', 0)
+	fmt.Fprintln(t, "\nLOOP\tTUNING")
+	for _, l := range r.Loops {
+		fmt.Fprintf(t, "%s\t%s\n", l.Loop, l.Tuning)
+		if l.Doubt != "" {
+			fmt.Fprintf(t, "\tdoubtful: %s\n", l.Doubt)
+		}
+	}
+	for i, l := range r.Links {
+		if i == 0 {
+			fmt.Fprintln(t)
+		}
+		fmt.Fprintln(t, l)
+	}
+	for _, p := range r.Sources {
+		fmt.Fprintf(t, "\nSOURCE %s", p.Source)
+		if p.Error != "" {
+			fmt.Fprintf(t, ": %s", p.Error)
+		}
+		fmt.Fprintln(t)
+		for _, x := range p.Tags {
+			value := x.Value
+			if x.Range != "" {
+				value += "  (range " + x.Range + ")"
+			}
+			if x.Error != "" {
+				value = "NOT READ: " + x.Error
+			}
+			fmt.Fprintf(t, "%s\t%s\t%s\n", x.Loop, x.Address, value)
+		}
+	}
+	for _, s := range r.Senders {
+		if s.Error != "" {
+			fmt.Fprintf(t, "\nSENDER %s: NOT SENT: %s", s.Sender, s.Error)
+		} else {
+			fmt.Fprintf(t, "\nSENDER %s: the trial advisory was taken", s.Sender)
+		}
+	}
+	if len(r.Senders) > 0 {
+		fmt.Fprintln(t)
+	}
+	return t.Flush()
+}

@@ -1,0 +1,126 @@
+package detect
+
+import "math"
+
+// travel is what OP did over the later part of a run and what it should have done.
+type travel struct {
+	d, span   float64 // s, of the run and of its later part
+	kc, rt    float64 // tuning to reckon with; rt 0 unknown
+	learned   bool    // rt was seen, not only configured
+	rate      float64 // mean e of the later part, %
+	before    float64 // of the earlier part
+	dop, push float64 // % travelled; sign in which e pushes OP
+	resid     float64 // dop without the proportional part
+	implied   float64 // s, reset time at which the integral would have made it
+	expect    float64 // % that the integral should have travelled
+	lo, hi    float64 // extremes of OP, %
+	eRange    float64 // %
+	still     bool    // OP does not answer e
+}
+
+// offsetTravel is false before the run has a later part.
+func (w *Watch) offsetTravel(push, lo, hi float64) (t travel, ok bool) {
+	s, in := &w.s, &w.in
+	o := &s.Off
+	kc, known := w.gainPct()
+	if !known || kc == 0 || o.AnchorN == 0 {
+		return t, false
+	}
+	d := in.t - o.T0
+	a := o.anchorAt(0.3 * d)
+	t = travel{d: d, span: d - float64(a.T), kc: kc, push: push, lo: lo, hi: hi, eRange: s.Motion.eRange()}
+	t.rt, t.learned = w.resetS()
+	ie := o.Int - float64(a.Int)
+	t.rate, t.before = ie/t.span, float64(a.Int/a.T)
+	t.dop = o.OPs - float64(a.OP)
+	t.resid = t.dop - kc*(o.Es-float64(a.E))
+	t.implied = kc * ie / t.resid
+	t.expect = math.Inf(1)
+	if t.rt > 0 {
+		t.expect = math.Abs(kc * ie / t.rt)
+	}
+	swing := math.Abs(kc) * t.eRange
+	t.still = hi-lo < 0.25*swing && swing > 0.3 || hi-lo < opSame
+	return t, t.span >= 30*in.dt
+}
+
+// integralMissing: OP follows e and nothing of the integral is in it.
+func (w *Watch) integralMissing(t *travel) bool {
+	s := &w.s
+	none := t.implied < 0 || t.implied > 3*t.span
+	switch {
+	case t.learned: // the own reset time was seen before: well short of it is enough
+		none = t.implied < 0 || t.implied > 3*t.span && t.implied > 4*t.rt || t.implied > 5*t.rt
+	case t.rt > 0:
+		none = none && (t.implied < 0 || t.implied > 4*t.rt)
+	default:
+		none = none && w.propOnlySeen()
+	}
+	follows := s.Tune.Law == 0 || s.Tune.Law > 0.5 || t.expect > 10
+	return none && follows && !s.Off.WasStill && t.expect > 1.5 && math.Abs(t.resid) < max(0.2*t.expect, 0.5) &&
+		t.hi-t.lo < 2.5*math.Abs(t.kc)*t.eRange+1
+}
+
+// offsetCause compares the travel of OP with what the integral must do. longer is
+// the time, s, to wait beyond the usual before saying so; negative: no offset.
+func (w *Watch) offsetCause(push, lo, hi float64) (c Cause, conf, longer float64) {
+	s, in := &w.s, &w.in
+	o := &s.Off
+	t, ok := w.offsetTravel(push, lo, hi)
+	switch {
+	case !ok:
+		return Undetermined, 0.6, 8 * 3600
+	case t.still && t.expect > 3:
+		// OP does not answer e at all: manual, tracking, or not this loop's output.
+		o.WasStill = true
+		return Undetermined, 0.6, 0
+	case t.still:
+		return Undetermined, 0.5, 8 * 3600
+	case math.Abs(t.rate) < 0.6*math.Abs(t.before):
+		return Undetermined, 0.6, -1 // it is being worked off
+	case w.integralMissing(&t):
+		if !t.learned {
+			// Ignorant of the own reset time: longer than that of all but a few loops.
+			return IntegralMissing, 0.85, max(2.5*3600, 5*w.timeScale())
+		}
+		return IntegralMissing, 0.93, 0
+	case w.crossesSplit(lo, hi):
+		return Undetermined, 0.5, 4 * 3600
+	case math.Abs(t.dop) > 30 && t.d > 8*t.rt && lo > 1 && hi < 99 && math.Abs(t.rate) > 0.9*math.Abs(t.before) && math.Abs(t.rate) > 1 && push*t.dop > 0:
+		o.NotFollow = true
+		return FinalElementNotFollowing, 0.85, 0
+	case o.NotFollow:
+		return FinalElementNotFollowing, 0.85, 0
+	case o.Far > 0 && in.t-o.Far > 0.3*t.d && push*(o.OPs-o.OP0) > 30 && o.FarE > 3 && math.Abs(o.Es) > 0.9*o.FarE:
+		o.NotFollow = true
+		return FinalElementNotFollowing, 0.8, 0
+	case t.rt > 0 && t.implied < 3*t.rt:
+		return OutsideDisturbance, 0.6, max(8*3600, 12*t.rt) // the load outruns the integral, which does what it must
+	}
+	return Undetermined, 0.6, max(6*3600, 20*t.rt)
+}
+
+// crossesSplit: OP has been on both sides of the change-over of a split range,
+// where the process answers by another element, or by none for a while.
+func (w *Watch) crossesSplit(lo, hi float64) bool {
+	x := w.loop.OPSplit
+	if x != x {
+		return false
+	}
+	p := (x - w.s.Scale.OPLow) / w.s.Scale.OPSpan * 100
+	return lo < p+3 && hi > p-3
+}
+
+// anchorAt is the anchor nearest to an age of the run, s; nil before the first.
+func (o *offsetState) anchorAt(age float64) *anchor {
+	if o.AnchorN == 0 {
+		return nil
+	}
+	best := 0
+	for k := 1; k < int(o.AnchorN); k++ {
+		if math.Abs(float64(o.Anchors[k].T)-age) < math.Abs(float64(o.Anchors[best].T)-age) {
+			best = k
+		}
+	}
+	return &o.Anchors[best]
+}

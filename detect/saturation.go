@@ -1,0 +1,76 @@
+package detect
+
+import "math"
+
+// OP at the limit that e pushes towards, and what it does once e has changed sign.
+
+type saturationState struct {
+	WindUps   uint8   // occurrences of OP staying at its limit past the change of sign
+	LastWind  float64 // s
+	Over      float64 // s, longest overhang
+	Peak      float64 // %, overshoot after it
+	CrossAt   float64 // s, e changed sign with OP at the limit; 0 none
+	Side      float64
+	AtSince   float64 // s, since when OP is at the limit that e pushes towards
+	WindSince float64
+	WindUp    bool
+	Frames    uint8
+}
+
+func (z *saturationState) restart(t float64) { z.CrossAt, z.AtSince, z.Side, z.Frames = 0, 0, 0, 0 }
+
+func stepSaturation(w *Watch) {
+	s, in := &w.s, &w.in
+	z := &s.Sat
+	if !in.active || !in.hasOP {
+		z.CrossAt, z.Side = 0, 0
+		return
+	}
+	l0, l1 := w.opLimits()
+	side := 0.0
+	if in.op >= l1-opAtLimit {
+		side = 1
+	} else if in.op <= l0+opAtLimit {
+		side = -1
+	}
+	a := w.sign()
+	sigma := max(s.Noise.sigma(), 0.02)
+	// Wind-up: a sound controller leaves the limit at or before the change of sign
+	// of e (with conditional integration or tracking OP = limit needs Kc e + I >=
+	// limit and I <= limit); one that stays is wound up.
+	if z.CrossAt > 0 {
+		if side == z.Side && a*s.Motion.EF*side < -max(3*sigma, 0.3) {
+			if z.Frames < 250 {
+				z.Frames++
+			}
+		}
+		z.Peak = max(z.Peak, math.Abs(in.e))
+		if side != z.Side {
+			over := in.t - z.CrossAt
+			rt, _ := w.resetS()
+			if z.Frames >= 5 && over > max(8*in.dt, 0.25*rt) && rt > 0 && z.WindUps < 250 {
+				if z.WindUps == 0 || in.t-z.LastWind > 7*86400 {
+					z.WindUps, z.WindSince, z.Over = 0, z.CrossAt, 0
+				}
+				z.WindUps++
+				z.LastWind = in.t
+				z.Over = max(z.Over, over)
+				if z.WindUps >= 3 || over > 1.2*rt {
+					z.WindUp = true
+				}
+			}
+			z.CrossAt, z.Side, z.Frames = 0, 0, 0
+		}
+	} else if side != 0 {
+		if a*in.e*side > sigma {
+			z.Side = side // e pushes OP towards this limit
+		} else if z.Side == side && a*s.Motion.EF*side < 0 {
+			z.CrossAt, z.Frames, z.Peak = in.t, 0, 0
+		}
+	} else {
+		z.Side = 0
+	}
+	if z.WindUp && in.t-z.LastWind > 86400 {
+		z.WindUp, z.WindUps = false, 0
+	}
+}
