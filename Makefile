@@ -56,7 +56,7 @@ lint:
 	@.build/staticcheck ./...
 
 build:
-	@$(GO) build -trimpath -o .build/midwatch ./cmd/midwatch
+	@$(GO) build -o .build/midwatch ./cmd/midwatch
 	@.build/midwatch version
 
 # amd64 is the machine of most who build; these are the edge boxes. vet finds

@@ -27,7 +27,8 @@ func claimSustained(w *Watch) claim {
 		// A program or an outer loop moves the set point. News of this loop is only an
 		// error larger than the set point's own swing: no following at all would do better.
 		b := &w.s.Cycles[o.Bank]
-		on = w.usualKnown(b) && o.Amp > max(4*b.Usual.Value(), 1) && 2*o.Amp > 1.2*float64(w.s.Track.SPSwing)
+		u := b.Usual.Value()
+		on = w.usualKnown(b) && o.Amp > max(4*u, 1) && (o.Amp > 10*u || 2*o.Amp > 1.2*float64(w.s.Track.SPSwing))
 	}
 	c := o.Cause
 	if c == 0 {

@@ -91,6 +91,7 @@ type motion struct {
 	LawSeen             bool       // OP was seen answering e
 	EF                  float64    // e through a lag of three slots
 	OPMin, OPMax        float32    // while active
+	MinAt, MaxAt        float64    // s, when they last moved on
 	HalfLo, HalfHi      [2]float32 // OP extremes of the running and the last half hour (or 60 slots)
 	SPLo, SPHi          [2]float32
 	ELo, EHi            [2]float32

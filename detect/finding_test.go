@@ -84,6 +84,9 @@ func checkFinding(t testing.TB, f *detect.Finding) {
 			bad("%q in the text: %q, %q", w, f.Text, f.TextShort)
 		}
 	}
+	if !bytes.Contains([]byte(f.TextShort), []byte("dvisory")) {
+		bad("the short text does not say that it is an advisory: %q", f.TextShort)
+	}
 	b, err := json.Marshal(f)
 	if err != nil {
 		bad("JSON: %v", err)

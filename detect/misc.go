@@ -99,10 +99,14 @@ const rangeEnd = 0.3
 func stepRangeEnd(w *Watch) {
 	s, in := &w.s, &w.in
 	x := &s.Misc
-	if s.Scale.Guessed || !w.loop.PVRangeGiven {
+	if s.Scale.Guessed {
 		return
 	}
-	low, high := in.pv <= rangeEnd, in.pv >= 100-rangeEnd
+	near := rangeEnd
+	if !w.loop.PVRangeGiven { // 0 to 100 is only a guess: to the last bit, then
+		near = 0
+	}
+	low, high := in.pv <= near, in.pv >= 100-near
 	if !low && !high {
 		if x.InsideN < math.MaxUint32 {
 			x.InsideN++

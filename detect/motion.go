@@ -41,6 +41,7 @@ var efStep = 1 - math.Exp(-1./3)
 const (
 	opAtLimit = 0.5  // nearer to a limit than this is at it (methods section 8)
 	opSame    = 1e-6 // less is no change
+	opEdge    = 0.05 // nearer to its extreme than this is at it
 )
 
 // opLimits are the limits of OP in % of its range, as set in the controller.
@@ -110,6 +111,12 @@ func (w *Watch) stepMotion(flags collector.Flags) {
 	}
 	in.active = active
 	if active && in.hasOP {
+		if op < m.OPMin-opEdge {
+			m.MinAt = in.t
+		}
+		if op > m.OPMax+opEdge {
+			m.MaxAt = in.t
+		}
 		m.OPMin, m.OPMax = min(m.OPMin, op), max(m.OPMax, op)
 	}
 	m.PV, m.SP, m.OP, m.E = in.pv, in.sp, in.op, in.e
@@ -154,7 +161,8 @@ func (w *Watch) stepStill() {
 		m.OPBusyUsual += (m.OPBusy - m.OPBusyUsual) / 500
 	}
 	if moved {
-		if m.Active && in.t-m.OPSame > m.OPRunMax {
+		w.s.Noise.OPLeast.Add(math.Abs(in.op-m.OP), 0.1, 0.02, opSame)
+		if m.Active && in.t-m.OPSame > m.OPRunMax && !w.deafOP() {
 			m.OPRunMax = in.t - m.OPSame
 		}
 		m.OPSame = in.t
@@ -175,7 +183,7 @@ func (w *Watch) inferredManual() bool {
 		return false
 	}
 	if m.Manual { // steps of OP by hand do not end it, moving as the law does will
-		m.Manual = !(m.OPBusy > max(0.3*m.OPBusyUsual, 0.04))
+		m.Manual = !(m.OPBusy > max(0.3*m.OPBusyUsual, 0.12))
 		return m.Manual
 	}
 	if in.limit {
@@ -185,14 +193,19 @@ func (w *Watch) inferredManual() bool {
 	if still < max(300, 60*in.dt) || still < 5*min(m.OPRunMax, 6*3600) || m.Frozen {
 		return false
 	}
+	m.Manual = w.deafOP()
+	return m.Manual
+}
+
+// deafOP: while OP stood still e moved so far that the law would have moved OP by
+// more than any resolution hides.
+func (w *Watch) deafOP() bool {
+	m := &w.s.Motion
 	moved := float64(m.EStillHi - m.EStillLo)
 	if kc, ok := w.gainPct(); ok {
-		// The law would have moved OP by so much that no resolution hides it.
-		m.Manual = moved > 6*w.s.Noise.sigma() && math.Abs(kc)*moved > 2
-	} else {
-		m.Manual = moved > 6*w.s.Noise.sigma()+1
+		return moved > 6*w.s.Noise.sigma() && math.Abs(kc)*moved > max(0.5, 4*w.s.Noise.OPLeast.Value())
 	}
-	return m.Manual
+	return moved > 6*w.s.Noise.sigma()+1
 }
 
 // updateS is the interval, s, at which PV really changes: an analyser may give a

@@ -149,7 +149,7 @@ func stepOffset(w *Watch) {
 		o.restart()
 		return
 	}
-	if w.idleAtLow(sigma) {
+	if w.idleAtLow() {
 		return
 	}
 	o.Int += in.e * in.dt
@@ -230,16 +230,16 @@ func (w *Watch) gainPct() (kc float64, ok bool) {
 	return 0, false
 }
 
-// idleAtLow: OP slid to its low end with e small and asks for nothing: a pump at
-// rest, not a fault. OP that went there while e was large is another matter.
-func (w *Watch) idleAtLow(sigma float64) bool {
+// idleAtLow: OP slid to the low end of its range with e small and asks for nothing: a
+// pump at rest, not a fault, in a loop that often does so. OP that went there while
+// e was large is another matter, and so is a limit set above the end of the range.
+func (w *Watch) idleAtLow() bool {
 	s, in := &w.s, &w.in
 	o := &s.Off
-	lo, _ := w.opLimits()
-	if in.op > lo+0.5 || w.sign()*o.Sign > 0 || o.Stuck {
+	if in.op > opAtLimit || w.sign()*o.Sign > 0 || o.Stuck || s.Sat.LowShare < usualLow {
 		return false
 	}
-	if !(o.OP0 < lo+12 || w.sign() == 0 || in.t-o.T0 > 3600 || o.Zero) {
+	if !(o.OP0 < 12 || w.sign() == 0 || in.t-o.T0 > 3600 || o.Zero) {
 		return false
 	}
 	if !o.Zero && math.Abs(o.Int)/max(o.Dur, 1) > 3 {
@@ -278,6 +278,8 @@ func (w *Watch) judgeOffset(thr float64) {
 	// which e pushes (a limit or selector that nobody listed).
 	own := flat && in.t-m.OPSame > max(120*in.dt, 300) && m.OPRunMax < (in.t-m.OPSame)/2 &&
 		(push > 0 && in.op >= float64(m.OPMax)-0.05 || push < 0 && in.op <= float64(m.OPMin)+0.05)
+	// Or it comes back to that extreme again and again, held off it by noise only.
+	own = own || !w.loop.PropOnly && (push > 0 && s.Sat.AtMax > 0.35 && o.OPs > float64(m.OPMax)-1 || push < 0 && s.Sat.AtMin > 0.35 && o.OPs < float64(m.OPMin)+1)
 	atLimit := own || !in.frozen && (push > 0 && o.OPs >= l1-1 || push < 0 && o.OPs <= l0+1)
 	if atLimit {
 		if s.Sat.AtSince == 0 {

@@ -8,31 +8,31 @@ import (
 
 // oscState is the loop's live oscillation, if any.
 type oscState struct {
-	Grow, Sus  bool
-	Bank       uint8
-	Evals      uint32  // half-cycles of the bank since the episode began
-	Bad        uint16  // half-cycles running without the cycle
-	Since      float64 // s
-	Grown      float64 // s, growth last seen; 0 never
-	P          float64 // s, period
-	Amp        float64 // %, mean peak of e
-	AmpHi      float64
-	AmpLo      float64
-	AmpOn      bool
-	Growth     float64 // per cycle, newest
-	GrowCause  uint8   // cause found while growing
-	Outside    bool    // judged outside once
-	Changed    bool    // the loop's own tuning changed before
-	Cause      uint8
-	Next       uint8 // a differing judgement, and how often running
-	NextN      uint8
-	ByChange   bool // the cause rests on a change of the loop's own tuning: later fits cannot overturn it
-	Also       [2]uint8
-	Conf       float32
-	PhiDeg     float64
-	Kc, Ti     float64 // in service at the cycle, signed; 0 unknown
-	Regular    float64
-	Sticking   bool
+	Grow, Sus bool
+	Bank      uint8
+	Evals     uint32  // half-cycles of the bank since the episode began
+	Bad       uint16  // half-cycles running without the cycle
+	Since     float64 // s
+	Grown     float64 // s, growth last seen; 0 never
+	P         float64 // s, period
+	Amp       float64 // %, mean peak of e
+	AmpHi     float64
+	AmpLo     float64
+	AmpOn     bool
+	Growth    float64 // per cycle, newest
+	GrowCause uint8   // cause found while growing
+	Outside   bool    // judged outside once
+	Changed   bool    // the loop's own tuning changed before
+	Cause     uint8
+	Next      uint8 // a differing judgement, and how often running
+	NextN     uint8
+	ByChange  bool // the cause rests on a change of the loop's own tuning: later fits cannot overturn it
+	Also      [2]uint8
+	Conf      float32
+	PhiDeg    float64
+	Kc, Ti    float64 // in service at the cycle, signed; 0 unknown
+	Regular   float64
+	Sticking  bool
 	// The last growing episode, in case it comes back as a sustained one.
 	LastAt, LastP float64
 	LastCause     uint8
@@ -72,8 +72,13 @@ func (w *Watch) judgeCycles(level int, b *cycleBank) {
 	suspect := b.Conf > 0 || o.Grow || o.Sus
 	// Noise teaches the usual size, a regular cycle hardly: a slow growth must not
 	// teach itself.
-	if !suspect && (b.Usual.N < 40 || !(ok && regular > 3.5)) {
-		b.Usual.Add(b.at(0).peak(), 0.75, 0.006, 1e-3)
+	if !suspect {
+		// Of the first ones only a large and regular cycle does not: it may be a fault
+		// that was there before the watch.
+		standing := regular > 5 && b.at(0).peak() > max(0.3, 3*s.Noise.sigma())
+		if !(ok && regular > 3.5 && (b.Usual.N >= 40 || standing)) {
+			b.Usual.Add(b.at(0).peak(), 0.75, 0.006, 1e-3)
+		}
 	}
 	if !in {
 		b.Conf = 0
@@ -283,7 +288,8 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 		own := q.amp > max(1.9*sigma, 0.4) && known && q.amp > 2*usual
 		if (q.regular > 5*w.strict && q.least > 0.4 && big && (!known || q.amp > 1.6*usual) ||
 			q.regular > 4*w.strict && q.least > 0.3 && own ||
-			q.regular > 4*w.strict && q.least > 0.3 && !known && q.amp > max(1.2, 5*sigma)) && w.steadySP(float64(n)/2*period) {
+			q.regular > 4*w.strict && q.least > 0.3 && !known && q.amp > max(1.2, 5*sigma) ||
+			q.regular > 7*w.strict && q.least > 0.4 && !known && q.amp > max(0.45, 4*sigma)) && w.steadySP(float64(n)/2*period) {
 			o.Sus = true
 			w.beginOsc(level, b, n)
 			return

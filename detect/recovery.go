@@ -171,17 +171,28 @@ func (w *Watch) cutRecovery() {
 func (w *Watch) keepRecovery(e recovery) {
 	r := &w.s.Recov
 	q := &r.Usual[kindOf(e.SP)]
-	if q.N >= 4 {
+	switch {
+	case q.N >= 4:
 		e.Ratio = e.Dur / q.V
+	case w.madeSlower(float64(e.T0)):
+		// Too few recoveries before the tuning was made slower: a sound PI loop takes
+		// 2.3 reset times and some dead times (methods section 7).
+		t := float64(w.s.Change.ResetWas)
+		if t == 0 {
+			t, _ = w.resetS()
+		}
+		if t > 0 {
+			e.Ratio = e.Dur / float32(3.5*t)
+		}
 	}
 	i := r.Count % recRing
 	if r.Count >= recRing {
 		// What is old enough not to be the trouble at hand is the usual.
 		if old := &r.Ring[i]; !r.Slow && !old.Cut && r.Hold == 0 {
-			r.Usual[kindOf(old.SP)].Add(float64(old.Dur), 0.5, 0.05, 1e-3)
+			r.Usual[kindOf(old.SP)].Mean(float64(old.Dur), 0.05, 1e-3)
 		}
 	} else if r.Count < recRing-2 && !e.Cut {
-		q.Add(float64(e.Dur), 0.5, 0.05, 1e-3) // the first ones teach at once
+		q.Mean(float64(e.Dur), 0.05, 1e-3) // the first ones teach at once
 	}
 	r.Ring[i] = e
 	r.Count++

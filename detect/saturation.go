@@ -15,7 +15,19 @@ type saturationState struct {
 	WindSince float64
 	WindUp    bool
 	Frames    uint8
+	LowShare  float32 // share of time with OP at the low end of its range, mean of days
+	AtMin     float32 // share of the last 200 slots, or recovery time, at the lowest and highest OP ever
+	AtMax     float32
+	// Stretches at a limit that e pushes towards, each longer than a recovery.
+	From, IntE float64 // s, begin of the running one, 0 none; % s
+	Stretches  uint8
+	LastEnd    float64 // s
+	FirstFrom  float64 // s
 }
+
+// usualLow is the share of time at the low end from which idling is usual: an hour a
+// day (common practice, no source).
+const usualLow = 0.04
 
 func (z *saturationState) restart(t float64) { z.CrossAt, z.AtSince, z.Side, z.Frames = 0, 0, 0, 0 }
 
@@ -33,8 +45,21 @@ func stepSaturation(w *Watch) {
 	} else if in.op <= l0+opAtLimit {
 		side = -1
 	}
+	share := func(x *float32, is bool, n float64) {
+		v := float32(0)
+		if is {
+			v = 1
+		}
+		*x += (v - *x) / float32(n)
+	}
+	share(&z.LowShare, in.op <= opAtLimit, 3*86400/in.dt)
+	m := &s.Motion
+	n := max(200, w.timeScale()/in.dt) // slots
+	share(&z.AtMin, in.op <= float64(m.OPMin)+opEdge && in.t-m.MinAt > 2*n*in.dt, n)
+	share(&z.AtMax, in.op >= float64(m.OPMax)-opEdge && in.t-m.MaxAt > 2*n*in.dt, n)
 	a := w.sign()
 	sigma := max(s.Noise.sigma(), 0.02)
+	w.stepStretch(side, sigma)
 	// Wind-up: a sound controller leaves the limit at or before the change of sign
 	// of e (with conditional integration or tracking OP = limit needs Kc e + I >=
 	// limit and I <= limit); one that stays is wound up.
@@ -73,4 +98,33 @@ func stepSaturation(w *Watch) {
 	if z.WindUp && in.t-z.LastWind > 86400 {
 		z.WindUp, z.WindUps = false, 0
 	}
+}
+
+// stepStretch counts visits to a limit that each outlast a recovery: short overloads
+// that come again are no less a lack of room than one long one.
+func (w *Watch) stepStretch(side, sigma float64) {
+	s, in := &w.s, &w.in
+	z := &s.Sat
+	pushed := side != 0 && w.sign()*s.Motion.EF*side > sigma
+	if pushed {
+		if z.From == 0 {
+			z.From, z.IntE = in.t, 0
+		}
+		z.IntE += math.Abs(in.e) * in.dt
+		return
+	}
+	if z.From == 0 {
+		return
+	}
+	d := in.t - z.From
+	if d > max(2*w.timeScale(), max(30*in.dt, 60)) && z.IntE/d > max(3*sigma, 0.8) {
+		if z.Stretches == 0 || in.t-z.LastEnd > 86400 {
+			z.Stretches, z.FirstFrom = 0, z.From
+		}
+		z.Stretches, z.LastEnd = min(z.Stretches+1, 200), in.t
+		if z.Stretches >= 3 {
+			s.OffPast.Sat.support(z.FirstFrom, z.IntE/d*w.sign()*side, OutputLimit, 0.75)
+		}
+	}
+	z.From = 0
 }

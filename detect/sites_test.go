@@ -154,12 +154,9 @@ func TestSiteResultsIgnoreOrder(t *testing.T) {
 	}
 }
 
-// A stop and a start between any two slots changes nothing.
-func TestSiteMemoryChangesNothing(t *testing.T) {
-	x := togetherLoops()
-	loops := loopsOf(x)
-	full := evidenceOf(x)
-	slow := map[int64][]recorded{} // one loop of the group gives evidence every third slot only
+// withSlowLoop leaves one loop of the group evidence in every third slot only.
+func withSlowLoop(full map[int64][]recorded) map[int64][]recorded {
+	slow := map[int64][]recorded{}
 	for i, end := range slots(full) {
 		for _, r := range full[end] {
 			if r.id != 1 || i%3 == 0 {
@@ -167,7 +164,15 @@ func TestSiteMemoryChangesNothing(t *testing.T) {
 			}
 		}
 	}
-	for name, ev := range map[string]map[int64][]recorded{"every slot": full, "a slow loop": slow} {
+	return slow
+}
+
+// A stop and a start between any two slots changes nothing.
+func TestSiteMemoryChangesNothing(t *testing.T) {
+	x := togetherLoops()
+	loops := loopsOf(x)
+	full := evidenceOf(x)
+	for name, ev := range map[string]map[int64][]recorded{"every slot": full, "a slow loop": withSlowLoop(full)} {
 		want := lines(t, judge(t, loops, ev, nil, nil))
 		if len(want) == 0 {
 			t.Errorf("%s: nothing is found", name)
@@ -209,7 +214,7 @@ func TestDamagedSiteMemory(t *testing.T) {
 // A slot is judged once, and what comes too late for it is ignored.
 func TestSlotIsJudgedOnce(t *testing.T) {
 	x := togetherLoops()
-	ev := evidenceOf(x)
+	ev := withSlowLoop(evidenceOf(x))
 	want := lines(t, judge(t, loopsOf(x), ev, nil, nil))
 	s := detect.NewSites(loopsOf(x))
 	var fs []detect.Finding
@@ -220,7 +225,7 @@ func TestSlotIsJudgedOnce(t *testing.T) {
 		}
 		s.Slot(end, emit)
 		for _, r := range ev[end] { // again, as a lie
-			r.Evidence.PeriodS, r.Evidence.Live = 5, true
+			r.Evidence.PeriodS, r.Evidence.Live = 5, false
 			s.Record(r.id, r.Evidence)
 		}
 		s.Slot(end, emit)

@@ -22,49 +22,41 @@ type tuneChange struct {
 	TagReset float32
 }
 
-// Limits: newest fits agree within 1.25, differ from the old median by 1.5, and
-// the old ones agreed among themselves (methods section 9).
+// Limits: the newest fits agree within 1.35 and differ from the usual by 1.5
+// (methods section 9).
 const (
 	changeRatio  = 1.5
-	changeSpread = 1.25
+	changeSpread = 1.35
 	changeFits   = 4
+	changeR2     = 0.95
 )
 
 func (w *Watch) tuneCheck(k int) {
 	s := &w.s
 	b := &s.Fits[k]
-	if b.Count < fitRing || b.BaseK.N < 6 || s.Osc.Sus && s.Osc.Grow {
+	if b.Count < fitRing || b.BaseK.N < 4 || s.Osc.Sus && s.Osc.Grow {
 		return
 	}
 	var ks, ts [changeFits]float64
 	oldest := math.Inf(1)
 	for i := range changeFits {
 		f := &b.Ring[(b.Count-1-uint32(i))%fitRing]
-		if f.R2 < 0.98 {
+		if f.R2 < changeR2 {
 			return
 		}
 		ks[i], ts[i] = math.Abs(float64(f.Kc)), float64(f.Ti)
 		oldest = min(oldest, float64(f.T0))
 	}
-	span := func(x []float64) float64 {
-		lo, hi := math.Inf(1), math.Inf(-1)
-		for _, v := range x {
-			lo, hi = min(lo, v), max(hi, v)
-		}
-		return hi / max(lo, 1e-12)
-	}
-	kn, tn := num.Median(ks[:]), num.Median(ts[:])
 	what := uint8(0)
-	if r := kn / max(b.BaseK.Value(), 1e-9); math.Abs(math.Log(r)) > max(math.Log(changeRatio), 3.5*b.DevK.Value())*w.strict && span(ks[:]) < changeSpread {
+	if w.moved(ks[:], &b.BaseK, &b.DevK) {
 		what |= 1
 	}
-	if b.BaseT.N >= 4 && tn > 0 && min(min(ts[0], ts[1]), min(ts[2], ts[3])) > 0 {
-		// The scale must see the reset: neither far below the filter nor far above.
-		th := fitTh * w.levelS(2*k)
-		if r := tn / max(b.BaseT.Value(), 1e-9); math.Abs(math.Log(r)) > max(math.Log(changeRatio), 3.5*b.DevT.Value())*w.strict && span(ts[:]) < changeSpread && tn < 20*th {
-			what |= 2
-		}
+	kn, tn := num.Median(ks[:]), num.Median(ts[:])
+	// The scale must see the reset: not far above the filter.
+	if b.BaseT.N >= 4 && tn < 20*fitTh*w.levelS(2*k) && w.moved(ts[:], &b.BaseT, &b.DevT) {
+		what |= 2
 	}
+	Dbg("tune bank %d t %.0f count %d base %.3g (%d) %.3g (%d) dev %.2f %.2f; %.3g %.3g what %d\n", k, w.in.t, b.Count, b.BaseK.Value(), b.BaseK.N, b.BaseT.Value(), b.BaseT.N, b.DevK.Value(), b.DevT.Value(), ks, ts, what)
 	c := &s.Change
 	if what == 0 || c.On && w.in.t-c.Seen < 3600 {
 		return
@@ -82,8 +74,30 @@ func (w *Watch) tuneCheck(k int) {
 	if w.madeSlower(w.in.t) {
 		s.Recov.Hold = 12 // the recoveries to come are compared with those before
 	}
-	// From here on the new tuning is the usual one.
+	// From here on the new tuning is the usual one; the other scales begin anew.
+	for j := range s.Fits {
+		if o := &s.Fits[j]; j != k {
+			o.Count, o.BaseK, o.BaseT = 0, num.Quantile{}, num.Quantile{}
+		}
+	}
 	b.BaseK, b.BaseT = num.Quantile{V: float32(kn), N: 6}, num.Quantile{V: float32(max(tn, 1e-3)), N: 6}
+}
+
+// moved: the newest values agree among themselves and all lie on one side of the
+// usual one, farther than its values stray (four running beyond the 80 % quantile of
+// the deviations come by chance once in 10,000).
+func (w *Watch) moved(x []float64, base, dev *num.Quantile) bool {
+	lo, hi := math.Inf(1), math.Inf(-1)
+	for _, v := range x {
+		if !(v > 0) {
+			return false
+		}
+		d := math.Log(v / base.Value())
+		lo, hi = min(lo, d), max(hi, d)
+	}
+	least, most := min(math.Abs(lo), math.Abs(hi)), max(math.Abs(lo), math.Abs(hi))
+	return lo*hi > 0 && hi-lo < math.Log(changeSpread) && least > 1.2*dev.Value() &&
+		(least+most)/2 > max(math.Log(changeRatio), 1.8*dev.Value())*w.strict
 }
 
 // readTuning follows tuning tags: a change there is a fact, not an estimate.

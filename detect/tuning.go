@@ -161,15 +161,17 @@ func (w *Watch) keepFit(k int, r fit) {
 	i := b.Count % fitRing
 	if b.Count >= fitRing {
 		old := &b.Ring[i]
-		if b.BaseK.N > 2 {
-			b.DevK.Add(math.Abs(math.Log(math.Abs(float64(old.Kc))/b.BaseK.Value())), 0.8, 0.05, 0.01)
-		}
-		if b.BaseT.N > 2 && old.hasReset() {
-			b.DevT.Add(math.Abs(math.Log(float64(old.Ti)/b.BaseT.Value())), 0.8, 0.05, 0.01)
-		}
-		b.BaseK.Add(math.Abs(float64(old.Kc)), 0.5, 0.02, 1e-6)
-		if old.hasReset() {
-			b.BaseT.Add(float64(old.Ti), 0.5, 0.02, 1e-3)
+		if old.R2 > changeR2 { // like with like
+			if b.BaseK.N > 2 {
+				b.DevK.Add(math.Abs(math.Log(math.Abs(float64(old.Kc))/b.BaseK.Value())), 0.8, 0.05, 0.01)
+			}
+			b.BaseK.Mean(math.Abs(float64(old.Kc)), 0.02, 1e-6)
+			if old.hasReset() {
+				if b.BaseT.N > 2 {
+					b.DevT.Add(math.Abs(math.Log(float64(old.Ti)/b.BaseT.Value())), 0.8, 0.05, 0.01)
+				}
+				b.BaseT.Mean(float64(old.Ti), 0.02, 1e-3)
+			}
 		}
 	}
 	b.Ring[i] = r

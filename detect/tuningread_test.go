@@ -125,8 +125,9 @@ func TestQuietDataSayNothing(t *testing.T) {
 	for seed := uint64(1); seed <= 8; seed++ {
 		g := randomRig(seed)
 		g.each = nil
-		g.noise = 0.2
-		g.run(8 * 3600)
+		// The controller integrates noise that the log does not show.
+		g.step, g.noise, g.noiseS, g.logS = 0.5, 0.2, 0.5, 5
+		g.run(12 * 3600)
 		if v := reading(g); v.ResetS == v.ResetS && math.Abs(v.ResetS/g.ti-1) > 0.15 {
 			t.Errorf("loop %d: reset %.3g s read from noise, in service %.3g s", seed, v.ResetS, g.ti)
 		}

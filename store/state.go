@@ -119,6 +119,7 @@ func OpenStateReadOnly(path string) (*State, error) {
 	}
 	s := &State{path: path, db: db}
 	err = s.run(false, func(tx *Tx) error {
+		tx.busy = true
 		b := tx.tx.Bucket(bucketStateHead)
 		if b == nil || len(b.Get(keyFormat)) != 1 {
 			return fmt.Errorf("%s: %w: no head", filepath.Base(path), ErrDamaged)
@@ -153,6 +154,7 @@ func UncleanStop(path string) (bool, error) {
 	}
 	clean := false
 	err = s.run(false, func(tx *Tx) error {
+		tx.busy = true
 		clean = bytes.Equal(tx.tx.Bucket(bucketStateHead).Get(keyClean), []byte{1})
 		return nil
 	})

@@ -273,6 +273,9 @@ func (s *series) advise(in *Input, f *fitted, w watched, ev []event, cs []Cycle)
 	b.noiseSpan = math.Min(math.Max(600*b.scan, b.span), 20000*b.scan)
 	if known {
 		c := b.try("in service", inServiceWords(w), now, 0)
+		if len(w.readings) > 0 {
+			c.Faceplate = "about " + faceplate(l, about(now.Kc), about(now.TiS))
+		}
 		a.InService = &c
 	}
 	for _, p := range plans {
@@ -423,7 +426,7 @@ func (b *bench) limits(now tune.Tuning, known bool) []Fact {
 		return out
 	}
 	if ti, p, ok := tune.ResetLimit(b.model, now.Kc); ok {
-		out = append(out, fact("reset_limit_s", "shortest reset that holds at the gain in service", number(ti, "s"), "it would swing with a period of "+duration(p)+" there; in service "+faceplate(b.l, math.NaN(), now.TiS)))
+		out = append(out, fact("reset_limit_s", "shortest reset that holds at the gain in service", number(ti, "s"), "it would swing with a period of "+duration(p)+" there; in service about "+faceplate(b.l, math.NaN(), about(now.TiS))))
 	}
 	if p, ok := tune.Pole(b.model, now); ok {
 		switch {

@@ -1,8 +1,10 @@
 package dossier
 
 import (
+	"cmp"
 	"errors"
 	"fmt"
+	"slices"
 	"strings"
 	"time"
 
@@ -73,10 +75,12 @@ func Build(in Input) (*Dossier, error) {
 	}
 	d.Episodes = append(d.Episodes, eps...)
 	d.Cycles = append(d.Cycles, s.cycles(w, eps)...)
-	d.Outside = s.outside(&in, d.Cycles, outer)
+	ev = s.outsideCycles(ev, d.Cycles)
+	s.duringCycles(ev, d.Cycles)
+	d.Outside = s.outside(&in, d.Cycles, ev, outer)
 	d.Recoveries, d.Conduct = s.recoveries(ev), s.conduct(l)
 	d.Element, d.ByHand = s.element(l, eps, d.Cycles), byHand(l, eps)
-	cs := changes(l, frames, eps)
+	cs := changes(l, frames, eps, w.readings)
 	d.Tuning, d.Scheduled = s.tuning(l, w, cs, eps), s.scheduled(w)
 	var others []Candidate
 	d.Process, d.fitted = s.process(l, ev)
@@ -122,30 +126,42 @@ func (s *series) spanOf(first, last int64) Span {
 	return sp
 }
 
+// weight orders episodes by how much they say of the loop: open before over, its
+// own before a group's, a named cause before none, sure before unsure.
+func (e Episode) weight() float64 {
+	w := e.Confidence
+	if e.Cleared == "" {
+		w += 4
+	}
+	if e.Kind != detect.SharedOscillation {
+		w += 2
+	}
+	if e.Cause != detect.NoCause && e.Cause != detect.Undetermined {
+		w++
+	}
+	return w
+}
+
 // summary is the dossier in a few sentences, in the order in which a
 // practitioner asks: measurement, final element, outside, tuning.
 func (d *Dossier) summary() []Line {
 	var out []Line
 	add := func(about, text string) { out = append(out, Line{about, text}) }
-	switch n := len(d.Episodes); {
-	case n == 0:
+	if n := len(d.Episodes); n == 0 {
 		add("seen", "The watch found nothing in the span.")
-	default:
-		e := d.Episodes[n-1]
-		for _, x := range d.Episodes { // what is open says more than what is over
-			if x.Cleared == "" {
-				e = x
-			}
-		}
-		more := ""
-		if n > 1 {
-			more = fmt.Sprintf(" (%d episodes in all)", n)
-		}
+	} else {
+		e := slices.MaxFunc(d.Episodes, func(a, b Episode) int { return cmp.Compare(a.weight(), b.weight()) })
 		text := e.Text
 		if text == "" {
-			text = strings.ReplaceAll(string(e.Kind), "-", " ")
+			text = strings.ReplaceAll(string(e.Kind), "-", " ") + "."
 		}
-		add("seen", text+more)
+		if e.Cleared != "" {
+			text += " It is over."
+		}
+		if n > 1 {
+			text += fmt.Sprintf(" %d episodes in all.", n)
+		}
+		add("seen", text)
 	}
 	stick := false
 	for _, f := range d.Element {

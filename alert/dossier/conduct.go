@@ -160,8 +160,7 @@ func (s *series) recoveries(ev []event) []Fact {
 			}
 		}
 	}
-	noSP := fmt.Sprintf("%d set-point steps found, none that came to rest before something else happened", spN)
-	noLoad := fmt.Sprintf("%d load events found, none that came to rest before something else happened", ldN)
+	noSP, noLoad := noRest(spN, "set-point step"), noRest(ldN, "load event")
 	return []Fact{
 		fact("sp_recovery_s", "after a set-point step, to within a tenth of it", spreadOf(sp, "s", noSP), ""),
 		fact("sp_overshoot_pct", "overshoot of set-point steps", spreadOf(spOver, "% of the step", noSP), "twice the noise level taken off"),
@@ -171,4 +170,14 @@ func (s *series) recoveries(ev []event) []Fact {
 		fact("idle_index", "idle index (Hägglund 1999)", spreadOf(idle, "", noLoad+", or the action is not known"), "near 1: sluggish; near -1: well tuned or swinging"),
 		fact("area_index", "area index (Visioli 2006)", spreadOf(area, "", noLoad), "above 0.7: damped or sluggish; below 0.35: swinging; read with the idle index"),
 	}
+}
+
+func noRest(n int, what string) string {
+	switch n {
+	case 0:
+		return "no " + what + " found"
+	case 1:
+		return "one " + what + " found, and it did not come to rest before something else happened"
+	}
+	return fmt.Sprintf("%d %ss found, none that came to rest before something else happened", n, what)
 }

@@ -132,6 +132,7 @@ type Episode struct {
 	Text       string          `json:"text"`
 
 	since, end int64
+	growth     float64 // the largest heard of, a cycle; 0 none
 }
 
 // Cycle is a spell in which the loop swung.
@@ -141,12 +142,13 @@ type Cycle struct {
 	Period     Number `json:"period"`
 	Cycles     Number `json:"cycles"`
 	Amplitude  Number `json:"amplitude"` // of PV
+	SP         Number `json:"amplitude_sp"`
 	OP         Number `json:"amplitude_op"`
 	Growth     Number `json:"growth_per_cycle"`
-	Regularity Number `json:"regularity"`
-	Harmonic3  Number `json:"third_harmonic_op"`
-	Shape      Number `json:"sine_triangle_index"`
-	InManual   string `json:"in_manual"` // what a natural manual spell said of it
+	Regularity Number `json:"regularity"`          // mean over deviation of half-cycle lengths
+	Harmonic3  Number `json:"third_harmonic_op"`   // of the first: triangle 0.11, square 0.33
+	Shape      Number `json:"sine_triangle_index"` // 0 sine, 1 triangle
+	InManual   string `json:"in_manual"`           // what a natural manual spell said of it
 
 	from, to int64
 	periodS  float64

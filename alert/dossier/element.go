@@ -72,7 +72,10 @@ func (s *series) filtering(l *configs.Loop) Fact {
 	if rho < 0.3 {
 		return say(key, label, "none seen: the noise does not hang together from sample to sample")
 	}
-	tau := -s.dt / math.Log(math.Min(rho, 0.98))
+	if rho > 0.9 {
+		return say(key, label, "PV moves smoothly from sample to sample: a filter cannot be told from a slow process, and what noise there is lies below what these samples show")
+	}
+	tau := -s.dt / math.Log(rho)
 	f := fact(key, label, number(tau, "s"), "from how the noise hangs together; slow movement of the process itself looks the same")
 	if r := l.IdealReset; r > 0 && tau > 0.2*r {
 		f.Note += fmt.Sprintf("; heavy against the reset of %s: it adds lag that the tuning must pay for", duration(r))

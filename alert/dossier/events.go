@@ -36,6 +36,9 @@ type event struct {
 // leastMove is the smallest set-point or output move that is looked at, %.
 const leastMove = 0.3
 
+// mostMoves are followed up.
+const mostMoves = 1000
+
 // events finds set-point steps, manual moves of OP and load events.
 func (s *series) events() []event {
 	var out []event
@@ -86,7 +89,13 @@ func (s *series) moves() []move {
 			add(manualMove, k, d)
 		}
 	}
-	return slices.DeleteFunc(out, func(m move) bool { return math.Abs(m.size) < leastMove })
+	out = slices.DeleteFunc(out, func(m move) bool { return math.Abs(m.size) < leastMove })
+	if len(out) > mostMoves { // a loop whose SP always moves: the largest are looked at
+		slices.SortStableFunc(out, func(a, b move) int { return int(sign(math.Abs(b.size) - math.Abs(a.size))) })
+		out = out[:mostMoves]
+		slices.SortFunc(out, func(a, b move) int { return a.at - b.at })
+	}
+	return out
 }
 
 // step makes the event of a move: rest before, what came of it, where it ends.
@@ -247,7 +256,7 @@ func (s *series) loads(moves []move) []event {
 			continue
 		}
 		e := event{kind: loadEvent, at: k, recoverS: math.NaN(), overPct: math.NaN(), idle: math.NaN(), area: math.NaN(),
-			why: "a load event: in closed loop it shows the controller, not the process"}
+			why: "load: recovery only"}
 		for e.at > k-quiet && math.Abs(s.sp[e.at]-s.pv[e.at]) > s.sigma {
 			e.at--
 		}
@@ -282,6 +291,24 @@ func (s *series) loads(moves []move) []event {
 		k, quiet = end, 0
 	}
 	return out
+}
+
+// outsideCycles leaves out the load events that are part of a swing.
+func (s *series) outsideCycles(ev []event, cs []Cycle) []event {
+	return slices.DeleteFunc(ev, func(e event) bool {
+		in := slices.ContainsFunc(cs, func(c Cycle) bool { return e.at < s.slot(c.to) && e.end > s.slot(c.from) })
+		return in && e.kind == loadEvent
+	})
+}
+
+// duringCycles marks the moves made while the loop swung: no rest to start from.
+func (s *series) duringCycles(ev []event, cs []Cycle) {
+	for i := range ev {
+		e := &ev[i]
+		if e.usable && slices.ContainsFunc(cs, func(c Cycle) bool { return e.at < s.slot(c.to) && e.end > s.slot(c.from) }) {
+			e.usable, e.why = false, "the loop was swinging"
+		}
+	}
 }
 
 // window makes the window of an event for the fit.

@@ -30,18 +30,33 @@ func (d *Dossier) pv(x []float64) []float64 {
 
 func (d *Dossier) unit() string { return d.s.unit() }
 
+// timeStep is a round step of time, s, that divides a span into n parts at most.
+func timeStep(span float64, n float64) float64 {
+	const hour, day = 3600, 86400
+	steps := []float64{0.1, 0.2, 0.5, 1, 2, 5, 10, 20, 30, 60, 120, 300, 600, 1200, 1800, hour, 2 * hour, 3 * hour, 6 * hour, 12 * hour, day, 2 * day, 7 * day, 14 * day, 30 * day, 90 * day}
+	for _, v := range steps {
+		if span/v <= n {
+			return v
+		}
+	}
+	return 365 * day
+}
+
+// timeTicks are the marks of a span that begins at 0, s.
+func timeTicks(span, n float64) []float64 {
+	var out []float64
+	step := timeStep(span, n)
+	for v := 0.0; v <= span*(1+1e-9); v += step {
+		out = append(out, v)
+	}
+	return out
+}
+
 // clock gives marks of a stretch of slots and how they are called.
 func (d *Dossier) clock(a, b int) (at []float64, name func(float64) string) {
 	s := d.s
 	span := float64(b-a) * s.dt
-	steps := []float64{1, 2, 5, 10, 20, 30, 60, 120, 300, 600, 1200, 1800, 3600, 7200, 3 * 3600, 6 * 3600, 12 * 3600, 86400, 2 * 86400, 7 * 86400, 14 * 86400, 30 * 86400, 90 * 86400, 365 * 86400}
-	step := steps[len(steps)-1]
-	for _, v := range steps {
-		if span/v <= 7 {
-			step = v
-			break
-		}
-	}
+	step := timeStep(span, 7)
 	t0 := time.UnixMilli(s.at(a)).In(d.zone)
 	_, off := t0.Zone()
 	first := math.Ceil((float64(s.at(a))/1000+float64(off))/step)*step - float64(off)
@@ -115,8 +130,14 @@ func (d *Dossier) trend(a, b int, label string) template.HTML {
 // figures of what was seen.
 func (d *Dossier) seenFigures() []figure {
 	s := d.s
-	out := []figure{{"The span", d.trend(0, s.n(), "trend of PV, SP and OP over the span"),
+	return []figure{{"The span", d.trend(0, s.n(), "trend of PV, SP and OP over the span"),
 		"Shaded: episodes of the watch. Hatched: the law does not act (manual, tracking, out of service). Where many values fall on one point, the least and the largest are drawn."}}
+}
+
+// cycleFigures show the last cycles of up to three swings.
+func (d *Dossier) cycleFigures() []figure {
+	s := d.s
+	var out []figure
 	shown := 0
 	for _, c := range d.Cycles {
 		if shown == 3 {
@@ -168,9 +189,12 @@ func (d *Dossier) readingFigures() []figure {
 		}
 		lo, hi := extent(v)
 		p := g.panel(56, top, wide-64, 110, 0, float64(s.n()), math.Max(0, lo), hi)
+		if list > 0 {
+			title += ", list " + short(list)
+		}
 		p.frame(title)
 		if list > 0 {
-			p.level(list, "list", "list "+short(list))
+			p.level(list, "list", "")
 		}
 		for _, r := range d.Readings {
 			n := get(r)
@@ -198,9 +222,11 @@ func (d *Dossier) fitFigures() []figure {
 	if f == nil || !f.ok {
 		return nil
 	}
-	order := make([]int, len(f.windows))
-	for i := range order {
-		order[i] = i
+	var order []int
+	for i := range f.windows {
+		if !slices.Contains(f.result.LeftOut, i) {
+			order = append(order, i)
+		}
 	}
 	slices.SortStableFunc(order, func(a, b int) int {
 		return int(sign(math.Abs(f.windows[b].MovePct) - math.Abs(f.windows[a].MovePct)))
@@ -234,7 +260,7 @@ func (d *Dossier) fitPanel(g *drawing, w fit.Window, f *fitted, left, top float6
 	q := g.panel(left, top+102, wide/2-70, 34, 0, span, ul, uh)
 	q.path(at(len(u)), u, "thin")
 	q.d.text(left-5, top+124, "end", "lab", "OP")
-	q.marks(ticks(0, span, 4), func(v float64) string { return duration(v) })
+	q.marks(timeTicks(span, 4), duration)
 }
 
 // fitMeans thins a window to what can be drawn.
@@ -287,7 +313,7 @@ func (d *Dossier) adviceFigures() []figure {
 			p.path(at, pv[i], classes[i%4])
 			q.path(at, op[i], classes[i%4])
 		}
-		q.marks(ticks(0, a.span, 6), func(v float64) string { return duration(v) })
+		q.marks(timeTicks(a.span, 6), duration)
 		x := 200.0
 		for i, c := range cs {
 			g.add(`<line x1="%s" x2="%s" y1="11" y2="11" class="%s"/>`, px(x), px(x+26), classes[i%4])

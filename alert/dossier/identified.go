@@ -43,13 +43,12 @@ type fitted struct {
 }
 
 // mostEvents are shown; all are counted.
-const mostEvents = 40
+const mostEvents = 30
 
-func (s *series) process(l *configs.Loop, ev []event) (Process, *fitted) {
-	var p Process
+func (s *series) process(l *configs.Loop, ev []event) (p Process, f *fitted) {
 	counts := map[string]int{}
 	usable := map[string]int{}
-	f := &fitted{options: fit.Options{Kinds: kindsOf(l), Interpolate: s.between(l)}}
+	f = &fitted{options: fit.Options{Kinds: kindsOf(l), Interpolate: s.between(l)}}
 	for _, e := range ev {
 		counts[e.kind]++
 		if e.usable {
@@ -60,7 +59,7 @@ func (s *series) process(l *configs.Loop, ev []event) (Process, *fitted) {
 	}
 	p.Found = fmt.Sprintf("%d set-point steps (%d from rest and usable), %d manual OP moves (%d), %d load events (used for recovery only)",
 		counts[setPointStep], usable[setPointStep], counts[manualMove], usable[manualMove], counts[loadEvent])
-	p.Events = s.show(ev)
+	defer func() { p.Events = s.show(ev) }()
 	if l.Process == configs.Runaway {
 		f.verdict = fit.Verdict{Why: "a runaway process: no model of these kinds holds for it, and no direction is given for its gain"}
 		p.Verdict = f.verdict
@@ -82,10 +81,15 @@ func (s *series) process(l *configs.Loop, ev []event) (Process, *fitted) {
 		return p, f
 	}
 	facts := fit.Facts{NoisePct: s.sigma, WanderPct: s.wander, Sign: l.Sign()}
-	if facts.WanderPct != facts.WanderPct {
-		facts.WanderPct = 0
-	}
 	f.result, f.ok = r, true
+	for i, j := 0, -1; i < len(ev); i++ {
+		if !ev[i].usable {
+			continue
+		}
+		if j++; slices.Contains(r.LeftOut, j) {
+			ev[i].usable, ev[i].why = false, "something else happened in it: the common model explains it far worse than the others"
+		}
+	}
 	f.verdict = fit.Judge(r, f.windows, f.options, facts)
 	p.Verdict = f.verdict
 	p.Model = modelFacts(r, s)
@@ -134,7 +138,7 @@ func (s *series) show(ev []event) []Event {
 			x.Size = number(s.pvUnits(e.sizePct), s.unit())
 		}
 		x.Move = number(s.pvUnits(e.movePct), s.unit())
-		x.Recovery = none("not seen to come back within a tenth")
+		x.Recovery = none("not seen")
 		if e.kind == manualMove {
 			x.Recovery = none("in manual")
 		} else if e.recoverS == e.recoverS {
@@ -193,7 +197,10 @@ func modelFacts(r fit.Result, s *series) []Fact {
 // byPoint compares the process gain of single events with where they were.
 func (s *series) byPoint(f *fitted) []Fact {
 	var at, g []float64
-	for _, w := range f.windows {
+	for i, w := range f.windows {
+		if slices.Contains(f.result.LeftOut, i) {
+			continue
+		}
 		k, r2, err := fit.GainOf(w, f.result.Model, f.options)
 		if err == nil && r2 > 0.7 && k*f.result.Model.Gain > 0 {
 			at, g = append(at, s.loop.PVLow+s.pvUnits(w.AtPV)), append(g, math.Abs(k))

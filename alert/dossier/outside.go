@@ -11,7 +11,7 @@ import (
 
 // outside asks whether the cause lies elsewhere: the same period in other loops,
 // natural manual spells, time of day, another tag.
-func (s *series) outside(in *Input, cs []Cycle, outer bool) []Fact {
+func (s *series) outside(in *Input, cs []Cycle, ev []event, outer bool) []Fact {
 	var out []Fact
 	switch {
 	case len(cs) == 0:
@@ -21,12 +21,18 @@ func (s *series) outside(in *Input, cs []Cycle, outer bool) []Fact {
 	default:
 		out = append(out, samePeriod(in, cs)...)
 	}
+	for _, c := range cs {
+		if c.SP.Known() {
+			out = append(out, Fact{Key: "set_point_swings", Label: "SP swings too, cycle of " + duration(c.periodS), Number: &c.SP,
+				Note: "PV " + short(c.Amplitude.Value) + " " + s.unit() + ": the swing reaches this loop through its set point, or goes around through it (cascade): judge both loops"})
+		}
+	}
 	man := s.manualSpells(cs, outer)
 	out = append(out, man...)
 	if len(man) == 0 && len(cs) > 0 {
 		out = append(out, say("manual_spell", "natural manual spells", cs[0].InManual))
 	}
-	out = append(out, s.timeOfDay(in), s.otherTag())
+	out = append(out, s.timeOfDay(in, ev), s.otherTag())
 	return out
 }
 
@@ -50,6 +56,19 @@ func samePeriod(in *Input, cs []Cycle) []Fact {
 	var out []Fact
 	for _, c := range cs {
 		named := map[string]string{}
+		for _, f := range in.Findings { // groups of the watch say more than periods
+			if f.Kind != detect.SharedOscillation || f.Event == detect.Cleared || !slices.Contains(f.Loops, in.Loop.Name) || f.Since > c.to {
+				continue
+			}
+			if p, ok := f.Measures.Get("period_s"); ok && math.Abs(math.Log(p/c.periodS)) > 0.15 {
+				continue
+			}
+			for _, l := range f.Loops {
+				if l != in.Loop.Name {
+					named[l] = l + " (the watch sees them swing together)"
+				}
+			}
+		}
 		for _, o := range seen {
 			lo, hi := c.Period.Low, c.Period.High
 			if lo != lo {
@@ -82,8 +101,9 @@ func samePeriod(in *Input, cs []Cycle) []Fact {
 	return out
 }
 
-// timeOfDay compares the hours of the day.
-func (s *series) timeOfDay(in *Input) Fact {
+// timeOfDay compares the hours of the day, set-point steps left out: those are
+// moves of people, not of the process.
+func (s *series) timeOfDay(in *Input, ev []event) Fact {
 	const key, label = "time_of_day", "time of day"
 	days := s.seconds() / 86400
 	if days < 3 {
@@ -96,7 +116,14 @@ func (s *series) timeOfDay(in *Input) Fact {
 	cells := make([][24]cell, nd)
 	_, offset := in.at(s.t0).Zone()
 	day0 := (s.t0/1000 + int64(offset)) / 86400
+	next := 0
 	for k := 0; k < s.n(); k += max(1, int(5/s.dt)) {
+		for next < len(ev) && (ev[next].end <= k || ev[next].kind != setPointStep) {
+			next++
+		}
+		if next < len(ev) && k >= ev[next].at {
+			continue
+		}
 		e := math.Abs(s.sp[k] - s.pv[k])
 		if e != e || !s.law[k] {
 			continue

@@ -7,6 +7,7 @@ import (
 	"html/template"
 	"io"
 	"math"
+	"slices"
 	"strings"
 	"time"
 
@@ -46,7 +47,8 @@ var page = template.Must(template.New("page").Funcs(template.FuncMap{
 	"words": func(v any) string { return strings.ReplaceAll(fmt.Sprint(v), "-", " ") },
 	"num":   shown,
 	"short": short,
-	"sub":   func(a, b int) int { return a - b },
+	"cap":   capital,
+	"some":  some,
 }).Parse(pageText))
 
 // shown is a number on the page: times in the unit a person would use.
@@ -65,12 +67,26 @@ func shown(n Number) string {
 	return n.String()
 }
 
+// some says whether any candidate has what a row of the table is about.
+func some(cs []Candidate, what string) bool {
+	return slices.ContainsFunc(cs, func(c Candidate) bool {
+		return what == "speed" && c.Speed.Known() || what == "move" && c.FirstMove != ""
+	})
+}
+
+func capital(s string) string {
+	if s == "" {
+		return s
+	}
+	return strings.ToUpper(s[:1]) + s[1:]
+}
+
 // view is what the template sees.
 type view struct {
 	*Dossier
-	SeenFigures, ReadingFigures, FitFigures, AdviceFigures []figure
-	InUse                                                  []Candidate
-	ReadingsShown                                          []Reading
+	SeenFigures, CycleFigures, ReadingFigures, FitFigures, AdviceFigures []figure
+	InUse                                                                []Candidate
+	ReadingsShown                                                        []Reading
 }
 
 // Local writes a time of the dossier in the site's zone.
@@ -85,19 +101,19 @@ func (v view) Local(t string) string {
 // Zone names the zone of the times shown.
 func (v view) Zone() string { return v.zone.String() }
 
-// mostReadings are listed; all are in the JSON.
-const mostReadings = 24
+// mostListed readings are listed; all are in the JSON.
+const mostListed = 8
 
 // HTML writes the page: one file, no scripts, no other host.
 func (d *Dossier) HTML(w io.Writer) error {
-	v := view{Dossier: d, SeenFigures: d.seenFigures(), ReadingFigures: d.readingFigures(), FitFigures: d.fitFigures(), AdviceFigures: d.adviceFigures()}
+	v := view{Dossier: d, SeenFigures: d.seenFigures(), CycleFigures: d.cycleFigures(), ReadingFigures: d.readingFigures(), FitFigures: d.fitFigures(), AdviceFigures: d.adviceFigures()}
 	if d.Advice.InService != nil {
 		v.InUse = append(v.InUse, *d.Advice.InService)
 	}
 	v.InUse = append(v.InUse, d.Advice.Candidates...)
 	v.ReadingsShown = d.Readings
-	if n := len(d.Readings); n > mostReadings {
-		v.ReadingsShown = d.Readings[n-mostReadings:]
+	if n := len(d.Readings); n > mostListed {
+		v.ReadingsShown = d.Readings[n-mostListed:]
 	}
 	if err := page.Execute(w, v); err != nil {
 		return fmt.Errorf("writing the dossier of %s: %w", d.Loop, err)

@@ -170,22 +170,46 @@ func (s *series) measureNoise() {
 	n := s.n()
 	step := max(1, n/60000)
 	lags := [4]int{1, 2, 4, 8}
-	var fast [4]float64
-	for i, lag := range lags {
-		var d []float64
-		for k := lag; k < n; k += step {
-			if x := math.Abs(s.pv[k] - s.pv[k-lag]); x == x && (x > 0 || s.loop.Report != configs.Exception) {
-				d = append(d, x)
+	// By blocks, the lower quartile of all: a swing or a ramp that is fast
+	// against the samples would pass for noise.
+	const share = 480
+	every := max(1, n/share/400)
+	var all []float64
+	var ratio [4][]float64
+	var d []float64
+	for at := 0; at+share <= n || at == 0; at += every * share {
+		first := 0.0
+		for i, lag := range lags {
+			d = d[:0]
+			for k := at + lag; k < min(n, at+share); k++ {
+				if x := math.Abs(s.pv[k] - s.pv[k-lag]); x == x && (x > 0 || s.loop.Report != configs.Exception) {
+					d = append(d, x)
+				}
+			}
+			if len(d) < 20 {
+				break
+			}
+			slices.Sort(d)
+			v := 1.0484 * quantile(d, 0.5)
+			if i == 0 {
+				first = v
+				all = append(all, v)
+			}
+			if first > 0 {
+				ratio[i] = append(ratio[i], v/first)
 			}
 		}
-		if len(d) > 20 {
-			fast[i] = 1.0484 * median(d)
-		}
+	}
+	fast := 0.0
+	if len(all) > 0 {
+		fast = quantile(slices.Sorted(slices.Values(all)), 0.25)
 	}
 	s.quantPV, s.quantOP = resolution(s.pv, step), resolution(s.op, step)
-	s.sigma = math.Max(fast[0], math.Max(s.quantPV*0.289, 0.002))
-	for i := range fast {
-		s.noiseLag[i] = fast[i] / s.sigma
+	s.sigma = math.Max(fast, math.Max(s.quantPV*0.289, 0.002))
+	for i, r := range ratio {
+		if len(r) > 0 {
+			s.noiseLag[i] = median(r)
+		}
 	}
 	// Slow wandering: means of blocks of 20 samples while the law acts and SP
 	// stands, without the noise.

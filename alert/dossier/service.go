@@ -1,6 +1,7 @@
 package dossier
 
 import (
+	"cmp"
 	"fmt"
 	"math"
 	"slices"
@@ -19,10 +20,12 @@ type tuningChange struct {
 	read          bool
 	cause         string
 	before, after string
+	between       [2]int64 // readings that it lies between, ms UTC; zero: known better
 }
 
-// changes lists the changes read from tags, then those found by the watch.
-func changes(l *configs.Loop, frames []collector.Frame, eps []Episode) []tuningChange {
+// changes lists the changes read from tags, those found by the watch, and those
+// that only the readings show.
+func changes(l *configs.Loop, frames []collector.Frame, eps []Episode, rs []Reading) []tuningChange {
 	var out []tuningChange
 	var k, t float32
 	for i := range frames {
@@ -57,9 +60,20 @@ func changes(l *configs.Loop, frames []collector.Frame, eps []Episode) []tuningC
 		}
 		out = append(out, tuningChange{at: e.since, k0: get("gain_before"), k1: get("gain"), t0: get("reset_before_s"), t1: get("reset_s")})
 	}
-	slices.SortFunc(out, func(a, b tuningChange) int { return int(sign(float64(a.at - b.at))) })
+	for _, c := range changesRead(rs) {
+		// A tag, or the watch, says the same and says when.
+		if !slices.ContainsFunc(out, func(o tuningChange) bool { return o.at > c.between[0]-6*3600e3 && o.at < c.between[1]+600e3 }) {
+			out = append(out, c)
+		}
+	}
+	slices.SortFunc(out, func(a, b tuningChange) int { return cmp.Compare(a.at, b.at) })
 	for i := range out {
-		out[i].before, out[i].after = faceplate(l, out[i].k0, out[i].t0), faceplate(l, out[i].k1, out[i].t1)
+		c := &out[i]
+		if c.read {
+			c.before, c.after = faceplate(l, c.k0, c.t0), faceplate(l, c.k1, c.t1)
+		} else {
+			c.before, c.after = "about "+faceplate(l, about(c.k0), about(c.t0)), "about "+faceplate(l, about(c.k1), about(c.t1))
+		}
 	}
 	return out
 }
@@ -81,6 +95,18 @@ func faceplate(l *configs.Loop, k, t float64) string {
 	return "unknown"
 }
 
+// about is a reading with the two digits that it is good for.
+func about(v float64) float64 {
+	if !(v > 0) {
+		return v
+	}
+	e := math.Pow(10, math.Floor(math.Log10(v))-1)
+	if e < 1 {
+		return math.Round(v/e) / math.Round(1/e)
+	}
+	return math.Round(v/e) * e
+}
+
 // tuning sums up the tuning in service against the list.
 func (s *series) tuning(l *configs.Loop, w watched, cs []tuningChange, eps []Episode) []Fact {
 	out := []Fact{say("list", "on the list", l.DescribeTuning())}
@@ -89,7 +115,7 @@ func (s *series) tuning(l *configs.Loop, w watched, cs []tuningChange, eps []Epi
 		r := w.readings[n-1]
 		out = append(out, fact("gain", "gain in service, newest reading", r.Gain, "read from how OP follows the error; the range includes 5 % for what such a reading does not cover"),
 			fact("reset_s", "reset in service, newest reading", r.Reset, ""),
-			say("faceplate", "as the faceplate would show it", faceplate(l, r.Gain.Value, r.Reset.Value)))
+			say("faceplate", "as the faceplate would show it", "about "+faceplate(l, about(r.Gain.Value), about(r.Reset.Value))))
 		out = append(out, against(l, r)...)
 	} else {
 		why := "not excited enough to be read: it needs moves of the error well above noise, with the law acting off its limits"
@@ -104,9 +130,11 @@ func (s *series) tuning(l *configs.Loop, w watched, cs []tuningChange, eps []Epi
 		out = append(out, say("changes", "changes of the tuning", "none seen in the span"))
 	}
 	for _, c := range cs {
-		how := "found in the data"
+		how := "found by the watch"
 		if c.read {
 			how = "read from its tags"
+		} else if c.between[0] > 0 {
+			how = "readings before and after differ; it lies between " + detect.FormatTime(c.between[0]) + " and " + detect.FormatTime(c.between[1])
 		}
 		out = append(out, say("change", detect.FormatTime(c.at), fmt.Sprintf("from %s to %s (%s)", c.before, c.after, how)))
 	}

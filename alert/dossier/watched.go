@@ -54,6 +54,43 @@ func look(in *Input, frames []collector.Frame) watched {
 		}
 	}
 	out.view = w.View()
+	if n := len(frames); n > 0 {
+		out.readings = thin(out.readings, frames[0].Time, frames[n-1].Time)
+	}
+	return out
+}
+
+// mostReadings are kept of a span; more are joined to medians.
+const mostReadings = 96
+
+// thin joins readings that lie close together.
+func thin(rs []Reading, from, to int64) []Reading {
+	if len(rs) <= mostReadings {
+		return rs
+	}
+	var out []Reading
+	width := (to-from)/mostReadings + 1
+	for i := 0; i < len(rs); {
+		bin := (rs[i].at - from) / width
+		var k, k0, k1, t, t0, t1 []float64
+		j := i
+		for ; j < len(rs) && (rs[j].at-from)/width == bin; j++ {
+			g, r := rs[j].Gain, rs[j].Reset
+			k, k0, k1 = append(k, g.Value), append(k0, g.Low), append(k1, g.High)
+			if r.Known() {
+				t, t0, t1 = append(t, r.Value), append(t0, r.Low), append(t1, r.High)
+			}
+		}
+		x := rs[i+(j-i)/2]
+		x.Gain = ranged(median(k), slices.Min(k0), slices.Max(k1), "%/%")
+		x.Gain.N, x.Reset = j-i, none("no integral action seen")
+		if len(t) > 0 {
+			x.Reset = ranged(median(t), slices.Min(t0), slices.Max(t1), "s")
+			x.Reset.N = len(t)
+		}
+		out = append(out, x)
+		i = j
+	}
 	return out
 }
 
@@ -117,17 +154,60 @@ func episodes(loop string, fs []detect.Finding, from, to int64) []Episode {
 		if len(f.Measures) > 0 {
 			e.Measures = f.Measures
 		}
+		if g, ok := f.Measures.Get("growth_per_cycle"); ok {
+			e.growth = math.Max(e.growth, g)
+		}
 	}
 	return slices.DeleteFunc(out, func(e Episode) bool { return e.end < from })
 }
 
-// growths are the growth figures of the growing swings of the span.
+// changesRead finds changes of the tuning in the readings: medians of three
+// before and three after whose ranges lie apart.
+func changesRead(rs []Reading) []tuningChange {
+	var out []tuningChange
+	for i := 2; i+2 <= len(rs); i++ {
+		was, is := rs[max(0, i-3):i], rs[i:min(len(rs), i+3)]
+		if n := len(out); n > 0 && rs[i-1].at <= out[n-1].at {
+			continue
+		}
+		k0, k1, kApart := apart(was, is, func(r Reading) Number { return r.Gain })
+		t0, t1, tApart := apart(was, is, func(r Reading) Number { return r.Reset })
+		if !kApart && !tApart {
+			continue
+		}
+		out = append(out, tuningChange{at: (rs[i-1].at + rs[i].at) / 2, k0: k0, k1: k1, t0: t0, t1: t1,
+			between: [2]int64{rs[i-1].at, rs[i].at}})
+		i += 2
+	}
+	return out
+}
+
+// apart says whether two groups of readings differ by more than 1.3 with their
+// ranges apart, and gives their medians.
+func apart(was, is []Reading, get func(Reading) Number) (a, b float64, ok bool) {
+	collect := func(rs []Reading) (v []float64, lo, hi float64) {
+		lo, hi = math.Inf(1), math.Inf(-1)
+		for _, r := range rs {
+			if n := get(r); n.Known() {
+				v, lo, hi = append(v, n.Value), math.Min(lo, n.Low), math.Max(hi, n.High)
+			}
+		}
+		return v, lo, hi
+	}
+	x, xl, xh := collect(was)
+	y, yl, yh := collect(is)
+	if len(x) < 2 || len(y) < 2 {
+		return math.NaN(), math.NaN(), false
+	}
+	a, b = median(x), median(y)
+	return a, b, math.Abs(math.Log(a/b)) > math.Log(1.3) && (xh < yl || yh < xl)
+}
+
+// growth is how fast a swing grew while it grew.
 func growth(eps []Episode, c *Cycle) Number {
 	for _, e := range eps {
-		if e.Kind == detect.GrowingOscillation && e.since <= c.to && e.end >= c.from {
-			if g, ok := e.Measures.Get("growth_per_cycle"); ok {
-				return number(g, "times a cycle")
-			}
+		if e.growth > 1 && e.since <= c.to && e.end >= c.from {
+			return number(e.growth, "times a cycle")
 		}
 	}
 	return none("it did not grow, or too little to be told from noise")
@@ -149,9 +229,22 @@ func (s *series) cycles(w watched, eps []Episode) []Cycle {
 		for _, x := range sp.amp {
 			amp = append(amp, s.pvUnits(x))
 		}
+		// The watch measures the error; where SP swings too, PV is another matter.
+		if pv := s.swing(s.pv, a, b, p); len(pv) > 0 {
+			for i := range pv {
+				pv[i] = s.pvUnits(pv[i])
+			}
+			amp = pv
+		}
 		c.Amplitude = spreadOf(amp, s.unit(), "")
-		c.Regularity = spreadOf(sp.regular, "mean over deviation of half-cycles", "")
-		c.Shape = spreadOf(sp.shape, "0 sine, 1 triangle", "its form is too unclear to say")
+		c.SP = none("SP stands, or hardly moves with it")
+		if sp := s.swing(s.sp, a, b, p); len(sp) > 0 {
+			if m := s.pvUnits(median(sp)); m > 0.2*c.Amplitude.Value {
+				c.SP = counted(m, len(sp), s.unit())
+			}
+		}
+		c.Regularity = spreadOf(sp.regular, "", "")
+		c.Shape = spreadOf(sp.shape, "", "its form is too unclear to say")
 		c.Growth = growth(eps, &c)
 		c.OP, c.Harmonic3 = s.outputCycle(a, b, p)
 		out = append(out, c)
@@ -159,13 +252,24 @@ func (s *series) cycles(w watched, eps []Episode) []Cycle {
 	return out
 }
 
-// outputCycle measures OP at the period and at a third of it, over stretches of
-// four periods.
-func (s *series) outputCycle(a, b int, periodS float64) (amp, h3 Number) {
+// swing gives the amplitudes of a signal at a period, %, over stretches of four
+// periods.
+func (s *series) swing(x []float64, a, b int, periodS float64) []float64 {
 	per := periodS / s.dt
+	var out []float64
+	for k, step := a, max(4, int(4*per)); k+step <= b; k += max(step, (b-a)/200) {
+		if v, _ := phasor(x, k, k+step, per); v == v {
+			out = append(out, v)
+		}
+	}
+	return out
+}
+
+// outputCycle measures OP at the period, and at a third of it over that.
+func (s *series) outputCycle(a, b int, periodS float64) (amp, h3 Number) {
 	var as, hs []float64
-	step := int(4 * per)
-	for k := a; step > 0 && k+step <= b; k += max(step, (b-a)/200) {
+	per := periodS / s.dt
+	for k, step := a, max(4, int(4*per)); k+step <= b; k += max(step, (b-a)/200) {
 		x, _ := phasor(s.op, k, k+step, per)
 		if !(x > 2*s.quantOP) || !(x > 0.02) {
 			continue
@@ -180,7 +284,7 @@ func (s *series) outputCycle(a, b int, periodS float64) (amp, h3 Number) {
 	if per >= 12 {
 		why = "OP hardly moves with it"
 	}
-	return spreadOf(as, "% of OP", "OP hardly moves with it, or fewer than four periods"), spreadOf(hs, "of the first; triangle 0.11, square 0.33", why)
+	return spreadOf(as, "% of OP", "OP hardly moves with it, or fewer than four periods"), spreadOf(hs, "", why)
 }
 
 // manualSpells says of each cycle what natural manual spells tell: the trade's

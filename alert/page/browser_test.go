@@ -1,12 +1,21 @@
 package page
 
 import (
+	"bytes"
 	"context"
 	"flag"
+	"fmt"
+	"image"
+	"image/color"
+	"image/png"
+	"io"
+	"maps"
 	"net"
+	"net/http"
 	"os"
 	"os/exec"
 	"path/filepath"
+	"slices"
 	"strings"
 	"sync"
 	"testing"
@@ -102,6 +111,14 @@ func do(t *testing.T, ctx context.Context, steps ...chromedp.Action[chromedp.Voi
 	}
 }
 
+// script runs a script for what it does.
+func script(js string) chromedp.Action[chromedp.Void] {
+	return func(ctx context.Context, target *chromedp.Target) (chromedp.Void, error) {
+		_, err := cdp.Call(ctx, target, runtime.Evaluate, runtime.EvaluateParams{Expression: js})
+		return chromedp.Void{}, err
+	}
+}
+
 // eval gives the value of an expression in the page.
 func eval[T any](t *testing.T, ctx context.Context, js string) T {
 	t.Helper()
@@ -112,13 +129,23 @@ func eval[T any](t *testing.T, ctx context.Context, js string) T {
 	return v
 }
 
-// wait waits until an expression is true in the page.
+// pulses waits until n pulses of the stream came to a listener of the test's own:
+// the page has heard about as many.
+func pulses(t *testing.T, ctx context.Context, n int) {
+	t.Helper()
+	do(t, ctx, script("window.pulses = 0; window.tested = new EventSource((document.body.dataset.up || '') + 'api/stream'); tested.addEventListener('pulse', () => pulses++)"))
+	wait(t, ctx, fmt.Sprintf("window.pulses >= %d", n))
+	do(t, ctx, script("window.tested.close()"))
+}
+
+// wait waits until an expression is true in the page. What fails meanwhile (a
+// page on its way) is not true.
 func wait(t *testing.T, ctx context.Context, js string) {
 	t.Helper()
 	deadline := time.Now().Add(15 * time.Second)
-	for !eval[bool](t, ctx, "!!("+js+")") {
+	for !eval[bool](t, ctx, "(() => { try { return !!("+js+") } catch { return false } })()") {
 		if time.Now().After(deadline) {
-			t.Fatalf("never true: %s\n%.2000s", js, eval[string](t, ctx, "document.body.innerText"))
+			t.Fatalf("never true: %s\n%.300s", js, eval[string](t, ctx, "document.body.innerText"))
 		}
 		time.Sleep(30 * time.Millisecond)
 	}
@@ -159,6 +186,60 @@ func serve(t *testing.T, h *fakeHouse, c configs.Page) (*Page, string) {
 	return p, "http://" + ln.Addr().String() + "/"
 }
 
+// fewColours packs a picture with the 256 colours it uses most.
+func fewColours(t *testing.T, b []byte) []byte {
+	t.Helper()
+	in, err := png.Decode(bytes.NewReader(b))
+	if err != nil {
+		t.Fatal(err)
+	}
+	count := map[color.Color]int{}
+	r := in.Bounds()
+	for y := r.Min.Y; y < r.Max.Y; y++ {
+		for x := r.Min.X; x < r.Max.X; x++ {
+			count[in.At(x, y)]++
+		}
+	}
+	all := slices.SortedFunc(maps.Keys(count), func(a, b color.Color) int { return count[b] - count[a] })
+	out := image.NewPaletted(r, color.Palette(all[:min(256, len(all))]))
+	index := map[color.Color]uint8{}
+	for y := r.Min.Y; y < r.Max.Y; y++ {
+		for x := r.Min.X; x < r.Max.X; x++ {
+			c := in.At(x, y)
+			i, ok := index[c]
+			if !ok {
+				i = uint8(out.Palette.Index(c))
+				index[c] = i
+			}
+			out.SetColorIndex(x, y, i)
+		}
+	}
+	var z bytes.Buffer
+	if err := (&png.Encoder{CompressionLevel: png.BestCompression}).Encode(&z, out); err != nil {
+		t.Fatal(err)
+	}
+	return z.Bytes()
+}
+
+// picture saves an exported picture, to be opened as a file.
+func picture(t *testing.T, url string) string {
+	t.Helper()
+	resp, err := http.Get(url)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer resp.Body.Close()
+	b, err := io.ReadAll(resp.Body)
+	if err != nil {
+		t.Fatal(err)
+	}
+	path := filepath.Join(t.TempDir(), "picture.svg")
+	if err := os.WriteFile(path, b, 0o644); err != nil {
+		t.Fatal(err)
+	}
+	return "file://" + path
+}
+
 // TestScreens makes pictures of the main views: go test ./alert/page -run
 // Screens -update. They go into a folder under the temporary one, and three
 // small ones into screens/ for the README.
@@ -192,6 +273,7 @@ func TestScreens(t *testing.T) {
 			t.Fatal(err)
 		}
 		if small, ok := strings.CutPrefix(name, "readme-"); ok {
+			b = fewColours(t, b)
 			if len(b) > 120<<10 {
 				t.Errorf("%s has %d bytes", name, len(b))
 			}
@@ -203,6 +285,7 @@ func TestScreens(t *testing.T) {
 	chart := "document.querySelectorAll('.uplot').length == 2"
 	shot("list", url, 1440, 1400, false, "")
 	shot("list-dark", url, 1440, 1100, true, "")
+	shot("list-phone-strips", url+"#filter", 390, 1400, true, "")
 	shot("list-phone", url, 390, 1800, false, "")
 	shot("list-wall", url, 2560, 1440, true, "")
 	shot("calm", calmURL, 1440, 900, false, "")
@@ -216,8 +299,9 @@ func TestScreens(t *testing.T) {
 	shot("cascade", url+"episodes/cascade:AIC-201", 1440, 800, false, "")
 	shot("watch", url+"watch", 1440, 1400, false, "")
 	shot("trend-svg", url+"loops/AIC-204/trend.svg?hours=4", 1000, 500, false, "")
+	shot("strips-svg", picture(t, url+"strips.svg"), 1280, 900, false, "")
 	shot("none", url+"loops/XX-1", 1000, 500, false, "")
-	shot("readme-list", url, 1000, 640, false, "")
+	shot("readme-list", url, 1200, 1020, false, "")
 	shot("readme-loop", url+"loops/AIC-204", 1000, 640, false, chart)
 	shot("readme-phone", url, 390, 760, true, "")
 	t.Log("pictures are in", dir)

@@ -30,7 +30,8 @@ type card struct {
 	Loop    string // subject, where it is a loop
 	Path    string // of Loop
 	Others  int    // further loops of the episode
-	Trace   string // SVG path over 300 x 60
+	Trace   string // SVG path over Width x 60
+	Width   int
 	OnsetX  string
 	OnsetW  string
 	Span    string // what the trend covers
@@ -112,21 +113,31 @@ func (p *Page) card(ctx context.Context, l *look, e *alert.Episode, byName map[s
 
 func first(s []string, n int) []string { return s[:min(n, len(s))] }
 
-// cardTrend draws PV from before the onset to now, at most two days of it.
+// cardTrend draws PV from before the onset to now, at most a day of it.
 func (p *Page) cardTrend(ctx context.Context, c *card, l *configs.Loop, since int64, now time.Time) {
 	end := now.UnixMilli()
 	before := max((end-since)*2/3, 30*60*1000)
-	from := max(since-before, end-2*24*3600*1000)
-	t := p.sparks.get(sparkKey{c.ID, end / 60000}, func() string { return p.spark(ctx, l, from, end) })
-	c.Trace = t
+	from := max(since-before, end-24*3600*1000)
+	c.Width = sparkBuckets
+	// What is long is read already, for the strip.
+	if span := time.Duration(end-from) * time.Millisecond; span > sparkBuckets*bucketMs*time.Millisecond {
+		if b, err := p.strips.upTo(ctx, p.o.House, l, now, span); err == nil {
+			c.Trace, c.Width = trace(b), len(b)
+		}
+	} else {
+		c.Trace = p.sparks.get(sparkKey{c.ID, end / 60000}, func() string { return p.spark(ctx, l, from, end) })
+	}
 	x := max(0, float64(since-from)/float64(end-from)*100)
 	c.OnsetX, c.OnsetW = percent(x), percent(100-x)
 	c.Span = clock(from, now, p.o.House.Site().Zone) + " – now"
 }
 
-// spark draws least and greatest PV of 300 buckets as a path 60 high.
+// sparkBuckets is the width of a small trend.
+const sparkBuckets = 300
+
+// spark draws least and greatest PV of a span as a path 60 high.
 func (p *Page) spark(ctx context.Context, l *configs.Loop, from, to int64) string {
-	const n = 300
+	const n = sparkBuckets
 	b := make([]bucket, n)
 	for f, err := range p.o.House.Frames(ctx, l.Name, from, to+1) {
 		if err != nil {

@@ -118,6 +118,7 @@ func (p *Page) routes() *http.ServeMux {
 	m.HandleFunc("GET /{$}", p.serveList)
 	m.HandleFunc("GET /parts/{part}", p.servePart)
 	m.HandleFunc("GET /loops.csv", p.serveListCSV)
+	m.HandleFunc("GET /strips.svg", p.serveStripsSVG)
 	m.HandleFunc("GET /loops/{loop}", p.serveLoop)
 	m.HandleFunc("GET /loops/{loop}/trend.csv", p.serveTrendCSV)
 	m.HandleFunc("GET /loops/{loop}/trend.svg", p.serveTrendSVG)

@@ -30,6 +30,7 @@ type pulse struct {
 	Age         string `json:"age"`
 	Stale       bool   `json:"stale"`
 	Now         string `json:"now"`
+	NowMs       int64  `json:"now_ms"`
 	Revision    uint64 `json:"revision"`
 }
 
@@ -98,7 +99,7 @@ func (s *stream) send() error {
 	now := s.p.o.Clock()
 	sum := s.p.summary(now)
 	x := pulse{Judged: sum.Judged, CannotJudge: sum.CannotJudge, NotNormal: sum.NotNormal, Held: sum.Held, CatchingUp: sum.CatchingUp, Sources: sum.Sources,
-		Alive: sum.Alive, Revision: sum.Revision, Now: now.In(s.p.o.House.Site().Zone).Format("Mon 2 Jan, 15:04")}
+		Alive: sum.Alive, Revision: sum.Revision, Now: now.In(s.p.o.House.Site().Zone).Format("Mon 2 Jan, 15:04"), NowMs: now.UnixMilli()}
 	x.Age, _, x.Stale = dataAge(&sum, now)
 	if err := s.event("pulse", x); err != nil {
 		return err

@@ -160,7 +160,7 @@ func (t *trend) empty(b *pot) {
 
 // readTrend reads a span and thins it to about points buckets.
 func readTrend(ctx context.Context, frames collector.FrameReader, l *configs.Loop, from, to int64, points int) (*trend, error) {
-	t := &trend{Loop: l.Name, Unit: l.Unit, From: from, To: to, PVScale: [2]number64{number64(l.PVLow), number64(l.PVHigh)}}
+	t := &trend{Times: []int64{}, Loop: l.Name, Unit: l.Unit, From: from, To: to, PVScale: [2]number64{number64(l.PVLow), number64(l.PVHigh)}}
 	width := max(1, (to-from)/int64(points))
 	var b pot
 	at := int64(math.MinInt64)
@@ -204,7 +204,6 @@ type watcher struct {
 	on   map[string]int // open run of a kind, index
 	was  collector.Frame
 	seen bool
-	sp   float32 // before the last step
 }
 
 func (w *watcher) hold(on bool, what, word string, at int64) {

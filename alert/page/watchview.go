@@ -92,9 +92,7 @@ func (p *Page) serveWatch(w http.ResponseWriter, r *http.Request) {
 	}
 	v.Clocks = []measureLine{{"site zone", v.ZoneName}, {"clock of this box", l.now.In(l.zone).Format("Mon 2 Jan 2006 15:04:05 -07:00")}, {"the same in UTC", utc(l.now.UnixMilli())},
 		{"steps of source clocks", fmt.Sprint(s.Clock.Steps)}}
-	for _, c := range p.watchCards(r, &l) {
-		v.Cards = append(v.Cards, c)
-	}
+	v.Cards = p.watchCards(r, &l)
 	for _, sh := range p.o.House.Shelves() {
 		v.Shelves = append(v.Shelves, shelfView{sh.Loop, pathName(sh.Loop), sh.Who, sh.Why, clock(sh.Until, l.now, l.zone)})
 	}

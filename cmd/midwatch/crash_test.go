@@ -11,6 +11,7 @@ import (
 	"os/exec"
 	"path/filepath"
 	"strings"
+	"sync"
 	"syscall"
 	"testing"
 	"time"
@@ -42,6 +43,7 @@ type feeder struct {
 	start  time.Time
 	n      int
 	pv, i  float64
+	csv    strings.Builder // the rows published
 }
 
 func newFeeder(t *testing.T) *feeder {
@@ -73,6 +75,7 @@ func (f *feeder) publish(seconds int) {
 			f.i += e / 30
 		}
 		at := f.start.Add(time.Duration(f.n) * time.Second).UTC().Format(time.RFC3339)
+		fmt.Fprintf(&f.csv, "%s,FIC-118,%.4f,50,%.4f,auto,\n", at, f.pv, op)
 		body := fmt.Sprintf(`{"t":"%s","pv":%.4f,"sp":50,"op":%.4f,"mode":"auto"}`, at, f.pv, op)
 		if err := f.server.Publish("kestrel-fen/fic-118", []byte(body), false, 0); err != nil {
 			f.t.Fatal(err)
@@ -86,7 +89,25 @@ type watch struct {
 	t   *testing.T
 	cmd *exec.Cmd
 	cl  client
-	log *strings.Builder
+	log *logBuffer
+}
+
+// logBuffer takes what a child says while the test looks at it.
+type logBuffer struct {
+	mu sync.Mutex
+	b  strings.Builder
+}
+
+func (l *logBuffer) Write(p []byte) (int, error) {
+	l.mu.Lock()
+	defer l.mu.Unlock()
+	return l.b.Write(p)
+}
+
+func (l *logBuffer) String() string {
+	l.mu.Lock()
+	defer l.mu.Unlock()
+	return l.b.String()
 }
 
 func startWatch(t *testing.T, dir string) *watch {
@@ -94,7 +115,7 @@ func startWatch(t *testing.T, dir string) *watch {
 	if err != nil {
 		t.Fatal(err)
 	}
-	w := &watch{t: t, cmd: exec.Command(exe, "run", "-c", filepath.Join(dir, "midwatch.yaml")), cl: dial(filepath.Join(dir, "data")), log: &strings.Builder{}}
+	w := &watch{t: t, cmd: exec.Command(exe, "run", "-c", filepath.Join(dir, "midwatch.yaml")), cl: dial(filepath.Join(dir, "data")), log: &logBuffer{}}
 	w.cmd.Env = append(os.Environ(), asMain+"=1")
 	w.cmd.Stderr = w.log
 	if err := w.cmd.Start(); err != nil {
@@ -131,6 +152,18 @@ func (w *watch) until(what string, ok func(*api.Status) bool) *api.Status {
 	return nil
 }
 
+// feed publishes seconds of data and waits until they were judged.
+func (w *watch) feed(f *feeder, seconds int) {
+	w.t.Helper()
+	before := w.until("it answers", func(*api.Status) bool { return true })
+	for n := uint64(100); n <= uint64(seconds); n += 100 {
+		f.publish(100)
+		w.until("the frames are judged and on disk", func(s *api.Status) bool {
+			return s.Counts["frames"]+2 >= before.Counts["frames"]+n && s.Trends.Frames+50 >= before.Trends.Frames+n
+		})
+	}
+}
+
 // messages counts what was told, by key.
 func messages(t *testing.T, dir string) map[string]int {
 	t.Helper()
@@ -154,41 +187,9 @@ func messages(t *testing.T, dir string) map[string]int {
 // nothing again but under the same key.
 func TestKilledInAnEpisode(t *testing.T) {
 	f := newFeeder(t)
-	dir, err := os.MkdirTemp("", "midwatch") // a short path: it holds a socket
-	if err != nil {
-		t.Fatal(err)
-	}
-	t.Cleanup(func() { os.RemoveAll(dir) })
-	write := func(name, text string) {
-		if err := os.WriteFile(filepath.Join(dir, name), []byte(text), 0o640); err != nil {
-			t.Fatal(err)
-		}
-	}
-	write("midwatch.yaml", fmt.Sprintf(`
-site: {name: Kestrel Fen}
-data: data
-page: {listen: "127.0.0.1:0"}
-keep: {flush: 1s}
-sources: [{name: gateway, mqtt: {broker: "mqtt://%s", payload: json, value: v, time: t}}]
-loop_list: loops.csv
-detect: {standing: 0s}
-advise:
-  senders: [{name: log, log: {path: told.jsonl}}]
-  routes: [{to: log}]
-`, f.addr))
-	write("loops.csv", "loop,source,pv,sp,op,mode,action,gain,reset_s,pv_low,pv_high,sample_s\n"+
-		"FIC-118,gateway,kestrel-fen/fic-118#pv,kestrel-fen/fic-118#sp,kestrel-fen/fic-118#op,kestrel-fen/fic-118#mode,reverse,1,30,0,100,1\n")
-
+	dir := folder(t, f.addr)
 	w := startWatch(t, dir)
-	fedBefore := uint64(0) // before the running child began
-	feed := func(seconds int) {
-		for range seconds / 200 {
-			f.publish(200)
-			n := uint64(f.n)
-			w.until("the frames are judged", func(s *api.Status) bool { return s.Counts["frames"]+uint64(2) >= n-fedBefore })
-		}
-	}
-	feed(faultAfter + 2400)
+	w.feed(f, faultAfter+2400)
 	s := w.until("the fault is found", func(s *api.Status) bool { return len(s.Episodes) == 1 })
 	episode := s.Episodes[0]
 	if got := string(episode.Finding.Kind); got != "output-saturation" {
@@ -203,10 +204,9 @@ advise:
 	}
 	w.kill(syscall.SIGKILL)
 
-	fedBefore = uint64(f.n)
 	w = startWatch(t, dir)
 	w.until("the episode is there", func(s *api.Status) bool { return len(s.Episodes) > 0 })
-	feed(1200)
+	w.feed(f, 1200)
 	s = w.until("the frames are judged", func(*api.Status) bool { return true })
 	if len(s.Episodes) != 1 || s.Episodes[0].ID != episode.ID || s.Episodes[0].Count != 1 {
 		t.Errorf("after the kill: %+v, want the one episode %s, raised once", s.Episodes, episode.ID)

@@ -156,3 +156,38 @@ func TestServiceManager(t *testing.T) {
 	w.kill(syscall.SIGTERM)
 	await("STOPPING=1")
 }
+
+// A damaged state is set aside and its backup used, and that is said.
+func TestDamagedStateIsRestored(t *testing.T) {
+	f := newFeeder(t)
+	dir := folder(t, f.addr)
+	config := filepath.Join(dir, "midwatch.yaml")
+	w := startWatch(t, dir)
+	in(t, "shelve", "-c", config, "FIC-118", "--for", "4h", "--why", "cleaning", "--who", "ida")
+	w.kill(syscall.SIGTERM)
+	state := filepath.Join(dir, "data", "state.bolt")
+	b, err := os.ReadFile(state)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := os.WriteFile(state+".backup", b, 0o640); err != nil {
+		t.Fatal(err)
+	}
+	// Zeroes where the tree begins; the head is whole.
+	clear(b[2*os.Getpagesize():])
+	if err := os.WriteFile(state, b, 0o640); err != nil {
+		t.Fatal(err)
+	}
+	w = startWatch(t, dir)
+	s := w.until("it answers", func(*api.Status) bool { return true })
+	if len(s.Shelves) != 1 || s.Shelves[0].Who != "ida" {
+		t.Errorf("shelves after the restore: %+v", s.Shelves)
+	}
+	w.kill(syscall.SIGTERM)
+	if log := w.log.String(); !strings.Contains(log, "damaged") {
+		t.Errorf("the damage was not told:\n%s", log)
+	}
+	if m, err := filepath.Glob(state + ".damaged-*"); err != nil || len(m) != 1 {
+		t.Errorf("the damaged file is not kept: %v %v", m, err)
+	}
+}

@@ -6,6 +6,8 @@ import (
 	"time"
 
 	"github.com/rogpeppe/go-internal/testscript"
+
+	"midwatch/configs"
 )
 
 // asMain makes a test binary behave as the program, for tests that must kill it.
@@ -14,6 +16,8 @@ const asMain = "MIDWATCH_TEST_AS_MAIN"
 func TestMain(m *testing.M) {
 	if os.Getenv(asMain) != "" {
 		testOnlySettle = -1
+		// Data time runs far faster here than any plant's.
+		testOnlyAdjust = func(c *configs.Config) { c.Keep.Flush = 20 * time.Millisecond }
 		os.Exit(Main())
 	}
 	testscript.Main(m, map[string]func(){"midwatch": main})

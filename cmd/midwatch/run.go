@@ -41,6 +41,9 @@ Try the configuration first: midwatch check -c FILE --connect`,
 	return c
 }
 
+// testOnlyAdjust changes the configuration of a watch.
+var testOnlyAdjust = func(*configs.Config) {}
+
 // testOnlySettle is how long the desk waits for what folds into a message; 0: its
 // default.
 var testOnlySettle time.Duration
@@ -55,6 +58,7 @@ func (h *house) watch(config string, verbose bool) error {
 	if err != nil {
 		return err
 	}
+	testOnlyAdjust(c)
 	log := newLog(h.stderr, verbose)
 	for _, w := range c.Warnings {
 		log.Warn(w)

@@ -44,6 +44,25 @@ func (q *Quantile) Add(v, p, floor, least float64) {
 // Value is the estimate; 0 before the first value.
 func (q *Quantile) Value() float64 { return float64(q.V) }
 
+// Mean follows the geometric mean instead: precise after few values, where the
+// quantile still jumps. From the fifth on a value farther than a factor 1.5 counts
+// as that far only, so that one wild value moves it by 1/n of that.
+func (q *Quantile) Mean(v, floor, least float64) {
+	if !(v > least) {
+		v = least
+	}
+	q.N++
+	if q.N == 1 {
+		q.V = float32(v)
+		return
+	}
+	d := math.Log(v / float64(q.V))
+	if q.N > 4 {
+		d = max(-0.4, min(0.4, d))
+	}
+	q.V *= float32(math.Exp(d * max(1/float64(q.N), floor)))
+}
+
 // P2 is the online quantile of Jain & Chlamtac (1985, "The P2 algorithm for
 // dynamic calculation of quantiles and histograms without storing observations",
 // Communications of the ACM 28(10)): five markers, no observation kept.

@@ -1,6 +1,7 @@
 package fit
 
 import (
+	"cmp"
 	"errors"
 	"fmt"
 	"math"
@@ -35,6 +36,7 @@ type Result struct {
 	R2        float64
 	SigmaPct  float64 // %, of the residuals
 	Windows   int
+	LeftOut   []int           // windows, by index, in which something else happened
 	Samples   int             // compared
 	Colour    int             // order of the model of the residuals; 0: white
 	Plausible []process.Model // models within the 90 % range, the extreme ones among them
@@ -49,6 +51,9 @@ type Options struct {
 
 // ErrNoMove says that nothing in the windows moved enough to say anything.
 var ErrNoMove = errors.New("no move of OP that PV could have answered")
+
+// leastToChoose windows are needed to tell which of them was disturbed.
+const leastToChoose = 4
 
 // spread of a 90 % range, one parameter: chi-squared with one degree of freedom,
 // 2.706, and a quarter more, since the model of the residuals is estimated from
@@ -68,6 +73,11 @@ func Fit(windows []Window, o Options) (Result, error) {
 	}
 	var best *shape
 	first := &shape{kind: kinds[0]}
+	if len(e.w) >= leastToChoose {
+		e.least(first, e.robust)
+		e.leaveOut(first)
+		first.at = nil
+	}
 	e.search(first)
 	for range 2 {
 		e.colour(first)
@@ -111,6 +121,7 @@ type shape struct {
 
 type engine struct {
 	w     []*prepared
+	out   []int // windows left out, by their index as given
 	ar    []float64
 	ys    [][]float64 // whitened measurements
 	dt    float64     // s, finest
@@ -120,9 +131,12 @@ type engine struct {
 }
 
 func newEngine(windows []Window, o Options) (*engine, error) {
-	ws := slices.Clone(windows)
-	slices.SortStableFunc(ws, func(a, b Window) int {
-		switch x, y := math.Abs(a.MovePct), math.Abs(b.MovePct); {
+	order := make([]int, len(windows))
+	for i := range order {
+		order[i] = i
+	}
+	slices.SortStableFunc(order, func(a, b int) int {
+		switch x, y := math.Abs(windows[a].MovePct), math.Abs(windows[b].MovePct); {
 		case x > y:
 			return -1
 		case x < y:
@@ -130,9 +144,9 @@ func newEngine(windows []Window, o Options) (*engine, error) {
 		}
 		return 0
 	})
-	ws = ws[:min(len(ws), mostUsed)]
 	e := &engine{dt: math.Inf(1)}
-	for _, w := range ws {
+	for _, i := range order[:min(len(order), mostUsed)] {
+		w := windows[i]
 		if len(w.U) != len(w.Y) || len(w.U) < 12 || !(w.DT > 0) {
 			return nil, fmt.Errorf("a window of %d and %d samples, %g s apart; hint: at least 12 pairs", len(w.U), len(w.Y), w.DT)
 		}
@@ -140,6 +154,7 @@ func newEngine(windows []Window, o Options) (*engine, error) {
 			continue
 		}
 		p := prepare(w, o.Interpolate)
+		p.index = i
 		e.w = append(e.w, p)
 		e.dt = math.Min(e.dt, p.dt)
 		e.span = math.Max(e.span, p.last)
@@ -158,9 +173,34 @@ func (e *engine) filter() {
 	}
 }
 
+// leaveOut drops windows that the common model explains far worse than the
+// others: something else happened in them. At least half of them stay.
+func (e *engine) leaveOut(s *shape) {
+	each, gain := e.apart(s.kind, s.at)
+	left := make([]float64, len(e.w))
+	for i, q := range each {
+		left[i] = rms(q, gain)
+	}
+	sorted := slices.Sorted(slices.Values(left))
+	limit := math.Max(2*sorted[(len(sorted)-1)/3], sorted[(len(sorted)-1)/2])
+	keep := e.w[:0:0]
+	for i, p := range e.w {
+		if left[i] <= limit {
+			keep = append(keep, p)
+		} else {
+			e.out = append(e.out, p.index)
+		}
+	}
+	e.w = keep
+	e.filter()
+}
+
 // model is the shape with gain 1.
 func (e *engine) model(k Kind, at []float64) process.Model {
-	th := math.Max(0, math.Exp(at[len(at)-1])-e.dt/2)
+	th := math.Exp(at[len(at)-1]) - e.dt/2
+	if th < e.dt*1e-3 {
+		th = 0
+	}
 	switch k {
 	case Integrator:
 		return process.Model{Gain: 1, ThetaS: th, Integrating: true}
@@ -181,11 +221,7 @@ func (e *engine) sums(k Kind, at []float64) (s sums) {
 	m := e.model(k, at)
 	for i, p := range e.w {
 		e.buf = whiten(e.buf, e.answers(p, m), e.ar)
-		decay := 0.0
-		if lag := m.LagS(); lag > 0 {
-			decay = math.Exp(-p.dt * float64(p.m) / lag)
-		}
-		s.project(e.buf, e.ys[i], k == Integrator, decay)
+		s.project(e.buf, e.ys[i], k == Integrator, p.decay(m))
 	}
 	e.count++
 	return s
@@ -207,6 +243,57 @@ func (e *engine) bounds(k Kind) (lo, hi []float64) {
 // search finds the least squares, over a coarse grid the first time, then by
 // simplex.
 func (e *engine) search(s *shape) {
+	e.least(s, func(k Kind, at []float64) float64 { return math.Log(e.sums(k, at).sse() + 1e-30) })
+}
+
+// robust is a cost that half of the windows cannot spoil: the sum of what each
+// leaves unexplained, not squared, under the weighted median of their gains.
+func (e *engine) robust(k Kind, at []float64) float64 {
+	each, gain := e.apart(k, at)
+	c := 0.0
+	for _, q := range each {
+		c += rms(q, gain)
+	}
+	return math.Log(c + 1e-30)
+}
+
+// apart gives the sums of each window and the weighted median of their gains.
+func (e *engine) apart(k Kind, at []float64) ([]sums, float64) {
+	m := e.model(k, at)
+	each := make([]sums, len(e.w))
+	order := make([]int, len(e.w))
+	total := 0.0
+	for i, p := range e.w {
+		each[i].project(e.answers(p, m), p.y, k == Integrator, p.decay(m))
+		order[i] = i
+		total += math.Sqrt(each[i].xx)
+	}
+	slices.SortFunc(order, func(a, b int) int {
+		return cmp.Compare(each[a].gain(), each[b].gain())
+	})
+	half := 0.0
+	for _, i := range order {
+		if half += math.Sqrt(each[i].xx); half >= total/2 {
+			return each, each[i].gain()
+		}
+	}
+	return each, 0
+}
+
+func rms(q sums, gain float64) float64 {
+	return math.Sqrt(math.Max(0, q.yy-2*gain*q.xy+gain*gain*q.xx) / float64(max(1, q.n)))
+}
+
+// decay of what is left of the state before the window, from one compared sample
+// to the next.
+func (p *prepared) decay(m process.Model) float64 {
+	if lag := m.LagS(); lag > 0 {
+		return math.Exp(-p.dt * float64(p.m) / lag)
+	}
+	return 0
+}
+
+func (e *engine) least(s *shape, of func(Kind, []float64) float64) {
 	lo, hi := e.bounds(s.kind)
 	cost := func(at []float64) float64 {
 		out := 0.0
@@ -215,8 +302,7 @@ func (e *engine) search(s *shape) {
 			c[i] = math.Min(math.Max(v, lo[i]), hi[i])
 			out += math.Abs(v - c[i])
 		}
-		q := e.sums(s.kind, c).sse()
-		return math.Log(q+1e-30) + out
+		return of(s.kind, c) + out
 	}
 	if s.at == nil {
 		steps := []int{18, 14}
@@ -301,20 +387,17 @@ func GainOf(w Window, m process.Model, o Options) (gain, r2 float64, err error) 
 	}
 	p := e.w[0]
 	m.Gain = 1
-	decay := 0.0
-	if lag := m.LagS(); lag > 0 {
-		decay = math.Exp(-p.dt * float64(p.m) / lag)
-	}
 	var s sums
-	s.project(e.answers(p, m), p.y, m.Integrating, decay)
+	s.project(e.answers(p, m), p.y, m.Integrating, p.decay(m))
 	if s.yy == 0 {
 		return 0, 0, ErrNoMove
 	}
 	return s.gain(), 1 - s.sse()/s.yy, nil
 }
 
-// Answer is what the model makes of a window, % of PV, with its level (and slope
-// when integrating) fitted to the window: for drawing over the data.
+// Answer is what the model makes of a window, % of PV, with what the window does
+// not know (its level, its state before, its slope when integrating) fitted to it:
+// for drawing over the data.
 func Answer(w Window, m process.Model, o Options) []float64 {
 	e, err := newEngine([]Window{w}, o)
 	if err != nil {
@@ -333,6 +416,25 @@ func Answer(w Window, m process.Model, o Options) []float64 {
 	level(r, m.Integrating)
 	for k := range x {
 		x[k] += d[k] - r[k]
+	}
+	decay := p.decay(m)
+	if m.Integrating || !(decay > 1e-6 && decay < 1) {
+		return x
+	}
+	c, rc, cc, z := make([]float64, len(x)), 0.0, 0.0, 1.0
+	for k := range c {
+		c[k] = z
+		z *= decay
+	}
+	level(c, false)
+	for k := range c {
+		rc += r[k] * c[k]
+		cc += c[k] * c[k]
+	}
+	if cc > 1e-9*float64(len(c)) {
+		for k := range x {
+			x[k] += rc / cc * c[k]
+		}
 	}
 	return x
 }

@@ -26,7 +26,7 @@ type Verdict struct {
 // Facts are what is known of the loop besides its events.
 type Facts struct {
 	NoisePct  float64 // %, one standard deviation of PV
-	WanderPct float64 // %, usual slow wandering of PV
+	WanderPct float64 // %, usual slow wandering of PV; NaN not known
 	Sign      float64 // +1 reverse action (PV rises with OP), -1 direct, 0 unknown
 }
 
@@ -48,22 +48,40 @@ func Judge(r Result, windows []Window, o Options, f Facts) Verdict {
 	gate := func(name string, ok bool, format string, a ...any) {
 		v.Gates = append(v.Gates, Gate{name, ok, fmt.Sprintf(format, a...)})
 	}
-	var up, down, big []Window
-	need := math.Max(overNoise*f.NoisePct, overWander*f.WanderPct)
-	for _, w := range windows {
+	var up, down, upAll, downAll, big []Window
+	need := overNoise * f.NoisePct
+	wander := "5 times the usual wandering is not known"
+	if f.WanderPct == f.WanderPct {
+		need = math.Max(need, overWander*f.WanderPct)
+		wander = fmt.Sprintf("5 times the usual wandering of %.2g %%", f.WanderPct)
+	}
+	for i, w := range windows {
 		if math.Abs(w.MovePct) < need {
 			continue
 		}
-		big = append(big, w)
-		if w.MovePct > 0 {
-			up = append(up, w)
-		} else {
-			down = append(down, w)
+		of, all := &up, &upAll
+		if w.MovePct < 0 {
+			of, all = &down, &downAll
+		}
+		*all = append(*all, w)
+		if !slices.Contains(r.LeftOut, i) {
+			*of, big = append(*of, w), append(big, w)
 		}
 	}
+	// A direction that was left out whole is no accident: it is what the process
+	// or the valve does that way.
+	if len(up) == 0 {
+		up = upAll
+	}
+	if len(down) == 0 {
+		down = downAll
+	}
 	gate("moves that stand out", len(big) >= leastEvents,
-		"%d of %d moves are over %.2g %% of span (10 noise levels of %.2g %%, 5 times the usual wandering of %.2g %%); at least 2 are needed",
-		len(big), len(windows), need, f.NoisePct, f.WanderPct)
+		"%d of %d moves are over %.2g %% of span (10 noise levels of %.2g %%; %s); at least 2 are needed",
+		len(big), len(windows)-len(r.LeftOut), need, f.NoisePct, wander)
+	if n := len(r.LeftOut); n > 0 {
+		gate("windows left out", n <= len(windows)/2, "%d of %d: the common model explains them far worse than the others, something else happened in them", n, len(windows))
+	}
 	gate("both directions", len(up) > 0 && len(down) > 0, "%d up, %d down", len(up), len(down))
 	gate("explained", r.R2 >= leastR2, "the model explains %.1f %% of the movement of PV; at least 90 %% are needed", 100*r.R2)
 	if f.Sign != 0 {

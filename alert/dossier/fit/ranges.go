@@ -24,7 +24,7 @@ func (e *engine) result(s *shape) Result {
 
 	m := e.model(s.kind, s.at)
 	m.Gain = sum.gain()
-	r := Result{Kind: s.kind, Model: m, Windows: len(e.w), Colour: len(e.ar), score: s.score}
+	r := Result{Kind: s.kind, Model: m, Windows: len(e.w), LeftOut: e.out, Colour: len(e.ar), score: s.score}
 	r.Gain = Range{Value: m.Gain, Low: m.Gain, High: m.Gain}
 	last := len(s.at) - 1
 	r.Theta = Range{Value: m.ThetaS, Low: m.ThetaS, High: m.ThetaS, LowOpen: openLo[last], HighOpen: openHi[last]}

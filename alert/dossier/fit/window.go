@@ -23,18 +23,19 @@ type Window struct {
 const (
 	longest  = 1600 // samples of a window that are answered by a model
 	compared = 220  // samples of a window that are compared
-	mostUsed = 12   // windows: the largest moves
+	mostUsed = 16   // windows: the largest moves
 )
 
 // prepared is a window at the pace at which it is compared.
 type prepared struct {
-	dt   float64
-	u    []float64
-	m    int       // samples of u per compared one
-	y    []float64 // means over m samples
-	x    []float64 // scratch, answer of the model
-	xm   []float64 // scratch, means
-	last float64   // s, length
+	index int // of the window as given
+	dt    float64
+	u     []float64
+	m     int       // samples of u per compared one
+	y     []float64 // means over m samples
+	x     []float64 // scratch, answer of the model
+	xm    []float64 // scratch, means
+	last  float64   // s, length
 }
 
 func prepare(w Window, interpolate bool) *prepared {

@@ -153,7 +153,7 @@ func (h handler) loops(w http.ResponseWriter, _ *http.Request) {
 	answer(w, Loops(h.House.Loops()))
 }
 
-var errNoLoop = errors.New("no such loop; hint: /api/loops lists them")
+var errNoLoop = errors.New("no such loop; hint: `midwatch status --loops` or /api/loops lists them")
 
 func (h handler) loop(w http.ResponseWriter, r *http.Request) {
 	name := r.PathValue("loop")
@@ -195,6 +195,12 @@ func (h handler) export(w http.ResponseWriter, r *http.Request) {
 	if err != nil {
 		fail(w, http.StatusBadRequest, err)
 		return
+	}
+	for _, name := range e.Loops {
+		if _, ok := h.House.View(name); !ok {
+			fail(w, http.StatusNotFound, fmt.Errorf("loop %q: %w", name, errNoLoop))
+			return
+		}
 	}
 	h.write(w, r, e)
 }

@@ -9,7 +9,8 @@ import (
 )
 
 // Status is the state of the watch: the answer of /api/status and of the verb
-// status. Times are RFC 3339.
+// status. Times are RFC 3339, but for those within sources, senders and shelves,
+// which are ms UTC.
 type Status struct {
 	Running  bool                    `json:"running"` // false: read from the data folder, no daemon runs
 	Version  string                  `json:"version,omitempty"`

@@ -9,7 +9,7 @@ export interface Level { on: string; value: number; label: string }
 export interface Trend {
   loop: string; unit: string; from: number; to: number; bucket_ms: number; newest: number;
   t: number[]; pv: (number | null)[]; sp: (number | null)[]; op: (number | null)[];
-  runs?: Run[]; overlays?: Overlay[]; troubles?: Found[]; lines?: Level[]; pv_scale: [number | null, number | null];
+  runs?: Run[]; changes?: { at: number; word: string }[]; overlays?: Overlay[]; troubles?: Found[]; lines?: Level[]; pv_scale: [number | null, number | null];
 }
 
 const zone = ((): string | undefined => {
@@ -124,13 +124,13 @@ export class Chart {
     const base = (i: number): uPlot.Options => ({
       width: this.box.clientWidth, height: this.height(i), ms: 1, legend: { show: false }, tzDate: (ts) => (zone ? uPlot.tzDate(new Date(ts), zone) : new Date(ts)),
       padding: [18, 12, i === 0 ? 0 : null, 0],
-      cursor: { sync: { key: "loop", setSeries: false }, drag: { x: true, y: false, setScale: false }, points: { size: 6 } },
+      cursor: { sync: { key: "loop", setSeries: false, filters: { pub: (type) => type === "mousemove" || type === "mouseleave", sub: () => true } }, drag: { x: true, y: false, setScale: false }, points: { size: 6 } },
       scales: { x: { time: true }, y: { range: (u, lo, hi) => this.bounds(u, i, lo, hi) } },
       axes: [{ ...axis(i === 0 ? 8 : 34), show: true, values: (u, v) => (i === 0 ? v.map(() => "") : v.map((x) => tick(x, (u.scales.x!.max ?? 0) - (u.scales.x!.min ?? 0)))), space: 80 },
         { ...axis(58), values: (_u, v, _a, _s, by) => v.map((x) => x.toFixed(Math.min(6, Math.max(0, -Math.floor(Math.log10(by) + 1e-9) + (String(Number(by.toPrecision(2))).replace(/[^1-9]/g, "").length > 1 ? 1 : 0))))) }],
       series: [{}],
       hooks: {
-        drawClear: [(u) => this.under(u)], draw: [(u) => this.over(u, i === 0 ? "pv" : "op", i)],
+        drawClear: [(u) => this.under(u, i === 0)], draw: [(u) => this.over(u, i === 0 ? "pv" : "op", i)],
         setSelect: [(u) => {
           if (u.select.width < 6) return;
           const a = u.posToVal(u.select.left, "x"), b = u.posToVal(u.select.left + u.select.width, "x");
@@ -161,6 +161,8 @@ export class Chart {
     const at = t.t[i]!;
     const unit = this.unit ? ` ${this.unit}` : "";
     const runs = (t.runs ?? []).filter((r) => r.from <= at && at <= r.to).map((r) => r.word);
+    const near = (t.to - t.from) / 150;
+    for (const ch of t.changes ?? []) if (Math.abs(ch.at - at) < near) runs.push(`${siteTime(ch.at)}: ${ch.word}`);
     this.point(`${siteTime(at)} (${new Date(at).toISOString().slice(11, 19)} UTC) · PV ${sig(t.pv[i])}${unit} · SP ${sig(t.sp[i])}${unit} · OP ${sig(t.op[i])} %${runs.length ? ` · ${[...new Set(runs)].join(", ")}` : ""}`);
   }
 
@@ -169,14 +171,25 @@ export class Chart {
     return Math.max(b.left, Math.min(b.left + b.width, u.valToPos(ms, "x", true)));
   }
 
-  private under(u: uPlot): void {
+  private under(u: uPlot, words: boolean): void {
     const t = this.trend, g = u.ctx, b = u.bbox;
     if (!t) return;
     g.save();
     for (const r of t.runs ?? []) {
       const x0 = this.x(u, r.from), w = Math.max(1, this.x(u, r.to) - x0);
-      if (r.what === "inactive" || r.what === "hidden") this.hatch(g, x0, b.top, w, b.height);
-      else if (r.what === "gap") {
+      if (r.what === "inactive" || r.what === "hidden") {
+        this.hatch(g, x0, b.top, w, b.height);
+        g.font = `${12 * devicePixelRatio}px system-ui, sans-serif`;
+        if (words && g.measureText(r.word).width + 10 < w) {
+          g.fillStyle = this.c.soft!;
+          g.textAlign = "left";
+          g.fillText(r.word, x0 + 5 * devicePixelRatio, b.top + b.height - 6 * devicePixelRatio);
+        }
+      } else if (r.what === "lost") {
+        g.fillStyle = this.c.soft!;
+        g.fillRect(x0, b.top + b.height - 3 * devicePixelRatio, w, 3 * devicePixelRatio);
+      }
+      if (r.what === "gap") {
         g.strokeStyle = this.c.trace!;
         g.setLineDash([4, 4]);
         g.strokeRect(x0, b.top, w, b.height);
@@ -239,6 +252,18 @@ export class Chart {
         if (run.what !== "limit" && run.what !== "overhang") continue;
         g.fillStyle = run.what === "overhang" ? this.c.morning! : this.c.soft!;
         g.fillRect(this.x(u, run.from), b.top + (run.what === "overhang" ? 5 : 0) * r, Math.max(2, this.x(u, run.to) - this.x(u, run.from)), 4 * r);
+      }
+    }
+    // What people changed: a small wedge at the foot of OP; the readout says it.
+    if (on === "op") {
+      g.fillStyle = this.c.note!;
+      for (const ch of t.changes ?? []) {
+        const x = u.valToPos(ch.at, "x", true), y = b.top + b.height;
+        g.beginPath();
+        g.moveTo(x, y - 9 * r);
+        g.lineTo(x + 4 * r, y);
+        g.lineTo(x - 4 * r, y);
+        g.fill();
       }
     }
     g.restore();

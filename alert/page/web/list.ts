@@ -106,7 +106,7 @@ export function list(): void {
   });
   window.addEventListener("popstate", () => location.reload());
   document.addEventListener("keydown", (e) => {
-    if (e.key === "/" && !(e.target as Element).closest("input,select,textarea")) {
+    if (e.key === "/" && !(e.target instanceof Element && e.target.closest("input,select,textarea"))) {
       e.preventDefault();
       form.querySelector<HTMLInputElement>("[type=search]")!.focus();
     }

@@ -3,12 +3,19 @@
 
 export interface Pulse {
   judged: number; cannot_judge: number; not_normal: number; held: number; catching_up: number;
-  sources: number; alive: number; age: string; stale: boolean; now: string; revision: number;
+  sources: number; alive: number; age: string; stale: boolean; now: string; now_ms: number; revision: number;
 }
 
 export interface Fresh { t: number[]; pv: (number | null)[]; sp: (number | null)[]; op: (number | null)[] }
 
 export const up = document.body.dataset.up ?? "";
+
+let skew = document.body.dataset.now ? Number(document.body.dataset.now) - Date.now() : 0;
+
+/** Now by the clock of the box, ms: the clock of this screen may be wrong. */
+export function boxNow(): number {
+  return Date.now() + skew;
+}
 
 /** Silence after which the page says so, ms: three pulses and a little. */
 const silence = 7000;
@@ -58,6 +65,7 @@ export function follow(query: () => string, changed: () => void, fresh?: (f: Fre
     source.addEventListener("pulse", (e) => {
       const p = JSON.parse((e as MessageEvent<string>).data) as Pulse;
       alive();
+      skew = p.now_ms - Date.now();
       show(p);
       since = p.now;
       if (revision >= 0 && p.revision !== revision) changed();

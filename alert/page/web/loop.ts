@@ -1,6 +1,6 @@
 // A loop: the chart over a span that stands in the address, so that back,
 // forward and a copied link work.
-import { follow, get, swap, up } from "./live";
+import { boxNow, follow, get, swap, up } from "./live";
 import { Chart, siteTime, type Trend } from "./chart";
 
 const body = document.body.dataset;
@@ -31,7 +31,7 @@ function query(s: Span): string {
 }
 
 function now(s: Span): Span {
-  return s.hours > 0 ? { from: Date.now() - s.hours * 3600e3, to: Date.now(), hours: s.hours } : s;
+  return s.hours > 0 ? { from: boxNow() - s.hours * 3600e3, to: boxNow(), hours: s.hours } : s;
 }
 
 /** Goes to a span and writes it into the address. */
@@ -45,7 +45,7 @@ function go(s: Span, push = true): void {
 
 function move(by: number): void {
   const w = span.to - span.from;
-  const to = Math.min(span.to + by * w, Date.now());
+  const to = Math.min(span.to + by * w, boxNow());
   go({ from: to - w, to, hours: 0 });
 }
 
@@ -67,7 +67,7 @@ async function load(): Promise<void> {
     trend = (await r.json()) as Trend;
     if (!box.isConnected) figure.replaceChildren(readout, box, tools, problem);
     problem.textContent = "";
-    chart.show(trend, span.from, span.to);
+    show();
     toggles(trend);
     exports();
   } catch (e) {
@@ -76,6 +76,11 @@ async function load(): Promise<void> {
     if (!problem.isConnected) figure.append(problem);
   }
   figure.removeAttribute("aria-busy");
+}
+
+function show(): void {
+  chart.show(trend!, span.from, span.to);
+  figure.dataset.rows = String(trend!.t.length);
 }
 
 let made = "";
@@ -140,7 +145,7 @@ document.getElementById("spans")!.addEventListener("click", (e) => {
 
 function fromAddress(search: string): Span {
   const q = new URLSearchParams(search);
-  if (q.has("from")) return { from: Number(q.get("from")), to: Number(q.get("to") ?? Date.now()), hours: 0 };
+  if (q.has("from")) return { from: Number(q.get("from")), to: Number(q.get("to") ?? boxNow()), hours: 0 };
   return { from: 0, to: 0, hours: Number(q.get("hours") ?? (Number(body.hours) || 4)) };
 }
 // The first address may have no span: it is written in, so that back finds it.
@@ -207,7 +212,7 @@ follow(() => `?loop=${body.loop}${trend?.newest ? `&after=${trend.newest}` : ""}
   while (gone < trend.t.length && trend.t[gone]! < span.from - (span.to - span.from) / 10) gone++;
   if (gone > 200) for (const c of [trend.t, trend.pv, trend.sp, trend.op]) c.splice(0, gone);
   if (trend.t.length > 6000) void load();
-  else chart.show(trend, span.from, span.to);
+  else show();
   exports();
 });
 window.setInterval(() => { if (!document.hidden) void parts(["now", "xy"]); }, 60000);

@@ -72,6 +72,8 @@ type Daemon struct {
 	counted  atomic.Pointer[countedLoops]
 	started  atomic.Int64 // wall clock, ms UTC
 
+	ending  context.Context // ends when Stop is called
+	end     context.CancelFunc
 	life    sync.Mutex // Start, Stop and Apply, one at a time
 	made    undo       // of New
 	running undo       // of Start
@@ -110,8 +112,10 @@ func New(o Options) (d *Daemon, err error) {
 		o.Notify = func(string) {}
 	}
 	d = &Daemon{o: o, log: o.Logger, clock: o.Clock, cfg: o.Config, caught: make(chan struct{}), ids: map[string]collector.LoopID{}, anew: map[string]int64{}}
+	d.ending, d.end = context.WithCancel(context.Background())
 	defer func() {
 		if err != nil {
+			d.end()
 			_ = d.made.run(context.Background(), d.log) // what failed first is what counts
 			d = nil
 		}
@@ -245,6 +249,7 @@ const stopMost = 60 * time.Second
 // Stop ends everything and closes the data folder, in at most a minute, or as
 // soon as ctx ends. It may be called again, and gives the same answer.
 func (d *Daemon) Stop(ctx context.Context) error {
+	d.end()
 	d.life.Lock()
 	defer d.life.Unlock()
 	if d.over {

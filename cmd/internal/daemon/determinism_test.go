@@ -35,7 +35,7 @@ func TestLiveAndReplayAgree(t *testing.T) {
 				}
 			}
 			// From memories in the middle: what came behind them.
-			from := epoch.Add(millSeconds / 2 * time.Second)
+			from := epoch.Add(millSeconds * 3 / 4 * time.Second)
 			csv, mem := r.exported(from)
 			if len(mem.Loops) != len(m.loops) || mem.Sites == nil {
 				t.Fatalf("memories of %d loops, sites %v", len(mem.Loops), mem.Sites != nil)

@@ -30,7 +30,7 @@ func (d *Daemon) makeFeeds(c *configs.Config, roster []*configs.Loop, old []*fee
 			at = len(out)
 			out = append(out, nil)
 		}
-		f := &feed{conf: s, index: uint16(at), bindings: bindings[s.Name]}
+		f := &feed{conf: s, index: uint16(at), bindings: bindings[s.Name], began: d.clock.ms()}
 		f.source, err = NewSource(d.o.Sources, s, SourceEnv{Site: c.Site.Name, Index: f.index, Bindings: f.bindings, Data: c.Data,
 			Births: births{d.state, "births." + s.Name}, Clock: d.clock.Now, Log: d.log})
 		if err != nil {

@@ -99,14 +99,15 @@ const (
 
 const watchdogEvery = 5 * time.Second
 
-// watchdog feeds the watchdog of the service manager for as long as every part
-// of the pipeline turns: it follows the work, not a timer of its own. A source
-// that is down is no reason to be killed.
+// watchdog feeds the watchdog of the service manager for as long as the shards
+// turn: it follows the work, not a timer of its own. A source that is down or a
+// disk that stalls is no reason to be killed: detection goes on.
 func (d *Daemon) watchdog(ctx context.Context) {
 	for {
 		turning := true
-		for _, p := range d.parts() {
-			turning = turning && (p.state == "well" || p.name == "flush")
+		now := d.clock.ms()
+		for _, s := range d.shards {
+			turning = turning && now-s.turned.Load() <= partAllowed.Milliseconds()
 		}
 		if turning {
 			d.o.Notify(notifyWatchdog)

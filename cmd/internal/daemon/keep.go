@@ -30,7 +30,6 @@ type keeper struct {
 	flushed atomic.Int64 // of the last good flush
 	since   atomic.Int64 // since which flushes fail; 0: they do not
 	problem atomic.Pointer[string]
-	full    atomic.Bool
 }
 
 const memoryEvery = time.Hour

@@ -34,6 +34,7 @@ type ledger struct {
 	limits []int64 // by shard: up to which evidence is complete
 	held   []detect.Finding
 	sights []alert.Sight
+	unkept bool // the memory of the site detectors could not be kept
 
 	turned  atomic.Int64 // wall clock of the last turn, ms UTC
 	failing atomic.Int64 // wall clock since which the desk takes nothing; 0: it does
@@ -145,9 +146,10 @@ func (l *ledger) take(p *post) {
 	if err == nil {
 		err = l.window.PutMemory(sitesName, l.gather.done, b)
 	}
-	if err != nil {
+	if err != nil && !l.unkept {
 		l.log.Error("what loops have in common is not kept over a restart", "err", err)
 	}
+	l.unkept = err != nil
 	for _, m := range p.memories {
 		if err := l.window.PutMemory(m.loop, m.through, m.b); err != nil {
 			l.log.Error("a memory is not kept", "loop", m.loop, "err", err)

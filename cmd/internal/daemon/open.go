@@ -8,6 +8,7 @@ import (
 	"os"
 	"path/filepath"
 	"strings"
+	"time"
 
 	"midwatch/alert"
 	"midwatch/alert/send"
@@ -48,13 +49,35 @@ func (d *Daemon) openStore() error {
 	}); err != nil {
 		return err
 	}
-	w, err := store.OpenWindow(filepath.Join(data, windowDir), store.Options{SizeBytes: d.cfg.Keep.Size, KnownFlush: known, Problem: d.storeProblem})
+	o := windowOptions(d.cfg)
+	o.KnownFlush, o.Problem = known, d.storeProblem
+	w, err := store.OpenWindow(filepath.Join(data, windowDir), o)
 	if err != nil {
 		return fmt.Errorf("trends in %s: %w", data, err)
 	}
 	d.window = w
 	d.made.add("window", func(context.Context) error { return w.Close() })
 	return nil
+}
+
+// chunkFrames is what one chunk of the store holds of a loop; see
+// [store.Options].
+const chunkFrames = 1 << 14
+
+// windowOptions keeps slices at six hours and chunks at up to ten minutes,
+// whatever the interval of flushes; a disk that stalls for two intervals costs
+// nothing.
+func windowOptions(c *configs.Config) store.Options {
+	flush := max(c.Keep.Flush, time.Millisecond)
+	fastest := 1.0 // s between frames
+	for _, l := range c.Loops {
+		if l.SampleS > 0 {
+			fastest = min(fastest, l.SampleS)
+		}
+	}
+	pending := max(160, int(3*flush.Seconds()/fastest))
+	return store.Options{SizeBytes: c.Keep.Size, PendingFrames: pending, SliceFlushes: max(2, int(6*time.Hour/flush)),
+		ChunkFlushes: max(1, min(int(10*time.Minute/flush), chunkFrames/pending))}
 }
 
 // checkFiles has the files of an unclean stop looked at by a child: a damaged
@@ -89,8 +112,37 @@ func (d *Daemon) checkFiles(state string) error {
 			return errors.Join(err, err2)
 		}
 		d.log.Error("a damaged file was set aside", "file", to, "err", err)
+		if path == state {
+			if err := d.restoreState(state); err != nil {
+				return err
+			}
+		}
 	}
 	return nil
+}
+
+// restoreState puts the backup of the state in its place, where there is a
+// sound one.
+func (d *Daemon) restoreState(state string) error {
+	backup := state + store.BackupSuffix
+	b, err := os.ReadFile(backup)
+	if errors.Is(err, os.ErrNotExist) {
+		d.log.Error("profiles, episodes and outbox begin anew: there is no backup yet")
+		return nil
+	}
+	if err != nil {
+		return fmt.Errorf("backup of the state: %w", err)
+	}
+	if err := store.CheckInChild(context.Background(), d.o.Check, backup); err != nil {
+		d.log.Error("profiles, episodes and outbox begin anew: the backup is no better", "err", err)
+		return nil
+	}
+	fresh := state + ".new"
+	if err := os.WriteFile(fresh, b, 0o640); err != nil {
+		return fmt.Errorf("backup of the state: %w", err)
+	}
+	d.log.Error("the backup of the state is used: what changed since is lost")
+	return os.Rename(fresh, state)
 }
 
 func (d *Daemon) storeProblem(p store.Problem) {

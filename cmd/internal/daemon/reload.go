@@ -20,6 +20,9 @@ import (
 func (d *Daemon) Apply(ctx context.Context, c *configs.Config) error {
 	d.life.Lock()
 	defer d.life.Unlock()
+	ctx, cancel := context.WithCancel(ctx)
+	defer cancel()
+	defer context.AfterFunc(d.ending, cancel)() // Stop does not wait for a reload
 	if d.over || d.started.Load() == 0 {
 		return errors.New("the daemon does not run; hint: start it")
 	}
@@ -36,6 +39,8 @@ func (d *Daemon) Apply(ctx context.Context, c *configs.Config) error {
 	defer d.o.Notify(notifyReady)
 
 	p := d.plan(c)
+	p.detect = detect.Options{NuisancePerLoopYear: c.Detect.NuisancePerLoopYear}
+	p.all = p.detect != d.detectOptions()
 	if _, err := collector.New(present(p.roster), collector.Options{}, func(collector.LoopID, *collector.Frame) {}); err != nil {
 		return err
 	}
@@ -93,6 +98,8 @@ type reloadPlan struct {
 	change                          []configs.Change
 	was                             []*configs.Loop // before; nil: new
 	unchanged, changed, added, gone int
+	detect                          detect.Options
+	all                             bool // they are new: every loop is judged anew
 }
 
 // plan keeps the id of every loop that stays, gives ids that are free to new
@@ -166,7 +173,7 @@ func (d *Daemon) swap(p *reloadPlan) (anew map[string]int64, err error) {
 	}
 	errs := []error{d.register(p.roster)}
 	for _, s := range d.shards {
-		errs = append(errs, s.reload(p, d.detectOptions()))
+		errs = append(errs, s.reload(p))
 	}
 	g := newGathering(p.roster)
 	b, err := d.ledger.gather.save()
@@ -211,7 +218,7 @@ func (d *Daemon) remind(p *reloadPlan, anew map[string]int64) error {
 }
 
 // reload changes the loops of a shard; mu is held.
-func (s *shard) reload(p *reloadPlan, o detect.Options) error {
+func (s *shard) reload(p *reloadPlan) error {
 	keep := func(id collector.LoopID) bool {
 		return int(id) < len(p.was) && p.was[id] != nil && p.roster[id] != nil && p.change[id] < configs.ChangeMemory
 	}
@@ -226,7 +233,7 @@ func (s *shard) reload(p *reloadPlan, o detect.Options) error {
 		for len(s.hidden) <= k {
 			s.hidden, s.marked = append(s.hidden, ""), append(s.marked, false)
 		}
-		if l != nil && was != nil && p.change[i] == configs.ChangeNone && l.Name == was.Name {
+		if l == nil && was == nil || !p.all && l != nil && was != nil && p.change[i] == configs.ChangeNone && l.Name == was.Name {
 			continue
 		}
 		old := s.lane.watch(id)
@@ -245,7 +252,7 @@ func (s *shard) reload(p *reloadPlan, o detect.Options) error {
 		if old != nil {
 			b = old.Save(nil)
 		}
-		w := s.lane.put(l, id, o)
+		w := s.lane.put(l, id, p.detect)
 		if w == nil || was == nil {
 			s.hidden[k], s.marked[k] = "", false
 			continue

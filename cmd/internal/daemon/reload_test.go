@@ -172,6 +172,27 @@ func TestReloadThatFails(t *testing.T) {
 	}
 }
 
+// Another budget of false findings judges every loop by it; nothing is forgotten.
+func TestReloadOfTheBudget(t *testing.T) {
+	m := newMill()
+	r := newRig(t, m.loops)
+	r.start()
+	defer r.stop()
+	m.run(r, 0, 1200)
+	before, _ := r.d.View("FIC-103")
+	c := r.changed(keepAll)
+	c.Detect.NuisancePerLoopYear = 5
+	if err := r.d.Apply(t.Context(), c); err != nil {
+		t.Fatal(err)
+	}
+	if after, _ := r.d.View("FIC-103"); after.NoisePV != before.NoisePV || after.Last.Time != before.Last.Time {
+		t.Error("the loop forgot what it had learned")
+	}
+	if r.d.detectOptions().NuisancePerLoopYear != 5 {
+		t.Error("the budget is not in force")
+	}
+}
+
 func keepAll(ls []*configs.Loop) []*configs.Loop { return ls }
 
 // What changed while no watch ran begins anew, and what was open of it is taken

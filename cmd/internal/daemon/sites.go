@@ -80,16 +80,30 @@ type waitingEvidence struct {
 	Evidence detect.Evidence
 }
 
-// save keeps what the site detectors hold and the evidence that waits.
+// mostSitesBytes is what the window takes as one memory, less a margin.
+const mostSitesBytes = 60 << 10
+
+// save keeps what the site detectors hold and the evidence that waits. Evidence
+// of loops that do not swing says nothing to detectors that begin anew. Should
+// hundreds of loops swing at once, the evidence of one slot is left out.
 func (g *gathering) save() ([]byte, error) {
 	m := gatheringMemory{Done: g.done, Sites: g.sites.Save(nil)}
 	for _, rs := range g.waiting {
 		for _, r := range rs {
-			if l := g.loops[r.id]; l != nil {
+			if l := g.loops[r.id]; l != nil && r.Live {
 				m.Waiting = append(m.Waiting, waitingEvidence{l.Name, r.Evidence})
 			}
 		}
 	}
+	b, err := m.encode()
+	if err == nil && len(b) > mostSitesBytes {
+		m.Waiting = nil
+		b, err = m.encode()
+	}
+	return b, err
+}
+
+func (m *gatheringMemory) encode() ([]byte, error) {
 	var b bytes.Buffer
 	if err := gob.NewEncoder(&b).Encode(m); err != nil {
 		return nil, fmt.Errorf("memory of the site detectors: %w", err)

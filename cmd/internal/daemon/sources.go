@@ -120,6 +120,7 @@ type feed struct {
 	groups   *joined
 	cancel   context.CancelFunc
 	done     chan struct{}
+	began    int64 // wall clock at which it was made, ms UTC
 
 	mu  sync.Mutex
 	err error // why Run ended by itself
@@ -158,6 +159,9 @@ func (f *feed) state() collector.SourceState {
 	defer f.mu.Unlock()
 	if f.err != nil {
 		st.Link, st.Problem = "down", f.err.Error()
+	}
+	if st.Since == 0 {
+		st.Since = f.began // it has not tried yet
 	}
 	if st.Name == "" {
 		st.Name = f.conf.Name

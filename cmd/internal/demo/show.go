@@ -36,6 +36,8 @@ type show struct {
 
 	mu   sync.Mutex
 	said []detect.Finding // by the sender, in order
+
+	shown map[string]bool // topics that stand on the screen
 }
 
 // advisories takes the lines of the log sender.
@@ -90,7 +92,7 @@ func (s *show) tell(e *event) {
 		return
 	}
 	if e.Data.At >= s.begin.UnixMilli() || e.Data.Subject.Loop == "" {
-		s.screen.print(advisory(&e.Data.Finding, clockTime(e.Data.At)))
+		s.announce(e.Data.Finding, clockTime(e.Data.At))
 	}
 }
 
@@ -98,11 +100,33 @@ func (s *show) tell(e *event) {
 // only this is news.
 func (s *show) recall() {
 	for _, e := range s.watch.Status().Episodes {
-		f := e.Finding
-		if f.At < s.begin.UnixMilli() && f.Subject.Loop != "" {
+		if f := e.Finding; !s.known(&f) {
 			f.Event = detect.Raised
-			s.screen.print(advisory(&f, "before"))
+			s.announce(f, "before")
 		}
+	}
+}
+
+func topic(f *detect.Finding) string { return subject(f) + " " + string(f.Kind) }
+
+func (s *show) known(f *detect.Finding) bool {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	return s.shown[topic(f)]
+}
+
+// announce prints a finding: whole the first time, in short when it goes on, and
+// the end only of what was shown.
+func (s *show) announce(f detect.Finding, at string) {
+	s.mu.Lock()
+	before := s.shown[topic(&f)]
+	s.shown[topic(&f)] = f.Event != detect.Cleared
+	s.mu.Unlock()
+	if f.Event == detect.Updated && !before {
+		f.Event = detect.Raised
+	}
+	if before || f.Event != detect.Cleared {
+		s.screen.print(advisory(&f, at))
 	}
 }
 
@@ -110,9 +134,12 @@ func (s *show) recall() {
 // about it the first time.
 func advisory(f *detect.Finding, at string) string {
 	what := words(string(f.Kind))
-	if f.Event == detect.Cleared {
+	switch {
+	case f.Event == detect.Cleared:
 		what += " is over"
-	} else if f.Cause != "" && f.Cause != detect.Undetermined && string(f.Cause) != string(f.Kind) {
+	case string(f.Cause) == string(f.Kind):
+		what += fmt.Sprintf(" (%.0f %%)", 100*f.Confidence)
+	case f.Cause != "" && f.Cause != detect.Undetermined:
 		what += fmt.Sprintf(", likely %s (%.0f %%)", words(string(f.Cause)), 100*f.Confidence)
 	}
 	if f.Event == detect.Updated {
@@ -211,16 +238,22 @@ type totals struct {
 	frames  uint64
 	missing uint64        // frames of the works that are not in what is kept
 	lost    uint64        // what any part of the watch says it lost
+	where   []string      // which
 	unseen  []string      // loops without any live frame
 	lived   time.Duration // of plant time
 	walled  time.Duration
 }
 
-// count takes the counts at the end, before the watch stops.
+// count takes the counts at the end, before the watch stops. Frames that are not
+// newer than the recorded day are none that were lost: a server tells the newest
+// value of each tag when it is asked first.
 func (s *show) count() error {
 	c := s.watch.Status().Counts
 	s.totals = totals{counted: true, frames: c["frames"], lived: s.clock.Now().Sub(s.begin), walled: time.Since(s.wall)}
-	for _, k := range []string{"samples_dropped", "samples_late", "losses_reported", "frames_stale", "findings_lost"} {
+	for _, k := range []string{"samples_dropped", "samples_late", "losses_reported", "findings_lost"} {
+		if c[k] > 0 {
+			s.totals.where = append(s.totals.where, fmt.Sprintf("%s %d", k, c[k]))
+		}
 		s.totals.lost += c[k]
 	}
 	s.totals.lost += s.watch.Status().Trends.Dropped + s.plant.Dropped()
@@ -274,7 +307,7 @@ func (s *show) conclude(whole bool) error {
 	s.screen.print(b.String())
 	var errs []error
 	if lost > 0 {
-		errs = append(errs, fmt.Errorf("%d frames were lost (%d by count, %d by holes in what is kept); hint: this machine may be too busy for a works at %d times its speed", lost, t.lost, t.missing, factor))
+		errs = append(errs, fmt.Errorf("%d frames were lost (%d by count: %s; %d by holes in what is kept); hint: this machine may be too busy for a works at %d times its speed", lost, t.lost, strings.Join(t.where, ", "), t.missing, factor))
 	}
 	if t.walled > settleIn && len(t.unseen) > 0 {
 		errs = append(errs, fmt.Errorf("nothing came of %s; hint: the notes above may say why", strings.Join(t.unseen, ", ")))
@@ -303,14 +336,14 @@ func (s *show) verdicts() string {
 	s.mu.Lock()
 	defer s.mu.Unlock()
 	var b strings.Builder
-	fmt.Fprintf(&b, "%-8s  %-15s %-9s  %s\n", "loop", "fault", "since", "what the watch says, and after how long")
+	fmt.Fprintf(&b, "%-8s %-15s %-9s  %s\n", "loop", "fault", "since", "what the watch says, and after how long")
 	for _, t := range s.truth {
 		at := time.UnixMilli(t.From).UTC()
 		day := at.Format("15:04")
 		if at.Before(s.begin.Add(-time.Hour)) {
 			day = "yesterday"
 		}
-		fmt.Fprintf(&b, "%-8s  %-15s %-9s  %s\n", t.Loop, words(string(t.Fault)), day, s.verdict(&t))
+		fmt.Fprintf(&b, "%-8s %-15s %-9s  %s\n", t.Loop, words(string(t.Fault)), day, s.verdict(&t))
 	}
 	return b.String()
 }

@@ -2,9 +2,14 @@ package house
 
 import (
 	"bytes"
+	"os"
+	"path/filepath"
 	"regexp"
 	"strings"
 	"testing"
+
+	"midwatch/alert"
+	"midwatch/configs"
 )
 
 // unwanted must stand in no file. Written in pieces, so that they do not stand
@@ -115,6 +120,44 @@ func TestLinksInDocuments(t *testing.T) {
 			if !there[target] {
 				t.Errorf("%s points at %s, which is not there", d, m[1])
 			}
+		}
+	}
+}
+
+// What the README tells people to write is read by the program as it stands.
+func TestReadmeExamples(t *testing.T) {
+	readme := read(t, "README.md")
+	dir := t.TempDir()
+	for file, fence := range map[string]string{"loops.csv": "```csv\n", "midwatch.yaml": "```yaml\n"} {
+		_, block, ok := strings.Cut(readme, fence)
+		if !ok {
+			t.Fatalf("README.md has no %q", fence)
+		}
+		block, _, _ = strings.Cut(block, "```\n")
+		if err := os.WriteFile(filepath.Join(dir, file), []byte(block), 0o600); err != nil {
+			t.Fatal(err)
+		}
+	}
+	for _, secret := range []string{"opcua.pass", "mqtt.pass", "hook.key"} {
+		if err := os.WriteFile(filepath.Join(dir, secret), []byte("0123456789abcdef0123456789abcdef\n"), 0o600); err != nil {
+			t.Fatal(err)
+		}
+	}
+	c, err := configs.Load(filepath.Join(dir, "midwatch.yaml"), func(string) string { return "" })
+	if err != nil {
+		t.Fatal(err)
+	}
+	if len(c.Loops) != 2 || len(c.Warnings) > 0 {
+		t.Errorf("%d loops, warnings %q", len(c.Loops), c.Warnings)
+	}
+	for _, k := range configs.Kinds {
+		if !strings.Contains(readme, "`"+k+"`") {
+			t.Errorf("README.md does not explain %s", k)
+		}
+	}
+	for _, c := range alert.Cautions {
+		if !strings.Contains(strings.Join(strings.Fields(readme), " "), c) {
+			t.Errorf("README.md does not say: %s", c)
 		}
 	}
 }

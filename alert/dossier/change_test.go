@@ -1,0 +1,78 @@
+package dossier_test
+
+import (
+	"math"
+	"strings"
+	"testing"
+
+	"midwatch/alert/dossier"
+)
+
+// retuned is a record with a change of the tuning in the middle.
+func retuned(days float64, kc, ti float64, seed uint64) works {
+	w := quietWeek()
+	w.days, w.steps, w.loads, w.tags, w.seed = days, 0, false, true, seed
+	w.wander, w.dt, w.loop.SampleS, w.loop.ScanS = 2, 2, 2, 2
+	w.kc, w.ti = 0.35, 900
+	half := days * 86400 / 2
+	w.retune = func(t float64) (float64, float64, bool) { return kc, ti, t > half }
+	return w
+}
+
+func TestBeforeAndAfter(t *testing.T) {
+	d := mustBuild(t, retuned(6, 1.3, 150, 1))
+	if len(d.Changes) != 1 {
+		t.Fatalf("%d changes", len(d.Changes))
+	}
+	c := d.Changes[0]
+	if !c.Holds || c.Ratio.High >= 1 || !strings.Contains(c.Verdict, "closer") {
+		t.Errorf("a better tuning: %+v", c)
+	}
+	if c.Before != "gain 0.35, reset 900 s" || c.After != "gain 1.3, reset 150 s" {
+		t.Errorf("tunings %q, %q", c.Before, c.After)
+	}
+	w := retuned(6, 1.3, 150, 2)
+	w.kc, w.ti = 1.3, 150
+	half := w.days * 86400 / 2
+	w.retune = func(t float64) (float64, float64, bool) { return 0.35, 900, t > half }
+	if c := mustBuild(t, w).Changes[0]; !c.Holds || !strings.Contains(c.Verdict, "strays further") {
+		t.Errorf("a worse tuning: %+v", c)
+	}
+	if c := mustBuild(t, retuned(0.08, 1.3, 150, 3)).Changes[0]; c.Holds || !strings.Contains(c.Verdict, "not enough data yet") {
+		t.Errorf("two hours: %+v", c)
+	}
+	busy := retuned(6, 1.3, 150, 4)
+	busy.outside = func(t float64) float64 { return 0 }
+	fs := busy.frames()
+	for i := len(fs) / 2; i < len(fs); i++ { // set points that move all day, after it
+		v := float32(0.05 * math.Floor(math.Mod(float64(i)/900, 2)))
+		fs[i].SP += v
+		fs[i].PV += v
+	}
+	x := dossier.Compare(busy.loop, fs, fs[len(fs)/2].Time)
+	if x.Holds || len(x.Like) == 0 {
+		t.Errorf("sides that are not alike: %+v", x)
+	}
+}
+
+// Without any change the verdict seldom says that there is one: 90 % ranges, so
+// about one in ten, and fewer for the margin of 5 %.
+func TestNoChangeIsSeldomOne(t *testing.T) {
+	runs, holds, ratios := 40, 0, 0.0
+	for seed := range uint64(runs) {
+		w := retuned(3, 0.35, 900, 100+seed)
+		w.tags = false
+		fs := w.frames()
+		c := dossier.Compare(w.loop, fs, fs[len(fs)/2].Time)
+		if c.Holds {
+			holds++
+		}
+		if c.Ratio.Known() {
+			ratios += math.Log(c.Ratio.Value) / float64(runs)
+		}
+	}
+	t.Logf("%d of %d; mean ratio %.3f", holds, runs, math.Exp(ratios))
+	if holds > runs/5 {
+		t.Errorf("%d of %d records without a change are called changed", holds, runs)
+	}
+}

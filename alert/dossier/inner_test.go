@@ -1,0 +1,134 @@
+package dossier
+
+import (
+	"encoding/json"
+	"math"
+	"math/rand/v2"
+	"testing"
+
+	"midwatch/collector"
+	"midwatch/configs"
+)
+
+func frameSeries(n int, dt float64, pv, op func(k int) float64) *series {
+	l := configs.NewLoop("FIC-118")
+	l.Action, l.IdealReset, l.GainPct = configs.Reverse, 30, 1
+	l.Position = "FIC-118.ZT"
+	fs := make([]collector.Frame, n)
+	for k := range fs {
+		fs[k] = collector.Frame{Time: int64(float64(k)*dt*1000) + 1, PV: float32(pv(k)), SP: 50, OP: float32(op(k)),
+			Mode: collector.Auto, Position: collector.NaN32, Feedforward: collector.NaN32}
+	}
+	return newSeries(l, fs)
+}
+
+// Published indices on pure shapes: a sine is regular and its autocovariance does
+// not decay, white noise is neither.
+func TestIndicesOnPureShapes(t *testing.T) {
+	r := rand.New(rand.NewPCG(1, 1))
+	sine := frameSeries(20000, 1, func(k int) float64 { return 50 + 2*math.Sin(2*math.Pi*float64(k)/60) + 0.2*r.NormFloat64() }, func(k int) float64 { return 40 })
+	acf, step := sine.correlation(0, 3600, 60)
+	if reg, p, _ := regularity(acf, step); reg < 1 || math.Abs(p/60-1) > 0.03 {
+		t.Errorf("sine: regularity %.2f, period %.1f s", reg, p)
+	}
+	if d := decayRatio(acf); d < 0.8 || d > 1.05 {
+		t.Errorf("sine: decay ratio %.2f", d)
+	}
+	irregular := 0
+	for range 20 {
+		noise := frameSeries(3600, 1, func(k int) float64 { return 50 + r.NormFloat64() }, func(k int) float64 { return 40 })
+		acf, step = noise.correlation(0, 3600, 60)
+		reg, _, n := regularity(acf, step)
+		if n == 0 || reg < 1 {
+			irregular++
+		}
+	}
+	if irregular < 18 {
+		t.Errorf("noise called regular in %d of 20", 20-irregular)
+	}
+	a, _ := phasor(sine.pv, 0, 3600, 60)
+	if math.Abs(a-2) > 0.03 {
+		t.Errorf("amplitude %.3f, want 2", a)
+	}
+}
+
+func TestNoiseAndResolution(t *testing.T) {
+	r := rand.New(rand.NewPCG(2, 1))
+	s := frameSeries(5000, 1, func(k int) float64 { return 50 + 0.3*r.NormFloat64() }, func(k int) float64 { return 40 })
+	if math.Abs(s.sigma/0.3-1) > 0.08 {
+		t.Errorf("noise %.3f, want 0.3", s.sigma)
+	}
+	if s.quantPV != 0 {
+		t.Errorf("resolution %.3f where there is none", s.quantPV)
+	}
+	q := frameSeries(5000, 1, func(k int) float64 { return math.Round((50+0.3*r.NormFloat64())/0.25) * 0.25 }, func(k int) float64 { return 40 })
+	if math.Abs(q.quantPV-0.25) > 1e-4 {
+		t.Errorf("resolution %.4f, want 0.25", q.quantPV)
+	}
+	f, x := 0.0, 0.0
+	filtered := frameSeries(100000, 1, func(k int) float64 { x = r.NormFloat64(); f += 0.33 * (x - f); return 50 + f }, func(k int) float64 { return 40 })
+	// A first-order filter with 1 - exp(-1/tau) = 0.33 has tau 2.5 s.
+	if n := filtered.filtering(filtered.loop).Number; n == nil || math.Abs(n.Value/2.5-1) > 0.2 {
+		t.Errorf("filter: %+v", filtered.filtering(filtered.loop))
+	}
+	// A swing that is fast against the samples is not noise.
+	swing := frameSeries(6000, 6, func(k int) float64 {
+		a := 0.0
+		if k > 3000 {
+			a = 5
+		}
+		return 50 + a*math.Sin(2*math.Pi*float64(k)/20) + 0.1*r.NormFloat64()
+	}, func(k int) float64 { return 40 })
+	if math.Abs(swing.sigma/0.1-1) > 0.2 {
+		t.Errorf("noise beside a swing %.3f, want 0.1", swing.sigma)
+	}
+}
+
+// A position that follows OP with play shows a dead band of the play.
+func TestPositionDeadBand(t *testing.T) {
+	const play = 1.6
+	pos := 50.0
+	op := func(k int) float64 { return 50 + 15*math.Sin(2*math.Pi*float64(k)/400) }
+	s := frameSeries(8000, 1, func(k int) float64 { return 50 }, op)
+	s.pos = make([]float64, s.n())
+	for k := range s.pos {
+		u := op(k)
+		if u-pos > play/2 {
+			pos = u - play/2
+		} else if pos-u > play/2 {
+			pos = u + play/2
+		}
+		s.pos[k] = pos
+	}
+	for _, f := range s.position() {
+		if f.Key == "position_dead_band_pct" {
+			if f.Number == nil || math.Abs(f.Number.Value-play) > 0.1 {
+				t.Errorf("dead band %+v, want %g", f, play)
+			}
+			return
+		}
+	}
+	t.Error("no dead band")
+}
+
+func TestNumbersSayWhatTheyAre(t *testing.T) {
+	cases := []struct {
+		n          Number
+		text, json string
+	}{
+		{number(12.3456, "s"), "12.3 s", `{"value":12.35,"unit":"s"}`},
+		{ranged(1.2345, 1, 1.5, "%/%"), "1.23 %/% (1 to 1.5)", `{"value":1.234,"unit":"%/%","low":1,"high":1.5,"range":"90 %"}`},
+		{spreadOf([]float64{1, 2, 3, 4, 5}, "s", ""), "3 s (1.4 to 4.6, n 5)", `{"value":3,"unit":"s","low":1.4,"high":4.6,"range":"10 to 90 % of them","n":5}`},
+		{none("no cycle"), "no cycle", `{"why":"no cycle"}`},
+		{number(math.Inf(1), ""), "not known", `{"why":"not known"}`},
+	}
+	for _, c := range cases {
+		if got := c.n.String(); got != c.text {
+			t.Errorf("text %q, want %q", got, c.text)
+		}
+		b, err := json.Marshal(c.n)
+		if err != nil || string(b) != c.json {
+			t.Errorf("JSON %s, want %s (%v)", b, c.json, err)
+		}
+	}
+}

@@ -1,0 +1,683 @@
+package page
+
+import (
+	"bufio"
+	"compress/gzip"
+	"context"
+	"encoding/csv"
+	"encoding/json"
+	"encoding/xml"
+	"io"
+	"iter"
+	"math"
+	"net/http"
+	"net/url"
+	"regexp"
+	"strconv"
+	"strings"
+	"testing"
+	"time"
+
+	"go.uber.org/goleak"
+
+	"midwatch/alert"
+	"midwatch/collector"
+	"midwatch/configs"
+	"midwatch/detect"
+)
+
+func newPage(t *testing.T, h *fakeHouse) *Page {
+	t.Helper()
+	p, err := New(Options{House: h, Page: configs.Page{Listen: "127.0.0.1:0"}, Clock: h.clock})
+	if err != nil {
+		t.Fatal(err)
+	}
+	return p
+}
+
+// got asks for a view as a person's browser with scripts off would.
+func got(t *testing.T, p *Page, path string) (int, string) {
+	t.Helper()
+	w := call(t, p.Local(), "GET", path, "", "Accept", "text/html")
+	return w.Code, w.Body.String()
+}
+
+func TestReadableWithoutScripts(t *testing.T) {
+	h := newFake()
+	h.frozen = true
+	p := newPage(t, h)
+	for path, wants := range map[string][]string{
+		"/": {"judged <strong data-k=\"judged\">14</strong>", "What needs a look", "Swings ±0.08 mg/l", "growing since 01:12", "OP limit about 04:10", "swinging together since 21:32",
+			"tuning changed at 23:09", "was off its set point 17:08 – 20:14", "in manual 18:5", "no data 00:", "cannot judge: sampled every 5 min", "held since 02:08: manual", "data 2 s old", "3 of 3 sources alive",
+			`href="loops/AIC-204?from=`, "2026-01-06 01:12:12 UTC"},
+		"/loops/AIC-204": {"chlorine residual", "Swings ±0.08 mg/l", "reset too short, likely", "gain too high", "1.16 times a cycle", "66°", "24.6\u00a0s (23.4 to 25.9)", "told to on-call by mail", "lag of the controller 66 degrees",
+			"AIC-204/trend.svg?hours=4", "Acknowledge", "Shelve", "0.004\u00a0mg/l", "api/loops/AIC-204/dossier"},
+		"/loops/TIC-224":                  {"not in normal mode: in manual", "it is not judged now"},
+		"/loops/AIC-201":                  {"episodes/cascade:AIC-201"},
+		"/loops/FIC-131?hours=12":         {"mode manual", "mode auto"},
+		"/episodes/20260106-0004-kfen":    {"FIC-118", "PIC-107", "FIC-119", "later", "in order of phase"},
+		"/episodes/cascade:AIC-201":       {"AIC-201 → FIC-202", "outer over inner"},
+		"/watch":                          {"gateway", "looks like a wrong time zone", "the relay refuses: 421 try later", "password_file: opcua.pass", "8.12\u00a0GB", "does not know this node", "0.0.0-test"},
+		"/sign-in":                        {"Your token"},
+		"/loops/AIC-204?from=nonsense":    {"Is no time", "Answer 400"},
+		"/loops/AIC-204?hours=1e9":        {"Answer 400"},
+		"/loops/AIC-204?from=1000&to=999": {"The span is empty"},
+		"/loops/XX-1":                     {"There is no loop of this name"},
+		"/episodes/none":                  {"not known"},
+		"/nowhere":                        {"There is no such page"},
+		"/?q=no+such+loop":                {"No loop fits"},
+		"/?hours=24&kind=valve-sticking":  {"The watch, last 24 hours", "1 of 17 loops"},
+	} {
+		code, body := got(t, p, path)
+		if code >= 500 {
+			t.Errorf("%s: answer %d", path, code)
+		}
+		for _, w := range wants {
+			if !strings.Contains(body, w) && !strings.Contains(strings.ToLower(body), strings.ToLower(w)) {
+				t.Errorf("%s does not say %q", path, w)
+			}
+		}
+	}
+}
+
+// What the policy forbids must not be written, or the view breaks silently.
+var forbidden = regexp.MustCompile(`(?i)<script>|<style|\sstyle="|\son[a-z]+="|javascript:|(src|href)="(https?:)?//`)
+
+func TestNothingThePolicyForbids(t *testing.T) {
+	h := newFake()
+	h.frozen = true
+	p := newPage(t, h)
+	for _, path := range []string{"/", "/loops/AIC-204", "/episodes/20260106-0004-kfen", "/watch", "/sign-in", "/nowhere", "/parts/rows", "/parts/need"} {
+		if _, body := got(t, p, path); forbidden.MatchString(body) {
+			t.Errorf("%s: %q", path, forbidden.FindString(body))
+		}
+	}
+}
+
+func TestCalmAndEmpty(t *testing.T) {
+	h := newFake()
+	h.frozen = true
+	h.eps = nil
+	if _, body := got(t, newPage(t, h), "/"); !strings.Contains(body, "Nothing needs a look.") || !strings.Contains(body, "the 14 loops that are judged") || !strings.Contains(body, "nothing can be said of the 1") {
+		t.Error("the calm view does not say of which loops it speaks")
+	}
+	h = newFake()
+	h.frozen = true
+	h.eps, h.loops = nil, nil
+	if _, body := got(t, newPage(t, h), "/"); !strings.Contains(body, "No loop is judged yet") || !strings.Contains(body, "The loop list is empty") || strings.Contains(body, "Nothing needs a look.") {
+		t.Error("an empty list reads as if all were well")
+	}
+	h = newFake()
+	h.down = true
+	if _, body := got(t, newPage(t, h), "/"); !strings.Contains(body, `class="stale">data 14 min old · 2 of 3 sources alive`) {
+		t.Error("old data are not marked")
+	}
+}
+
+func TestHostileText(t *testing.T) {
+	h := newFake()
+	h.frozen = true
+	h.hostile()
+	p := newPage(t, h)
+	paths := []string{"/", "/watch", "/parts/rows", "/parts/need"}
+	_, list := got(t, p, "/")
+	links := regexp.MustCompile(`class="n" href="(loops/[^"]+)"`).FindAllStringSubmatch(list, -1)
+	if len(links) != len(h.loops) {
+		t.Fatalf("%d links to %d loops", len(links), len(h.loops))
+	}
+	for _, m := range links {
+		paths = append(paths, "/"+strings.ReplaceAll(m[1], "&#39;", "'"))
+	}
+	for _, path := range paths {
+		path = strings.ReplaceAll(path, "&amp;", "&")
+		code, body := got(t, p, path)
+		if code != 200 {
+			t.Errorf("%s: answer %d", path, code)
+		}
+		for _, bad := range []string{"<script>w", "<img src=x", "<svg onload", "<b>area", "<u>unit"} {
+			if strings.Contains(body, bad) {
+				t.Errorf("%s holds %q", path, bad)
+			}
+		}
+		if strings.HasPrefix(path, "/loops/") {
+			if w := call(t, p.gate.next, "GET", path+"/trend.svg", ""); w.Code != 200 || strings.Contains(w.Body.String(), "<script>w") {
+				t.Errorf("%s/trend.svg: %d", path, w.Code)
+			}
+		}
+	}
+	if w := call(t, p.Local(), "GET", "/strips.svg?hours=24", ""); w.Code != 200 || xmlProblem(w.Body.String()) != nil || !strings.Contains(w.Body.String(), "growing since") {
+		t.Errorf("strips.svg: %d, %v", w.Code, xmlProblem(w.Body.String()))
+	}
+	if w := call(t, p.Local(), "GET", "/loops/AIC-204/trend.svg", ""); xmlProblem(w.Body.String()) != nil {
+		t.Error(xmlProblem(w.Body.String()))
+	}
+	rows, err := csv.NewReader(strings.NewReader(call(t, p.gate.next, "GET", "/loops.csv", "").Body.String())).ReadAll()
+	if err != nil || len(rows) < len(h.loops) {
+		t.Fatalf("%d rows, %v", len(rows), err)
+	}
+	for _, r := range rows {
+		for _, cell := range r {
+			if strings.HasPrefix(cell, "=") {
+				t.Errorf("a spreadsheet takes %q for a formula", cell)
+			}
+		}
+	}
+}
+
+// xmlProblem says why a picture is no well-formed XML.
+func xmlProblem(s string) error {
+	d := xml.NewDecoder(strings.NewReader(s))
+	for {
+		if _, err := d.Token(); err == io.EOF {
+			return nil
+		} else if err != nil {
+			return err
+		}
+	}
+}
+
+// TestFirstViewIsLight holds the first view to 100 kB, packed, with the sheet
+// and the script.
+func TestFirstViewIsLight(t *testing.T) {
+	h := newFake()
+	h.frozen = true
+	h.many(5000)
+	p := newPage(t, h)
+	for _, v := range [][]string{{"/", "page.css", "page.js", "icon.svg"}, {"/loops/AIC-204", "page.css", "loop.js", "icon.svg"}} {
+		w := call(t, p.gate.next, "GET", v[0], "", "Accept", "text/html", "Accept-Encoding", "gzip")
+		sum := w.Body.Len()
+		for _, a := range v[1:] {
+			sum += len(assets[a].packed)
+		}
+		t.Logf("%s: %d bytes, %d with its assets", v[0], w.Body.Len(), sum)
+		if w.Header().Get("Content-Encoding") != "gzip" || sum > 100_000 {
+			t.Errorf("%s: %d bytes, want at most 100000", v[0], sum)
+		}
+		z, err := gzip.NewReader(w.Body)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if b, err := io.ReadAll(z); err != nil || !strings.Contains(string(b), "</html>") {
+			t.Errorf("%s does not unpack: %v", v[0], err)
+		}
+	}
+}
+
+// counting counts what is read of the window.
+type counting struct {
+	*fakeHouse
+	frames int
+}
+
+func (c *counting) Frames(ctx context.Context, loop string, from, to int64) iter.Seq2[collector.Frame, error] {
+	return func(yield func(collector.Frame, error) bool) {
+		for f, err := range c.fakeHouse.Frames(ctx, loop, from, to) {
+			c.frames++
+			if !yield(f, err) {
+				return
+			}
+		}
+	}
+}
+
+func TestStripsReadOnce(t *testing.T) {
+	h := newFake()
+	h.frozen = true
+	c := &counting{fakeHouse: h}
+	var s strips
+	l := h.find("AIC-204").Loop
+	b, err := s.upTo(t.Context(), c, l, h.base, 12*time.Hour)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if len(b) != 240 || c.frames < 24*1800-100 || c.frames > 24*1800+100 {
+		t.Fatalf("%d buckets from %d frames, want 240 from a day", len(b), c.frames)
+	}
+	// Every bucket holds the least and the greatest of its frames.
+	end := h.base.UnixMilli() / bucketMs
+	low, high := math.Inf(1), math.Inf(-1)
+	for f := range h.Frames(t.Context(), "AIC-204", (end-3)*bucketMs, (end-2)*bucketMs) {
+		low, high = min(low, float64(f.PV)/2*100), max(high, float64(f.PV)/2*100)
+	}
+	x := b[len(b)-4]
+	if math.Abs(widenPV(x.low)-low) > 0.005 || math.Abs(widenPV(x.high)-high) > 0.005 || x.saw != sawData {
+		t.Errorf("bucket %v to %v (%b), want %v to %v", widenPV(x.low), widenPV(x.high), x.saw, low, high)
+	}
+	c.frames = 0
+	if _, err := s.upTo(t.Context(), c, l, h.base, 12*time.Hour); err != nil || c.frames != 0 {
+		t.Errorf("a second look read %d frames, %v", c.frames, err)
+	}
+	h.base = h.base.Add(9 * time.Minute)
+	b2, err := s.upTo(t.Context(), c, l, h.base, 12*time.Hour)
+	if err != nil || c.frames != 270 {
+		t.Errorf("nine minutes on, %d frames were read, want 270; %v", c.frames, err)
+	}
+	if n := len(b) - 4; b2[n-3] != b[n] {
+		t.Errorf("what was seen moved by other than three buckets: %v and %v", b2[n-3], b[n])
+	}
+	h.base = h.base.Add(30 * time.Hour)
+	if b, err = s.upTo(t.Context(), c, l, h.base, 24*time.Hour); err != nil || len(b) != ringBuckets || b[0].saw&sawData == 0 {
+		t.Errorf("after a day nobody looked: %d buckets, first %v, %v", len(b), b[0], err)
+	}
+	other := *l
+	other.PVHigh = 4
+	c.frames = 0
+	if _, err := s.upTo(t.Context(), c, &other, h.base, 12*time.Hour); err != nil || c.frames < 40000 {
+		t.Errorf("another range is read anew: %d frames, %v", c.frames, err)
+	}
+}
+
+func TestTrace(t *testing.T) {
+	d := func(pct float64) bucket { return bucket{squeezePV(pct), squeezePV(pct), sawData} }
+	for _, c := range []struct {
+		name string
+		b    []bucket
+		want string
+	}{
+		{"nothing", []bucket{{}, {}}, ""},
+		{"flat", []bucket{d(50), d(50)}, "M0 30l 1 0 0 0-1 0z"},
+		{"a gap", []bucket{d(50), {}, d(50)}, "M0 30l 0 0zM2 30l 0 0z"},
+		{"up", []bucket{d(48), d(52)}, "M0 58l 1-56 0 0-1 56z"},
+	} {
+		if got := trace(c.b); got != c.want {
+			t.Errorf("%s: %q, want %q", c.name, got, c.want)
+		}
+	}
+}
+
+func TestTrendKeepsExtremes(t *testing.T) {
+	h := newFake()
+	h.frozen = true
+	const spike = 37 * 60
+	h.add("PIC-999", "", "", "bar", 0, 100, 1000, detect.Judged, "", func(s float64, n func() float64) (float64, float64, float64, collector.Mode, collector.Flags) {
+		switch {
+		case s == -spike:
+			return 91, 50, 3, collector.Auto, 0
+		case s == -spike-1:
+			return 7, 50, 97, collector.Auto, 0
+		case s > -900 && s < -600:
+			return math.NaN(), 50, 50, collector.Auto, collector.Gap
+		case s > -400 && s < -300:
+			return 50, 50, 50, collector.Manual, 0
+		}
+		return 50 + n(), 50, 50, collector.Auto, 0
+	})
+	to := h.base.UnixMilli()
+	tr, err := readTrend(t.Context(), h, h.find("PIC-999").Loop, to-3600*1000, to, 60)
+	if err != nil {
+		t.Fatal(err)
+	}
+	low, high, nulls := float32(50), float32(50), 0
+	for i, v := range tr.PV {
+		if v != v {
+			nulls++
+			continue
+		}
+		low, high = min(low, v), max(high, v)
+		if i > 0 && tr.Times[i] <= tr.Times[i-1] {
+			t.Fatalf("times do not grow at %d", i)
+		}
+	}
+	if low != 7 || high != 91 {
+		t.Errorf("PV from %v to %v, want 7 to 91", low, high)
+	}
+	if nulls == 0 || tr.Frames != 3600 || len(tr.Times) > 500 || tr.BucketMs != 60000 {
+		t.Errorf("%d nulls, %d frames, %d rows, buckets of %d ms", nulls, tr.Frames, len(tr.Times), tr.BucketMs)
+	}
+	whats := map[string]run{}
+	for _, r := range tr.Runs {
+		whats[r.What] = r
+	}
+	if r := whats["gap"]; r.From != to-899000 || r.To != to-600000 {
+		t.Errorf("gap %+v", r)
+	}
+	if r := whats["inactive"]; r.Word != "in manual" || r.From != to-399000 {
+		t.Errorf("manual %+v", r)
+	}
+	if len(tr.Changes) != 2 || tr.Changes[0].Word != "mode manual" {
+		t.Errorf("changes %+v", tr.Changes)
+	}
+	b, err := json.Marshal(tr)
+	if err != nil || !json.Valid(b) || !strings.Contains(string(b), "null") {
+		t.Errorf("as JSON: %v", err)
+	}
+}
+
+func TestOverlays(t *testing.T) {
+	h := newFake()
+	h.frozen = true
+	p := newPage(t, h)
+	names := func(path string) map[string]overlay {
+		w := call(t, p.gate.next, "GET", path, "")
+		// Columns are written only; here they are read as plain numbers.
+		var raw struct {
+			Overlays []struct {
+				Name      string
+				T         []int64
+				Low, High []*float32
+			}
+		}
+		if err := json.Unmarshal(w.Body.Bytes(), &raw); err != nil {
+			t.Fatal(err)
+		}
+		out := map[string]overlay{}
+		for _, o := range raw.Overlays {
+			x := overlay{Name: o.Name, Times: o.T}
+			for _, v := range o.Low {
+				x.Low = append(x.Low, *v)
+			}
+			for _, v := range o.High {
+				x.High = append(x.High, *v)
+			}
+			out[o.Name] = x
+		}
+		return out
+	}
+	o := names("/api/loops/AIC-204/trend?hours=4")
+	env := o["envelope"]
+	if n := len(env.High); n < 100 || env.High[n-1]-env.High[0] < 0.05 || math.Abs(float64(env.High[n-1]+env.Low[n-1])/2-1) > 0.001 {
+		t.Errorf("envelope of %d points grows about SP", len(env.High))
+	}
+	if n := len(o["half-cycles"].Times); n < 15 || n > 30 {
+		t.Errorf("%d half-cycles in 1.5 h of a cycle of 372 s", n)
+	}
+	off := names("/api/loops/AIC-212/trend?hours=12")["offset"]
+	if n := len(off.Low); n < 10 || math.Abs(float64(off.Low[n/2])-6.65) > 0.01 {
+		t.Errorf("offset line of %d points lies where PV stayed", n)
+	}
+	if d := names("/api/loops/LIC-310/trend?hours=12")["course of the recovery"]; len(d.Low) < 10 || d.Low[0] < d.Low[len(d.Low)-1]+1 {
+		t.Errorf("course of the recovery: %d points", len(d.Low))
+	}
+}
+
+func TestWindUpOverhang(t *testing.T) {
+	h := newFake()
+	h.frozen = true
+	l := h.add("LIC-9", "", "", "", 0, 100, 1000, detect.Judged, "", func(s float64, n func() float64) (float64, float64, float64, collector.Mode, collector.Flags) {
+		pv := 50.0
+		if s > -600 {
+			pv = 40 // reverse action: OP goes up
+		}
+		if s > -300 {
+			pv = 60 // the error has changed sign, and OP stays at its limit
+		}
+		op := 50.0
+		if s > -500 && s < -100 {
+			op = 100
+		}
+		return pv, 50, op, collector.Auto, 0
+	})
+	to := h.base.UnixMilli()
+	tr, err := readTrend(t.Context(), h, l, to-3600*1000, to, 600)
+	if err != nil {
+		t.Fatal(err)
+	}
+	var limit, over run
+	for _, r := range tr.Runs {
+		switch r.What {
+		case "limit":
+			limit = r
+		case "overhang":
+			over = r
+		}
+	}
+	if limit.From != to-499000 || over.From != to-299000 || over.To != to-100000 {
+		t.Errorf("limit %+v, overhang %+v", limit, over)
+	}
+}
+
+func TestTrendCSV(t *testing.T) {
+	h := newFake()
+	h.frozen = true
+	p := newPage(t, h)
+	w := call(t, p.gate.next, "GET", "/loops/AIC-204/trend.csv?hours=1", "")
+	rows, err := csv.NewReader(w.Body).ReadAll()
+	if err != nil {
+		t.Fatal(err)
+	}
+	if len(rows) != 1801 || strings.Join(rows[0], ",") != "time,loop,pv,sp,op,mode,flags" || rows[1][1] != "AIC-204" || rows[1][5] != "auto" {
+		t.Errorf("%d rows, %v, %v", len(rows), rows[0], rows[1])
+	}
+	if _, err := time.Parse(time.RFC3339Nano, rows[1][0]); err != nil {
+		t.Error(err)
+	}
+}
+
+func TestPhaseOrder(t *testing.T) {
+	lanes := []lane{{Name: "c", phase: -2.5, known: true}, {Name: "a", phase: 0.9, known: true}, {Name: "x"}, {Name: "b", phase: 0.2, known: true}}
+	orderByPhase(lanes, 36)
+	var names []string
+	for _, l := range lanes {
+		names = append(names, l.Name)
+	}
+	if got := strings.Join(names, ""); got != "abcx" && got != "cabx" {
+		t.Errorf("order %s", got)
+	}
+	if !strings.Contains(lanes[1].Word, "° later") || !strings.Contains(lanes[3].Word, "little") {
+		t.Errorf("words %q, %q", lanes[1].Word, lanes[3].Word)
+	}
+}
+
+func TestForms(t *testing.T) {
+	h := newFake()
+	h.frozen = true
+	p := newPage(t, h)
+	post := func(path string, v url.Values) (int, string, string) {
+		w := call(t, p.Handler(), "POST", path, v.Encode(), "Content-Type", formType, "Accept", "text/html", "Sec-Fetch-Site", "same-origin")
+		return w.Code, w.Header().Get("Location"), w.Body.String()
+	}
+	id := h.eps[0].ID
+	for _, c := range []struct {
+		path string
+		form url.Values
+		code int
+		want string
+	}{
+		{"/episodes/" + id + "/acknowledge", url.Values{"to": {"loops/AIC-204"}}, 400, "No name was given"},
+		{"/episodes/" + id + "/acknowledge", url.Values{"who": {"A. Reed"}, "hours": {"-3"}}, 400, "For how long"},
+		{"/episodes/none/acknowledge", url.Values{"who": {"A. Reed"}}, 404, "not known"},
+		{"/loops/AIC-204/shelve", url.Values{"who": {"A. Reed"}, "hours": {"8"}}, 400, "No reason given"},
+		{"/loops/AIC-204/shelve", url.Values{"who": {"A. Reed"}, "hours": {"99999"}, "why": {"x"}}, 400, "For how long"},
+	} {
+		if code, _, body := post(c.path, c.form); code != c.code || !strings.Contains(body, c.want) {
+			t.Errorf("%s %v: %d, want %d %q", c.path, c.form, code, c.code, c.want)
+		}
+	}
+	if len(h.acts) > 0 {
+		t.Fatalf("acts %q", h.acts)
+	}
+	code, to, _ := post("/episodes/"+id+"/acknowledge", url.Values{"who": {"A. Reed"}, "why": {"on my way"}, "to": {"loops/AIC-204"}})
+	if code != 303 || to != "../../loops/AIC-204?done=acknowledged" {
+		t.Errorf("%d, sent to %q", code, to)
+	}
+	if _, body := got(t, p, "/loops/AIC-204?done=acknowledged"); !strings.Contains(body, "acknowledged by A. Reed: on my way") || !strings.Contains(body, "Done: acknowledged") {
+		t.Error("the loop does not say who acknowledged")
+	}
+	if code, _, _ := post("/loops/AIC-204/shelve", url.Values{"who": {"A. Reed"}, "hours": {"8"}, "why": {"analyser service"}, "to": {"loops/AIC-204"}}); code != 303 {
+		t.Errorf("shelving: %d", code)
+	}
+	if _, body := got(t, p, "/loops/AIC-204"); !strings.Contains(body, "Shelved until 10:44") || !strings.Contains(body, "analyser service") {
+		t.Error("the loop does not say that it is shelved")
+	}
+	if _, body := got(t, p, "/"); strings.Contains(body, `<article class="ep now"`) {
+		t.Error("a shelved loop still stands in what needs a look")
+	}
+	if code, _, _ := post("/loops/AIC-204/unshelve", url.Values{"who": {"A. Reed"}}); code != 303 || len(h.shelves) != 0 {
+		t.Errorf("taking it off the shelf: %d", code)
+	}
+}
+
+func TestEpisodeLinks(t *testing.T) {
+	h := newFake()
+	h.frozen = true
+	p := newPage(t, h)
+	w := call(t, p.gate.next, "GET", "/episodes/"+h.eps[0].ID, "")
+	if to := w.Header().Get("Location"); w.Code != 303 || !strings.HasPrefix(to, "../loops/AIC-204?from=") {
+		t.Errorf("%d, %q: an episode of one loop is the loop at its span", w.Code, to)
+	}
+	h.eps[0].Into = h.eps[1].ID
+	if w := call(t, p.gate.next, "GET", "/episodes/"+h.eps[0].ID, ""); w.Header().Get("Location") != h.eps[1].ID {
+		t.Errorf("a folded episode leads to %q", w.Header().Get("Location"))
+	}
+}
+
+func TestOrderOfNeed(t *testing.T) {
+	h := newFake()
+	h.frozen = true
+	p := newPage(t, h)
+	l := p.look()
+	var names []string
+	for _, s := range l.pick(filter{Hours: 12}) {
+		names = append(names, s.Loop.Name)
+	}
+	want := "AIC-204 FIC-118 FIC-119 PIC-107 LIC-310 FIC-140 TIC-221 AIC-212 TIC-224 AIC-230 AIC-201 FIC-102 FIC-131 FIC-202 LIC-301 LIC-305 PIC-101"
+	if got := strings.Join(names, " "); got != want {
+		t.Errorf("order of need\n%s\nwant\n%s", got, want)
+	}
+	for q, want := range map[string]int{"q=chlorine": 2, "q=FILTER+sticking": 1, "area=filters": 4, "see=1": 9, "kind=shared-oscillation": 3, "q=manual": 0, "q=not+in+normal": 1, "source=gateway": 0} {
+		v, err := url.ParseQuery(q)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if n := len(l.pick(readFilter(v))); n != want {
+			t.Errorf("%s gives %d loops, want %d", q, n, want)
+		}
+	}
+}
+
+func TestStream(t *testing.T) {
+	had := goleak.IgnoreCurrent()
+	t.Cleanup(func() { goleak.VerifyNone(t, had) })
+	h := newFake()
+	_, addr := serve(t, h, configs.Page{})
+	ctx, cancel := context.WithTimeout(t.Context(), 20*time.Second)
+	defer cancel()
+	r, err := http.NewRequestWithContext(ctx, "GET", addr+"api/stream?loop=AIC-204&after="+strconv.FormatInt(h.clock().UnixMilli()-30000, 10), nil)
+	if err != nil {
+		t.Fatal(err)
+	}
+	tr := &http.Transport{}
+	defer tr.CloseIdleConnections()
+	resp, err := tr.RoundTrip(r)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer resp.Body.Close()
+	if resp.Header.Get("Content-Type") != "text/event-stream" {
+		t.Fatal(resp.Header)
+	}
+	pulses, frames, last := 0, 0, int64(0)
+	revisions := map[uint64]bool{}
+	in := bufio.NewScanner(resp.Body)
+	event := ""
+	for in.Scan() && (pulses < 3 || frames < 15) {
+		if e, ok := strings.CutPrefix(in.Text(), "event: "); ok {
+			event = e
+		}
+		data, ok := strings.CutPrefix(in.Text(), "data: ")
+		if !ok {
+			continue
+		}
+		switch event {
+		case "pulse":
+			var x pulse
+			if err := json.Unmarshal([]byte(data), &x); err != nil || x.Judged != 14 || x.Age == "" {
+				t.Fatalf("%s: %v", data, err)
+			}
+			revisions[x.Revision] = true
+			pulses++
+			if pulses == 1 {
+				if err := h.Acknowledge(h.eps[0].ID, "A. Reed", "", time.Time{}); err != nil {
+					t.Fatal(err)
+				}
+			}
+		case "fresh":
+			var x struct{ T []int64 }
+			if err := json.Unmarshal([]byte(data), &x); err != nil {
+				t.Fatal(err)
+			}
+			for _, at := range x.T {
+				if at <= last {
+					t.Fatalf("frame at %d after %d", at, last)
+				}
+				last = at
+				frames++
+			}
+		}
+	}
+	if pulses < 3 || frames < 15 || len(revisions) != 2 {
+		t.Errorf("%d pulses, %d frames, revisions %v; %v", pulses, frames, revisions, in.Err())
+	}
+	cancel()
+}
+
+func TestStreamsAreBounded(t *testing.T) {
+	h := newFake()
+	p := newPage(t, h)
+	for range maxStreams {
+		p.streams <- struct{}{}
+	}
+	if w := call(t, p.Handler(), "GET", "/api/stream", ""); w.Code != 503 || w.Header().Get("Retry-After") == "" {
+		t.Errorf("answer %d", w.Code)
+	}
+}
+
+func TestWords(t *testing.T) {
+	now := time.Date(2026, 3, 29, 3, 30, 0, 0, london) // an hour after the clocks went forward
+	for _, c := range []struct {
+		at   time.Time
+		want string
+	}{{now.Add(-2 * time.Hour), "00:30"}, {now.Add(-20 * time.Hour), "28 Mar 06:30"}, {time.Date(2025, 12, 1, 8, 0, 0, 0, london), "1 Dec 2025 08:00"}, {now.Add(90 * time.Minute), "05:00"}} {
+		if got := clock(c.at.UnixMilli(), now, london); got != c.want {
+			t.Errorf("%s: %q, want %q", c.at, got, c.want)
+		}
+	}
+	for v, want := range map[float64]string{math.NaN(): "–", 0: "0", 1234.56: "1235", 0.00012: "0.00012", -3.10: "-3.1", 1e9: "1e+09"} {
+		if got := number(v, 4); got != want {
+			t.Errorf("%v: %q, want %q", v, got, want)
+		}
+	}
+	for ms, want := range map[int64]string{300: "within a second", 3600400: "60 min behind: looks like a wrong time zone", -5400100: "1.5 h ahead: looks like a wrong time zone", 42000: "42 s behind"} {
+		if got := offsetWord(ms); !strings.HasPrefix(got, want[:5]) || strings.Contains(got, "zone") != strings.Contains(want, "zone") || strings.Contains(got, "ahead") != strings.Contains(want, "ahead") {
+			t.Errorf("%d ms: %q, want %q", ms, got, want)
+		}
+	}
+	f := detect.Finding{Measures: detect.Measures{{Name: "time_to_op_limit_s", Value: 600}, {Name: "time_to_pv_alarm_s", Value: 60}}}
+	if what, _ := timeLeft(&f); what != "PV alarm" || leftSeconds(&f) != 60 {
+		t.Errorf("what comes first: %s in %v s", what, leftSeconds(&f))
+	}
+	for _, k := range kindLooks {
+		if !strings.Contains(string(marks), `id="m-`+k.Mark+`"`) {
+			t.Errorf("%s has no drawing", k.Kind)
+		}
+	}
+	if urgencyOrder(alert.Now) >= urgencyOrder(alert.Morning) {
+		t.Error("now stands before morning")
+	}
+}
+
+func TestTimeTicksFollowTheSite(t *testing.T) {
+	kolkata := time.FixedZone("+05:30", 5*3600+1800)
+	from := time.Date(2026, 1, 5, 0, 0, 0, 0, time.UTC).UnixMilli()
+	for _, m := range timeTicks(from, from+4*3600*1000, kolkata, 6) {
+		if at := time.UnixMilli(m).In(kolkata); at.Minute() != 0 {
+			t.Errorf("a tick at %s, want whole hours of the site", at)
+		}
+	}
+}
+
+func BenchmarkFirstRows(b *testing.B) {
+	h := newFake()
+	h.frozen = true
+	h.many(5000)
+	p, err := New(Options{House: h, Page: configs.Page{Listen: "127.0.0.1:0"}, Clock: h.clock})
+	if err != nil {
+		b.Fatal(err)
+	}
+	l := p.look()
+	for b.Loop() {
+		if _, err := p.rows(b.Context(), &l, l.pick(filter{Hours: 12}), filter{Hours: 12}); err != nil {
+			b.Fatal(err)
+		}
+	}
+}
