@@ -6,6 +6,7 @@ import (
 	"encoding/binary"
 	"errors"
 	"fmt"
+	"hash/crc32"
 	"io"
 	"sync"
 )
@@ -25,9 +26,12 @@ type memoryHead struct {
 	Engine  uint16
 	Profile uint32 // its size, bytes
 	Through int64  // ms UTC
+	Sum     uint32 // CRC-32 (Castagnoli) of what follows the head: deflate has none
 }
 
 const memoryMagic = 0x4d77
+
+var castagnoli = crc32.MakeTable(crc32.Castagnoli)
 
 // profile is what a loop taught over weeks: kept across engines.
 type profile struct {
@@ -56,16 +60,19 @@ func (w *Watch) Save(dst []byte) []byte {
 	p := w.profile()
 	raw := make([]byte, 0, 8<<10)
 	raw, _ = binary.Append(raw, binary.LittleEndian, &p)
-	h := memoryHead{memoryMagic, Engine, uint32(len(raw)), w.s.Through}
+	h := memoryHead{memoryMagic, Engine, uint32(len(raw)), w.s.Through, 0}
 	raw, _ = binary.Append(raw, binary.LittleEndian, &w.s)
 	dst, _ = binary.Append(dst, binary.LittleEndian, h)
+	body := len(dst)
 	b := bytes.NewBuffer(dst)
 	z := deflaters.Get().(*flate.Writer)
 	z.Reset(b)
 	z.Write(raw)
 	z.Close()
 	deflaters.Put(z)
-	return b.Bytes()
+	dst = b.Bytes()
+	binary.LittleEndian.PutUint32(dst[body-4:], crc32.Checksum(dst[body:], castagnoli))
+	return dst
 }
 
 func (w *Watch) profile() (p profile) {
@@ -97,7 +104,7 @@ func MemoryThrough(b []byte) (int64, error) {
 func (w *Watch) Load(b []byte) error {
 	var h memoryHead
 	n, err := binary.Decode(b, binary.LittleEndian, &h)
-	if err != nil || h.Magic != memoryMagic {
+	if err != nil || h.Magic != memoryMagic || crc32.Checksum(b[n:], castagnoli) != h.Sum {
 		return ErrMemory
 	}
 	raw, err := io.ReadAll(io.LimitReader(flate.NewReader(bytes.NewReader(b[n:])), 64<<10))
@@ -124,6 +131,7 @@ func (w *Watch) Load(b []byte) error {
 		return ErrMemory
 	}
 	w.s = s
+	w.in = input{t: s.Grid.At, dt: s.Grid.DT} // Restate and View reckon from the last slot
 	return nil
 }
 

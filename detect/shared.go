@@ -247,7 +247,9 @@ func (s *shared) finding(end int64, g *sharedGroup, e Event) *Finding {
 		what += " Candidate root: " + g.Root + ", which grew by its own tuning."
 	default:
 		f.Confidence = 0.6
-		f.AlsoPossible = []Cause{OutsideDisturbance}
+		if g.Cause != OutsideDisturbance {
+			f.AlsoPossible = []Cause{OutsideDisturbance}
+		}
 		what += " No root stands out: it may come from outside all of them."
 	}
 	f.Text = what + " Judge the root before any other loop of the group."

@@ -151,6 +151,12 @@ func (s *Sites) Slot(end int64, emit func(*Finding)) {
 type sitesMemory struct {
 	Done  int64
 	Sites []json.RawMessage
+	Seen  []seenEvidence // of loops slower than the slot: it counts for half an hour
+}
+
+type seenEvidence struct {
+	Loop string
+	Evidence
 }
 
 // Save keeps what the site detectors hold between slots.
@@ -163,6 +169,13 @@ func (s *Sites) Save(dst []byte) []byte {
 		}
 		m.Sites = append(m.Sites, b)
 	}
+	for id, e := range s.ev {
+		if e.Shape != e.Shape {
+			e.Shape = -1 // JSON has no NaN; below any shape, as unknown is
+		}
+		m.Seen = append(m.Seen, seenEvidence{s.loops[id].Name, e})
+	}
+	slices.SortFunc(m.Seen, func(a, b seenEvidence) int { return cmp.Compare(a.Loop, b.Loop) })
 	b, err := json.Marshal(m)
 	if err != nil {
 		return dst
@@ -182,6 +195,14 @@ func (s *Sites) Load(b []byte) error {
 		}
 	}
 	s.done = m.Done
+	clear(s.ev)
+	for id, l := range s.loops {
+		for _, e := range m.Seen {
+			if e.Loop == l.Name {
+				s.ev[collector.LoopID(id)] = e.Evidence
+			}
+		}
+	}
 	return nil
 }
 

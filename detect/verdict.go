@@ -109,12 +109,8 @@ func (w *Watch) finding(k int, e Event, t float64) Finding {
 	row, o := &table[k], &s.Open[k]
 	f := Finding{ID: w.id, Subject: Subject{Loop: w.loop.Name}, Loop: w.loop.Name, Kind: row.Kind, Event: e,
 		At: w.ms(t), Since: w.ms(o.Since), Cause: causes[o.Cause], Confidence: float64(o.Conf)}
-	if f.Since > f.At {
-		f.Since = f.At
-	}
-	if f.At > s.Through {
-		f.At = s.Through
-	}
+	f.At = min(f.At, s.Through)
+	f.Since = min(f.Since, f.At)
 	if e == Cleared {
 		f.Confidence = 0
 		f.Text, f.TextShort = w.textOver(k)

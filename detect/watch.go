@@ -102,6 +102,11 @@ func (w *Watch) frame(f *collector.Frame) {
 	}
 	s.Through = f.Time
 	s.Last = *f
+	if w.absurd(f) {
+		clean := *f
+		clean.PV = collector.NaN32
+		f = &clean
+	}
 	g := &s.Grid
 	if !g.Begun {
 		if f.PV != f.PV { // nothing to begin with
@@ -130,6 +135,21 @@ func (w *Watch) frame(f *collector.Frame) {
 	w.stepGrid(f, t)
 	g.LastFrame = t
 	w.closeSlot(f.Time)
+}
+
+// farthest is how many spans outside its range a value can lie and still be meant.
+// What is beyond comes of a broken frame and would stay in the filters for good
+// (common practice, no source).
+const farthest = 100
+
+// absurd: PV, SP or OP is no value of this loop. NaN is not absurd, only missing.
+func (w *Watch) absurd(f *collector.Frame) bool {
+	far := func(v float32, low, span float64) bool { return math.Abs(float64(v)-low) > farthest*span }
+	if sc := &w.s.Scale; w.s.Grid.Begun {
+		return far(f.PV, sc.PVLow, sc.PVSpan) || far(f.SP, sc.PVLow, sc.PVSpan) || far(f.OP, sc.OPLow, sc.OPSpan)
+	}
+	const wide = 1e12 // before a range is known
+	return far(f.PV, 0, wide) || far(f.SP, 0, wide) || far(f.OP, 0, wide)
 }
 
 // usable sorts out frames that carry no value to judge and notes staleness.

@@ -34,11 +34,11 @@ func TestDemo(t *testing.T) {
 		t.Fatalf("%v\n%s", err, &out)
 	}
 	want := []string{"took in a recorded day: 25 loops", "FIC-207", "lost 0; writes to the plant 0",
-		"FIC-118 integral off    06:02      sustained offset, integral missing;"}
+		"FIC-118  integral off    06:02      sustained offset, integral missing;"}
 	if all {
-		want = append(want, "TIC-221 reset too long  05:58      sluggish recovery, reset too long;",
-			"AIC-204 reset too short 06:01      growing oscillation, reset too short;",
-			"FIC-341 output limited  06:03      output saturation, output limit;")
+		want = append(want, "TIC-221  reset too long  05:58      sluggish recovery, reset too long;",
+			"AIC-204  reset too short 06:01      growing oscillation, reset too short;",
+			"FIC-341  output limited  06:03      output saturation, output limit;")
 	}
 	for _, w := range want {
 		if !strings.Contains(out.String(), w) {
