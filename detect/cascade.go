@@ -33,7 +33,7 @@ func (w *Watch) stepCascade() {
 	}
 	// Trapezoid over the slot; the common constant dies in the band pass.
 	s.Int += in.e * in.dt
-	e, si, op := in.e, s.Int-in.e*in.dt/2, in.op
+	e, si, op := in.e, s.Int-in.e*in.dt/2, in.trim
 	top := w.levels()
 	for l := 0; l < top; l++ {
 		w.stepCycles(l, e)
@@ -51,4 +51,27 @@ func (w *Watch) stepCascade() {
 		c.Half = false
 		e, si, op = (e+float64(c.E))/2, (si+c.S)/2, (op+float64(c.OP))/2
 	}
+}
+
+// trimOf takes out of OP what a feedforward puts in, so that the law of the loop is
+// left: OP = trim * flow or trim + signal. A loop paced by a flow reads as another
+// tuning otherwise (methods section 14).
+func (w *Watch) trimOf(op, ff float64) float64 {
+	if ff != ff {
+		return op
+	}
+	switch w.loop.FeedforwardKind {
+	case "multiply":
+		m := &w.s.Tune.FFMean
+		if *m == 0 {
+			*m = ff
+		}
+		*m += (ff - *m) / 2000
+		if r := ff / *m; r > 0.05 {
+			return op / r
+		}
+	case "add":
+		return op - ff/w.s.Scale.OPSpan*100
+	}
+	return op
 }

@@ -27,6 +27,8 @@ type input struct {
 	dt     float64 // s
 	pv, sp float64 // %
 	op     float64 // %
+	trim   float64 // %, OP without its feedforward
+	pos    float64 // %, actual position of the final element; NaN none
 	e      float64 // %
 	spStep float64 // change of SP since the last slot, %
 	mode   collector.Mode
@@ -77,6 +79,10 @@ func (s *scale) init(l *configs.Loop, f *collector.Frame) {
 // motion is what PV, SP and OP have been doing: stillness, steps, extremes.
 type motion struct {
 	PV, SP, OP, E       float64 // of the last slot, %
+	Trim                float64 // of the last slot, %
+	Astray              float64 // %, mean distance of the final element from OP (lag of 100 slots)
+	AstrayUsual         float64 // %, of days
+	PosN                uint32  // positions seen
 	Mode                collector.Mode
 	ModeSince           float64 // s
 	PVSame, OPSame      float64 // s, since when the value has not changed
@@ -91,7 +97,6 @@ type motion struct {
 	LawSeen             bool       // OP was seen answering e
 	EF                  float64    // e through a lag of three slots
 	OPMin, OPMax        float32    // while active
-	MinAt, MaxAt        float64    // s, when they last moved on
 	HalfLo, HalfHi      [2]float32 // OP extremes of the running and the last half hour (or 60 slots)
 	SPLo, SPHi          [2]float32
 	ELo, EHi            [2]float32
@@ -112,6 +117,8 @@ type noise struct {
 	D1, DD, D4 num.Quantile // medians of first, second and fourth-lag differences, %
 	Least      num.Quantile // low quantile of the non-zero first differences: the resolution
 	Long       num.Quantile // 30 % quantile of the running estimate: robust against spells of trouble
+	Step       num.Quantile // median of the non-zero first differences
+	ByChange   bool         // PV stands between the values of an analyser: only changes count
 	OPLeast    num.Quantile // resolution of OP, %
 }
 
@@ -127,7 +134,14 @@ const (
 // transmitter (common practice, no source).
 const leastNoise = 0.005
 
-func (n *noise) step(pv float64, exception, learn bool) {
+// update is the usual number of slots between changes of PV.
+func (n *noise) step(pv float64, exception bool, update float64, learn bool) {
+	// Values that stand for slots are those of an analyser where the changes are of many
+	// sizes, and a coarse resolution where all are alike.
+	if analyser := update > 3 && n.Step.N > 20 && n.Step.Value() > 2.5*n.Least.Value(); analyser != n.ByChange {
+		*n = noise{Least: n.Least, Step: n.Step, OPLeast: n.OPLeast, ByChange: analyser}
+	}
+	exception = exception || n.ByChange
 	if exception && n.N > 0 && n.Ring[0] == float32(pv) {
 		return
 	}
@@ -140,6 +154,7 @@ func (n *noise) step(pv float64, exception, learn bool) {
 		n.D4.Add(d4, 0.5, 0.02, leastNoise/4)
 		if d1 > 1e-9 {
 			n.Least.Add(d1, 0.1, 0.02, 1e-6)
+			n.Step.Add(d1, 0.5, 0.02, 1e-6)
 		}
 		if n.N%128 == 0 {
 			n.Long.Add(n.now(), 0.3, 0.03, leastNoise)

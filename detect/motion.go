@@ -41,7 +41,6 @@ var efStep = 1 - math.Exp(-1./3)
 const (
 	opAtLimit = 0.5  // nearer to a limit than this is at it (methods section 8)
 	opSame    = 1e-6 // less is no change
-	opEdge    = 0.05 // nearer to its extreme than this is at it
 )
 
 // opLimits are the limits of OP in % of its range, as set in the controller.
@@ -84,6 +83,7 @@ func (w *Watch) stepMotion(flags collector.Flags) {
 	in.spStep = in.sp - m.SP
 	w.stepSP()
 	w.stepStill()
+	w.stepPosition()
 	m.EF += efStep * (in.e - m.EF)
 
 	half := max(1800, 60*in.dt)
@@ -111,15 +111,31 @@ func (w *Watch) stepMotion(flags collector.Flags) {
 	}
 	in.active = active
 	if active && in.hasOP {
-		if op < m.OPMin-opEdge {
-			m.MinAt = in.t
-		}
-		if op > m.OPMax+opEdge {
-			m.MaxAt = in.t
-		}
 		m.OPMin, m.OPMax = min(m.OPMin, op), max(m.OPMax, op)
 	}
 	m.PV, m.SP, m.OP, m.E = in.pv, in.sp, in.op, in.e
+}
+
+// stepPosition follows how far the final element is from OP, where its position is
+// given.
+func (w *Watch) stepPosition() {
+	m, in := &w.s.Motion, &w.in
+	if in.pos != in.pos || !in.hasOP {
+		return
+	}
+	d := math.Abs(in.op - in.pos)
+	if m.PosN == 0 {
+		m.Astray, m.AstrayUsual = d, d
+	}
+	m.PosN++
+	m.Astray += (d - m.Astray) / 100
+	m.AstrayUsual += (m.Astray - m.AstrayUsual) / max(2000, 86400/in.dt)
+}
+
+// elementAstray: the final element is not where OP wants it, by far more than usual.
+func (w *Watch) elementAstray() bool {
+	m := &w.s.Motion
+	return m.PosN > 300 && m.Astray > max(5, 3*m.AstrayUsual)
 }
 
 func (w *Watch) stepSP() {
@@ -203,7 +219,12 @@ func (w *Watch) deafOP() bool {
 	m := &w.s.Motion
 	moved := float64(m.EStillHi - m.EStillLo)
 	if kc, ok := w.gainPct(); ok {
-		return moved > 6*w.s.Noise.sigma() && math.Abs(kc)*moved > max(0.5, 4*w.s.Noise.OPLeast.Value())
+		q := &w.s.Noise.OPLeast
+		step := 1.0 // %, before the resolution of OP is known
+		if q.N > 20 {
+			step = q.Value()
+		}
+		return moved > 6*w.s.Noise.sigma() && math.Abs(kc)*moved > max(0.5, 4*step)
 	}
 	return moved > 6*w.s.Noise.sigma()+1
 }

@@ -138,7 +138,7 @@ func stepOffset(w *Watch) {
 			prev = max(in.t-o.T0, 0.5*o.PrevDur)
 			w.endOfRun()
 		}
-		*o = offsetState{PrevDur: prev, Sign: sign, T0: in.t, In: in.t, OP0: in.op, E0: in.e, OPs: in.op, Es: in.e, Checked: in.t}
+		*o = offsetState{PrevDur: prev, Sign: sign, T0: in.t, In: in.t, OP0: in.trim, E0: in.e, OPs: in.trim, Es: in.e, Checked: in.t}
 	}
 	if o.Sign == 0 {
 		return
@@ -154,13 +154,13 @@ func stepOffset(w *Watch) {
 	}
 	o.Int += in.e * in.dt
 	o.Dur += in.dt
-	o.OPs += (in.op - o.OPs) / 20
+	o.OPs += (in.trim - o.OPs) / 20
 	o.Es += (in.e - o.Es) / 20
 	if k := int(o.AnchorN); k < anchors && d >= in.dt*20*float64(int(1)<<k) {
 		o.Anchors[k] = anchor{float32(d), float32(o.OPs), float32(o.Es), float32(o.Int)}
 		o.AnchorN++
 	}
-	if o.Far == 0 && math.Abs(in.op-o.OP0) > 15 {
+	if o.Far == 0 && math.Abs(in.trim-o.OP0) > 15 {
 		o.Far, o.FarE = in.t, math.Abs(o.Es)
 	}
 	if in.t-o.Checked < max(60, 10*in.dt) || o.Dur < 60*in.dt {
@@ -173,8 +173,10 @@ func stepOffset(w *Watch) {
 // pushesAtLimit: OP lies at the limit to which e pushes, and still does after a
 // step of the set point: the same question as before.
 func (w *Watch) pushesAtLimit() bool {
-	in, o := &w.in, &w.s.Off
-	return w.s.Sat.AtSince > 0 && in.e*o.Sign > 0
+	in := &w.in
+	l0, l1 := w.opLimits()
+	push := w.sign() * in.e
+	return in.hasOP && in.e*w.s.Off.Sign > 0 && (push > 0 && in.op >= l1-opAtLimit || push < 0 && in.op <= l0+opAtLimit)
 }
 
 // timeScale is the loop's usual time to come back, s; a guess from the sampling
@@ -246,7 +248,7 @@ func (w *Watch) idleAtLow() bool {
 		o.Stuck = true
 		return false
 	}
-	*o = offsetState{Sign: o.Sign, T0: in.t, In: in.t, Zero: true, Checked: in.t, OPs: in.op, Es: in.e}
+	*o = offsetState{Sign: o.Sign, T0: in.t, In: in.t, Zero: true, Checked: in.t, OPs: in.trim, Es: in.e}
 	return true
 }
 
@@ -278,10 +280,12 @@ func (w *Watch) judgeOffset(thr float64) {
 	// which e pushes (a limit or selector that nobody listed).
 	own := flat && in.t-m.OPSame > max(120*in.dt, 300) && m.OPRunMax < (in.t-m.OPSame)/2 &&
 		(push > 0 && in.op >= float64(m.OPMax)-0.05 || push < 0 && in.op <= float64(m.OPMin)+0.05)
-	// Or it comes back to that extreme again and again, held off it by noise only.
-	own = own || !w.loop.PropOnly && (push > 0 && s.Sat.AtMax > 0.35 && o.OPs > float64(m.OPMax)-1 || push < 0 && s.Sat.AtMin > 0.35 && o.OPs < float64(m.OPMin)+1)
-	atLimit := own || !in.frozen && (push > 0 && o.OPs >= l1-1 || push < 0 && o.OPs <= l0+1)
-	if atLimit {
+	at := o.OPs
+	if w.loop.FeedforwardKind != "" {
+		at = in.op // the limit is one of OP, not of the trim
+	}
+	listed := !in.frozen && (push > 0 && at >= l1-1 || push < 0 && at <= l0+1)
+	if own || listed {
 		if s.Sat.AtSince == 0 {
 			s.Sat.AtSince = in.t
 		}
@@ -289,7 +293,7 @@ func (w *Watch) judgeOffset(thr float64) {
 		wait := max(max(900, 100*in.dt), min(2.5*w.timeScale(), 7200)) * w.strict
 		if in.t-s.Sat.AtSince > wait {
 			conf := 0.9
-			if own {
+			if !listed {
 				conf = 0.75
 			}
 			past.Sat.support(s.Sat.AtSince, mean, OutputLimit, conf)

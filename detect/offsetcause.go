@@ -40,7 +40,7 @@ func (w *Watch) offsetTravel(push, lo, hi float64) (t travel, ok bool) {
 		t.expect = math.Abs(kc * ie / t.rt)
 	}
 	swing := math.Abs(kc) * t.eRange
-	t.still = hi-lo < 0.25*swing && swing > 0.3 || hi-lo < opSame
+	t.still = hi-lo < 0.1*swing && swing > 0.6 || hi-lo < opSame
 	return t, t.span >= 30*in.dt
 }
 
@@ -57,6 +57,9 @@ func (w *Watch) integralMissing(t *travel) bool {
 		none = none && w.propOnlySeen()
 	}
 	follows := s.Tune.Law == 0 || s.Tune.Law > 0.5 || t.expect > 10
+	if m := &s.Motion; m.OPBusy < 0.3*m.OPBusyUsual {
+		follows = false // OP rests: a hand holds it, not the law
+	}
 	return none && follows && !s.Off.WasStill && t.expect > 1.5 && math.Abs(t.resid) < max(0.2*t.expect, 0.5) &&
 		t.hi-t.lo < 2.5*math.Abs(t.kc)*t.eRange+1
 }
@@ -68,24 +71,30 @@ func (w *Watch) offsetCause(push, lo, hi float64) (c Cause, conf, longer float64
 	o := &s.Off
 	t, ok := w.offsetTravel(push, lo, hi)
 	switch {
+	case w.elementAstray():
+		return FinalElementNotFollowing, 0.95, 0
 	case !ok:
-		return Undetermined, 0.6, 8 * 3600
+		return Undetermined, 0.6, 24 * 3600
 	case t.still && t.expect > 3:
 		// OP does not answer e at all: manual, tracking, or not this loop's output.
 		o.WasStill = true
 		return Undetermined, 0.6, 0
 	case t.still:
-		return Undetermined, 0.5, 8 * 3600
+		return Undetermined, 0.5, 24 * 3600
 	case math.Abs(t.rate) < 0.6*math.Abs(t.before):
 		return Undetermined, 0.6, -1 // it is being worked off
 	case w.integralMissing(&t):
 		if !t.learned {
 			// Ignorant of the own reset time: longer than that of all but a few loops.
-			return IntegralMissing, 0.85, max(2.5*3600, 5*w.timeScale())
+			longer = max(2.5*3600, 5*w.timeScale())
+			if s.Tune.Law < 0.5 {
+				longer = max(6*3600, longer)
+			}
+			return IntegralMissing, 0.85, longer
 		}
 		return IntegralMissing, 0.93, 0
 	case w.crossesSplit(lo, hi):
-		return Undetermined, 0.5, 4 * 3600
+		return Undetermined, 0.5, 24 * 3600
 	case math.Abs(t.dop) > 30 && t.d > 8*t.rt && lo > 1 && hi < 99 && math.Abs(t.rate) > 0.9*math.Abs(t.before) && math.Abs(t.rate) > 1 && push*t.dop > 0:
 		o.NotFollow = true
 		return FinalElementNotFollowing, 0.85, 0
@@ -95,9 +104,9 @@ func (w *Watch) offsetCause(push, lo, hi float64) (c Cause, conf, longer float64
 		o.NotFollow = true
 		return FinalElementNotFollowing, 0.8, 0
 	case t.rt > 0 && t.implied < 3*t.rt:
-		return OutsideDisturbance, 0.6, max(8*3600, 12*t.rt) // the load outruns the integral, which does what it must
+		return OutsideDisturbance, 0.6, max(24*3600, 30*t.rt) // the load outruns the integral, which does what it must
 	}
-	return Undetermined, 0.6, max(6*3600, 20*t.rt)
+	return Undetermined, 0.6, max(12*3600, 30*t.rt)
 }
 
 // crossesSplit: OP has been on both sides of the change-over of a split range,

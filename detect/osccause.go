@@ -166,15 +166,27 @@ func (o *oscState) setCause(c Cause, also [2]Cause, conf float64) {
 	o.Conf = float32(conf)
 }
 
+// triangle: the shape of a sticking valve, with corroboration. Where PV was sampled
+// too coarsely to show jumps, and where the cycle keeps time like a clock, which
+// friction does not, the shape must be the purer for it (measured on the 20 sticking
+// and 9 other cycles of seed 1 with an index over 0.64: sticking up to 0.96 at a
+// regularity under 46, the others under 0.73).
+func (w *Watch) triangle(si float64, sh shapes, regular float64) bool {
+	switch {
+	case regular > 50:
+		return si > 0.8
+	case math.IsNaN(sh.stick):
+		return si > 0.72
+	}
+	return si > 0.66 || si > 0.64 && sh.stick > 0.41
+}
+
 func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also [2]Cause, si float64, sh shapes, changed bool) {
 	s := &w.s
 	o := &s.Osc
 	q, _ := b.stat(int(o.Bank), min(int(b.N), ringLen))
 	move := o.AmpHi / max(o.AmpLo, 1e-9)
-	tri := si > 0.64
-	if phi > 60 && si < 0.72 && !(sh.stick > 0.58) {
-		tri = false // a slow swing far beyond the reset time looks like this too
-	}
+	tri := w.triangle(si, sh, q.regular) && !(phi > 60 && si < 0.72 && !(sh.stick > 0.58)) // else a slow swing far beyond the reset time
 	integrating := w.loop.Process == configs.Integrating
 	switch {
 	case o.GrowCause != 0 && causes[o.GrowCause] != Undetermined:
@@ -185,6 +197,9 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	case tri && sh.h3OP > 0.25:
 		// OP square: what drives the loop is square, a sticking valve makes OP a triangle.
 		o.setCause(OutsideDisturbance, [2]Cause{ValveSticking}, 0.75)
+	case tri && s.Motion.PosN > 300 && s.Motion.Astray < 0.3:
+		// The position shows that the element follows: the shape has another reason.
+		o.setCause(Undetermined, [2]Cause{ProcessNonlinear, OutsideDisturbance}, 0.6)
 	case tri && !changed && sh.looks < 4:
 		o.setCause(Undetermined, [2]Cause{ValveSticking, ProcessNonlinear}, 0.6)
 	case tri && !changed && w.propOnlySeen():

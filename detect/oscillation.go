@@ -133,7 +133,7 @@ func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 		least = max(3*sigma, 1)
 	}
 	grow := false
-	if o.Sus && o.Evals > 24 && tip < 1.8*o.AmpLo {
+	if o.Sus && o.Evals > 24 && tip < 1.8*o.AmpLo || w.scheduled(b, st.period*w.levelS(level)) {
 		b.Conf = 0 // what has long been there must really have grown
 		return
 	}
@@ -300,7 +300,7 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 		q.regular > 1.6 && q.least > 0.2 && q.amp > max(3.4*sigma, 0.55) && st.period*float64(int(1)<<level) > 20 &&
 		s.Motion.LawSeen && !w.propOnlySeen() && w.steadySP(7*period) && (!known || q.amp > 1.6*usual) {
 		sh := w.shapes()
-		if si := w.stickIndex(sh); si > 0.66 && sh.h3OP < 0.25 {
+		if si := w.stickIndex(sh); si > 0.66 && sh.h3OP < 0.25 && sh.stick > 0.38 {
 			o.Sus = true
 			w.beginOsc(level, b, 10)
 		}

@@ -16,8 +16,6 @@ type saturationState struct {
 	WindUp    bool
 	Frames    uint8
 	LowShare  float32 // share of time with OP at the low end of its range, mean of days
-	AtMin     float32 // share of the last 200 slots, or recovery time, at the lowest and highest OP ever
-	AtMax     float32
 	// Stretches at a limit that e pushes towards, each longer than a recovery.
 	From, IntE float64 // s, begin of the running one, 0 none; % s
 	Stretches  uint8
@@ -45,18 +43,11 @@ func stepSaturation(w *Watch) {
 	} else if in.op <= l0+opAtLimit {
 		side = -1
 	}
-	share := func(x *float32, is bool, n float64) {
-		v := float32(0)
-		if is {
-			v = 1
-		}
-		*x += (v - *x) / float32(n)
+	low := float32(0)
+	if in.op <= opAtLimit {
+		low = 1
 	}
-	share(&z.LowShare, in.op <= opAtLimit, 3*86400/in.dt)
-	m := &s.Motion
-	n := max(200, w.timeScale()/in.dt) // slots
-	share(&z.AtMin, in.op <= float64(m.OPMin)+opEdge && in.t-m.MinAt > 2*n*in.dt, n)
-	share(&z.AtMax, in.op >= float64(m.OPMax)-opEdge && in.t-m.MaxAt > 2*n*in.dt, n)
+	z.LowShare += (low - z.LowShare) * float32(in.dt/(3*86400))
 	a := w.sign()
 	sigma := max(s.Noise.sigma(), 0.02)
 	w.stepStretch(side, sigma)

@@ -55,6 +55,9 @@ func (w *Watch) TakeEvidence() (Evidence, bool) {
 	if (o.Sus || o.Grow) && o.Bad < 6 && s.Motion.Active && o.P > 0 {
 		b := &s.Cycles[o.Bank]
 		e.Live, e.Growing, e.PeriodS, e.Regular, e.Amp, e.Since, e.Cause = true, o.Grow, o.P, o.Regular, o.Amp, w.ms(o.Since), causes[o.Cause]
+		if w.led() { // it follows: not its own growth, whatever it looks like
+			e.Growing, e.Cause = false, Undetermined
+		}
 		e.Shape = w.stickIndex(w.shapes())
 		if w.usualKnown(b) {
 			e.OverUsual = o.Amp / b.Usual.Value()
@@ -229,7 +232,7 @@ func phaseOfSign(a, b *Evidence, sign int) (r float64, n int) {
 			}
 		}
 		if math.Abs(best) < p {
-			x := 2 * math.Pi * best / p
+			x := 4 * math.Pi * best / p // against half the period: stricter by two
 			re[i&1] += math.Cos(x)
 			im[i&1] += math.Sin(x)
 			n++

@@ -15,6 +15,14 @@ import (
 func (w *Watch) judgeSlow() {
 	r := &w.s.Recov
 	n := int(min(r.Count, recRing))
+	if w.swinging() {
+		return // half-cycles, not recoveries
+	}
+	if w.slowerThanListed() && !r.Slow {
+		e := r.recent(0)
+		r.Slow, r.SlowSince, r.By, r.Now, r.Was = true, float64(e.T0), 3, e.Dur, 0
+		r.Cause, r.Conf = causeIndex(ResetTooLong), 0.75
+	}
 	if n < 3 {
 		return
 	}
@@ -67,18 +75,37 @@ func (w *Watch) judgeSlow() {
 		// is Ti over the proportional share; 2.1 of them to 12 %.
 		// A share over 1 is that of a runaway process, for which this does not hold.
 		var tail [5]float64
-		nt := 0
+		nt, over := 0, 0
 		for i := range 5 {
-			if e := r.recent(i); !e.SP && e.Ti > 0 && e.Prop > 0 && e.Prop < 1.3 {
+			e := r.recent(i)
+			if !e.SP && e.Prop > 1.15 {
+				over++
+			}
+			if !e.SP && e.Ti > 0 && e.Prop > 0 {
 				tail[nt] = float64(e.Dur) / (2.1 * float64(e.Ti) / min(1, max(0.03, float64(e.Prop))))
 				nt++
 			}
 		}
-		if m := num.Median(tail[:nt]); num.Median(t9[:]) > 11*w.strict && lo > 4.5 && nt >= 3 && m > 0.5 && m < 1.8 {
+		if m := num.Median(tail[:nt]); num.Median(t9[:]) > 11*w.strict && lo > 4.5 && nt >= 3 && over < 2 && m > 0.5 && m < 1.8 {
 			shape = 1
 		}
 	}
 	w.slowCause(own, area, shape, durs[:3])
+}
+
+// swinging: the newest recovery fits a regular cycle, whose half-waves look like
+// slow recoveries.
+func (w *Watch) swinging() bool {
+	e := w.s.Recov.recent(0)
+	for l := range w.levels() {
+		b := &w.s.Cycles[l]
+		if p, reg, ok := b.lengths(5); ok && reg > 3 && b.tip() > 0.4*float64(e.Peak) {
+			if t := p * w.levelS(l); t > float64(e.Dur) && t < 6*float64(e.Dur) {
+				return true
+			}
+		}
+	}
+	return false
 }
 
 // slowByHistory compares with the loop's own usual recovery. Where the tuning in

@@ -80,6 +80,7 @@ type fitBank struct {
 type tuneState struct {
 	LimitAt  float64 // s, OP last at a limit
 	OPMean   float64 // %, slow mean of OP (200 slots)
+	FFMean   float64 // slow mean of a multiplying feedforward, its unit
 	Law      float32 // share of excited blocks that the PI law explains; 0 before the first
 	Sign     float32 // of the gain as seen; 0 unknown
 	BestBank uint8
@@ -252,6 +253,9 @@ func (w *Watch) usualTuning(t float64) (kc, ti float64, ok bool) {
 			}
 		}
 		old := int(b.BaseK.N)
+		if old > 6 && (b.DevK.Value() > 0.5 || b.DevT.Value() > 0.7) {
+			continue // a scale at which the law does not show: filter, late OP, steps of an analyser
+		}
 		if n+old <= most || nt == 0 && b.BaseT.N == 0 {
 			continue
 		}

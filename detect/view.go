@@ -37,6 +37,7 @@ type View struct {
 	GainLow, GainHigh   float64
 	ResetS              float64 // s
 	ResetLow, ResetHigh float64
+	TuningNote          string // what of the loop list contradicts the tuning in service; empty: nothing
 	Open                []Finding
 }
 
@@ -62,6 +63,7 @@ func (w *Watch) View() View {
 		v.PeriodS = s.Osc.P
 	}
 	v.GainPct, v.GainLow, v.GainHigh, v.ResetS, v.ResetLow, v.ResetHigh = w.tuningRange()
+	v.TuningNote = w.tuningNote()
 	v.BlindSpots = w.blindSpots()
 	held := false
 	for k := range table {
@@ -188,6 +190,9 @@ func (w *Watch) Explain() []string {
 		out = append(out, fmt.Sprintf("tuning in service: gain %.3g (%.3g to %.3g), reset %.3g s (%.3g to %.3g)", k, k0, k1, t, t0, t1))
 	} else {
 		out = append(out, "tuning in service: not excited enough to read")
+	}
+	if n := w.tuningNote(); n != "" {
+		out = append(out, "loop list: "+n)
 	}
 	for l := range w.levels() {
 		b := &s.Cycles[l]

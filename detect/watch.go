@@ -257,7 +257,8 @@ func (w *Watch) stepGrid(f *collector.Frame, t float64) {
 	in := &w.in
 	for i := 1; i < k; i++ { // what was not said has not changed
 		g.At += g.DT
-		*in = input{t: g.At, dt: g.DT, pv: s.Motion.PV, sp: s.Motion.SP, op: s.Motion.OP, mode: s.Motion.Mode, held: true}
+		*in = input{t: g.At, dt: g.DT, pv: s.Motion.PV, sp: s.Motion.SP, op: s.Motion.OP, pos: math.NaN(), mode: s.Motion.Mode, held: true}
+		in.trim = s.Motion.Trim
 		w.slot(f.Flags)
 	}
 	g.At += g.DT
@@ -268,6 +269,9 @@ func (w *Watch) stepGrid(f *collector.Frame, t float64) {
 	in.pv = (float64(f.PV) - s.Scale.PVLow) / s.Scale.PVSpan * 100
 	in.sp = (float64(f.SP) - s.Scale.PVLow) / s.Scale.PVSpan * 100
 	in.op = (float64(f.OP) - s.Scale.OPLow) / s.Scale.OPSpan * 100
+	in.pos = (float64(f.Position) - s.Scale.OPLow) / s.Scale.OPSpan * 100
+	in.trim = w.trimOf(in.op, float64(f.Feedforward))
+	s.Motion.Trim = in.trim
 	w.slot(f.Flags)
 }
 
@@ -280,10 +284,11 @@ func (w *Watch) slot(flags collector.Flags) {
 		if in.op != in.op {
 			in.op = 0
 		}
+		in.trim = in.op
 	}
 	in.e = in.sp - in.pv
 	w.stepMotion(flags)
-	s.Noise.step(in.pv, w.loop.Report == configs.Exception || in.held || s.Motion.Update.Value() > 3, in.active && !in.frozen && !s.Osc.Sus && !s.Osc.Grow)
+	s.Noise.step(in.pv, w.loop.Report == configs.Exception || in.held, s.Motion.Update.Value(), in.active && !in.frozen && !s.Osc.Sus && !s.Osc.Grow)
 	if in.active && !in.frozen {
 		w.stepCascade()
 	}

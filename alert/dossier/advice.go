@@ -3,7 +3,6 @@ package dossier
 import (
 	"fmt"
 	"math"
-	"strings"
 
 	"midwatch/alert/dossier/process"
 	"midwatch/alert/dossier/tune"
@@ -273,7 +272,7 @@ func (s *series) advise(in *Input, f *fitted, w watched, ev []event, cs []Cycle)
 	b.noiseSpan = math.Min(math.Max(600*b.scan, b.span), 20000*b.scan)
 	if known {
 		c := b.try("in service", inServiceWords(w), now, 0)
-		if len(w.readings) > 0 {
+		if len(w.readings) > 0 && !(w.tags[0] > 0 && w.tags[1] > 0) {
 			c.Faceplate = "about " + faceplate(l, about(now.Kc), about(now.TiS))
 		}
 		a.InService = &c
@@ -302,7 +301,8 @@ func noAdvice(l *configs.Loop) string {
 	return ""
 }
 
-// inService is the tuning in service as far as it is known: read, else listed.
+// inService is the tuning in service as far as it is known: by its tags, else as
+// read from the data, else as listed.
 func inService(l *configs.Loop, w watched) (tune.Tuning, bool) {
 	t := tune.Tuning{Kc: l.GainPct, TiS: l.IdealReset}
 	if n := len(w.readings); n > 0 {
@@ -310,6 +310,12 @@ func inService(l *configs.Loop, w watched) (tune.Tuning, bool) {
 		if r := w.readings[n-1].Reset; r.Known() {
 			t.TiS = r.Value
 		}
+	}
+	if w.tags[0] > 0 {
+		t.Kc = w.tags[0]
+	}
+	if w.tags[1] > 0 {
+		t.TiS = w.tags[1]
 	}
 	if l.PropOnly {
 		t.TiS = math.Inf(1)
@@ -324,6 +330,9 @@ func inService(l *configs.Loop, w watched) (tune.Tuning, bool) {
 }
 
 func inServiceWords(w watched) string {
+	if w.tags[0] > 0 && w.tags[1] > 0 {
+		return "by its tags"
+	}
 	if len(w.readings) > 0 {
 		return "as read from the data"
 	}
@@ -390,80 +399,6 @@ func (s *series) cascadeCautions(in *Input, speed float64) []string {
 			out = append(out, fmt.Sprintf("too fast for its inner loop %s: closed-loop time %s, the inner about %s; at least 3 to 5 times that", p.Loop, duration(speed), duration(other)))
 		case p.Relation == "outer" && other < 3*speed:
 			out = append(out, fmt.Sprintf("the outer loop %s (about %s) is not 3 times slower than this", p.Loop, duration(other)))
-		}
-	}
-	return out
-}
-
-func assumptions(l *configs.Loop, b *bench, s *series) []string {
-	scan := "as listed"
-	if !(l.ScanS > 0) {
-		scan = "not listed: assumed"
-	}
-	out := []string{
-		fmt.Sprintf("Controller interval %s (%s); half of it is added to the dead time.", duration(b.scan), scan),
-		fmt.Sprintf("P and I act on the error, in the %s form as shown; if the controller takes P on PV, set-point responses are calmer than drawn, load responses and margins the same.", l.Form),
-		fmt.Sprintf("OP has room from %s to %s %% of span around where it usually lies; the integral is held at a limit.", short(b.low), short(b.high)),
-		fmt.Sprintf("Simulated: set-point step of %s %s, load step of %s %% of OP at the process input, noise of %s %s.", short(s.pvUnits(b.sp)), s.unit(), short(b.load), short(s.pvUnits(s.sigma)), s.unit()),
-	}
-	if l.PVFilterS > 0 {
-		out = append(out, fmt.Sprintf("The PV filter of %s is taken to be in the recorded PV, and so in the model.", duration(l.PVFilterS)))
-	}
-	if l.RateS > 0 {
-		out = append(out, "Candidates are PI: with the rate set to 0. The tuning in service is simulated with its rate on PV.")
-	}
-	return out
-}
-
-// limits say how far the tuning in service is from swinging on.
-func (b *bench) limits(now tune.Tuning, known bool) []Fact {
-	var out []Fact
-	ku, pu, _, ok := b.model.Ultimate()
-	if ok {
-		out = append(out, fact("ultimate_gain", "ultimate gain of the model", number(ku, "%/%"), "P only"), fact("ultimate_period_s", "ultimate period", number(pu, "s"), ""))
-	}
-	if !known {
-		return out
-	}
-	if ti, p, ok := tune.ResetLimit(b.model, now.Kc); ok {
-		out = append(out, fact("reset_limit_s", "shortest reset that holds at the gain in service", number(ti, "s"), "it would swing with a period of "+duration(p)+" there; in service about "+faceplate(b.l, math.NaN(), about(now.TiS))))
-	}
-	if p, ok := tune.Pole(b.model, now); ok {
-		switch {
-		case real(p) > 0:
-			out = append(out, fact("growth", "predicted of the tuning in service", number(math.Exp(2*math.Pi*real(p)/math.Max(imag(p), 1e-12)), "times a cycle"), "grows, period "+duration(2*math.Pi/imag(p))))
-		case imag(p) > 1e-6*math.Abs(real(p)):
-			out = append(out, fact("slowest_s", "slowest part of its response", number(-1/real(p), "s"), "time constant, ringing with a period of "+duration(2*math.Pi/imag(p))))
-		default:
-			out = append(out, fact("slowest_s", "slowest part of its response", number(-1/real(p), "s"), "time constant, creeping back"))
-		}
-	}
-	return out
-}
-
-// others are the tunings of other published rules, for comparison.
-func (b *bench) others(m process.Model) []Candidate {
-	var out []Candidate
-	add := func(name, rule string, t tune.Tuning) {
-		if b.l.PropOnly {
-			t.TiS = math.Inf(1)
-		}
-		out = append(out, b.try(name, rule, rounded(b.l, t), 0))
-	}
-	if !m.Integrating && m.LagS() > 0 {
-		lam := math.Max(m.LagS(), 3*m.ThetaS)
-		add("lambda "+duration(lam), "Dahlin 1968; Rivera, Morari & Skogestad 1986", tune.Lambda(m, lam))
-		add("improved PI, lambda "+duration(1.7*m.ThetaS), "Rivera, Morari & Skogestad 1986", tune.ImprovedPI(m, 1.7*m.ThetaS))
-	}
-	if m.ThetaS > 0 {
-		add("AMIGO", "Åström & Hägglund 2004", tune.AMIGO(m))
-	}
-	if ku, pu, _, ok := b.model.Ultimate(); ok {
-		add("Tyreus-Luyben", "Tyreus & Luyben 1992", tune.TyreusLuyben(ku, pu))
-	}
-	for i := range out {
-		if strings.HasPrefix(out[i].Name, "lambda") && out[i].tuning.TiS > 8*m.ThetaS {
-			out[i].Cautions = append(out[i].Cautions, "its reset is longer than 8 dead times: slow to recover from loads")
 		}
 	}
 	return out

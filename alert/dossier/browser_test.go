@@ -41,7 +41,10 @@ func TestRendersInABrowser(t *testing.T) {
 	if err != nil {
 		t.Fatal(err)
 	}
-	for name, d := range map[string]*dossier.Dossier{"te18": te, "AIC-204": mustBuild(t, twoDays())} {
+	busy := retuned(2, 1.3, 150, 6)
+	busy.steps, busy.sizePct, busy.loads = 5*3600, 6, true
+	busy.hand = func(t float64) (float64, bool) { return 48, t > 6*3600 && t < 8*3600 }
+	for name, d := range map[string]*dossier.Dossier{"te18": te, "AIC-204": mustBuild(t, twoDays()), "busy": mustBuild(t, busy)} {
 		var page bytes.Buffer
 		if err := d.HTML(&page); err != nil {
 			t.Fatal(err)

@@ -81,7 +81,7 @@ func Build(in Input) (*Dossier, error) {
 	d.Recoveries, d.Conduct = s.recoveries(ev), s.conduct(l)
 	d.Element, d.ByHand = s.element(l, eps, d.Cycles), byHand(l, eps)
 	cs := changes(l, frames, eps, w.readings)
-	d.Tuning, d.Scheduled = s.tuning(l, w, cs, eps), s.scheduled(w)
+	d.Tuning, d.Scheduled = s.tuning(&in, w, cs, eps), s.scheduled(w)
 	var others []Candidate
 	d.Process, d.fitted = s.process(l, ev)
 	d.Advice, others = s.advise(&in, d.fitted, w, ev, d.Cycles)
@@ -93,7 +93,7 @@ func Build(in Input) (*Dossier, error) {
 		if i+1 < len(cs) {
 			b = cs[i+1].at
 		}
-		x := s.compare(c.at, a, b)
+		x := s.compare(c.at, a, b, d.Cycles)
 		x.Before, x.After = c.before, c.after
 		d.Changes = append(d.Changes, x)
 	}
@@ -182,7 +182,10 @@ func (d *Dossier) summary() []Line {
 		}
 	}
 	for _, f := range d.Tuning {
-		if f.Key == "faceplate" {
+		switch f.Key {
+		case "tags":
+			add("tuning in service", f.Text+", by its tags.")
+		case "faceplate":
 			add("tuning in service", f.Text+", as read from the data.")
 		}
 	}
@@ -199,7 +202,11 @@ func (d *Dossier) summary() []Line {
 		add("tuning", text)
 	}
 	for _, c := range d.Changes {
-		add("change", c.At+": "+c.Verdict+".")
+		at, err := time.Parse(time.RFC3339Nano, c.At)
+		if err != nil { // made by this package: cannot be
+			continue
+		}
+		add("change", at.In(d.zone).Format("2 Jan 15:04")+": "+c.Verdict+".")
 	}
 	return out
 }

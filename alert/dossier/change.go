@@ -31,7 +31,7 @@ const leastBlocks = 8
 // first.
 func Compare(l *configs.Loop, frames []collector.Frame, at int64) Change {
 	s := newSeries(l, frames)
-	c := s.compare(at, s.t0, s.at(s.n()))
+	c := s.compare(at, s.t0, s.at(s.n()), nil)
 	c.Before, c.After = "as before", "as after"
 	return c
 }
@@ -115,8 +115,17 @@ func (s *series) side(a, b int, blockS float64) side {
 	return out
 }
 
+// swung is the share of the slots from i to j in which the loop swung.
+func (s *series) swung(cs []Cycle, i, j int) float64 {
+	n := 0
+	for _, c := range cs {
+		n += max(0, min(j, s.slot(c.to))-max(i, s.slot(c.from)))
+	}
+	return float64(n) / float64(max(1, j-i))
+}
+
 // compare holds the stretch from a to the change against that from it to b.
-func (s *series) compare(at, a, b int64) Change {
+func (s *series) compare(at, a, b int64, cs []Cycle) Change {
 	c := Change{At: detect.FormatTime(at), Ratio: none("not enough data yet")}
 	mid := s.slot(at)
 	i, j := max(0, s.slot(a)), min(s.n(), s.slot(b))
@@ -144,6 +153,15 @@ func (s *series) compare(at, a, b int64) Change {
 		fact("travel_after", "after", number(after.travel, "% an hour"), ""),
 		fact("load_before", "OP from block to block, before", number(before.opSD, "%"), fmt.Sprintf("what the load asked of it; mean OP %s %%", short(before.opMean))),
 		fact("load_after", "after", number(after.opSD, "%"), fmt.Sprintf("mean OP %s %%", short(after.opMean))),
+	}
+	// A swing says more than its size: it asks for movement of OP by itself, so
+	// the two sides could never look alike.
+	if w0, w1 := s.swung(cs, i, mid), s.swung(cs, mid, j); w0 < 0.05 && w1 > 0.2 {
+		c.Holds, c.Verdict = true, fmt.Sprintf("the loop swings since the change: %s of the time after it, %s before", percent(w1), percent(w0))
+		return c
+	} else if w0 > 0.2 && w1 < 0.02 && n1 >= leastBlocks {
+		c.Holds, c.Verdict = true, fmt.Sprintf("the swing that was there before the change is gone: %s of the time before, %s after", percent(w0), percent(w1))
+		return c
 	}
 	if n0 < leastBlocks || n1 < leastBlocks {
 		c.Verdict = fmt.Sprintf("not enough data yet: %d blocks of %s before and %d after with the law acting; %d of each are needed", n0, duration(block), n1, leastBlocks)

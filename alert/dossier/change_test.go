@@ -76,3 +76,23 @@ func TestNoChangeIsSeldomOne(t *testing.T) {
 		t.Errorf("%d of %d records without a change are called changed", holds, runs)
 	}
 }
+
+// A recorded run whose reset was shortened to a fifth: the readings tell of the
+// change, and the verdict that the loop swings since.
+func TestSwingSinceTheChange(t *testing.T) {
+	l, frames := recorded(t, "te-reset-short-18a.csv.gz", "te18")
+	d, err := dossier.Build(dossier.Input{Loop: l, Frames: frames})
+	if err != nil {
+		t.Fatal(err)
+	}
+	if len(d.Changes) != 1 {
+		t.Fatalf("%d changes", len(d.Changes))
+	}
+	c := d.Changes[0]
+	if !c.Holds || !strings.Contains(c.Verdict, "swings since the change") {
+		t.Errorf("%+v", c)
+	}
+	if !strings.Contains(c.Before, "reset 980 s") || !strings.Contains(c.After, "reset 180 s") {
+		t.Errorf("from %q to %q; the record: 982 to 180 s", c.Before, c.After)
+	}
+}

@@ -11,7 +11,9 @@
 package dossier
 
 import (
+	"fmt"
 	"iter"
+	"strings"
 	"time"
 
 	"midwatch/collector"
@@ -100,7 +102,7 @@ type Dossier struct {
 	fitted *fitted
 }
 
-// Line is one sentence of the summary. Mark is "first", "note" or empty.
+// Line is one sentence of the summary.
 type Line struct {
 	About string `json:"about"`
 	Text  string `json:"text"`
@@ -135,6 +137,17 @@ type Episode struct {
 	growth     float64 // the largest heard of, a cycle; 0 none
 }
 
+// Says is the cause in words; empty where none is named.
+func (e Episode) Says() string {
+	switch {
+	case e.Cause == detect.NoCause || e.Cause == detect.Undetermined && e.Kind == detect.TuningChanged:
+		return ""
+	case e.Cause == detect.Undetermined:
+		return "the cause cannot be told"
+	}
+	return fmt.Sprintf("%s, confidence %s", strings.ReplaceAll(string(e.Cause), "-", " "), short(e.Confidence))
+}
+
 // Cycle is a spell in which the loop swung.
 type Cycle struct {
 	From       string `json:"from"`
@@ -159,7 +172,6 @@ type Reading struct {
 	At    string `json:"at"`
 	Gain  Number `json:"gain"`
 	Reset Number `json:"reset"`
-	Read  bool   `json:"read_from_tags"`
 	AtOP  Number `json:"at_op"`
 
 	at   int64

@@ -112,9 +112,10 @@ func (s *series) step(m move, prev, next int) event {
 	target := s.sp[min(m.last, s.n()-1)]
 	e.end = s.settle(&e, m, end, start, target)
 	length := e.end - m.at
-	pre := min(m.at-prev, max(12, length/4), 2000)
-	for pre > 0 && (s.pv[m.at-pre] != s.pv[m.at-pre] || s.law[m.at-pre] != s.law[m.at]) {
-		pre--
+	most = min(m.at-prev, max(12, length/4), 2000)
+	pre := 0
+	for k := m.at - 1; pre < most && s.pv[k] == s.pv[k] && s.op[k] == s.op[k] && s.law[k] == s.law[m.at]; k-- {
+		pre++
 	}
 	e.rest = m.at - pre
 	switch {

@@ -213,7 +213,34 @@ func (d *Dossier) readingFigures() []figure {
 	p := draw(164, "reset, s", func(r Reading) Number { return r.Reset }, d.loop.IdealReset)
 	at, name := d.clock(0, s.n())
 	p.marks(at, name)
-	return []figure{{"Tuning in service over the span", g.svg("gain and reset in service over time"), "Dots: readings, with their range. Dashed: the list."}}
+	out := []figure{{"Tuning in service over the span", g.svg("gain and reset in service over time"), "Dots: readings, with their range. Dashed: the list."}}
+	if len(d.Scheduled) > 1 {
+		var x, y []float64
+		for _, r := range d.Readings {
+			if r.Gain.Known() {
+				x, y = append(x, r.atPV), append(y, r.Gain.Value)
+			}
+		}
+		out = append(out, figure{"Gain in service against PV", d.scatter(x, y, "gain, %/%", "PV, "+d.unit()), "A curve that repeats is a schedule, not a change."})
+	}
+	return out
+}
+
+// scatter draws y against x.
+func (d *Dossier) scatter(x, y []float64, name, under string) template.HTML {
+	g := newDrawing(wide, 240)
+	x0, x1 := extent(x)
+	y0, y1 := extent(y)
+	p := g.panel(56, 20, 420, 180, x0, x1, y0, y1)
+	p.frame(name)
+	for i := range x {
+		if x[i] == x[i] && y[i] == y[i] {
+			g.add(`<circle cx="%s" cy="%s" r="2.6" class="dot"/>`, px(p.x(x[i])), px(p.y(y[i])))
+		}
+	}
+	p.marks(ticks(p.x0, p.x1, 6), tick)
+	g.text(56+420, 234, "end", "lab", under)
+	return g.svg(name + " against " + under)
 }
 
 // fitFigures draw the model over the windows it was fitted to.
@@ -240,7 +267,15 @@ func (d *Dossier) fitFigures() []figure {
 		left, top := 56+float64(i%2)*(wide/2), 20+float64(i/2)*190
 		d.fitPanel(g, w, f, left, top, f.starts[k])
 	}
-	return []figure{{"The model over the moves it was fitted to", g.svg("model over the data of the events"), "Line: PV. Blue dashed: the model, answering the recorded OP. Thin line below: OP, in its own scale."}}
+	out := []figure{{"The model over the moves it was fitted to", g.svg("model over the data of the events"), "Line: PV. Blue dashed: the model, answering the recorded OP. Thin line below: OP, in its own scale."}}
+	if len(d.Process.points) >= 4 {
+		var x, y []float64
+		for _, p := range d.Process.points {
+			x, y = append(x, p[0]), append(y, p[1])
+		}
+		out = append(out, figure{"Process gain of single events against PV", d.scatter(x, y, "process gain of the event", "PV in the middle of it, "+d.unit()), "Lag and dead time are those of the common model."})
+	}
+	return out
 }
 
 func (d *Dossier) fitPanel(g *drawing, w fit.Window, f *fitted, left, top float64, at0 int64) {

@@ -18,6 +18,8 @@ type Process struct {
 	Model   []Fact      `json:"model"`
 	Verdict fit.Verdict `json:"verdict"`
 	ByPoint []Fact      `json:"gain_against_operating_point"`
+
+	points [][2]float64 // PV, process gain of single events; where they differ in PV
 }
 
 // Event is a move of SP or OP, or a load event, from rest.
@@ -49,6 +51,7 @@ func (s *series) process(l *configs.Loop, ev []event) (p Process, f *fitted) {
 	counts := map[string]int{}
 	usable := map[string]int{}
 	f = &fitted{options: fit.Options{Kinds: kindsOf(l), Interpolate: s.between(l)}}
+	preferSettled(ev)
 	for _, e := range ev {
 		counts[e.kind]++
 		if e.usable {
@@ -93,8 +96,29 @@ func (s *series) process(l *configs.Loop, ev []event) (p Process, f *fitted) {
 	f.verdict = fit.Judge(r, f.windows, f.options, facts)
 	p.Verdict = f.verdict
 	p.Model = modelFacts(r, s)
-	p.ByPoint = s.byPoint(f)
+	p.ByPoint, p.points = s.byPoint(f)
 	return p, f
+}
+
+// preferSettled keeps moves out of the fit that were cut short before PV had come
+// to rest, where both directions have others: what lasts long holds much load.
+func preferSettled(ev []event) {
+	up, down := 0, 0
+	for _, e := range ev {
+		if e.usable && e.settled && e.movePct > 0 {
+			up++
+		} else if e.usable && e.settled {
+			down++
+		}
+	}
+	if up == 0 || down == 0 || up+down < 3 {
+		return
+	}
+	for i := range ev {
+		if e := &ev[i]; e.usable && !e.settled {
+			e.usable, e.why = false, "PV did not come to rest after it; others did"
+		}
+	}
 }
 
 // kindsOf are the shapes that the loop list leaves open.
@@ -195,24 +219,22 @@ func modelFacts(r fit.Result, s *series) []Fact {
 }
 
 // byPoint compares the process gain of single events with where they were.
-func (s *series) byPoint(f *fitted) []Fact {
+func (s *series) byPoint(f *fitted) ([]Fact, [][2]float64) {
 	var at, g []float64
-	for i, w := range f.windows {
-		if slices.Contains(f.result.LeftOut, i) {
-			continue
-		}
+	// Those left out of the common model, too: another gain is a reason to differ.
+	for _, w := range f.windows {
 		k, r2, err := fit.GainOf(w, f.result.Model, f.options)
-		if err == nil && r2 > 0.7 && k*f.result.Model.Gain > 0 {
+		if err == nil && r2 > 0.9 && k*f.result.Model.Gain > 0 {
 			at, g = append(at, s.loop.PVLow+s.pvUnits(w.AtPV)), append(g, math.Abs(k))
 		}
 	}
 	const label = "process gain against operating point"
 	if len(g) < 4 {
-		return []Fact{say("by_point", label, fmt.Sprintf("cannot be told: %d events show a gain of their own, four are needed", len(g)))}
+		return []Fact{say("by_point", label, fmt.Sprintf("cannot be told: %d events show a gain of their own, four are needed", len(g)))}, nil
 	}
 	sorted := slices.Sorted(slices.Values(at))
 	if (sorted[len(sorted)-1] - sorted[0]) < 0.05*s.loop.PVSpan() {
-		return []Fact{say("by_point", label, "cannot be told: all events lie within 5 % of span")}
+		return []Fact{say("by_point", label, "cannot be told: all events lie within 5 % of span")}, nil
 	}
 	lg := make([]float64, len(g))
 	for i := range g {
@@ -229,5 +251,9 @@ func (s *series) byPoint(f *fitted) []Fact {
 	} else {
 		note += ": no clear curve"
 	}
-	return []Fact{fact("by_point", label, n, note)}
+	var pts [][2]float64
+	for i := range g {
+		pts = append(pts, [2]float64{at[i], g[i]})
+	}
+	return []Fact{fact("by_point", label, n, note)}, pts
 }

@@ -6,6 +6,8 @@ import (
 	"math/rand/v2"
 	"testing"
 
+	"midwatch/alert/dossier/process"
+	"midwatch/alert/dossier/tune"
 	"midwatch/collector"
 	"midwatch/configs"
 )
@@ -130,5 +132,48 @@ func TestNumbersSayWhatTheyAre(t *testing.T) {
 		if err != nil || string(b) != c.json {
 			t.Errorf("JSON %s, want %s (%v)", b, c.json, err)
 		}
+	}
+}
+
+// Idle and area index on simulated load responses, one condition each: the
+// directions that their papers give.
+func TestLoadIndicesOnSimulatedLoops(t *testing.T) {
+	m := process.Model{Gain: 1, LagsS: []float64{60}, ThetaS: 12}
+	good := tune.SIMC(m, m.ThetaS)
+	index := func(c tune.Tuning) (idle, area float64) {
+		tr := tune.Simulate(m, c, tune.Setup{LoadStep: 8, ScanS: 1, StepS: 1, SpanS: 2400})
+		r := rand.New(rand.NewPCG(8, 1))
+		const before = 200
+		s := frameSeries(before+len(tr.PV), 1, func(k int) float64 {
+			if k < before {
+				return 50 + 0.03*r.NormFloat64()
+			}
+			return 50 + tr.PV[k-before] + 0.03*r.NormFloat64()
+		}, func(k int) float64 {
+			if k < before {
+				return 40
+			}
+			return 40 + tr.OP[k-before]
+		})
+		for _, e := range s.events() {
+			if e.kind == loadEvent && e.settled {
+				return e.idle, e.area
+			}
+		}
+		t.Fatalf("no load event under %+v", c)
+		return 0, 0
+	}
+	gi, ga := index(good)
+	si, sa := index(tune.Tuning{Kc: good.Kc / 8, TiS: good.TiS})
+	oi, oa := index(tune.Tuning{Kc: good.Kc * 1.1, TiS: good.TiS / 3.4})
+	t.Logf("idle, area index: SIMC %.2f %.2f; gain/8 %.2f %.2f; reset/3.4 %.2f %.2f", gi, ga, si, sa, oi, oa)
+	if !(si > 0.3) || !(si > gi+0.2) {
+		t.Errorf("idle index: sluggish %.2f, good %.2f", si, gi)
+	}
+	if !(oa < 0.6) || !(sa > 0.7) {
+		t.Errorf("area index: swinging %.2f, sluggish %.2f", oa, sa)
+	}
+	if !(oi < 0) {
+		t.Errorf("idle index of a swinging loop %.2f", oi)
 	}
 }

@@ -18,7 +18,6 @@ type tuningChange struct {
 	k0, k1        float64 // %/%; NaN unknown
 	t0, t1        float64 // s
 	read          bool
-	cause         string
 	before, after string
 	between       [2]int64 // readings that it lies between, ms UTC; zero: known better
 }
@@ -108,8 +107,18 @@ func about(v float64) float64 {
 }
 
 // tuning sums up the tuning in service against the list.
-func (s *series) tuning(l *configs.Loop, w watched, cs []tuningChange, eps []Episode) []Fact {
+func (s *series) tuning(in *Input, w watched, cs []tuningChange, eps []Episode) []Fact {
+	l := in.Loop
 	out := []Fact{say("list", "on the list", l.DescribeTuning())}
+	if k, t := w.tags[0], w.tags[1]; k > 0 || t > 0 {
+		if k == 0 {
+			k = math.NaN()
+		}
+		if t == 0 {
+			t = math.NaN()
+		}
+		out = append(out, say("tags", "by its tags, newest", faceplate(l, k, t)))
+	}
 	v := w.view
 	if n := len(w.readings); n > 0 {
 		r := w.readings[n-1]
@@ -134,9 +143,9 @@ func (s *series) tuning(l *configs.Loop, w watched, cs []tuningChange, eps []Epi
 		if c.read {
 			how = "read from its tags"
 		} else if c.between[0] > 0 {
-			how = "readings before and after differ; it lies between " + detect.FormatTime(c.between[0]) + " and " + detect.FormatTime(c.between[1])
+			how = "readings before and after differ; it lies between " + in.at(c.between[0]).Format("15:04") + " and " + in.at(c.between[1]).Format("2 Jan 15:04")
 		}
-		out = append(out, say("change", detect.FormatTime(c.at), fmt.Sprintf("from %s to %s (%s)", c.before, c.after, how)))
+		out = append(out, say("change", "change, "+in.at(c.at).Format("2 Jan 2006 15:04"), fmt.Sprintf("from %s to %s (%s)", c.before, c.after, how)))
 	}
 	if f, ok := windUp(eps); ok {
 		out = append(out, f)

@@ -15,6 +15,7 @@ type watched struct {
 	spells   []spell
 	readings []Reading
 	view     detect.View
+	tags     [2]float64 // newest gain (%/%) and reset (s) read from tags; 0 none
 }
 
 // spell is a stretch of slots of data time in which the loop swung with one
@@ -23,7 +24,6 @@ type spell struct {
 	from, to        int64 // ms UTC
 	period, amp     []float64
 	regular, shape  []float64
-	growing         bool
 	periodLow, high float64
 }
 
@@ -32,9 +32,17 @@ type spell struct {
 func look(in *Input, frames []collector.Frame) watched {
 	var out watched
 	w := detect.New(in.Loop, 0, in.Detect)
-	var lastK, lastT float64
+	// The watch keeps the newest reading of each time scale and shows the best of
+	// them: one that comes again is old.
+	seen := map[[2]float64]bool{}
 	for i := range frames {
 		f := &frames[i]
+		if f.Gain > 0 {
+			out.tags[0] = float64(f.Gain)
+		}
+		if f.Reset > 0 {
+			out.tags[1] = float64(f.Reset)
+		}
 		w.Step(f, func(x *detect.Finding) { out.findings = append(out.findings, *x) })
 		e, ok := w.TakeEvidence()
 		if !ok {
@@ -42,8 +50,8 @@ func look(in *Input, frames []collector.Frame) watched {
 		}
 		out.take(e)
 		v := w.View()
-		if v.GainPct == v.GainPct && (v.GainPct != lastK || v.ResetS != lastT && v.ResetS == v.ResetS) {
-			lastK, lastT = v.GainPct, v.ResetS
+		if key := [2]float64{v.GainPct, nanTo(v.ResetS, 0)}; v.GainPct == v.GainPct && !seen[key] {
+			seen[key] = true
 			r := Reading{at: f.Time, At: detect.FormatTime(f.Time), Gain: ranged(v.GainPct, v.GainLow, v.GainHigh, "%/%"),
 				Reset: none("no integral action seen"), atPV: float64(f.PV)}
 			if v.ResetS == v.ResetS {
@@ -108,7 +116,6 @@ func (o *watched) take(e detect.Evidence) {
 	}
 	s := &o.spells[n-1]
 	s.to = e.Slot
-	s.growing = s.growing || e.Growing
 	s.period, s.amp = append(s.period, e.PeriodS), append(s.amp, e.Amp)
 	s.regular = append(s.regular, e.Regular)
 	s.periodLow, s.high = math.Min(s.periodLow, e.PeriodS), math.Max(s.high, e.PeriodS)

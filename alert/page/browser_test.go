@@ -180,7 +180,7 @@ func serve(t *testing.T, h *fakeHouse, c configs.Page) (*Page, string) {
 	if err != nil {
 		t.Fatal(err)
 	}
-	srv := Server(p.Handler(), p.o.Log)
+	srv := &http.Server{Handler: p.Handler()}
 	go srv.Serve(ln)
 	t.Cleanup(func() { srv.Close() })
 	return p, "http://" + ln.Addr().String() + "/"

@@ -77,10 +77,9 @@ func (p *Page) card(ctx context.Context, l *look, e *alert.Episode, byName map[s
 	if e.Hold != nil {
 		c.Hold = "cannot be seen since " + clock(e.Hold.Since, l.now, l.zone) + ": " + e.Hold.Why
 	}
-	if what, ok := timeLeft(&f); ok {
-		left := float64(f.At)/1000 + leftSeconds(&f) - float64(l.now.UnixMilli())/1000
-		c.Left = what + " about " + clock(l.now.UnixMilli()+int64(left*1000), l.now, l.zone)
-		if left > 60 {
+	if at, what, ok := (&trouble{Finding: f}).meets(); ok {
+		c.Left = what + dueWord(at, l.now) + clock(at, l.now, l.zone)
+		if left := float64(at-l.now.UnixMilli()) / 1000; left > 60 {
 			c.Left += ", " + seconds(left) + " left"
 		}
 	}

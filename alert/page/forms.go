@@ -1,8 +1,11 @@
 package page
 
 import (
+	"bytes"
+	"encoding/json"
 	"errors"
 	"fmt"
+	"io"
 	"net/http"
 	"net/url"
 	"strconv"
@@ -22,6 +25,36 @@ func who(r *http.Request) (string, error) {
 		return "", badRequest{errors.New("no name was given; hint: say who you are, it goes into the journal")}
 	}
 	return n, nil
+}
+
+// signed puts the name of the token into what a program asks for: nobody signs
+// for another.
+func signed(next http.Handler) http.Handler {
+	return http.HandlerFunc(func(w http.ResponseWriter, r *http.Request) {
+		name := VisitorOf(r.Context()).Name
+		if r.Method != http.MethodPost || name == "" {
+			next.ServeHTTP(w, r)
+			return
+		}
+		b, err := io.ReadAll(r.Body)
+		if err != nil {
+			http.Error(w, "the request cannot be read; hint: it has up to 64 KiB", http.StatusRequestEntityTooLarge)
+			return
+		}
+		var fields map[string]json.RawMessage
+		if len(b) > 0 && json.Unmarshal(b, &fields) == nil && fields != nil {
+			for k := range fields {
+				if strings.EqualFold(k, "who") {
+					delete(fields, k)
+				}
+			}
+			// A string always has a form in JSON, and so has what was read from it.
+			fields["who"], _ = json.Marshal(name)
+			b, _ = json.Marshal(fields)
+		}
+		r.Body, r.ContentLength = io.NopCloser(bytes.NewReader(b)), int64(len(b))
+		next.ServeHTTP(w, r)
+	})
 }
 
 func (p *Page) acknowledge(w http.ResponseWriter, r *http.Request) {

@@ -127,7 +127,8 @@ func TestGate(t *testing.T) {
 	var log bytes.Buffer
 	p, err := New(Options{House: h, Page: configs.Page{Listen: "127.0.0.1:0", TokensFile: tokensFile(t), URL: "https://watch.kestrel-fen.example/midwatch/", Prefix: "/midwatch"},
 		Clock: h.clock, Log: slog.New(slog.NewTextHandler(&log, nil)), API: http.HandlerFunc(func(w http.ResponseWriter, r *http.Request) {
-			fmt.Fprintf(w, "%s %v", VisitorOf(r.Context()).Name, VisitorOf(r.Context()).Act)
+			b, _ := io.ReadAll(r.Body)
+			fmt.Fprintf(w, "%s%s %v", b, VisitorOf(r.Context()).Name, VisitorOf(r.Context()).Act)
 		})})
 	if err != nil {
 		t.Fatal(err)
@@ -155,6 +156,8 @@ func TestGate(t *testing.T) {
 		{"from another origin", "POST", "/loops/AIC-204/shelve", "why=x&hours=8", []string{"Authorization", "Bearer may-act", "Content-Type", formType, "Origin", "https://evil.example"}, 403, "another site"},
 		{"may look only", "POST", "/loops/AIC-204/shelve", "why=x&hours=8", []string{"Authorization", "Bearer look-at-it", "Content-Type", formType}, 403, "may only look"},
 		{"may look only, by the interface", "POST", "/api/loops/AIC-204/shelve", "{}", []string{"Authorization", "Bearer look-at-it"}, 403, "may only look"},
+		{"signs as itself", "POST", "/api/episodes/1/acknowledge", `{"who":"the boss","Who":"the boss","why":"x"}`, []string{"Authorization", "Bearer may-act"}, 200, `{"who":"A. Reed","why":"x"}A. Reed true`},
+		{"no body", "POST", "/api/reload", "", []string{"Authorization", "Bearer may-act"}, 200, "A. Reed true"},
 		{"too large", "POST", "/loops/AIC-204/shelve", strings.Repeat("x", maxBody+1), []string{"Authorization", "Bearer may-act", "Content-Type", formType}, 413, "too large"},
 		{"no such method", "DELETE", "/loops/AIC-204", "", []string{"Authorization", "Bearer may-act"}, 404, ""},
 		{"acts", "POST", "/loops/AIC-204/shelve", "why=pump+exchange&hours=8", []string{"Authorization", "Bearer may-act", "Content-Type", formType, "Sec-Fetch-Site", "same-origin"}, 303, ""},

@@ -116,13 +116,13 @@ func need(s *LoopState, ts []trouble, since int64) int {
 // lastToSee is the last place with something to see.
 const lastToSee = 9
 
-// pick gives the loops that pass the filter, in order of need, then by name.
+// pick gives the loops that pass the filter, in order of need, then as the desk
+// has them, then by name.
 func (l *look) pick(f filter) []*LoopState {
 	since := l.now.Add(-time.Duration(f.Hours) * time.Hour).UnixMilli()
 	type ranked struct {
 		*LoopState
-		need int
-		at   int64
+		need, place int
 	}
 	words := strings.Fields(strings.ToLower(f.Text))
 	var all []ranked
@@ -137,12 +137,12 @@ func (l *look) pick(f filter) []*LoopState {
 			continue
 		}
 		if len(ts) > 0 {
-			r.at = -ts[0].Since
+			r.place = ts[0].Place
 		}
 		all = append(all, r)
 	}
 	slices.SortStableFunc(all, func(a, b ranked) int {
-		return cmp.Or(cmp.Compare(a.need, b.need), cmp.Compare(a.at, b.at), strings.Compare(a.Loop.Name, b.Loop.Name))
+		return cmp.Or(cmp.Compare(a.need, b.need), cmp.Compare(a.place, b.place), strings.Compare(a.Loop.Name, b.Loop.Name))
 	})
 	out := make([]*LoopState, len(all))
 	for i := range all {

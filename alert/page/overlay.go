@@ -51,8 +51,10 @@ func overlays(t *trend, ts []trouble, v *detect.View) []overlay {
 			}
 			o := overlay{Name: "envelope", On: "pv", Shown: x.open()}
 			mid := middle(t, x.Since, until)
+			// The fit holds about the time it was made.
+			from, to := f.At-int64(12000*period), f.At+int64(3000*period)
 			for _, at := range t.Times {
-				if at < x.Since || at > until {
+				if at < max(x.Since, from) || at > min(until, to) {
 					continue
 				}
 				a := amp * math.Pow(growth, float64(at-f.At)/1000/period)

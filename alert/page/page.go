@@ -15,7 +15,6 @@ package page
 
 import (
 	"context"
-	"crypto/tls"
 	"errors"
 	"fmt"
 	"log/slog"
@@ -42,12 +41,13 @@ type Options struct {
 type Page struct {
 	o       Options
 	gate    *gate
-	local   http.Handler
 	glance  glance
 	strips  strips
 	sparks  sparks
 	reading chan struct{} // bounds how many spans are read at once
 	streams chan struct{}
+	// dossiers bounds how many are made at once: one.
+	dossiers chan struct{}
 
 	mu   sync.Mutex
 	said map[string]string
@@ -69,7 +69,7 @@ func New(o Options) (*Page, error) {
 	if err := exposed(o.Page.Listen, o.Page.CertFile != "" && o.Page.KeyFile != "", o.Page.TokensFile != ""); err != nil {
 		return nil, err
 	}
-	p := &Page{o: o, reading: make(chan struct{}, 4), streams: make(chan struct{}, maxStreams), said: map[string]string{}}
+	p := &Page{o: o, reading: make(chan struct{}, 4), streams: make(chan struct{}, maxStreams), dossiers: make(chan struct{}, 1), said: map[string]string{}}
 	var tokens *tokenFile
 	if o.Page.TokensFile != "" {
 		var err error
@@ -77,41 +77,12 @@ func New(o Options) (*Page, error) {
 			return nil, err
 		}
 	}
-	mux := p.routes()
-	p.gate = newGate(p, mux, tokens)
-	p.local = http.HandlerFunc(func(w http.ResponseWriter, r *http.Request) {
-		r.Body = http.MaxBytesReader(w, r.Body, maxBody)
-		mux.ServeHTTP(w, r.WithContext(context.WithValue(r.Context(), visitorKey{}, Visitor{Act: true})))
-	})
+	p.gate = newGate(p, p.routes(), tokens)
 	return p, nil
 }
 
 // Handler is the page as the network sees it.
 func (p *Page) Handler() http.Handler { return p.gate }
-
-// Local is the page for the Unix socket in the data folder: who can open the
-// socket needs no token.
-func (p *Page) Local() http.Handler { return p.local }
-
-// Server is an http.Server for a handler of the page, with limits on headers and
-// idle clients; the gate limits bodies and slow readers.
-func Server(h http.Handler, log *slog.Logger) *http.Server {
-	return &http.Server{Handler: h, ReadHeaderTimeout: 10 * time.Second,
-		IdleTimeout: 2 * time.Minute, MaxHeaderBytes: 32 << 10, ErrorLog: slog.NewLogLogger(log.Handler(), slog.LevelDebug),
-		TLSConfig: &tls.Config{MinVersion: tls.VersionTLS12}}
-}
-
-// Warm reads the strips of all loops once, so that the first look at a long
-// list does not wait. It ends with ctx.
-func (p *Page) Warm(ctx context.Context) error {
-	loops := p.o.House.Loops()
-	for i := range loops {
-		if _, err := p.strips.upTo(ctx, p.o.House, loops[i].Loop, p.o.Clock(), 0); err != nil {
-			return err
-		}
-	}
-	return nil
-}
 
 func (p *Page) routes() *http.ServeMux {
 	m := http.NewServeMux()
@@ -130,9 +101,10 @@ func (p *Page) routes() *http.ServeMux {
 	m.HandleFunc("GET /sign-in", func(w http.ResponseWriter, r *http.Request) { p.signInPage(w, r, http.StatusOK, "") })
 	m.HandleFunc("GET /assets/{file}", serveAsset)
 	m.HandleFunc("GET /api/loops/{loop}/trend", p.serveTrend)
+	m.HandleFunc("GET /api/loops/{loop}/dossier", p.serveDossier)
 	m.HandleFunc("GET /api/stream", p.serveStream)
 	if p.o.API != nil {
-		m.Handle("/api/", p.o.API)
+		m.Handle("/api/", signed(p.o.API))
 		m.Handle("/healthz", p.o.API)
 		m.Handle("/metrics", p.o.API)
 	}

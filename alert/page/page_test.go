@@ -1,27 +1,20 @@
 package page
 
 import (
-	"bufio"
 	"compress/gzip"
 	"context"
 	"encoding/csv"
-	"encoding/json"
 	"encoding/xml"
 	"io"
-	"iter"
 	"math"
 	"net/http"
 	"net/url"
 	"regexp"
-	"strconv"
 	"strings"
 	"testing"
 	"time"
 
-	"go.uber.org/goleak"
-
 	"midwatch/alert"
-	"midwatch/collector"
 	"midwatch/configs"
 	"midwatch/detect"
 )
@@ -35,10 +28,17 @@ func newPage(t *testing.T, h *fakeHouse) *Page {
 	return p
 }
 
+// inside is the page behind its gate, for a visitor who may act.
+func inside(p *Page) http.Handler {
+	return http.HandlerFunc(func(w http.ResponseWriter, r *http.Request) {
+		p.gate.next.ServeHTTP(w, r.WithContext(context.WithValue(r.Context(), visitorKey{}, Visitor{Act: true})))
+	})
+}
+
 // got asks for a view as a person's browser with scripts off would.
 func got(t *testing.T, p *Page, path string) (int, string) {
 	t.Helper()
-	w := call(t, p.Local(), "GET", path, "", "Accept", "text/html")
+	w := call(t, inside(p), "GET", path, "", "Accept", "text/html")
 	return w.Code, w.Body.String()
 }
 
@@ -145,10 +145,10 @@ func TestHostileText(t *testing.T) {
 			}
 		}
 	}
-	if w := call(t, p.Local(), "GET", "/strips.svg?hours=24", ""); w.Code != 200 || xmlProblem(w.Body.String()) != nil || !strings.Contains(w.Body.String(), "growing since") {
+	if w := call(t, inside(p), "GET", "/strips.svg?hours=24", ""); w.Code != 200 || xmlProblem(w.Body.String()) != nil || !strings.Contains(w.Body.String(), "growing since") {
 		t.Errorf("strips.svg: %d, %v", w.Code, xmlProblem(w.Body.String()))
 	}
-	if w := call(t, p.Local(), "GET", "/loops/AIC-204/trend.svg", ""); xmlProblem(w.Body.String()) != nil {
+	if w := call(t, inside(p), "GET", "/loops/AIC-204/trend.svg", ""); xmlProblem(w.Body.String()) != nil {
 		t.Error(xmlProblem(w.Body.String()))
 	}
 	rows, err := csv.NewReader(strings.NewReader(call(t, p.gate.next, "GET", "/loops.csv", "").Body.String())).ReadAll()
@@ -203,243 +203,23 @@ func TestFirstViewIsLight(t *testing.T) {
 	}
 }
 
-// counting counts what is read of the window.
-type counting struct {
-	*fakeHouse
-	frames int
-}
-
-func (c *counting) Frames(ctx context.Context, loop string, from, to int64) iter.Seq2[collector.Frame, error] {
-	return func(yield func(collector.Frame, error) bool) {
-		for f, err := range c.fakeHouse.Frames(ctx, loop, from, to) {
-			c.frames++
-			if !yield(f, err) {
-				return
-			}
-		}
-	}
-}
-
-func TestStripsReadOnce(t *testing.T) {
-	h := newFake()
-	h.frozen = true
-	c := &counting{fakeHouse: h}
-	var s strips
-	l := h.find("AIC-204").Loop
-	b, err := s.upTo(t.Context(), c, l, h.base, 12*time.Hour)
-	if err != nil {
-		t.Fatal(err)
-	}
-	if len(b) != 240 || c.frames < 24*1800-100 || c.frames > 24*1800+100 {
-		t.Fatalf("%d buckets from %d frames, want 240 from a day", len(b), c.frames)
-	}
-	// Every bucket holds the least and the greatest of its frames.
-	end := h.base.UnixMilli() / bucketMs
-	low, high := math.Inf(1), math.Inf(-1)
-	for f := range h.Frames(t.Context(), "AIC-204", (end-3)*bucketMs, (end-2)*bucketMs) {
-		low, high = min(low, float64(f.PV)/2*100), max(high, float64(f.PV)/2*100)
-	}
-	x := b[len(b)-4]
-	if math.Abs(widenPV(x.low)-low) > 0.005 || math.Abs(widenPV(x.high)-high) > 0.005 || x.saw != sawData {
-		t.Errorf("bucket %v to %v (%b), want %v to %v", widenPV(x.low), widenPV(x.high), x.saw, low, high)
-	}
-	c.frames = 0
-	if _, err := s.upTo(t.Context(), c, l, h.base, 12*time.Hour); err != nil || c.frames != 0 {
-		t.Errorf("a second look read %d frames, %v", c.frames, err)
-	}
-	h.base = h.base.Add(9 * time.Minute)
-	b2, err := s.upTo(t.Context(), c, l, h.base, 12*time.Hour)
-	if err != nil || c.frames != 270 {
-		t.Errorf("nine minutes on, %d frames were read, want 270; %v", c.frames, err)
-	}
-	if n := len(b) - 4; b2[n-3] != b[n] {
-		t.Errorf("what was seen moved by other than three buckets: %v and %v", b2[n-3], b[n])
-	}
-	h.base = h.base.Add(30 * time.Hour)
-	if b, err = s.upTo(t.Context(), c, l, h.base, 24*time.Hour); err != nil || len(b) != ringBuckets || b[0].saw&sawData == 0 {
-		t.Errorf("after a day nobody looked: %d buckets, first %v, %v", len(b), b[0], err)
-	}
-	other := *l
-	other.PVHigh = 4
-	c.frames = 0
-	if _, err := s.upTo(t.Context(), c, &other, h.base, 12*time.Hour); err != nil || c.frames < 40000 {
-		t.Errorf("another range is read anew: %d frames, %v", c.frames, err)
-	}
-}
-
-func TestTrace(t *testing.T) {
-	d := func(pct float64) bucket { return bucket{squeezePV(pct), squeezePV(pct), sawData} }
-	for _, c := range []struct {
-		name string
-		b    []bucket
-		want string
-	}{
-		{"nothing", []bucket{{}, {}}, ""},
-		{"flat", []bucket{d(50), d(50)}, "M0 30l 1 0 0 0-1 0z"},
-		{"a gap", []bucket{d(50), {}, d(50)}, "M0 30l 0 0zM2 30l 0 0z"},
-		{"up", []bucket{d(48), d(52)}, "M0 58l 1-56 0 0-1 56z"},
-	} {
-		if got := trace(c.b); got != c.want {
-			t.Errorf("%s: %q, want %q", c.name, got, c.want)
-		}
-	}
-}
-
-func TestTrendKeepsExtremes(t *testing.T) {
-	h := newFake()
-	h.frozen = true
-	const spike = 37 * 60
-	h.add("PIC-999", "", "", "bar", 0, 100, 1000, detect.Judged, "", func(s float64, n func() float64) (float64, float64, float64, collector.Mode, collector.Flags) {
-		switch {
-		case s == -spike:
-			return 91, 50, 3, collector.Auto, 0
-		case s == -spike-1:
-			return 7, 50, 97, collector.Auto, 0
-		case s > -900 && s < -600:
-			return math.NaN(), 50, 50, collector.Auto, collector.Gap
-		case s > -400 && s < -300:
-			return 50, 50, 50, collector.Manual, 0
-		}
-		return 50 + n(), 50, 50, collector.Auto, 0
-	})
-	to := h.base.UnixMilli()
-	tr, err := readTrend(t.Context(), h, h.find("PIC-999").Loop, to-3600*1000, to, 60)
-	if err != nil {
-		t.Fatal(err)
-	}
-	low, high, nulls := float32(50), float32(50), 0
-	for i, v := range tr.PV {
-		if v != v {
-			nulls++
-			continue
-		}
-		low, high = min(low, v), max(high, v)
-		if i > 0 && tr.Times[i] <= tr.Times[i-1] {
-			t.Fatalf("times do not grow at %d", i)
-		}
-	}
-	if low != 7 || high != 91 {
-		t.Errorf("PV from %v to %v, want 7 to 91", low, high)
-	}
-	if nulls == 0 || tr.Frames != 3600 || len(tr.Times) > 500 || tr.BucketMs != 60000 {
-		t.Errorf("%d nulls, %d frames, %d rows, buckets of %d ms", nulls, tr.Frames, len(tr.Times), tr.BucketMs)
-	}
-	whats := map[string]run{}
-	for _, r := range tr.Runs {
-		whats[r.What] = r
-	}
-	if r := whats["gap"]; r.From != to-899000 || r.To != to-600000 {
-		t.Errorf("gap %+v", r)
-	}
-	if r := whats["inactive"]; r.Word != "in manual" || r.From != to-399000 {
-		t.Errorf("manual %+v", r)
-	}
-	if len(tr.Changes) != 2 || tr.Changes[0].Word != "mode manual" {
-		t.Errorf("changes %+v", tr.Changes)
-	}
-	b, err := json.Marshal(tr)
-	if err != nil || !json.Valid(b) || !strings.Contains(string(b), "null") {
-		t.Errorf("as JSON: %v", err)
-	}
-}
-
-func TestOverlays(t *testing.T) {
+func TestDossier(t *testing.T) {
 	h := newFake()
 	h.frozen = true
 	p := newPage(t, h)
-	names := func(path string) map[string]overlay {
-		w := call(t, p.gate.next, "GET", path, "")
-		// Columns are written only; here they are read as plain numbers.
-		var raw struct {
-			Overlays []struct {
-				Name      string
-				T         []int64
-				Low, High []*float32
-			}
+	for form, want := range map[string]string{"": "AIC-201", "json": `"relation": "outer"`, "csv": "time,loop,pv,sp,op"} {
+		w := call(t, inside(p), "GET", "/api/loops/FIC-202/dossier?hours=12&form="+form, "")
+		if body := w.Body.String(); w.Code != 200 || !strings.Contains(body, want) && !strings.Contains(strings.ReplaceAll(body, ":", ": "), want) {
+			t.Errorf("form %q: %d, %.200s", form, w.Code, body)
 		}
-		if err := json.Unmarshal(w.Body.Bytes(), &raw); err != nil {
-			t.Fatal(err)
-		}
-		out := map[string]overlay{}
-		for _, o := range raw.Overlays {
-			x := overlay{Name: o.Name, Times: o.T}
-			for _, v := range o.Low {
-				x.Low = append(x.Low, *v)
-			}
-			for _, v := range o.High {
-				x.High = append(x.High, *v)
-			}
-			out[o.Name] = x
-		}
-		return out
-	}
-	o := names("/api/loops/AIC-204/trend?hours=4")
-	env := o["envelope"]
-	if n := len(env.High); n < 100 || env.High[n-1]-env.High[0] < 0.05 || math.Abs(float64(env.High[n-1]+env.Low[n-1])/2-1) > 0.001 {
-		t.Errorf("envelope of %d points grows about SP", len(env.High))
-	}
-	if n := len(o["half-cycles"].Times); n < 15 || n > 30 {
-		t.Errorf("%d half-cycles in 1.5 h of a cycle of 372 s", n)
-	}
-	off := names("/api/loops/AIC-212/trend?hours=12")["offset"]
-	if n := len(off.Low); n < 10 || math.Abs(float64(off.Low[n/2])-6.65) > 0.01 {
-		t.Errorf("offset line of %d points lies where PV stayed", n)
-	}
-	if d := names("/api/loops/LIC-310/trend?hours=12")["course of the recovery"]; len(d.Low) < 10 || d.Low[0] < d.Low[len(d.Low)-1]+1 {
-		t.Errorf("course of the recovery: %d points", len(d.Low))
-	}
-}
-
-func TestWindUpOverhang(t *testing.T) {
-	h := newFake()
-	h.frozen = true
-	l := h.add("LIC-9", "", "", "", 0, 100, 1000, detect.Judged, "", func(s float64, n func() float64) (float64, float64, float64, collector.Mode, collector.Flags) {
-		pv := 50.0
-		if s > -600 {
-			pv = 40 // reverse action: OP goes up
-		}
-		if s > -300 {
-			pv = 60 // the error has changed sign, and OP stays at its limit
-		}
-		op := 50.0
-		if s > -500 && s < -100 {
-			op = 100
-		}
-		return pv, 50, op, collector.Auto, 0
-	})
-	to := h.base.UnixMilli()
-	tr, err := readTrend(t.Context(), h, l, to-3600*1000, to, 600)
-	if err != nil {
-		t.Fatal(err)
-	}
-	var limit, over run
-	for _, r := range tr.Runs {
-		switch r.What {
-		case "limit":
-			limit = r
-		case "overhang":
-			over = r
+		if csp := w.Header().Get("Content-Security-Policy"); strings.Contains(csp, "script-src") {
+			t.Errorf("policy %q", csp)
 		}
 	}
-	if limit.From != to-499000 || over.From != to-299000 || over.To != to-100000 {
-		t.Errorf("limit %+v, overhang %+v", limit, over)
-	}
-}
-
-func TestTrendCSV(t *testing.T) {
-	h := newFake()
-	h.frozen = true
-	p := newPage(t, h)
-	w := call(t, p.gate.next, "GET", "/loops/AIC-204/trend.csv?hours=1", "")
-	rows, err := csv.NewReader(w.Body).ReadAll()
-	if err != nil {
-		t.Fatal(err)
-	}
-	if len(rows) != 1801 || strings.Join(rows[0], ",") != "time,loop,pv,sp,op,mode,flags" || rows[1][1] != "AIC-204" || rows[1][5] != "auto" {
-		t.Errorf("%d rows, %v, %v", len(rows), rows[0], rows[1])
-	}
-	if _, err := time.Parse(time.RFC3339Nano, rows[1][0]); err != nil {
-		t.Error(err)
+	for path, code := range map[string]int{"/api/loops/none/dossier": 404, "/api/loops/AIC-204/dossier?from=x": 400, "/api/loops/AIC-204/dossier?from=1000&to=2000": 404} {
+		if w := call(t, inside(p), "GET", path, ""); w.Code != code {
+			t.Errorf("%s: %d, want %d", path, w.Code, code)
+		}
 	}
 }
 
@@ -530,7 +310,7 @@ func TestOrderOfNeed(t *testing.T) {
 	for _, s := range l.pick(filter{Hours: 12}) {
 		names = append(names, s.Loop.Name)
 	}
-	want := "AIC-204 FIC-118 FIC-119 PIC-107 LIC-310 FIC-140 TIC-221 AIC-212 TIC-224 AIC-230 AIC-201 FIC-102 FIC-131 FIC-202 LIC-301 LIC-305 PIC-101"
+	want := "AIC-204 LIC-310 FIC-118 FIC-119 PIC-107 FIC-140 TIC-221 AIC-212 TIC-224 AIC-230 AIC-201 FIC-102 FIC-131 FIC-202 LIC-301 LIC-305 PIC-101"
 	if got := strings.Join(names, " "); got != want {
 		t.Errorf("order of need\n%s\nwant\n%s", got, want)
 	}
@@ -542,83 +322,6 @@ func TestOrderOfNeed(t *testing.T) {
 		if n := len(l.pick(readFilter(v))); n != want {
 			t.Errorf("%s gives %d loops, want %d", q, n, want)
 		}
-	}
-}
-
-func TestStream(t *testing.T) {
-	had := goleak.IgnoreCurrent()
-	t.Cleanup(func() { goleak.VerifyNone(t, had) })
-	h := newFake()
-	_, addr := serve(t, h, configs.Page{})
-	ctx, cancel := context.WithTimeout(t.Context(), 20*time.Second)
-	defer cancel()
-	r, err := http.NewRequestWithContext(ctx, "GET", addr+"api/stream?loop=AIC-204&after="+strconv.FormatInt(h.clock().UnixMilli()-30000, 10), nil)
-	if err != nil {
-		t.Fatal(err)
-	}
-	tr := &http.Transport{}
-	defer tr.CloseIdleConnections()
-	resp, err := tr.RoundTrip(r)
-	if err != nil {
-		t.Fatal(err)
-	}
-	defer resp.Body.Close()
-	if resp.Header.Get("Content-Type") != "text/event-stream" {
-		t.Fatal(resp.Header)
-	}
-	pulses, frames, last := 0, 0, int64(0)
-	revisions := map[uint64]bool{}
-	in := bufio.NewScanner(resp.Body)
-	event := ""
-	for in.Scan() && (pulses < 3 || frames < 15) {
-		if e, ok := strings.CutPrefix(in.Text(), "event: "); ok {
-			event = e
-		}
-		data, ok := strings.CutPrefix(in.Text(), "data: ")
-		if !ok {
-			continue
-		}
-		switch event {
-		case "pulse":
-			var x pulse
-			if err := json.Unmarshal([]byte(data), &x); err != nil || x.Judged != 14 || x.Age == "" {
-				t.Fatalf("%s: %v", data, err)
-			}
-			revisions[x.Revision] = true
-			pulses++
-			if pulses == 1 {
-				if err := h.Acknowledge(h.eps[0].ID, "A. Reed", "", time.Time{}); err != nil {
-					t.Fatal(err)
-				}
-			}
-		case "fresh":
-			var x struct{ T []int64 }
-			if err := json.Unmarshal([]byte(data), &x); err != nil {
-				t.Fatal(err)
-			}
-			for _, at := range x.T {
-				if at <= last {
-					t.Fatalf("frame at %d after %d", at, last)
-				}
-				last = at
-				frames++
-			}
-		}
-	}
-	if pulses < 3 || frames < 15 || len(revisions) != 2 {
-		t.Errorf("%d pulses, %d frames, revisions %v; %v", pulses, frames, revisions, in.Err())
-	}
-	cancel()
-}
-
-func TestStreamsAreBounded(t *testing.T) {
-	h := newFake()
-	p := newPage(t, h)
-	for range maxStreams {
-		p.streams <- struct{}{}
-	}
-	if w := call(t, p.Handler(), "GET", "/api/stream", ""); w.Code != 503 || w.Header().Get("Retry-After") == "" {
-		t.Errorf("answer %d", w.Code)
 	}
 }
 
@@ -642,9 +345,12 @@ func TestWords(t *testing.T) {
 			t.Errorf("%d ms: %q, want %q", ms, got, want)
 		}
 	}
-	f := detect.Finding{Measures: detect.Measures{{Name: "time_to_op_limit_s", Value: 600}, {Name: "time_to_pv_alarm_s", Value: 60}}}
-	if what, _ := timeLeft(&f); what != "PV alarm" || leftSeconds(&f) != 60 {
-		t.Errorf("what comes first: %s in %v s", what, leftSeconds(&f))
+	x := trouble{Finding: detect.Finding{At: now.UnixMilli(), Measures: detect.Measures{{Name: "time_to_op_limit_s", Value: 600}, {Name: "time_to_pv_alarm_s", Value: 60}}}}
+	if at, what, _ := x.meets(); what != "PV alarm" || at != now.UnixMilli()+60000 {
+		t.Errorf("what comes first: %s at %d", what, at)
+	}
+	if _, rest := x.say(now.Add(time.Hour), london); rest != "PV alarm was due about 03:31" {
+		t.Errorf("an hour later: %q", rest)
 	}
 	for _, k := range kindLooks {
 		if !strings.Contains(string(marks), `id="m-`+k.Mark+`"`) {

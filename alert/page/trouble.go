@@ -14,6 +14,7 @@ import (
 // a chart shades.
 type trouble struct {
 	Episode string
+	Place   int // of its episode in the desk's order of urgency
 	Kind    detect.Kind
 	Mark    string
 	Word    string
@@ -60,7 +61,7 @@ func troubles(d Desk, eps []alert.Episode) map[string][]trouble {
 			m := &e.Members[j]
 			f := m.Finding
 			look := lookOf(f.Kind)
-			t := trouble{Episode: e.ID, Kind: f.Kind, Mark: look.Mark, Word: look.Word, Urgency: u, State: state,
+			t := trouble{Episode: e.ID, Place: i, Kind: f.Kind, Mark: look.Mark, Word: look.Word, Urgency: u, State: state,
 				Since: f.Since, Finding: f, Hold: e.Hold, Shelf: e.Shelf}
 			if !m.Open {
 				t.Until = f.At
@@ -84,7 +85,7 @@ func troubles(d Desk, eps []alert.Episode) map[string][]trouble {
 	for _, ts := range out {
 		slices.SortFunc(ts, func(a, b trouble) int {
 			return cmp.Or(boolOrder(b.open(), a.open()), boolOrder(a.quietNow(), b.quietNow()),
-				cmp.Compare(urgencyOrder(a.Urgency), urgencyOrder(b.Urgency)), cmp.Compare(b.Since, a.Since), strings.Compare(a.Episode, b.Episode))
+				cmp.Compare(urgencyOrder(a.Urgency), urgencyOrder(b.Urgency)), cmp.Compare(a.Place, b.Place), cmp.Compare(b.Since, a.Since))
 		})
 	}
 	return out
@@ -119,8 +120,8 @@ func (t *trouble) say(now time.Time, zone *time.Location) (strong, rest string) 
 	if t.Kind == detect.SharedOscillation && len(f.Loops) > 0 {
 		more = append(more, quantity(float64(len(f.Loops)), "loops"))
 	}
-	if left, ok := timeLeft(f); ok {
-		more = append(more, left+" about "+clock(f.At+int64(leftSeconds(f)*1000), now, zone))
+	if at, what, ok := t.meets(); ok && t.open() {
+		more = append(more, what+dueWord(at, now)+clock(at, now, zone))
 	} else if w := sure(f); w != "" && t.Kind != detect.NotInNormalMode && !strings.HasPrefix(w, t.Word) {
 		more = append(more, w)
 	} else if v, ok := f.Measures.Get("period_s"); ok {
@@ -132,24 +133,23 @@ func (t *trouble) say(now time.Time, zone *time.Location) (strong, rest string) 
 	return strong, strings.Join(more, " · ")
 }
 
-// timeLeft names what a growing swing meets first.
-func timeLeft(f *detect.Finding) (string, bool) {
-	op, okOP := f.Measures.Get("time_to_op_limit_s")
-	pv, okPV := f.Measures.Get("time_to_pv_alarm_s")
+// meets says what a growing swing meets first, and when (ms UTC).
+func (t *trouble) meets() (at int64, what string, ok bool) {
+	op, okOP := t.Finding.Measures.Get("time_to_op_limit_s")
+	pv, okPV := t.Finding.Measures.Get("time_to_pv_alarm_s")
 	switch {
 	case okPV && (!okOP || pv < op):
-		return "PV alarm", true
+		return t.Finding.At + int64(pv*1000), "PV alarm", true
 	case okOP:
-		return "OP limit", true
+		return t.Finding.At + int64(op*1000), "OP limit", true
 	}
-	return "", false
+	return 0, "", false
 }
 
-func leftSeconds(f *detect.Finding) float64 {
-	op, okOP := f.Measures.Get("time_to_op_limit_s")
-	pv, okPV := f.Measures.Get("time_to_pv_alarm_s")
-	if okPV && (!okOP || pv < op) {
-		return pv
+// dueWord joins what is met and when: a time that has passed is said to have.
+func dueWord(at int64, now time.Time) string {
+	if at < now.UnixMilli() {
+		return " was due about "
 	}
-	return op
+	return " about "
 }

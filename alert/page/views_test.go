@@ -200,7 +200,7 @@ func TestConnectionLostAndFound(t *testing.T) {
 		t.Fatal(err)
 	}
 	addr := ln.Addr().String()
-	srv := Server(p.Handler(), p.o.Log)
+	srv := &http.Server{Handler: p.Handler()}
 	go srv.Serve(ln)
 	ctx := tab(t, 1280, 900)
 	do(t, ctx, chromedp.Navigate("http://"+addr+"/"))
@@ -214,7 +214,7 @@ func TestConnectionLostAndFound(t *testing.T) {
 	if ln, err = net.Listen("tcp", addr); err != nil {
 		t.Fatal(err)
 	}
-	srv = Server(p.Handler(), p.o.Log)
+	srv = &http.Server{Handler: p.Handler()}
 	go srv.Serve(ln)
 	t.Cleanup(func() { srv.Close() })
 	wait(t, ctx, "document.getElementById('lost').hidden && !document.body.classList.contains('lost')")

@@ -57,10 +57,14 @@ var stateWords = map[detect.State]string{
 	detect.NotNormal: "not in normal mode", detect.HeldState: "held", detect.NoData: "no data",
 }
 
+// plainKinds are facts: nobody asks for their cause.
+var plainKinds = map[detect.Kind]bool{detect.NotInNormalMode: true, detect.StaleData: true, detect.TuningChanged: true, detect.SourceDown: true,
+	detect.SourceLate: true, detect.SamplesLost: true, detect.StoreFailing: true, detect.SenderFailing: true, detect.ClockStepKind: true, detect.CertificateExpiring: true}
+
 // sure says how sure a cause is, in words.
 func sure(f *detect.Finding) string {
 	switch {
-	case f.Cause == detect.NoCause:
+	case f.Cause == detect.NoCause, f.Cause == detect.Undetermined && plainKinds[f.Kind]:
 		return ""
 	case f.Cause == detect.Undetermined:
 		return "cause cannot be told"
@@ -88,7 +92,10 @@ func number(v float64, n int) string {
 		return "–"
 	}
 	r, _ := strconv.ParseFloat(strconv.FormatFloat(v, 'g', n, 64), 64)
-	if a := math.Abs(r); a != 0 && (a < 1e-4 || a >= 1e7) {
+	if r == 0 {
+		return "0" // not -0
+	}
+	if a := math.Abs(r); a < 1e-4 || a >= 1e7 {
 		return strconv.FormatFloat(r, 'g', n, 64)
 	}
 	return strconv.FormatFloat(r, 'f', -1, 64)

@@ -10,6 +10,7 @@ import (
 	"os"
 	"os/exec"
 	"path/filepath"
+	"slices"
 	"strings"
 	"sync"
 	"syscall"
@@ -21,6 +22,7 @@ import (
 	"github.com/mochi-mqtt/server/v2/packets"
 
 	"midwatch/alert/page/api"
+	"midwatch/collector"
 )
 
 // open lets everybody in.
@@ -128,7 +130,7 @@ func startWatch(t *testing.T, dir string) *watch {
 		}
 	})
 	w.until("it watches", func(s *api.Status) bool {
-		return s.Loops.CatchingUp == 0 && len(s.Sources) == 1 && s.Sources[0].Link == "watching"
+		return s.Loops.CatchingUp == 0 && len(s.Sources) > 0 && !slices.ContainsFunc(s.Sources, func(x collector.SourceState) bool { return x.Link != "watching" })
 	})
 	return w
 }

@@ -150,7 +150,7 @@ func (h *house) exportFrom(cl client, e api.Export, w io.Writer) error {
 func writeNew(path string, write func(io.Writer) error) error {
 	f, err := os.OpenFile(path, os.O_CREATE|os.O_EXCL|os.O_WRONLY, 0o640)
 	if errors.Is(err, os.ErrExist) {
-		return fmt.Errorf("%s is there already and is not written over; hint: name another folder", path)
+		return there(path)
 	}
 	if err != nil {
 		return err
@@ -159,4 +159,8 @@ func writeNew(path string, write func(io.Writer) error) error {
 		return errors.Join(err, os.Remove(path))
 	}
 	return nil
+}
+
+func there(path string) error {
+	return fmt.Errorf("%s is there already and is not written over; hint: name another one", path)
 }

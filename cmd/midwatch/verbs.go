@@ -12,7 +12,7 @@ import (
 
 // verbs lists the verbs in the order of help. A new verb is one file and one row.
 var verbs = []func(*house) *cobra.Command{
-	runVerb, demoVerb, checkVerb, replayVerb,
+	runVerb, demoVerb, checkVerb, surveyVerb, replayVerb,
 	statusVerb, acknowledgeVerb, shelveVerb, unshelveVerb,
 	exportVerb, dossierVerb, versionVerb, checkFileVerb,
 }
@@ -52,6 +52,7 @@ func (h *house) run(args []string) int {
 trends, judges each loop in units of its own noise and time scale, and tells the
 engineer on call when one degrades, with onset, likely cause and evidence.
 
+  midwatch survey -c midwatch.yaml     draft a loop list from the sources
   midwatch check -c midwatch.yaml      does the configuration stand?
   midwatch run -c midwatch.yaml        watch
   midwatch status -c midwatch.yaml     how are the loops?

@@ -127,7 +127,7 @@ type engine struct {
 	dt    float64     // s, finest
 	span  float64     // s, longest window
 	buf   []float64
-	count int
+	slack float64 // s, by which the dead time is unsure beyond what least squares can know
 }
 
 func newEngine(windows []Window, o Options) (*engine, error) {
@@ -150,6 +150,9 @@ func newEngine(windows []Window, o Options) (*engine, error) {
 		if len(w.U) != len(w.Y) || len(w.U) < 12 || !(w.DT > 0) {
 			return nil, fmt.Errorf("a window of %d and %d samples, %g s apart; hint: at least 12 pairs", len(w.U), len(w.Y), w.DT)
 		}
+		if bad := func(v float64) bool { return math.IsNaN(v) || math.IsInf(v, 0) }; slices.ContainsFunc(w.U, bad) || slices.ContainsFunc(w.Y, bad) {
+			return nil, errors.New("a window holds a value that is no number; hint: end windows at gaps")
+		}
 		if slices.Max(w.U)-slices.Min(w.U) < 1e-9 {
 			continue
 		}
@@ -157,6 +160,9 @@ func newEngine(windows []Window, o Options) (*engine, error) {
 		p.index = i
 		e.w = append(e.w, p)
 		e.dt = math.Min(e.dt, p.dt)
+		if o.Interpolate {
+			e.slack = math.Max(e.slack, w.DT/4)
+		}
 		e.span = math.Max(e.span, p.last)
 	}
 	if len(e.w) == 0 {
@@ -223,7 +229,6 @@ func (e *engine) sums(k Kind, at []float64) (s sums) {
 		e.buf = whiten(e.buf, e.answers(p, m), e.ar)
 		s.project(e.buf, e.ys[i], k == Integrator, p.decay(m))
 	}
-	e.count++
 	return s
 }
 
@@ -376,65 +381,4 @@ func level(r []float64, slope bool) {
 	for k := range r {
 		r[k] -= mean + b*(float64(k)-(n-1)/2)
 	}
-}
-
-// GainOf is the process gain that one window alone shows when lags and dead time
-// are those of the model, and the share of its movement that is so explained.
-func GainOf(w Window, m process.Model, o Options) (gain, r2 float64, err error) {
-	e, err := newEngine([]Window{w}, o)
-	if err != nil {
-		return 0, 0, err
-	}
-	p := e.w[0]
-	m.Gain = 1
-	var s sums
-	s.project(e.answers(p, m), p.y, m.Integrating, p.decay(m))
-	if s.yy == 0 {
-		return 0, 0, ErrNoMove
-	}
-	return s.gain(), 1 - s.sse()/s.yy, nil
-}
-
-// Answer is what the model makes of a window, % of PV, with what the window does
-// not know (its level, its state before, its slope when integrating) fitted to it:
-// for drawing over the data.
-func Answer(w Window, m process.Model, o Options) []float64 {
-	e, err := newEngine([]Window{w}, o)
-	if err != nil {
-		return nil
-	}
-	p := e.w[0]
-	gain := m.Gain
-	m.Gain = 1
-	x := slices.Clone(e.answers(p, m))
-	d := make([]float64, len(x))
-	for k := range x {
-		x[k] *= gain
-		d[k] = p.y[k] - x[k]
-	}
-	r := slices.Clone(d)
-	level(r, m.Integrating)
-	for k := range x {
-		x[k] += d[k] - r[k]
-	}
-	decay := p.decay(m)
-	if m.Integrating || !(decay > 1e-6 && decay < 1) {
-		return x
-	}
-	c, rc, cc, z := make([]float64, len(x)), 0.0, 0.0, 1.0
-	for k := range c {
-		c[k] = z
-		z *= decay
-	}
-	level(c, false)
-	for k := range c {
-		rc += r[k] * c[k]
-		cc += c[k] * c[k]
-	}
-	if cc > 1e-9*float64(len(c)) {
-		for k := range x {
-			x[k] += rc / cc * c[k]
-		}
-	}
-	return x
 }

@@ -126,4 +126,9 @@ func TestNothingMoved(t *testing.T) {
 	if _, err := fit.Fit([]fit.Window{{DT: 1, U: flat[:5], Y: flat[:5]}}, fit.Options{}); err == nil {
 		t.Error("a window of five samples was taken")
 	}
+	gap := make([]float64, 100)
+	gap[50] = math.NaN()
+	if _, err := fit.Fit([]fit.Window{{DT: 1, U: gap, Y: flat}}, fit.Options{}); err == nil {
+		t.Error("a window with a gap was taken")
+	}
 }

@@ -53,6 +53,13 @@ func (e *engine) result(s *shape) Result {
 		r.Theta.Low, r.Theta.LowOpen = 0, false
 	}
 	r.Plausible = e.extremes(s.kind, pts, limit)
+	if e.slack > 0 {
+		// How OP moved between two samples is not known.
+		r.Theta.Low, r.Theta.High = math.Max(0, r.Theta.Low-e.slack), r.Theta.High+e.slack
+		for i := range r.Plausible {
+			r.Plausible = append(r.Plausible, r.Plausible[i].Delayed(e.slack))
+		}
+	}
 	r.goodness(e, s, m)
 	return r
 }

@@ -35,18 +35,17 @@ func (t Tuning) phase(w float64) float64 { return cmplx.Phase(t.At(complex(0, w)
 
 // Margins of a loop. Frequencies in rad/s.
 type Margins struct {
-	Stable    bool
-	GM        float64 // gain margin; +Inf where the phase never reaches -180 degrees
-	PMDeg     float64 // phase margin, degrees; +Inf where the gain never reaches 1
-	Ms, Mt    float64 // peaks of sensitivity and of complementary sensitivity
-	WGain     float64 // gain crossover
-	W180      float64
-	DelayLeft float64 // s of dead time that could be added until the loop swings on
+	Stable bool
+	GM     float64 // gain margin; +Inf where the phase never reaches -180 degrees
+	PMDeg  float64 // phase margin, degrees; +Inf where the gain never reaches 1
+	Ms, Mt float64 // peaks of sensitivity and of complementary sensitivity
+	WGain  float64 // gain crossover
+	W180   float64
 }
 
 // Limits computes the margins of a tuning on a model, dead time exact.
 func Limits(m process.Model, t Tuning) Margins {
-	r := Margins{GM: math.Inf(1), PMDeg: math.Inf(1), DelayLeft: math.Inf(1), Stable: true}
+	r := Margins{GM: math.Inf(1), PMDeg: math.Inf(1), Stable: true}
 	loop := func(w float64) complex128 { return m.At(complex(0, w)) * t.At(complex(0, w)) }
 	gain := func(w float64) float64 { return math.Log(cmplx.Abs(loop(w))) }
 	phase := func(w float64) float64 { return m.Phase(w) + t.phase(w) + math.Pi }
@@ -76,9 +75,6 @@ func Limits(m process.Model, t Tuning) Margins {
 			pm := phase(c) * 180 / math.Pi
 			if r.WGain == 0 || pm < r.PMDeg {
 				r.WGain, r.PMDeg = c, pm
-			}
-			if d := phase(c) / c; d < r.DelayLeft {
-				r.DelayLeft = d
 			}
 			if pm <= 0 {
 				r.Stable = false

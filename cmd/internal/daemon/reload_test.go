@@ -1,6 +1,7 @@
 package daemon
 
 import (
+	"math"
 	"slices"
 	"strings"
 	"testing"
@@ -122,7 +123,7 @@ func TestReloadRenames(t *testing.T) {
 		t.Fatal(err)
 	}
 	after, ok := r.d.View("FIC-903")
-	if !ok || after.Last.Time != before.Last.Time || after.Last.PV != before.Last.PV || after.NoisePV != before.NoisePV {
+	if !ok || !goesOn(before, after) {
 		t.Errorf("renamed: last frame %v, noise %v; before %v, %v", after.Last, after.NoisePV, before.Last, before.NoisePV)
 	}
 	n := 0
@@ -185,12 +186,18 @@ func TestReloadOfTheBudget(t *testing.T) {
 	if err := r.d.Apply(t.Context(), c); err != nil {
 		t.Fatal(err)
 	}
-	if after, _ := r.d.View("FIC-103"); after.NoisePV != before.NoisePV || after.Last.Time != before.Last.Time {
+	if after, _ := r.d.View("FIC-103"); !goesOn(before, after) {
 		t.Error("the loop forgot what it had learned")
 	}
 	if r.d.detectOptions().NuisancePerLoopYear != 5 {
 		t.Error("the budget is not in force")
 	}
+}
+
+// goesOn says that a later view is of the same memory; a frame or two may have
+// come in between.
+func goesOn(before, after detect.View) bool {
+	return after.Last.Time >= before.Last.Time && before.NoisePV > 0 && math.Abs(after.NoisePV/before.NoisePV-1) < 0.05
 }
 
 func keepAll(ls []*configs.Loop) []*configs.Loop { return ls }

@@ -307,7 +307,7 @@ func (s *show) conclude(whole bool) error {
 	s.screen.print(b.String())
 	var errs []error
 	if lost > 0 {
-		errs = append(errs, fmt.Errorf("%d frames were lost (%d by count: %s; %d by holes in what is kept); hint: this machine may be too busy for a works at %d times its speed", lost, t.lost, strings.Join(t.where, ", "), t.missing, factor))
+		errs = append(errs, fmt.Errorf("%d frames were lost (%s); hint: this machine may be too busy for a works at %d times its speed", lost, strings.Join(append(t.where, fmt.Sprintf("holes %d", t.missing)), ", "), factor))
 	}
 	if t.walled > settleIn && len(t.unseen) > 0 {
 		errs = append(errs, fmt.Errorf("nothing came of %s; hint: the notes above may say why", strings.Join(t.unseen, ", ")))

@@ -1,0 +1,85 @@
+package detect
+
+import (
+	"fmt"
+	"math"
+)
+
+// The tuning in service against the loop list: a difference is worth a word, and a
+// wrong unit announces itself by its factor.
+
+// near: within a quarter; the reading itself is good to 15 %.
+func near(v, ref float64) bool { return math.Abs(math.Log(v/ref)) < math.Log(1.25) }
+
+// listRatio is gain and reset in service over those of the loop list; 0 where one is
+// not known.
+func (w *Watch) listRatio() (gain, reset float64) {
+	kc, ti, ok := w.tuning(0, 0)
+	if !ok {
+		return 0, 0
+	}
+	if g := w.loop.GainPct; g > 0 {
+		gain = math.Abs(kc) / g
+	}
+	if r := w.loop.IdealReset; r > 0 && ti > 0 && ti < noTi {
+		reset = ti / r
+	}
+	return
+}
+
+// resetUnit names the unit that would explain an entered reset time, s, where the
+// data say another one; empty: none.
+func resetUnit(entered, seen float64) string {
+	switch {
+	case near(seen/entered, 60):
+		return "minutes"
+	case near(seen/entered, 3600):
+		return "hours"
+	case near(entered/seen, 60):
+		return "seconds taken for minutes"
+	case near(entered*seen, 60):
+		return "repeats per minute"
+	case near(entered*seen, 1):
+		return "repeats per second"
+	}
+	return ""
+}
+
+// tuningNote says what of the loop list contradicts the data; empty: nothing.
+func (w *Watch) tuningNote() string {
+	const differs = 1.5 // methods section 9
+	note := ""
+	add := func(s string) {
+		if note != "" {
+			note += "; "
+		}
+		note += s
+	}
+	kc, ti, _ := w.tuning(0, 0)
+	rk, rt := w.listRatio()
+	if rk > 0 && math.Abs(math.Log(rk)) > math.Log(differs) {
+		s := fmt.Sprintf("gain entered %s, the data say about %s", sig2(w.loop.GainPct), sig2(math.Abs(kc)))
+		if near(w.loop.GainPct*math.Abs(kc), 100) {
+			s += ": proportional band?"
+		}
+		add(s)
+	}
+	if rt > 0 && math.Abs(math.Log(rt)) > math.Log(differs) {
+		s := fmt.Sprintf("reset entered %s s, the data say about %s s", sig2(w.loop.IdealReset), sig2(ti))
+		if u := resetUnit(w.loop.IdealReset, ti); u != "" {
+			s += ": " + u + "?"
+		}
+		add(s)
+	}
+	return note
+}
+
+// slowerThanListed: the reset in service is many times what the loop list says, with
+// the gain as listed and no unit to explain it, and a recovery took as long as that
+// makes it.
+func (w *Watch) slowerThanListed() bool {
+	rk, rt := w.listRatio()
+	_, ti, _ := w.tuning(0, 0)
+	e := w.s.Recov.recent(0)
+	return rk > 0.67 && rk < 1.5 && rt > 5 && resetUnit(w.loop.IdealReset, ti) == "" && float64(e.Dur) > max(1.5*ti, 10*w.loop.IdealReset)
+}
