@@ -32,7 +32,6 @@ type list struct {
 	len  func() int
 	grow func(at Position)
 	item func(i int) group
-	name func(i int) string // for messages, may be empty
 }
 
 // pathKind says what is done with a path at loading.

@@ -32,12 +32,11 @@ const (
 // encoder turns frames into pieces. It owns scratch memory and serves one
 // goroutine.
 type encoder struct {
-	w              bitWriter
-	scratch        [6][]int64
-	sorted         []int64
-	col            []float32
-	time           []int64
-	mode, flagword []int64
+	w       bitWriter
+	scratch [6][]int64
+	sorted  []int64
+	col     []float32
+	time    []int64
 }
 
 func sized[T any](s *[]T, n int) []T {

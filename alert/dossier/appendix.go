@@ -19,6 +19,8 @@ func (s *series) appendix(in *Input, cs []Cycle, others []Candidate) Appendix {
 	a.Settings = append(a.Settings,
 		fact("nuisance", "false findings accepted", number(budget, "a loop and year"), ""),
 		say("grid", "grid", fmt.Sprintf("%d samples, %s apart; %d frames read, %d held, %d with samples lost before them, %d thinned, %d out of order or beyond the grid", s.n(), duration(s.dt), s.frames, s.held, s.lost, s.thinned, s.dropped)),
+		say("watch", "cycles and readings", "by a watch begun at the beginning of the span: what the running watch had learned before is not in them"),
+		say("episodes", "episodes", map[bool]string{true: "judged anew over the span, by that watch", false: "as told by the watch that ran"}[in.Findings == nil]),
 		say("gates", "gates of a fit", "2 moves over 10 noise levels and 5 times the usual wandering, both directions agreeing within 30 %, R2 0.9, tuning within a factor of 2.25 over the 90 % range"),
 		say("blocks", "before and after", fmt.Sprintf("at least %d blocks on each side, a week at most; Welch's test on logarithms, 90 %% range", leastBlocks)))
 	return a

@@ -105,7 +105,7 @@ func abs(v int64) int64 {
 
 // bandOf makes the strip of a loop from from to now.
 func bandOf(l *LoopState, ts []trouble, b []bucket, now time.Time, span time.Duration, zone *time.Location) band {
-	out := band{Name: l.Loop.Name, Path: pathName(l.Loop.Name), Service: l.Loop.Service, Area: l.Loop.Area, Width: len(b), Trace: trace(b)}
+	out := band{Name: l.Loop.Name, Path: pathName(l.Loop.Name), Service: l.Loop.Service, Area: l.Loop.Area, Width: max(1, len(b)), Trace: trace(b)}
 	end := now.UnixMilli()
 	start := end - span.Milliseconds()
 	out.Blind = l.State == detect.CannotJudge

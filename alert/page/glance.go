@@ -17,8 +17,8 @@ type glance struct {
 
 // loopsFor and sumFor are how old an answer may be.
 const (
-	loopsFor = 2 * time.Second
-	sumFor   = time.Second
+	loopsFor = 5 * time.Second
+	sumFor   = streamEvery
 )
 
 func (p *Page) loops(now time.Time) []LoopState {

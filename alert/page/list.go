@@ -191,10 +191,16 @@ func (p *Page) rows(ctx context.Context, l *look, picked []*LoopState, f filter)
 	span := time.Duration(f.Hours) * time.Hour
 	for _, s := range picked[min(f.Offset, len(picked)):min(f.Offset+rowsAtOnce, len(picked))] {
 		b, err := p.strips.upTo(ctx, p.o.House, s.Loop, l.now, span)
-		if err != nil {
-			return r, err
+		if ctx.Err() != nil {
+			return r, ctx.Err()
 		}
-		r.Bands = append(r.Bands, bandOf(s, l.found[s.Loop.Name], b, l.now, span, l.zone))
+		x := bandOf(s, l.found[s.Loop.Name], b, l.now, span, l.zone)
+		if err != nil {
+			// One strip that cannot be read does not take the list away.
+			p.once("strips", err)
+			x.Rest = strings.TrimPrefix(x.Rest+" · its trend cannot be read", " · ")
+		}
+		r.Bands = append(r.Bands, x)
 	}
 	return r, nil
 }

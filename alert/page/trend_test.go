@@ -4,6 +4,7 @@ import (
 	"context"
 	"encoding/csv"
 	"encoding/json"
+	"errors"
 	"iter"
 	"math"
 	"strings"
@@ -11,6 +12,7 @@ import (
 	"time"
 
 	"midwatch/collector"
+	"midwatch/configs"
 	"midwatch/detect"
 )
 
@@ -75,6 +77,34 @@ func TestStripsReadOnce(t *testing.T) {
 	c.frames = 0
 	if _, err := s.upTo(t.Context(), c, &other, h.base, 12*time.Hour); err != nil || c.frames < 40000 {
 		t.Errorf("another range is read anew: %d frames, %v", c.frames, err)
+	}
+}
+
+// failing cannot read the trend of one loop.
+type failing struct{ *fakeHouse }
+
+func (f failing) Frames(ctx context.Context, loop string, from, to int64) iter.Seq2[collector.Frame, error] {
+	if loop == "AIC-204" {
+		return func(yield func(collector.Frame, error) bool) {
+			yield(collector.Frame{}, errors.New("slice is damaged; hint: see the log"))
+		}
+	}
+	return f.fakeHouse.Frames(ctx, loop, from, to)
+}
+
+func TestOneTrendThatCannotBeRead(t *testing.T) {
+	h := newFake()
+	h.frozen = true
+	p, err := New(Options{House: failing{h}, Page: configs.Page{Listen: "127.0.0.1:0"}, Clock: h.clock})
+	if err != nil {
+		t.Fatal(err)
+	}
+	code, body := got(t, p, "/")
+	if code != 200 || !strings.Contains(body, "its trend cannot be read") || !strings.Contains(body, "growing since 01:12") || strings.Count(body, `class="strip`) != len(h.loops) {
+		t.Errorf("answer %d: the list stands, and says what is missing", code)
+	}
+	if code, body := got(t, p, "/loops/AIC-204"); code != 500 || !strings.Contains(body, "Slice is damaged") || !strings.Contains(body, "See the log") {
+		t.Errorf("the loop itself: answer %d", code)
 	}
 }
 

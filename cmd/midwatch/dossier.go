@@ -17,6 +17,7 @@ import (
 func dossierVerb(h *house) *cobra.Command {
 	var config, loops, from, to, out, note string
 	var trends []string
+	asJSON := false
 	c := &cobra.Command{
 		Use:   "dossier (-c FILE | --trend FILE.csv --loops LOOPS.csv) [-o FILE] LOOP",
 		Short: "gathers what a tuning session needs to know of a loop",
@@ -43,6 +44,9 @@ qualified person.`,
 			if err != nil {
 				return err
 			}
+			if e := filepath.Ext(out); out != "" && e != ".html" && e != ".htm" {
+				return usagef("-o %s: the page is HTML, JSON and CSV go beside it; hint: name a file that ends in .html", out)
+			}
 			var in dossier.Input
 			done := func() {}
 			switch {
@@ -58,7 +62,7 @@ qualified person.`,
 			}
 			defer done()
 			in.AsLeft = note
-			return h.writeDossier(in, out)
+			return h.writeDossier(in, out, asJSON)
 		},
 	}
 	c.Flags().StringVarP(&config, "config", "c", "", "configuration of the watch (or MIDWATCH_CONFIG)")
@@ -67,6 +71,7 @@ qualified person.`,
 	c.Flags().StringVar(&from, "from", "", "begin of the span, such as 2026-01-04T02:00:00Z")
 	c.Flags().StringVar(&to, "to", "", "end of the span")
 	c.Flags().StringVarP(&out, "output", "o", "", "HTML file to write; default LOOP.html")
+	c.Flags().BoolVar(&asJSON, "json", false, "print the dossier as JSON, too")
 	c.Flags().StringVar(&note, "as-left", "", "the tuner's own record of what was changed, for chapter 8")
 	return c
 }
@@ -90,7 +95,7 @@ func parseSpan(from, to string) (span [2]int64, err error) {
 }
 
 // writeDossier writes the three files, whole or not at all.
-func (h *house) writeDossier(in dossier.Input, out string) error {
+func (h *house) writeDossier(in dossier.Input, out string, asJSON bool) error {
 	in.Made, in.Version = time.Now(), facts().Version
 	d, err := dossier.Build(in)
 	if err != nil {
@@ -107,6 +112,9 @@ func (h *house) writeDossier(in dossier.Input, out string) error {
 		if err := writeWhole(f.path, f.write); err != nil {
 			return err
 		}
+	}
+	if asJSON {
+		return d.JSON(h.stdout)
 	}
 	for _, l := range d.Summary {
 		fmt.Fprintf(h.stdout, "%s: %s\n", l.About, l.Text)

@@ -111,11 +111,11 @@ func startMosquitto(t *testing.T, port int) *child {
 	return c
 }
 
-// startFeed publishes four loops, 2 values a second, and counts what others
+// startFeed publishes four loops, one scan a second, and counts what others
 // publish. It goes on, unheard, when the broker dies.
 func startFeed(t *testing.T, port, seconds int, truth string) *child {
 	t.Helper()
-	return startChild(t, filepath.Join(peersDir, "mqtt"), "node", "feed.mjs", "--port", strconv.Itoa(port), "--loops", "4", "--rate", "2",
+	return startChild(t, filepath.Join(peersDir, "mqtt"), "node", "feed.mjs", "--port", strconv.Itoa(port), "--loops", "4", "--rate", "1",
 		"--form", "object", "--time", "ms", "--seconds", strconv.Itoa(seconds), "--truth", truth, "--quiet")
 }
 

@@ -269,11 +269,11 @@ func TestManyMalformedEndInAnError(t *testing.T) {
 		}
 		return rows(full, r...)
 	}
-	got, sum, s, err := readAll(t, loopsOf("A"), make(99, 1))
+	got, sum, _, err := readAll(t, loopsOf("A"), make(99, 1))
 	if err != nil || len(got) != 99 || sum.Malformed != 1 {
 		t.Errorf("1 %%: %v %+v", err, sum)
 	}
-	got, sum, s, err = readAll(t, loopsOf("A"), make(2000, 30))
+	got, sum, s, err := readAll(t, loopsOf("A"), make(2000, 30))
 	var bad *MalformedError
 	if !errors.As(err, &bad) || *bad != (MalformedError{30, 2030}) || len(got) != 2000 {
 		t.Errorf("more than 1 %%: %v %+v", err, sum)
