@@ -171,7 +171,16 @@ func (d *Dossier) summary() []Line {
 		}
 	}
 	if !stick {
-		add("measurement and final element", "Nothing in OP and PV speaks against them; that is no test of either.")
+		text := "Nothing in OP and PV speaks against them; that is no test of either."
+		for _, e := range d.Episodes {
+			for _, c := range append([]detect.Cause{e.Cause}, e.Also...) {
+				switch c {
+				case detect.ValveSticking, detect.ValveDeadBand, detect.FinalElementNotFollowing, detect.MeasurementCause:
+					text = "The watch holds it possible that they are at fault (" + strings.ReplaceAll(string(c), "-", " ") + "); no band can be read from OP and PV. Check by hand, see 3."
+				}
+			}
+		}
+		add("measurement and final element", text)
 	}
 	for _, f := range d.Outside {
 		if f.Key == "same_period" && f.Note != "" {

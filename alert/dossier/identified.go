@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 	"slices"
+	"strings"
 
 	"midwatch/alert/dossier/fit"
 	"midwatch/configs"
@@ -69,7 +70,11 @@ func (s *series) process(l *configs.Loop, ev []event) (p Process, f *fitted) {
 		return p, f
 	}
 	if len(f.windows) == 0 {
-		f.verdict = fit.Verdict{Why: "nothing was moved from rest: with SP at rest, OP follows PV by the controller's own law, and the data show the controller, not the process"}
+		why := "nothing was moved from rest: with SP at rest, OP follows PV by the controller's own law, and the data show the controller, not the process"
+		if counts[setPointStep]+counts[manualMove] > 0 {
+			why = "no move of SP or OP was from rest and could be used (" + reasons(ev) + "); beside them OP follows PV by the controller's own law, and the data show the controller, not the process"
+		}
+		f.verdict = fit.Verdict{Why: why}
 		p.Verdict = f.verdict
 		return p, f
 	}
@@ -98,6 +103,22 @@ func (s *series) process(l *configs.Loop, ev []event) (p Process, f *fitted) {
 	p.Model = modelFacts(r, s)
 	p.ByPoint, p.points = s.byPoint(f)
 	return p, f
+}
+
+// reasons counts why moves were not used.
+func reasons(ev []event) string {
+	n := map[string]int{}
+	for _, e := range ev {
+		if e.kind != loadEvent && !e.usable {
+			n[e.why]++
+		}
+	}
+	var out []string
+	for why, k := range n {
+		out = append(out, fmt.Sprintf("%d: %s", k, why))
+	}
+	slices.Sort(out)
+	return strings.Join(out, "; ")
 }
 
 // preferSettled keeps moves out of the fit that were cut short before PV had come

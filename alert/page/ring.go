@@ -41,7 +41,7 @@ type ring struct {
 }
 
 type day struct {
-	loop    configs.Loop // of the reading: another range begins anew
+	scale   [4]float64 // range of PV and limits of OP it was read with: others begin anew
 	begun   bool
 	first   int64 // number of the oldest bucket held
 	through int64 // ms UTC of the newest frame read
@@ -102,11 +102,11 @@ func (s *strips) upTo(ctx context.Context, frames collector.FrameReader, l *conf
 	r := s.ring(l)
 	r.mu.Lock()
 	defer r.mu.Unlock()
-	if r.begun && (r.loop.PVLow != l.PVLow || r.loop.PVHigh != l.PVHigh || r.loop.OPLimitLow != l.OPLimitLow || r.loop.OPLimitHigh != l.OPLimitHigh) {
-		r.day = day{}
+	if of := [4]float64{l.PVLow, l.PVHigh, l.OPLimitLow, l.OPLimitHigh}; !r.begun || r.scale != of {
+		r.day = day{scale: of}
 	}
 	last := now.UnixMilli() / bucketMs
-	r.slide(last, l)
+	r.slide(last)
 	from := max(r.through+1, r.first*bucketMs)
 	for f, err := range frames.Frames(ctx, l.Name, from, now.UnixMilli()+1) {
 		if err != nil {
@@ -124,13 +124,12 @@ func (s *strips) upTo(ctx context.Context, frames collector.FrameReader, l *conf
 }
 
 // slide moves the day so that last is its newest bucket.
-func (r *day) slide(last int64, l *configs.Loop) {
+func (r *day) slide(last int64) {
 	first := last - ringBuckets + 1
 	if !r.begun {
-		*r = day{begun: true, loop: *l, first: first}
+		r.begun, r.first = true, first
 		return
 	}
-	r.loop = *l
 	for b := r.first; b < first && b < r.first+ringBuckets; b++ {
 		i := b % ringBuckets
 		r.low[i], r.high[i], r.saw[i] = 0, 0, 0

@@ -2,6 +2,7 @@ package daemon
 
 import (
 	"bytes"
+	"compress/flate"
 	"encoding/gob"
 	"fmt"
 
@@ -104,8 +105,16 @@ func (g *gathering) save() ([]byte, error) {
 }
 
 func (m *gatheringMemory) encode() ([]byte, error) {
+	// Deflated, since most evidence says that nothing swings: a list of zeros.
 	var b bytes.Buffer
-	if err := gob.NewEncoder(&b).Encode(m); err != nil {
+	z, err := flate.NewWriter(&b, flate.BestSpeed)
+	if err != nil {
+		return nil, fmt.Errorf("memory of the site detectors: %w", err)
+	}
+	if err := gob.NewEncoder(z).Encode(m); err != nil {
+		return nil, fmt.Errorf("memory of the site detectors: %w", err)
+	}
+	if err := z.Close(); err != nil {
 		return nil, fmt.Errorf("memory of the site detectors: %w", err)
 	}
 	return b.Bytes(), nil
@@ -114,7 +123,7 @@ func (m *gatheringMemory) encode() ([]byte, error) {
 // load restores what save kept; loops that are gone are left out.
 func (g *gathering) load(b []byte) error {
 	var m gatheringMemory
-	if err := gob.NewDecoder(bytes.NewReader(b)).Decode(&m); err != nil {
+	if err := gob.NewDecoder(flate.NewReader(bytes.NewReader(b))).Decode(&m); err != nil {
 		return fmt.Errorf("memory of the site detectors: %w", err)
 	}
 	if err := g.sites.Load(m.Sites); err != nil {
