@@ -152,6 +152,9 @@ func stepOffset(w *Watch) {
 	if w.idleAtLow() {
 		return
 	}
+	if m := &s.Motion; in.t-m.OPSame > max(40*in.dt, 1.5*m.OPRunMax) {
+		o.WasStill = true // a hand held OP for a while: this run says nothing of the integral
+	}
 	o.Int += in.e * in.dt
 	o.Dur += in.dt
 	o.OPs += (in.trim - o.OPs) / 20
@@ -310,7 +313,6 @@ func (w *Watch) judgeOffset(thr float64) {
 		return
 	}
 	cause, conf, longer := w.offsetCause(push, lo, hi)
-	Dbg("offset t %.0f d %.0f mean %.2f cause %s conf %.2f longer %.0f need %.0f rt %.1f law %.2f\n", in.t, d, mean, cause, conf, longer, need, rt, s.Tune.Law)
 	if longer < 0 {
 		return
 	}

@@ -56,7 +56,6 @@ func (w *Watch) tuneCheck(k int) {
 	if b.BaseT.N >= 4 && tn < 20*fitTh*w.levelS(2*k) && w.moved(ts[:], &b.BaseT, &b.DevT) {
 		what |= 2
 	}
-	Dbg("tune bank %d t %.0f count %d base %.3g (%d) %.3g (%d) dev %.2f %.2f; %.3g %.3g what %d\n", k, w.in.t, b.Count, b.BaseK.Value(), b.BaseK.N, b.BaseT.Value(), b.BaseT.N, b.DevK.Value(), b.DevT.Value(), ks, ts, what)
 	c := &s.Change
 	if what == 0 || c.On && w.in.t-c.Seen < 3600 {
 		return

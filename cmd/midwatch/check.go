@@ -8,6 +8,7 @@ import (
 	"io"
 	"log/slog"
 	"math"
+	"os"
 	"strings"
 	"text/tabwriter"
 	"time"
@@ -91,8 +92,30 @@ type trialSent struct {
 	Error  string `json:"error,omitempty"`
 }
 
+// onlyCredentials: nothing is wrong but that the folder of the service manager's
+// credentials is not set here.
+func onlyCredentials(err error) bool {
+	var ps configs.Problems
+	if !errors.As(err, &ps) || os.Getenv("CREDENTIALS_DIRECTORY") != "" {
+		return false
+	}
+	for _, p := range ps {
+		if !strings.Contains(p.What, "CREDENTIALS_DIRECTORY is not set") {
+			return false
+		}
+	}
+	return true
+}
+
 func (h *house) check(f *checkFlags) error {
 	c, err := loadConfig(f.config)
+	if err != nil && !f.connect && !f.trial && onlyCredentials(err) {
+		// On an engineer's shell the service manager's folder is not there; all else
+		// can be checked.
+		if c, err = loadPlain(f.config); err == nil {
+			c.Warnings = append(c.Warnings, "secrets in $CREDENTIALS_DIRECTORY were not opened: the service manager sets it for the daemon only")
+		}
+	}
 	if err != nil {
 		return err
 	}
