@@ -214,9 +214,9 @@ func (d *Desk) links(it *Item) []Link {
 		return nil
 	}
 	base := strings.TrimRight(d.set.PageURL, "/")
-	ls := []Link{{"episode", base + "/#/episodes/" + url.PathEscape(it.Episode)}}
+	ls := []Link{{"episode", base + "/episodes/" + url.PathEscape(it.Episode)}}
 	if it.Finding.Loop != "" {
-		ls = append(ls, Link{"loop", base + "/#/loops/" + url.PathEscape(it.Finding.Loop)})
+		ls = append(ls, Link{"loop", base + "/loops/" + url.PathEscape(it.Finding.Loop)})
 	}
 	return ls
 }

@@ -170,9 +170,7 @@ func (n *noise) now() float64 {
 	s := min(sigmaOfD1*n.D1.Value(), 1.5*sigmaOfDD*n.DD.Value())
 	s = max(s, min(sigmaOfD1*n.D4.Value(), 2*s))
 	// Quantised data: a uniform error of one step has q/sqrt 12.
-	if n.Least.N > 20 && n.Step.Value() < 1.5*n.Least.Value() {
-		s = max(s, 0.289*n.Least.Value()) // all changes are alike: one step
-	} else if n.Least.N > 20 {
+	if n.Least.N > 20 {
 		s = max(s, min(0.289*n.Least.Value(), 2*sigmaOfD1*max(n.D4.Value(), n.D1.Value())+leastNoise))
 	}
 	return max(s, leastNoise)
@@ -181,7 +179,11 @@ func (n *noise) now() float64 {
 // sigma is the noise level, % of range, one standard deviation.
 func (n *noise) sigma() float64 {
 	if n.Long.N >= 3 {
-		return max(n.Long.Value(), leastNoise)
+		s := max(n.Long.Value(), leastNoise)
+		if n.Least.N > 20 && n.Step.Value() < 1.5*n.Least.Value() {
+			s = max(s, 0.289*n.Least.Value()) // all changes are alike: one step of the resolution
+		}
+		return s
 	}
 	if n.N > 60 {
 		return n.now()

@@ -22,7 +22,7 @@ type offsetState struct {
 	In        float64 // s, last time outside half the band
 	Int       float64 // % s, integral of e since T0
 	Dur       float64 // s seen
-	OP0, E0   float64
+	OP0       float64
 	OPs, Es   float64 // smoothed over 20 slots
 	Zero      bool    // OP lies at its low end and e does not ask for more: idle
 	Stuck     bool
@@ -33,7 +33,6 @@ type offsetState struct {
 	WasStill  bool
 	NotFollow bool
 	Checked   float64 // s, last decision
-	Mean      float64 // %
 	PrevDur   float64 // s, length of the run before, of the other sign; 0 none
 	Missed    bool    // in this run the integral did not do what it must
 }
@@ -138,7 +137,7 @@ func stepOffset(w *Watch) {
 			prev = max(in.t-o.T0, 0.5*o.PrevDur)
 			w.endOfRun()
 		}
-		*o = offsetState{PrevDur: prev, Sign: sign, T0: in.t, In: in.t, OP0: in.trim, E0: in.e, OPs: in.trim, Es: in.e, Checked: in.t}
+		*o = offsetState{PrevDur: prev, Sign: sign, T0: in.t, In: in.t, OP0: in.trim, OPs: in.trim, Es: in.e, Checked: in.t}
 	}
 	if o.Sign == 0 {
 		return
@@ -261,7 +260,6 @@ func (w *Watch) judgeOffset(thr float64) {
 	m := &s.Motion
 	d := in.t - o.T0
 	mean := o.Int / o.Dur
-	o.Mean = mean
 	recent := mean
 	if a := o.anchorAt(0.7 * d); a != nil {
 		recent = (o.Int - float64(a.Int)) / max(d-float64(a.T), in.dt)

@@ -41,9 +41,6 @@ func sig2(v float64) string {
 
 // pvText is an amount of PV in its unit.
 func (w *Watch) pvText(pct float64) string {
-	if w.s.Scale.Guessed || !w.loop.PVRangeGiven {
-		return sig2(math.Abs(w.pvUnits(pct))) + unitOf(w.loop.Unit)
-	}
 	return sig2(math.Abs(w.pvUnits(pct))) + unitOf(w.loop.Unit)
 }
 
@@ -53,6 +50,9 @@ func unitOf(u string) string {
 	}
 	return " " + u
 }
+
+// Likely says in a word how sure a confidence is.
+func Likely(confidence float64) string { return likely(confidence) }
 
 func likely(conf float64) string {
 	switch {

@@ -20,7 +20,7 @@ func (s *series) conduct(l *configs.Loop) []Fact {
 	var in, lo, hi, law float64
 	var modeChanges, spMoves, opMoves int
 	lastMode := collector.ModeUnknown
-	lastSP, lastOP := math.MinInt32, math.MinInt32
+	lastSP, lastOP := -1_000_000_000, -1_000_000_000
 	join := int(math.Max(60/s.dt, 3))
 	travel, turns, dir, extreme, begun := 0.0, 0, 0.0, 0.0, false
 	turn := math.Max(0.1, 2*s.quantOP)

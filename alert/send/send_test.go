@@ -36,7 +36,7 @@ func advisory() alert.Message {
 		Thread: "20260105-1200-abc", Site: "Kestrel Fen", Loop: "AIC-204", Urgency: alert.Now, State: alert.Unacknowledged, Written: noon,
 		Subject: "[Kestrel Fen] NOW AIC-204: swing that grows", Text: "AIC-204 swings.\nÄ line with ümlauts.\n.\nA line that was a lone full stop.\n", TextShort: "AIC-204 swings, advisory only",
 		HTML: "<!doctype html><html><body><p>AIC-204 swings &lt;script&gt;</p>\n" + alert.PictureMark + "\n</body></html>", Cautions: alert.Cautions,
-		Links: []alert.Link{{Name: "episode", URL: "https://10.1.0.9/#/episodes/1"}}, Finding: &f, Count: 1}
+		Links: []alert.Link{{Name: "episode", URL: "https://10.1.0.9/episodes/1"}}, Finding: &f, Count: 1}
 }
 
 // messages are all forms of message that a sender must take.

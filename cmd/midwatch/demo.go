@@ -8,6 +8,7 @@ import (
 
 	"github.com/spf13/cobra"
 
+	"midwatch/cmd/internal/daemon"
 	"midwatch/cmd/internal/demo"
 )
 
@@ -33,7 +34,8 @@ no network. A lost frame, or any write to the works, makes the exit code 1.`,
 			// The library of the simulated server talks on the standard logger.
 			log.SetOutput(io.Discard)
 			f, ok := h.stdout.(*os.File)
-			return demo.Run(h.ctx, demo.Options{Out: h.stdout, Terminal: ok && isTerminal(f), For: length, Version: facts().Version})
+			return demo.Run(h.ctx, demo.Options{Out: h.stdout, Terminal: ok && isTerminal(f), For: length, Version: facts().Version,
+				Serve: daemon.Serve{Page: daemon.ServePage}})
 		},
 	}
 	c.Flags().DurationVar(&length, "for", 0, "how long it watches live; 0: until Ctrl-C")

@@ -148,6 +148,9 @@ func (s *show) live(ctx context.Context, o Options) (err error) {
 	if err := s.watch.Start(); err != nil {
 		return err
 	}
+	if a := s.watch.Addr(); a != "" && o.Serve.Page != nil {
+		s.screen.print("the page: http://" + a + "/\n\n")
+	}
 	s.wall = time.Now()
 	s.trends = newTrends(s.loops, s.watch, s.clock.Now().UnixMilli())
 	var over <-chan time.Time

@@ -126,7 +126,7 @@ func TestScreen(t *testing.T) {
 func TestAdvisory(t *testing.T) {
 	f := detect.Finding{Subject: detect.Subject{Loop: "FIC-118"}, Kind: detect.SustainedOffset, Event: detect.Raised,
 		Cause: detect.IntegralMissing, Confidence: 0.93, Text: "PV stays 35 m3/h below its set point for 9 min with room left in OP (64 %). Integral action is missing."}
-	want := "06:11   FIC-118   sustained offset, likely integral missing (93 %)\n" +
+	want := "06:11   FIC-118   sustained offset, likely integral missing\n" +
 		"                  PV stays 35 m3/h below its set point for 9 min with room left\n" +
 		"                  in OP (64 %). Integral action is missing.\n"
 	if got := advisory(&f, "06:11"); got != want {

@@ -138,9 +138,9 @@ func advisory(f *detect.Finding, at string) string {
 	case f.Event == detect.Cleared:
 		what += " is over"
 	case string(f.Cause) == string(f.Kind):
-		what += fmt.Sprintf(" (%.0f %%)", 100*f.Confidence)
+		what += ", " + detect.Likely(f.Confidence)
 	case f.Cause != "" && f.Cause != detect.Undetermined:
-		what += fmt.Sprintf(", likely %s (%.0f %%)", words(string(f.Cause)), 100*f.Confidence)
+		what += ", " + detect.Likely(f.Confidence) + " " + words(string(f.Cause))
 	}
 	if f.Event == detect.Updated {
 		return fmt.Sprintf("%-6s  %-8s  still: %s\n", at, subject(f), what)
