@@ -26,11 +26,11 @@ func settings(c *Config) group {
 		{key: "data", required: true, path: plainPath, help: "name the data folder, such as /var/lib/midwatch", value: textValue{&c.Data}},
 		{key: "keep", help: "how long and how much is kept", open: func() group {
 			return group{
-				{key: "full", def: "14d", help: "every frame", value: durationValue{&c.Keep.Full, time.Hour, 0}},
-				{key: "thin", def: "400d", help: "thinned frames", value: durationValue{&c.Keep.Thin, time.Hour, 0}},
-				{key: "evidence", def: "30d", help: "full frames around episodes", value: durationValue{&c.Keep.Evidence, time.Hour, 0}},
+				{key: "full", def: "14d", help: "every frame, within size; a size too small for it is told in the log", value: durationValue{&c.Keep.Full, time.Hour, 0}},
+				{key: "thin", def: "400d", help: "thinned frames; this version does not thin: all frames are kept whole for the longest of full, thin and evidence, within size", value: durationValue{&c.Keep.Thin, time.Hour, 0}},
+				{key: "evidence", def: "30d", help: "full frames around episodes; kept like all others, see thin", value: durationValue{&c.Keep.Evidence, time.Hour, 0}},
 				{key: "names", help: "names of people in journals; 0 is as long as the journal", def: "0", value: durationValue{&c.Keep.Names, 0, 0}},
-				{key: "size", def: "20GB", help: "of all trend files; the oldest go first", value: sizeValue{&c.Keep.Size, 64e6}},
+				{key: "size", def: "20GB", help: "of all trend files; the oldest go first; a change takes a restart", value: sizeValue{&c.Keep.Size, 64e6}},
 				{key: "flush", def: "10s", help: "interval of writing trends: what a power cut costs; longer spares the disk", value: durationValue{&c.Keep.Flush, time.Second, 10 * time.Minute}},
 			}
 		}},

@@ -46,6 +46,13 @@ type side struct {
 	hours  float64
 }
 
+func (x side) load() Number {
+	if len(x.rms) < 2 {
+		return none("fewer than two blocks with the law acting")
+	}
+	return counted(x.opSD, len(x.rms), "%")
+}
+
 // blockS is the length of a block: long against the loop, so that blocks are
 // nearly independent.
 func (s *series) blockS(a, b int) float64 {
@@ -54,7 +61,7 @@ func (s *series) blockS(a, b int) float64 {
 	var x []float64
 	const m = 10
 	for k := a; k+m <= b && len(x) < 6000; k += m {
-		if v := mean(s.sp, k, k+m) - mean(s.pv, k, k+m); v == v {
+		if v := mean(s.sp, k, k+m) - mean(s.pv, k, k+m); v == v && s.law[k] && s.law[k+m-1] {
 			x = append(x, v)
 		}
 	}
@@ -151,8 +158,10 @@ func (s *series) compare(at, a, b int64, cs []Cycle) Change {
 		fact("deviation_after", "after", pv(after), ""),
 		fact("travel_before", "OP travel before", number(before.travel, "% an hour"), ""),
 		fact("travel_after", "after", number(after.travel, "% an hour"), ""),
-		fact("load_before", "OP from block to block, before", number(before.opSD, "%"), fmt.Sprintf("what the load asked of it; mean OP %s %%", short(before.opMean))),
-		fact("load_after", "after", number(after.opSD, "%"), fmt.Sprintf("mean OP %s %%", short(after.opMean))),
+		fact("load_before", "OP from block to block, before", before.load(), "what the load asked of it"),
+		fact("load_after", "after", after.load(), ""),
+		fact("op_before", "mean OP before", number(before.opMean, "%"), ""),
+		fact("op_after", "after", number(after.opMean, "%"), ""),
 	}
 	// A swing says more than its size: it asks for movement of OP by itself, so
 	// the two sides could never look alike.

@@ -112,13 +112,17 @@ func (l *logBuffer) String() string {
 	return l.b.String()
 }
 
-func startWatch(t *testing.T, dir string) *watch {
+// startWatch starts a watch that flushes at once and waits for nothing before it
+// tells.
+func startWatch(t *testing.T, dir string) *watch { return startWatchAs(t, dir, hurried) }
+
+func startWatchAs(t *testing.T, dir, as string) *watch {
 	exe, err := os.Executable()
 	if err != nil {
 		t.Fatal(err)
 	}
 	w := &watch{t: t, cmd: exec.Command(exe, "run", "-c", filepath.Join(dir, "midwatch.yaml")), cl: dial(filepath.Join(dir, "data")), log: &logBuffer{}}
-	w.cmd.Env = append(os.Environ(), asMain+"=1")
+	w.cmd.Env = append(os.Environ(), asMain+"="+as)
 	w.cmd.Stderr = w.log
 	if err := w.cmd.Start(); err != nil {
 		t.Fatal(err)

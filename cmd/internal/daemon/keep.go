@@ -25,6 +25,8 @@ type keeper struct {
 	hourly  time.Time // of the last hourly work
 	daily   time.Time // of the last daily work
 	failing string
+	oldest  int64     // data time of the oldest frame at the last hourly work, ms UTC
+	short   time.Time // when it was last said that keep.size is too small
 
 	turned  atomic.Int64 // wall clock of the last turn, ms UTC
 	flushed atomic.Int64 // of the last good flush
@@ -62,6 +64,7 @@ func (k *keeper) turn(ctx context.Context) {
 	if now.Sub(k.hourly) >= time.Hour || now.Before(k.hourly) {
 		k.hourly = now
 		k.noteFlush()
+		k.noteRoom(now)
 		k.expire(now)
 	}
 	if now.Sub(k.daily) >= 24*time.Hour || now.Before(k.daily) {
@@ -168,17 +171,32 @@ func (k *keeper) noteFlush() {
 }
 
 // expire drops slices that are older than anything is kept. Frames are not
-// thinned yet: they are kept whole for as long as thinned ones would be, within
-// keep.size.
+// thinned: all are kept whole for the longest that is asked of any, so that no
+// promise of keep.full, keep.thin or keep.evidence is broken but by keep.size.
 func (k *keeper) expire(now time.Time) {
 	keep := k.d.config().Keep
-	n, err := k.d.window.Expire(now.Add(-max(keep.Full, keep.Thin)).UnixMilli())
+	n, err := k.d.window.Expire(now.Add(-max(keep.Full, keep.Thin, keep.Evidence)).UnixMilli())
 	if err != nil {
 		k.log.Error("old trends cannot be removed", "err", err)
 	}
 	if n > 0 {
 		k.log.Info("old trends were removed", "slices", n)
 	}
+}
+
+// noteRoom says, once a day, that the oldest trends went although keep.full
+// promises them still: keep.size is too small for these loops.
+func (k *keeper) noteRoom(now time.Time) {
+	was := k.oldest
+	k.oldest = k.d.window.Stats().Oldest
+	keep := k.d.config().Keep
+	age := now.Sub(time.UnixMilli(k.oldest))
+	if was == 0 || k.oldest <= was || age >= keep.Full || now.Sub(k.short) < 24*time.Hour {
+		return
+	}
+	k.short = now
+	k.log.Warn("keep.size does not hold the trends of keep.full; the oldest were dropped", "held", configs.FormatDuration(age.Truncate(time.Minute)),
+		"full", configs.FormatDuration(keep.Full), "size", keep.Size, "hint", "raise keep.size, or lower keep.full")
 }
 
 // keepProfiles puts the memory of every loop into the state, some at a time.

@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"slices"
 
+	"midwatch/alert/page"
 	"midwatch/alert/send"
 	"midwatch/collector"
 	"midwatch/configs"
@@ -15,8 +16,8 @@ import (
 // Apply puts a new configuration in force. First all that can fail is done,
 // touching nothing that runs; then the swap. A loop is the same by name, or by
 // the name it was: what did not change keeps everything. A source is restarted
-// only if its settings or tags changed. The data folder and the address of the
-// page stay as they are until a restart.
+// only if its settings or tags changed. The data folder, the page and keep.size
+// stay as they are until a restart.
 func (d *Daemon) Apply(ctx context.Context, c *configs.Config) error {
 	d.life.Lock()
 	defer d.life.Unlock()
@@ -60,6 +61,14 @@ func (d *Daemon) Apply(ctx context.Context, c *configs.Config) error {
 		return errors.Join(err, send.Close(senders))
 	}
 
+	var waits []string
+	if c.Page != d.cfg.Page {
+		waits = append(waits, "page")
+	}
+	if c.Keep.Size != d.cfg.Keep.Size {
+		waits = append(waits, "keep.size")
+	}
+
 	// From here on nothing fails but what is logged.
 	var late []error
 	old := d.senders
@@ -84,6 +93,9 @@ func (d *Daemon) Apply(ctx context.Context, c *configs.Config) error {
 	}
 	d.startHeart()
 	late = append(late, send.Close(old))
+	for _, key := range waits {
+		d.log.Warn("a changed setting waits for a restart", "setting", key)
+	}
 	d.log.Info("reloaded", "loops", len(c.Loops), "unchanged", p.unchanged, "changed", p.changed, "new", p.added, "gone", p.gone)
 	if err := errors.Join(late...); err != nil {
 		return fmt.Errorf("the new configuration is in force, but: %w", err)
@@ -298,6 +310,9 @@ func endings(w *detect.Watch, why string) (out []said) {
 func (d *Daemon) Reload(ctx context.Context) error {
 	if d.o.Load == nil {
 		return errors.New("this watch cannot reload; hint: restart it")
+	}
+	if who := page.VisitorOf(ctx).Name; who != "" {
+		d.log.Info("a reload was asked for", "audit", true, "who", who)
 	}
 	c, err := d.o.Load()
 	if err != nil {

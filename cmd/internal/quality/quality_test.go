@@ -17,16 +17,16 @@ import (
 const (
 	shortLoops          = 2   // scenarios per family
 	shortDays           = 1.5 // of a healthy loop recorded at 10 s
-	maxMissedShare      = 0.35
-	maxWrongOfNamed     = 0.35
-	minNamedShare       = 0.5
-	maxFalsePerLoopYear = 60.0
-	maxGainErrorMedian  = 0.10
-	maxResetErrorMedian = 0.15
-	minReadShare        = 0.6
-	minRecordedFound    = 3 // of those that must be found
-	maxRecordedFalse    = 8
-	maxForbiddenCauses  = 1
+	maxMissedShare      = 0.15
+	maxWrongOfNamed     = 0.10
+	minNamedShare       = 0.75
+	maxFalsePerLoopYear = 12.0
+	maxGainErrorMedian  = 0.06
+	maxResetErrorMedian = 0.08
+	minReadShare        = 0.8
+	minRecordedFound    = 6 // of those that must be found: all
+	maxRecordedFalse    = 1
+	maxForbiddenCauses  = 0
 )
 
 func TestQuality(t *testing.T) {
