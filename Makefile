@@ -84,6 +84,7 @@ test:
 race:
 	@CGO_ENABLED=1 MIDWATCH_PEERS=1 $(TEST) -race -short $(filter-out $(UNRACED),$(RACE))
 	@CGO_ENABLED=1 $(TEST) -race -short -run '$(SERVED)' $(UNRACED)
+	@MIDWATCH_PEERS=1 $(TEST) -run Browser ./alert/dossier
 
 # The demo as people run it, until the faults that show first are told.
 demo:

@@ -49,7 +49,7 @@ func manyLoops(t *testing.T, loops int, every time.Duration, seconds int) {
 	}
 	put(t, dir, "midwatch.yaml", strings.Replace(string(text), "flush: 1s", "flush: 10s", 1))
 	w := startWatchAs(t, dir, "as installed")
-	idle := w.usage()
+	idle := w.spent()
 
 	// A part of the loops each tenth of a second, as publishers do that know
 	// nothing of each other.
@@ -83,7 +83,7 @@ func manyLoops(t *testing.T, loops int, every time.Duration, seconds int) {
 	// The last scan of each loop stays open until something comes after it.
 	want := uint64(published - loops)
 	s := w.until("all frames are there", func(s *api.Status) bool { return s.Counts["frames"] >= want })
-	use := w.usage()
+	use := w.spent()
 	cpu := use.cpu - idle.cpu
 	t.Logf("%d objects in %s (feeder at most %s late): %d frames; processor %.1f s = %.0f %% of one core; memory %d MB, at most %d MB; source %v; counts %v",
 		published, took.Round(time.Second), late.Round(time.Millisecond), s.Counts["frames"], cpu.Seconds(), 100*cpu.Seconds()/took.Seconds(),
@@ -97,13 +97,13 @@ func manyLoops(t *testing.T, loops int, every time.Duration, seconds int) {
 	}
 }
 
-// usage is what a process has used so far.
-type usage struct {
+// spent is what a process has used so far.
+type spent struct {
 	cpu       time.Duration // user and system
 	rss, peak int64         // bytes
 }
 
-func (w *watch) usage() (u usage) {
+func (w *watch) spent() (u spent) {
 	w.t.Helper()
 	proc := fmt.Sprintf("/proc/%d/", w.cmd.Process.Pid)
 	stat, err := os.ReadFile(proc + "stat")

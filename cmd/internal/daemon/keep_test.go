@@ -2,9 +2,12 @@ package daemon
 
 import (
 	"log/slog"
+	"math/rand/v2"
 	"strings"
 	"testing"
 	"time"
+
+	"midwatch/collector"
 )
 
 // Frames are kept whole for the longest of full, thin and evidence.
@@ -47,11 +50,10 @@ func TestKeepsForTheLongestPromise(t *testing.T) {
 	}
 }
 
-// A keep.size that does not hold the trends of keep.full is told.
+// A keep.size that does not hold the trends of keep.full is told, once a day.
 func TestSizeTooSmallIsTold(t *testing.T) {
-	const n = 100
-	r := newRig(t, manyLoops(n))
-	r.config.Keep.Size = 1 << 20
+	r := newRig(t, manyLoops(1))
+	r.config.Keep.Size, r.config.Keep.Flush = 1<<20, 10*time.Hour // the window is written here
 	var log journal
 	o := r.options()
 	o.Logger = slog.New(slog.NewTextHandler(&log, nil))
@@ -65,15 +67,32 @@ func TestSizeTooSmallIsTold(t *testing.T) {
 	}
 	defer r.stop()
 	<-d.CaughtUp()
-	for second := 0; second < 3*3600+20; second += 10 {
-		batch := manySamples(n, second)
-		for k := 1; k < 10; k++ {
-			batch = append(batch, manySamples(n, second+k)...)
+	rnd := rand.New(rand.NewPCG(5, 6))
+	at := epoch
+	hour := func() {
+		for range 36 { // as noise does not pack, about 14 bytes a frame
+			for range 1000 {
+				at = at.Add(100 * time.Millisecond)
+				d.window.Append(0, collector.Frame{Time: at.UnixMilli(), PV: rnd.Float32(), SP: rnd.Float32(), OP: rnd.Float32(), Mode: collector.Auto})
+			}
+			if err := d.window.Flush(t.Context()); err != nil {
+				t.Fatal(err)
+			}
 		}
-		r.put("works", epoch.Add(time.Duration(second+10)*time.Second), batch)
+		d.keeper.noteRoom(at)
 	}
-	r.until("it is told", func() bool { return strings.Contains(log.String(), "keep.size does not hold") })
-	if said := log.String(); strings.Count(said, "keep.size does not hold") != 1 || !strings.Contains(said, "full=14d") {
-		t.Errorf("the log says:\n%s", said)
+	told := func() int { return strings.Count(log.String(), "keep.size does not hold") }
+	if hour(); told() != 0 {
+		t.Errorf("told with room to spare:\n%s", &log)
+	}
+	for range 5 {
+		hour()
+	}
+	if told() != 1 || !strings.Contains(log.String(), "full=2w") {
+		t.Errorf("told %d times, want once; oldest %d, %d bytes\n%s", told(), d.window.Stats().Oldest, d.window.Stats().Bytes, &log)
+	}
+	at = at.Add(24 * time.Hour)
+	if hour(); told() != 2 {
+		t.Errorf("told %d times a day later, want twice", told())
 	}
 }
