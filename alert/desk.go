@@ -36,6 +36,7 @@ type Settings struct {
 	Advise   configs.Advise
 	Standing time.Duration     // findings before this age of the watch are standing; 0: 14 days, negative: none
 	Names    time.Duration     // how long names of people stay in journals; 0: for good
+	Keep     time.Duration     // how long episodes stay after they ended; 0: 400 days, negative: for good
 	PageURL  string            // for links; empty: no links
 	Senders  map[string]Sender // by the name in Advise.Senders
 	Health   func() []string   // of the watch, lines for the digest; may be nil

@@ -108,7 +108,7 @@ func (d *Desk) digests(now time.Time) error {
 		since := *x.last
 		err := d.update(func(b *batch) error {
 			*x.last = ms
-			sections := d.digestSections(since, x.word)
+			sections := b.digestSections(since, x.word)
 			for _, to := range d.receivers() {
 				own := sections
 				if x.word == "daily" {
@@ -208,7 +208,8 @@ func (d *Desk) waitingSections(to string) []Section {
 }
 
 // digestSections is what is the same for all receivers. since is wall time.
-func (d *Desk) digestSections(since int64, word string) []Section {
+func (b *batch) digestSections(since int64, word string) []Section {
+	d := b.d
 	open := d.openItems(func(*Episode) bool { return true })
 	lines := d.itemLines(open, shownLoops)
 	if len(lines) == 0 {
@@ -246,6 +247,9 @@ func (d *Desk) digestSections(since int64, word string) []Section {
 			ls = append(ls, fmt.Sprintf("%s: %d", clean(l), trouble[l]))
 		}
 		out = append(out, Section{"Most often in trouble", ls})
+	}
+	if ls := b.retunedLines(); len(ls) > 0 {
+		out = append(out, Section{"Since the tuning was changed", ls[:min(len(ls), shownLoops)]})
 	}
 	if len(acks) > 0 {
 		slices.Sort(acks)

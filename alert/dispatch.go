@@ -17,6 +17,7 @@ type meta struct {
 	Weekly   int64  `json:"weekly,omitempty"`   // when the last one was made
 	Waiting  int64  `json:"waiting,omitempty"`  // when what waits was last sent without a daily digest
 	Standing int64  `json:"standing,omitempty"` // when the list was made
+	Pruned   int64  `json:"pruned,omitempty"`   // when the past was last dropped from the store
 	Seq      uint64 `json:"seq"`                // of the last delivery
 }
 
@@ -37,6 +38,8 @@ type waiting struct {
 	Item
 	Sender   string `json:"sender"`
 	HeldBack bool   `json:"held_back,omitempty"` // it was to be sent, but the volume was reached
+	Person   string `json:"person,omitempty"`    // with Gather
+	Gather   int64  `json:"gather,omitempty"`    // wall time at which it is sent with what else was gathered; 0: it is not
 }
 
 // Wake does what is due at wall time now and says when it wants to be called
@@ -52,7 +55,7 @@ func (d *Desk) Wake(now time.Time) (next time.Time, err error) {
 	if err := d.recordFinished(now); err != nil {
 		return now.Add(10 * time.Second), err
 	}
-	for _, part := range []func(time.Time) error{d.endShelves, d.route, d.escalate, d.standingList, d.digests, d.dropOrphans, d.foldQueues} {
+	for _, part := range []func(time.Time) error{d.endShelves, d.route, d.gathered, d.escalate, d.standingList, d.digests, d.dropOrphans, d.foldQueues, d.prune, d.makeLinkKey} {
 		if err := part(now); err != nil {
 			return now.Add(10 * time.Second), err
 		}
@@ -76,6 +79,11 @@ func (d *Desk) nextWake(now time.Time) time.Time {
 	}
 	for _, s := range d.mem.shelves {
 		at(s.Until)
+	}
+	for i := range d.mem.waiting {
+		if t := d.mem.waiting[i].Gather; t != 0 {
+			at(t)
+		}
 	}
 	for _, e := range d.mem.episodes {
 		if e.Ack != nil && e.Ack.Until != 0 && e.Open() {
@@ -235,19 +243,21 @@ func (b *batch) routePerson(s *step, it Item, to string, r *configs.Route, local
 			}
 		}
 	}
+	asked, person := slices.Contains(r.Urgency, string(it.Urgency)), cmp.Or(r.Person, to)
 	switch {
-	case s.Quiet:
-		return nil
 	case it.Standing && !s.Worse && it.Event != detect.Cleared:
 		return nil // in the standing list
+	case it.Finding.Kind == detect.TuningChanged:
+		return b.tuned(it, to, person, asked, local.UnixMilli())
+	case s.Quiet:
+		return nil
 	case it.Event == detect.Cleared:
 		if !within(d.set.working(), local) || !b.toldBefore(it.Episode, it.Step, to) {
 			return b.wait(to, it, false)
 		}
-	case it.Urgency != Now && !slices.Contains(r.Urgency, string(it.Urgency)):
+	case it.Urgency != Now && !asked:
 		return b.wait(to, it, false)
 	}
-	person := cmp.Or(r.Person, to)
 	people[person] = append(people[person], candidate{it, to})
 	return nil
 }
@@ -316,7 +326,7 @@ func (b *batch) bound(people map[string][]candidate, local time.Time) error {
 		for _, c := range cs {
 			distinct[c.Episode] = true
 		}
-		one := len(distinct) > left || len(distinct) > floodCount || recent > 0 && len(distinct) > 1
+		one := len(distinct) > left || len(distinct) > floodCount || len(distinct) > 1 && (recent > 0 || allTuning(cs))
 		for _, to := range senders {
 			items := bySender[to]
 			var err error
@@ -385,23 +395,26 @@ func (d *Desk) allowance(person string, local time.Time, night bool) int {
 
 // wait keeps an item for the next digest of the sender.
 func (b *batch) wait(to string, it Item, heldBack bool) error {
-	w := waiting{Item: it, Sender: to, HeldBack: heldBack}
+	return b.waitFor(waiting{Item: it, Sender: to, HeldBack: heldBack})
+}
+
+func (b *batch) waitFor(w waiting) error {
 	b.d.mem.waiting = append(b.d.mem.waiting, w)
 	result := "waits"
-	if heldBack {
+	if w.HeldBack {
 		result = "held back"
 	}
-	if err := b.markTold(it.Episode, it.Step, to, result); err != nil {
+	if err := b.markTold(w.Episode, w.Step, w.Sender, result); err != nil {
 		return err
 	}
-	if heldBack {
-		if e := b.d.mem.episodes[it.Episode]; e != nil {
-			if err := b.journal(e, Entry{What: "held back from " + to, Why: "the volume for a person is reached"}); err != nil {
+	if w.HeldBack {
+		if e := b.d.mem.episodes[w.Episode]; e != nil {
+			if err := b.journal(e, Entry{What: "held back from " + w.Sender, Why: "the volume for a person is reached"}); err != nil {
 				return err
 			}
 		}
 	}
-	return put(b.tx, bucketWaiting, key3(it.Episode, it.Step, to), w)
+	return put(b.tx, bucketWaiting, key3(w.Episode, w.Step, w.Sender), w)
 }
 
 func (b *batch) markTold(id string, n uint32, to, result string) error {

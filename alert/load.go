@@ -22,6 +22,7 @@ type memory struct {
 	queue     []*delivery       // in order of Seq
 	byKey     map[string]*delivery
 	waiting   []waiting
+	linkKey   []byte              // of links in mails
 	sent      map[string][]sentAt // by person or sender, wall times of what was sent lately
 }
 
@@ -61,6 +62,9 @@ func (d *Desk) load() error {
 			return err
 		}
 		if _, err := get(tx, bucketMeta, []byte("sent"), &m.sent); err != nil {
+			return err
+		}
+		if _, err := get(tx, bucketMeta, []byte("link-key"), &m.linkKey); err != nil {
 			return err
 		}
 		_, err := get(tx, bucketMeta, []byte("dispatch"), &m.meta)

@@ -38,12 +38,16 @@ func (d *Desk) Acknowledge(id, who, why string, until time.Time) error {
 		if e.Into != "" {
 			return refusal{fmt.Errorf("episode %q went on in %q; hint: acknowledge that one", id, e.Into)}
 		}
-		e.Ack = &Mark{Who: clean(who), Why: clean(why), Wall: b.d.wall()}
-		if !until.IsZero() {
-			e.Ack.Until = until.UnixMilli()
-		}
-		return b.journal(e, Entry{What: "acknowledged", Who: e.Ack.Who, Why: e.Ack.Why, Until: e.Ack.Until})
+		return b.acknowledge(e, clean(who), clean(why), until)
 	})
+}
+
+func (b *batch) acknowledge(e *Episode, who, why string, until time.Time) error {
+	e.Ack = &Mark{Who: who, Why: why, Wall: b.d.wall()}
+	if !until.IsZero() {
+		e.Ack.Until = until.UnixMilli()
+	}
+	return b.journal(e, Entry{What: "acknowledged", Who: who, Why: why, Until: e.Ack.Until})
 }
 
 // Shelf is a loop nobody wants to hear of for a time.

@@ -25,7 +25,7 @@ func (d *Desk) render(x *delivery, now time.Time) Message {
 	m := Message{Key: d.messageKey(x), Type: x.Type, Site: d.set.Site, Written: time.UnixMilli(x.Written).UTC(),
 		Cautions: Cautions, Thread: x.ID, Urgency: Note}
 	if x.Type == TypeAdvisory && len(x.Items) == 1 {
-		d.renderOne(&m, &x.Items[0], now)
+		d.renderOne(&m, x, &x.Items[0], now)
 		return m
 	}
 	d.renderMany(&m, x)
@@ -56,6 +56,8 @@ func eventWord(it *Item) string {
 		return "went on in another advisory: "
 	case it.Event == detect.Cleared:
 		return "over: "
+	case it.Count > 1 && it.Finding.Kind == detect.TuningChanged:
+		return fmt.Sprintf("%d times: ", it.Count)
 	case it.Count > 1 && it.Event == detect.Raised:
 		return "back (" + ordinal(it.Count) + " time): "
 	case it.Event == detect.Updated:
@@ -64,7 +66,7 @@ func eventWord(it *Item) string {
 	return ""
 }
 
-func (d *Desk) renderOne(m *Message, it *Item, now time.Time) {
+func (d *Desk) renderOne(m *Message, x *delivery, it *Item, now time.Time) {
 	f := it.Finding
 	name := clean(subjectName(&f))
 	l := d.set.loops[f.Loop]
@@ -75,6 +77,9 @@ func (d *Desk) renderOne(m *Message, it *Item, now time.Time) {
 		m.Old = age
 	}
 	m.Links = d.links(it)
+	if l, ok := d.acknowledgeLink(x, it, now); ok {
+		m.Links = append([]Link{l}, m.Links...)
+	}
 	var body page
 	unit := ""
 	if l != nil {
@@ -131,7 +136,9 @@ func (d *Desk) renderOne(m *Message, it *Item, now time.Time) {
 		}
 		body.fact("Seen together", strings.Join(ks, "; "))
 	}
-	if it.Count > 1 {
+	if it.Count > 1 && f.Kind == detect.TuningChanged {
+		body.fact("How often", fmt.Sprintf("changed %d times, each within a day of the one before; this is the last", it.Count))
+	} else if it.Count > 1 {
 		body.fact("How often", ordinal(it.Count)+" time since it was first seen; it comes and goes within a day")
 	}
 	m.Subject = d.subject(it.Urgency, m.Old > 0, name+": "+eventWord(it)+kindWord(f.Kind)+more(len(it.Loops)))
@@ -243,6 +250,9 @@ func (d *Desk) renderMany(m *Message, x *delivery) {
 			m.Items = append(m.Items, it.Finding)
 		}
 		title = fmt.Sprintf("%d advisories at once", len(x.Items))
+		if !slices.ContainsFunc(x.Items, func(it Item) bool { return it.Finding.Kind != detect.TuningChanged }) {
+			title = fmt.Sprintf("tuning changed %d times on %d loops", changes(x.Items), len(x.Items))
+		}
 		if c := d.common(all); c != "" {
 			title += ", all " + c
 			body.lead("Common to all: " + c + ". Look there first.")

@@ -20,6 +20,7 @@ type settings struct {
 	bySource map[string][]string // source -> loops, in order of the list
 	cascade  relatives
 	people   map[string]bool // senders that reach people, not programs
+	mail     map[string]bool // senders that are mail
 	daily    *clockTime
 	weekly   *clockTime
 }
@@ -34,12 +35,18 @@ func makeSettings(s Settings) (settings, error) {
 	if s.Standing == 0 {
 		s.Standing = 14 * 24 * time.Hour
 	}
+	if s.Keep == 0 {
+		s.Keep = 400 * 24 * time.Hour
+	}
+	if s.Keep > 0 {
+		s.Keep = max(s.Keep, leastKept)
+	}
 	if s.Advise.Day == 0 {
 		// Not filled by configs: its defaults.
 		s.Advise.Day, s.Advise.Night = 10, max(s.Advise.Night, 1)
 	}
 	set := settings{Settings: s, loops: map[string]*configs.Loop{}, source: map[string]string{}, bySource: map[string][]string{},
-		cascade: cascades(s.Loops), people: map[string]bool{}}
+		cascade: cascades(s.Loops), people: map[string]bool{}, mail: map[string]bool{}}
 	for _, l := range s.Loops {
 		set.loops[l.Name] = l
 		set.source[l.Name] = l.Source
@@ -49,7 +56,7 @@ func makeSettings(s Settings) (settings, error) {
 		if s.Senders[c.Name] == nil {
 			return set, fmt.Errorf("sender %q was not made; hint: give it in Settings.Senders", c.Name)
 		}
-		set.people[c.Name] = c.Mail != nil || c.Command != nil
+		set.people[c.Name], set.mail[c.Name] = c.Mail != nil || c.Command != nil, c.Mail != nil
 	}
 	for _, r := range s.Advise.Routes {
 		for _, to := range r.To {

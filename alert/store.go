@@ -48,6 +48,7 @@ const (
 	bucketWaiting  = "desk.waiting"  // id 0 step 0 sender -> waiting, for the next digest
 	bucketHidden   = "desk.hidden"   // loop -> hidden
 	bucketShelves  = "desk.shelves"  // loop -> Shelf
+	bucketLinks    = "desk.links"    // id 0 step 0 sender -> when the link was used
 	bucketMeta     = "desk.meta"     // the rest
 )
 

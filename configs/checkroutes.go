@@ -36,6 +36,9 @@ func (d *decoder) checkRoutes(c *Config) {
 	for i, e := range a.Escalate {
 		known(fmt.Sprintf("advise.escalate[%d].to", i+1), e.To)
 	}
+	if a.Links > 0 && c.Page.URL == "" {
+		d.say("advise.links", "give page.url, too", "links in mails lead nowhere without the address of the page")
+	}
 	h := &c.Heartbeat
 	d.address("heartbeat.url", h.URL, "write https://HOST/PATH", "https", "http")
 	if h.MQTT != "" {

@@ -33,6 +33,7 @@ type Site struct {
 // Keep says how long and how much is kept.
 type Keep struct {
 	Full, Thin, Evidence time.Duration
+	Episodes             time.Duration // how long ended episodes and their journals are kept
 	Names                time.Duration // how long names of people are kept in journals; 0 = as long as the journal
 	Size                 int64         // bytes of trend files
 	Flush                time.Duration // trend flush interval
@@ -100,12 +101,12 @@ type Detect struct {
 type Advise struct {
 	Senders  []Sender
 	Routes   []Route
-	OnCall   []string // persons
 	Working  []Hours
 	Night    int // pages per person and night
 	Day      int // items per person and day
 	Digest   Digest
 	Escalate []Escalate
+	Links    time.Duration // how long a link in a mail acknowledges; 0 = no such links
 }
 
 // Sender is one way out; exactly one of the kinds is set.

@@ -29,6 +29,7 @@ func settings(c *Config) group {
 				{key: "full", def: "14d", help: "every frame, within size; a size too small for it is told in the log", value: durationValue{&c.Keep.Full, time.Hour, 0}},
 				{key: "thin", def: "400d", help: "thinned frames; this version does not thin: all frames are kept whole for the longest of full, thin and evidence, within size", value: durationValue{&c.Keep.Thin, time.Hour, 0}},
 				{key: "evidence", def: "30d", help: "full frames around episodes; kept like all others, see thin", value: durationValue{&c.Keep.Evidence, time.Hour, 0}},
+				{key: "episodes", def: "400d", help: "episodes after they ended, with their journals; one that woke somebody stays until it is acknowledged", value: durationValue{&c.Keep.Episodes, 30 * 24 * time.Hour, 0}},
 				{key: "names", help: "names of people in journals; 0 is as long as the journal", def: "0", value: durationValue{&c.Keep.Names, 0, 0}},
 				{key: "size", def: "20GB", help: "of all trend files; the oldest go first; a change takes a restart", value: sizeValue{&c.Keep.Size, 64e6}},
 				{key: "flush", def: "10s", help: "interval of writing trends: what a power cut costs; longer spares the disk", value: durationValue{&c.Keep.Flush, time.Second, 10 * time.Minute}},
@@ -104,11 +105,10 @@ func adviseSettings(a *Advise) group {
 					{key: "kinds", help: "kinds of findings", value: listValue{&r.Kinds, Kinds}},
 					{key: "urgency", help: "now, morning, note", value: listValue{&r.Urgency, Urgencies}},
 					{key: "hours", help: `site time, such as "mon-fri 07:00-16:00"`, value: hoursValue{&r.Hours}},
-					{key: "person", help: "who reads it; the limits night and day count per person", value: textValue{&r.Person}},
+					{key: "person", help: "who reads it, such as the one on call in hours; the limits night and day count per person over all routes", value: textValue{&r.Person}},
 				}
 			},
 		}},
-		{key: "on_call", help: "persons on call", value: listValue{&a.OnCall, nil}},
 		{key: "working", def: "mon-fri 07:00-16:00", help: "working hours, site time; night is all else", value: hoursValue{&a.Working}},
 		{key: "night", def: "1", help: "advisories per person and night at most", value: intValue{&a.Night, 0, 1000}},
 		{key: "day", def: "10", help: "advisories per person and day at most; the rest goes into the digest", value: intValue{&a.Day, 0, 10000}},
@@ -119,6 +119,7 @@ func adviseSettings(a *Advise) group {
 				{key: "to", help: "senders", value: listValue{&a.Digest.To, nil}},
 			}
 		}},
+		{key: "links", def: "0", help: "how long a link in a mail acknowledges its advisory, once, for whoever has the mail; 0 is no such links", value: durationValue{&a.Links, 0, 7 * 24 * time.Hour}},
 		{key: "escalate", help: "tells somebody else when nobody acknowledged; off when left out", list: &list{
 			len:  func() int { return len(a.Escalate) },
 			grow: func(Position) { a.Escalate = append(a.Escalate, Escalate{}) },

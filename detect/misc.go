@@ -79,6 +79,13 @@ func stepFrozen(w *Watch) {
 		// The controller has noticed: OP travels and nothing comes back.
 		limit = min(limit, max(max(600, 200*in.dt), 4*usual))
 	}
+	if q := s.Noise.Least.Value(); q > 0.15 && s.Noise.Step.Value() < 1.5*q {
+		// At a resolution coarser than the noise a good loop stands within one step; OP
+		// must have travelled by what moves PV out of it.
+		if limit *= 3; x.OPTravel < 20*q {
+			return
+		}
+	}
 	if w.loop.Report == configs.Exception {
 		limit = max(6*3600, 3*usual)
 		if x.OPTravel > max(5, 20*s.Noise.sigma()) && in.active {

@@ -205,6 +205,11 @@ func (w *Watch) timeScale() float64 {
 // configured, else as seen now; 0 unknown.
 func (w *Watch) resetS() (ti float64, seen bool) {
 	if _, ti, ok := w.usualTuning(w.s.Off.T0); ok && ti > 0 && ti < 4e4 {
+		// A filter in the controller or a late OP makes the reading too short, never too
+		// long: where the loop list says more, within reason, it is believed.
+		if r := w.loop.IdealReset; r > ti && r < 20*ti {
+			ti = r
+		}
 		return ti, true
 	}
 	if r := w.loop.IdealReset; r > 0 {

@@ -168,7 +168,7 @@ func (o *oscState) setCause(c Cause, also [2]Cause, conf float64) {
 
 // triangle: the shape of a sticking valve, with corroboration. Where PV was sampled
 // too coarsely to show jumps, and where the cycle keeps time like a clock, which
-// friction does not, the shape must be the purer for it (measured on the 20 sticking
+// friction does not, the shape must be the purer for it (measured on about 20 sticking
 // and 9 other cycles of seed 1 with an index over 0.64: sticking up to 0.96 at a
 // regularity under 46, the others under 0.73).
 func (w *Watch) triangle(si float64, sh shapes, regular float64) bool {

@@ -22,6 +22,7 @@ type fakeHouse struct {
 	mu      sync.Mutex
 	base    time.Time
 	start   time.Time
+	used    map[string]bool
 	frozen  bool // the clock stands, for pictures
 	loops   []LoopState
 	signal  map[string]signal
@@ -403,6 +404,27 @@ func (h *fakeHouse) Acknowledge(id, who, why string, until time.Time) error {
 		}
 	}
 	return fmt.Errorf("episode %q is %w; hint: look at the list", id, alert.ErrUnknown)
+}
+
+// Links of the fake are "good-" and the number of an episode.
+func (h *fakeHouse) Linked(token string) (alert.Episode, error) {
+	id, ok := strings.CutPrefix(token, "good-")
+	if !ok || h.used[token] {
+		return alert.Episode{}, fmt.Errorf("%w: it was not made here; hint: acknowledge on the page", alert.ErrLink)
+	}
+	e, _, err := h.Episode(id)
+	return e, err
+}
+
+func (h *fakeHouse) AcknowledgeByLink(token, who, why string) error {
+	if _, err := h.Linked(token); err != nil {
+		return err
+	}
+	if h.used == nil {
+		h.used = map[string]bool{}
+	}
+	h.used[token] = true
+	return h.Acknowledge(strings.TrimPrefix(token, "good-"), who, why, time.Time{})
 }
 
 func (h *fakeHouse) Shelve(loop, who, why string, until time.Time) error {

@@ -140,7 +140,7 @@ func (g *gate) ServeHTTP(w http.ResponseWriter, r *http.Request) {
 	r.Body = http.MaxBytesReader(w, r.Body, maxBody)
 	limitTime(w, r)
 	if err := g.origins.Check(r); err != nil {
-		g.p.o.Log.Warn("request from another site refused", "audit", true, "path", path, "from", remote(r), "origin", r.Header.Get("Origin"))
+		g.p.o.Log.Warn("request from another site refused", "audit", true, "path", spare(path), "from", remote(r), "origin", r.Header.Get("Origin"))
 		g.p.refuse(w, r, http.StatusForbidden, "this request came from another site", "use the forms of the page itself")
 		return
 	}
@@ -152,6 +152,13 @@ func (g *gate) ServeHTTP(w http.ResponseWriter, r *http.Request) {
 	case path == "/sign-out" && r.Method == http.MethodPost:
 		g.signOut(w, r, v)
 		return
+	case strings.HasPrefix(path, linkPath):
+		// The link itself says what it is good for; guessing is made slow.
+		if !g.allow(g.tries, "link "+remote(r), rate.Every(6*time.Second), 10) {
+			w.Header().Set("Retry-After", "6")
+			g.p.refuse(w, r, http.StatusTooManyRequests, "too many links were opened from your address", "wait a minute, then try again")
+			return
+		}
 	case path == "/healthz", strings.HasPrefix(path, "/assets/"), path == "/sign-in":
 	case !ok:
 		g.askToken(w, r)

@@ -50,6 +50,8 @@ type Desk interface {
 	Episodes() []alert.Episode
 	Episode(id string) (alert.Episode, []alert.Entry, error)
 	Urgency(e *alert.Episode) (alert.Urgency, string)
+	Linked(token string) (alert.Episode, error)
+	AcknowledgeByLink(token, who, why string) error
 	Acknowledge(id, who, why string, until time.Time) error
 	Shelve(loop, who, why string, until time.Time) error
 	Unshelve(loop, who, why string) error

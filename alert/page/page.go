@@ -97,6 +97,8 @@ func (p *Page) routes() *http.ServeMux {
 	m.HandleFunc("POST /loops/{loop}/unshelve", p.unshelve)
 	m.HandleFunc("GET /episodes/{id}", p.serveEpisode)
 	m.HandleFunc("POST /episodes/{id}/acknowledge", p.acknowledge)
+	m.HandleFunc("GET "+linkPath+"{token}", p.serveLink)
+	m.HandleFunc("POST "+linkPath+"{token}", p.acknowledgeByLink)
 	m.HandleFunc("GET /watch", p.serveWatch)
 	m.HandleFunc("GET /sign-in", func(w http.ResponseWriter, r *http.Request) { p.signInPage(w, r, http.StatusOK, "") })
 	m.HandleFunc("GET /assets/{file}", serveAsset)

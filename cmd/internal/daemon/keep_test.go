@@ -88,7 +88,7 @@ func TestSizeTooSmallIsTold(t *testing.T) {
 	for range 5 {
 		hour()
 	}
-	if told() != 1 || !strings.Contains(log.String(), "full=2w") {
+	if told() != 1 || !strings.Contains(log.String(), "full=14d") {
 		t.Errorf("told %d times, want once; oldest %d, %d bytes\n%s", told(), d.window.Stats().Oldest, d.window.Stats().Bytes, &log)
 	}
 	at = at.Add(24 * time.Hour)

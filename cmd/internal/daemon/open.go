@@ -210,7 +210,7 @@ func (d *Daemon) deskSettings(c *configs.Config, senders map[string]alert.Sender
 	if standing == 0 {
 		standing = -1
 	}
-	return alert.Settings{Site: c.Site.Name, Zone: c.Site.Zone, Loops: c.Loops, Advise: c.Advise, Standing: standing, Names: c.Keep.Names,
+	return alert.Settings{Site: c.Site.Name, Zone: c.Site.Zone, Loops: c.Loops, Advise: c.Advise, Standing: standing, Names: c.Keep.Names, Keep: c.Keep.Episodes,
 		PageURL: c.Page.URL, Senders: senders, Health: d.digestLines}
 }
 

@@ -35,6 +35,11 @@ func (p people) Acknowledge(id, who, why string, until time.Time) error {
 	return p.Desk.Acknowledge(id, who, why, until)
 }
 
+func (p people) AcknowledgeByLink(token, who, why string) error {
+	defer p.acts.Add(1)
+	return p.Desk.AcknowledgeByLink(token, who, why)
+}
+
 func (p people) Shelve(loop, who, why string, until time.Time) error {
 	defer p.acts.Add(1)
 	return p.Desk.Shelve(loop, who, why, until)
