@@ -100,14 +100,22 @@ func (d *Desk) acknowledgeLink(x *delivery, it *Item, now time.Time) (Link, bool
 func (d *Desk) Linked(token string) (Episode, error) {
 	d.mu.Lock()
 	defer d.mu.Unlock()
+	if !d.loaded {
+		if err := d.load(); err != nil {
+			return Episode{}, err
+		}
+	}
 	var e Episode
-	err := d.update(func(b *batch) error {
-		x, _, err := b.linked(token)
+	err := d.o.Store.View(func(tx Tx) error {
+		x, _, err := (&batch{d: d, tx: tx}).linked(token)
 		if x != nil {
 			e = x.clone()
 		}
 		return err
 	})
+	if r, ok := errors.AsType[refusal](err); ok {
+		err = r.error
+	}
 	return e, err
 }
 

@@ -5,6 +5,7 @@ import (
 	"errors"
 	"net/http"
 	"strings"
+	"time"
 
 	"midwatch/alert"
 )
@@ -43,7 +44,7 @@ func (p *Page) showLink(w http.ResponseWriter, r *http.Request, code int, proble
 func (p *Page) linkView(r *http.Request, e *alert.Episode, problem string) linkView {
 	f := e.Lead()
 	v := linkView{shell: p.shell(r, up(r), nil), Subject: cmp.Or(e.Subject.Loop, e.Subject.Source, e.Subject.Part), Text: f.Text,
-		Since: timeText(e.Since, p.o.House.Site().Zone), State: e.State(), Problem: problem}
+		Since: time.UnixMilli(e.Since).In(p.o.House.Site().Zone).Format("Mon 2 Jan 15:04 MST"), State: e.State(), Problem: problem}
 	v.WhoWant = v.Visitor.Name == ""
 	if e.Ack != nil {
 		v.AckBy = e.Ack.Who
