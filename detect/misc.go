@@ -75,6 +75,7 @@ func stepFrozen(w *Watch) {
 	usual := m.PVRunMax
 	limit := max(max(2700, 300*in.dt), 6*usual)
 	limit = min(limit, max(max(4*3600, 300*in.dt), 2*usual))
+	limit = max(limit, 5*w.timeScale()) // a slow loop at rest stands within one step for as long
 	if x.OPTravel > max(2, max(20*s.Noise.sigma(), 10*s.Noise.Least.Value())) && in.active {
 		// The controller has noticed: OP travels and nothing comes back.
 		limit = min(limit, max(max(600, 200*in.dt), 4*usual))
@@ -97,12 +98,12 @@ func stepFrozen(w *Watch) {
 	}
 }
 
-// At the end of the range: PV pegged at 0 or full scale while SP asks for
-// something else, in a loop that usually lives inside.
 // rangeEnd is how near to the end of its range PV counts as pegged, %: noise and
 // offset of a dead transmitter (common practice, no source).
 const rangeEnd = 0.3
 
+// stepRangeEnd: PV pegged at 0 or full scale while SP asks for something else, in a
+// loop that usually lives inside.
 func stepRangeEnd(w *Watch) {
 	s, in := &w.s, &w.in
 	x := &s.Misc

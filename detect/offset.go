@@ -47,6 +47,7 @@ type offsetPast struct {
 	Longest float64 // s, longest run that was no finding; forgets a tenth with each new run of note
 	Runs    uint8   // runs on end in which the integral was missing
 	Since   float64 // s, begin of the first of them
+	Came    uint8   // findings from which PV came back by itself
 }
 
 // stand is a decision that holds until calm has lasted.
@@ -72,6 +73,9 @@ func (w *Watch) rest(d *stand) {
 		return
 	}
 	if d.Calm += w.in.dt; d.Calm > max(max(1800, 120*w.in.dt), 2*w.timeScale()) {
+		if d == &w.s.OffPast.Offset {
+			w.s.OffPast.Came = min(w.s.OffPast.Came+1, 3)
+		}
 		*d = stand{}
 	}
 }
@@ -332,6 +336,9 @@ func (w *Watch) judgeOffset(thr float64) {
 	if past.Offset.On {
 		need /= 4
 	}
+	// Where PV came back from what was said before, the integral does work: such a
+	// loop must stay away for longer to be news.
+	need *= 1 + 2*float64(past.Came)
 	if d > need && !s.Osc.Grow && !s.Osc.Sus {
 		past.Offset.support(since, mean, cause, conf)
 	}
