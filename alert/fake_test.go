@@ -120,7 +120,15 @@ func (s *fakeStore) View(f func(fakeTx) error) error {
 	return f(fakeTx{s.data, nil})
 }
 
+func (s *fakeStore) written() int {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	return s.updates
+}
+
 func (s *fakeStore) count(bucket string) int {
+	s.mu.Lock()
+	defer s.mu.Unlock()
 	n := 0
 	for range (fakeTx{s.data, nil}).Scan(bucket, nil) {
 		n++

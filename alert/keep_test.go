@@ -209,13 +209,14 @@ func TestPruningOnceADay(t *testing.T) {
 		}
 		time.Sleep(3 * aDay)
 		say("PIC-120", detect.Updated)
-		before := s.updates
+		synctest.Wait()
+		before := s.written()
 		time.Sleep(4 * aDay)
 		synctest.Wait()
 		if n := s.count(bucketEpisodes); n != 1 {
 			t.Errorf("%d episodes, want the open one", n)
 		}
-		if n := s.updates - before; n > 6 {
+		if n := s.written() - before; n > 6 {
 			t.Errorf("%d transactions in four quiet days, want about one a day", n)
 		}
 		d.Stop()

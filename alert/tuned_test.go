@@ -74,3 +74,93 @@ func TestTuningInTheDigest(t *testing.T) {
 		t.Fatalf("want one digest with one line of the nine changes: %+v", got)
 	}
 }
+
+// TestTuningThroughCrashes: wherever the process ends, before or after a write, the
+// hour's message arrives once, and with every loop in it.
+func TestTuningThroughCrashes(t *testing.T) {
+	for _, committed := range []bool{false, true} {
+		for n := 1; ; n++ {
+			r := newRig(t, func(s *Settings) { s.Advise.Routes = s.Advise.Routes[1:]; s.Advise.Routes[0].Urgency = []string{"note"} })
+			r.run(start)
+			crash, crashed := r.store.written()+n, false
+			r.store.fail = func(i int, after bool) error {
+				if i == crash && after == committed {
+					crashed = true
+					return errDisk
+				}
+				return nil
+			}
+			// do acts, and once more after a restart where that was cut short.
+			do := func(act func() error) {
+				t.Helper()
+				if act() != nil {
+					r.open()
+					if err := act(); err != nil {
+						t.Fatal(err)
+					}
+				}
+			}
+			wake := func(at time.Time) {
+				t.Helper()
+				r.clock.set(at)
+				for range 5 {
+					do(func() error { _, err := r.desk.Wake(at); return err })
+					r.desk.settle()
+				}
+			}
+			for i, l := range []string{"AIC-204", "PIC-120", "AIC-204", "FIC-311"} {
+				do(func() error { return r.desk.Hear([]detect.Finding{retune(l, float64(i*5))}) })
+				wake(start.Add(time.Duration(i*5) * time.Minute))
+			}
+			wake(start.Add(time.Hour))
+			wake(start.Add(time.Hour + time.Minute))
+			wake(start.Add(3 * time.Hour))
+			keys := map[string]int{}
+			got := r.mail.take()
+			for _, m := range got {
+				keys[m.Key]++
+			}
+			if len(keys) != 1 || len(got) > 2 || !strings.Contains(got[0].Subject, "tuning changed 4 times on 3 loops") {
+				t.Fatalf("write %d, committed %v: %d messages under %d keys", n, committed, len(got), len(keys))
+			}
+			if !crashed {
+				if n < 5 {
+					t.Fatalf("only %d writes", n)
+				}
+				break
+			}
+		}
+	}
+}
+
+// TestLinkThroughACrash: a link is used up together with the acknowledgement, or
+// not at all.
+func TestLinkThroughACrash(t *testing.T) {
+	for _, committed := range []bool{false, true} {
+		r := linkRig(t)
+		r.run(start)
+		r.hear(urgent("AIC-204", 0))
+		r.run(start)
+		token := tokenOf(t, r.mail.take()[0])
+		r.store.fail = func(_ int, after bool) error {
+			if after == committed {
+				return errDisk
+			}
+			return nil
+		}
+		if err := r.desk.AcknowledgeByLink(token, "Jo", ""); err == nil {
+			t.Fatal("no error")
+		}
+		r.store.fail = nil
+		r.open()
+		err := r.desk.AcknowledgeByLink(token, "Jo", "")
+		if committed {
+			refusedLink(t, err, "it was used")
+		} else if err != nil {
+			t.Error(err)
+		}
+		if e := r.desk.Episodes()[0]; e.State() != Acknowledged {
+			t.Error("state", e.State())
+		}
+	}
+}
