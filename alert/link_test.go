@@ -181,3 +181,35 @@ func TestLinkKeyIsSecret(t *testing.T) {
 		t.Error("no key, or it shows")
 	}
 }
+
+// TestLinkThroughACrash: a link is used up together with the acknowledgement, or
+// not at all.
+func TestLinkThroughACrash(t *testing.T) {
+	for _, committed := range []bool{false, true} {
+		r := linkRig(t)
+		r.run(start)
+		r.hear(urgent("AIC-204", 0))
+		r.run(start)
+		token := tokenOf(t, r.mail.take()[0])
+		r.store.fail = func(_ int, after bool) error {
+			if after == committed {
+				return errDisk
+			}
+			return nil
+		}
+		if err := r.desk.AcknowledgeByLink(token, "Jo", ""); err == nil {
+			t.Fatal("no error")
+		}
+		r.store.fail = nil
+		r.open()
+		err := r.desk.AcknowledgeByLink(token, "Jo", "")
+		if committed {
+			refusedLink(t, err, "it was used")
+		} else if err != nil {
+			t.Error(err)
+		}
+		if e := r.desk.Episodes()[0]; e.State() != Acknowledged {
+			t.Error("state", e.State())
+		}
+	}
+}

@@ -80,7 +80,10 @@ func TestTuningInTheDigest(t *testing.T) {
 func TestTuningThroughCrashes(t *testing.T) {
 	for _, committed := range []bool{false, true} {
 		for n := 1; ; n++ {
-			r := newRig(t, func(s *Settings) { s.Advise.Routes = s.Advise.Routes[1:]; s.Advise.Routes[0].Urgency = []string{"note"} })
+			r := newRig(t, func(s *Settings) {
+				s.Advise.Routes = s.Advise.Routes[1:]
+				s.Advise.Routes[0].Urgency = []string{"note"}
+			})
 			r.run(start)
 			crash, crashed := r.store.written()+n, false
 			r.store.fail = func(i int, after bool) error {
@@ -129,38 +132,6 @@ func TestTuningThroughCrashes(t *testing.T) {
 				}
 				break
 			}
-		}
-	}
-}
-
-// TestLinkThroughACrash: a link is used up together with the acknowledgement, or
-// not at all.
-func TestLinkThroughACrash(t *testing.T) {
-	for _, committed := range []bool{false, true} {
-		r := linkRig(t)
-		r.run(start)
-		r.hear(urgent("AIC-204", 0))
-		r.run(start)
-		token := tokenOf(t, r.mail.take()[0])
-		r.store.fail = func(_ int, after bool) error {
-			if after == committed {
-				return errDisk
-			}
-			return nil
-		}
-		if err := r.desk.AcknowledgeByLink(token, "Jo", ""); err == nil {
-			t.Fatal("no error")
-		}
-		r.store.fail = nil
-		r.open()
-		err := r.desk.AcknowledgeByLink(token, "Jo", "")
-		if committed {
-			refusedLink(t, err, "it was used")
-		} else if err != nil {
-			t.Error(err)
-		}
-		if e := r.desk.Episodes()[0]; e.State() != Acknowledged {
-			t.Error("state", e.State())
 		}
 	}
 }

@@ -223,6 +223,8 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		o.setCause(GainTooHigh, [2]Cause{OutsideDisturbance}, 0.75)
 	case si < 0.5 && (move > 1.7 || phi > 60 && q.spread > 0.14 && move > 1.4):
 		o.setCause(byPhi, [2]Cause{OutsideDisturbance}, 0.75)
+	case o.Sticking:
+		// A shape once plain is not taken back because noise blurs it for a while.
 	default:
 		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, byPhi}, 0.5)
 	}
