@@ -77,7 +77,6 @@ func (w *Watch) TakeEvidence() (Evidence, bool) {
 // of data time. Results do not depend on the order of Record calls.
 type Sites struct {
 	loops []*configs.Loop
-	index map[string]int
 	ev    map[collector.LoopID]Evidence
 	sites []Site
 	done  int64 // end of the last slot judged, ms UTC
