@@ -81,7 +81,11 @@ func (d *Dossier) trend(a, b int, label string) template.HTML {
 	g := newDrawing(wide, 330)
 	pv, sp := d.pv(s.pv[a:b]), d.pv(s.sp[a:b])
 	lo, hi := extent(pv, sp)
-	lo, hi = math.Max(lo, d.loop.PVLow-0.02*d.loop.PVSpan()), math.Min(hi, d.loop.PVHigh+0.02*d.loop.PVSpan())
+	// A stray spike must not flatten the trend; where PV lives outside its listed
+	// range, the range is wrong and the trend is shown whole.
+	if low, high := d.loop.PVLow-0.02*d.loop.PVSpan(), d.loop.PVHigh+0.02*d.loop.PVSpan(); outside(pv, low, high) < 0.01 {
+		lo, hi = math.Max(lo, low), math.Min(hi, high)
+	}
 	p := g.panel(56, 20, wide-64, 160, float64(a), float64(b), lo, hi)
 	ol, oh := extent(s.op[a:b])
 	q := g.panel(56, 208, wide-64, 92, float64(a), float64(b), math.Max(ol, -2), math.Min(oh, 102))
@@ -361,4 +365,15 @@ func (d *Dossier) adviceFigures() []figure {
 		{"Simulated: set-point step of " + short(d.s.pvUnits(a.spStep)) + " " + d.unit(), draw(false), "On the fitted model, with limits and scan."},
 		{"Simulated: load step of " + short(a.load) + " % of OP at the process input", draw(true), ""},
 	}
+}
+
+// outside is the share of x below low or above high.
+func outside(x []float64, low, high float64) float64 {
+	n := 0
+	for _, v := range x {
+		if v < low || v > high {
+			n++
+		}
+	}
+	return float64(n) / math.Max(1, float64(len(x)))
 }
