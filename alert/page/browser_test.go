@@ -143,9 +143,13 @@ func pulses(t *testing.T, ctx context.Context, n int) {
 func wait(t *testing.T, ctx context.Context, js string) {
 	t.Helper()
 	deadline := time.Now().Add(15 * time.Second)
-	for !eval[bool](t, ctx, "(() => { try { return !!("+js+") } catch { return false } })()") {
-		if time.Now().After(deadline) {
-			t.Fatalf("never true: %s\n%.300s", js, eval[string](t, ctx, "document.body.innerText"))
+	for {
+		ok, err := chromedp.Run(ctx, chromedp.Evaluate[bool]("(() => { try { return !!("+js+") } catch { return false } })()"))
+		if ok {
+			return
+		}
+		if time.Now().After(deadline) || ctx.Err() != nil {
+			t.Fatalf("never true: %s (%v)\n%.300s", js, err, eval[string](t, ctx, "document.body.innerText"))
 		}
 		time.Sleep(30 * time.Millisecond)
 	}
