@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"slices"
 	"strings"
 	"text/tabwriter"
 	"time"
@@ -16,7 +17,7 @@ import (
 
 func statusVerb(h *house) *cobra.Command {
 	var config string
-	asJSON, loops := false, false
+	asJSON, loops, standing := false, false, false
 	c := &cobra.Command{
 		Use:   "status -c FILE",
 		Short: "says how the watch and the loops are",
@@ -26,15 +27,16 @@ asks the running watch; where none runs it reads the data folder and says so.
 
 With a watch that is not well the exit code is 1.`,
 		Args: cobra.NoArgs,
-		RunE: func(*cobra.Command, []string) error { return h.status(config, loops, asJSON) },
+		RunE: func(*cobra.Command, []string) error { return h.status(config, loops, standing, asJSON) },
 	}
 	configFlag(c, &config)
 	c.Flags().BoolVar(&loops, "loops", false, "list every loop with its state")
+	c.Flags().BoolVar(&standing, "standing", false, "list only what was found before the baseline ended: the site's old troubles, most urgent first")
 	c.Flags().BoolVar(&asJSON, "json", false, "print JSON")
 	return c
 }
 
-func (h *house) status(config string, loops, asJSON bool) error {
+func (h *house) status(config string, loops, standing, asJSON bool) error {
 	c, err := loadPlain(config)
 	if err != nil {
 		return err
@@ -51,6 +53,9 @@ func (h *house) status(config string, loops, asJSON bool) error {
 	}
 	if err != nil {
 		return err
+	}
+	if standing {
+		s.Episodes = slices.DeleteFunc(s.Episodes, func(e api.Episode) bool { return !e.Standing })
 	}
 	if asJSON {
 		e := json.NewEncoder(h.stdout)
