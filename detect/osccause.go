@@ -194,8 +194,9 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	case o.LastCause != 0 && w.in.t-o.LastAt < 60*o.P && math.Abs(math.Log(o.P/o.LastP)) < 0.75:
 		o.setCause(causes[o.LastCause], also, 0.8)
 		o.LastAt, o.LastP = w.in.t, o.P
-	case o.Sticking && si > 0.5 && !(sh.h3OP > 0.3):
-		// A shape once plain is not taken back because noise blurs it for a while.
+	case o.Sticking && !integrating && si > 0.5 && !(sh.h3OP > 0.3):
+		// A shape once plain is not taken back because noise blurs it for a while. On
+		// integrating loops it may yet turn out to be dead band.
 	case tri && sh.h3OP > 0.25:
 		// OP square: what drives the loop is square, a sticking valve makes OP a triangle.
 		o.setCause(OutsideDisturbance, [2]Cause{ValveSticking}, 0.75)
