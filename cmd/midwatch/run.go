@@ -163,6 +163,6 @@ func checkFileVerb(*house) *cobra.Command {
 		Use: checkFileName + " FILE", Hidden: true, Args: cobra.ExactArgs(1),
 		Short: "checks every page and checksum of a file of the data folder",
 		Long:  "Checks every page and checksum of a file of the data folder. The file must not be\nin use.",
-		RunE:  func(_ *cobra.Command, args []string) error { return store.Check(args[0]) },
+		RunE:  func(_ *cobra.Command, args []string) error { return store.CheckAlone(args[0]) },
 	}
 }
