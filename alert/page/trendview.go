@@ -1,7 +1,6 @@
 package page
 
 import (
-	"bufio"
 	"encoding/json"
 	"errors"
 	"fmt"
@@ -12,8 +11,7 @@ import (
 	"strings"
 	"time"
 
-	"midwatch/collector"
-	"midwatch/detect"
+	record "midwatch/collector/trend"
 )
 
 // span of time that is wanted, as it stands in the address.
@@ -171,8 +169,7 @@ func (p *Page) serveTrendCSV(w http.ResponseWriter, r *http.Request) {
 	w.Header().Set("Content-Type", "text/csv; charset=utf-8")
 	w.Header().Set("Content-Disposition", `attachment; filename="trend.csv"`)
 	rc := http.NewResponseController(w)
-	out := bufio.NewWriterSize(w, 64<<10)
-	out.WriteString("time,loop,pv,sp,op,mode,flags\n")
+	out := record.NewWriter(w, record.Columns{Mode: true, Flags: true})
 	n := 0
 	for f, err := range p.o.House.Frames(r.Context(), s.Loop.Name, span.From, span.To) {
 		if err != nil {
@@ -184,35 +181,9 @@ func (p *Page) serveTrendCSV(w http.ResponseWriter, r *http.Request) {
 			rc.SetWriteDeadline(time.Now().Add(time.Minute))
 		}
 		n++
-		writeFrame(out, s.Loop.Name, &f)
+		if out.Write(s.Loop.Name, &f) != nil {
+			return // the reader is gone
+		}
 	}
 	out.Flush()
-}
-
-func writeFrame(w *bufio.Writer, loop string, f *collector.Frame) {
-	num := func(v float32) {
-		w.WriteByte(',')
-		if v == v {
-			w.WriteString(strconv.FormatFloat(float64(v), 'g', -1, 32))
-		}
-	}
-	w.WriteString(detect.FormatTime(f.Time))
-	w.WriteByte(',')
-	if strings.ContainsAny(loop, ",\"\r\n") {
-		w.WriteString(`"` + strings.ReplaceAll(loop, `"`, `""`) + `"`)
-	} else {
-		w.WriteString(loop)
-	}
-	num(f.PV)
-	num(f.SP)
-	num(f.OP)
-	w.WriteString("," + f.Mode.String() + ",")
-	plus := ""
-	for i, word := range collector.FlagWords {
-		if f.Flags&(1<<i) != 0 {
-			w.WriteString(plus + word)
-			plus = "+"
-		}
-	}
-	w.WriteByte('\n')
 }
