@@ -90,7 +90,6 @@ type motion struct {
 	Changes             uint32  // of PV
 	SPStep              float64 // s, last step of SP over 0.3 %
 	SPPrevStep          float64 // s, the one before
-	SPSteps             uint32  // steps over 0.3 % counted with 60 slots between them
 	SPBusy              float32 // share of slots in which SP moved, slow mean
 	Active              bool
 	ActiveSince         float64
@@ -101,7 +100,6 @@ type motion struct {
 	SPLo, SPHi          [2]float32
 	ELo, EHi            [2]float32
 	HalfAt              float64 // s, when the running half window began
-	EStill              float64 // range of e since OP stands still
 	EStillLo, EStillHi  float32
 	Update              num.Quantile // median interval between changes of PV, slots
 	Frozen              bool

@@ -16,7 +16,6 @@ type miscState struct {
 	// Frozen PV.
 	OPAtStill float64 // %, OP when PV stopped moving
 	OPTravel  float64 // %, travel of OP since
-	StillE    float64 // % s, integral of |e| since
 	StillFrom float64
 	Frozen    bool
 	// PV at the end of its range.

@@ -148,7 +148,6 @@ func (w *Watch) stepSP() {
 	m.SPBusy += (moved - m.SPBusy) / 60
 	if d > 0.3 {
 		if in.t-m.SPStep > 60*in.dt {
-			m.SPSteps++
 			m.SPPrevStep = m.SPStep
 		}
 		m.SPStep = in.t

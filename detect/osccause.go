@@ -114,7 +114,6 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 		byPhi, also = Undetermined, [2]Cause{GainTooHigh, ResetTooShort}
 	}
 	changed := (rk > 1.4 && rt < 2 || rt > 0 && rt < 0.65) && !(si > 0.5)
-	o.Changed = o.Changed || changed
 
 	if o.Grow {
 		// Once OP is clipped the fit fails: the cause found before stands.

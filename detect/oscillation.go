@@ -13,7 +13,6 @@ type oscState struct {
 	Evals     uint32  // half-cycles of the bank since the episode began
 	Bad       uint16  // half-cycles running without the cycle
 	Since     float64 // s
-	Grown     float64 // s, growth last seen; 0 never
 	P         float64 // s, period
 	Amp       float64 // %, mean peak of e
 	AmpHi     float64
@@ -22,7 +21,6 @@ type oscState struct {
 	Growth    float64 // per cycle, newest
 	GrowCause uint8   // cause found while growing
 	Outside   bool    // judged outside once
-	Changed   bool    // the loop's own tuning changed before
 	Cause     uint8
 	Next      uint8 // a differing judgement, and how often running
 	NextN     uint8
@@ -170,7 +168,6 @@ func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 	if b.Conf < growConfirm {
 		return
 	}
-	o.Grown = w.in.t
 	if !o.Grow {
 		o.Grow = true
 		if !o.Sus {
@@ -255,7 +252,7 @@ func (w *Watch) beginOsc(level int, b *cycleBank, back int) {
 		o.Bank, o.Bad = uint8(level), 0 // the same cycle, seen by the neighbour: what is known of it stands
 		return
 	}
-	*o = oscState{Grow: keep.Grow, Sus: keep.Sus, Grown: keep.Grown, Bank: uint8(level), Since: b.Zero - len*w.levelS(level),
+	*o = oscState{Grow: keep.Grow, Sus: keep.Sus, Bank: uint8(level), Since: b.Zero - len*w.levelS(level),
 		LastAt: keep.LastAt, LastP: keep.LastP, LastCause: keep.LastCause}
 	w.startTrack(level)
 }

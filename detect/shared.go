@@ -234,7 +234,7 @@ func (s *shared) finding(end int64, g *sharedGroup, e Event) *Finding {
 	if e == Cleared {
 		f.Reason, f.Confidence = Over, 0
 		f.Text = "The common cycle of " + list + " is over."
-		f.TextShort = shorten(g.Key+": common cycle is over.") + shortTail
+		f.TextShort = shorten(g.Key + ": common cycle is over.")
 		return f
 	}
 	f.Measures = Measures{{"period_s", g.Period}, {"loops", float64(len(g.Loops))}}
@@ -253,14 +253,6 @@ func (s *shared) finding(end int64, g *sharedGroup, e Event) *Finding {
 		what += " No root stands out: it may come from outside all of them."
 	}
 	f.Text = what + " Judge the root before any other loop of the group."
-	f.TextShort = shorten(fmt.Sprintf("%d loops cycle every %s: %s.", len(g.Loops), duration(g.Period), list)) + shortTail
+	f.TextShort = shorten(fmt.Sprintf("%d loops cycle every %s: %s.", len(g.Loops), duration(g.Period), list))
 	return f
-}
-
-func shorten(t string) string {
-	r := []rune(t)
-	if most := 160 - len(shortTail); len(r) > most {
-		r = append(r[:most-1], '…')
-	}
-	return string(r)
 }

@@ -26,7 +26,7 @@ func (w *Watch) judgeSlow() {
 	if n < 3 {
 		return
 	}
-	own := 0
+	own := false
 	var ratios, durs [recRing]float64
 	nr := 0
 	for i := range 3 {
@@ -40,13 +40,13 @@ func (w *Watch) judgeSlow() {
 	if nr == 3 {
 		m, lo := num.Median(ratios[:3]), min(ratios[0], min(ratios[1], ratios[2]))
 		if w.madeSlower(float64(r.recent(2).T0)) && m > 1.8*w.strict && lo > 1.3 {
-			own = 1
+			own = true
 		}
 	}
-	if own == 0 && w.slowByHistory(n) {
-		own = 1
+	if !own && w.slowByHistory(n) {
+		own = true
 	}
-	area := 0
+	area := false
 	var ar [recRing]float64
 	na := 0
 	lo := math.Inf(1)
@@ -59,10 +59,10 @@ func (w *Watch) judgeSlow() {
 	}
 	if na >= 3 {
 		if m := num.Median(ar[:na]); m > 2.6 && lo > 2 || m > 3.2 && lo > 1.7 {
-			area = 1
+			area = true
 		}
 	}
-	shape := 0
+	shape := false
 	if n >= 5 && w.loop.Process != configs.Runaway && w.loop.Report != configs.Exception {
 		var t9 [5]float64
 		lo := math.Inf(1)
@@ -87,10 +87,19 @@ func (w *Watch) judgeSlow() {
 			}
 		}
 		if m := num.Median(tail[:nt]); num.Median(t9[:]) > 11*w.strict && lo > 4.5 && nt >= 3 && over < 2 && m > 0.5 && m < 1.8 {
-			shape = 1
+			shape = true
 		}
 	}
-	w.slowCause(own, area, shape, durs[:3])
+	by := uint8(0) // the strongest proof
+	switch {
+	case own:
+		by = 1
+	case area:
+		by = 2
+	case shape:
+		by = 3
+	}
+	w.slowCause(by, durs[:3])
 }
 
 // swinging: the newest recovery fits a regular cycle, whose half-waves look like
@@ -139,9 +148,9 @@ func (w *Watch) slowByHistory(n int) bool {
 	return num.Median(ratios[:need]) > least*w.strict
 }
 
-func (w *Watch) slowCause(own, area, shape int, durs []float64) {
+func (w *Watch) slowCause(by uint8, durs []float64) {
 	r := &w.s.Recov
-	if own+area+shape == 0 {
+	if by == 0 {
 		if r.Slow {
 			// Over once the newest recoveries are the usual ones again.
 			ok := 0
@@ -204,23 +213,13 @@ func (w *Watch) slowCause(own, area, shape int, durs []float64) {
 		r.Slow, r.SlowSince = true, float64(first.T0)
 	}
 	r.Cause, r.Conf = causeIndex(cause), float32(conf)
-	r.By = uint8(map3(own, area))
+	r.By = by
 	r.Now = float32(num.Median(durs))
 	q := r.Usual[kindOf(r.recent(0).SP)]
 	r.Was = 0
 	if q.N >= 4 {
 		r.Was = q.V
 	}
-}
-
-func map3(own, area int) int {
-	switch {
-	case own > 0:
-		return 1
-	case area > 0:
-		return 2
-	}
-	return 3
 }
 
 // madeSlower: a change of the tuning to less gain or a longer reset, at or before t

@@ -208,18 +208,22 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 
 const shortTail = " Advisory only."
 
+// shorten cuts a text so that it has at most 160 characters with the caution.
+func shorten(t string) string {
+	r := []rune(t)
+	if most := 160 - len(shortTail); len(r) > most {
+		r = append(r[:most-1], '…')
+	}
+	return string(r) + shortTail
+}
+
 // short is at most 160 characters, loop first, advisory only.
 func (w *Watch) short(f *Finding, brief string) string {
 	t := w.loop.Name + ": " + brief
 	if c := causeWords[f.Cause]; c != "" && f.Cause != MeasurementCause {
 		t += "; " + likely(f.Confidence) + " " + c
 	}
-	t += "."
-	r := []rune(t)
-	if most := 160 - len(shortTail); len(r) > most {
-		r = append(r[:most-1], '…')
-	}
-	return string(r) + shortTail
+	return shorten(t + ".")
 }
 
 func (w *Watch) textOver(k int) (long, short string) {

@@ -35,7 +35,6 @@ type track struct {
 	Stick  float64 // share of PV travel in the busiest fifth of the cycle
 	PhRe   float64 // of OP against e, unit phasors
 	PhIm   float64
-	Clip   uint32 // looks left out because OP was at a limit
 	// Growth over the whole episode: regression of ln(amplitude) on half-cycles.
 	GN, GX, GY, GXX, GXY, GYY float64
 	// Extremes of SP and PV over the running cycle, and their mean ranges: a loop
@@ -98,7 +97,6 @@ func (w *Watch) lookTrack(period float64) {
 		return
 	}
 	if w.s.Tune.LimitAt > 0 && w.in.t-w.s.Tune.LimitAt < 2*period {
-		k.Clip++
 		return
 	}
 	var e, op [trackLen]float64

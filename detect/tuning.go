@@ -78,12 +78,11 @@ type fitBank struct {
 
 // tuneState is what is common to the fits.
 type tuneState struct {
-	LimitAt  float64 // s, OP last at a limit
-	OPMean   float64 // %, slow mean of OP (200 slots)
-	FFMean   float64 // slow mean of a multiplying feedforward, its unit
-	Law      float32 // share of excited blocks that the PI law explains; 0 before the first
-	Sign     float32 // of the gain as seen; 0 unknown
-	BestBank uint8
+	LimitAt float64 // s, OP last at a limit
+	OPMean  float64 // %, slow mean of OP (200 slots)
+	FFMean  float64 // slow mean of a multiplying feedforward, its unit
+	Law     float32 // share of excited blocks that the PI law explains; 0 before the first
+	Sign    float32 // of the gain as seen; 0 unknown
 }
 
 func (w *Watch) stepFit(k, level int, e, si, op float64) {
