@@ -3,6 +3,7 @@ package alert
 import (
 	"crypto/sha256"
 	"encoding/base32"
+	"slices"
 	"strings"
 	"time"
 
@@ -29,6 +30,7 @@ const (
 type Member struct {
 	Finding detect.Finding `json:"finding"`
 	Open    bool           `json:"open"`
+	Depth   int            `json:"depth,omitempty"` // in its cascade: 0 outermost, or none
 }
 
 // Mark says who did something, when and why. Times are ms UTC.
@@ -161,6 +163,10 @@ func leads(a, b *Member) bool {
 	if x, y := named(fa.Cause), named(fb.Cause); x != y {
 		return x
 	}
+	// In a cascade the inner loop is judged first: the outer one works through it.
+	if a.Depth != b.Depth {
+		return a.Depth > b.Depth
+	}
 	// The growing one of a pair says more than the sustained one.
 	if x, y := fa.Kind == detect.GrowingOscillation, fb.Kind == detect.GrowingOscillation; x != y {
 		return x
@@ -180,10 +186,15 @@ func named(c detect.Cause) bool {
 	return c != detect.NoCause && c != detect.Undetermined && c != detect.OutsideDisturbance
 }
 
-// Loops names every loop of the episode, the subject's first, each once.
+// Loops names every loop of the episode, each once: those of a cascade from the inner
+// to the outer, else the subject's first.
 func (e *Episode) Loops() []string {
 	var out []string
 	seen := map[string]bool{}
+	depth := map[string]int{}
+	for i := range e.Members {
+		depth[e.Members[i].Finding.Loop] = e.Members[i].Depth
+	}
 	add := func(l string) {
 		if l != "" && !seen[l] {
 			seen[l] = true
@@ -197,7 +208,24 @@ func (e *Episode) Loops() []string {
 	for _, l := range e.Group {
 		add(l)
 	}
+	slices.SortStableFunc(out, func(a, b string) int { return depth[b] - depth[a] })
 	return out
+}
+
+// inner is the innermost loop of a cascade whose loops share the episode; empty: none.
+func (e *Episode) inner() string {
+	name, deepest := "", 0
+	for i := range e.Members {
+		if m := &e.Members[i]; m.Open && m.Depth > deepest {
+			name, deepest = m.Finding.Loop, m.Depth
+		}
+	}
+	for i := range e.Members {
+		if m := &e.Members[i]; m.Open && m.Depth < deepest && m.Finding.Loop != "" {
+			return name
+		}
+	}
+	return ""
 }
 
 // Entry is one line of an episode's journal. It is only ever appended.

@@ -95,6 +95,25 @@ func cascades(loops []*configs.Loop) relatives {
 	return out
 }
 
+// depths says how many loops stand above each in its cascade.
+func depths(loops []*configs.Loop) map[string]int {
+	outer := map[string]string{}
+	for _, l := range loops {
+		if l.Inner != "" && l.Inner != l.Name {
+			outer[l.Inner] = l.Name
+		}
+	}
+	out := map[string]int{}
+	for inner := range outer {
+		n := 0
+		for x := inner; outer[x] != "" && n < len(loops); x = outer[x] { // a ring ends, too
+			n++
+		}
+		out[inner] = n
+	}
+	return out
+}
+
 // home finds the episode a finding belongs to: the one it is in, the open one of
 // its place, an open one of its cascade or dead source, one that ended less than
 // a day ago; nil when it is a new trouble.

@@ -153,12 +153,12 @@ func (b *batch) hear(f *detect.Finding) error {
 		quiet = e.Count&(e.Count-1) != 0
 	}
 	if t := e.member(f); t != nil {
-		*t = Member{Finding: *f, Open: true}
+		*t = Member{Finding: *f, Open: true, Depth: b.d.set.depth[f.Loop]}
 	} else {
 		if what == "updated" {
 			what = "folded in"
 		}
-		e.Members = append(e.Members, Member{Finding: *f, Open: true})
+		e.Members = append(e.Members, Member{Finding: *f, Open: true, Depth: b.d.set.depth[f.Loop]})
 	}
 	if f.Kind == detect.SharedOscillation {
 		e.Group = f.Loops

@@ -10,6 +10,42 @@ import (
 	"midwatch/detect"
 )
 
+// The loops of a cascade are one episode, the inner one named first wherever they are
+// listed, whichever was found first; a cause that is named goes before that.
+func TestCascadeIsJudgedFromTheInside(t *testing.T) {
+	period := measure("period_s", 300)
+	outer := f("LIC-310", detect.SustainedOscillation, detect.Raised, 0, period, func(x *detect.Finding) { x.Cause, x.Confidence = detect.Undetermined, 0.9 })
+	inner := f("FIC-311", detect.SustainedOscillation, detect.Raised, 5, period, func(x *detect.Finding) { x.Cause, x.Confidence = detect.Undetermined, 0.5 })
+	later := outer
+	later.At += 600000
+	for name, hear := range map[string][]detect.Finding{"outer first": {outer, inner}, "inner first": {inner, later}} {
+		r := newRig(t)
+		r.hear(hear...)
+		es := live(r.desk.Episodes())
+		if len(es) != 1 {
+			t.Fatalf("%s: %d episodes", name, len(es))
+		}
+		if got := es[0].Loops(); !slices.Equal(got, []string{"FIC-311", "LIC-310"}) || es[0].Lead().Loop != "FIC-311" {
+			t.Errorf("%s: loops %v, led by %s", name, got, es[0].Lead().Loop)
+		}
+		r.run(start.Add(time.Hour))
+		ms := r.hook.take()
+		if len(ms) == 0 {
+			t.Fatalf("%s: nothing is told", name)
+		}
+		if m := ms[len(ms)-1]; m.Loop != "FIC-311" || !strings.Contains(strings.Join(strings.Fields(m.Text), " "), "Judge FIC-311 first, the inner loop") || !strings.Contains(m.Text, "FIC-311, LIC-310") {
+			t.Errorf("%s: the message is of %s:\n%s", name, m.Loop, m.Text)
+		}
+	}
+	named := outer
+	named.Kind, named.Cause = detect.GrowingOscillation, detect.ResetTooShort
+	r := newRig(t)
+	r.hear(named, inner)
+	if e := live(r.desk.Episodes()); len(e) != 1 || e[0].Lead().Loop != "LIC-310" {
+		t.Errorf("an outer loop with its own tuning named does not lead: %s", describe(e))
+	}
+}
+
 func TestFolding(t *testing.T) {
 	group := func(x *detect.Finding) {
 		x.Subject, x.Loop, x.Loops = detect.Subject{Part: "group-1"}, "", []string{"AIC-204", "PIC-120", "FIC-311"}

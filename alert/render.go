@@ -129,6 +129,9 @@ func (d *Desk) renderOne(m *Message, x *delivery, it *Item, now time.Time) {
 	if len(it.Loops) > 1 {
 		body.fact(fmt.Sprintf("%d loops", len(it.Loops)), listed(it.Loops))
 	}
+	if it.Inner != "" && it.Event != detect.Cleared {
+		body.fact("Cascade", "Judge "+clean(it.Inner)+" first, the inner loop: the outer one works through it.")
+	}
 	if len(it.Kinds) > 1 {
 		var ks []string
 		for _, k := range it.Kinds {
@@ -206,9 +209,7 @@ func (d *Desk) textShort(it *Item, name string, old bool) string {
 		s = "OLD " + short(it.At, d.set.Zone) + " " + s
 	}
 	const tail = " Advisory only."
-	if strings.Contains(strings.ToLower(s), "advisory only") {
-		return cut(s, 160)
-	}
+	s = strings.TrimSuffix(s, tail) // it ends the text, however much of that is cut
 	s = strings.TrimRight(cut(s, 160-len(tail)-1), ".")
 	if !strings.HasSuffix(s, "…") {
 		s += "."

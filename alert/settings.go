@@ -19,6 +19,7 @@ type settings struct {
 	source   map[string]string   // loop -> source
 	bySource map[string][]string // source -> loops, in order of the list
 	cascade  relatives
+	depth    map[string]int  // of loops in a cascade, 0 outermost
 	people   map[string]bool // senders that reach people, not programs
 	mail     map[string]bool // senders that are mail
 	daily    *clockTime
@@ -46,7 +47,7 @@ func makeSettings(s Settings) (settings, error) {
 		s.Advise.Day, s.Advise.Night = 10, max(s.Advise.Night, 1)
 	}
 	set := settings{Settings: s, loops: map[string]*configs.Loop{}, source: map[string]string{}, bySource: map[string][]string{},
-		cascade: cascades(s.Loops), people: map[string]bool{}, mail: map[string]bool{}}
+		cascade: cascades(s.Loops), depth: depths(s.Loops), people: map[string]bool{}, mail: map[string]bool{}}
 	for _, l := range s.Loops {
 		set.loops[l.Name] = l
 		set.source[l.Name] = l.Source

@@ -26,7 +26,8 @@ type Item struct {
 	At       int64          `json:"at"` // data time, ms UTC
 	Since    int64          `json:"since"`
 	Finding  detect.Finding `json:"finding"`
-	Loops    []string       `json:"loops,omitempty"` // all of them, the subject's first
+	Loops    []string       `json:"loops,omitempty"` // all of them, see [Episode.Loops]
+	Inner    string         `json:"inner,omitempty"` // innermost loop of a cascade, where several of it are in it
 	Kinds    []detect.Kind  `json:"kinds,omitempty"` // all that were folded together
 	Count    int            `json:"count"`
 	State    State          `json:"state"`
@@ -37,7 +38,7 @@ type Item struct {
 }
 
 func (e *Episode) item() Item {
-	it := Item{Episode: e.ID, Step: e.Steps, At: e.Last, Since: e.Since, Finding: e.Lead(), Loops: e.Loops(), Count: e.Count,
+	it := Item{Episode: e.ID, Step: e.Steps, At: e.Last, Since: e.Since, Finding: e.Lead(), Loops: e.Loops(), Inner: e.inner(), Count: e.Count,
 		State: e.State(), Hold: e.Hold, Standing: e.Standing}
 	seen := map[detect.Kind]bool{}
 	for i := range e.Members {

@@ -233,3 +233,26 @@ func FuzzClean(f *testing.F) {
 		}
 	})
 }
+
+// The short text of every event keeps 160 characters and its caution, for the longest
+// names and whatever the finding says.
+func TestShortTextKeepsItsCaution(t *testing.T) {
+	long := strings.Repeat("Ж", 64)
+	for _, loop := range []string{"AIC-204", long} {
+		for _, say := range []string{"", "PV cycles.", strings.Repeat("swings and ", 20), loop + ": growing swing ±3.6 " + strings.Repeat("mg/l ", 7) + "; likely the reset time is too short for this process"} {
+			if say != "" {
+				say += ". Advisory only."
+			}
+			for _, ev := range []detect.Event{detect.Raised, detect.Updated, detect.Cleared} {
+				for _, old := range []bool{false, true} {
+					d := &Desk{set: settings{Settings: Settings{Zone: time.UTC}}}
+					it := &Item{Event: ev, Count: 3, Finding: detect.Finding{Loop: loop, Kind: detect.GrowingOscillation, Event: ev, TextShort: say}}
+					s := d.textShort(it, loop, old)
+					if n := utf8.RuneCountInString(s); n > 160 || !strings.HasSuffix(s, " Advisory only.") || strings.Count(s, "dvisory") != 1 {
+						t.Errorf("%d characters: %q", n, s)
+					}
+				}
+			}
+		}
+	}
+}

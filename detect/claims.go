@@ -119,16 +119,19 @@ func measureCycle(w *Watch, m []float64) {
 }
 
 // timeLeft is the time, s, until the growing swing of OP meets a limit and that of
-// PV an alarm; NaN where it does not or has.
+// PV an alarm: 0 where it does already, NaN where it cannot be told.
 func (w *Watch) timeLeft() (op, alarm float64) {
 	o := &w.s.Osc
 	op, alarm = math.NaN(), math.NaN()
-	rate := math.Log(o.Growth) / o.P
-	if !(rate > 0) {
+	if !(o.P > 0) || !(o.Amp > 0) {
 		return
 	}
+	rate := math.Log(o.Growth) / o.P
 	lo, hi := w.opLimits()
-	if o.Kc != 0 && o.Ti != 0 {
+	switch at := w.s.Tune.LimitAt; {
+	case at > 0 && w.in.t-at < 1.5*o.P:
+		op, rate = 0, 0 // a linear reckoning, that of the alarm too, ends where OP clips
+	case rate > 0 && o.Kc != 0 && o.Ti != 0:
 		om := 2 * math.Pi / o.P
 		swing := o.Amp * math.Abs(o.Kc) * math.Hypot(1, 1/(om*o.Ti))
 		if r := min(hi-w.s.Tune.OPMean, w.s.Tune.OPMean-lo); r > swing && swing > 0 {
@@ -143,7 +146,11 @@ func (w *Watch) timeLeft() (op, alarm float64) {
 	if a := w.loop.PVAlarmLow; a == a {
 		room = min(room, pv-(a-w.s.Scale.PVLow)/w.s.Scale.PVSpan*100)
 	}
-	if room > o.Amp && !math.IsInf(room, 0) {
+	switch {
+	case math.IsInf(room, 0):
+	case room <= o.Amp:
+		alarm = 0
+	case rate > 0:
 		alarm = math.Log(room/o.Amp) / rate
 	}
 	return

@@ -170,7 +170,8 @@ type Finding struct {
 	Confidence   float64 // 0..1
 	AlsoPossible []Cause
 	Measures     Measures
-	Reason       string // of cleared
+	Changed      []Change // in the 24 h before Since, oldest first
+	Reason       string   // of cleared
 	Text         string
 	TextShort    string
 }
@@ -187,6 +188,7 @@ type findingJSON struct {
 	Confidence   *float64 `json:"confidence,omitempty"`
 	AlsoPossible []Cause  `json:"also_possible,omitempty"`
 	Measures     Measures `json:"measures,omitempty"`
+	Changed      []Change `json:"changed_before,omitempty"`
 	Reason       string   `json:"reason,omitempty"`
 	Text         string   `json:"text,omitempty"`
 	TextShort    string   `json:"text_short,omitempty"`
@@ -201,7 +203,7 @@ func FormatTime(ms int64) string { return time.UnixMilli(ms).UTC().Format(timeFo
 func (f Finding) MarshalJSON() ([]byte, error) {
 	j := findingJSON{Subject: f.Subject, Loop: f.Loop, Loops: f.Loops, Kind: f.Kind, Event: f.Event,
 		At: FormatTime(f.At), Since: FormatTime(f.Since), Cause: f.Cause, AlsoPossible: f.AlsoPossible,
-		Measures: f.Measures, Reason: f.Reason, Text: f.Text, TextShort: f.TextShort}
+		Measures: f.Measures, Changed: f.Changed, Reason: f.Reason, Text: f.Text, TextShort: f.TextShort}
 	if f.Event != Cleared {
 		c := math.Round(f.Confidence*100) / 100
 		j.Confidence = &c
@@ -224,7 +226,7 @@ func (f *Finding) UnmarshalJSON(b []byte) error {
 		return err
 	}
 	*f = Finding{Subject: j.Subject, Loop: j.Loop, Loops: j.Loops, Kind: j.Kind, Event: j.Event, At: at.UnixMilli(),
-		Since: since.UnixMilli(), Cause: j.Cause, AlsoPossible: j.AlsoPossible, Measures: j.Measures, Reason: j.Reason,
+		Since: since.UnixMilli(), Cause: j.Cause, AlsoPossible: j.AlsoPossible, Measures: j.Measures, Changed: j.Changed, Reason: j.Reason,
 		Text: j.Text, TextShort: j.TextShort}
 	if j.Confidence != nil {
 		f.Confidence = *j.Confidence

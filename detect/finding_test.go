@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"encoding/json"
 	"math"
+	"regexp"
 	"slices"
 	"testing"
 	"unicode/utf8"
@@ -15,6 +16,13 @@ import (
 var knownCauses = []detect.Cause{detect.ResetTooShort, detect.GainTooHigh, detect.ResetTooLong, detect.GainTooLow, detect.IntegralMissing,
 	detect.ValveSticking, detect.ValveDeadBand, detect.FinalElementNotFollowing, detect.ProcessNonlinear, detect.OutsideDisturbance,
 	detect.OutputLimit, detect.WindUp, detect.MeasurementCause, detect.Undetermined}
+
+// spoilt is what no text may hold: numbers that are none, verbs without a value, a
+// sign or unit without its number, and gaps where a word should be.
+var spoilt = regexp.MustCompile(`NaN|Inf\b|%!|-0 |--|  |±[^0-9]|±$|(^|[^0-9]) %| [,;:.]|\( ?\)|\b(by|about|for|every|than|to|from|of) ?[,;.:)]`)
+
+// badText gives what is spoilt in a text.
+func badText(s string) []string { return spoilt.FindAllString(s, -1) }
 
 // checkFinding holds what every finding must keep, whatever was seen.
 func checkFinding(t testing.TB, f *detect.Finding) {
@@ -79,9 +87,12 @@ func checkFinding(t testing.TB, f *detect.Finding) {
 	if f.Text == "" || !utf8.ValidString(f.Text) || !utf8.ValidString(f.TextShort) {
 		bad("text %q", f.Text)
 	}
-	for _, w := range []string{"NaN", "Inf", "%!", "-0 ", "--"} {
-		if bytes.Contains([]byte(f.Text+f.TextShort), []byte(w)) {
-			bad("%q in the text: %q, %q", w, f.Text, f.TextShort)
+	for _, w := range badText(f.Text + " " + f.TextShort) {
+		bad("%q in the text: %q, %q", w, f.Text, f.TextShort)
+	}
+	for i, c := range f.Changed {
+		if c.Text == "" || len(badText(c.Text)) > 0 || i > 0 && c.At < f.Changed[i-1].At || c.At < f.Since-86400000-600000 || c.At > f.At {
+			bad("changed before %+v", c)
 		}
 	}
 	if !bytes.Contains([]byte(f.TextShort), []byte("dvisory")) {

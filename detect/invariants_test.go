@@ -226,6 +226,9 @@ func TestDatesChangeNothing(t *testing.T) {
 		for i := range want {
 			want[i].At += later
 			want[i].Since += later
+			for j := range want[i].Changed {
+				want[i].Changed[j].At += later
+			}
 		}
 		if d := differ(lines(t, want), lines(t, replay(x.loop, fr))); d != "" {
 			t.Errorf("%s: %s", x.kind, d)

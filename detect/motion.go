@@ -77,6 +77,7 @@ func (w *Watch) stepMotion(flags collector.Flags) {
 			m.Mode, m.ModeSince, m.ActiveSince = in.mode, in.t, in.t
 		}
 	}
+	was := m.Mode
 	if in.mode != m.Mode {
 		m.Mode, m.ModeSince = in.mode, in.t
 	}
@@ -113,6 +114,7 @@ func (w *Watch) stepMotion(flags collector.Flags) {
 	if active && in.hasOP {
 		m.OPMin, m.OPMax = min(m.OPMin, op), max(m.OPMax, op)
 	}
+	w.stepMarks(was)
 	m.PV, m.SP, m.OP, m.E = in.pv, in.sp, in.op, in.e
 }
 

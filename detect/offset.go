@@ -201,6 +201,7 @@ func (w *Watch) timeScale() float64 {
 		} else {
 			t = 60 * s.Grid.DT
 		}
+		t = max(t, w.listTimeS())
 	}
 	return t
 }

@@ -110,100 +110,177 @@ func (w *Watch) causeSentence(f *Finding) string {
 	return strings.ToUpper(s[:1]) + s[1:] + ", " + likely(f.Confidence) + "."
 }
 
+// part is a part of a sentence around one number; empty where that is not known.
+func part(format string, v float64, say func(float64) string) string {
+	if math.IsNaN(v) || math.IsInf(v, 0) {
+		return ""
+	}
+	return fmt.Sprintf(format, say(v))
+}
+
+// text says a finding. What could not be measured is left out of the sentence.
 func (w *Watch) text(k int, f *Finding) (long, short string) {
 	s := &w.s
 	get := func(n string) float64 {
-		v, ok := f.Measures.Get(n)
-		if !ok {
-			return math.NaN()
+		if v, ok := f.Measures.Get(n); ok {
+			return v
 		}
-		return v
+		return math.NaN()
 	}
+	pv := w.pvText
 	var what, brief string
 	switch k {
 	case kGrowing:
-		g := get("growth_per_cycle")
-		what = fmt.Sprintf("PV swings ±%s with a cycle of %s", w.pvText(s.Osc.Amp), duration(s.Osc.P))
-		if g > 1.02 {
-			what += fmt.Sprintf(", about %s times larger each cycle", sig2(g))
+		what = "PV swings" + part(" ±%s", s.Osc.Amp, pv) + part(" with a cycle of %s", s.Osc.P, duration)
+		if g := get("growth_per_cycle"); g > 1.02 {
+			what += part(", about %s times larger each cycle", g, sig2)
 		} else {
 			what += ", after growing"
 		}
-		if r := get("reset_s"); r == r && f.Cause == ResetTooShort {
-			what += fmt.Sprintf(" (reset in service about %s)", duration(r))
+		if f.Cause == ResetTooShort {
+			what += part(" (reset in service about %s)", get("reset_s"), duration)
 		}
-		if t := get("time_to_pv_alarm_s"); t == t {
-			what += fmt.Sprintf("; PV alarm in about %s", duration(t))
-		} else if t := get("time_to_op_limit_s"); t == t {
-			what += fmt.Sprintf("; OP meets a limit in about %s", duration(t))
-		}
-		brief = fmt.Sprintf("growing swing ±%s, cycle %s", w.pvText(s.Osc.Amp), duration(s.Osc.P))
+		what += w.timeWords(get("time_to_op_limit_s"), get("time_to_pv_alarm_s"))
+		brief = "growing swing" + part(" ±%s", s.Osc.Amp, pv) + part(", cycle %s", s.Osc.P, duration)
 	case kSustained:
-		what = fmt.Sprintf("PV cycles ±%s with a period of %s and does not settle", w.pvText(s.Osc.Amp), duration(s.Osc.P))
-		brief = fmt.Sprintf("cycles ±%s every %s", w.pvText(s.Osc.Amp), duration(s.Osc.P))
+		what = "PV cycles" + part(" ±%s", s.Osc.Amp, pv) + part(" with a period of %s", s.Osc.P, duration) + " and does not settle"
+		brief = "cycles" + part(" ±%s", s.Osc.Amp, pv) + part(" every %s", s.Osc.P, duration)
 	case kSticking:
-		what = fmt.Sprintf("PV cycles ±%s every %s while OP ramps to and fro by about %s %% before PV answers: apparent sticking, from OP and PV", w.pvText(s.Osc.Amp), duration(s.Osc.P), sig2(get("op_swing_pct")))
-		brief = fmt.Sprintf("apparent sticking, cycle %s, OP swing %s %%", duration(s.Osc.P), sig2(get("op_swing_pct")))
+		swing := get("op_swing_pct")
+		what = "PV cycles" + part(" ±%s", s.Osc.Amp, pv) + part(" every %s", s.Osc.P, duration) + " while OP ramps to and fro" +
+			part(" by about %s %%", swing, sig2) + " before PV answers: apparent sticking, from OP and PV"
+		brief = "apparent sticking" + part(", cycle %s", s.Osc.P, duration) + part(", OP swing %s %%", swing, sig2)
 	case kOffset:
 		side := "below"
 		if s.OffPast.Offset.Mean < 0 {
 			side = "above"
 		}
-		what = fmt.Sprintf("PV stays %s %s its set point for %s with room left in OP (%s %%)", w.pvText(s.OffPast.Offset.Mean), side, duration(get("duration_s")), sig2(s.Motion.OP))
-		brief = fmt.Sprintf("PV %s %s SP for %s, OP free", w.pvText(s.OffPast.Offset.Mean), side, duration(get("duration_s")))
+		lasts := part(" for %s", get("duration_s"), duration)
+		what = "PV stays" + part(" %s", s.OffPast.Offset.Mean, pv) + " " + side + " its set point" + lasts + " with room left in OP" + part(" (%s %%)", s.Motion.OP, sig2)
+		brief = "PV" + part(" %s", s.OffPast.Offset.Mean, pv) + " " + side + " SP" + lasts + ", OP free"
 	case kSaturation:
-		if f.Cause == WindUp {
-			what = fmt.Sprintf("OP stays at its limit %s after PV has crossed the set point, then PV overshoots by %s", duration(get("overhang_s")), w.pvText(get("overshoot_pct")))
-			brief = fmt.Sprintf("wind-up: OP late by %s at its limit", duration(get("overhang_s")))
-			break
-		}
-		what = fmt.Sprintf("OP lies at its limit (%s %%) for %s while PV misses the set point by %s", sig2(s.Motion.OP), duration(get("duration_s")), w.pvText(s.OffPast.Sat.Mean))
-		brief = fmt.Sprintf("OP at limit %s for %s, PV off by %s", sig2(s.Motion.OP), duration(get("duration_s")), w.pvText(s.OffPast.Sat.Mean))
+		what, brief = w.limitText(f, get)
 	case kSluggish:
-		what = fmt.Sprintf("PV creeps back after disturbances: about %s", duration(get("recovery_s")))
-		if u := get("usual_s"); u == u {
-			what += fmt.Sprintf(" where %s was usual", duration(u))
+		what = "PV creeps back after disturbances" + part(": about %s", get("recovery_s"), duration)
+		if u := part(" where %s was usual", get("usual_s"), duration); u != "" {
+			what += u
 		} else if s.Recov.By == 2 {
 			what += ", several times what its set-point steps say the process needs"
 		}
-		brief = what
+		brief = "slow to recover" + part(": about %s", get("recovery_s"), duration) + part(", usual %s", get("usual_s"), duration)
 	case kFrozen:
-		what = fmt.Sprintf("PV has not changed at all for %s", duration(get("still_s")))
+		what = "PV has not changed at all" + part(" for %s", get("still_s"), duration)
 		if tr := get("op_travel_pct"); tr > 1 {
-			what += fmt.Sprintf(" while OP moved by %s %%", sig2(tr))
+			what += part(" while OP moved by %s %%", tr, sig2)
 		}
 		brief = what
 	case kRangeEnd:
-		what = fmt.Sprintf("PV is pegged at the end of its range (%s%s) while SP asks for %s", sig2(get("pv")), unitOf(w.loop.Unit), sig2(float64(s.Last.SP)))
-		brief = "PV pegged at the end of its range"
+		end := "low"
+		if s.Misc.EndHigh {
+			end = "high"
+		}
+		unit := func(v float64) string { return sig2(v) + unitOf(w.loop.Unit) }
+		what = "PV is pegged at the " + end + " end of its range" + part(" (%s)", get("pv"), unit) + part(" while SP asks for %s", s.Scale.PVLow+w.pvUnits(s.Motion.SP), unit)
+		brief = "PV pegged at the " + end + " end of its range"
 	case kMode:
 		m := s.Motion.Mode.String()
 		if m == "" {
 			m = "what looks like manual"
 		}
-		what = fmt.Sprintf("The loop has been in %s for %s; normal is %s", m, duration(get("duration_s")), w.loop.NormalMode)
-		brief = fmt.Sprintf("in %s for %s", m, duration(get("duration_s")))
-		return what + ". Nobody may know that the law does not act.", w.short(f, brief)
+		lasts := part(" for %s", get("duration_s"), duration)
+		what = "The loop has been in " + m + lasts + "; normal is " + w.loop.NormalMode
+		brief = "in " + m + lasts
+		return what + ". Nobody may know that the law does not act." + w.beforeSentence(k, f), w.short(f, brief)
 	case kTuning:
-		var p []string
-		if a, b := get("gain"), get("gain_before"); a == a && b == b {
-			p = append(p, fmt.Sprintf("gain from about %s to %s", sig2(b), sig2(a)))
+		what = "The tuning in service changed"
+		if x := w.tuningWords(); x != "" {
+			what += ": " + x
 		}
-		if a, b := get("reset_s"), get("reset_before_s"); a == a && b == b {
-			p = append(p, fmt.Sprintf("reset time from about %s to %s", duration(b), duration(a)))
-		}
-		what = "The tuning in service changed: " + strings.Join(p, " and ")
-		return what + ". Nothing to do if it was meant.", w.short(f, what)
+		return what + ". Nothing to do if it was meant." + w.beforeSentence(k, f), w.short(f, what)
 	case kStale:
-		what = fmt.Sprintf("No usable value for %s; the loop cannot be watched", duration(get("duration_s")))
-		return what + ". " + firstCheck[MeasurementCause] + ".", w.short(f, what)
+		what = "No usable value" + part(" for %s", get("duration_s"), duration) + "; the loop cannot be watched"
+		return what + ". " + firstCheck[MeasurementCause] + "." + w.beforeSentence(k, f), w.short(f, what)
 	}
-	long = what + ". " + w.causeSentence(f)
-	if f.Cause == GainTooHigh && w.loop.Process == configs.Integrating {
-		long += " On an integrating process a slow swing is never cured by less gain."
+	check, ok := firstCheck[f.Cause]
+	if !ok {
+		check = firstCheck[Undetermined]
 	}
-	long += " " + firstCheck[f.Cause] + "."
+	long = what + ". " + w.causeSentence(f) + w.spellSentence(k) + w.beforeSentence(k, f) + w.listSentence(k, f) + " " + check + "."
+	if d := w.direction(k, f); d != "" {
+		long += " " + d
+	}
 	return long, w.short(f, brief)
+}
+
+// limitText says an OP at its limit, or what winds up there.
+func (w *Watch) limitText(f *Finding, get func(string) float64) (what, brief string) {
+	s := &w.s
+	if f.Cause == WindUp {
+		over := part(" %s", get("overhang_s"), duration)
+		what = "OP stays at its limit" + over + " after PV has crossed the set point, then PV overshoots" + part(" by %s", get("overshoot_pct"), w.pvText)
+		return what, "wind-up: OP late" + strings.Replace(over, " ", " by ", 1) + " at its limit"
+	}
+	lasts := part(" for %s", get("duration_s"), duration)
+	off := part("%s", get("offset_pct"), w.pvText)
+	what = "OP lies at its limit" + part(" (%s %%)", s.Motion.OP, sig2) + lasts
+	brief = "OP at limit" + part(" %s %%", s.Motion.OP, sig2) + lasts
+	if off != "" {
+		what, brief = what+" while PV misses the set point by "+off, brief+", PV off by "+off
+	}
+	return what, brief
+}
+
+// timeWords say how long a growing swing leaves, s; 0 is reached.
+func (w *Watch) timeWords(op, alarm float64) string {
+	switch {
+	case alarm == 0:
+		return "; it reaches a PV alarm"
+	case alarm == alarm:
+		return part("; PV alarm in about %s", alarm, duration)
+	case op == 0:
+		return "; OP already meets a limit"
+	}
+	return part("; OP meets a limit in about %s", op, duration)
+}
+
+// tuningWords say the last change of the tuning; empty where there was none.
+func (w *Watch) tuningWords() string {
+	c := &w.s.Change
+	var p []string
+	known := func(v float32) bool { return v > 0 && v <= math.MaxFloat32 }
+	if c.What&1 != 0 && known(c.GainNow) && known(c.GainWas) {
+		p = append(p, fmt.Sprintf("gain from about %s to %s", sig2(float64(c.GainWas)), sig2(float64(c.GainNow))))
+	}
+	if c.What&2 != 0 && known(c.ResetNow) && known(c.ResetWas) {
+		p = append(p, fmt.Sprintf("reset time from about %s to %s", duration(float64(c.ResetWas)), duration(float64(c.ResetNow))))
+	}
+	return strings.Join(p, " and ")
+}
+
+// direction says in which direction the remedy lies, where that is safe to say: how
+// far is for who tunes. On integrating processes a slow swing is cured by more gain
+// or a longer reset, never by less gain (Skogestad 2003: k Kc Ti >= 4); on runaway
+// ones both too much and too little gain swing.
+func (w *Watch) direction(k int, f *Finding) string {
+	o := &w.s.Osc
+	swing := k == kGrowing || k == kSustained || k == kSticking
+	slow := swing && (o.Kc == 0 || !(o.PhiDeg < phiGain)) // the lag of a gain too high is small
+	integrating := w.loop.Process == configs.Integrating
+	switch {
+	case w.loop.Process == configs.Runaway:
+		return ""
+	case integrating && slow && (f.Cause == GainTooHigh || f.Cause == ResetTooShort):
+		return "Direction: a longer reset time or more gain; on an integrating process a slow swing is never cured by less gain."
+	case f.Cause == ResetTooShort:
+		return "Direction: a longer reset time."
+	case f.Cause == GainTooHigh && !slow:
+		return "Direction: less gain."
+	case f.Cause == ResetTooLong:
+		return "Direction: a shorter reset time."
+	case f.Cause == GainTooLow:
+		return "Direction: more gain."
+	}
+	return ""
 }
 
 const shortTail = " Advisory only."

@@ -18,7 +18,7 @@ func (w *Watch) verdictAt(t float64) {
 	}
 	var c [kinds]claim
 	for k := range table {
-		c[k] = table[k].claim(w)
+		c[k] = w.claim(k)
 		c[k].On = c[k].On && w.judges(k)
 	}
 	// Saturation explains the offset; growth explains the swing; pegged or frozen
@@ -36,6 +36,7 @@ func (w *Watch) verdictAt(t float64) {
 	if c[kSticking].On {
 		fold(kSustained)
 	}
+	rejudge[kSticking] = c[kSustained].On && s.Osc.Sticking
 	if c[kFrozen].On {
 		fold(kOffset)
 		fold(kSluggish)
@@ -43,6 +44,14 @@ func (w *Watch) verdictAt(t float64) {
 	for k := range table {
 		w.settle(k, t, &c[k], rejudge[k])
 	}
+}
+
+// claim is what a detector claims, after what manual spells and the loop list say to it.
+func (w *Watch) claim(k int) claim {
+	c := table[k].claim(w)
+	w.spellSays(k, &c)
+	w.strokeSays(k, &c)
+	return c
 }
 
 // settle compares what is claimed with what was said.
@@ -126,11 +135,12 @@ func (w *Watch) finding(k int, e Event, t float64) Finding {
 			f.Measures = append(f.Measures, Measure{row.Measures[i], v})
 		}
 	}
-	for _, a := range table[k].claim(w).Also {
+	for _, a := range w.claim(k).Also {
 		if c := causes[a]; c != NoCause && c != f.Cause && c != Undetermined {
 			f.AlsoPossible = append(f.AlsoPossible, c)
 		}
 	}
+	f.Changed = w.before(k, o.Since, f.At)
 	f.Text, f.TextShort = w.text(k, &f)
 	return f
 }

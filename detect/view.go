@@ -164,6 +164,9 @@ func (w *Watch) blindSpots() (b []string) {
 	if m.OPMax > -1e8 && float64(m.OPMax-m.OPMin) < 0.5 && s.Noise.N > 2000 {
 		b = append(b, "OP has hardly moved: always at a limit, or not this loop's output")
 	}
+	if n := w.filterNote(); n != "" {
+		b = append(b, n)
+	}
 	if s.Scale.Guessed {
 		b = append(b, "no range given: percentages and gain are guesses")
 	}
@@ -206,6 +209,9 @@ func (w *Watch) Explain() []string {
 		out = append(out, fmt.Sprintf("live oscillation since %s: period %s, lag of the controller %.0f degrees (direct %.0f), shape index %.2f, third harmonic %.2f, looks %d, swing of SP %.2f %% and PV %.2f %%",
 			FormatTime(w.ms(s.Osc.Since)), duration(s.Osc.P), s.Osc.PhiDeg, sh.phiDeg, w.stickIndex(sh), sh.h3OP, sh.looks, s.Track.SPSwing, s.Track.PVSwing))
 	}
+	if p := &s.Spell; p.OfP > 0 {
+		out = append(out, fmt.Sprintf("manual spells with a cycle of %s before them: it went on in %d and died in %d, the last at %s", duration(float64(p.OfP)), p.WentOn, p.Died, FormatTime(w.ms(float64(p.At)))))
+	}
 	for i := range int(min(s.Recov.Count, recRing)) {
 		e := s.Recov.recent(i)
 		out = append(out, fmt.Sprintf("recovery at %s: %s, peak %.2f %%, rise %s, ratio to usual %.2f, proportional share %.2f, residence ratio %.2f, set point %v",
@@ -213,6 +219,15 @@ func (w *Watch) Explain() []string {
 	}
 	if s.Off.Sign != 0 {
 		out = append(out, fmt.Sprintf("one-sided error for %s, mean %.2f %%", duration(w.in.t-s.Off.T0), s.Off.Int/max(s.Off.Dur, 1e-9)))
+	}
+	for kind := range s.Marks {
+		for i := range s.Marks[kind] {
+			if x := &s.Marks[kind][i]; x.Size != 0 {
+				if _, t := w.markWords(kind, float64(x.Size)); t != "" {
+					out = append(out, "changed at "+FormatTime(w.ms(float64(x.At)))+": "+t)
+				}
+			}
+		}
 	}
 	for k := range table {
 		if s.Open[k].On {

@@ -20,7 +20,7 @@ import (
 
 // Engine is the version of the detection; memories of another engine are not
 // loaded whole.
-const Engine = 1
+const Engine = 2
 
 // Options of a watch.
 type Options struct {
@@ -63,6 +63,8 @@ type state struct {
 	Sat     saturationState
 	Misc    miscState
 	Change  tuneChange
+	Marks   [markKinds][2]mark // newest first
+	Spell   spell
 	Open    [kinds]openFinding
 	OpenN   uint8 // findings open
 	Slot    int64 // end of the running evidence slot, ms UTC
@@ -223,7 +225,7 @@ func (w *Watch) relearn(k int) bool {
 	// Filters and rings count in slots: they begin anew, the noise level too.
 	keep := w.s
 	w.s = state{Through: keep.Through, Grid: grid{T0: keep.Grid.T0, Begun: true, At: keep.Grid.At, LastFrame: keep.Grid.LastFrame},
-		Scale: keep.Scale, Last: keep.Last, Misc: keep.Misc, Change: keep.Change, Open: keep.Open, OpenN: keep.OpenN, Slot: keep.Slot}
+		Scale: keep.Scale, Last: keep.Last, Misc: keep.Misc, Change: keep.Change, Marks: keep.Marks, Spell: spell{At: keep.Spell.At, OfP: keep.Spell.OfP, WentOn: keep.Spell.WentOn, Died: keep.Spell.Died}, Open: keep.Open, OpenN: keep.OpenN, Slot: keep.Slot}
 	w.s.Motion.first()
 	return true
 }
@@ -249,6 +251,7 @@ func (w *Watch) stepGrid(f *collector.Frame, t float64) {
 		most = int(holdExceptionS / g.DT)
 	}
 	if k > most || f.Flags&(collector.Gap|collector.ClockStep) != 0 {
+		w.note(markGap, g.At, t-g.At)
 		w.restart(t)
 		g.At = t - g.DT
 		k = 1
@@ -267,7 +270,7 @@ func (w *Watch) stepGrid(f *collector.Frame, t float64) {
 	}
 	*in = input{t: g.At, dt: g.DT, mode: f.Mode, first: first, held: f.Flags&collector.Held != 0}
 	in.pv = (float64(f.PV) - s.Scale.PVLow) / s.Scale.PVSpan * 100
-	in.sp = (float64(f.SP) - s.Scale.PVLow) / s.Scale.PVSpan * 100
+	in.sp = w.rampedSP((float64(f.SP)-s.Scale.PVLow)/s.Scale.PVSpan*100, float64(k)*g.DT, first)
 	in.op = (float64(f.OP) - s.Scale.OPLow) / s.Scale.OPSpan * 100
 	in.pos = (float64(f.Position) - s.Scale.OPLow) / s.Scale.OPSpan * 100
 	in.trim = w.trimOf(in.op, float64(f.Feedforward))
@@ -288,6 +291,7 @@ func (w *Watch) slot(flags collector.Flags) {
 	}
 	in.e = in.sp - in.pv
 	w.stepMotion(flags)
+	w.stepSpell(flags)
 	s.Noise.step(in.pv, w.loop.Report == configs.Exception || in.held, s.Motion.Update.Value(), in.active && !in.frozen && !s.Osc.Sus && !s.Osc.Grow)
 	if in.active && !in.frozen {
 		w.stepCascade()

@@ -16,6 +16,7 @@ import (
 	"github.com/spf13/cobra"
 
 	"midwatch/alert"
+	"midwatch/alert/page/api"
 	"midwatch/alert/send"
 	"midwatch/cmd/internal/daemon"
 	"midwatch/collector"
@@ -59,12 +60,13 @@ It changes nothing on any server.`,
 
 // checked is what check found out, and its JSON.
 type checked struct {
-	File     string        `json:"file"`
-	Warnings []string      `json:"warnings,omitempty"`
-	Loops    []loopChecked `json:"loops"`
-	Links    []string      `json:"links,omitempty"`
-	Sources  []probed      `json:"sources,omitempty"`
-	Senders  []trialSent   `json:"senders,omitempty"`
+	File     string          `json:"file"`
+	Warnings []string        `json:"warnings,omitempty"`
+	Loops    []loopChecked   `json:"loops"`
+	States   *api.LoopCounts `json:"states,omitempty"` // as a watch on this data folder sees them; none: there was none
+	Links    []string        `json:"links,omitempty"`
+	Sources  []probed        `json:"sources,omitempty"`
+	Senders  []trialSent     `json:"senders,omitempty"`
 }
 
 type loopChecked struct {
@@ -122,7 +124,7 @@ func (h *house) check(f *checkFlags) error {
 	if f.show {
 		return c.Show(h.stdout)
 	}
-	r := checked{File: c.File, Warnings: c.Warnings, Loops: h.loopsChecked(c)}
+	r := checked{File: c.File, Warnings: c.Warnings, Loops: h.loopsChecked(c), States: h.loopStates(c)}
 	for _, l := range configs.Structure(c.Loops) {
 		r.Links = append(r.Links, l.String())
 	}
@@ -150,6 +152,20 @@ func (h *house) check(f *checkFlags) error {
 		err = told{exitFailed}
 	}
 	return err
+}
+
+// loopStates counts the loops by what a watch on this data folder sees of them, be
+// it running or not; nil where there was none.
+func (h *house) loopStates(c *configs.Config) *api.LoopCounts {
+	var s api.Status
+	err := dial(c.Data).get(h.ctx, "/api/status", &s)
+	if errors.Is(err, errNotRunning) {
+		s, _, err = lookInto(c)
+	}
+	if err != nil || s.Loops.Total == 0 {
+		return nil
+	}
+	return &s.Loops
 }
 
 // loopsChecked shows the tuning, and doubts it where a watch on this data folder
@@ -273,6 +289,11 @@ func (h *house) trials(c *configs.Config) (out []trialSent, failed bool, err err
 
 func (r *checked) print(w io.Writer, c *configs.Config) error {
 	fmt.Fprintf(w, "%s: %d loops, %d sources, %d senders: no mistakes\n", r.File, len(c.Loops), len(c.Sources), len(c.Advise.Senders))
+	if n := r.States; n != nil {
+		fmt.Fprintf(w, "loops as the watch sees them: judged %d, cannot judge %d, not in normal mode %d, held %d\n", n.Judged, n.CannotJudge, n.NotNormal, n.Held)
+	} else {
+		fmt.Fprintln(w, "no watch has run on this data folder yet: none of the loops is judged")
+	}
 	for _, s := range r.Warnings {
 		fmt.Fprintf(w, "note: %s\n", s)
 	}

@@ -81,12 +81,17 @@ func (d *Daemon) sourceStates() []collector.SourceState {
 	return out
 }
 
-// digestLines are what a digest says about the watch itself.
+// digestLines are what a digest says about the watch itself. The desk asks with its
+// own lock held: the counts are those that the self watch took last.
 func (d *Daemon) digestLines() []string {
-	if well, why := d.Health(); !well {
-		return why
+	var out []string
+	if k := d.counted.Load(); k != nil {
+		out = append(out, fmt.Sprintf("Judged %d, cannot judge %d, not in normal mode %d, held %d.", k.Judged, k.CannotJudge, k.NotNormal, k.Held))
 	}
-	return nil
+	if well, why := d.Health(); !well {
+		out = append(out, why...)
+	}
+	return out
 }
 
 // Words for the service manager, as sd_notify knows them.

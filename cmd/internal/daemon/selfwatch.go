@@ -15,6 +15,7 @@ import (
 // When the watch speaks about itself.
 const (
 	selfEvery    = 10 * time.Second
+	countEvery   = time.Minute      // loops by state, for the digest
 	tellAfter    = 10 * time.Minute // a source down or late, a sender failing
 	tellStore    = time.Minute
 	lateMs       = 60_000    // values behind their source's clock
@@ -104,6 +105,9 @@ func (s *selfWatch) turn() {
 	all = append(all, s.clockTroubles(now)...)
 	s.judge(now.UnixMilli(), all)
 	s.turned.Store(now.UnixMilli())
+	if k := s.d.counted.Load(); k == nil || now.UnixMilli()-k.at >= countEvery.Milliseconds() || now.UnixMilli() < k.at {
+		s.d.loopCounts()
+	}
 }
 
 // judge compares what stands now with what was told.

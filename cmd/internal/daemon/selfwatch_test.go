@@ -1,6 +1,8 @@
 package daemon
 
 import (
+	"fmt"
+	"strings"
 	"testing"
 	"time"
 
@@ -104,6 +106,10 @@ func TestHealth(t *testing.T) {
 	}
 	r.pass(time.Minute)
 	r.until("all is well", func() bool { ok, _ := r.d.Health(); return ok })
+	r.until("the loops are counted for the digest", func() bool {
+		l := r.d.digestLines()
+		return len(l) == 1 && strings.HasPrefix(l[0], "Judged ") && strings.HasSuffix(l[0], fmt.Sprintf("cannot judge %d, not in normal mode 0, held 0.", len(r.d.Loops())))
+	})
 	r.scripts["works"].set(func(s *collector.SourceState) { s.Link, s.Since = "down", r.clock.Now().UnixMilli() })
 	r.pass(9 * time.Minute)
 	r.until("parts turned", func() bool { ok, _ := r.d.Health(); return ok })

@@ -25,8 +25,9 @@ var (
 	causeWords = []string{"reset-too-short", "gain-too-high", "reset-too-long", "gain-too-low", "integral-missing", "valve-sticking",
 		"valve-dead-band", "final-element-not-following", "process-nonlinear", "outside-disturbance", "output-limit", "wind-up",
 		"measurement", "undetermined"}
-	eventWords = []string{"raised", "updated", "cleared"}
-	modeWords  = []string{"auto", "manual", "cascade", "remote-sp", "remote-output", "tracking", "out-of-service"}
+	changeWords = []string{"tuning", "mode", "set-point", "op-by-hand", "op-at-limit", "data-gap"}
+	eventWords  = []string{"raised", "updated", "cleared"}
+	modeWords   = []string{"auto", "manual", "cascade", "remote-sp", "remote-output", "tracking", "out-of-service"}
 )
 
 // constants gives the values of all constants of a type in package detect.
@@ -74,6 +75,7 @@ func TestWordsAreTheContract(t *testing.T) {
 	}{
 		{"kinds of detect", constants(t, "Kind"), sorted(loopKinds, watchKinds)},
 		{"causes of detect", constants(t, "Cause"), causeWords},
+		{"changes before a finding", constants(t, "ChangeWhat"), changeWords},
 		{"events of detect", constants(t, "Event"), eventWords},
 		{"kinds of configs", configs.Kinds, sorted(loopKinds, watchKinds)},
 		// What several loops share is said by the site detectors.
