@@ -53,7 +53,7 @@ func claimOffset(w *Watch) claim {
 
 func claimSaturation(w *Watch) claim {
 	o, z := &w.s.OffPast.Sat, &w.s.Sat
-	if z.WindUp && !o.On {
+	if z.WindUp && causes[o.Cause] != FinalElementNotFollowing { // PV that OP does not move says nothing of the integral
 		return claim{true, z.WindSince, causeIndex(WindUp), [2]uint8{causeIndex(OutputLimit)}, 0.85, float32(z.Over)}
 	}
 	return claim{o.On, o.Since, o.Cause, [2]uint8{causeIndex(OutsideDisturbance)}, o.Conf, float32(math.Abs(o.Mean))}

@@ -101,6 +101,7 @@ type motion struct {
 	ELo, EHi            [2]float32
 	HalfAt              float64 // s, when the running half window began
 	EStillLo, EStillHi  float32
+	EStill0, EStillInt  float32      // %, % s: e when OP last moved, and its integral since
 	Update              num.Quantile // median interval between changes of PV, slots
 	Frozen              bool
 	Manual              bool    // inferred from OP, where there is no mode tag
@@ -134,6 +135,7 @@ const leastNoise = 0.005
 
 // update is the usual number of slots between changes of PV.
 func (n *noise) step(pv float64, exception bool, update float64, learn bool) {
+	pv = float64(float32(pv)) // as the ring keeps it, or its rounding is taken for a change
 	// Values that stand for slots are those of an analyser where the changes are of many
 	// sizes, and a coarse resolution where all are alike.
 	if analyser := update > 3 && n.Step.N > 20 && n.Step.Value() > 2.5*n.Least.Value(); analyser != n.ByChange {

@@ -16,6 +16,10 @@ type miscState struct {
 	// Frozen PV.
 	OPAtStill float64 // %, OP when PV stopped moving
 	OPTravel  float64 // %, travel of OP since
+	OPLast    float32 // %, trim of the last slot
+	OPUp      float32 // %, travel of OP up, and down, since AliveAt
+	OPDown    float32
+	AliveAt   float64 // s, when OP last showed that the controller sees a moving PV
 	StillFrom float64
 	Frozen    bool
 	// PV at the end of its range.
@@ -59,18 +63,34 @@ func stepFrozen(w *Watch) {
 	s, in := &w.s, &w.in
 	x, m := &s.Misc, &s.Motion
 	if m.PVSame != x.StillFrom {
-		*x = miscState{GoodAt: x.GoodAt, BadN: x.BadN, Stale: x.Stale, OPAtStill: in.op, StillFrom: m.PVSame,
+		*x = miscState{GoodAt: x.GoodAt, BadN: x.BadN, Stale: x.Stale, OPAtStill: in.op, OPLast: float32(in.trim), StillFrom: m.PVSame,
 			EndSince: x.EndSince, EndHigh: x.EndHigh, InsideN: x.InsideN, OutsideN: x.OutsideN, Pegged: x.Pegged,
 			OffNormal: x.OffNormal, OffNormalSince: x.OffNormalSince}
 		return
 	}
+	// With PV really frozen e is constant and the law moves OP one way only, by the
+	// integral: OP that goes both ways sees a PV that moves.
+	if in.hasOP && in.active && in.spStep == 0 {
+		d := float32(in.trim) - x.OPLast
+		x.OPUp, x.OPDown = x.OPUp+max(d, 0), x.OPDown+max(-d, 0)
+		if float64(min(x.OPUp, x.OPDown)) > 3*max(s.Noise.OPLeast.Value(), 0.02) {
+			x.OPUp, x.OPDown, x.AliveAt = 0, 0, in.t
+		}
+	}
+	x.OPLast = float32(in.trim)
 	if !in.frozen || in.held && w.loop.Report != configs.Exception {
 		return
 	}
 	if in.hasOP {
 		x.OPTravel = max(x.OPTravel, math.Abs(in.op-x.OPAtStill))
 	}
+	q := s.Noise.Least.Value()
+	coarse := q > 0.15 && s.Noise.Step.Value() < 1.5*q
 	run := in.t - m.PVSame
+	if coarse || s.Noise.Least.N < 20 || w.loop.Report == configs.Exception {
+		// Within one step of a coarse record, or its dead band, a good loop stands for days.
+		run = min(run, in.t-x.AliveAt)
+	}
 	usual := m.PVRunMax
 	limit := max(max(2700, 300*in.dt), 6*usual)
 	limit = min(limit, max(max(4*3600, 300*in.dt), 2*usual))
@@ -79,9 +99,8 @@ func stepFrozen(w *Watch) {
 		// The controller has noticed: OP travels and nothing comes back.
 		limit = min(limit, max(max(600, 200*in.dt), 4*usual))
 	}
-	if q := s.Noise.Least.Value(); q > 0.15 && s.Noise.Step.Value() < 1.5*q {
-		// At a resolution coarser than the noise a good loop stands within one step; OP
-		// must have travelled by what moves PV out of it.
+	if coarse {
+		// OP must have travelled by what moves PV out of the step.
 		if limit *= 3; x.OPTravel < 20*q {
 			return
 		}

@@ -72,6 +72,7 @@ func (w *Watch) stepMotion(flags collector.Flags) {
 		}
 		m.PVSame, m.OPSame = in.t, in.t
 		m.EStillLo, m.EStillHi = float32(in.e), float32(in.e)
+		m.EStill0, m.EStillInt = float32(in.e), 0
 		m.HalfAt = in.t
 		if begin {
 			m.Mode, m.ModeSince, m.ActiveSince = in.mode, in.t, in.t
@@ -179,12 +180,14 @@ func (w *Watch) stepStill() {
 	}
 	if moved {
 		w.s.Noise.OPLeast.Add(math.Abs(in.op-m.OP), 0.1, 0.02, opSame)
-		if m.Active && in.t-m.OPSame > m.OPRunMax && !w.deafOP() {
+		if m.Active && in.t-m.OPSame > m.OPRunMax && !w.deafOP(1) {
 			m.OPRunMax = in.t - m.OPSame
 		}
 		m.OPSame = in.t
 		m.EStillLo, m.EStillHi = float32(in.e), float32(in.e)
+		m.EStill0, m.EStillInt = float32(in.e), 0
 	}
+	m.EStillInt += float32(in.e * in.dt)
 	m.EStillLo, m.EStillHi = min(m.EStillLo, float32(in.e)), max(m.EStillHi, float32(in.e))
 	inside := in.pv > 0.1 && in.pv < 99.9
 	in.frozen = inside && m.Changes > 30 && in.t-m.PVSame > max(10*in.dt, 2*m.PVRunMax)
@@ -207,27 +210,41 @@ func (w *Watch) inferredManual() bool {
 		return false
 	}
 	still := in.t - m.OPSame
-	if still < max(300, 60*in.dt) || still < 5*min(m.OPRunMax, 6*3600) || m.Frozen {
+	if still < max(300, 60*in.dt) || m.Frozen || w.atOwnLimit() {
 		return false
 	}
-	m.Manual = w.deafOP()
+	// Where the law would have moved OP by far, how long OP stood before does not matter.
+	m.Manual = w.deafOP(1) && (still >= 5*min(m.OPRunMax, 6*3600) || w.deafOP(3))
 	return m.Manual
 }
 
-// deafOP: while OP stood still e moved so far that the law would have moved OP by
-// more than any resolution hides.
-func (w *Watch) deafOP() bool {
+// atOwnLimit: OP stands at the extreme it ever reached, on the side to which e pushes: a
+// limit or selector that nobody listed.
+func (w *Watch) atOwnLimit() bool {
+	m, in := &w.s.Motion, &w.in
+	push := w.sign() * in.e
+	return push > 0 && in.op >= float64(m.OPMax)-0.05 || push < 0 && in.op <= float64(m.OPMin)+0.05
+}
+
+// deafOP: while OP stood still e moved so far that the law would have moved OP by more
+// than any resolution hides, times over.
+func (w *Watch) deafOP(times float64) bool {
 	m := &w.s.Motion
 	moved := float64(m.EStillHi - m.EStillLo)
 	if kc, ok := w.gainPct(); ok {
 		q := &w.s.Noise.OPLeast
-		step := 1.0 // %, before the resolution of OP is known
+		least := 0.5 // %, before the resolution of OP is known
 		if q.N > 20 {
-			step = q.Value()
+			least = max(0.1, 4*q.Value())
 		}
-		return moved > 6*w.s.Noise.sigma() && math.Abs(kc)*moved > max(0.5, 4*step)
+		// The integral may take back what the proportional action does, for a while.
+		both := w.in.e - float64(m.EStill0)
+		if rt, _ := w.resetS(); rt > 0 {
+			both += float64(m.EStillInt) / rt
+		}
+		return moved > 6*w.s.Noise.sigma() && math.Abs(kc)*min(moved, math.Abs(both)) > times*least
 	}
-	return moved > 6*w.s.Noise.sigma()+1
+	return times <= 1 && moved > 6*w.s.Noise.sigma()+1
 }
 
 // updateS is the interval, s, at which PV really changes: an analyser may give a

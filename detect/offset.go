@@ -28,10 +28,13 @@ type offsetState struct {
 	Stuck     bool
 	AnchorN   uint8
 	Anchors   [anchors]anchor
-	Far       float64 // s, when OP had moved 15 % away; 0 not yet
-	FarE      float64
+	LimT      float64 // s, when OP came to rest at its limit; 0 not yet
+	LimInt    float32 // % s, Int by then
+	LimE      float32 // %, mean e of the later half of the way there; 0 it was not steady
+	LimS      float32 // s, length of that half
 	WasStill  bool
-	NotFollow bool
+	AtEnd     bool    // PV was at an end of its range: e says nothing of the process
+	NotFollow bool    // OP travelled and then stopped, and PV made nothing of either
 	Checked   float64 // s, last decision
 	PrevDur   float64 // s, length of the run before, of the other sign; 0 none
 	Missed    bool    // in this run the integral did not do what it must
@@ -155,7 +158,7 @@ func stepOffset(w *Watch) {
 	if w.idleAtLow() {
 		return
 	}
-	if m := &s.Motion; in.t-m.OPSame > max(40*in.dt, 1.5*m.OPRunMax) {
+	if m := &s.Motion; in.t-m.OPSame > max(40*in.dt, 1.5*m.OPRunMax) || m.OPBusyUsual > 0.3 && m.OPBusy < 0.2*m.OPBusyUsual {
 		o.WasStill = true // a hand held OP for a while: this run says nothing of the integral
 	}
 	o.Int += in.e * in.dt
@@ -166,8 +169,8 @@ func stepOffset(w *Watch) {
 		o.Anchors[k] = anchor{float32(d), float32(o.OPs), float32(o.Es), float32(o.Int)}
 		o.AnchorN++
 	}
-	if o.Far == 0 && math.Abs(in.trim-o.OP0) > 15 {
-		o.Far, o.FarE = in.t, math.Abs(o.Es)
+	if in.pv <= rangeEnd || in.pv >= 100-rangeEnd {
+		o.AtEnd = true
 	}
 	if in.t-o.Checked < max(60, 10*in.dt) || o.Dur < 60*in.dt {
 		return
@@ -190,6 +193,9 @@ func (w *Watch) pushesAtLimit() bool {
 func (w *Watch) timeScale() float64 {
 	s := &w.s
 	t := 0.0
+	if r := w.loop.RecoveryS; r > 0 {
+		return r
+	}
 	for _, q := range s.Recov.Usual {
 		if q.N >= 3 {
 			t = max(t, q.Value())
@@ -290,7 +296,7 @@ func (w *Watch) judgeOffset(thr float64) {
 	// An own limit: OP stands still at the extreme it ever reached, on the side to
 	// which e pushes (a limit or selector that nobody listed).
 	own := flat && in.t-m.OPSame > max(120*in.dt, 300) && m.OPRunMax < (in.t-m.OPSame)/2 &&
-		(push > 0 && in.op >= float64(m.OPMax)-0.05 || push < 0 && in.op <= float64(m.OPMin)+0.05)
+		in.e*o.Sign > 0 && w.atOwnLimit()
 	at := o.OPs
 	if w.loop.FeedforwardKind != "" {
 		at = in.op // the limit is one of OP, not of the trim
@@ -300,6 +306,7 @@ func (w *Watch) judgeOffset(thr float64) {
 		if s.Sat.AtSince == 0 {
 			s.Sat.AtSince = in.t
 		}
+		w.limitTest()
 		// At a limit the evidence is plain: no need to wait for what the integral does.
 		wait := max(max(900, 100*in.dt), min(2.5*w.timeScale(), 7200)) * w.strict
 		if in.t-s.Sat.AtSince > wait {
@@ -307,12 +314,16 @@ func (w *Watch) judgeOffset(thr float64) {
 			if !listed {
 				conf = 0.75
 			}
-			past.Sat.support(s.Sat.AtSince, mean, OutputLimit, conf)
+			cause := OutputLimit
+			if o.NotFollow {
+				cause, conf = FinalElementNotFollowing, 0.85
+			}
+			past.Sat.support(s.Sat.AtSince, mean, cause, conf)
 			past.Offset = stand{}
 		}
 		return
 	}
-	s.Sat.AtSince = 0
+	s.Sat.AtSince, o.LimE = 0, 0
 	if in.limit || in.frozen {
 		return
 	}

@@ -16,6 +16,7 @@ type travel struct {
 	lo, hi    float64 // extremes of OP, %
 	eRange    float64 // %
 	still     bool    // OP does not answer e
+	clipped   bool    // OP was at a limit meanwhile, where the integral rests
 }
 
 // offsetTravel is false before the run has a later part.
@@ -30,6 +31,7 @@ func (w *Watch) offsetTravel(push, lo, hi float64) (t travel, ok bool) {
 	a := o.anchorAt(0.3 * d)
 	t = travel{d: d, span: d - float64(a.T), kc: kc, push: push, lo: lo, hi: hi, eRange: s.Motion.eRange()}
 	t.rt, t.learned = w.resetS()
+	t.clipped = s.Tune.LimitAt > o.T0+float64(a.T)
 	ie := o.Int - float64(a.Int)
 	t.rate, t.before = ie/t.span, float64(a.Int/a.T)
 	t.dop = o.OPs - float64(a.OP)
@@ -60,14 +62,14 @@ func (w *Watch) integralMissing(t *travel) bool {
 	if m := &s.Motion; m.OPBusy < 0.3*m.OPBusyUsual {
 		follows = false // OP rests: a hand holds it, not the law
 	}
-	return none && follows && !s.Off.WasStill && t.expect > 1.5 && math.Abs(t.resid) < max(0.2*t.expect, 0.5) &&
+	return none && follows && !t.clipped && !s.Off.WasStill && t.expect > 1.5 && math.Abs(t.resid) < max(0.2*t.expect, 0.5) &&
 		t.hi-t.lo < 2.5*math.Abs(t.kc)*t.eRange+1
 }
 
 // offsetCause compares the travel of OP with what the integral must do. longer is
 // the time, s, to wait beyond the usual before saying so; negative: no offset.
 func (w *Watch) offsetCause(push, lo, hi float64) (c Cause, conf, longer float64) {
-	s, in := &w.s, &w.in
+	s := &w.s
 	o := &s.Off
 	t, ok := w.offsetTravel(push, lo, hi)
 	switch {
@@ -85,28 +87,57 @@ func (w *Watch) offsetCause(push, lo, hi float64) (c Cause, conf, longer float64
 		return Undetermined, 0.6, -1 // it is being worked off
 	case w.integralMissing(&t):
 		if !t.learned {
-			// Ignorant of the own reset time: longer than that of all but a few loops.
-			longer = max(2.5*3600, 5*w.timeScale())
+			// Ignorant of the own reset time: three times as long is longer than that of all but
+			// a few loops (integralMissing asks for an implied one over three times the run's).
+			longer = max(1.5*3600, 5*w.timeScale())
 			if s.Tune.Law < 0.5 {
-				longer = max(6*3600, longer)
+				longer = max(3*3600, longer)
 			}
 			return IntegralMissing, 0.85, longer
 		}
 		return IntegralMissing, 0.93, 0
 	case w.crossesSplit(lo, hi):
 		return Undetermined, 0.5, 24 * 3600
-	case math.Abs(t.dop) > 30 && t.d > 8*t.rt && lo > 1 && hi < 99 && math.Abs(t.rate) > 0.9*math.Abs(t.before) && math.Abs(t.rate) > 1 && push*t.dop > 0:
-		o.NotFollow = true
-		return FinalElementNotFollowing, 0.85, 0
-	case o.NotFollow:
-		return FinalElementNotFollowing, 0.85, 0
-	case o.Far > 0 && in.t-o.Far > 0.3*t.d && push*(o.OPs-o.OP0) > 30 && o.FarE > 3 && math.Abs(o.Es) > 0.9*o.FarE:
-		o.NotFollow = true
-		return FinalElementNotFollowing, 0.8, 0
+	case math.Abs(t.dop) > 2*leastTravel && t.d > 8*t.rt && lo > 1 && hi < 99 && math.Abs(t.rate) > 0.9*math.Abs(t.before) && math.Abs(t.rate) > 1 && push*t.dop > 0:
+		return Undetermined, 0.6, 0 // a load that grows as fast as OP, or an element that does not move: see limitTest
 	case t.rt > 0 && t.implied < 3*t.rt:
-		return OutsideDisturbance, 0.6, max(24*3600, 30*t.rt) // the load outruns the integral, which does what it must
+		// The integral does what it must: the load outruns it, or the element does not move.
+		return Undetermined, 0.6, max(24*3600, 30*t.rt)
 	}
 	return Undetermined, 0.6, max(12*3600, 30*t.rt)
+}
+
+// leastTravel is the travel of OP, %, that any element which follows shows in PV, against
+// an error of a few noise levels (common practice, no source).
+const leastTravel = 15.0
+
+// limitTest reads the one experiment that tells an element which does not move from a
+// load that grows. While OP travels both can hold e constant: OP makes good what the
+// load takes, or nothing at all. Once OP stops at its limit a growing load has its way
+// with PV, and where there is no effect to lose e stays what it was.
+func (w *Watch) limitTest() {
+	in, o := &w.in, &w.s.Off
+	sigma := max(w.s.Noise.sigma(), 0.02)
+	alike := func(a, b float64) bool {
+		return math.Abs(a-b) < max(0.2*math.Abs(b), sigma)
+	}
+	if o.LimT == 0 {
+		o.LimT, o.LimInt = in.t, float32(o.Int)
+		d := in.t - o.T0
+		a := o.anchorAt(0.5 * d)
+		if a == nil || math.Abs(o.OPs-float64(a.OP)) < leastTravel || d-float64(a.T) < w.timeScale() {
+			return
+		}
+		way := (o.Int - float64(a.Int)) / (d - float64(a.T))
+		if alike(o.Es, way) && alike(float64(a.E), way) && math.Abs(way) > 3*sigma {
+			o.LimE, o.LimS = float32(way), float32(d-float64(a.T))
+		}
+		return
+	}
+	if at := in.t - o.LimT; o.LimE != 0 && !o.AtEnd && at > max(0.7*float64(o.LimS), w.timeScale()) {
+		o.NotFollow = alike((o.Int-float64(o.LimInt))/at, float64(o.LimE))
+		o.LimE = 0 // once: what comes later is the load's doing
+	}
 }
 
 // crossesSplit: OP has been on both sides of the change-over of a split range,

@@ -13,6 +13,9 @@ import (
 
 const recRing = 6
 
+// areaRing is how many set-point steps are remembered with their residence times.
+const areaRing = 5
+
 // recovery is one finished event.
 type recovery struct {
 	At    float32 // s, end
@@ -49,7 +52,10 @@ type recoveryState struct {
 	Conf              float32
 	By                uint8   // what proved it: 1 own history, 2 residence, 3 shape
 	Now, Was          float32 // s, median now and usual
-	Hold              uint8   // recoveries that teach no usual time, after the tuning was made slower
+	Areas             [areaRing]float32
+	AreaN             uint32
+	Big               [2]float32 // %, peak of the larger events: load, set point; fades
+	Hold              uint8      // recoveries that teach no usual time, after the tuning was made slower
 }
 
 func (r *recoveryState) abandon() {
@@ -82,7 +88,7 @@ func stepRecovery(w *Watch) {
 		return
 	}
 	if r.On && !r.Late {
-		if q := r.Usual[kindOf(r.SP)]; q.N >= 4 && in.t-r.T0 > 5*q.Value() {
+		if u, _ := w.usualRecovery(r.SP); u > 0 && in.t-r.T0 > 5*u {
 			r.Late = true
 			w.cutRecovery()
 		}
@@ -105,7 +111,7 @@ func stepRecovery(w *Watch) {
 				keep := *r
 				*r = recoveryState{On: true, SP: sp, T0: in.t, TPeak: in.t, Peak: a, Sign: math.Copysign(1, s.Motion.EF),
 					OP0: keep.OPMean, PV0: keep.PVMean, Ring: ring, Count: count, Usual: usual,
-					Slow: keep.Slow, SlowSince: keep.SlowSince, Cause: keep.Cause, Conf: keep.Conf, By: keep.By, Now: keep.Now, Was: keep.Was, Hold: keep.Hold}
+					Slow: keep.Slow, SlowSince: keep.SlowSince, Cause: keep.Cause, Conf: keep.Conf, By: keep.By, Now: keep.Now, Was: keep.Was, Hold: keep.Hold, Areas: keep.Areas, AreaN: keep.AreaN, Big: keep.Big}
 				r.DSP = in.sp - keep.PVMean
 			}
 			r.Quiet, r.MeanN = 0, 0
@@ -129,22 +135,13 @@ func stepRecovery(w *Watch) {
 func (w *Watch) endRecovery(thr float64) {
 	s, in := &w.s, &w.in
 	r := &s.Recov
-	if r.Late || r.Peak < 1.2*thr || in.t-r.T0 < 3*w.updateS() && w.updateS() > 3*in.dt || r.Sat || !in.hasOP {
+	if w.smallEvent(thr) || r.Late || in.t-r.T0 < 3*w.updateS() && w.updateS() > 3*in.dt || r.Sat || !in.hasOP {
 		return
 	}
 	e := recovery{At: float32(in.t), T0: float32(r.T0), Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP}
 	dop := in.op - r.OP0
-	if r.SP && math.Abs(r.DSP) > 2 {
-		dpv := in.pv - r.PV0
-		if math.Abs(dop) > 0.3*math.Abs(dpv) && dpv != 0 {
-			// Areas between normalised curves: closed-loop residence time over the
-			// process' own (average residence time, Åström & Hägglund 1995).
-			tcl := float64(e.Dur) - r.IntPV/dpv
-			tar := r.IntOP/dop - r.IntPV/dpv
-			if !(tar < 0 && -tar > 0.3*tcl) { // else the load moved meanwhile
-				e.Area = float32(tcl / max(tar, 0.5*in.dt))
-			}
-		}
+	if r.SP && math.Abs(r.DSP) > max(0.8, 10*s.Noise.sigma()) {
+		e.Area = float32(w.residences(dop, in.pv-r.PV0))
 	}
 	kc, ti, _ := w.tuning(in.t-3*float64(e.Dur), 0)
 	e.Kc, e.Ti = float32(math.Abs(kc)), float32(ti)
@@ -152,13 +149,43 @@ func (w *Watch) endRecovery(thr float64) {
 	w.keepRecovery(e)
 }
 
+// residences is the residence time of the closed loop over that of the process, from a
+// step of the set point after which OP moved by dop and PV by dpv, %; 0 unknown. Areas
+// between normalised curves (average residence time, Åström & Hägglund 1995), here
+// for a step that is not quite over: the closed loop's is Int e/dpv, Ti/(Kc K) where the
+// law acts; a process in motion holds back K Int dOP - Int dPV = (its own) dpv.
+func (w *Watch) residences(dop, dpv float64) float64 {
+	r := &w.s.Recov
+	kc, ti, ok := w.tuning(0, 0)
+	if !ok || !(ti > 0 && ti < noTi) || dpv*r.DSP <= 0 {
+		return 0
+	}
+	left := r.DSP - dpv
+	// Where another hand, or a feedforward, moves OP or the load meanwhile, the law does
+	// not explain OP (methods section 3: it does within 6 %; here with tuning as read).
+	if did := (kc*left + kc/ti*r.IntE) / dop; !(did > 0.75 && did < 1.3) {
+		return 0
+	}
+	closed := r.IntE / dpv
+	dop += left * (kc/ti*closed - kc) // what is still to come
+	if !(math.Abs(dop) > 0.3*math.Abs(r.DSP)) {
+		return 0
+	}
+	own := (r.DSP/dop*r.IntOP - r.IntPV) / dpv
+	if own < 0 && -own > 0.3*closed { // the load moved meanwhile
+		return 0
+	}
+	// Of the closed loop by the law, not by its area: the same where P does not see SP.
+	return dop / r.DSP * ti / kc / max(own, 0.5*w.in.dt)
+}
+
 // cutRecovery keeps an event that was not over when something else came, if it
 // was long already.
 func (w *Watch) cutRecovery() {
 	s, in := &w.s, &w.in
 	r := &s.Recov
-	q := r.Usual[kindOf(r.SP)]
-	if q.N < 4 || r.Sat || in.t-r.T0 < 3*q.Value() {
+	thr := max(3*max(s.Noise.sigma(), 0.02), 0.3)
+	if u, _ := w.usualRecovery(r.SP); u == 0 || r.Sat || in.t-r.T0 < 3*u || w.smallEvent(thr) {
 		return
 	}
 	e := recovery{At: float32(in.t), T0: float32(r.T0), Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP, Cut: true}
@@ -171,9 +198,10 @@ func (w *Watch) cutRecovery() {
 func (w *Watch) keepRecovery(e recovery) {
 	r := &w.s.Recov
 	q := &r.Usual[kindOf(e.SP)]
+	u, _ := w.usualRecovery(e.SP)
 	switch {
-	case q.N >= 4:
-		e.Ratio = e.Dur / q.V
+	case u > 0:
+		e.Ratio = e.Dur / float32(u)
 	case w.madeSlower(float64(e.T0)):
 		// Too few recoveries before the tuning was made slower: a sound PI loop takes
 		// 2.3 reset times and some dead times (methods section 7).
@@ -196,10 +224,36 @@ func (w *Watch) keepRecovery(e recovery) {
 	}
 	r.Ring[i] = e
 	r.Count++
+	if e.Area > 0 {
+		r.Areas[r.AreaN%areaRing] = e.Area
+		r.AreaN++
+	}
 	if r.Hold > 0 {
 		r.Hold--
 	}
 	w.judgeSlow()
+}
+
+// smallEvent: hardly out of the noise, or far smaller than what usually upsets the loop:
+// the usual wandering, which has a length of its own.
+func (w *Watch) smallEvent(thr float64) bool {
+	r := &w.s.Recov
+	b := &r.Big[kindOf(r.SP)]
+	*b = max(0.97**b, float32(r.Peak))
+	return r.Peak < max(1.2*thr, 0.3*float64(*b))
+}
+
+// usualRecovery is how long this loop takes to recover, s: as listed, else as seen, for
+// events of the load or of the set point; 0 not known yet. sure says that it rests on
+// enough to judge by.
+func (w *Watch) usualRecovery(sp bool) (t float64, sure bool) {
+	if w.loop.RecoveryS > 0 {
+		return w.loop.RecoveryS, true
+	}
+	if q := &w.s.Recov.Usual[kindOf(sp)]; q.N >= 4 {
+		return q.Value(), q.N >= 8
+	}
+	return 0, false
 }
 
 // recent gives the i-th newest recovery, 0 the newest.

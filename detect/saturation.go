@@ -15,6 +15,8 @@ type saturationState struct {
 	WindSince float64
 	WindUp    bool
 	Frames    uint8
+	IntPast   float32 // % s, integral of e since CrossAt
+	Due       float32 // %, by which a sound controller had left the limit by now
 	LowShare  float32 // share of time with OP at the low end of its range, mean of days
 	// Stretches at a limit that e pushes towards, each longer than a recovery.
 	From, IntE float64 // s, begin of the running one, 0 none; % s
@@ -26,6 +28,10 @@ type saturationState struct {
 // usualLow is the share of time at the low end from which idling is usual: an hour a
 // day (common practice, no source).
 const usualLow = 0.04
+
+// dueLeast is how far, %, a sound controller must have left the limit by for one that
+// has not to be called wound up: well clear of what counts as at the limit.
+const dueLeast = 3 * opAtLimit
 
 func (z *saturationState) restart(t float64) { z.CrossAt, z.AtSince, z.Side, z.Frames = 0, 0, 0, 0 }
 
@@ -59,12 +65,17 @@ func stepSaturation(w *Watch) {
 			if z.Frames < 250 {
 				z.Frames++
 			}
+			z.IntPast += float32(math.Abs(s.Motion.EF) * in.dt)
+			kc, _ := w.gainPct()
+			if rt, _ := w.resetS(); rt > 0 {
+				z.Due = float32(math.Abs(kc) * (math.Abs(s.Motion.EF) + float64(z.IntPast)/rt))
+			}
 		}
 		z.Peak = max(z.Peak, math.Abs(in.e))
 		if side != z.Side {
 			over := in.t - z.CrossAt
 			rt, _ := w.resetS()
-			if z.Frames >= 5 && over > max(8*in.dt, 0.25*rt) && rt > 0 && z.WindUps < 250 {
+			if z.Frames >= 5 && z.Due > dueLeast && over > max(8*in.dt, 0.25*rt) && rt > 0 && z.WindUps < 250 {
 				if z.WindUps == 0 || in.t-z.LastWind > 7*86400 {
 					z.WindUps, z.WindSince, z.Over = 0, z.CrossAt, 0
 				}
@@ -81,7 +92,7 @@ func stepSaturation(w *Watch) {
 		if a*in.e*side > sigma {
 			z.Side = side // e pushes OP towards this limit
 		} else if z.Side == side && a*s.Motion.EF*side < 0 {
-			z.CrossAt, z.Frames, z.Peak = in.t, 0, 0
+			z.CrossAt, z.Frames, z.Peak, z.IntPast, z.Due = in.t, 0, 0, 0, 0
 		}
 	} else {
 		z.Side = 0

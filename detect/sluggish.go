@@ -10,15 +10,15 @@ import (
 // judgeSlow decides after each recovery. Three proofs, the strongest first: the
 // loop's own usual recovery, the residence times of set-point steps, and the
 // scale-free ratio of recovery to rise (methods section 7: over 9 the reset is
-// about three times too long). The last needs the loop's own tuning or five
-// events in agreement, since load changes have shapes of their own.
+// about three times too long). The last needs four load events or more, since load
+// changes have shapes of their own.
 func (w *Watch) judgeSlow() {
 	r := &w.s.Recov
 	n := int(min(r.Count, recRing))
 	if w.swinging() {
 		return // half-cycles, not recoveries
 	}
-	if w.slowerThanListed() && !r.Slow {
+	if !r.Slow && w.slowerThanListed() {
 		e := r.recent(0)
 		r.Slow, r.SlowSince, r.By, r.Now, r.Was = true, float64(e.T0), 3, e.Dur, 0
 		r.Cause, r.Conf = causeIndex(ResetTooLong), 0.75
@@ -42,54 +42,16 @@ func (w *Watch) judgeSlow() {
 		if w.madeSlower(float64(r.recent(2).T0)) && m > 1.8*w.strict && lo > 1.3 {
 			own = true
 		}
+		// What the loop list says is usual needs no learning.
+		if w.loop.RecoveryS > 0 && m > 2.5*w.strict && lo > 1.75 {
+			own = true
+		}
 	}
 	if !own && w.slowByHistory(n) {
 		own = true
 	}
-	area := false
-	var ar [recRing]float64
-	na := 0
-	lo := math.Inf(1)
-	for i := range n {
-		if a := float64(r.recent(i).Area); a > 0 {
-			ar[na] = a
-			lo = min(lo, a)
-			na++
-		}
-	}
-	if na >= 3 {
-		if m := num.Median(ar[:na]); m > 2.6 && lo > 2 || m > 3.2 && lo > 1.7 {
-			area = true
-		}
-	}
-	shape := false
-	if n >= 5 && w.loop.Process != configs.Runaway && w.loop.Report != configs.Exception {
-		var t9 [5]float64
-		lo := math.Inf(1)
-		for i := range 5 {
-			e := r.recent(i)
-			t9[i] = float64(e.Dur-e.Rise) / max(float64(e.Rise), 3*w.s.Grid.DT)
-			lo = min(lo, t9[i])
-		}
-		// The tail must be that of the integral: time constant Ti (1 + 1/(Kc K)), which
-		// is Ti over the proportional share; 2.1 of them to 12 %.
-		// A share over 1 is that of a runaway process, for which this does not hold.
-		var tail [5]float64
-		nt, over := 0, 0
-		for i := range 5 {
-			e := r.recent(i)
-			if !e.SP && e.Prop > 1.15 {
-				over++
-			}
-			if !e.SP && e.Ti > 0 && e.Prop > 0 {
-				tail[nt] = float64(e.Dur) / (2.1 * float64(e.Ti) / min(1, max(0.03, float64(e.Prop))))
-				nt++
-			}
-		}
-		if m := num.Median(tail[:nt]); num.Median(t9[:]) > 11*w.strict && lo > 4.5 && nt >= 3 && over < 2 && m > 0.5 && m < 1.8 {
-			shape = true
-		}
-	}
+	area := w.slowByArea()
+	shape := n >= 4 && w.loop.Process != configs.Runaway && w.loop.Report != configs.Exception && w.slowByShape(n)
 	by := uint8(0) // the strongest proof
 	switch {
 	case own:
@@ -117,6 +79,66 @@ func (w *Watch) swinging() bool {
 	return false
 }
 
+// slowByArea: the last set-point steps took several residence times of the process.
+func (w *Watch) slowByArea() bool {
+	r := &w.s.Recov
+	n := int(min(r.AreaN, areaRing))
+	if n < 3 {
+		return false
+	}
+	var a [areaRing]float64
+	lo := math.Inf(1)
+	for i := range n {
+		a[i] = float64(r.Areas[i])
+		lo = min(lo, a[i])
+	}
+	// Slow lambda tunings of dead-time processes, three times the dead time, come to 3.
+	return num.Median(a[:n]) > 3.2*w.strict && lo > 2.2
+}
+
+// slowByShape looks at the shape of the load recoveries: time from the peak over time
+// to it, with the tail that the integral gives.
+func (w *Watch) slowByShape(n int) bool {
+	var t9, tail, share [recRing]float64
+	k := 0
+	lo := math.Inf(1)
+	for i := range n {
+		e := w.s.Recov.recent(i)
+		if e.SP || e.Cut || !(e.Ti > 0 && e.Ti < noTi && e.Prop > 0) {
+			continue
+		}
+		t9[k] = float64(e.Dur-e.Rise) / max(float64(e.Rise), 3*w.s.Grid.DT)
+		lo = min(lo, t9[k])
+		// The tail must be that of the integral: time constant Ti (1 + 1/(Kc K)), which
+		// is Ti over the proportional share; 2.1 of them to 12 %.
+		share[k] = float64(e.Prop)
+		tail[k] = float64(e.Dur) / (2.1 * float64(e.Ti) / min(1, max(0.03, float64(e.Prop))))
+		k++
+	}
+	if k < 4 {
+		return false
+	}
+	m, p, long := num.Median(tail[:k]), num.Median(share[:k]), num.Median(t9[:k])
+	// A share over 1 is that of a runaway process, for which this does not hold.
+	if !(m > 0.5 && m < 1.8 && lo > 4.5) || p > 1.15 && w.loop.Process != configs.Integrating {
+		return false
+	}
+	need := 13.0
+	switch {
+	case p < lowShare:
+		// The closed loop is then that of Ti/(Kc K) alone, in a sound one no more than
+		// three times the dead time, of which the peak comes later: 2.1 of it to 12 %.
+		need = 6.5
+	case p < 0.9 && k >= 5: // above, the process is integrating or near it: a long reset is sound
+		need = 9.5
+	}
+	return long > need*w.strict
+}
+
+// lowShare is the share of proportional action under which even a dead-time loop has
+// too little of it.
+const lowShare = 0.13
+
 // slowByHistory compares with the loop's own usual recovery. Where the tuning in
 // service is known not to have changed, ramps and second disturbances are the
 // likelier reason, and all of the last five must agree.
@@ -140,7 +162,7 @@ func (w *Watch) slowByHistory(n int) bool {
 	var ratios [5]float64
 	for i := range need {
 		e := r.recent(i)
-		if e.Ratio == 0 || r.Usual[kindOf(e.SP)].N < 8 || float64(e.Dur) < floor || float64(e.Ratio) < over {
+		if _, sure := w.usualRecovery(e.SP); e.Ratio == 0 || !sure || float64(e.Dur) < floor || float64(e.Ratio) < over {
 			return false
 		}
 		ratios[i] = float64(e.Ratio)
@@ -215,11 +237,8 @@ func (w *Watch) slowCause(by uint8, durs []float64) {
 	r.Cause, r.Conf = causeIndex(cause), float32(conf)
 	r.By = by
 	r.Now = float32(num.Median(durs))
-	q := r.Usual[kindOf(r.recent(0).SP)]
-	r.Was = 0
-	if q.N >= 4 {
-		r.Was = q.V
-	}
+	u, _ := w.usualRecovery(r.recent(0).SP)
+	r.Was = float32(u)
 }
 
 // madeSlower: a change of the tuning to less gain or a longer reset, at or before t

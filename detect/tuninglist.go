@@ -9,7 +9,9 @@ import (
 // wrong unit announces itself by its factor.
 
 // near: within a quarter; the reading itself is good to 15 %.
-func near(v, ref float64) bool { return math.Abs(math.Log(v/ref)) < math.Log(1.25) }
+func near(v, ref float64) bool { return within(v, ref, 1.25) }
+
+func within(v, ref, factor float64) bool { return math.Abs(math.Log(v/ref)) < math.Log(factor) }
 
 // listRatio is gain and reset in service over those of the loop list; 0 where one is
 // not known.
@@ -25,6 +27,18 @@ func (w *Watch) listRatio() (gain, reset float64) {
 		reset = ti / r
 	}
 	return
+}
+
+// perhapsUnit: a unit entered wrongly may explain the reset time, s. A list is sooner
+// wrong than a loop so slow; read with derivative action, a filter or a late OP a
+// reset time can be off by half.
+func perhapsUnit(entered, seen float64) bool {
+	for _, f := range [...]float64{60, 3600} {
+		if within(seen/entered, f, 2) || within(entered*seen, f, 2) {
+			return true
+		}
+	}
+	return within(entered*seen, 1, 2)
 }
 
 // resetUnit names the unit that would explain an entered reset time, s, where the
@@ -81,5 +95,5 @@ func (w *Watch) slowerThanListed() bool {
 	rk, rt := w.listRatio()
 	_, ti, _ := w.tuning(0, 0)
 	e := w.s.Recov.recent(0)
-	return rk > 0.67 && rk < 1.5 && rt > 5 && resetUnit(w.loop.IdealReset, ti) == "" && float64(e.Dur) > max(1.5*ti, 10*w.loop.IdealReset)
+	return rk > 0.67 && rk < 1.5 && rt > 5 && !perhapsUnit(w.loop.IdealReset, ti) && float64(e.Dur) > max(1.5*ti, 10*w.loop.IdealReset)
 }

@@ -41,6 +41,13 @@ func (c *law) reset(u, sp, pv float64) {
 
 func (c *law) gain() float64 {
 	if c.schedule != nil {
+		// In the velocity form a gain that follows a noisy PV takes larger steps one way
+		// than the other: the noise is rectified, and PV really stood off by up to 10 % for
+		// weeks. That is a fault, not a healthy loop (settles, without noise, is blind to
+		// it); there the gain follows SP.
+		if c.velocity {
+			return c.kc * c.schedule(c.lastSP)
+		}
 		return c.kc * c.schedule(c.pvf)
 	}
 	return c.kc
