@@ -163,6 +163,9 @@ func (w *Watch) endHalf(level int, b *cycleBank, hs, g float64) {
 	p := math.Abs(float64(b.Peak)) / g
 	ln := math.Log(max(p, 1e-6))
 	b.push(halfCycle{uint16(min(max(n*64, 1), math.MaxUint16)), int16(math.Round(ln * 2048))})
+	if b.Sign < 0 && w.s.Clock.On && int(w.s.Clock.Bank) == level {
+		w.s.Clock.cross(b.Zero)
+	}
 	w.judgeCycles(level, b)
 }
 

@@ -9,8 +9,9 @@ import (
 
 // Why a loop cycles. For growing cycles the lag of the controller at the complex
 // frequency names gain or reset (the process must supply the rest of the phase,
-// methods section 5); for sustained ones only shape with corroboration, company,
-// a change of the loop's own tuning, or growth seen before name anything.
+// methods section 5); for sustained ones only whether the cycle keeps time, shape with
+// corroboration, company, a change of the loop's own tuning, or growth seen before name
+// anything.
 
 // Bands of the lag, degrees, measured on simulated loops of three classes: below
 // the first the gain has no margin, above the second it has plenty.
@@ -166,13 +167,11 @@ func (o *oscState) setCause(c Cause, also [2]Cause, conf float64) {
 }
 
 // triangle: the shape of a sticking valve, with corroboration. Where PV was sampled
-// too coarsely to show jumps, and where the cycle keeps time like a clock, which
-// friction does not, the shape must be the purer for it (measured on about 20 sticking
-// and 9 other cycles of seed 1 with an index over 0.64: sticking up to 0.96 at a
-// regularity under 46, the others under 0.73).
-func (w *Watch) triangle(si float64, sh shapes, regular float64) bool {
+// too coarsely to show jumps the shape must be the purer for it; and where the cycle
+// looks as regular as a clock, which friction does not, unless it is known to stray.
+func (w *Watch) triangle(si float64, sh shapes, regular float64, strays bool) bool {
 	switch {
-	case regular > 50:
+	case regular > 50 && !strays:
 		return si > 0.8
 	case math.IsNaN(sh.stick):
 		return si > 0.72
@@ -180,26 +179,76 @@ func (w *Watch) triangle(si float64, sh shapes, regular float64) bool {
 	return si > 0.66 || si > 0.64 && sh.stick > 0.41
 }
 
+// Lags of OP against e, degrees, of an integrating loop that its valve makes cycle, by
+// harmonic balance: the loop goes round with k Kc Ti tan(phi)/cos(phi) |N| = 1 and
+// phi + arg(-N) + w theta = 90 degrees, N the describing function of the valve. The
+// published rules set k Kc Ti at 2.5 to 4.7 (Skogestad 2003: 4). A pure jump (N of a
+// relay, |N| near 4/pi) then gives 10 to 19 degrees, a dead band without jump (its |N|
+// falls with its lag) 30 to 42, both less what filters and gains set lower take.
+const (
+	phiDeadBand     = 26.0 // over it the valve may have play, under it it jumps
+	phiDeadBandMost = 42.0
+	phiValve        = 55.0 // over it neither explains the cycle
+)
+
+// peakedLeast is the third harmonic of e in phase with the first, over it, above which
+// the corners of a cycle are those of a valve: 1/9 for a triangle; a linear loop, ringing
+// or driven by a sine, stays under 0.02.
+const peakedLeast = 0.03
+
+// squareLeast is the same of a cycle that is plainly no sine.
+const squareLeast = 0.1
+
 func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also [2]Cause, si float64, sh shapes, changed bool) {
 	s := &w.s
 	o := &s.Osc
 	q, _ := b.stat(int(o.Bank), min(int(b.N), ringLen))
 	move := o.AmpHi / max(o.AmpLo, 1e-9)
-	tri := w.triangle(si, sh, q.regular) && !(phi > 60 && si < 0.72 && !(sh.stick > 0.58)) // else a slow swing far beyond the reset time
+	keeps, strays := s.Clock.beat()
+	// A slow swing far beyond the reset time may look like it; but the band of a valve
+	// makes its cycles alike, where ringing begins anew with each load.
+	tri := w.triangle(si, sh, q.regular, strays) && !(phi > 60 && (si < 0.72 && !(sh.stick > 0.58) || q.spread > 0.45))
 	integrating := w.loop.Process == configs.Integrating
+	stuckBefore := o.LastCause != 0 && causes[o.LastCause] == ValveSticking
+	lately := o.LastCause != 0 && w.in.t-o.LastAt < 60*o.P && math.Abs(math.Log(o.P/o.LastP)) < 0.75
+	play := w.loop.Process != configs.SelfRegulating && strays && sh.looks >= 10 && si > 0.52 && sh.peaked > peakedLeast && phi > phiDeadBand && phi < phiDeadBandMost
+	follows := s.Motion.PosN > 300 && s.Motion.Astray < 0.3 // the position shows that the element does
 	switch {
 	case o.GrowCause != 0 && causes[o.GrowCause] != Undetermined:
 		o.setCause(causes[o.GrowCause], also, 0.85)
-	case o.LastCause != 0 && w.in.t-o.LastAt < 60*o.P && math.Abs(math.Log(o.P/o.LastP)) < 0.75:
+	case lately && !stuckBefore:
 		o.setCause(causes[o.LastCause], also, 0.8)
 		o.LastAt, o.LastP = w.in.t, o.P
-	case o.Sticking && !integrating && si > 0.5 && !(sh.h3OP > 0.3):
-		// A shape once plain is not taken back because noise blurs it for a while. On
-		// integrating loops it may yet turn out to be dead band.
-	case tri && sh.h3OP > 0.25:
-		// OP square: what drives the loop is square, a sticking valve makes OP a triangle.
-		o.setCause(OutsideDisturbance, [2]Cause{ValveSticking}, 0.75)
-	case tri && s.Motion.PosN > 300 && s.Motion.Astray < 0.3:
+	case keeps && changed:
+		// A beat speaks for outside, a tuning made livelier for the loop itself.
+		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, byPhi}, 0.5)
+	case keeps && tri && !s.Clock.long():
+		// Shape against a beat that is young.
+		if !o.Sticking {
+			o.setCause(Undetermined, [2]Cause{OutsideDisturbance, ValveSticking}, 0.5)
+		}
+	case keeps:
+		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.93)
+	case !strays && s.Clock.judged() && math.Abs(sh.peaked) > squareLeast && sh.siOP < 0.55:
+		// A linear loop alone makes a sine, and its valve makes OP a triangle and strays:
+		// what is left for spikes or steps is a drive that has them.
+		o.setCause(OutsideDisturbance, [2]Cause{ValveSticking}, 0.85)
+	case sh.looks == 0 && o.Cause != 0:
+		// A gap or a spell in manual took the record of the shape: nothing new is known.
+	case play && !changed && !follows:
+		o.setCause(ValveDeadBand, [2]Cause{ValveSticking}, 0.8)
+	case o.Sticking && !integrating && si > 0.5:
+		// A shape once plain is not taken back because noise blurs it for a while.
+	case lately && !integrating && si > 0.5 && !follows:
+		o.setCause(ValveSticking, [2]Cause{ProcessNonlinear}, 0.88)
+	case tri && sh.h3OP > 0.25 && !strays:
+		// OP square: what drives the loop may be, a sticking valve makes OP a triangle.
+		// The harmonic of an irregular cycle is none, and only the beat tells.
+		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, ValveSticking}, 0.5)
+	case tri && si < 0.78 && !strays && q.regular > 8 && !s.Clock.judged():
+		// Regular enough for a clock, not known yet whether it is one, and no pure triangle.
+		o.setCause(Undetermined, [2]Cause{ValveSticking, OutsideDisturbance}, 0.6)
+	case tri && follows:
 		// The position shows that the element follows: the shape has another reason.
 		o.setCause(Undetermined, [2]Cause{ProcessNonlinear, OutsideDisturbance}, 0.6)
 	case tri && !changed && sh.looks < 4:
@@ -210,17 +259,19 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		// A slow swing far beyond the reset time: an integrating loop with too little
 		// gain is poorly damped for any reset (Skogestad 2003).
 		o.setCause(GainTooLow, [2]Cause{ResetTooShort}, 0.75)
-	case integrating && !changed && si > 0.52 && phi < 55 && sh.looks >= 6 && q.regular > 4 && si < 0.7:
-		o.setCause(ValveDeadBand, [2]Cause{ValveSticking}, 0.7)
+	case integrating && tri && !changed && phi > phiDeadBand && phi < phiValve:
+		o.setCause(Undetermined, [2]Cause{ValveSticking, ValveDeadBand}, 0.6)
+	case integrating && tri && !changed:
+		o.setCause(ValveSticking, [2]Cause{ValveDeadBand}, 0.88)
 	case tri && !changed:
-		o.setCause(ValveSticking, [2]Cause{ProcessNonlinear}, min(0.95, 0.72+0.6*(si-0.64)))
+		o.setCause(ValveSticking, [2]Cause{ProcessNonlinear}, min(0.95, 0.86+0.6*(si-0.64)))
 	case changed:
 		o.setCause(byPhi, also, 0.85)
-	case si < 0.45 && o.Outside && move < 1.6:
-		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.7)
-	case si < 0.45 && q.spread < 0.12 && move < 1.4 && o.Evals > 12:
-		o.Outside = true
-		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.7)
+	case si < 0.45 && s.Clock.exact() && q.spread < 0.03 && move < 1.1:
+		// Nothing disturbs this loop, so nothing shows whether the cycle would come back
+		// to its beat; but a swing of the loop's own neither grows nor dies only at one
+		// value of its tuning.
+		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.75)
 	case si < 0.45 && phi < 25 && move > 1.5:
 		o.setCause(GainTooHigh, [2]Cause{OutsideDisturbance}, 0.75)
 	case si < 0.5 && (move > 1.7 || phi > 60 && q.spread > 0.14 && move > 1.4):

@@ -20,7 +20,6 @@ type oscState struct {
 	AmpOn     bool
 	Growth    float64 // per cycle, newest
 	GrowCause uint8   // cause found while growing
-	Outside   bool    // judged outside once
 	Cause     uint8
 	Next      uint8 // a differing judgement, and how often running
 	NextN     uint8
@@ -255,6 +254,7 @@ func (w *Watch) beginOsc(level int, b *cycleBank, back int) {
 	*o = oscState{Grow: keep.Grow, Sus: keep.Sus, Bank: uint8(level), Since: b.Zero - len*w.levelS(level),
 		LastAt: keep.LastAt, LastP: keep.LastP, LastCause: keep.LastCause}
 	w.startTrack(level)
+	w.s.Clock.begin(level, b.Zero, 2*len/float64(back)*w.levelS(level))
 }
 
 // judgeSustained: half-cycles that follow each other without rest, regular, large
@@ -396,6 +396,8 @@ func (w *Watch) endOsc() {
 	*o = oscState{LastAt: keep.LastAt, LastP: keep.LastP, LastCause: keep.LastCause}
 	if keep.Grow && keep.GrowCause != 0 {
 		o.LastAt, o.LastP, o.LastCause = w.in.t, keep.P, keep.GrowCause
+	} else if keep.Sticking {
+		o.LastAt, o.LastP, o.LastCause = w.in.t, keep.P, keep.Cause
 	}
 	for i := range w.s.Cycles {
 		w.s.Cycles[i].Conf = 0

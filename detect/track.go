@@ -2,6 +2,7 @@ package detect
 
 import (
 	"math"
+	"math/cmplx"
 
 	"midwatch/detect/num"
 )
@@ -31,7 +32,7 @@ type track struct {
 	SinPV  float64 // of PV, for integrating loops
 	TriPV  float64
 	H3     float64 // sums over looks
-	H3PV   float64
+	Peaked float64 // third harmonic of e in phase with the first, over it
 	Stick  float64 // share of PV travel in the busiest fifth of the cycle
 	PhRe   float64 // of OP against e, unit phasors
 	PhIm   float64
@@ -53,7 +54,7 @@ func (k *track) forget() {
 	k.SinPV *= keep
 	k.TriPV *= keep
 	k.H3 *= keep
-	k.H3PV *= keep
+	k.Peaked *= keep
 	k.Stick *= keep
 	k.PhRe *= keep
 	k.PhIm *= keep
@@ -121,7 +122,7 @@ func (w *Watch) lookTrack(period float64) {
 	o3r, o3i := num.Phasor(dop[:p], 3*om)
 	e3r, e3i := num.Phasor(de[:p], 3*om)
 	k.H3 += ratio(math.Hypot(o3r, o3i), math.Hypot(or, oi))
-	k.H3PV += ratio(math.Hypot(e3r, e3i), math.Hypot(er, ei))
+	k.Peaked += inPhase(complex(er, ei), complex(e3r, e3i))
 	re, im := or*er+oi*ei, oi*er-or*ei
 	if m := math.Hypot(re, im); m > 0 {
 		k.PhRe += re / m
@@ -154,6 +155,18 @@ func ratio(a, b float64) float64 {
 	return min(a/b, 10)
 }
 
+// inPhase is the part of the third harmonic that peaks where the first does, over the
+// first: 1/9 for a triangle, -1/3 for a square, 0 for a sine. Its sign holds from cycle
+// to cycle while that of noise does not, so a mean over cycles is free of noise.
+func inPhase(c1, c3 complex128) float64 {
+	m := cmplx.Abs(c1)
+	if !(m > 1e-12) {
+		return 0
+	}
+	u := c1 / complex(m, 0)
+	return max(-1, min(1, real(c3/(u*u*u))/m))
+}
+
 // weight is the sum of the fading weights of the looks.
 func (k *track) weight() float64 {
 	return (1 - math.Pow(0.9, float64(k.Looks))) / 0.1
@@ -161,9 +174,9 @@ func (k *track) weight() float64 {
 
 // shapes of the cycle so far; all NaN before the first look.
 type shapes struct {
-	siOP, siPV, h3OP, h3PV, stick float64
-	phiDeg                        float64 // lag of OP against a*e, degrees
-	looks                         int
+	siOP, siPV, h3OP, peaked, stick float64
+	phiDeg                          float64 // lag of OP against a*e, degrees
+	looks                           int
 }
 
 func (w *Watch) shapes() shapes {
@@ -177,7 +190,7 @@ func (w *Watch) shapes() shapes {
 	if w.sign() < 0 {
 		re, im = -re, -im
 	}
-	return shapes{ratio(k.SinSum, k.SinSum+k.TriSum), ratio(k.SinPV, k.SinPV+k.TriPV), k.H3 / wt, k.H3PV / wt, k.Stick / wt,
+	return shapes{ratio(k.SinSum, k.SinSum+k.TriSum), ratio(k.SinPV, k.SinPV+k.TriPV), k.H3 / wt, k.Peaked / wt, k.Stick / wt,
 		-math.Atan2(im, re) * 180 / math.Pi, int(k.Looks)}
 }
 

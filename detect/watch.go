@@ -56,6 +56,7 @@ type state struct {
 	Fits    [fitBanks]fitBank
 	Tune    tuneState
 	Track   track
+	Clock   clock
 	Osc     oscState
 	Recov   recoveryState
 	Off     offsetState
