@@ -30,6 +30,7 @@ func (w *Watch) stepCascade() {
 	}
 	if in.hasOP {
 		s.Tune.OPMean += (in.op - s.Tune.OPMean) / 400
+		s.Tune.OPUsual += (in.op - s.Tune.OPUsual) * ofWeek(in)
 	}
 	// Trapezoid over the slot; the common constant dies in the band pass.
 	s.Int += in.e * in.dt
@@ -66,7 +67,9 @@ func (w *Watch) trimOf(op, ff float64) float64 {
 		if *m == 0 {
 			*m = ff
 		}
-		*m += (ff - *m) / 2000
+		// The usual flow, over all time up to a week: gain is read at it, so it must not
+		// follow the day.
+		*m += (ff - *m) * ofWeek(&w.in)
 		if r := ff / *m; r > 0.05 {
 			return op / r
 		}
@@ -75,3 +78,6 @@ func (w *Watch) trimOf(op, ff float64) float64 {
 	}
 	return op
 }
+
+// ofWeek is the step of a mean over all time up to a week.
+func ofWeek(in *input) float64 { return in.dt / min(max(in.t, in.dt), 7*86400) }

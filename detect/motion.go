@@ -149,6 +149,9 @@ func (w *Watch) stepSP() {
 		moved = 1
 	}
 	m.SPBusy += (moved - m.SPBusy) / 60
+	if moved > 0 && m.SPBusy < 0.2 {
+		w.s.Tune.SPAt = in.t
+	}
 	if d > 0.3 {
 		if in.t-m.SPStep > 60*in.dt {
 			m.SPPrevStep = m.SPStep

@@ -256,6 +256,20 @@ func (w *Watch) usualRecovery(sp bool) (t float64, sure bool) {
 	return 0, false
 }
 
+// anyRecovery is the usual recovery, s, of whichever kind of upset was seen; 0 where
+// none is known.
+func (w *Watch) anyRecovery() (t float64) {
+	if w.loop.RecoveryS > 0 {
+		return w.loop.RecoveryS
+	}
+	for _, q := range w.s.Recov.Usual {
+		if q.N >= 3 {
+			t = q.Value()
+		}
+	}
+	return t
+}
+
 // recent gives the i-th newest recovery, 0 the newest.
 func (r *recoveryState) recent(i int) *recovery {
 	return &r.Ring[(int(r.Count)+recRing*2-1-i)%recRing]

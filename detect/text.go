@@ -196,6 +196,9 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 		if x := w.tuningWords(); x != "" {
 			what += ": " + x
 		}
+		if n := w.tuningNote(); n != "" {
+			return what + ". The loop list does not fit: " + n + ". Nothing to do if it was meant." + w.beforeSentence(k, f), w.short(f, what)
+		}
 		return what + ". Nothing to do if it was meant." + w.beforeSentence(k, f), w.short(f, what)
 	case kStale:
 		what = "No usable value" + part(" for %s", get("duration_s"), duration) + "; the loop cannot be watched"

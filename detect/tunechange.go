@@ -18,6 +18,9 @@ type tuneChange struct {
 	ResetWas float32 // s
 	ResetNow float32 // s
 	What     uint8   // 1 gain, 2 reset, 3 both
+	Maybe    uint8   // suspected: What now, of bank MaybeOf since MaybeAt; 0 none
+	MaybeOf  uint8
+	MaybeAt  float32 // s
 	TagGain  float32 // last read from tags
 	TagReset float32
 }
@@ -28,7 +31,10 @@ const (
 	changeRatio  = 1.5
 	changeSpread = 1.35
 	changeFits   = 4
+	changeOld    = 6 // deviations known before: four beyond them all come by chance once in 210
 	changeR2     = 0.95
+	changeLaw    = 0.5
+	changeNot    = 1.2 // a scale nearer than this to its usual gain did not change
 )
 
 func (w *Watch) tuneCheck(k int) {
@@ -37,7 +43,13 @@ func (w *Watch) tuneCheck(k int) {
 	if b.Count < fitRing || b.BaseK.N < 4 || s.Osc.Sus && s.Osc.Grow {
 		return
 	}
-	var ks, ts [changeFits]float64
+	// Where something else than the law moves OP between the blocks that pass for it, these
+	// are a choice by chance.
+	if s.Tune.Law < changeLaw || b.Run < changeFits {
+		return
+	}
+	var ks, ts, dk, dt [changeFits]float64
+	pv := 0.0
 	oldest := math.Inf(1)
 	for i := range changeFits {
 		f := &b.Ring[(b.Count-1-uint32(i))%fitRing]
@@ -45,27 +57,44 @@ func (w *Watch) tuneCheck(k int) {
 			return
 		}
 		ks[i], ts[i] = math.Abs(float64(f.Kc)), float64(f.Ti)
+		dk[i], dt[i] = w.strays(k, f), math.Log(ts[i]/b.BaseT.Value())
+		pv += float64(f.PV) / changeFits
 		oldest = min(oldest, float64(f.T0))
 	}
 	what := uint8(0)
-	if w.moved(ks[:], &b.BaseK, &b.DevK) {
+	kn, tn := num.Median(ks[:]), num.Median(ts[:])
+	if b.DevK.N >= changeOld && w.moved(dk[:], &b.DevK) && !w.paced(kn/b.BaseK.Value()) && s.Sched.knows(pv) && !(s.Sched.is() && int(s.Sched.Bank) != k) && !w.contradicted(k, oldest) {
 		what |= 1
 	}
-	kn, tn := num.Median(ks[:]), num.Median(ts[:])
 	// The scale must see the reset: not far above the filter.
-	if b.BaseT.N >= 4 && tn < 20*fitTh*w.levelS(2*k) && w.moved(ts[:], &b.BaseT, &b.DevT) {
+	if b.DevT.N >= changeOld && tn < 20*fitTh*w.levelS(2*k) && w.moved(dt[:], &b.DevT) {
 		what |= 2
 	}
 	c := &s.Change
+	if c.Maybe > 0 && int(c.MaybeOf) == k && what&c.Maybe == 0 {
+		c.Maybe = 0
+	}
 	if what == 0 || c.On && w.in.t-c.Seen < 3600 {
 		return
+	}
+	if c.Maybe == 0 {
+		c.Maybe, c.MaybeOf, c.MaybeAt = what, uint8(k), float32(oldest)
+	}
+	if int(c.MaybeOf) == k {
+		oldest = float64(c.MaybeAt)
 	}
 	// A set point ramped inside the controller looks like another tuning: two
 	// set-point changes, or none, must lie in the span.
 	if s.Motion.SPStep > oldest && s.Motion.SPPrevStep < oldest {
 		return
 	}
-	if w.in.t-oldest < max(600, min(3*tn, 4*3600)) {
+	// It must outlast one disturbance, whose length is guessed to be under half a day before
+	// some were seen.
+	lasts := 2 * w.anyRecovery()
+	if lasts == 0 {
+		lasts = changeShownS
+	}
+	if w.in.t-oldest < max(600, min(3*tn, 4*3600), lasts) {
 		return
 	}
 	*c = tuneChange{On: true, At: oldest, Seen: w.in.t, GainWas: b.BaseK.V, GainNow: float32(kn), ResetWas: b.BaseT.V, ResetNow: float32(tn),
@@ -74,6 +103,7 @@ func (w *Watch) tuneCheck(k int) {
 		s.Recov.Hold = 12 // the recoveries to come are compared with those before
 	}
 	// From here on the new tuning is the usual one; the other scales begin anew.
+	s.Sched, c.Maybe = schedule{}, 0
 	for j := range s.Fits {
 		if o := &s.Fits[j]; j != k {
 			o.Count, o.BaseK, o.BaseT = 0, num.Quantile{}, num.Quantile{}
@@ -82,21 +112,41 @@ func (w *Watch) tuneCheck(k int) {
 	b.BaseK, b.BaseT = num.Quantile{V: float32(kn), N: 6}, num.Quantile{V: float32(max(tn, 1e-3)), N: 6}
 }
 
-// moved: the newest values agree among themselves and all lie on one side of the
-// usual one, farther than its values stray (four running beyond the 80 % quantile of
+// moved: the newest values, ln over the usual one, agree among themselves and all lie on
+// one side of it, farther than its values stray (four running beyond the 80 % quantile of
 // the deviations come by chance once in 10,000).
-func (w *Watch) moved(x []float64, base, dev *num.Quantile) bool {
+func (w *Watch) moved(d []float64, dev *num.Quantile) bool {
 	lo, hi := math.Inf(1), math.Inf(-1)
-	for _, v := range x {
-		if !(v > 0) {
+	for _, v := range d {
+		if v != v || math.IsInf(v, 0) {
 			return false
 		}
-		d := math.Log(v / base.Value())
-		lo, hi = min(lo, d), max(hi, d)
+		lo, hi = min(lo, v), max(hi, v)
 	}
 	least, most := min(math.Abs(lo), math.Abs(hi)), max(math.Abs(lo), math.Abs(hi))
 	return lo*hi > 0 && hi-lo < math.Log(changeSpread) && least > 1.2*dev.Value() &&
 		(least+most)/2 > max(math.Log(changeRatio), 1.8*dev.Value())*w.strict
+}
+
+// paced: the mean of OP went the way of the gain, as where OP is the controller's trim times
+// a flow that no tag tells: the law is as it was.
+func (w *Watch) paced(ratio float64) bool {
+	r := w.s.Tune.OPMean / w.s.Tune.OPUsual
+	return r > 0 && (r > changeNot || r < 1/changeNot) && near(ratio, r)
+}
+
+// contradicted: another scale, in a block that began after the first of the new fits,
+// reads the gain as it was. A gain that changed does so at all scales; what moves OP
+// beside the law (a load that paces it, an operator) shows at one.
+func (w *Watch) contradicted(k int, since float64) bool {
+	for j := range w.s.Fits {
+		b := &w.s.Fits[j]
+		f := &b.Last
+		if j != k && b.BaseK.N >= 4 && f.R2 > changeR2 && f.X > fitX && float64(f.T0) >= since && math.Abs(w.strays(j, f)) < math.Log(changeNot) {
+			return true
+		}
+	}
+	return false
 }
 
 // readTuning follows tuning tags: a change there is a fact, not an estimate.

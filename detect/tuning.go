@@ -33,8 +33,19 @@ var (
 const (
 	fitX      = 20.0
 	fitR2     = 0.9
+	fitBad    = 2          // blocks
+	fitWarm   = 2 * fitTh  // samples after the filters were set, for what of OP is late
 	fitBlock  = 10 * fitTh // samples at least in a block
 	fitBlockX = 60 * fitTh // samples after which a block without excitation is dropped
+)
+
+// A lag is taken where it removes a fifth of the residual variance (methods section
+// 9): of a block of 65 samples, a quarter of them independent, that is F = 4, the 5 %
+// limit. A bank that took it more often than not keeps to it: laws of two kinds do not
+// compare.
+const (
+	lagGain  = 0.2
+	lagVotes = 4
 )
 
 // leastOP is the least movement of OP, % rms, from which a tuning is read.
@@ -48,6 +59,7 @@ type fit struct {
 	X  float32
 	At float32 // s
 	T0 float32 // s, begin of its block
+	PV float32 // %, mean over the block
 }
 
 func (f *fit) ok() bool { return f.R2 > fitR2 && f.X > fitX }
@@ -63,63 +75,76 @@ func (f *fit) hasReset() bool { return f.Ti > 0 && f.Ti < noTi }
 const noTi = 1e9
 
 type fitBank struct {
-	E, OP                     [3]float32 // filter states: low pass, low pass again, high pass
-	S                         [3]float64 // of Int e, which grows large
-	A00, A01, A11, B0, B1, YY float64
-	Start                     float64 // s, of the block
-	Warm                      uint32  // samples since the restart
-	N                         uint32  // samples in the block
-	Last                      fit
-	Ring                      [fitRing]fit
-	Count                     uint32       // good fits ever
-	BaseK, BaseT              num.Quantile // medians of good fits older than the ring
-	DevK, DevT                num.Quantile // 80 % quantile of their deviations, ln
+	E, OP        [3]float32 // filter states: low pass, low pass again, high pass
+	S            [3]float64 // of Int e, which grows large
+	Sums         num.Sums
+	Start        float32 // s, of the block
+	PVSum        float32 // %, of the block
+	Lag          float32 // s, of the last good block; 0 none
+	Warm         uint32  // samples since the restart
+	N            uint16  // samples in the block
+	Run          int8    // excited blocks in a row that the law explains; negative: that it does not
+	ByLag        int8    // good blocks that took the lag less those that did not, -lagVotes to lagVotes
+	Last         fit
+	Ring         [fitRing]fit
+	Count        uint32       // good fits ever
+	BaseK, BaseT num.Quantile // medians of good fits older than the ring
+	DevK, DevT   num.Quantile // 80 % quantile of their deviations, ln
 }
 
 // tuneState is what is common to the fits.
 type tuneState struct {
 	LimitAt float64 // s, OP last at a limit
-	OPMean  float64 // %, slow mean of OP (200 slots)
-	FFMean  float64 // slow mean of a multiplying feedforward, its unit
+	SPAt    float64 // s, SP last moved where it usually rests
+	OPMean  float64 // %, slow mean of OP (400 slots)
+	OPUsual float64 // %, mean of OP over a week
+	FFMean  float64 // mean of a multiplying feedforward over a week, its unit
 	Law     float32 // share of excited blocks that the PI law explains; 0 before the first
 	Sign    float32 // of the gain as seen; 0 unknown
 }
 
 func (w *Watch) stepFit(k, level int, e, si, op float64) {
 	b := &w.s.Fits[k]
+	h := w.levelS(level)
 	if b.Warm == 0 {
-		e, op := float32(e), float32(op)
-		b.E, b.S, b.OP = [3]float32{e, e, e}, [3]float64{si, si, si}, [3]float32{op, op, op}
 		b.clear(w.in.t)
 	}
+	if w.in.limit {
+		w.s.Tune.LimitAt = w.in.t
+	}
+	// Filters that stand at values of one moment keep the law from that moment on,
+	// whatever its constant was before: where the constant changed within this sample,
+	// they are set anew and nothing is lost. A limit changes it, and a step of the set
+	// point where P does not act on it or PV is filtered.
+	broke := max(w.s.Tune.LimitAt, w.s.Tune.SPAt)
+	if b.Warm == 0 || broke > 0 && broke > w.in.t-2*h {
+		e, op := float32(e), float32(op)
+		b.E, b.S, b.OP = [3]float32{e, e, e}, [3]float64{si, si, si}, [3]float32{op, op, op}
+		b.Warm = 1
+		return
+	}
 	b.Warm++
+	was := float64(b.OP[1] - b.OP[2])
 	o := [3]float64{pass(&b.E, e), 0, pass(&b.OP, op)}
 	b.S[0] += fitAL * (si - b.S[0])
 	b.S[1] += fitAL * (b.S[0] - b.S[1])
 	b.S[2] += fitAH * (b.S[1] - b.S[2])
 	o[1] = b.S[1] - b.S[2]
-	h := w.levelS(level)
-	if w.in.limit {
-		w.s.Tune.LimitAt = w.in.t
-	}
+	dop := (o[2] - was) / h
 	// PV that stands between the values of an analyser shows no law at scales below.
 	if u := w.s.Motion.Update.Value(); u > 3 && u*w.s.Grid.DT > fitScale*h {
 		return
 	}
-	if b.Warm < 4*fitTh || w.in.t-w.s.Tune.LimitAt < 3*fitTh*h && w.s.Tune.LimitAt > 0 {
+	if b.Warm < fitWarm {
 		return
 	}
-	b.A00 += o[0] * o[0]
-	b.A01 += o[0] * o[1]
-	b.A11 += o[1] * o[1]
-	b.B0 += o[0] * o[2]
-	b.B1 += o[1] * o[2]
-	b.YY += o[2] * o[2]
+	b.Sums.Add(o[0], o[1], -dop, o[2])
+	b.PVSum += float32(w.in.pv)
 	b.N++
 	if b.N < fitBlock || b.N%8 != 0 {
 		return
 	}
-	r := w.solveFit(k)
+	r, lag, better := w.solveFit(k)
 	if !(r.ok() && r.X > fitX*1.25) && b.N < fitBlockX {
 		return
 	}
@@ -135,9 +160,13 @@ func (w *Watch) stepFit(k, level int, e, si, op float64) {
 		}
 	}
 	if r.ok() && r.X > fitX*1.25 {
-		w.keepFit(k, r)
+		b.Run = max(b.Run, 0)
+		b.Run = min(b.Run+1, 100)
+		w.keepFit(k, r, lag, better)
 	} else if r.R2 > fitR2 {
 		b.Last = r
+	} else if r.X > fitX*1.25 {
+		b.Run = max(min(b.Run, 0)-1, -fitBad)
 	}
 	b.clear(w.in.t)
 }
@@ -152,20 +181,34 @@ func pass(f *[3]float32, v float64) float64 {
 }
 
 func (b *fitBank) clear(t float64) {
-	b.A00, b.A01, b.A11, b.B0, b.B1, b.YY, b.N = 0, 0, 0, 0, 0, 0, 0
-	b.Start = t
+	b.Sums, b.PVSum, b.N, b.Start = num.Sums{}, 0, 0, float32(t)
 }
 
-func (w *Watch) keepFit(k int, r fit) {
+func (w *Watch) keepFit(k int, r fit, lag float64, better bool) {
 	b := &w.s.Fits[k]
+	b.Lag = float32(lag)
+	had := b.ByLag > 0
+	if better {
+		b.ByLag = min(b.ByLag+1, lagVotes)
+	} else {
+		b.ByLag = max(b.ByLag-1, -lagVotes)
+	}
+	if had != (b.ByLag > 0) && b.Count > 0 { // like with like: another law, another history
+		b.Count, b.BaseK, b.BaseT, b.DevK, b.DevT = 0, num.Quantile{}, num.Quantile{}, num.Quantile{}, num.Quantile{}
+		if int(w.s.Sched.Bank) == k {
+			w.s.Sched = schedule{}
+		}
+	}
 	i := b.Count % fitRing
 	if b.Count >= fitRing {
 		old := &b.Ring[i]
-		if old.R2 > changeR2 { // like with like
+		// Like with like; what is suspected to be new does not teach what is usual.
+		if c := &w.s.Change; old.R2 > changeR2 && !(c.Maybe > 0 && int(c.MaybeOf) == k && old.T0 >= c.MaybeAt) {
 			if b.BaseK.N > 2 {
-				b.DevK.Add(math.Abs(math.Log(math.Abs(float64(old.Kc))/b.BaseK.Value())), 0.8, 0.05, 0.01)
+				b.DevK.Add(math.Abs(w.strays(k, old)), 0.8, 0.05, 0.01)
 			}
 			b.BaseK.Mean(math.Abs(float64(old.Kc)), 0.02, 1e-6)
+			w.s.Sched.learn(k, old, w)
 			if old.hasReset() {
 				if b.BaseT.N > 2 {
 					b.DevT.Add(math.Abs(math.Log(float64(old.Ti)/b.BaseT.Value())), 0.8, 0.05, 0.01)
@@ -185,24 +228,36 @@ func (w *Watch) keepFit(k int, r fit) {
 	w.tuneCheck(k)
 }
 
-// solveFit solves the normal equations of the running block.
-func (w *Watch) solveFit(k int) (r fit) {
+// solveFit solves the normal equations of the running block. lag, s, is that of the
+// third regressor where it was taken; better says that the block is for it.
+func (w *Watch) solveFit(k int) (r fit, lag float64, better bool) {
 	b := &w.s.Fits[k]
-	det := b.A00*b.A11 - b.A01*b.A01
 	// OP that hardly moves (held, or one step of its resolution) says nothing.
-	if !(det > 0) || b.N < 20 || b.YY/float64(b.N) < leastOP*leastOP {
+	kc, ki, rss, ok := b.Sums.Two()
+	if !ok || b.N < 20 || b.Sums.YY/float64(b.N) < leastOP*leastOP {
 		return
 	}
-	kc := (b.B0*b.A11 - b.B1*b.A01) / det
-	ki := (b.B1*b.A00 - b.B0*b.A01) / det
-	rss := b.YY - kc*b.B0 - ki*b.B1
 	h := w.levelS(2 * k)
 	s := max(w.s.Noise.sigma(), 0.01)
-	r = fit{Kc: float32(kc), Ti: float32(kc / ki), R2: float32(1 - rss/b.YY), At: float32(w.in.t), T0: float32(b.Start)}
+	r.At, r.T0, r.PV = float32(w.in.t), b.Start, b.PVSum/float32(b.N)
+	r.X = float32(b.Sums.A11 / float64(b.N) / (s * s * w.s.Grid.DT * h * fitNoise))
+	// OP logged late, PV filtered in the controller: OP + L dOP/dt = law. What is
+	// faster than eight samples of the log is not seen well enough for it.
+	if T := fitScale * h; r.X > fitX && T >= 8*w.s.Grid.DT {
+		k3, i3, l, rss3, ok3 := b.Sums.Three()
+		better = ok3 && l > 0 && rss3 < (1-lagGain)*rss
+		switch {
+		case better && l > T && 1-rss/b.Sums.YY < 0.99:
+			return fit{}, 0, true // a lag too long for this scale: neither law is seen
+		case ok3 && l > 0 && l <= T && (b.ByLag > 0 || b.Count == 0 && better):
+			kc, ki, rss, lag = k3, i3, rss3, l
+		}
+		better = better && l <= T
+	}
+	r.Kc, r.Ti, r.R2 = float32(kc), float32(kc/ki), float32(1-rss/b.Sums.YY)
 	if math.Abs(kc/ki) > noReset*fitScale*h {
 		r.Ti = noTi
 	}
-	r.X = float32(b.A11 / float64(b.N) / (s * s * w.s.Grid.DT * h * fitNoise))
 	return
 }
 
@@ -210,15 +265,16 @@ func (w *Watch) solveFit(k int) (r fit) {
 // with a period the scale nearest to a sixth of it, running block included.
 func (w *Watch) tuning(since, period float64) (kc, ti float64, ok bool) {
 	best := math.Inf(-1)
+	stands := w.standsSince()
 	for k := range w.s.Fits {
 		b := &w.s.Fits[k]
 		r := b.Last
 		if period > 0 && float64(b.N) > 3*fitTh {
-			if q := w.solveFit(k); q.ok() {
+			if q, _, _ := w.solveFit(k); q.ok() {
 				r = q
 			}
 		}
-		if float64(r.At) < since || !r.ok() {
+		if float64(r.At) < since || float64(r.T0) < stands || !r.ok() || period == 0 && b.scattered(stands) {
 			continue
 		}
 		score := 10*float64(r.R2) + min(1, float64(r.X)/2000)
@@ -230,6 +286,84 @@ func (w *Watch) tuning(since, period float64) (kc, ti float64, ok bool) {
 		}
 	}
 	return
+}
+
+// lag is that of the law, s, as the tuning in service was read with it; 0 none.
+func (w *Watch) lag() float64 {
+	kc, _, ok := w.served()
+	for k := range w.s.Fits {
+		if b := &w.s.Fits[k]; ok && float64(b.Last.Kc) == kc {
+			return float64(b.Lag)
+		}
+	}
+	return 0
+}
+
+// gainAlone is the gain where the integral is not excited enough to be read: the fit of
+// the best R2 since the tuning stands. Methods section 9: right to 1.2 % at any
+// excitation, 6 % in nine of ten.
+func (w *Watch) gainAlone() (kc float64, ok bool) {
+	stands, best := w.standsSince(), float32(changeR2)
+	for k := range w.s.Fits {
+		f := &w.s.Fits[k].Last
+		if f.R2 > best && float64(f.T0) >= stands && f.X <= fitX {
+			best, kc, ok = f.R2, float64(f.Kc), true
+		}
+	}
+	return
+}
+
+// scattered: the newest good fits disagree by more than any reading should (gain by 2,
+// reset by 3): what moves OP there is not the law alone.
+func (b *fitBank) scattered(since float64) bool {
+	const newest = 3
+	k0, k1, t0, t1 := math.Inf(1), 0.0, math.Inf(1), 0.0
+	for i := range min(b.Count, newest) {
+		f := &b.Ring[(b.Count-1-i)%fitRing]
+		if float64(f.T0) < since {
+			break
+		}
+		k := math.Abs(float64(f.Kc))
+		k0, k1 = min(k0, k), max(k1, k)
+		if f.hasReset() {
+			t0, t1 = min(t0, float64(f.Ti)), max(t1, float64(f.Ti))
+		}
+	}
+	return k1 > 2*k0 || t1 > 3*t0
+}
+
+// standsSince is the time, s, before which a reading says nothing of now: the tuning
+// changed, or a scale with a history left it twice running, or the law explains nothing
+// there any more that moves.
+func (w *Watch) standsSince() (t float64) {
+	if c := &w.s.Change; c.Seen > 0 {
+		t = c.At
+	}
+	newest := float32(0)
+	for k := range w.s.Fits {
+		if f := &w.s.Fits[k].Last; f.ok() {
+			newest = max(newest, f.At)
+		}
+	}
+	for k := range w.s.Fits {
+		b := &w.s.Fits[k]
+		if b.Count < fitRing || b.BaseK.N < 4 {
+			continue
+		}
+		if b.Run <= -fitBad && b.Last.At >= newest {
+			return float64(newest) + 1 // nothing was read since
+		}
+		a, o := &b.Ring[(b.Count-1)%fitRing], &b.Ring[(b.Count-2)%fitRing]
+		if w.moved([]float64{w.strays(k, a), w.strays(k, o)}, &b.DevK) {
+			t = max(t, float64(o.T0))
+		}
+	}
+	return
+}
+
+// strays is how far the gain of a fit is from what is usual there, ln.
+func (w *Watch) strays(k int, f *fit) float64 {
+	return math.Log(math.Abs(float64(f.Kc)) / w.gainAt(k, float64(f.PV)))
 }
 
 // usualTuning is the tuning before time t: medians of the older good fits of the

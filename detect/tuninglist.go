@@ -13,10 +13,20 @@ func near(v, ref float64) bool { return within(v, ref, 1.25) }
 
 func within(v, ref, factor float64) bool { return math.Abs(math.Log(v/ref)) < math.Log(factor) }
 
+// served is the tuning in service to be told. When within a sample the controller acts
+// on the integral is not known: the gain is uncertain by dt/(2 Ti) of itself, so nothing
+// is told of a reset shorter than leastReset samples.
+func (w *Watch) served() (kc, ti float64, ok bool) {
+	kc, ti, ok = w.tuning(0, 0)
+	return kc, ti, ok && !(ti > 0 && ti < leastReset*w.s.Grid.DT)
+}
+
+const leastReset = 2.0
+
 // listRatio is gain and reset in service over those of the loop list; 0 where one is
 // not known.
 func (w *Watch) listRatio() (gain, reset float64) {
-	kc, ti, ok := w.tuning(0, 0)
+	kc, ti, ok := w.served()
 	if !ok {
 		return 0, 0
 	}
@@ -69,7 +79,7 @@ func (w *Watch) tuningNote() string {
 		}
 		note += s
 	}
-	kc, ti, _ := w.tuning(0, 0)
+	kc, ti, _ := w.served()
 	rk, rt := w.listRatio()
 	if rk > 0 && math.Abs(math.Log(rk)) > math.Log(differs) {
 		s := fmt.Sprintf("gain entered %s, the data say about %s", sig2(w.loop.GainPct), sig2(math.Abs(kc)))
@@ -93,7 +103,7 @@ func (w *Watch) tuningNote() string {
 // makes it.
 func (w *Watch) slowerThanListed() bool {
 	rk, rt := w.listRatio()
-	_, ti, _ := w.tuning(0, 0)
+	_, ti, _ := w.served()
 	e := w.s.Recov.recent(0)
 	return rk > 0.67 && rk < 1.5 && rt > 5 && !perhapsUnit(w.loop.IdealReset, ti) && float64(e.Dur) > max(1.5*ti, 10*w.loop.IdealReset)
 }

@@ -37,7 +37,9 @@ type View struct {
 	GainLow, GainHigh   float64
 	ResetS              float64 // s
 	ResetLow, ResetHigh float64
-	TuningNote          string // what of the loop list contradicts the tuning in service; empty: nothing
+	LagS                float64     // s, of the controller beside its law: OP logged late or PV filtered; NaN: none seen
+	Schedule            []GainPoint // gain over PV where the gain goes with PV; nil: it does not
+	TuningNote          string      // what of the loop list contradicts the tuning in service; empty: nothing
 	Open                []Finding
 }
 
@@ -46,7 +48,7 @@ func (w *Watch) View() View {
 	s := &w.s
 	nan := math.NaN()
 	v := View{State: Judged, Last: s.Last, SampleS: s.Grid.DT, NoisePV: nan, TimeScaleS: nan, PeriodS: nan,
-		GainPct: nan, GainLow: nan, GainHigh: nan, ResetS: nan, ResetLow: nan, ResetHigh: nan}
+		GainPct: nan, GainLow: nan, GainHigh: nan, ResetS: nan, ResetLow: nan, ResetHigh: nan, LagS: nan}
 	if !s.Grid.Begun {
 		v.State, v.Why = NoData, "no value yet"
 		return v
@@ -54,16 +56,17 @@ func (w *Watch) View() View {
 	if s.Noise.known() {
 		v.NoisePV = w.pvUnits(s.Noise.sigma())
 	}
-	for _, q := range s.Recov.Usual {
-		if q.N >= 3 {
-			v.TimeScaleS = q.Value()
-		}
+	if t := w.anyRecovery(); t > 0 {
+		v.TimeScaleS = t
 	}
 	if s.Osc.Grow || s.Osc.Sus {
 		v.PeriodS = s.Osc.P
 	}
 	v.GainPct, v.GainLow, v.GainHigh, v.ResetS, v.ResetLow, v.ResetHigh = w.tuningRange()
-	v.TuningNote = w.tuningNote()
+	v.TuningNote, v.Schedule = w.tuningNote(), w.schedulePoints()
+	if l := w.lag(); l > 0 {
+		v.LagS = l
+	}
 	v.BlindSpots = w.blindSpots()
 	held := false
 	for k := range table {
@@ -105,7 +108,12 @@ func (w *Watch) whyInactive() string {
 func (w *Watch) tuningRange() (k, k0, k1, t, t0, t1 float64) {
 	n := math.NaN()
 	k, k0, k1, t, t0, t1 = n, n, n, n, n, n
-	kc, ti, ok := w.tuning(0, 0)
+	kc, ti, ok := w.served()
+	if !ok {
+		// The noise alone shows the gain, never the reset.
+		kc, ok = w.gainAlone()
+		ti = n
+	}
 	if !ok {
 		return
 	}
@@ -124,7 +132,7 @@ func (w *Watch) tuningRange() (k, k0, k1, t, t0, t1 float64) {
 			f := &b.Ring[j]
 			g := math.Abs(float64(f.Kc))
 			k0, k1 = min(k0, g), max(k1, g)
-			if f.hasReset() {
+			if t == t && f.hasReset() {
 				t0, t1 = min(t0, float64(f.Ti)), max(t1, float64(f.Ti))
 			}
 		}
@@ -167,6 +175,9 @@ func (w *Watch) blindSpots() (b []string) {
 	if n := w.filterNote(); n != "" {
 		b = append(b, n)
 	}
+	if n := w.tuningNote(); n != "" {
+		b = append(b, "the loop list does not fit: "+n)
+	}
 	if s.Scale.Guessed {
 		b = append(b, "no range given: percentages and gain are guesses")
 	}
@@ -193,6 +204,12 @@ func (w *Watch) Explain() []string {
 		out = append(out, fmt.Sprintf("tuning in service: gain %.3g (%.3g to %.3g), reset %.3g s (%.3g to %.3g)", k, k0, k1, t, t0, t1))
 	} else {
 		out = append(out, "tuning in service: not excited enough to read")
+	}
+	if l := w.lag(); l > 0 {
+		out = append(out, fmt.Sprintf("OP logged late or PV filtered in the controller: a lag of about %s s", sig2(l)))
+	}
+	for _, p := range w.schedulePoints() {
+		out = append(out, fmt.Sprintf("gain goes with PV: at %.4g%s about %s (%d readings)", p.PV, unitOf(w.loop.Unit), sig2(p.Gain), p.N))
 	}
 	if n := w.tuningNote(); n != "" {
 		out = append(out, "loop list: "+n)

@@ -55,6 +55,7 @@ type state struct {
 	Int     float64 // integral of e since the last restart of the fits, % s
 	Fits    [fitBanks]fitBank
 	Tune    tuneState
+	Sched   schedule
 	Track   track
 	Clock   clock
 	Osc     oscState

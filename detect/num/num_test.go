@@ -2,6 +2,7 @@ package num
 
 import (
 	"math"
+	"math/rand/v2"
 	"testing"
 )
 
@@ -83,5 +84,31 @@ func TestQuantileSettles(t *testing.T) {
 	}
 	if v := q.Value(); math.Abs(v-0.75) > 0.05 {
 		t.Errorf("75 %% quantile of a uniform variable %.3f", v)
+	}
+}
+
+// Exact data give back the coefficients, with the third regressor and without; a third
+// that is made of the others is refused.
+func TestSumsGiveBackTheCoefficients(t *testing.T) {
+	r := rand.New(rand.NewPCG(5, 5))
+	var two, three, twin Sums
+	for range 200 {
+		a, b, c := r.NormFloat64(), 3*r.NormFloat64(), 0.2*r.NormFloat64()
+		two.Add(a, b, c, 2*a-0.5*b)
+		three.Add(a, b, c, 2*a-0.5*b+4*c)
+		twin.Add(a, b, a-2*b, a+b)
+	}
+	if k0, k1, rss, ok := two.Two(); !ok || math.Abs(k0-2) > 1e-9 || math.Abs(k1+0.5) > 1e-9 || rss > 1e-9*two.YY {
+		t.Errorf("two: %g %g, rss %g", k0, k1, rss)
+	}
+	if k0, k1, k2, rss, ok := three.Three(); !ok || math.Abs(k0-2) > 1e-4 || math.Abs(k1+0.5) > 1e-4 || math.Abs(k2-4) > 1e-4 || rss > 1e-5*three.YY {
+		t.Errorf("three: %g %g %g, rss %g", k0, k1, k2, rss)
+	}
+	if _, _, _, _, ok := twin.Three(); ok {
+		t.Error("a third regressor made of the others was taken")
+	}
+	var none Sums
+	if _, _, _, ok := none.Two(); ok {
+		t.Error("solved without data")
 	}
 }

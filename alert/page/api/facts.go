@@ -151,7 +151,17 @@ type LoopView struct {
 	ResetS     *float64         `json:"reset_s,omitempty"`
 	ResetLow   *float64         `json:"reset_s_low,omitempty"`
 	ResetHigh  *float64         `json:"reset_s_high,omitempty"`
+	LagS       *float64         `json:"lag_s,omitempty"` // of the controller beside its law
+	Schedule   []GainPoint      `json:"gain_schedule,omitempty"`
+	TuningNote string           `json:"tuning_note,omitempty"` // what of the loop list contradicts the data
 	Open       []detect.Finding `json:"open,omitempty"`
+}
+
+// GainPoint is a point of a gain that goes with PV.
+type GainPoint struct {
+	PV       float64 `json:"pv"`
+	Gain     float64 `json:"gain"` // %/%
+	Readings int     `json:"readings"`
 }
 
 // Frame is the newest frame of a loop.
@@ -174,7 +184,10 @@ func newLoopView(name string, v *detect.View) LoopView {
 	x := LoopView{Loop: name, State: v.State, Why: v.Why, BlindSpots: v.BlindSpots, Open: v.Open,
 		NoisePV: known(v.NoisePV), TimeScaleS: known(v.TimeScaleS), PeriodS: known(v.PeriodS),
 		Gain: known(v.GainPct), GainLow: known(v.GainLow), GainHigh: known(v.GainHigh),
-		ResetS: known(v.ResetS), ResetLow: known(v.ResetLow), ResetHigh: known(v.ResetHigh)}
+		ResetS: known(v.ResetS), ResetLow: known(v.ResetLow), ResetHigh: known(v.ResetHigh), LagS: known(v.LagS), TuningNote: v.TuningNote}
+	for _, p := range v.Schedule {
+		x.Schedule = append(x.Schedule, GainPoint{p.PV, p.Gain, p.N})
+	}
 	if v.SampleS > 0 {
 		x.SampleS = known(v.SampleS)
 	}

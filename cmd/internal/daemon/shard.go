@@ -159,7 +159,7 @@ func (s *shard) view(id collector.LoopID) (v detect.View, ok bool) {
 	if s.lane.pace[s.lane.at(id)].late {
 		n := math.NaN()
 		return detect.View{State: detect.NoData, Why: "catching up", NoisePV: n, TimeScaleS: n, PeriodS: n,
-			GainPct: n, GainLow: n, GainHigh: n, ResetS: n, ResetLow: n, ResetHigh: n}, true
+			GainPct: n, GainLow: n, GainHigh: n, ResetS: n, ResetLow: n, ResetHigh: n, LagS: n}, true
 	}
 	return w.View(), true
 }
