@@ -75,6 +75,7 @@ type cycleBank struct {
 	N       uint8        // half-cycles in the ring
 	Head    uint8        // where the next goes
 	Conf    uint8        // half-cycles running at which growth was seen
+	Kept    uint8        // half-cycles with a lasting swing more than without
 	Zero    float64      // s, last zero crossing
 	Cross   float64      // s, the one that began the running half-cycle
 	Usual   num.Quantile // 75 % quantile of the peaks while nothing is suspected, %
@@ -82,10 +83,11 @@ type cycleBank struct {
 }
 
 func (b *cycleBank) reset() {
-	b.Warm, b.N, b.Sign, b.Conf, b.Head = 0, 0, 0, 0, 0
+	b.Warm = 0
+	b.drop()
 }
 
-func (b *cycleBank) drop() { b.N, b.Sign, b.Conf, b.Head = 0, 0, 0, 0 }
+func (b *cycleBank) drop() { b.N, b.Sign, b.Conf, b.Kept, b.Head = 0, 0, 0, 0, 0 }
 
 // at gives the i-th newest half-cycle, 0 the newest.
 func (b *cycleBank) at(i int) halfCycle {

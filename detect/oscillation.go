@@ -56,17 +56,18 @@ const growConfirm = 3
 func (w *Watch) judgeCycles(level int, b *cycleBank) {
 	s := &w.s
 	o := &s.Osc
+	w.countKept(level, b)
 	period, regular, ok := b.lengths(8)
 	in := ok && period > bankLowP && period < bankHighP
 	var st ringStat
-	watched := o.Grow || o.Sus || b.Conf > 0 || s.Track.On && int(s.Track.Bank) == level
+	watched := o.Grow || o.Sus || b.Conf > 0 || b.Kept > 0 || s.Track.On && int(s.Track.Bank) == level
 	if in && (watched || regular > 2.5) {
 		st, _ = b.stat(level, 8)
 	}
 	if !in && w.violent(level, b) {
 		st, in = b.stat(level, min(int(b.N), 5))
 	}
-	suspect := b.Conf > 0 || o.Grow || o.Sus
+	suspect := b.Conf > 0 || b.Kept > 0 || o.Grow || o.Sus
 	// Noise teaches the usual size, a regular cycle hardly: a slow growth must not
 	// teach itself.
 	if !suspect {
@@ -248,7 +249,11 @@ func (w *Watch) beginOsc(level int, b *cycleBank, back int) {
 	}
 	keep := *o
 	if keep.P > 0 && keep.Grow && math.Abs(math.Log(keep.P/(2*len/float64(back)*w.levelS(level)))) < 0.2 {
-		o.Bank, o.Bad = uint8(level), 0 // the same cycle, seen by the neighbour: what is known of it stands
+		// The same cycle, seen by the neighbour: what is known of it stands, its track too.
+		if k := &w.s.Track; k.On && k.Bank == o.Bank {
+			k.Bank = uint8(level)
+		}
+		o.Bank, o.Bad = uint8(level), 0
 		return
 	}
 	*o = oscState{Grow: keep.Grow, Sus: keep.Sus, Bank: uint8(level), Since: b.Zero - len*w.levelS(level),
@@ -268,16 +273,24 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 	sigma := s.Noise.sigma()
 	usual := b.Usual.Value()
 	known := w.usualKnown(b) && b.Usual.N >= 60
-	if st.amp < max(1.5*sigma, 0.3) {
-		return
-	}
 	period := st.period * w.levelS(level)
 	if w.scheduled(b, period) {
 		return
 	}
-	n := 18
+	if b.Kept >= keptRaise {
+		o.Sus = true
+		w.beginOsc(level, b, keptHalves)
+		return
+	}
+	if st.amp < max(1.5*sigma, 0.3) {
+		return
+	}
+	n := 18 // the plainer the cycle the fewer of its half-cycles tell it
 	if q, ok := b.stat(level, 14); ok && q.regular > 7 && q.least > 0.25 {
 		n = 14
+	}
+	if q, ok := b.stat(level, 11); ok && q.regular > 10*w.strict && q.least > 0.5 && known && q.amp > max(4*usual, 4*sigma) {
+		n = 11
 	}
 	q, ok := b.stat(level, n)
 	if ok && st.period*float64(int(1)<<level) > 12 && s.Noise.known() {
@@ -286,7 +299,8 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 		if (q.regular > 5*w.strict && q.least > 0.4 && big && (!known || q.amp > 1.6*usual) ||
 			q.regular > 4*w.strict && q.least > 0.3 && own ||
 			q.regular > 4*w.strict && q.least > 0.3 && !known && q.amp > max(1.2, 5*sigma) ||
-			q.regular > 7*w.strict && q.least > 0.4 && !known && q.amp > max(0.45, 4*sigma)) && w.steadySP(float64(n)/2*period) {
+			q.regular > 7*w.strict && q.least > 0.4 && !known && q.amp > max(0.45, 4*sigma)) &&
+			(w.steadySP(float64(n)/2*period) || q.regular > 8*w.strict && period < keptSlow) { // steps of SP now and then cannot beat such time
 			o.Sus = true
 			w.beginOsc(level, b, n)
 			return

@@ -33,6 +33,8 @@ type sharedGroup struct {
 	Cause  Cause
 	Root   string
 	Period float64
+	Next   string // a root and cause that differ from what is said, and slots running with them
+	NextN  int
 }
 
 // Slots in which a pair must keep its phase before it is said, and slots after
@@ -41,6 +43,9 @@ const (
 	sharedSlots = 2
 	sharedGone  = 6
 )
+
+// Periods nearer than this, as a logarithm, may be one: what decides is the phase.
+const samePeriod = 0.12
 
 func newShared(loops []*configs.Loop) Site {
 	return &shared{loops: loops, m: sharedMemory{Pairs: map[string]int{}}}
@@ -60,10 +65,14 @@ func (s *shared) Load(b []byte) error {
 }
 
 // together: methods section 6; independent phases give a mean resultant length
-// over 0.85 of 14 crossings about once in 25,000.
-func together(a, b *Evidence) bool {
-	tol, need, kept := 0.12, 14, 0.85
-	if a.Regular > 8 && b.Regular > 8 {
+// over 0.85 of 14 crossings about once in 25,000. A pair that was together stays it
+// while its phase is kept by more than half: a valve that slips sets it anew.
+func together(a, b *Evidence, were bool) bool {
+	tol, need, kept := samePeriod, 14, 0.85
+	switch {
+	case were:
+		kept = 0.6
+	case a.Regular > 8 && b.Regular > 8:
 		tol, kept = 0.03, 0.92
 	}
 	if math.Abs(math.Log(a.PeriodS/b.PeriodS)) > tol {
@@ -106,10 +115,10 @@ func (s *shared) Judge(end int64, live []SiteEvidence, emit func(*Finding)) {
 				break
 			}
 			a, b := min(i, j), max(i, j)
-			if !together(&live[a].Evidence, &live[b].Evidence) {
+			k := s.loops[live[a].ID].Name + "\x00" + s.loops[live[b].ID].Name
+			if !together(&live[a].Evidence, &live[b].Evidence, s.m.Pairs[k] >= sharedSlots) {
 				continue
 			}
-			k := s.loops[live[a].ID].Name + "\x00" + s.loops[live[b].ID].Name
 			pairs[k] = s.m.Pairs[k] + 1
 			if pairs[k] >= sharedSlots {
 				root[find(b)] = find(a)
@@ -134,34 +143,50 @@ func (s *shared) Judge(end int64, live []SiteEvidence, emit func(*Finding)) {
 func (s *shared) group(live []SiteEvidence, g []int) sharedGroup {
 	var out sharedGroup
 	out.Since = math.MaxInt64
-	best, second, sticking := -1.0, -1.0, false
+	best, second := -1, -1
 	for _, i := range g {
 		e := &live[i]
-		out.Loops = append(out.Loops, s.loops[e.ID].Name)
+		l := s.loops[e.ID]
+		out.Loops = append(out.Loops, l.Name)
 		out.Since = min(out.Since, e.Since)
 		out.Period += e.PeriodS / float64(len(g))
-		if e.Shape > best {
-			best, second = e.Shape, best
-			out.Root, sticking = s.loops[e.ID].Name, e.Cause == ValveSticking
-		} else if e.Shape > second {
-			second = e.Shape
+		switch {
+		case best < 0 || e.Shape > live[best].Shape || live[best].Shape != live[best].Shape:
+			best, second = i, best
+		case second < 0 || e.Shape > live[second].Shape || live[second].Shape != live[second].Shape:
+			second = i
 		}
-		if e.Growing && (e.Cause == ResetTooShort || e.Cause == GainTooHigh) {
+		if e.Growing && (e.Cause == ResetTooShort || e.Cause == GainTooHigh) && !s.driven(l.Name, live, g) {
 			// A loop that grew by its own tuning carries the others with it.
-			out.Cause, out.Key = e.Cause, s.loops[e.ID].Name
+			out.Cause, out.Key = e.Cause, l.Name
 		}
 	}
+	x, y := &live[best], &live[second]
+	// A tie of shapes is broken by how far PV moves in jumps: every process between
+	// the root and a follower smooths them (Thornhill 2005).
+	leads := x.Shape > y.Shape+0.08 || !(y.Shape >= 0) || x.Jumps > y.Jumps+0.08
 	switch {
 	case out.Key != "":
 		out.Root = out.Key
-	case best > 0.68 && best > second+0.08 && sticking:
+	case x.Shape > 0.68 && leads && x.Cause == ValveSticking:
+		out.Root = s.loops[x.ID].Name
 		out.Cause, out.Key = ValveSticking, out.Root
-	case best < 0.52:
-		out.Root, out.Cause, out.Key = "", OutsideDisturbance, out.Loops[0]
+	case x.Shape >= 0 && x.Shape < 0.52:
+		out.Cause, out.Key = OutsideDisturbance, out.Loops[0]
 	default:
-		out.Root, out.Cause, out.Key = "", Undetermined, out.Loops[0]
+		out.Cause, out.Key = Undetermined, out.Loops[0]
 	}
 	return out
+}
+
+// driven: another loop of the group sets the set point of this one.
+func (s *shared) driven(name string, live []SiteEvidence, g []int) bool {
+	for _, i := range g {
+		if s.loops[live[i].ID].Inner == name {
+			return true
+		}
+	}
+	return false
 }
 
 func overlap(a, b []string) int {
@@ -174,18 +199,30 @@ func overlap(a, b []string) int {
 	return n
 }
 
+// same: both hold two loops, or one that cycles with one period in both.
+func (g *sharedGroup) same(o *sharedGroup) bool {
+	n := overlap(g.Loops, o.Loops)
+	return n >= 2 || n == 1 && math.Abs(math.Log(g.Period/o.Period)) < samePeriod
+}
+
 func (s *shared) tell(end int64, seen []sharedGroup, emit func(*Finding)) {
 	var keep []sharedGroup
 	taken := make([]bool, len(seen))
 	for _, old := range s.m.Groups {
-		at := -1
+		if slices.ContainsFunc(keep, func(k sharedGroup) bool { return k.same(&old) }) {
+			f := s.finding(end, &old, Cleared)
+			f.Reason = Rejudged // two groups grew into one
+			emit(f)
+			continue
+		}
+		now := sharedGroup{Since: old.Since}
 		for i := range seen {
-			if !taken[i] && overlap(old.Loops, seen[i].Loops) >= 2 {
-				at = i
-				break
+			if !taken[i] && old.same(&seen[i]) {
+				taken[i] = true
+				now.join(&seen[i])
 			}
 		}
-		if at < 0 {
+		if now.Loops == nil {
 			old.Gone++
 			if old.Gone >= sharedGone {
 				emit(s.finding(end, &old, Cleared))
@@ -194,21 +231,20 @@ func (s *shared) tell(end int64, seen []sharedGroup, emit func(*Finding)) {
 			keep = append(keep, old)
 			continue
 		}
-		taken[at] = true
-		now := seen[at]
 		more := overlap(old.Loops, now.Loops) < len(now.Loops)
-		cause := now.Cause != old.Cause && now.Cause != Undetermined
 		for _, l := range old.Loops { // a loop that pauses stays listed
 			if !slices.Contains(now.Loops, l) {
 				now.Loops = append(now.Loops, l)
 			}
 		}
 		slices.Sort(now.Loops)
-		now.Key, now.Since = old.Key, min(old.Since, now.Since)
-		if !cause {
-			now.Cause, now.Root = old.Cause, old.Root
-		}
-		if more || cause {
+		news := now.follow(&old)
+		if now.Key != old.Key {
+			f := s.finding(end, &old, Cleared)
+			f.Reason = Rejudged // it is about another loop from now on
+			emit(f)
+			emit(s.finding(end, &now, Raised))
+		} else if more || news {
 			emit(s.finding(end, &now, Updated))
 		}
 		keep = append(keep, now)
@@ -220,6 +256,43 @@ func (s *shared) tell(end int64, seen []sharedGroup, emit func(*Finding)) {
 		}
 	}
 	s.m.Groups = keep
+}
+
+// join adds what was seen of one group in parts; the part with a root tells it.
+func (g *sharedGroup) join(o *sharedGroup) {
+	if g.Loops == nil || g.Root == "" && o.Root != "" {
+		g.Cause, g.Root, g.Key, g.Period = o.Cause, o.Root, o.Key, o.Period
+	}
+	g.Loops = append(g.Loops, o.Loops...)
+	g.Since = min(g.Since, o.Since)
+}
+
+// follow takes over what was said of the group before. A root must be seen for some
+// cycles before it is named, and for more before it takes the place of a cause named
+// already; no cause found is no news. It reports whether cause or root is new.
+func (g *sharedGroup) follow(old *sharedGroup) (news bool) {
+	if g.Cause != Undetermined && (g.Cause != old.Cause || g.Root != old.Root) {
+		cycles := 0.0
+		switch {
+		case old.Cause != Undetermined:
+			cycles = 4
+		case g.Root != "":
+			cycles = 2
+		}
+		next, n := g.Root+" "+string(g.Cause), 1
+		if old.Next == next {
+			n = old.NextN + 1
+		}
+		if float64(n)*SiteSlotMs/1000 >= cycles*g.Period {
+			if g.Root == "" {
+				g.Key = old.Key
+			}
+			return true
+		}
+		g.Next, g.NextN = next, n
+	}
+	g.Key, g.Cause, g.Root = old.Key, old.Cause, old.Root
+	return false
 }
 
 func (s *shared) finding(end int64, g *sharedGroup, e Event) *Finding {

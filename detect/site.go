@@ -26,6 +26,7 @@ type Evidence struct {
 	Amp       float64 // %
 	OverUsual float64 // amplitude over the loop's own usual, 0 unknown
 	Shape     float64 // sine-triangle index; NaN unknown
+	Jumps     float64 // share of PV's travel in the busiest fifth of the cycle; 0 unknown
 	Since     int64   // ms UTC
 	Cause     Cause
 	N         int
@@ -58,7 +59,11 @@ func (w *Watch) TakeEvidence() (Evidence, bool) {
 		if w.led() { // it follows: not its own growth, whatever it looks like
 			e.Growing, e.Cause = false, Undetermined
 		}
-		e.Shape = w.stickIndex(w.shapes())
+		sh := w.shapes()
+		e.Shape = w.stickIndex(sh)
+		if sh.stick == sh.stick {
+			e.Jumps = sh.stick
+		}
 		if w.usualKnown(b) {
 			e.OverUsual = o.Amp / b.Usual.Value()
 		}

@@ -202,7 +202,7 @@ func aboutData(k detect.Kind) bool {
 
 func score(s *scenario, h *listener, watches []*detect.Watch, res *Result) {
 	t := &s.truth
-	if t.cycles && t.unit > 0 && len(s.rigs) == 1 { // the swing of a valve is known only from the run
+	if t.cycles && t.unit > 0 && t.member <= 0 { // the swing of a valve, of a group's root too, is known only from the run
 		if l := s.rigs[0]; l.turns > 10 {
 			t.unit = math.Max(2*(s.duration-t.onset)/float64(l.turns), l.pu)
 		}
