@@ -248,7 +248,11 @@ func (b *batch) digestSections(since int64, word string) []Section {
 		}
 		out = append(out, Section{"Most often in trouble", ls})
 	}
-	if ls := b.retunedLines(); len(ls) > 0 {
+	ls, err := b.retunedLines()
+	if err != nil {
+		d.o.Log.Error("desk: changes of tuning are left out of the digest", "err", err)
+	}
+	if len(ls) > 0 {
 		out = append(out, Section{"Since the tuning was changed", ls[:min(len(ls), shownLoops)]})
 	}
 	if len(acks) > 0 {

@@ -38,6 +38,9 @@ func (d *Desk) prune(now time.Time) error {
 				return err
 			}
 		}
+		if err := b.dropOldOutcomes(); err != nil {
+			return err
+		}
 		return b.dropHeard(before)
 	})
 	if err == nil && gone > 0 {

@@ -41,6 +41,7 @@ type way struct {
 type SenderState struct {
 	Name    string            `json:"name"`
 	Queued  int               `json:"queued"`
+	Oldest  int64             `json:"oldest_queued,omitempty"` // when the oldest of them was written down
 	Sent    uint64            `json:"sent"`
 	Failed  map[Reason]uint64 `json:"failed,omitempty"` // attempts
 	Dropped uint64            `json:"dropped"`          // given up
@@ -63,6 +64,9 @@ func (d *Desk) Senders() []SenderState {
 		for _, x := range d.mem.queue {
 			if x.Sender == c.Name {
 				s.Queued++
+				if s.Oldest == 0 || x.Written < s.Oldest {
+					s.Oldest = x.Written
+				}
 			}
 		}
 		out = append(out, s)

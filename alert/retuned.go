@@ -1,18 +1,14 @@
 package alert
 
 import (
-	"cmp"
 	"encoding/json"
 	"fmt"
-	"math"
-	"slices"
-	"strings"
 	"time"
 
 	"midwatch/detect"
 )
 
-// What is compared around a change of tuning: as long before as after it, within
+// What is counted around a change of tuning: as long before as after it, within
 // bounds. Less than the least says nothing of loops that are upset once a day.
 const (
 	retunedShown = 28 * day // since the change, for which it is told
@@ -20,55 +16,55 @@ const (
 	retunedLeast = 3 * day
 )
 
-// retuned is a loop whose tuning was changed: from the first change of a session
-// to its last, data time.
-type retuned struct {
-	loop        string
-	first, last int64
-}
-
 // trouble is what came in a span of time.
 type trouble struct {
 	comings   int     // episodes raised, or back
 	amplitude float64 // largest, % of span; 0: none was given
 }
 
-// retunedLines says, a line for each loop whose tuning was changed lately, whether
-// it does better or worse since.
-func (b *batch) retunedLines() []string {
+// retunedLines says, a line for each loop whose tuning was changed lately, what
+// came of it: the verdict of the comparison of its trends, and beside it, as plain
+// counts, the troubles before and after.
+func (b *batch) retunedLines() ([]string, error) {
 	d := b.d
 	now := d.mem.newest
-	var changed []retuned
+	all, err := sessions(b.tx, now-retunedShown)
+	if err != nil {
+		return nil, err
+	}
 	byLoop := map[string][]*Episode{}
 	for _, e := range b.episodesSince(now - retunedShown - retunedMost - 2*day) {
-		switch {
-		case e.Into != "":
-		case e.Family == familyTuning && e.Last >= now-retunedShown:
-			changed = append(changed, retuned{e.Subject.Loop, e.First, e.Last})
-		case e.Family == familySwing, e.Family == familyLimit, e.Family == familySlow:
+		if e.Into == "" && (e.Family == familySwing || e.Family == familyLimit || e.Family == familySlow) {
 			for _, l := range e.Loops() {
 				byLoop[l] = append(byLoop[l], e)
 			}
 		}
 	}
-	// The newest session of each loop.
-	slices.SortFunc(changed, func(x, y retuned) int {
-		return cmp.Or(strings.Compare(x.loop, y.loop), cmp.Compare(y.last, x.last))
-	})
-	changed = slices.CompactFunc(changed, func(x, y retuned) bool { return x.loop == y.loop })
 	var out []string
-	for _, c := range changed {
-		head := clean(c.loop) + ", changed " + short(c.last, d.set.Zone) + ": "
-		span := min(now-c.last, c.first-d.mem.began, retunedMost)
-		if span < retunedLeast {
-			out = append(out, head+"not enough data yet")
-			continue
+	for i, c := range all {
+		if i+1 < len(all) && all[i+1].Loop == c.Loop {
+			continue // the newest session of each loop
 		}
-		before := b.troubles(byLoop[c.loop], c.loop, c.first-span, c.first, now)
-		after := b.troubles(byLoop[c.loop], c.loop, c.last, c.last+span, now)
-		out = append(out, head+compare(before, after, time.Duration(span)*time.Millisecond))
+		line := clean(c.Loop) + ", changed " + short(c.Last, d.set.Zone) + ": " + c.Outcome.words()
+		if span := min(now-c.Last, c.First-max(c.Since, d.mem.began), retunedMost); span >= retunedLeast {
+			before := b.troubles(byLoop[c.Loop], c.Loop, c.First-span, c.First, now)
+			after := b.troubles(byLoop[c.Loop], c.Loop, c.Last, c.Last+span, now)
+			line += "; " + counted(before, after, time.Duration(span)*time.Millisecond)
+		}
+		out = append(out, line)
 	}
-	return out
+	return out, nil
+}
+
+// words is the verdict as the digest says it.
+func (o Outcome) words() string {
+	switch {
+	case o.At == 0:
+		return "not compared yet"
+	case o.Settled:
+		return clean(o.Verdict)
+	}
+	return "so far, " + clean(o.Verdict)
 }
 
 // episodesSince gives episodes first raised since at, and all in memory.
@@ -123,12 +119,11 @@ func (b *batch) troubles(es []*Episode, loop string, from, to, now int64) (t tro
 	return t
 }
 
-// compare says it in words. Amplitudes within a fifth are alike.
-func compare(before, after trouble, span time.Duration) string {
+// counted says it in words.
+func counted(before, after trouble, span time.Duration) string {
 	if before.comings+after.comings == 0 {
-		return "no trouble in " + duration(span) + " before or after, nothing to compare"
+		return "no trouble in " + duration(span) + " before or after"
 	}
-	sign := cmp.Compare(after.comings, before.comings)
 	word := "troubles"
 	if before.comings == 1 {
 		word = "trouble"
@@ -136,13 +131,6 @@ func compare(before, after trouble, span time.Duration) string {
 	s := fmt.Sprintf("%d %s in %s before, %d in as long after", before.comings, word, duration(span), after.comings)
 	if before.amplitude > 0 && after.amplitude > 0 {
 		s += fmt.Sprintf("; largest %s %% of span before, %s %% after", detect.AppendSig(nil, before.amplitude), detect.AppendSig(nil, after.amplitude))
-		if r := math.Log(after.amplitude / before.amplitude); math.Abs(r) > math.Log(1.25) {
-			if by := cmp.Compare(r, 0); sign == 0 || sign == by {
-				sign = by
-			} else {
-				return s + ": fewer and larger, or more and smaller; neither better nor worse"
-			}
-		}
 	}
-	return s + ": " + map[int]string{-1: "better", 0: "much the same", 1: "worse"}[sign]
+	return s
 }

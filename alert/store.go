@@ -49,6 +49,8 @@ const (
 	bucketHidden   = "desk.hidden"   // loop -> hidden
 	bucketShelves  = "desk.shelves"  // loop -> Shelf
 	bucketLinks    = "desk.links"    // id 0 step 0 sender -> when the link was used
+	bucketNotes    = "desk.notes"    // loop 0 number -> Remark
+	bucketOutcomes = "desk.outcomes" // loop 0 onset of a session -> Outcome
 	bucketMeta     = "desk.meta"     // the rest
 )
 

@@ -46,6 +46,7 @@ type Page struct {
 	TokensFile        string
 	URL               string // how people reach the page, for links
 	Prefix            string // path prefix behind a proxy
+	Shifts            []int  // when shifts begin, minutes of the day, site time, ascending
 }
 
 // Source is one source of tags; exactly one of OPCUA and MQTT is set.

@@ -2,6 +2,7 @@ package configs
 
 import (
 	"fmt"
+	"slices"
 	"strconv"
 	"strings"
 	"time"
@@ -195,6 +196,36 @@ type manyValue interface {
 	reset()
 	texts() []string
 }
+
+// shiftsValue is a list of times of day, kept in ascending order.
+type shiftsValue struct{ p *[]int }
+
+func (v shiftsValue) parse(s string) *mistake {
+	for one := range strings.SplitSeq(s, ",") {
+		one = strings.TrimSpace(one)
+		t, m := parseClock(one)
+		if m != nil {
+			return m
+		}
+		if t == 24*60 {
+			return wrong("write 00:00", "24:00 is the next day")
+		}
+		at, twice := slices.BinarySearch(*v.p, t)
+		if twice {
+			return wrong("name every shift once", "a shift begins at %s twice", one)
+		}
+		*v.p = slices.Insert(*v.p, at, t)
+	}
+	return nil
+}
+func (v shiftsValue) reset() { *v.p = nil }
+func (v shiftsValue) texts() (out []string) {
+	for _, t := range *v.p {
+		out = append(out, fmt.Sprintf("%02d:%02d", t/60, t%60))
+	}
+	return out
+}
+func (v shiftsValue) text() string { return strings.Join(v.texts(), ", ") }
 
 type listValue struct {
 	p     *[]string

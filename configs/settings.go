@@ -38,11 +38,12 @@ func settings(c *Config) group {
 		{key: "page", help: "the page and its HTTP interface", open: func() group {
 			return group{
 				{key: "listen", def: "127.0.0.1:8420", help: "host:port; beyond this machine only with cert_file, key_file and tokens_file", value: textValue{&c.Page.Listen}},
-				{key: "cert_file", path: existing, help: "certificate, PEM", value: textValue{&c.Page.CertFile}},
+				{key: "cert_file", path: existing, help: "certificate, PEM; a renewed one is taken without a restart", value: textValue{&c.Page.CertFile}},
 				{key: "key_file", path: secretPath, help: "private key, PEM", value: textValue{&c.Page.KeyFile}},
-				{key: "tokens_file", path: secretPath, help: "tokens of those who may see the page", value: textValue{&c.Page.TokensFile}},
+				{key: "tokens_file", path: secretPath, help: "those who may see the page, a line each: name,role,sha256,expires; role is view or act, sha256 that of the token, expires a day; who signed in stays so for 30 days, also over a restart", value: textValue{&c.Page.TokensFile}},
 				{key: "url", help: "how people reach the page; for links in messages", value: textValue{&c.Page.URL}},
 				{key: "prefix", help: "path in front of all pages behind a proxy, such as /midwatch", value: textValue{&c.Page.Prefix}},
+				{key: "shifts", def: "06:00, 14:00, 22:00", help: `when shifts begin, site time, such as ["07:00", "19:00"]; the list of loops offers this shift and the one before`, value: shiftsValue{&c.Page.Shifts}},
 			}
 		}},
 		{key: "sources", help: "where the tags come from; each has a name and one kind", list: &list{

@@ -16,6 +16,9 @@ const recRing = 6
 // areaRing is how many set-point steps are remembered with their residence times.
 const areaRing = 5
 
+// recoveredAt is the share of its peak at which a deviation is over.
+const recoveredAt = 0.12
+
 // recovery is one finished event.
 type recovery struct {
 	At    float32 // s, end
@@ -126,7 +129,7 @@ func stepRecovery(w *Watch) {
 	if x > r.Peak {
 		r.Peak, r.TPeak = x, in.t
 	}
-	if x < 0.12*r.Peak || x < 0.7*sigma && x < 0.3*r.Peak {
+	if x < recoveredAt*r.Peak || x < 0.7*sigma && x < 0.3*r.Peak {
 		w.endRecovery(thr)
 		r.On = false
 	}

@@ -37,6 +37,7 @@ type View struct {
 	GainLow, GainHigh   float64
 	ResetS              float64 // s
 	ResetLow, ResetHigh float64
+	TagGain, TagReset   float64     // last read from tags, %/% and s; 0: not read
 	LagS                float64     // s, of the controller beside its law: OP logged late or PV filtered; NaN: none seen
 	Schedule            []GainPoint // gain over PV where the gain goes with PV; nil: it does not
 	TuningNote          string      // what of the loop list contradicts the tuning in service; empty: nothing
@@ -63,6 +64,7 @@ func (w *Watch) View() View {
 		v.PeriodS = s.Osc.P
 	}
 	v.GainPct, v.GainLow, v.GainHigh, v.ResetS, v.ResetLow, v.ResetHigh = w.tuningRange()
+	v.TagGain, v.TagReset = float64(s.Change.TagGain), float64(s.Change.TagReset)
 	v.TuningNote, v.Schedule = w.tuningNote(), w.schedulePoints()
 	if l := w.lag(); l > 0 {
 		v.LagS = l

@@ -60,6 +60,9 @@ type Options struct {
 	// on behind it, and a window that ends before it is reported.
 	KnownFlush uint32
 	ReadOnly   bool // for programs that look while no daemon runs
+	// Beside, with ReadOnly, leaves out the slices that a running program writes:
+	// the sealed ones may be read beside it.
+	Beside bool
 	// Problem is told of problems as they are met, from any goroutine that uses
 	// the window. It must not block, nor call anything but Stats.
 	Problem func(Problem)

@@ -146,6 +146,9 @@ func (w *Window) openOne(path string, newest bool) error {
 		w.tell(Problem{Damaged, path, fmt.Sprintf("trends of one slice cannot be read: %v", err)})
 		return nil
 	}
+	if errors.Is(err, ErrInUse) && w.opt.ReadOnly && w.opt.Beside {
+		return nil
+	}
 	if err != nil {
 		return err
 	}
@@ -403,6 +406,10 @@ func (w *Window) Stats() Stats {
 	st.Dropped, st.Unregistered = w.dropped.Load(), w.unregistered.Load()
 	return st
 }
+
+// DiskFree is what may still be written to the file system of the window, bytes.
+// Where that cannot be known it is [math.MaxInt64].
+func (w *Window) DiskFree() (int64, error) { return w.opt.files.free(w.dir) }
 
 func totalSize(all []*slice) (n int64) {
 	for _, s := range all {

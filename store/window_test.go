@@ -386,6 +386,28 @@ func TestInUseAndReadOnly(t *testing.T) {
 	}
 }
 
+// Beside a window that is written, the sealed slices can be read; the one in work
+// is left out, and the writer goes on.
+func TestSealedSlicesBesideTheWriter(t *testing.T) {
+	dir := t.TempDir()
+	w := open(t, dir, Options{SliceFlushes: 2, ChunkFlushes: 1}, loopList(1))
+	for i := range int64(9) {
+		w.Append(0, plain(1000*(i+1), float32(i)))
+		flush(t, w)
+	}
+	r := open(t, dir, Options{ReadOnly: true, Beside: true}, nil)
+	got := read(t, r, loopName(0), 0, 20000)
+	if len(got) < 4 || len(got) > 8 || got[0].Time != 1000 {
+		t.Errorf("%d frames beside the writer, want those of the sealed slices", len(got))
+	}
+	w.Append(0, plain(10000, 9))
+	flush(t, w)
+	if err := r.Close(); err != nil {
+		t.Error(err)
+	}
+	checkAll(t, w)
+}
+
 func TestKnownFlush(t *testing.T) {
 	dir := t.TempDir()
 	w := open(t, dir, Options{}, loopList(1))

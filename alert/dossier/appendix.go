@@ -11,7 +11,7 @@ import (
 // appendix holds indices, methods and settings.
 func (s *series) appendix(in *Input, cs []Cycle, others []Candidate) Appendix {
 	a := Appendix{Others: others, Methods: methods, Sums: in.Sums, Version: in.Version, Engine: detect.Engine}
-	a.Indices = s.indices(cs)
+	a.Indices = s.indices(in, cs)
 	budget := in.Detect.NuisancePerLoopYear
 	if budget == 0 {
 		budget = 0.1
@@ -22,12 +22,12 @@ func (s *series) appendix(in *Input, cs []Cycle, others []Candidate) Appendix {
 		say("watch", "cycles and readings", "by a watch begun at the beginning of the span: what the running watch had learned before is not in them"),
 		say("episodes", "episodes", map[bool]string{true: "judged anew over the span, by that watch", false: "as told by the watch that ran"}[in.Findings == nil]),
 		say("gates", "gates of a fit", "2 moves over 10 noise levels and 5 times the usual wandering, both directions agreeing within 30 %, R2 0.9, tuning within a factor of 2.25 over the 90 % range"),
-		say("blocks", "before and after", fmt.Sprintf("at least %d blocks on each side, a week at most; Welch's test on logarithms, 90 %% range", leastBlocks)))
+		say("blocks", "before and after", fmt.Sprintf("at least %d blocks on each side, two weeks at most; Welch's test on logarithms, 90 %% range", leastBlocks)))
 	return a
 }
 
 // indices are those of published papers that are made of a cycle.
-func (s *series) indices(cs []Cycle) []Fact {
+func (s *series) indices(in *Input, cs []Cycle) []Fact {
 	best := -1
 	for i, c := range cs {
 		if best < 0 || c.to-c.from > cs[best].to-cs[best].from {
@@ -43,7 +43,7 @@ func (s *series) indices(cs []Cycle) []Fact {
 	a, b := max(0, s.slot(c.from)), min(s.n(), s.slot(c.to))
 	// Sixty periods at most: the index is for one regime.
 	b = min(b, a+int(60*c.periodS/s.dt))
-	where := "over the cycle since " + c.From
+	where := "over the cycle since " + in.at(c.from).Format("2 Jan 2006 15:04")
 	acf, step := s.correlation(a, b, c.periodS)
 	reg, per, n := regularity(acf, step)
 	out := []Fact{}
@@ -100,6 +100,9 @@ var methods = []Method{
 	{"margins", "Ms, gain and phase margin from the exact frequency response, dead time kept, half a scan added", "Åström & Hägglund 2006, Advanced PID Control"},
 	{"responses", "simulated step by step with scan, limits and held integral", "own"},
 	{"sticking band", "OP from reversal to reversal: apparent; a standard test differs", "ANSI/ISA-75.25.01"},
+	{"play by the model", "models answering OP through plays of several widths; profile likelihood over the width", "backlash as the model of the final element: Choudhury, Thornhill & Shah 2005, Control Eng. Practice 13, 641"},
+	{"P on error or PV", "jump of OP at set-point steps over gain times step: the set-point weight", "Åström & Hägglund 2006, Advanced PID Control"},
+	{"anti-wind-up", "how long OP stays at its limit after the error has changed sign", "own"},
 	{"before and after", "logarithms of rms deviation over blocks longer than the loop's memory, Welch's test; sides must be alike in set-point movement and load", "Welch 1947, Biometrika 34, 28"},
 	{"idle index, area index", "see recoveries", "Hägglund 1999, Control Eng. Practice 7, 1505; Visioli 2006, Ind. Eng. Chem. Res. 45, 2741"},
 }
@@ -132,7 +135,6 @@ func identity(l *configs.Loop) []Fact {
 		say("tuning", "tuning on the list", l.DescribeTuning()),
 		say("action", "action", or(l.Action.String(), "not given")),
 		say("form", "form", l.Form.String()),
-		say("error_or_pv", "P and D on error or PV", "not in the list: read it on the faceplate; P on error and D on PV is assumed here"),
 		say("filter", "filter on PV", orSeconds(l.PVFilterS)),
 		say("scan", "controller interval", orSeconds(l.ScanS)),
 		say("process", "process", or(l.Process.String(), "not given: taken from the data where they show it")),

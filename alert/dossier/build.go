@@ -1,11 +1,8 @@
 package dossier
 
 import (
-	"cmp"
 	"errors"
 	"fmt"
-	"slices"
-	"strings"
 	"time"
 
 	"midwatch/collector"
@@ -46,7 +43,7 @@ func Build(in Input) (*Dossier, error) {
 	if s.good == 0 {
 		return nil, fmt.Errorf("loop %s: %d frames, none with PV and SP; hint: see its tags with midwatch check --connect", l.Name, len(frames))
 	}
-	w := look(&in, frames)
+	w := look(l, in.Detect, frames)
 	findings := in.Findings
 	if findings == nil {
 		findings = w.findings
@@ -65,6 +62,7 @@ func Build(in Input) (*Dossier, error) {
 		d.Made = detect.FormatTime(in.Made.UnixMilli())
 	}
 	d.Span = s.spanOf(first, last)
+	d.now, d.known = inService(l, w)
 	d.Identity = identity(l)
 	for _, p := range in.Partners {
 		p.Recovery = none("not known")
@@ -81,9 +79,15 @@ func Build(in Input) (*Dossier, error) {
 	d.Recoveries, d.Conduct = s.recoveries(ev), s.conduct(l)
 	d.Element, d.ByHand = s.element(l, eps, d.Cycles), byHand(l, eps)
 	cs := changes(l, frames, eps, w.readings)
-	d.Tuning, d.Scheduled = s.tuning(&in, w, cs, eps), s.scheduled(w)
+	retuned := 0 // slot
+	if n := len(cs); n > 0 {
+		retuned = s.slot(cs[n-1].at)
+	}
+	d.Identity = append(d.Identity, s.structure(l, d.now, d.known, retuned)...)
+	d.Tuning, d.Scheduled = s.tuning(&in, w, cs), s.scheduled(w)
 	var others []Candidate
 	d.Process, d.fitted = s.process(l, ev)
+	d.Element = append(d.Element, s.playFact(d.fitted, ev))
 	d.Advice, others = s.advise(&in, d.fitted, w, ev, d.Cycles)
 	for i, c := range cs {
 		a, b := first, last
@@ -93,9 +97,12 @@ func Build(in Input) (*Dossier, error) {
 		if i+1 < len(cs) {
 			b = cs[i+1].at
 		}
-		x := s.compare(c.at, a, b, d.Cycles)
-		x.Before, x.After = c.before, c.after
+		x := s.compare(c.at, c.at, a, b, d.Cycles)
+		x.Before, x.After, x.Watch = c.before, c.after, in.told(c.at)
 		d.Changes = append(d.Changes, x)
+	}
+	for _, n := range in.Notes {
+		d.Notes = append(d.Notes, Note{detect.FormatTime(n.Wall), n.Who, n.Text})
 	}
 	d.Appendix = s.appendix(&in, d.Cycles, others)
 	d.Summary = d.summary()
@@ -124,98 +131,4 @@ func (s *series) spanOf(first, last int64) Span {
 		sp.Notes = append(sp.Notes, "No mode in the data: the law is taken as acting unless OP stands still.")
 	}
 	return sp
-}
-
-// weight orders episodes by how much they say of the loop: open before over, its
-// own before a group's, a named cause before none, sure before unsure.
-func (e Episode) weight() float64 {
-	w := e.Confidence
-	if e.Cleared == "" {
-		w += 4
-	}
-	if e.Kind != detect.SharedOscillation {
-		w += 2
-	}
-	if e.Cause != detect.NoCause && e.Cause != detect.Undetermined {
-		w++
-	}
-	return w
-}
-
-// summary is the dossier in a few sentences, in the order in which a
-// practitioner asks: measurement, final element, outside, tuning.
-func (d *Dossier) summary() []Line {
-	var out []Line
-	add := func(about, text string) { out = append(out, Line{about, text}) }
-	if n := len(d.Episodes); n == 0 {
-		add("seen", "The watch found nothing in the span.")
-	} else {
-		e := slices.MaxFunc(d.Episodes, func(a, b Episode) int { return cmp.Compare(a.weight(), b.weight()) })
-		text := e.Text
-		if text == "" {
-			text = strings.ReplaceAll(string(e.Kind), "-", " ") + "."
-		}
-		if e.Cleared != "" {
-			text += " It is over."
-		}
-		if n > 1 {
-			text += fmt.Sprintf(" %d episodes in all.", n)
-		}
-		add("seen", text)
-	}
-	stick := false
-	for _, f := range d.Element {
-		if f.Key == "stick_band_pct" && f.Number != nil {
-			stick = true
-			add("final element", "Apparent sticking or dead band, from OP and PV: "+f.Number.String()+". The final element comes before the tuning.")
-		}
-	}
-	if !stick {
-		text := "Nothing in OP and PV speaks against them; that is no test of either."
-		for _, e := range d.Episodes {
-			for _, c := range append([]detect.Cause{e.Cause}, e.Also...) {
-				switch c {
-				case detect.ValveSticking, detect.ValveDeadBand, detect.FinalElementNotFollowing, detect.MeasurementCause:
-					text = "The watch holds it possible that they are at fault (" + strings.ReplaceAll(string(c), "-", " ") + "); no band can be read from OP and PV. Check by hand, see 3."
-				}
-			}
-		}
-		add("measurement and final element", text)
-	}
-	for _, f := range d.Outside {
-		if f.Key == "same_period" && f.Note != "" {
-			add("outside", "Other loops swing with the same period: "+f.Text+".")
-		}
-		if f.Key == "manual_spell" && strings.Contains(f.Text, "went on") {
-			add("outside", "The cycle went on in a natural manual spell: it comes from outside this loop.")
-		}
-	}
-	for _, f := range d.Tuning {
-		switch f.Key {
-		case "tags":
-			add("tuning in service", f.Text+", by its tags.")
-		case "faceplate":
-			add("tuning in service", f.Text+", as read from the data.")
-		}
-	}
-	if d.Process.Verdict.Good {
-		add("process", "A model good enough to tune from: "+d.fitted.result.Model.String()+" ("+d.Process.Verdict.Why+").")
-	} else {
-		add("process", "No model good enough to tune from: "+d.Process.Verdict.Why+".")
-	}
-	if c := d.Advice.InService; c != nil {
-		text := "On that model the tuning in service has Ms " + c.Ms.String() + " (wanted 1.4 to 1.7)."
-		if !c.Stable {
-			text = "On that model the tuning in service does not hold."
-		}
-		add("tuning", text)
-	}
-	for _, c := range d.Changes {
-		at, err := time.Parse(time.RFC3339Nano, c.At)
-		if err != nil { // made by this package: cannot be
-			continue
-		}
-		add("change", at.In(d.zone).Format("2 Jan 15:04")+": "+c.Verdict+".")
-	}
-	return out
 }

@@ -2,6 +2,7 @@ package dossier
 
 import (
 	"fmt"
+	"iter"
 	"math"
 
 	"gonum.org/v1/gonum/stat/distuv"
@@ -21,19 +22,68 @@ type Change struct {
 	Ratio   Number   `json:"deviation_after_over_before"`
 	Facts   []Fact   `json:"facts"`
 	Like    []string `json:"unlike,omitempty"`
+	Enough  bool     `json:"enough_data"`
+	Watch   string   `json:"verdict_of_the_watch,omitempty"` // made by itself some time after the change
 }
 
 // leastBlocks on each side of a change.
 const leastBlocks = 8
 
-// Compare looks at a loop before and after a change of its tuning at a time (ms
-// UTC): same mode, like load, same duty. Frames are those around it, oldest
-// first.
-func Compare(l *configs.Loop, frames []collector.Frame, at int64) Change {
-	s := newSeries(l, frames)
-	c := s.compare(at, s.t0, s.at(s.n()), nil)
+// told is the verdict that the watch came to by itself of a change at a time.
+func (in *Input) told(at int64) string {
+	const near = int64(3600e3)
+	for _, s := range in.Sessions {
+		if o := s.Outcome; o.At != 0 && at >= s.First-near && at <= s.Last+near {
+			so := "so far, "
+			if o.Settled {
+				so = ""
+			}
+			return fmt.Sprintf("%s%s (data to %s)", so, o.Verdict, in.at(o.At).Format("2 Jan 2006 15:04"))
+		}
+	}
+	return ""
+}
+
+// mostSide is how much is looked at on each side of a change, s.
+const mostSide = 14 * 86400
+
+// mostCompared frames are held of a comparison; of more, every second one goes,
+// again and again.
+const mostCompared = 250_000
+
+// Compare looks at a loop before the first and after the last change of a session
+// of tuning (ms UTC): same mode, like load, same duty. Frames are those around
+// them, oldest first; they are read once and most are not kept. An error is of
+// reading them.
+func Compare(l *configs.Loop, frames iter.Seq2[collector.Frame, error], first, last int64, o detect.Options) (Change, error) {
+	w := newWatching(l, o)
+	var kept []collector.Frame
+	n, every := 0, 1
+	for f, err := range frames {
+		if err != nil {
+			return Change{}, fmt.Errorf("frames of loop %s: %w", l.Name, err)
+		}
+		w.step(&f)
+		if n%every == 0 {
+			kept = append(kept, f)
+		}
+		n++
+		if len(kept) == mostCompared {
+			every *= 2
+			for i := range mostCompared / 2 {
+				kept[i] = kept[2*i]
+			}
+			kept = kept[:mostCompared/2]
+		}
+	}
+	c := Change{At: detect.FormatTime(last), Ratio: none("not enough data yet"), Verdict: "not enough data yet: no frames around the change"}
+	if len(kept) > 1 {
+		s := newSeries(l, kept)
+		seen := w.end()
+		c = s.compare(first, last, s.t0, s.at(s.n()), s.cycles(seen, nil))
+	}
 	c.Before, c.After = "as before", "as after"
-	return c
+	return c, nil
 }
 
 // side is one side of a change.
@@ -131,21 +181,20 @@ func (s *series) swung(cs []Cycle, i, j int) float64 {
 	return float64(n) / float64(max(1, j-i))
 }
 
-// compare holds the stretch from a to the change against that from it to b.
-func (s *series) compare(at, a, b int64, cs []Cycle) Change {
-	c := Change{At: detect.FormatTime(at), Ratio: none("not enough data yet")}
-	mid := s.slot(at)
-	i, j := max(0, s.slot(a)), min(s.n(), s.slot(b))
-	// A week on each side at most, the same on both.
-	most := int(7 * 86400 / s.dt)
-	i, j = max(i, mid-most), min(j, mid+most)
-	if i >= mid || mid >= j {
+// compare holds the stretch from a to the first change against that from the last
+// one to b.
+func (s *series) compare(first, last, a, b int64, cs []Cycle) Change {
+	c := Change{At: detect.FormatTime(last), Ratio: none("not enough data yet")}
+	was, is := s.slot(first), s.slot(last)
+	most := int(mostSide / s.dt)
+	i, j := max(0, s.slot(a), was-most), min(s.n(), s.slot(b), is+most)
+	if i >= was || is >= j {
 		c.Verdict = "not enough data yet: the change lies at the edge of the span"
 		return c
 	}
 	block := s.blockS(i, j)
-	settle := min(int(block/s.dt), (j-mid)/10) // what the change itself stirred up
-	before, after := s.side(i, mid, block), s.side(mid+settle, j, block)
+	settle := min(int(block/s.dt), (j-is)/10) // what the change itself stirred up
+	before, after := s.side(i, was, block), s.side(is+settle, j, block)
 	n0, n1 := len(before.rms), len(after.rms)
 	pv := func(x side) Number {
 		if len(x.rms) == 0 {
@@ -165,17 +214,18 @@ func (s *series) compare(at, a, b int64, cs []Cycle) Change {
 	}
 	// A swing says more than its size: it asks for movement of OP by itself, so
 	// the two sides could never look alike.
-	if w0, w1 := s.swung(cs, i, mid), s.swung(cs, mid, j); w0 < 0.05 && w1 > 0.2 {
-		c.Holds, c.Verdict = true, fmt.Sprintf("the loop swings since the change: %s of the time after it, %s before", percent(w1), percent(w0))
+	if w0, w1 := s.swung(cs, i, was), s.swung(cs, is, j); w0 < 0.05 && w1 > 0.2 {
+		c.Holds, c.Enough, c.Verdict = true, true, fmt.Sprintf("the loop swings since the change: %s of the time after it, %s before", percent(w1), percent(w0))
 		return c
 	} else if w0 > 0.2 && w1 < 0.02 && n1 >= leastBlocks {
-		c.Holds, c.Verdict = true, fmt.Sprintf("the swing that was there before the change is gone: %s of the time before, %s after", percent(w0), percent(w1))
+		c.Holds, c.Enough, c.Verdict = true, true, fmt.Sprintf("the swing that was there before the change is gone: %s of the time before, %s after", percent(w0), percent(w1))
 		return c
 	}
 	if n0 < leastBlocks || n1 < leastBlocks {
 		c.Verdict = fmt.Sprintf("not enough data yet: %d blocks of %s before and %d after with the law acting; %d of each are needed", n0, duration(block), n1, leastBlocks)
 		return c
 	}
+	c.Enough = true
 	unlike := func(what string, x, y, floor float64) {
 		x, y = math.Max(x, floor), math.Max(y, floor)
 		if q := y / x; q > 2 || q < 0.5 {

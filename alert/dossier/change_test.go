@@ -6,6 +6,9 @@ import (
 	"testing"
 
 	"midwatch/alert/dossier"
+	"midwatch/collector"
+	"midwatch/configs"
+	"midwatch/detect"
 )
 
 // retuned is a record with a change of the tuning in the middle.
@@ -17,6 +20,17 @@ func retuned(days float64, kc, ti float64, seed uint64) works {
 	half := days * 86400 / 2
 	w.retune = func(t float64) (float64, float64, bool) { return kc, ti, t > half }
 	return w
+}
+
+// compared is the comparison around the middle of frames.
+func compared(t testing.TB, l *configs.Loop, fs []collector.Frame) dossier.Change {
+	t.Helper()
+	mid := fs[len(fs)/2].Time
+	c, err := dossier.Compare(l, each(fs), mid, mid, detect.Options{})
+	if err != nil {
+		t.Fatal(err)
+	}
+	return c
 }
 
 func TestBeforeAndAfter(t *testing.T) {
@@ -49,7 +63,7 @@ func TestBeforeAndAfter(t *testing.T) {
 		fs[i].SP += v
 		fs[i].PV += v
 	}
-	x := dossier.Compare(busy.loop, fs, fs[len(fs)/2].Time)
+	x := compared(t, busy.loop, fs)
 	if x.Holds || len(x.Like) == 0 {
 		t.Errorf("sides that are not alike: %+v", x)
 	}
@@ -63,7 +77,7 @@ func TestNoChangeIsSeldomOne(t *testing.T) {
 		w := retuned(3, 0.35, 900, 100+seed)
 		w.tags = false
 		fs := w.frames()
-		c := dossier.Compare(w.loop, fs, fs[len(fs)/2].Time)
+		c := compared(t, w.loop, fs)
 		if c.Holds {
 			holds++
 		}
@@ -91,6 +105,9 @@ func TestSwingSinceTheChange(t *testing.T) {
 	c := d.Changes[0]
 	if !c.Holds || !strings.Contains(c.Verdict, "swings since the change") {
 		t.Errorf("%+v", c)
+	}
+	if got := line(d, "numbers to tune from"); !strings.Contains(got, "reset 980 s. A step back there needs no model") {
+		t.Errorf("numbers: %q", got)
 	}
 	if !strings.Contains(c.Before, "reset 980 s") || !strings.Contains(c.After, "reset 180 s") {
 		t.Errorf("from %q to %q; the record: 982 to 180 s", c.Before, c.After)

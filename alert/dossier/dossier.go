@@ -16,6 +16,8 @@ import (
 	"strings"
 	"time"
 
+	"midwatch/alert"
+	"midwatch/alert/dossier/tune"
 	"midwatch/collector"
 	"midwatch/configs"
 	"midwatch/detect"
@@ -36,10 +38,31 @@ type Input struct {
 	Made     time.Time      // when it was made; zero: not said
 	Zone     *time.Location // of the times in the page; nil: UTC
 	Site     string
-	Version  string // of the program
-	Source   string // where the frames are from, in words
-	Sums     []Sum  // check sums of the files read
-	AsLeft   string // the tuner's own record of what was changed, where there is one
+	Version  string          // of the program
+	Source   string          // where the frames are from, in words
+	Sums     []Sum           // check sums of the files read
+	Sessions []alert.Session // of tuning of this loop, with what the watch made of them
+	Notes    []alert.Remark  // of people on this loop
+	AsLeft   string          // the tuner's own record of what was changed, where there is one
+}
+
+// Told takes what the desk of a watch told of the loop, and of others.
+func (in *Input) Told(p alert.Past) {
+	h := p.Loops[in.Loop.Name]
+	in.Findings = append([]detect.Finding{}, h.Findings...)
+	for i := range p.Newest {
+		if f := &p.Newest[i]; f.Loop != in.Loop.Name {
+			in.Findings = append(in.Findings, *f)
+		}
+	}
+	in.Others, in.Sessions, in.Notes = true, h.Sessions, h.Notes
+}
+
+// Note is what a person left written of the loop.
+type Note struct {
+	At   string `json:"at"` // wall clock
+	Who  string `json:"who"`
+	Text string `json:"text"`
 }
 
 // Partner is another loop that this one hangs together with.
@@ -92,6 +115,7 @@ type Dossier struct {
 
 	Changes []Change `json:"before_and_after"`
 	AsLeft  string   `json:"as_left,omitempty"`
+	Notes   []Note   `json:"notes,omitempty"` // oldest first
 
 	Appendix Appendix `json:"appendix"`
 
@@ -100,6 +124,8 @@ type Dossier struct {
 	frames []collector.Frame
 	s      *series
 	fitted *fitted
+	now    tune.Tuning // in service
+	known  bool        // now is
 }
 
 // Line is one sentence of the summary.

@@ -11,6 +11,7 @@ import (
 const (
 	setPointStep = "set-point step"
 	manualMove   = "manual OP move"
+	modeBump     = "bump at a mode change"
 	loadEvent    = "load event"
 )
 
@@ -67,7 +68,8 @@ type move struct {
 }
 
 // moves lists what was moved on purpose: set points while the law acts (not
-// those that follow PV), and outputs while it does not.
+// those that follow PV), outputs while it does not, and outputs that jump as the
+// law takes over or lets go.
 func (s *series) moves() []move {
 	var out []move
 	join := max(2, int(math.Ceil(4/s.dt)))
@@ -85,7 +87,13 @@ func (s *series) moves() []move {
 				add(setPointStep, k, d)
 			}
 		}
-		if d := s.op[k] - s.op[k-1]; d == d && math.Abs(d) > 0.05 && !s.law[k] && !s.law[k-1] {
+		switch d := s.op[k] - s.op[k-1]; {
+		case d != d:
+		case s.known && s.law[k] != s.law[k-1]:
+			if math.Abs(d) > 0.05 {
+				add(modeBump, k, d)
+			}
+		case math.Abs(d) > 0.05 && !s.law[k]:
 			add(manualMove, k, d)
 		}
 	}
@@ -110,11 +118,17 @@ func (s *series) step(m move, prev, next int) event {
 	e.end = end
 	start := s.sp[m.at-1]
 	target := s.sp[min(m.last, s.n()-1)]
-	e.end = s.settle(&e, m, end, start, target)
+	rest := s.law[m.at] // who moved OP before: after a change of it the other
+	if m.kind == modeBump {
+		rest = s.law[m.at-1]
+		start = mean(s.pv, m.at-12, m.at)
+	}
+	byHand := !s.law[m.at]
+	e.end = s.settle(&e, m, byHand, end, start, target)
 	length := e.end - m.at
 	most = min(m.at-prev, max(12, length/4), 2000)
 	pre := 0
-	for k := m.at - 1; pre < most && s.pv[k] == s.pv[k] && s.op[k] == s.op[k] && s.law[k] == s.law[m.at]; k-- {
+	for k := m.at - 1; pre < most && s.pv[k] == s.pv[k] && s.op[k] == s.op[k] && s.law[k] == rest; k-- {
 		pre++
 	}
 	e.rest = m.at - pre
@@ -130,10 +144,14 @@ func (s *series) step(m move, prev, next int) event {
 	default:
 		e.usable = true
 	}
-	if m.kind == manualMove {
+	switch {
+	case byHand:
 		tail := max(3, length/5)
 		e.movePct = mean(s.pv, e.end-tail, e.end) - mean(s.pv, e.rest, m.at)
-	} else {
+	case m.kind == modeBump:
+		e.movePct = target - start
+		e.measure(s, start, target)
+	default:
 		e.movePct = m.size
 		e.measure(s, start, target)
 	}
@@ -145,9 +163,9 @@ func (s *series) step(m move, prev, next int) event {
 
 // settle finds where PV has come to rest after a move, and gives the end of the
 // window: as much again, within what there is.
-func (s *series) settle(e *event, m move, end int, start, target float64) int {
+func (s *series) settle(e *event, m move, byHand bool, end int, start, target float64) int {
 	band := math.Max(3*s.sigma, 0.08*math.Abs(target-start))
-	if m.kind == manualMove {
+	if byHand {
 		return s.plateau(e, m.at, end)
 	}
 	out := m.at

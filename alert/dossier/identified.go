@@ -45,8 +45,11 @@ type fitted struct {
 	ok      bool
 }
 
-// mostEvents are shown; all are counted.
-const mostEvents = 30
+// mostEvents are shown, of loads the largest few; all are counted.
+const (
+	mostEvents = 30
+	mostLoads  = 8
+)
 
 func (s *series) process(l *configs.Loop, ev []event) (p Process, f *fitted) {
 	counts := map[string]int{}
@@ -61,8 +64,8 @@ func (s *series) process(l *configs.Loop, ev []event) (p Process, f *fitted) {
 			f.starts = append(f.starts, s.at(e.at))
 		}
 	}
-	p.Found = fmt.Sprintf("%d set-point steps (%d from rest and usable), %d manual OP moves (%d), %d load events (used for recovery only)",
-		counts[setPointStep], usable[setPointStep], counts[manualMove], usable[manualMove], counts[loadEvent])
+	p.Found = fmt.Sprintf("%d set-point steps (%d from rest and usable), %d manual OP moves (%d), %d bumps of OP at mode changes (%d), %d load events (used for recovery only)",
+		counts[setPointStep], usable[setPointStep], counts[manualMove], usable[manualMove], counts[modeBump], usable[modeBump], counts[loadEvent])
 	defer func() { p.Events = s.show(ev) }()
 	if l.Process == configs.Runaway {
 		f.verdict = fit.Verdict{Why: "a runaway process: no model of these kinds holds for it, and no direction is given for its gain"}
@@ -71,7 +74,7 @@ func (s *series) process(l *configs.Loop, ev []event) (p Process, f *fitted) {
 	}
 	if len(f.windows) == 0 {
 		why := "nothing was moved from rest: with SP at rest, OP follows PV by the controller's own law, and the data show the controller, not the process"
-		if counts[setPointStep]+counts[manualMove] > 0 {
+		if counts[setPointStep]+counts[manualMove]+counts[modeBump] > 0 {
 			why = "no move of SP or OP was from rest and could be used (" + reasons(ev) + "); beside them OP follows PV by the controller's own law, and the data show the controller, not the process"
 		}
 		f.verdict = fit.Verdict{Why: why}
@@ -146,11 +149,11 @@ func preferSettled(ev []event) {
 func kindsOf(l *configs.Loop) []fit.Kind {
 	switch l.Process {
 	case configs.Integrating:
-		return []fit.Kind{fit.Integrator}
+		return []fit.Kind{fit.Integrator, fit.IntegratorLag}
 	case configs.SelfRegulating:
 		return []fit.Kind{fit.FirstOrder, fit.SecondOrder}
 	}
-	return []fit.Kind{fit.FirstOrder, fit.SecondOrder, fit.Integrator}
+	return []fit.Kind{fit.FirstOrder, fit.SecondOrder, fit.Integrator, fit.IntegratorLag}
 }
 
 // between says whether OP moved between two samples: the controller is known or
@@ -171,13 +174,20 @@ func (s *series) show(ev []event) []Event {
 		}
 		return int(sign(math.Abs(b.movePct) - math.Abs(a.movePct)))
 	})
+	loads := 0
+	order = slices.DeleteFunc(order, func(e event) bool {
+		if e.kind == loadEvent {
+			loads++
+		}
+		return e.kind == loadEvent && loads > mostLoads
+	})
 	order = order[:min(len(order), mostEvents)]
 	slices.SortStableFunc(order, func(a, b event) int { return a.at - b.at })
 	out := []Event{}
 	for _, e := range order {
 		x := Event{Kind: e.kind, At: detect.FormatTime(s.at(e.at)), Lasts: number(float64(e.end-e.at)*s.dt, "s"), Used: e.usable, Why: e.why}
 		switch e.kind {
-		case manualMove:
+		case manualMove, modeBump:
 			x.Size = number(e.sizePct, "% of OP")
 		default:
 			x.Size = number(s.pvUnits(e.sizePct), s.unit())

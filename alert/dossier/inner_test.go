@@ -177,3 +177,21 @@ func TestLoadIndicesOnSimulatedLoops(t *testing.T) {
 		t.Errorf("idle index of a swinging loop %.2f", oi)
 	}
 }
+
+// A change of the tuning that only the readings show: the first after it may still
+// hold the tuning before it in their range. Readings that merely scatter are none.
+func TestChangesThatReadingsShow(t *testing.T) {
+	readings := func(resets ...[3]float64) (out []Reading) {
+		for i, r := range resets {
+			out = append(out, Reading{at: int64(i+1) * 600_000, Gain: ranged(2.1, 2, 2.2, "%/%"), Reset: ranged(r[0], r[1], r[2], "s")})
+		}
+		return out
+	}
+	was := [3]float64{40.5, 38.6, 42.5}
+	if got := changesRead(readings(was, was, was, was, [3]float64{7.7, 7.3, 40.5}, [3]float64{7.7, 7.3, 8.1}, [3]float64{7.8, 7.4, 40.5})); len(got) != 1 || got[0].t0 != 40.5 || got[0].t1 != 7.7 {
+		t.Errorf("a change to a fifth: %+v", got)
+	}
+	if got := changesRead(readings(was, [3]float64{33, 20, 60}, was, [3]float64{52, 30, 80}, [3]float64{29, 20, 55}, was, [3]float64{60, 30, 90})); len(got) != 0 {
+		t.Errorf("scatter is no change: %+v", got)
+	}
+}

@@ -83,7 +83,7 @@ func samePeriod(in *Input, cs []Cycle) []Fact {
 			} else if o.since < c.from+int64(1000*c.periodS) {
 				when = "together with"
 			}
-			named[o.loop] = fmt.Sprintf("%s (%s, %s; began %s this one)", o.loop, duration(o.period), strings.ReplaceAll(string(o.kind), "-", " "), when)
+			named[o.loop] = fmt.Sprintf("%s (%s, %s, began %s this one)", o.loop, duration(o.period), strings.ReplaceAll(string(o.kind), "-", " "), when)
 		}
 		label := "same period elsewhere, cycle of " + duration(c.periodS)
 		if len(named) == 0 {

@@ -54,7 +54,7 @@ func TestSamePeriodElsewhere(t *testing.T) {
 	if !ok || !strings.Contains(f.Text, "PIC-107") || !strings.Contains(f.Text, "TIC-221") || strings.Contains(f.Text, "FIC-131") {
 		t.Errorf("together: %+v", f)
 	}
-	if !strings.Contains(f.Text, "PIC-107 (15.1 min, sustained oscillation; began before this one)") {
+	if !strings.Contains(f.Text, "PIC-107 (15.1 min, sustained oscillation, began before this one)") {
 		t.Errorf("who began: %s", f.Text)
 	}
 	// The origin is open: the plan asks for cycles in manual.

@@ -43,12 +43,13 @@ func mark(k detect.Kind) template.HTML {
 }
 
 var page = template.Must(template.New("page").Funcs(template.FuncMap{
-	"mark":  mark,
-	"words": func(v any) string { return strings.ReplaceAll(fmt.Sprint(v), "-", " ") },
-	"num":   shown,
-	"short": short,
-	"cap":   capital,
-	"some":  some,
+	"mark":      mark,
+	"words":     func(v any) string { return strings.ReplaceAll(fmt.Sprint(v), "-", " ") },
+	"num":       shown,
+	"short":     short,
+	"cap":       capital,
+	"some":      some,
+	"mostLoads": func() int { return mostLoads },
 }).Parse(pageText))
 
 // shown is a number on the page: times in the unit a person would use.

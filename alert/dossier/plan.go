@@ -26,7 +26,7 @@ type Plan struct {
 // limits, from rest, both ways, twice.
 func (s *series) plan(l *configs.Loop, f *fitted, ev []event, cs []Cycle, in *Input) *Plan {
 	p := &Plan{OPStep: none("the process gain is not known: begin with 1 % of OP, look, then choose")}
-	need := math.Max(10*s.sigma, 1)
+	need := math.Max(10*s.sigma, 0.4)
 	if s.wander == s.wander {
 		need = math.Max(need, 5*s.wander)
 	}
@@ -79,7 +79,7 @@ func (s *series) plan(l *configs.Loop, f *fitted, ev []event, cs []Cycle, in *In
 	p.Steps = append(p.Steps,
 		"Agree it with operations: who moves, how far at most, when to stop.",
 		fmt.Sprintf("Wait until PV has been at rest; no other change upstream or downstream during the test (noise %s %s, usual wandering %s).", short(s.pvUnits(s.sigma)), s.unit(), wanderWords(s)),
-		fmt.Sprintf("Move so that PV goes about %s %s (10 noise levels, 5 times the usual wandering), and hold until PV has come to rest: %s.", short(s.pvUnits(need)), s.unit(), eachWords(each, why)),
+		fmt.Sprintf("Move so that PV goes about %s %s (10 noise levels, 5 times the usual wandering, 0.5 %% of span at least), and hold until PV has come to rest: %s.", short(s.pvUnits(need)), s.unit(), eachWords(each, why)),
 		"Move back; then once more up and down. Both directions are needed: a valve that answers differently each way is the first thing to find.",
 		fmt.Sprintf("Keep the record at %s or faster; then make this dossier again over that span.", duration(math.Min(s.dt, math.Max(0.2, nanTo(each, 600)/100)))))
 	p.Steps = append(p.Steps, notes...)
@@ -123,7 +123,7 @@ func cycleOpen(cs []Cycle, in *Input) (bool, string) {
 		}
 		if !settled {
 			return true, fmt.Sprintf("The origin of the cycle of %s since %s is open: PV and OP at one frequency obey the controller's law whatever drives it. With operations' agreement, put the loop in manual for two or three cycles (%s) with OP at its mean: a cycle that goes on comes from outside, one that stops is valve or tuning of this loop.",
-				duration(c.periodS), c.From, duration(3*c.periodS))
+				duration(c.periodS), in.at(c.from).Format("2 Jan 2006 15:04"), duration(3*c.periodS))
 		}
 	}
 	return false, ""

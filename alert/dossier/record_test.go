@@ -30,6 +30,9 @@ type works struct {
 	tags    bool                                      // gain and reset are read
 	stick   float64                                   // %, the valve holds until OP is so far away, then jumps to it
 	outside func(t float64) float64                   // % added to PV at the process output
+	play    float64                                   // %, between OP and the valve
+	onPV    bool                                      // P acts on PV
+	windsUp bool                                      // no anti-wind-up
 	seed    uint64
 }
 
@@ -86,16 +89,20 @@ func (w works) frames() []collector.Frame {
 				sum, auto = op-kc*e, true
 			}
 			add := kc * e * w.dt / ti
-			u := kc*e + sum + add
+			pe := e
+			if w.onPV {
+				pe = s * (w.sp - seen)
+			}
+			u := kc*pe + sum + add
 			switch {
 			case u > 100:
 				op = 100
-				if add < 0 {
+				if add < 0 || w.windsUp {
 					sum += add
 				}
 			case u < 0:
 				op = 0
-				if add > 0 {
+				if add > 0 || w.windsUp {
 					sum += add
 				}
 			default:
@@ -109,8 +116,12 @@ func (w works) frames() []collector.Frame {
 			f.Gain, f.Reset = float32(kc), float32(ti)
 		}
 		out = append(out, f)
+		was := valve
 		if math.Abs(op-valve) > w.stick {
 			valve = op
+		}
+		if w.play > 0 { // width of the play; the valve stands within it
+			valve = math.Max(op-w.play/2, math.Min(op+w.play/2, was))
 		}
 		pv = p.Step(s * (valve - w.op + load + slow))
 	}

@@ -107,7 +107,7 @@ func about(v float64) float64 {
 }
 
 // tuning sums up the tuning in service against the list.
-func (s *series) tuning(in *Input, w watched, cs []tuningChange, eps []Episode) []Fact {
+func (s *series) tuning(in *Input, w watched, cs []tuningChange) []Fact {
 	l := in.Loop
 	out := []Fact{say("list", "on the list", l.DescribeTuning())}
 	if k, t := w.tags[0], w.tags[1]; k > 0 || t > 0 {
@@ -147,9 +147,6 @@ func (s *series) tuning(in *Input, w watched, cs []tuningChange, eps []Episode) 
 		}
 		out = append(out, say("change", "change, "+in.at(c.at).Format("2 Jan 2006 15:04"), fmt.Sprintf("from %s to %s (%s)", c.before, c.after, how)))
 	}
-	if f, ok := windUp(eps); ok {
-		out = append(out, f)
-	}
 	return out
 }
 
@@ -184,20 +181,6 @@ func against(l *configs.Loop, r Reading) []Fact {
 	check("gain_against_list", "gain read against the list", r.Gain, l.GainPct)
 	check("reset_against_list", "reset read against the list", r.Reset, l.IdealReset)
 	return out
-}
-
-func windUp(eps []Episode) (Fact, bool) {
-	for _, e := range eps {
-		if e.Cause == detect.WindUp {
-			return say("wind_up", "anti-wind-up", "OP stayed at its limit after the error had changed sign: wound up, since "+e.Since), true
-		}
-	}
-	for _, e := range eps {
-		if e.Kind == detect.OutputSaturation {
-			return say("wind_up", "anti-wind-up", "OP was at a limit and left it as it should: no wind-up seen"), true
-		}
-	}
-	return say("wind_up", "anti-wind-up", "not seen: OP was never held at a limit by the error long enough"), true
 }
 
 // scheduled says whether the gain in service goes with PV.

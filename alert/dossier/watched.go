@@ -6,6 +6,7 @@ import (
 	"slices"
 
 	"midwatch/collector"
+	"midwatch/configs"
 	"midwatch/detect"
 )
 
@@ -27,45 +28,66 @@ type spell struct {
 	periodLow, high float64
 }
 
-// look runs a watch over the frames: the same judgement as the live one, begun
+// watching is a watch run over frames: the same judgement as the live one, begun
 // at the beginning of the span.
-func look(in *Input, frames []collector.Frame) watched {
-	var out watched
-	w := detect.New(in.Loop, 0, in.Detect)
+type watching struct {
+	watched
+	loop *configs.Loop
+	w    *detect.Watch
 	// The watch keeps the newest reading of each time scale and shows the best of
 	// them: one that comes again is old.
-	seen := map[[2]float64]bool{}
+	seen        map[[2]float64]bool
+	first, last int64
+}
+
+func newWatching(l *configs.Loop, o detect.Options) *watching {
+	return &watching{loop: l, w: detect.New(l, 0, o), seen: map[[2]float64]bool{}}
+}
+
+func (x *watching) step(f *collector.Frame) {
+	if x.first == 0 {
+		x.first = f.Time
+	}
+	x.last = f.Time
+	if f.Gain > 0 {
+		x.tags[0] = float64(f.Gain)
+	}
+	if f.Reset > 0 {
+		x.tags[1] = float64(f.Reset)
+	}
+	x.w.Step(f, func(g *detect.Finding) { x.findings = append(x.findings, *g) })
+	e, ok := x.w.TakeEvidence()
+	if !ok {
+		return
+	}
+	x.take(e)
+	v := x.w.View()
+	if key := [2]float64{v.GainPct, nanTo(v.ResetS, 0)}; v.GainPct == v.GainPct && !x.seen[key] {
+		x.seen[key] = true
+		r := Reading{at: f.Time, At: detect.FormatTime(f.Time), Gain: ranged(v.GainPct, v.GainLow, v.GainHigh, "%/%"),
+			Reset: none("no integral action seen"), atPV: float64(f.PV)}
+		if v.ResetS == v.ResetS {
+			r.Reset = ranged(v.ResetS, v.ResetLow, v.ResetHigh, "s")
+		}
+		r.AtOP = number((float64(f.OP)-x.loop.OPLow)/x.loop.OPSpan()*100, "%")
+		x.readings = append(x.readings, r)
+	}
+}
+
+// end gives what the watch says.
+func (x *watching) end() watched {
+	x.view = x.w.View()
+	x.readings = thin(x.readings, x.first, x.last)
+	return x.watched
+}
+
+// look runs a watch over frames.
+func look(l *configs.Loop, o detect.Options, frames []collector.Frame) watched {
+	x := newWatching(l, o)
 	for i := range frames {
-		f := &frames[i]
-		if f.Gain > 0 {
-			out.tags[0] = float64(f.Gain)
-		}
-		if f.Reset > 0 {
-			out.tags[1] = float64(f.Reset)
-		}
-		w.Step(f, func(x *detect.Finding) { out.findings = append(out.findings, *x) })
-		e, ok := w.TakeEvidence()
-		if !ok {
-			continue
-		}
-		out.take(e)
-		v := w.View()
-		if key := [2]float64{v.GainPct, nanTo(v.ResetS, 0)}; v.GainPct == v.GainPct && !seen[key] {
-			seen[key] = true
-			r := Reading{at: f.Time, At: detect.FormatTime(f.Time), Gain: ranged(v.GainPct, v.GainLow, v.GainHigh, "%/%"),
-				Reset: none("no integral action seen"), atPV: float64(f.PV)}
-			if v.ResetS == v.ResetS {
-				r.Reset = ranged(v.ResetS, v.ResetLow, v.ResetHigh, "s")
-			}
-			r.AtOP = number((float64(f.OP)-in.Loop.OPLow)/in.Loop.OPSpan()*100, "%")
-			out.readings = append(out.readings, r)
-		}
+		x.step(&frames[i])
 	}
-	out.view = w.View()
-	if n := len(frames); n > 0 {
-		out.readings = thin(out.readings, frames[0].Time, frames[n-1].Time)
-	}
-	return out
+	return x.end()
 }
 
 // mostReadings are kept of a span; more are joined to medians.
@@ -207,7 +229,16 @@ func apart(was, is []Reading, get func(Reading) Number) (a, b float64, ok bool) 
 		return math.NaN(), math.NaN(), false
 	}
 	a, b = median(x), median(y)
-	return a, b, math.Abs(math.Log(a/b)) > math.Log(1.3) && (xh < yl || yh < xl)
+	if q := math.Abs(math.Log(a / b)); q > math.Log(1.3) && (xh < yl || yh < xl) {
+		return a, b, true
+	} else if q < math.Log(2) {
+		return a, b, false
+	}
+	// A reading just after a change may still hold the tuning before it in its
+	// range: the values alone, where they are far apart and agree among themselves.
+	x, y = slices.Sorted(slices.Values(x)), slices.Sorted(slices.Values(y))
+	agree := func(v []float64) bool { return v[len(v)-1] < 1.25*v[0] }
+	return a, b, agree(x) && agree(y)
 }
 
 // growth is how fast a swing grew while it grew.

@@ -103,29 +103,28 @@ func abs(v int64) int64 {
 	return v
 }
 
-// bandOf makes the strip of a loop from from to now.
-func bandOf(l *LoopState, ts []trouble, b []bucket, now time.Time, span time.Duration, zone *time.Location) band {
+// bandOf makes the strip of a loop over a stretch of time.
+func bandOf(l *LoopState, ts []trouble, b []bucket, st stretch, now time.Time, zone *time.Location) band {
 	out := band{Name: l.Loop.Name, Path: pathName(l.Loop.Name), Service: l.Loop.Service, Area: l.Loop.Area, Width: max(1, len(b)), Trace: trace(b)}
-	end := now.UnixMilli()
-	start := end - span.Milliseconds()
+	start, end := st.From, st.To
 	out.Blind = l.State == detect.CannotJudge
 	// What buckets saw lies below what was found.
-	states := out.runs(b, sawManual, "off", "manual", "in manual", end, now, zone)
-	if other := out.runs(b, sawInactive, "off", "manual", "law not acting", end, now, zone); states == "" {
+	states := out.runs(b, sawManual, "off", "manual", "in manual", st, now, zone)
+	if other := out.runs(b, sawInactive, "off", "manual", "law not acting", st, now, zone); states == "" {
 		states = other
 	}
-	if hidden := out.runs(b, sawHidden, "off", "manual", "suppressed by design", end, now, zone); states == "" {
+	if hidden := out.runs(b, sawHidden, "off", "manual", "suppressed by design", st, now, zone); states == "" {
 		states = hidden
 	}
-	gone := out.runsGone(b, end, now, zone)
-	out.runs(b, sawLimit, "limit", "", "OP at a limit", end, now, zone)
+	gone := out.runsGone(b, st, now, zone)
+	out.runs(b, sawLimit, "limit", "", "OP at a limit", st, now, zone)
 	for i := len(ts) - 1; i >= 0; i-- {
 		t := &ts[i]
 		until := t.Until
-		if until == 0 {
+		if until == 0 || until > end {
 			until = end
 		}
-		if until < start || t.Since > end {
+		if t.Until != 0 && t.Until < start || t.Since > end {
 			continue
 		}
 		x := float64(t.Since-start) / float64(end-start) * 100
@@ -159,18 +158,19 @@ func bandOf(l *LoopState, ts []trouble, b []bucket, now time.Time, span time.Dur
 }
 
 // runs marks the stretches whose buckets saw any of what, and says the last.
-func (o *band) runs(b []bucket, what uint8, class, mark, word string, end int64, now time.Time, zone *time.Location) string {
-	return o.stretches(b, func(x bucket) bool { return x.saw&what != 0 }, 1, class, mark, word, end, now, zone)
+func (o *band) runs(b []bucket, what uint8, class, mark, word string, st stretch, now time.Time, zone *time.Location) string {
+	return o.stretches(b, func(x bucket) bool { return x.saw&what != 0 }, 1, class, mark, word, st, now, zone)
 }
 
 // runsGone marks the stretches without data. A single empty bucket is only a
 // slow loop.
-func (o *band) runsGone(b []bucket, end int64, now time.Time, zone *time.Location) string {
-	return o.stretches(b, func(x bucket) bool { return x.saw&sawData == 0 }, 3, "gone", "stale", "no data", end, now, zone)
+func (o *band) runsGone(b []bucket, st stretch, now time.Time, zone *time.Location) string {
+	return o.stretches(b, func(x bucket) bool { return x.saw&sawData == 0 }, 3, "gone", "stale", "no data", st, now, zone)
 }
 
-func (o *band) stretches(b []bucket, in func(bucket) bool, least int, class, mark, word string, end int64, now time.Time, zone *time.Location) string {
+func (o *band) stretches(b []bucket, in func(bucket) bool, least int, class, mark, word string, st stretch, now time.Time, zone *time.Location) string {
 	said := ""
+	end := st.To
 	first := end/bucketMs - int64(len(b)) + 1
 	for i := 0; i < len(b); i++ {
 		if !in(b[i]) {
@@ -181,13 +181,13 @@ func (o *band) stretches(b []bucket, in func(bucket) bool, least int, class, mar
 			j++
 		}
 		// The bucket that has just begun says nothing yet.
-		if j-i < least || class == "gone" && i >= len(b)-2 {
+		if j-i < least || class == "gone" && st.Live && i >= len(b)-2 {
 			i = j
 			continue
 		}
 		from, to := (first+int64(i))*bucketMs, min((first+int64(j))*bucketMs, end)
 		text := word + " " + clock(from, now, zone) + " – " + clock(to, now, zone)
-		if j == len(b) {
+		if j == len(b) && st.Live {
 			text = word + " since " + clock(from, now, zone)
 		}
 		if i == 0 && j == len(b) {

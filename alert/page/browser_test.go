@@ -258,10 +258,18 @@ func TestScreens(t *testing.T) {
 	h := newFake()
 	h.frozen = true
 	h.many(60)
-	_, url := serve(t, h, configs.Page{})
+	shifts := configs.Page{Shifts: []int{6 * 60, 14 * 60, 22 * 60}}
+	_, url := serve(t, h, shifts)
 	calm := newFake()
 	calm.frozen, calm.eps = true, nil
-	_, calmURL := serve(t, calm, configs.Page{})
+	_, calmURL := serve(t, calm, shifts)
+	bad := newFake()
+	bad.frozen, bad.down = true, true
+	_, badURL := serve(t, bad, shifts)
+	_, tokensURL := serve(t, bad, configs.Page{TokensFile: tokensFile(t)})
+	empty := newFake()
+	empty.frozen, empty.loops, empty.eps = true, nil, nil
+	_, emptyURL := serve(t, empty, shifts)
 	shot := func(name, url string, w, hgt int64, night bool, ready string) {
 		ctx := tab(t, w, hgt)
 		do(t, ctx, dark(night), chromedp.Navigate(url))
@@ -304,6 +312,18 @@ func TestScreens(t *testing.T) {
 	shot("watch", url+"watch", 1440, 1400, false, "")
 	shot("trend-svg", url+"loops/AIC-204/trend.svg?hours=4", 1000, 500, false, "")
 	shot("strips-svg", picture(t, url+"strips.svg"), 1280, 900, false, "")
+	shot("list-before", url+"?span=before", 1440, 1400, false, "")
+	shot("list-none", url+"?q=no+such", 1440, 900, false, "")
+	shot("loop-sticking", url+"loops/FIC-118?hours=1", 1440, 1700, false, chart)
+	shot("loop-phone-dark", url+"loops/AIC-204", 390, 3600, true, chart)
+	shot("group-phone", url+"episodes/20260106-0004-kfen", 390, 1300, false, "")
+	shot("group-dark", url+"episodes/20260106-0004-kfen", 1440, 800, true, "")
+	shot("watch-phone", url+"watch", 390, 2400, true, "")
+	shot("watch-down", badURL+"watch", 1440, 1100, false, "")
+	shot("sign-in", tokensURL, 1000, 500, false, "")
+	shot("empty", emptyURL, 1440, 700, false, "")
+	shot("lanes-svg", picture(t, url+"episodes/20260106-0004-kfen/loops.svg"), 1280, 360, false, "")
+	shot("cascade-svg", picture(t, url+"episodes/cascade:AIC-201/loops.svg?hours=4"), 1280, 300, false, "")
 	shot("none", url+"loops/XX-1", 1000, 500, false, "")
 	shot("readme-list", url, 1200, 1020, false, "")
 	shot("readme-loop", url+"loops/AIC-204", 1000, 640, false, chart)

@@ -27,17 +27,19 @@ type card struct {
 	UTC     string
 	Left    string
 	Sure    string
-	Loop    string // subject, where it is a loop
-	Path    string // of Loop
-	Others  int    // further loops of the episode
-	Trace   string // SVG path over Width x 60
-	Width   int
-	OnsetX  string
-	OnsetW  string
-	Span    string // what the trend covers
-	Count   int
-	Hold    string
-	Group   bool
+	Loop    string   // subject, where it is a loop
+	Path    string   // of Loop
+	Names   []string // of the loops of a group, the first three
+	// MoreLoops are those of the group that are not named.
+	MoreLoops int
+	Trace     string // SVG path over Width x 60
+	Width     int
+	OnsetX    string
+	OnsetW    string
+	Span      string // what the trend covers
+	Count     int
+	Hold      string
+	Group     bool
 }
 
 // cards gives what needs a look, the most urgent first, at most maxCards. only
@@ -70,7 +72,7 @@ func (p *Page) card(ctx context.Context, l *look, e *alert.Episode, byName map[s
 	how := lookOf(f.Kind)
 	u, why := p.o.House.Urgency(e)
 	c := card{ID: e.ID, Class: string(u), Mark: how.Mark, Urgency: u, Why: why, State: e.State(), Text: f.Text, Sure: sure(&f),
-		Since: clock(f.Since, l.now, l.zone), UTC: utc(f.Since), Count: e.Count, Others: max(0, len(e.Loops())-1)}
+		Since: clock(f.Since, l.now, l.zone), UTC: utc(f.Since), Count: e.Count}
 	if c.Text == "" {
 		c.Text = capital(how.Word) + "."
 	}
@@ -87,10 +89,9 @@ func (p *Page) card(ctx context.Context, l *look, e *alert.Episode, byName map[s
 	c.Group = f.Kind == detect.SharedOscillation
 	switch {
 	case c.Group:
-		c.Subject, c.Link = strings.Join(first(e.Loops(), 3), ", "), "episodes/"+pathName(e.ID)
-		if n := len(e.Loops()); n > 3 {
-			c.Subject += " and " + number(float64(n-3), 6) + " more"
-		}
+		c.Names, c.Link = first(e.Loops(), 3), "episodes/"+pathName(e.ID)
+		c.MoreLoops = len(e.Loops()) - len(c.Names)
+		c.Subject = strings.Join(c.Names, ", ")
 		if ls := e.Loops(); len(ls) > 0 {
 			name = ls[0]
 		}
@@ -120,7 +121,7 @@ func (p *Page) cardTrend(ctx context.Context, c *card, l *configs.Loop, since in
 	c.Width = sparkBuckets
 	// What is long is read already, for the strip.
 	if span := time.Duration(end-from) * time.Millisecond; span > sparkBuckets*bucketMs*time.Millisecond {
-		if b, err := p.strips.upTo(ctx, p.o.House, l, now, span); err == nil {
+		if b, err := p.strips.between(ctx, p.o.House, l, now, from, end); err == nil {
 			c.Trace, c.Width = trace(b), len(b)
 		}
 	} else {

@@ -18,15 +18,9 @@ const dossierSpan = 14 * 24 * time.Hour
 // form=csv its parts for programs. from and to choose the span. One is made at a
 // time: weeks of frames stand in memory meanwhile.
 func (p *Page) serveDossier(w http.ResponseWriter, r *http.Request) {
-	l := p.look()
-	s := l.loop(loopName(r))
-	if s == nil {
-		p.answer(w, r, ErrUnknownLoop)
-		return
-	}
-	span, err := readSpan(r.URL.Query(), l.now, dossierSpan.Hours())
+	l, s, span, err := p.loopAndSpan(r, always(dossierSpan.Hours()))
 	if err != nil {
-		p.answer(w, r, badRequest{err})
+		p.answer(w, r, err)
 		return
 	}
 	select {
@@ -36,8 +30,14 @@ func (p *Page) serveDossier(w http.ResponseWriter, r *http.Request) {
 		return
 	}
 	frames := p.o.House.Frames(r.Context(), s.Loop.Name, span.From, span.To)
+	past, err := p.o.House.Past([]string{s.Loop.Name}, span.From)
+	if err != nil {
+		p.fail(w, r, err)
+		return
+	}
 	in := dossier.Input{Loop: s.Loop, Frames: frames, From: span.From, To: span.To, Made: l.now, Zone: l.zone, Site: p.o.House.Site().Name,
-		Version: p.o.House.Watch().Version, Source: "the running watch", Partners: p.partners(s, &l)}
+		Version: p.o.House.Watch().Version, Source: "the running watch", Partners: p.partners(s, l)}
+	in.Told(past)
 	d, err := dossier.Build(in)
 	if errors.Is(err, dossier.ErrNoFrames) {
 		p.notFound(w, r, "nothing is kept of this loop in the last two weeks")

@@ -163,7 +163,7 @@ func (h *fakeHouse) kestrelFen() {
 			return 120 + amp*sq + 0.8*n(), 120, 47 + 0.8*tri, collector.Auto, 0
 		}
 	}
-	h.add("FIC-118", "filter 3 outlet flow", "filters", "m³/h", 0, 250, 1000, detect.Judged, "", saw(6, 0))
+	h.add("FIC-118", "filter 3 outlet flow", "filters", "m³/h", 0, 250, 1000, detect.Judged, "", saw(6, 0)).Position = "FIC-118.ZT"
 	h.add("PIC-107", "booster header pressure", "boosters", "bar", 0, 250, 1000, detect.Judged, "", saw(2.5, 6))
 	h.add("FIC-119", "filter 4 outlet flow", "filters", "m³/h", 0, 250, 1000, detect.Judged, "", saw(1.8, 14))
 	h.episode("FIC-118", alert.Morning, detect.Finding{Kind: detect.ValveStickingKind, Cause: detect.ValveSticking, Confidence: 0.9, Measures: m("period_s", 42.0, "amplitude_pct", 2.4, "amplitude_pv", 6.0, "op_swing_pct", 1.6),
@@ -220,7 +220,7 @@ func (h *fakeHouse) kestrelFen() {
 // hostile adds loops whose names and units try to do harm.
 func (h *fakeHouse) hostile() {
 	for i, x := range [][2]string{{"<script>window.harmed=1</script>", "<img src=x onerror=window.harmed=1>"}, {"لوب-٢٠٤ \u202eABC", "ضبط الكلور"}, {"\"'><svg onload=window.harmed=1>", "javascript:window.harmed=1"},
-		{"A/B?c=d#e%2F&f", "path in a name"}, {"W" + fmt.Sprintf("%060d", 7) + "WWW", "a service text that goes on and on and on, over the whole of the works and back again, and does not stop where it should have stopped"}, {"=cmd|' /C calc'!A0", "formula"}, {"..", "dots"}} {
+		{"A/B?c=d#e%2F&f", "path in a name"}, {"W" + fmt.Sprintf("%060d", 7) + "WWW", "a service text that goes on and on and on, over the whole of the works and back again, and does not stop where it should have stopped"}, {"=cmd|' /C calc'!A0", "formula"}, {"..", "dots"}, {"PLC1:FIC-7", "a colon in a name"}} {
 		l := h.add(x[0], x[1], "<b>area</b>", "<u>unit</u>", 0, 100, 5000, detect.Judged, "", quiet(50, 0.5, 50))
 		_ = l
 		if i < 3 {
@@ -275,9 +275,9 @@ func (h *fakeHouse) Watch() WatchState {
 			{Name: "works", Kind: "opcua", Link: "watching", Since: now - 3*86400000, LastData: now - 900, LagMs: 640, ClockOffsetMs: 120, CertDays: 3100, ServerCertDays: 212, Counts: map[string]uint64{"values": 91822331, "dropped": 0, "gaps": 4}},
 			{Name: "gateway", Kind: "mqtt", Link: "watching", Since: now - 5*3600000, LastData: now - 2100, LagMs: 1210, ClockOffsetMs: 3600400, Counts: map[string]uint64{"values": 5512031, "duplicates": 12}},
 			{Name: "digesters", Kind: "opcua", Link: "watching", Since: now - 86400000, LastData: now - 1500, LagMs: 900, Refused: []collector.RefusedTag{{Loop: "TIC-229", Address: "nsu=urn:kestrel-fen:plant;s=TIC-229.PV", Why: "the server does not know this node"}}}},
-		Parts:   []Part{{"assembler", now - 800, "well", true}, {"store", now - 6000, "well", true}, {"desk", now - 9000, "well", true}},
+		Parts:   []Part{{"ledger", now - 800, "well", true}, {"flush", now - 6000, "well", true}, {"shard 0", now - 900, "well", true}},
 		Store:   StoreState{Bytes: 8123456789, Limit: 20e9, DiskFree: 71e9, LastFlush: now - 6000},
-		Senders: []SenderState{{"hook", "webhook", 0, 0, now - 4000000, ""}, {"mail", "mail", 2, now - 700000, now - 90000000, "the relay refuses: 421 try later"}}, Clock: ClockState{Steps: 1}}
+		Senders: []SenderState{{"hook", "webhook", 0, 0, now - 4000000, ""}, {"mail", "mail", 2, now - 700000, now - 90000000, "the relay refuses: 421 try later"}}, Clock: ClockState{Steps: 1, LastStep: now - 26*3600000}}
 	if h.down {
 		w.Sources[1].Link, w.Sources[1].Since, w.Sources[1].Problem, w.Sources[1].Hint = "down", now-14*60000, "connection refused by 10.1.0.6:8883", "see whether the broker runs"
 	}
@@ -337,24 +337,15 @@ func (h *fakeHouse) Frames(ctx context.Context, loop string, from, to int64) ite
 			}
 			pv, sp, op, mode, flags := s.at(float64(t-base)/1000, noiseAt(uint64(t)+uint64(len(loop))*77))
 			f := collector.Frame{Time: t, PV: collector.Clean32(pv), SP: collector.Clean32(sp), OP: collector.Clean32(op), Mode: mode, Flags: flags, Feedforward: collector.NaN32, Position: collector.NaN32}
+			if l := h.find(loop).Loop; l.Position != "" {
+				f.Position = float32(math.Round(op/0.8) * 0.8) // a stem that moves in steps
+				f.Feedforward = collector.Clean32(20 + 4*math.Sin(float64(t-base)/3e6))
+			}
 			if !yield(f, nil) {
 				return
 			}
 		}
 	}
-}
-
-func (h *fakeHouse) Tuning(_ context.Context, loop string, from int64) ([]TuningReading, error) {
-	if loop != "AIC-204" {
-		return nil, nil
-	}
-	var out []TuningReading
-	n := noiseAt(4)
-	for d := 13; d > 0; d-- {
-		g, r := 1+0.03*n(), 240+6*n()
-		out = append(out, TuningReading{Time: h.ms(float64(d) * 24), Gain: g, GainLow: g * 0.95, GainHigh: g * 1.05, ResetS: r, ResetLow: r * 0.92, ResetHigh: r * 1.08})
-	}
-	return out, nil
 }
 
 func (h *fakeHouse) Settings(w io.Writer) error {
@@ -384,6 +375,32 @@ func (h *fakeHouse) Episode(id string) (alert.Episode, []alert.Entry, error) {
 		}
 	}
 	return alert.Episode{}, nil, fmt.Errorf("episode %q is %w", id, alert.ErrUnknown)
+}
+
+func (h *fakeHouse) Past(loops []string, _ int64) (alert.Past, error) {
+	h.mu.Lock()
+	defer h.mu.Unlock()
+	p := alert.Past{Loops: map[string]alert.History{}}
+	for _, e := range h.eps {
+		for _, m := range e.Members {
+			p.Newest = append(p.Newest, m.Finding)
+		}
+		for _, l := range e.Loops() {
+			x := p.Loops[l]
+			for _, j := range h.journal[e.ID] {
+				if j.Finding != nil {
+					x.Findings = append(x.Findings, *j.Finding)
+				}
+			}
+			p.Loops[l] = x
+		}
+	}
+	for _, l := range loops {
+		x := p.Loops[l]
+		x.Notes = []alert.Remark{{Wall: h.ms(30), Who: "Jo", Text: "reset 42 to 60 s, valve greased"}}
+		p.Loops[l] = x
+	}
+	return p, nil
 }
 
 func (h *fakeHouse) Urgency(e *alert.Episode) (alert.Urgency, string) {

@@ -6,6 +6,7 @@ import (
 	"crypto/sha256"
 	"crypto/subtle"
 	"errors"
+	"maps"
 	"net"
 	"net/http"
 	"net/url"
@@ -36,6 +37,8 @@ const (
 	sessionAge = 30 * 24 * time.Hour
 	maxBody    = 64 << 10
 	maxStreams = 256
+	// More than 1000 sessions are no people: all begin anew.
+	maxSessions = 1000
 	// A page asks for a dozen things at once and then for little.
 	perSecond, burst = 60, 300
 )
@@ -51,17 +54,28 @@ type gate struct {
 	mu       sync.Mutex
 	rates    map[string]*rate.Limiter
 	tries    map[string]*rate.Limiter // signing in
-	sessions map[[sha256.Size]byte]session
+	sessions map[[sha256.Size]byte]Session
 }
 
-type session struct {
-	token   [sha256.Size]byte // hash; the token must still be in the file
-	expires time.Time
+// Session is one who is signed in. Token is the hash of the token, which must
+// still be in the tokens file.
+type Session struct {
+	Token   [sha256.Size]byte
+	Expires time.Time
+}
+
+// Sessions keeps who is signed in over a restart, so that nobody is asked for a
+// token at night because the box was updated. An id is the hash of a cookie:
+// what is kept signs nobody in.
+type Sessions interface {
+	Sessions() (map[[sha256.Size]byte]Session, error)
+	KeepSession(id [sha256.Size]byte, s Session) error
+	DropSession(id [sha256.Size]byte) error
 }
 
 func newGate(p *Page, next http.Handler, tokens *tokenFile) *gate {
 	g := &gate{p: p, next: next, tokens: tokens, origins: http.NewCrossOriginProtection(),
-		hosts: map[string]bool{"localhost": true}, rates: map[string]*rate.Limiter{}, tries: map[string]*rate.Limiter{}, sessions: map[[sha256.Size]byte]session{}}
+		hosts: map[string]bool{"localhost": true}, rates: map[string]*rate.Limiter{}, tries: map[string]*rate.Limiter{}, sessions: map[[sha256.Size]byte]Session{}}
 	if h, err := os.Hostname(); err == nil {
 		g.hosts[strings.ToLower(h)] = true
 	}
@@ -71,10 +85,19 @@ func newGate(p *Page, next http.Handler, tokens *tokenFile) *gate {
 	if h, _, err := net.SplitHostPort(p.o.Page.Listen); err == nil && h != "" {
 		g.hosts[strings.ToLower(h)] = true
 	}
+	if tokens != nil && p.o.Sessions != nil {
+		kept, err := p.o.Sessions.Sessions()
+		if err != nil {
+			p.once("sessions", err)
+		}
+		maps.Copy(g.sessions, kept)
+	}
 	return g
 }
 
-// secure sets what every answer carries.
+// secure sets what every answer carries. Strict-Transport-Security is not among
+// it: it would bind every port of the box's name, also those of other programs,
+// and what listens here with a certificate answers nothing in plain.
 func secure(h http.Header) {
 	h.Set("Content-Security-Policy", "default-src 'none'; script-src 'self'; style-src 'self'; img-src 'self' data:; connect-src 'self'; form-action 'self'; base-uri 'none'; frame-ancestors 'none'")
 	h.Set("X-Content-Type-Options", "nosniff")
@@ -201,10 +224,10 @@ func (g *gate) visitor(r *http.Request) (Visitor, bool) {
 	g.mu.Lock()
 	s, ok := g.sessions[sha256.Sum256([]byte(c.Value))]
 	g.mu.Unlock()
-	if !ok || g.p.o.Clock().After(s.expires) {
+	if !ok || g.p.o.Clock().After(s.Expires) {
 		return Visitor{}, false
 	}
-	return g.byHash(s.token)
+	return g.byHash(s.Token)
 }
 
 // byHash looks through all tokens: how long it takes says nothing.
@@ -259,23 +282,47 @@ func (g *gate) signIn(w http.ResponseWriter, r *http.Request) {
 	id := rand.Text()
 	now := g.p.o.Clock()
 	g.mu.Lock()
+	var gone [][sha256.Size]byte
 	for k, s := range g.sessions {
-		if now.After(s.expires) || len(g.sessions) >= 1000 {
+		if now.After(s.Expires) || len(g.sessions) >= maxSessions {
 			delete(g.sessions, k)
+			gone = append(gone, k)
 		}
 	}
-	g.sessions[sha256.Sum256([]byte(id))] = session{h, now.Add(sessionAge)}
+	key, s := sha256.Sum256([]byte(id)), Session{h, now.Add(sessionAge)}
+	g.sessions[key] = s
 	g.mu.Unlock()
+	g.keep(func(k Sessions) error {
+		for _, old := range gone {
+			if err := k.DropSession(old); err != nil {
+				return err
+			}
+		}
+		return k.KeepSession(key, s)
+	})
 	g.p.o.Log.Info("signed in", "audit", true, "who", v.Name, "from", remote(r))
 	http.SetCookie(w, g.cookie(r, id, int(sessionAge.Seconds())))
 	seeOther(w, backTo(r.PostFormValue("to")))
 }
 
+// keep writes a change of the sessions down. Where that fails they last until a
+// restart.
+func (g *gate) keep(change func(Sessions) error) {
+	if g.p.o.Sessions == nil {
+		return
+	}
+	if err := change(g.p.o.Sessions); err != nil {
+		g.p.once("sessions", err)
+	}
+}
+
 func (g *gate) signOut(w http.ResponseWriter, r *http.Request, v Visitor) {
 	if c, err := r.Cookie(cookieName); err == nil {
+		key := sha256.Sum256([]byte(c.Value))
 		g.mu.Lock()
-		delete(g.sessions, sha256.Sum256([]byte(c.Value)))
+		delete(g.sessions, key)
 		g.mu.Unlock()
+		g.keep(func(k Sessions) error { return k.DropSession(key) })
 		g.p.o.Log.Info("signed out", "audit", true, "who", v.Name, "from", remote(r))
 	}
 	http.SetCookie(w, g.cookie(r, "", -1))

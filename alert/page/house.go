@@ -8,6 +8,7 @@ import (
 	"time"
 
 	"midwatch/alert"
+	"midwatch/alert/page/api"
 	"midwatch/collector"
 	"midwatch/configs"
 	"midwatch/detect"
@@ -36,7 +37,9 @@ type House interface {
 	Frames(ctx context.Context, loop string, from, to int64) iter.Seq2[collector.Frame, error]
 	// Tuning gives readings of the tuning in service since a time, oldest first;
 	// nil where none are kept.
-	Tuning(ctx context.Context, loop string, from int64) ([]TuningReading, error)
+	Tuning(ctx context.Context, loop string, from int64) ([]api.TuningReading, error)
+	// Picture is the evidence held of a loop that can be drawn over its trend.
+	Picture(loop string) detect.Picture
 	// Settings writes the effective configuration, secrets masked.
 	Settings(w io.Writer) error
 	Desk
@@ -56,6 +59,7 @@ type Desk interface {
 	Shelve(loop, who, why string, until time.Time) error
 	Unshelve(loop, who, why string) error
 	Shelves() []alert.Shelf
+	Past(loops []string, from int64) (alert.Past, error)
 }
 
 // LoopState is a loop of the list and the state of its watch.
@@ -122,16 +126,5 @@ type SenderState struct {
 // ClockState compares the clocks.
 type ClockState struct {
 	Steps    uint64 // steps of any source's clock seen since the start
-	LastStep int64
-}
-
-// TuningReading is gain (%/%) and reset time (s) in service at a time (ms UTC),
-// each with the range the data allow. NaN is not known.
-type TuningReading struct {
-	Time                int64
-	Gain                float64
-	GainLow, GainHigh   float64
-	ResetS              float64
-	ResetLow, ResetHigh float64
-	Read                bool // read from tags; else fitted to the data
+	LastStep int64  // when a clock, a source's or our own, was last seen to step; 0: not since the start
 }

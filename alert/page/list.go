@@ -21,20 +21,15 @@ const rowsAtOnce = 40
 
 // filter is what of the list is wanted, as it stands in the address.
 type filter struct {
-	Text, Area, Source, Kind string
-	See                      bool // only with something to see
-	Hours                    int
-	Offset                   int
+	Text, Area, Service, Source, Kind string
+	See                               bool   // only with something to see
+	Span                              string // see [look.stretch]
+	Offset                            int
 }
 
-// spanHours are the lengths of the strip.
-var spanHours = []int{8, 12, 24}
-
 func readFilter(q url.Values) filter {
-	f := filter{Text: cutText(q.Get("q"), 200), Area: q.Get("area"), Source: q.Get("source"), Kind: q.Get("kind"), See: q.Get("see") == "1", Hours: 12}
-	if h, err := strconv.Atoi(q.Get("hours")); err == nil && slices.Contains(spanHours, h) {
-		f.Hours = h
-	}
+	f := filter{Text: cutText(q.Get("q"), 200), Area: q.Get("area"), Service: cutText(q.Get("service"), 200), Source: q.Get("source"), Kind: q.Get("kind"),
+		See: q.Get("see") == "1", Span: cmp.Or(cutText(q.Get("span"), 10), usualSpan)}
 	if n, err := strconv.Atoi(q.Get("from")); err == nil && n > 0 {
 		f.Offset = n
 	}
@@ -51,13 +46,14 @@ func (f filter) query() string {
 	}
 	set("q", f.Text)
 	set("area", f.Area)
+	set("service", f.Service)
 	set("source", f.Source)
 	set("kind", f.Kind)
 	if f.See {
 		v.Set("see", "1")
 	}
-	if f.Hours != 12 {
-		v.Set("hours", strconv.Itoa(f.Hours))
+	if f.Span != usualSpan {
+		v.Set("span", f.Span)
 	}
 	if f.Offset > 0 {
 		v.Set("from", strconv.Itoa(f.Offset))
@@ -68,19 +64,20 @@ func (f filter) query() string {
 func (f filter) at(offset int) filter { f.Offset = offset; return f }
 
 // Narrowed says that the list is not whole.
-func (f filter) Narrowed() bool { return f.Text+f.Area+f.Source+f.Kind != "" || f.See }
+func (f filter) Narrowed() bool { return f.Text+f.Area+f.Service+f.Source+f.Kind != "" || f.See }
 
 // look is one reading of the house that a whole answer is made from.
 type look struct {
-	now   time.Time
-	zone  *time.Location
-	loops []LoopState
-	eps   []alert.Episode
-	found map[string][]trouble
+	now    time.Time
+	zone   *time.Location
+	shifts []int // see [configs.Page]
+	loops  []LoopState
+	eps    []alert.Episode
+	found  map[string][]trouble
 }
 
 func (p *Page) look() look {
-	l := look{now: p.o.Clock(), zone: p.o.House.Site().Zone, eps: p.o.House.Episodes()}
+	l := look{now: p.o.Clock(), zone: p.o.House.Site().Zone, shifts: p.o.Page.Shifts, eps: p.o.House.Episodes()}
 	l.loops = p.loops(l.now)
 	l.found = troubles(p.o.House, l.eps)
 	return l
@@ -119,7 +116,7 @@ const lastToSee = 9
 // pick gives the loops that pass the filter, in order of need, then as the desk
 // has them, then by name.
 func (l *look) pick(f filter) []*LoopState {
-	since := l.now.Add(-time.Duration(f.Hours) * time.Hour).UnixMilli()
+	since := l.stretch(f.Span).From
 	type ranked struct {
 		*LoopState
 		need, place int
@@ -156,6 +153,9 @@ func (f *filter) passes(s *LoopState, ts []trouble, words []string) bool {
 	if f.Area != "" && l.Area != f.Area || f.Source != "" && l.Source != f.Source {
 		return false
 	}
+	if f.Service != "" && !strings.Contains(strings.ToLower(l.Service), strings.ToLower(f.Service)) {
+		return false
+	}
 	if f.Kind != "" && !slices.ContainsFunc(ts, func(t trouble) bool { return string(t.Kind) == f.Kind && t.open() }) {
 		return false
 	}
@@ -183,18 +183,18 @@ type rows struct {
 	Bands  []band
 	Offset int
 	Total  int
-	Hours  int
+	Word   string // of the span
 }
 
 func (p *Page) rows(ctx context.Context, l *look, picked []*LoopState, f filter) (rows, error) {
-	r := rows{Offset: f.Offset, Total: len(picked), Hours: f.Hours}
-	span := time.Duration(f.Hours) * time.Hour
+	st := l.stretch(f.Span)
+	r := rows{Offset: f.Offset, Total: len(picked), Word: st.Word}
 	for _, s := range picked[min(f.Offset, len(picked)):min(f.Offset+rowsAtOnce, len(picked))] {
-		b, err := p.strips.upTo(ctx, p.o.House, s.Loop, l.now, span)
+		b, err := p.strips.between(ctx, p.o.House, s.Loop, l.now, st.From, st.To)
 		if ctx.Err() != nil {
 			return r, ctx.Err()
 		}
-		x := bandOf(s, l.found[s.Loop.Name], b, l.now, span, l.zone)
+		x := bandOf(s, l.found[s.Loop.Name], b, st, l.now, l.zone)
 		if err != nil {
 			// One strip that cannot be read does not take the list away.
 			p.once("strips", err)
@@ -212,23 +212,22 @@ type listPage struct {
 	More       int // open episodes beyond the cards
 	Filter     filter
 	Areas      []string
+	Services   []string
 	Sources    []string
 	Kinds      []kindLook
 	Rows       rows
 	Blocks     []int // offsets that follow the rows, for the script
 	Axis       []string
+	Past       bool // the span has ended before now
 	Prev, Next string
 	CSV        string
-	Hours      []hourLink
+	Spans      []spanLink
 	All        int // loops in the list
 	Marks      []kindLook
 }
 
-type hourLink struct {
-	Hours int
-	Query string
-	On    bool
-}
+// maxServices bounds the services that are proposed; any text may be written.
+const maxServices = 200
 
 // maxCards bounds what needs a look at the top; the strips have the rest.
 const maxCards = 12
@@ -246,9 +245,10 @@ func (p *Page) serveList(w http.ResponseWriter, r *http.Request) {
 	v := listPage{shell: p.shell(r, "", &l), Filter: f, Rows: rs, All: len(l.loops), Marks: kindLooks[:12], Kinds: kindLooks[:12]}
 	v.Cards, v.More = p.cards(r.Context(), &l, "")
 	for i := range l.loops {
-		v.Areas, v.Sources = append(v.Areas, l.loops[i].Loop.Area), append(v.Sources, l.loops[i].Loop.Source)
+		lp := l.loops[i].Loop
+		v.Areas, v.Services, v.Sources = append(v.Areas, lp.Area), append(v.Services, lp.Service), append(v.Sources, lp.Source)
 	}
-	v.Areas, v.Sources = distinct(v.Areas), distinct(v.Sources)
+	v.Areas, v.Services, v.Sources = distinct(v.Areas), first(distinct(v.Services), maxServices), distinct(v.Sources)
 	for o := f.Offset + rowsAtOnce; o < len(picked); o += rowsAtOnce {
 		v.Blocks = append(v.Blocks, o)
 	}
@@ -259,21 +259,18 @@ func (p *Page) serveList(w http.ResponseWriter, r *http.Request) {
 		v.Next = f.at(f.Offset + rowsAtOnce).query()
 	}
 	v.CSV = f.at(0).query()
-	for _, h := range spanHours {
-		g := f.at(0)
-		g.Hours = h
-		v.Hours = append(v.Hours, hourLink{h, g.query(), h == f.Hours})
-	}
-	v.Axis = axis(l.now, time.Duration(f.Hours)*time.Hour, l.zone)
+	v.Spans = l.listSpans(f)
+	st := l.stretch(f.Span)
+	v.Axis, v.Past = axis(st, l.zone), !st.Live
 	v.Title = v.Site
 	p.show(w, r, "list", v)
 }
 
 // axis labels a quarter of the span each.
-func axis(now time.Time, span time.Duration, zone *time.Location) []string {
+func axis(st stretch, zone *time.Location) []string {
 	var out []string
-	for i := range 5 {
-		out = append(out, now.Add(-span+span/4*time.Duration(i)).In(zone).Format("15:04"))
+	for i := range int64(5) {
+		out = append(out, time.UnixMilli(st.From+(st.To-st.From)*i/4).In(zone).Format("15:04"))
 	}
 	return out
 }

@@ -6,11 +6,13 @@ import (
 	"math"
 	"net/http"
 	"net/url"
+	"regexp"
 	"slices"
 	"strconv"
 	"time"
 
 	"midwatch/alert"
+	"midwatch/alert/page/api"
 	"midwatch/configs"
 	"midwatch/detect"
 )
@@ -24,6 +26,7 @@ type loopPage struct {
 	Why     string
 	Blind   []string
 	Said    []said
+	Stands  bool // any of Said
 	Facts   []measureLine
 	Tuning  []measureLine
 	Changes []line
@@ -39,11 +42,12 @@ type loopPage struct {
 	ToMs    int64
 	Hours   float64 // > 0: goes on with the time
 	XY      template.HTML
-	TuneSVG template.HTML
+	Tuned   tuningView
 	Shelf   *alert.Shelf
 	ShelfTo string
 	Inner   *configs.Loop
 	Outer   *configs.Loop
+	OPUnit  string
 	Empty   bool
 	WhoWant bool // a name must be given with a form
 	Done    string
@@ -84,18 +88,12 @@ type spanLink struct {
 }
 
 func (p *Page) serveLoop(w http.ResponseWriter, r *http.Request) {
-	l := p.look()
-	s := l.loop(loopName(r))
-	if s == nil {
-		p.answer(w, r, ErrUnknownLoop)
+	l, s, span, err := p.loopAndSpan(r, defaultHours)
+	if err != nil {
+		p.answer(w, r, err)
 		return
 	}
 	ts := l.found[s.Loop.Name]
-	span, err := readSpan(r.URL.Query(), l.now, defaultHours(ts, l.now))
-	if err != nil {
-		p.answer(w, r, badRequest{err})
-		return
-	}
 	done, err := p.read(r.Context())
 	if err != nil {
 		p.answer(w, r, err)
@@ -107,8 +105,8 @@ func (p *Page) serveLoop(w http.ResponseWriter, r *http.Request) {
 		p.answer(w, r, err)
 		return
 	}
-	v := loopPage{shell: p.shell(r, up(r), &l), Loop: s.Loop, Path: pathName(s.Loop.Name), FromMs: span.From, ToMs: span.To, Hours: span.Hours,
-		Empty: t.Frames == 0, Done: r.URL.Query().Get("done")}
+	v := loopPage{shell: p.shell(r, up(r), l), Loop: s.Loop, Path: pathName(s.Loop.Name), FromMs: span.From, ToMs: span.To, Hours: span.Hours,
+		OPUnit: percentOf(s.Loop), Empty: t.Frames == 0, Done: r.URL.Query().Get("done")}
 	v.Title = s.Loop.Name + " · " + v.Site
 	v.WhoWant = v.Visitor.Name == ""
 	v.From, v.To = clock(span.From, l.now, l.zone), clock(span.To, l.now, l.zone)
@@ -116,10 +114,14 @@ func (p *Page) serveLoop(w http.ResponseWriter, r *http.Request) {
 	v.Query = spanQuery(span)
 	view, known := p.o.House.View(s.Loop.Name)
 	p.fillState(&v, s, &view, known)
-	p.fillSaid(r, &v, ts, &l)
+	p.fillSaid(r, &v, ts, l)
 	v.Explain, _ = p.o.House.Explain(s.Loop.Name)
-	v.Changes = changeLines(t, &l)
-	v.Spans = spanLinks(span, &l, ts)
+	for i := range v.Explain {
+		v.Explain[i] = siteTimes(v.Explain[i], l)
+	}
+	t.tuningChanges(ts)
+	v.Changes = changeLines(t, l)
+	v.Spans = spanLinks(span, l, ts)
 	xyFrom, xyWord := xySpan(ts, t)
 	xy, err := readXY(r.Context(), p.o.House, s.Loop.Name, xyFrom, span.To)
 	if err != nil {
@@ -127,11 +129,11 @@ func (p *Page) serveLoop(w http.ResponseWriter, r *http.Request) {
 		return
 	}
 	v.XY = xySVG(xy, s.Loop, xyWord)
-	readings, err := p.o.House.Tuning(r.Context(), s.Loop.Name, l.now.Add(-14*24*time.Hour).UnixMilli())
+	readings, err := p.o.House.Tuning(r.Context(), s.Loop.Name, l.now.Add(-tuningFor).UnixMilli())
 	if err != nil {
 		p.once("tuning", err)
 	}
-	v.TuneSVG = tuningSVG(append(readings, t.tuning...), &view, s.Loop, l.now, l.zone)
+	v.Tuned = tuningOver(joinTuning(readings, t.tuning, tuningFound(ts)), &view, s.Loop, l)
 	for _, sh := range p.o.House.Shelves() {
 		if sh.Loop == s.Loop.Name {
 			v.Shelf, v.ShelfTo = &sh, clock(sh.Until, l.now, l.zone)
@@ -149,13 +151,34 @@ func (p *Page) serveLoop(w http.ResponseWriter, r *http.Request) {
 	p.show(w, r, "loop", v)
 }
 
+// stamp is a time as the watch writes it for programs.
+var stamp = regexp.MustCompile(`\d{4}-\d\d-\d\dT\d\d:\d\d:\d\d(?:\.\d+)?Z`)
+
+// siteTimes writes the times of a line on the site's clock.
+func siteTimes(s string, l *look) string {
+	return stamp.ReplaceAllStringFunc(s, func(x string) string {
+		t, err := time.Parse(time.RFC3339Nano, x)
+		if err != nil {
+			return x
+		}
+		return clock(t.UnixMilli(), l.now, l.zone)
+	})
+}
+
+// joinTuning puts readings of several origins in order of time.
+func joinTuning(some ...[]api.TuningReading) []api.TuningReading {
+	out := slices.Concat(some...)
+	slices.SortStableFunc(out, func(a, b api.TuningReading) int { return cmp.Compare(a.Time, b.Time) })
+	return out
+}
+
 // defaultHours shows the trouble with as much before it, else four hours.
-func defaultHours(ts []trouble, now time.Time) float64 {
-	if len(ts) > 0 && ts[0].open() {
-		h := float64(now.UnixMilli()-ts[0].Since) / 3600e3
-		return math.Ceil(max(4, min(1.7*h, 48)))
+func defaultHours(l *look, s *LoopState) float64 {
+	if ts := l.found[s.Loop.Name]; len(ts) > 0 && ts[0].open() {
+		h := float64(l.now.UnixMilli()-ts[0].Since) / 3600e3
+		return math.Ceil(max(usualHours, min(1.7*h, 48)))
 	}
-	return 4
+	return usualHours
 }
 
 func spanQuery(s wanted) string {
@@ -176,6 +199,10 @@ func spanLinks(s wanted, l *look, ts []trouble) []spanLink {
 			word = "2 weeks"
 		}
 		out = append(out, spanLink{word, "hours=" + number(h, 4), s.Hours == h})
+	}
+	if this, _, ok := shiftsAt(l.now, l.zone, l.shifts); ok {
+		from := this.UnixMilli()
+		out = append(out, spanLink{"this shift", "from=" + strconv.FormatInt(from, 10), s.Hours == 0 && s.From == from})
 	}
 	if len(ts) > 0 {
 		until := ts[0].Until
@@ -203,11 +230,13 @@ func (p *Page) fillState(v *loopPage, s *LoopState, view *detect.View, known boo
 	if f.Time != 0 {
 		add("PV", quantity(float64(f.PV), unit))
 		add("SP", quantity(float64(f.SP), unit))
-		opUnit := ""
-		if lp.OPLow == 0 && lp.OPHigh == 100 {
-			opUnit = "%"
+		add("OP", quantity(float64(f.OP), percentOf(lp)))
+		if f.Position == f.Position {
+			add("position", quantity(float64(f.Position), percentOf(lp)))
 		}
-		add("OP", quantity(float64(f.OP), opUnit))
+		if f.Feedforward == f.Feedforward {
+			add("feed-forward", number(float64(f.Feedforward), 4))
+		}
 		mode := f.Mode.String()
 		if mode == "" {
 			mode = "not known"
@@ -272,7 +301,7 @@ func (p *Page) fillSaid(r *http.Request, v *loopPage, ts []trouble, l *look) {
 			}
 		}
 		seen[t.Episode] = true
-		v.Said = append(v.Said, x)
+		v.Said, v.Stands = append(v.Said, x), v.Stands || x.Open
 	}
 	v.Journal = journalLines(journal, l)
 }

@@ -34,6 +34,8 @@ type Options struct {
 	API   http.Handler     // what else lies below /api/, /healthz and /metrics; may be nil
 	Clock func() time.Time // wall clock; nil: time.Now
 	Log   *slog.Logger     // nil: discarded; audit events carry audit=true
+	// Sessions keeps who is signed in; nil: until the restart.
+	Sessions Sessions
 }
 
 // Page serves all views. It is safe for concurrent use and starts no goroutine
@@ -96,6 +98,8 @@ func (p *Page) routes() *http.ServeMux {
 	m.HandleFunc("POST /loops/{loop}/shelve", p.shelve)
 	m.HandleFunc("POST /loops/{loop}/unshelve", p.unshelve)
 	m.HandleFunc("GET /episodes/{id}", p.serveEpisode)
+	m.HandleFunc("GET /episodes/{id}/loops.csv", p.serveLanesCSV)
+	m.HandleFunc("GET /episodes/{id}/loops.svg", p.serveLanesSVG)
 	m.HandleFunc("POST /episodes/{id}/acknowledge", p.acknowledge)
 	m.HandleFunc("GET "+linkPath+"{token}", p.serveLink)
 	m.HandleFunc("POST "+linkPath+"{token}", p.acknowledgeByLink)
@@ -137,12 +141,13 @@ func up(r *http.Request) string {
 }
 
 // pathName is a name as one segment of a path. A dot alone would be taken for
-// a folder by browsers, so dots go out as ~2E.
+// a folder by browsers, so dots go out as ~2E; what stands before a colon would
+// be taken for a scheme.
 func pathName(s string) string {
 	if s == "." || s == ".." {
 		return strings.ReplaceAll(s, ".", "~2E")
 	}
-	return url.PathEscape(s)
+	return strings.ReplaceAll(url.PathEscape(s), ":", "%3A")
 }
 
 func loopName(r *http.Request) string {

@@ -47,10 +47,10 @@ func TestReadableWithoutScripts(t *testing.T) {
 	h.frozen = true
 	p := newPage(t, h)
 	for path, wants := range map[string][]string{
-		"/": {"judged <strong data-k=\"judged\">14</strong>", "What needs a look", "Swings ±0.08 mg/l", "growing since 01:12", "OP limit about 04:10", "swinging together since 21:32",
+		"/": {"judged <strong data-k=\"judged\">14</strong>", "What needs a look", "Swings ±0.08\u00a0mg/l", "growing since 01:12", "OP limit about 04:10", "swinging together since 21:32",
 			"tuning changed at 23:09", "was off its set point 17:08 – 20:14", "in manual 18:5", "no data 00:", "cannot judge: sampled every 5 min", "held since 02:08: manual", "data 2 s old", "3 of 3 sources alive",
 			`href="loops/AIC-204?from=`, "2026-01-06 01:12:12 UTC"},
-		"/loops/AIC-204": {"chlorine residual", "Swings ±0.08 mg/l", "reset too short, likely", "gain too high", "1.16 times a cycle", "66°", "24.6\u00a0s (23.4 to 25.9)", "told to on-call by mail", "lag of the controller 66 degrees",
+		"/loops/AIC-204": {"chlorine residual", "Swings ±0.08\u00a0mg/l", "reset too short, likely", "gain too high", "1.16 times a cycle", "66°", "24.6\u00a0s (23.4 to 25.9)", "told to on-call by mail", "lag of the controller 66 degrees",
 			"AIC-204/trend.svg?hours=4", "Acknowledge", "Shelve", "0.004\u00a0mg/l", "api/loops/AIC-204/dossier"},
 		"/loops/TIC-224":                  {"not in normal mode: in manual", "it is not judged now"},
 		"/loops/AIC-201":                  {"episodes/cascade:AIC-201"},
@@ -66,7 +66,7 @@ func TestReadableWithoutScripts(t *testing.T) {
 		"/episodes/none":                  {"not known"},
 		"/nowhere":                        {"There is no such page"},
 		"/?q=no+such+loop":                {"No loop fits"},
-		"/?hours=24&kind=valve-sticking":  {"The watch, last 24 hours", "1 of 17 loops"},
+		"/?span=24&kind=valve-sticking":   {"The watch, last 24 hours", "1 of 17 loops"},
 	} {
 		code, body := got(t, p, path)
 		if code >= 500 {
@@ -134,7 +134,7 @@ func TestHostileText(t *testing.T) {
 		if code != 200 {
 			t.Errorf("%s: answer %d", path, code)
 		}
-		for _, bad := range []string{"<script>w", "<img src=x", "<svg onload", "<b>area", "<u>unit"} {
+		for _, bad := range []string{"<script>w", "<img src=x", "<svg onload", "<b>area", "<u>unit", "ZgotmplZ"} {
 			if strings.Contains(body, bad) {
 				t.Errorf("%s holds %q", path, bad)
 			}
@@ -145,7 +145,7 @@ func TestHostileText(t *testing.T) {
 			}
 		}
 	}
-	if w := call(t, inside(p), "GET", "/strips.svg?hours=24", ""); w.Code != 200 || xmlProblem(w.Body.String()) != nil || !strings.Contains(w.Body.String(), "growing since") {
+	if w := call(t, inside(p), "GET", "/strips.svg?span=24", ""); w.Code != 200 || xmlProblem(w.Body.String()) != nil || !strings.Contains(w.Body.String(), "growing since") {
 		t.Errorf("strips.svg: %d, %v", w.Code, xmlProblem(w.Body.String()))
 	}
 	if w := call(t, inside(p), "GET", "/loops/AIC-204/trend.svg", ""); xmlProblem(w.Body.String()) != nil {
@@ -216,6 +216,10 @@ func TestDossier(t *testing.T) {
 			t.Errorf("policy %q", csp)
 		}
 	}
+	// What the watch found elsewhere counts: a loop that swings is not alone.
+	if body := call(t, inside(p), "GET", "/api/loops/FIC-118/dossier?hours=12&form=json", "").Body.String(); !strings.Contains(body, "FIC-119 (the watch sees them swing together)") {
+		t.Error("the dossier does not name the loops that swing with it")
+	}
 	for path, code := range map[string]int{"/api/loops/none/dossier": 404, "/api/loops/AIC-204/dossier?from=x": 400, "/api/loops/AIC-204/dossier?from=1000&to=2000": 404} {
 		if w := call(t, inside(p), "GET", path, ""); w.Code != code {
 			t.Errorf("%s: %d, want %d", path, w.Code, code)
@@ -233,8 +237,8 @@ func TestPhaseOrder(t *testing.T) {
 	if got := strings.Join(names, ""); got != "abcx" && got != "cabx" {
 		t.Errorf("order %s", got)
 	}
-	if !strings.Contains(lanes[1].Word, "° later") || !strings.Contains(lanes[3].Word, "little") {
-		t.Errorf("words %q, %q", lanes[1].Word, lanes[3].Word)
+	if !strings.Contains(lanes[1].Lag, "° later") || !strings.Contains(lanes[3].Lag, "little") {
+		t.Errorf("words %q, %q", lanes[1].Lag, lanes[3].Lag)
 	}
 }
 
@@ -307,7 +311,7 @@ func TestOrderOfNeed(t *testing.T) {
 	p := newPage(t, h)
 	l := p.look()
 	var names []string
-	for _, s := range l.pick(filter{Hours: 12}) {
+	for _, s := range l.pick(filter{Span: usualSpan}) {
 		names = append(names, s.Loop.Name)
 	}
 	want := "AIC-204 LIC-310 FIC-118 FIC-119 PIC-107 FIC-140 TIC-221 AIC-212 TIC-224 AIC-230 AIC-201 FIC-102 FIC-131 FIC-202 LIC-301 LIC-305 PIC-101"
@@ -382,7 +386,7 @@ func BenchmarkFirstRows(b *testing.B) {
 	}
 	l := p.look()
 	for b.Loop() {
-		if _, err := p.rows(b.Context(), &l, l.pick(filter{Hours: 12}), filter{Hours: 12}); err != nil {
+		if _, err := p.rows(b.Context(), &l, l.pick(filter{Span: usualSpan}), filter{Span: usualSpan}); err != nil {
 			b.Fatal(err)
 		}
 	}

@@ -96,9 +96,9 @@ func (s *strips) keep(loops []LoopState) {
 	}
 }
 
-// upTo reads what is new of the loop and copies the buckets of the span that
-// ends at now, oldest first.
-func (s *strips) upTo(ctx context.Context, frames collector.FrameReader, l *configs.Loop, now time.Time, span time.Duration) ([]bucket, error) {
+// between reads what is new of the loop up to now and copies the buckets of a
+// span (ms UTC) within the day before now, oldest first.
+func (s *strips) between(ctx context.Context, frames collector.FrameReader, l *configs.Loop, now time.Time, start, end int64) ([]bucket, error) {
 	r := s.ring(l)
 	r.mu.Lock()
 	defer r.mu.Unlock()
@@ -114,7 +114,8 @@ func (s *strips) upTo(ctx context.Context, frames collector.FrameReader, l *conf
 		}
 		r.add(&f, l)
 	}
-	n := min(int64(span.Milliseconds()/bucketMs), ringBuckets)
+	last = min(last, end/bucketMs)
+	n := max(1, min((end-start)/bucketMs, last-r.first+1))
 	out := make([]bucket, 0, n)
 	for b := last - n + 1; b <= last; b++ {
 		i := b % ringBuckets

@@ -100,7 +100,7 @@ var viewFiles embed.FS
 
 var views = template.Must(template.New("").Funcs(template.FuncMap{
 	"path": pathName, "tag": func() string { return assetTag }, "marks": func() template.HTML { return marks },
-	"capital": capital, "bytes": bytesText, "number": number, "words": func(c detect.Cause) string { return strings.ReplaceAll(string(c), "-", " ") },
+	"capital": capital, "glue": glue, "bytes": bytesText, "number": number, "words": func(c detect.Cause) string { return strings.ReplaceAll(string(c), "-", " ") },
 	// A query is made by url.Values.Encode: only what must not be encoded again.
 	"q": func(s string) template.URL { return template.URL("?" + s) },
 }).ParseFS(viewFiles, "views/*.html"))

@@ -40,6 +40,8 @@ type fresh struct {
 	PV    column  `json:"pv"`
 	SP    column  `json:"sp"`
 	OP    column  `json:"op"`
+	Pos   column  `json:"pos,omitempty"`
+	FF    column  `json:"ff,omitempty"`
 }
 
 // maxFresh bounds the frames of one event; what is beyond is fetched as a span.
@@ -119,6 +121,7 @@ func (s *stream) send() error {
 		f.add(&x)
 	}
 	if len(f.Times) > 0 {
+		f.Pos, f.FF = f.Pos.known(), f.FF.known()
 		if err := s.event("fresh", f); err != nil {
 			return err
 		}
@@ -129,6 +132,7 @@ func (s *stream) send() error {
 func (f *fresh) add(x *collector.Frame) {
 	f.Times = append(f.Times, x.Time)
 	f.PV, f.SP, f.OP = append(f.PV, x.PV), append(f.SP, x.SP), append(f.OP, x.OP)
+	f.Pos, f.FF = append(f.Pos, x.Position), append(f.FF, x.Feedforward)
 }
 
 func (s *stream) event(name string, v any) error {

@@ -12,7 +12,6 @@ import (
 
 	"midwatch/collector"
 	"midwatch/configs"
-	"midwatch/detect"
 )
 
 // drawing builds an SVG of text and paths. Colours are classes: the sheet of
@@ -102,7 +101,7 @@ func trendSVG(t *trend, l *configs.Loop, zone *time.Location) string {
 	x := scale{float64(t.From), float64(t.To), svgLeft, svgRight}
 	low, high := bounds(math.Abs(l.PVSpan())*0.02, t.PV, t.SP)
 	y := scale{low, high, svgMid, svgTop}
-	olow, ohigh := bounds(math.Abs(l.OPSpan())*0.05, t.OP)
+	olow, ohigh := bounds(math.Abs(l.OPSpan())*0.05, t.OP, t.Pos)
 	o := scale{olow, ohigh, svgBottom, svgOPTop}
 	clip := func(v float64) float64 { return max(svgLeft, min(svgRight, v)) }
 	for _, r := range t.Runs {
@@ -111,7 +110,7 @@ func trendSVG(t *trend, l *configs.Loop, zone *time.Location) string {
 				max(1, clip(x.at(float64(r.To)))-clip(x.at(float64(r.From)))), svgBottom-svgTop, "run-"+r.What, html.EscapeString(r.Word))
 		}
 	}
-	for i, s := range t.Troubles {
+	for _, s := range t.Troubles {
 		to := s.To
 		if to == 0 {
 			to = t.To
@@ -121,11 +120,6 @@ func trendSVG(t *trend, l *configs.Loop, zone *time.Location) string {
 		if s.From >= t.From {
 			d.line(a, svgTop, a, svgBottom, "onset "+s.Class)
 		}
-		anchor, tx := "start", a+6
-		if a+6+7.5*float64(len(s.Label)) > svgRight && a > svgW/2 {
-			anchor, tx = "end", a-6
-		}
-		d.text(tx, svgTop+12+float64(i%4)*15, "say "+s.Class, anchor, s.Label)
 	}
 	for _, v := range y.ticks(6) {
 		d.line(svgLeft, y.at(v), svgRight, y.at(v), "grid")
@@ -146,7 +140,17 @@ func trendSVG(t *trend, l *configs.Loop, zone *time.Location) string {
 		}
 	}
 	d.text(svgLeft, 16, "lab", "start", strings.TrimSpace("PV (full), SP (dashed)  "+l.Unit))
-	d.text(svgLeft, svgOPTop-8, "lab", "start", "OP  "+opUnit(l))
+	below := "OP  " + opUnit(l)
+	if t.Pos != nil {
+		below += ", position (grey)"
+		d.path(t.Times, t.Pos, x, o, "pos")
+	}
+	if t.FF != nil {
+		flow, fhigh := bounds(1e-9, t.FF)
+		below += ", feed-forward (dotted, " + number(flow, 4) + " to " + number(fhigh, 4) + " over the height)"
+		d.path(t.Times, t.FF, x, scale{flow, fhigh, svgBottom, svgOPTop}, "ff")
+	}
+	d.text(svgLeft, svgOPTop-8, "lab", "start", below)
 	for _, m := range timeTicks(t.From, t.To, zone, 6) {
 		d.line(x.at(float64(m)), svgBottom, x.at(float64(m)), svgBottom+5, "axis")
 		d.text(x.at(float64(m)), svgBottom+19, "lab", "middle", tickText(m, t.To-t.From, zone))
@@ -163,6 +167,15 @@ func trendSVG(t *trend, l *configs.Loop, zone *time.Location) string {
 	d.path(t.Times, t.SP, x, y, "sp")
 	d.path(t.Times, t.PV, x, y, "pv")
 	d.path(t.Times, t.OP, x, o, "pv")
+	// Words stand above the traces.
+	for i, s := range t.Troubles {
+		a := clip(x.at(float64(s.From)))
+		anchor, tx := "start", a+6
+		if a+6+7.5*float64(len(s.Label)) > svgRight && a > svgW/2 {
+			anchor, tx = "end", a-6
+		}
+		d.text(tx, svgTop+12+float64(i%4)*15, "say "+s.Class, anchor, s.Label)
+	}
 	if len(t.Times) == 0 {
 		d.text(svgW/2, svgH/2-80, "lab", "middle", "nothing is kept of this span")
 	}
@@ -183,9 +196,18 @@ func clipTo(c column, y scale) column {
 	return out
 }
 
-func opUnit(l *configs.Loop) string {
+// percentOf is the unit of OP: per cent, where its range says so.
+func percentOf(l *configs.Loop) string {
 	if l.OPLow == 0 && l.OPHigh == 100 {
 		return "%"
+	}
+	return ""
+}
+
+// opUnit says the unit of OP, or else its range.
+func opUnit(l *configs.Loop) string {
+	if u := percentOf(l); u != "" {
+		return u
 	}
 	return number(l.OPLow, 4) + " to " + number(l.OPHigh, 4)
 }
@@ -193,7 +215,7 @@ func opUnit(l *configs.Loop) string {
 // timeTicks are round times of the site's clock in a span, at most n.
 func timeTicks(from, to int64, zone *time.Location, n int) []int64 {
 	steps := []time.Duration{time.Second, 5 * time.Second, 15 * time.Second, time.Minute, 5 * time.Minute, 15 * time.Minute, 30 * time.Minute, time.Hour,
-		2 * time.Hour, 4 * time.Hour, 8 * time.Hour, 24 * time.Hour, 48 * time.Hour, 7 * 24 * time.Hour, 30 * 24 * time.Hour, 90 * 24 * time.Hour}
+		2 * time.Hour, 4 * time.Hour, 8 * time.Hour, 24 * time.Hour, 48 * time.Hour, 7 * 24 * time.Hour, 14 * 24 * time.Hour, 30 * 24 * time.Hour, 90 * 24 * time.Hour}
 	step := steps[len(steps)-1]
 	for _, s := range steps {
 		if (to-from)/s.Milliseconds() <= int64(n) {
@@ -227,10 +249,10 @@ func tickText(ms, span int64, zone *time.Location) string {
 // svgStyle gives a saved picture the colours of the page.
 const svgStyle = `text{font:12px system-ui,"DejaVu Sans",sans-serif;fill:#5c646b}.card{fill:#fff}.grid{stroke:#d9d8d2;stroke-width:.6}.axis{stroke:#8b939a}
 .pv{fill:none;stroke:#1c2024;stroke-width:1.2}.sp{fill:none;stroke:#0072b2;stroke-width:1.4;stroke-dasharray:6 4}.limit{stroke:#5c646b;stroke-dasharray:2 5}
-.over{fill:none;stroke:#a84300;stroke-width:1;opacity:.7}.run-inactive,.run-hidden{fill:#8b939a;opacity:.22}.run-gap{fill:#fff;stroke:#8b939a;stroke-dasharray:3 3}
+.pos{fill:none;stroke:#8b939a;stroke-width:2}.ff{fill:none;stroke:#5c646b;stroke-width:1.4;stroke-dasharray:1 4}.over{fill:none;stroke:#a84300;stroke-width:1;opacity:.7}.run-inactive,.run-hidden{fill:#8b939a;opacity:.22}.run-gap{fill:#fff;stroke:#8b939a;stroke-dasharray:3 3}
 .shade{opacity:.07}.shade.now{fill:#a84300}.shade.morning{fill:#8a5a00}.shade.note{fill:#0072b2}.shade.past,.shade.aside{fill:#5c646b}
 .onset{stroke-width:1.4}.onset.now{stroke:#a84300}.onset.morning{stroke:#8a5a00}.onset.note{stroke:#0072b2}.onset.past,.onset.aside{stroke:#5c646b}
-.say{font-weight:600}.say.now{fill:#a84300}.say.morning{fill:#8a5a00}.say.note{fill:#0072b2}`
+.say{font-weight:600}.say,.lab{paint-order:stroke;stroke:#fff;stroke-width:3;stroke-linejoin:round}.say.now{fill:#a84300}.say.morning{fill:#8a5a00}.say.note{fill:#0072b2}`
 
 func (p *Page) serveTrendSVG(w http.ResponseWriter, r *http.Request) {
 	t, s, l, err := p.spanTrend(r, 900)
@@ -322,76 +344,4 @@ func xySVG(pairs [2]column, l *configs.Loop, word string) template.HTML {
 	d.text(392, 12, "lab", "end", word)
 	d.WriteString("</svg>")
 	return template.HTML(d.String())
-}
-
-// tuningSVG draws gain and reset in service over two weeks against the list.
-func tuningSVG(rs []TuningReading, v *detect.View, l *configs.Loop, now time.Time, zone *time.Location) template.HTML {
-	if !math.IsNaN(v.ResetS) && v.ResetS > 0 || !math.IsNaN(v.GainPct) && v.GainPct > 0 {
-		rs = append(rs, TuningReading{Time: now.UnixMilli(), Gain: v.GainPct, GainLow: v.GainLow, GainHigh: v.GainHigh, ResetS: v.ResetS, ResetLow: v.ResetLow, ResetHigh: v.ResetHigh})
-	}
-	if len(rs) == 0 {
-		return ""
-	}
-	d := &drawing{}
-	d.WriteString(`<svg viewBox="0 0 400 240" role="img" aria-label="gain and reset time in service over two weeks, and what the list says">`)
-	from := now.Add(-14 * 24 * time.Hour).UnixMilli()
-	x := scale{float64(from), float64(now.UnixMilli()), 52, 380}
-	row := func(top, bottom float64, name string, list float64, get func(*TuningReading) (v, low, high float64)) {
-		low, high := list, list
-		for i := range rs {
-			v, a, b := get(&rs[i])
-			for _, q := range []float64{v, a, b} {
-				if !math.IsNaN(q) && !(q <= 0) {
-					low, high = fmin(low, q), fmax(high, q)
-				}
-			}
-		}
-		if math.IsNaN(low) || !(low > 0) {
-			d.text(216, (top+bottom)/2, "lab", "middle", name+": not read yet")
-			return
-		}
-		// Tuning differs by factors: the scale is logarithmic, a factor of two at least.
-		y := scale{math.Log(low) - 0.35, math.Log(high) + 0.35, bottom, top}
-		d.text(52, top-4, "lab", "start", name)
-		d.line(52, bottom, 390, bottom, "axis")
-		if list > 0 {
-			d.line(52, y.at(math.Log(list)), 390, y.at(math.Log(list)), "sp")
-			d.text(48, y.at(math.Log(list))+4, "lab", "end", number(list, 3))
-			d.text(390, top-4, "lab", "end", "list "+number(list, 3))
-		}
-		for i := range rs {
-			v, a, b := get(&rs[i])
-			if math.IsNaN(v) || v <= 0 {
-				continue
-			}
-			px := x.at(float64(max(rs[i].Time, from)))
-			if !math.IsNaN(a) && !math.IsNaN(b) && a > 0 && b > 0 {
-				d.line(px, y.at(math.Log(a)), px, y.at(math.Log(b)), "whisker")
-			}
-			d.f(`<circle cx="%.1f" cy="%.1f" r="3.4" class="dot"/>`, px, y.at(math.Log(v)))
-			if i == len(rs)-1 {
-				d.text(px-8, y.at(math.Log(v))-7, "labn", "end", number(v, 3)+" in service")
-			}
-		}
-	}
-	row(18, 108, "gain %/%", l.GainPct, func(r *TuningReading) (float64, float64, float64) { return r.Gain, r.GainLow, r.GainHigh })
-	row(134, 218, "reset s", l.IdealReset, func(r *TuningReading) (float64, float64, float64) { return r.ResetS, r.ResetLow, r.ResetHigh })
-	d.text(52, 236, "lab", "start", time.UnixMilli(from).In(zone).Format("2 Jan"))
-	d.text(390, 236, "lab", "end", now.In(zone).Format("2 Jan"))
-	d.WriteString("</svg>")
-	return template.HTML(d.String())
-}
-
-func fmin(a, b float64) float64 {
-	if math.IsNaN(a) {
-		return b
-	}
-	return min(a, b)
-}
-
-func fmax(a, b float64) float64 {
-	if math.IsNaN(a) {
-		return b
-	}
-	return max(a, b)
 }

@@ -6,6 +6,7 @@ import (
 	"math"
 	"strconv"
 
+	"midwatch/alert/page/api"
 	"midwatch/collector"
 	"midwatch/configs"
 )
@@ -58,13 +59,15 @@ type trend struct {
 	PV       column      `json:"pv"`
 	SP       column      `json:"sp"`
 	OP       column      `json:"op"`
+	Pos      column      `json:"pos,omitempty"` // position of the final element, in the unit of OP; nil: no tag
+	FF       column      `json:"ff,omitempty"`  // feed-forward signal; nil: no tag
 	Runs     []run       `json:"runs,omitempty"`
 	Changes  []change    `json:"changes,omitempty"`
 	Overlays []overlay   `json:"overlays,omitempty"`
 	Troubles []span      `json:"troubles,omitempty"`
 	Lines    []level     `json:"lines,omitempty"`
 	PVScale  [2]number64 `json:"pv_scale"`
-	tuning   []TuningReading
+	tuning   []api.TuningReading
 	last     collector.Frame
 }
 
@@ -101,12 +104,14 @@ type pot struct {
 	first, last    collector.Frame
 	pvLow, pvHigh  float32
 	opLow, opHigh  float32
+	posLow, posTop float32
 	pvFell, opFell bool // the least came after the greatest
+	posFell        bool
 }
 
 func (b *pot) add(f *collector.Frame) {
 	if b.n == 0 {
-		*b = pot{first: *f, pvLow: f.PV, pvHigh: f.PV, opLow: f.OP, opHigh: f.OP}
+		*b = pot{first: *f, pvLow: f.PV, pvHigh: f.PV, opLow: f.OP, opHigh: f.OP, posLow: f.Position, posTop: f.Position}
 	}
 	b.n++
 	b.last = *f
@@ -122,11 +127,28 @@ func (b *pot) add(f *collector.Frame) {
 	if f.OP > b.opHigh || b.opHigh != b.opHigh {
 		b.opHigh, b.opFell = f.OP, false
 	}
+	if f.Position < b.posLow || b.posLow != b.posLow {
+		b.posLow, b.posFell = f.Position, true
+	}
+	if f.Position > b.posTop || b.posTop != b.posTop {
+		b.posTop, b.posFell = f.Position, false
+	}
 }
 
-func (t *trend) row(at int64, pv, sp, op float32) {
+func (t *trend) row(at int64, pv, sp, op, pos, ff float32) {
 	t.Times = append(t.Times, at)
 	t.PV, t.SP, t.OP = append(t.PV, pv), append(t.SP, sp), append(t.OP, op)
+	t.Pos, t.FF = append(t.Pos, pos), append(t.FF, ff)
+}
+
+// known gives a column, or nil where nothing is known in it.
+func (c column) known() column {
+	for _, v := range c {
+		if v == v {
+			return c
+		}
+	}
+	return nil
 }
 
 func (t *trend) empty(b *pot) {
@@ -134,7 +156,7 @@ func (t *trend) empty(b *pot) {
 	case 0:
 		return
 	case 1:
-		t.row(b.first.Time, b.first.PV, b.first.SP, b.first.OP)
+		t.row(b.first.Time, b.first.PV, b.first.SP, b.first.OP, b.first.Position, b.first.Feedforward)
 	default:
 		p0, p1 := b.pvLow, b.pvHigh
 		if b.pvFell {
@@ -144,8 +166,12 @@ func (t *trend) empty(b *pot) {
 		if b.opFell {
 			o0, o1 = o1, o0
 		}
-		t.row(b.first.Time, p0, b.first.SP, o0)
-		t.row(b.last.Time, p1, b.last.SP, o1)
+		s0, s1 := b.posLow, b.posTop
+		if b.posFell {
+			s0, s1 = s1, s0
+		}
+		t.row(b.first.Time, p0, b.first.SP, o0, s0, b.first.Feedforward)
+		t.row(b.last.Time, p1, b.last.SP, o1, s1, b.last.Feedforward)
 	}
 	b.n = 0
 }
@@ -171,16 +197,17 @@ func readTrend(ctx context.Context, frames collector.FrameReader, l *configs.Loo
 			at = k
 		}
 		if f.Flags&collector.Gap != 0 && len(t.Times) > 0 && f.PV == f.PV {
-			t.row(f.Time-1, collector.NaN32, collector.NaN32, collector.NaN32)
+			t.row(f.Time-1, collector.NaN32, collector.NaN32, collector.NaN32, collector.NaN32, collector.NaN32)
 		}
 		if f.PV != f.PV {
-			t.row(f.Time, f.PV, f.SP, f.OP)
+			t.row(f.Time, f.PV, f.SP, f.OP, f.Position, f.Feedforward)
 			continue
 		}
 		b.add(&f)
 		thinned = thinned || b.n > 2
 	}
 	t.empty(&b)
+	t.Pos, t.FF = t.Pos.known(), t.FF.known()
 	w.end()
 	if thinned {
 		t.BucketMs = width
@@ -196,6 +223,8 @@ type watcher struct {
 	on   map[string]int // open run of a kind, index
 	was  collector.Frame
 	seen bool
+	// gain and reset as last read from tags; 0: not yet
+	gain, reset float32
 }
 
 func (w *watcher) hold(on bool, what, word string, at int64) {
@@ -245,6 +274,7 @@ func (w *watcher) frame(f *collector.Frame) {
 	if f.Flags&collector.Marked != 0 {
 		w.say(at, "range, action or tags changed in the list")
 	}
+	w.tuning(f)
 	if w.seen {
 		w.compare(f)
 	}
@@ -259,16 +289,27 @@ func (w *watcher) compare(f *collector.Frame) {
 	if d := math.Abs(float64(f.SP) - float64(w.was.SP)); d > 0.005*math.Abs(l.PVSpan()) && f.Mode != collector.Cascade && math.IsNaN(l.SPRamp) {
 		w.say(f.Time, "SP "+number(float64(w.was.SP), 4)+" → "+quantity(float64(f.SP), l.Unit))
 	}
-	if f.Gain != w.was.Gain && f.Gain != 0 && w.was.Gain != 0 {
-		w.say(f.Time, "gain "+number(float64(w.was.Gain), 3)+" → "+number(float64(f.Gain), 3)+" (read)")
+}
+
+// tuning follows what tags say: a frame has gain and reset only where they
+// differ from those read before.
+func (w *watcher) tuning(f *collector.Frame) {
+	if f.Gain == 0 && f.Reset == 0 {
+		return
 	}
-	if f.Reset != w.was.Reset && f.Reset != 0 && w.was.Reset != 0 {
-		w.say(f.Time, "reset "+number(float64(w.was.Reset), 3)+" → "+number(float64(f.Reset), 3)+" s (read)")
+	step := func(name, unit string, was *float32, now float32) {
+		if now == 0 {
+			return
+		}
+		if *was != 0 && *was != now {
+			w.say(f.Time, name+" "+number(float64(*was), 3)+" → "+number(float64(now), 3)+unit+" (read from its tag)")
+		}
+		*was = now
 	}
-	if (f.Gain != w.was.Gain || f.Reset != w.was.Reset) && f.Gain != 0 {
-		n := math.NaN()
-		w.t.tuning = append(w.t.tuning, TuningReading{Time: f.Time, Gain: float64(f.Gain), GainLow: n, GainHigh: n, ResetS: float64(f.Reset), ResetLow: n, ResetHigh: n, Read: true})
-	}
+	step("gain", "\u00a0%/%", &w.gain, f.Gain)
+	step("reset", "\u00a0s", &w.reset, f.Reset)
+	n := math.NaN()
+	w.t.tuning = append(w.t.tuning, api.TuningReading{Time: f.Time, Gain: orNaN(float64(w.gain)), GainLow: n, GainHigh: n, ResetS: orNaN(float64(w.reset)), ResetLow: n, ResetHigh: n, Read: true})
 }
 
 // maxChanges bounds what is said of a span; a set point that moves all the time

@@ -38,8 +38,12 @@ func TestStripsReadOnce(t *testing.T) {
 	h.frozen = true
 	c := &counting{fakeHouse: h}
 	var s strips
+	hours := func(l *configs.Loop, n int64) ([]bucket, error) {
+		end := h.base.UnixMilli()
+		return s.between(t.Context(), c, l, h.base, end-n*3600*1000, end)
+	}
 	l := h.find("AIC-204").Loop
-	b, err := s.upTo(t.Context(), c, l, h.base, 12*time.Hour)
+	b, err := hours(l, 12)
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -57,11 +61,11 @@ func TestStripsReadOnce(t *testing.T) {
 		t.Errorf("bucket %v to %v (%b), want %v to %v", widenPV(x.low), widenPV(x.high), x.saw, low, high)
 	}
 	c.frames = 0
-	if _, err := s.upTo(t.Context(), c, l, h.base, 12*time.Hour); err != nil || c.frames != 0 {
+	if _, err := hours(l, 12); err != nil || c.frames != 0 {
 		t.Errorf("a second look read %d frames, %v", c.frames, err)
 	}
 	h.base = h.base.Add(9 * time.Minute)
-	b2, err := s.upTo(t.Context(), c, l, h.base, 12*time.Hour)
+	b2, err := hours(l, 12)
 	if err != nil || c.frames != 270 {
 		t.Errorf("nine minutes on, %d frames were read, want 270; %v", c.frames, err)
 	}
@@ -69,13 +73,13 @@ func TestStripsReadOnce(t *testing.T) {
 		t.Errorf("what was seen moved by other than three buckets: %v and %v", b2[n-3], b[n])
 	}
 	h.base = h.base.Add(30 * time.Hour)
-	if b, err = s.upTo(t.Context(), c, l, h.base, 24*time.Hour); err != nil || len(b) != ringBuckets || b[0].saw&sawData == 0 {
+	if b, err = hours(l, 24); err != nil || len(b) != ringBuckets || b[0].saw&sawData == 0 {
 		t.Errorf("after a day nobody looked: %d buckets, first %v, %v", len(b), b[0], err)
 	}
 	other := *l
 	other.PVHigh = 4
 	c.frames = 0
-	if _, err := s.upTo(t.Context(), c, &other, h.base, 12*time.Hour); err != nil || c.frames < 40000 {
+	if _, err := hours(&other, 12); err != nil || c.frames < 40000 {
 		t.Errorf("another range is read anew: %d frames, %v", c.frames, err)
 	}
 }
@@ -205,7 +209,9 @@ func TestOverlays(t *testing.T) {
 		for _, o := range raw.Overlays {
 			x := overlay{Name: o.Name, Times: o.T}
 			for _, v := range o.Low {
-				x.Low = append(x.Low, *v)
+				if v != nil {
+					x.Low = append(x.Low, *v)
+				}
 			}
 			for _, v := range o.High {
 				x.High = append(x.High, *v)
@@ -216,18 +222,18 @@ func TestOverlays(t *testing.T) {
 	}
 	o := names("/api/loops/AIC-204/trend?hours=4")
 	env := o["envelope"]
-	if n := len(env.High); n < 100 || env.High[n-1]-env.High[0] < 0.05 || math.Abs(float64(env.High[n-1]+env.Low[n-1])/2-1) > 0.001 {
+	if n := len(env.High); n != 18 || env.High[n-1]-env.High[0] < 0.05 || math.Abs(float64(env.High[n-1]+env.Low[n-1])/2-1) > 0.001 {
 		t.Errorf("envelope of %d points grows about SP", len(env.High))
 	}
-	if n := len(o["half-cycles"].Times); n < 15 || n > 30 {
-		t.Errorf("%d half-cycles in 1.5 h of a cycle of 372 s", n)
+	if hc := o["half-cycles"]; len(hc.Times) != 20 || math.Abs(float64(hc.Low[19]-hc.Low[18])) < 0.15 {
+		t.Errorf("half-cycles %v: want the 20 that the watch holds, at their peaks", hc.Low)
 	}
 	off := names("/api/loops/AIC-212/trend?hours=12")["offset"]
 	if n := len(off.Low); n < 10 || math.Abs(float64(off.Low[n/2])-6.65) > 0.01 {
 		t.Errorf("offset line of %d points lies where PV stayed", n)
 	}
-	if d := names("/api/loops/LIC-310/trend?hours=12")["course of the recovery"]; len(d.Low) < 10 || d.Low[0] < d.Low[len(d.Low)-1]+1 {
-		t.Errorf("course of the recovery: %d points", len(d.Low))
+	if d := names("/api/loops/LIC-310/trend?hours=12")["recoveries"]; len(d.Low) < 10 || math.Abs(float64(d.Low[0])-4.9) > 0.05 || math.Abs(float64(d.Low[len(d.Low)-1])-3.668) > 0.05 {
+		t.Errorf("recoveries: %d points, from 4.9 to 3.67 m: %v", len(d.Low), d.Low)
 	}
 }
 
@@ -281,5 +287,40 @@ func TestTrendCSV(t *testing.T) {
 	}
 	if _, err := time.Parse(time.RFC3339Nano, rows[1][0]); err != nil {
 		t.Error(err)
+	}
+}
+
+// Position and feed-forward are there where the loop has tags for them, and
+// nowhere else.
+func TestPositionAndFeedforward(t *testing.T) {
+	h := newFake()
+	h.frozen = true
+	p := newPage(t, h)
+	var x struct{ OP, Pos, FF []*float32 }
+	if err := json.Unmarshal(call(t, p.gate.next, "GET", "/api/loops/FIC-118/trend?hours=12&points=200", "").Body.Bytes(), &x); err != nil {
+		t.Fatal(err)
+	}
+	if len(x.Pos) != len(x.OP) || len(x.FF) != len(x.OP) || len(x.Pos) < 300 {
+		t.Fatalf("%d values of OP, %d of position, %d of feed-forward", len(x.OP), len(x.Pos), len(x.FF))
+	}
+	least, most := *x.Pos[len(x.Pos)-1], *x.Pos[len(x.Pos)-1]
+	for _, v := range x.Pos[len(x.Pos)-20:] {
+		least, most = min(least, *v), max(most, *v)
+	}
+	if most-least < 1.5 {
+		t.Errorf("the position is seen to move by %g %%, want its whole stroke of 1.6 %%", most-least)
+	}
+	for path, want := range map[string]bool{"/loops/FIC-118": true, "/loops/PIC-101": false} {
+		w := call(t, p.gate.next, "GET", path+"/trend.svg?hours=1", "").Body.String()
+		if strings.Contains(w, "position (grey)") != want || strings.Contains(w, `class="ff"`) != want {
+			t.Errorf("%s: drawn in the picture, want %v", path, want)
+		}
+		if code, body := got(t, p, path); code != 200 || strings.Contains(body, "<dt>position</dt>") != want {
+			t.Errorf("%s: %d; position among the facts, want %v", path, code, want)
+		}
+		w = call(t, p.gate.next, "GET", path+"/trend.csv?hours=1", "").Body.String()
+		if head, _, _ := strings.Cut(w, "\n"); strings.Contains(head, "position") != want {
+			t.Errorf("%s: columns %s", path, head)
+		}
 	}
 }

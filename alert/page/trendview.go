@@ -11,7 +11,7 @@ import (
 	"strings"
 	"time"
 
-	record "midwatch/collector/trend"
+	"midwatch/configs"
 )
 
 // span of time that is wanted, as it stands in the address.
@@ -62,28 +62,45 @@ func readTime(s string) (int64, error) {
 	return t.UnixMilli(), nil
 }
 
-// spanTrend is what every form of a loop's trend starts from.
-func (p *Page) spanTrend(r *http.Request, points int) (*trend, *LoopState, *look, error) {
+// usualHours is the span of a loop's trend where the address names none.
+const usualHours = 4
+
+// loopAndSpan looks up the loop and the span that an address names. Where it
+// names no span, hours says how long it is up to now.
+func (p *Page) loopAndSpan(r *http.Request, hours func(*look, *LoopState) float64) (*look, *LoopState, wanted, error) {
 	l := p.look()
 	s := l.loop(loopName(r))
 	if s == nil {
-		return nil, nil, &l, ErrUnknownLoop
+		return &l, nil, wanted{}, ErrUnknownLoop
 	}
-	w, err := readSpan(r.URL.Query(), l.now, 4)
+	w, err := readSpan(r.URL.Query(), l.now, hours(&l, s))
 	if err != nil {
-		return nil, s, &l, badRequest{err}
+		return &l, s, w, badRequest{err}
+	}
+	return &l, s, w, nil
+}
+
+func always(hours float64) func(*look, *LoopState) float64 {
+	return func(*look, *LoopState) float64 { return hours }
+}
+
+// spanTrend is what every form of a loop's trend starts from.
+func (p *Page) spanTrend(r *http.Request, points int) (*trend, *LoopState, *look, error) {
+	l, s, w, err := p.loopAndSpan(r, always(usualHours))
+	if err != nil {
+		return nil, s, l, err
 	}
 	done, err := p.read(r.Context())
 	if err != nil {
-		return nil, s, &l, err
+		return nil, s, l, err
 	}
 	defer done()
 	t, err := readTrend(r.Context(), p.o.House, s.Loop, w.From, w.To, points)
 	if err != nil {
-		return nil, s, &l, err
+		return nil, s, l, err
 	}
-	p.annotate(t, s, &l)
-	return t, s, &l, nil
+	p.annotate(t, s, l)
+	return t, s, l, nil
 }
 
 type badRequest struct{ error }
@@ -117,6 +134,7 @@ func (p *Page) annotate(t *trend, s *LoopState, l *look) {
 		}
 	}
 	ts := l.found[lp.Name]
+	t.tuningChanges(ts)
 	for i := range ts {
 		x := &ts[i]
 		if x.Since > t.To || x.Until != 0 && x.Until < t.From {
@@ -126,7 +144,8 @@ func (p *Page) annotate(t *trend, s *LoopState, l *look) {
 		t.Troubles = append(t.Troubles, span{string(x.Kind), x.class(), label, x.Since, x.Until})
 	}
 	v, _ := p.o.House.View(lp.Name)
-	t.Overlays = overlays(t, ts, &v)
+	pic := p.o.House.Picture(lp.Name)
+	t.Overlays = overlays(t, ts, &v, &pic)
 }
 
 func (p *Page) serveTrend(w http.ResponseWriter, r *http.Request) {
@@ -149,15 +168,9 @@ func (p *Page) serveTrend(w http.ResponseWriter, r *http.Request) {
 
 // serveTrendCSV exports every frame of the span in the form of the trend CSV.
 func (p *Page) serveTrendCSV(w http.ResponseWriter, r *http.Request) {
-	l := p.look()
-	s := l.loop(loopName(r))
-	if s == nil {
-		p.answer(w, r, ErrUnknownLoop)
-		return
-	}
-	span, err := readSpan(r.URL.Query(), l.now, 4)
+	_, s, span, err := p.loopAndSpan(r, always(usualHours))
 	if err != nil {
-		p.answer(w, r, badRequest{err})
+		p.answer(w, r, err)
 		return
 	}
 	done, err := p.read(r.Context())
@@ -166,24 +179,5 @@ func (p *Page) serveTrendCSV(w http.ResponseWriter, r *http.Request) {
 		return
 	}
 	defer done()
-	w.Header().Set("Content-Type", "text/csv; charset=utf-8")
-	w.Header().Set("Content-Disposition", `attachment; filename="trend.csv"`)
-	rc := http.NewResponseController(w)
-	out := record.NewWriter(w, record.Columns{Mode: true, Flags: true})
-	n := 0
-	for f, err := range p.o.House.Frames(r.Context(), s.Loop.Name, span.From, span.To) {
-		if err != nil {
-			p.once("reading", err)
-			panic(http.ErrAbortHandler) // the header is out: only a broken answer tells
-		}
-		if n%10000 == 0 {
-			// A long export is no slow client: it may go on while it moves.
-			rc.SetWriteDeadline(time.Now().Add(time.Minute))
-		}
-		n++
-		if out.Write(s.Loop.Name, &f) != nil {
-			return // the reader is gone
-		}
-	}
-	out.Flush()
+	p.writeFrames(w, r, "trend.csv", []*configs.Loop{s.Loop}, span)
 }

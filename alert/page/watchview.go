@@ -36,12 +36,23 @@ type sourceView struct {
 	Well            bool
 	Facts           []measureLine
 	Counts          []measureLine
-	MoreRefused     int
+	RefusedWord     string // how many tags, and how many of them are listed
 }
 
 type partView struct {
 	Part
-	Age string
+	Does string // what it is for, in words
+	Age  string
+}
+
+// partWords say what the parts of the daemon are for.
+var partWords = map[string]string{"ledger": "findings and episodes", "keeper": "keeping and clearing up", "flush": "writing of trends", "self watch": "watch over itself"}
+
+func doesWord(name string) string {
+	if n, ok := strings.CutPrefix(name, "shard "); ok {
+		return "judging of loops, part " + n
+	}
+	return cmp.Or(partWords[name], name)
 }
 
 type senderView struct {
@@ -71,7 +82,7 @@ func (p *Page) serveWatch(w http.ResponseWriter, r *http.Request) {
 		v.Sources = append(v.Sources, sourceOf(c, l.now, l.zone, ago))
 	}
 	for _, x := range s.Parts {
-		v.Parts = append(v.Parts, partView{x, ago(x.Last)})
+		v.Parts = append(v.Parts, partView{x, doesWord(x.Name), ago(x.Last)})
 	}
 	st := &s.Store
 	v.Store = append(v.Store, measureLine{"trends on disk", bytesText(st.Bytes)})
@@ -92,6 +103,9 @@ func (p *Page) serveWatch(w http.ResponseWriter, r *http.Request) {
 	}
 	v.Clocks = []measureLine{{"site zone", v.ZoneName}, {"clock of this box", l.now.In(l.zone).Format("Mon 2 Jan 2006 15:04:05 -07:00")}, {"the same in UTC", utc(l.now.UnixMilli())},
 		{"steps of source clocks", fmt.Sprint(s.Clock.Steps)}}
+	if s.Clock.LastStep != 0 {
+		v.Clocks = append(v.Clocks, measureLine{"a clock last stepped", ago(s.Clock.LastStep)})
+	}
 	v.Cards = p.watchCards(r, &l)
 	for _, sh := range p.o.House.Shelves() {
 		v.Shelves = append(v.Shelves, shelfView{sh.Loop, pathName(sh.Loop), sh.Who, sh.Why, clock(sh.Until, l.now, l.zone)})
@@ -135,8 +149,13 @@ func sourceOf(c collector.SourceState, now time.Time, zone *time.Location, ago f
 		v.Counts = append(v.Counts, measureLine{strings.ReplaceAll(k, "_", " "), fmt.Sprint(n)})
 	}
 	slices.SortFunc(v.Counts, func(a, b measureLine) int { return cmp.Compare(a.Name, b.Name) })
-	if n := len(c.Refused); n > maxRefused {
-		v.MoreRefused, v.Refused = n-maxRefused, c.Refused[:maxRefused]
+	switch n := len(c.Refused); {
+	case n > maxRefused:
+		v.RefusedWord, v.Refused = fmt.Sprintf("%d tags (%d are listed)", n, maxRefused), c.Refused[:maxRefused]
+	case n == 1:
+		v.RefusedWord = "one tag"
+	default:
+		v.RefusedWord = fmt.Sprintf("%d tags", n)
 	}
 	return v
 }

@@ -2,6 +2,7 @@ package page
 
 import (
 	"math"
+	"regexp"
 	"strconv"
 	"strings"
 	"time"
@@ -131,11 +132,21 @@ func clock(ms int64, now time.Time, zone *time.Location) string {
 	return t.Format("2 Jan 2006 15:04")
 }
 
+var numberAndUnit = regexp.MustCompile(`(\d) (s|ms|min|h|d|days|%|°C|bar|m|mg/[lL]|[lL]/s|[lL]/h|m³/h|m3/h)([ ,.;:)]|$)`)
+
+// glue keeps a number and its unit on one line.
+func glue(s string) string { return numberAndUnit.ReplaceAllString(s, "$1\u00a0$2$3") }
+
 // utc is the same moment for the record.
 func utc(ms int64) string { return time.UnixMilli(ms).UTC().Format("2006-01-02 15:04:05 UTC") }
 
 // measureLine is one number of a finding, for people.
 type measureLine struct{ Name, Value string }
+
+// measureWords are names of measures that do not read well as they are.
+var measureWords = map[string]string{"pi_lag_deg": "lag of the controller", "direct_lag_deg": "lag from PV to OP", "amplitude_pct": "amplitude, of range",
+	"offset_pct": "offset, of range", "overhang_s": "overhang of wind-up", "usual_s": "usual recovery", "still_s": "stood still", "proportional_share": "share of proportional action",
+	"pv_jump_share": "share of jumps in PV", "gain": "gain in service", "reset_s": "reset in service"}
 
 // measureLines gives the numbers of a finding with their units.
 func measureLines(f *detect.Finding, unit string) []measureLine {
@@ -169,6 +180,9 @@ func measureLines(f *detect.Finding, unit string) []measureLine {
 				name = strings.ToUpper(w) + " " + rest
 			}
 			name = strings.ReplaceAll(name, " "+w+" ", " "+strings.ToUpper(w)+" ")
+		}
+		if w := measureWords[m.Name]; w != "" {
+			name = w
 		}
 		out = append(out, measureLine{name, value})
 	}

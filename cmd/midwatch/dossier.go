@@ -17,9 +17,9 @@ import (
 func dossierVerb(h *house) *cobra.Command {
 	var config, loops, from, to, out, note string
 	var trends []string
-	asJSON := false
+	asJSON, all, csv := false, false, false
 	c := &cobra.Command{
-		Use:   "dossier (-c FILE | --trend FILE.csv --loops LOOPS.csv) [-o FILE] LOOP",
+		Use:   "dossier (-c FILE | --trend FILE.csv --loops LOOPS.csv) [-o FILE] LOOP\n  midwatch dossier (-c FILE | --trend FILE.csv --loops LOOPS.csv) [-o DIR] (--all | LOOP LOOP...)",
 		Short: "gathers what a tuning session needs to know of a loop",
 		Long: `Gathers what a tuning session needs to know of a loop: what was seen, measurement
 and final element, outside causes, the tuning in service, the process where its
@@ -33,36 +33,66 @@ JSON and the trend as CSV.
   midwatch dossier --trend january.csv.gz --loops loops.csv AIC-204
   midwatch dossier --trend week.csv --loops loops.csv --from 2026-01-04T00:00:00Z -o aic-204.html AIC-204
 
+Of several loops, or all of the list, they go into a folder with an index page, over
+all processors; trends are written with --csv only.
+
+  midwatch dossier -c midwatch.yaml --all -o dossiers
+
 With -c it asks the running watch, or reads its data folder where none runs; the
 span is then the last 14 days unless --from says otherwise. With --trend no watch
 is needed: the recorded loops are judged as replay does.
 Advisory only: no change without your site's management of change and a
 qualified person.`,
-		Args: cobra.ExactArgs(1),
+		Args: cobra.ArbitraryArgs,
 		RunE: func(_ *cobra.Command, args []string) error {
 			span, err := parseSpan(from, to)
 			if err != nil {
 				return err
 			}
-			if e := filepath.Ext(out); out != "" && e != ".html" && e != ".htm" {
-				return usagef("-o %s: the page is HTML, JSON and CSV go beside it; hint: name a file that ends in .html", out)
+			many := all || len(args) > 1
+			if err := dossierArgs(args, out, note, all, many); err != nil {
+				return err
 			}
-			var in dossier.Input
-			done := func() {}
+			var s supply
 			switch {
 			case len(trends) > 0:
-				in, err = h.fromTrend(config, loops, args[0], trends, span)
+				s, err = h.fromTrend(config, loops, trends, args, span)
 			case loops != "":
 				return usagef("--loops without --trend; hint: --trend FILE.csv, or -c alone for a watch")
 			default:
-				in, done, err = h.fromWatch(config, args[0], span)
+				s, err = h.fromWatch(config, span)
 			}
 			if err != nil {
 				return err
 			}
-			defer done()
+			defer s.done()
+			ls := s.list
+			if !all {
+				ls = nil
+				for _, name := range args {
+					l, err := loopOf(s.list, name)
+					if err != nil {
+						return err
+					}
+					ls = append(ls, l)
+				}
+			}
+			if many {
+				if out == "" {
+					out = "dossiers"
+				}
+				return h.batch(s, ls, out, csv, asJSON)
+			}
+			input, err := s.open(ls)
+			if err != nil {
+				return err
+			}
+			in, err := input(ls[0])
+			if err != nil {
+				return err
+			}
 			in.AsLeft = note
-			return h.writeDossier(in, out, asJSON)
+			return h.single(in, out, asJSON)
 		},
 	}
 	c.Flags().StringVarP(&config, "config", "c", "", "configuration of the watch (or MIDWATCH_CONFIG)")
@@ -70,10 +100,29 @@ qualified person.`,
 	c.Flags().StringArrayVar(&trends, "trend", nil, "recorded trend CSV; may be given several times")
 	c.Flags().StringVar(&from, "from", "", "begin of the span, such as 2026-01-04T02:00:00Z")
 	c.Flags().StringVar(&to, "to", "", "end of the span")
-	c.Flags().StringVarP(&out, "output", "o", "", "HTML file to write; default LOOP.html")
-	c.Flags().BoolVar(&asJSON, "json", false, "print the dossier as JSON, too")
-	c.Flags().StringVar(&note, "as-left", "", "the tuner's own record of what was changed, for chapter 8")
+	c.Flags().StringVarP(&out, "output", "o", "", "HTML file to write, default LOOP.html; of several loops the folder, default dossiers")
+	c.Flags().BoolVar(&all, "all", false, "all loops of the list")
+	c.Flags().BoolVar(&csv, "csv", false, "of several loops, write their trends, too")
+	c.Flags().BoolVar(&asJSON, "json", false, "print the dossier as JSON, too; of several loops the index")
+	c.Flags().StringVar(&note, "as-left", "", "the tuner's own record of what was changed, for chapter 8; see also midwatch note")
 	return c
+}
+
+// dossierArgs sees whether what was asked for fits together.
+func dossierArgs(args []string, out, note string, all, many bool) error {
+	switch e := filepath.Ext(out); {
+	case all && len(args) > 0:
+		return usagef("--all and names of loops; hint: one of them")
+	case !all && len(args) == 0:
+		return usagef("no loop is named; hint: LOOP, several of them, or --all")
+	case many && note != "":
+		return usagef("--as-left is about one loop; hint: midwatch note keeps a remark for every later dossier")
+	case many && (e == ".html" || e == ".htm"):
+		return usagef("-o %s: of several loops a folder is written; hint: -o DIR", out)
+	case !many && out != "" && e != ".html" && e != ".htm":
+		return usagef("-o %s: the page is HTML, JSON and CSV go beside it; hint: name a file that ends in .html", out)
+	}
+	return nil
 }
 
 // parseSpan reads --from and --to, ms UTC; 0 is open.
@@ -94,8 +143,8 @@ func parseSpan(from, to string) (span [2]int64, err error) {
 	return span, nil
 }
 
-// writeDossier writes the three files, whole or not at all.
-func (h *house) writeDossier(in dossier.Input, out string, asJSON bool) error {
+// single writes the three files of one loop.
+func (h *house) single(in dossier.Input, out string, asJSON bool) error {
 	in.Made, in.Version = time.Now(), facts().Version
 	d, err := dossier.Build(in)
 	if err != nil {
@@ -104,14 +153,10 @@ func (h *house) writeDossier(in dossier.Input, out string, asJSON bool) error {
 	if out == "" {
 		out = fileName(in.Loop.Name) + ".html"
 	}
-	base := strings.TrimSuffix(out, filepath.Ext(out))
-	for _, f := range []struct {
-		path  string
-		write func(io.Writer) error
-	}{{base + ".csv", d.Trend}, {base + ".json", d.JSON}, {out, d.HTML}} {
-		if err := writeWhole(f.path, f.write); err != nil {
-			return err
-		}
+	ext := filepath.Ext(out)
+	base := strings.TrimSuffix(out, ext)
+	if err := writeDossier(d, base, ext, true); err != nil {
+		return err
 	}
 	if asJSON {
 		return d.JSON(h.stdout)

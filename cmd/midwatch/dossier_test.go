@@ -44,6 +44,20 @@ func TestDossierOfAWatch(t *testing.T) {
 	if d := run(); d.Source != "running watch" {
 		t.Errorf("source %q", d.Source)
 	}
+	// A batch beside the running watch; and a remark, which later dossiers show.
+	in(t, "note", "-c", config, "--who", "Jo", "FIC-118", "valve trim changed,", "look again on Friday")
+	if got := in(t, "dossier", "-c", config, "--all", "--from", "2020-01-01T00:00:00Z", "-o", filepath.Join(dir, "all")); !strings.HasPrefix(got, "1 of 1 dossiers") {
+		t.Errorf("batch: %s", got)
+	}
+	b, err := os.ReadFile(filepath.Join(dir, "all", "FIC-118.json"))
+	if err != nil {
+		t.Fatal(err)
+	}
+	for _, want := range []string{`"source": "running watch"`, `"who": "Jo"`, `"text": "valve trim changed, look again on Friday"`, `"output-saturation"`} {
+		if !strings.Contains(string(b), want) {
+			t.Errorf("the dossier of the batch does not say %s", want)
+		}
+	}
 	w.kill(syscall.SIGTERM)
 	if d := run(); d.Source != "data folder of the watch" {
 		t.Errorf("source %q", d.Source)

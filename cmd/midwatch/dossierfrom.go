@@ -10,11 +10,13 @@ import (
 	"fmt"
 	"io"
 	"iter"
+	"math"
 	"net/url"
 	"os"
 	"path/filepath"
 	"slices"
 	"strings"
+	"sync"
 	"time"
 
 	"midwatch/alert"
@@ -27,138 +29,240 @@ import (
 	"midwatch/detect"
 )
 
-// fromTrend judges the recorded loops as replay does, then gathers the frames of
-// one.
-func (h *house) fromTrend(config, loops, name string, files []string, span [2]int64) (dossier.Input, error) {
+// supply is where dossiers come from: recorded trends, or a watch.
+type supply struct {
+	list []*configs.Loop
+	pass int // loops that may be open at once; 0: any number
+	// open makes loops ready and gives what their dossiers are made from; what it
+	// gives may be asked from several goroutines.
+	open func([]*configs.Loop) (func(*configs.Loop) (dossier.Input, error), error)
+	done func()
+}
+
+// mostFrames are held at once of recorded trends.
+const mostFrames = 4_000_000
+
+// fromTrend judges the recorded loops as replay does, then gathers the frames.
+// names are those asked for: one that is not in the list is told before long work.
+func (h *house) fromTrend(config, loops string, files, names []string, span [2]int64) (s supply, err error) {
 	list, budget, err := loadLoops(config, loops)
 	if err != nil {
-		return dossier.Input{}, err
+		return s, err
 	}
+	for _, name := range names {
+		if _, err := loopOf(list, name); err != nil {
+			return s, err
+		}
+	}
+	s.list, s.done = list, func() {}
 	o := detect.Options{NuisancePerLoopYear: budget}
-	in := dossier.Input{Detect: o, From: span[0], To: span[1], Others: len(list) > 1, Source: "recorded trend: " + baseNames(files)}
-	if in.Loop, err = loopOf(list, name); err != nil {
-		return in, err
-	}
+	base := dossier.Input{Detect: o, From: span[0], To: span[1], Others: len(list) > 1, Source: "recorded trend: " + baseNames(files), Findings: []detect.Finding{}}
 	for _, f := range files {
 		if f == "-" {
-			return in, usagef("--trend -: standard input cannot be read twice; hint: write it to a file first")
+			return s, usagef("--trend -: standard input cannot be read twice; hint: write it to a file first")
 		}
 		sum, err := sumOf(f)
 		if err != nil {
-			return in, err
+			return s, err
 		}
-		in.Sums = append(in.Sums, sum)
+		base.Sums = append(base.Sums, sum)
 	}
 	say := func(s string) { fmt.Fprintf(h.stderr, "midwatch: %s\n", s) }
 	r, err := trend.Open(files, list, trend.Options{Say: say})
 	if err != nil {
-		return in, err
+		return s, err
 	}
 	var told bytes.Buffer
-	_, err = daemon.Replay(h.ctx, r, daemon.ReplayOptions{Loops: list, Detect: o, Findings: &told, Say: say})
+	sum, err := daemon.Replay(h.ctx, r, daemon.ReplayOptions{Loops: list, Detect: o, Findings: &told, Say: say})
 	if err = errors.Join(err, r.Close()); err != nil {
-		return in, err
+		return s, err
 	}
-	in.Findings = []detect.Finding{}
 	for d := json.NewDecoder(&told); ; {
 		var f detect.Finding
 		if err := d.Decode(&f); errors.Is(err, io.EOF) {
 			break
 		} else if err != nil {
-			return in, fmt.Errorf("findings: %w", err)
+			return s, fmt.Errorf("findings: %w", err)
 		}
-		in.Findings = append(in.Findings, f)
+		base.Findings = append(base.Findings, f)
 	}
-	frames := func(l *configs.Loop) iter.Seq2[collector.Frame, error] {
-		return framesOf(h.ctx, files, nil, l)
-	}
-	in.Frames = frames(in.Loop)
-	in.Partners, err = partners(list, in.Loop, o, frames)
-	return in, err
-}
-
-// fromWatch reads the loop from the running watch, or from its data folder; done
-// lets go of it.
-func (h *house) fromWatch(config, name string, span [2]int64) (in dossier.Input, done func(), err error) {
-	c, err := loadPlain(config)
-	if err != nil {
-		return in, nil, err
-	}
-	in = dossier.Input{From: span[0], To: span[1], Site: c.Site.Name, Zone: c.Site.Zone, Source: "data folder of the watch",
-		Detect: detect.Options{NuisancePerLoopYear: c.Detect.NuisancePerLoopYear}}
-	if in.Loop, err = loopOf(c.Loops, name); err != nil {
-		return in, nil, err
-	}
-	if in.From == 0 {
-		end := time.Now().UnixMilli()
-		if in.To != 0 {
-			end = in.To
-		}
-		in.From = end - 14*24*time.Hour.Milliseconds()
-	}
-	write, done, err := h.exporter(c)
-	if err != nil {
-		return in, nil, err
-	}
-	defer func() {
+	each := max(1, sum.Rows/int64(max(1, len(list))))
+	s.pass = int(max(1, mostFrames/each))
+	recovery := h.recoveries(list, o, func(l *configs.Loop) iter.Seq2[collector.Frame, error] { return framesOf(h.ctx, files, nil, l) })
+	s.open = func(ls []*configs.Loop) (func(*configs.Loop) (dossier.Input, error), error) {
+		frames, err := gather(h.ctx, files, ls)
 		if err != nil {
-			done()
-		}
-	}()
-	frames := func(l *configs.Loop) iter.Seq2[collector.Frame, error] {
-		e := api.Export{What: api.ExportTrend, Loops: []string{l.Name}, From: in.From, To: in.To}
-		if e.To == 0 {
-			e.To = noEnd
-		}
-		return func(yield func(collector.Frame, error) bool) {
-			r, w := io.Pipe()
-			go func() { w.CloseWithError(write(e, w)) }()
-			defer r.Close() // ends the writer, too
-			for f, err := range framesOf(h.ctx, []string{"-"}, r, l) {
-				if !yield(f, err) {
-					return
-				}
-			}
-		}
-	}
-	in.Frames = frames(in.Loop)
-	if in.Partners, err = partners(c.Loops, in.Loop, in.Detect, frames); err != nil {
-		return in, done, err
-	}
-	in.Findings, err = h.heard(dial(c.Data), name)
-	if errors.Is(err, errNotRunning) {
-		return in, done, nil // the dossier judges the loop itself
-	}
-	in.Others, in.Source = true, "running watch"
-	return in, done, err
-}
-
-// heard gives the findings behind the episodes of the running watch: all of the
-// loop, of the others the one that leads each.
-func (h *house) heard(cl client, name string) ([]detect.Finding, error) {
-	var all []api.Episode
-	if err := cl.get(h.ctx, "/api/episodes", &all); err != nil {
-		return nil, err
-	}
-	out := []detect.Finding{}
-	for _, e := range all {
-		if !slices.Contains(e.Loops, name) {
-			out = append(out, e.Finding)
-			continue
-		}
-		var whole struct {
-			Journal []alert.Entry `json:"journal"`
-		}
-		if err := cl.get(h.ctx, "/api/episodes/"+url.PathEscape(e.ID), &whole); err != nil {
 			return nil, err
 		}
-		for _, j := range whole.Journal {
-			if j.Finding != nil {
-				out = append(out, *j.Finding)
+		return func(l *configs.Loop) (in dossier.Input, err error) {
+			in = base
+			in.Loop, in.Frames = l, func(yield func(collector.Frame, error) bool) {
+				for i := range frames[l.Name] {
+					if !yield(frames[l.Name][i], nil) {
+						return
+					}
+				}
+			}
+			in.Partners, err = partners(list, l, recovery)
+			return in, err
+		}, nil
+	}
+	return s, nil
+}
+
+// gather reads the frames of some loops in one pass over trend files.
+func gather(ctx context.Context, files []string, ls []*configs.Loop) (map[string][]collector.Frame, error) {
+	r, err := trend.Open(files, ls, trend.Options{})
+	if err != nil {
+		return nil, err
+	}
+	defer r.Close()
+	out := map[string][]collector.Frame{}
+	for ctx.Err() == nil {
+		id, f, err := r.Next()
+		if errors.Is(err, io.EOF) {
+			return out, nil
+		}
+		if err != nil {
+			return nil, err
+		}
+		name := ls[id].Name
+		out[name] = append(out[name], *f)
+	}
+	return nil, fmt.Errorf("stopped by a signal: %w", ctx.Err())
+}
+
+// fromWatch reads loops from the running watch and the slices it has sealed, or
+// from its data folder.
+func (h *house) fromWatch(config string, span [2]int64) (s supply, err error) {
+	c, err := loadPlain(config)
+	if err != nil {
+		return s, err
+	}
+	base := dossier.Input{From: span[0], To: span[1], Site: c.Site.Name, Zone: c.Site.Zone,
+		Detect: detect.Options{NuisancePerLoopYear: c.Detect.NuisancePerLoopYear}}
+	if base.From == 0 {
+		end := time.Now().UnixMilli()
+		if base.To != 0 {
+			end = base.To
+		}
+		base.From = end - 14*24*time.Hour.Milliseconds()
+	}
+	to := base.To
+	if to == 0 {
+		to = noEnd
+	}
+	s.list = c.Loops
+	cl := dial(c.Data)
+	var st api.Status
+	err = cl.get(h.ctx, "/api/status", &st)
+	running := err == nil
+	if err != nil && !errors.Is(err, errNotRunning) {
+		return s, err
+	}
+	open := daemon.Look
+	if running {
+		open = daemon.Sealed
+	}
+	f, err := open(c)
+	if err != nil {
+		return s, err
+	}
+	s.done = func() { _ = f.Close() } // opened for reading only
+	frames := func(l *configs.Loop) iter.Seq2[collector.Frame, error] { return f.Frames(h.ctx, l.Name, base.From, to) }
+	past := f.Past
+	base.Source = "data folder of the watch"
+	view := func(name string) float64 {
+		if v, ok := f.View(name); ok {
+			return v.TimeScaleS
+		}
+		return math.NaN()
+	}
+	if running {
+		base.Source = "running watch"
+		frames = func(l *configs.Loop) iter.Seq2[collector.Frame, error] {
+			return h.sealedThenLive(f, cl, l, base.From, to)
+		}
+		past = func(names []string, from int64) (p alert.Past, err error) {
+			q := url.Values{"loop": names, "from": {time.UnixMilli(from).UTC().Format(time.RFC3339Nano)}}
+			return p, cl.get(h.ctx, "/api/past?"+q.Encode(), &p)
+		}
+		view = func(name string) float64 {
+			var v api.LoopView
+			if cl.get(h.ctx, "/api/loops/"+url.PathEscape(name), &v) != nil || v.TimeScaleS == nil {
+				return math.NaN()
+			}
+			return *v.TimeScaleS
+		}
+	}
+	s.open = func(ls []*configs.Loop) (func(*configs.Loop) (dossier.Input, error), error) {
+		var names []string
+		for _, l := range ls {
+			names = append(names, l.Name)
+		}
+		p, err := past(names, base.From)
+		if err != nil {
+			return nil, err
+		}
+		return func(l *configs.Loop) (in dossier.Input, err error) {
+			in = base
+			in.Loop, in.Frames = l, frames(l)
+			in.Told(p)
+			in.Partners, err = partners(s.list, l, func(name string) (float64, error) { return view(name), nil })
+			return in, err
+		}, nil
+	}
+	s.pass = 200 // names of one request
+	return s, nil
+}
+
+// sealedThenLive reads what the watch has sealed, and asks it for the rest.
+func (h *house) sealedThenLive(f *daemon.Folder, cl client, l *configs.Loop, from, to int64) iter.Seq2[collector.Frame, error] {
+	return func(yield func(collector.Frame, error) bool) {
+		for x, err := range f.Frames(h.ctx, l.Name, from, to) {
+			if !yield(x, err) || err != nil {
+				return
+			}
+			from = x.Time + 1
+		}
+		r, w := io.Pipe()
+		go func() {
+			w.CloseWithError(h.exportFrom(cl, api.Export{What: api.ExportTrend, Loops: []string{l.Name}, From: from, To: to}, w))
+		}()
+		defer r.Close() // ends the writer, too
+		for x, err := range framesOf(h.ctx, []string{"-"}, r, l) {
+			if !yield(x, err) {
+				return
 			}
 		}
 	}
-	return out, nil
+}
+
+// recoveries gives the usual recovery of loops (s) as a watch over their frames
+// sees it; each is asked for once.
+func (h *house) recoveries(list []*configs.Loop, o detect.Options, frames func(*configs.Loop) iter.Seq2[collector.Frame, error]) func(string) (float64, error) {
+	var mu sync.Mutex
+	known := map[string]float64{}
+	return func(name string) (float64, error) {
+		mu.Lock()
+		defer mu.Unlock()
+		if v, ok := known[name]; ok {
+			return v, nil
+		}
+		l, err := loopOf(list, name)
+		if err != nil {
+			return 0, err
+		}
+		w := detect.New(l, 0, o)
+		for f, err := range frames(l) {
+			if err != nil {
+				return 0, fmt.Errorf("frames of loop %s: %w", name, err)
+			}
+			w.Step(&f, func(*detect.Finding) {})
+		}
+		known[name] = w.View().TimeScaleS
+		return known[name], nil
+	}
 }
 
 func loopOf(list []*configs.Loop, name string) (*configs.Loop, error) {
@@ -197,38 +301,24 @@ func framesOf(ctx context.Context, files []string, stdin io.Reader, l *configs.L
 }
 
 // partners are the loops that hang together with one, with their usual recovery
-// where they are the other half of a cascade.
-func partners(list []*configs.Loop, of *configs.Loop, o detect.Options, frames func(*configs.Loop) iter.Seq2[collector.Frame, error]) ([]dossier.Partner, error) {
+// (s) where they are the other half of a cascade.
+func partners(list []*configs.Loop, of *configs.Loop, recovery func(string) (float64, error)) ([]dossier.Partner, error) {
 	var out []dossier.Partner
 	for _, k := range configs.Structure(list) {
-		relation := ""
-		for _, name := range k.Loops {
-			if name == of.Name {
-				relation = string(k.Relation)
-			}
-		}
-		if relation == "" {
+		if !slices.Contains(k.Loops, of.Name) {
 			continue
 		}
 		for i, name := range k.Loops {
 			if name == of.Name {
 				continue
 			}
-			p := dossier.Partner{Loop: name, Relation: relation}
+			p := dossier.Partner{Loop: name, Relation: string(k.Relation)}
 			if k.Relation == configs.CascadePair {
 				p.Relation = []string{"outer", "inner"}[i]
-				l, err := loopOf(list, name)
-				if err != nil {
+				var err error
+				if p.RecoveryS, err = recovery(name); err != nil {
 					return out, err
 				}
-				w := detect.New(l, 0, o)
-				for f, err := range frames(l) {
-					if err != nil {
-						return out, fmt.Errorf("frames of loop %s: %w", name, err)
-					}
-					w.Step(&f, func(*detect.Finding) {})
-				}
-				p.RecoveryS = w.View().TimeScaleS
 			}
 			out = append(out, p)
 		}

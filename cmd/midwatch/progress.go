@@ -25,7 +25,11 @@ func newProgress(w io.Writer) *progress {
 	return &progress{}
 }
 
-func (p *progress) show(rows int64, taken time.Duration) {
+func (p *progress) rows(n int64, taken time.Duration) {
+	p.show(fmt.Sprintf("%d rows, %.0f rows/s", n, float64(n)/taken.Seconds()), taken)
+}
+
+func (p *progress) show(text string, taken time.Duration) {
 	if p.w == nil {
 		return
 	}
@@ -35,7 +39,7 @@ func (p *progress) show(rows int64, taken time.Duration) {
 		return
 	}
 	p.last, p.shown = taken, true
-	fmt.Fprintf(p.w, "\r%d rows, %.0f rows/s \x1b[K", rows, float64(rows)/taken.Seconds())
+	fmt.Fprintf(p.w, "\r%s \x1b[K", text)
 }
 
 func (p *progress) clear() {

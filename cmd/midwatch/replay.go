@@ -118,7 +118,7 @@ func (h *house) replay(o daemon.ReplayOptions, files []string, asJSON bool) erro
 	// Each finding leaves at once: it may be a pipe that somebody reads along.
 	o.Findings, o.Evidence, o.Say = flushing{out}, h.stderr, say
 	began := time.Now()
-	o.Progress = func(rows int64) { line.show(rows, time.Since(began)) }
+	o.Progress = func(rows int64) { line.rows(rows, time.Since(began)) }
 	s, err := daemon.Replay(h.ctx, r, o)
 	line.clear()
 	if s.SecondsTaken = time.Since(began).Seconds(); s.SecondsTaken > 0 {

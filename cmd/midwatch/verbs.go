@@ -13,7 +13,7 @@ import (
 // verbs lists the verbs in the order of help. A new verb is one file and one row.
 var verbs = []func(*house) *cobra.Command{
 	runVerb, demoVerb, checkVerb, surveyVerb, replayVerb,
-	statusVerb, acknowledgeVerb, shelveVerb, unshelveVerb,
+	statusVerb, acknowledgeVerb, shelveVerb, unshelveVerb, noteVerb,
 	exportVerb, dossierVerb, versionVerb, checkFileVerb,
 }
 

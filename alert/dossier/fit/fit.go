@@ -17,7 +17,12 @@ const (
 	FirstOrder  Kind = "first order plus dead time"
 	SecondOrder Kind = "second order plus dead time"
 	Integrator  Kind = "integrating plus dead time"
+	// IntegratorLag answers a step with a lag before it ramps, as a level or a
+	// header behind a slow valve does.
+	IntegratorLag Kind = "integrating with a lag plus dead time"
 )
+
+func (k Kind) integrating() bool { return k == Integrator || k == IntegratorLag }
 
 // Range is a value and its 90 % range. Open says that the data do not bound it
 // on that side.
@@ -69,7 +74,7 @@ func Fit(windows []Window, o Options) (Result, error) {
 	}
 	kinds := o.Kinds
 	if len(kinds) == 0 {
-		kinds = []Kind{FirstOrder, SecondOrder, Integrator}
+		kinds = []Kind{FirstOrder, SecondOrder, Integrator, IntegratorLag}
 	}
 	var best *shape
 	first := &shape{kind: kinds[0]}
@@ -91,7 +96,7 @@ func Fit(windows []Window, o Options) (Result, error) {
 		}
 		sum := e.sums(s.kind, s.at)
 		s.score = float64(sum.n)*math.Log(sum.sse()/float64(sum.n)) + float64(len(s.at)+1)*math.Log(float64(sum.n))
-		if k == Integrator {
+		if k.integrating() {
 			// A lag far beyond the windows is an integrator with a leak that the
 			// data do not show: the two are told apart by process knowledge.
 			s.score += 2
@@ -210,6 +215,8 @@ func (e *engine) model(k Kind, at []float64) process.Model {
 	switch k {
 	case Integrator:
 		return process.Model{Gain: 1, ThetaS: th, Integrating: true}
+	case IntegratorLag:
+		return process.Model{Gain: 1, LagsS: []float64{math.Exp(at[0])}, ThetaS: th, Integrating: true}
 	case SecondOrder:
 		lag := math.Exp(at[0])
 		return process.Model{Gain: 1, LagsS: []float64{lag, lag * math.Exp(at[1])}, ThetaS: th}
@@ -227,7 +234,7 @@ func (e *engine) sums(k Kind, at []float64) (s sums) {
 	m := e.model(k, at)
 	for i, p := range e.w {
 		e.buf = whiten(e.buf, e.answers(p, m), e.ar)
-		s.project(e.buf, e.ys[i], k == Integrator, p.decay(m))
+		s.project(e.buf, e.ys[i], k.integrating(), p.decay(m))
 	}
 	return s
 }
@@ -239,6 +246,8 @@ func (e *engine) bounds(k Kind) (lo, hi []float64) {
 	switch k {
 	case Integrator:
 		return []float64{th0}, []float64{th1}
+	case IntegratorLag:
+		return []float64{lag0, th0}, []float64{math.Log(e.span / 2), th1}
 	case SecondOrder:
 		return []float64{lag0, math.Log(0.02), th0}, []float64{lag1, 0, th1}
 	}
@@ -269,7 +278,7 @@ func (e *engine) apart(k Kind, at []float64) ([]sums, float64) {
 	order := make([]int, len(e.w))
 	total := 0.0
 	for i, p := range e.w {
-		each[i].project(e.answers(p, m), p.y, k == Integrator, p.decay(m))
+		each[i].project(e.answers(p, m), p.y, k.integrating(), p.decay(m))
 		order[i] = i
 		total += math.Sqrt(each[i].xx)
 	}
@@ -359,7 +368,7 @@ func (e *engine) colour(s *shape) {
 		for k := range r {
 			r[k] = p.y[k] - gain*x[k]
 		}
-		level(r, s.kind == Integrator)
+		level(r, s.kind.integrating())
 		res = append(res, r)
 	}
 	e.ar = autoregression(res, 6)

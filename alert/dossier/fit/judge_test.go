@@ -8,6 +8,7 @@ import (
 
 	"midwatch/alert/dossier/fit"
 	"midwatch/alert/dossier/process"
+	"midwatch/alert/dossier/tune"
 )
 
 func TestIntegratingPlants(t *testing.T) {
@@ -40,6 +41,39 @@ func TestIntegratingPlants(t *testing.T) {
 	}
 }
 
+// Integrating with a lag: errors, and what the 90 % ranges are worth.
+func TestIntegratingPlantsWithALag(t *testing.T) {
+	runs, hit := 100, [3]int{}
+	var eK, eKc []float64
+	r := rand.New(rand.NewPCG(6, 5))
+	for i := range runs {
+		th := 3 * math.Exp(r.Float64()*math.Log(5))
+		m := process.Model{Gain: 0.3 / th * math.Exp(r.Float64()*math.Log(4)), LagsS: []float64{th * math.Exp(r.Float64()*math.Log(5))}, ThetaS: th, Integrating: true}
+		b := bench{m: m, dt: 1, noise: 0.1, slow: 60, steps: 4, size: 5, seed: uint64(i)}
+		f, err := fit.Fit(b.windows(), fit.Options{Kinds: []fit.Kind{fit.IntegratorLag}})
+		if err != nil {
+			t.Fatal(err)
+		}
+		truth := [3]float64{m.Gain, m.LagS(), m.ThetaS}
+		for k, x := range []fit.Range{f.Gain, f.Lag, f.Theta} {
+			if x.Low <= truth[k] && truth[k] <= x.High {
+				hit[k]++
+			}
+		}
+		a, c := f.Model.Reduce(), m.Reduce()
+		eK = append(eK, math.Abs(f.Model.Gain/m.Gain-1))
+		eKc = append(eKc, math.Abs(tune.SIMC(a, a.ThetaS).Kc/tune.SIMC(c, c.ThetaS).Kc-1))
+	}
+	t.Logf("|error| median (90th): gain %.3f (%.3f), SIMC gain %.3f (%.3f); 90 %% range holds gain %d, lag %d, dead time %d of %d",
+		median(eK), quantile(eK, 0.9), median(eKc), quantile(eKc, 0.9), hit[0], hit[1], hit[2], runs)
+	if median(eK) > 0.03 || median(eKc) > 0.06 {
+		t.Error("median errors over 3 and 6 %")
+	}
+	if all := hit[0] + hit[1] + hit[2]; all < 85*3*runs/100 || all > 95*3*runs/100 {
+		t.Errorf("the 90 %% ranges hold the truth in %d of %d, want 85 to 95 %%", all, 3*runs)
+	}
+}
+
 // Each class of process is recognised by its own records.
 func TestKindIsRecognised(t *testing.T) {
 	cases := []struct {
@@ -50,6 +84,7 @@ func TestKindIsRecognised(t *testing.T) {
 		{"first order", process.Model{Gain: 1.5, LagsS: []float64{30}, ThetaS: 8}, map[fit.Kind]bool{fit.FirstOrder: true}},
 		{"second order", process.Model{Gain: 1.5, LagsS: []float64{30, 20}, ThetaS: 5}, map[fit.Kind]bool{fit.SecondOrder: true}},
 		{"integrating", process.Model{Gain: 0.02, ThetaS: 8, Integrating: true}, map[fit.Kind]bool{fit.Integrator: true}},
+		{"integrating with a lag", process.Model{Gain: 0.02, LagsS: []float64{15}, ThetaS: 6, Integrating: true}, map[fit.Kind]bool{fit.IntegratorLag: true}},
 	}
 	for _, c := range cases {
 		n := 0

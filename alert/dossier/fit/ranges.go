@@ -48,7 +48,9 @@ func (e *engine) result(s *shape) Result {
 			widen(&r.Lag2, c.LagsS[1], c.LagsS[1])
 		}
 	}
-	r.Gain.HighOpen = r.Lag.HighOpen
+	if !s.kind.integrating() {
+		r.Gain.HighOpen = r.Lag.HighOpen
+	}
 	if r.Theta.LowOpen && r.Theta.Low <= e.dt/2 { // zero is a bound of nature
 		r.Theta.Low, r.Theta.LowOpen = 0, false
 	}
@@ -193,7 +195,7 @@ func (r *Result) goodness(e *engine, s *shape, m process.Model) {
 		for k := range d {
 			d[k] = p.y[k] - m.Gain*x[k]
 		}
-		level(d, s.kind == Integrator)
+		level(d, s.kind.integrating())
 		level(y, false)
 		for k := range d {
 			rss += d[k] * d[k]

@@ -41,7 +41,7 @@ func table(t testing.TB, name string) [][]string {
 		if strings.HasPrefix(line, "## ") {
 			in = strings.HasPrefix(line, "## "+name+" ")
 		}
-		if !in || !strings.HasPrefix(line, "|") || strings.HasPrefix(line, "|---") || strings.HasPrefix(line, "| id") {
+		if !in || !strings.HasPrefix(line, "|") || strings.HasPrefix(line, "|---") || strings.HasPrefix(line, "| id") || strings.HasPrefix(line, "| h |") {
 			continue
 		}
 		cells := strings.Split(strings.Trim(line, "|"), "|")

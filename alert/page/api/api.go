@@ -36,6 +36,9 @@ type House interface {
 	// unknown loop.
 	Explain(loop string) ([]string, bool)
 	Frames(ctx context.Context, loop string, from, to int64) iter.Seq2[collector.Frame, error]
+	// Tuning gives readings of the tuning in service since a time (ms UTC),
+	// oldest first; nil where none are kept.
+	Tuning(ctx context.Context, loop string, from int64) ([]TuningReading, error)
 	// Health says whether the watch is well, and what is not.
 	Health() (well bool, why []string)
 	// Reload reads the configuration anew and puts it in force.
@@ -53,6 +56,8 @@ type Desk interface {
 	Shelve(loop, who, why string, until time.Time) error
 	Unshelve(loop, who, why string) error
 	Shelves() []alert.Shelf
+	Note(loop, who, text string) error
+	Past(loops []string, from int64) (alert.Past, error)
 }
 
 // LoopState is a loop and the state of its watch in a word.
@@ -103,12 +108,15 @@ func New(o Options) http.Handler {
 	m.HandleFunc("GET /api/loops/{loop}", h.loop)
 	m.HandleFunc("GET /api/loops/{loop}/frames", h.frames)
 	m.HandleFunc("GET /api/loops/{loop}/explain", h.explain)
+	m.HandleFunc("GET /api/loops/{loop}/tuning", h.tuning)
 	m.HandleFunc("GET /api/episodes", h.episodes)
 	m.HandleFunc("GET /api/episodes/{id}", h.episode)
+	m.HandleFunc("GET /api/past", h.past)
 	m.HandleFunc("GET /api/export", h.export)
 	m.HandleFunc("POST /api/episodes/{id}/acknowledge", h.acknowledge)
 	m.HandleFunc("POST /api/loops/{loop}/shelve", h.shelve)
 	m.HandleFunc("POST /api/loops/{loop}/unshelve", h.unshelve)
+	m.HandleFunc("POST /api/loops/{loop}/note", h.note)
 	m.HandleFunc("POST /api/reload", h.reload)
 	if o.Metrics != nil {
 		m.Handle("GET /metrics", o.Metrics)
@@ -311,6 +319,33 @@ func (h handler) shelve(w http.ResponseWriter, r *http.Request) {
 
 func (h handler) unshelve(w http.ResponseWriter, r *http.Request) {
 	h.act(w, r, func(a Act, _ time.Time) error { return h.Desk.Unshelve(r.PathValue("loop"), a.Who, a.Why) })
+}
+
+// note keeps the reason of the act as a remark on the loop.
+func (h handler) note(w http.ResponseWriter, r *http.Request) {
+	h.act(w, r, func(a Act, _ time.Time) error {
+		err := h.Desk.Note(r.PathValue("loop"), a.Who, a.Why)
+		if err == nil {
+			h.Log.Info("noted", "audit", true, "who", a.Who, "loop", r.PathValue("loop"))
+		}
+		return err
+	})
+}
+
+// past gives what the desk knows of the past of loops: loop=... as often as
+// wanted, from= a time.
+func (h handler) past(w http.ResponseWriter, r *http.Request) {
+	e, err := readExport(r)
+	if err != nil {
+		fail(w, http.StatusBadRequest, err)
+		return
+	}
+	p, err := h.Desk.Past(e.Loops, e.From)
+	if err != nil {
+		fail(w, http.StatusInternalServerError, err)
+		return
+	}
+	answer(w, p)
 }
 
 func (h handler) reload(w http.ResponseWriter, r *http.Request) {

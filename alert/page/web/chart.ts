@@ -8,7 +8,7 @@ export interface Found { kind: string; class: string; label: string; from: numbe
 export interface Level { on: string; value: number; label: string }
 export interface Trend {
   loop: string; unit: string; from: number; to: number; bucket_ms: number; newest: number;
-  t: number[]; pv: (number | null)[]; sp: (number | null)[]; op: (number | null)[];
+  t: number[]; pv: (number | null)[]; sp: (number | null)[]; op: (number | null)[]; pos?: (number | null)[]; ff?: (number | null)[];
   runs?: Run[]; changes?: { at: number; word: string }[]; overlays?: Overlay[]; troubles?: Found[]; lines?: Level[]; pv_scale: [number | null, number | null];
 }
 
@@ -47,6 +47,9 @@ export function sig(v: number | null | undefined, n = 4): string {
   return v === null || v === undefined ? "–" : String(Number(v.toPrecision(n)));
 }
 
+/** Unit of OP, with a space before it; empty where it is not per cent. */
+const percent = document.body.dataset.op ? ` ${document.body.dataset.op}` : "";
+
 interface Colours { [k: string]: string }
 function colours(): Colours {
   const s = getComputedStyle(document.body);
@@ -77,7 +80,8 @@ export class Chart {
     for (const o of t.overlays ?? []) if (!this.shown.has(o.name)) this.shown.set(o.name, o.shown);
     if (this.plots.length === 0) this.make();
     this.plots[0]!.setData([t.t, t.pv, t.sp] as uPlot.AlignedData, false);
-    this.plots[1]!.setData([t.t, t.op] as uPlot.AlignedData, false);
+    const none = t.pos && t.ff ? [] : t.t.map(() => null);
+    this.plots[1]!.setData([t.t, t.pos ?? none, t.ff ?? none, t.op] as uPlot.AlignedData, false);
     this.range(from, to);
   }
 
@@ -142,7 +146,10 @@ export class Chart {
     });
     const pv = base(0), op = base(1);
     pv.series.push({ label: "PV", stroke: col("ink"), width: 1.2, points: { show: false } }, { label: "SP", stroke: col("note"), width: 1.4, dash: [6, 4], points: { show: false } });
-    op.series.push({ label: "OP", stroke: col("ink"), width: 1.2, points: { show: false } });
+    // The position lies on the scale of OP; a feed-forward has a scale of its own.
+    op.series.push({ label: "position", stroke: col("trace"), width: 2.4, points: { show: false } },
+      { label: "feed-forward", scale: "ff", stroke: col("soft"), width: 1.4, dash: [1, 4], points: { show: false } }, { label: "OP", stroke: col("ink"), width: 1.2, points: { show: false } });
+    op.scales!.ff = { range: (_u, lo, hi) => (lo === null || hi === null ? [0, 1] : [lo - Math.max((hi - lo) * 0.08, 1e-9), hi + Math.max((hi - lo) * 0.08, 1e-9)]) };
     for (const o of [pv, op]) this.plots.push(new uPlot(o, [[]] as unknown as uPlot.AlignedData, this.box));
   }
 
@@ -163,7 +170,7 @@ export class Chart {
     const runs = (t.runs ?? []).filter((r) => r.from <= at && at <= r.to).map((r) => r.word);
     const near = (t.to - t.from) / 150;
     for (const ch of t.changes ?? []) if (Math.abs(ch.at - at) < near) runs.push(`${siteTime(ch.at)}: ${ch.word}`);
-    this.point(`${siteTime(at)} (${new Date(at).toISOString().slice(11, 19)} UTC) · PV ${sig(t.pv[i])}${unit} · SP ${sig(t.sp[i])}${unit} · OP ${sig(t.op[i])} %${runs.length ? ` · ${[...new Set(runs)].join(", ")}` : ""}`);
+    this.point(`${siteTime(at)} (${new Date(at).toISOString().slice(11, 19)} UTC) · PV ${sig(t.pv[i])}${unit} · SP ${sig(t.sp[i])}${unit} · OP ${sig(t.op[i])}${percent}${t.pos ? ` · position ${sig(t.pos[i])}${percent}` : ""}${t.ff ? ` · feed-forward ${sig(t.ff[i])}` : ""}${runs.length ? ` · ${[...new Set(runs)].join(", ")}` : ""}`);
   }
 
   private x(u: uPlot, ms: number): number {
@@ -205,6 +212,17 @@ export class Chart {
     g.restore();
   }
 
+  /** Text with a rim of the paper's colour, so that it is read over a trace. */
+  private label(g: CanvasRenderingContext2D, text: string, x: number, y: number): void {
+    g.save();
+    g.strokeStyle = this.c.card!;
+    g.lineWidth = 4 * devicePixelRatio;
+    g.lineJoin = "round";
+    g.strokeText(text, x, y);
+    g.restore();
+    g.fillText(text, x, y);
+  }
+
   private hatch(g: CanvasRenderingContext2D, x: number, y: number, w: number, h: number): void {
     g.save();
     g.beginPath();
@@ -244,7 +262,7 @@ export class Chart {
       g.stroke();
       g.setLineDash([]);
       g.textAlign = "right";
-      g.fillText(l.label, b.left + b.width - 4 * r, y + (y < b.top + 16 * r ? 14 : -4) * r);
+      this.label(g, l.label, b.left + b.width - 4 * r, y + (y < b.top + 16 * r ? 14 : -4) * r);
     }
     // A limit that is met, and wind-up, along the top of OP.
     if (on === "op") {
@@ -285,12 +303,12 @@ export class Chart {
       if (x > b.left + b.width || (f.to && this.x(u, f.to) <= b.left)) return;
       g.fillStyle = this.c[`${f.class}-t`] ?? this.c.soft!;
       g.textAlign = right ? "right" : "left";
-      g.fillText(f.label, x + (right ? -6 : 6) * r, b.top + (13 + (k % 4) * 15) * r);
+      this.label(g, f.label, x + (right ? -6 : 6) * r, b.top + (13 + (k % 4) * 15) * r);
     });
     g.fillStyle = this.c.soft!;
     g.font = `${12 * r}px system-ui, sans-serif`;
     g.textAlign = "left";
-    g.fillText(i === 0 ? `PV (full), SP (dashed)${this.unit ? `  ${this.unit}` : ""}` : "OP  %", b.left, b.top - 6 * r);
+    g.fillText(i === 0 ? `PV (full), SP (dashed)${this.unit ? `  ${this.unit}` : ""}` : `OP ${percent}${t.pos ? ", position (grey)" : ""}${t.ff ? ", feed-forward (dotted, own scale)" : ""}`, b.left, b.top - 6 * r);
     g.restore();
   }
 
@@ -299,10 +317,12 @@ export class Chart {
     const at = (k: number, v: number | null | undefined): [number, number] | null =>
       v === null || v === undefined ? null : [u.valToPos(o.t[k]!, "x", true), u.valToPos(v, "y", true)];
     const trace = (vs: (number | null)[], back: boolean): void => {
+      let down = back;
       for (let j = 0; j < vs.length; j++) {
         const k = back ? vs.length - 1 - j : j;
         const p = at(k, vs[k]);
-        if (p) g.lineTo(p[0], p[1]);
+        if (p) down ? g.lineTo(p[0], p[1]) : g.moveTo(p[0], p[1]);
+        down = back || p !== null;
       }
     };
     g.save();

@@ -1,6 +1,7 @@
 // The list: strips come in blocks as they are scrolled to, and go when they are
 // far away, so that thousands of loops cost no more than what is seen.
 import { follow, get, swap, up } from "./live";
+import { pictures } from "./png";
 
 const rowsAtOnce = 40;
 
@@ -77,8 +78,9 @@ export function list(): void {
       document.getElementById("h-watch")!.textContent = doc.getElementById("h-watch")!.textContent;
       const spans = form.querySelector(".spans")!;
       swap(spans, doc.querySelector("#filter .spans")!.innerHTML);
-      (form.elements.namedItem("hours") as HTMLInputElement).value = (doc.querySelector('#filter [name="hours"]') as HTMLInputElement).value;
+      (form.elements.namedItem("span") as HTMLInputElement).value = (doc.querySelector('#filter [name="span"]') as HTMLInputElement).value;
       blocks();
+      pictures();
     } catch (e) {
       if ((e as Error).name === "AbortError") return;
     }
@@ -86,7 +88,7 @@ export function list(): void {
   };
   const query = (): string => {
     const q = new URLSearchParams();
-    for (const [k, v] of new FormData(form)) if (v !== "" && !(k === "hours" && v === "12")) q.set(k, String(v));
+    for (const [k, v] of new FormData(form)) if (v !== "" && !(k === "span" && v === "12")) q.set(k, String(v));
     return q.toString();
   };
   let wait = 0;

@@ -6,7 +6,7 @@ export interface Pulse {
   sources: number; alive: number; age: string; stale: boolean; now: string; now_ms: number; revision: number;
 }
 
-export interface Fresh { t: number[]; pv: (number | null)[]; sp: (number | null)[]; op: (number | null)[] }
+export interface Fresh { t: number[]; pv: (number | null)[]; sp: (number | null)[]; op: (number | null)[]; pos?: (number | null)[]; ff?: (number | null)[] }
 
 export const up = document.body.dataset.up ?? "";
 

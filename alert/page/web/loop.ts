@@ -1,6 +1,7 @@
 // A loop: the chart over a span that stands in the address, so that back,
 // forward and a copied link work.
 import { boxNow, follow, get, swap, up } from "./live";
+import { keep } from "./png";
 import { Chart, siteTime, type Trend } from "./chart";
 
 const body = document.body.dataset;
@@ -184,12 +185,7 @@ save.className = "link";
 save.textContent = "PNG";
 save.addEventListener("click", () => {
   chart.picture(`${body.name} · ${siteTime(span.from, false)} – ${siteTime(span.to, false)}`).toBlob((b) => {
-    if (!b) return;
-    const a = document.createElement("a");
-    a.href = URL.createObjectURL(b);
-    a.download = `${(body.name ?? "loop").replace(/[^\w.-]+/g, "_")}.png`;
-    a.click();
-    setTimeout(() => URL.revokeObjectURL(a.href), 10000);
+    if (b) keep(b, `${(body.name ?? "loop").replace(/[^\w.-]+/g, "_")}.png`);
   });
 });
 document.querySelector(".exports")?.append(" ", save);
@@ -204,13 +200,15 @@ follow(() => `?loop=${body.loop}${trend?.newest ? `&after=${trend.newest}` : ""}
     trend.pv.push(f.pv[i] ?? null);
     trend.sp.push(f.sp[i] ?? null);
     trend.op.push(f.op[i] ?? null);
+    trend.pos?.push(f.pos?.[i] ?? null);
+    trend.ff?.push(f.ff?.[i] ?? null);
     trend.newest = f.t[i]!;
   }
   span = now(span);
   // What has left the view goes; when too much has come in, it is thinned anew.
   let gone = 0;
   while (gone < trend.t.length && trend.t[gone]! < span.from - (span.to - span.from) / 10) gone++;
-  if (gone > 200) for (const c of [trend.t, trend.pv, trend.sp, trend.op]) c.splice(0, gone);
+  if (gone > 200) for (const c of [trend.t, trend.pv, trend.sp, trend.op, trend.pos, trend.ff]) c?.splice(0, gone);
   if (trend.t.length > 6000) void load();
   else show();
   exports();

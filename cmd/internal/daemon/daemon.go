@@ -189,6 +189,7 @@ func (d *Daemon) Start() error {
 	}
 	d.keeper.begin()
 	d.ledger.turned.Store(now)
+	d.self.turned.Store(now)
 	for _, s := range d.shards {
 		s.turned.Store(now)
 	}
@@ -218,6 +219,7 @@ func (d *Daemon) Start() error {
 	}
 	d.running.add("sources", d.stopFeeds)
 	d.spawn("self watch", d.self.run)
+	d.spawn("before and after", (&comparer{d, d.log}).run)
 	d.startHeart()
 	d.running.add("heartbeat", func(ctx context.Context) error { return d.beat.stop(ctx) })
 	d.server.start()

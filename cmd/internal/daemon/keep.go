@@ -8,6 +8,7 @@ import (
 	"sync/atomic"
 	"time"
 
+	"midwatch/alert/page/api"
 	"midwatch/collector"
 	"midwatch/configs"
 	"midwatch/store"
@@ -25,8 +26,9 @@ type keeper struct {
 	hourly  time.Time // of the last hourly work
 	daily   time.Time // of the last daily work
 	failing string
-	oldest  int64     // data time of the oldest frame at the last hourly work, ms UTC
-	short   time.Time // when it was last said that keep.size is too small
+	oldest  int64                        // data time of the oldest frame at the last hourly work, ms UTC
+	short   time.Time                    // when it was last said that keep.size is too small
+	tuned   map[string]api.TuningReading // newest kept reading of the tuning, by loop; nil: not read yet
 
 	turned  atomic.Int64 // wall clock of the last turn, ms UTC
 	flushed atomic.Int64 // of the last good flush
@@ -65,11 +67,13 @@ func (k *keeper) turn(ctx context.Context) {
 		k.hourly = now
 		k.noteFlush()
 		k.noteRoom(now)
+		k.keepTunings(ctx)
 		k.expire(now)
 	}
 	if now.Sub(k.daily) >= 24*time.Hour || now.Before(k.daily) {
 		k.daily = now
 		k.keepProfiles(ctx)
+		k.dropTunings()
 		if err := k.d.state.Backup(); err != nil {
 			k.log.Error("no backup of the state today", "err", err)
 		}

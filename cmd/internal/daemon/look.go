@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"iter"
 	"log/slog"
 	"os"
 	"path/filepath"
@@ -52,6 +53,26 @@ func Look(c *configs.Config) (_ *Folder, err error) {
 	f.desk, err = alert.New(alert.Options{Store: alert.On(f.state), Clock: time.Now, Log: slog.New(slog.DiscardHandler),
 		Settings: alert.Settings{Site: c.Site.Name, Zone: c.Site.Zone, Loops: c.Loops, Advise: advise}})
 	return f, err
+}
+
+// Sealed opens the trends of a data folder that no running watch writes any more,
+// beside one that may run. The newest hours are not among them.
+func Sealed(c *configs.Config) (*Folder, error) {
+	w, err := store.OpenWindow(filepath.Join(c.Data, windowDir), store.Options{ReadOnly: true, Beside: true})
+	if err != nil {
+		return nil, fmt.Errorf("trends in %s: %w", c.Data, err)
+	}
+	return &Folder{c: c, window: w}, nil
+}
+
+// Frames reads kept frames of a loop, oldest first, from <= Time < to.
+func (f *Folder) Frames(ctx context.Context, loop string, from, to int64) iter.Seq2[collector.Frame, error] {
+	return f.window.Frames(ctx, loop, from, to)
+}
+
+// Past is what the desk knew of loops since a data time, ms UTC.
+func (f *Folder) Past(loops []string, from int64) (alert.Past, error) {
+	return f.desk.Past(loops, from)
 }
 
 // Close lets go of the folder.

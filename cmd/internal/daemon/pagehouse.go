@@ -1,7 +1,6 @@
 package daemon
 
 import (
-	"context"
 	"io"
 	"math"
 	"net/http"
@@ -11,11 +10,13 @@ import (
 	"midwatch/alert"
 	"midwatch/alert/page"
 	"midwatch/configs"
+	"midwatch/detect"
 )
 
 // ServePage makes the page, with the interface for programs behind its guards.
 func ServePage(d *Daemon, programs http.Handler) (http.Handler, error) {
-	p, err := page.New(page.Options{House: pageHouse{d, d.people()}, Page: d.cfg.Page, API: programs, Clock: d.clock.Now, Log: d.log})
+	p, err := page.New(page.Options{House: pageHouse{d, d.people()}, Page: d.cfg.Page, API: programs, Clock: d.clock.Now, Log: d.log,
+		Sessions: sessions{d.state}})
 	if err != nil {
 		return nil, err
 	}
@@ -48,6 +49,11 @@ func (p people) Shelve(loop, who, why string, until time.Time) error {
 func (p people) Unshelve(loop, who, why string) error {
 	defer p.acts.Add(1)
 	return p.Desk.Unshelve(loop, who, why)
+}
+
+func (p people) Note(loop, who, text string) error {
+	defer p.acts.Add(1)
+	return p.Desk.Note(loop, who, text)
 }
 
 // pageHouse shows the daemon to the page.
@@ -93,16 +99,20 @@ func (h pageHouse) Watch() page.WatchState {
 	if p := h.keeper.problem.Load(); p != nil {
 		w.Store.Problem = *p
 	}
+	if free, err := h.window.DiskFree(); err == nil && free < math.MaxInt64 {
+		w.Store.DiskFree = free
+	}
 	kinds := map[string]string{}
 	for _, c := range h.config().Advise.Senders {
 		kinds[c.Name] = senderKind(&c)
 	}
 	for _, s := range h.desk.Senders() {
-		w.Senders = append(w.Senders, page.SenderState{Name: s.Name, Kind: kinds[s.Name], Waiting: s.Queued, Last: s.LastOK, Problem: s.Problem})
+		w.Senders = append(w.Senders, page.SenderState{Name: s.Name, Kind: kinds[s.Name], Waiting: s.Queued, Oldest: s.Oldest, Last: s.LastOK, Problem: s.Problem})
 	}
 	for _, s := range w.Sources {
 		w.Clock.Steps += s.Counts["clock_steps"]
 	}
+	w.Clock.LastStep = h.self.stepped.Load()
 	return w
 }
 
@@ -122,9 +132,12 @@ func (h pageHouse) Explain(loop string) ([]string, error) {
 	return nil, page.ErrUnknownLoop
 }
 
-// Tuning gives nothing: readings of the tuning are not kept apart from memories.
-func (h pageHouse) Tuning(context.Context, string, int64) ([]page.TuningReading, error) {
-	return nil, nil
+func (h pageHouse) Picture(loop string) detect.Picture {
+	id, ok := h.idOf(loop)
+	if !ok {
+		return detect.Picture{}
+	}
+	return h.shardOf(id).picture(id)
 }
 
 func (h pageHouse) Settings(w io.Writer) error { return h.config().Show(w) }

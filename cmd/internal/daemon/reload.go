@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"reflect"
 	"slices"
 
 	"midwatch/alert/page"
@@ -62,7 +63,7 @@ func (d *Daemon) Apply(ctx context.Context, c *configs.Config) error {
 	}
 
 	var waits []string
-	if c.Page != d.cfg.Page {
+	if !reflect.DeepEqual(c.Page, d.cfg.Page) {
 		waits = append(waits, "page")
 	}
 	if c.Keep.Size != d.cfg.Keep.Size {

@@ -29,6 +29,8 @@ const (
 type selfWatch struct {
 	d      *Daemon
 	turned atomic.Int64 // wall clock of the last turn, ms UTC
+	// stepped is when a clock was last seen to step, wall clock ms UTC; 0: not yet.
+	stepped atomic.Int64
 
 	stands map[selfKey]*selfState
 
@@ -296,6 +298,9 @@ func (s *selfWatch) clockTroubles(now time.Time) (out []trouble) {
 				text:  fmt.Sprintf("The clock of source %s stepped. Frames at the step are flagged.", st.Name),
 				short: fmt.Sprintf("the clock of source %s stepped", st.Name)})
 		}
+	}
+	if len(out) > 0 {
+		s.stepped.Store(now.UnixMilli())
 	}
 	return out
 }

@@ -2,6 +2,7 @@ package daemon
 
 import (
 	"context"
+	"crypto/tls"
 	"errors"
 	"fmt"
 	"log/slog"
@@ -29,7 +30,7 @@ type server struct {
 	log  *slog.Logger
 	unix net.Listener
 	tcp  net.Listener
-	cert [2]string // files of certificate and key; empty: plain
+	cert *certificate // nil: plain
 	srv  []*http.Server
 	done []chan struct{}
 }
@@ -65,10 +66,15 @@ func (d *Daemon) listen() (_ *server, err error) {
 	} else if host, _, _ := net.SplitHostPort(d.cfg.Page.Listen); !loopback(host) {
 		return s, fmt.Errorf("page.listen: %s is not of this machine alone; hint: 127.0.0.1:8420", d.cfg.Page.Listen)
 	}
+	if c := d.cfg.Page; c.CertFile != "" {
+		s.cert = &certificate{log: d.log, cert: c.CertFile, key: c.KeyFile}
+		if _, err := s.cert.get(nil); err != nil {
+			return s, fmt.Errorf("page.cert_file: %w; hint: cert_file and key_file are PEM and belong together", err)
+		}
+	}
 	if s.tcp, err = net.Listen("tcp", d.cfg.Page.Listen); err != nil {
 		return s, fmt.Errorf("page.listen: %w; hint: another program may have the port", err)
 	}
-	s.cert = [2]string{d.cfg.Page.CertFile, d.cfg.Page.KeyFile}
 	s.add(page)
 	return s, nil
 }
@@ -112,8 +118,9 @@ func (s *server) start() {
 		go func() {
 			defer close(done)
 			var err error
-			if i == 1 && s.cert[0] != "" {
-				err = srv.ServeTLS(l, s.cert[0], s.cert[1])
+			if i == 1 && s.cert != nil {
+				srv.TLSConfig = &tls.Config{MinVersion: tls.VersionTLS12, GetCertificate: s.cert.get}
+				err = srv.ServeTLS(l, "", "")
 			} else {
 				err = srv.Serve(l)
 			}

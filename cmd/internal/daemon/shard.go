@@ -164,6 +164,18 @@ func (s *shard) view(id collector.LoopID) (v detect.View, ok bool) {
 	return w.View(), true
 }
 
+// picture gives what of the evidence can be drawn; nothing until the loop has
+// caught up.
+func (s *shard) picture(id collector.LoopID) detect.Picture {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	w := s.lane.watch(id)
+	if w == nil || s.lane.pace[s.lane.at(id)].late {
+		return detect.Picture{}
+	}
+	return w.Picture()
+}
+
 func (s *shard) explain(id collector.LoopID) ([]string, bool) {
 	s.mu.Lock()
 	defer s.mu.Unlock()

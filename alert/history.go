@@ -1,0 +1,127 @@
+package alert
+
+import (
+	"encoding/binary"
+	"errors"
+	"fmt"
+	"slices"
+	"strings"
+
+	"midwatch/detect"
+)
+
+// Remark is what a person left written of a loop, such as the record of a tuning:
+// what was changed, from what to what, and why.
+type Remark struct {
+	Wall int64  `json:"wall"` // when it was written, ms UTC
+	Who  string `json:"who"`
+	Text string `json:"text"`
+}
+
+// mostNotes are kept of a loop; a new one drops the oldest.
+const mostNotes = 100
+
+// Past is what the desk knows of the past of loops.
+type Past struct {
+	// Newest are the newest findings of each kind and episode of all loops.
+	Newest []detect.Finding   `json:"newest"`
+	Loops  map[string]History `json:"loops"`
+}
+
+// History is what the desk knows of the past of one loop.
+type History struct {
+	Findings []detect.Finding `json:"findings"` // all that were told of it
+	Sessions []Session        `json:"tuning_sessions"`
+	Notes    []Remark         `json:"notes"`
+}
+
+// Note keeps what who has to say of a loop.
+func (d *Desk) Note(loop, who, text string) error {
+	if err := signed(who, text); err != nil {
+		return err
+	}
+	if strings.TrimSpace(text) == "" {
+		return errors.New("the note is empty; hint: what was changed, from what to what, and why")
+	}
+	d.mu.Lock()
+	defer d.mu.Unlock()
+	if d.set.loops[loop] == nil {
+		return fmt.Errorf("loop %q is %w; hint: the loop list has the names", loop, ErrUnknown)
+	}
+	return d.update(func(b *batch) error {
+		var keys [][]byte
+		for k := range b.tx.Scan(bucketNotes, append([]byte(loop), 0)) {
+			keys = append(keys, slices.Clone(k))
+		}
+		n := uint32(1)
+		if len(keys) > 0 {
+			last := keys[len(keys)-1]
+			n = binary.BigEndian.Uint32(last[len(last)-4:]) + 1
+		}
+		for len(keys) >= mostNotes {
+			if err := b.tx.Delete(bucketNotes, keys[0]); err != nil {
+				return err
+			}
+			keys = keys[1:]
+		}
+		return put(b.tx, bucketNotes, key2(loop, n), Remark{d.wall(), clean(who), clean(text)})
+	})
+}
+
+// Past gives the past of loops since a data time, ms UTC.
+func (d *Desk) Past(loops []string, from int64) (Past, error) {
+	hide := d.hider()
+	p := Past{Newest: []detect.Finding{}, Loops: map[string]History{}}
+	for _, l := range loops {
+		p.Loops[l] = History{Findings: []detect.Finding{}, Sessions: []Session{}, Notes: []Remark{}}
+	}
+	err := d.o.Store.View(func(tx Tx) error {
+		of := map[string][]string{} // by loop: its episodes, oldest first
+		_, err := scan(tx, bucketEpisodes, nil, func(id string, e Episode) error {
+			if e.Into != "" || e.Last < from && !e.Open() {
+				return nil
+			}
+			for i := range e.Members {
+				p.Newest = append(p.Newest, e.Members[i].Finding)
+			}
+			for _, l := range e.Loops() {
+				of[l] = append(of[l], id)
+			}
+			return nil
+		})
+		if err != nil {
+			return err
+		}
+		changed, err := sessions(tx, 0)
+		if err != nil {
+			return err
+		}
+		for l, h := range p.Loops {
+			for _, id := range of[l] {
+				if _, err := scan(tx, bucketJournal, append([]byte(id), 0), func(_ string, x Entry) error {
+					if x.Finding != nil {
+						h.Findings = append(h.Findings, *x.Finding)
+					}
+					return nil
+				}); err != nil {
+					return err
+				}
+			}
+			for _, s := range changed {
+				if s.Loop == l {
+					h.Sessions = append(h.Sessions, s)
+				}
+			}
+			if _, err := scan(tx, bucketNotes, append([]byte(l), 0), func(_ string, n Remark) error {
+				n.Who = hide(Entry{Who: n.Who, Wall: n.Wall}).Who
+				h.Notes = append(h.Notes, n)
+				return nil
+			}); err != nil {
+				return err
+			}
+			p.Loops[l] = h
+		}
+		return nil
+	})
+	return p, err
+}
