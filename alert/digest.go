@@ -66,7 +66,7 @@ func (d *Desk) openItems(keep func(*Episode) bool) []Item {
 	var items []Item
 	for _, e := range d.mem.episodes {
 		if e.Open() && keep(e) {
-			it := e.item()
+			it := d.item(e)
 			it.Event = detect.Raised
 			it.Urgency, it.Why = urgency(&it.Finding, d.set.loops[it.Finding.Loop], work)
 			items = append(items, it)

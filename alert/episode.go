@@ -212,20 +212,23 @@ func (e *Episode) Loops() []string {
 	return out
 }
 
-// inner is the innermost loop of a cascade whose loops share the episode; empty: none.
-func (e *Episode) inner() string {
+// inner is the innermost loop of a cascade of which an outer loop shares the episode;
+// empty: none. That a source is down is no matter of a cascade, and loops that share
+// an episode need not be of one.
+func (e *Episode) inner(of relatives) string {
 	name, deepest := "", 0
+	if e.Family == familySource || e.Family == familyData {
+		return name
+	}
 	for i := range e.Members {
-		if m := &e.Members[i]; m.Open && m.Depth > deepest {
+		m := &e.Members[i]
+		if m.Open && m.Depth > deepest && slices.ContainsFunc(e.Members, func(o Member) bool {
+			return o.Open && o.Depth < m.Depth && slices.Contains(of[m.Finding.Loop], o.Finding.Loop)
+		}) {
 			name, deepest = m.Finding.Loop, m.Depth
 		}
 	}
-	for i := range e.Members {
-		if m := &e.Members[i]; m.Open && m.Depth < deepest && m.Finding.Loop != "" {
-			return name
-		}
-	}
-	return ""
+	return name
 }
 
 // Entry is one line of an episode's journal. It is only ever appended.

@@ -1,7 +1,9 @@
 package alert
 
 import (
+	"bytes"
 	"encoding/binary"
+	"encoding/json"
 	"errors"
 	"fmt"
 	"slices"
@@ -68,9 +70,40 @@ func (d *Desk) Note(loop, who, text string) error {
 	})
 }
 
+// dropOldRemarks lets go of what was written of loops that are listed no more, under
+// no name, when it is older than what is kept.
+func (b *batch) dropOldRemarks(before int64) error {
+	listed := map[string]bool{}
+	for _, l := range b.d.set.loops {
+		listed[l.Name], listed[l.Was] = true, true
+	}
+	var old [][]byte
+	for k, v := range b.tx.Scan(bucketNotes, nil) {
+		var n Remark
+		if i := bytes.IndexByte(k, 0); i < 0 || listed[string(k[:i])] || json.Unmarshal(v, &n) != nil || n.Wall >= before {
+			continue
+		}
+		old = append(old, bytes.Clone(k))
+	}
+	for _, k := range old {
+		if err := b.tx.Delete(bucketNotes, k); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
 // Past gives the past of loops since a data time, ms UTC.
 func (d *Desk) Past(loops []string, from int64) (Past, error) {
 	hide := d.hider()
+	d.mu.Lock()
+	was := map[string]string{} // what people wrote and what was tuned follows a loop to its new name
+	for _, l := range loops {
+		if x := d.set.loops[l]; x != nil {
+			was[l] = x.Was
+		}
+	}
+	d.mu.Unlock()
 	p := Past{Newest: []detect.Finding{}, Loops: map[string]History{}}
 	for _, l := range loops {
 		p.Loops[l] = History{Findings: []detect.Finding{}, Sessions: []Session{}, Notes: []Remark{}}
@@ -108,16 +141,21 @@ func (d *Desk) Past(loops []string, from int64) (Past, error) {
 				}
 			}
 			for _, s := range changed {
-				if s.Loop == l {
+				if s.Loop == l || s.Loop == was[l] {
 					h.Sessions = append(h.Sessions, s)
 				}
 			}
-			if _, err := scan(tx, bucketNotes, append([]byte(l), 0), func(_ string, n Remark) error {
-				n.Who = hide(Entry{Who: n.Who, Wall: n.Wall}).Who
-				h.Notes = append(h.Notes, n)
-				return nil
-			}); err != nil {
-				return err
+			for _, name := range []string{was[l], l} {
+				if name == "" {
+					continue
+				}
+				if _, err := scan(tx, bucketNotes, append([]byte(name), 0), func(_ string, n Remark) error {
+					n.Who = hide(Entry{Who: n.Who, Wall: n.Wall}).Who
+					h.Notes = append(h.Notes, n)
+					return nil
+				}); err != nil {
+					return err
+				}
 			}
 			p.Loops[l] = h
 		}

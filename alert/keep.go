@@ -41,6 +41,9 @@ func (d *Desk) prune(now time.Time) error {
 		if err := b.dropOldOutcomes(); err != nil {
 			return err
 		}
+		if err := b.dropOldRemarks(before); err != nil {
+			return err
+		}
 		return b.dropHeard(before)
 	})
 	if err == nil && gone > 0 {

@@ -37,6 +37,28 @@ func TestCascadeIsJudgedFromTheInside(t *testing.T) {
 			t.Errorf("%s: the message is of %s:\n%s", name, m.Loop, m.Text)
 		}
 	}
+	// What shares an episode but is not above it in the cascade says nothing of it.
+	for name, hear := range map[string][]detect.Finding{
+		"source down": {source("works", detect.SourceDown, detect.Raised, 1), f("FIC-311", detect.StaleData, detect.Raised, 2),
+			f("LIC-310", detect.StaleData, detect.Raised, 2), f("AIC-204", detect.StaleData, detect.Raised, 2)},
+		"a group": {f("AIC-204", detect.SustainedOscillation, detect.Raised, 0, period), f("FIC-311", detect.SustainedOscillation, detect.Raised, 5, period),
+			f("", detect.SharedOscillation, detect.Raised, 6, period, func(x *detect.Finding) {
+				x.Subject, x.Loop, x.Loops = detect.Subject{Part: "group-1"}, "", []string{"AIC-204", "FIC-311"}
+			})},
+	} {
+		r := newRig(t)
+		r.hear(hear...)
+		r.run(start.Add(time.Hour))
+		es := live(r.desk.Episodes())
+		if !slices.ContainsFunc(es, func(e Episode) bool { return slices.Contains(e.Loops(), "FIC-311") && len(e.Loops()) > 1 }) {
+			t.Fatalf("%s: not one episode: %s", name, describe(es))
+		}
+		for _, m := range r.hook.take() {
+			if strings.Contains(m.Text, "inner loop") {
+				t.Errorf("%s: told of a cascade:\n%s", name, m.Text)
+			}
+		}
+	}
 	named := outer
 	named.Kind, named.Cause = detect.GrowingOscillation, detect.ResetTooShort
 	r := newRig(t)

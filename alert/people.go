@@ -219,7 +219,7 @@ func (e *Episode) clone() Episode {
 }
 
 func (d *Desk) episodeRank(e *Episode, work horizon) float64 {
-	it := e.item()
+	it := d.item(e)
 	it.Urgency, _ = urgency(&it.Finding, d.set.loops[it.Finding.Loop], work)
 	r := d.rank(&it)
 	if !e.Open() {
@@ -325,7 +325,7 @@ func (d *Desk) escalate(now time.Time) error {
 		x := d.set.Advise.Escalate[e.Escalated]
 		err := d.update(func(b *batch) error {
 			e.Steps++
-			it := e.item()
+			it := d.item(e)
 			it.Event, it.Urgency = detect.Updated, Now
 			it.Why = "not acknowledged for " + minutes(x.After)
 			e.Escalated++

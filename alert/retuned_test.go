@@ -8,6 +8,7 @@ import (
 	"testing"
 	"time"
 
+	"midwatch/configs"
 	"midwatch/detect"
 )
 
@@ -128,5 +129,38 @@ func TestRemarks(t *testing.T) {
 	p, err := r.desk.Past([]string{"AIC-204"}, 0)
 	if h := p.Loops["AIC-204"]; err != nil || len(h.Notes) != mostNotes || h.Notes[0].Text != "reset 42 to 2 s" || h.Notes[mostNotes-1].Text != "reset 42 to 101 s" || h.Notes[0].Who != "Jo" {
 		t.Errorf("%d notes, %+v, %v", len(h.Notes), h.Notes, err)
+	}
+}
+
+// Remarks follow a loop to its new name; those of a loop that is listed no more go
+// when nothing else is kept for as long.
+func TestRemarksOfLoopsThatLeave(t *testing.T) {
+	r := newRig(t, func(s *Settings) { s.Keep = 40 * 24 * time.Hour })
+	r.hear(retune("AIC-204", 0))
+	for _, l := range []string{"AIC-204", "PIC-120", "TIC-401"} {
+		if err := r.desk.Note(l, "Jo", "as left"); err != nil {
+			t.Fatal(err)
+		}
+	}
+	r.set.Loops = []*configs.Loop{loop("AIC-904", func(l *configs.Loop) { l.Was = "AIC-204" }), loop("TIC-401")}
+	r.open()
+	if err := r.desk.Note("AIC-904", "Jo", "greased"); err != nil {
+		t.Fatal(err)
+	}
+	later := start.Add(50 * 24 * time.Hour)
+	r.hear(f("TIC-401", detect.SustainedOffset, detect.Raised, 50*24*60))
+	r.run(later)
+	p, err := r.desk.Past([]string{"AIC-904", "PIC-120", "TIC-401"}, 0)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if h := p.Loops["AIC-904"]; len(h.Notes) != 2 || h.Notes[0].Text != "as left" || h.Notes[1].Text != "greased" {
+		t.Errorf("under the new name: %+v", h)
+	}
+	if n := len(p.Loops["TIC-401"].Notes); n != 1 {
+		t.Errorf("a loop that is listed has %d notes", n)
+	}
+	if n := len(p.Loops["PIC-120"].Notes); n != 0 {
+		t.Errorf("a loop that left the list has %d notes after %s", n, r.set.Keep)
 	}
 }

@@ -42,13 +42,6 @@ func (d *Desk) Sessions(since int64) (out []Session, err error) {
 	return out, err
 }
 
-// Newest is the data time of the newest finding heard, ms UTC.
-func (d *Desk) Newest() int64 {
-	d.mu.Lock()
-	defer d.mu.Unlock()
-	return d.mem.newest
-}
-
 // Conclude keeps what a comparison of a session came to.
 func (d *Desk) Conclude(s Session, o Outcome) error {
 	d.mu.Lock()

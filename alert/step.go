@@ -37,8 +37,8 @@ type Item struct {
 	Why      string         `json:"why,omitempty"`     // of the urgency, or why it is told again
 }
 
-func (e *Episode) item() Item {
-	it := Item{Episode: e.ID, Step: e.Steps, At: e.Last, Since: e.Since, Finding: e.Lead(), Loops: e.Loops(), Inner: e.inner(), Count: e.Count,
+func (d *Desk) item(e *Episode) Item {
+	it := Item{Episode: e.ID, Step: e.Steps, At: e.Last, Since: e.Since, Finding: e.Lead(), Loops: e.Loops(), Inner: e.inner(d.set.cascade), Count: e.Count,
 		State: e.State(), Hold: e.Hold, Standing: e.Standing}
 	seen := map[detect.Kind]bool{}
 	for i := range e.Members {
@@ -58,7 +58,7 @@ func (b *batch) step(e *Episode, event detect.Event, at int64, quiet, worse bool
 	limit, _, _ := limitAt(&lead)
 	e.Told = toldState{LimitAt: limit, Event: event, Cause: lead.Cause, Kind: lead.Kind, Confidence: lead.Confidence, Strength: strength(&lead),
 		Loops: len(e.Loops()), Urgent: urgentSoon(&lead)}
-	s := step{Item: e.item(), Wall: b.d.wall(), Quiet: quiet, Worse: worse}
+	s := step{Item: b.d.item(e), Wall: b.d.wall(), Quiet: quiet, Worse: worse}
 	s.Event, s.At = event, at
 	b.d.mem.steps[e.ID] = append(b.d.mem.steps[e.ID], s)
 	return put(b.tx, bucketSteps, key2(e.ID, e.Steps), s)

@@ -51,7 +51,8 @@ func (in *Input) Told(p alert.Past) {
 	h := p.Loops[in.Loop.Name]
 	in.Findings = append([]detect.Finding{}, h.Findings...)
 	for i := range p.Newest {
-		if f := &p.Newest[i]; f.Loop != in.Loop.Name {
+		// Under its former name it is no other loop.
+		if f := &p.Newest[i]; f.Loop != in.Loop.Name && (f.Loop != in.Loop.Was || f.Loop == "") {
 			in.Findings = append(in.Findings, *f)
 		}
 	}

@@ -68,7 +68,10 @@ func TestWhatTheWatchTold(t *testing.T) {
 	own := detect.Finding{Subject: detect.Subject{Loop: w.loop.Name}, Loop: w.loop.Name, Kind: detect.TuningChanged, Event: detect.Raised, At: at, Since: at, Confidence: 1}
 	other := own
 	other.Subject.Loop, other.Loop = "PIC-107", "PIC-107"
-	in.Told(alert.Past{Newest: []detect.Finding{own, other}, Loops: map[string]alert.History{w.loop.Name: {
+	was := other
+	w.loop.Was = "XIC-9"
+	was.Subject.Loop, was.Loop = w.loop.Was, w.loop.Was // under its former name: no other loop
+	in.Told(alert.Past{Newest: []detect.Finding{own, other, was}, Loops: map[string]alert.History{w.loop.Name: {
 		Findings: []detect.Finding{own},
 		Sessions: []alert.Session{{Loop: w.loop.Name, First: at, Last: at, Outcome: alert.Outcome{Last: at, At: at + 86400_000, Verdict: "PV keeps closer to SP since the change"}}},
 		Notes:    []alert.Remark{{Wall: at, Who: "Jo", Text: "gain 0.35 to 1.3, reset 900 to 150 s."}},

@@ -1,6 +1,7 @@
 package page
 
 import (
+	"bytes"
 	"context"
 	"crypto/rand"
 	"crypto/sha256"
@@ -21,7 +22,7 @@ import (
 // Visitor is who makes a request.
 type Visitor struct {
 	Name string // of the token; empty where no token is needed
-	Act  bool   // may acknowledge and shelve
+	Act  bool   // may acknowledge, shelve and leave notes
 }
 
 type visitorKey struct{}
@@ -37,7 +38,7 @@ const (
 	sessionAge = 30 * 24 * time.Hour
 	maxBody    = 64 << 10
 	maxStreams = 256
-	// More than 1000 sessions are no people: all begin anew.
+	// More than 1000 sessions are no people: the one that would end first goes.
 	maxSessions = 1000
 	// A page asks for a dozen things at once and then for little.
 	perSecond, burst = 60, 300
@@ -282,13 +283,7 @@ func (g *gate) signIn(w http.ResponseWriter, r *http.Request) {
 	id := rand.Text()
 	now := g.p.o.Clock()
 	g.mu.Lock()
-	var gone [][sha256.Size]byte
-	for k, s := range g.sessions {
-		if now.After(s.Expires) || len(g.sessions) >= maxSessions {
-			delete(g.sessions, k)
-			gone = append(gone, k)
-		}
-	}
+	gone := g.endSessions(now)
 	key, s := sha256.Sum256([]byte(id)), Session{h, now.Add(sessionAge)}
 	g.sessions[key] = s
 	g.mu.Unlock()
@@ -303,6 +298,28 @@ func (g *gate) signIn(w http.ResponseWriter, r *http.Request) {
 	g.p.o.Log.Info("signed in", "audit", true, "who", v.Name, "from", remote(r))
 	http.SetCookie(w, g.cookie(r, id, int(sessionAge.Seconds())))
 	seeOther(w, backTo(r.PostFormValue("to")))
+}
+
+// endSessions ends those whose time is over, and makes room for one more. g.mu is held.
+func (g *gate) endSessions(now time.Time) (gone [][sha256.Size]byte) {
+	for k, s := range g.sessions {
+		if now.After(s.Expires) {
+			delete(g.sessions, k)
+			gone = append(gone, k)
+		}
+	}
+	for len(g.sessions) >= maxSessions {
+		var first [sha256.Size]byte
+		var ends time.Time
+		for k, s := range g.sessions {
+			if c := s.Expires.Compare(ends); ends.IsZero() || c < 0 || c == 0 && bytes.Compare(k[:], first[:]) < 0 {
+				first, ends = k, s.Expires
+			}
+		}
+		delete(g.sessions, first)
+		gone = append(gone, first)
+	}
+	return gone
 }
 
 // keep writes a change of the sessions down. Where that fails they last until a
@@ -320,10 +337,13 @@ func (g *gate) signOut(w http.ResponseWriter, r *http.Request, v Visitor) {
 	if c, err := r.Cookie(cookieName); err == nil {
 		key := sha256.Sum256([]byte(c.Value))
 		g.mu.Lock()
+		_, had := g.sessions[key]
 		delete(g.sessions, key)
 		g.mu.Unlock()
-		g.keep(func(k Sessions) error { return k.DropSession(key) })
-		g.p.o.Log.Info("signed out", "audit", true, "who", v.Name, "from", remote(r))
+		if had { // who was never signed in makes nothing be written
+			g.keep(func(k Sessions) error { return k.DropSession(key) })
+			g.p.o.Log.Info("signed out", "audit", true, "who", v.Name, "from", remote(r))
+		}
 	}
 	http.SetCookie(w, g.cookie(r, "", -1))
 	seeOther(w, "./sign-in")

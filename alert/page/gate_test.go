@@ -293,3 +293,43 @@ func TestCookie(t *testing.T) {
 		t.Errorf("sent to %q", loc)
 	}
 }
+
+// countingSessions counts what is written of sessions.
+type countingSessions struct{ kept, dropped int }
+
+func (c *countingSessions) Sessions() (map[[sha256.Size]byte]Session, error) { return nil, nil }
+func (c *countingSessions) KeepSession([sha256.Size]byte, Session) error     { c.kept++; return nil }
+func (c *countingSessions) DropSession([sha256.Size]byte) error              { c.dropped++; return nil }
+
+// Sessions are bounded, the one that would end first makes room; and who is not
+// signed in makes nothing be written, whatever cookie is sent.
+func TestSessionsAreBounded(t *testing.T) {
+	h := newFake()
+	kept := &countingSessions{}
+	p, err := New(Options{House: h, Page: configs.Page{Listen: "127.0.0.1:0", TokensFile: tokensFile(t)}, Clock: h.clock, Sessions: kept})
+	if err != nil {
+		t.Fatal(err)
+	}
+	for range 3 {
+		if w := call(t, p.Handler(), "POST", "/sign-out", "", "Content-Type", formType, "Cookie", cookieName+"=made-up"); w.Code != 303 {
+			t.Fatalf("answer %d", w.Code)
+		}
+	}
+	if kept.dropped != 0 {
+		t.Errorf("signing out by a made-up cookie wrote %d times", kept.dropped)
+	}
+	now := h.clock()
+	g := &gate{sessions: map[[sha256.Size]byte]Session{}}
+	for i := range maxSessions {
+		g.sessions[[sha256.Size]byte{byte(i), byte(i >> 8), 1}] = Session{Expires: now.Add(time.Duration(i+1) * time.Hour)}
+	}
+	if gone := g.endSessions(now); len(gone) != 1 || gone[0] != [sha256.Size]byte{0, 0, 1} || len(g.sessions) != maxSessions-1 {
+		t.Errorf("%d ended, %d are left", len(gone), len(g.sessions))
+	}
+	if gone := g.endSessions(now.Add(90 * time.Minute)); len(gone) != 0 {
+		t.Errorf("%d ended with room left", len(gone))
+	}
+	if gone := g.endSessions(now.Add(100*time.Hour + time.Minute)); len(gone) != 99 {
+		t.Errorf("%d of 99 ended whose time was over", len(gone))
+	}
+}

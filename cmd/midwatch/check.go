@@ -292,7 +292,7 @@ func (r *checked) print(w io.Writer, c *configs.Config) error {
 	if n := r.States; n != nil {
 		fmt.Fprintf(w, "loops as the watch sees them: judged %d, cannot judge %d, not in normal mode %d, held %d\n", n.Judged, n.CannotJudge, n.NotNormal, n.Held)
 	} else {
-		fmt.Fprintln(w, "no watch has run on this data folder yet: none of the loops is judged")
+		fmt.Fprintln(w, "no watch of this data folder answers and none has left anything there: how many loops are judged is not known")
 	}
 	for _, s := range r.Warnings {
 		fmt.Fprintf(w, "note: %s\n", s)

@@ -6,6 +6,7 @@ import (
 	"io"
 	"os"
 	"path/filepath"
+	"slices"
 	"strings"
 	"time"
 
@@ -115,6 +116,8 @@ func dossierArgs(args []string, out, note string, all, many bool) error {
 		return usagef("--all and names of loops; hint: one of them")
 	case !all && len(args) == 0:
 		return usagef("no loop is named; hint: LOOP, several of them, or --all")
+	case len(slices.Compact(slices.Sorted(slices.Values(args)))) < len(args):
+		return usagef("a loop is named twice; hint: name each once")
 	case many && note != "":
 		return usagef("--as-left is about one loop; hint: midwatch note keeps a remark for every later dossier")
 	case many && (e == ".html" || e == ".htm"):

@@ -17,6 +17,9 @@ import (
 	"midwatch/configs"
 )
 
+// indexName is that of the files of the index, without their endings.
+const indexName = "index"
+
 // batch makes the dossiers of many loops over all processors, and an index of
 // them. What is held in memory are the frames of one loop a processor. A loop of
 // which nothing can be made is listed with the reason.
@@ -27,7 +30,8 @@ func (h *house) batch(s supply, ls []*configs.Loop, dir string, trends, asJSON b
 	began := time.Now()
 	index := dossier.Index{Made: began, Version: facts().Version, Rows: make([]dossier.Row, len(ls))}
 	bar := newProgress(h.stderr)
-	var failed []error
+	defer bar.clear()
+	failed := make([]error, len(ls)) // in the order of the list
 	var mu sync.Mutex
 	done, at := 0, 0
 	pass := s.pass
@@ -50,9 +54,7 @@ func (h *house) batch(s supply, ls []*configs.Loop, dir string, trends, asJSON b
 					if in.Site != "" {
 						index.Site, index.Zone = in.Site, in.Zone
 					}
-					if err != nil {
-						failed = append(failed, err)
-					}
+					failed[at+i] = err
 					done++
 					bar.show(fmt.Sprintf("%d of %d dossiers", done, len(ls)), time.Since(began))
 					mu.Unlock()
@@ -79,8 +81,8 @@ func (h *house) batch(s supply, ls []*configs.Loop, dir string, trends, asJSON b
 		e.SetIndent("", " ")
 		return e.Encode(index.Rows)
 	}
-	page := filepath.Join(dir, "index.html")
-	if err := errors.Join(writeWhole(page, index.HTML), writeWhole(filepath.Join(dir, "index.json"), js)); err != nil {
+	page := filepath.Join(dir, indexName+".html")
+	if err := errors.Join(writeWhole(page, index.HTML), writeWhole(filepath.Join(dir, indexName+".json"), js)); err != nil {
 		return err
 	}
 	if asJSON {
@@ -108,9 +110,12 @@ func (h *house) one(input func(*configs.Loop) (dossier.Input, error), l *configs
 		in.Made, in.Version = time.Now(), facts().Version
 		var d *dossier.Dossier
 		if d, err = dossier.Build(in); err == nil {
-			base := filepath.Join(dir, fileName(l.Name))
-			if err = writeDossier(d, base, ".html", trends); err == nil {
-				row = d.Row(fileName(l.Name) + ".html")
+			name := fileName(l.Name)
+			if name == indexName { // escaped, as no other name is
+				name = fmt.Sprintf("%%%02X", name[0]) + name[1:]
+			}
+			if err = writeDossier(d, filepath.Join(dir, name), ".html", trends); err == nil {
+				row = d.Row(name + ".html")
 				return row, in, nil
 			}
 		}

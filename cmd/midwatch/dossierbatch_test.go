@@ -145,11 +145,49 @@ func TestDossierBatch(t *testing.T) {
 	if _, err := os.Stat(filepath.Join(dir, "FIC%2F003.csv")); err == nil {
 		t.Error("trends were written unasked")
 	}
-	for _, args := range [][]string{{"--all", "FIC/001"}, {}, {"--all", "--as-left", "x"}, {"-o", "x.html", "FIC/001", "FIC/002"}, {"-o", "x", "FIC/001"}, {"FIC/001", "XIC"}} {
+	for _, args := range [][]string{{"--all", "FIC/001"}, {}, {"--all", "--as-left", "x"}, {"-o", "x.html", "FIC/001", "FIC/002"}, {"-o", "x", "FIC/001"}, {"FIC/001", "XIC"}, {"FIC/001", "FIC/001"}} {
 		var out, errs strings.Builder
 		if code := newHouse(strings.NewReader(""), &out, &errs).run(append([]string{"dossier", "-c", config}, args...)); code != exitUsage {
 			t.Errorf("%q: exit %d, %s", args, code, errs.String())
 		}
+	}
+}
+
+// A loop may be named as the index is: neither takes the other's place.
+func TestDossierOfALoopNamedIndex(t *testing.T) {
+	config := keptWatch(t, 2, 0.2, 2)
+	from := filepath.Dir(config)
+	list, err := os.ReadFile(filepath.Join(from, "loops.csv"))
+	if err != nil {
+		t.Fatal(err)
+	}
+	// Renamed: the trends that were kept come along.
+	if err := os.WriteFile(filepath.Join(from, "loops.csv"), []byte(strings.Replace(string(list), "\nFIC/000,", "\nindex,", 1)), 0o640); err != nil {
+		t.Fatal(err)
+	}
+	w, err := store.OpenWindow(filepath.Join(from, "data", "window"), store.Options{})
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := w.Register([]store.Loop{{ID: 0, Name: "index", Was: "FIC/000"}, {ID: 1, Name: "FIC/001"}}); err != nil {
+		t.Fatal(err)
+	}
+	if err := w.Flush(t.Context()); err != nil {
+		t.Fatal(err)
+	}
+	if err := w.Close(); err != nil {
+		t.Fatal(err)
+	}
+	dir := filepath.Join(t.TempDir(), "out")
+	if got := in(t, "dossier", "-c", config, "--all", "-o", dir); !strings.HasPrefix(got, "1 of 2 dossiers in ") {
+		t.Fatalf("said %q", got)
+	}
+	page, err := os.ReadFile(filepath.Join(dir, "index.html"))
+	if err != nil || !strings.Contains(string(page), `<a href="./%2569ndex.html">index</a>`) {
+		t.Errorf("%v, %s", err, page)
+	}
+	if _, err := os.Stat(filepath.Join(dir, "%69ndex.html")); err != nil {
+		t.Error(err)
 	}
 }
 

@@ -143,7 +143,7 @@ func printSummary(w io.Writer, s daemon.ReplaySummary, asJSON bool) {
 	fmt.Fprintf(w, `%s
 loops      %d: judged %d, cannot judge %d, not in normal mode %d, held %d
 rows       %d: malformed %d, late %d, of unknown loops %d; %.0f rows/s
-findings   %d raised in %.3g loop-years; false ones to expect on healthy loops: %.2g
+findings   %d raised in %.3g loop-years; false ones accepted on healthy loops: %.2g
 `, span, s.Loops, s.Judged, s.CannotJudge, s.NotInNormal, s.Held, s.Rows, s.Malformed, s.Late, s.Foreign, s.RowsPerS, s.Raised, s.LoopYears, s.ExpectFalse)
 }
 

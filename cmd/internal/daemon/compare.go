@@ -53,28 +53,40 @@ func (c *comparer) turn(ctx context.Context) error {
 		return err
 	}
 	options := detect.Options{NuisancePerLoopYear: c.d.config().Detect.NuisancePerLoopYear}
+	roster := c.d.loops()
 	done := 0
 	for _, s := range all {
 		o, due := dueLook(s, now)
-		i := slices.IndexFunc(c.d.loops(), func(l *configs.Loop) bool { return l != nil && l.Name == s.Loop })
+		i := slices.IndexFunc(roster, func(l *configs.Loop) bool { return l != nil && (l.Name == s.Loop || l.Was == s.Loop) })
 		if !due || i < 0 {
 			continue
 		}
 		if done++; done > compareMost {
 			break
 		}
-		from, to := max(s.Since, s.First-last.Milliseconds()), min(o.At, s.Last+last.Milliseconds())
-		x, err := dossier.Compare(c.d.loops()[i], c.d.window.Frames(ctx, s.Loop, from, to), s.First, s.Last, options)
-		if err != nil {
+		if err := c.compare(ctx, roster[i], s, o, options); ctx.Err() != nil {
 			return err
+		} else if err != nil { // one loop must not keep the others from it; it is tried again
+			c.log.Error("a change of tuning is not compared", "loop", s.Loop, "err", err)
 		}
-		o.Verdict, o.Holds = x.Verdict, x.Holds
-		o.Settled = o.Settled || x.Enough && o.Looks > settledLook
-		if err := c.d.desk.Conclude(s, o); err != nil {
-			return err
-		}
-		c.log.Info("before and after a change of tuning", "loop", s.Loop, "changed", time.UnixMilli(s.Last).UTC(), "verdict", o.Verdict, "settled", o.Settled)
 	}
+	return nil
+}
+
+// compare makes one comparison and gives what came of it to the desk.
+func (c *comparer) compare(ctx context.Context, l *configs.Loop, s alert.Session, o alert.Outcome, options detect.Options) error {
+	last := looks[len(looks)-1].Milliseconds()
+	from, to := max(s.Since, s.First-last), min(o.At, s.Last+last)
+	x, err := dossier.Compare(l, c.d.window.Frames(ctx, l.Name, from, to), s.First, s.Last, options)
+	if err != nil {
+		return err
+	}
+	o.Verdict, o.Holds = x.Verdict, x.Holds
+	o.Settled = o.Settled || x.Enough && o.Looks > settledLook
+	if err := c.d.desk.Conclude(s, o); err != nil {
+		return err
+	}
+	c.log.Info("before and after a change of tuning", "loop", l.Name, "changed", time.UnixMilli(s.Last).UTC(), "verdict", o.Verdict, "settled", o.Settled)
 	return nil
 }
 

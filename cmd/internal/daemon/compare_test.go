@@ -117,3 +117,29 @@ func TestComparisonHasADeadline(t *testing.T) {
 		}
 	}
 }
+
+// A loop that was renamed since its tuning was changed is compared all the same.
+func TestComparesARenamedLoop(t *testing.T) {
+	l := configs.NewLoop("FIC-900")
+	l.Was, l.Source, l.PV, l.SP, l.OP, l.ModeTag = "FIC-100", "works", "pv", "sp", "op", "mode"
+	l.PVRangeGiven, l.Action, l.SampleS, l.GainPct, l.IdealReset = true, configs.Reverse, 20, 0.5, 600
+	r := newRig(t, []*configs.Loop{l})
+	r.start()
+	defer r.stop()
+	if err := r.d.window.Fill(0, retunedFrames(12, 4)); err != nil {
+		t.Fatal(err)
+	}
+	at := epoch.Add(4 * 24 * time.Hour).UnixMilli()
+	f := detect.Finding{Subject: detect.Subject{Loop: l.Was}, Loop: l.Was, Kind: detect.TuningChanged, Event: detect.Raised, At: at, Since: at, Confidence: 1}
+	if err := r.d.desk.Hear([]detect.Finding{f}); err != nil {
+		t.Fatal(err)
+	}
+	r.d.newest.Store(epoch.Add(12 * 24 * time.Hour).UnixMilli())
+	if err := (&comparer{r.d, r.d.log}).turn(t.Context()); err != nil {
+		t.Fatal(err)
+	}
+	p, err := r.d.desk.Past([]string{l.Name}, 0)
+	if h := p.Loops[l.Name]; err != nil || len(h.Sessions) != 1 || !strings.HasPrefix(h.Sessions[0].Outcome.Verdict, "PV keeps closer to SP") {
+		t.Errorf("%+v, %v", p, err)
+	}
+}

@@ -1,6 +1,7 @@
 package daemon
 
 import (
+	"bytes"
 	"context"
 	"encoding/binary"
 	"fmt"
@@ -34,12 +35,12 @@ func (d *Daemon) Tuning(_ context.Context, loop string, from int64) ([]api.Tunin
 			was = l.Was
 		}
 	}
-	return KeptTuning(d.state, loop, was, from)
+	return keptTuning(d.state, loop, was, from)
 }
 
-// KeptTuning reads the same from the state of a daemon that does not run. was is
-// the former name of the loop, which counts until it has readings of its own.
-func KeptTuning(s *store.State, loop, was string, from int64) (out []api.TuningReading, err error) {
+// keptTuning reads them from the state. was is the former name of the loop, which
+// counts until it has readings of its own.
+func keptTuning(s *store.State, loop, was string, from int64) (out []api.TuningReading, err error) {
 	err = s.View(func(tx *store.Tx) error {
 		b := tx.Get(bucketTuning, []byte(loop))
 		if b == nil && was != "" {
@@ -235,7 +236,7 @@ func (k *keeper) dropTunings() {
 		for name, b := range tx.Scan(bucketTuning, nil) {
 			rs, err := readTunings(b)
 			if !listed[string(name)] && (err != nil || len(rs) == 0 || rs[len(rs)-1].Time < oldest) {
-				gone = append(gone, name)
+				gone = append(gone, bytes.Clone(name))
 			}
 		}
 		for _, name := range gone {

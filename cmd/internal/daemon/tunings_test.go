@@ -70,13 +70,13 @@ func TestTuningIsKept(t *testing.T) {
 		t.Errorf("since a time: %v, %v", rs, err)
 	}
 	r.d.keeper.dropTunings()
-	if rs, err := KeptTuning(r.d.state, "L00001", "", 0); err != nil || len(rs) != 2 {
+	if rs, err := keptTuning(r.d.state, "L00001", "", 0); err != nil || len(rs) != 2 {
 		t.Errorf("a loop that left the list has %d readings, %v: it may come back", len(rs), err)
 	}
 	r.config.Keep.Full, r.config.Keep.Thin, r.config.Keep.Evidence = time.Hour, time.Hour, time.Hour
 	r.clock.set(r.clock.Now().Add(3 * time.Hour))
 	r.d.keeper.dropTunings()
-	if rs, err := KeptTuning(r.d.state, "L00001", "", 0); err != nil || len(rs) != 0 {
+	if rs, err := keptTuning(r.d.state, "L00001", "", 0); err != nil || len(rs) != 0 {
 		t.Errorf("as old as anything is kept: %d readings, %v", len(rs), err)
 	}
 }
