@@ -7,6 +7,7 @@ import (
 	"errors"
 	"fmt"
 	"slices"
+	"strconv"
 	"strings"
 
 	"midwatch/detect"
@@ -91,6 +92,37 @@ func (b *batch) dropOldRemarks(before int64) error {
 		}
 	}
 	return nil
+}
+
+// Record is what was written down of one loop beside its findings.
+type Record struct {
+	Notes []Remark  // oldest first
+	Tuned []Session // changes of its tuning that were compared, oldest first
+}
+
+// Record gives what was written down of a loop. It reads little: a page may ask
+// for it at every look.
+func (d *Desk) Record(loop string) (r Record, err error) {
+	hide := d.hider()
+	of := append([]byte(loop), 0)
+	err = d.o.Store.View(func(tx Tx) error {
+		if _, err := scan(tx, bucketNotes, of, func(_ string, n Remark) error {
+			n.Who = hide(Entry{Who: n.Who, Wall: n.Wall}).Who
+			r.Notes = append(r.Notes, n)
+			return nil
+		}); err != nil {
+			return err
+		}
+		_, err := scan(tx, bucketOutcomes, of, func(key string, o Outcome) error {
+			first, err := strconv.ParseInt(key[len(of):], 10, 64)
+			if err == nil {
+				r.Tuned = append(r.Tuned, Session{Loop: loop, First: first, Last: o.Last, Outcome: o})
+			}
+			return nil
+		})
+		return err
+	})
+	return r, err
 }
 
 // Past gives the past of loops since a data time, ms UTC.

@@ -151,7 +151,16 @@ func measureLines(f *detect.Finding, unit string) []string {
 		if n, ok := strings.CutSuffix(name, "_s"); ok {
 			name, value = n, duration(time.Duration(m.Value*float64(time.Second)))
 		}
-		out = append(out, strings.ReplaceAll(name, "_", " ")+" "+value)
+		name = strings.ReplaceAll(name, "_", " ")
+		switch m.Name {
+		case "amplitude_pct", "offset_pct":
+			value += " of range"
+		case "pi_lag_deg":
+			name = "lag of the controller"
+		case "direct_lag_deg":
+			name = "lag from PV to OP"
+		}
+		out = append(out, name+" "+value)
 	}
 	return out
 }

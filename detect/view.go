@@ -192,6 +192,17 @@ func (w *Watch) blind() bool {
 	return w.s.Last.OP != w.s.Last.OP && m.OPMin > m.OPMax || m.Mode == collector.ModeUnknown && !m.LawSeen && w.s.Noise.N > 20000
 }
 
+// readText is a reading with its range, where there is one.
+func readText(v, low, high float64, unit string) string {
+	switch {
+	case v != v:
+		return "not read"
+	case low != low || high != high:
+		return fmt.Sprintf("%.3g%s", v, unit)
+	}
+	return fmt.Sprintf("%.3g%s (%.3g to %.3g)", v, unit, low, high)
+}
+
 // Explain gives the evidence held now, a line each, readable by an engineer.
 func (w *Watch) Explain() []string {
 	s := &w.s
@@ -203,7 +214,7 @@ func (w *Watch) Explain() []string {
 		fmt.Sprintf("PV %.4g, SP %.4g, OP %.1f %%, mode %q, law acting: %v", s.Last.PV, s.Last.SP, s.Motion.OP, s.Motion.Mode.String(), s.Motion.Active),
 	}
 	if k, k0, k1, t, t0, t1 := w.tuningRange(); k == k {
-		out = append(out, fmt.Sprintf("tuning in service: gain %.3g (%.3g to %.3g), reset %.3g s (%.3g to %.3g)", k, k0, k1, t, t0, t1))
+		out = append(out, fmt.Sprintf("tuning in service: gain %s, reset %s", readText(k, k0, k1, ""), readText(t, t0, t1, " s")))
 	} else {
 		out = append(out, "tuning in service: not excited enough to read")
 	}

@@ -310,6 +310,11 @@ func inService(l *configs.Loop, w watched) (tune.Tuning, bool) {
 		if r := w.readings[n-1].Reset; r.Known() {
 			t.TiS = r.Value
 		}
+	} else if r, ok := newestKept(w.kept); ok {
+		t.Kc = r.Gain.Value
+		if r.Reset.Known() {
+			t.TiS = r.Reset.Value
+		}
 	}
 	if w.tags[0] > 0 {
 		t.Kc = w.tags[0]
@@ -335,6 +340,9 @@ func inServiceWords(w watched) string {
 	}
 	if len(w.readings) > 0 {
 		return "as read from the data"
+	}
+	if r, ok := newestKept(w.kept); ok {
+		return "as the running watch read it at " + r.At
 	}
 	return "as on the list; the data do not show it"
 }

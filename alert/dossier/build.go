@@ -49,6 +49,7 @@ func Build(in Input) (*Dossier, error) {
 		findings = w.findings
 	}
 	first, last := frames[0].Time, frames[len(frames)-1].Time
+	w.kept = keptReadings(in.Kept, last)
 	eps := episodes(l.Name, findings, first, last)
 	ev := s.events()
 	outer := l.Inner != ""
@@ -57,7 +58,7 @@ func Build(in Input) (*Dossier, error) {
 	}
 	d := &Dossier{Form: Form, Loop: l.Name, Service: l.Service, Area: l.Area, Site: in.Site, Source: in.Source,
 		Cautions: Cautions, zone: in.zone(), loop: l, frames: frames, s: s, Episodes: []Episode{}, Cycles: []Cycle{}, Changes: []Change{},
-		AsLeft: in.AsLeft, BlindSpots: w.view.BlindSpots, Readings: w.readings}
+		AsLeft: in.AsLeft, BlindSpots: w.view.BlindSpots, Readings: w.readings, Kept: w.kept}
 	if !in.Made.IsZero() {
 		d.Made = detect.FormatTime(in.Made.UnixMilli())
 	}

@@ -43,6 +43,7 @@ type Input struct {
 	Sums     []Sum           // check sums of the files read
 	Sessions []alert.Session // of tuning of this loop, with what the watch made of them
 	Notes    []alert.Remark  // of people on this loop
+	Kept     []Kept          // readings of the tuning in service that a running watch wrote down, oldest first; they may reach back before the span
 	AsLeft   string          // the tuner's own record of what was changed, where there is one
 }
 
@@ -109,6 +110,7 @@ type Dossier struct {
 
 	Tuning    []Fact    `json:"tuning_in_service"`
 	Readings  []Reading `json:"tuning_readings"`
+	Kept      []Reading `json:"tuning_kept,omitempty"` // by the running watch, also before the span
 	Scheduled []Fact    `json:"scheduled_gain,omitempty"`
 
 	Process Process `json:"process"`
@@ -200,6 +202,7 @@ type Reading struct {
 	Gain  Number `json:"gain"`
 	Reset Number `json:"reset"`
 	AtOP  Number `json:"at_op"`
+	Tags  bool   `json:"from_tags,omitempty"`
 
 	at   int64
 	atPV float64

@@ -87,7 +87,7 @@ type view struct {
 	*Dossier
 	SeenFigures, CycleFigures, ReadingFigures, FitFigures, AdviceFigures []figure
 	InUse                                                                []Candidate
-	ReadingsShown                                                        []Reading
+	ReadingsShown, KeptShown                                             []Reading
 }
 
 // Local writes a time of the dossier in the site's zone.
@@ -116,6 +116,7 @@ func (d *Dossier) HTML(w io.Writer) error {
 	if n := len(d.Readings); n > mostListed {
 		v.ReadingsShown = d.Readings[n-mostListed:]
 	}
+	v.KeptShown = d.Kept[max(0, len(d.Kept)-mostListed):]
 	if err := page.Execute(w, v); err != nil {
 		return fmt.Errorf("writing the dossier of %s: %w", d.Loop, err)
 	}

@@ -126,6 +126,11 @@ func (s *series) tuning(in *Input, w watched, cs []tuningChange) []Fact {
 			fact("reset_s", "reset in service, newest reading", r.Reset, ""),
 			say("faceplate", "as the faceplate would show it", "about "+faceplate(l, about(r.Gain.Value), about(r.Reset.Value))))
 		out = append(out, against(l, r)...)
+	} else if r, ok := newestKept(w.kept); ok {
+		when := "read by the running watch, " + in.at(r.at).Format("2 Jan 2006 15:04") + "; the span alone does not show it"
+		out = append(out, fact("gain", "gain in service, newest reading kept", r.Gain, when), fact("reset_s", "reset in service, newest reading kept", r.Reset, ""),
+			say("faceplate", "as the faceplate would show it", "about "+faceplate(l, about(r.Gain.Value), about(r.Reset.Value))))
+		out = append(out, against(l, r)...)
 	} else {
 		why := "not excited enough to be read: it needs moves of the error well above noise, with the law acting off its limits"
 		for _, b := range v.BlindSpots {
@@ -134,6 +139,9 @@ func (s *series) tuning(in *Input, w watched, cs []tuningChange) []Fact {
 			}
 		}
 		out = append(out, fact("gain", "gain in service", none(why), ""), fact("reset_s", "reset in service", none(why), ""))
+	}
+	if v.LagS > 0 {
+		out = append(out, fact("lag_s", "lag beside the law", number(v.LagS, "s"), "OP logged late, or PV filtered in the controller"))
 	}
 	if len(cs) == 0 {
 		out = append(out, say("changes", "changes of the tuning", "none seen in the span"))
@@ -147,7 +155,7 @@ func (s *series) tuning(in *Input, w watched, cs []tuningChange) []Fact {
 		}
 		out = append(out, say("change", "change, "+in.at(c.at).Format("2 Jan 2006 15:04"), fmt.Sprintf("from %s to %s (%s)", c.before, c.after, how)))
 	}
-	return out
+	return append(out, s.keptFacts(in, w.kept, cs)...)
 }
 
 // against compares a reading with the list, and knows the errors of units.
@@ -186,6 +194,13 @@ func against(l *configs.Loop, r Reading) []Fact {
 // scheduled says whether the gain in service goes with PV.
 func (s *series) scheduled(w watched) []Fact {
 	type bin struct{ k []float64 }
+	if ps := w.view.Schedule; len(ps) > 0 {
+		out := []Fact{say("scheduled", "gain against operating point", "the gain in service goes with PV: a schedule, not a change")}
+		for _, p := range ps {
+			out = append(out, fact("scheduled_at", fmt.Sprintf("gain with PV at about %s %s", short(p.PV), s.unit()), counted(p.Gain, p.N, "%/%"), ""))
+		}
+		return out
+	}
 	if len(w.readings) < 8 {
 		return nil
 	}

@@ -15,6 +15,7 @@ type watched struct {
 	findings []detect.Finding
 	spells   []spell
 	readings []Reading
+	kept     []Reading // by a running watch, up to the end of the span
 	view     detect.View
 	tags     [2]float64 // newest gain (%/%) and reset (s) read from tags; 0 none
 }

@@ -38,6 +38,13 @@ func (p *Page) serveDossier(w http.ResponseWriter, r *http.Request) {
 	in := dossier.Input{Loop: s.Loop, Frames: frames, From: span.From, To: span.To, Made: l.now, Zone: l.zone, Site: p.o.House.Site().Name,
 		Version: p.o.House.Watch().Version, Source: "the running watch", Partners: p.partners(s, l)}
 	in.Told(past)
+	readings, err := p.o.House.Tuning(r.Context(), s.Loop.Name, 0)
+	if err != nil {
+		p.once("tuning", err)
+	}
+	for _, x := range readings {
+		in.Kept = append(in.Kept, dossier.Kept(x))
+	}
 	d, err := dossier.Build(in)
 	if errors.Is(err, dossier.ErrNoFrames) {
 		p.notFound(w, r, "nothing is kept of this loop in the last two weeks")

@@ -31,6 +31,7 @@ type fakeHouse struct {
 	journal map[string][]alert.Entry
 	urgent  map[string]alert.Urgency
 	shelves []alert.Shelf
+	notes   map[string][]alert.Remark
 	rev     uint64
 	down    bool // a source is down
 	acts    []string
@@ -138,6 +139,7 @@ func (h *fakeHouse) kestrelFen() {
 	})
 	l.OPLimitHigh, l.PVAlarmHigh, l.PVAlarmLow = 85, 1.5, 0.5
 	f := detect.Finding{Kind: detect.GrowingOscillation, Cause: detect.ResetTooShort, Confidence: 0.93, AlsoPossible: []detect.Cause{detect.GainTooHigh},
+		Changed:   []detect.Change{{What: detect.ChangedTuning, At: h.ms(1.7), Text: "reset time from about 4 min to 24.6 s"}},
 		Measures:  m("period_s", 372.0, "growth_per_cycle", 1.16, "amplitude_pct", 4.0, "amplitude_pv", 0.08, "gain", 1.02, "reset_s", 24.6, "pi_lag_deg", 66.0, "time_to_op_limit_s", 5340.0),
 		Text:      "Swings ±0.08 mg/l, cycle 6.2 min, 1.16 times larger each cycle since 01:12. The reset time (25 s) is short for this cycle, likely. OP meets its high limit about 04:10. First check the measurement and the final element, then the reset time.",
 		TextShort: "AIC-204 swings and grows"}
@@ -303,6 +305,9 @@ func (h *fakeHouse) View(loop string) (detect.View, bool) {
 	v := detect.View{State: s.State, Why: s.Why, SampleS: float64(h.signal[loop].stepMs) / 1000, NoisePV: s.Loop.PVSpan() * 0.002, TimeScaleS: 720, PeriodS: math.NaN(), GainPct: 1.02, GainLow: 0.97, GainHigh: 1.07, ResetS: 236, ResetLow: 222, ResetHigh: 251}
 	if loop == "AIC-204" {
 		v.PeriodS, v.ResetS, v.ResetLow, v.ResetHigh = 372, 24.6, 23.4, 25.9
+	}
+	if loop == "FIC-118" {
+		v.LagS, v.Schedule = 4.2, []detect.GainPoint{{PV: 30, Gain: 0.8, N: 5}, {PV: 70, Gain: 1.6, N: 1}}
 	}
 	if s.State == detect.CannotJudge {
 		v.BlindSpots = []string{s.Why}

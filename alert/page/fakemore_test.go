@@ -2,8 +2,10 @@ package page
 
 import (
 	"context"
+	"errors"
 	"math"
 
+	"midwatch/alert"
 	"midwatch/alert/page/api"
 	"midwatch/detect"
 )
@@ -25,6 +27,31 @@ func (h *fakeHouse) Tuning(_ context.Context, loop string, from int64) ([]api.Tu
 		first++
 	}
 	return out[first:], nil
+}
+
+// Record in the fake: a note on every loop, and what came of AIC-204's change.
+func (h *fakeHouse) Record(loop string) (alert.Record, error) {
+	h.mu.Lock()
+	defer h.mu.Unlock()
+	r := alert.Record{Notes: append([]alert.Remark{{Wall: h.ms(30), Who: "Jo", Text: "reset 42 to 60 s, valve greased"}}, h.notes[loop]...)}
+	if loop == "AIC-204" {
+		r.Tuned = []alert.Session{{Loop: loop, First: h.ms(1.7), Last: h.ms(1.65), Outcome: alert.Outcome{Looks: 1, At: h.ms(0.1), Verdict: "the loop swings since the change"}}}
+	}
+	return r, nil
+}
+
+func (h *fakeHouse) Note(loop, who, text string) error {
+	if text == "" {
+		return errors.New("the note is empty")
+	}
+	h.mu.Lock()
+	defer h.mu.Unlock()
+	if h.notes == nil {
+		h.notes = map[string][]alert.Remark{}
+	}
+	h.notes[loop] = append(h.notes[loop], alert.Remark{Wall: h.clock().UnixMilli(), Who: who, Text: text})
+	h.acts = append(h.acts, "note "+who)
+	return nil
 }
 
 // Picture in the fake is what the watch would have measured of its signals.

@@ -114,6 +114,21 @@ func (p *Page) unshelve(w http.ResponseWriter, r *http.Request) {
 	p.done(w, r, "unshelved")
 }
 
+// note keeps what somebody has to say of a loop, such as its tuning as left.
+func (p *Page) note(w http.ResponseWriter, r *http.Request) {
+	name, err := who(r)
+	if err != nil {
+		p.answer(w, r, err)
+		return
+	}
+	if err := p.o.House.Note(loopName(r), name, r.PostFormValue("why")); err != nil {
+		p.refused(w, r, err)
+		return
+	}
+	p.audit(r, "noted", name, "loop", loopName(r))
+	p.done(w, r, "noted")
+}
+
 func readHours(s string) (time.Duration, error) {
 	h, err := strconv.ParseFloat(s, 64)
 	if err != nil || !(h > 0) || h > alert.MaxShelf.Hours() {

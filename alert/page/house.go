@@ -60,6 +60,8 @@ type Desk interface {
 	Unshelve(loop, who, why string) error
 	Shelves() []alert.Shelf
 	Past(loops []string, from int64) (alert.Past, error)
+	Record(loop string) (alert.Record, error)
+	Note(loop, who, text string) error
 }
 
 // LoopState is a loop of the list and the state of its watch.

@@ -31,26 +31,28 @@ type loopPage struct {
 	Tuning  []measureLine
 	Changes []line
 	Journal []line
-	Explain []string
-	Query   string // of the span, for exports
-	Spans   []spanLink
-	From    string
-	To      string
-	FromUTC string
-	ToUTC   string
-	FromMs  int64
-	ToMs    int64
-	Hours   float64 // > 0: goes on with the time
-	XY      template.HTML
-	Tuned   tuningView
-	Shelf   *alert.Shelf
-	ShelfTo string
-	Inner   *configs.Loop
-	Outer   *configs.Loop
-	OPUnit  string
-	Empty   bool
-	WhoWant bool // a name must be given with a form
-	Done    string
+	// Compared is what came of changes of the tuning, newest first.
+	Compared []line
+	Explain  []string
+	Query    string // of the span, for exports
+	Spans    []spanLink
+	From     string
+	To       string
+	FromUTC  string
+	ToUTC    string
+	FromMs   int64
+	ToMs     int64
+	Hours    float64 // > 0: goes on with the time
+	XY       template.HTML
+	Tuned    tuningView
+	Shelf    *alert.Shelf
+	ShelfTo  string
+	Inner    *configs.Loop
+	Outer    *configs.Loop
+	OPUnit   string
+	Empty    bool
+	WhoWant  bool // a name must be given with a form
+	Done     string
 }
 
 // said is one trouble of the loop in full.
@@ -63,6 +65,7 @@ type said struct {
 	SinceWord string
 	UTC       string
 	Measures  []measureLine
+	Changed   []line // before the onset, oldest first
 	Also      []detect.Cause
 	Cause     string
 	Count     int
@@ -114,7 +117,12 @@ func (p *Page) serveLoop(w http.ResponseWriter, r *http.Request) {
 	v.Query = spanQuery(span)
 	view, known := p.o.House.View(s.Loop.Name)
 	p.fillState(&v, s, &view, known)
-	p.fillSaid(r, &v, ts, l)
+	record, err := p.o.House.Record(s.Loop.Name)
+	if err != nil {
+		p.once("record", err)
+	}
+	v.Compared = comparedLines(record.Tuned, l)
+	p.fillSaid(r, &v, ts, record.Notes, l)
 	v.Explain, _ = p.o.House.Explain(s.Loop.Name)
 	for i := range v.Explain {
 		v.Explain[i] = siteTimes(v.Explain[i], l)
@@ -263,6 +271,19 @@ func (p *Page) fillState(v *loopPage, s *LoopState, view *detect.View, known boo
 		list = "none, P-only by design"
 	}
 	tune("reset in the list", list)
+	if view.LagS > 0 {
+		tune("lag beside the law", number(view.LagS, 3)+"\u00a0s: OP logged late, or PV filtered")
+	}
+	if len(view.Schedule) > 0 {
+		tune("gain schedule", "the gain goes with PV")
+	}
+	for _, g := range view.Schedule {
+		n := " readings"
+		if g.N == 1 {
+			n = " reading"
+		}
+		tune("at PV "+quantity(g.PV, unit), number(g.Gain, 3)+"\u00a0%/% ("+strconv.Itoa(g.N)+n+")")
+	}
 }
 
 func ranged(v, low, high float64, unit string) string {
@@ -277,13 +298,17 @@ func ranged(v, low, high float64, unit string) string {
 }
 
 // fillSaid puts in what was found of the loop, open first, and the journal.
-func (p *Page) fillSaid(r *http.Request, v *loopPage, ts []trouble, l *look) {
+func (p *Page) fillSaid(r *http.Request, v *loopPage, ts []trouble, notes []alert.Remark, l *look) {
 	seen := map[string]bool{}
 	var journal []alert.Entry
+	for _, n := range notes {
+		journal = append(journal, alert.Entry{Wall: n.Wall, What: "note", Who: n.Who, Why: n.Text})
+	}
 	for i := range ts {
 		t := ts[i]
 		x := said{trouble: t, Class: t.class(), Text: t.Finding.Text, Open: t.open(), SinceWord: clock(t.Since, l.now, l.zone), UTC: utc(t.Since),
 			Cause: sure(&t.Finding), Also: t.Finding.AlsoPossible, Measures: measureLines(&t.Finding, v.Loop.Unit), Group: t.Kind == detect.SharedOscillation}
+		x.Changed = changedLines(t.Finding.Changed, l)
 		x.Strong, x.Rest = t.say(l.now, l.zone)
 		e, entries, err := p.o.House.Episode(t.Episode)
 		if err == nil {
@@ -306,17 +331,26 @@ func (p *Page) fillSaid(r *http.Request, v *loopPage, ts []trouble, l *look) {
 	v.Journal = journalLines(journal, l)
 }
 
+// caughtUp is how late a finding is written down before its own time is shown, too.
+const caughtUp = 10 * time.Minute
+
 // maxJournal bounds the lines of a view; the export has all.
 const maxJournal = 80
 
+// journalLines are the newest first; what came several times in a minute is one
+// line.
 func journalLines(es []alert.Entry, l *look) []line {
 	slices.SortStableFunc(es, func(a, b alert.Entry) int { return cmp.Compare(b.Wall, a.Wall) })
 	var out []line
-	for i := range es[:min(len(es), maxJournal)] {
+	times := 1
+	for i := range es {
 		e := &es[i]
 		x := line{When: clock(e.Wall, l.now, l.zone), UTC: utc(e.Wall), Text: e.What, Who: e.Who}
 		if e.Finding != nil && e.Who == "" {
 			x.Text += ": " + lookOf(e.Finding.Kind).Word
+			if e.Wall-e.At > caughtUp.Milliseconds() { // recorded values, or an outage made up for
+				x.Text += ", in the data at " + clock(e.At, l.now, l.zone)
+			}
 		}
 		if e.Why != "" {
 			x.Text += ": " + e.Why
@@ -324,7 +358,35 @@ func journalLines(es []alert.Entry, l *look) []line {
 		if e.Until != 0 {
 			x.Text += ", until " + clock(e.Until, l.now, l.zone)
 		}
-		out = append(out, x)
+		if i > 0 && e.What == es[i-1].What && e.Who == es[i-1].Who && e.Why == es[i-1].Why && e.Until == es[i-1].Until && e.Finding == nil && e.Wall/60000 == es[i-1].Wall/60000 {
+			times++
+			out[len(out)-1].Text = x.Text + ", " + strconv.Itoa(times) + " times"
+			continue
+		}
+		if len(out) == maxJournal {
+			break
+		}
+		out, times = append(out, x), 1
+	}
+	return out
+}
+
+// changedLines are the changes that came before a finding, at the site's time.
+func changedLines(cs []detect.Change, l *look) (out []line) {
+	for _, c := range cs {
+		out = append(out, line{When: clock(c.At, l.now, l.zone), UTC: utc(c.At), Text: c.Text})
+	}
+	return out
+}
+
+// comparedLines say what came of changes of the tuning.
+func comparedLines(ss []alert.Session, l *look) (out []line) {
+	for _, s := range slices.Backward(ss) {
+		text := s.Outcome.Verdict
+		if !s.Outcome.Settled {
+			text = "so far, " + text
+		}
+		out = append(out, line{When: clock(s.Last, l.now, l.zone), UTC: utc(s.Last), Text: text})
 	}
 	return out
 }

@@ -97,6 +97,7 @@ func (p *Page) routes() *http.ServeMux {
 	m.HandleFunc("GET /loops/{loop}/trend.svg", p.serveTrendSVG)
 	m.HandleFunc("POST /loops/{loop}/shelve", p.shelve)
 	m.HandleFunc("POST /loops/{loop}/unshelve", p.unshelve)
+	m.HandleFunc("POST /loops/{loop}/note", p.note)
 	m.HandleFunc("GET /episodes/{id}", p.serveEpisode)
 	m.HandleFunc("GET /episodes/{id}/loops.csv", p.serveLanesCSV)
 	m.HandleFunc("GET /episodes/{id}/loops.svg", p.serveLanesSVG)

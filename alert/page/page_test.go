@@ -289,6 +289,25 @@ func TestForms(t *testing.T) {
 	if code, _, _ := post("/loops/AIC-204/unshelve", url.Values{"who": {"A. Reed"}}); code != 303 || len(h.shelves) != 0 {
 		t.Errorf("taking it off the shelf: %d", code)
 	}
+	if code, _, _ := post("/loops/AIC-204/note", url.Values{"who": {"A. Reed"}, "why": {""}}); code != 400 {
+		t.Errorf("an empty note: %d", code)
+	}
+	if code, to, _ := post("/loops/AIC-204/note", url.Values{"who": {"A. Reed"}, "why": {"as left: reset 240 s <b>"}, "to": {"loops/AIC-204"}}); code != 303 || to != "../../loops/AIC-204?done=noted" {
+		t.Errorf("a note: %d, sent to %q", code, to)
+	}
+	_, body := got(t, p, "/loops/AIC-204")
+	for _, want := range []string{"note: as left: reset 240 s &lt;b&gt;, <bdi>A. Reed</bdi>", "note: reset 42 to 60 s, valve greased, <bdi>Jo</bdi>", "What changed before</h3>", "<dd>reset time from about 4 min to 24.6 s</dd>",
+		"Before and after a change</h3>", "So far, the loop swings since the change"} {
+		if !strings.Contains(body, want) {
+			t.Errorf("the loop does not say %q", want)
+		}
+	}
+	_, body = got(t, p, "/loops/FIC-118")
+	for _, want := range []string{"4.2\u00a0s: OP logged late, or PV filtered", "the gain goes with PV", "<dt>at PV 30\u00a0m³/h</dt><dd>0.8\u00a0%/% (5 readings)</dd>", "(1 reading)"} {
+		if !strings.Contains(body, want) {
+			t.Errorf("the loop does not say %q", want)
+		}
+	}
 }
 
 func TestEpisodeLinks(t *testing.T) {

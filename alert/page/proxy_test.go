@@ -69,7 +69,7 @@ func TestBehindAProxy(t *testing.T) {
 					}
 					to.RawQuery, to.Fragment = "", ""
 					// Forms are posted, dossiers take long: where they lead is enough.
-					if s := to.String(); !seen[s] && !strings.HasSuffix(s, "acknowledge") && !strings.HasSuffix(s, "shelve") && !strings.HasSuffix(s, "dossier") && !strings.HasSuffix(s, ".csv") {
+					if s := to.String(); !seen[s] && !strings.HasSuffix(s, "acknowledge") && !strings.HasSuffix(s, "shelve") && !strings.HasSuffix(s, "note") && !strings.HasSuffix(s, "dossier") && !strings.HasSuffix(s, ".csv") {
 						seen[s] = true
 						fetched(t, s)
 					}

@@ -370,7 +370,7 @@ func TestScriptsOff(t *testing.T) {
 	if s := text(); !strings.Contains(s, "reset too short, likely") {
 		t.Error("a loop cannot be read without scripts")
 	}
-	do(t, ctx, chromedp.Click(chromedp.CSS("#act details:last-of-type summary")), chromedp.SendKeys(chromedp.CSS("#act form[action*=shelve] [name=who]"), "A. Reed"), chromedp.SendKeys(chromedp.CSS("#act form[action*=shelve] [name=why]"), "analyser service"),
+	do(t, ctx, chromedp.Click(chromedp.CSS("#act details:has(form[action*=shelve]) summary")), chromedp.SendKeys(chromedp.CSS("#act form[action*=shelve] [name=who]"), "A. Reed"), chromedp.SendKeys(chromedp.CSS("#act form[action*=shelve] [name=why]"), "analyser service"),
 		chromedp.Click(chromedp.CSS("#act form[action*=shelve] button")), chromedp.WaitVisible(chromedp.CSS(".done")))
 	if len(h.acts) != 1 || h.acts[0] != "shelve AIC-204" {
 		t.Errorf("acts %q", h.acts)

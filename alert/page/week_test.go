@@ -32,10 +32,6 @@ window.pulseAt = (ms, revision) => feed("pulse", { judged: 70 + ms % 7, cannot_j
 // TestPageOpenForAWeek feeds views as many events as a week brings of changes,
 // and tens of thousands of pulses: what the browser holds does not grow.
 func TestPageOpenForAWeek(t *testing.T) {
-	h := newFake()
-	h.frozen = true
-	h.many(60)
-	_, url := serve(t, h, configs.Page{})
 	for name, v := range map[string]struct {
 		path, ready string
 		round       string // of one round; i is its number
@@ -48,6 +44,10 @@ func TestPageOpenForAWeek(t *testing.T) {
 		"list": {"", "document.body.classList.contains('live')", `(i) => { for (let k = 0; k < 5; k++) pulseAt(base + (5 * i + k) * 2000, 10 + 5 * i + k); }`, 20},
 	} {
 		t.Run(name, func(t *testing.T) {
+			h := newFake()
+			h.frozen = true
+			h.many(60)
+			_, url := serve(t, h, configs.Page{}) // its own: the other view may have used up what an address may ask for
 			ctx := tab(t, 1280, 900)
 			do(t, ctx, before(feeder), chromedp.Navigate(url+v.path))
 			wait(t, ctx, v.ready+" && window.feed")

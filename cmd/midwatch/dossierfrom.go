@@ -170,7 +170,7 @@ func (h *house) fromWatch(config string, span [2]int64) (s supply, err error) {
 	}
 	s.done = func() { _ = f.Close() } // opened for reading only
 	frames := func(l *configs.Loop) iter.Seq2[collector.Frame, error] { return f.Frames(h.ctx, l.Name, base.From, to) }
-	past := f.Past
+	past, kept := f.Past, f.Tuning
 	base.Source = "data folder of the watch"
 	view := func(name string) float64 {
 		if v, ok := f.View(name); ok {
@@ -186,6 +186,9 @@ func (h *house) fromWatch(config string, span [2]int64) (s supply, err error) {
 		past = func(names []string, from int64) (p alert.Past, err error) {
 			q := url.Values{"loop": names, "from": {time.UnixMilli(from).UTC().Format(time.RFC3339Nano)}}
 			return p, cl.get(h.ctx, "/api/past?"+q.Encode(), &p)
+		}
+		kept = func(l *configs.Loop) (rs []api.TuningReading, err error) {
+			return rs, cl.get(h.ctx, "/api/loops/"+url.PathEscape(l.Name)+"/tuning", &rs)
 		}
 		view = func(name string) float64 {
 			var v api.LoopView
@@ -208,6 +211,13 @@ func (h *house) fromWatch(config string, span [2]int64) (s supply, err error) {
 			in = base
 			in.Loop, in.Frames = l, frames(l)
 			in.Told(p)
+			rs, err := kept(l)
+			if err != nil {
+				return in, err
+			}
+			for _, r := range rs {
+				in.Kept = append(in.Kept, dossier.Kept(r))
+			}
 			in.Partners, err = partners(s.list, l, func(name string) (float64, error) { return view(name), nil })
 			return in, err
 		}, nil

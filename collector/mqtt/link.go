@@ -254,8 +254,8 @@ func (s *source) waitForLoss(ctx context.Context, w *wire, lost <-chan error) er
 		case err := <-lost:
 			return err
 		case <-look.C:
-			if silent := s.now().UnixMilli() - w.lastRead.Load(); silent > limit.Milliseconds() {
-				return fmt.Errorf("no byte came for %d s, ping answers included: %w", silent/1000, errHalfOpen)
+			if silent := w.silent(); silent > limit {
+				return fmt.Errorf("no byte came for %d s, ping answers included: %w", int(silent.Seconds()), errHalfOpen)
 			}
 		}
 	}

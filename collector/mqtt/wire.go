@@ -43,6 +43,8 @@ type wire struct {
 	maxPacket int
 	now       func() time.Time
 	lastRead  atomic.Int64 // ms UTC of the last byte
+	made      time.Time    // by the machine's own clock
+	heard     atomic.Int64 // ns after made, of the last byte
 	wrote     sync.Mutex
 
 	head  []byte // of the packet under way, still to hand out
@@ -51,7 +53,7 @@ type wire struct {
 }
 
 func newWire(c net.Conn, maxPacket int, now func() time.Time, onCut func(topic string, size int)) *wire {
-	w := &wire{Conn: c, maxPacket: maxPacket, now: now, onCut: onCut}
+	w := &wire{Conn: c, maxPacket: maxPacket, now: now, made: time.Now(), onCut: onCut}
 	w.lastRead.Store(now().UnixMilli())
 	w.in = bufio.NewReaderSize(stamped{w}, readBuffer)
 	return w
@@ -64,8 +66,15 @@ func (s stamped) Read(p []byte) (int, error) {
 	n, err := s.w.Conn.Read(p)
 	if n > 0 {
 		s.w.lastRead.Store(s.w.now().UnixMilli())
+		s.w.heard.Store(int64(time.Since(s.w.made)))
 	}
 	return n, err
+}
+
+// silent is how long nothing has come, by the machine's own clock: keep-alive and
+// ping run by it, whatever clock values are judged by.
+func (w *wire) silent() time.Duration {
+	return time.Since(w.made) - time.Duration(w.heard.Load())
 }
 
 // Read hands out the broker's packets, oversize ones without their payload.

@@ -8,6 +8,7 @@ import (
 	"net"
 	"strings"
 	"testing"
+	"testing/synctest"
 	"time"
 
 	paho "github.com/eclipse/paho.mqtt.golang"
@@ -186,3 +187,26 @@ func TestWireRefusesWhatIsNoMQTT(t *testing.T) {
 type oneByte struct{ r io.Reader }
 
 func (o oneByte) Read(p []byte) (int, error) { return o.r.Read(p[:min(1, len(p))]) }
+
+// A line's silence is of the machine's clock: one that values are judged by may
+// run sixty times as fast, and a second without a byte is no lost line then.
+func TestSilenceIsOfTheMachine(t *testing.T) {
+	synctest.Test(t, func(t *testing.T) {
+		begin := time.Now()
+		fast := func() time.Time { return begin.Add(60 * time.Since(begin)) }
+		w := newWire(&sink{read: strings.NewReader("\xd0\x00")}, 1000, fast, nil)
+		time.Sleep(time.Second)
+		if d := w.silent(); d != time.Second {
+			t.Errorf("silent for %s, want 1s", d)
+		}
+		if _, err := w.Read(make([]byte, 2)); err != nil {
+			t.Fatal(err)
+		}
+		if d := w.silent(); d != 0 {
+			t.Errorf("silent for %s after a byte", d)
+		}
+		if got := w.lastRead.Load() - begin.UnixMilli(); got != 60_000 {
+			t.Errorf("the last byte came at %d ms of the fast clock, want 60000", got)
+		}
+	})
+}

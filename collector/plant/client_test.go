@@ -192,6 +192,10 @@ func TestInjectedClock(t *testing.T) {
 		t.Fatal(err)
 	}
 	shift.Store(int64(3 * time.Second))
+	// What clients compare with their own clock is that clock, too.
+	if h := s.ua.subs.header(&ua.PublishRequest{RequestHeader: &ua.RequestHeader{}}, ua.StatusOK); !h.Timestamp.Equal(base.Add(3 * time.Second)) {
+		t.Errorf("an answer is stamped %s, the clock says %s", h.Timestamp, base.Add(3*time.Second))
+	}
 	wait(t, "three minutes of plant time", 5*time.Second, func() bool { return s.PlantTime().UnixMilli() == from+180000 })
 	if err := s.Close(); err != nil {
 		t.Error(err)

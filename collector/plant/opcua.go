@@ -71,7 +71,7 @@ func (n *namespace) SetAttribute(node *ua.NodeID, _ ua.AttributeID, _ *ua.DataVa
 }
 
 // serveOPCUA starts the server on a free loopback port.
-func serveOPCUA(ctx context.Context, p *Plant, loops int, now time.Time) (*uaServer, error) {
+func serveOPCUA(ctx context.Context, p *Plant, loops int, now time.Time, clock func() time.Time) (*uaServer, error) {
 	port, err := freePort()
 	if err != nil {
 		return nil, err
@@ -80,7 +80,7 @@ func serveOPCUA(ctx context.Context, p *Plant, loops int, now time.Time) (*uaSer
 	u.srv = server.New(server.EndPoint("127.0.0.1", port), server.EnableSecurity("None", ua.MessageSecurityModeNone),
 		server.EnableAuthMode(ua.UserTokenTypeAnonymous), server.ServerName("Kestrel Fen simulated plant"),
 		server.ProductName("simulated plant"), server.ManufacturerName("Kestrel Fen"))
-	u.subs = newSubscriptions(ctx, u.srv)
+	u.subs = newSubscriptions(ctx, u.srv, clock)
 	u.countCalls()
 	inner := server.NewNodeNameSpace(u.srv, URI)
 	ns := &namespace{NodeNameSpace: inner, writes: &u.writes, types: map[string]*ua.NodeID{}}
@@ -198,7 +198,7 @@ func (u *uaServer) countCalls() {
 
 func (u *uaServer) refuse(_ *uasc.SecureChannel, r ua.Request, _ uint32) (ua.Response, error) {
 	u.calls.Add(1)
-	return serviceFault(r, ua.StatusBadServiceUnsupported)
+	return u.subs.serviceFault(r, ua.StatusBadServiceUnsupported)
 }
 
 var modeCode = map[collector.Mode]int32{collector.Manual: 0, collector.Auto: 1, collector.Cascade: 2, collector.RemoteSP: 3,

@@ -14,7 +14,7 @@ func (s *subscriptions) publish(sc *uasc.SecureChannel, r ua.Request, reqID uint
 	req := r.(*ua.PublishRequest)
 	key := s.session(r)
 	if key == "" {
-		return serviceFault(r, ua.StatusBadSessionIDInvalid)
+		return s.serviceFault(r, ua.StatusBadSessionIDInvalid)
 	}
 	s.mu.Lock()
 	defer s.mu.Unlock()
@@ -29,12 +29,12 @@ func (s *subscriptions) publish(sc *uasc.SecureChannel, r ua.Request, reqID uint
 		}
 	}
 	if !mine {
-		return serviceFault(r, ua.StatusBadNoSubscription)
+		return s.serviceFault(r, ua.StatusBadNoSubscription)
 	}
 	// A session that came back on a new channel left dead requests behind.
 	s.waiting[key] = slices.DeleteFunc(s.waiting[key], func(p publishRequest) bool { return p.channel != sc })
 	if len(s.waiting[key]) >= maxWaiting {
-		return serviceFault(r, ua.StatusBadTooManyPublishRequests)
+		return s.serviceFault(r, ua.StatusBadTooManyPublishRequests)
 	}
 	results := make([]ua.StatusCode, len(req.SubscriptionAcknowledgements))
 	for i, a := range req.SubscriptionAcknowledgements {
@@ -63,13 +63,13 @@ func (s *subscriptions) republish(_ *uasc.SecureChannel, r ua.Request, _ uint32)
 	defer s.mu.Unlock()
 	sub := s.subs[req.SubscriptionID]
 	if sub == nil || sub.session != key {
-		return serviceFault(r, ua.StatusBadSubscriptionIDInvalid)
+		return s.serviceFault(r, ua.StatusBadSubscriptionIDInvalid)
 	}
 	k := sub.kept(req.RetransmitSequenceNumber)
 	if k < 0 {
-		return serviceFault(r, ua.StatusBadMessageNotAvailable)
+		return s.serviceFault(r, ua.StatusBadMessageNotAvailable)
 	}
-	return &ua.RepublishResponse{ResponseHeader: header(r, ua.StatusOK), NotificationMessage: sub.sent[k]}, nil
+	return &ua.RepublishResponse{ResponseHeader: s.header(r, ua.StatusOK), NotificationMessage: sub.sent[k]}, nil
 }
 
 // run answers publish requests of one subscription, an interval after another.
@@ -131,7 +131,7 @@ func (s *subscriptions) answer(sub *subscription) (*publishRequest, *ua.PublishR
 	req := list[0]
 	s.waiting[sub.session] = list[1:]
 	sub.idle = 0
-	msg := &ua.NotificationMessage{SequenceNumber: sub.sequence + 1, PublishTime: time.Now(), NotificationData: []*ua.ExtensionObject{}}
+	msg := &ua.NotificationMessage{SequenceNumber: sub.sequence + 1, PublishTime: s.now(), NotificationData: []*ua.ExtensionObject{}}
 	n := min(maxPerMessage, len(sub.queue))
 	if n > 0 {
 		// A keep-alive carries the next number without using it up.
@@ -154,7 +154,7 @@ func (s *subscriptions) answer(sub *subscription) (*publishRequest, *ua.PublishR
 		available[i] = m.SequenceNumber
 	}
 	return &req, &ua.PublishResponse{
-		ResponseHeader: &ua.ResponseHeader{Timestamp: time.Now(), RequestHandle: req.handle, ServiceResult: ua.StatusOK,
+		ResponseHeader: &ua.ResponseHeader{Timestamp: s.now(), RequestHandle: req.handle, ServiceResult: ua.StatusOK,
 			ServiceDiagnostics: &ua.DiagnosticInfo{}, StringTable: []string{}, AdditionalHeader: ua.NewExtensionObject(nil)},
 		SubscriptionID: sub.id, MoreNotifications: len(sub.queue) > 0, NotificationMessage: msg,
 		AvailableSequenceNumbers: available, Results: req.results, DiagnosticInfos: []*ua.DiagnosticInfo{}}

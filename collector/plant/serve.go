@@ -11,7 +11,7 @@ import (
 type ServeOptions struct {
 	OPCUALoops int              // the first so many loops over OPC UA, the rest over MQTT; 0 = 8
 	Factor     float64          // seconds of plant time per second of Clock; 0 = 1
-	Clock      func() time.Time // nil = time.Now
+	Clock      func() time.Time // of the works and its servers; nil = time.Now
 }
 
 // Server is the works on the wire. Its methods are safe for concurrent use.
@@ -49,10 +49,11 @@ func Serve(ctx context.Context, p *Plant, o ServeOptions) (*Server, error) {
 	if o.Clock == nil {
 		o.Clock = time.Now
 	}
+	begin := o.Clock() // what passes until the servers are up is caught up with
 	ctx, cancel := context.WithCancel(ctx)
 	s := &Server{cancel: cancel, paced: make(chan struct{})}
 	var err error
-	if s.ua, err = serveOPCUA(ctx, p, o.OPCUALoops, time.UnixMilli(p.Now()).UTC()); err != nil {
+	if s.ua, err = serveOPCUA(ctx, p, o.OPCUALoops, time.UnixMilli(p.Now()).UTC(), o.Clock); err != nil {
 		cancel()
 		return nil, err
 	}
@@ -61,7 +62,7 @@ func Serve(ctx context.Context, p *Plant, o ServeOptions) (*Server, error) {
 		s.ua.close()
 		return nil, err
 	}
-	go s.pace(ctx, p, o, o.Clock())
+	go s.pace(ctx, p, o, begin)
 	return s, nil
 }
 

@@ -32,6 +32,7 @@ const (
 type subscriptions struct {
 	srv  *server.Server
 	ctx  context.Context
+	now  func() time.Time // stamps answers
 	wg   sync.WaitGroup
 	mu   sync.Mutex
 	next uint32
@@ -76,8 +77,8 @@ type item struct {
 	size, held int
 }
 
-func newSubscriptions(ctx context.Context, srv *server.Server) *subscriptions {
-	s := &subscriptions{srv: srv, ctx: ctx, subs: map[uint32]*subscription{}, items: map[string][]*item{}, waiting: map[string][]publishRequest{}}
+func newSubscriptions(ctx context.Context, srv *server.Server, now func() time.Time) *subscriptions {
+	s := &subscriptions{srv: srv, ctx: ctx, now: now, subs: map[uint32]*subscription{}, items: map[string][]*item{}, waiting: map[string][]publishRequest{}}
 	srv.RegisterHandler(id.CreateSubscriptionRequest_Encoding_DefaultBinary, s.create)
 	srv.RegisterHandler(id.DeleteSubscriptionsRequest_Encoding_DefaultBinary, s.remove)
 	srv.RegisterHandler(id.CreateMonitoredItemsRequest_Encoding_DefaultBinary, s.monitor)
@@ -87,13 +88,13 @@ func newSubscriptions(ctx context.Context, srv *server.Server) *subscriptions {
 	return s
 }
 
-func header(r ua.Request, status ua.StatusCode) *ua.ResponseHeader {
-	return &ua.ResponseHeader{Timestamp: time.Now(), RequestHandle: r.Header().RequestHandle, ServiceResult: status,
+func (s *subscriptions) header(r ua.Request, status ua.StatusCode) *ua.ResponseHeader {
+	return &ua.ResponseHeader{Timestamp: s.now(), RequestHandle: r.Header().RequestHandle, ServiceResult: status,
 		ServiceDiagnostics: &ua.DiagnosticInfo{}, StringTable: []string{}, AdditionalHeader: ua.NewExtensionObject(nil)}
 }
 
-func serviceFault(r ua.Request, status ua.StatusCode) (ua.Response, error) {
-	return &ua.ServiceFault{ResponseHeader: header(r, status)}, nil
+func (s *subscriptions) serviceFault(r ua.Request, status ua.StatusCode) (ua.Response, error) {
+	return &ua.ServiceFault{ResponseHeader: s.header(r, status)}, nil
 }
 
 // session is the key of a live session, empty when there is none.
@@ -108,7 +109,7 @@ func (s *subscriptions) create(sc *uasc.SecureChannel, r ua.Request, _ uint32) (
 	req := r.(*ua.CreateSubscriptionRequest)
 	key := s.session(r)
 	if key == "" {
-		return serviceFault(r, ua.StatusBadSessionIDInvalid)
+		return s.serviceFault(r, ua.StatusBadSessionIDInvalid)
 	}
 	every := max(minPublish, time.Duration(req.RequestedPublishingInterval*float64(time.Millisecond)))
 	sub := &subscription{session: key, token: r.Header(), every: every, keepAlive: max(1, req.RequestedMaxKeepAliveCount), wake: make(chan struct{}, 1)}
@@ -121,7 +122,7 @@ func (s *subscriptions) create(sc *uasc.SecureChannel, r ua.Request, _ uint32) (
 	s.subs[sub.id] = sub
 	s.mu.Unlock()
 	s.wg.Go(func() { s.run(ctx, sub) })
-	return &ua.CreateSubscriptionResponse{ResponseHeader: header(r, ua.StatusOK), SubscriptionID: sub.id,
+	return &ua.CreateSubscriptionResponse{ResponseHeader: s.header(r, ua.StatusOK), SubscriptionID: sub.id,
 		RevisedPublishingInterval: float64(every) / float64(time.Millisecond), RevisedLifetimeCount: sub.lifetime,
 		RevisedMaxKeepAliveCount: sub.keepAlive}, nil
 }
@@ -139,7 +140,7 @@ func (s *subscriptions) remove(_ *uasc.SecureChannel, r ua.Request, _ uint32) (u
 			s.forget(sub)
 		}
 	}
-	return &ua.DeleteSubscriptionsResponse{ResponseHeader: header(r, ua.StatusOK), Results: results, DiagnosticInfos: []*ua.DiagnosticInfo{}}, nil
+	return &ua.DeleteSubscriptionsResponse{ResponseHeader: s.header(r, ua.StatusOK), Results: results, DiagnosticInfos: []*ua.DiagnosticInfo{}}, nil
 }
 
 // forget ends a subscription; the lock is held.
@@ -170,7 +171,7 @@ func (s *subscriptions) monitor(_ *uasc.SecureChannel, r ua.Request, _ uint32) (
 	defer s.mu.Unlock()
 	sub := s.subs[req.SubscriptionID]
 	if sub == nil || sub.session != key {
-		return serviceFault(r, ua.StatusBadSubscriptionIDInvalid)
+		return s.serviceFault(r, ua.StatusBadSubscriptionIDInvalid)
 	}
 	results := make([]*ua.MonitoredItemCreateResult, len(req.ItemsToCreate))
 	for i, c := range req.ItemsToCreate {
@@ -193,7 +194,7 @@ func (s *subscriptions) monitor(_ *uasc.SecureChannel, r ua.Request, _ uint32) (
 		res.MonitoredItemID, res.RevisedQueueSize = it.id, uint32(it.size)
 		res.RevisedSamplingInterval = c.RequestedParameters.SamplingInterval
 	}
-	return &ua.CreateMonitoredItemsResponse{ResponseHeader: header(r, ua.StatusOK), Results: results, DiagnosticInfos: []*ua.DiagnosticInfo{}}, nil
+	return &ua.CreateMonitoredItemsResponse{ResponseHeader: s.header(r, ua.StatusOK), Results: results, DiagnosticInfos: []*ua.DiagnosticInfo{}}, nil
 }
 
 func (s *subscriptions) unmonitor(_ *uasc.SecureChannel, r ua.Request, _ uint32) (ua.Response, error) {
@@ -213,7 +214,7 @@ func (s *subscriptions) unmonitor(_ *uasc.SecureChannel, r ua.Request, _ uint32)
 			results[i] = ua.StatusBadMonitoredItemIDInvalid
 		}
 	}
-	return &ua.DeleteMonitoredItemsResponse{ResponseHeader: header(r, ua.StatusOK), Results: results, DiagnosticInfos: []*ua.DiagnosticInfo{}}, nil
+	return &ua.DeleteMonitoredItemsResponse{ResponseHeader: s.header(r, ua.StatusOK), Results: results, DiagnosticInfos: []*ua.DiagnosticInfo{}}, nil
 }
 
 func (s *subscriptions) read(node *ua.NodeID, attr ua.AttributeID) *ua.DataValue {

@@ -209,8 +209,11 @@ func (r *rig) put(source string, now time.Time, samples []collector.Sample) {
 	// are dropped as with a disk that stalls.
 	polls := 0
 	r.until("the window is flushed", func() bool {
-		if polls++; polls%50 == 0 && r.clock.Now().Before(now.Add(10*time.Second)) {
-			r.clock.set(r.clock.Now().Add(time.Second)) // it began to wait only now
+		// It began to wait only now: time goes on, slowly behind 10 s. On a busy
+		// machine it may begin later still, and would wait for ever.
+		polls++
+		if ahead := r.clock.Now().Sub(now); polls%50 == 0 && ahead < 10*time.Second || polls%1000 == 0 {
+			r.clock.set(r.clock.Now().Add(time.Second))
 		}
 		return r.d.keeper.flushed.Load() > now.Add(-time.Minute).UnixMilli() || r.config.Keep.Flush > time.Minute
 	})

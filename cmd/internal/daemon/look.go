@@ -70,6 +70,11 @@ func (f *Folder) Frames(ctx context.Context, loop string, from, to int64) iter.S
 	return f.window.Frames(ctx, loop, from, to)
 }
 
+// Tuning gives the kept readings of the tuning in service of a loop, oldest first.
+func (f *Folder) Tuning(l *configs.Loop) ([]api.TuningReading, error) {
+	return keptTuning(f.state, l.Name, l.Was, 0)
+}
+
 // Past is what the desk knew of loops since a data time, ms UTC.
 func (f *Folder) Past(loops []string, from int64) (alert.Past, error) {
 	return f.desk.Past(loops, from)

@@ -6,11 +6,13 @@ import (
 	"errors"
 	"io"
 	"log"
+	"net/http"
 	"os"
 	"strings"
 	"testing"
 	"time"
 
+	"midwatch/cmd/internal/daemon"
 	"midwatch/collector"
 	"midwatch/configs"
 	"midwatch/detect"
@@ -30,7 +32,21 @@ func TestDemo(t *testing.T) {
 	tmp := t.TempDir()
 	t.Setenv("TMPDIR", tmp)
 	var out bytes.Buffer
-	if err := Run(t.Context(), Options{Out: &out, For: length}); err != nil {
+	// A new user looks at the watch itself, too: no source may be in trouble.
+	var troubles []string
+	looked := make(chan struct{})
+	serve := daemon.Serve{Page: func(d *daemon.Daemon, programs http.Handler) (http.Handler, error) {
+		time.AfterFunc(length*3/4, func() {
+			defer close(looked)
+			for _, s := range d.Status().Sources {
+				if s.Link != "watching" || s.Problem != "" {
+					troubles = append(troubles, s.Name+" "+s.Link+": "+s.Problem)
+				}
+			}
+		})
+		return daemon.ServePage(d, programs)
+	}}
+	if err := Run(t.Context(), Options{Out: &out, For: length, Serve: serve}); err != nil {
 		t.Fatalf("%v\n%s", err, &out)
 	}
 	want := []string{"took in a recorded day: 25 loops", "FIC-207", "lost 0; writes to the plant 0",
@@ -44,6 +60,9 @@ func TestDemo(t *testing.T) {
 		if !strings.Contains(out.String(), w) {
 			t.Errorf("the demo does not say %q", w)
 		}
+	}
+	if <-looked; len(troubles) > 0 {
+		t.Errorf("sources in trouble: %q", troubles)
 	}
 	for _, bad := range []string{"note:", "\x1b", "stale data"} {
 		if strings.Contains(out.String(), bad) {
