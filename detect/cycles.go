@@ -16,7 +16,18 @@ const (
 	bankP     = 16.0 // samples a period at the centre
 	bankLowP  = 8.5
 	bankHighP = 26.0
+	fastestP  = 4.2 // samples a period below which the first bank sees no cycle
 )
+
+// lowP is the shortest period, samples of the level, that a bank sees. The first has no
+// neighbour below: its band pass is open to the shortest periods that samples still show
+// (at four a period the largest sample of a half-cycle may be 30 % below its peak).
+func lowP(level int) float64 {
+	if level == 0 {
+		return fastestP
+	}
+	return bankLowP
+}
 
 // Band pass: low pass twice with 0.06 periods, high pass with 0.3 periods. Narrow
 // enough to follow one period, wide enough not to ring on noise.

@@ -164,16 +164,31 @@ func (n *noise) step(pv float64, exception bool, update float64, learn bool) {
 	n.N++
 }
 
-// now is the running estimate, %. The first difference sees a fast oscillation
-// as noise, the second does so less; the fourth lag sees noise that is correlated.
-func (n *noise) now() float64 {
-	s := min(sigmaOfD1*n.D1.Value(), 1.5*sigmaOfDD*n.DD.Value())
-	s = max(s, min(sigmaOfD1*n.D4.Value(), 2*s))
+// now is the running estimate, %.
+func (n *noise) now() float64 { return n.level(n.D1.Value(), n.DD.Value(), n.D4.Value()) }
+
+// level is the noise level, %, that the medians of the differences say. The first
+// difference sees a fast oscillation as noise, the second does so less; the fourth lag
+// sees noise that is correlated.
+func (n *noise) level(d1, dd, d4 float64) float64 {
+	s := min(sigmaOfD1*d1, 1.5*sigmaOfDD*dd)
+	s = max(s, min(sigmaOfD1*d4, 2*s))
 	// Quantised data: a uniform error of one step has q/sqrt 12.
 	if n.Least.N > 20 {
-		s = max(s, min(0.289*n.Least.Value(), 2*sigmaOfD1*max(n.D4.Value(), n.D1.Value())+leastNoise))
+		s = max(s, min(0.289*n.Least.Value(), 2*sigmaOfD1*max(d4, d1)+leastNoise))
 	}
 	return max(s, leastNoise)
+}
+
+// beside is the noise level, %, left where a cycle of amplitude amp, %, and period,
+// slots, is taken out of the differences. That of a sine over k slots is a sine of
+// 2 sin(pi k/period) times its amplitude, the second one of that squared; their median
+// is 1/sqrt 2 of it (von Neumann 1941 takes differences against a trend for the same
+// end: the slower it is, the less they are fed). Never more than sigma.
+func (n *noise) beside(amp, period float64) float64 {
+	s1, s4 := 2*math.Sin(math.Pi/period), 2*math.Sin(4*math.Pi/period)
+	left := func(d, by float64) float64 { return math.Sqrt(max(d*d-amp*amp*by*by/2, 0)) }
+	return min(n.sigma(), n.level(left(n.D1.Value(), s1), left(n.DD.Value(), s1*s1), left(n.D4.Value(), s4)))
 }
 
 // sigma is the noise level, % of range, one standard deviation.

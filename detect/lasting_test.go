@@ -93,3 +93,31 @@ func TestLastingSwingCounts(t *testing.T) {
 		}
 	}
 }
+
+// Few but violent half-cycles are those of an unstable loop where each outgrows the
+// last alike; not where one load step lifts the swing out of calm.
+func TestViolentGrowsAlike(t *testing.T) {
+	for _, x := range []struct {
+		name  string
+		peaks []float64
+		want  bool
+	}{
+		{"1.6 times each", []float64{1, 1.6, 2.6, 4.1, 6.6}, true},
+		{"out of calm at once", []float64{0.2, 0.3, 4, 5, 6.6}, false},
+	} {
+		w := New(configs.NewLoop("TIC-1"), 0, Options{})
+		w.s.Grid.DT = 60
+		w.s.Motion.first()
+		for range 200 {
+			w.s.Noise.Long.Add(0.1, 0.3, 0.03, leastNoise)
+			w.s.Cycles[2].Usual.Add(0.2, 0.75, 0.006, 1e-3)
+		}
+		b := &w.s.Cycles[2]
+		for _, p := range x.peaks {
+			swingOf(b, 1, func(int) float64 { return 8 }, p)
+		}
+		if got := w.violent(2, b); got != x.want {
+			t.Errorf("%s: %v", x.name, got)
+		}
+	}
+}

@@ -103,8 +103,8 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 	if w.led() {
 		// The inner loop of a cascade, or a loop whose set point is moved with the
 		// cycle: following is no fault of its own tuning.
-		o.Sticking = false
 		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, ValveSticking}, 0.5)
+		o.Sticking = causes[o.Cause] == ValveSticking
 		return
 	}
 	sh := w.shapes()
@@ -148,15 +148,17 @@ func phiConfidence(phi float64, ok bool) float64 {
 	return min(0.97, 0.8+0.012*max(d, 0))
 }
 
-// setCause takes a judgement. One that differs from what was named before must
-// come three times running: a cause that flickers is none.
+// setCause takes a judgement. One that differs from what was named before must come
+// three times running, or for a fifth of the episode if that is longer (a judgement is
+// every three half-cycles): a cause that flickers is none, and a kind that goes with its
+// cause must not part one cycle into many episodes.
 func (o *oscState) setCause(c Cause, also [2]Cause, conf float64) {
 	k := causeIndex(c)
 	if o.Cause != 0 && k != o.Cause && causes[o.Cause] != Undetermined {
 		if o.Next != k {
 			o.Next, o.NextN = k, 0
 		}
-		if o.NextN++; o.NextN < 3 {
+		if o.NextN++; uint32(o.NextN) < min(max(o.Evals/15, 3), 60) {
 			return
 		}
 	}

@@ -13,11 +13,13 @@ type oscState struct {
 	Evals     uint32  // half-cycles of the bank since the episode began
 	Bad       uint16  // half-cycles running without the cycle
 	Since     float64 // s
+	Seen      float64 // s, when the cycle was last there
 	P         float64 // s, period
 	Amp       float64 // %, mean peak of e
 	AmpHi     float64
 	AmpLo     float64
 	AmpOn     bool
+	Grown     float32 // %, largest amplitude at which growth stopped in this episode; 0 never
 	Growth    float64 // per cycle, newest
 	GrowCause uint8   // cause found while growing
 	Cause     uint8
@@ -52,13 +54,20 @@ var growthRules = [...]struct {
 
 const growConfirm = 3
 
+// fewSlots is a period, slots, near what the bank makes of noise alone: below it a cycle
+// must be more regular than filtered noise ever is.
+const fewSlots = 12
+
+// shiftBeat is the period, s, from which the beat of batches and shifts is met.
+const shiftBeat = 4 * 3600
+
 // judgeCycles looks at a bank after each of its half-cycles.
 func (w *Watch) judgeCycles(level int, b *cycleBank) {
 	s := &w.s
 	o := &s.Osc
 	w.countKept(level, b)
 	period, regular, ok := b.lengths(8)
-	in := ok && period > bankLowP && period < bankHighP
+	in := ok && period > lowP(level) && period < bankHighP
 	var st ringStat
 	watched := o.Grow || o.Sus || b.Conf > 0 || b.Kept > 0 || s.Track.On && int(s.Track.Bank) == level
 	if in && (watched || regular > 2.5) {
@@ -73,7 +82,7 @@ func (w *Watch) judgeCycles(level int, b *cycleBank) {
 	if !suspect {
 		// Of the first ones only a large and regular cycle does not: it may be a fault
 		// that was there before the watch.
-		standing := regular > 5 && b.at(0).peak() > max(0.3, 3*s.Noise.sigma())
+		standing := regular > 5 && b.at(0).peak() > max(0.3, 3*s.Noise.beside(b.at(0).peak(), period*float64(int(1)<<level)))
 		if !(ok && regular > 3.5 && (b.Usual.N >= 40 || standing)) {
 			b.Usual.Add(b.at(0).peak(), 0.75, 0.006, 1e-3)
 		}
@@ -88,7 +97,7 @@ func (w *Watch) judgeCycles(level int, b *cycleBank) {
 	}
 	sigma := s.Noise.sigma()
 	own := o.Grow || o.Sus
-	if !own && st.regular > 3 && st.amp > max(1.3*sigma, 0.08) && (!w.usualKnown(b) || st.amp > 1.2*b.Usual.Value()) && w.betterTrack(level, st) {
+	if !own && st.regular > 3 && st.period > bankLowP && st.amp > max(1.3*sigma, 0.08) && (!w.usualKnown(b) || st.amp > 1.2*b.Usual.Value()) && w.betterTrack(level, st) {
 		w.startTrack(level)
 	}
 	if s.Track.On && int(s.Track.Bank) == level {
@@ -131,8 +140,8 @@ func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 		least = max(3*sigma, 1)
 	}
 	grow := false
-	if o.Sus && o.Evals > 24 && tip < 1.8*o.AmpLo || w.scheduled(b, st.period*w.levelS(level)) {
-		b.Conf = 0 // what has long been there must really have grown
+	if o.Sus && (o.Evals > 24 && tip < 1.8*o.AmpLo || o.Sticking || tip < 1.5*float64(o.Grown)) || w.scheduled(b, st.period*w.levelS(level)) {
+		b.Conf = 0 // what has long been there, or stopped growing before, must really have grown
 		return
 	}
 	if w.violent(level, b) {
@@ -200,12 +209,14 @@ func (w *Watch) violent(level int, b *cycleBank) bool {
 			return false
 		}
 	}
+	least, most := math.Inf(1), 0.
 	for i := range n {
-		if b.at(i).ln() < b.at(i+1).ln()+math.Log(1.22) {
-			return false
-		}
+		by := b.at(i).ln() - b.at(i+1).ln()
+		least, most = min(least, by), max(most, by)
 	}
-	return true
+	// An unstable loop grows by the same factor each time; a load step out of calm by
+	// much, once.
+	return least > math.Log(1.22) && most < 3*least
 }
 
 // aggressive: the reset time in service is less than half of what the loop list
@@ -248,15 +259,15 @@ func (w *Watch) beginOsc(level int, b *cycleBank, back int) {
 		len += b.at(i).length()
 	}
 	keep := *o
-	if keep.P > 0 && keep.Grow && math.Abs(math.Log(keep.P/(2*len/float64(back)*w.levelS(level)))) < 0.2 {
+	if keep.P > 0 && (keep.Grow || keep.Sus) && math.Abs(math.Log(keep.P/(2*len/float64(back)*w.levelS(level)))) < 0.2 {
 		// The same cycle, seen by the neighbour: what is known of it stands, its track too.
 		if k := &w.s.Track; k.On && k.Bank == o.Bank {
 			k.Bank = uint8(level)
 		}
-		o.Bank, o.Bad = uint8(level), 0
+		o.Bank, o.Bad, o.Seen = uint8(level), 0, w.in.t
 		return
 	}
-	*o = oscState{Grow: keep.Grow, Sus: keep.Sus, Bank: uint8(level), Since: b.Zero - len*w.levelS(level),
+	*o = oscState{Grow: keep.Grow, Sus: keep.Sus, Bank: uint8(level), Seen: w.in.t, Since: b.Zero - len*w.levelS(level),
 		LastAt: keep.LastAt, LastP: keep.LastP, LastCause: keep.LastCause}
 	w.startTrack(level)
 	w.s.Clock.begin(level, b.Zero, 2*len/float64(back)*w.levelS(level))
@@ -267,10 +278,11 @@ func (w *Watch) beginOsc(level int, b *cycleBank, back int) {
 func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 	s := &w.s
 	o := &s.Osc
-	if o.Sus || o.Grow && w.in.t-o.Since < 40*st.period*w.levelS(level) && s.Osc.Bad == 0 {
+	if o.Sus && !(o.away() && int(o.Bank) != level) || o.Grow && w.in.t-o.Since < 40*st.period*w.levelS(level) && s.Osc.Bad == 0 {
 		return
 	}
-	sigma := s.Noise.sigma()
+	slots := st.period * float64(int(1)<<level) // a period
+	sigma := s.Noise.beside(st.amp, slots)
 	usual := b.Usual.Value()
 	known := w.usualKnown(b) && b.Usual.N >= 60
 	period := st.period * w.levelS(level)
@@ -293,12 +305,15 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 		n = 11
 	}
 	q, ok := b.stat(level, n)
-	if ok && st.period*float64(int(1)<<level) > 12 && s.Noise.known() {
-		big := q.amp > max(3*sigma, 0.6)
+	if ok && s.Noise.known() && (slots > fewSlots || q.regular > 7*w.strict) {
+		// Batches and shifts have a slow beat of sorts, which a loop not watched for long
+		// may always have had.
+		plain := known || period < shiftBeat
+		big := q.amp > max(3*sigma, 0.6) && plain
 		own := q.amp > max(1.9*sigma, 0.4) && known && q.amp > 2*usual
 		if (q.regular > 5*w.strict && q.least > 0.4 && big && (!known || q.amp > 1.6*usual) ||
 			q.regular > 4*w.strict && q.least > 0.3 && own ||
-			q.regular > 4*w.strict && q.least > 0.3 && !known && q.amp > max(1.2, 5*sigma) ||
+			q.regular > 4*w.strict && q.least > 0.3 && !known && plain && q.amp > max(1.2, 5*sigma) ||
 			q.regular > 7*w.strict && q.least > 0.4 && !known && q.amp > max(0.45, 4*sigma)) &&
 			(w.steadySP(float64(n)/2*period) || q.regular > 8*w.strict && period < keptSlow) { // steps of SP now and then cannot beat such time
 			o.Sus = true
@@ -308,7 +323,7 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 	}
 	// Irregular sticking leaves cycles out: the shape of OP makes up for it.
 	if q, ok := b.stat(level, 10); ok && s.Noise.known() && s.Track.On && int(s.Track.Bank) == level && s.Track.Looks >= 4 &&
-		q.regular > 1.6 && q.least > 0.2 && q.amp > max(3.4*sigma, 0.55) && st.period*float64(int(1)<<level) > 20 &&
+		q.regular > 1.6 && q.least > 0.2 && q.amp > max(3.4*sigma, 0.55) && slots > 20 &&
 		s.Motion.LawSeen && !w.propOnlySeen() && w.steadySP(7*period) && (!known || q.amp > 1.6*usual) {
 		sh := w.shapes()
 		if si := w.stickIndex(sh); si > 0.66 && sh.h3OP < 0.25 && sh.stick > 0.38 {
@@ -325,8 +340,18 @@ func (w *Watch) scheduled(b *cycleBank, period float64) bool {
 	if period < 5*3600 || period < 6*rt { // 6 reset times: a lag of 44 degrees, no own swing is slower but few
 		return false
 	}
+	switch w.loop.Duty {
+	case configs.Averaging, configs.GapDuty, configs.Batch, configs.StartStop:
+		if rt > 0 && period > 20*rt { // meant to wander with its load, or stopped in between
+			return true
+		}
+	}
+	// The mean of the half-cycles is as uncertain as they are irregular, and a daily load
+	// has shapes of its own.
+	_, regular, _ := b.lengths(int(b.N))
+	day := min(0.15, 2/(regular*math.Sqrt(max(float64(b.N), 1))))
 	for k := 1.; k <= 3; k++ {
-		if math.Abs(period*k/86400-1) < 0.05 {
+		if off := math.Abs(period*k/86400 - 1); off < 0.05 || k == 1 && off < day {
 			return true
 		}
 	}
@@ -371,6 +396,7 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 	// goes on until something clips, be it a limit further down a cascade.
 	if q, ok := b.stat(level, 12); o.Grow && ok && o.Evals > 12 && (o.Evals < 40 || st.amp < 3*o.AmpLo) && q.growth < 1.012 && q.least > 0.7 && w.in.t-s.Tune.LimitAt > 8*o.P && q.amp < 25 {
 		o.Grow, o.GrowCause, o.Sus = false, 0, true
+		o.Grown = max(o.Grown, float32(o.AmpHi))
 		b.Conf = 0
 		o.Cause, o.Conf = 0, 0.5
 	}
@@ -383,10 +409,11 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 	} else {
 		o.Bad = 0
 	}
-	if o.Bad > 8 {
-		w.endOsc()
+	if o.away() {
+		w.endGone()
 		return
 	}
+	o.Seen = w.in.t
 	if o.Evals%3 == 1 {
 		w.judgeOscCause(b)
 	}
@@ -400,6 +427,21 @@ func (w *Watch) oscGone(level int) {
 	}
 	o.Bad++
 	if o.Bad > 12 {
+		w.endGone()
+	}
+}
+
+// clearHold is how long, s, a cycle must stay away before its episode ends, besides some
+// half-cycles: one that noise or loads stir up comes and goes, and a fast one would make
+// a new episode of each breath. An hour is short for those who read of it.
+const clearHold = 3600
+
+// away: the live cycle has not been there for some half-cycles; it may come back.
+func (o *oscState) away() bool { return o.Bad > 8 }
+
+// endGone ends a cycle that has stayed away.
+func (w *Watch) endGone() {
+	if w.in.t-w.s.Osc.Seen > clearHold {
 		w.endOsc()
 	}
 }

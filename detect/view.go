@@ -162,6 +162,11 @@ func (w *Watch) blindSpots() (b []string) {
 	if r, _ := w.resetS(); r > 0 && r < 3*s.Grid.DT {
 		b = append(b, fmt.Sprintf("sampled every %s, too slowly for a reset time of %s", duration(s.Grid.DT), duration(r)))
 	}
+	// A loop's own swing is about as long as its reset time or longer (a lag of the
+	// controller of 9 degrees and more).
+	if r, _ := w.resetS(); r < fastestP*s.Grid.DT && (r > 0 || s.Noise.N > 20000) {
+		b = append(b, fmt.Sprintf("cycles faster than %s would not be seen: sampled every %s", duration(fastestP*s.Grid.DT), duration(s.Grid.DT)))
+	}
 	if u := w.updateS(); m.Changes > 20 && u > 4*s.Grid.DT && w.loop.Report == configs.Periodic {
 		b = append(b, fmt.Sprintf("PV really changes only about every %s", duration(u)))
 	}
