@@ -78,6 +78,9 @@ func stepFrozen(w *Watch) {
 		}
 	}
 	x.OPLast = float32(in.trim)
+	if in.t == m.PVSame {
+		x.OPAtStill = in.op
+	}
 	if !in.frozen || in.held && w.loop.Report != configs.Exception {
 		return
 	}
@@ -111,10 +114,20 @@ func stepFrozen(w *Watch) {
 			limit = max(3600, 4*usual)
 		}
 	}
+	if m.Changes == 0 {
+		// Never seen to move: only where OP was driven far by what PV says, for nothing.
+		if limit = max(limit, max(3600, 300*in.dt)); !in.active || x.OPTravel < frozenTravel {
+			return
+		}
+	}
 	if run > limit*w.strict {
 		x.Frozen = true
 	}
 }
+
+// frozenTravel is the travel of OP, %, that shows in any PV that was never seen to move
+// (common practice, no source).
+const frozenTravel = 5.0
 
 // rangeEnd is how near to the end of its range PV counts as pegged, %: noise and
 // offset of a dead transmitter (common practice, no source).
@@ -146,9 +159,24 @@ func stepRangeEnd(w *Watch) {
 		x.EndSince, x.EndHigh = in.t, high
 	}
 	asks := low && in.sp > 3 || high && in.sp < 97
+	// There from the start: the controller has done what it can, for long, and PV knows no
+	// other value. Where equipment stands still by plan that means nothing.
+	if in.active && asks && in.limit && 20*float64(x.InsideN) < float64(x.OutsideN) && !w.restsByPlan() &&
+		in.t-x.EndSince > max(max(3600, 300*in.dt), 5*w.timeScale()) {
+		x.Pegged = true
+	}
 	if in.active && asks && (usual || x.Pegged) && x.InsideN > 200 && in.t-x.EndSince > max(max(300, 60*in.dt), 2*w.s.Motion.PVRunMax) {
 		x.Pegged = true
 	}
+}
+
+// restsByPlan: the loop's duty lets its equipment stand still.
+func (w *Watch) restsByPlan() bool {
+	switch w.loop.Duty {
+	case configs.Batch, configs.StartStop, configs.Selector, configs.Standby:
+		return true
+	}
+	return false
 }
 
 // Not in normal mode: the law has not acted as planned for hours.

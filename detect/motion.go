@@ -193,7 +193,7 @@ func (w *Watch) stepStill() {
 	m.EStillInt += float32(in.e * in.dt)
 	m.EStillLo, m.EStillHi = min(m.EStillLo, float32(in.e)), max(m.EStillHi, float32(in.e))
 	inside := in.pv > 0.1 && in.pv < 99.9
-	in.frozen = inside && m.Changes > 30 && in.t-m.PVSame > max(10*in.dt, 2*m.PVRunMax)
+	in.frozen = inside && (m.Changes > 30 && in.t-m.PVSame > max(10*in.dt, 2*m.PVRunMax) || m.Changes == 0 && in.t-m.PVSame > max(600, 60*in.dt))
 	m.Frozen = in.frozen
 }
 

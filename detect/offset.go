@@ -44,13 +44,15 @@ func (o *offsetState) restart() { *o = offsetState{} }
 
 // offsetPast outlives the runs.
 type offsetPast struct {
-	Offset  stand   // PV misses the set point with OP free
-	Sat     stand   // and with OP at its limit
-	EF      float64 // e through a lag of half the loop's time scale, %
-	Longest float64 // s, longest run that was no finding; forgets a tenth with each new run of note
-	Runs    uint8   // runs on end in which the integral was missing
-	Since   float64 // s, begin of the first of them
-	Came    uint8   // findings from which PV came back by itself
+	Offset  stand      // PV misses the set point with OP free
+	Sat     stand      // and with OP at its limit
+	EF      float64    // e through a lag of half the loop's time scale, %
+	Longest float64    // s, longest run that was no finding; forgets a tenth with each new run of note
+	Runs    uint8      // runs on end in which the integral was missing
+	Since   float64    // s, begin of the first of them
+	Came    uint8      // findings from which PV came back by itself
+	Deaf    float64    // s, when the final element was last shown not to follow; 0 never
+	Vain    [2]float32 // s, when OP last travelled far, down and up, and PV made nothing of it; 0 never
 }
 
 // stand is a decision that holds until calm has lasted.
@@ -283,9 +285,15 @@ func (w *Watch) judgeOffset(thr float64) {
 	if math.Abs(mean) < thr || math.Abs(recent) < 0.6*thr || !in.hasOP {
 		return
 	}
-	if in.mode == 0 && !m.LawSeen {
+	// OP that went far the way e pushes it answers e, though no fit shows it yet.
+	went := o.OPs - float64(m.OPMin)
+	if w.sign()*o.Sign < 0 {
+		went = float64(m.OPMax) - o.OPs
+	}
+	if in.mode == 0 && !m.LawSeen && (went < leastTravel/2 || w.sign() == 0) {
 		return
 	}
+	w.vainTravel(mean, recent)
 	lo, hi := m.opRange()
 	l0, l1 := w.opLimits()
 	rt, _ := w.resetS()
@@ -314,11 +322,7 @@ func (w *Watch) judgeOffset(thr float64) {
 			if !listed {
 				conf = 0.75
 			}
-			cause := OutputLimit
-			if o.NotFollow {
-				cause, conf = FinalElementNotFollowing, 0.85
-			}
-			past.Sat.support(s.Sat.AtSince, mean, cause, conf)
+			w.sayLimit(s.Sat.AtSince, mean, conf)
 			past.Offset = stand{}
 		}
 		return
@@ -342,7 +346,7 @@ func (w *Watch) judgeOffset(thr float64) {
 		if past.Runs >= 3 { // where set points change often
 			need, since = need/4, past.Since
 		}
-	} else {
+	} else if cause == Undetermined { // a gain that was seen to have fallen has no history
 		need = max(need, 3*past.Longest)
 	}
 	if past.Offset.On {

@@ -66,6 +66,91 @@ func (w *Watch) integralMissing(t *travel) bool {
 		t.hi-t.lo < 2.5*math.Abs(t.kc)*t.eRange+1
 }
 
+// smoothLag is the delay, slots, of the smoothed values of a run: (1-a)/a for a lag of
+// a = 1/20.
+const smoothLag = 19.0
+
+// integralActs fits the gain and the integral gain together to OP at the last points
+// of a run, since the tuning in service may be another than the one that was learned.
+// OP, e and Int e less its delay passed the same lag, so that the law OP = c + Kc e + Ki
+// Int e holds between them as it stands, whatever the noise. The integral acts where it
+// explains what no gain from none to the learned one does. Where both gains come out,
+// the one that fell is the cause. known is false before there are points enough.
+func (w *Watch) integralActs(t *travel) (c Cause, conf float64, known, acts bool) {
+	o, in := &w.s.Off, &w.in
+	var e, j, op [4]float64
+	e[0], j[0], op[0] = o.Es, o.Int, o.OPs
+	n := 1
+	for k := int(o.AnchorN) - 1; k > 0 && n < len(e); k-- { // the first is still of the begin
+		a := &o.Anchors[k]
+		if in.t-o.T0-float64(a.T) < smoothLag*in.dt {
+			continue
+		}
+		e[n], j[n], op[n] = float64(a.E), float64(a.Int), float64(a.OP)
+		n++
+	}
+	if n < 3 {
+		return Undetermined, 0, false, false
+	}
+	var em, jm, om float64
+	for i := range n {
+		j[i] -= smoothLag * in.dt * e[i]
+		em, jm, om = em+e[i]/float64(n), jm+j[i]/float64(n), om+op[i]/float64(n)
+	}
+	var ee, ej, jj, eo, jo, oo float64
+	for i := range n {
+		x, y, z := e[i]-em, j[i]-jm, op[i]-om
+		ee, ej, jj, eo, jo, oo = ee+x*x, ej+x*y, jj+y*y, eo+x*z, jo+y*z, oo+z*z
+	}
+	own := ee - ej*ej/jj // of e, without what goes with Int e
+	most := 1.3 * math.Abs(t.kc)
+	a := math.Copysign(1, t.kc)
+	lawful := func(k, of float64) float64 { // the gain within what is lawful
+		if of <= 0 {
+			return 0
+		}
+		return a * max(0, min(most, a*k/of))
+	}
+	kp := lawful(eo, ee)
+	kc := lawful(eo-ej*jo/jj, own)
+	ki := (jo - kc*ej) / jj
+	alone := oo - 2*kp*eo + kp*kp*ee
+	both := oo - 2*kc*eo + kc*kc*ee - ki*ki*jj
+	made := math.Abs(ki) * math.Sqrt(jj/float64(n))
+	const floor = 0.05 // %, rms: less is no matter of the law
+	if !(ki*a > 0) || made < 3*floor || alone < 9*max(both, 0)+float64(n)*floor*floor {
+		// An e that moved enough must be in OP with the gain that was learned: else the
+		// tuning is another one, and what is missing cannot be told by it.
+		doubt := alone > 3*max(both, 0)+float64(n)*floor*floor/3
+		other := math.Abs(t.kc)*math.Sqrt(ee/float64(n)) > 0.5 && math.Abs(kp) < 0.75*math.Abs(t.kc)
+		return Undetermined, 0, !other && !doubt, false
+	}
+	if n < len(e) { // any three points lie on some law
+		return Undetermined, 0, false, false
+	}
+	if !(own > 0) || most*math.Sqrt(own/float64(n)) < 0.5 || t.rt == 0 || kc == 0 || alone < 50*both {
+		return Undetermined, 0.6, true, true
+	}
+	switch rk, rt := kc/t.kc, kc/ki/t.rt; {
+	case rt > 2.2 && rk > 0.6:
+		return ResetTooLong, 0.85, true, true
+	case rk < 0.45 && rt < 2 || rk < 0.2: // with so little of it the reset time cannot be told well
+		return GainTooLow, 0.85, true, true
+	}
+	return Undetermined, 0.6, true, true
+}
+
+// standsMissing: an integral that was shown to be missing in this run is missing until the
+// contrary is shown: that OP rests with an e that rests says nothing new.
+func (w *Watch) standsMissing(t *travel) bool {
+	p := &w.s.OffPast.Offset
+	if !p.On || p.Cause != causeIndex(IntegralMissing) || p.Since != w.s.Off.T0 {
+		return false
+	}
+	_, _, known, acts := w.integralActs(t)
+	return !known || !acts
+}
+
 // offsetCause compares the travel of OP with what the integral must do. longer is
 // the time, s, to wait beyond the usual before saying so; negative: no offset.
 func (w *Watch) offsetCause(push, lo, hi float64) (c Cause, conf, longer float64) {
@@ -75,8 +160,12 @@ func (w *Watch) offsetCause(push, lo, hi float64) (c Cause, conf, longer float64
 	switch {
 	case w.elementAstray():
 		return FinalElementNotFollowing, 0.95, 0
+	case w.deaf() && ok && math.Abs(t.dop) > leastTravel:
+		return FinalElementNotFollowing, 0.85, 0
 	case !ok:
 		return Undetermined, 0.6, 24 * 3600
+	case w.standsMissing(&t):
+		return IntegralMissing, float64(s.OffPast.Offset.Conf), 0
 	case t.still && t.expect > 3:
 		// OP does not answer e at all: manual, tracking, or not this loop's output.
 		o.WasStill = true
@@ -86,6 +175,12 @@ func (w *Watch) offsetCause(push, lo, hi float64) (c Cause, conf, longer float64
 	case math.Abs(t.rate) < 0.6*math.Abs(t.before):
 		return Undetermined, 0.6, -1 // it is being worked off
 	case w.integralMissing(&t):
+		switch c, conf, known, acts := w.integralActs(&t); {
+		case !known:
+			return Undetermined, 0.6, -1
+		case acts:
+			return c, conf, 0
+		}
 		if !t.learned {
 			// Ignorant of the own reset time: three times as long is longer than that of all but
 			// a few loops (integralMissing asks for an implied one over three times the run's).
@@ -110,6 +205,39 @@ func (w *Watch) offsetCause(push, lo, hi float64) (c Cause, conf, longer float64
 // leastTravel is the travel of OP, %, that any element which follows shows in PV, against
 // an error of a few noise levels (common practice, no source).
 const leastTravel = 15.0
+
+// vainTravel notes where OP has gone far and e is as large as it was. A load that
+// grows as fast as OP can do that once; one that does so up and down again, with e as
+// square as an element makes it that does not move, is not to be expected. An element that
+// acts must have moved PV: SIMC tunings (Skogestad 2003) have Kc K of 0.2 or more.
+func (w *Watch) vainTravel(mean, recent float64) {
+	o, in, p := &w.s.Off, &w.in, &w.s.OffPast
+	d := in.t - o.T0
+	a := o.anchorAt(0.3 * d)
+	kc, ok := w.gainPct()
+	if a == nil || !ok || d-float64(a.T) < 2*w.timeScale() || math.Abs(recent) < 0.8*math.Abs(mean) {
+		return
+	}
+	way := o.OPs - float64(a.OP)
+	fell := (float64(a.E) - o.Es) * o.Sign // by which e fell
+	if way*kc*o.Sign < 2*leastTravel*math.Abs(kc) || fell > 0.1*math.Abs(way/kc) || fell > 0.3*math.Abs(mean) {
+		return
+	}
+	side, other := 0, 1
+	if way > 0 {
+		side, other = 1, 0
+	}
+	p.Vain[side] = float32(in.t)
+	if p.Vain[other] > 0 && in.t-float64(p.Vain[other]) < 3*deafFor {
+		p.Deaf = in.t
+	}
+}
+
+// deaf: the final element was shown not to follow, and not long ago.
+func (w *Watch) deaf() bool {
+	p := &w.s.OffPast
+	return p.Deaf > 0 && w.in.t-p.Deaf < deafFor
+}
 
 // limitTest reads the one experiment that tells an element which does not move from a
 // load that grows. While OP travels both can hold e constant: OP makes good what the

@@ -16,6 +16,11 @@ const recRing = 6
 // areaRing is how many set-point steps are remembered with their residence times.
 const areaRing = 5
 
+// unresolved is the residence time of a process, samples, that sums over samples cannot
+// tell from a shorter one: they are off by half a sample at either end, and so is when
+// the step was (common practice, no source).
+const unresolved = 2.0
+
 // recoveredAt is the share of its peak at which a deviation is over.
 const recoveredAt = 0.12
 
@@ -179,7 +184,7 @@ func (w *Watch) residences(dop, dpv float64) float64 {
 		return 0
 	}
 	// Of the closed loop by the law, not by its area: the same where P does not see SP.
-	return dop / r.DSP * ti / kc / max(own, 0.5*w.in.dt)
+	return dop / r.DSP * ti / kc / max(own, unresolved*w.in.dt)
 }
 
 // cutRecovery keeps an event that was not over when something else came, if it
@@ -215,6 +220,10 @@ func (w *Watch) keepRecovery(e recovery) {
 		if t > 0 {
 			e.Ratio = e.Dur / float32(3.5*t)
 		}
+	}
+	if !e.Cut && e.Ratio > 0 && e.Ratio < 1.75 { // OP brought PV back in the usual time: the element follows
+		p := &w.s.OffPast
+		p.Deaf, p.Vain = 0, [2]float32{}
 	}
 	i := r.Count % recRing
 	if r.Count >= recRing {

@@ -19,7 +19,7 @@ type saturationState struct {
 	Due       float32 // %, by which a sound controller had left the limit by now
 	LowShare  float32 // share of time with OP at the low end of its range, mean of days
 	// Stretches at a limit that e pushes towards, each longer than a recovery.
-	From, IntE float64 // s, begin of the running one, 0 none; % s
+	From, IntE float64 // s, begin of the running one, 0 none; % s, integral of e over it
 	Stretches  uint8
 	LastEnd    float64 // s
 	FirstFrom  float64 // s
@@ -112,21 +112,41 @@ func (w *Watch) stepStretch(side, sigma float64) {
 		if z.From == 0 {
 			z.From, z.IntE = in.t, 0
 		}
-		z.IntE += math.Abs(in.e) * in.dt
+		z.IntE += in.e * in.dt
 		return
 	}
 	if z.From == 0 {
 		return
 	}
 	d := in.t - z.From
-	if d > max(2*w.timeScale(), max(30*in.dt, 60)) && z.IntE/d > max(3*sigma, 0.8) {
+	if d > max(2*w.timeScale(), max(30*in.dt, 60)) && math.Abs(z.IntE)/d > max(3*sigma, 0.8) {
 		if z.Stretches == 0 || in.t-z.LastEnd > 86400 {
 			z.Stretches, z.FirstFrom = 0, z.From
 		}
 		z.Stretches, z.LastEnd = min(z.Stretches+1, 200), in.t
 		if z.Stretches >= 3 {
-			s.OffPast.Sat.support(z.FirstFrom, z.IntE/d*w.sign()*side, OutputLimit, 0.75)
+			w.sayLimit(z.FirstFrom, z.IntE/d, 0.75)
 		}
 	}
 	z.From = 0
 }
+
+// sayLimit supports the claim that OP lies at its limit. What an episode was shown with
+// the better evidence stands: an element that did not follow, and the higher confidence.
+func (w *Watch) sayLimit(since, mean, conf float64) {
+	o, p := &w.s.Off, &w.s.OffPast
+	if o.NotFollow {
+		p.Deaf = w.in.t
+	}
+	cause := OutputLimit
+	if w.deaf() {
+		cause, conf = FinalElementNotFollowing, 0.85
+	} else if p.Sat.On && p.Sat.Cause == causeIndex(OutputLimit) {
+		conf = max(conf, float64(p.Sat.Conf))
+	}
+	p.Sat.support(since, mean, cause, conf)
+}
+
+// deafFor is how long, s, an element that was shown not to follow is held to be the
+// reason where OP comes to its limit again: until somebody can have seen to it.
+const deafFor = 86400.0

@@ -50,7 +50,7 @@ func (w *Watch) judgeSlow() {
 	if !own && w.slowByHistory(n) {
 		own = true
 	}
-	area := w.slowByArea()
+	area := w.loop.Report != configs.Exception && w.slowByArea() // held values have no areas
 	shape := n >= 4 && w.loop.Process != configs.Runaway && w.loop.Report != configs.Exception && w.slowByShape(n)
 	by := uint8(0) // the strongest proof
 	switch {

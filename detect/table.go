@@ -28,9 +28,12 @@ type claim struct {
 type openFinding struct {
 	On       bool
 	Cause    uint8
+	Said     uint16 // causes said in this episode, a bit each
 	Conf     float32
 	Since    float64
 	Strength float32
+	Returns  uint8 // causes that were given up and claimed again
+	Moves    uint8 // updates for the confidence alone
 }
 
 const kinds = 11

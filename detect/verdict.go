@@ -61,13 +61,17 @@ func (w *Watch) settle(k int, t float64, c *claim, rejudged bool) {
 	switch {
 	case c.On && !o.On:
 		s.OpenN++
-		*o = openFinding{On: true, Cause: c.Cause, Conf: c.Conf, Since: c.Since, Strength: c.Strength}
+		*o = openFinding{On: true, Cause: c.Cause, Said: 1 << c.Cause, Conf: c.Conf, Since: c.Since, Strength: c.Strength}
 		w.say(k, Raised, t, "")
 	case c.On:
-		moved := math.Abs(float64(c.Conf-o.Conf)) >= 0.1
+		o.weigh(c)
+		moved := math.Abs(float64(c.Conf-o.Conf)) >= 0.1 && o.Moves < mostMoves
 		worse := c.Strength >= 2*o.Strength && o.Strength > 0
 		if c.Cause != o.Cause || moved || worse {
-			o.Cause, o.Conf = c.Cause, c.Conf
+			if c.Cause == o.Cause && moved {
+				o.Moves++
+			}
+			o.Cause, o.Conf, o.Said = c.Cause, c.Conf, o.Said|1<<c.Cause
 			if worse {
 				o.Strength = c.Strength
 			}
@@ -90,6 +94,30 @@ func (w *Watch) settle(k int, t float64, c *claim, rejudged bool) {
 		w.say(k, Cleared, t, why)
 		*o = openFinding{}
 		s.OpenN--
+	}
+}
+
+// What an episode may say before it is held to be undecided (common practice, no
+// source): a cause that comes back for the second time, and updates that change only
+// the confidence.
+const (
+	mostReturns = 2
+	mostMoves   = 4
+)
+
+// weigh bounds what an episode says: a cause given up and claimed again, and then once
+// more, is evidence that points both ways, and is said to be so until the end.
+// Wind-up is no such case: the load beyond the limit is its occasion, and it is the fault.
+func (o *openFinding) weigh(c *claim) {
+	if causes[o.Cause] == WindUp && causes[c.Cause] == OutputLimit {
+		c.Cause, c.Conf = o.Cause, o.Conf
+	}
+	und := causeIndex(Undetermined)
+	if c.Cause != o.Cause && c.Cause != und && o.Said&(1<<c.Cause) != 0 && o.Returns < mostReturns {
+		o.Returns++
+	}
+	if o.Returns >= mostReturns {
+		c.Cause, c.Conf = und, 0.5
 	}
 }
 
