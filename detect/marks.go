@@ -175,8 +175,9 @@ func (w *Watch) before(k int, onset float64, now int64) (out []Change) {
 	}
 	slack := max(2*s.Grid.DT, 5)
 	if c := &s.Change; c.Seen > 0 && c.At > onset-markBeforeS {
-		// Where it was read from the data its begin is as vague as an onset: a cycle or two.
-		add(ChangedTuning, c.At, max(slack, 2*s.Osc.P), w.tuningWords())
+		// Where it was read from the data its begin is vague, and so is the onset of a cycle, told
+		// from up to twenty of its half-cycles of which only the later ones need be of the change.
+		add(ChangedTuning, c.At, max(slack, 10*s.Osc.P), w.tuningWords())
 	} else if text, at, _ := w.tuningMoved(onset); text != "" {
 		add(ChangedTuning, at, 0, text)
 	}
@@ -312,7 +313,10 @@ func (w *Watch) nothingBefore(k int, f *Finding) string {
 			return ""
 		}
 	}
-	if _, _, same := w.tuningMoved(onset); !same || f.Cause == IntegralMissing {
+	// A change found since is the usual tuning by now: what is read agrees with that, and an
+	// onset can lie before it by mistake.
+	changed := s.Change.Seen > 0 && s.Change.At > onset-markBeforeS
+	if _, _, same := w.tuningMoved(onset); changed || !same || f.Cause == IntegralMissing {
 		return " No change of mode or SP was seen in the 24 h before."
 	}
 	return " No change of mode, SP or tuning was seen in the 24 h before."

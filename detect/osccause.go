@@ -18,6 +18,12 @@ import (
 const (
 	phiGain  = 35.0
 	phiReset = 45.0
+	// Over this an integrating loop has too little gain whatever its reset is: at its limit
+	// w theta = 90 degrees - phi and k Kc theta = w theta sin(w theta), here 0.12, where
+	// the published rules set 0.35 to 0.5.
+	phiSlack = 70.0
+	// Growth a cycle that loads do not feign: too little gain alone leaves a loop damped.
+	plainGrowth = 1.5
 )
 
 // lagDeg is the lag of OP against a*e of a PI law at period P growing by G a cycle.
@@ -61,6 +67,8 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 	}
 	byPhi, also := Undetermined, [2]Cause{ResetTooShort, GainTooHigh}
 	switch {
+	case phi > phiSlack && w.loop.Process == configs.Integrating && !(o.Grow && o.Growth > plainGrowth) && (o.GrowCause == 0 || causes[o.GrowCause] == GainTooLow):
+		byPhi, also = GainTooLow, [2]Cause{ResetTooShort}
 	case phi > phiReset:
 		byPhi, also = ResetTooShort, [2]Cause{GainTooHigh}
 	case phi < phiGain:
@@ -81,8 +89,12 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 	if okb && ok && ti > 0 && t0 > 0 {
 		rk, rt = math.Abs(kc)/k0, ti/t0
 	}
+	slack := w.slack(rk, rt, phi, p) || ok && w.loop.GainPct > 0 && w.loop.IdealReset > 0 && w.slack(math.Abs(kc)/w.loop.GainPct, ti/w.loop.IdealReset, phi, p)
 	// Between the bands what changed before the growth decides.
-	if rk > 0 && rt > 0 {
+	switch {
+	case slack:
+		byPhi, also, byChange = GainTooLow, [2]Cause{ResetTooShort}, true
+	case rk > 0 && rt > 0:
 		between := phi > 25 && phi < 65
 		switch lk, lt := math.Log(rk), math.Log(rt); {
 		case lt < -0.7 && math.Abs(lk) < 0.25 && !(phi < 4): // plainly the reset was shortened, and only it
@@ -109,12 +121,14 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 	}
 	sh := w.shapes()
 	si := w.stickIndex(sh)
-	if d := math.Abs(sh.phiDeg - phi); sh.looks >= 3 && o.Grow && d > 15 && byPhi != Undetermined {
+	hidden := math.Atan(2*math.Pi*w.lag()/p) * 180 / math.Pi // a lag that was read along with the law is no disagreement
+	if d := math.Abs(sh.phiDeg - phi - hidden); sh.looks >= 3 && !slack && o.Grow && d > 15 && byPhi != Undetermined {
 		// Directly read and fitted lag disagree: a hidden filter or late OP; the fit
 		// cannot be trusted to name a knob.
 		byPhi, also = Undetermined, [2]Cause{GainTooHigh, ResetTooShort}
 	}
-	changed := (rk > 1.4 && rt < 2 || rt > 0 && rt < 0.65) && !(si > 0.5)
+	// Where both moved alike the integral is as it was, and the gain not seen beside it.
+	changed := (rk > 1.4 && rt < 2 && (rk > 1.3*rt || phi < phiValve) || rt > 0 && rt < 0.65 && rk > 1.3*rt) && !(si > shapeStuck)
 
 	if o.Grow {
 		// Once OP is clipped the fit fails: the cause found before stands.
@@ -123,10 +137,20 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 		if o.ByChange && !byChange || !byChange && o.Evals < 4 && o.GrowCause == 0 && phi > 15 && phi < 60 {
 			ok = false // named once by what changed, or too early to name
 		}
+		if o.GrowCause == 0 && o.Sus && o.Evals >= 60 && !byChange {
+			ok = false // an irregular cycle that has long been there also swells at times
+		}
 		if ok && (o.GrowCause == 0 || (byPhi != Undetermined || o.Evals < 10) && (early || sure)) {
 			o.GrowCause = causeIndex(byPhi)
 			o.ByChange = byChange
-			o.setCause(byPhi, also, phiConfidence(phi, ok))
+			conf := phiConfidence(phi, ok)
+			switch {
+			case byPhi == Undetermined:
+				conf = 0.5
+			case byPhi == GainTooLow && !slack:
+				conf = min(conf, 0.85)
+			}
+			o.setCause(byPhi, also, conf)
 		} else if o.GrowCause == 0 {
 			o.setCause(Undetermined, also, 0.5)
 		}
@@ -135,9 +159,27 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 		}
 	}
 	if o.Sus {
-		w.judgeSustainedCause(b, phi, byPhi, also, si, sh, changed)
+		w.judgeSustainedCause(b, phi, byPhi, also, si, sh, rk, rt, changed, slack)
 	}
 }
+
+// slack: the gain fell, and the loop swings as an integrating one does whose product
+// k Kc Ti has become too small: s^2 + k Kc s + k Kc/Ti has the damping sqrt(k Kc Ti)/2 and
+// the period 2 pi sqrt(Ti/(k Kc)), the lag of OP at it 90 degrees less atan of twice the damping
+// (Skogestad 2003). The product is taken to have been 4 before, as its published
+// rules have it; rk and rt are what became of gain and reset. A self-regulating process
+// with less gain is only better damped.
+func (w *Watch) slack(rk, rt, phi, period float64) bool {
+	if w.loop.Process == configs.SelfRegulating || !(rk > 0 && rk < 1/changeRatio && rk < rt && rk*rt < 0.3) || !(phi > phiValve) {
+		return false
+	}
+	natural := math.Pi * w.s.Osc.Ti / math.Sqrt(rk*rt)
+	return math.Abs(math.Log(period/natural)) < slackNear
+}
+
+// slackNear is how near, ln, the period must be to the natural one: the product before may
+// have been a fifth of what is taken or five times it.
+const slackNear = 0.8
 
 func phiConfidence(phi float64, ok bool) float64 {
 	if !ok || math.IsNaN(phi) {
@@ -148,17 +190,28 @@ func phiConfidence(phi float64, ok bool) float64 {
 	return min(0.97, 0.8+0.012*max(d, 0))
 }
 
-// setCause takes a judgement. One that differs from what was named before must come
-// three times running, or for a fifth of the episode if that is longer (a judgement is
-// every three half-cycles): a cause that flickers is none, and a kind that goes with its
-// cause must not part one cycle into many episodes.
+// surely is the confidence from which on one judgement is enough.
+const surely = 0.8
+
+// setCause takes a judgement. One that is not sure must come three times running, and so
+// must one that differs from what was named before, or for a fifth of the episode if that
+// is longer (a judgement is every three half-cycles): a cause that flickers is none, and a
+// kind that goes with its cause must not part one cycle into many episodes.
 func (o *oscState) setCause(c Cause, also [2]Cause, conf float64) {
 	k := causeIndex(c)
-	if o.Cause != 0 && k != o.Cause && causes[o.Cause] != Undetermined {
+	need := uint32(1)
+	switch {
+	case o.Cause == 0 || k == o.Cause:
+	case causes[o.Cause] != Undetermined:
+		need = min(max(o.Evals/15, 3), 60)
+	case c != Undetermined && conf < surely:
+		need = 3
+	}
+	if need > 1 {
 		if o.Next != k {
 			o.Next, o.NextN = k, 0
 		}
-		if o.NextN++; uint32(o.NextN) < min(max(o.Evals/15, 3), 60) {
+		if o.NextN++; uint32(o.NextN) < need {
 			return
 		}
 	}
@@ -172,14 +225,37 @@ func (o *oscState) setCause(c Cause, also [2]Cause, conf float64) {
 // too coarsely to show jumps the shape must be the purer for it; and where the cycle
 // looks as regular as a clock, which friction does not, unless it is known to stray.
 func (w *Watch) triangle(si float64, sh shapes, regular float64, strays bool) bool {
+	coarse := math.IsNaN(sh.stick)
 	switch {
 	case regular > 50 && !strays:
 		return si > 0.8
-	case math.IsNaN(sh.stick):
-		return si > 0.72
+	case w.loop.Process == configs.Integrating:
+		return si > 0.66 && !coarse || si > 0.64 && sh.stick > 0.41 || si > 0.72
+	case coarse:
+		return si > 0.8
 	}
-	return si > 0.66 || si > 0.64 && sh.stick > 0.41
+	return si > shapeStuck+2*shapeScatter/math.Sqrt(min(float64(sh.looks), shapeLooks))
 }
+
+// shapeStuck is the sine-triangle index over which a shape is that of sticking, as published
+// (He et al. 2007); between 0.4 and it nothing is known.
+const shapeStuck = 0.6
+
+// shapeScatter is how the index of a single cycle scatters under noise, shapeLooks how many
+// cycles its mean, which forgets, rests on at most: two standard errors over the limit
+// are 0.75 after four cycles and 0.70 after ten.
+const (
+	shapeScatter = 0.15
+	shapeLooks   = 10
+)
+
+// alike is the spread of amplitudes, share of their mean, over which the band of a valve
+// does not set them; ownBeat the regularity under which an irregular drive may make the
+// cycle as well as the loop's own resonance.
+const (
+	alike   = 0.45
+	ownBeat = 10.0
+)
 
 // Lags of OP against e, degrees, of an integrating loop that its valve makes cycle, by
 // harmonic balance: the loop goes round with k Kc Ti tan(phi)/cos(phi) |N| = 1 and
@@ -193,6 +269,9 @@ const (
 	phiValve        = 55.0 // over it neither explains the cycle
 )
 
+// steady is the spread of amplitudes that a steady drive stays under.
+const steady = 0.15
+
 // peakedLeast is the third harmonic of e in phase with the first, over it, above which
 // the corners of a cycle are those of a valve: 1/9 for a triangle; a linear loop, ringing
 // or driven by a sine, stays under 0.02.
@@ -201,7 +280,7 @@ const peakedLeast = 0.03
 // squareLeast is the same of a cycle that is plainly no sine.
 const squareLeast = 0.1
 
-func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also [2]Cause, si float64, sh shapes, changed bool) {
+func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also [2]Cause, si float64, sh shapes, rk, rt float64, changed, slack bool) {
 	s := &w.s
 	o := &s.Osc
 	q, _ := b.stat(int(o.Bank), min(int(b.N), ringLen))
@@ -209,20 +288,29 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	keeps, strays := s.Clock.beat()
 	// A slow swing far beyond the reset time may look like it; but the band of a valve
 	// makes its cycles alike, where ringing begins anew with each load.
-	tri := w.triangle(si, sh, q.regular, strays) && !(phi > 60 && (si < 0.72 && !(sh.stick > 0.58) || q.spread > 0.45))
+	tri := w.triangle(si, sh, q.regular, strays) && q.spread < alike && !(phi > 60 && si < 0.72 && !(sh.stick > 0.58))
 	integrating := w.loop.Process == configs.Integrating
 	stuckBefore := o.LastCause != 0 && causes[o.LastCause] == ValveSticking
 	lately := o.LastCause != 0 && w.in.t-o.LastAt < 60*o.P && math.Abs(math.Log(o.P/o.LastP)) < 0.75
-	play := w.loop.Process != configs.SelfRegulating && strays && sh.looks >= 10 && si > 0.52 && sh.peaked > peakedLeast && phi > phiDeadBand && phi < phiDeadBandMost
-	follows := s.Motion.PosN > 300 && s.Motion.Astray < 0.3 // the position shows that the element does
+	// Play has to be plain once; then it is not taken back because noise blurs it.
+	least, corners := shapeStuck, 1.4*peakedLeast
+	if causes[o.Cause] == ValveDeadBand {
+		least, corners = 0.52, 0.7*peakedLeast
+	}
+	play := w.loop.Process != configs.SelfRegulating && strays && sh.looks >= shapeLooks && si > least && sh.peaked > corners && phi > phiDeadBand && phi < phiDeadBandMost
+	clipped := s.Tune.LimitAt > 0 && w.in.t-s.Tune.LimitAt < 1.5*o.P // a cycle between the limits of OP is as even as a clock's
+	follows := s.Motion.PosN > 300 && s.Motion.Astray < 0.3          // the position shows that the element does
 	switch {
 	case o.GrowCause != 0 && causes[o.GrowCause] != Undetermined:
 		o.setCause(causes[o.GrowCause], also, 0.85)
 	case lately && !stuckBefore:
 		o.setCause(causes[o.LastCause], also, 0.8)
 		o.LastAt, o.LastP = w.in.t, o.P
-	case keeps && changed:
-		// A beat speaks for outside, a tuning made livelier for the loop itself.
+	case slack && !(keeps && s.Clock.long()):
+		o.setCause(GainTooLow, [2]Cause{ResetTooShort}, 0.92)
+	case keeps && (changed || slack || clipped || !s.Clock.long() && q.spread > steady):
+		// A beat speaks for outside, a tuning changed for the loop itself; a swing that
+		// loads keep up wanders in size, and its phase strays slowly when it rings long.
 		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, byPhi}, 0.5)
 	case keeps && tri && !s.Clock.long():
 		// Shape against a beat that is young.
@@ -239,9 +327,9 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		// A gap or a spell in manual took the record of the shape: nothing new is known.
 	case play && !changed && !follows:
 		o.setCause(ValveDeadBand, [2]Cause{ValveSticking}, 0.8)
-	case o.Sticking && !integrating && si > 0.5:
+	case o.Sticking && !integrating && si > shapeStuck && q.spread < alike:
 		// A shape once plain is not taken back because noise blurs it for a while.
-	case lately && !integrating && si > 0.5 && !follows:
+	case lately && !integrating && si > shapeStuck && q.spread < alike && !follows:
 		o.setCause(ValveSticking, [2]Cause{ProcessNonlinear}, 0.88)
 	case tri && sh.h3OP > 0.25 && !strays:
 		// OP square: what drives the loop may be, a sticking valve makes OP a triangle.
@@ -257,7 +345,11 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		o.setCause(Undetermined, [2]Cause{ValveSticking, ProcessNonlinear}, 0.6)
 	case tri && !changed && w.propOnlySeen():
 		o.setCause(Undetermined, [2]Cause{ValveSticking, OutsideDisturbance}, 0.5)
-	case integrating && phi > 55 && si < 0.78 && q.spread > 0.12:
+	case integrating && phi > phiValve && si < 0.78 && !changed && q.regular > 2*ownBeat:
+		// With the product k Kc Ti too small alone the swing would lose four fifths a cycle
+		// at this lag and not be so even: it is the dead time that keeps it up.
+		o.setCause(byPhi, [2]Cause{ResetTooShort, GainTooLow}, 0.75)
+	case integrating && phi > phiValve && si < 0.78 && !changed && (q.spread > 0.12 || strays):
 		// A slow swing far beyond the reset time: an integrating loop with too little
 		// gain is poorly damped for any reset (Skogestad 2003).
 		o.setCause(GainTooLow, [2]Cause{ResetTooShort}, 0.75)
@@ -267,16 +359,17 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		o.setCause(ValveSticking, [2]Cause{ValveDeadBand}, 0.88)
 	case tri && !changed:
 		o.setCause(ValveSticking, [2]Cause{ProcessNonlinear}, min(0.95, 0.86+0.6*(si-0.64)))
-	case changed:
+	case changed && (byPhi == ResetTooShort && rt < 0.8 || byPhi == GainTooHigh && rk > 1.25):
 		o.setCause(byPhi, also, 0.85)
+	case changed:
+		// What changed is not what the lag points at.
+		o.setCause(Undetermined, [2]Cause{GainTooHigh, ResetTooShort}, 0.5)
 	case si < 0.45 && s.Clock.exact() && q.spread < 0.03 && move < 1.1:
 		// Nothing disturbs this loop, so nothing shows whether the cycle would come back
 		// to its beat; but a swing of the loop's own neither grows nor dies only at one
 		// value of its tuning.
 		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.75)
-	case si < 0.45 && phi < 25 && move > 1.5:
-		o.setCause(GainTooHigh, [2]Cause{OutsideDisturbance}, 0.75)
-	case si < 0.5 && (move > 1.7 || phi > 60 && q.spread > 0.14 && move > 1.4):
+	case si < 0.5 && strays && q.regular > ownBeat && (move > 1.7 || phi < 25 && move > 1.5 || phi > 60 && q.spread > 0.14 && move > 1.4):
 		o.setCause(byPhi, [2]Cause{OutsideDisturbance}, 0.75)
 	default:
 		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, byPhi}, 0.5)

@@ -45,30 +45,33 @@ func (w *Watch) tuneCheck(k int) {
 	}
 	// Where something else than the law moves OP between the blocks that pass for it, these
 	// are a choice by chance.
-	if s.Tune.Law < changeLaw || b.Run < changeFits {
+	if b.ByLaw <= 0 || b.Run < changeFits {
 		return
 	}
 	var ks, ts, dk, dt [changeFits]float64
 	pv := 0.0
-	oldest := math.Inf(1)
+	oldest, least := math.Inf(1), float32(1)
 	for i := range changeFits {
 		f := &b.Ring[(b.Count-1-uint32(i))%fitRing]
-		if f.R2 < changeR2 {
-			return
-		}
 		ks[i], ts[i] = math.Abs(float64(f.Kc)), float64(f.Ti)
 		dk[i], dt[i] = w.strays(k, f), math.Log(ts[i]/b.BaseT.Value())
 		pv += float64(f.PV) / changeFits
-		oldest = min(oldest, float64(f.T0))
+		oldest, least = min(oldest, float64(f.T0)), min(least, f.R2)
 	}
 	what := uint8(0)
 	kn, tn := num.Median(ks[:]), num.Median(ts[:])
-	if b.DevK.N >= changeOld && w.moved(dk[:], &b.DevK) && !w.paced(kn/b.BaseK.Value()) && s.Sched.knows(pv) && !(s.Sched.is() && int(s.Sched.Bank) != k) && !w.contradicted(k, oldest) {
+	if b.DevK.N >= changeOld && w.moved(dk[:], &b.DevK) && !paced(kn/b.BaseK.Value(), s.Tune.OPMean/s.Tune.OPUsual) && s.Sched.knows(pv) && !(s.Sched.is() && int(s.Sched.Bank) != k) && !w.contradicted(k, oldest, 1, b.BaseK.Value(), kn) {
 		what |= 1
 	}
 	// The scale must see the reset: not far above the filter.
-	if b.DevT.N >= changeOld && tn < 20*fitTh*w.levelS(2*k) && w.moved(dt[:], &b.DevT) {
+	if least > changeR2 && b.DevT.N >= changeOld && tn < 20*fitTh*w.levelS(2*k) && w.moved(dt[:], &b.DevT) && !w.contradicted(k, oldest, 2, b.BaseT.Value(), tn) {
 		what |= 2
+	}
+	// Where only gain over reset stays as it was, noise or delay between e and OP that the law
+	// does not know may have changed: they lower the gain read and leave the integral.
+	lk, lt := math.Log(kn/b.BaseK.Value()), math.Log(tn/b.BaseT.Value())
+	if what == 1 && math.Abs(lk-lt) < math.Abs(lt) {
+		what = 0
 	}
 	c := &s.Change
 	if c.Maybe > 0 && int(c.MaybeOf) == k && what&c.Maybe == 0 {
@@ -83,10 +86,19 @@ func (w *Watch) tuneCheck(k int) {
 	if int(c.MaybeOf) == k {
 		oldest = float64(c.MaybeAt)
 	}
+	if !w.changeLasts(oldest, tn) {
+		return
+	}
+	w.tellChange(k, oldest, what, [2]float64{b.BaseK.Value(), kn}, [2]float64{b.BaseT.Value(), tn})
+	b.BaseK, b.BaseT = num.Quantile{V: float32(kn), N: 6}, num.Quantile{V: float32(max(tn, 1e-3)), N: 6}
+}
+
+// changeLasts: what is read since a time, s, is no passing thing. reset is the newest, s.
+func (w *Watch) changeLasts(since, reset float64) bool {
 	// A set point ramped inside the controller looks like another tuning: two
 	// set-point changes, or none, must lie in the span.
-	if s.Motion.SPStep > oldest && s.Motion.SPPrevStep < oldest {
-		return
+	if m := &w.s.Motion; m.SPStep > since && m.SPPrevStep < since {
+		return false
 	}
 	// It must outlast one disturbance, whose length is guessed to be under half a day before
 	// some were seen.
@@ -94,26 +106,30 @@ func (w *Watch) tuneCheck(k int) {
 	if lasts == 0 {
 		lasts = changeShownS
 	}
-	if w.in.t-oldest < max(600, min(3*tn, 4*3600), lasts) {
-		return
-	}
-	*c = tuneChange{On: true, At: oldest, Seen: w.in.t, GainWas: b.BaseK.V, GainNow: float32(kn), ResetWas: b.BaseT.V, ResetNow: float32(tn),
-		What: what, TagGain: c.TagGain, TagReset: c.TagReset}
+	return w.in.t-since >= max(600, min(3*reset, 4*3600), lasts)
+}
+
+// tellChange notes a change that began at a time, s. From here on the new tuning is the
+// usual one; all histories but that of bank keep (-1: none) begin anew.
+func (w *Watch) tellChange(keep int, at float64, what uint8, gain, reset [2]float64) {
+	s := &w.s
+	c := &s.Change
+	*c = tuneChange{On: true, At: at, Seen: w.in.t, GainWas: float32(gain[0]), GainNow: float32(gain[1]),
+		ResetWas: float32(reset[0]), ResetNow: float32(reset[1]), What: what, TagGain: c.TagGain, TagReset: c.TagReset}
 	if w.madeSlower(w.in.t) {
 		s.Recov.Hold = 12 // the recoveries to come are compared with those before
 	}
-	// From here on the new tuning is the usual one; the other scales begin anew.
-	s.Sched, c.Maybe = schedule{}, 0
+	s.Sched, s.Quiet = schedule{}, quietGain{}
 	for j := range s.Fits {
-		if o := &s.Fits[j]; j != k {
+		if o := &s.Fits[j]; j != keep {
 			o.Count, o.BaseK, o.BaseT = 0, num.Quantile{}, num.Quantile{}
 		}
 	}
-	b.BaseK, b.BaseT = num.Quantile{V: float32(kn), N: 6}, num.Quantile{V: float32(max(tn, 1e-3)), N: 6}
 }
 
 // moved: the newest values, ln over the usual one, agree among themselves and all lie on
-// one side of it, farther than its values stray (four running beyond the 80 % quantile of
+// one side of it, farther than its values stray; where they moved far they may stray more
+// among themselves, by half of that, and still be as plain by their t (four running beyond the 80 % quantile of
 // the deviations come by chance once in 10,000).
 func (w *Watch) moved(d []float64, dev *num.Quantile) bool {
 	lo, hi := math.Inf(1), math.Inf(-1)
@@ -124,25 +140,33 @@ func (w *Watch) moved(d []float64, dev *num.Quantile) bool {
 		lo, hi = min(lo, v), max(hi, v)
 	}
 	least, most := min(math.Abs(lo), math.Abs(hi)), max(math.Abs(lo), math.Abs(hi))
-	return lo*hi > 0 && hi-lo < math.Log(changeSpread) && least > 1.2*dev.Value() &&
+	return lo*hi > 0 && hi-lo < max(math.Log(changeSpread), (least+most)/4) && least > 1.2*dev.Value() &&
 		(least+most)/2 > max(math.Log(changeRatio), 1.8*dev.Value())*w.strict
 }
 
-// paced: the mean of OP went the way of the gain, as where OP is the controller's trim times
+// paced: the mean of OP went the way of the gain, by a factor r, as where OP is the controller's trim times
 // a flow that no tag tells: the law is as it was.
-func (w *Watch) paced(ratio float64) bool {
-	r := w.s.Tune.OPMean / w.s.Tune.OPUsual
-	return r > 0 && (r > changeNot || r < 1/changeNot) && near(ratio, r)
+func paced(ratio, r float64) bool {
+	return r > 0 && (r > changeNot || r < 1/changeNot) && within(ratio, r, changeSpread)
 }
 
 // contradicted: another scale, in a block that began after the first of the new fits,
-// reads the gain as it was. A gain that changed does so at all scales; what moves OP
-// beside the law (a load that paces it, an operator) shows at one.
-func (w *Watch) contradicted(k int, since float64) bool {
+// reads gain (what 1) or reset (2) as it was. A tuning that changed does so at all scales;
+// what moves OP beside the law (a load that paces it, an operator) shows at one. A scale
+// whose usual value is nearer to now than to was has begun after the change.
+func (w *Watch) contradicted(k int, since float64, what uint8, was, now float64) bool {
 	for j := range w.s.Fits {
 		b := &w.s.Fits[j]
 		f := &b.Last
-		if j != k && b.BaseK.N >= 4 && f.R2 > changeR2 && f.X > fitX && float64(f.T0) >= since && math.Abs(w.strays(j, f)) < math.Log(changeNot) {
+		if j == k || b.BaseK.N < 4 || f.R2 < changeR2 || f.X < fitX || float64(f.T0) < since {
+			continue
+		}
+		off, usual := w.strays(j, f), b.BaseK.Value()
+		if what == 2 {
+			usual = b.BaseT.Value()
+			off = math.Log(float64(f.Ti) / usual)
+		}
+		if math.Abs(off) < math.Log(changeNot) && math.Abs(math.Log(usual/was)) < math.Abs(math.Log(usual/now)) {
 			return true
 		}
 	}

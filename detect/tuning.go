@@ -37,6 +37,8 @@ const (
 	fitWarm   = 2 * fitTh  // samples after the filters were set, for what of OP is late
 	fitBlock  = 10 * fitTh // samples at least in a block
 	fitBlockX = 60 * fitTh // samples after which a block without excitation is dropped
+	lawVotes  = 8
+	fitSharp  = 0.25 // standard error, of the value: as near as readings are taken to agree
 )
 
 // A lag is taken where it removes a fifth of the residual variance (methods section
@@ -48,8 +50,12 @@ const (
 	lagVotes = 4
 )
 
-// leastOP is the least movement of OP, % rms, from which a tuning is read.
-const leastOP = 0.02
+// leastOP and leastE are the least movements of OP and of e, % rms, from which a tuning is
+// read. Of an e that stands (a frozen PV) only rounding is left, and any gain comes out.
+const (
+	leastOP = 0.02
+	leastE  = 0.001
+)
 
 // fit is one estimate of the tuning in service.
 type fit struct {
@@ -81,10 +87,11 @@ type fitBank struct {
 	Start        float32 // s, of the block
 	PVSum        float32 // %, of the block
 	Lag          float32 // s, of the last good block; 0 none
-	Warm         uint32  // samples since the restart
+	Warm         uint16  // samples since the restart, up to fitWarm
 	N            uint16  // samples in the block
 	Run          int8    // excited blocks in a row that the law explains; negative: that it does not
 	ByLag        int8    // good blocks that took the lag less those that did not, -lagVotes to lagVotes
+	ByLaw        int8    // excited blocks that the law explains less those that it does not, -lawVotes to lawVotes
 	Last         fit
 	Ring         [fitRing]fit
 	Count        uint32       // good fits ever
@@ -123,7 +130,7 @@ func (w *Watch) stepFit(k, level int, e, si, op float64) {
 		b.Warm = 1
 		return
 	}
-	b.Warm++
+	b.Warm = min(b.Warm+1, uint16(fitWarm))
 	was := float64(b.OP[1] - b.OP[2])
 	o := [3]float64{pass(&b.E, e), 0, pass(&b.OP, op)}
 	b.S[0] += fitAL * (si - b.S[0])
@@ -145,28 +152,34 @@ func (w *Watch) stepFit(k, level int, e, si, op float64) {
 		return
 	}
 	r, lag, better := w.solveFit(k)
-	if !(r.ok() && r.X > fitX*1.25) && b.N < fitBlockX {
+	excited := r.X > fitX*1.25
+	sharp := lag > 0 || b.sharp(&r)
+	if !(r.ok() && excited && sharp) && b.N < fitBlockX {
 		return
 	}
-	if r.X > fitX*1.25 {
-		good := float32(0.01)
+	if excited {
+		good, vote := float32(0.01), int8(-1)
 		if r.R2 > 0.95 {
-			good = 1
+			good, vote = 1, 1
 		}
+		b.ByLaw = max(-lawVotes, min(b.ByLaw+vote, lawVotes))
 		if t := &w.s.Tune; t.Law == 0 {
 			t.Law = good
 		} else {
 			t.Law += (good - t.Law) / 8
 		}
 	}
-	if r.ok() && r.X > fitX*1.25 {
+	if r.ok() && excited && sharp {
 		b.Run = max(b.Run, 0)
 		b.Run = min(b.Run+1, 100)
 		w.keepFit(k, r, lag, better)
 	} else if r.R2 > fitR2 {
 		b.Last = r
-	} else if r.X > fitX*1.25 {
+	} else if excited {
 		b.Run = max(min(b.Run, 0)-1, -fitBad)
+	}
+	if !excited {
+		w.stepQuiet(k, &r)
 	}
 	b.clear(w.in.t)
 }
@@ -232,9 +245,9 @@ func (w *Watch) keepFit(k int, r fit, lag float64, better bool) {
 // third regressor where it was taken; better says that the block is for it.
 func (w *Watch) solveFit(k int) (r fit, lag float64, better bool) {
 	b := &w.s.Fits[k]
-	// OP that hardly moves (held, or one step of its resolution) says nothing.
+	// OP that hardly moves (held, or one step of its resolution) says nothing, nor e.
 	kc, ki, rss, ok := b.Sums.Two()
-	if !ok || b.N < 20 || b.Sums.YY/float64(b.N) < leastOP*leastOP {
+	if n := float64(b.N); !ok || b.N < 20 || b.Sums.YY < n*leastOP*leastOP || b.Sums.A00 < n*leastE*leastE {
 		return
 	}
 	h := w.levelS(2 * k)
@@ -255,10 +268,40 @@ func (w *Watch) solveFit(k int) (r fit, lag float64, better bool) {
 		better = better && l <= T
 	}
 	r.Kc, r.Ti, r.R2 = float32(kc), float32(kc/ki), float32(1-rss/b.Sums.YY)
-	if math.Abs(kc/ki) > noReset*fitScale*h {
+	switch {
+	case math.Abs(kc/ki) > noReset*fitScale*h:
 		r.Ti = noTi
+	case kc*ki < 0:
+		if g, i := b.errors(kc, ki, rss); max(g, i) < 1./3 {
+			return fit{X: r.X}, 0, false // gain against reset: no such law, whatever R2 is
+		}
 	}
 	return
+}
+
+// errors are the standard errors of gain and integral, each a part of it, by the least
+// squares; a quarter of the rows are taken for independent.
+func (b *fitBank) errors(kc, ki, rss float64) (gain, integral float64) {
+	m := &b.Sums
+	s2 := rss / (float64(b.N) / 4)
+	return math.Sqrt(s2/(m.A00-m.A01*m.A01/m.A11)) / math.Abs(kc), math.Sqrt(s2/(m.A11-m.A01*m.A01/m.A00)) / math.Abs(ki)
+}
+
+// sharp: gain and reset of a fit of the running block are good to fitSharp. A gain that
+// moves OP by less than its resolution, or the integral of noise that was not logged, leaves
+// R2 high, since the other part moves OP.
+func (b *fitBank) sharp(r *fit) bool {
+	kc := float64(r.Kc)
+	gain, integral := b.errors(kc, kc/float64(r.Ti), (1-float64(r.R2))*b.Sums.YY)
+	return gain < fitSharp && (r.Ti == noTi || integral < fitSharp)
+}
+
+// newest is the newest sharp fit; the last of all before there is one.
+func (b *fitBank) newest() *fit {
+	if b.Count == 0 {
+		return &b.Last
+	}
+	return &b.Ring[(b.Count-1)%fitRing]
 }
 
 // tuning gives the best present estimate: newest valid fits at or after since;
@@ -268,7 +311,10 @@ func (w *Watch) tuning(since, period float64) (kc, ti float64, ok bool) {
 	stands := w.standsSince()
 	for k := range w.s.Fits {
 		b := &w.s.Fits[k]
-		r := b.Last
+		r := *b.newest()
+		if period > 0 {
+			r = b.Last // what a cycle shows of the law need not be sharp
+		}
 		if period > 0 && float64(b.N) > 3*fitTh {
 			if q, _, _ := w.solveFit(k); q.ok() {
 				r = q
@@ -292,7 +338,7 @@ func (w *Watch) tuning(since, period float64) (kc, ti float64, ok bool) {
 func (w *Watch) lag() float64 {
 	kc, _, ok := w.served()
 	for k := range w.s.Fits {
-		if b := &w.s.Fits[k]; ok && float64(b.Last.Kc) == kc {
+		if b := &w.s.Fits[k]; ok && float64(b.newest().Kc) == kc {
 			return float64(b.Lag)
 		}
 	}

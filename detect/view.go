@@ -125,7 +125,7 @@ func (w *Watch) tuningRange() (k, k0, k1, t, t0, t1 float64) {
 	}
 	for i := range w.s.Fits {
 		b := &w.s.Fits[i]
-		if float64(b.Last.Kc) != kc {
+		if float64(b.newest().Kc) != kc && float64(b.Last.Kc) != kc {
 			continue
 		}
 		// Five per cent for what the interval of the fit does not cover.

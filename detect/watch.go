@@ -56,6 +56,7 @@ type state struct {
 	Fits    [fitBanks]fitBank
 	Tune    tuneState
 	Sched   schedule
+	Quiet   quietGain
 	Track   track
 	Clock   clock
 	Osc     oscState

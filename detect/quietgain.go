@@ -1,0 +1,96 @@
+package detect
+
+import (
+	"math"
+
+	"midwatch/detect/num"
+)
+
+// A tight loop shows its integral too seldom for a history of whole fits, least of all
+// after its gain was raised. The gain alone is right at any excitation (methods section
+// 9: 1.2 % in the median, 6 % in nine of ten), so that blocks without excitation have a
+// history of their own, of the fastest scale at which the law is plain in them.
+
+// quietGain is that history and the run of newest blocks that left it.
+type quietGain struct {
+	Base         num.Quantile // mean gain, %/%
+	Dev          num.Quantile // 80 % quantile of the deviations from it, ln
+	PVLow, PVTop float32      // %, span of PV in it
+	OP           float32      // %, mean of OP in it
+	Low, High    float32      // %/%, gains of the run after its first block
+	Since        float32      // s, begin of its first block
+	Run          int8         // blocks in it, negative below the usual
+	Bank         uint8
+}
+
+// quietR2 is the least R2 of a quiet block. The true gain lies between the regression of
+// OP on e and the reverse one, a factor R2 apart (Frisch 1934, Statistical confluence
+// analysis by means of complete regression systems): two readings that differ by more than
+// 1/quietR2 are not of one gain, however the noise of PV and of OP changed.
+const quietR2 = 0.8
+
+// quietLost is how many blocks running leave the history before it is given up.
+const quietLost = 3 * changeFits
+
+// stepQuiet takes a block of bank k without excitation.
+func (w *Watch) stepQuiet(k int, r *fit) {
+	s := &w.s
+	q := &s.Quiet
+	if r.R2 < quietR2 || int(q.Bank) < k && q.Base.N > 0 {
+		return
+	}
+	gain, pv := math.Abs(float64(r.Kc)), r.PV
+	// Another operating point may have another gain by design.
+	beside := schedStep + (q.PVTop-q.PVLow)/2
+	if known := q.Dev.N >= changeOld; int(q.Bank) != k || q.Base.N == 0 || known && (pv < q.PVLow-beside || pv > q.PVTop+beside) {
+		*q = quietGain{PVLow: pv, PVTop: pv, Bank: uint8(k)}
+	}
+	d := math.Log(gain / q.Base.Value())
+	if q.Dev.N < changeOld || math.Abs(d) < max(1.2*q.Dev.Value(), math.Log(changeNot)) {
+		if q.Base.N > 2 {
+			q.Dev.Add(math.Abs(d), 0.8, 0.05, 0.01)
+		}
+		q.Base.Mean(gain, 0.02, 1e-6)
+		q.OP += (float32(s.Tune.OPMean) - q.OP) / float32(min(q.Base.N, 50))
+		q.PVLow, q.PVTop, q.Run = min(q.PVLow, pv), max(q.PVTop, pv), 0
+		return
+	}
+	side := int8(1)
+	if d < 0 {
+		side = -1
+	}
+	if q.Run*side <= 0 {
+		q.Run, q.Since = 0, r.T0
+	}
+	q.Run = max(-math.MaxInt8, min(q.Run, math.MaxInt8-1)+side)
+	n := int(q.Run * side)
+	if n <= 2 { // the first block may straddle the change: it dates it and no more
+		q.Low, q.High = float32(gain), float32(gain)
+	}
+	q.Low, q.High = min(q.Low, float32(gain)), max(q.High, float32(gain))
+	if n <= changeFits {
+		return
+	}
+	switch now := math.Sqrt(float64(q.Low) * float64(q.High)); {
+	case !w.quietMoved(now):
+		if n >= quietLost {
+			*q = quietGain{}
+		}
+	case w.changeLasts(float64(q.Since), 0):
+		w.tellChange(-1, float64(q.Since), 1, [2]float64{q.Base.Value(), now}, [2]float64{})
+	}
+}
+
+// quietMoved: the run of quiet blocks is a change of the gain to now, by the tests that
+// whole fits must pass.
+func (w *Watch) quietMoved(now float64) bool {
+	s := &w.s
+	q := &s.Quiet
+	if s.Tune.Law > 0 && s.Tune.Law < changeLaw || s.Sched.is() || s.Osc.Sus || s.Osc.Grow || s.Change.On && w.in.t-s.Change.Seen < 3600 {
+		return false
+	}
+	base := q.Base.Value()
+	ends := [2]float64{math.Log(float64(q.Low) / base), math.Log(float64(q.High) / base)}
+	return w.moved(ends[:], &q.Dev) && !paced(now/base, s.Tune.OPMean/float64(q.OP)) &&
+		!w.contradicted(-1, float64(q.Since), 1, base, now)
+}
