@@ -30,6 +30,9 @@ func (w *Watch) stepCascade() {
 	}
 	if in.hasOP {
 		s.Tune.OPMean += (in.op - s.Tune.OPMean) / 400
+		if s.Tune.OPUsual == 0 {
+			s.Tune.OPUsual = in.op
+		}
 		s.Tune.OPUsual += (in.op - s.Tune.OPUsual) * ofWeek(in)
 	}
 	// Trapezoid over the slot; the common constant dies in the band pass.

@@ -305,7 +305,7 @@ func (w *Watch) beforeSentence(k int, f *Finding) string {
 func (w *Watch) nothingBefore(k int, f *Finding) string {
 	s := &w.s
 	onset := float64(f.Since-s.Grid.T0) / 1000
-	if k >= kFrozen || onset < markBeforeS {
+	if k >= kFrozen || onset < markBeforeS || s.Motion.SPBusy > 0.03 { // a program that never rests: its changes are one mark
 		return ""
 	}
 	for kind := range s.Marks {

@@ -4,6 +4,7 @@ import (
 	"math"
 
 	"midwatch/collector"
+	"midwatch/configs"
 )
 
 func (m *motion) first() {
@@ -216,8 +217,10 @@ func (w *Watch) inferredManual() bool {
 	if still < max(300, 60*in.dt) || m.Frozen || w.atOwnLimit() {
 		return false
 	}
-	// Where the law would have moved OP by far, how long OP stood before does not matter.
-	m.Manual = w.deafOP(1) && (still >= 5*min(m.OPRunMax, 6*3600) || w.deafOP(3))
+	// Where the law would have moved OP by far, how long OP stood before does not matter;
+	// save for a gap in the law, in which OP rests by design.
+	far := w.loop.Duty != configs.GapDuty && w.deafOP(3)
+	m.Manual = w.deafOP(1) && (far || still >= 5*min(m.OPRunMax, 6*3600))
 	return m.Manual
 }
 

@@ -244,8 +244,13 @@ func (w *Watch) slowCause(by uint8, durs []float64) {
 // madeSlower: a change of the tuning to less gain or a longer reset, at or before t
 // and within a month.
 func (w *Watch) madeSlower(t float64) bool {
+	return w.slowed() && w.s.Change.At <= t+w.s.Recov.Usual[0].Value()
+}
+
+// slowed: a change of the last month made the law slower.
+func (w *Watch) slowed() bool {
 	c := &w.s.Change
-	if c.Seen == 0 || c.At > t+w.s.Recov.Usual[0].Value() || w.in.t-c.Seen > 30*86400 {
+	if c.Seen == 0 || w.in.t-c.Seen > 30*86400 {
 		return false
 	}
 	return c.What&1 != 0 && c.GainNow < c.GainWas/1.5 || c.What&2 != 0 && c.ResetNow > c.ResetWas*1.5

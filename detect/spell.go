@@ -44,6 +44,12 @@ const (
 	spellOPMoves = 0.5  // %, OP moved by hand: begin again
 )
 
+// found is what earlier spells showed, without the one that runs: it counts slots, which
+// must follow each other.
+func (p spell) found() spell {
+	return spell{At: p.At, OfP: p.OfP, WentOn: p.WentOn, Died: p.Died}
+}
+
 // stepSpell is called in every slot.
 func (w *Watch) stepSpell(flags collector.Flags) {
 	s, in := &w.s, &w.in

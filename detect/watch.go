@@ -228,7 +228,7 @@ func (w *Watch) relearn(k int) bool {
 	// Filters and rings count in slots: they begin anew, the noise level too.
 	keep := w.s
 	w.s = state{Through: keep.Through, Grid: grid{T0: keep.Grid.T0, Begun: true, At: keep.Grid.At, LastFrame: keep.Grid.LastFrame},
-		Scale: keep.Scale, Last: keep.Last, Misc: keep.Misc, Change: keep.Change, Marks: keep.Marks, Spell: spell{At: keep.Spell.At, OfP: keep.Spell.OfP, WentOn: keep.Spell.WentOn, Died: keep.Spell.Died}, Open: keep.Open, OpenN: keep.OpenN, Slot: keep.Slot}
+		Scale: keep.Scale, Last: keep.Last, Misc: keep.Misc, Change: keep.Change, Marks: keep.Marks, Spell: keep.Spell.found(), Open: keep.Open, OpenN: keep.OpenN, Slot: keep.Slot}
 	w.s.Motion.first()
 	return true
 }
@@ -319,6 +319,7 @@ func (w *Watch) restart(t float64) {
 	}
 	s.Int = 0
 	s.Track.reset()
+	s.Spell = s.Spell.found()
 	s.Recov.abandon()
 	s.Off.restart()
 	s.Sat.restart(t)
