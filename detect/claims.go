@@ -27,8 +27,11 @@ func claimSustained(w *Watch) claim {
 		// A program or an outer loop moves the set point. News of this loop is only an
 		// error larger than the set point's own swing: no following at all would do better.
 		b := &w.s.Cycles[o.Bank]
-		u := b.Usual.Value()
-		on = w.usualKnown(b) && o.Amp > max(4*u, 1) && (o.Amp > 10*u || 2*o.Amp > 1.2*float64(w.s.Track.SPSwing))
+		u, amp := b.Usual.Value(), o.Amp
+		if w.s.Open[kSustained].On {
+			amp *= 2 // what was said stands while the cycle breathes
+		}
+		on = w.usualKnown(b) && amp > max(4*u, 1) && (amp > 10*u || 2*amp > 1.2*float64(w.s.Track.SPSwing))
 	}
 	c := o.Cause
 	if c == 0 {

@@ -12,6 +12,7 @@ type miscState struct {
 	// Stale data.
 	GoodAt float64 // s, last usable frame
 	BadN   uint32  // unusable frames running
+	BadFor float32 // s, of the last short spell of them, since the last usable one
 	Stale  bool
 	// Frozen PV.
 	OPAtStill float64 // %, OP when PV stopped moving
@@ -37,7 +38,16 @@ type miscState struct {
 // detectors only slots.
 func (w *Watch) stepStale(f *collector.Frame, t float64, bad bool) {
 	x := &w.s.Misc
+	limit := w.loop.SilenceS
+	if !(limit > 0) {
+		limit = max(300, 20*w.s.Grid.DT)
+	}
 	if !bad {
+		// Values that come a little later than the limit, time after time, are a slow source
+		// and no news each time.
+		if d := t - x.GoodAt; x.BadN > 0 && d < max(2*limit, 7200) {
+			x.BadFor = float32(d)
+		}
 		x.GoodAt, x.BadN = t, 0
 		if x.Stale {
 			x.Stale = false
@@ -46,12 +56,8 @@ func (w *Watch) stepStale(f *collector.Frame, t float64, bad bool) {
 		return
 	}
 	x.BadN++
-	limit := w.loop.SilenceS
-	if !(limit > 0) {
-		limit = max(300, 20*w.s.Grid.DT)
-	}
 	silent := f.Flags&collector.Gap != 0 && f.PV != f.PV
-	if !x.Stale && (silent || t-x.GoodAt > limit && x.BadN > 3) {
+	if !x.Stale && t-x.GoodAt > 1.5*float64(x.BadFor) && (silent || t-x.GoodAt > limit && x.BadN > 3) {
 		x.Stale = true
 		w.verdictAt(t)
 	}
@@ -63,7 +69,7 @@ func stepFrozen(w *Watch) {
 	s, in := &w.s, &w.in
 	x, m := &s.Misc, &s.Motion
 	if m.PVSame != x.StillFrom {
-		*x = miscState{GoodAt: x.GoodAt, BadN: x.BadN, Stale: x.Stale, OPAtStill: in.op, OPLast: float32(in.trim), StillFrom: m.PVSame,
+		*x = miscState{GoodAt: x.GoodAt, BadN: x.BadN, BadFor: x.BadFor, Stale: x.Stale, OPAtStill: in.op, OPLast: float32(in.trim), StillFrom: m.PVSame,
 			EndSince: x.EndSince, EndHigh: x.EndHigh, InsideN: x.InsideN, OutsideN: x.OutsideN, Pegged: x.Pegged,
 			OffNormal: x.OffNormal, OffNormalSince: x.OffNormalSince}
 		return

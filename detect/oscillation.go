@@ -55,8 +55,23 @@ var growthRules = [...]struct {
 const growConfirm = 3
 
 // fewSlots is a period, slots, near what the bank makes of noise alone: below it a cycle
-// must be more regular than filtered noise ever is.
-const fewSlots = 12
+// must be more regular than filtered noise is over a whole ring, and stay so.
+const (
+	fewSlots  = 12
+	fastRaise = 7.0  // regularity over the ring
+	fastOwn   = 10.0 // of the usual size, which such a cycle may have taught from the start
+	fastKeeps = 3.0  // over eight half-cycles
+)
+
+// plainFast is asked of a cycle of few samples.
+func (w *Watch) plainFast(level int, b *cycleBank) bool {
+	q, ok := b.stat(level, ringLen)
+	least := fastRaise
+	if w.usualKnown(b) && q.amp < 2*b.Usual.Value() {
+		least = fastOwn
+	}
+	return ok && q.regular > least*w.strict
+}
 
 // shiftBeat is the period, s, from which the beat of batches and shifts is met.
 const shiftBeat = 4 * 3600
@@ -305,7 +320,10 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 		n = 11
 	}
 	q, ok := b.stat(level, n)
-	if ok && s.Noise.known() && (slots > fewSlots || q.regular > 7*w.strict) {
+	if slots <= fewSlots && !w.plainFast(level, b) {
+		ok = false
+	}
+	if ok && s.Noise.known() {
 		// Batches and shifts have a slow beat of sorts, which a loop not watched for long
 		// may always have had.
 		plain := known || period < shiftBeat
@@ -404,7 +422,8 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 	if o.Grow {
 		floor = max(1.6*s.Noise.sigma(), 0.12)
 	}
-	if st.amp < 0.5*floor || w.usualKnown(b) && st.amp < 1.2*b.Usual.Value() {
+	fast := st.period*float64(int(1)<<level) <= fewSlots && st.regular < fastKeeps // of noise one bank makes as much
+	if st.amp < 0.5*floor || fast || w.usualKnown(b) && st.amp < 1.2*b.Usual.Value() {
 		o.Bad++
 	} else {
 		o.Bad = 0

@@ -1,0 +1,50 @@
+package detect_test
+
+import (
+	"testing"
+
+	"midwatch/collector"
+	"midwatch/configs"
+	"midwatch/detect"
+)
+
+// A value every 31 min is a slow source: that it is later than half an hour is said once
+// and not each time; that it stays away for half a day is said.
+func TestSlowSourceIsToldOnce(t *testing.T) {
+	l := configs.NewLoop("PIC-482")
+	l.PVLow, l.PVHigh, l.SilenceS = 0, 10, 1800
+	nan := collector.NaN32
+	var fs []collector.Frame
+	at := func(s, since int) { // seconds, of them since the last value
+		f := collector.Frame{Time: int64(s) * 1000, PV: 5, SP: 5, OP: 50, Feedforward: nan, Position: nan, Mode: collector.Auto}
+		switch {
+		case since >= 1800:
+			f.PV, f.Flags = nan, collector.Gap
+		case since > 0:
+			f.Flags = collector.Held | collector.Unconfirmed
+		}
+		fs = append(fs, f)
+	}
+	const every = 1850
+	n := 0
+	for ; n < 100*every; n += 50 {
+		at(n, n%every)
+	}
+	said := func() (times int) {
+		for _, f := range replay(l, fs) {
+			if f.Kind == detect.StaleData && f.Event == detect.Raised {
+				times++
+			}
+		}
+		return
+	}
+	if k := said(); k > 1 {
+		t.Errorf("a slow source is told %d times", k)
+	}
+	for ; n < 125*every; n += 50 {
+		at(n, every)
+	}
+	if k := said(); k == 0 || k > 2 {
+		t.Errorf("half a day of silence: told %d times", k)
+	}
+}
