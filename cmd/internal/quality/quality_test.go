@@ -17,10 +17,10 @@ import (
 const (
 	shortLoops          = 2   // scenarios per family
 	shortDays           = 1.5 // of a healthy loop recorded at 10 s
-	maxMissedShare      = 0.15
-	maxWrongOfNamed     = 0.10
-	minNamedShare       = 0.75
-	maxFalsePerLoopYear = 12.0
+	maxMissedShare      = 0.10
+	maxWrongOfNamed     = 0.06
+	minNamedShare       = 0.80
+	maxFalsePerLoopYear = 6.0
 	maxGainErrorMedian  = 0.06
 	maxResetErrorMedian = 0.08
 	minReadShare        = 0.8
