@@ -25,6 +25,11 @@ const (
 
 // countKept counts up at half-cycles that show such a swing, and down at others.
 func (w *Watch) countKept(level int, b *cycleBank) {
+	if p, _, ok := b.lengths(8); ok && fast(level, p) {
+		w.countFast(level, b)
+		return
+	}
+	b.Kept = min(b.Kept, keptRaise)
 	if b.N < keptHalves || !w.s.Noise.known() || !w.kept(level, b) {
 		b.Kept = max(b.Kept, 1) - 1
 		return

@@ -12,7 +12,8 @@ type miscState struct {
 	// Stale data.
 	GoodAt float64 // s, last usable frame
 	BadN   uint32  // unusable frames running
-	BadFor float32 // s, of the last short spell of them, since the last usable one
+	BadFor float32 // s, that values of a slow source are apart; 0 none is
+	BadWas float32 // s, of the last spell beyond the limit, since the usable one before
 	Stale  bool
 	// Frozen PV.
 	OPAtStill float64 // %, OP when PV stopped moving
@@ -43,10 +44,13 @@ func (w *Watch) stepStale(f *collector.Frame, t float64, bad bool) {
 		limit = max(300, 20*w.s.Grid.DT)
 	}
 	if !bad {
-		// Values that come a little later than the limit, time after time, are a slow source
-		// and no news each time.
-		if d := t - x.GoodAt; x.BadN > 0 && d < max(2*limit, 7200) {
-			x.BadFor = float32(d)
+		// Values that come later than the limit by as much time after time are of a slow
+		// source and no news each time.
+		if d := float32(t - x.GoodAt); x.BadN > 0 && float64(d) > limit {
+			if d < 1.5*x.BadWas && x.BadWas < 1.5*d {
+				x.BadFor = max(d, x.BadWas)
+			}
+			x.BadWas = d
 		}
 		x.GoodAt, x.BadN = t, 0
 		if x.Stale {
@@ -69,7 +73,7 @@ func stepFrozen(w *Watch) {
 	s, in := &w.s, &w.in
 	x, m := &s.Misc, &s.Motion
 	if m.PVSame != x.StillFrom {
-		*x = miscState{GoodAt: x.GoodAt, BadN: x.BadN, BadFor: x.BadFor, Stale: x.Stale, OPAtStill: in.op, OPLast: float32(in.trim), StillFrom: m.PVSame,
+		*x = miscState{GoodAt: x.GoodAt, BadN: x.BadN, BadFor: x.BadFor, BadWas: x.BadWas, Stale: x.Stale, OPAtStill: in.op, OPLast: float32(in.trim), StillFrom: m.PVSame,
 			EndSince: x.EndSince, EndHigh: x.EndHigh, InsideN: x.InsideN, OutsideN: x.OutsideN, Pegged: x.Pegged,
 			OffNormal: x.OffNormal, OffNormalSince: x.OffNormalSince}
 		return

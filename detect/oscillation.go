@@ -54,25 +54,6 @@ var growthRules = [...]struct {
 
 const growConfirm = 3
 
-// fewSlots is a period, slots, near what the bank makes of noise alone: below it a cycle
-// must be more regular than filtered noise is over a whole ring, and stay so.
-const (
-	fewSlots  = 12
-	fastRaise = 7.0  // regularity over the ring
-	fastOwn   = 10.0 // of the usual size, which such a cycle may have taught from the start
-	fastKeeps = 3.0  // over eight half-cycles
-)
-
-// plainFast is asked of a cycle of few samples.
-func (w *Watch) plainFast(level int, b *cycleBank) bool {
-	q, ok := b.stat(level, ringLen)
-	least := fastRaise
-	if w.usualKnown(b) && q.amp < 2*b.Usual.Value() {
-		least = fastOwn
-	}
-	return ok && q.regular > least*w.strict
-}
-
 // shiftBeat is the period, s, from which the beat of batches and shifts is met.
 const shiftBeat = 4 * 3600
 
@@ -155,6 +136,10 @@ func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 		least = max(3*sigma, 1)
 	}
 	grow := false
+	if fast(level, st.period) && b.Kept < fastGrow {
+		b.Conf = 0
+		return
+	}
 	if o.Sus && (o.Evals > 24 && tip < 1.8*o.AmpLo || o.Sticking || tip < 1.5*float64(o.Grown)) || w.scheduled(b, st.period*w.levelS(level)) {
 		b.Conf = 0 // what has long been there, or stopped growing before, must really have grown
 		return
@@ -304,7 +289,7 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 	if w.scheduled(b, period) {
 		return
 	}
-	if b.Kept >= keptRaise {
+	if b.Kept >= keptRaise && !fast(level, st.period) {
 		o.Sus = true
 		w.beginOsc(level, b, keptHalves)
 		return
@@ -320,10 +305,7 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 		n = 11
 	}
 	q, ok := b.stat(level, n)
-	if slots <= fewSlots && !w.plainFast(level, b) {
-		ok = false
-	}
-	if ok && s.Noise.known() {
+	if ok && s.Noise.known() && !(fast(level, st.period) && b.Kept < fastHold) {
 		// Batches and shifts have a slow beat of sorts, which a loop not watched for long
 		// may always have had.
 		plain := known || period < shiftBeat
@@ -422,10 +404,12 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 	if o.Grow {
 		floor = max(1.6*s.Noise.sigma(), 0.12)
 	}
-	fast := st.period*float64(int(1)<<level) <= fewSlots && st.regular < fastKeeps // of noise one bank makes as much
-	if st.amp < 0.5*floor || fast || w.usualKnown(b) && st.amp < 1.2*b.Usual.Value() {
+	switch few := fast(level, st.period); {
+	case st.amp < 0.5*floor || few && st.regular < fastKeeps || w.usualKnown(b) && st.amp < 1.2*b.Usual.Value():
 		o.Bad++
-	} else {
+	case few: // noise is as regular now and then, never most of the time
+		o.Bad = min(max(o.Bad, 1)-1, fastBad)
+	default:
 		o.Bad = 0
 	}
 	if o.away() {

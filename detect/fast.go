@@ -1,0 +1,33 @@
+package detect
+
+// A cycle of few samples has a period near that of what the first bank makes of noise
+// alone, and a lively loop makes a narrow band of its noise: for a while either is as
+// regular as a cycle. A cycle is what stays so. It costs little to wait: a hundred
+// half-cycles are a few hundred samples here.
+const (
+	fewSlots  = 12   // samples a period
+	fastRaise = 7.0  // regularity over the ring
+	fastOwn   = 10.0 // of the usual size, which such a cycle may have taught from the start
+	fastHold  = 80   // half-cycles for which it must hold
+	fastFails = 4    // of them that one without it takes back
+	fastGrow  = 12   // and for growth
+	fastKeeps = 4.0  // regularity over eight half-cycles that a live one keeps
+	fastBad   = 20   // half-cycles without it that count
+)
+
+// fast: the bank sees a cycle of few samples, period in samples of the level.
+func fast(level int, period float64) bool { return level == 0 && period <= fewSlots }
+
+// countFast counts half-cycles for which a cycle of few samples holds.
+func (w *Watch) countFast(level int, b *cycleBank) {
+	q, ok := b.stat(level, ringLen)
+	least := fastRaise
+	if w.usualKnown(b) && q.amp < 2*b.Usual.Value() {
+		least = fastOwn
+	}
+	if !ok || q.regular < least*w.strict {
+		b.Kept = max(b.Kept, fastFails) - fastFails
+		return
+	}
+	b.Kept = min(b.Kept+1, fastHold)
+}
