@@ -130,7 +130,27 @@ func (t *trend) tuningChanges(ts []trouble) {
 			}
 		}
 	}
+	t.changesBefore(ts)
 	slices.SortStableFunc(t.Changes, func(a, b change) int { return cmp.Compare(a.At, b.At) })
+}
+
+// sameChange is how far apart, ms, what is told of one change of the tuning may be: read
+// from the data its begin is vague.
+const sameChange = 30 * 60 * 1000
+
+// changesBefore puts in changes of the tuning that only the finding they led to tells.
+func (t *trend) changesBefore(ts []trouble) {
+	for i := range ts {
+		for _, b := range ts[i].Finding.Changed {
+			known := slices.ContainsFunc(t.Changes, func(c change) bool {
+				tuning := strings.HasPrefix(c.Word, "gain ") || strings.HasPrefix(c.Word, "reset ")
+				return tuning && c.At-b.At < sameChange && b.At-c.At < sameChange
+			})
+			if b.What == detect.ChangedTuning && b.At >= t.From && b.At < t.To && !known {
+				t.Changes = append(t.Changes, change{b.At, b.Text + " (found by the watch)"})
+			}
+		}
+	}
 }
 
 func orNaN(v float64) float64 {

@@ -7,6 +7,7 @@ import (
 
 	"midwatch/alert/page/api"
 	"midwatch/collector"
+	"midwatch/detect"
 )
 
 func TestTuningOverTime(t *testing.T) {
@@ -24,6 +25,24 @@ func TestTuningOverTime(t *testing.T) {
 	}
 	if _, body := got(t, p, "/loops/PIC-101"); !strings.Contains(body, "No change seen in 1 reading.") {
 		t.Error("a loop with one reading does not say so")
+	}
+}
+
+// A loop whose finding says that the tuning was changed before it does not also say that
+// no change was seen.
+func TestWhatChangedAgreesWithTheFinding(t *testing.T) {
+	const now = 50 * sameChange
+	led := trouble{}
+	led.Kind, led.Since = detect.GrowingOscillation, now
+	led.Finding.Changed = []detect.Change{{What: detect.ChangedTuning, At: now - 1000, Text: "reset time from about 4 min to 25 s"}, {What: detect.ChangedMode, At: now - 2000, Text: "mode"}}
+	tr := &trend{From: 0, To: now + 1}
+	tr.tuningChanges([]trouble{led, led})
+	if len(tr.Changes) != 1 || !strings.Contains(tr.Changes[0].Word, "25 s") {
+		t.Errorf("told: %v", tr.Changes)
+	}
+	tr = &trend{From: 0, To: now + 1, Changes: []change{{now - 60000, "reset 240 → 25 s"}}}
+	if tr.tuningChanges([]trouble{led}); len(tr.Changes) != 1 {
+		t.Errorf("told twice: %v", tr.Changes)
 	}
 }
 
