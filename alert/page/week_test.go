@@ -62,12 +62,13 @@ func TestPageOpenForAWeek(t *testing.T) {
 			warm := held(t, ctx)
 			run(v.rounds, 3*v.rounds)
 			after := held(t, ctx)
-			t.Logf("heap %.2f MB and %.2f MB after twice as much again; %d and %d nodes, %d and %d listeners", warm.heap/1e6, after.heap/1e6, warm.nodes, after.nodes, warm.listeners, after.listeners)
-			if after.heap > warm.heap*1.1+0.3e6 {
-				t.Errorf("the heap grew from %.2f to %.2f MB", warm.heap/1e6, after.heap/1e6)
+			// What a last answer brings while it is measured goes again; what leaks does not.
+			for end := time.Now().Add(20 * time.Second); after.beyond(warm) && time.Now().Before(end); {
+				after = held(t, ctx)
 			}
-			if after.nodes > warm.nodes+100 || after.listeners > warm.listeners+20 {
-				t.Errorf("nodes %d to %d, listeners %d to %d", warm.nodes, after.nodes, warm.listeners, after.listeners)
+			t.Logf("heap %.2f MB and %.2f MB after twice as much again; %d and %d nodes, %d and %d listeners", warm.heap/1e6, after.heap/1e6, warm.nodes, after.nodes, warm.listeners, after.listeners)
+			if after.beyond(warm) {
+				t.Error("what the browser holds grew")
 			}
 		})
 	}
@@ -76,6 +77,11 @@ func TestPageOpenForAWeek(t *testing.T) {
 type holding struct {
 	heap             float64 // bytes
 	nodes, listeners int64
+}
+
+// beyond: more is held than chance makes.
+func (x holding) beyond(warm holding) bool {
+	return x.heap > warm.heap*1.1+0.3e6 || x.nodes > warm.nodes+100 || x.listeners > warm.listeners+20
 }
 
 // held is what the browser holds of the page once all garbage is gone.
