@@ -213,18 +213,17 @@ func (w *Watch) tuningMoved(onset float64) (words string, at float64, same bool)
 	s := &w.s
 	// Readings at two scales of time differ by more than those of one: a fifth more than
 	// a change of the tuning asks for.
-	const differs, agrees = 1.2 * changeRatio, 1.25
+	const differs = 1.2 * changeRatio
 	gain, reset := w.tuningNow()
 	k0, t0, ok := w.usualTuning(onset - 2*s.Osc.P)
 	if !ok || !(gain > 0) || !(reset > 0) || !(k0 > 0) || !(t0 > 0) || t0 >= noTi {
 		return "", onset, false
 	}
-	rk, rt := math.Abs(math.Log(gain/k0)), math.Abs(math.Log(reset/t0))
 	var p []string
-	if rk > math.Log(differs) {
+	if !within(gain, k0, differs) {
 		p = append(p, "gain from about "+sig2(k0)+" to "+sig2(gain))
 	}
-	if rt > math.Log(differs) {
+	if !within(reset, t0, differs) {
 		p = append(p, "reset time from about "+duration(t0)+" to "+duration(reset))
 	}
 	at = onset
@@ -232,12 +231,12 @@ func (w *Watch) tuningMoved(onset float64) (words string, at float64, same bool)
 		b := &s.Fits[i]
 		for j := range min(int(b.Count), fitRing) {
 			f := &b.Ring[j]
-			if f.R2 > changeR2 && f.hasReset() && math.Abs(math.Log(math.Abs(float64(f.Kc))/gain)) < math.Log(agrees) && math.Abs(math.Log(float64(f.Ti)/reset)) < math.Log(agrees) {
+			if f.R2 > changeR2 && f.hasReset() && near(math.Abs(float64(f.Kc)), gain) && near(float64(f.Ti), reset) {
 				at = min(at, float64(f.T0))
 			}
 		}
 	}
-	return strings.Join(p, " and "), at, rk < math.Log(agrees) && rt < math.Log(agrees)
+	return strings.Join(p, " and "), at, near(gain, k0) && near(reset, t0)
 }
 
 // markWords says a mark; the text is empty where it is too small for a word.

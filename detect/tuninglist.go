@@ -81,14 +81,14 @@ func (w *Watch) tuningNote() string {
 	}
 	kc, ti, _ := w.served()
 	rk, rt := w.listRatio()
-	if rk > 0 && math.Abs(math.Log(rk)) > math.Log(differs) {
+	if rk > 0 && !within(rk, 1, differs) {
 		s := fmt.Sprintf("gain entered %s, the data say about %s", sig2(w.loop.GainPct), sig2(math.Abs(kc)))
 		if near(w.loop.GainPct*math.Abs(kc), 100) {
 			s += ": proportional band?"
 		}
 		add(s)
 	}
-	if rt > 0 && math.Abs(math.Log(rt)) > math.Log(differs) {
+	if rt > 0 && !within(rt, 1, differs) {
 		s := fmt.Sprintf("reset entered %s s, the data say about %s s", sig2(w.loop.IdealReset), sig2(ti))
 		if u := resetUnit(w.loop.IdealReset, ti); u != "" {
 			s += ": " + u + "?"

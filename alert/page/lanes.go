@@ -89,15 +89,7 @@ func laneOf(t *trend, lp *configs.Loop, from, to int64, sp bool) lane {
 
 func onlyPath(times []int64, c column, x, y scale) string {
 	d := &drawing{}
-	pen := byte('M')
-	for i, v := range c {
-		if v != v {
-			pen = 'M'
-			continue
-		}
-		d.f("%c%.0f %.1f", pen, x.at(float64(times[i])), y.at(float64(v)))
-		pen = 'L'
-	}
+	d.points(times, c, x, y, 0)
 	return d.String()
 }
 
@@ -172,12 +164,6 @@ func (p *Page) serveLanesCSV(w http.ResponseWriter, r *http.Request) {
 		p.answerTogether(w, r, err)
 		return
 	}
-	done, err := p.read(r.Context())
-	if err != nil {
-		p.answer(w, r, err)
-		return
-	}
-	defer done()
 	var in []*configs.Loop
 	for _, name := range t.loops[:min(len(t.loops), maxLanes)] {
 		if s := l.loop(name); s != nil {
@@ -189,6 +175,12 @@ func (p *Page) serveLanesCSV(w http.ResponseWriter, r *http.Request) {
 
 // writeFrames answers with the frames of loops in a span as trend CSV.
 func (p *Page) writeFrames(w http.ResponseWriter, r *http.Request, file string, loops []*configs.Loop, span wanted) {
+	done, err := p.read(r.Context())
+	if err != nil {
+		p.answer(w, r, err)
+		return
+	}
+	defer done()
 	w.Header().Set("Content-Type", "text/csv; charset=utf-8")
 	w.Header().Set("Content-Disposition", `attachment; filename="`+file+`"`)
 	rc := http.NewResponseController(w)

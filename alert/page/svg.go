@@ -74,16 +74,21 @@ func bounds(least float64, cols ...column) (low, high float64) {
 // path of a column over time, broken where there is no value.
 func (d *drawing) path(times []int64, c column, x, y scale, class string) {
 	d.WriteString(`<path class="` + class + `" d="`)
+	d.points(times, c, x, y, 1)
+	d.WriteString(`"/>`)
+}
+
+// points gives those of such a path, with so many digits along the time.
+func (d *drawing) points(times []int64, c column, x, y scale, digits int) {
 	pen := byte('M')
 	for i, v := range c {
 		if v != v {
 			pen = 'M'
 			continue
 		}
-		d.f("%c%.1f %.1f", pen, x.at(float64(times[i])), y.at(float64(v)))
+		d.f("%c%.*f %.1f", pen, digits, x.at(float64(times[i])), y.at(float64(v)))
 		pen = 'L'
 	}
-	d.WriteString(`"/>`)
 }
 
 const (

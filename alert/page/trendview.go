@@ -173,11 +173,5 @@ func (p *Page) serveTrendCSV(w http.ResponseWriter, r *http.Request) {
 		p.answer(w, r, err)
 		return
 	}
-	done, err := p.read(r.Context())
-	if err != nil {
-		p.answer(w, r, err)
-		return
-	}
-	defer done()
 	p.writeFrames(w, r, "trend.csv", []*configs.Loop{s.Loop}, span)
 }
