@@ -79,11 +79,13 @@ func (s *scenario) run(emit func(loop int, f *frame)) {
 		l.start()
 	}
 	h := s.rigs[0].h
+	var f frame // one for all: emit does not keep it
+	var ok bool
 	if len(s.rigs) == 1 && s.couple == nil {
 		l := s.rigs[0]
 		n := int64(s.duration / h)
 		for i := int64(1); i <= n; i++ {
-			if f, ok := l.step(s.epoch, float64(i)*h); ok {
+			if f, ok = l.step(s.epoch, float64(i)*h); ok {
 				emit(0, &f)
 			}
 		}
@@ -96,7 +98,7 @@ func (s *scenario) run(emit func(loop int, f *frame)) {
 			s.couple(t, s.rigs)
 		}
 		for j, l := range s.rigs {
-			if f, ok := l.step(s.epoch, t); ok {
+			if f, ok = l.step(s.epoch, t); ok {
 				emit(j, &f)
 			}
 		}
