@@ -34,10 +34,18 @@ func (d *Desk) Hear(fs []detect.Finding) error {
 	if len(fs) == 0 {
 		return nil
 	}
-	// In order of data time, whatever the shards made of it.
+	// In order of data time, whatever the shards made of it. What is judged anew goes on as
+	// another kind of the same time: that is heard first, so that one episode stays open
+	// and keeps who took notice of it.
+	anew := func(f *detect.Finding) int {
+		if f.Event == detect.Cleared && f.Reason == detect.Rejudged {
+			return 1
+		}
+		return 0
+	}
 	sorted := slices.Clone(fs)
 	slices.SortStableFunc(sorted, func(a, b detect.Finding) int {
-		return cmp.Or(cmp.Compare(a.At, b.At), strings.Compare(memberKey(&a), memberKey(&b)))
+		return cmp.Or(cmp.Compare(a.At, b.At), cmp.Compare(anew(&a), anew(&b)), strings.Compare(memberKey(&a), memberKey(&b)))
 	})
 	d.mu.Lock()
 	defer d.mu.Unlock()

@@ -328,3 +328,27 @@ func TestTenThousandFindingsAtOnce(t *testing.T) {
 		t.Errorf("%d messages to the person, want at most one", n)
 	}
 }
+
+// A cycle that is judged anew goes on as another kind at the same moment: one episode
+// stays open through it, with who took notice of it, and nothing is told to be over.
+func TestJudgedAnewIsOneEpisode(t *testing.T) {
+	r := newRig(t)
+	r.hear(f("AIC-204", detect.SustainedOscillation, detect.Raised, 0))
+	r.run(start.Add(time.Minute))
+	id := live(r.desk.Episodes())[0].ID
+	if err := r.desk.Acknowledge(id, "Jo", "seen", time.Time{}); err != nil {
+		t.Fatal(err)
+	}
+	r.hear(f("AIC-204", detect.SustainedOscillation, detect.Cleared, 30, func(x *detect.Finding) { x.Reason = detect.Rejudged }),
+		f("AIC-204", detect.ValveStickingKind, detect.Raised, 30, func(x *detect.Finding) { x.Cause = detect.ValveSticking }))
+	r.run(start.Add(time.Hour))
+	es := live(r.desk.Episodes())
+	if len(es) != 1 || es[0].ID != id || !es[0].Open() || es[0].Count != 1 || es[0].Ack == nil || es[0].Lead().Kind != detect.ValveStickingKind {
+		t.Errorf("not one episode: %s", describe(es))
+	}
+	for _, m := range r.hook.take() {
+		if m.Event == detect.Cleared {
+			t.Errorf("told to be over: %s", m.Subject)
+		}
+	}
+}

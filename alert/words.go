@@ -85,7 +85,7 @@ func causeLine(f *detect.Finding) string {
 		return ""
 	}
 	how := "Possible cause: "
-	if f.Confidence >= 0.8 {
+	if detect.Likely(f.Confidence) == "likely" { // one scale of words for text and mail
 		how = "Likely cause: "
 	}
 	s := how + w + "."
@@ -97,6 +97,9 @@ func causeLine(f *detect.Finding) string {
 
 // firstCheck is what to look at before anything else.
 func firstCheck(f *detect.Finding) string {
+	if f.Kind == detect.StaleData {
+		return "See whether the server or broker runs, the network to it is up and the transmitter answers. The loop is not watched meanwhile."
+	}
 	switch f.Cause {
 	case detect.ValveSticking, detect.ValveDeadBand, detect.FinalElementNotFollowing:
 		return "Look at the final element: does its position follow OP, is air or power there, is it on hand or bypassed?"
@@ -118,7 +121,7 @@ func firstCheck(f *detect.Finding) string {
 		return "Compare OP with the position of the final element: does the one move before the other?"
 	case detect.SustainedOffset:
 		return "See whether OP is at a limit, the loop is in the mode you expect, and the final element follows."
-	case detect.StaleData, detect.SourceDown:
+	case detect.SourceDown:
 		return "See whether the server or broker runs and the network to it is up. The loops are not watched meanwhile."
 	case detect.StoreFailing:
 		return "See whether the disk of the box is full or worn. The loops are still watched."

@@ -256,3 +256,19 @@ func TestShortTextKeepsItsCaution(t *testing.T) {
 		}
 	}
 }
+
+// Silence is looked for first where the data come from, whatever cause is named; and
+// mail and text have one scale of words for how sure a cause is.
+func TestFirstCheckOfSilenceAndWordsOfCauses(t *testing.T) {
+	x := f("AIC-204", detect.StaleData, detect.Raised, 0)
+	x.Cause = detect.MeasurementCause
+	if s := firstCheck(&x); !strings.Contains(s, "server or broker") {
+		t.Error(s)
+	}
+	for _, conf := range []float64{0.6, 0.8, 0.84, 0.86, 0.97} {
+		x.Confidence = conf
+		if says := strings.HasPrefix(causeLine(&x), "Likely"); says != (detect.Likely(conf) == "likely") {
+			t.Errorf("%g: %s", conf, causeLine(&x))
+		}
+	}
+}

@@ -121,6 +121,9 @@ func measureCycle(w *Watch, m []float64) {
 	m[7], m[8] = w.timeLeft()
 }
 
+// leastGrowth is the growth per cycle from which a swing is said to grow still.
+const leastGrowth = 1.02
+
 // timeLeft is the time, s, until the growing swing of OP meets a limit and that of
 // PV an alarm: 0 where it does already, NaN where it cannot be told.
 func (w *Watch) timeLeft() (op, alarm float64) {
@@ -134,6 +137,8 @@ func (w *Watch) timeLeft() (op, alarm float64) {
 	switch at := w.s.Tune.LimitAt; {
 	case at > 0 && w.in.t-at < 1.5*o.P:
 		op, rate = 0, 0 // a linear reckoning, that of the alarm too, ends where OP clips
+	case o.Growth <= leastGrowth: // it grew, and does no more: no time can be told
+		rate = 0
 	case rate > 0 && o.Kc != 0 && o.Ti != 0:
 		om := 2 * math.Pi / o.P
 		swing := o.Amp * math.Abs(o.Kc) * math.Hypot(1, 1/(om*o.Ti))

@@ -131,6 +131,12 @@ func (w *Watch) stepStretch(side, sigma float64) {
 	z.From = 0
 }
 
+// comesAndGoes: what is said of the limit rests on visits to it, not on one long stay.
+func (w *Watch) comesAndGoes() bool {
+	z, o := &w.s.Sat, &w.s.OffPast.Sat
+	return o.On && z.Stretches >= 3 && o.Since == z.FirstFrom
+}
+
 // sayLimit supports the claim that OP lies at its limit. What an episode was shown with
 // the better evidence stands: an element that did not follow, and the higher confidence.
 func (w *Watch) sayLimit(since, mean, conf float64) {

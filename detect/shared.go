@@ -325,7 +325,12 @@ func (s *shared) finding(end int64, g *sharedGroup, e Event) *Finding {
 		}
 		what += " No root stands out: it may come from outside all of them."
 	}
-	f.Text = what + " Judge the root before any other loop of the group."
+	if g.Root != "" {
+		what += " Judge the root before any other loop of the group."
+	} else {
+		what += " First look upstream for what they share (supply, header, feed), then for a loop of the group that cycles by itself."
+	}
+	f.Text = what
 	f.TextShort = shorten(fmt.Sprintf("%d loops cycle every %s: %s.", len(g.Loops), duration(g.Period), list))
 	return f
 }

@@ -128,28 +128,37 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 		return math.NaN()
 	}
 	pv := w.pvText
+	swings, cycles, creeps, since := "PV swings", "PV cycles", "PV creeps", ""
+	if d := float64(f.At-f.Since) / 1000; d > 0 {
+		since = " for " + duration(d)
+		been := "For " + duration(d) + " PV has been "
+		swings, cycles, creeps = been+"swinging", been+"cycling", been+"creeping"
+	}
 	var what, brief string
 	switch k {
 	case kGrowing:
-		what = "PV swings" + part(" ±%s", s.Osc.Amp, pv) + part(" with a cycle of %s", s.Osc.P, duration)
-		if g := get("growth_per_cycle"); g > 1.02 {
+		what = swings + part(" ±%s", s.Osc.Amp, pv) + part(" with a cycle of %s", s.Osc.P, duration)
+		switch g := get("growth_per_cycle"); {
+		case g >= 1.05:
 			what += part(", about %s times larger each cycle", g, sig2)
-		} else {
+		case g > leastGrowth:
+			what += ", a little larger each cycle"
+		default:
 			what += ", after growing"
 		}
 		if f.Cause == ResetTooShort {
 			what += part(" (reset in service about %s)", get("reset_s"), duration)
 		}
 		what += w.timeWords(get("time_to_op_limit_s"), get("time_to_pv_alarm_s"))
-		brief = "growing swing" + part(" ±%s", s.Osc.Amp, pv) + part(", cycle %s", s.Osc.P, duration)
+		brief = "growing swing" + part(" ±%s", s.Osc.Amp, pv) + part(", cycle %s", s.Osc.P, duration) + comma(since)
 	case kSustained:
-		what = "PV cycles" + part(" ±%s", s.Osc.Amp, pv) + part(" with a period of %s", s.Osc.P, duration) + " and does not settle"
-		brief = "cycles" + part(" ±%s", s.Osc.Amp, pv) + part(" every %s", s.Osc.P, duration)
+		what = cycles + part(" ±%s", s.Osc.Amp, pv) + part(" with a period of %s", s.Osc.P, duration) + " without settling"
+		brief = "cycles" + part(" ±%s", s.Osc.Amp, pv) + part(" every %s", s.Osc.P, duration) + since
 	case kSticking:
 		swing := get("op_swing_pct")
-		what = "PV cycles" + part(" ±%s", s.Osc.Amp, pv) + part(" every %s", s.Osc.P, duration) + " while OP ramps to and fro" +
+		what = cycles + part(" ±%s", s.Osc.Amp, pv) + part(" every %s", s.Osc.P, duration) + " while OP ramps to and fro" +
 			part(" by about %s %%", swing, sig2) + " before PV answers: apparent sticking, from OP and PV"
-		brief = "apparent sticking" + part(", cycle %s", s.Osc.P, duration) + part(", OP swing %s %%", swing, sig2)
+		brief = "apparent sticking" + part(", cycle %s", s.Osc.P, duration) + part(", OP swing %s %%", swing, sig2) + comma(since)
 	case kOffset:
 		side := "below"
 		if s.OffPast.Offset.Mean < 0 {
@@ -161,13 +170,13 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 	case kSaturation:
 		what, brief = w.limitText(f, get)
 	case kSluggish:
-		what = "PV creeps back after disturbances" + part(": about %s", get("recovery_s"), duration)
+		what = creeps + " back after disturbances" + part(": about %s", get("recovery_s"), duration)
 		if u := part(" where %s was usual", get("usual_s"), duration); u != "" {
 			what += u
 		} else if s.Recov.By == 2 {
 			what += ", several times what its set-point steps say the process needs"
 		}
-		brief = "slow to recover" + part(": about %s", get("recovery_s"), duration) + part(", usual %s", get("usual_s"), duration)
+		brief = "slow to recover" + part(": about %s", get("recovery_s"), duration) + part(", usual %s", get("usual_s"), duration) + comma(since)
 	case kFrozen:
 		what = "PV has not changed at all" + part(" for %s", get("still_s"), duration)
 		if tr := get("op_travel_pct"); tr > 1 {
@@ -180,8 +189,8 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 			end = "high"
 		}
 		unit := func(v float64) string { return sig2(v) + unitOf(w.loop.Unit) }
-		what = "PV is pegged at the " + end + " end of its range" + part(" (%s)", get("pv"), unit) + part(" while SP asks for %s", s.Scale.PVLow+w.pvUnits(s.Motion.SP), unit)
-		brief = "PV pegged at the " + end + " end of its range"
+		what = "PV is pegged at the " + end + " end of its range" + part(" (%s)", get("pv"), unit) + since + part(" while SP asks for %s", s.Scale.PVLow+w.pvUnits(s.Motion.SP), unit)
+		brief = "PV pegged at the " + end + " end of its range" + since
 	case kMode:
 		m := s.Motion.Mode.String()
 		if m == "" {
@@ -190,7 +199,7 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 		lasts := part(" for %s", get("duration_s"), duration)
 		what = "The loop has been in " + m + lasts + "; normal is " + w.loop.NormalMode
 		brief = "in " + m + lasts
-		return what + ". Nobody may know that the law does not act." + w.beforeSentence(k, f), w.short(f, brief)
+		return what + ". Nobody may know that the law does not act." + w.beforeSentence(k, f) + " First ask operations whether it is meant, and until when.", w.short(f, brief)
 	case kTuning:
 		what = "The tuning in service changed"
 		if x := w.tuningWords(); x != "" {
@@ -202,7 +211,7 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 		return what + ". Nothing to do if it was meant." + w.beforeSentence(k, f), w.short(f, what)
 	case kStale:
 		what = "No usable value" + part(" for %s", get("duration_s"), duration) + "; the loop cannot be watched"
-		return what + ". " + firstCheck[MeasurementCause] + "." + w.beforeSentence(k, f), w.short(f, what)
+		return what + "." + w.beforeSentence(k, f) + " First check whether the source and the network deliver, then the transmitter and the signal path.", w.short(f, what)
 	}
 	check, ok := firstCheck[f.Cause]
 	if !ok {
@@ -215,6 +224,14 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 	return long, w.short(f, brief)
 }
 
+// comma sets off a part that begins with a space; none of none.
+func comma(part string) string {
+	if part == "" {
+		return ""
+	}
+	return "," + part
+}
+
 // limitText says an OP at its limit, or what winds up there.
 func (w *Watch) limitText(f *Finding, get func(string) float64) (what, brief string) {
 	s := &w.s
@@ -225,6 +242,15 @@ func (w *Watch) limitText(f *Finding, get func(string) float64) (what, brief str
 	}
 	lasts := part(" for %s", get("duration_s"), duration)
 	off := part("%s", get("offset_pct"), w.pvText)
+	if w.comesAndGoes() {
+		n := int(s.Sat.Stretches)
+		what = fmt.Sprintf("OP came to its limit %d times%s and stayed there longer than a recovery takes", n, strings.Replace(lasts, " for ", " in ", 1))
+		brief = fmt.Sprintf("OP %d times at its limit%s", n, strings.Replace(lasts, " for ", " in ", 1))
+		if off != "" {
+			what, brief = what+"; PV missed the set point by about "+off+" meanwhile", brief+", PV off by about "+off
+		}
+		return what, brief
+	}
 	what = "OP lies at its limit" + part(" (%s %%)", s.Motion.OP, sig2) + lasts
 	brief = "OP at limit" + part(" %s %%", s.Motion.OP, sig2) + lasts
 	if off != "" {
@@ -302,13 +328,20 @@ func (w *Watch) short(f *Finding, brief string) string {
 	t := w.loop.Name + ": " + brief
 	if c := causeWords[f.Cause]; c != "" && f.Cause != MeasurementCause {
 		t += "; " + likely(f.Confidence) + " " + c
+	} else if f.Cause == Undetermined && f.Kind != NotInNormalMode && f.Kind != TuningChanged {
+		t += "; cannot tell why"
 	}
 	return shorten(t + ".")
 }
 
-func (w *Watch) textOver(k int) (long, short string) {
-	over := [kinds]string{"the growing swing is over", "the cycle is over", "the sticking cycle is over", "PV is back at its set point", "OP is off its limit",
-		"recoveries are usual again", "PV moves again", "PV is back inside its range", "the law acts as planned again", "the tuning change is old news", "values arrive again"}
+func (w *Watch) textOver(k int, reason string) (long, short string) {
 	t := over[k]
-	return strings.ToUpper(t[:1]) + t[1:] + ".", w.loop.Name + ": " + t + "." + shortTail
+	if reason == Rejudged {
+		t = "judged anew: what is seen now is said as another finding"
+	}
+	return strings.ToUpper(t[:1]) + t[1:] + ".", shorten(w.loop.Name + ": " + t + ".")
 }
+
+// over says by kind what came to an end.
+var over = [kinds]string{"the growing swing is over", "the cycle is over", "the sticking cycle is over", "PV is back at its set point", "OP is off its limit",
+	"recoveries are usual again", "PV moves again", "PV is back inside its range", "the law acts as planned again", "the tuning change is old news", "values arrive again"}

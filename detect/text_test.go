@@ -93,7 +93,7 @@ func TestTextsAreWhole(t *testing.T) {
 		for k := range table {
 			w.s.Open[k] = openFinding{On: true, Cause: uint8(rnd.IntN(len(causes))), Conf: rnd.Float32(), Since: float64(rnd.IntN(3 * 86400))}
 			for _, e := range []Event{Raised, Cleared} {
-				f := w.finding(k, e, w.in.t)
+				f := w.finding(k, e, w.in.t, []string{Over, Rejudged}[rnd.IntN(2)])
 				for _, x := range []string{f.Text, f.TextShort} {
 					if bad := textSpoilt.FindString(x); bad != "" || x == "" || !utf8.ValidString(x) {
 						t.Fatalf("%s, cause %s: %q in %q", f.Kind, f.Cause, bad, x)
@@ -126,7 +126,7 @@ func TestLessGainIsNeverTheAdviceOnASlowSwing(t *testing.T) {
 		for k := range table {
 			for c := range causes {
 				w.s.Open[k] = openFinding{On: true, Cause: uint8(c), Conf: 0.9, Since: 10}
-				f := w.finding(k, Raised, w.in.t)
+				f := w.finding(k, Raised, w.in.t, "")
 				rest := strings.ReplaceAll(f.Text, never, "")
 				says := lower.MatchString(rest) || lower.MatchString(f.TextShort)
 				fast := w.s.Osc.Kc != 0 && w.s.Osc.PhiDeg < phiGain

@@ -61,6 +61,8 @@ func resetUnit(entered, seen float64) string {
 		return "hours"
 	case near(entered/seen, 60):
 		return "seconds taken for minutes"
+	case near(entered*seen, 3600):
+		return "repeats per hour"
 	case near(entered*seen, 60):
 		return "repeats per minute"
 	case near(entered*seen, 1):
@@ -85,6 +87,8 @@ func (w *Watch) tuningNote() string {
 		s := fmt.Sprintf("gain entered %s, the data say about %s", sig2(w.loop.GainPct), sig2(math.Abs(kc)))
 		if near(w.loop.GainPct*math.Abs(kc), 100) {
 			s += ": proportional band?"
+		} else if near(w.loop.GainPct*math.Abs(kc), 1) {
+			s += ": its inverse?"
 		}
 		add(s)
 	}

@@ -36,7 +36,12 @@ func (w *Watch) verdictAt(t float64) {
 	if c[kSticking].On {
 		fold(kSustained)
 	}
-	rejudge[kSticking] = c[kSustained].On && s.Osc.Sticking
+	// A cycle that is said under another kind from now on is not over.
+	for _, k := range swings {
+		for _, other := range swings {
+			rejudge[k] = rejudge[k] || other != k && c[other].On
+		}
+	}
 	if c[kFrozen].On {
 		fold(kOffset)
 		fold(kSluggish)
@@ -45,6 +50,9 @@ func (w *Watch) verdictAt(t float64) {
 		w.settle(k, t, &c[k], rejudge[k])
 	}
 }
+
+// swings are the kinds of which one cycle is one at a time.
+var swings = [...]int{kGrowing, kSustained, kSticking}
 
 // claim is what a detector claims, after what manual spells and the loop list say to it.
 func (w *Watch) claim(k int) claim {
@@ -134,14 +142,14 @@ func (w *Watch) say(k int, e Event, t float64, reason string) {
 	if w.emit == nil || w.mute {
 		return
 	}
-	f := w.finding(k, e, t)
-	f.Reason = reason
+	f := w.finding(k, e, t, reason)
 	w.emit(&f)
 }
 
 func (w *Watch) ms(t float64) int64 { return w.s.Grid.T0 + int64(math.Round(t*1000)) }
 
-func (w *Watch) finding(k int, e Event, t float64) Finding {
+// finding makes a statement of a kind; the reason is that of a cleared one.
+func (w *Watch) finding(k int, e Event, t float64, reason string) Finding {
 	s := &w.s
 	row, o := &table[k], &s.Open[k]
 	f := Finding{ID: w.id, Subject: Subject{Loop: w.loop.Name}, Loop: w.loop.Name, Kind: row.Kind, Event: e,
@@ -150,7 +158,8 @@ func (w *Watch) finding(k int, e Event, t float64) Finding {
 	f.Since = min(f.Since, f.At)
 	if e == Cleared {
 		f.Confidence = 0
-		f.Text, f.TextShort = w.textOver(k)
+		f.Reason = reason
+		f.Text, f.TextShort = w.textOver(k, reason)
 		return f
 	}
 	m := make([]float64, len(row.Measures))

@@ -73,7 +73,7 @@ func (w *Watch) View() View {
 	held := false
 	for k := range table {
 		if s.Open[k].On {
-			v.Open = append(v.Open, w.finding(k, Raised, float64(s.Through-s.Grid.T0)/1000))
+			v.Open = append(v.Open, w.finding(k, Raised, float64(s.Through-s.Grid.T0)/1000, ""))
 			held = held || !s.Motion.Active && k != kMode
 		}
 	}
@@ -179,6 +179,9 @@ func (w *Watch) blindSpots() (b []string) {
 	if m.OPMax > -1e8 && float64(m.OPMax-m.OPMin) < 0.5 && s.Noise.N > 2000 {
 		b = append(b, "OP has hardly moved: always at a limit, or not this loop's output")
 	}
+	if w.notThisLaw() {
+		b = append(b, "not this law: OP moves otherwise than e asks (feed-forward, selector, split range, filter or gap?): its tuning is not read, and causes that rest on it stay open")
+	}
 	if n := w.filterNote(); n != "" {
 		b = append(b, n)
 	}
@@ -195,6 +198,20 @@ func (w *Watch) blindSpots() (b []string) {
 func (w *Watch) blind() bool {
 	m := &w.s.Motion
 	return w.s.Last.OP != w.s.Last.OP && m.OPMin > m.OPMax || m.Mode == collector.ModeUnknown && !m.LawSeen && w.s.Noise.N > 20000
+}
+
+// notThisLaw: of the excited blocks at no scale of time most show the law, and at one
+// all of many do not.
+func (w *Watch) notThisLaw() bool {
+	none := false
+	for k := range w.s.Fits {
+		b := &w.s.Fits[k]
+		if b.ByLaw > 0 || b.Count > 0 && b.Last.ok() {
+			return false
+		}
+		none = none || b.ByLaw <= -lawVotes
+	}
+	return none
 }
 
 // readText is a reading with its range, where there is one.
@@ -229,8 +246,8 @@ func (w *Watch) Explain() []string {
 	for _, p := range w.schedulePoints() {
 		out = append(out, fmt.Sprintf("gain goes with PV: at %.4g%s about %s (%d readings)", p.PV, unitOf(w.loop.Unit), sig2(p.Gain), p.N))
 	}
-	if n := w.tuningNote(); n != "" {
-		out = append(out, "loop list: "+n)
+	for _, n := range w.blindSpots() {
+		out = append(out, "blind spot: "+n)
 	}
 	for l := range w.levels() {
 		b := &s.Cycles[l]

@@ -7,7 +7,6 @@ import (
 	"fmt"
 	"io"
 	"log/slog"
-	"math"
 	"os"
 	"strings"
 	"text/tabwriter"
@@ -21,7 +20,6 @@ import (
 	"midwatch/cmd/internal/daemon"
 	"midwatch/collector"
 	"midwatch/configs"
-	"midwatch/detect"
 )
 
 // checkFlags are the flags of check.
@@ -39,7 +37,8 @@ func checkVerb(h *house) *cobra.Command {
 		Long: `Reads the configuration, the loop list and the secrets they name, and reports
 every mistake with file, line and column. When there is none it shows what was
 understood: the tuning of each loop in both usual forms, to be read against the
-faceplate, cascades, and what loops share.
+faceplate, cascades, and what loops share; and, where a watch has run on the data
+folder, how many loops it can judge and the blind spots of each.
 
   --connect  also reads every tag once, and shows its value, range and unit
   --send     also sends a marked trial advisory through every sender
@@ -70,9 +69,9 @@ type checked struct {
 }
 
 type loopChecked struct {
-	Loop   string `json:"loop"`
-	Tuning string `json:"tuning,omitempty"`
-	Doubt  string `json:"doubt,omitempty"` // where the data contradict the tuning
+	Loop   string   `json:"loop"`
+	Tuning string   `json:"tuning,omitempty"`
+	Blind  []string `json:"blind_spots,omitempty"` // as a watch on this data folder sees it
 }
 
 type probed struct {
@@ -124,7 +123,14 @@ func (h *house) check(f *checkFlags) error {
 	if f.show {
 		return c.Show(h.stdout)
 	}
-	r := checked{File: c.File, Warnings: c.Warnings, Loops: h.loopsChecked(c), States: h.loopStates(c)}
+	rows := h.loopRows(c)
+	r := checked{File: c.File, Warnings: c.Warnings, Loops: loopsChecked(c, rows)}
+	if len(rows) > 0 {
+		r.States = &api.LoopCounts{}
+		for _, x := range rows {
+			r.States.Add(x.State)
+		}
+	}
 	for _, l := range configs.Structure(c.Loops) {
 		r.Links = append(r.Links, l.String())
 	}
@@ -154,67 +160,32 @@ func (h *house) check(f *checkFlags) error {
 	return err
 }
 
-// loopStates counts the loops by what a watch on this data folder sees of them, be
-// it running or not; nil where there was none.
-func (h *house) loopStates(c *configs.Config) *api.LoopCounts {
-	var s api.Status
-	err := dial(c.Data).get(h.ctx, "/api/status", &s)
+// loopRows is what a watch on this data folder says of each loop, be it running or
+// not; nil where there was none.
+func (h *house) loopRows(c *configs.Config) []api.Loop {
+	var rows []api.Loop
+	err := dial(c.Data).get(h.ctx, "/api/loops", &rows)
 	if errors.Is(err, errNotRunning) {
-		s, _, err = lookInto(c)
+		_, rows, err = lookInto(c)
 	}
-	if err != nil || s.Loops.Total == 0 {
+	if err != nil {
 		return nil
 	}
-	return &s.Loops
+	return rows
 }
 
-// loopsChecked shows the tuning, and doubts it where a watch on this data folder
-// has read another one by a usual mistake of units.
-func (h *house) loopsChecked(c *configs.Config) []loopChecked {
-	views := func(string) (detect.View, bool) { return detect.View{}, false }
-	if f, err := daemon.Look(c); err == nil { // else: no watch yet, or it runs
-		defer f.Close()
-		views = f.View
+// loopsChecked shows the tuning, and what keeps a watch on this data folder from seeing
+// the loop, a tuning that its data contradict among it.
+func loopsChecked(c *configs.Config, rows []api.Loop) []loopChecked {
+	blind := map[string][]string{}
+	for _, x := range rows {
+		blind[x.Loop] = x.Blind
 	}
 	var out []loopChecked
 	for _, l := range c.Loops {
-		x := loopChecked{Loop: l.Name, Tuning: l.DescribeTuning()}
-		if v, ok := views(l.Name); ok {
-			x.Doubt = doubt(l, &v)
-		}
-		out = append(out, x)
+		out = append(out, loopChecked{Loop: l.Name, Tuning: l.DescribeTuning(), Blind: blind[l.Name]})
 	}
 	return out
-}
-
-// doubt says where the tuning in the loop list differs from that which the data
-// show by a usual mistake of units.
-func doubt(l *configs.Loop, v *detect.View) string {
-	near := func(x, y float64) bool { return x > 0 && y > 0 && math.Abs(math.Log(x/y)) < 0.25 }
-	var out []string
-	if a, b := l.IdealReset, v.ResetS; a > 0 && b > 0 {
-		for _, k := range []struct {
-			factor float64
-			what   string
-		}{{60, "minutes and seconds"}, {3600, "hours and seconds"}} {
-			switch {
-			case near(a, b*k.factor), near(a*k.factor, b):
-				out = append(out, fmt.Sprintf("the data show a reset time of about %.3g s, the list %.3g s: %s confused?", b, a, k.what))
-			}
-		}
-		if !near(a, b) && (near(a, 1/b) || near(a, 3600/b)) {
-			out = append(out, fmt.Sprintf("the data show a reset time of about %.3g s, the list %.3g s: time and repeats confused?", b, a))
-		}
-	}
-	if a, b := math.Abs(l.GainPct), v.GainPct; a > 0 && b > 0 && !near(a, b) {
-		switch {
-		case near(a, 100/b):
-			out = append(out, fmt.Sprintf("the data show a gain of about %.3g, the list %.3g: gain and proportional band confused?", b, a))
-		case near(a, 1/b):
-			out = append(out, fmt.Sprintf("the data show a gain of about %.3g, the list %.3g: the list holds its inverse?", b, a))
-		}
-	}
-	return strings.Join(out, "; ")
 }
 
 // probe reads every tag of every source once.
@@ -301,8 +272,8 @@ func (r *checked) print(w io.Writer, c *configs.Config) error {
 	fmt.Fprintln(t, "\nLOOP\tTUNING")
 	for _, l := range r.Loops {
 		fmt.Fprintf(t, "%s\t%s\n", l.Loop, l.Tuning)
-		if l.Doubt != "" {
-			fmt.Fprintf(t, "\tdoubtful: %s\n", l.Doubt)
+		for _, b := range l.Blind {
+			fmt.Fprintf(t, "\tblind spot: %s\n", b)
 		}
 	}
 	for i, l := range r.Links {

@@ -8,6 +8,7 @@ import (
 	"io"
 	"math"
 	"os"
+	"strings"
 	"time"
 
 	"github.com/spf13/cobra"
@@ -145,6 +146,14 @@ loops      %d: judged %d, cannot judge %d, not in normal mode %d, held %d
 rows       %d: malformed %d, late %d, of unknown loops %d; %.0f rows/s
 findings   %d raised in %.3g loop-years; false ones accepted on healthy loops: %.2g
 `, span, s.Loops, s.Judged, s.CannotJudge, s.NotInNormal, s.Held, s.Rows, s.Malformed, s.Late, s.Foreign, s.RowsPerS, s.Raised, s.LoopYears, s.ExpectFalse)
+	const most = 10 // loops of a reason that are listed
+	for _, u := range s.Unseen {
+		names, more := u.Loops, ""
+		if n := len(names) - most; n > 0 {
+			names, more = names[:most], fmt.Sprintf(" and %d more", n)
+		}
+		fmt.Fprintf(w, "not judged %s%s: %s\n", strings.Join(names, ", "), more, u.Why)
+	}
 }
 
 // flushing writes through a buffer and empties it after every write.

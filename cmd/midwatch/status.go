@@ -30,7 +30,7 @@ With a watch that is not well the exit code is 1.`,
 		RunE: func(*cobra.Command, []string) error { return h.status(config, loops, standing, asJSON) },
 	}
 	configFlag(c, &config)
-	c.Flags().BoolVar(&loops, "loops", false, "list every loop with its state")
+	c.Flags().BoolVar(&loops, "loops", false, "list every loop with its state and blind spots")
 	c.Flags().BoolVar(&standing, "standing", false, "list only what was found before the baseline ended: the site's old troubles, most urgent first")
 	c.Flags().BoolVar(&asJSON, "json", false, "print JSON")
 	return c
@@ -107,7 +107,7 @@ func printStatus(w io.Writer, s *api.Status, rows []api.Loop, loops bool) error 
 		fmt.Fprintf(t, "%s\t%s\t%s\t%s\t%s\t%s\t%s\n", e.ID, e.Urgency, e.State, subject, f.Kind, f.Cause, e.Since)
 	}
 	if len(s.Sources) > 0 {
-		fmt.Fprintln(t, "\nSOURCE\tKIND\tLINK\tLAST SIGN OF LIFE\tLAG\tPROBLEM")
+		fmt.Fprintln(t, "\nSOURCE\tKIND\tLINK\tLAST SIGN OF LIFE\tLAG\tCLOCK OFFSET\tPROBLEM")
 	}
 	for _, x := range s.Sources {
 		problem := x.Problem
@@ -117,7 +117,7 @@ func printStatus(w io.Writer, s *api.Status, rows []api.Loop, loops bool) error 
 		if n := len(x.Refused); n > 0 {
 			problem = strings.TrimPrefix(fmt.Sprintf("%s; %d tags cannot be had, the first is %s of %s: %s", problem, n, x.Refused[0].Address, x.Refused[0].Loop, x.Refused[0].Why), "; ")
 		}
-		fmt.Fprintf(t, "%s\t%s\t%s\t%s\t%d ms\t%s\n", x.Name, x.Kind, x.Link, wallTime(x.LastData), x.LagMs, problem)
+		fmt.Fprintf(t, "%s\t%s\t%s\t%s\t%d ms\t%d ms\t%s\n", x.Name, x.Kind, x.Link, wallTime(x.LastData), x.LagMs, x.ClockOffsetMs, problem)
 	}
 	if len(s.Senders) > 0 {
 		fmt.Fprintln(t, "\nSENDER\tSENT\tWAITING\tGIVEN UP\tPROBLEM")
@@ -129,6 +129,9 @@ func printStatus(w io.Writer, s *api.Status, rows []api.Loop, loops bool) error 
 		fmt.Fprintln(t, "\nLOOP\tSTATE\tWHY\tSERVICE")
 		for _, x := range rows {
 			fmt.Fprintf(t, "%s\t%s\t%s\t%s\n", x.Loop, x.State, x.Why, x.Service)
+			for _, b := range x.Blind {
+				fmt.Fprintf(t, "\t%s\n", b)
+			}
 		}
 	}
 	fmt.Fprintf(t, "\ntrends: %.1f MB of %.0f MB", float64(s.Trends.Bytes)/1e6, float64(s.Trends.Limit)/1e6)

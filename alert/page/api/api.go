@@ -64,7 +64,8 @@ type Desk interface {
 type LoopState struct {
 	Loop  *configs.Loop
 	State detect.State
-	Why   string // where State is not Judged
+	Why   string   // where State is not Judged
+	Blind []string // what keeps the watch from seeing, in words
 }
 
 // Export says what to write. From and To are ms UTC, To is not included.

@@ -123,13 +123,14 @@ type Loop struct {
 	Source  string       `json:"source,omitempty"`
 	State   detect.State `json:"state"`
 	Why     string       `json:"why,omitempty"`
+	Blind   []string     `json:"blind_spots,omitempty"`
 }
 
 // Loops makes the rows of /api/loops.
 func Loops(all []LoopState) []Loop {
 	out := make([]Loop, 0, len(all))
 	for _, l := range all {
-		out = append(out, Loop{l.Loop.Name, l.Loop.Service, l.Loop.Area, l.Loop.Source, l.State, l.Why})
+		out = append(out, Loop{l.Loop.Name, l.Loop.Service, l.Loop.Area, l.Loop.Source, l.State, l.Why, l.Blind})
 	}
 	return out
 }

@@ -78,7 +78,7 @@ func (d *Daemon) Loops() []api.LoopState {
 	for _, l := range loops {
 		s := api.LoopState{Loop: l, State: detect.NoData}
 		if v, ok := d.View(l.Name); ok {
-			s.State, s.Why = v.State, v.Why
+			s.State, s.Why, s.Blind = v.State, v.Why, v.BlindSpots
 		}
 		out = append(out, s)
 	}

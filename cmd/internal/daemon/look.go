@@ -121,7 +121,7 @@ func (f *Folder) Loops() []api.LoopState {
 			w := detect.New(l, collector.LoopID(i), detect.Options{})
 			if err := w.Load(b); err == nil {
 				v := w.View()
-				s.State, s.Why = v.State, v.Why
+				s.State, s.Why, s.Blind = v.State, v.Why, v.BlindSpots
 			} else {
 				s.Why = err.Error()
 			}

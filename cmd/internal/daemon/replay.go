@@ -32,23 +32,30 @@ type ReplayOptions struct {
 
 // ReplaySummary is what a replay came to.
 type ReplaySummary struct {
-	Loops        int     `json:"loops"`
-	Judged       int     `json:"judged"`
-	CannotJudge  int     `json:"cannot_judge"`
-	NotInNormal  int     `json:"not_in_normal_mode"`
-	Held         int     `json:"held"`
-	Rows         int64   `json:"rows"`
-	Frames       int64   `json:"frames"`
-	Malformed    int64   `json:"malformed"`
-	Late         int64   `json:"late"`
-	Foreign      int64   `json:"of_unknown_loops"`
-	Raised       int     `json:"raised"`
-	LoopYears    float64 `json:"loop_years"`
-	ExpectFalse  float64 `json:"expected_false"`
-	From         string  `json:"from,omitempty"`
-	To           string  `json:"to,omitempty"`
-	SecondsTaken float64 `json:"seconds,omitempty"`
-	RowsPerS     float64 `json:"rows_per_s,omitempty"`
+	Loops        int      `json:"loops"`
+	Judged       int      `json:"judged"`
+	CannotJudge  int      `json:"cannot_judge"`
+	NotInNormal  int      `json:"not_in_normal_mode"`
+	Held         int      `json:"held"`
+	Unseen       []Unseen `json:"not_judged,omitempty"`
+	Rows         int64    `json:"rows"`
+	Frames       int64    `json:"frames"`
+	Malformed    int64    `json:"malformed"`
+	Late         int64    `json:"late"`
+	Foreign      int64    `json:"of_unknown_loops"`
+	Raised       int      `json:"raised"`
+	LoopYears    float64  `json:"loop_years"`
+	ExpectFalse  float64  `json:"expected_false"`
+	From         string   `json:"from,omitempty"`
+	To           string   `json:"to,omitempty"`
+	SecondsTaken float64  `json:"seconds,omitempty"`
+	RowsPerS     float64  `json:"rows_per_s,omitempty"`
+}
+
+// Unseen are loops that are not judged at the end, and why.
+type Unseen struct {
+	Why   string   `json:"why"`
+	Loops []string `json:"loops"`
 }
 
 // Replay judges recorded frames by the same steps as the live watch. The
@@ -215,7 +222,11 @@ func (p *replay) summary(t trend.Summary) ReplaySummary {
 	}
 	for i := range p.o.Loops {
 		l := p.lanes[i%len(p.lanes)]
-		s.count(l.watches[i/len(p.lanes)].View().State)
+		v := l.watches[i/len(p.lanes)].View()
+		s.count(v.State)
+		if v.State != detect.Judged {
+			s.unseen(v.Why, p.o.Loops[i].Name)
+		}
 		if d := &l.pace[i/len(p.lanes)]; d.last != 0 {
 			s.LoopYears += float64(d.last-d.first) / (365.25 * 24 * 3600 * 1000)
 		}
@@ -231,6 +242,14 @@ func (p *replay) summary(t trend.Summary) ReplaySummary {
 // DefaultNuisance is the budget of false findings per loop and year where none
 // is set.
 const DefaultNuisance = 0.1
+
+func (s *ReplaySummary) unseen(why, loop string) {
+	i := slices.IndexFunc(s.Unseen, func(u Unseen) bool { return u.Why == why })
+	if i < 0 {
+		i, s.Unseen = len(s.Unseen), append(s.Unseen, Unseen{Why: why})
+	}
+	s.Unseen[i].Loops = append(s.Unseen[i].Loops, loop)
+}
 
 func (s *ReplaySummary) count(st detect.State) {
 	switch st {
