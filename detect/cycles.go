@@ -39,10 +39,11 @@ var (
 // bankGain is the gain of block average and band pass at a period of p samples.
 func bankGain(level int, p float64) float64 {
 	w := 2 * math.Pi / p
-	lp := bankAL / math.Sqrt(1-2*(1-bankAL)*math.Cos(w)+(1-bankAL)*(1-bankAL))
+	sin, cos := math.Sin(w), math.Cos(w)
+	lp := bankAL / math.Sqrt(1-2*(1-bankAL)*cos+(1-bankAL)*(1-bankAL))
 	// high pass: 1 - ah/(1-(1-ah)z^-1)
 	q := 1 - bankAH
-	re, im := 1-q*math.Cos(w), q*math.Sin(w)
+	re, im := 1-q*cos, q*sin
 	d := re*re + im*im
 	hr, hi := 1-bankAH*re/d, bankAH*im/d
 	g := lp * lp * math.Hypot(hr, hi)
@@ -139,21 +140,13 @@ func (w *Watch) stepCycles(level int, e float64) {
 	if x*px <= 0 && x != px {
 		b.Zero = t - hs + hs*px/(px-x)
 	}
-	g := centreGain(level)
-	ref := 0.0
-	if b.N > 0 {
-		ref = min(b.at(0).peak(), 50) * g
-	}
-	hy := max(0.25*ref, max(0.25*w.s.Noise.sigma()/math.Sqrt(float64(int(1)<<level)), 0.02))
-	sign := int8(0)
-	if x > hy {
-		sign = 1
-	} else if x < -hy {
+	sign := int8(1)
+	if x < 0 {
 		sign = -1
 	}
-	if sign != 0 && sign != b.Sign {
+	if sign != b.Sign && math.Abs(x) > w.hysteresis(level, b) {
 		if b.Sign != 0 {
-			w.endHalf(level, b, hs, g)
+			w.endHalf(level, b, hs)
 		}
 		b.Sign, b.Peak, b.Cross = sign, 0, b.Zero
 	}
@@ -167,13 +160,23 @@ func (w *Watch) stepCycles(level int, e float64) {
 	}
 }
 
+// hysteresis is how far, %, the output of the band pass must be beyond zero for the other
+// half-cycle to have begun.
+func (w *Watch) hysteresis(level int, b *cycleBank) float64 {
+	ref := 0.0
+	if b.N > 0 {
+		ref = min(b.at(0).peak(), 50) * centreGain(level)
+	}
+	return max(0.25*ref, max(0.25*w.s.Noise.sigma()/math.Sqrt(float64(int(1)<<level)), 0.02))
+}
+
 // endHalf closes the running half-cycle at the last zero crossing.
-func (w *Watch) endHalf(level int, b *cycleBank, hs, g float64) {
+func (w *Watch) endHalf(level int, b *cycleBank, hs float64) {
 	n := (b.Zero - b.Cross) / hs
 	if b.N == 0 && b.Cross == 0 {
 		return // its beginning was not seen
 	}
-	p := math.Abs(float64(b.Peak)) / g
+	p := math.Abs(float64(b.Peak)) / centreGain(level)
 	ln := math.Log(max(p, 1e-6))
 	b.push(halfCycle{uint16(min(max(n*64, 1), math.MaxUint16)), int16(math.Round(ln * 2048))})
 	if b.Sign < 0 && w.s.Clock.On && int(w.s.Clock.Bank) == level {
@@ -184,13 +187,11 @@ func (w *Watch) endHalf(level int, b *cycleBank, hs, g float64) {
 
 // ringStat sums up the newest n half-cycles of a ring.
 type ringStat struct {
+	n       int     // half-cycles
 	period  float64 // samples of the level
 	regular float64 // mean over deviation of the half-cycle lengths
 	amp     float64 // mean peak, %, corrected for the gain at the period
 	least   float64 // smallest peak over mean
-	spread  float64 // deviation of neighbouring peak-to-peak values over their mean
-	growth  float64 // per cycle
-	t       float64 // of the growth
 }
 
 // lengths is the cheap part of stat: period (samples of the level) and regularity.
@@ -200,54 +201,85 @@ func (b *cycleBank) lengths(n int) (period, regular float64, ok bool) {
 	if int(b.N) < n {
 		return 0, 0, false
 	}
-	var sum, sq, cnt [2]float64
+	var sums, squares [2]uint64 // of whole 1/64 samples, and exact
 	for i := range n {
-		l := b.at(i).length()
-		sum[i&1] += l
-		sq[i&1] += l * l
-		cnt[i&1]++
+		l := uint64(b.at(i).Len)
+		sums[i&1] += l
+		squares[i&1] += l * l
 	}
-	m := (sum[0] + sum[1]) / float64(n)
-	v := max(0, sq[0]-sum[0]*sum[0]/cnt[0]) + max(0, sq[1]-sum[1]*sum[1]/cnt[1])
+	var total, v float64
+	for k := range sums {
+		sum, cnt := float64(sums[k])/64, float64((n+1-k)/2)
+		total += sum
+		v += max(0, float64(squares[k])/(64*64)-sum*sum/cnt)
+	}
+	m := total / float64(n)
 	return 2 * m, m / max(math.Sqrt(v/float64(n-2)), 1e-9), true
+}
+
+// peaks gives the peaks of the newest n half-cycles, %, oldest first.
+func (b *cycleBank) peaks(n int, into *[ringLen]float64) []float64 {
+	for i := range n {
+		into[i] = b.at(n - 1 - i).peak()
+	}
+	return into[:n]
 }
 
 func (b *cycleBank) stat(level, n int) (r ringStat, ok bool) {
 	if int(b.N) < n {
 		return r, false
 	}
+	r.n = n
 	r.period, r.regular, _ = b.lengths(n)
-	var pk [ringLen]float64 // oldest first
-	var am, cnt [2]float64
+	var buf [ringLen]float64
+	var am [2]float64
 	least := [2]float64{math.Inf(1), math.Inf(1)}
-	for i := range n {
-		pk[i] = b.at(n - 1 - i).peak()
-		am[i&1] += pk[i]
-		cnt[i&1]++
-		least[i&1] = min(least[i&1], pk[i])
+	for i, p := range b.peaks(n, &buf) {
+		am[i&1] += p
+		least[i&1] = min(least[i&1], p)
 	}
-	r.least = min(least[0]/am[0]*cnt[0], least[1]/am[1]*cnt[1])
-	// Neighbouring peaks together: drift cancels.
-	var pp [ringLen]float64
-	var mm, ss float64
-	for i := 1; i < n; i++ {
-		v := pk[i] + pk[i-1]
-		pp[i-1] = math.Log(v)
-		mm += v
-	}
-	mm /= float64(n - 1)
-	for i := 1; i < n; i++ {
-		v := pk[i] + pk[i-1] - mm
-		ss += v * v
-	}
-	r.spread = math.Sqrt(ss/float64(n-1)) / mm
-	beta, se := num.Slope(pp[:n-1])
-	r.growth, r.t = math.Exp(2*beta), beta/max(se, 1e-9)
+	r.least = min(least[0]/am[0]*float64((n+1)/2), least[1]/am[1]*float64(n/2))
 	r.amp = (am[0] + am[1]) / float64(n)
 	if r.period > 4 {
 		r.amp *= centreGain(level) / bankGain(level, max(r.period, 5))
 	}
 	return r, true
+}
+
+// heights are the peak-to-peak values of the newest n half-cycles, %: neighbours together,
+// so that drift cancels.
+func (b *cycleBank) heights(n int, into *[ringLen]float64) []float64 {
+	pk := b.peaks(n, into)
+	for i := range n - 1 {
+		pk[i] += pk[i+1]
+	}
+	return pk[:n-1]
+}
+
+// spread is the deviation of the peak-to-peak values over their mean.
+func (b *cycleBank) spread(n int) float64 {
+	var buf [ringLen]float64
+	h := b.heights(n, &buf)
+	var mean, ss float64
+	for _, v := range h {
+		mean += v
+	}
+	mean /= float64(len(h))
+	for _, v := range h {
+		ss += (v - mean) * (v - mean)
+	}
+	return math.Sqrt(ss/float64(len(h))) / mean
+}
+
+// growth is that of the newest n half-cycles, a factor a cycle, and its t value.
+func (b *cycleBank) growth(n int) (perCycle, t float64) {
+	var buf [ringLen]float64
+	h := b.heights(n, &buf)
+	for i, v := range h {
+		h[i] = math.Log(v)
+	}
+	beta, se := num.Slope(h)
+	return math.Exp(2 * beta), beta / max(se, 1e-9)
 }
 
 // tip is the mean of the newest two peaks, %.

@@ -20,12 +20,13 @@ func fast(level int, period float64) bool { return level == 0 && period <= fewSl
 
 // countFast counts half-cycles for which a cycle of few samples holds.
 func (w *Watch) countFast(level int, b *cycleBank) {
-	q, ok := b.stat(level, ringLen)
-	least := fastRaise
-	if w.usualKnown(b) && q.amp < 2*b.Usual.Value() {
-		least = fastOwn
+	_, regular, ok := b.lengths(ringLen)
+	plain := ok && regular >= fastRaise*w.strict
+	if plain && regular < fastOwn*w.strict && w.usualKnown(b) {
+		q, _ := b.stat(level, ringLen)
+		plain = q.amp >= 2*b.Usual.Value()
 	}
-	if !ok || q.regular < least*w.strict {
+	if !plain {
 		b.Kept = max(b.Kept, fastFails) - fastFails
 		return
 	}

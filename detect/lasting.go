@@ -23,9 +23,10 @@ const (
 	keptLeast  = 0.2   // %
 )
 
-// countKept counts up at half-cycles that show such a swing, and down at others.
-func (w *Watch) countKept(level int, b *cycleBank) {
-	if p, _, ok := b.lengths(8); ok && fast(level, p) {
+// countKept counts up at half-cycles that show such a swing, and down at others. few says
+// that the bank sees a cycle of few samples.
+func (w *Watch) countKept(level int, b *cycleBank, few bool) {
+	if few {
 		w.countFast(level, b)
 		return
 	}
@@ -53,8 +54,8 @@ func (w *Watch) kept(level int, b *cycleBank) bool {
 		return false
 	}
 	q, _ := b.stat(level, keptHalves)
-	return q.period > bankLowP && q.period < bankHighP && q.amp > least && b.middleRegular() > regular*w.strict &&
-		q.period*w.levelS(level) < keptSlow
+	return q.period > bankLowP && q.period < bankHighP && q.amp > least && q.period*w.levelS(level) < keptSlow &&
+		b.middleRegular() > regular*w.strict
 }
 
 // usualBelow is the usual size at a level. Where the level is young it is what the

@@ -74,7 +74,7 @@ func TestLastingSwingCounts(t *testing.T) {
 			teach(&w.s.Cycles[level-1])
 		}
 		swingOf(b, 17, func(int) float64 { return 8 }, x.peak)
-		if w.countKept(level, b); b.Kept != 0 {
+		if w.countKept(level, b, false); b.Kept != 0 {
 			t.Errorf("%s: told by 17 half-cycles", x.name)
 		}
 		for range keptRaise {
@@ -82,13 +82,13 @@ func TestLastingSwingCounts(t *testing.T) {
 				t.Errorf("%s: told at once", x.name)
 			}
 			swingOf(b, 1, func(int) float64 { return 8 }, x.peak)
-			w.countKept(level, b)
+			w.countKept(level, b, false)
 		}
 		if got := b.Kept >= keptRaise; got != x.on {
 			t.Errorf("%s: told %v", x.name, got)
 		}
 		b.drop()
-		if w.countKept(level, b); b.Kept != 0 {
+		if w.countKept(level, b, false); b.Kept != 0 {
 			t.Errorf("%s: the count outlives a rest", x.name)
 		}
 	}

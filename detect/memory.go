@@ -131,12 +131,14 @@ func (w *Watch) Load(b []byte) error {
 		return ErrMemory
 	}
 	w.s = s
+	w.usual.known = false
 	w.in = input{t: s.Grid.At, dt: s.Grid.DT} // Restate and View reckon from the last slot
 	return nil
 }
 
 func (w *Watch) takeProfile(p *profile) {
 	w.s = state{}
+	w.usual.known = false
 	w.s.Noise = p.Noise
 	for i := range p.Usual {
 		w.s.Recov.Usual[i].V, w.s.Recov.Usual[i].N = p.Usual[i], p.UsualN[i]

@@ -152,7 +152,7 @@ func stepOffset(w *Watch) {
 		return
 	}
 	d := in.t - o.T0
-	if in.t-o.In > max(max(60*in.dt, min(1200, 3*w.timeScale())), 0.15*d) {
+	if calm := in.t - o.In; calm > 60*in.dt && calm > 0.15*d && calm > min(1200, 3*w.timeScale()) {
 		w.endOfRun()
 		o.restart()
 		return
@@ -217,7 +217,7 @@ func (w *Watch) timeScale() float64 {
 // resetS is the reset time to reckon with, s: as it was seen to be usual, else as
 // configured, else as seen now; 0 unknown.
 func (w *Watch) resetS() (ti float64, seen bool) {
-	if _, ti, ok := w.usualTuning(w.s.Off.T0); ok && ti > 0 && ti < 4e4 {
+	if _, ti, ok := w.usualOfRun(); ok && ti > 0 && ti < 4e4 {
 		// A filter in the controller or a late OP makes the reading too short, never too
 		// long: where the loop list says more, within reason, it is believed.
 		if r := w.loop.IdealReset; r > ti && r < 20*ti {
@@ -237,7 +237,7 @@ func (w *Watch) resetS() (ti float64, seen bool) {
 // gainPct is the gain to reckon with, %/%, signed; ok false when unknown.
 func (w *Watch) gainPct() (kc float64, ok bool) {
 	a := w.sign()
-	if k, _, ok := w.usualTuning(w.s.Off.T0); ok && a != 0 {
+	if k, _, ok := w.usualOfRun(); ok && a != 0 {
 		return a * k, true
 	}
 	if k, _, ok := w.tuning(0, 0); ok {

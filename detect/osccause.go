@@ -283,12 +283,13 @@ const squareLeast = 0.1
 func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also [2]Cause, si float64, sh shapes, rk, rt float64, changed, slack bool) {
 	s := &w.s
 	o := &s.Osc
-	q, _ := b.stat(int(o.Bank), min(int(b.N), ringLen))
+	q, _ := b.stat(int(o.Bank), int(b.N))
+	spread := b.spread(q.n)
 	move := o.AmpHi / max(o.AmpLo, 1e-9)
 	keeps, strays := s.Clock.beat()
 	// A slow swing far beyond the reset time may look like it; but the band of a valve
 	// makes its cycles alike, where ringing begins anew with each load.
-	tri := w.triangle(si, sh, q.regular, strays) && q.spread < alike && !(phi > 60 && si < 0.72 && !(sh.stick > 0.58))
+	tri := w.triangle(si, sh, q.regular, strays) && spread < alike && !(phi > 60 && si < 0.72 && !(sh.stick > 0.58))
 	integrating := w.loop.Process == configs.Integrating
 	stuckBefore := o.LastCause != 0 && causes[o.LastCause] == ValveSticking
 	lately := o.LastCause != 0 && w.in.t-o.LastAt < 60*o.P && math.Abs(math.Log(o.P/o.LastP)) < 0.75
@@ -308,7 +309,7 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		o.LastAt, o.LastP = w.in.t, o.P
 	case slack && !(keeps && s.Clock.long()):
 		o.setCause(GainTooLow, [2]Cause{ResetTooShort}, 0.92)
-	case keeps && (changed || slack || clipped || !s.Clock.long() && q.spread > steady):
+	case keeps && (changed || slack || clipped || !s.Clock.long() && spread > steady):
 		// A beat speaks for outside, a tuning changed for the loop itself; a swing that
 		// loads keep up wanders in size, and its phase strays slowly when it rings long.
 		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, byPhi}, 0.5)
@@ -327,9 +328,9 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		// A gap or a spell in manual took the record of the shape: nothing new is known.
 	case play && !changed && !follows:
 		o.setCause(ValveDeadBand, [2]Cause{ValveSticking}, 0.8)
-	case o.Sticking && !integrating && si > shapeStuck && q.spread < alike:
+	case o.Sticking && !integrating && si > shapeStuck && spread < alike:
 		// A shape once plain is not taken back because noise blurs it for a while.
-	case lately && !integrating && si > shapeStuck && q.spread < alike && !follows:
+	case lately && !integrating && si > shapeStuck && spread < alike && !follows:
 		o.setCause(ValveSticking, [2]Cause{ProcessNonlinear}, 0.88)
 	case tri && sh.h3OP > 0.25 && !strays:
 		// OP square: what drives the loop may be, a sticking valve makes OP a triangle.
@@ -349,7 +350,7 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		// With the product k Kc Ti too small alone the swing would lose four fifths a cycle
 		// at this lag and not be so even: it is the dead time that keeps it up.
 		o.setCause(byPhi, [2]Cause{ResetTooShort, GainTooLow}, 0.75)
-	case integrating && phi > phiValve && si < 0.78 && !changed && (q.spread > 0.12 || strays):
+	case integrating && phi > phiValve && si < 0.78 && !changed && (spread > 0.12 || strays):
 		// A slow swing far beyond the reset time: an integrating loop with too little
 		// gain is poorly damped for any reset (Skogestad 2003).
 		o.setCause(GainTooLow, [2]Cause{ResetTooShort}, 0.75)
@@ -364,12 +365,12 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	case changed:
 		// What changed is not what the lag points at.
 		o.setCause(Undetermined, [2]Cause{GainTooHigh, ResetTooShort}, 0.5)
-	case si < 0.45 && s.Clock.exact() && q.spread < 0.03 && move < 1.1:
+	case si < 0.45 && s.Clock.exact() && spread < 0.03 && move < 1.1:
 		// Nothing disturbs this loop, so nothing shows whether the cycle would come back
 		// to its beat; but a swing of the loop's own neither grows nor dies only at one
 		// value of its tuning.
 		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.75)
-	case si < 0.5 && strays && q.regular > ownBeat && (move > 1.7 || phi < 25 && move > 1.5 || phi > 60 && q.spread > 0.14 && move > 1.4):
+	case si < 0.5 && strays && q.regular > ownBeat && (move > 1.7 || phi < 25 && move > 1.5 || phi > 60 && spread > 0.14 && move > 1.4):
 		o.setCause(byPhi, [2]Cause{OutsideDisturbance}, 0.75)
 	default:
 		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, byPhi}, 0.5)

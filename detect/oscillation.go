@@ -61,8 +61,8 @@ const shiftBeat = 4 * 3600
 func (w *Watch) judgeCycles(level int, b *cycleBank) {
 	s := &w.s
 	o := &s.Osc
-	w.countKept(level, b)
 	period, regular, ok := b.lengths(8)
+	w.countKept(level, b, ok && fast(level, period))
 	in := ok && period > lowP(level) && period < bankHighP
 	var st ringStat
 	watched := o.Grow || o.Sus || b.Conf > 0 || b.Kept > 0 || s.Track.On && int(s.Track.Bank) == level
@@ -91,9 +91,8 @@ func (w *Watch) judgeCycles(level int, b *cycleBank) {
 	if st.period == 0 {
 		return // irregular: nothing to judge yet
 	}
-	sigma := s.Noise.sigma()
 	own := o.Grow || o.Sus
-	if !own && st.regular > 3 && st.period > bankLowP && st.amp > max(1.3*sigma, 0.08) && (!w.usualKnown(b) || st.amp > 1.2*b.Usual.Value()) && w.betterTrack(level, st) {
+	if !own && st.regular > 3 && st.period > bankLowP && st.amp > max(1.3*s.Noise.sigma(), 0.08) && (!w.usualKnown(b) || st.amp > 1.2*b.Usual.Value()) && w.betterTrack(level, st) {
 		w.startTrack(level)
 	}
 	if s.Track.On && int(s.Track.Bank) == level {
@@ -127,19 +126,18 @@ func (w *Watch) usualKnown(b *cycleBank) bool { return b.Usual.N >= 40 }
 func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 	s := &w.s
 	o := &s.Osc
-	sigma := s.Noise.sigma()
-	usual := b.Usual.Value()
-	tip := b.tip()
-	known := w.usualKnown(b)
-	least := max(1.6*sigma, 0.12)
-	if !known {
-		least = max(3*sigma, 1)
-	}
-	grow := false
 	if fast(level, st.period) && b.Kept < fastGrow {
 		b.Conf = 0
 		return
 	}
+	sigma := s.Noise.sigma()
+	usual := b.Usual.Value()
+	tip := b.tip()
+	least := max(1.6*sigma, 0.12)
+	if !w.usualKnown(b) {
+		least = max(3*sigma, 1)
+	}
+	grow := false
 	if o.Sus && (o.Evals > 24 && tip < 1.8*o.AmpLo || o.Sticking || tip < 1.5*float64(o.Grown)) || w.scheduled(b, st.period*w.levelS(level)) {
 		b.Conf = 0 // what has long been there, or stopped growing before, must really have grown
 		return
@@ -153,8 +151,10 @@ func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 			if tip <= r.usual*usual {
 				continue
 			}
-			if q, ok := b.stat(level, r.n); ok && q.regular >= r.regular*math.Sqrt(w.strict) && q.t >= r.t*w.strict &&
-				math.Pow(q.growth, float64(r.n-2)/2) >= r.over {
+			if _, regular, ok := b.lengths(r.n); !ok || regular < r.regular*math.Sqrt(w.strict) {
+				continue
+			}
+			if by, t := b.growth(r.n); t >= r.t*w.strict && math.Pow(by, float64(r.n-2)/2) >= r.over {
 				grow = true
 				break
 			}
@@ -162,8 +162,9 @@ func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 		if k := &s.Track; !grow && k.On && int(k.Bank) == level && k.GN >= 36 {
 			// Slow growth shows over the whole episode only.
 			beta, t := k.slope()
-			if q, ok := b.stat(level, 20); ok && q.regular >= 5 && t >= 14*w.strict && beta*k.GN > math.Log(1.8) && tip > 2*usual && q.growth > 1.005 {
-				grow = true
+			if _, regular, ok := b.lengths(ringLen); ok && regular >= 5 && t >= 14*w.strict && beta*k.GN > math.Log(1.8) && tip > 2*usual {
+				by, _ := b.growth(ringLen)
+				grow = by > 1.005
 			}
 		}
 	}
@@ -187,7 +188,8 @@ func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 	if live := &s.Cycles[o.Bank]; int(o.Bank) != level && !o.Sus && (live.Conf < growConfirm || live.N < 4 || tip > 1.5*live.tip()) {
 		w.beginOsc(level, b, 10)
 	}
-	o.Growth = max(st.growth, 1)
+	by, _ := b.growth(st.n)
+	o.Growth = max(by, 1)
 }
 
 // violent: loops of hours never show eight half-cycles in time; few but violent
@@ -197,10 +199,14 @@ func (w *Watch) violent(level int, b *cycleBank) bool {
 	if b.N < 4 || b.at(0).ln() < 0 {
 		return false
 	}
+	tip := b.tip()
+	if tip < 2.5 {
+		return false
+	}
 	period, regular, _ := b.lengths(4)
-	p, tip := period*w.levelS(level), b.tip()
+	p := period * w.levelS(level)
 	if regular < 3*w.strict || period < bankLowP || period > 1.5*bankHighP || p < 1200 ||
-		tip < max(2.5, 2.5*w.s.Noise.sigma()) || !w.steadySP(2.5*p) {
+		tip < 2.5*w.s.Noise.sigma() || !w.steadySP(2.5*p) {
 		return false
 	}
 	n := 3
@@ -281,22 +287,23 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 	if o.Sus && !(o.away() && int(o.Bank) != level) || o.Grow && w.in.t-o.Since < 40*st.period*w.levelS(level) && s.Osc.Bad == 0 {
 		return
 	}
-	slots := st.period * float64(int(1)<<level) // a period
-	sigma := s.Noise.beside(st.amp, slots)
-	usual := b.Usual.Value()
-	known := w.usualKnown(b) && b.Usual.N >= 60
+	lasts := b.Kept >= keptRaise && !fast(level, st.period)
 	period := st.period * w.levelS(level)
-	if w.scheduled(b, period) {
+	if !lasts && st.amp < 0.3 || w.scheduled(b, period) {
 		return
 	}
-	if b.Kept >= keptRaise && !fast(level, st.period) {
+	if lasts {
 		o.Sus = true
 		w.beginOsc(level, b, keptHalves)
 		return
 	}
-	if st.amp < max(1.5*sigma, 0.3) {
+	slots := st.period * float64(int(1)<<level) // a period
+	sigma := s.Noise.beside(st.amp, slots)
+	if st.amp < 1.5*sigma {
 		return
 	}
+	usual := b.Usual.Value()
+	known := w.usualKnown(b) && b.Usual.N >= 60
 	n := 18 // the plainer the cycle the fewer of its half-cycles tell it
 	if q, ok := b.stat(level, 14); ok && q.regular > 7 && q.least > 0.25 {
 		n = 14
@@ -336,8 +343,11 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 // scheduled: far slower than the loop's own dynamics and with the beat of the day
 // or of a planned upset (short above, long below): not a cycle of control.
 func (w *Watch) scheduled(b *cycleBank, period float64) bool {
+	if period < 5*3600 {
+		return false
+	}
 	rt, _ := w.resetS()
-	if period < 5*3600 || period < 6*rt { // 6 reset times: a lag of 44 degrees, no own swing is slower but few
+	if period < 6*rt { // 6 reset times: a lag of 44 degrees, no own swing is slower but few
 		return false
 	}
 	switch w.loop.Duty {
@@ -384,7 +394,7 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 	o := &s.Osc
 	o.Evals++
 	o.P, o.Amp, o.Regular = st.period*w.levelS(level), st.amp, st.regular
-	o.Growth = st.growth
+	o.Growth, _ = b.growth(st.n)
 	if (o.Evals > 8 || o.AmpHi == 0) && w.in.t-s.Motion.SPStep > 5*o.P {
 		if o.AmpHi == 0 || !o.AmpOn && o.Evals > 8 {
 			o.AmpOn = o.Evals > 8
@@ -394,7 +404,7 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 	}
 	// Growth that stops early with OP off its limits was no instability: a linear one
 	// goes on until something clips, be it a limit further down a cascade.
-	if q, ok := b.stat(level, 12); o.Grow && ok && o.Evals > 12 && (o.Evals < 40 || st.amp < 3*o.AmpLo) && q.growth < 1.012 && q.least > 0.7 && w.in.t-s.Tune.LimitAt > 8*o.P && q.amp < 25 {
+	if o.Grow && o.Evals > 12 && (o.Evals < 40 || st.amp < 3*o.AmpLo) && w.in.t-s.Tune.LimitAt > 8*o.P && w.stopped(level, b) {
 		o.Grow, o.GrowCause, o.Sus = false, 0, true
 		o.Grown = max(o.Grown, float32(o.AmpHi))
 		b.Conf = 0
@@ -420,6 +430,16 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 	if o.Evals%3 == 1 {
 		w.judgeOscCause(b)
 	}
+}
+
+// stopped: the newest half-cycles neither grow nor are near the ends of the range.
+func (w *Watch) stopped(level int, b *cycleBank) bool {
+	q, ok := b.stat(level, 12)
+	if !ok || !(q.least > 0.7 && q.amp < 25) {
+		return false
+	}
+	by, _ := b.growth(q.n)
+	return by < 1.012
 }
 
 // oscGone: the bank of the live oscillation has nothing regular now.

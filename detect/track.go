@@ -110,17 +110,17 @@ func (w *Watch) lookTrack(period float64) {
 	de, dop := detrend(e[:n], p), detrend(op[:n], p)
 	k.forget()
 	k.Looks++
-	s, t := shapeOf(dop[:p])
+	s, t := shapeOf(dop)
 	k.SinSum += s
 	k.TriSum += t
-	s, t = shapeOf(de[:p])
+	s, t = shapeOf(de)
 	k.SinPV += s
 	k.TriPV += t
 	om := 2 * math.Pi / float64(p)
-	or, oi := num.Phasor(dop[:p], om)
-	er, ei := num.Phasor(de[:p], om)
-	o3r, o3i := num.Phasor(dop[:p], 3*om)
-	e3r, e3i := num.Phasor(de[:p], 3*om)
+	or, oi := num.Phasor(dop, om)
+	er, ei := num.Phasor(de, om)
+	o3r, o3i := num.Phasor(dop, 3*om)
+	e3r, e3i := num.Phasor(de, 3*om)
 	k.H3 += ratio(math.Hypot(o3r, o3i), math.Hypot(or, oi))
 	k.Peaked += inPhase(complex(er, ei), complex(e3r, e3i))
 	re, im := or*er+oi*ei, oi*er-or*ei
@@ -128,7 +128,7 @@ func (w *Watch) lookTrack(period float64) {
 		k.PhRe += re / m
 		k.PhIm += im / m
 	}
-	k.Stick += busiestFifth(de[:p])
+	k.Stick += busiestFifth(de)
 }
 
 // swing closes one cycle of SP and PV.
@@ -195,8 +195,8 @@ func (w *Watch) shapes() shapes {
 }
 
 // detrend subtracts the moving mean of p samples; of 2p samples the middle p are
-// returned.
-func detrend(x []float64, p int) (y [trackLen]float64) {
+// returned, in the place of the first.
+func detrend(x []float64, p int) []float64 {
 	lo := p / 2
 	var sum float64
 	for i := 0; i < p; i++ {
@@ -208,12 +208,12 @@ func detrend(x []float64, p int) (y [trackLen]float64) {
 		if p%2 == 0 && i+p < len(x) {
 			mean += (x[i+p] - x[i]) / float64(2*p)
 		}
-		y[i] = x[lo+i] - mean
 		if i+p < len(x) {
 			sum += x[i+p] - x[i]
 		}
+		x[i] = x[lo+i] - mean
 	}
-	return y
+	return x[:p]
 }
 
 // shapeOf gives the summed sine and triangle errors of the two half-cycles of
@@ -233,27 +233,27 @@ func shapeOf(x []float64) (sine, triangle float64) {
 	up, down := -1, -1
 	sign := 0
 	zero := 0
-	for j := 0; j < 2*n; j++ {
-		v, pv := x[j%n], x[(j+n-1)%n]
-		if (v > 0) != (pv > 0) {
-			zero = j
-		}
-		s := 0
-		if v > band {
-			s = 1
-		} else if v < -band {
-			s = -1
-		}
-		if s != 0 && s != sign {
-			if sign != 0 {
-				if s > 0 && up < 0 {
+	before := x[n-1]
+	for range 2 { // what begins in the first round is seen whole in the second
+		for i, v := range x {
+			if (v > 0) != (before > 0) {
+				zero = i
+			}
+			before = v
+			s := 0
+			if v > band {
+				s = 1
+			} else if v < -band {
+				s = -1
+			}
+			if s != 0 && s != sign {
+				if sign > 0 && down < 0 {
+					down = zero
+				} else if sign < 0 && up < 0 {
 					up = zero
 				}
-				if s < 0 && down < 0 {
-					down = zero
-				}
+				sign = s
 			}
-			sign = s
 		}
 	}
 	if up < 0 || down < 0 {
@@ -261,10 +261,11 @@ func shapeOf(x []float64) (sine, triangle float64) {
 	}
 	var buf [trackLen]float64
 	half := func(from, to int) (float64, float64) {
-		m := ((to-from)%n + n) % n
-		for i := range m {
-			buf[i] = x[(from+i)%n]
+		if from <= to {
+			return num.SineTriangle(x[from:to])
 		}
+		m := copy(buf[:], x[from:])
+		m += copy(buf[m:], x[:to])
 		return num.SineTriangle(buf[:m])
 	}
 	s1, t1 := half(up, down)

@@ -153,23 +153,23 @@ func (w *Watch) stepFit(k, level int, e, si, op float64) {
 	}
 	r, lag, better := w.solveFit(k)
 	excited := r.X > fitX*1.25
-	sharp := lag > 0 || b.sharp(&r)
-	if !(r.ok() && excited && sharp) && b.N < fitBlockX {
+	good := r.ok() && excited && (lag > 0 || b.sharp(&r))
+	if !good && b.N < fitBlockX {
 		return
 	}
 	if excited {
-		good, vote := float32(0.01), int8(-1)
+		lawful, vote := float32(0.01), int8(-1)
 		if r.R2 > 0.95 {
-			good, vote = 1, 1
+			lawful, vote = 1, 1
 		}
 		b.ByLaw = max(-lawVotes, min(b.ByLaw+vote, lawVotes))
 		if t := &w.s.Tune; t.Law == 0 {
-			t.Law = good
+			t.Law = lawful
 		} else {
-			t.Law += (good - t.Law) / 8
+			t.Law += (lawful - t.Law) / 8
 		}
 	}
-	if r.ok() && excited && sharp {
+	if good {
 		b.Run = max(b.Run, 0)
 		b.Run = min(b.Run+1, 100)
 		w.keepFit(k, r, lag, better)
@@ -182,6 +182,7 @@ func (w *Watch) stepFit(k, level int, e, si, op float64) {
 		w.stepQuiet(k, &r)
 	}
 	b.clear(w.in.t)
+	w.usual.known = false
 }
 
 // pass is the band pass of the fits.
@@ -415,43 +416,86 @@ func (w *Watch) strays(k int, f *fit) float64 {
 // usualTuning is the tuning before time t: medians of the older good fits of the
 // scale that has most of them.
 func (w *Watch) usualTuning(t float64) (kc, ti float64, ok bool) {
+	var best *fitBank
 	most := 1
 	for k := range w.s.Fits {
 		b := &w.s.Fits[k]
-		var ks, ts [fitRing]float64
+		old := int(b.BaseK.N)
+		if old+int(min(b.Count, fitRing)) <= most {
+			continue
+		}
+		if old > 6 && (b.DevK.Value() > 0.5 || b.DevT.Value() > 0.7) {
+			continue // a scale at which the law does not show: filter, late OP, steps of an analyser
+		}
 		n, nt := 0, 0
-		for i := range min(int(b.Count), fitRing) {
-			f := &b.Ring[i]
-			if float64(f.At) < t && f.R2 > 0.95 {
-				ks[n] = math.Abs(float64(f.Kc))
+		for i := range min(b.Count, fitRing) {
+			if f := &b.Ring[i]; f.usualBefore(t) {
 				n++
 				if f.hasReset() {
-					ts[nt] = float64(f.Ti)
 					nt++
 				}
 			}
 		}
-		old := int(b.BaseK.N)
-		if old > 6 && (b.DevK.Value() > 0.5 || b.DevT.Value() > 0.7) {
-			continue // a scale at which the law does not show: filter, late OP, steps of an analyser
+		if n+old > most && (nt > 0 || b.BaseT.N > 0) {
+			most, best = n+old, b
 		}
-		if n+old <= most || nt == 0 && b.BaseT.N == 0 {
+	}
+	if best == nil {
+		return 0, 0, false
+	}
+	kc, ti = best.usual(t)
+	return kc, ti, true
+}
+
+// tuningOfRun is the usual tuning before the run of e, as a watch reckoned with last: asked
+// for in every slot, and another one only with a new run or a block of a fit.
+type tuningOfRun struct {
+	before    float64 // s, begin of the run
+	kc, ti    float64
+	known, ok bool
+}
+
+// usualOfRun is usualTuning before the running run of e.
+func (w *Watch) usualOfRun() (kc, ti float64, ok bool) {
+	u := &w.usual
+	if t := w.s.Off.T0; !u.known || u.before != t {
+		u.kc, u.ti, u.ok = w.usualTuning(t)
+		u.before, u.known = t, true
+	}
+	return u.kc, u.ti, u.ok
+}
+
+// usualBefore: the fit counts for what was usual before t, s.
+func (f *fit) usualBefore(t float64) bool { return float64(f.At) < t && f.R2 > 0.95 }
+
+// usual is gain and reset time, s, of the bank before t: of its history, where there is
+// one.
+func (b *fitBank) usual(t float64) (kc, ti float64) {
+	kc, ti = b.BaseK.Value(), b.BaseT.Value()
+	if b.BaseK.N >= 3 && b.BaseT.N >= 3 {
+		return kc, ti
+	}
+	var ks, ts [fitRing]float64
+	n, nt := 0, 0
+	for i := range min(b.Count, fitRing) {
+		f := &b.Ring[i]
+		if !f.usualBefore(t) {
 			continue
 		}
-		most = n + old
-		if old >= 3 || n == 0 {
-			kc = b.BaseK.Value()
-		} else {
-			kc = num.Median(ks[:n])
+		ks[n] = math.Abs(float64(f.Kc))
+		n++
+		if f.hasReset() {
+			ts[nt] = float64(f.Ti)
+			nt++
 		}
-		if b.BaseT.N >= 3 || nt == 0 {
-			ti = b.BaseT.Value()
-		} else {
-			ti = num.Median(ts[:nt])
-		}
-		ok = true
 	}
-	return
+	if b.BaseK.N < 3 && n > 0 {
+		kc = num.Median(ks[:n])
+	}
+	if b.BaseT.N < 3 && nt > 0 {
+		ti = num.Median(ts[:nt])
+	}
+	return kc, ti
 }
 
 // sign is the sign with which OP answers e: from the loop list, else as seen.

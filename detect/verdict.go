@@ -2,6 +2,7 @@ package detect
 
 import (
 	"math"
+	"slices"
 
 	"midwatch/collector"
 )
@@ -13,13 +14,16 @@ func (w *Watch) verdict() { w.verdictAt(w.in.t) }
 
 func (w *Watch) verdictAt(t float64) {
 	s := &w.s
-	if s.OpenN == 0 && !w.suspects() {
-		return
+	suspect := w.suspects()
+	if s.OpenN == 0 && !slices.Contains(suspect[:], true) {
+		return // the common slot
 	}
 	var c [kinds]claim
 	for k := range table {
-		c[k] = w.claim(k)
-		c[k].On = c[k].On && w.judges(k)
+		if suspect[k] || s.Open[k].On {
+			c[k] = w.claim(k)
+			c[k].On = c[k].On && w.judges(k)
+		}
 	}
 	// Saturation explains the offset; growth explains the swing; pegged or frozen
 	// PV explains what the controller makes of it.
@@ -47,7 +51,9 @@ func (w *Watch) verdictAt(t float64) {
 		fold(kSluggish)
 	}
 	for k := range table {
-		w.settle(k, t, &c[k], rejudge[k])
+		if suspect[k] || s.Open[k].On {
+			w.settle(k, t, &c[k], rejudge[k])
+		}
 	}
 }
 
@@ -120,21 +126,30 @@ func (o *openFinding) weigh(c *claim) {
 	if causes[o.Cause] == WindUp && causes[c.Cause] == OutputLimit {
 		c.Cause, c.Conf = o.Cause, o.Conf
 	}
-	und := causeIndex(Undetermined)
-	if c.Cause != o.Cause && c.Cause != und && o.Said&(1<<c.Cause) != 0 && o.Returns < mostReturns {
+	if c.Cause != o.Cause && causes[c.Cause] != Undetermined && o.Said&(1<<c.Cause) != 0 && o.Returns < mostReturns {
 		o.Returns++
 	}
 	if o.Returns >= mostReturns {
-		c.Cause, c.Conf = und, 0.5
+		c.Cause, c.Conf = causeIndex(Undetermined), 0.5
 	}
 }
 
-// suspects says whether any detector has something to claim: the common slot has
-// nothing, and is spared the rest.
-func (w *Watch) suspects() bool {
+// suspects says which detectors may have something to claim; the others have not.
+func (w *Watch) suspects() [kinds]bool {
 	s := &w.s
-	return s.Osc.Grow || s.Osc.Sus || s.OffPast.Offset.On || s.OffPast.Sat.On || s.Sat.WindUp || s.Recov.Slow ||
-		s.Misc.Frozen || s.Misc.Pegged || s.Misc.OffNormal || s.Misc.Stale || s.Change.On
+	return [kinds]bool{
+		kGrowing:    s.Osc.Grow,
+		kSustained:  s.Osc.Sus,
+		kSticking:   s.Osc.Sus,
+		kOffset:     s.OffPast.Offset.On,
+		kSaturation: s.OffPast.Sat.On || s.Sat.WindUp,
+		kSluggish:   s.Recov.Slow,
+		kFrozen:     s.Misc.Frozen,
+		kRangeEnd:   s.Misc.Pegged,
+		kMode:       s.Misc.OffNormal,
+		kTuning:     s.Change.On,
+		kStale:      s.Misc.Stale,
+	}
 }
 
 // say emits the finding of a kind as it stands.

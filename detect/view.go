@@ -252,8 +252,9 @@ func (w *Watch) Explain() []string {
 	for l := range w.levels() {
 		b := &s.Cycles[l]
 		if st, ok := b.stat(l, 8); ok && st.regular > 2.5 {
+			by, t := b.growth(st.n)
 			out = append(out, fmt.Sprintf("cycle of %s: amplitude %.3g %%, usual %.3g %%, regularity %.1f, growth %.2f a cycle (t %.1f)",
-				duration(st.period*w.levelS(l)), st.amp, b.Usual.Value(), st.regular, st.growth, st.t))
+				duration(st.period*w.levelS(l)), st.amp, b.Usual.Value(), st.regular, by, t))
 		}
 	}
 	if s.Osc.Grow || s.Osc.Sus {

@@ -35,10 +35,11 @@ type Watch struct {
 	strict float64        // factor on persistence from the nuisance budget, 1 at the default
 	s      state
 	in     input
+	usual  tuningOfRun
 	emit   func(*Finding)
-	mute   bool  // warm-up: nothing is learnt or said
 	evEnd  int64 // end of the slot closed by the last Step, ms UTC
 	hasEv  bool
+	mute   bool // warm-up: nothing is learnt or said
 }
 
 // state is all that a watch knows: plain numbers, no pointer, at most 4 KiB
@@ -229,6 +230,7 @@ func (w *Watch) relearn(k int) bool {
 	keep := w.s
 	w.s = state{Through: keep.Through, Grid: grid{T0: keep.Grid.T0, Begun: true, At: keep.Grid.At, LastFrame: keep.Grid.LastFrame},
 		Scale: keep.Scale, Last: keep.Last, Misc: keep.Misc, Change: keep.Change, Marks: keep.Marks, Spell: keep.Spell.found(), Open: keep.Open, OpenN: keep.OpenN, Slot: keep.Slot}
+	w.usual.known = false
 	w.s.Motion.first()
 	return true
 }

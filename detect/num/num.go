@@ -27,9 +27,9 @@ func (q *Quantile) Add(v, p, floor, least float64) {
 		return
 	}
 	// Large at first, so that a poor first value is soon left.
-	step := 2 / float64(q.N)
-	if step < floor {
-		step = floor
+	step := floor
+	if float64(q.N)*floor < 2 {
+		step = 2 / float64(q.N)
 	}
 	if v > float64(q.V) {
 		q.V *= float32(1 + step*p)
@@ -187,24 +187,30 @@ func Median(x []float64) float64 {
 	return (s[n/2-1] + s[n/2]) / 2
 }
 
+// MostHalf is how many samples a half-cycle may have for SineTriangle.
+const MostHalf = 64
+
 // SineTriangle is the shape comparison of He, Wang, Pottmann & Qin (2007, "A
 // curve fitting method for detecting valve stiction in oscillating control
 // loops", Ind. Eng. Chem. Res. 46, 4549) on one half-cycle x, sampled evenly from
 // one zero crossing to the next: the mean square errors of the best half sine and
-// of the best triangle with free peak. Fewer than 5 samples give zeros.
+// of the best triangle with free peak. Fewer than 5 samples give zeros; they are at
+// most MostHalf.
 func SineTriangle(x []float64) (mseSine, mseTriangle float64) {
 	n := len(x)
 	if n < 5 {
 		return 0, 0
 	}
+	var at [MostHalf]float64 // of the samples, in parts of the half-cycle
 	var yy float64
-	for _, v := range x {
+	for i, v := range x {
+		at[i] = (float64(i) + 0.5) / float64(n)
 		yy += v * v
 	}
 	fit := func(shape func(u float64) float64) float64 {
 		var p, q float64
 		for i, v := range x {
-			s := shape((float64(i) + 0.5) / float64(n))
+			s := shape(at[i])
 			p += s * v
 			q += s * s
 		}
