@@ -106,6 +106,7 @@ fuzz:
 # How much is found and how much is said for nothing, over simulated loop-years.
 quality:
 	@$(GO) run ./cmd/internal/quality/bench -n 20 -d 14
+	@$(GO) run ./cmd/internal/quality/others/bench -n 12 -d 14
 	@$(GO) run ./cmd/internal/quality/bench -te testdata/te
 
 bench:

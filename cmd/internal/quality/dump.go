@@ -61,25 +61,34 @@ func Details(w io.Writer, results []Result) {
 // One runs one scenario of each matching family and writes what is true of it and
 // all that was said, as JSON lines.
 func One(w io.Writer, o Options, index int) error {
-	enc := json.NewEncoder(w)
 	for _, fs := range [][]family{faultFamilies, healthyFamilies} {
 		for i := range fs {
 			if o.Match != nil && !o.Match(fs[i].name) {
 				continue
 			}
 			s := fs[i].make(o.Seed, o.Hold, index, o.Days)
-			fmt.Fprint(w, describe(s))
-			r := judge(s, o.Nuisance)
-			for _, f := range r.Findings {
-				if err := enc.Encode(f); err != nil {
-					return err
-				}
+			if err := OneCase(w, s.asCase(), o.Nuisance); err != nil {
+				return err
 			}
-			fmt.Fprintf(w, "# found %v (subtle %v, error ratio %.1f), delay %.1f, cause %s, extra %d; tuning true %.4g %.4g seen %.4g %.4g\n",
-				r.Found, r.Subtle, s.ratio(s.truth.member), r.DelayUnits, r.Cause, len(r.Extra), r.GainTrue, r.ResetTrue, r.GainSeen, r.ResetSeen)
+			fmt.Fprintf(w, "# error ratio %.1f\n", s.ratio(s.truth.member))
 		}
 	}
 	return nil
+}
+
+// OneCase runs one case and writes what is true of it and all that was said.
+func OneCase(w io.Writer, c *Case, nuisance float64) error {
+	enc := json.NewEncoder(w)
+	fmt.Fprint(w, c.About)
+	r := Judge(c, nuisance)
+	for _, f := range r.Findings {
+		if err := enc.Encode(f); err != nil {
+			return err
+		}
+	}
+	_, err := fmt.Fprintf(w, "# found %v (subtle %v), delay %.1f, cause %s, extra %d; tuning true %.4g %.4g seen %.4g %.4g\n",
+		r.Found, r.Subtle, r.DelayUnits, r.Cause, len(r.Extra), r.GainTrue, r.ResetTrue, r.GainSeen, r.ResetSeen)
+	return err
 }
 
 // describe says what a scenario holds.
@@ -98,22 +107,23 @@ func describe(s *scenario) string {
 }
 
 // Dump writes one scenario as trend.csv, loops.csv and truth.txt.
-func Dump(o Options, index int, dir string) (err error) {
-	var s *scenario
+func Dump(o Options, index int, dir string) error {
 	for _, fs := range [][]family{faultFamilies, healthyFamilies} {
 		for i := range fs {
-			if s == nil && o.Match(fs[i].name) {
-				s = fs[i].make(o.Seed, o.Hold, index, o.Days)
+			if o.Match(fs[i].name) {
+				return DumpCase(fs[i].make(o.Seed, o.Hold, index, o.Days).asCase(), dir)
 			}
 		}
 	}
-	if s == nil {
-		return fmt.Errorf("no family matches; hint: -list shows them")
-	}
-	if err := os.WriteFile(filepath.Join(dir, "truth.txt"), []byte(describe(s)), 0o644); err != nil {
+	return fmt.Errorf("no family matches; hint: -list shows them")
+}
+
+// DumpCase writes one case as trend.csv, loops.csv and truth.txt.
+func DumpCase(c *Case, dir string) (err error) {
+	if err := os.WriteFile(filepath.Join(dir, "truth.txt"), []byte(c.About), 0o644); err != nil {
 		return err
 	}
-	if err := dumpLoops(filepath.Join(dir, "loops.csv"), s); err != nil {
+	if err := dumpLoops(filepath.Join(dir, "loops.csv"), c.Rows); err != nil {
 		return err
 	}
 	f, err := os.Create(filepath.Join(dir, "trend.csv"))
@@ -135,9 +145,9 @@ func Dump(o Options, index int, dir string) (err error) {
 		return b
 	}
 	var b []byte
-	s.run(func(i int, fr *collector.Frame) {
+	c.Frames(func(i int, fr *collector.Frame) {
 		b = append(b[:0], detect.FormatTime(fr.Time)...)
-		b = append(append(b, ','), s.rigs[i].name...)
+		b = append(append(b, ','), c.Rows[i].Name...)
 		b = num(num(num(b, fr.PV), fr.SP), fr.OP)
 		b = append(append(b, ','), fr.Mode.String()...)
 		b = append(b, ',')
@@ -168,10 +178,10 @@ func Dump(o Options, index int, dir string) (err error) {
 	return w.Flush()
 }
 
-func dumpLoops(path string, s *scenario) error {
+func dumpLoops(path string, rows []*configs.Loop) error {
 	var b strings.Builder
 	w := csv.NewWriter(&b)
-	head := []string{"loop", "pv_low", "pv_high", "op_limit_low", "op_limit_high", "action", "gain", "reset_s", "rate_s", "form", "process", "element", "stroke_s", "op_split", "normal_mode", "duty", "scan_s", "sample_s", "report", "sp_ramp"}
+	head := []string{"loop", "pv_low", "pv_high", "op_limit_low", "op_limit_high", "action", "gain", "reset_s", "rate_s", "form", "process", "element", "inner", "stroke_s", "op_split", "normal_mode", "duty", "scan_s", "sample_s", "report", "sp_ramp"}
 	if err := w.Write(head); err != nil {
 		return err
 	}
@@ -181,15 +191,14 @@ func dumpLoops(path string, s *scenario) error {
 		}
 		return strconv.FormatFloat(v, 'g', -1, 64)
 	}
-	for _, l := range s.rigs {
-		r := l.row
+	for _, r := range rows {
 		reset := num(r.ResetS)
 		if r.PropOnly {
 			reset = "none"
 		}
 		err := w.Write([]string{r.Name, num(r.PVLow), num(r.PVHigh), num(r.OPLimitLow), num(r.OPLimitHigh),
 			[...]string{"", "reverse", "direct"}[r.Action], num(r.Gain), reset, num(r.RateS), [...]string{"ideal", "series", "parallel"}[r.Form],
-			[...]string{"", "self-regulating", "integrating", "runaway"}[r.Process], r.Element, num(r.StrokeS), num(r.OPSplit), r.NormalMode,
+			[...]string{"", "self-regulating", "integrating", "runaway"}[r.Process], r.Element, r.Inner, num(r.StrokeS), num(r.OPSplit), r.NormalMode,
 			[...]string{configs.Tight: "tight", configs.Averaging: "averaging", configs.GapDuty: "gap", configs.Batch: "batch", configs.StartStop: "start-stop", configs.Ratio: "ratio", configs.Selector: "selector", configs.Standby: "standby"}[r.Duty],
 			num(r.ScanS), num(r.SampleS), [...]string{"periodic", "exception"}[r.Report], num(r.SPRamp)})
 		if err != nil {

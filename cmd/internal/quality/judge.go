@@ -2,13 +2,10 @@ package quality
 
 import (
 	"math"
-	"runtime"
 	"slices"
 	"sort"
-	"sync"
 
 	"midwatch/collector"
-	"midwatch/configs"
 	"midwatch/detect"
 )
 
@@ -84,47 +81,24 @@ func Run(o Options) []Result {
 			}
 		}
 	}
-	out := make([]Result, len(jobs))
-	var wg sync.WaitGroup
-	next := make(chan int)
-	var mu sync.Mutex
-	for range runtime.GOMAXPROCS(0) {
-		wg.Go(func() {
-			for k := range next {
-				out[k] = judge(jobs[k].f.make(o.Seed, o.Hold, jobs[k].i, o.Days), o.Nuisance)
-				if o.Each != nil {
-					mu.Lock()
-					o.Each(&out[k])
-					mu.Unlock()
-				}
-			}
-		})
-	}
-	for k := range jobs {
-		next <- k
-	}
-	close(next)
-	wg.Wait()
-	return out
+	return JudgeAll(len(jobs), func(k int) *Case {
+		return jobs[k].f.make(o.Seed, o.Hold, jobs[k].i, o.Days).asCase()
+	}, o.Nuisance, o.Each)
 }
 
-// judge runs one scenario through the watch and scores what it says.
-func judge(s *scenario, nuisance float64) Result {
-	res := Result{Family: s.family.name, Index: s.index, Healthy: s.family.healthy, EveryS: s.rigs[0].rec.every,
-		Seconds: s.duration * float64(len(s.rigs)), DelayUnits: math.NaN()}
+// Judge runs one case through the watch and scores what it says.
+func Judge(c *Case, nuisance float64) Result {
+	res := Result{Family: c.Family, Index: c.Index, Healthy: c.Healthy, EveryS: c.EveryS[0],
+		Seconds: c.Seconds * float64(len(c.Rows)), DelayUnits: math.NaN()}
 	heard := newListener()
-	watches := make([]*detect.Watch, len(s.rigs))
-	rows := make([]*configs.Loop, len(s.rigs))
-	slowest := 0.0
-	for i, l := range s.rigs {
-		rows[i] = l.row
-		watches[i] = detect.New(l.row, collector.LoopID(i), detect.Options{NuisancePerLoopYear: nuisance})
-		slowest = math.Max(slowest, l.rec.every)
+	watches := make([]*detect.Watch, len(c.Rows))
+	for i, row := range c.Rows {
+		watches[i] = detect.New(row, collector.LoopID(i), detect.Options{NuisancePerLoopYear: nuisance})
 	}
-	sites := detect.NewSites(rows)
+	sites := detect.NewSites(c.Rows)
 	slot := int64(0)
-	lag := int64(slowest*2000) + 1
-	s.run(func(i int, f *collector.Frame) {
+	lag := int64(slices.Max(c.EveryS)*2000) + 1
+	c.Frames(func(i int, f *collector.Frame) {
 		res.Frames++
 		watches[i].Step(f, heard.hear)
 		if ev, ok := watches[i].TakeEvidence(); ok {
@@ -135,7 +109,11 @@ func judge(s *scenario, nuisance float64) Result {
 			sites.Slot(end, heard.hear)
 		}
 	})
-	score(s, heard, watches, &res)
+	t := c.Truth()
+	res.Findings = heard.all
+	res.Subtle = c.Subtle()
+	scoreFindings(c, &t, heard, &res)
+	scoreTuning(c, &t, heard, watches, &res)
 	return res
 }
 
@@ -200,34 +178,20 @@ func aboutData(k detect.Kind) bool {
 	return false
 }
 
-func score(s *scenario, h *listener, watches []*detect.Watch, res *Result) {
-	t := &s.truth
-	if t.cycles && t.unit > 0 && t.member <= 0 { // the swing of a valve, of a group's root too, is known only from the run
-		if l := s.rigs[0]; l.turns > 10 {
-			t.unit = math.Max(2*(s.duration-t.onset)/float64(l.turns), l.pu)
-		}
-	}
-	res.Findings = h.all
-	res.Subtle = t.subtle != nil && t.subtle(s)
-	scoreFindings(s, h, res)
-	scoreTuning(s, h, watches, res)
-}
-
-func scoreFindings(s *scenario, h *listener, res *Result) {
-	t := &s.truth
-	onset, end := s.epoch+int64(t.onset*1000), s.epoch+int64(t.end*1000)
+func scoreFindings(c *Case, t *Truth, h *listener, res *Result) {
+	onset, end := c.Epoch+int64(t.OnsetS*1000), c.Epoch+int64(t.EndS*1000)
 	var right, wrong, open bool
 	for _, e := range h.episodes() {
 		k := e.last.Kind
 		if aboutData(k) || e.raised > end {
 			continue
 		}
-		own := slices.Contains(t.kinds, k)
-		member := t.member < 0 || len(s.rigs) == 1 || e.last.Loop == s.rigs[t.member].name || k == detect.SharedOscillation
-		if t.early > 0 && own && e.raised < onset && e.raised >= onset-int64(t.early*1000) {
+		own := slices.Contains(t.Kinds, k)
+		member := t.Member < 0 || len(c.Rows) == 1 || e.last.Loop == c.Rows[t.Member].Name || k == detect.SharedOscillation
+		if t.EarlyS > 0 && own && e.raised < onset && e.raised >= onset-int64(t.EarlyS*1000) {
 			e.raised = onset
 		}
-		if t.forbid != nil && e.raised >= onset && t.forbid(s, e.last.Loop, e.named) {
+		if c.Forbid != nil && e.raised >= onset && c.Forbid(e.last.Loop, e.named) {
 			f := e.last
 			f.At = e.raised
 			res.Extra = append(res.Extra, f)
@@ -237,8 +201,8 @@ func scoreFindings(s *scenario, h *listener, res *Result) {
 			}
 		}
 		switch {
-		case (res.Healthy || e.raised >= onset && !own) && (slices.Contains(t.also, k) || trulyClipped(s, k)):
-		case res.Healthy || e.raised < onset || !own && !slices.Contains(t.also, k):
+		case (res.Healthy || e.raised >= onset && !own) && (slices.Contains(t.Also, k) || c.Clipped(k)):
+		case res.Healthy || e.raised < onset || !own && !slices.Contains(t.Also, k):
 			f := e.last
 			f.At = e.raised
 			res.Extra = append(res.Extra, f)
@@ -251,21 +215,21 @@ func scoreFindings(s *scenario, h *listener, res *Result) {
 		case own && member:
 			if !res.Found {
 				res.Found = true
-				res.DelayUnits = float64(e.raised-onset) / 1000 / t.unit
+				res.DelayUnits = float64(e.raised-onset) / 1000 / t.UnitS
 			}
-			if len(t.causes) == 0 {
+			if len(t.Causes) == 0 {
 				break
 			}
-			c := e.last.Cause
+			said := e.last.Cause
 			switch {
-			case c == detect.NoCause || c == detect.Undetermined || slices.Contains(t.soft, c):
+			case said == detect.NoCause || said == detect.Undetermined || slices.Contains(t.Soft, said):
 				open = true
-			case slices.Contains(t.causes, c):
+			case slices.Contains(t.Causes, said):
 				right = true
 				res.Named = append(res.Named, Claim{e.last.Confidence, true})
 			default:
 				wrong = true
-				res.Said = c
+				res.Said = said
 				res.Named = append(res.Named, Claim{e.last.Confidence, false})
 			}
 		}
@@ -280,27 +244,17 @@ func scoreFindings(s *scenario, h *listener, res *Result) {
 	}
 }
 
-// trulyClipped: OP really sat at its limit for longer than a recovery takes, or PV
-// at an end of its range, so a finding about that is no false one, whatever the
-// family.
-func trulyClipped(s *scenario, k detect.Kind) bool {
-	l := s.rigs[0]
-	return l.clipLongest > 2*l.recovery && (k == detect.OutputSaturation || k == detect.SustainedOffset) ||
-		l.endLongest > 60 && k == detect.PVAtRangeEnd
-}
-
-func scoreTuning(s *scenario, h *listener, watches []*detect.Watch, res *Result) {
-	l := s.rigs[max(s.truth.member, 0)]
-	res.GainTrue, res.ResetTrue = l.law.kc, l.law.ti
-	res.HasTuning = !math.IsInf(l.law.ti, 1) && l.law.schedule == nil && l.law.gap == 0
-	v := watches[max(s.truth.member, 0)].View()
+func scoreTuning(c *Case, t *Truth, h *listener, watches []*detect.Watch, res *Result) {
+	law, own := c.Law(), max(t.Member, 0)
+	res.GainTrue, res.ResetTrue, res.HasTuning = law.Gain, law.ResetS, law.PI
+	v := watches[own].View()
 	res.GainSeen, res.ResetSeen = v.GainPct, v.ResetS
 	if v.GainPct == 0 {
 		res.GainSeen, res.ResetSeen = math.NaN(), math.NaN()
 	}
 	res.GainOfText, res.ResetInMsg = math.NaN(), math.NaN()
 	for i := len(h.all) - 1; i >= 0; i-- {
-		if f := &h.all[i]; f.Loop == l.name && f.Event != detect.Cleared && f.At > s.epoch+int64(s.truth.onset*1000) {
+		if f := &h.all[i]; f.Loop == c.Rows[own].Name && f.Event != detect.Cleared && f.At > c.Epoch+int64(t.OnsetS*1000) {
 			if g, ok := f.Measures.Get("gain"); ok {
 				res.GainOfText = g
 				if r, ok := f.Measures.Get("reset_s"); ok {

@@ -9,6 +9,7 @@ import (
 	"strings"
 	"testing"
 
+	"midwatch/configs"
 	"midwatch/detect"
 )
 
@@ -184,16 +185,16 @@ func TestEpisodes(t *testing.T) {
 // A family scored by hand.
 func TestScoreCounts(t *testing.T) {
 	mk := func(findings ...detect.Finding) Result {
-		s := &scenario{family: &family{name: "x"}, rigs: []*rig{{name: "a"}}, duration: 1000,
-			truth: truth{kinds: kinds{detect.GrowingOscillation}, also: kinds{detect.SustainedOscillation}, causes: causes{detect.ResetTooShort},
-				soft: causes{detect.GainTooHigh}, onset: 100, end: 1000, unit: 10}}
+		c := &Case{Rows: []*configs.Loop{configs.NewLoop("a")}, Clipped: func(detect.Kind) bool { return false }}
+		truth := &Truth{Kinds: kinds{detect.GrowingOscillation}, Also: kinds{detect.SustainedOscillation}, Causes: causes{detect.ResetTooShort},
+			Soft: causes{detect.GainTooHigh}, OnsetS: 100, EndS: 1000, UnitS: 10}
 		h := newListener()
 		for i := range findings {
 			findings[i].Loop, findings[i].Event = "a", cmp.Or(findings[i].Event, detect.Raised)
 			h.hear(&findings[i])
 		}
 		res := Result{}
-		scoreFindings(s, h, &res)
+		scoreFindings(c, truth, h, &res)
 		return res
 	}
 	g := func(at int64, c detect.Cause) detect.Finding {
