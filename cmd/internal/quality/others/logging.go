@@ -22,7 +22,6 @@ type logger struct {
 	silentTo       float64 // s: no frames up to here
 	silent, gap    bool
 	told, toldOP   float64
-	tellNow        float64
 	started        bool
 	lastPV, lastOP float64
 }
