@@ -13,9 +13,6 @@ import (
 
 const recRing = 6
 
-// areaRing is how many set-point steps are remembered with their residence times.
-const areaRing = 5
-
 // unresolved is the residence time of a process, samples, that sums over samples cannot
 // tell from a shorter one: they are off by half a sample at either end, and so is when
 // the step was (common practice, no source).
@@ -31,10 +28,8 @@ type recovery struct {
 	Dur   float32 // s, from leaving the band to 12 % of the peak
 	Rise  float32 // s, to the peak
 	Peak  float32 // %
-	Prop  float32 // share of proportional action at the peak, Kc |e| / |dOP|
-	Area  float32 // closed-loop residence over the process' own (set-point events; 0 unknown)
-	Kc    float32
-	Ti    float32
+	Prop  float32 // share of proportional action at the peak, Kc |e| / |dOP|; NaN: the law does not explain OP
+	Own   float32 // how much slower than a sound loop on this process, as a ratio; 0 says nothing
 	SP    bool
 	Cut   bool    // still not over when something else came: at least this long
 	Ratio float32 // to the usual of its kind; 0 unknown
@@ -49,6 +44,7 @@ type recoveryState struct {
 	Quiet             float64 // s at rest before
 	IntE              float64 // % s
 	IntOP, IntPV      float64 // % s, of the deviations from OP0, PV0
+	OPPeak, IntPeak   float64 // %, % s: of OP from OP0 and of IntE, at the peak
 	OPMean, PVMean    float64 // %, means at rest (lag of 20 slots)
 	MeanN             uint32
 	Ring              [recRing]recovery
@@ -58,10 +54,10 @@ type recoveryState struct {
 	SlowSince         float64
 	Cause             uint8
 	Conf              float32
-	By                uint8   // what proved it: 1 own history, 2 residence, 3 shape
-	Now, Was          float32 // s, median now and usual
-	Areas             [areaRing]float32
-	AreaN             uint32
+	By                uint8      // what proved it
+	Now, Was          float32    // s, median now and usual
+	Own               [2]float32 // evidence that it is slow for its process, sums of logarithms: load, set point
+	OwnFrom           float32    // s, begin of the first recovery that counts in it
 	Big               [2]float32 // %, peak of the larger events: load, set point; fades
 	Hold              uint8      // recoveries that teach no usual time, after the tuning was made slower
 }
@@ -119,7 +115,7 @@ func stepRecovery(w *Watch) {
 				keep := *r
 				*r = recoveryState{On: true, SP: sp, T0: in.t, TPeak: in.t, Peak: a, Sign: math.Copysign(1, s.Motion.EF),
 					OP0: keep.OPMean, PV0: keep.PVMean, Ring: ring, Count: count, Usual: usual,
-					Slow: keep.Slow, SlowSince: keep.SlowSince, Cause: keep.Cause, Conf: keep.Conf, By: keep.By, Now: keep.Now, Was: keep.Was, Hold: keep.Hold, Areas: keep.Areas, AreaN: keep.AreaN, Big: keep.Big}
+					Slow: keep.Slow, SlowSince: keep.SlowSince, Cause: keep.Cause, Conf: keep.Conf, By: keep.By, Now: keep.Now, Was: keep.Was, Hold: keep.Hold, Own: keep.Own, OwnFrom: keep.OwnFrom, Big: keep.Big}
 				r.DSP = in.sp - keep.PVMean
 			}
 			r.Quiet, r.MeanN = 0, 0
@@ -133,6 +129,7 @@ func stepRecovery(w *Watch) {
 	x := s.Motion.EF * r.Sign
 	if x > r.Peak {
 		r.Peak, r.TPeak = x, in.t
+		r.OPPeak, r.IntPeak = in.op-r.OP0, r.IntE
 	}
 	if x < recoveredAt*r.Peak || x < 0.7*sigma && x < 0.3*r.Peak {
 		w.endRecovery(thr)
@@ -147,14 +144,24 @@ func (w *Watch) endRecovery(thr float64) {
 		return
 	}
 	e := recovery{At: float32(in.t), T0: float32(r.T0), Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP}
-	dop := in.op - r.OP0
-	if r.SP && math.Abs(r.DSP) > max(0.8, 10*s.Noise.sigma()) {
-		e.Area = float32(w.residences(dop, in.pv-r.PV0))
-	}
-	kc, ti, _ := w.tuning(in.t-3*float64(e.Dur), 0)
-	e.Kc, e.Ti = float32(math.Abs(kc)), float32(ti)
-	e.Prop = float32(math.Abs(kc) * r.Peak / max(math.Abs(dop), 1e-6))
+	e.Prop = w.share()
+	e.Own = float32(w.forItsProcess(&e, thr))
 	w.keepRecovery(e)
+}
+
+// share is the share of proportional action in what OP did up to the peak, theory
+// Kc K/(1 + Kc K) (methods section 7). The law needs no reading for it: the integral moves
+// OP as Int e goes, and what OP did beside that up to the peak is proportional. NaN where
+// OP went against e.
+func (w *Watch) share() float32 {
+	r := &w.s.Recov
+	dop, sign := w.in.op-r.OP0, w.sign()
+	if !w.in.hasOP || dop == 0 || sign*dop*r.IntE < 0 || r.IntE*r.Sign <= 0 {
+		return float32(math.NaN())
+	}
+	early := r.IntPeak / r.IntE
+	left := w.s.Motion.EF * r.Sign / r.Peak
+	return float32((r.OPPeak/dop - early) / (1 - left*early))
 }
 
 // residences is the residence time of the closed loop over that of the process, from a
@@ -197,9 +204,7 @@ func (w *Watch) cutRecovery() {
 		return
 	}
 	e := recovery{At: float32(in.t), T0: float32(r.T0), Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP, Cut: true}
-	kc, ti, _ := w.tuning(in.t-3*float64(e.Dur), 0)
-	e.Kc, e.Ti = float32(math.Abs(kc)), float32(ti)
-	e.Prop = float32(math.Abs(kc) * r.Peak / max(math.Abs(in.op-r.OP0), 1e-6))
+	e.Prop = w.share()
 	w.keepRecovery(e)
 }
 
@@ -236,10 +241,7 @@ func (w *Watch) keepRecovery(e recovery) {
 	}
 	r.Ring[i] = e
 	r.Count++
-	if e.Area > 0 {
-		r.Areas[r.AreaN%areaRing] = e.Area
-		r.AreaN++
-	}
+	r.weigh(&e)
 	if r.Hold > 0 {
 		r.Hold--
 	}

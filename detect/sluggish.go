@@ -2,16 +2,20 @@ package detect
 
 import (
 	"math"
+	"slices"
 
-	"midwatch/configs"
 	"midwatch/detect/num"
 )
 
-// judgeSlow decides after each recovery. Three proofs, the strongest first: the
-// loop's own usual recovery, the residence times of set-point steps, and the
-// scale-free ratio of recovery to rise (methods section 7: over 9 the reset is
-// about three times too long). The last needs four load events or more, since load
-// changes have shapes of their own.
+// What proved that a loop is slow.
+const (
+	byHistory = 1 + iota // its own usual recovery
+	byProcess            // what its process would bear
+	byList               // the reset time of the loop list
+)
+
+// judgeSlow decides after each recovery. The strongest proof is the loop's own usual
+// recovery, then what its process would bear.
 func (w *Watch) judgeSlow() {
 	r := &w.s.Recov
 	n := int(min(r.Count, recRing))
@@ -20,48 +24,45 @@ func (w *Watch) judgeSlow() {
 	}
 	if !r.Slow && w.slowerThanListed() {
 		e := r.recent(0)
-		r.Slow, r.SlowSince, r.By, r.Now, r.Was = true, float64(e.T0), 3, e.Dur, 0
+		r.Slow, r.SlowSince, r.By, r.Now, r.Was = true, float64(e.T0), byList, e.Dur, 0
 		r.Cause, r.Conf = causeIndex(ResetTooLong), 0.75
 	}
+	by, proof := uint8(0), 0 // and the recoveries that prove it
+	if k := w.slowForItself(n); k > 0 {
+		by, proof = byHistory, k
+	} else if limit := ownLimit * w.strict; n >= 2 && r.evidence() > limit || r.Slow && r.By == byProcess && r.evidence() > limit/2 {
+		by, proof = byProcess, min(n, 3)
+	}
+	w.slowCause(by, proof)
+}
+
+// slowForItself says how many of the newest recoveries prove that they take several times
+// the usual; 0 that none do.
+func (w *Watch) slowForItself(n int) int {
+	r := &w.s.Recov
+	var ratios [3]float64
+	for i := range ratios {
+		ratios[i] = float64(r.recent(i).Ratio)
+	}
+	// A change to a slower law was seen, too: two recoveries do where they are very slow.
+	if n >= 2 && w.madeSlower(float64(r.recent(1).T0)) && min(ratios[0], ratios[1]) > 2.5*w.strict {
+		return 2
+	}
 	if n < 3 {
-		return
+		return 0
 	}
-	own := false
-	var ratios, durs [recRing]float64
-	nr := 0
-	for i := range 3 {
-		e := r.recent(i)
-		durs[i] = float64(e.Dur)
-		if e.Ratio > 0 {
-			ratios[nr] = float64(e.Ratio)
-			nr++
-		}
+	m, lo := num.Median(ratios[:]), slices.Min(ratios[:])
+	if w.madeSlower(float64(r.recent(2).T0)) && m > 1.8*w.strict && lo > 1.3 {
+		return 3
 	}
-	if nr == 3 {
-		m, lo := num.Median(ratios[:3]), min(ratios[0], min(ratios[1], ratios[2]))
-		if w.madeSlower(float64(r.recent(2).T0)) && m > 1.8*w.strict && lo > 1.3 {
-			own = true
-		}
-		// What the loop list says is usual needs no learning.
-		if w.loop.RecoveryS > 0 && m > 2.5*w.strict && lo > 1.75 {
-			own = true
-		}
+	// What the loop list says is usual needs no learning.
+	if w.loop.RecoveryS > 0 && m > 2.5*w.strict && lo > 1.75 {
+		return 3
 	}
-	if !own && w.slowByHistory(n) {
-		own = true
+	if w.slowByHistory(n) {
+		return 3
 	}
-	area := w.loop.Report != configs.Exception && w.slowByArea() // held values have no areas
-	shape := n >= 4 && w.loop.Process != configs.Runaway && w.loop.Report != configs.Exception && w.slowByShape(n)
-	by := uint8(0) // the strongest proof
-	switch {
-	case own:
-		by = 1
-	case area:
-		by = 2
-	case shape:
-		by = 3
-	}
-	w.slowCause(by, durs[:3])
+	return 0
 }
 
 // swinging: the newest recovery fits a regular cycle, whose half-waves look like
@@ -78,66 +79,6 @@ func (w *Watch) swinging() bool {
 	}
 	return false
 }
-
-// slowByArea: the last set-point steps took several residence times of the process.
-func (w *Watch) slowByArea() bool {
-	r := &w.s.Recov
-	n := int(min(r.AreaN, areaRing))
-	if n < 3 {
-		return false
-	}
-	var a [areaRing]float64
-	lo := math.Inf(1)
-	for i := range n {
-		a[i] = float64(r.Areas[i])
-		lo = min(lo, a[i])
-	}
-	// Slow lambda tunings of dead-time processes, three times the dead time, come to 3.
-	return num.Median(a[:n]) > 3.2*w.strict && lo > 2.2
-}
-
-// slowByShape looks at the shape of the load recoveries: time from the peak over time
-// to it, with the tail that the integral gives.
-func (w *Watch) slowByShape(n int) bool {
-	var t9, tail, share [recRing]float64
-	k := 0
-	lo := math.Inf(1)
-	for i := range n {
-		e := w.s.Recov.recent(i)
-		if e.SP || e.Cut || !(e.Ti > 0 && e.Ti < noTi && e.Prop > 0) {
-			continue
-		}
-		t9[k] = float64(e.Dur-e.Rise) / max(float64(e.Rise), 3*w.s.Grid.DT)
-		lo = min(lo, t9[k])
-		// The tail must be that of the integral: time constant Ti (1 + 1/(Kc K)), which
-		// is Ti over the proportional share; 2.1 of them to 12 %.
-		share[k] = float64(e.Prop)
-		tail[k] = float64(e.Dur) / (2.1 * float64(e.Ti) / min(1, max(0.03, float64(e.Prop))))
-		k++
-	}
-	if k < 4 {
-		return false
-	}
-	m, p, long := num.Median(tail[:k]), num.Median(share[:k]), num.Median(t9[:k])
-	// A share over 1 is that of a runaway process, for which this does not hold.
-	if !(m > 0.5 && m < 1.8 && lo > 4.5) || p > 1.15 && w.loop.Process != configs.Integrating {
-		return false
-	}
-	need := 13.0
-	switch {
-	case p < lowShare:
-		// The closed loop is then that of Ti/(Kc K) alone, in a sound one no more than
-		// three times the dead time, of which the peak comes later: 2.1 of it to 12 %.
-		need = 6.5
-	case p < 0.9 && k >= 5: // above, the process is integrating or near it: a long reset is sound
-		need = 9.5
-	}
-	return long > need*w.strict
-}
-
-// lowShare is the share of proportional action under which even a dead-time loop has
-// too little of it.
-const lowShare = 0.13
 
 // slowByHistory compares with the loop's own usual recovery. Where the tuning in
 // service is known not to have changed, ramps and second disturbances are the
@@ -170,10 +111,11 @@ func (w *Watch) slowByHistory(n int) bool {
 	return num.Median(ratios[:need]) > least*w.strict
 }
 
-func (w *Watch) slowCause(by uint8, durs []float64) {
+// slowCause notes what the newest recoveries, so many, prove and why it is so.
+func (w *Watch) slowCause(by uint8, proof int) {
 	r := &w.s.Recov
 	if by == 0 {
-		if r.Slow {
+		if r.Slow && !(r.By == byList && w.resetOverList()) {
 			// Over once the newest recoveries are the usual ones again.
 			ok := 0
 			for i := range 2 {
@@ -187,9 +129,12 @@ func (w *Watch) slowCause(by uint8, durs []float64) {
 		}
 		return
 	}
-	first := r.recent(2)
+	first := r.recent(proof - 1)
 	kc, ti, ok := w.tuning(float64(first.T0), 0)
 	since := float64(first.T0)
+	if by == byProcess {
+		since = float64(r.OwnFrom)
+	}
 	if r.Slow {
 		since = r.SlowSince
 	}
@@ -207,19 +152,7 @@ func (w *Watch) slowCause(by uint8, durs []float64) {
 	if ok && okb && ti > 0 && tb > 0 && kb > 0 {
 		rk, rt = math.Abs(kc)/kb, ti/tb
 	}
-	var ps [recRing]float64
-	np := 0
-	for i := range 3 {
-		if e := r.recent(i); e.Prop > 0 && !e.SP {
-			p := float64(e.Prop)
-			ps[np] = p
-			np++
-		}
-	}
-	p := math.NaN()
-	if np > 0 {
-		p = num.Median(ps[:np])
-	}
+	p := w.shareOf(proof)
 	cause, conf := Undetermined, 0.6
 	switch {
 	case rt > 2.2 && rk > 0.6:
@@ -228,17 +161,40 @@ func (w *Watch) slowCause(by uint8, durs []float64) {
 		cause, conf = GainTooLow, 0.93
 	case p > 0.45:
 		cause, conf = ResetTooLong, 0.8
+	case p > 0.2 && by == byProcess: // with so little gain that it is slow even a dead-time loop has less
+		cause, conf = ResetTooLong, 0.75
 	case p < 0.13:
 		cause, conf = GainTooLow, 0.8
 	}
 	if !r.Slow {
-		r.Slow, r.SlowSince = true, float64(first.T0)
+		r.Slow, r.SlowSince = true, since
 	}
 	r.Cause, r.Conf = causeIndex(cause), float32(conf)
 	r.By = by
-	r.Now = float32(num.Median(durs))
+	var durs [recRing]float64
+	for i := range proof {
+		durs[i] = float64(r.recent(i).Dur)
+	}
+	r.Now = float32(num.Median(durs[:proof]))
 	u, _ := w.usualRecovery(r.recent(0).SP)
 	r.Was = float32(u)
+}
+
+// shareOf is the median share of proportional action of the newest n recoveries, NaN where
+// none has one.
+func (w *Watch) shareOf(n int) float64 {
+	var p [recRing]float64
+	k := 0
+	for i := range n {
+		if e := w.s.Recov.recent(i); !e.SP && e.Prop == e.Prop {
+			p[k] = float64(e.Prop)
+			k++
+		}
+	}
+	if k == 0 {
+		return math.NaN()
+	}
+	return num.Median(p[:k])
 }
 
 // madeSlower: a change of the tuning to less gain or a longer reset, at or before t

@@ -173,8 +173,8 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 		what = creeps + " back after disturbances" + part(": about %s", get("recovery_s"), duration)
 		if u := part(" where %s was usual", get("usual_s"), duration); u != "" {
 			what += u
-		} else if s.Recov.By == 2 {
-			what += ", several times what its set-point steps say the process needs"
+		} else if s.Recov.By == byProcess {
+			what += ", several times what this process needs"
 		}
 		brief = "slow to recover" + part(": about %s", get("recovery_s"), duration) + part(", usual %s", get("usual_s"), duration) + comma(since)
 	case kFrozen:

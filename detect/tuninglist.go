@@ -102,12 +102,17 @@ func (w *Watch) tuningNote() string {
 	return note
 }
 
-// slowerThanListed: the reset in service is many times what the loop list says, with
-// the gain as listed and no unit to explain it, and a recovery took as long as that
-// makes it.
+// slowerThanListed: the reset in service is many times what the loop list says, and a
+// recovery took as long as that makes it.
 func (w *Watch) slowerThanListed() bool {
+	_, ti, _ := w.served()
+	return w.resetOverList() && float64(w.s.Recov.recent(0).Dur) > max(1.5*ti, 10*w.loop.IdealReset)
+}
+
+// resetOverList: the reset in service is many times what the loop list says, with the
+// gain as listed and no unit to explain it.
+func (w *Watch) resetOverList() bool {
 	rk, rt := w.listRatio()
 	_, ti, _ := w.served()
-	e := w.s.Recov.recent(0)
-	return rk > 0.67 && rk < 1.5 && rt > 5 && !perhapsUnit(w.loop.IdealReset, ti) && float64(e.Dur) > max(1.5*ti, 10*w.loop.IdealReset)
+	return rk > 0.67 && rk < 1.5 && rt > 5 && !perhapsUnit(w.loop.IdealReset, ti)
 }

@@ -267,8 +267,8 @@ func (w *Watch) Explain() []string {
 	}
 	for i := range int(min(s.Recov.Count, recRing)) {
 		e := s.Recov.recent(i)
-		out = append(out, fmt.Sprintf("recovery at %s: %s, peak %.2f %%, rise %s, ratio to usual %.2f, proportional share %.2f, residence ratio %.2f, set point %v",
-			FormatTime(w.ms(float64(e.At))), duration(float64(e.Dur)), e.Peak, duration(float64(e.Rise)), e.Ratio, e.Prop, e.Area, e.SP))
+		out = append(out, fmt.Sprintf("recovery at %s: %s, peak %.2f %%, rise %s, ratio to usual %.2f, proportional share %.2f, slower than its process bears by %.2f, set point %v",
+			FormatTime(w.ms(float64(e.At))), duration(float64(e.Dur)), e.Peak, duration(float64(e.Rise)), e.Ratio, e.Prop, e.Own, e.SP))
 	}
 	if s.Off.Sign != 0 {
 		out = append(out, fmt.Sprintf("one-sided error for %s, mean %.2f %%", duration(w.in.t-s.Off.T0), s.Off.Int/max(s.Off.Dur, 1e-9)))

@@ -49,6 +49,12 @@ func sluggish(byTheReset, young bool) func(*rand.Rand, float64) *scenario {
 			if !byTheReset && l.theta > 0.8*l.tau { // only Kc/Ti matters there
 				t.soft = causes{detect.ResetTooLong}
 			}
+			if young && !byTheReset {
+				// The closed loop is slower than its process by no more than sound lambda
+				// tunings of dead-time processes are (three dead times: 3). Nobody could tell.
+				r := l.law.ti / (l.law.kc * l.k) / (l.tau + l.theta)
+				t.subtle = func(*scenario) bool { return r < 3 }
+			}
 			return single(l, base, 25*l.load.stepEvery, t)
 		})
 	}
