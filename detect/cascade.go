@@ -14,10 +14,10 @@ type halfBlock struct {
 }
 
 // levelsFor is the number of levels worth running at a sample interval, s: cycles
-// up to 24 samples of the top level; 13 h is the slowest that a watch of days can
-// judge.
+// up to 24 samples of the top level; five days are the slowest that a watch of months
+// can judge.
 func levelsFor(dt float64) uint8 {
-	n := 1 + int(math.Ceil(math.Log2(max(1, 2000/dt))))
+	n := 1 + int(math.Ceil(math.Log2(max(1, 20000/dt))))
 	return uint8(min(max(n, 4), maxLevels))
 }
 

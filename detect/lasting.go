@@ -21,6 +21,8 @@ const (
 	keptSlow   = 28800 // s; longer ones may have the beat of shifts and days
 	keptRaise  = 4     // half-cycles with it more than without
 	keptLeast  = 0.2   // %
+	keptLoose  = 3     // regularity of the swing of a loop that was made too loose
+	keptSlack  = 8     // reset times in its period: a damping of 0.4
 )
 
 // countKept counts up at half-cycles that show such a swing, and down at others. few says
@@ -45,17 +47,38 @@ func (w *Watch) kept(level int, b *cycleBank) bool {
 	usual, young := w.usualBelow(level)
 	if young { // its usual size rests on little: more is asked for
 		over, regular = 3, 6
-		if usual == 0 || w.loop.Duty == configs.Batch || w.loop.Duty == configs.StartStop {
-			return false
-		}
 	}
-	least := max(keptLeast, 2.5*w.s.Noise.sigma()*w.strict, over*usual*w.strict)
-	if b.tip() < 0.5*least {
+	if b.tip() < 0.5*max(keptLeast, 2.5*w.s.Noise.sigma()*w.strict) { // most are small: no more is worked out
 		return false
 	}
 	q, _ := b.stat(level, keptHalves)
-	return q.period > bankLowP && q.period < bankHighP && q.amp > least && q.period*w.levelS(level) < keptSlow &&
-		b.middleRegular() > regular*w.strict
+	period := q.period * w.levelS(level)
+	if w.loosened(period) { // what was usual since is the swing itself
+		usual = 0
+		if w.loop.Process == configs.Integrating {
+			regular = keptLoose
+		}
+	} else if young && (usual == 0 || w.loop.Duty == configs.Batch || w.loop.Duty == configs.StartStop) || period > keptSlow {
+		return false
+	}
+	least := max(keptLeast, 2.5*w.s.Noise.sigma()*w.strict, over*usual*w.strict)
+	return b.tip() > 0.5*least && q.period > bankLowP && q.period < bankHighP && q.amp > least && b.middleRegular() > regular*w.strict
+}
+
+// loosened: the gain in service is less than a third of what was set up or was in service
+// before, and the swing as slow as an integrating loop makes it that has too little: with
+// P = 2 pi sqrt(Ti/(k Kc)) its damping sqrt(k Kc Ti)/2 is pi Ti/P (Skogestad 2003 for
+// the slow swing of a small k Kc Ti).
+func (w *Watch) loosened(period float64) bool {
+	kc, ti, ok := w.tuning(0, 0)
+	if !ok || !(ti > 0) || period < keptSlack*ti || w.loop.Process == configs.SelfRegulating {
+		return false
+	}
+	was := w.loop.GainPct
+	if c := &w.s.Change; w.slowed() && c.What&1 != 0 {
+		was = float64(c.GainWas)
+	}
+	return was > 3*math.Abs(kc)
 }
 
 // usualBelow is the usual size at a level. Where the level is young it is what the

@@ -121,3 +121,31 @@ func TestViolentGrowsAlike(t *testing.T) {
 		}
 	}
 }
+
+// A gain in service far under what was set up, and a period of many reset times: a swing
+// of too little gain. Either alone is not, nor a process that does not integrate.
+func TestLoosened(t *testing.T) {
+	for _, x := range []struct {
+		name          string
+		gain, periods float64 // in service, of that listed; of the swing, reset times
+		process       configs.Process
+		was, want     bool
+	}{
+		{name: "a quarter of the gain", gain: 0.25, periods: 10, process: configs.Integrating, want: true},
+		{name: "half of the gain", gain: 0.5, periods: 10, process: configs.Integrating},
+		{name: "faster", gain: 0.25, periods: 6, process: configs.Integrating},
+		{name: "not integrating", gain: 0.25, periods: 10, process: configs.SelfRegulating},
+		{name: "as set up, but once more", gain: 1, periods: 10, process: configs.Integrating, was: true, want: true},
+	} {
+		l := configs.NewLoop("LIC-312")
+		l.GainPct, l.Process = 2, x.process
+		w := New(l, 0, Options{})
+		w.s.Fits[0].Last = fit{Kc: float32(2 * x.gain), Ti: 600, R2: 0.99, X: 1000, At: 1}
+		if x.was {
+			w.s.Change = tuneChange{Seen: 1, What: 1, GainWas: 8, GainNow: 2}
+		}
+		if got := w.loosened(x.periods * 600); got != x.want {
+			t.Errorf("%s: %v", x.name, got)
+		}
+	}
+}

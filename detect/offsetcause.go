@@ -1,6 +1,10 @@
 package detect
 
-import "math"
+import (
+	"math"
+
+	"midwatch/configs"
+)
 
 // travel is what OP did over the later part of a run and what it should have done.
 type travel struct {
@@ -73,6 +77,16 @@ func (w *Watch) integralMissing(t *travel) bool {
 	}
 	return none && follows && !t.clipped && !s.Off.WasStill && t.expect > 1.5 && math.Abs(t.resid) < max(0.2*t.expect, 0.5) &&
 		t.hi-t.lo < 2.5*math.Abs(t.kc)*t.eRange+1
+}
+
+// halfSwing is the half-cycle, s, of the slow swing of an integrating loop at a damping
+// of 0.1, which is pi Ti/P (see loosened): until it is over, the integral that acts may
+// bring PV back. 0 where the process does not integrate.
+func (w *Watch) halfSwing(t *travel) float64 {
+	if w.loop.Process == configs.SelfRegulating {
+		return 0
+	}
+	return 16 * t.rt
 }
 
 // smoothLag is the delay, slots, of the smoothed values of a run: (1-a)/a for a lag of
@@ -176,6 +190,9 @@ func (w *Watch) offsetCause(push, lo, hi float64) (c Cause, conf, longer float64
 	case w.standsMissing(&t):
 		return IntegralMissing, float64(s.OffPast.Offset.Conf), 0
 	case t.still && t.expect > 3:
+		if c, conf, known, acts := w.integralActs(&t); known && acts { // still for the gain that was
+			return c, conf, w.halfSwing(&t)
+		}
 		// OP does not answer e at all: manual, tracking, or not this loop's output.
 		o.WasStill = true
 		return Undetermined, 0.6, 0
@@ -188,7 +205,7 @@ func (w *Watch) offsetCause(push, lo, hi float64) (c Cause, conf, longer float64
 		case !known:
 			return Undetermined, 0.6, -1
 		case acts:
-			return c, conf, 0
+			return c, conf, w.halfSwing(&t)
 		}
 		if !t.learned {
 			// Ignorant of the own reset time: three times as long is longer than that of all but
@@ -196,6 +213,9 @@ func (w *Watch) offsetCause(push, lo, hi float64) (c Cause, conf, longer float64
 			longer = max(1.5*3600, 5*w.timeScale())
 			if s.Tune.Law < 0.5 {
 				longer = max(3*3600, longer)
+			}
+			if t.rt > 0 { // what is listed may be in minutes or a rate, repeats a minute: no longer than that
+				longer = min(longer, max(60*t.rt, 60/t.rt))
 			}
 			return IntegralMissing, 0.85, longer
 		}

@@ -57,6 +57,10 @@ const growConfirm = 3
 // shiftBeat is the period, s, from which the beat of batches and shifts is met.
 const shiftBeat = 4 * 3600
 
+// ownSlowest is the period, reset times, up to which a swing may be the loop's own: an
+// integrating one of a damping of 0.15 has it (pi Ti/P, see loosened).
+const ownSlowest = 20
+
 // judgeCycles looks at a bank after each of its half-cycles.
 func (w *Watch) judgeCycles(level int, b *cycleBank) {
 	s := &w.s
@@ -316,12 +320,13 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 		// Batches and shifts have a slow beat of sorts, which a loop not watched for long
 		// may always have had.
 		plain := known || period < shiftBeat
+		rt, _ := w.resetS()
 		big := q.amp > max(3*sigma, 0.6) && plain
 		own := q.amp > max(1.9*sigma, 0.4) && known && q.amp > 2*usual
 		if (q.regular > 5*w.strict && q.least > 0.4 && big && (!known || q.amp > 1.6*usual) ||
 			q.regular > 4*w.strict && q.least > 0.3 && own ||
 			q.regular > 4*w.strict && q.least > 0.3 && !known && plain && q.amp > max(1.2, 5*sigma) ||
-			q.regular > 7*w.strict && q.least > 0.4 && !known && q.amp > max(0.45, 4*sigma)) &&
+			q.regular > 7*w.strict && q.least > 0.4 && !known && (plain || period < ownSlowest*rt) && q.amp > max(0.45, 4*sigma)) &&
 			(w.steadySP(float64(n)/2*period) || q.regular > 8*w.strict && period < keptSlow) { // steps of SP now and then cannot beat such time
 			o.Sus = true
 			w.beginOsc(level, b, n)

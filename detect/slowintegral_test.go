@@ -4,6 +4,7 @@ import (
 	"math"
 	"testing"
 
+	"midwatch/configs"
 	"midwatch/detect"
 )
 
@@ -62,5 +63,37 @@ func TestDeadFromTheStart(t *testing.T) {
 	g.run(24 * 3600)
 	if fs := replay(loopOf("FIC-315", g), g.out); len(fs) > 0 {
 		t.Errorf("a loop at rest:%s", brief(fs))
+	}
+}
+
+// Off from the start: what the loop list says of the reset time, in whatever unit, is over
+// long before that of all but a few loops would be.
+func TestIntegralMissingFromTheStart(t *testing.T) {
+	g := newRig(plantE, 0.6, math.Inf(1), 14)
+	g.noise, g.load = 0.1, 12
+	g.run(4500)
+	l := loopOf("FIC-316", g)
+	l.GainPct, l.IdealReset = 0.6, 30
+	if f, ok := last(replay(l, g.out), detect.SustainedOffset); !ok || f.Cause != detect.IntegralMissing {
+		t.Errorf("want integral-missing:%s", brief(replay(l, g.out)))
+	}
+}
+
+// With a twentieth of its gain an integrating loop swings, for some seven reset times each
+// way: PV is on its way back all the time, which is no offset.
+func TestSlowSwingIsNoOffset(t *testing.T) {
+	g := newRig(plantH.stretched(10), 2.5, 320, 15)
+	g.noise, g.logS = 0.05, 5
+	g.bumps(4, 4000)
+	g.run(24 * 3600)
+	g.kc /= 20
+	g.bumps(1, 12000)
+	g.run(12 * 3600)
+	l := loopOf("LIC-317", g)
+	l.Process = configs.Integrating
+	for _, f := range replay(l, g.out) {
+		if f.Kind == detect.SustainedOffset {
+			t.Errorf("%s", brief([]detect.Finding{f}))
+		}
 	}
 }

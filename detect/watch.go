@@ -245,6 +245,9 @@ func (w *Watch) stepGrid(f *collector.Frame, t float64) {
 		first = true
 	}
 	k := int(math.Round((t - g.At) / g.DT))
+	if k > 1 && s.Motion.PV != s.Motion.PV { // nothing was seen yet that could be held
+		g.At, k = t-g.DT, 1
+	}
 	if w.relearn(k) {
 		return
 	}
