@@ -19,15 +19,19 @@ type quietGain struct {
 	OP           float32      // %, mean of OP in it
 	Low, High    float32      // %/%, gains of the run after its first block
 	Since        float32      // s, begin of its first block
+	R2, RunR2    float32      // means over the history and over the run
 	Run          int8         // blocks in it, negative below the usual
 	Bank         uint8
 }
 
-// quietR2 is the least R2 of a quiet block. The true gain lies between the regression of
-// OP on e and the reverse one, a factor R2 apart (Frisch 1934, Statistical confluence
-// analysis by means of complete regression systems): two readings that differ by more than
-// 1/quietR2 are not of one gain, however the noise of PV and of OP changed.
-const quietR2 = 0.8
+// The true gain lies between the regression of OP on e and the reverse one, a factor R2
+// apart (Frisch 1934, Statistical confluence analysis by means of complete regression
+// systems): noise of PV alone moves the first and leaves the second, noise of OP alone the
+// other way. A gain that changed moves both.
+const (
+	quietR2    = 0.8 // of a scale at which the law is plain
+	quietLeast = 0.5 // of a block that counts at all
+)
 
 // quietLost is how many blocks running leave the history before it is given up.
 const quietLost = 3 * changeFits
@@ -36,7 +40,7 @@ const quietLost = 3 * changeFits
 func (w *Watch) stepQuiet(k int, r *fit) {
 	s := &w.s
 	q := &s.Quiet
-	if r.R2 < quietR2 || int(q.Bank) < k && q.Base.N > 0 {
+	if r.R2 < quietLeast || q.Base.N > 0 && (k > int(q.Bank) || k < int(q.Bank) && r.R2 < min(q.R2, quietR2)) {
 		return
 	}
 	gain, pv := math.Abs(float64(r.Kc)), r.PV
@@ -51,6 +55,7 @@ func (w *Watch) stepQuiet(k int, r *fit) {
 			q.Dev.Add(math.Abs(d), 0.8, 0.05, 0.01)
 		}
 		q.Base.Mean(gain, 0.02, 1e-6)
+		q.R2 += (r.R2 - q.R2) / float32(min(q.Base.N, 50))
 		q.OP += (float32(s.Tune.OPMean) - q.OP) / float32(min(q.Base.N, 50))
 		q.PVLow, q.PVTop, q.Run = min(q.PVLow, pv), max(q.PVTop, pv), 0
 		return
@@ -60,10 +65,11 @@ func (w *Watch) stepQuiet(k int, r *fit) {
 		side = -1
 	}
 	if q.Run*side <= 0 {
-		q.Run, q.Since = 0, r.T0
+		q.Run, q.Since, q.RunR2 = 0, r.T0, 0
 	}
 	q.Run = max(-math.MaxInt8, min(q.Run, math.MaxInt8-1)+side)
 	n := int(q.Run * side)
+	q.RunR2 += (r.R2 - q.RunR2) / float32(n)
 	if n <= 2 { // the first block may straddle the change: it dates it and no more
 		q.Low, q.High = float32(gain), float32(gain)
 	}
@@ -76,8 +82,13 @@ func (w *Watch) stepQuiet(k int, r *fit) {
 		if n >= quietLost {
 			*q = quietGain{}
 		}
-	case w.changeLasts(float64(q.Since), 0):
-		w.tellChange(-1, float64(q.Since), 1, [2]float64{q.Base.Value(), now}, [2]float64{})
+	case w.changeLasts(float64(q.Since), float64(r.T0), 0):
+		// How far it moved is known better than where it stands: whole fits tell that.
+		was := q.Base.Value()
+		if kc, _, ok := w.usualTuning(math.Inf(1)); ok {
+			now, was = now*kc/was, kc
+		}
+		w.tellChange(-1, float64(q.Since), 1, [2]float64{was, now}, [2]float64{})
 	}
 }
 
@@ -86,11 +97,13 @@ func (w *Watch) stepQuiet(k int, r *fit) {
 func (w *Watch) quietMoved(now float64) bool {
 	s := &w.s
 	q := &s.Quiet
-	if s.Tune.Law > 0 && s.Tune.Law < changeLaw || s.Sched.is() || s.Osc.Sus || s.Osc.Grow || s.Change.On && w.in.t-s.Change.Seen < 3600 {
+	if s.Sched.is() || s.Osc.Sus || s.Osc.Grow || s.Change.On && w.in.t-s.Change.Seen < 3600 {
 		return false
 	}
 	base := q.Base.Value()
 	ends := [2]float64{math.Log(float64(q.Low) / base), math.Log(float64(q.High) / base)}
-	return w.moved(ends[:], &q.Dev) && !paced(now/base, s.Tune.OPMean/float64(q.OP)) &&
+	forward := math.Log(now / base)
+	reverse := forward - math.Log(float64(q.RunR2/q.R2))
+	return forward*reverse > 0 && math.Abs(reverse) > math.Log(changeRatio)*w.strict && w.moved(ends[:], changeFits, &q.Dev) && !paced(now/base, s.Tune.OPMean/float64(q.OP)) &&
 		!w.contradicted(-1, float64(q.Since), 1, base, now)
 }

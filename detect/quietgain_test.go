@@ -53,6 +53,53 @@ func TestGainOfAQuietLoop(t *testing.T) {
 	}
 }
 
+// Noise that only the log has lowers the gain read. A gain that changed is told through it,
+// its coming is no change.
+func TestGainThroughNoiseOfTheLog(t *testing.T) {
+	const hour = 3600
+	cases := map[string]struct {
+		was, now float64 // %, one standard deviation in the log
+		gain     float64 // %/%, after the change
+		told     bool
+	}{
+		"gain up":         {0.14, 0.14, 3.6, true},
+		"gain down":       {0.14, 0.14, 0.7, true},
+		"as it was":       {0.14, 0.14, 1.6, false},
+		"noise that came": {0, 0.19, 1.6, false},
+		"noise that went": {0.19, 0, 1.6, false},
+	}
+	for name, x := range cases {
+		t.Run(name, func(t *testing.T) {
+			g := newRig(plantB.stretched(6), 1.6, 60, 12)
+			g.step, g.noise = 1, 0.2
+			g.run(20 * hour)
+			n := len(g.out)
+			g.kc = x.gain
+			g.integral = g.op - 50 - g.kc*(g.sp-g.meas)
+			g.run(30 * hour)
+			for i := range g.out {
+				s := x.was
+				if i >= n {
+					s = x.now
+				}
+				g.out[i].PV += float32(s * g.rnd.NormFloat64())
+			}
+			f, ok := first(replay(loopOf("PIC-310", g), g.out), detect.TuningChanged)
+			if ok != x.told {
+				t.Fatalf("noticed %v: %s", ok, f.Text)
+			}
+			if !ok {
+				return
+			}
+			was, _ := f.Measures.Get("gain_before")
+			now, _ := f.Measures.Get("gain")
+			if r := now / was / (x.gain / 1.6); math.Abs(math.Log(r)) > math.Log(1.3) {
+				t.Errorf("gain from %.3g to %.3g, was 1.6 to %.3g", was, now, x.gain)
+			}
+		})
+	}
+}
+
 // PV that stands leaves only rounding in e while OP winds on: no tuning is read of it.
 func TestNoTuningOfAFrozenPV(t *testing.T) {
 	g := newRig(plantB.stretched(6), 1.6, 60, 13)

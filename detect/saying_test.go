@@ -88,24 +88,6 @@ func TestVisitsToALimitAreNotOneStay(t *testing.T) {
 	}
 }
 
-// An OP that does not show the law in many excited blocks is a blind spot; one that
-// shows it at some scale of time is none.
-func TestAnotherLawIsABlindSpot(t *testing.T) {
-	w := swinging(kSustained)
-	has := func() bool { return strings.Contains(strings.Join(w.blindSpots(), "\n"), "not this law") }
-	if has() {
-		t.Error("nothing was tried yet")
-	}
-	w.s.Fits[1].ByLaw = -lawVotes
-	if !has() {
-		t.Error("not said")
-	}
-	w.s.Fits[3].ByLaw = 2
-	if has() {
-		t.Error("the law shows at another scale")
-	}
-}
-
 // Usual mistakes of units are called by name.
 func TestUnitMistakesByName(t *testing.T) {
 	for _, x := range []struct {

@@ -30,12 +30,19 @@ type tuneChange struct {
 const (
 	changeRatio  = 1.5
 	changeSpread = 1.35
+	changeLeast  = 2 // fits that can tell a change, where they moved far
 	changeFits   = 4
-	changeOld    = 6 // deviations known before: four beyond them all come by chance once in 210
+	changeOld    = 6    // deviations known before: four beyond them all come by chance once in 210
+	changeGuess  = 0.15 // 80 % quantile of the deviations, ln, before so many are known: twice what readings stray
 	changeR2     = 0.95
-	changeLaw    = 0.5
 	changeNot    = 1.2 // a scale nearer than this to its usual gain did not change
 )
+
+// leaving is what the newest fits read where they left the usual law.
+type leaving struct {
+	Since  float64 // s, begin of the oldest of them
+	Kc, Ti float64 // medians, %/% and s
+}
 
 func (w *Watch) tuneCheck(k int) {
 	s := &w.s
@@ -45,34 +52,15 @@ func (w *Watch) tuneCheck(k int) {
 	}
 	// Where something else than the law moves OP between the blocks that pass for it, these
 	// are a choice by chance.
-	if b.ByLaw <= 0 || b.Run < changeFits {
+	if b.ByLaw <= 0 {
 		return
 	}
-	var ks, ts, dk, dt [changeFits]float64
-	pv := 0.0
-	oldest, least := math.Inf(1), float32(1)
-	for i := range changeFits {
-		f := &b.Ring[(b.Count-1-uint32(i))%fitRing]
-		ks[i], ts[i] = math.Abs(float64(f.Kc)), float64(f.Ti)
-		dk[i], dt[i] = w.strays(k, f), math.Log(ts[i]/b.BaseT.Value())
-		pv += float64(f.PV) / changeFits
-		oldest, least = min(oldest, float64(f.T0)), min(least, f.R2)
-	}
+	var n leaving
 	what := uint8(0)
-	kn, tn := num.Median(ks[:]), num.Median(ts[:])
-	if b.DevK.N >= changeOld && w.moved(dk[:], &b.DevK) && !paced(kn/b.BaseK.Value(), s.Tune.OPMean/s.Tune.OPUsual) && s.Sched.knows(pv) && !(s.Sched.is() && int(s.Sched.Bank) != k) && !w.contradicted(k, oldest, 1, b.BaseK.Value(), kn) {
-		what |= 1
+	for m := changeLeast; m <= changeFits && what == 0 && b.Run >= int8(m); m++ {
+		n, what = w.left(k, m)
 	}
-	// The scale must see the reset: not far above the filter.
-	if least > changeR2 && b.DevT.N >= changeOld && tn < 20*fitTh*w.levelS(2*k) && w.moved(dt[:], &b.DevT) && !w.contradicted(k, oldest, 2, b.BaseT.Value(), tn) {
-		what |= 2
-	}
-	// Where only gain over reset stays as it was, noise or delay between e and OP that the law
-	// does not know may have changed: they lower the gain read and leave the integral.
-	lk, lt := math.Log(kn/b.BaseK.Value()), math.Log(tn/b.BaseT.Value())
-	if what == 1 && math.Abs(lk-lt) < math.Abs(lt) {
-		what = 0
-	}
+	oldest, kn, tn := n.Since, n.Kc, n.Ti
 	c := &s.Change
 	if c.Maybe > 0 && int(c.MaybeOf) == k && what&c.Maybe == 0 {
 		c.Maybe = 0
@@ -86,25 +74,62 @@ func (w *Watch) tuneCheck(k int) {
 	if int(c.MaybeOf) == k {
 		oldest = float64(c.MaybeAt)
 	}
-	if !w.changeLasts(oldest, tn) {
+	if !w.changeLasts(oldest, float64(b.newest().T0), tn) {
 		return
 	}
 	w.tellChange(k, oldest, what, [2]float64{b.BaseK.Value(), kn}, [2]float64{b.BaseT.Value(), tn})
 	b.BaseK, b.BaseT = num.Quantile{V: float32(kn), N: 6}, num.Quantile{V: float32(max(tn, 1e-3)), N: 6}
 }
 
-// changeLasts: what is read since a time, s, is no passing thing. reset is the newest, s.
-func (w *Watch) changeLasts(since, reset float64) bool {
-	// A set point ramped inside the controller looks like another tuning: two
-	// set-point changes, or none, must lie in the span.
-	if m := &w.s.Motion; m.SPStep > since && m.SPPrevStep < since {
-		return false
+// left says what of the law, by the newest m fits of bank k, is no more what it was: 1
+// gain, 2 reset.
+func (w *Watch) left(k, m int) (n leaving, what uint8) {
+	s := &w.s
+	b := &s.Fits[k]
+	var ks, ts, dk, dt [changeFits]float64
+	pv := 0.0
+	least := float32(1)
+	n.Since = math.Inf(1)
+	for i := range m {
+		f := &b.Ring[(b.Count-1-uint32(i))%fitRing]
+		ks[i], ts[i] = math.Abs(float64(f.Kc)), float64(f.Ti)
+		dk[i], dt[i] = w.strays(k, f), math.Log(ts[i]/b.BaseT.Value())
+		pv += float64(f.PV) / float64(m)
+		n.Since, least = min(n.Since, float64(f.T0)), min(least, f.R2)
 	}
+	wasK, wasT := b.BaseK.Value(), b.BaseT.Value()
+	kn, tn := num.Median(ks[:m]), num.Median(ts[:m])
+	n.Kc, n.Ti = kn, tn
+	alone := m < changeFits // too few to tell it without another scale
+	if w.moved(dk[:m], m, &b.DevK) && (!alone || w.borneOut(k, n.Since, 1, wasK, kn)) && !paced(kn/wasK, s.Tune.OPMean/s.Tune.OPUsual) && s.Sched.knows(pv) && !(s.Sched.is() && int(s.Sched.Bank) != k) && !w.contradicted(k, n.Since, 1, wasK, kn) {
+		what |= 1
+	}
+	// The scale must see the reset: not far above the filter.
+	if least > changeR2 && tn < 20*fitTh*w.levelS(2*k) && w.moved(dt[:m], m, &b.DevT) && (!alone || w.borneOut(k, n.Since, 2, wasT, tn)) && !w.contradicted(k, n.Since, 2, wasT, tn) {
+		what |= 2
+	}
+	// Where only gain over reset stays as it was, noise or delay between e and OP that the law
+	// does not know may have changed: they lower the gain read and leave the integral.
+	lk, lt := math.Log(kn/wasK), math.Log(tn/wasT)
+	if what == 1 && math.Abs(lk-lt) < math.Abs(lt) {
+		what = 0
+	}
+	return
+}
+
+// changeLasts: what is read since a time, s, is no passing thing. newest is the begin of
+// the newest block that says so, s, reset the newest reset time, s.
+func (w *Watch) changeLasts(since, newest, reset float64) bool {
 	// It must outlast one disturbance, whose length is guessed to be under half a day before
 	// some were seen.
 	lasts := 2 * w.anyRecovery()
 	if lasts == 0 {
 		lasts = changeShownS
+	}
+	// A set point ramped inside the controller looks like another tuning: two
+	// set-point changes, or none, must lie in the span, or the newest block well behind it.
+	if m := &w.s.Motion; m.SPStep > since && m.SPPrevStep < since && newest < m.SPStep+2*lasts {
+		return false
 	}
 	return w.in.t-since >= max(600, min(3*reset, 4*3600), lasts)
 }
@@ -129,9 +154,11 @@ func (w *Watch) tellChange(keep int, at float64, what uint8, gain, reset [2]floa
 
 // moved: the newest values, ln over the usual one, agree among themselves and all lie on
 // one side of it, farther than its values stray; where they moved far they may stray more
-// among themselves, by half of that, and still be as plain by their t (four running beyond the 80 % quantile of
-// the deviations come by chance once in 10,000).
-func (w *Watch) moved(d []float64, dev *num.Quantile) bool {
+// among themselves, by half of that, and still be as plain by their t. n is the number of
+// readings behind them, and their sum counts (Page 1954, Continuous inspection schemes):
+// at an average of 1.8 times the 80 % quantile of the deviations four come by chance once
+// in 10,000; fewer must lie as much farther off.
+func (w *Watch) moved(d []float64, n int, dev *num.Quantile) bool {
 	lo, hi := math.Inf(1), math.Inf(-1)
 	for _, v := range d {
 		if v != v || math.IsInf(v, 0) {
@@ -139,9 +166,16 @@ func (w *Watch) moved(d []float64, dev *num.Quantile) bool {
 		}
 		lo, hi = min(lo, v), max(hi, v)
 	}
+	strays := dev.Value()
+	if dev.N < changeOld {
+		strays = max(strays, changeGuess)
+		for k := range w.s.Fits {
+			strays = max(strays, w.s.Fits[k].DevK.Value())
+		}
+	}
 	least, most := min(math.Abs(lo), math.Abs(hi)), max(math.Abs(lo), math.Abs(hi))
-	return lo*hi > 0 && hi-lo < max(math.Log(changeSpread), (least+most)/4) && least > 1.2*dev.Value() &&
-		(least+most)/2 > max(math.Log(changeRatio), 1.8*dev.Value())*w.strict
+	return lo*hi > 0 && hi-lo < max(math.Log(changeSpread), (least+most)/4) && least > 1.2*strays &&
+		(least+most)/2 > max(math.Log(changeRatio), 1.8*changeFits/float64(min(n, changeFits))*strays)*w.strict
 }
 
 // paced: the mean of OP went the way of the gain, by a factor r, as where OP is the controller's trim times
@@ -167,6 +201,24 @@ func (w *Watch) contradicted(k int, since float64, what uint8, was, now float64)
 			off = math.Log(float64(f.Ti) / usual)
 		}
 		if math.Abs(off) < math.Log(changeNot) && math.Abs(math.Log(usual/was)) < math.Abs(math.Log(usual/now)) {
+			return true
+		}
+	}
+	return false
+}
+
+// borneOut: another scale that reads steadily read since then gain (what 1) or reset (2)
+// as it is now. Blocks of one scale that follow each other may share one mishap.
+func (w *Watch) borneOut(k int, since float64, what uint8, was, now float64) bool {
+	for j := range w.s.Fits {
+		b := &w.s.Fits[j]
+		f := &b.Last
+		v, dev := math.Abs(float64(f.Kc)), b.DevK.Value()
+		if what == 2 {
+			v, dev = float64(f.Ti), b.DevT.Value()
+		}
+		if j != k && f.ok() && f.R2 > changeR2 && float64(f.At) > since && dev < math.Log(changeSpread) &&
+			within(v, now, changeSpread) && math.Abs(math.Log(v/now)) < math.Abs(math.Log(v/was)) {
 			return true
 		}
 	}

@@ -360,6 +360,27 @@ func (w *Watch) gainAlone() (kc float64, ok bool) {
 	return
 }
 
+// otherLaw: e moved OP at some scale time and again, and at none does one PI law explain it.
+func (w *Watch) otherLaw() bool {
+	_, _, read := w.tuning(0, 0)
+	if _, alone := w.gainAlone(); read || alone {
+		return false
+	}
+	votes, stands := 0, w.standsSince()
+	for k := range w.s.Fits {
+		b := &w.s.Fits[k]
+		switch {
+		case b.Count > 0 && b.scattered(stands):
+			votes += lawVotes
+		case b.ByLaw > 0:
+			return false
+		default:
+			votes -= int(b.ByLaw)
+		}
+	}
+	return votes >= lawVotes
+}
+
 // scattered: the newest good fits disagree by more than any reading should (gain by 2,
 // reset by 3): what moves OP there is not the law alone.
 func (b *fitBank) scattered(since float64) bool {
@@ -401,7 +422,7 @@ func (w *Watch) standsSince() (t float64) {
 			return float64(newest) + 1 // nothing was read since
 		}
 		a, o := &b.Ring[(b.Count-1)%fitRing], &b.Ring[(b.Count-2)%fitRing]
-		if w.moved([]float64{w.strays(k, a), w.strays(k, o)}, &b.DevK) {
+		if w.moved([]float64{w.strays(k, a), w.strays(k, o)}, changeFits, &b.DevK) {
 			t = max(t, float64(o.T0))
 		}
 	}

@@ -5,6 +5,7 @@ import (
 	"math"
 	"math/rand/v2"
 	"slices"
+	"strings"
 	"testing"
 
 	"midwatch/collector"
@@ -181,11 +182,39 @@ func TestTuningChangeIsDated(t *testing.T) {
 			if d := float64(f.Since-at) / 1000; math.Abs(d) > 5*700 {
 				t.Errorf("dated %.0f s off", d)
 			}
+			if d := float64(f.At-at) / 1000; d > 0.8*700 {
+				t.Errorf("told after %.2f of the time between two load steps", d/700)
+			}
 			for _, f := range fs {
 				if f.At <= at {
 					t.Errorf("before the change: %s", fmt.Sprint(f.Kind))
 				}
 			}
 		})
+	}
+}
+
+// A gap controller moves OP, but by no gain and reset time: that is said, and no tuning.
+func TestAnotherLawIsSaid(t *testing.T) {
+	const said = "not-this-law"
+	for name, gap := range map[string]float64{"PI": 0, "gap": 1.5} {
+		g := newRig(plantB.stretched(6), 1.6, 60, 5)
+		g.step, g.noise = 1, 0.1
+		g.bumps(6, 700)
+		bumps := g.each
+		g.each = func(t float64) {
+			bumps(t)
+			now := 1.6
+			if math.Abs(g.sp-g.meas) < gap {
+				now = 0.16
+			}
+			g.integral += (g.kc - now) * (g.sp - g.meas)
+			g.kc = now
+		}
+		g.run(100 * 700)
+		v := reading(g)
+		if got := strings.Contains(strings.Join(v.BlindSpots, "\n"), said); got != (gap > 0) {
+			t.Errorf("%s: blind spots %q, gain read %.3g", name, v.BlindSpots, v.GainPct)
+		}
 	}
 }

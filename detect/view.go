@@ -179,8 +179,8 @@ func (w *Watch) blindSpots() (b []string) {
 	if m.OPMax > -1e8 && float64(m.OPMax-m.OPMin) < 0.5 && s.Noise.N > 2000 {
 		b = append(b, "OP has hardly moved: always at a limit, or not this loop's output")
 	}
-	if w.notThisLaw() {
-		b = append(b, "not this law: OP moves otherwise than e asks (feed-forward, selector, split range, filter or gap?): its tuning is not read, and causes that rest on it stay open")
+	if w.otherLaw() {
+		b = append(b, "not-this-law: OP moves otherwise than gain and reset on SP less PV would move it (a gap, error-squared action, feed-forward, a selector, a hand?): its tuning is not read, and causes that rest on it stay open")
 	}
 	if n := w.filterNote(); n != "" {
 		b = append(b, n)
@@ -198,20 +198,6 @@ func (w *Watch) blindSpots() (b []string) {
 func (w *Watch) blind() bool {
 	m := &w.s.Motion
 	return w.s.Last.OP != w.s.Last.OP && m.OPMin > m.OPMax || m.Mode == collector.ModeUnknown && !m.LawSeen && w.s.Noise.N > 20000
-}
-
-// notThisLaw: of the excited blocks at no scale of time most show the law, and at one
-// all of many do not.
-func (w *Watch) notThisLaw() bool {
-	none := false
-	for k := range w.s.Fits {
-		b := &w.s.Fits[k]
-		if b.ByLaw > 0 || b.Count > 0 && b.Last.ok() {
-			return false
-		}
-		none = none || b.ByLaw <= -lawVotes
-	}
-	return none
 }
 
 // readText is a reading with its range, where there is one.
