@@ -59,7 +59,11 @@ func claimSaturation(w *Watch) claim {
 	if z.WindUp && causes[o.Cause] != FinalElementNotFollowing { // PV that OP does not move says nothing of the integral
 		return claim{true, z.WindSince, causeIndex(WindUp), [2]uint8{causeIndex(OutputLimit)}, 0.85, float32(z.Over)}
 	}
-	return claim{o.On, o.Since, o.Cause, [2]uint8{causeIndex(OutsideDisturbance)}, o.Conf, float32(math.Abs(o.Mean))}
+	also := [2]uint8{causeIndex(OutsideDisturbance)}
+	if causes[o.Cause] == Undetermined {
+		also = [2]uint8{causeIndex(FinalElementNotFollowing), causeIndex(OutputLimit)}
+	}
+	return claim{o.On, o.Since, o.Cause, also, o.Conf, float32(math.Abs(o.Mean))}
 }
 
 func claimSluggish(w *Watch) claim {

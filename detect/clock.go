@@ -128,6 +128,19 @@ func (c *clock) beat() (keeps, strays bool) {
 	return r < clockKeeps && jitter > clockBlur, r > math.Sqrt(math.Sqrt(2*n/15))
 }
 
+// ringJitter is the jitter of a crossing, periods, that noise and loads do not give a loop
+// which rings by itself at an even size: what keeps its size rings long, and what rings
+// long keeps its phase from one cycle to the next.
+const ringJitter = 0.015
+
+// driven says that crossings jitter as those of a loop which is pushed and damped, and do not
+// stray as far as a random walk of such steps. Loads that last over some cycles keep them
+// from the law of a clock.
+func (c *clock) driven() bool {
+	r, jitter, ok := c.running()
+	return ok && c.N >= 30 && jitter > ringJitter && r < 0.9*math.Sqrt(2*float64(c.N)/15)
+}
+
 // judged says whether beat rests on anything.
 func (c *clock) judged() bool {
 	_, _, ok := c.running()

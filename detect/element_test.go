@@ -109,3 +109,66 @@ func TestRecoveryOfTheLoopList(t *testing.T) {
 		t.Errorf("as slow as the list says:%s", brief(fs))
 	}
 }
+
+// e as the element that does not move left it, changed by a load just as OP comes to its
+// limit: neither an element nor a load is shown, and none is named.
+func TestTravelInVainIsDoubted(t *testing.T) {
+	g := newRig(plantE, 0.6, 60, 11)
+	g.noise = 0.1
+	g.bumps(4, 600)
+	g.run(24 * 3600)
+	g.each, g.load = nil, 0
+	g.run(900)
+	g.stick, g.load = 1e9, -1.5 // 3 % of PV
+	begin := g.t
+	g.each = func(t float64) {
+		if g.t-begin > 1680 { // of 1667 s that 3 % make OP take for 50 %
+			g.load = -1.95
+		}
+	}
+	g.run(3 * 3600)
+	fs := replay(loopOf("FIC-313", g), g.out)
+	f, ok := last(fs, detect.OutputSaturation)
+	if !ok || f.Cause != detect.Undetermined || len(f.AlsoPossible) != 2 ||
+		f.AlsoPossible[0] != detect.FinalElementNotFollowing || f.AlsoPossible[1] != detect.OutputLimit {
+		t.Errorf("want output-saturation, undetermined, element or limit:%s", brief(fs))
+	}
+}
+
+// A step of the set point asks the element: e that stays apart by the step while OP goes
+// far shows that nothing acts, whatever the load does at the limit.
+func TestSetPointAsksTheElement(t *testing.T) {
+	run := func(stuck bool) []detect.Finding {
+		g := newRig(plantE, 0.6, 60, 11)
+		g.noise = 0.1
+		g.bumps(4, 600)
+		g.run(24 * 3600)
+		g.each, g.load = nil, 0
+		g.run(900)
+		if stuck {
+			g.stick = 1e9
+		}
+		begin := g.t
+		g.sp += 3
+		g.each = func(t float64) {
+			if g.t-begin > 1500 { // and spoils the test at the limit; beyond what OP can do
+				g.load = -1.95
+				if !stuck {
+					g.load = -60
+				}
+			}
+		}
+		g.run(3 * 3600)
+		return replay(loopOf("FIC-314", g), g.out)
+	}
+	for _, stuck := range []bool{true, false} {
+		want := detect.OutputLimit
+		if stuck {
+			want = detect.FinalElementNotFollowing
+		}
+		fs := run(stuck)
+		if f, ok := last(fs, detect.OutputSaturation); !ok || f.Cause != want {
+			t.Errorf("stuck %v: want output-saturation by %s:%s", stuck, want, brief(fs))
+		}
+	}
+}

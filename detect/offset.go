@@ -30,8 +30,7 @@ type offsetState struct {
 	Anchors   [anchors]anchor
 	LimT      float64 // s, when OP came to rest at its limit; 0 not yet
 	LimInt    float32 // % s, Int by then
-	LimE      float32 // %, mean e of the later half of the way there; 0 it was not steady
-	LimS      float32 // s, length of that half
+	LimE      float32 // %, e by then, without its sign; 0 no test, or it was read
 	WasStill  bool
 	AtEnd     bool    // PV was at an end of its range: e says nothing of the process
 	NotFollow bool    // OP travelled and then stopped, and PV made nothing of either
@@ -53,6 +52,15 @@ type offsetPast struct {
 	Came    uint8      // findings from which PV came back by itself
 	Deaf    float64    // s, when the final element was last shown not to follow; 0 never
 	Vain    [2]float32 // s, when OP last travelled far, down and up, and PV made nothing of it; 0 never
+	Doubt   float32    // s, when OP last lay at its limit after such a travel; 0 never
+	Ask     ask
+}
+
+// ask is a set-point step whose effect is awaited.
+type ask struct {
+	T     float32 // s; 0 none
+	By    float32 // %
+	E, OP float32 // %, before it
 }
 
 // stand is a decision that holds until calm has lasted.
@@ -110,13 +118,10 @@ func stepOffset(w *Watch) {
 	s, in := &w.s, &w.in
 	o := &s.Off
 	if !in.active {
+		s.OffPast.Ask.T = 0
 		return
 	}
-	sigma := max(s.Noise.sigma(), 0.02)
-	thr := max(1.8*sigma, 0.8)
-	if w.loop.OffsetOK > 0 {
-		thr = max(thr, w.loop.OffsetOK/s.Scale.PVSpan*100)
-	}
+	thr := w.offsetLeast()
 	past := &s.OffPast
 	w.rest(&past.Offset)
 	w.rest(&past.Sat)
@@ -130,9 +135,16 @@ func stepOffset(w *Watch) {
 	} else if past.EF < -0.5*thr {
 		sign = -1
 	}
+	if past.Ask.T > 0 {
+		w.stepAsk()
+	}
 	if math.Abs(in.spStep) > 0.3 {
+		w.askSP()
 		past.EF += in.spStep // the step itself is no matter of the lag
 		if o.Sign != 0 && !w.pushesAtLimit() {
+			if o.LimT == 0 && w.vainWay() {
+				past.Doubt = float32(in.t)
+			}
 			w.endOfRun()
 			o.restart() // a new set point is a new question
 		}
@@ -174,12 +186,30 @@ func stepOffset(w *Watch) {
 	if in.pv <= rangeEnd || in.pv >= 100-rangeEnd {
 		o.AtEnd = true
 	}
-	if in.t-o.Checked < max(60, 10*in.dt) || o.Dur < 60*in.dt {
+	if o.LimT == 0 && w.pushesAtLimit() {
+		w.arrive()
+	}
+	if in.t-o.Checked < judgeEvery(in.dt) || o.Dur < 60*in.dt {
 		return
 	}
 	o.Checked = in.t
 	w.judgeOffset(thr)
 }
+
+// offsetLeast is the least offset, %, that counts.
+func (w *Watch) offsetLeast() float64 {
+	thr := max(1.8*w.s.Noise.sigma(), 0.8)
+	if w.loop.OffsetOK > 0 {
+		thr = max(thr, w.loop.OffsetOK/w.s.Scale.PVSpan*100)
+	}
+	return thr
+}
+
+// ownLimitS is how long, s, OP must stand still for its place to be a limit of its own.
+func ownLimitS(dt float64) float64 { return max(120*dt, 300) }
+
+// judgeEvery is how often, s, a run is judged.
+func judgeEvery(dt float64) float64 { return max(60, 10*dt) }
 
 // pushesAtLimit: OP lies at the limit to which e pushes, and still does after a
 // step of the set point: the same question as before.
@@ -303,7 +333,7 @@ func (w *Watch) judgeOffset(thr float64) {
 	need = max(need, 3*o.PrevDur) // PV that comes and goes is a cycle, not an offset
 	// An own limit: OP stands still at the extreme it ever reached, on the side to
 	// which e pushes (a limit or selector that nobody listed).
-	own := flat && in.t-m.OPSame > max(120*in.dt, 300) && m.OPRunMax < (in.t-m.OPSame)/2 &&
+	own := flat && in.t-m.OPSame > ownLimitS(in.dt) && m.OPRunMax < (in.t-m.OPSame)/2 &&
 		in.e*o.Sign > 0 && w.atOwnLimit()
 	at := o.OPs
 	if w.loop.FeedforwardKind != "" {
@@ -314,7 +344,7 @@ func (w *Watch) judgeOffset(thr float64) {
 		if s.Sat.AtSince == 0 {
 			s.Sat.AtSince = in.t
 		}
-		w.limitTest()
+		w.limitTest(listed)
 		// At a limit the evidence is plain: no need to wait for what the integral does.
 		wait := max(max(900, 100*in.dt), min(2.5*w.timeScale(), 7200)) * w.strict
 		if in.t-s.Sat.AtSince > wait {
@@ -327,7 +357,10 @@ func (w *Watch) judgeOffset(thr float64) {
 		}
 		return
 	}
-	s.Sat.AtSince, o.LimE = 0, 0
+	s.Sat.AtSince = 0
+	if at > l0+2*leastTravel/3 && at < l1-2*leastTravel/3 {
+		o.LimE = 0
+	}
 	if in.limit || in.frozen {
 		return
 	}

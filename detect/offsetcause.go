@@ -271,30 +271,97 @@ func (w *Watch) deaf() bool {
 // limitTest reads the one experiment that tells an element which does not move from a
 // load that grows. While OP travels both can hold e constant: OP makes good what the
 // load takes, or nothing at all. Once OP stops at its limit a growing load has its way
-// with PV, and where there is no effect to lose e stays what it was.
-func (w *Watch) limitTest() {
-	in, o := &w.in, &w.s.Off
-	sigma := max(w.s.Noise.sigma(), 0.02)
-	alike := func(a, b float64) bool {
-		return math.Abs(a-b) < max(0.2*math.Abs(b), sigma)
+// with PV at once, and where there is no effect to lose e stays what it was. Until that is
+// read, and where it cannot be, the travel leaves a doubt.
+func (w *Watch) limitTest(listed bool) {
+	in, o, p := &w.in, &w.s.Off, &w.s.OffPast
+	if o.LimT == 0 && !listed { // a limit that nobody listed is noticed late
+		if a := o.anchorAt(w.s.Motion.OPSame - o.T0); a != nil {
+			if w.arrive(); o.LimE > 0 {
+				o.LimE = float32(float64(a.E) * o.Sign)
+			}
+		}
 	}
-	if o.LimT == 0 {
-		o.LimT, o.LimInt = in.t, float32(o.Int)
-		d := in.t - o.T0
-		a := o.anchorAt(0.5 * d)
-		if a == nil || math.Abs(o.OPs-float64(a.OP)) < leastTravel || d-float64(a.T) < w.timeScale() {
-			return
-		}
-		way := (o.Int - float64(a.Int)) / (d - float64(a.T))
-		if alike(o.Es, way) && alike(float64(a.E), way) && math.Abs(way) > 3*sigma {
-			o.LimE, o.LimS = float32(way), float32(d-float64(a.T))
-		}
+	if o.LimE <= 0 {
 		return
 	}
-	if at := in.t - o.LimT; o.LimE != 0 && !o.AtEnd && at > max(0.7*float64(o.LimS), w.timeScale()) {
-		o.NotFollow = alike((o.Int-float64(o.LimInt))/at, float64(o.LimE))
+	e, was, at := o.Es*o.Sign, float64(o.LimE), in.t-o.LimT
+	ti, _ := w.resetS()
+	soon := max(3*ti, smoothLag*in.dt)
+	late := 1.5*soon + judgeEvery(in.dt)
+	mean := (o.Int - float64(o.LimInt)) * o.Sign / at
+	switch {
+	case at < soon:
+	case e > limitGrows*was && (at < late || e > 1.1*mean):
+		p.Doubt, o.LimE = 0, 0
+	case at > max(late, w.timeScale()):
+		sigma := max(w.s.Noise.sigma(), 0.02)
+		o.NotFollow = listed && !o.AtEnd && math.Abs(mean-was) < max(0.12*was, sigma/2) && math.Abs(e-was) < max(0.2*was, sigma)
 		o.LimE = 0 // once: what comes later is the load's doing
 	}
+}
+
+// limitGrows is the growth of e that shows a load which goes on. Where e made OP follow it,
+// by e Kc/Ti a second, each Ti in which OP cannot adds Kc K of e: 0.2 and more in SIMC
+// tunings (Skogestad 2003), in the three that are waited for 0.6.
+const limitGrows = 1.4
+
+// arrive notes how OP came to its limit.
+func (w *Watch) arrive() {
+	in, o := &w.in, &w.s.Off
+	o.LimT, o.LimInt = in.t, float32(o.Int)
+	if w.vainWay() {
+		o.LimE = float32(o.Es * o.Sign)
+		w.s.OffPast.Doubt = float32(in.t)
+	}
+}
+
+// vainWay: over the run OP went far the way e pushes it, for longer than a process takes to
+// answer, and e is there yet.
+func (w *Watch) vainWay() bool {
+	o := &w.s.Off
+	return (w.in.trim-o.OP0)*w.sign()*o.Sign > leastTravel && w.in.t-o.T0 > 2*w.timeScale() && o.Es*o.Sign > w.offsetLeast()
+}
+
+// askSP begins the test that a set-point step is: an element that acts brings e back to
+// what it was before, be that zero or what a growing load holds it at; where nothing acts
+// e stays apart by the step, however far OP goes. Coincident loads are as likely for either.
+func (w *Watch) askSP() {
+	in, a := &w.in, &w.s.OffPast.Ask
+	*a = ask{}
+	if size := max(5*w.s.Noise.sigma(), 0.5); math.Abs(in.spStep) > size && in.hasOP && w.loop.Process != configs.Integrating {
+		*a = ask{T: float32(in.t), By: float32(in.spStep), E: float32(w.s.OffPast.EF), OP: float32(in.trim)}
+	}
+}
+
+// stepAsk reads that test after two times to come back.
+func (w *Watch) stepAsk() {
+	in, p := &w.in, &w.s.OffPast
+	a := &p.Ask
+	if in.limit || in.frozen { // OP cannot answer
+		a.T = 0
+		return
+	}
+	if in.t-float64(a.T) < max(2*w.timeScale(), 20*in.dt) {
+		return
+	}
+	kc, ok := w.gainPct()
+	left := (p.EF - float64(a.E)) / float64(a.By)
+	went := (in.trim - float64(a.OP)) / (kc * float64(a.By))
+	switch {
+	case !ok || kc == 0:
+	case math.Abs(left) < 0.4:
+		p.Deaf, p.Vain, p.Doubt = 0, [2]float32{}, 0
+	case left > 0.75 && left < 1.25 && went > 4: // of which an element that acts makes 4*0.2 of the step
+		p.Deaf = in.t
+	}
+	a.T = 0
+}
+
+// doubts: OP came to its limit by a travel that PV made nothing of.
+func (w *Watch) doubts() bool {
+	p := &w.s.OffPast
+	return p.Doubt > 0 && w.in.t-float64(p.Doubt) < deafFor
 }
 
 // crossesSplit: OP has been on both sides of the change-over of a split range,

@@ -269,6 +269,10 @@ const (
 	phiValve        = 55.0 // over it neither explains the cycle
 )
 
+// evenSize is the ratio of the largest to the smallest size within which a cycle from outside
+// stays, and one at the edge of stability does not (methods section 15).
+const evenSize = 1.45
+
 // steady is the spread of amplitudes that a steady drive stays under.
 const steady = 0.15
 
@@ -300,7 +304,8 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	}
 	play := w.loop.Process != configs.SelfRegulating && strays && sh.looks >= shapeLooks && si > least && sh.peaked > corners && phi > phiDeadBand && phi < phiDeadBandMost
 	clipped := s.Tune.LimitAt > 0 && w.in.t-s.Tune.LimitAt < 1.5*o.P // a cycle between the limits of OP is as even as a clock's
-	follows := s.Motion.PosN > 300 && s.Motion.Astray < 0.3          // the position shows that the element does
+	unchanged := near(rk, 1) && near(rt, 1)
+	follows := s.Motion.PosN > 300 && s.Motion.Astray < 0.3 // the position shows that the element does
 	switch {
 	case o.GrowCause != 0 && causes[o.GrowCause] != Undetermined:
 		o.setCause(causes[o.GrowCause], also, 0.85)
@@ -324,6 +329,9 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		// A linear loop alone makes a sine, and its valve makes OP a triangle and strays:
 		// what is left for spikes or steps is a drive that has them.
 		o.setCause(OutsideDisturbance, [2]Cause{ValveSticking}, 0.85)
+	case s.Clock.judged() && sh.peaked > 2*squareLeast && sh.siOP < 0.55:
+		// Spikes far beyond the corners of a triangle, 1/9, are of no valve's making.
+		o.setCause(OutsideDisturbance, [2]Cause{ValveSticking}, 0.8)
 	case sh.looks == 0 && o.Cause != 0:
 		// A gap or a spell in manual took the record of the shape: nothing new is known.
 	case play && !changed && !follows:
@@ -370,6 +378,8 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		// to its beat; but a swing of the loop's own neither grows nor dies only at one
 		// value of its tuning.
 		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.75)
+	case unchanged && !integrating && s.Clock.driven() && sh.looks >= shapeLooks && max(sh.siOP, sh.siPV) < 0.5 && math.Abs(sh.peaked) < 1.3*peakedLeast && move < evenSize:
+		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.8)
 	case si < 0.5 && strays && q.regular > ownBeat && (move > 1.7 || phi < 25 && move > 1.5 || phi > 60 && spread > 0.14 && move > 1.4):
 		o.setCause(byPhi, [2]Cause{OutsideDisturbance}, 0.75)
 	default:

@@ -76,3 +76,47 @@ func TestUnsureCauseMustLast(t *testing.T) {
 		t.Error("a sure cause waits")
 	}
 }
+
+// What only a drive from outside explains: spikes beyond the corners of a triangle, and a
+// sine of even size, of a tuning that is as it was, whose crossings jitter.
+func TestDrivenFromOutside(t *testing.T) {
+	for _, c := range []struct {
+		what         string
+		peaked, size float64
+		beat         clock
+		want         Cause
+	}{
+		{"spikes", 0.4, 1.2, clock{Was: 2.5}, OutsideDisturbance},
+		{"corners of a triangle", 0.11, 1.2, clock{Was: 2.5}, Undetermined},
+		{"even, with jitter", 0, 1.2, jittering(), OutsideDisturbance},
+		{"growing and shrinking", 0, 1.6, jittering(), Undetermined},
+	} {
+		w := New(configs.NewLoop("TIC-315"), 0, Options{})
+		s := &w.s
+		s.Clock = c.beat
+		k := &s.Track
+		k.On, k.Looks = true, 40
+		k.SinSum, k.TriSum, k.SinPV, k.TriPV, k.Peaked = 0.3, 0.7, 0.3, 0.7, c.peaked*k.weight()
+		b := &s.Cycles[0]
+		for range ringLen {
+			b.push(halfCycle{8 * 64, 0})
+		}
+		s.Osc = oscState{Sus: true, P: 100, AmpHi: c.size, AmpLo: 1, Evals: 100}
+		for range 4 {
+			w.judgeSustainedCause(b, 50, ResetTooShort, [2]Cause{GainTooHigh}, 0.3, w.shapes(), 1, 1, false, false)
+		}
+		if got := causes[s.Osc.Cause]; got != c.want {
+			t.Errorf("%s: %s, want %s", c.what, got, c.want)
+		}
+	}
+}
+
+// jittering is a clock that loads move for some cycles on end.
+func jittering() clock {
+	c := clock{}
+	c.begin(0, 0, 100)
+	for i := range 50 {
+		c.cross(100*float64(i) + 4*math.Sin(2.1*float64(i)) + 6*math.Sin(0.7*float64(i)))
+	}
+	return c
+}

@@ -226,9 +226,10 @@ func (w *Watch) keepRecovery(e recovery) {
 			e.Ratio = e.Dur / float32(3.5*t)
 		}
 	}
-	if !e.Cut && e.Ratio > 0 && e.Ratio < 1.75 { // OP brought PV back in the usual time: the element follows
-		p := &w.s.OffPast
-		p.Deaf, p.Vain = 0, [2]float32{}
+	// OP brought PV back in the usual time: the element follows. Out of an episode the load
+	// may have done so, as it brought PV there.
+	if p := &w.s.OffPast; !e.Cut && e.Ratio > 0 && e.Ratio < 1.75 && !p.Sat.On && !p.Offset.On {
+		p.Deaf, p.Vain, p.Doubt = 0, [2]float32{}, 0
 	}
 	i := r.Count % recRing
 	if r.Count >= recRing {

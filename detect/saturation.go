@@ -146,7 +146,9 @@ func (w *Watch) sayLimit(since, mean, conf float64) {
 	}
 	cause := OutputLimit
 	if w.deaf() {
-		cause, conf = FinalElementNotFollowing, 0.85
+		cause, conf, p.Deaf = FinalElementNotFollowing, 0.85, w.in.t // until it has been calm for long
+	} else if w.doubts() {
+		cause, conf, p.Doubt = Undetermined, 0.6, float32(w.in.t)
 	} else if p.Sat.On && p.Sat.Cause == causeIndex(OutputLimit) {
 		conf = max(conf, float64(p.Sat.Conf))
 	}

@@ -99,7 +99,7 @@ func elementStuck(r *rand.Rand, _ float64) *scenario {
 	l.law.anti = pick(r, clamped, tracking)
 	return single(l, base, math.Max(60*l.recovery, 4*3600), truth{kinds: kinds{detect.SustainedOffset, detect.OutputSaturation},
 		also:   kinds{detect.ValveStickingKind, detect.SluggishRecovery, detect.PVAtRangeEnd},
-		causes: causes{detect.FinalElementNotFollowing}, soft: causes{detect.OutputLimit}, unit: l.recovery})
+		causes: causes{detect.FinalElementNotFollowing}, unit: l.recovery})
 }
 
 // saturation: the load is more than the element can give.
