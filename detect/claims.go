@@ -14,6 +14,14 @@ func claimGrowing(w *Watch) claim {
 	return claim{o.Grow && w.leadKnown() && !w.led(), o.Since, o.Cause, o.Also, o.Conf, float32(o.Amp)}
 }
 
+// planned: a swing that has always been there, or may have been, in which e comes to rest
+// most of the time: a load that steps to a plan of batches or shifts, and a loop that
+// answers each step well. A cycle of control never rests. Not said before its shape is known.
+func (w *Watch) planned() bool {
+	o, k := &w.s.Osc, &w.s.Track
+	return o.Always && k.On && k.Bank == o.Bank && (k.Looks == 0 && o.Evals < 8 || k.Rests > 0.5)
+}
+
 // leadKnown: whether the set point leads is known after a cycle, or at once where it
 // rests.
 func (w *Watch) leadKnown() bool {
@@ -22,7 +30,7 @@ func (w *Watch) leadKnown() bool {
 
 func claimSustained(w *Watch) claim {
 	o := &w.s.Osc
-	on := o.Sus && !o.Sticking && !o.Grow && w.leadKnown() // what grew stays a growing one until it is over
+	on := o.Sus && !o.Sticking && !o.Grow && w.leadKnown() && !w.planned() // what grew stays a growing one until it is over
 	if on && w.led() {
 		// A program or an outer loop moves the set point. News of this loop is only an
 		// error larger than the set point's own swing: no following at all would do better.

@@ -345,8 +345,14 @@ func (w *Watch) judgeOffset(thr float64) {
 			s.Sat.AtSince = in.t
 		}
 		w.limitTest(listed)
-		// At a limit the evidence is plain: no need to wait for what the integral does.
-		wait := max(max(900, 100*in.dt), min(2.5*w.timeScale(), 7200)) * w.strict
+		// At a limit the evidence is plain: no need to wait for what the integral does. Slow
+		// loops may lie there for as long as they take to recover, by plan or by an upset
+		// that passes, but not for a shift; and not where PV answers nothing.
+		longest := 8 * 3600.0
+		if o.NotFollow || w.deaf() {
+			longest = 2 * 3600
+		}
+		wait := max(max(900, 100*in.dt), min(2.5*w.timeScale(), longest)) * w.strict
 		if in.t-s.Sat.AtSince > wait {
 			conf := 0.9
 			if !listed {

@@ -25,6 +25,7 @@ type oscState struct {
 	Cause     uint8
 	Next      uint8 // a differing judgement, and how often running
 	NextN     uint8
+	Always    bool // slow, and as large as what the loop was seen to do from the start
 	ByChange  bool // the cause rests on a change of the loop's own tuning: later fits cannot overturn it
 	Also      [2]uint8
 	Conf      float32
@@ -53,6 +54,10 @@ var growthRules = [...]struct {
 }
 
 const growConfirm = 3
+
+// planSlow is the period, reset times, over which a loop has time to come to rest between
+// two steps of load: two recoveries of a well tuned one.
+const planSlow = 5.0
 
 // shiftBeat is the period, s, from which the beat of batches and shifts is met.
 const shiftBeat = 4 * 3600
@@ -270,8 +275,12 @@ func (w *Watch) beginOsc(level int, b *cycleBank, back int) {
 	}
 	keep := *o
 	if keep.P > 0 && (keep.Grow || keep.Sus) && math.Abs(math.Log(keep.P/(2*len/float64(back)*w.levelS(level)))) < 0.2 {
-		// The same cycle, seen by the neighbour: what is known of it stands, its track too.
+		// The same cycle, seen by the neighbour: what is known of it stands, its track too,
+		// unless it cannot hold two periods as long as they are now.
 		if k := &w.s.Track; k.On && k.Bank == o.Bank {
+			if 4*len/float64(back)*w.levelS(level) > (trackLen-1)*w.levelS(int(k.Level)) {
+				w.startTrack(level)
+			}
 			k.Bank = uint8(level)
 		}
 		o.Bank, o.Bad, o.Seen = uint8(level), 0, w.in.t
@@ -279,6 +288,8 @@ func (w *Watch) beginOsc(level int, b *cycleBank, back int) {
 	}
 	*o = oscState{Grow: keep.Grow, Sus: keep.Sus, Bank: uint8(level), Seen: w.in.t, Since: b.Zero - len*w.levelS(level),
 		LastAt: keep.LastAt, LastP: keep.LastP, LastCause: keep.LastCause}
+	rt, _ := w.resetS()
+	o.Always = !(w.usualKnown(b) && b.tip() > 1.6*b.Usual.Value()) && b.Kept < keptRaise && rt > 0 && 2*len/float64(back)*w.levelS(level) > planSlow*rt
 	w.startTrack(level)
 	w.s.Clock.begin(level, b.Zero, 2*len/float64(back)*w.levelS(level))
 }
@@ -312,8 +323,14 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 	if q, ok := b.stat(level, 14); ok && q.regular > 7 && q.least > 0.25 {
 		n = 14
 	}
-	if q, ok := b.stat(level, 11); ok && q.regular > 10*w.strict && q.least > 0.5 && known && q.amp > max(4*usual, 4*sigma) {
-		n = 11
+	size, young := usual, false
+	if !w.usualKnown(b) {
+		size, young = w.usualBelow(level)
+	}
+	if size > 0 && (!young || period < shiftBeat) && s.Noise.known() && !fast(level, st.period) && w.inFew(level, b, size, sigma) {
+		o.Sus = true
+		w.beginOsc(level, b, fewest)
+		return
 	}
 	q, ok := b.stat(level, n)
 	if ok && s.Noise.known() && !(fast(level, st.period) && b.Kept < fastHold) {
@@ -345,6 +362,47 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 	}
 }
 
+// A sequential test (Wald 1945) tells a plain cycle in few half-cycles. Lengths and
+// sizes of what merely wanders scatter by a third of their mean or more (Rayleigh's law
+// has it for the sizes of a narrow band of noise), those of a cycle by little: with the
+// deviation s seen, not s0, the ln of the likelihood ratio of a normal variable grows by
+// ln(s0/s) - (1 - s^2/s0^2)/2 at each of them. That all are large counts once, since one
+// upset makes them so.
+const (
+	wanders = 1.0 / 3
+	fewest  = 7    // half-cycles: after one step of load a sound loop makes fewer of even size
+	most    = 13   // more are for the tests of longer runs
+	certain = 12.0 // ln of the ratio: a few decisions of a million, as many as a fast loop takes in a year
+)
+
+func surprise(s float64) float64 {
+	q := max(s, 0.02) / wanders // less scatter than this may be chance
+	return -math.Log(q) - (1-q*q)/2
+}
+
+// inFew: the newest half-cycles are a cycle beyond doubt, each of them large against
+// noise and the loop's own usual.
+func (w *Watch) inFew(level int, b *cycleBank, usual, sigma float64) bool {
+	large := max(2*usual, 2.5*sigma, 0.4)
+	if b.tip() < 0.5*large {
+		return false
+	}
+	for n := fewest; n <= min(int(b.N), most); n++ {
+		q, _ := b.stat(level, n)
+		if q.amp < large || q.least < 0.5 || q.regular < 4 {
+			return false
+		}
+		if by, t := b.growth(n); t > 3 && by > 1.05 { // what grows is told as that
+			return false
+		}
+		size := 4 * math.Log(min(q.amp/large, math.E)) // upsets x times as large are x^4 times as rare, or so
+		if float64(n-2)*(surprise(1/q.regular)+surprise(b.spread(n)))+size > certain*w.strict {
+			return w.steadySP(float64(n) / 2 * q.period * w.levelS(level))
+		}
+	}
+	return false
+}
+
 // scheduled: far slower than the loop's own dynamics and with the beat of the day
 // or of a planned upset (short above, long below): not a cycle of control.
 func (w *Watch) scheduled(b *cycleBank, period float64) bool {
@@ -360,6 +418,11 @@ func (w *Watch) scheduled(b *cycleBank, period float64) bool {
 		if rt > 0 && period > 20*rt { // meant to wander with its load, or stopped in between
 			return true
 		}
+	}
+	// A day with peaks of its own shape gives half-cycles of many lengths, and what is so far
+	// beyond the loop's dynamics is followed, not made.
+	if rt > 0 && period > 20*rt && period > 43200 && period < 1.5*86400 {
+		return true
 	}
 	// The mean of the half-cycles is as uncertain as they are irregular, and a daily load
 	// has shapes of its own.
@@ -400,6 +463,9 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 	o.Evals++
 	o.P, o.Amp, o.Regular = st.period*w.levelS(level), st.amp, st.regular
 	o.Growth, _ = b.growth(st.n)
+	if o.Evals == fewest { // told early, it may still have been on its way to its beat
+		s.Clock.begin(level, b.Zero, o.P)
+	}
 	if (o.Evals > 8 || o.AmpHi == 0) && w.in.t-s.Motion.SPStep > 5*o.P {
 		if o.AmpHi == 0 || !o.AmpOn && o.Evals > 8 {
 			o.AmpOn = o.Evals > 8

@@ -174,7 +174,9 @@ func (w *Watch) spellSays(k int, c *claim) {
 	case died > 0 && (causes[c.Cause] == Undetermined || c.Cause == 0):
 		for i, a := range c.Also {
 			if causes[a] == OutsideDisturbance {
-				c.Also[i] = causeIndex(ValveSticking)
+				if c.Also[i] = causeIndex(ValveSticking); c.Also[1-i] == c.Also[i] {
+					c.Also[i] = 0
+				}
 			}
 		}
 	case died > 0:

@@ -42,6 +42,7 @@ type track struct {
 	// whose set point swings along is led, not leading.
 	SPLo, SPHi, PVLo, PVHi float32
 	SPSwing, PVSwing       float32
+	Rests                  float32 // share of the newest two cycles that e rests, see resting
 }
 
 func (k *track) reset() { *k = track{} }
@@ -107,6 +108,7 @@ func (w *Watch) lookTrack(period float64) {
 		e[i] = float64(k.E[j]) * trackStep
 		op[i] = float64(k.OP[j]) * trackStep
 	}
+	k.Rests = float32(resting(e[:n]))
 	de, dop := detrend(e[:n], p), detrend(op[:n], p)
 	k.forget()
 	k.Looks++
@@ -309,6 +311,22 @@ func busiestFifth(x []float64) float64 {
 		d[b] = -1
 	}
 	return ratio(top, total)
+}
+
+// resting is the share of whole cycles in which e lies near the set point, within a
+// quarter of the largest it reaches: 0.16 for a sine, 0.25 for a triangle, most of the
+// time for the recoveries from steps of load far apart.
+func resting(e []float64) float64 {
+	top, near := 0., 0.
+	for _, v := range e {
+		top = max(top, math.Abs(v))
+	}
+	for _, v := range e {
+		if 4*math.Abs(v) < top {
+			near++
+		}
+	}
+	return near / float64(len(e))
 }
 
 // grow adds one amplitude to the regression over the episode.
