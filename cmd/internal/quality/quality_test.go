@@ -13,47 +13,24 @@ import (
 	"midwatch/detect"
 )
 
-// Bounds of the short bench: a regression breaks them, chance does not. The full
-// bench (command bench) is what is reported.
+// The full bench (command bench) is what is reported.
 const (
-	shortLoops          = 2   // scenarios per family
-	shortDays           = 1.5 // of a healthy loop recorded at 10 s
-	maxMissedShare      = 0.10
-	maxWrongOfNamed     = 0.06
-	minNamedShare       = 0.80
-	maxFalsePerLoopYear = 6.0
-	maxGainErrorMedian  = 0.06
-	maxResetErrorMedian = 0.08
-	minReadShare        = 0.8
-	minRecordedFound    = 6 // of those that must be found: all
-	maxRecordedFalse    = 1
-	maxForbiddenCauses  = 0
+	shortLoops         = 2   // scenarios per family
+	shortDays          = 1.5 // of a healthy loop recorded at 10 s
+	minRecordedFound   = 6   // of those that must be found: all
+	maxRecordedFalse   = 1
+	maxForbiddenCauses = 0
 )
+
+var shortBounds = Bounds{Missed: 0.10, WrongOfNamed: 0.06, Named: 0.80, FalsePerLoopYear: 6, GainError: 0.06, ResetError: 0.08, Read: 0.8}
 
 func TestQuality(t *testing.T) {
 	if testing.Short() {
 		t.Skip("a minute of simulation")
 	}
 	results := Run(Options{Loops: shortLoops, Days: shortDays, Seed: 1})
-	_, _, f, h := Scores(results)
-	named := f.Right + f.Wrong
-	rate, _ := h.Rate()
-	for _, c := range []struct {
-		what     string
-		got, lim float64
-		ok       bool
-	}{
-		{"share of faults missed", f.Missed(), maxMissedShare, f.Missed() <= maxMissedShare},
-		{"share of named causes that are wrong", share(f.Wrong, named), maxWrongOfNamed, share(f.Wrong, named) <= maxWrongOfNamed},
-		{"share of found faults with a cause named", share(named, named+f.Open), minNamedShare, share(named, named+f.Open) >= minNamedShare},
-		{"false findings per healthy loop-year", rate, maxFalsePerLoopYear, rate <= maxFalsePerLoopYear},
-		{"median error of the gain read", h.GainError, maxGainErrorMedian, h.GainError <= maxGainErrorMedian},
-		{"median error of the reset read", h.ResetError, maxResetErrorMedian, h.ResetError <= maxResetErrorMedian},
-		{"share of healthy loops with a tuning read", share(h.GainRead, h.Readable), minReadShare, share(h.GainRead, h.Readable) >= minReadShare},
-	} {
-		if !c.ok {
-			t.Errorf("%s: %.3g, bound %.3g", c.what, c.got, c.lim)
-		}
+	for _, broken := range shortBounds.Broken(results) {
+		t.Error(broken)
 	}
 	if t.Failed() || testing.Verbose() {
 		var b strings.Builder
@@ -61,13 +38,6 @@ func TestQuality(t *testing.T) {
 		Table(&b, results)
 		t.Log("\n" + b.String())
 	}
-}
-
-func share(a, b int) float64 {
-	if b == 0 {
-		return 0
-	}
-	return float64(a) / float64(b)
 }
 
 func TestRecordedRuns(t *testing.T) {
