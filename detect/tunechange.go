@@ -4,6 +4,7 @@ import (
 	"math"
 
 	"midwatch/collector"
+	"midwatch/configs"
 	"midwatch/detect/num"
 )
 
@@ -35,7 +36,8 @@ const (
 	changeOld    = 6    // deviations known before: four beyond them all come by chance once in 210
 	changeGuess  = 0.15 // 80 % quantile of the deviations, ln, before so many are known: twice what readings stray
 	changeR2     = 0.95
-	changeNot    = 1.2 // a scale nearer than this to its usual gain did not change
+	changeApart  = 0.22 // ln 1.25: what the controller answers differs by that (methods section 9)
+	changeNot    = 1.2  // a scale nearer than this to its usual gain did not change
 )
 
 // leaving is what the newest fits read where they left the usual law.
@@ -47,6 +49,9 @@ type leaving struct {
 func (w *Watch) tuneCheck(k int) {
 	s := &w.s
 	b := &s.Fits[k]
+	if w.loop.Duty == configs.GapDuty { // two gains by design: which is read goes with the size of e
+		return
+	}
 	if b.Count < fitRing || b.BaseK.N < 4 || s.Osc.Sus && s.Osc.Grow {
 		return
 	}
@@ -114,6 +119,9 @@ func (w *Watch) left(k, m int) (n leaving, what uint8) {
 	if what == 1 && math.Abs(lk-lt) < math.Abs(lt) {
 		what = 0
 	}
+	if what > 0 && !b.apart(wasK, wasT, kn, tn, w.s.Grid.DT) {
+		what = 0
+	}
 	return
 }
 
@@ -176,6 +184,23 @@ func (w *Watch) moved(d []float64, n int, dev *num.Quantile) bool {
 	least, most := min(math.Abs(lo), math.Abs(hi)), max(math.Abs(lo), math.Abs(hi))
 	return lo*hi > 0 && hi-lo < max(math.Log(changeSpread), (least+most)/4) && least > 1.2*strays &&
 		(least+most)/2 > max(math.Log(changeRatio), 1.8*changeFits/float64(min(n, changeFits))*strays)*w.strict
+}
+
+// apart: two laws, gains in %/% and reset times in s, answer an error like that of the
+// running block differently, by changeApart. The answer is C(jw) = Kc (1 + 1/(jw Ti)) at the
+// mean frequency w of the block, the rms one of Int e (Rice 1944, Mathematical analysis of
+// random noise). Well above 1/Ti a few degrees move the reset read by any factor, well below
+// it the gain: a filter, a derivative or OP logged late reads as another tuning as soon as a
+// loop begins to swing. dt, s, is the interval of the log, by which the phase may be off.
+func (b *fitBank) apart(wasK, wasT, kn, tn, dt float64) bool {
+	w := math.Sqrt(b.Sums.A00 / b.Sums.A11)
+	if !(wasT > 0) {
+		wasT = tn
+	}
+	was, now := 1/(w*wasT), 1/(w*tn)
+	size := math.Log(kn/wasK) + math.Log((1+now*now)/(1+was*was))/2
+	turn := max(0, math.Abs(math.Atan(now)-math.Atan(was))-w*dt)
+	return math.Hypot(size, turn) > changeApart
 }
 
 // paced: the mean of OP went the way of the gain, by a factor r, as where OP is the controller's trim times

@@ -321,7 +321,9 @@ func (w *Watch) tuning(since, period float64) (kc, ti float64, ok bool) {
 				r = q
 			}
 		}
-		if float64(r.At) < since || float64(r.T0) < stands || !r.ok() || period == 0 && b.scattered(stands) {
+		// Where most blocks that move deny the law, as where a flow that no tag tells paces OP,
+		// those that pass are a choice by chance.
+		if float64(r.At) < since || float64(r.T0) < stands || !r.ok() || period == 0 && (b.ByLaw <= -lawVotes/2 || b.scattered(stands)) {
 			continue
 		}
 		score := 10*float64(r.R2) + min(1, float64(r.X)/2000)
