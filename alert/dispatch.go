@@ -2,6 +2,7 @@ package alert
 
 import (
 	"cmp"
+	"errors"
 	"fmt"
 	"slices"
 	"strings"
@@ -249,6 +250,8 @@ func (b *batch) routePerson(s *step, it Item, to string, r *configs.Route, local
 		return nil // in the standing list
 	case it.Finding.Kind == detect.TuningChanged:
 		return b.tuned(it, to, person, asked, local.UnixMilli())
+	case s.Quiet && it.Event == detect.Cleared && it.State != Folded && b.toldBefore(it.Episode, it.Step, to):
+		return b.wait(to, it, false) // and is dropped should it come back
 	case s.Quiet:
 		return nil
 	case it.Event == detect.Cleared:
@@ -415,6 +418,19 @@ func (b *batch) waitFor(w waiting) error {
 		}
 	}
 	return put(b.tx, bucketWaiting, key3(w.Episode, w.Step, w.Sender), w)
+}
+
+// dropOver forgets that people wait to hear of the end of an episode: it is none.
+func (b *batch) dropOver(id string) error {
+	var err error
+	over := func(w waiting) bool { return w.Episode == id && w.Event == detect.Cleared }
+	for _, w := range b.d.mem.waiting {
+		if over(w) {
+			err = errors.Join(err, b.tx.Delete(bucketWaiting, key3(w.Episode, w.Step, w.Sender)))
+		}
+	}
+	b.d.mem.waiting = slices.DeleteFunc(b.d.mem.waiting, over)
+	return err
 }
 
 func (b *batch) markTold(id string, n uint32, to, result string) error {

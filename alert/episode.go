@@ -67,6 +67,7 @@ type Episode struct {
 	Since    int64          `json:"since"`           // estimated onset, of this coming
 	First    int64          `json:"first"`           // raised for the first time
 	Raised   int64          `json:"raised"`          // raised the last time
+	Said     int64          `json:"said,omitempty"`  // raised the last time that people were to be told of
 	Cleared  int64          `json:"cleared,omitempty"`
 	Last     int64          `json:"last"`  // newest data time that changed it
 	Count    int            `json:"count"` // 1, and one more each time it came back

@@ -157,8 +157,12 @@ func (b *batch) hear(f *detect.Finding) error {
 		e.Since, e.Raised, e.Cleared, e.Ack = f.Since, f.At, 0, nil
 		e.Paged, e.Escalated = 0, 0
 		what, event = "came back", detect.Raised
-		// One that comes and goes is told of ever more rarely.
-		quiet = e.Count&(e.Count-1) != 0
+		// One that comes and goes is one trouble: that it is back is told once, then after
+		// a day and ever more rarely.
+		quiet = e.Count > 2 && f.At-e.Said < max(day, e.Said-e.First)
+		if err := b.dropOver(e.ID); err != nil {
+			return err
+		}
 	}
 	if t := e.member(f); t != nil {
 		*t = Member{Finding: *f, Open: true, Depth: b.d.set.depth[f.Loop]}
@@ -192,6 +196,12 @@ func (b *batch) hear(f *detect.Finding) error {
 	news, worse := true, false
 	if event == detect.Updated {
 		news, worse, quiet = e.news()
+	} else {
+		_, worse, _ = e.news() // than when it was last heard of; nothing was told of a new one
+		worse = worse && e.Count > 1
+		if quiet = quiet && !worse; !quiet {
+			e.Said = f.At
+		}
 	}
 	if news {
 		if err := b.step(e, event, f.At, quiet, worse); err != nil {
@@ -233,7 +243,8 @@ func (b *batch) cleared(f *detect.Finding) error {
 		return err
 	}
 	if !e.Open() {
-		if err := b.step(e, detect.Cleared, f.At, e.Count&(e.Count-1) != 0, false); err != nil {
+		// What came back once may again: its end is no message, see routePerson.
+		if err := b.step(e, detect.Cleared, f.At, e.Count > 1, false); err != nil {
 			return err
 		}
 	}

@@ -3,6 +3,7 @@ package alert
 import (
 	"maps"
 	"slices"
+	"strconv"
 	"strings"
 	"testing"
 	"time"
@@ -190,6 +191,71 @@ func TestClearsAndComesBack(t *testing.T) {
 	r.hear(f("AIC-204", detect.SustainedOffset, detect.Raised, 2000+24*60+1))
 	if es := r.desk.Episodes(); len(es) != 2 || es[0].Count != 1 {
 		t.Fatalf("back after more than a day: want a second episode with count 1:%s", describe(es))
+	}
+}
+
+// TestComesAndGoes: an OP that meets its limit at every peak of a slow swing is one
+// trouble. Who is on call hears of it, that it is over, that it is back; then of neither
+// until a day has gone, or it gets worse, and of the end in the digest.
+func TestComesAndGoes(t *testing.T) {
+	r := newRig(t, func(s *Settings) { s.Advise.Digest.Daily = "07:00" })
+	r.run(start)
+	var told []string
+	wake := func(minute float64) {
+		r.run(start.Add(time.Duration(minute * float64(time.Minute))))
+		for _, m := range r.mail.take() {
+			if m.Type == TypeAdvisory {
+				told = append(told, m.Subject)
+				if m.Count == 2 && !strings.Contains(strings.Join(strings.Fields(m.Text), " "), "2nd time since it was first seen; it comes and goes within a day. While it does, people are told again after a day") {
+					t.Errorf("what is back does not say how it is told on:\n%s", m.Text)
+				}
+			} else if m.Type == TypeDigest {
+				told = append(told, "digest, over "+strconv.Itoa(strings.Count(m.Text, "over:")))
+			}
+		}
+	}
+	come := func(minute, offset float64) {
+		r.hear(f("AIC-204", detect.OutputSaturation, detect.Raised, minute, measure("offset_pct", offset)))
+		wake(minute)
+	}
+	go1 := func(minute float64) {
+		r.hear(f("AIC-204", detect.OutputSaturation, detect.Cleared, minute, func(x *detect.Finding) { x.Reason = detect.Over }))
+		wake(minute)
+	}
+	for i := range 7 { // every 72 minutes from 10:00 on
+		come(float64(i)*72, 3)
+		go1(float64(i)*72 + 30)
+	}
+	wake(21*60 + 1) // 07:01
+	want := []string{"[Kestrel Fen] NOW AIC-204: OP at its limit", "[Kestrel Fen] AIC-204: over: OP at its limit",
+		"[Kestrel Fen] NOW AIC-204: back (2nd time): OP at its limit", "digest, over 1"}
+	if !slices.Equal(told, want) {
+		t.Errorf("told in a day:\n%q, want\n%q", told, want)
+	}
+	if e := only(t, r.desk.Episodes()); e.Count != 7 {
+		t.Errorf("%d times", e.Count)
+	}
+	told = nil
+	come(22*60, 3) // 08:00, not yet a day
+	go1(22*60 + 30)
+	if len(told) > 0 {
+		t.Errorf("told again within a day: %q", told)
+	}
+	come(23*60, 7) // worse by more than twice
+	go1(23*60 + 30)
+	come(28*60, 7)
+	if want := []string{"[Kestrel Fen] NOW AIC-204: back (9th time): OP at its limit"}; !slices.Equal(told, want) {
+		t.Errorf("told %q of what got worse, want %q", told, want)
+	}
+	if n := r.store.count(bucketWaiting); n != 0 {
+		t.Errorf("the end of what is back waits for the digest: %d", n)
+	}
+	told = nil
+	go1(28*60 + 30)
+	wake(45*60 + 1)
+	come(48*60, 7) // a day after
+	if want := []string{"digest, over 1", "[Kestrel Fen] NOW AIC-204: back (11th time): OP at its limit"}; !slices.Equal(told, want) {
+		t.Errorf("told %q a day later, want %q", told, want)
 	}
 }
 

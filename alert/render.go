@@ -121,7 +121,9 @@ func (d *Desk) renderOne(m *Message, x *delivery, it *Item, now time.Time) {
 		if c := causeLine(&f); c != "" {
 			body.fact("Why", c)
 		}
-		body.fact("First check", firstCheck(&f))
+		if !strings.Contains(what, "First ") { // the watch says its own, nearer to the case
+			body.fact("First check", firstCheck(&f))
+		}
 		if it.Hold != nil {
 			body.fact("Sight", "It cannot be seen since "+stamp(it.Hold.Since, d.set.Zone)+": "+clean(it.Hold.Why)+".")
 		}
@@ -142,7 +144,11 @@ func (d *Desk) renderOne(m *Message, x *delivery, it *Item, now time.Time) {
 	if it.Count > 1 && f.Kind == detect.TuningChanged {
 		body.fact("How often", fmt.Sprintf("changed %d times, each within a day of the one before; this is the last", it.Count))
 	} else if it.Count > 1 {
-		body.fact("How often", ordinal(it.Count)+" time since it was first seen; it comes and goes within a day")
+		often := ordinal(it.Count) + " time since it was first seen; it comes and goes within a day."
+		if it.Event == detect.Raised {
+			often += " While it does, people are told again after a day, then ever more rarely, or when it gets worse; that it is over stands in the digest."
+		}
+		body.fact("How often", often)
 	}
 	m.Subject = d.subject(it.Urgency, m.Old > 0, name+": "+eventWord(it)+kindWord(f.Kind)+more(len(it.Loops)))
 	m.TextShort = d.textShort(it, name, m.Old > 0)

@@ -212,6 +212,29 @@ func TestMessageHelpsTheWoken(t *testing.T) {
 	}
 }
 
+// TestOneFirstCheck: a text that says what to look at first gets no second one beside it.
+func TestOneFirstCheck(t *testing.T) {
+	r := newRig(t)
+	for i, own := range []string{"", " First check the measurement and the final element, then the reset time.", " First stroke the final element when operations agree; compare stem with OP."} {
+		r.hear(f("AIC-204", detect.GrowingOscillation, detect.Raised, at(night.Add(time.Duration(i)*48*time.Hour)), func(x *detect.Finding) {
+			x.Cause, x.Confidence = detect.ResetTooShort, 0.93
+			x.Text = "AIC-204 swings, and each swing is larger than the last." + own
+			x.Measures = detect.Measures{{Name: "time_to_op_limit_s", Value: 5400}}
+		}))
+		r.run(night.Add(time.Duration(i) * 48 * time.Hour))
+		ms := r.mail.take()
+		if len(ms) == 0 {
+			t.Fatal("no mail")
+		}
+		for _, body := range []string{ms[0].Text, ms[0].HTML} {
+			if got := strings.Contains(body, "First check:") || strings.Contains(body, ">First check<"); got != (own == "") {
+				t.Errorf("own check %q, a second one: %v", own, got)
+			}
+		}
+		r.hear(f("AIC-204", detect.GrowingOscillation, detect.Cleared, at(night.Add(time.Duration(i)*48*time.Hour))+60))
+	}
+}
+
 func TestCut(t *testing.T) {
 	for _, c := range []struct {
 		in   string

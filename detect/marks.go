@@ -174,12 +174,8 @@ func (w *Watch) before(k int, onset float64, now int64) (out []Change) {
 		}
 	}
 	slack := max(2*s.Grid.DT, 5)
-	if c := &s.Change; c.Seen > 0 && c.At > onset-markBeforeS {
-		// Where it was read from the data its begin is vague, and so is the onset of a cycle, told
-		// from up to twenty of its half-cycles of which only the later ones need be of the change.
-		add(ChangedTuning, c.At, max(slack, 10*s.Osc.P), w.tuningWords())
-	} else if text, at, _ := w.tuningMoved(onset); text != "" {
-		add(ChangedTuning, at, 0, text)
+	if m := w.tuningBefore(onset); m.words() != "" {
+		add(ChangedTuning, m.At, w.vagueS(), m.words())
 	}
 	for kind := range s.Marks {
 		for _, x := range s.Marks[kind] {
@@ -207,9 +203,8 @@ func (w *Watch) before(k int, onset float64, now int64) (out []Change) {
 }
 
 // tuningMoved compares the tuning in service with the usual one before an onset, for a
-// trouble that was found before the change itself was sure: words of what differs, and
-// since when at the earliest it was read so. same: both are known and agree.
-func (w *Watch) tuningMoved(onset float64) (words string, at float64, same bool) {
+// trouble that was found before the change itself was sure. same: both are known and agree.
+func (w *Watch) tuningMoved(onset float64) (m tuningMove, same bool) {
 	s := &w.s
 	// Readings at two scales of time differ by more than those of one: a fifth more than
 	// a change of the tuning asks for.
@@ -217,16 +212,15 @@ func (w *Watch) tuningMoved(onset float64) (words string, at float64, same bool)
 	gain, reset := w.tuningNow()
 	k0, t0, ok := w.usualTuning(onset - 2*s.Osc.P)
 	if !ok || !(gain > 0) || !(reset > 0) || !(k0 > 0) || !(t0 > 0) || t0 >= noTi {
-		return "", onset, false
+		return m, false
 	}
-	var p []string
 	if !within(gain, k0, differs) {
-		p = append(p, "gain from about "+sig2(k0)+" to "+sig2(gain))
+		m.GainWas, m.GainNow = float32(k0), float32(gain)
 	}
 	if !within(reset, t0, differs) {
-		p = append(p, "reset time from about "+duration(t0)+" to "+duration(reset))
+		m.ResetWas, m.ResetNow = float32(t0), float32(reset)
 	}
-	at = onset
+	at := onset
 	for i := range s.Fits {
 		b := &s.Fits[i]
 		for j := range min(int(b.Count), fitRing) {
@@ -236,7 +230,8 @@ func (w *Watch) tuningMoved(onset float64) (words string, at float64, same bool)
 			}
 		}
 	}
-	return strings.Join(p, " and "), at, near(gain, k0) && near(reset, t0)
+	m.At = at
+	return m, near(gain, k0) && near(reset, t0)
 }
 
 // markWords says a mark; the text is empty where it is too small for a word.
@@ -315,7 +310,7 @@ func (w *Watch) nothingBefore(k int, f *Finding) string {
 	// A change found since is the usual tuning by now: what is read agrees with that, and an
 	// onset can lie before it by mistake.
 	changed := s.Change.Seen > 0 && s.Change.At > onset-markBeforeS
-	if _, _, same := w.tuningMoved(onset); changed || !same || f.Cause == IntegralMissing {
+	if _, same := w.tuningMoved(onset); changed || !same || f.Cause == IntegralMissing {
 		return " No change of mode or SP was seen in the 24 h before."
 	}
 	return " No change of mode, SP or tuning was seen in the 24 h before."

@@ -205,6 +205,14 @@ func (w *Watch) offsetLeast() float64 {
 	return thr
 }
 
+// offsetWaitS is how long, s, an error must keep its sign at least before it is an offset:
+// what the cause of it asks beyond that is decided with the cause.
+func (w *Watch) offsetWaitS() float64 {
+	rt, _ := w.resetS()
+	need := max(max(8*60, 100*w.in.dt), max(4*rt, 2.5*w.timeScale())) * w.strict
+	return max(need, 3*w.s.Off.PrevDur) // PV that comes and goes is a cycle, not an offset
+}
+
 // ownLimitS is how long, s, OP must stand still for its place to be a limit of its own.
 func ownLimitS(dt float64) float64 { return max(120*dt, 300) }
 
@@ -326,11 +334,9 @@ func (w *Watch) judgeOffset(thr float64) {
 	w.vainTravel(mean, recent)
 	lo, hi := m.opRange()
 	l0, l1 := w.opLimits()
-	rt, _ := w.resetS()
 	push := w.sign() * o.Sign // +1: OP should rise
 	flat := hi-lo < 0.35
-	need := max(max(8*60, 100*in.dt), max(4*rt, 2.5*w.timeScale())) * w.strict
-	need = max(need, 3*o.PrevDur) // PV that comes and goes is a cycle, not an offset
+	need := w.offsetWaitS()
 	// An own limit: OP stands still at the extreme it ever reached, on the side to
 	// which e pushes (a limit or selector that nobody listed).
 	own := flat && in.t-m.OPSame > ownLimitS(in.dt) && m.OPRunMax < (in.t-m.OPSame)/2 &&

@@ -55,6 +55,24 @@ var growthRules = [...]struct {
 
 const growConfirm = 3
 
+// stays is what is asked of a cycle that stays: regularity of the half-cycles, smallest
+// peak over their mean, and the size as a multiple of the usual one and of the noise, and
+// in % (common practice, no source).
+type stays struct{ regular, least, usual, noise, pct float64 }
+
+func (r stays) size(sigma, usual float64) float64 {
+	return max(r.usual*usual, r.noise*sigma, r.pct)
+}
+
+// Of a loop whose usual size is known, and of one where it is not.
+var (
+	steadyOwn = stays{4, 0.3, 2, 1.9, 0.4}
+	steadyNew = stays{4, 0.3, 0, 5, 1.2}
+)
+
+// steadyHalves are the half-cycles looked at.
+const steadyHalves = 18
+
 // planSlow is the period, reset times, over which a loop has time to come to rest between
 // two steps of load: two recoveries of a well tuned one.
 const planSlow = 5.0
@@ -319,7 +337,7 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 	}
 	usual := b.Usual.Value()
 	known := w.usualKnown(b) && b.Usual.N >= 60
-	n := 18 // the plainer the cycle the fewer of its half-cycles tell it
+	n := steadyHalves // the plainer the cycle the fewer of its half-cycles tell it
 	if q, ok := b.stat(level, 14); ok && q.regular > 7 && q.least > 0.25 {
 		n = 14
 	}
@@ -339,10 +357,10 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 		plain := known || period < shiftBeat
 		rt, _ := w.resetS()
 		big := q.amp > max(3*sigma, 0.6) && plain
-		own := q.amp > max(1.9*sigma, 0.4) && known && q.amp > 2*usual
+		own := known && q.amp > steadyOwn.size(sigma, usual)
 		if (q.regular > 5*w.strict && q.least > 0.4 && big && (!known || q.amp > 1.6*usual) ||
-			q.regular > 4*w.strict && q.least > 0.3 && own ||
-			q.regular > 4*w.strict && q.least > 0.3 && !known && plain && q.amp > max(1.2, 5*sigma) ||
+			q.regular > steadyOwn.regular*w.strict && q.least > steadyOwn.least && own ||
+			q.regular > steadyNew.regular*w.strict && q.least > steadyNew.least && !known && plain && q.amp > steadyNew.size(sigma, usual) ||
 			q.regular > 7*w.strict && q.least > 0.4 && !known && (plain || period < ownSlowest*rt) && q.amp > max(0.45, 4*sigma)) &&
 			(w.steadySP(float64(n)/2*period) || q.regular > 8*w.strict && period < keptSlow) { // steps of SP now and then cannot beat such time
 			o.Sus = true
@@ -380,10 +398,19 @@ func surprise(s float64) float64 {
 	return -math.Log(q) - (1-q*q)/2
 }
 
+// largeInFew is the least mean peak, %, of a cycle that few half-cycles tell.
+func largeInFew(usual, sigma float64) float64 { return max(2*usual, 2.5*sigma, 0.4) }
+
+// plainness is the ln of the ratio for the half-cycles of q, of that spread of sizes.
+func plainness(q *ringStat, spread, large float64) float64 {
+	size := 4 * math.Log(min(q.amp/large, math.E)) // upsets x times as large are x^4 times as rare, or so
+	return float64(q.n-2)*(surprise(1/q.regular)+surprise(spread)) + size
+}
+
 // inFew: the newest half-cycles are a cycle beyond doubt, each of them large against
 // noise and the loop's own usual.
 func (w *Watch) inFew(level int, b *cycleBank, usual, sigma float64) bool {
-	large := max(2*usual, 2.5*sigma, 0.4)
+	large := largeInFew(usual, sigma)
 	if b.tip() < 0.5*large {
 		return false
 	}
@@ -395,8 +422,7 @@ func (w *Watch) inFew(level int, b *cycleBank, usual, sigma float64) bool {
 		if by, t := b.growth(n); t > 3 && by > 1.05 { // what grows is told as that
 			return false
 		}
-		size := 4 * math.Log(min(q.amp/large, math.E)) // upsets x times as large are x^4 times as rare, or so
-		if float64(n-2)*(surprise(1/q.regular)+surprise(b.spread(n)))+size > certain*w.strict {
+		if plainness(&q, b.spread(n), large) > certain*w.strict {
 			return w.steadySP(float64(n) / 2 * q.period * w.levelS(level))
 		}
 	}

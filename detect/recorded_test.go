@@ -193,6 +193,7 @@ func TestRecordedRuns(t *testing.T) {
 			if len(known) == 0 {
 				t.Fatal("no truth for this run")
 			}
+			keepsItsWord(t, fs)
 			for _, f := range fs {
 				if f.Event != detect.Cleared {
 					innocent(t, f, known, onset)
@@ -226,6 +227,32 @@ func TestRecordedRuns(t *testing.T) {
 	t.Logf("%d definite faults, %d found, %d rightly named", definite, found, right)
 	if definite != 6 || found < leastFound || right < leastRight {
 		t.Errorf("of %d definite faults %d found and %d rightly named, want %d and %d", definite, found, right, leastFound, leastRight)
+	}
+}
+
+// keepsItsWord: what a finding once said of a change of the tuning before it, it says until
+// it is over, though the new tuning is the usual one by then.
+func keepsItsWord(t *testing.T, fs []detect.Finding) {
+	t.Helper()
+	first := map[string]string{}
+	for _, f := range fs {
+		key := f.Loop + " " + string(f.Kind)
+		if f.Event == detect.Cleared {
+			delete(first, key)
+			continue
+		}
+		text := ""
+		for _, c := range f.Changed {
+			if c.What == detect.ChangedTuning {
+				text = c.Text
+			}
+		}
+		if was := first[key]; was != "" && text == "" {
+			t.Errorf("%s at %s no longer says %q: %s", key, detect.FormatTime(f.At), was, f.Text)
+		}
+		if text != "" {
+			first[key] = text
+		}
 	}
 }
 

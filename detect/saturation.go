@@ -21,9 +21,23 @@ type saturationState struct {
 	// Stretches at a limit that e pushes towards, each longer than a recovery.
 	From, IntE float64 // s, begin of the running one, 0 none; % s, integral of e over it
 	Stretches  uint8
+	LimitShare float32 // share of time with OP at either limit while the law acts, mean of days from 0 on
 	LastEnd    float64 // s
 	FirstFrom  float64 // s
 }
+
+// shareS is over how long, s, shares of time are means.
+const shareS = 3 * 86400.0
+
+// atLimit is the share of time that OP lies at a limit; where the watch is young, of what
+// was seen so far.
+func (w *Watch) atLimit() float64 {
+	return float64(w.s.Sat.LimitShare) / -math.Expm1(-max(w.in.t, 1)/shareS)
+}
+
+// limitAlways is the share of time at a limit from which hardly anything of a loop is seen
+// (common practice, no source).
+const limitAlways = 0.9
 
 // usualLow is the share of time at the low end from which idling is usual: an hour a
 // day (common practice, no source).
@@ -53,7 +67,9 @@ func stepSaturation(w *Watch) {
 	if in.op <= opAtLimit {
 		low = 1
 	}
-	z.LowShare += (low - z.LowShare) * float32(in.dt/(3*86400))
+	day := float32(in.dt / shareS)
+	z.LowShare += (low - z.LowShare) * day
+	z.LimitShare += (float32(math.Abs(side)) - z.LimitShare) * day
 	a := w.sign()
 	sigma := max(s.Noise.sigma(), 0.02)
 	w.stepStretch(side, sigma)

@@ -3,6 +3,7 @@ package detect_test
 import (
 	"math"
 	"slices"
+	"strings"
 	"testing"
 
 	"midwatch/collector"
@@ -101,6 +102,49 @@ func TestNuisanceBudget(t *testing.T) {
 		}
 		if n[0.01] == 0 || n[1] == 0 {
 			t.Errorf("%s: raised %v times", x.kind, n)
+		}
+	}
+}
+
+// Blind spots of what is seen of a loop: OP at a limit nearly always, OP that nobody moves,
+// noise that is not recorded, each said of its own case only.
+func TestBlindSpotsOfTheRecord(t *testing.T) {
+	const limit, still, hidden = "OP lies at a limit nearly always (", "OP has hardly moved", "compression hides the noise of PV"
+	run := func(low float64, each func(*rig)) string {
+		g := newRig(plantA, 2, 20, 5)
+		g.noise, g.opLo, g.opHi = 0.1, 0, 100
+		g.bumps(6, 300)
+		each(g)
+		g.run(4 * 3600)
+		l := loopOf("TIC-220", g)
+		l.OPLimitLow = low
+		w, _ := watchOver(l, g.out)
+		return strings.Join(w.View().BlindSpots, "\n")
+	}
+	for _, c := range []struct {
+		name string
+		low  float64
+		each func(*rig)
+		want string
+	}{
+		{"at work", 0, func(*rig) {}, ""},
+		{"at its limit, at times off it", 60, func(g *rig) { // OP rests at 50: under the limit of the list
+			g.each = func(t float64) {
+				if t > 7200 && t < 7500 {
+					g.load = -30
+				} else {
+					g.load = 0
+				}
+			}
+		}, limit},
+		{"nothing asked", 0, func(g *rig) { g.noise = 0.001; g.each = func(float64) { g.load = 0 } }, still},
+		{"noise left out", 0, func(g *rig) { g.noise = 0 }, hidden},
+	} {
+		got := run(c.low, c.each)
+		for _, x := range []string{limit, still, hidden} {
+			if want := x == c.want || c.name == "nothing asked" && x == hidden; strings.Contains(got, x) != want {
+				t.Errorf("%s: %q said: %v\n%s", c.name, x, !want, got)
+			}
 		}
 	}
 }

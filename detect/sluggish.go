@@ -80,16 +80,24 @@ func (w *Watch) swinging() bool {
 	return false
 }
 
+// What recoveries must show against the loop's own usual (common practice, no source).
+const (
+	slowEach   = 3.0 // times the usual, each of them
+	slowMedian = 4.0 // times the usual, their median
+	slowFewest = 4   // recoveries
+	slowSure   = 5   // and where the tuning is known not to have changed
+)
+
 // slowByHistory compares with the loop's own usual recovery. Where the tuning in
 // service is known not to have changed, ramps and second disturbances are the
 // likelier reason, and all of the last five must agree.
 func (w *Watch) slowByHistory(n int) bool {
 	r := &w.s.Recov
-	need, over, least := 4, 3.0, 4.0
+	need, over := slowFewest, slowEach
 	k0, t0, okb := w.usualTuning(float64(r.recent(min(n, 5) - 1).T0))
 	kc, ti, ok := w.tuning(float64(r.recent(2).T0), 0)
 	if ok && okb && ti > 0 && t0 > 0 && math.Abs(math.Log(math.Abs(kc)/k0)) < 0.35 && math.Abs(math.Log(ti/t0)) < 0.35 {
-		need, over = 5, 2.5
+		need, over = slowSure, 2.5
 	}
 	if n < need {
 		return false
@@ -108,7 +116,7 @@ func (w *Watch) slowByHistory(n int) bool {
 		}
 		ratios[i] = float64(e.Ratio)
 	}
-	return num.Median(ratios[:need]) > least*w.strict
+	return num.Median(ratios[:need]) > slowMedian*w.strict
 }
 
 // slowCause notes what the newest recoveries, so many, prove and why it is so.

@@ -202,7 +202,8 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 		return what + ". Nobody may know that the law does not act." + w.beforeSentence(k, f) + " First ask operations whether it is meant, and until when.", w.short(f, brief)
 	case kTuning:
 		what = "The tuning in service changed"
-		if x := w.tuningWords(); x != "" {
+		m := s.Change.move()
+		if x := m.words(); x != "" {
 			what += ": " + x
 		}
 		if n := w.tuningNote(); n != "" {
@@ -270,20 +271,6 @@ func (w *Watch) timeWords(op, alarm float64) string {
 		return "; OP already meets a limit"
 	}
 	return part("; OP meets a limit in about %s", op, duration)
-}
-
-// tuningWords say the last change of the tuning; empty where there was none.
-func (w *Watch) tuningWords() string {
-	c := &w.s.Change
-	var p []string
-	known := func(v float32) bool { return v > 0 && v <= math.MaxFloat32 }
-	if c.What&1 != 0 && known(c.GainNow) && known(c.GainWas) {
-		p = append(p, fmt.Sprintf("gain from about %s to %s", sig2(float64(c.GainWas)), sig2(float64(c.GainNow))))
-	}
-	if c.What&2 != 0 && known(c.ResetNow) && known(c.ResetWas) {
-		p = append(p, fmt.Sprintf("reset time from about %s to %s", duration(float64(c.ResetWas)), duration(float64(c.ResetNow))))
-	}
-	return strings.Join(p, " and ")
 }
 
 // direction says in which direction the remedy lies, where that is safe to say: how

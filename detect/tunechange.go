@@ -1,7 +1,9 @@
 package detect
 
 import (
+	"fmt"
 	"math"
+	"strings"
 
 	"midwatch/collector"
 	"midwatch/configs"
@@ -269,6 +271,83 @@ func (w *Watch) readTuning(f *collector.Frame, t float64) {
 	}
 	note(&c.TagGain, f.Gain, 1, &c.GainWas, &c.GainNow)
 	note(&c.TagReset, f.Reset, 2, &c.ResetWas, &c.ResetNow)
+}
+
+// tuningMove is a change of the tuning before the onset of a trouble, as it was first
+// said: the usual tuning, from which it is read, becomes the new one while the trouble
+// lasts. Of what did not change Was and Now are 0.
+type tuningMove struct {
+	At       float64 // s, since when at the earliest it was read so
+	Onset    float32 // s, of the trouble
+	GainWas  float32
+	GainNow  float32
+	ResetWas float32 // s
+	ResetNow float32 // s
+}
+
+// words say what moved; empty where nothing did.
+func (m *tuningMove) words() string {
+	var p []string
+	known := func(v float32) bool { return v > 0 && v <= math.MaxFloat32 }
+	if known(m.GainNow) && known(m.GainWas) {
+		p = append(p, fmt.Sprintf("gain from about %s to %s", sig2(float64(m.GainWas)), sig2(float64(m.GainNow))))
+	}
+	if known(m.ResetNow) && known(m.ResetWas) {
+		p = append(p, fmt.Sprintf("reset time from about %s to %s", duration(float64(m.ResetWas)), duration(float64(m.ResetNow))))
+	}
+	return strings.Join(p, " and ")
+}
+
+// move is the last change that was told of.
+func (c *tuneChange) move() (m tuningMove) {
+	m.At = c.At
+	if c.What&1 != 0 {
+		m.GainWas, m.GainNow = c.GainWas, c.GainNow
+	}
+	if c.What&2 != 0 {
+		m.ResetWas, m.ResetNow = c.ResetWas, c.ResetNow
+	}
+	return m
+}
+
+// tuningBefore is the change of the tuning in the 24 h before an onset, s: the one told
+// of, else the one first said of this onset, else what the readings show now.
+func (w *Watch) tuningBefore(onset float64) tuningMove {
+	c, kept := &w.s.Change, &w.s.Moved
+	told := c.Seen > 0 && c.At > onset-markBeforeS
+	switch {
+	case told && c.At <= onset+w.vagueS():
+		return c.move()
+	case kept.Onset == float32(onset):
+		return *kept
+	case told: // what is usual by now, was not before it
+		return tuningMove{}
+	}
+	m, _ := w.tuningMoved(onset)
+	return m
+}
+
+// vagueS is by how long, s, a change of the tuning that was read from the data may seem to
+// follow the onset of what it made: its begin is vague, and so is the onset of a cycle, told
+// from up to twenty of its half-cycles of which only the later ones need be of the change.
+func (w *Watch) vagueS() float64 { return max(2*w.s.Grid.DT, 5, 10*w.s.Osc.P) }
+
+// keepMove holds what a finding is about to say of the tuning before its onset, s, for as
+// long as that trouble stands.
+func (w *Watch) keepMove(k int, onset float64) {
+	if stands(k, ChangedTuning) {
+		return
+	}
+	kept := &w.s.Moved
+	for i := range w.s.Open {
+		if o := &w.s.Open[i]; o.On && float32(o.Since) == kept.Onset && o.Since != onset && kept.words() != "" {
+			return
+		}
+	}
+	if m := w.tuningBefore(onset); m.words() != "" {
+		m.Onset = float32(onset)
+		*kept = m
+	}
 }
 
 // A change is news for a day.

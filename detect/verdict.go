@@ -76,6 +76,7 @@ func (w *Watch) settle(k int, t float64, c *claim, rejudged bool) {
 	case c.On && !o.On:
 		s.OpenN++
 		*o = openFinding{On: true, Cause: c.Cause, Said: 1 << c.Cause, Conf: c.Conf, Since: c.Since, Strength: c.Strength}
+		w.keepMove(k, o.Since)
 		w.say(k, Raised, t, "")
 	case c.On:
 		o.weigh(c)
@@ -89,6 +90,7 @@ func (w *Watch) settle(k int, t float64, c *claim, rejudged bool) {
 			if worse {
 				o.Strength = c.Strength
 			}
+			w.keepMove(k, o.Since)
 			w.say(k, Updated, t, "")
 		}
 	case o.On:

@@ -170,14 +170,16 @@ func (w *Watch) blindSpots() (b []string) {
 	if u := w.updateS(); m.Changes > 20 && u > 4*s.Grid.DT && w.loop.Report == configs.Periodic {
 		b = append(b, fmt.Sprintf("PV really changes only about every %s", duration(u)))
 	}
-	if s.Noise.known() && s.Noise.sigma() <= leastNoise*1.01 && w.loop.Report == configs.Exception {
-		b = append(b, "compression hides the noise of PV")
+	if s.Noise.known() && s.Noise.sigma() <= leastNoise*1.01 && (w.loop.Report == configs.Exception || m.Changes > 20) {
+		b = append(b, "compression hides the noise of PV: small cycles and causes that rest on its shape are not seen")
 	}
 	if s.Recov.Count == 0 && s.Noise.N > 20000 {
 		b = append(b, "not disturbed yet: recovery cannot be judged")
 	}
-	if m.OPMax > -1e8 && float64(m.OPMax-m.OPMin) < 0.5 && s.Noise.N > 2000 {
-		b = append(b, "OP has hardly moved: always at a limit, or not this loop's output")
+	if share := w.atLimit(); s.Noise.N > 2000 && share > limitAlways {
+		b = append(b, fmt.Sprintf("OP lies at a limit nearly always (%.0f %% of the time): what the loop does off it is hardly seen", 100*min(share, 1)))
+	} else if m.OPMax > -1e8 && float64(m.OPMax-m.OPMin) < 0.5 && s.Noise.N > 2000 {
+		b = append(b, "OP has hardly moved: nothing was asked of it, or it is not this loop's output")
 	}
 	if w.otherLaw() {
 		b = append(b, "not-this-law: OP moves otherwise than gain and reset on SP less PV would move it (a gap, error-squared action, feed-forward, a selector, a hand?): its tuning is not read, and causes that rest on it stay open")
@@ -198,80 +200,4 @@ func (w *Watch) blindSpots() (b []string) {
 func (w *Watch) blind() bool {
 	m := &w.s.Motion
 	return w.s.Last.OP != w.s.Last.OP && m.OPMin > m.OPMax || m.Mode == collector.ModeUnknown && !m.LawSeen && w.s.Noise.N > 20000
-}
-
-// readText is a reading with its range, where there is one.
-func readText(v, low, high float64, unit string) string {
-	switch {
-	case v != v:
-		return "not read"
-	case low != low || high != high:
-		return fmt.Sprintf("%.3g%s", v, unit)
-	}
-	return fmt.Sprintf("%.3g%s (%.3g to %.3g)", v, unit, low, high)
-}
-
-// Explain gives the evidence held now, a line each, readable by an engineer.
-func (w *Watch) Explain() []string {
-	s := &w.s
-	if !s.Grid.Begun {
-		return []string{"no usable frame yet"}
-	}
-	out := []string{
-		fmt.Sprintf("sample interval %s; noise level %s (%.3f %% of range)", duration(s.Grid.DT), w.pvText(s.Noise.sigma()), s.Noise.sigma()),
-		fmt.Sprintf("PV %.4g, SP %.4g, OP %.1f %%, mode %q, law acting: %v", s.Last.PV, s.Last.SP, s.Motion.OP, s.Motion.Mode.String(), s.Motion.Active),
-	}
-	if k, k0, k1, t, t0, t1 := w.tuningRange(); k == k {
-		out = append(out, fmt.Sprintf("tuning in service: gain %s, reset %s", readText(k, k0, k1, ""), readText(t, t0, t1, " s")))
-	} else {
-		out = append(out, "tuning in service: not excited enough to read")
-	}
-	if l := w.lag(); l > 0 {
-		out = append(out, fmt.Sprintf("OP logged late or PV filtered in the controller: a lag of about %s s", sig2(l)))
-	}
-	for _, p := range w.schedulePoints() {
-		out = append(out, fmt.Sprintf("gain goes with PV: at %.4g%s about %s (%d readings)", p.PV, unitOf(w.loop.Unit), sig2(p.Gain), p.N))
-	}
-	for _, n := range w.blindSpots() {
-		out = append(out, "blind spot: "+n)
-	}
-	for l := range w.levels() {
-		b := &s.Cycles[l]
-		if st, ok := b.stat(l, 8); ok && st.regular > 2.5 {
-			by, t := b.growth(st.n)
-			out = append(out, fmt.Sprintf("cycle of %s: amplitude %.3g %%, usual %.3g %%, regularity %.1f, growth %.2f a cycle (t %.1f)",
-				duration(st.period*w.levelS(l)), st.amp, b.Usual.Value(), st.regular, by, t))
-		}
-	}
-	if s.Osc.Grow || s.Osc.Sus {
-		sh := w.shapes()
-		out = append(out, fmt.Sprintf("live oscillation since %s: period %s, lag of the controller %.0f degrees (direct %.0f), shape index %.2f, third harmonic %.2f, looks %d, swing of SP %.2f %% and PV %.2f %%",
-			FormatTime(w.ms(s.Osc.Since)), duration(s.Osc.P), s.Osc.PhiDeg, sh.phiDeg, w.stickIndex(sh), sh.h3OP, sh.looks, s.Track.SPSwing, s.Track.PVSwing))
-	}
-	if p := &s.Spell; p.OfP > 0 {
-		out = append(out, fmt.Sprintf("manual spells with a cycle of %s before them: it went on in %d and died in %d, the last at %s", duration(float64(p.OfP)), p.WentOn, p.Died, FormatTime(w.ms(float64(p.At)))))
-	}
-	for i := range int(min(s.Recov.Count, recRing)) {
-		e := s.Recov.recent(i)
-		out = append(out, fmt.Sprintf("recovery at %s: %s, peak %.2f %%, rise %s, ratio to usual %.2f, proportional share %.2f, slower than its process bears by %.2f, set point %v",
-			FormatTime(w.ms(float64(e.At))), duration(float64(e.Dur)), e.Peak, duration(float64(e.Rise)), e.Ratio, e.Prop, e.Own, e.SP))
-	}
-	if s.Off.Sign != 0 {
-		out = append(out, fmt.Sprintf("one-sided error for %s, mean %.2f %%", duration(w.in.t-s.Off.T0), s.Off.Int/max(s.Off.Dur, 1e-9)))
-	}
-	for kind := range s.Marks {
-		for i := range s.Marks[kind] {
-			if x := &s.Marks[kind][i]; x.Size != 0 {
-				if _, t := w.markWords(kind, float64(x.Size)); t != "" {
-					out = append(out, "changed at "+FormatTime(w.ms(float64(x.At)))+": "+t)
-				}
-			}
-		}
-	}
-	for k := range table {
-		if s.Open[k].On {
-			out = append(out, fmt.Sprintf("open: %s since %s, cause %s, confidence %.2f", table[k].Kind, FormatTime(w.ms(s.Open[k].Since)), causes[s.Open[k].Cause], s.Open[k].Conf))
-		}
-	}
-	return out
 }

@@ -68,6 +68,7 @@ type state struct {
 	Misc    miscState
 	Change  tuneChange
 	Marks   [markKinds][2]mark // newest first
+	Moved   tuningMove         // of the trouble that was said last
 	Spell   spell
 	Open    [kinds]openFinding
 	OpenN   uint8 // findings open
@@ -229,7 +230,7 @@ func (w *Watch) relearn(k int) bool {
 	// Filters and rings count in slots: they begin anew, the noise level too.
 	keep := w.s
 	w.s = state{Through: keep.Through, Grid: grid{T0: keep.Grid.T0, Begun: true, At: keep.Grid.At, LastFrame: keep.Grid.LastFrame},
-		Scale: keep.Scale, Last: keep.Last, Misc: keep.Misc, Change: keep.Change, Marks: keep.Marks, Spell: keep.Spell.found(), Open: keep.Open, OpenN: keep.OpenN, Slot: keep.Slot}
+		Scale: keep.Scale, Last: keep.Last, Misc: keep.Misc, Change: keep.Change, Marks: keep.Marks, Moved: keep.Moved, Spell: keep.Spell.found(), Open: keep.Open, OpenN: keep.OpenN, Slot: keep.Slot}
 	w.usual.known = false
 	w.s.Motion.first()
 	return true

@@ -14,7 +14,7 @@ import (
 )
 
 // benchTrend is a trend of healthy and swinging loops, as CSV in memory.
-func benchTrend(b *testing.B) ([]*configs.Loop, []byte) {
+func benchTrend(b testing.TB) ([]*configs.Loop, []byte) {
 	m := newMill()
 	var buf bytes.Buffer
 	w := trend.NewWriter(&buf, trend.Columns{Mode: true, Flags: true})

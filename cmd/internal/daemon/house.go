@@ -2,6 +2,7 @@ package daemon
 
 import (
 	"context"
+	"fmt"
 	"io"
 	"iter"
 	"time"
@@ -75,10 +76,13 @@ func openOnly(es []api.Episode) (out []api.Episode) {
 func (d *Daemon) Loops() []api.LoopState {
 	loops := d.config().Loops
 	out := make([]api.LoopState, 0, len(loops))
+	clocks := d.clockSpots()
 	for _, l := range loops {
 		s := api.LoopState{Loop: l, State: detect.NoData}
-		if v, ok := d.View(l.Name); ok {
-			s.State, s.Why, s.Blind = v.State, v.Why, v.BlindSpots
+		if id, ok := d.idOf(l.Name); ok {
+			if v, ok := d.shardOf(id).view(id); ok {
+				s.State, s.Why, s.Blind = v.State, v.Why, append(v.BlindSpots, clocks[l.Source]...)
+			}
 		}
 		out = append(out, s)
 	}
@@ -91,7 +95,31 @@ func (d *Daemon) View(loop string) (detect.View, bool) {
 	if !ok {
 		return detect.View{}, false
 	}
-	return d.shardOf(id).view(id)
+	v, ok := d.shardOf(id).view(id)
+	if ls := d.config().Loops; ok && int(id) < len(ls) && ls[id].Name == loop {
+		v.BlindSpots = append(v.BlindSpots, d.clockSpots()[ls[id].Source]...)
+	}
+	return v, ok
+}
+
+// clockApart is from which difference between the clocks, ms, findings are dated wrongly
+// by more than they are vague (a few samples of a usual loop).
+const clockApart = 5000
+
+// clockSpots says by source that its clock differs from that of this machine.
+func (d *Daemon) clockSpots() map[string][]string {
+	out := map[string][]string{}
+	for _, st := range d.sourceStates() {
+		off, word := st.ClockOffsetMs, "behind"
+		if off < 0 {
+			off, word = -off, "ahead"
+		}
+		if off >= clockApart {
+			out[st.Name] = []string{fmt.Sprintf("the clock of source %s is %s %s: what is found is dated by it, and may not meet the times of other records",
+				st.Name, detect.Duration(float64(off)/1000), word)}
+		}
+	}
+	return out
 }
 
 // Explain gives the evidence held of a loop; false for an unknown loop.

@@ -202,6 +202,10 @@ func (p *replay) end() error {
 	err := p.release(math.MaxInt64)
 	for _, l := range p.lanes {
 		if l.explain != nil && p.o.Evidence != nil {
+			if l.explain.Through() == 0 {
+				fmt.Fprintf(p.o.Evidence, "%s: no frame was read; hint: see whether the name is that of the trend files\n", p.o.Explain)
+				continue
+			}
 			fmt.Fprintf(p.o.Evidence, "%s %s at the end\n", detect.FormatTime(l.explain.Through()), p.o.Explain)
 			writeLines(p.o.Evidence, l.explain.Explain())
 		}

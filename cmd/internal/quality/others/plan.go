@@ -157,11 +157,12 @@ func load(s signal) string {
 
 // Options of a bench.
 type Options struct {
-	Loops int     // cases per family
-	Days  float64 // of a healthy loop recorded at 10 s
-	Seed  uint64
-	Match func(family string) bool
-	Each  func(*quality.Result)
+	Loops    int     // cases per family
+	Days     float64 // of a healthy loop recorded at 10 s
+	Seed     uint64
+	Match    func(family string) bool
+	Nuisance float64 // handed to detection; 0: its default
+	Each     func(*quality.Result)
 }
 
 // Families are the names of all, and what they hold; healthy ones come last.
@@ -201,5 +202,5 @@ func Run(o Options) []quality.Result {
 	fs := o.matching()
 	return quality.JudgeAll(len(fs)*o.Loops, func(k int) *quality.Case {
 		return fs[k/o.Loops].make(o.Seed, k%o.Loops, o.Days)
-	}, 0, o.Each)
+	}, o.Nuisance, o.Each)
 }

@@ -19,6 +19,7 @@ func main() {
 	days := flag.Float64("d", 14, "days of a healthy loop recorded at 10 s (faster ones fewer, slower ones more)")
 	seed := flag.Uint64("seed", 1, "seed")
 	fam := flag.String("family", "", "only families whose name matches the regular expression")
+	nuisance := flag.Float64("nuisance", 0, "nuisance_per_loop_year handed to detection (0: its default)")
 	verbose := flag.Bool("v", false, "list what was missed, wrong or false, a line each")
 	dump := flag.String("dump", "", "write one case (-family, -index) as trend CSV and loop list into this folder")
 	index := flag.Int("index", 0, "of the case for -dump or -one")
@@ -30,7 +31,7 @@ func main() {
 		fmt.Fprintln(os.Stderr, "hint: -family takes a regular expression such as 'sticking|dead band', and there are no other arguments")
 		os.Exit(2)
 	}
-	o := others.Options{Loops: *n, Days: *days, Seed: *seed, Match: re.MatchString}
+	o := others.Options{Loops: *n, Days: *days, Seed: *seed, Nuisance: *nuisance, Match: re.MatchString}
 	switch {
 	case *list:
 		names, what, healthy := others.Families()
@@ -50,7 +51,7 @@ func main() {
 		}
 	case *one:
 		for _, c := range others.Cases(o, *index) {
-			if err = quality.OneCase(os.Stdout, c, 0); err != nil {
+			if err = quality.OneCase(os.Stdout, c, *nuisance); err != nil {
 				break
 			}
 		}
