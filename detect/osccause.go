@@ -249,6 +249,23 @@ const (
 	shapeLooks   = 10
 )
 
+// phiIntegral is the lag of OP, degrees, over which its integral part plainly outweighs the
+// proportional one.
+const phiIntegral = 50.0
+
+// smoothed: OP is a triangle and mostly the integral of e, and yet e is no row of steps but
+// a triangle itself. A valve that sticks leaves the loop open between its jumps, and PV
+// settles to a step after each; what reaches a loop from a sticking one elsewhere was
+// smoothed on its way (Thornhill 2005), and this loop's own answer bends it back. To take
+// back what was said it must be so beyond the noise.
+func smoothed(phi float64, sh shapes, said bool) bool {
+	limit := shapeStuck
+	if said {
+		limit += shapeScatter / math.Sqrt(min(float64(sh.looks), shapeLooks))
+	}
+	return phi > phiIntegral && sh.siPV > limit
+}
+
 // alike is the spread of amplitudes, share of their mean, over which the band of a valve
 // does not set them; ownBeat the regularity under which an irregular drive may make the
 // cycle as well as the loop's own resonance.
@@ -336,10 +353,12 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		// A gap or a spell in manual took the record of the shape: nothing new is known.
 	case play && !changed && !follows:
 		o.setCause(ValveDeadBand, [2]Cause{ValveSticking}, 0.8)
+	case (tri || o.Sticking) && !integrating && !changed && smoothed(phi, sh, o.Sticking):
+		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, ValveSticking}, 0.6)
 	case o.Sticking && !integrating && si > shapeStuck && spread < alike:
 		// A shape once plain is not taken back because noise blurs it for a while.
 	case lately && !integrating && si > shapeStuck && spread < alike && !follows:
-		o.setCause(ValveSticking, [2]Cause{ProcessNonlinear}, 0.88)
+		o.setCause(ValveSticking, [2]Cause{OutsideDisturbance, ProcessNonlinear}, 0.8)
 	case tri && sh.h3OP > 0.25 && !strays:
 		// OP square: what drives the loop may be, a sticking valve makes OP a triangle.
 		// The harmonic of an irregular cycle is none, and only the beat tells.
@@ -365,7 +384,11 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	case integrating && tri && !changed && phi > phiDeadBand && phi < phiValve:
 		o.setCause(Undetermined, [2]Cause{ValveSticking, ValveDeadBand}, 0.6)
 	case integrating && tri && !changed:
-		o.setCause(ValveSticking, [2]Cause{ValveDeadBand}, 0.88)
+		o.setCause(ValveSticking, [2]Cause{ValveDeadBand, OutsideDisturbance}, 0.8)
+	case tri && !changed && !(phi > phiIntegral):
+		// OP and PV are of one shape, so only one of them speaks: a slow process makes a
+		// triangle of the steps of its own valve as of those of another loop's.
+		o.setCause(ValveSticking, [2]Cause{OutsideDisturbance, ProcessNonlinear}, 0.8)
 	case tri && !changed:
 		o.setCause(ValveSticking, [2]Cause{ProcessNonlinear}, min(0.95, 0.86+0.6*(si-0.64)))
 	case changed && (byPhi == ResetTooShort && rt < 0.8 || byPhi == GainTooHigh && rk > 1.25):

@@ -120,3 +120,51 @@ func jittering() clock {
 	}
 	return c
 }
+
+// A triangle of OP that mostly integrates e is a sticking valve's where PV makes steps; where
+// PV is itself a triangle, what drives the loop came through another process. Where OP and
+// PV are of one shape neither tells, and the cause is said with less weight.
+func TestTriangleOfAFollower(t *testing.T) {
+	for _, c := range []struct {
+		what      string
+		siPV, phi float64
+		said      bool
+		want      Cause
+		conf      float32 // at most
+		outside   bool    // possible, too
+	}{
+		{"steps of PV", 0.45, 65, false, ValveSticking, 0.95, false},
+		{"PV as smooth as OP", 0.64, 65, false, Undetermined, 0.6, true},
+		{"hardly smoother than when it was said", 0.64, 65, true, ValveSticking, 0.95, false},
+		{"plainly smooth, though it was said", 0.72, 65, true, Undetermined, 0.6, true},
+		{"OP as PV is", 0.72, 25, false, ValveSticking, 0.8, true},
+		{"no law known", 0.72, math.NaN(), false, ValveSticking, 0.8, true},
+	} {
+		w := New(configs.NewLoop("FIC-301"), 0, Options{})
+		s := &w.s
+		k := &s.Track
+		k.On, k.Looks = true, 40
+		wt := k.weight()
+		k.SinSum, k.TriSum, k.SinPV, k.TriPV = 0.85, 0.15, c.siPV, 1-c.siPV
+		k.Stick, k.H3 = 0.6*wt, 0.1*wt
+		b := &s.Cycles[0]
+		for i := range ringLen {
+			b.push(halfCycle{uint16(8*64 + 60*(i%3)), 0})
+		}
+		s.Osc = oscState{Sus: true, P: 100, AmpHi: 1.2, AmpLo: 1, Evals: 40}
+		if c.said {
+			s.Osc.setCause(ValveSticking, [2]Cause{}, 0.95)
+			s.Osc.Sticking = true
+		} else {
+			s.Osc.setCause(Undetermined, [2]Cause{}, 0.5)
+		}
+		for range 5 {
+			w.judgeSustainedCause(b, c.phi, ResetTooShort, [2]Cause{GainTooHigh}, 0.85, w.shapes(), 1, 1, false, false)
+		}
+		o := &s.Osc
+		outside := o.Also[0] == causeIndex(OutsideDisturbance) || o.Also[1] == causeIndex(OutsideDisturbance)
+		if causes[o.Cause] != c.want || o.Conf > c.conf || outside != c.outside {
+			t.Errorf("%s: %s with %.2f, outside possible %v; want %s", c.what, causes[o.Cause], o.Conf, outside, c.want)
+		}
+	}
+}
