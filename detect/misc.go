@@ -98,10 +98,12 @@ func stepFrozen(w *Watch) {
 		x.OPTravel = max(x.OPTravel, math.Abs(in.op-x.OPAtStill))
 	}
 	q := s.Noise.Least.Value()
-	coarse := q > 0.15 && s.Noise.Step.Value() < 1.5*q
+	steps := s.Noise.Step.Value() < 1.5*q // all changes are of one step
+	coarse := q > 0.15 && steps
 	run := in.t - m.PVSame
-	if coarse || s.Noise.Least.N < 20 || w.loop.Report == configs.Exception {
-		// Within one step of a coarse record, or its dead band, a good loop stands for days.
+	// Within one step of a coarse record, or its dead band, a good loop stands for days.
+	quiet := steps || s.Noise.Least.N < 20 || w.loop.Report == configs.Exception
+	if quiet {
 		run = min(run, in.t-x.AliveAt)
 	}
 	usual := m.PVRunMax
@@ -113,10 +115,10 @@ func stepFrozen(w *Watch) {
 		limit = min(limit, max(max(600, 200*in.dt), 4*usual))
 	}
 	if coarse {
-		// OP must have travelled by what moves PV out of the step.
-		if limit *= 3; x.OPTravel < 20*q {
-			return
-		}
+		limit *= 3
+	}
+	if quiet && in.hasOP && x.OPTravel < w.answered(q) {
+		return
 	}
 	if w.loop.Report == configs.Exception {
 		limit = max(6*3600, 3*usual)
@@ -133,6 +135,13 @@ func stepFrozen(w *Watch) {
 	if run > limit*w.strict {
 		x.Frozen = true
 	}
+}
+
+// answered is the travel of OP, %, that moves PV by a step of q, %, and by far: Kc K is
+// 0.2 and more in SIMC tunings (Skogestad 2003).
+func (w *Watch) answered(q float64) float64 {
+	kc, _ := w.gainPct()
+	return q * max(20, 5*math.Abs(kc))
 }
 
 // frozenTravel is the travel of OP, %, that shows in any PV that was never seen to move

@@ -238,11 +238,7 @@ func (w *Watch) deafOP(times float64) bool {
 	m := &w.s.Motion
 	moved := float64(m.EStillHi - m.EStillLo)
 	if kc, ok := w.gainPct(); ok {
-		q := &w.s.Noise.OPLeast
-		least := 0.5 // %, before the resolution of OP is known
-		if q.N > 20 {
-			least = max(0.1, 4*q.Value())
-		}
+		least := w.leastOP()
 		// The integral may take back what the proportional action does, for a while.
 		both := w.in.e - float64(m.EStill0)
 		if rt, _ := w.resetS(); rt > 0 {
@@ -251,6 +247,29 @@ func (w *Watch) deafOP(times float64) bool {
 		return moved > 6*w.s.Noise.sigma() && math.Abs(kc)*min(moved, math.Abs(both)) > times*least
 	}
 	return times <= 1 && moved > 6*w.s.Noise.sigma()+1
+}
+
+// leastOP is the move of OP, %, that its resolution does not hide.
+func (w *Watch) leastOP() float64 {
+	if q := &w.s.Noise.OPLeast; q.N > 20 {
+		return max(0.1, 4*q.Value())
+	}
+	return 0.5 // before the resolution is known
+}
+
+// barred: since OP came to rest e has grown, or been there for so long, that the law would
+// have moved OP on. Without an integral OP rests where e does: only one that was seen counts.
+func (w *Watch) barred() bool {
+	m := &w.s.Motion
+	kc, ok := w.gainPct()
+	if !ok {
+		return w.deafOP(1)
+	}
+	by := w.in.e - float64(m.EStill0)
+	if rt, seen := w.resetS(); seen {
+		by += float64(m.EStillInt) / rt
+	}
+	return kc*by*w.sign()*w.s.Off.Sign > w.leastOP()
 }
 
 // updateS is the interval, s, at which PV really changes: an analyser may give a

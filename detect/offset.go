@@ -31,12 +31,13 @@ type offsetState struct {
 	LimT      float64 // s, when OP came to rest at its limit; 0 not yet
 	LimInt    float32 // % s, Int by then
 	LimE      float32 // %, e by then, without its sign; 0 no test, or it was read
-	WasStill  bool
+	StillAt   float32 // s, age of the run when OP last stood as if a hand held it; 0 never
 	AtEnd     bool    // PV was at an end of its range: e says nothing of the process
 	NotFollow bool    // OP travelled and then stopped, and PV made nothing of either
 	Checked   float64 // s, last decision
 	PrevDur   float64 // s, length of the run before, of the other sign; 0 none
 	Missed    bool    // in this run the integral did not do what it must
+	Acts      bool    // it did, or may have, when last judged
 }
 
 func (o *offsetState) restart() { *o = offsetState{} }
@@ -47,8 +48,8 @@ type offsetPast struct {
 	Sat     stand      // and with OP at its limit
 	EF      float64    // e through a lag of half the loop's time scale, %
 	Longest float64    // s, longest run that was no finding; forgets a tenth with each new run of note
-	Runs    uint8      // runs on end in which the integral was missing
-	Since   float64    // s, begin of the first of them
+	Since   float64    // s, begin of the first run on end in which the integral was missing
+	Missed  float32    // s, length of those runs together
 	Came    uint8      // findings from which PV came back by itself
 	Deaf    float64    // s, when the final element was last shown not to follow; 0 never
 	Vain    [2]float32 // s, when OP last travelled far, down and up, and PV made nothing of it; 0 never
@@ -95,7 +96,7 @@ func (w *Watch) rest(d *stand) {
 
 // endOfRun remembers a run: how long runs last is the loop's own yardstick, and
 // where set points change often several short runs tell what a long one would.
-func (w *Watch) endOfRun() {
+func (w *Watch) endOfRun(back bool) { // back: PV came back by itself
 	o, p := &w.s.Off, &w.s.OffPast
 	if o.Sign == 0 || p.Offset.On || p.Sat.On {
 		return
@@ -105,12 +106,12 @@ func (w *Watch) endOfRun() {
 		p.Longest = max(0.9*p.Longest, d)
 	}
 	if o.Missed {
-		if p.Runs == 0 {
+		if p.Missed == 0 {
 			p.Since = o.T0
 		}
-		p.Runs = min(p.Runs+1, 200)
-	} else if d > 2*w.timeScale() {
-		p.Runs = 0
+		p.Missed += float32(d)
+	} else if d > 2*w.timeScale() && (o.Acts || back) { // a run that tells nothing takes nothing back
+		p.Missed = 0
 	}
 }
 
@@ -145,7 +146,7 @@ func stepOffset(w *Watch) {
 			if o.LimT == 0 && w.vainWay() {
 				past.Doubt = float32(in.t)
 			}
-			w.endOfRun()
+			w.endOfRun(false)
 			o.restart() // a new set point is a new question
 		}
 	}
@@ -156,7 +157,7 @@ func stepOffset(w *Watch) {
 		prev := 0.0
 		if o.Sign != 0 {
 			prev = max(in.t-o.T0, 0.5*o.PrevDur)
-			w.endOfRun()
+			w.endOfRun(true)
 		}
 		*o = offsetState{PrevDur: prev, Sign: sign, T0: in.t, In: in.t, OP0: in.trim, OPs: in.trim, Es: in.e, Checked: in.t}
 	}
@@ -165,7 +166,7 @@ func stepOffset(w *Watch) {
 	}
 	d := in.t - o.T0
 	if calm := in.t - o.In; calm > 60*in.dt && calm > 0.15*d && calm > min(1200, 3*w.timeScale()) {
-		w.endOfRun()
+		w.endOfRun(true)
 		o.restart()
 		return
 	}
@@ -173,7 +174,7 @@ func stepOffset(w *Watch) {
 		return
 	}
 	if m := &s.Motion; in.t-m.OPSame > max(40*in.dt, 1.5*m.OPRunMax) || m.OPBusyUsual > 0.3 && m.OPBusy < 0.2*m.OPBusyUsual {
-		o.WasStill = true // a hand held OP for a while: this run says nothing of the integral
+		o.StillAt = float32(d) // a hand held OP: this part of the run says nothing of the integral
 	}
 	o.Int += in.e * in.dt
 	o.Dur += in.dt
@@ -338,9 +339,10 @@ func (w *Watch) judgeOffset(thr float64) {
 	flat := hi-lo < 0.35
 	need := w.offsetWaitS()
 	// An own limit: OP stands still at the extreme it ever reached, on the side to
-	// which e pushes (a limit or selector that nobody listed).
+	// which e pushes, though the law would have it move (a limit or selector that nobody
+	// listed).
 	own := flat && in.t-m.OPSame > ownLimitS(in.dt) && m.OPRunMax < (in.t-m.OPSame)/2 &&
-		in.e*o.Sign > 0 && w.atOwnLimit()
+		in.e*o.Sign > 0 && w.atOwnLimit() && w.barred()
 	at := o.OPs
 	if w.loop.FeedforwardKind != "" {
 		at = in.op // the limit is one of OP, not of the trim
@@ -381,15 +383,15 @@ func (w *Watch) judgeOffset(thr float64) {
 		return
 	}
 	cause, conf, longer := w.offsetCause(push, lo, hi)
+	o.Acts = cause != IntegralMissing
 	if longer < 0 {
 		return
 	}
 	need = max(need, longer)
 	since := o.T0
 	if cause == IntegralMissing {
-		o.Missed = d > need/4
-		if past.Runs >= 3 { // where set points change often
-			need, since = need/4, past.Since
+		if o.Missed = d > need/4; o.Missed && past.Missed > 0 { // where set points change often
+			need, since = max(need-float64(past.Missed), need/4), past.Since
 		}
 	} else if cause == Undetermined { // a gain that was seen to have fallen has no history
 		need = max(need, 3*past.Longest)

@@ -72,10 +72,13 @@ func (w *Watch) integralMissing(t *travel) bool {
 		none = none && w.propOnlySeen()
 	}
 	follows := s.Tune.Law == 0 || s.Tune.Law > 0.5 || t.expect > 10
+	if a := float64(s.Off.StillAt); a > 0 && a >= t.d-t.span {
+		follows = false
+	}
 	if m := &s.Motion; m.OPBusy < 0.3*m.OPBusyUsual {
 		follows = false // OP rests: a hand holds it, not the law
 	}
-	return none && follows && !t.clipped && !s.Off.WasStill && t.expect > 1.5 && math.Abs(t.resid) < max(0.2*t.expect, 0.5) &&
+	return none && follows && !t.clipped && t.expect > 1.5 && math.Abs(t.resid) < max(0.2*t.expect, 0.5) &&
 		t.hi-t.lo < 2.5*math.Abs(t.kc)*t.eRange+1
 }
 
@@ -146,7 +149,8 @@ func (w *Watch) integralActs(t *travel) (c Cause, conf float64, known, acts bool
 		// tuning is another one, and what is missing cannot be told by it.
 		doubt := alone > 3*max(both, 0)+float64(n)*floor*floor/3
 		other := math.Abs(t.kc)*math.Sqrt(ee/float64(n)) > 0.5 && math.Abs(kp) < 0.75*math.Abs(t.kc)
-		return Undetermined, 0, !other && !doubt, false
+		unlike := alone > oo/4 && alone > float64(n)*9*floor*floor // OP goes by no such law
+		return Undetermined, 0, !other && !doubt && !unlike, false
 	}
 	if n < len(e) { // any three points lie on some law
 		return Undetermined, 0, false, false
@@ -194,7 +198,7 @@ func (w *Watch) offsetCause(push, lo, hi float64) (c Cause, conf, longer float64
 			return c, conf, w.halfSwing(&t)
 		}
 		// OP does not answer e at all: manual, tracking, or not this loop's output.
-		o.WasStill = true
+		o.StillAt = float32(t.d)
 		return Undetermined, 0.6, 0
 	case t.still:
 		return Undetermined, 0.5, 24 * 3600

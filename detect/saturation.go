@@ -5,7 +5,6 @@ import "math"
 // OP at the limit that e pushes towards, and what it does once e has changed sign.
 
 type saturationState struct {
-	WindUps   uint8   // occurrences of OP staying at its limit past the change of sign
 	LastWind  float64 // s
 	Over      float64 // s, longest overhang
 	Peak      float64 // %, overshoot after it
@@ -14,10 +13,12 @@ type saturationState struct {
 	AtSince   float64 // s, since when OP is at the limit that e pushes towards
 	WindSince float64
 	WindUp    bool
+	WindUps   uint8 // occurrences of OP staying at its limit past the change of sign
 	Frames    uint8
 	IntPast   float32 // % s, integral of e since CrossAt
 	Due       float32 // %, by which a sound controller had left the limit by now
-	LowShare  float32 // share of time with OP at the low end of its range, mean of days
+	LowShare  float32 // share of time with OP at the low end of its range, mean of days, of stays that are over
+	LowFor    float32 // s, how long the running stay there has lasted
 	// Stretches at a limit that e pushes towards, each longer than a recovery.
 	From, IntE float64 // s, begin of the running one, 0 none; % s, integral of e over it
 	Stretches  uint8
@@ -63,13 +64,15 @@ func stepSaturation(w *Watch) {
 	} else if in.op <= l0+opAtLimit {
 		side = -1
 	}
-	low := float32(0)
 	if in.op <= opAtLimit {
-		low = 1
+		z.LowFor += float32(in.dt) // a stay that goes on does not make itself usual
+	} else {
+		z.LowShare += (z.LowFor - z.LowShare*float32(in.dt)) / shareS
+		if z.LowFor > 0 {
+			z.LowShare, z.LowFor = min(z.LowShare, 1), 0
+		}
 	}
-	day := float32(in.dt / shareS)
-	z.LowShare += (low - z.LowShare) * day
-	z.LimitShare += (float32(math.Abs(side)) - z.LimitShare) * day
+	z.LimitShare += (float32(math.Abs(side)) - z.LimitShare) * float32(in.dt/shareS)
 	a := w.sign()
 	sigma := max(s.Noise.sigma(), 0.02)
 	w.stepStretch(side, sigma)

@@ -28,12 +28,7 @@ func (w *Watch) verdictAt(t float64) {
 	// Saturation explains the offset; growth explains the swing; pegged or frozen
 	// PV explains what the controller makes of it.
 	rejudge := [kinds]bool{}
-	fold := func(child int) {
-		if c[child].On {
-			c[child].On = false
-			rejudge[child] = true
-		}
-	}
+	fold := func(child int) { c[child].On, rejudge[child] = false, true }
 	if c[kSaturation].On && causes[c[kSaturation].Cause] != WindUp {
 		fold(kOffset)
 	}
