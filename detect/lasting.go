@@ -23,6 +23,7 @@ const (
 	keptLeast  = 0.2   // %
 	keptLoose  = 3     // regularity of the swing of a loop that was made too loose
 	keptSlack  = 8     // reset times in its period: a damping of 0.4
+	keptEven   = 0.45  // deviation over mean of the sizes of the newer half; Rayleigh's law has 0.52
 )
 
 // countKept counts up at half-cycles that show such a swing, and down at others. few says
@@ -53,8 +54,9 @@ func (w *Watch) kept(level int, b *cycleBank) bool {
 	}
 	q, _ := b.stat(level, keptHalves)
 	period := q.period * w.levelS(level)
-	if w.loosened(period) { // what was usual since is the swing itself
-		usual = 0
+	even := keptEven
+	if w.loosened(period) { // what was usual since is the swing itself, and each load stirs it up anew
+		usual, even = 0, math.Inf(1)
 		if w.loop.Process == configs.Integrating {
 			regular = keptLoose
 		}
@@ -62,16 +64,16 @@ func (w *Watch) kept(level int, b *cycleBank) bool {
 		return false
 	}
 	least := max(keptLeast, 2.5*w.s.Noise.sigma()*w.strict, over*usual*w.strict)
-	return b.tip() > 0.5*least && q.period > bankLowP && q.period < bankHighP && q.amp > least && b.middleRegular() > regular*w.strict
+	return b.tip() > 0.5*least && q.period > bankLowP && q.period < bankHighP && q.amp > least && b.middleRegular() > regular*w.strict && b.spread(keptHalves/2) < even
 }
 
 // loosened: the gain in service is less than a third of what was set up or was in service
 // before, and the swing as slow as an integrating loop makes it that has too little: with
 // P = 2 pi sqrt(Ti/(k Kc)) its damping sqrt(k Kc Ti)/2 is pi Ti/P (Skogestad 2003 for
-// the slow swing of a small k Kc Ti).
+// the slow swing of a small k Kc Ti). Within a gap the gain is low by design.
 func (w *Watch) loosened(period float64) bool {
 	kc, ti, ok := w.tuning(0, 0)
-	if !ok || !(ti > 0) || period < keptSlack*ti || w.loop.Process == configs.SelfRegulating {
+	if !ok || !(ti > 0) || period < keptSlack*ti || w.loop.Process == configs.SelfRegulating || w.loop.Duty == configs.GapDuty {
 		return false
 	}
 	was := w.loop.GainPct

@@ -67,7 +67,7 @@ func (r stays) size(sigma, usual float64) float64 {
 // Of a loop whose usual size is known, and of one where it is not.
 var (
 	steadyOwn = stays{4, 0.3, 2, 1.9, 0.4}
-	steadyNew = stays{4, 0.3, 0, 5, 1.2}
+	steadyNew = stays{4, 0.3, 0, 3, 0.45}
 )
 
 // steadyHalves are the half-cycles looked at.
@@ -322,7 +322,7 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 	}
 	lasts := b.Kept >= keptRaise && !fast(level, st.period)
 	period := st.period * w.levelS(level)
-	if !lasts && st.amp < 0.3 || w.scheduled(b, period) {
+	if !lasts && st.amp < 0.3 || w.scheduled(b, period) || w.pinned(period) {
 		return
 	}
 	if lasts {
@@ -356,12 +356,13 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 		// may always have had.
 		plain := known || period < shiftBeat
 		rt, _ := w.resetS()
-		big := q.amp > max(3*sigma, 0.6) && plain
+		big := known && q.amp > max(3*sigma, 0.6, 1.6*usual)
 		own := known && q.amp > steadyOwn.size(sigma, usual)
-		if (q.regular > 5*w.strict && q.least > 0.4 && big && (!known || q.amp > 1.6*usual) ||
+		// What the loop's usual size cannot tell, the evenness of the cycle must.
+		even := !known && (plain || q.regular > 7 && period < ownSlowest*rt) && q.amp > steadyNew.size(sigma, usual) && b.certain(n, w.strict)
+		if (q.regular > 5*w.strict && q.least > 0.4 && big ||
 			q.regular > steadyOwn.regular*w.strict && q.least > steadyOwn.least && own ||
-			q.regular > steadyNew.regular*w.strict && q.least > steadyNew.least && !known && plain && q.amp > steadyNew.size(sigma, usual) ||
-			q.regular > 7*w.strict && q.least > 0.4 && !known && (plain || period < ownSlowest*rt) && q.amp > max(0.45, 4*sigma)) &&
+			q.regular > steadyNew.regular*w.strict && q.least > steadyNew.least && even) &&
 			(w.steadySP(float64(n)/2*period) || q.regular > 8*w.strict && period < keptSlow) { // steps of SP now and then cannot beat such time
 			o.Sus = true
 			w.beginOsc(level, b, n)
@@ -371,7 +372,7 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 	// Irregular sticking leaves cycles out: the shape of OP makes up for it.
 	if q, ok := b.stat(level, 10); ok && s.Noise.known() && s.Track.On && int(s.Track.Bank) == level && s.Track.Looks >= 4 &&
 		q.regular > 1.6 && q.least > 0.2 && q.amp > max(3.4*sigma, 0.55) && slots > 20 &&
-		s.Motion.LawSeen && !w.propOnlySeen() && w.steadySP(7*period) && (!known || q.amp > 1.6*usual) {
+		s.Motion.LawSeen && !w.propOnlySeen() && w.steadySP(7*period) && (known && q.amp > 1.6*usual || !known && b.certain(10, w.strict)) {
 		sh := w.shapes()
 		if si := w.stickIndex(sh); si > 0.66 && sh.h3OP < 0.25 && sh.stick > 0.38 {
 			o.Sus = true
@@ -394,8 +395,24 @@ const (
 )
 
 func surprise(s float64) float64 {
-	q := max(s, 0.02) / wanders // less scatter than this may be chance
+	q := min(max(s, 0.02)/wanders, 1) // less scatter than this may be chance, more speaks for no cycle
 	return -math.Log(q) - (1-q*q)/2
+}
+
+// evidence is the ln of the likelihood ratio of n half-cycles, whose lengths have that
+// regularity and whose sizes that spread.
+func evidence(n int, regular, spread float64) float64 {
+	return float64(n-2) * (surprise(1/regular) + surprise(spread))
+}
+
+// certain: as many of the newest half-cycles as it takes, n or more, leave no doubt.
+func (b *cycleBank) certain(n int, strict float64) bool {
+	for ; n <= int(b.N); n++ {
+		if _, regular, _ := b.lengths(n); evidence(n, regular, b.spread(n)) > certain*strict {
+			return true
+		}
+	}
+	return false
 }
 
 // largeInFew is the least mean peak, %, of a cycle that few half-cycles tell.
@@ -404,7 +421,7 @@ func largeInFew(usual, sigma float64) float64 { return max(2*usual, 2.5*sigma, 0
 // plainness is the ln of the ratio for the half-cycles of q, of that spread of sizes.
 func plainness(q *ringStat, spread, large float64) float64 {
 	size := 4 * math.Log(min(q.amp/large, math.E)) // upsets x times as large are x^4 times as rare, or so
-	return float64(q.n-2)*(surprise(1/q.regular)+surprise(spread)) + size
+	return evidence(q.n, q.regular, spread) + size
 }
 
 // inFew: the newest half-cycles are a cycle beyond doubt, each of them large against
@@ -427,6 +444,14 @@ func (w *Watch) inFew(level int, b *cycleBank, usual, sigma float64) bool {
 		}
 	}
 	return false
+}
+
+// pinned: OP was at a limit within the last two cycles of a swing far slower than the loop's own
+// dynamics. Off the limit the loop would have taken it out: what is left of it says how
+// far the load goes beyond what OP can give, told as that, and nothing cycles.
+func (w *Watch) pinned(period float64) bool {
+	rt, _ := w.resetS()
+	return rt > 0 && period > ownSlowest*rt && w.s.Tune.LimitAt > 0 && w.in.t-w.s.Tune.LimitAt < 2*period
 }
 
 // scheduled: far slower than the loop's own dynamics and with the beat of the day
