@@ -133,12 +133,13 @@ func (c *clock) beat() (keeps, strays bool) {
 // long keeps its phase from one cycle to the next.
 const ringJitter = 0.015
 
-// driven says that crossings jitter as those of a loop which is pushed and damped, and do not
-// stray as far as a random walk of such steps. Loads that last over some cycles keep them
-// from the law of a clock.
-func (c *clock) driven() bool {
-	r, jitter, ok := c.running()
-	return ok && c.N >= 30 && jitter > ringJitter && r < 0.9*math.Sqrt(2*float64(c.N)/15)
+// jitters says that crossings jitter as those of a loop which is pushed and damped; held is
+// taken where nothing is known yet.
+func (c *clock) jitters(held bool) bool {
+	if _, jitter, ok := c.running(); ok {
+		return jitter > ringJitter
+	}
+	return held
 }
 
 // judged says whether beat rests on anything.

@@ -284,3 +284,29 @@ func (b *cycleBank) growth(n int) (perCycle, t float64) {
 
 // tip is the mean of the newest two peaks, %.
 func (b *cycleBank) tip() float64 { return (b.at(0).peak() + b.at(1).peak()) / 2 }
+
+// unseen is a climb that the ring does not show.
+const unseen = math.MaxUint8
+
+// climb counts the half-cycles that lay between 0.4 and 0.75 of the mean of the newest n when
+// their cycle began. An instability takes some to grow through, what comes from outside or
+// from a valve is there at once.
+func (b *cycleBank) climb(n int) uint8 {
+	var size float64
+	for i := range n {
+		size += b.at(i).peak() / float64(n)
+	}
+	between := uint8(0)
+	for i := range int(b.N) {
+		switch p := b.at(i).peak(); {
+		case p < 0.4*size:
+			return between
+		case p < 0.75*size:
+			between++
+		}
+	}
+	if b.N == ringLen {
+		return unseen
+	}
+	return between
+}

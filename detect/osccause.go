@@ -18,6 +18,9 @@ import (
 const (
 	phiGain  = 35.0
 	phiReset = 45.0
+	// Under it the gain is over 0.8 of the ultimate one in every class of process (methods
+	// section 5): no reset is at fault, whatever the fit makes of one that hardly shows.
+	phiNoReset = 15.0
 	// Over this an integrating loop has too little gain whatever its reset is: at its limit
 	// w theta = 90 degrees - phi and k Kc theta = w theta sin(w theta), here 0.12, where
 	// the published rules set 0.35 to 0.5.
@@ -97,7 +100,7 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 	case rk > 0 && rt > 0:
 		between := phi > 25 && phi < 65
 		switch lk, lt := math.Log(rk), math.Log(rt); {
-		case lt < -0.7 && math.Abs(lk) < 0.25 && !(phi < 4): // plainly the reset was shortened, and only it
+		case resetCut(lk, lt, phi):
 			byPhi, also, byChange = ResetTooShort, [2]Cause{GainTooHigh}, true
 		case lk > 0.5 && math.Abs(lt) < 0.25 && !(phi > 55):
 			byPhi, also, byChange = GainTooHigh, [2]Cause{ResetTooShort}, true
@@ -161,6 +164,12 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 	if o.Sus {
 		w.judgeSustainedCause(b, phi, byPhi, also, si, sh, rk, rt, changed, slack)
 	}
+}
+
+// resetCut: plainly the reset was shortened, and only it; lk and lt are the ln of what became
+// of gain and reset.
+func resetCut(lk, lt, phi float64) bool {
+	return lt < -0.7 && math.Abs(lk) < 0.25 && !(phi < phiNoReset)
 }
 
 // slack: the gain fell, and the loop swings as an integrating one does whose product
@@ -287,8 +296,20 @@ const (
 )
 
 // evenSize is the ratio of the largest to the smallest size within which a cycle from outside
-// stays, and one at the edge of stability does not (methods section 15).
-const evenSize = 1.45
+// stays though loads step meanwhile, and one at the edge of stability does not (methods
+// section 15).
+const evenSize = 1.7
+
+// atOnce is the climb, half-cycles, of what comes from outside, with those that the band pass
+// takes to follow; a swing that grows by 1.5 a cycle takes three. evenBeat is the regularity
+// of half-cycles that are none of friction's, mostSine the sine-triangle index, amid those
+// where the published test is undecided, up to which
+// there are no corners of a valve.
+const (
+	atOnce   = 2
+	evenBeat = 8.0
+	mostSine = 0.5
+)
 
 // steady is the spread of amplitudes that a steady drive stays under.
 const steady = 0.15
@@ -322,6 +343,9 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	play := w.loop.Process != configs.SelfRegulating && strays && sh.looks >= shapeLooks && si > least && sh.peaked > corners && phi > phiDeadBand && phi < phiDeadBandMost
 	clipped := s.Tune.LimitAt > 0 && w.in.t-s.Tune.LimitAt < 1.5*o.P // a cycle between the limits of OP is as even as a clock's
 	unchanged := near(rk, 1) && near(rt, 1)
+	// There at once, even ever since, and yet without a beat of its own: an instability climbs
+	// to its size and keeps it only where something clips, which leaves its crossings no jitter.
+	drive := o.Climb <= atOnce && q.regular > evenBeat && spread < steady && move < evenSize && sh.looks >= shapeLooks && s.Clock.jitters(causes[o.Cause] == OutsideDisturbance)
 	follows := s.Motion.PosN > 300 && s.Motion.Astray < 0.3 // the position shows that the element does
 	switch {
 	case o.GrowCause != 0 && causes[o.GrowCause] != Undetermined:
@@ -373,6 +397,8 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		o.setCause(Undetermined, [2]Cause{ValveSticking, ProcessNonlinear}, 0.6)
 	case tri && !changed && w.propOnlySeen():
 		o.setCause(Undetermined, [2]Cause{ValveSticking, OutsideDisturbance}, 0.5)
+	case drive && (unchanged || !integrating) && !changed && !clipped && sh.siOP < mostSine && (w.loop.Process == configs.SelfRegulating || sh.siPV < mostSine):
+		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.8)
 	case integrating && phi > phiValve && si < 0.78 && !changed && q.regular > 2*ownBeat:
 		// With the product k Kc Ti too small alone the swing would lose four fifths a cycle
 		// at this lag and not be so even: it is the dead time that keeps it up.
@@ -401,8 +427,6 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		// to its beat; but a swing of the loop's own neither grows nor dies only at one
 		// value of its tuning.
 		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.75)
-	case unchanged && !integrating && s.Clock.driven() && sh.looks >= shapeLooks && max(sh.siOP, sh.siPV) < 0.5 && math.Abs(sh.peaked) < 1.3*peakedLeast && move < evenSize:
-		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.8)
 	case si < 0.5 && strays && q.regular > ownBeat && (move > 1.7 || phi < 25 && move > 1.5 || phi > 60 && spread > 0.14 && move > 1.4):
 		o.setCause(byPhi, [2]Cause{OutsideDisturbance}, 0.75)
 	default:

@@ -45,6 +45,19 @@ func TestSlack(t *testing.T) {
 	}
 }
 
+// A reset that fell is to blame where the integral matters; not read with a filter or late
+// OP, where the lag is that of a gain at its limit.
+func TestResetCut(t *testing.T) {
+	for _, c := range []struct {
+		rk, rt, phi float64
+		want        bool
+	}{{1, 0.3, 50, true}, {1, 0.3, 20, true}, {0.96, 0.36, 10, false}, {2, 0.3, 50, false}, {1, 0.7, 50, false}, {1, 0.3, math.NaN(), true}} {
+		if got := resetCut(math.Log(c.rk), math.Log(c.rt), c.phi); got != c.want {
+			t.Errorf("gain times %.2f, reset times %.2f, lag %.0f degrees: %v", c.rk, c.rt, c.phi, got)
+		}
+	}
+}
+
 // An index is told from the published limit by two of its standard errors: the fewer
 // the cycles, the purer the shape.
 func TestTriangleNeedsCycles(t *testing.T) {
@@ -77,38 +90,86 @@ func TestUnsureCauseMustLast(t *testing.T) {
 	}
 }
 
-// What only a drive from outside explains: spikes beyond the corners of a triangle, and a
-// sine of even size, of a tuning that is as it was, whose crossings jitter.
+// What only a drive from outside explains: spikes beyond the corners of a triangle, and an
+// even cycle without the corners of a valve that was there at once and jitters.
 func TestDrivenFromOutside(t *testing.T) {
 	for _, c := range []struct {
 		what         string
 		peaked, size float64
+		climb        uint8
+		rk, sine     float64
 		beat         clock
 		want         Cause
 	}{
-		{"spikes", 0.4, 1.2, clock{Was: 2.5}, OutsideDisturbance},
-		{"corners of a triangle", 0.11, 1.2, clock{Was: 2.5}, Undetermined},
-		{"even, with jitter", 0, 1.2, jittering(), OutsideDisturbance},
-		{"growing and shrinking", 0, 1.6, jittering(), Undetermined},
+		{"spikes", 0.4, 1.2, unseen, 1, 0.3, clock{Was: 2.5}, OutsideDisturbance},
+		{"corners of a triangle", 0.11, 1.2, unseen, 1, 0.3, clock{Was: 2.5}, Undetermined},
+		{"there at once, with jitter", 0, 1.5, 1, 1, 0.3, jittering(), OutsideDisturbance},
+		{"a tuning that could not be read", 0, 1.5, 1, 0, 0.3, jittering(), OutsideDisturbance},
+		{"growing and shrinking", 0, 1.9, 1, 1, 0.3, jittering(), Undetermined},
+		{"climbed to its size", 0, 1.5, 5, 1, 0.3, jittering(), Undetermined},
+		{"how it began was not seen", 0, 1.5, unseen, 1, 0.3, jittering(), Undetermined},
+		{"without jitter", 0, 1.5, 1, 1, 0.3, ticking(), Undetermined},
+		{"corners in OP", 0, 1.5, 1, 1, 0.58, jittering(), Undetermined},
+		{"gain raised before", 0, 1.5, 1, 3, 0.3, jittering(), Undetermined},
 	} {
 		w := New(configs.NewLoop("TIC-315"), 0, Options{})
 		s := &w.s
 		s.Clock = c.beat
 		k := &s.Track
 		k.On, k.Looks = true, 40
-		k.SinSum, k.TriSum, k.SinPV, k.TriPV, k.Peaked = 0.3, 0.7, 0.3, 0.7, c.peaked*k.weight()
+		k.SinSum, k.TriSum, k.SinPV, k.TriPV, k.Peaked = c.sine, 1-c.sine, 0.3, 0.7, c.peaked*k.weight()
 		b := &s.Cycles[0]
 		for range ringLen {
 			b.push(halfCycle{8 * 64, 0})
 		}
-		s.Osc = oscState{Sus: true, P: 100, AmpHi: c.size, AmpLo: 1, Evals: 100}
+		s.Osc = oscState{Sus: true, P: 100, AmpHi: c.size, AmpLo: 1, Evals: 100, Climb: c.climb}
 		for range 4 {
-			w.judgeSustainedCause(b, 50, ResetTooShort, [2]Cause{GainTooHigh}, 0.3, w.shapes(), 1, 1, false, false)
+			w.judgeSustainedCause(b, 50, ResetTooShort, [2]Cause{GainTooHigh}, c.sine, w.shapes(), c.rk, min(c.rk, 1), c.rk > 1, false)
 		}
 		if got := causes[s.Osc.Cause]; got != c.want {
 			t.Errorf("%s: %s, want %s", c.what, got, c.want)
 		}
 	}
+}
+
+// A cycle that begins with full size has no climb, one that grows by 1.3 a cycle has.
+func TestClimb(t *testing.T) {
+	begun := func(before int, peaks func(i int) float64, n int) uint8 {
+		b := &cycleBank{}
+		for range before {
+			b.push(halfCycle{8 * 64, int16(2048 * math.Log(0.1))})
+		}
+		for i := range n {
+			b.push(halfCycle{8 * 64, int16(2048 * math.Log(peaks(i)))})
+		}
+		return b.climb(7)
+	}
+	step := func(i int) float64 { return 1 - 0.4*math.Pow(0.1, float64(i)) }
+	grows := func(i int) float64 { return min(1, 0.15*math.Pow(1.3, float64(i)/2)) }
+	if c := begun(9, step, 9); c > atOnce {
+		t.Errorf("a step: %d half-cycles", c)
+	}
+	if c := begun(0, step, 9); c > atOnce { // out of rest
+		t.Errorf("a step out of rest: %d half-cycles", c)
+	}
+	if c := begun(2, grows, 18); c <= atOnce || c == unseen {
+		t.Errorf("growth: %d half-cycles", c)
+	}
+	if c := begun(0, step, 30); c != unseen {
+		t.Errorf("longer ago than the ring shows: %d", c)
+	}
+}
+
+// ticking is a clock of a cycle that strays, with next to no jitter.
+func ticking() clock {
+	c := clock{}
+	c.begin(0, 0, 100)
+	at := 0.0
+	for i := range 50 {
+		at += 100 + 0.4*math.Sin(0.3*float64(i))
+		c.cross(at)
+	}
+	return c
 }
 
 // jittering is a clock that loads move for some cycles on end.

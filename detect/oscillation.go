@@ -10,6 +10,7 @@ import (
 type oscState struct {
 	Grow, Sus bool
 	Bank      uint8
+	Climb     uint8   // half-cycles on the way to its size when it began; unseen: not seen
 	Evals     uint32  // half-cycles of the bank since the episode began
 	Bad       uint16  // half-cycles running without the cycle
 	Since     float64 // s
@@ -305,7 +306,7 @@ func (w *Watch) beginOsc(level int, b *cycleBank, back int) {
 		return
 	}
 	*o = oscState{Grow: keep.Grow, Sus: keep.Sus, Bank: uint8(level), Seen: w.in.t, Since: b.Zero - len*w.levelS(level),
-		LastAt: keep.LastAt, LastP: keep.LastP, LastCause: keep.LastCause}
+		LastAt: keep.LastAt, LastP: keep.LastP, LastCause: keep.LastCause, Climb: b.climb(back)}
 	rt, _ := w.resetS()
 	o.Always = !(w.usualKnown(b) && b.tip() > 1.6*b.Usual.Value()) && b.Kept < keptRaise && rt > 0 && 2*len/float64(back)*w.levelS(level) > planSlow*rt
 	w.startTrack(level)

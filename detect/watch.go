@@ -20,7 +20,7 @@ import (
 
 // Engine is the version of the detection; memories of another engine are not
 // loaded whole.
-const Engine = 2
+const Engine = 3
 
 // Options of a watch.
 type Options struct {
