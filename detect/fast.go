@@ -18,6 +18,23 @@ const (
 // fast: the bank sees a cycle of few samples, period in samples of the level.
 func fast(level int, period float64) bool { return level == 0 && period <= fewSlots }
 
+// Noise alone, or a lively loop's own, taught the usual size and cannot be told from it by
+// waiting alone; what is far beyond both need not wait (Rayleigh's law: the size of a narrow
+// band of noise is beyond 2.4 times its upper quartile once in three thousand times).
+const (
+	loudUsual = 4.0 // of the usual size
+	loudNoise = 6.0 // noise levels
+)
+
+// drowned: a cycle of few samples that noise may have made.
+func (w *Watch) drowned(level int, b *cycleBank, st ringStat) bool {
+	if !fast(level, st.period) {
+		return false
+	}
+	sigma := w.s.Noise.beside(st.amp, st.period)
+	return !(w.usualKnown(b) && w.s.Noise.known() && b.tip() > max(loudUsual*b.Usual.Value(), loudNoise*sigma)*w.strict)
+}
+
 // countFast counts half-cycles for which a cycle of few samples holds.
 func (w *Watch) countFast(level int, b *cycleBank) {
 	_, regular, ok := b.lengths(ringLen)

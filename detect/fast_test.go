@@ -93,6 +93,37 @@ func TestCycleThatComesAgain(t *testing.T) {
 	}
 }
 
+// A cycle of few samples that outgrows noise and usual size by far need not wait: it is told
+// while it grows, and so is one that grows evenly from the first minutes on. What is only as
+// large as noise may be is not.
+func TestGrowthThatNeedsNoWaiting(t *testing.T) {
+	grows := func(begin, seconds int, period, growth, first, most float64) []detect.Finding {
+		r := rand.New(rand.NewPCG(4, 7))
+		out := make([]collector.Frame, seconds)
+		for i := range out {
+			e := 0.03 * r.NormFloat64()
+			if i > begin {
+				x := float64(i-begin) / period
+				e += min(first*math.Pow(growth, x), most) * math.Sin(2*math.Pi*x)
+			}
+			out[i] = collector.Frame{Time: int64(i+1) * 1000, PV: float32(50 - e), SP: 50, OP: float32(50 + 0.5*e),
+				Feedforward: collector.NaN32, Position: collector.NaN32, Mode: collector.Auto}
+		}
+		return replay(quickLoop(), out)
+	}
+	f, ok := first(grows(3600, 3900, 10, 1.4, 0.02, 3), detect.GrowingOscillation)
+	if at := f.At/1000 - 3600; !ok || at > 150 {
+		t.Errorf("ten samples a cycle: growth said %v, after %d s", ok, at)
+	}
+	f, ok = first(grows(120, 600, 20, 1.2, 0.05, 0.8), detect.GrowingOscillation)
+	if at := f.At/1000 - 120; !ok || at > 340 {
+		t.Errorf("from the first minutes on: growth said %v, after %d s", ok, at)
+	}
+	if f := grows(3600, 3900, 10, 1.4, 0.02, 0.05); len(f) > 0 {
+		t.Errorf("no larger than noise: %s", events(f))
+	}
+}
+
 // Where a loop may cycle faster than its samples show, that is said.
 func TestTooFastToSeeIsSaid(t *testing.T) {
 	for reset, want := range map[float64]bool{2: true, 8: false} {

@@ -79,3 +79,28 @@ func TestDayOfItsOwnShape(t *testing.T) {
 		}
 	}
 }
+
+// A slow swing was always there, or may have been, unless the faster levels, which know what
+// is usual long before its own does, say that it is news.
+func TestNotAlwaysThere(t *testing.T) {
+	for _, x := range []struct {
+		below float64 // %, usual size one level faster
+		want  bool
+	}{{0.1, false}, {3, true}} {
+		l := configs.NewLoop("FIC-1")
+		l.IdealReset = 200
+		w := New(l, 0, Options{})
+		w.s.Grid.DT = 5
+		w.s.Motion.first()
+		w.in.t = 1e6
+		for range keptUsual {
+			w.s.Cycles[4].Usual.Add(x.below, 0.75, 0.006, 1e-3)
+		}
+		b := &w.s.Cycles[5]
+		swingOf(b, fewest, func(int) float64 { return 8 }, 4)
+		w.beginOsc(5, b, fewest)
+		if w.s.Osc.Always != x.want {
+			t.Errorf("usual %g%% one level below, a swing of 4%%: always %v", x.below, w.s.Osc.Always)
+		}
+	}
+}

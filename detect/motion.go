@@ -42,6 +42,7 @@ var efStep = 1 - math.Exp(-1./3)
 const (
 	opAtLimit = 0.5  // nearer to a limit than this is at it (methods section 8)
 	opSame    = 1e-6 // less is no change
+	opByHand  = 0.1  // less is no step of a hand (common practice, no source)
 )
 
 // opLimits are the limits of OP in % of its range, as set in the controller.
@@ -173,7 +174,8 @@ func (w *Watch) stepStill() {
 		m.Changes++
 		m.PVSame = in.t
 	}
-	moved := in.hasOP && math.Abs(in.op-m.OP) > opSame
+	by := math.Abs(in.op - m.OP)
+	moved := in.hasOP && by > opSame
 	if moved {
 		m.OPBusy += (1 - m.OPBusy) / 20
 	} else {
@@ -183,8 +185,14 @@ func (w *Watch) stepStill() {
 		m.OPBusyUsual += (m.OPBusy - m.OPBusyUsual) / 500
 	}
 	if moved {
-		w.s.Noise.OPLeast.Add(math.Abs(in.op-m.OP), 0.1, 0.02, opSame)
-		if m.Active && in.t-m.OPSame > m.OPRunMax && !w.deafOP(1) {
+		// By so little no hand moves OP: the law acts, with less gain or a coarser OP than is known.
+		least := &w.s.Noise.OPLeast
+		fine := least.N > 20 && by < min(1.5*least.Value(), opByHand)
+		if fine {
+			m.Manual = false
+		}
+		least.Add(by, 0.1, 0.02, opSame)
+		if in.t-m.OPSame > m.OPRunMax && (fine || m.Active && !w.deafOP(1)) {
 			m.OPRunMax = in.t - m.OPSame
 		}
 		m.OPSame = in.t

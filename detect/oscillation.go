@@ -154,7 +154,7 @@ func (w *Watch) usualKnown(b *cycleBank) bool { return b.Usual.N >= 40 }
 func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 	s := &w.s
 	o := &s.Osc
-	if fast(level, st.period) && b.Kept < fastGrow {
+	if w.drowned(level, b, st) && b.Kept < fastGrow {
 		b.Conf = 0
 		return
 	}
@@ -162,8 +162,9 @@ func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 	usual := b.Usual.Value()
 	tip := b.tip()
 	least := max(1.6*sigma, 0.12)
-	if !w.usualKnown(b) {
-		least = max(3*sigma, 1)
+	large := least
+	if !w.usualKnown(b) { // smaller may be usual, unless it grows as evenly as no load makes it
+		least, large = max(3*sigma, 0.3), max(3*sigma, 1)
 	}
 	grow := false
 	if o.Sus && (o.Evals > 24 && tip < 1.8*o.AmpLo || o.Sticking || tip < 1.5*float64(o.Grown)) || w.scheduled(b, st.period*w.levelS(level)) {
@@ -175,19 +176,23 @@ func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 		b.Conf = max(b.Conf, growConfirm-1)
 	}
 	if tip > least && w.calmSP(st.period*w.levelS(level)) {
+		even := 1.0
+		if tip <= large {
+			even = 2
+		}
 		for _, r := range growthRules {
 			if tip <= r.usual*usual {
 				continue
 			}
-			if _, regular, ok := b.lengths(r.n); !ok || regular < r.regular*math.Sqrt(w.strict) {
+			if _, regular, ok := b.lengths(r.n); !ok || regular < even*r.regular*math.Sqrt(w.strict) {
 				continue
 			}
-			if by, t := b.growth(r.n); t >= r.t*w.strict && math.Pow(by, float64(r.n-2)/2) >= r.over {
+			if by, t := b.growth(r.n); t >= even*r.t*w.strict && math.Pow(by, float64(r.n-2)/2) >= r.over {
 				grow = true
 				break
 			}
 		}
-		if k := &s.Track; !grow && k.On && int(k.Bank) == level && k.GN >= 36 {
+		if k := &s.Track; !grow && tip > large && k.On && int(k.Bank) == level && k.GN >= 36 {
 			// Slow growth shows over the whole episode only.
 			beta, t := k.slope()
 			if _, regular, ok := b.lengths(ringLen); ok && regular >= 5 && t >= 14*w.strict && beta*k.GN > math.Log(1.8) && tip > 2*usual {
@@ -308,7 +313,14 @@ func (w *Watch) beginOsc(level int, b *cycleBank, back int) {
 	*o = oscState{Grow: keep.Grow, Sus: keep.Sus, Bank: uint8(level), Seen: w.in.t, Since: b.Zero - len*w.levelS(level),
 		LastAt: keep.LastAt, LastP: keep.LastP, LastCause: keep.LastCause, Climb: b.climb(back)}
 	rt, _ := w.resetS()
-	o.Always = !(w.usualKnown(b) && b.tip() > 1.6*b.Usual.Value()) && b.Kept < keptRaise && rt > 0 && 2*len/float64(back)*w.levelS(level) > planSlow*rt
+	period := 2 * len / float64(back) * w.levelS(level)
+	size := b.Usual.Value()
+	if !w.usualKnown(b) { // slow cycles come so seldom that the next faster ones must say what is usual
+		if size = 0; period < ownSlowest*rt { // of what rests for long in between they see too little
+			size, _ = w.usualBelow(level)
+		}
+	}
+	o.Always = !(size > 0 && b.tip() > 1.6*size) && b.Kept < keptRaise && rt > 0 && period > planSlow*rt
 	w.startTrack(level)
 	w.s.Clock.begin(level, b.Zero, 2*len/float64(back)*w.levelS(level))
 }
@@ -346,13 +358,13 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 	if !w.usualKnown(b) {
 		size, young = w.usualBelow(level)
 	}
-	if size > 0 && (!young || period < shiftBeat) && s.Noise.known() && !fast(level, st.period) && w.inFew(level, b, size, sigma) {
+	if size > 0 && (!young || period < shiftBeat) && s.Noise.known() && !w.drowned(level, b, st) && w.inFew(level, b, size, sigma) {
 		o.Sus = true
 		w.beginOsc(level, b, fewest)
 		return
 	}
 	q, ok := b.stat(level, n)
-	if ok && s.Noise.known() && !(fast(level, st.period) && b.Kept < fastHold) {
+	if ok && s.Noise.known() && !(b.Kept < fastHold && w.drowned(level, b, st)) {
 		// Batches and shifts have a slow beat of sorts, which a loop not watched for long
 		// may always have had.
 		plain := known || period < shiftBeat

@@ -3,6 +3,7 @@ package quality
 import (
 	"math"
 	"runtime"
+	"slices"
 	"sync"
 
 	"midwatch/collector"
@@ -64,7 +65,11 @@ func (s *scenario) asCase() *Case {
 				unit = math.Max(2*(s.duration-t.onset)/float64(l.turns), l.pu)
 			}
 		}
-		return Truth{Kinds: t.kinds, Also: t.also, Causes: t.causes, Soft: t.soft, OnsetS: t.onset, EndS: t.end, UnitS: unit, Member: t.member, EarlyS: t.early}
+		kinds := t.kinds
+		if l := s.rigs[0]; l.ringLag > 0 && l.clipLoud > t.unit { // the limits of OP have ended the growth: from then on the swing is a steady one
+			kinds = append(slices.Clone(kinds), detect.SustainedOscillation)
+		}
+		return Truth{Kinds: kinds, Also: t.also, Causes: t.causes, Soft: t.soft, OnsetS: t.onset, EndS: t.end, UnitS: unit, Member: t.member, EarlyS: t.early}
 	}
 	c.Law = func() Law {
 		w := s.rigs[max(t.member, 0)].law

@@ -6,9 +6,11 @@ import (
 	"os"
 	"reflect"
 	"runtime"
+	"slices"
 	"strings"
 	"testing"
 
+	"midwatch/collector"
 	"midwatch/configs"
 	"midwatch/detect"
 )
@@ -193,5 +195,22 @@ func TestScoreCounts(t *testing.T) {
 	}
 	if d := mk(g(150, detect.ResetTooShort)).DelayUnits; d != 5 {
 		t.Errorf("delay %g units, want 5", d)
+	}
+}
+
+// A growth that the limits of OP have ended is a steady swing from then on, and rightly told
+// as one; one that goes on inside the limits is not.
+func TestClippedGrowthIsSteady(t *testing.T) {
+	for index, want := range map[int]bool{3: true, 0: false} {
+		for i := range faultFamilies {
+			if f := &faultFamilies[i]; f.name == "growing by gain" {
+				s := f.make(4, false, index, 1)
+				s.run(func(int, *collector.Frame) {})
+				c := s.asCase()
+				if got := slices.Contains(c.Truth().Kinds, detect.SustainedOscillation); got != want {
+					t.Errorf("#%d: clipped for %.0f s of periods of %.0f s: steady %v", index, s.rigs[0].clipLoud, c.Truth().UnitS, got)
+				}
+			}
+		}
 	}
 }

@@ -51,6 +51,7 @@ type rig struct {
 	turnDir     float64
 	clipRun     float64 // s, of the stretch now
 	clipLongest float64 // s, over the whole run, law active
+	clipLoud    float64 // s, after the onset, all together
 	endRun      float64 // s, of PV at an end of its range now
 	endLongest  float64
 
@@ -151,6 +152,9 @@ func (l *rig) step(epoch int64, t float64) (collector.Frame, bool) {
 	if !l.law.manual && (u <= l.law.lo || u >= l.law.hi) {
 		l.clipRun += l.h
 		l.clipLongest = math.Max(l.clipLongest, l.clipRun)
+		if t >= l.onsetS {
+			l.clipLoud += l.h
+		}
 	} else {
 		l.clipRun = 0
 	}

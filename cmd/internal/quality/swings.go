@@ -184,10 +184,12 @@ func outside(square bool) func(*rand.Rand, float64) *scenario {
 			}
 			base := l.baseline(r)
 			l.setOnset(base, func(l *rig) { l.load.wave = wave{amplitude: a, period: period, square: square} })
+			also := kinds{detect.SharedOscillation}
 			if chance(r, 0.3) { // operators show that it goes on without the controller
 				l.spells = spells{every: 40 * period, last: 4 * period, move: 1}
+				also = append(also, detect.NotInNormalMode) // which may take them more than half a shift
 			}
-			return single(l, base, 80*period, truth{kinds: kinds{detect.SustainedOscillation}, also: kinds{detect.SharedOscillation},
+			return single(l, base, 80*period, truth{kinds: kinds{detect.SustainedOscillation}, also: also,
 				causes: causes{detect.OutsideDisturbance}, unit: period, cycles: true, subtle: rmsUnder(1.5)})
 		})
 	}
