@@ -12,7 +12,9 @@ import (
 // are three times slower, six where they are half as slow again.
 
 const (
-	// ownLimit ends the sum: e^1.2 is a factor of 3.3 over all.
+	// ownLimit ends the sum: e^1.2 is a factor of 3.3 over all. It may lie as far below
+	// zero (Wald 1945, held at the bound of acceptance): against a loop that has shown itself
+	// sound more must speak than two loads in a row.
 	ownLimit = 1.2
 	// ownMost is what one recovery counts at most, either way: a second one must agree.
 	ownMost = 0.8
@@ -24,8 +26,8 @@ const (
 // reset four times too long 10 to 35. Where hardly any of the action is proportional:
 // 3.6 to 5.8, a gain four times too low 6 to 27.
 const (
-	soundFall    = 9.0
-	soundFallLow = 5.5
+	soundFall    = 8.5
+	soundFallLow = 5.0
 	lowShare     = 0.13
 	// Near 1 the process is integrating: a long reset is sound there. Over 1 it may be
 	// runaway, where a longer one is.
@@ -68,7 +70,10 @@ func (w *Watch) forItsProcess(e *recovery, thr float64) float64 {
 			return 0
 		}
 	}
-	ratio := fall / max(float64(e.Rise), 3*w.in.dt)
+	// The rise began below the threshold, on average of a straight and a sudden one half
+	// the way of a straight line, and within the sample before.
+	rise := float64(e.Rise)*(1+0.5*thr/(r.Peak-thr)) + w.in.dt
+	ratio := fall / max(rise, 3*w.in.dt)
 	switch p := float64(e.Prop); {
 	case p > 1 && w.loop.Process == configs.Integrating, p > highShare && p <= 1:
 		return ratio / soundFallHigh
@@ -95,8 +100,10 @@ func (r *recoveryState) weigh(e *recovery) {
 	}
 	sum := &r.Own[kindOf(e.SP)]
 	z := min(ownMost, max(-ownMost, math.Log(float64(e.Own))))
-	*sum = float32(min(2*ownLimit, max(0, float64(*sum)+z)))
+	*sum = float32(min(2*ownLimit, max(-ownLimit, float64(*sum)+z)))
 }
 
 // evidence that the loop is slow for its process: the sums of both kinds.
-func (r *recoveryState) evidence() float64 { return float64(r.Own[0]) + float64(r.Own[1]) }
+func (r *recoveryState) evidence() float64 {
+	return max(0, float64(r.Own[0])) + max(0, float64(r.Own[1]))
+}

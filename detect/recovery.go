@@ -187,11 +187,13 @@ func (w *Watch) residences(dop, dpv float64) float64 {
 		return 0
 	}
 	own := (r.DSP/dop*r.IntOP - r.IntPV) / dpv
-	if own < 0 && -own > 0.3*closed { // the load moved meanwhile
+	// Of a process that the samples do not resolve, and where the load moved meanwhile, it
+	// says nothing: there the resonance or the delay that bounds the tuning is unseen.
+	if own < unresolved*w.in.dt {
 		return 0
 	}
 	// Of the closed loop by the law, not by its area: the same where P does not see SP.
-	return dop / r.DSP * ti / kc / max(own, unresolved*w.in.dt)
+	return dop / r.DSP * ti / kc / own
 }
 
 // cutRecovery keeps an event that was not over when something else came, if it
