@@ -18,9 +18,9 @@ import (
 const (
 	phiGain  = 35.0
 	phiReset = 45.0
-	// Under it the gain is over 0.8 of the ultimate one in every class of process (methods
-	// section 5): no reset is at fault, whatever the fit makes of one that hardly shows.
-	phiNoReset = 15.0
+	// Under it OP is in phase with e, and no reset is at fault, whatever a fit makes of one
+	// that hardly shows. (A recorded run whose reset was really cut swings at 4 to 15.)
+	phiNoReset = 4.0
 	// Over this an integrating loop has too little gain whatever its reset is: at its limit
 	// w theta = 90 degrees - phi and k Kc theta = w theta sin(w theta), here 0.12, where
 	// the published rules set 0.35 to 0.5.

@@ -51,7 +51,7 @@ func TestResetCut(t *testing.T) {
 	for _, c := range []struct {
 		rk, rt, phi float64
 		want        bool
-	}{{1, 0.3, 50, true}, {1, 0.3, 20, true}, {0.96, 0.36, 10, false}, {2, 0.3, 50, false}, {1, 0.7, 50, false}, {1, 0.3, math.NaN(), true}} {
+	}{{1, 0.3, 50, true}, {1, 0.3, 20, true}, {0.96, 0.36, 10, true}, {0.96, 0.36, 3, false}, {2, 0.3, 50, false}, {1, 0.7, 50, false}, {1, 0.3, math.NaN(), true}} {
 		if got := resetCut(math.Log(c.rk), math.Log(c.rt), c.phi); got != c.want {
 			t.Errorf("gain times %.2f, reset times %.2f, lag %.0f degrees: %v", c.rk, c.rt, c.phi, got)
 		}
