@@ -101,6 +101,24 @@ func TestUnitMistakesByName(t *testing.T) {
 	}
 }
 
+// What was in service as entered, and was changed since, was no mistake of units.
+func TestNoUnitMistakeWhereTheTuningChanged(t *testing.T) {
+	l := configs.NewLoop("TIC-221")
+	l.GainPct, l.IdealReset = 1.4, 24
+	w := New(l, 0, Options{})
+	w.s.Grid.DT = 1
+	b := &w.s.Fits[0]
+	b.Count, b.ByLaw = 1, 2
+	b.Ring[0] = fit{T0: 10, At: 100, Kc: 1.4, Ti: 120, R2: 0.99, X: 100}
+	if n := w.tuningNote(); !strings.Contains(n, "reset entered 24 s") || !strings.Contains(n, "repeats per hour") {
+		t.Fatalf("%q", n)
+	}
+	w.s.Change = tuneChange{On: true, ResetWas: 25, ResetNow: 120, What: 2}
+	if n := w.tuningNote(); !strings.Contains(n, "reset entered 24 s") || strings.Contains(n, "repeats") {
+		t.Errorf("%q", n)
+	}
+}
+
 // The table duty x kind, whole: what is left out in each duty, and nothing else
 // (DEVELOPERS.md, Duty x kind). Cycles, PV and data are judged in all.
 func TestDutyTable(t *testing.T) {

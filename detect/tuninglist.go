@@ -85,16 +85,18 @@ func (w *Watch) tuningNote() string {
 	rk, rt := w.listRatio()
 	if rk > 0 && !within(rk, 1, differs) {
 		s := fmt.Sprintf("gain entered %s, the data say about %s", sig2(w.loop.GainPct), sig2(math.Abs(kc)))
-		if near(w.loop.GainPct*math.Abs(kc), 100) {
+		switch {
+		case near(float64(w.s.Change.GainWas), w.loop.GainPct): // rightly entered, and changed since
+		case near(w.loop.GainPct*math.Abs(kc), 100):
 			s += ": proportional band?"
-		} else if near(w.loop.GainPct*math.Abs(kc), 1) {
+		case near(w.loop.GainPct*math.Abs(kc), 1):
 			s += ": its inverse?"
 		}
 		add(s)
 	}
 	if rt > 0 && !within(rt, 1, differs) {
 		s := fmt.Sprintf("reset entered %s s, the data say about %s s", sig2(w.loop.IdealReset), sig2(ti))
-		if u := resetUnit(w.loop.IdealReset, ti); u != "" {
+		if u := resetUnit(w.loop.IdealReset, ti); u != "" && !near(float64(w.s.Change.ResetWas), w.loop.IdealReset) {
 			s += ": " + u + "?"
 		}
 		add(s)
