@@ -15,7 +15,7 @@ func TestFirstSlotHoldsNothing(t *testing.T) {
 	l.Report = configs.Exception
 	w := New(l, 0, Options{})
 	step := func(s int) {
-		f := collector.Frame{Time: int64(1_767_225_600_000 + 1000*s), PV: 50 + 0.1*float32(s%3), SP: 50, OP: 40, Mode: collector.Auto}
+		f := collector.Frame{Time: 1_767_225_600_000 + 1000*int64(s), PV: 50 + 0.1*float32(s%3), SP: 50, OP: 40, Mode: collector.Auto}
 		w.Step(&f, func(*Finding) {})
 	}
 	for s := range learnIntervals + 1 {
