@@ -7,6 +7,22 @@ import (
 	"midwatch/detect"
 )
 
+// stuckOrLimited asks for the cause of an OP at its limit, with an element that is stuck and
+// with one that has no room left.
+func stuckOrLimited(t *testing.T, run func(stuck bool) []detect.Finding) {
+	t.Helper()
+	for _, stuck := range []bool{true, false} {
+		want := detect.OutputLimit
+		if stuck {
+			want = detect.FinalElementNotFollowing
+		}
+		fs := run(stuck)
+		if f, ok := last(fs, detect.OutputSaturation); !ok || f.Cause != want {
+			t.Errorf("stuck %v: want output-saturation by %s:%s", stuck, want, brief(fs))
+		}
+	}
+}
+
 // OP travels to its limit with PV held away from SP in both cases: because the element
 // does not move, or because the load grows as fast as OP. Once OP has stopped, only
 // the load goes on. The growing load is made so that e on the way is the same.
@@ -32,16 +48,7 @@ func TestElementThatDoesNotMove(t *testing.T) {
 		g.run(2 * 3600)
 		return replay(loopOf("FIC-310", g), g.out)
 	}
-	for _, stuck := range []bool{true, false} {
-		want := detect.OutputLimit
-		if stuck {
-			want = detect.FinalElementNotFollowing
-		}
-		fs := run(stuck)
-		if f, ok := last(fs, detect.OutputSaturation); !ok || f.Cause != want {
-			t.Errorf("stuck %v: want output-saturation by %s:%s", stuck, want, brief(fs))
-		}
-	}
+	stuckOrLimited(t, run)
 }
 
 // PV logged in steps of 1 % stands for hours while OP works: no frozen PV. With the
@@ -161,14 +168,5 @@ func TestSetPointAsksTheElement(t *testing.T) {
 		g.run(3 * 3600)
 		return replay(loopOf("FIC-314", g), g.out)
 	}
-	for _, stuck := range []bool{true, false} {
-		want := detect.OutputLimit
-		if stuck {
-			want = detect.FinalElementNotFollowing
-		}
-		fs := run(stuck)
-		if f, ok := last(fs, detect.OutputSaturation); !ok || f.Cause != want {
-			t.Errorf("stuck %v: want output-saturation by %s:%s", stuck, want, brief(fs))
-		}
-	}
+	stuckOrLimited(t, run)
 }

@@ -8,8 +8,6 @@ import (
 	"os"
 	"path/filepath"
 	"regexp"
-	"sync/atomic"
-	"time"
 
 	"midwatch/cmd/internal/quality"
 )
@@ -50,20 +48,10 @@ func main() {
 	case *one:
 		err = quality.One(os.Stdout, o, *index)
 	default:
-		begin := time.Now()
-		var done atomic.Int64
-		o.Each = func(r *quality.Result) {
-			if k := done.Add(1); k%50 == 0 {
-				fmt.Fprintf(os.Stderr, "\r%d scenarios, %.0f s", k, time.Since(begin).Seconds())
-			}
-		}
-		results := quality.Run(o)
-		fmt.Fprintln(os.Stderr)
-		if *verbose {
-			quality.Details(os.Stdout, results)
-		}
-		quality.Table(os.Stdout, results)
-		fmt.Fprintf(os.Stderr, "%.0f s\n", time.Since(begin).Seconds())
+		quality.Report(os.Stdout, os.Stderr, *verbose, func(each func(*quality.Result)) []quality.Result {
+			o.Each = each
+			return quality.Run(o)
+		})
 	}
 	if err != nil {
 		fmt.Fprintln(os.Stderr, err)

@@ -7,8 +7,6 @@ import (
 	"os"
 	"path/filepath"
 	"regexp"
-	"sync/atomic"
-	"time"
 
 	"midwatch/cmd/internal/quality"
 	"midwatch/cmd/internal/quality/others"
@@ -56,19 +54,10 @@ func main() {
 			}
 		}
 	default:
-		begin := time.Now()
-		var done atomic.Int64
-		o.Each = func(*quality.Result) {
-			if k := done.Add(1); k%20 == 0 {
-				fmt.Fprintf(os.Stderr, "\r%d cases, %.0f s", k, time.Since(begin).Seconds())
-			}
-		}
-		results := others.Run(o)
-		fmt.Fprintf(os.Stderr, "\r%d cases, %.0f s\n", len(results), time.Since(begin).Seconds())
-		if *verbose {
-			quality.Details(os.Stdout, results)
-		}
-		quality.Table(os.Stdout, results)
+		quality.Report(os.Stdout, os.Stderr, *verbose, func(each func(*quality.Result)) []quality.Result {
+			o.Each = each
+			return others.Run(o)
+		})
 	}
 	if err != nil {
 		fmt.Fprintln(os.Stderr, err)
