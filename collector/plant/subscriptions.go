@@ -75,6 +75,7 @@ type item struct {
 	attr       ua.AttributeID
 	sub        *subscription
 	size, held int
+	last       time.Time // source time of the value queued last
 }
 
 func newSubscriptions(ctx context.Context, srv *server.Server, now func() time.Time) *subscriptions {
@@ -231,7 +232,10 @@ func (s *subscriptions) notify(node *ua.NodeID, key string) {
 	s.mu.Lock()
 	defer s.mu.Unlock()
 	for _, it := range s.items[key] {
-		s.queue(it, s.read(node, it.attr))
+		// An item made between the setting of a value and this has it as its first.
+		if v := s.read(node, it.attr); v.SourceTimestamp.IsZero() || !v.SourceTimestamp.Equal(it.last) {
+			s.queue(it, v)
+		}
 	}
 }
 
@@ -249,6 +253,7 @@ func (s *subscriptions) queue(it *item, v *ua.DataValue) {
 		v = &marked
 	}
 	it.held++
+	it.last = v.SourceTimestamp
 	sub.queue = append(sub.queue, queued{it, v})
 }
 
