@@ -111,6 +111,22 @@ func do(t *testing.T, ctx context.Context, steps ...chromedp.Action[chromedp.Voi
 	}
 }
 
+// click clicks on what the page may draw anew at any time: a node that went between being
+// found and being clicked on is looked for again.
+func click(t *testing.T, ctx context.Context, css string) {
+	t.Helper()
+	for range 20 {
+		err := chromedp.Do(ctx, chromedp.Click(chromedp.CSS(css)))
+		if err == nil {
+			return
+		}
+		if !strings.Contains(err.Error(), "Could not find node") {
+			t.Fatal(err)
+		}
+	}
+	t.Fatalf("%s goes each time before it can be clicked on", css)
+}
+
 // script runs a script for what it does.
 func script(js string) chromedp.Action[chromedp.Void] {
 	return func(ctx context.Context, target *chromedp.Target) (chromedp.Void, error) {
