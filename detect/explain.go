@@ -61,11 +61,11 @@ func (w *Watch) Explain() []string {
 		}
 	}
 	if p := &s.Spell; p.OfP > 0 {
-		out = append(out, fmt.Sprintf("manual spells with a cycle of %s before them: it went on in %d and died in %d, the last at %s", duration(float64(p.OfP)), p.WentOn, p.Died, FormatTime(w.ms(float64(p.At)))))
+		out = append(out, fmt.Sprintf("manual spells with a cycle of %s before them: it went on in %d and died in %d, the last at %s", duration(float64(p.OfP)), p.WentOn, p.Died, FormatTime(w.ms(p.At.s()))))
 	}
 	for i := range int(min(s.Recov.Count, recRing)) {
 		e := s.Recov.recent(i)
-		out = append(out, fmt.Sprintf("recovery at %s from %s: %s, %s to its peak of %.2f %%", FormatTime(w.ms(float64(e.At))), w.recoveryOf(e.SP),
+		out = append(out, fmt.Sprintf("recovery at %s from %s: %s, %s to its peak of %.2f %%", FormatTime(w.ms(e.At.s())), w.recoveryOf(e.SP),
 			duration(float64(e.Dur)), duration(float64(e.Rise)), e.Peak)+w.recoveryHeld(e))
 	}
 	if s.Recov.Count > 0 {
@@ -76,11 +76,14 @@ func (w *Watch) Explain() []string {
 		out = append(out, fmt.Sprintf("one-sided error for %s (asked %s or longer), mean %.2f %% (asked %.2f)", duration(w.in.t-s.Off.T0), duration(w.offsetWaitS()),
 			math.Abs(s.Off.Int/max(s.Off.Dur, 1e-9)), w.offsetLeast()))
 	}
+	out = append(out, w.explainLimit()...)
+	out = append(out, w.explainFrozen()...)
+	out = append(out, w.explainChange()...)
 	for kind := range s.Marks {
 		for i := range s.Marks[kind] {
 			if x := &s.Marks[kind][i]; x.Size != 0 {
 				if _, t := w.markWords(kind, float64(x.Size)); t != "" {
-					out = append(out, "changed at "+FormatTime(w.ms(float64(x.At)))+": "+t)
+					out = append(out, "changed at "+FormatTime(w.ms(x.At.s()))+": "+t)
 				}
 			}
 		}
@@ -118,74 +121,90 @@ func (w *Watch) recoveryHeld(e *recovery) (t string) {
 	return t
 }
 
-// explainCycle shows the regular cycle that the bank of a level sees, if any.
-func (w *Watch) explainCycle(l int) (out []string) {
-	b := &w.s.Cycles[l]
-	st, ok := b.stat(l, 8)
-	if !ok || !(st.regular > 2.5) {
-		return nil
+// explainLimit shows how OP lies at a limit, and how it stays there past its time.
+func (w *Watch) explainLimit() (out []string) {
+	s := &w.s
+	z := &s.Sat
+	if z.AtSince > 0 && s.Off.Sign != 0 {
+		out = append(out, fmt.Sprintf("OP at the limit to which e pushes it for %s (asked longer than %s)", duration(w.in.t-z.AtSince), duration(w.limitWaitS())))
 	}
-	usual := b.Usual.Value()
-	what := fmt.Sprintf("cycle of %s: ±%.3g %% at", duration(st.period*w.levelS(l)), st.amp)
-	if usual > 0 && w.usualKnown(b) {
-		what += fmt.Sprintf(" a usual of ±%.3g %%", usual)
-	} else {
-		what += " no usual size known yet"
+	if z.Stretches > 0 {
+		out = append(out, fmt.Sprintf("visits to a limit that each outlast a recovery: %d without a day between them (asked %d), the last until %s", z.Stretches, visitsAsked, FormatTime(w.ms(z.LastEnd))))
 	}
-	if fast(l, st.period) {
-		_, regular, _ := b.lengths(min(int(b.N), ringLen))
-		return append(out, what+fmt.Sprintf(", of few samples: length %.1f times its scatter (asked %.1f), for %d half-cycles (asked %d)", regular, fastRaise*w.strict, b.Kept, fastHold))
+	rt, _ := w.resetS()
+	if z.CrossAt > 0 {
+		out = append(out, fmt.Sprintf("OP at its limit since e changed sign %s ago (asked longer than %s), where a sound controller has left it by %.2f %% (asked %.2g)",
+			duration(w.in.t-z.CrossAt), duration(w.overhangS(rt)), z.Due, dueLeast))
 	}
-	out = append(out, what)
-	// The rule of growth that is nearest to hold.
-	best, holds := "", -1
-	for _, r := range growthRules {
-		_, regular, ok := b.lengths(r.n)
-		if !ok {
-			continue
-		}
-		by, t := b.growth(r.n)
-		over, size := math.Pow(by, float64(r.n-2)/2), b.tip()/max(usual, 1e-9)
-		asked := r.regular * math.Sqrt(w.strict)
-		held := 0
-		for _, ok := range []bool{regular >= asked, t >= r.t*w.strict, over >= r.over, size > r.usual} {
-			if ok {
-				held++
-			}
-		}
-		if held > holds {
-			holds = held
-			best = fmt.Sprintf("  does it grow, over %d half-cycles: length %.1f times its scatter (asked %.1f), growth %.1f times its uncertainty (asked %.1f), %.2f times larger (asked %.1f), %.1f times its usual (asked %.1f), held %d half-cycles running (asked %d)",
-				r.n, regular, asked, t, r.t*w.strict, over, r.over, size, r.usual, b.Conf, growConfirm)
-		}
-	}
-	if best != "" {
-		out = append(out, best)
-	}
-	sigma := w.s.Noise.beside(st.amp, st.period*float64(int(1)<<l))
-	size := usual
-	if !w.usualKnown(b) {
-		size, _ = w.usualBelow(l)
-	}
-	if large := largeInFew(size, sigma); size > 0 {
-		n, plain, amp := 0, math.Inf(-1), 0.0
-		for k := fewest; k <= min(int(b.N), most); k++ {
-			q, _ := b.stat(l, k)
-			if x := plainness(&q, b.spread(k), large); x > plain && q.regular >= 4 && q.least >= 0.5 {
-				n, plain, amp = k, x, q.amp
-			}
-		}
-		if n > 0 {
-			out = append(out, fmt.Sprintf("  is it a cycle beyond doubt, over %d half-cycles: evidence %.1f (asked %.1f), ±%.3g %% (asked %.3g)", n, plain, certain*w.strict, amp, large))
-		}
-	}
-	if q, ok := b.stat(l, steadyHalves); ok {
-		r := steadyNew
-		if w.usualKnown(b) && b.Usual.N >= keptUsual {
-			r = steadyOwn
-		}
-		out = append(out, fmt.Sprintf("  does it stay, over %d half-cycles: length %.1f times its scatter (asked %.1f), smallest peak %.2f of the mean (asked %.1f), ±%.3g %% (asked %.3g)",
-			q.n, q.regular, r.regular*w.strict, q.least, r.least, q.amp, r.size(sigma, usual)))
+	if z.WindUps > 0 {
+		out = append(out, fmt.Sprintf("OP stayed at its limit past the change of sign of e %d times (asked %d), for up to %s (asked %s where it is once)", z.WindUps, windUpsAsked, duration(z.Over), duration(windUpOnce*rt)))
 	}
 	return out
+}
+
+// explainFrozen shows for how long a PV that stands has done so, and what OP did.
+func (w *Watch) explainFrozen() []string {
+	x := &w.s.Misc
+	if !w.s.Motion.Frozen && !x.Frozen {
+		return nil
+	}
+	run, limit, travel := w.frozenAsked()
+	t := fmt.Sprintf("PV has not changed for %s (asked longer than %s)", duration(run), duration(limit))
+	if travel > 0 {
+		t += fmt.Sprintf(", while OP travelled by %.3g %% (asked %.3g)", x.OPTravel, travel)
+	}
+	return []string{t}
+}
+
+// explainChange shows how far the newest readings of the tuning are from the usual ones, and
+// how long a change has lasted that is suspected or was told. One of tags is a fact: nothing
+// is asked of it.
+func (w *Watch) explainChange() (out []string) {
+	out = append(w.explainMoved("gain", false), w.explainMoved("reset time", true)...)
+	c := &w.s.Change
+	if c.Maybe > 0 {
+		out = append(out, fmt.Sprintf("a change of the tuning is suspected, for %s (asked %s or longer)", duration(w.in.t-c.MaybeAt.s()), duration(w.changeLongS(float64(w.s.Fits[c.MaybeOf].newest().Ti)))))
+	}
+	if c.On && c.Seen > c.At {
+		by := func(what uint8, name string, was, now float32) string {
+			if c.What&what == 0 {
+				return ""
+			}
+			return fmt.Sprintf(" %s %.2f times what it was (asked %.2f times up or down),", name, now/was, math.Exp(math.Log(changeRatio)*w.strict))
+		}
+		out = append(out, fmt.Sprintf("a change of the tuning was told:%s%s seen for %s (asked %s or longer)", by(1, "gain", c.GainWas, c.GainNow), by(2, "reset time", c.ResetWas, c.ResetNow),
+			duration(c.Seen-c.At), duration(w.changeLongS(float64(c.ResetNow)))))
+	}
+	return out
+}
+
+// explainMoved shows the newest readings of gain or reset time of the scale where they are
+// farthest from the usual.
+func (w *Watch) explainMoved(name string, reset bool) []string {
+	best, line := 0.0, ""
+	for k := range w.s.Fits {
+		b := &w.s.Fits[k]
+		if b.Count < fitRing || b.BaseK.N < 4 || b.ByLaw <= 0 {
+			continue
+		}
+		lo, hi, dev := math.Inf(1), math.Inf(-1), &b.DevK
+		for i := range uint32(changeFits) {
+			f := &b.Ring[(b.Count-1-i)%fitRing]
+			d := w.strays(k, f)
+			if reset {
+				d, dev = math.Log(float64(f.Ti)/b.BaseT.Value()), &b.DevT
+			}
+			lo, hi = min(lo, d), max(hi, d)
+		}
+		each, mean := w.movedAsked(changeFits, dev)
+		if off := math.Abs(lo+hi) / 2 / mean; off >= best && math.Max(-lo, hi) < math.Log(1000) { // beyond that no reset was seen
+			best = off
+			line = fmt.Sprintf("newest %d readings of the %s: %.2f to %.2f times the usual (asked of a change: %.2f times up or down in the middle, %.2f each)",
+				changeFits, name, math.Exp(lo), math.Exp(hi), math.Exp(mean), math.Exp(each))
+		}
+	}
+	if line == "" {
+		return nil
+	}
+	return []string{line}
 }

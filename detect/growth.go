@@ -99,33 +99,58 @@ func (w *Watch) judgeGrowth(level int, b *cycleBank, st ringStat) {
 // ones count: four that each outgrow the last, far over noise and usual size; three
 // where the tuning in service is far more aggressive than what was set up.
 func (w *Watch) violent(level int, b *cycleBank) bool {
-	if b.N < 4 || b.at(0).ln() < 0 {
+	if b.N < violentHalves || b.at(0).ln() < 0 {
 		return false
 	}
 	tip := b.tip()
-	if tip < 2.5 {
+	if tip < violentTip {
 		return false
 	}
-	period, regular, _ := b.lengths(4)
+	period, regular, _ := b.lengths(violentHalves)
 	p := period * w.levelS(level)
-	if regular < 3*w.strict || period < bankLowP || period > 1.5*bankHighP || p < 1200 ||
-		tip < 2.5*w.s.Noise.sigma() || !w.steadySP(2.5*p) {
+	if regular < violentRegular*w.strict || period < bankLowP || period > 1.5*bankHighP || p < violentSlow || !w.steadySP(2.5*p) {
 		return false
 	}
-	n := 3
-	if !w.aggressive() {
-		if n = 4; b.N < 5 || tip < 5*w.usualNear(level) {
-			return false
-		}
+	n, size := w.violentAsked(level)
+	if int(b.N) <= n || tip < size {
+		return false
 	}
-	least, most := math.Inf(1), 0.
+	// An unstable loop grows by the same factor each time; a load step out of calm by
+	// much, once.
+	least, most := b.steps(n)
+	return least > math.Log(violentGrows) && most < violentEven*least
+}
+
+// What is asked of a violent swing (common practice, no source).
+const (
+	violentHalves  = 4      // half-cycles whose lengths are looked at
+	violentTip     = 2.5    // %, its newest peaks
+	violentNoise   = 2.5    // of the noise level
+	violentUsual   = 5.0    // of the usual size, where the tuning is not the reason
+	violentRegular = 3.0    // length over its scatter
+	violentSlow    = 1200.0 // s, its period: a faster one shows half-cycles enough
+	violentGrows   = 1.22   // from peak to peak, each time
+	violentEven    = 3.0    // the most growth, ln, over the least, under which it is one factor
+)
+
+// violentAsked is how many times on end a violent swing must outgrow itself, and the size of
+// its newest peaks, %.
+func (w *Watch) violentAsked(level int) (n int, size float64) {
+	n, size = 3, max(violentTip, violentNoise*w.s.Noise.sigma())
+	if !w.aggressive() {
+		n, size = 4, max(size, violentUsual*w.usualNear(level))
+	}
+	return n, size
+}
+
+// steps are the least and the largest growth, ln, from each of the newest n peaks to the next.
+func (b *cycleBank) steps(n int) (least, most float64) {
+	least = math.Inf(1)
 	for i := range n {
 		by := b.at(i).ln() - b.at(i+1).ln()
 		least, most = min(least, by), max(most, by)
 	}
-	// An unstable loop grows by the same factor each time; a load step out of calm by
-	// much, once.
-	return least > math.Log(1.22) && most < 3*least
+	return least, most
 }
 
 // aggressive: the reset time in service is less than half of what the loop list

@@ -26,7 +26,7 @@ func (w *Watch) tuning(since, period float64) (kc, ti float64, ok bool) {
 		}
 		// Where most blocks that move deny the law, as where a flow that no tag tells paces OP,
 		// those that pass are a choice by chance.
-		if float64(r.At) < since || float64(r.T0) < stands || !r.ok() || period == 0 && (b.ByLaw <= -lawVotes/2 || b.scattered(stands)) {
+		if r.At.s() < since || r.T0.s() < stands || !r.ok() || period == 0 && (b.ByLaw <= -lawVotes/2 || b.scattered(stands)) {
 			continue
 		}
 		score := 10*float64(r.R2) + min(1, float64(r.X)/2000)
@@ -58,7 +58,7 @@ func (w *Watch) gainAlone() (kc float64, ok bool) {
 	stands, best := w.standsSince(), float32(changeR2)
 	for k := range w.s.Fits {
 		f := &w.s.Fits[k].Last
-		if f.R2 > best && float64(f.T0) >= stands && f.X <= fitX {
+		if f.R2 > best && f.T0.s() >= stands && f.X <= fitX {
 			best, kc, ok = f.R2, float64(f.Kc), true
 		}
 	}
@@ -93,7 +93,7 @@ func (b *fitBank) scattered(since float64) bool {
 	k0, k1, t0, t1 := math.Inf(1), 0.0, math.Inf(1), 0.0
 	for i := range min(b.Count, newest) {
 		f := &b.Ring[(b.Count-1-i)%fitRing]
-		if float64(f.T0) < since {
+		if f.T0.s() < since {
 			break
 		}
 		k := math.Abs(float64(f.Kc))
@@ -112,7 +112,7 @@ func (w *Watch) standsSince() (t float64) {
 	if c := &w.s.Change; c.Seen > 0 {
 		t = c.At
 	}
-	newest := float32(0)
+	newest := moment(0)
 	for k := range w.s.Fits {
 		if f := &w.s.Fits[k].Last; f.ok() {
 			newest = max(newest, f.At)
@@ -124,11 +124,11 @@ func (w *Watch) standsSince() (t float64) {
 			continue
 		}
 		if b.Run <= -fitBad && b.Last.At >= newest {
-			return float64(newest) + 1 // nothing was read since
+			return newest.s() + 1 // nothing was read since
 		}
 		a, o := &b.Ring[(b.Count-1)%fitRing], &b.Ring[(b.Count-2)%fitRing]
 		if w.moved([]float64{w.strays(k, a), w.strays(k, o)}, changeFits, &b.DevK) {
-			t = max(t, float64(o.T0))
+			t = max(t, o.T0.s())
 		}
 	}
 	return
@@ -192,7 +192,7 @@ func (w *Watch) usualOfRun() (kc, ti float64, ok bool) {
 }
 
 // usualBefore: the fit counts for what was usual before t, s.
-func (f *fit) usualBefore(t float64) bool { return float64(f.At) < t && f.R2 > 0.95 }
+func (f *fit) usualBefore(t float64) bool { return f.At.s() < t && f.R2 > 0.95 }
 
 // usual is gain and reset time, s, of the bank before t: of its history, where there is
 // one.

@@ -44,27 +44,37 @@ func (w *Watch) countKept(level int, b *cycleBank, few bool) {
 }
 
 func (w *Watch) kept(level int, b *cycleBank) bool {
+	if b.tip() < 0.5*max(keptLeast, 2.5*w.s.Noise.sigma()*w.strict) { // most are small: no more is worked out
+		return false
+	}
+	q, _ := b.stat(level, keptHalves)
+	a, ok := w.keptAsked(level, q.period*w.levelS(level))
+	return ok && b.tip() > 0.5*a.size && q.period > bankLowP && q.period < bankHighP && q.amp > a.size && b.middleRegular() > a.regular && b.spread(keptHalves/2) < a.even
+}
+
+// lasting is what is asked of a swing that lasts: its size, %, and the regularity of its
+// middle lengths at least, the deviation of its sizes over their mean at most.
+type lasting struct{ size, regular, even float64 }
+
+// keptAsked is that of a swing of a period, s, at a level; ok is false where no swing is
+// told by lasting.
+func (w *Watch) keptAsked(level int, period float64) (a lasting, ok bool) {
 	over, regular := 2.5, 4.0
 	usual, young := w.usualBelow(level)
 	if young { // its usual size rests on little: more is asked for
 		over, regular = 3, 6
 	}
-	if b.tip() < 0.5*max(keptLeast, 2.5*w.s.Noise.sigma()*w.strict) { // most are small: no more is worked out
-		return false
-	}
-	q, _ := b.stat(level, keptHalves)
-	period := q.period * w.levelS(level)
-	even := keptEven
+	a.even = keptEven
 	if w.loosened(period) { // what was usual since is the swing itself, and each load stirs it up anew
-		usual, even = 0, math.Inf(1)
+		usual, a.even = 0, math.Inf(1)
 		if w.loop.Process == configs.Integrating {
 			regular = keptLoose
 		}
 	} else if young && (usual == 0 || w.loop.Duty == configs.Batch || w.loop.Duty == configs.StartStop) || period > keptSlow {
-		return false
+		return a, false
 	}
-	least := max(keptLeast, 2.5*w.s.Noise.sigma()*w.strict, over*usual*w.strict)
-	return b.tip() > 0.5*least && q.period > bankLowP && q.period < bankHighP && q.amp > least && b.middleRegular() > regular*w.strict && b.spread(keptHalves/2) < even
+	a.size, a.regular = max(keptLeast, 2.5*w.s.Noise.sigma()*w.strict, over*usual*w.strict), regular*w.strict
+	return a, true
 }
 
 // loosened: the gain in service is less than a third of what was set up or was in service

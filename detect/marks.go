@@ -16,9 +16,9 @@ import (
 // source). The two newest of each kind are held, and one from before the trouble is
 // not given away for what follows it.
 
-// mark is one happening. Times keep 4 s after two years.
+// mark is one happening.
 type mark struct {
-	At   float32 // s since T0, its begin
+	At   moment  // its begin
 	Size float32 // by kind; 0 none
 }
 
@@ -43,10 +43,10 @@ const (
 // note begins a mark.
 func (w *Watch) note(kind int, at, size float64) {
 	m := &w.s.Marks[kind]
-	if m[0].Size == 0 || float64(m[0].At) <= w.earliest() {
+	if m[0].Size == 0 || m[0].At.s() <= w.earliest() {
 		m[1] = m[0]
 	}
-	m[0] = mark{float32(at), float32(size)}
+	m[0] = mark{momentOf(at), float32(size)}
 }
 
 // earliest is the onset, s, of the oldest trouble that is open or suspected; later
@@ -79,7 +79,7 @@ func (w *Watch) stepMarks(was collector.Mode) {
 	own := m.Active && in.mode != collector.Cascade && in.mode != collector.RemoteSP
 	if d := in.sp - m.SP; own && math.Abs(d) > 1e-9 {
 		// A ramp is one change, and so is a program that never rests.
-		if x := &w.s.Marks[markSP][0]; x.Size != 0 && (m.SPBusy > 0.03 || in.t-float64(x.At) < 30*in.dt) {
+		if x := &w.s.Marks[markSP][0]; x.Size != 0 && (m.SPBusy > 0.03 || in.t-x.At.s() < 30*in.dt) {
 			x.Size += float32(d)
 		} else if math.Abs(d) > 1e-3 {
 			w.note(markSP, in.t, d)
@@ -87,7 +87,7 @@ func (w *Watch) stepMarks(was collector.Mode) {
 	}
 	if hand := in.mode == collector.Manual || in.mode == collector.ModeUnknown && m.Manual; hand && in.hasOP {
 		if d := in.op - m.OP; math.Abs(d) > markLeast {
-			if x := &w.s.Marks[markHand][0]; x.Size != 0 && in.t-float64(x.At) < markJoinS {
+			if x := &w.s.Marks[markHand][0]; x.Size != 0 && in.t-x.At.s() < markJoinS {
 				x.Size += float32(d)
 			} else {
 				w.note(markHand, in.t, d)
@@ -96,8 +96,8 @@ func (w *Watch) stepMarks(was collector.Mode) {
 	}
 	if in.limit && m.Active {
 		x := &w.s.Marks[markLimit][0]
-		if end := float64(x.At + x.Size); x.Size != 0 && in.t-end < markJoinS {
-			x.Size = max(x.Size, float32(in.t)-x.At)
+		if end := x.At.s() + float64(x.Size); x.Size != 0 && in.t-end < markJoinS {
+			x.Size = max(x.Size, float32(in.t-x.At.s()))
 		} else {
 			w.note(markLimit, in.t, in.dt)
 		}
@@ -179,7 +179,7 @@ func (w *Watch) before(k int, onset float64, now int64) (out []Change) {
 	}
 	for kind := range s.Marks {
 		for _, x := range s.Marks[kind] {
-			at, size := float64(x.At), float64(x.Size)
+			at, size := x.At.s(), float64(x.Size)
 			if size == 0 {
 				continue
 			}
@@ -226,7 +226,7 @@ func (w *Watch) tuningMoved(onset float64) (m tuningMove, same bool) {
 		for j := range min(int(b.Count), fitRing) {
 			f := &b.Ring[j]
 			if f.R2 > changeR2 && f.hasReset() && near(math.Abs(float64(f.Kc)), gain) && near(float64(f.Ti), reset) {
-				at = min(at, float64(f.T0))
+				at = min(at, f.T0.s())
 			}
 		}
 	}
@@ -303,7 +303,7 @@ func (w *Watch) nothingBefore(k int, f *Finding) string {
 		return ""
 	}
 	for kind := range s.Marks {
-		if x := &s.Marks[kind][1]; x.Size != 0 && float64(x.At) > onset {
+		if x := &s.Marks[kind][1]; x.Size != 0 && x.At.s() > onset {
 			return ""
 		}
 	}

@@ -97,17 +97,31 @@ func stepFrozen(w *Watch) {
 	if in.hasOP {
 		x.OPTravel = max(x.OPTravel, math.Abs(in.op-x.OPAtStill))
 	}
+	run, limit, travel := w.frozenAsked()
+	if x.OPTravel < travel || m.Changes == 0 && !in.active {
+		return
+	}
+	if run > limit {
+		x.Frozen = true
+	}
+}
+
+// frozenAsked is for how long PV has stood, s, how long it must to be frozen, and the travel
+// of OP meanwhile that PV would have shown, %; 0 where none is asked.
+func (w *Watch) frozenAsked() (run, limit, travel float64) {
+	s, in := &w.s, &w.in
+	x, m := &s.Misc, &s.Motion
 	q := s.Noise.Least.Value()
 	steps := s.Noise.Step.Value() < 1.5*q // all changes are of one step
 	coarse := q > 0.15 && steps
-	run := in.t - m.PVSame
+	run = in.t - m.PVSame
 	// Within one step of a coarse record, or its dead band, a good loop stands for days.
 	quiet := steps || s.Noise.Least.N < 20 || w.loop.Report == configs.Exception
 	if quiet {
 		run = min(run, in.t-x.AliveAt)
 	}
 	usual := m.PVRunMax
-	limit := max(max(2700, 300*in.dt), 6*usual)
+	limit = max(max(2700, 300*in.dt), 6*usual)
 	limit = min(limit, max(max(4*3600, 300*in.dt), 2*usual))
 	limit = max(limit, 5*w.timeScale()) // a slow loop at rest stands within one step for as long
 	if x.OPTravel > max(2, max(20*s.Noise.sigma(), 10*s.Noise.Least.Value())) && in.active {
@@ -117,8 +131,8 @@ func stepFrozen(w *Watch) {
 	if coarse {
 		limit *= 3
 	}
-	if quiet && in.hasOP && x.OPTravel < w.answered(q) {
-		return
+	if quiet && in.hasOP {
+		travel = w.answered(q)
 	}
 	if w.loop.Report == configs.Exception {
 		limit = max(6*3600, 3*usual)
@@ -128,13 +142,9 @@ func stepFrozen(w *Watch) {
 	}
 	if m.Changes == 0 {
 		// Never seen to move: only where OP was driven far by what PV says, for nothing.
-		if limit = max(limit, max(3600, 300*in.dt)); !in.active || x.OPTravel < frozenTravel {
-			return
-		}
+		limit, travel = max(limit, max(3600, 300*in.dt)), max(travel, frozenTravel)
 	}
-	if run > limit*w.strict {
-		x.Frozen = true
-	}
+	return run, limit * w.strict, travel
 }
 
 // answered is the travel of OP, %, that moves PV by a step of q, %, and by far: Kc K is

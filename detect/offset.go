@@ -44,22 +44,22 @@ func (o *offsetState) restart() { *o = offsetState{} }
 
 // offsetPast outlives the runs.
 type offsetPast struct {
-	Offset  stand      // PV misses the set point with OP free
-	Sat     stand      // and with OP at its limit
-	EF      float64    // e through a lag of half the loop's time scale, %
-	Longest float64    // s, longest run that was no finding; forgets a tenth with each new run of note
-	Since   float64    // s, begin of the first run on end in which the integral was missing
-	Missed  float32    // s, length of those runs together
-	Came    uint8      // findings from which PV came back by itself
-	Deaf    float64    // s, when the final element was last shown not to follow; 0 never
-	Vain    [2]float32 // s, when OP last travelled far, down and up, and PV made nothing of it; 0 never
-	Doubt   float32    // s, when OP last lay at its limit after such a travel; 0 never
+	Offset  stand     // PV misses the set point with OP free
+	Sat     stand     // and with OP at its limit
+	EF      float64   // e through a lag of half the loop's time scale, %
+	Longest float64   // s, longest run that was no finding; forgets a tenth with each new run of note
+	Since   float64   // s, begin of the first run on end in which the integral was missing
+	Missed  float32   // s, length of those runs together
+	Came    uint8     // findings from which PV came back by itself
+	Deaf    float64   // s, when the final element was last shown not to follow; 0 never
+	Vain    [2]moment // when OP last travelled far, down and up, and PV made nothing of it; 0 never
+	Doubt   moment    // when OP last lay at its limit after such a travel; 0 never
 	Ask     ask
 }
 
 // ask is a set-point step whose effect is awaited.
 type ask struct {
-	T     float32 // s; 0 none
+	T     moment  // 0 none
 	By    float32 // %
 	E, OP float32 // %, before it
 }
@@ -144,7 +144,7 @@ func stepOffset(w *Watch) {
 		past.EF += in.spStep // the step itself is no matter of the lag
 		if o.Sign != 0 && !w.pushesAtLimit() {
 			if o.LimT == 0 && w.vainWay() {
-				past.Doubt = float32(in.t)
+				past.Doubt = momentOf(in.t)
 			}
 			w.endOfRun(false)
 			o.restart() // a new set point is a new question
@@ -212,6 +212,18 @@ func (w *Watch) offsetWaitS() float64 {
 	rt, _ := w.resetS()
 	need := max(max(8*60, 100*w.in.dt), max(4*rt, 2.5*w.timeScale())) * w.strict
 	return max(need, 3*w.s.Off.PrevDur) // PV that comes and goes is a cycle, not an offset
+}
+
+// limitWaitS is how long, s, OP must lie at a limit that e pushes to. The evidence is plain
+// there: no need to wait for what the integral does. Slow loops may lie there for as long as
+// they take to recover, by plan or by an upset that passes, but not for a shift; and not
+// where PV answers nothing.
+func (w *Watch) limitWaitS() float64 {
+	longest := 8 * 3600.0
+	if w.s.Off.NotFollow || w.deaf() {
+		longest = 2 * 3600
+	}
+	return max(max(900, 100*w.in.dt), min(2.5*w.timeScale(), longest)) * w.strict
 }
 
 // ownLimitS is how long, s, OP must stand still for its place to be a limit of its own.
@@ -353,15 +365,7 @@ func (w *Watch) judgeOffset(thr float64) {
 			s.Sat.AtSince = in.t
 		}
 		w.limitTest(listed)
-		// At a limit the evidence is plain: no need to wait for what the integral does. Slow
-		// loops may lie there for as long as they take to recover, by plan or by an upset
-		// that passes, but not for a shift; and not where PV answers nothing.
-		longest := 8 * 3600.0
-		if o.NotFollow || w.deaf() {
-			longest = 2 * 3600
-		}
-		wait := max(max(900, 100*in.dt), min(2.5*w.timeScale(), longest)) * w.strict
-		if in.t-s.Sat.AtSince > wait {
+		if in.t-s.Sat.AtSince > w.limitWaitS() {
 			conf := 0.9
 			if !listed {
 				conf = 0.75

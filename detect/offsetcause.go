@@ -260,8 +260,8 @@ func (w *Watch) vainTravel(mean, recent float64) {
 	if way > 0 {
 		side, other = 1, 0
 	}
-	p.Vain[side] = float32(in.t)
-	if p.Vain[other] > 0 && in.t-float64(p.Vain[other]) < 3*deafFor {
+	p.Vain[side] = momentOf(in.t)
+	if p.Vain[other] > 0 && in.t-p.Vain[other].s() < 3*deafFor {
 		p.Deaf = in.t
 	}
 }
@@ -316,7 +316,7 @@ func (w *Watch) arrive() {
 	o.LimT, o.LimInt = in.t, float32(o.Int)
 	if w.vainWay() {
 		o.LimE = float32(o.Es * o.Sign)
-		w.s.OffPast.Doubt = float32(in.t)
+		w.s.OffPast.Doubt = momentOf(in.t)
 	}
 }
 
@@ -334,7 +334,7 @@ func (w *Watch) askSP() {
 	in, a := &w.in, &w.s.OffPast.Ask
 	*a = ask{}
 	if size := max(5*w.s.Noise.sigma(), 0.5); math.Abs(in.spStep) > size && in.hasOP && w.loop.Process != configs.Integrating {
-		*a = ask{T: float32(in.t), By: float32(in.spStep), E: float32(w.s.OffPast.EF), OP: float32(in.trim)}
+		*a = ask{T: momentOf(in.t), By: float32(in.spStep), E: float32(w.s.OffPast.EF), OP: float32(in.trim)}
 	}
 }
 
@@ -346,7 +346,7 @@ func (w *Watch) stepAsk() {
 		a.T = 0
 		return
 	}
-	if in.t-float64(a.T) < max(2*w.timeScale(), 20*in.dt) {
+	if in.t-a.T.s() < max(2*w.timeScale(), 20*in.dt) {
 		return
 	}
 	kc, ok := w.gainPct()
@@ -355,7 +355,7 @@ func (w *Watch) stepAsk() {
 	switch {
 	case !ok || kc == 0:
 	case math.Abs(left) < 0.4:
-		p.Deaf, p.Vain, p.Doubt = 0, [2]float32{}, 0
+		p.Deaf, p.Vain, p.Doubt = 0, [2]moment{}, 0
 	case left > 0.75 && left < 1.25 && went > 4: // of which an element that acts makes 4*0.2 of the step
 		p.Deaf = in.t
 	}
@@ -365,7 +365,7 @@ func (w *Watch) stepAsk() {
 // doubts: OP came to its limit by a travel that PV made nothing of.
 func (w *Watch) doubts() bool {
 	p := &w.s.OffPast
-	return p.Doubt > 0 && w.in.t-float64(p.Doubt) < deafFor
+	return p.Doubt > 0 && w.in.t-p.Doubt.s() < deafFor
 }
 
 // crossesSplit: OP has been on both sides of the change-over of a split range,

@@ -47,7 +47,7 @@ func (w *Watch) Picture() (p Picture) {
 	}
 	for i := int(min(s.Recov.Count, recRing)) - 1; i >= 0; i-- {
 		e := s.Recov.recent(i)
-		t0 := float64(e.T0)
+		t0 := e.T0.s()
 		p.Recoveries = append(p.Recoveries, Recovery{Begin: w.ms(t0), PeakAt: w.ms(t0 + float64(e.Rise)), End: w.ms(t0 + float64(e.Dur)),
 			Peak: math.Abs(w.pvUnits(float64(e.Peak))), Rest: recoveredAt, Cut: e.Cut})
 	}

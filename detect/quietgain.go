@@ -18,7 +18,7 @@ type quietGain struct {
 	PVLow, PVTop float32      // %, span of PV in it
 	OP           float32      // %, mean of OP in it
 	Low, High    float32      // %/%, gains of the run after its first block
-	Since        float32      // s, begin of its first block
+	Since        moment       // begin of its first block
 	R2, RunR2    float32      // means over the history and over the run
 	Run          int8         // blocks in it, negative below the usual
 	Bank         uint8
@@ -82,13 +82,13 @@ func (w *Watch) stepQuiet(k int, r *fit) {
 		if n >= quietLost {
 			*q = quietGain{}
 		}
-	case w.changeLasts(float64(q.Since), float64(r.T0), 0):
+	case w.changeLasts(q.Since.s(), r.T0.s(), 0):
 		// How far it moved is known better than where it stands: whole fits tell that.
 		was := q.Base.Value()
 		if kc, _, ok := w.usualTuning(math.Inf(1)); ok {
 			now, was = now*kc/was, kc
 		}
-		w.tellChange(-1, float64(q.Since), 1, [2]float64{was, now}, [2]float64{})
+		w.tellChange(-1, q.Since.s(), 1, [2]float64{was, now}, [2]float64{})
 	}
 }
 
@@ -105,5 +105,5 @@ func (w *Watch) quietMoved(now float64) bool {
 	forward := math.Log(now / base)
 	reverse := forward - math.Log(float64(q.RunR2/q.R2))
 	return forward*reverse > 0 && math.Abs(reverse) > math.Log(changeRatio)*w.strict && w.moved(ends[:], changeFits, &q.Dev) && !paced(now/base, s.Tune.OPMean/float64(q.OP)) &&
-		!w.contradicted(-1, float64(q.Since), 1, base, now)
+		!w.contradicted(-1, q.Since.s(), 1, base, now)
 }

@@ -23,8 +23,8 @@ const recoveredAt = 0.12
 
 // recovery is one finished event.
 type recovery struct {
-	At    float32 // s, end
-	T0    float32 // s, begin
+	At    moment  // its end
+	T0    moment  // its begin
 	Dur   float32 // s, from leaving the band to 12 % of the peak
 	Rise  float32 // s, to the peak
 	Peak  float32 // %
@@ -57,7 +57,7 @@ type recoveryState struct {
 	By                uint8      // what proved it
 	Now, Was          float32    // s, median now and usual
 	Own               [2]float32 // evidence that it is slow for its process, sums of logarithms: load, set point
-	OwnFrom           float32    // s, begin of the first recovery that counts in it
+	OwnFrom           moment     // begin of the first recovery that counts in it
 	Big               [2]float32 // %, peak of the larger events: load, set point; fades
 	Hold              uint8      // recoveries that teach no usual time, after the tuning was made slower
 }
@@ -143,7 +143,7 @@ func (w *Watch) endRecovery(thr float64) {
 	if w.smallEvent(thr) || r.Late || in.t-r.T0 < 3*w.updateS() && w.updateS() > 3*in.dt || r.Sat || !in.hasOP {
 		return
 	}
-	e := recovery{At: float32(in.t), T0: float32(r.T0), Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP}
+	e := recovery{At: momentOf(in.t), T0: momentOf(r.T0), Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP}
 	e.Prop = w.share()
 	e.Own = float32(w.forItsProcess(&e, thr))
 	w.keepRecovery(e)
@@ -205,7 +205,7 @@ func (w *Watch) cutRecovery() {
 	if u, _ := w.usualRecovery(r.SP); u == 0 || r.Sat || in.t-r.T0 < 3*u || w.smallEvent(thr) {
 		return
 	}
-	e := recovery{At: float32(in.t), T0: float32(r.T0), Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP, Cut: true}
+	e := recovery{At: momentOf(in.t), T0: momentOf(r.T0), Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP, Cut: true}
 	e.Prop = w.share()
 	w.keepRecovery(e)
 }
@@ -217,7 +217,7 @@ func (w *Watch) keepRecovery(e recovery) {
 	switch {
 	case u > 0:
 		e.Ratio = e.Dur / float32(u)
-	case w.madeSlower(float64(e.T0)):
+	case w.madeSlower(e.T0.s()):
 		// Too few recoveries before the tuning was made slower: a sound PI loop takes
 		// 2.3 reset times and some dead times (methods section 7).
 		t := float64(w.s.Change.ResetWas)
@@ -231,7 +231,7 @@ func (w *Watch) keepRecovery(e recovery) {
 	// OP brought PV back in the usual time: the element follows. Out of an episode the load
 	// may have done so, as it brought PV there.
 	if p := &w.s.OffPast; !e.Cut && e.Ratio > 0 && e.Ratio < 1.75 && !p.Sat.On && !p.Offset.On {
-		p.Deaf, p.Vain, p.Doubt = 0, [2]float32{}, 0
+		p.Deaf, p.Vain, p.Doubt = 0, [2]moment{}, 0
 	}
 	i := r.Count % recRing
 	if r.Count >= recRing {

@@ -5,26 +5,27 @@ import "math"
 // OP at the limit that e pushes towards, and what it does once e has changed sign.
 
 type saturationState struct {
-	LastWind  float64 // s
-	Over      float64 // s, longest overhang
-	Peak      float64 // %, overshoot after it
-	CrossAt   float64 // s, e changed sign with OP at the limit; 0 none
-	Side      float64
-	AtSince   float64 // s, since when OP is at the limit that e pushes towards
-	WindSince float64
-	WindUp    bool
-	WindUps   uint8 // occurrences of OP staying at its limit past the change of sign
-	Frames    uint8
-	IntPast   float32 // % s, integral of e since CrossAt
-	Due       float32 // %, by which a sound controller had left the limit by now
-	LowShare  float32 // share of time with OP at the low end of its range, mean of days, of stays that are over
-	LowFor    float32 // s, how long the running stay there has lasted
-	// Stretches at a limit that e pushes towards, each longer than a recovery.
-	From, IntE float64 // s, begin of the running one, 0 none; % s, integral of e over it
-	Stretches  uint8
-	LimitShare float32 // share of time with OP at either limit while the law acts, mean of days from 0 on
-	LastEnd    float64 // s
-	FirstFrom  float64 // s
+	LastWind   float64 // s
+	Over       float64 // s, longest overhang
+	Peak       float64 // %, overshoot after it
+	CrossAt    float64 // s, e changed sign with OP at the limit; 0 none
+	Side       float64
+	AtSince    float64 // s, since when OP is at the limit that e pushes towards
+	WindSince  float64
+	WindUp     bool
+	WindUps    uint8 // occurrences of OP staying at its limit past the change of sign
+	Frames     uint8
+	Stretches  uint8   // at a limit that e pushes towards, each longer than a recovery
+	IntPast    float32 // % s, integral of e since CrossAt
+	Due        float32 // %, by which a sound controller had left the limit by now
+	LowShare   float32 // share of time with OP at the low end of its range, mean of days, of stays that are over
+	LowFor     float32 // s, how long the running stay there has lasted
+	From, IntE float64 // s, begin of the running stretch, 0 none; % s, integral of e over it
+	LastEnd    float64 // s, end of the last stretch
+	FirstFrom  float64 // s, begin of the first that counts
+	// Share of time with OP at either limit while the law acts, mean of days from 0 on: a
+	// slot of a fast loop adds less than a float32 holds.
+	LimitShare float64
 }
 
 // shareS is over how long, s, shares of time are means.
@@ -33,7 +34,7 @@ const shareS = 3 * 86400.0
 // atLimit is the share of time that OP lies at a limit; where the watch is young, of what
 // was seen so far.
 func (w *Watch) atLimit() float64 {
-	return float64(w.s.Sat.LimitShare) / -math.Expm1(-max(w.in.t, 1)/shareS)
+	return w.s.Sat.LimitShare / -math.Expm1(-max(w.in.t, 1)/shareS)
 }
 
 // limitAlways is the share of time at a limit from which hardly anything of a loop is seen
@@ -43,6 +44,19 @@ const limitAlways = 0.9
 // usualLow is the share of time at the low end from which idling is usual: an hour a
 // day (common practice, no source).
 const usualLow = 0.04
+
+// visitsAsked is how many visits to a limit are a lack of room; windUpsAsked how many times OP
+// must stay there past the change of sign to be wound up, and windUpOnce for how many reset
+// times where it is once (common practice, no source).
+const (
+	visitsAsked  = 3
+	windUpsAsked = 3
+	windUpOnce   = 1.2
+)
+
+// overhangS is how long, s, OP must stay at its limit past the change of sign, with a reset
+// time, s, to count.
+func (w *Watch) overhangS(rt float64) float64 { return max(8*w.in.dt, 0.25*rt) }
 
 // dueLeast is how far, %, a sound controller must have left the limit by for one that
 // has not to be called wound up: well clear of what counts as at the limit.
@@ -72,7 +86,7 @@ func stepSaturation(w *Watch) {
 			z.LowShare, z.LowFor = min(z.LowShare, 1), 0
 		}
 	}
-	z.LimitShare += (float32(math.Abs(side)) - z.LimitShare) * float32(in.dt/shareS)
+	z.LimitShare += (math.Abs(side) - z.LimitShare) * in.dt / shareS
 	a := w.sign()
 	sigma := max(s.Noise.sigma(), 0.02)
 	w.stepStretch(side, sigma)
@@ -94,14 +108,14 @@ func stepSaturation(w *Watch) {
 		if side != z.Side {
 			over := in.t - z.CrossAt
 			rt, _ := w.resetS()
-			if z.Frames >= 5 && z.Due > dueLeast && over > max(8*in.dt, 0.25*rt) && rt > 0 && z.WindUps < 250 {
+			if z.Frames >= 5 && z.Due > dueLeast && over > w.overhangS(rt) && rt > 0 && z.WindUps < 250 {
 				if z.WindUps == 0 || in.t-z.LastWind > 7*86400 {
 					z.WindUps, z.WindSince, z.Over = 0, z.CrossAt, 0
 				}
 				z.WindUps++
 				z.LastWind = in.t
 				z.Over = max(z.Over, over)
-				if z.WindUps >= 3 || over > 1.2*rt {
+				if z.WindUps >= windUpsAsked || over > windUpOnce*rt {
 					z.WindUp = true
 				}
 			}
@@ -143,7 +157,7 @@ func (w *Watch) stepStretch(side, sigma float64) {
 			z.Stretches, z.FirstFrom = 0, z.From
 		}
 		z.Stretches, z.LastEnd = min(z.Stretches+1, 200), in.t
-		if z.Stretches >= 3 {
+		if z.Stretches >= visitsAsked {
 			w.sayLimit(z.FirstFrom, z.IntE/d, 0.75)
 		}
 	}
@@ -153,7 +167,7 @@ func (w *Watch) stepStretch(side, sigma float64) {
 // comesAndGoes: what is said of the limit rests on visits to it, not on one long stay.
 func (w *Watch) comesAndGoes() bool {
 	z, o := &w.s.Sat, &w.s.OffPast.Sat
-	return o.On && z.Stretches >= 3 && o.Since == z.FirstFrom
+	return o.On && z.Stretches >= visitsAsked && o.Since == z.FirstFrom
 }
 
 // sayLimit supports the claim that OP lies at its limit. What an episode was shown with
@@ -167,7 +181,7 @@ func (w *Watch) sayLimit(since, mean, conf float64) {
 	if w.deaf() {
 		cause, conf, p.Deaf = FinalElementNotFollowing, 0.85, w.in.t // until it has been calm for long
 	} else if w.doubts() {
-		cause, conf, p.Doubt = Undetermined, 0.6, float32(w.in.t)
+		cause, conf, p.Doubt = Undetermined, 0.6, momentOf(w.in.t)
 	} else if p.Sat.On && p.Sat.Cause == causeIndex(OutputLimit) {
 		conf = max(conf, float64(p.Sat.Conf))
 	}

@@ -24,7 +24,7 @@ func (w *Watch) judgeSlow() {
 	}
 	if !r.Slow && w.slowerThanListed() {
 		e := r.recent(0)
-		r.Slow, r.SlowSince, r.By, r.Now, r.Was = true, float64(e.T0), byList, e.Dur, 0
+		r.Slow, r.SlowSince, r.By, r.Now, r.Was = true, e.T0.s(), byList, e.Dur, 0
 		r.Cause, r.Conf = causeIndex(ResetTooLong), 0.75
 	}
 	by, proof := uint8(0), 0 // and the recoveries that prove it
@@ -45,14 +45,14 @@ func (w *Watch) slowForItself(n int) int {
 		ratios[i] = float64(r.recent(i).Ratio)
 	}
 	// A change to a slower law was seen, too: two recoveries do where they are very slow.
-	if n >= 2 && w.madeSlower(float64(r.recent(1).T0)) && min(ratios[0], ratios[1]) > 2.5*w.strict {
+	if n >= 2 && w.madeSlower(r.recent(1).T0.s()) && min(ratios[0], ratios[1]) > 2.5*w.strict {
 		return 2
 	}
 	if n < 3 {
 		return 0
 	}
 	m, lo := num.Median(ratios[:]), slices.Min(ratios[:])
-	if w.madeSlower(float64(r.recent(2).T0)) && m > 1.8*w.strict && lo > 1.3 {
+	if w.madeSlower(r.recent(2).T0.s()) && m > 1.8*w.strict && lo > 1.3 {
 		return 3
 	}
 	// What the loop list says is usual needs no learning.
@@ -94,8 +94,8 @@ const (
 func (w *Watch) slowByHistory(n int) bool {
 	r := &w.s.Recov
 	need, over := slowFewest, slowEach
-	k0, t0, okb := w.usualTuning(float64(r.recent(min(n, 5) - 1).T0))
-	kc, ti, ok := w.tuning(float64(r.recent(2).T0), 0)
+	k0, t0, okb := w.usualTuning(r.recent(min(n, 5) - 1).T0.s())
+	kc, ti, ok := w.tuning(r.recent(2).T0.s(), 0)
 	if ok && okb && ti > 0 && t0 > 0 && math.Abs(math.Log(math.Abs(kc)/k0)) < 0.35 && math.Abs(math.Log(ti/t0)) < 0.35 {
 		need, over = slowSure, 2.5
 	}
@@ -138,16 +138,16 @@ func (w *Watch) slowCause(by uint8, proof int) {
 		return
 	}
 	first := r.recent(proof - 1)
-	kc, ti, ok := w.tuning(float64(first.T0), 0)
-	since := float64(first.T0)
+	kc, ti, ok := w.tuning(first.T0.s(), 0)
+	since := first.T0.s()
 	if by == byProcess {
-		since = float64(r.OwnFrom)
+		since = r.OwnFrom.s()
 	}
 	if r.Slow {
 		since = r.SlowSince
 	}
 	kb, tb, okb := w.usualTuning(since - 2*float64(first.Dur))
-	if c := &w.s.Change; w.madeSlower(float64(first.T0)) {
+	if c := &w.s.Change; w.madeSlower(first.T0.s()) {
 		okb = true
 		if c.What&1 != 0 {
 			kb = float64(c.GainWas)

@@ -25,7 +25,8 @@ type spell struct {
 	WasRe    float32 // %, fundamental of the period before
 	WasIm    float32
 	WasMean  float32 // %
-	At, OfP  float32 // s, of the last verdict and the period it is about
+	At       moment  // of the last verdict
+	OfP      float32 // s, the period it is about
 	Periods  uint8   // whole ones with OP at rest
 	On, Gone uint8   // periods on end with the cycle, and without
 	WentOn   uint8   // spells in which it went on
@@ -119,7 +120,7 @@ func (p *spell) endPeriod(t float64, integrating bool) {
 		if p.OfP == 0 || math.Abs(math.Log(float64(p.P/p.OfP))) > 0.25 { // the verdicts before were on another cycle
 			p.WentOn, p.Died = 0, 0
 		}
-		p.At, p.OfP, p.Told = float32(t), p.P, true
+		p.At, p.OfP, p.Told = momentOf(t), p.P, true
 		if p.On > 0 {
 			p.WentOn = min(p.WentOn+1, 9)
 		} else {
@@ -135,7 +136,7 @@ func (p *spell) endPeriod(t float64, integrating bool) {
 // none where spells contradict each other.
 func (w *Watch) spellVerdict() (wentOn, died int) {
 	p, o := &w.s.Spell, &w.s.Osc
-	if p.OfP == 0 || !(o.P > 0) || math.Abs(math.Log(o.P/float64(p.OfP))) > 0.25 || w.in.t-float64(p.At) > max(86400, 100*o.P) ||
+	if p.OfP == 0 || !(o.P > 0) || math.Abs(math.Log(o.P/float64(p.OfP))) > 0.25 || w.in.t-p.At.s() > max(86400, 100*o.P) ||
 		p.WentOn > 0 && p.Died > 0 {
 		return 0, 0
 	}

@@ -91,16 +91,27 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 		}
 	}
 	// Irregular sticking leaves cycles out: the shape of OP makes up for it.
-	if q, ok := b.stat(level, 10); ok && s.Noise.known() && s.Track.On && int(s.Track.Bank) == level && s.Track.Looks >= 4 &&
-		q.regular > 1.6 && q.least > 0.2 && q.amp > max(3.4*sigma, 0.55) && slots > 20 &&
-		s.Motion.LawSeen && !w.propOnlySeen() && w.steadySP(7*period) && (known && q.amp > 1.6*usual || !known && b.certain(10, w.strict)) {
+	if q, ok := b.stat(level, slipHalves); ok && s.Noise.known() && s.Track.On && int(s.Track.Bank) == level && s.Track.Looks >= slipLooks &&
+		q.regular > slipAsked.regular && q.least > slipAsked.least && q.amp > slipAsked.size(sigma, 0) && slots > 20 &&
+		s.Motion.LawSeen && !w.propOnlySeen() && w.steadySP(7*period) && (known && q.amp > slipAsked.usual*usual || !known && b.certain(slipHalves, w.strict)) {
 		sh := w.shapes()
-		if si := w.stickIndex(sh); si > 0.66 && sh.h3OP < 0.25 && sh.stick > 0.38 {
+		if si := w.stickIndex(sh); si > slipShape && sh.h3OP < slipThird && sh.stick > slipJumps {
 			o.Sus = true
-			w.beginOsc(level, b, 10)
+			w.beginOsc(level, b, slipHalves)
 		}
 	}
 }
+
+// What is asked of sticking that leaves cycles out (common practice, no source).
+const (
+	slipHalves = 10   // half-cycles looked at
+	slipLooks  = 4    // at its shape
+	slipShape  = 0.66 // index of the shape, 0 a sine and 1 a triangle
+	slipThird  = 0.25 // third harmonic of OP, at most
+	slipJumps  = 0.38 // share of the travel of PV in the busiest fifth of the cycle
+)
+
+var slipAsked = stays{1.6, 0.2, 1.6, 3.4, 0.55}
 
 // A sequential test (Wald 1945) tells a plain cycle in few half-cycles. Lengths and
 // sizes of what merely wanders scatter by a third of their mean or more (Rayleigh's law

@@ -51,7 +51,7 @@ func anyState(rnd *rand.Rand, l *configs.Loop) *Watch {
 	s.Change = tuneChange{Seen: 86400 * 2, At: 86400 * 2, What: uint8(rnd.IntN(4)), GainWas: float32(v()), GainNow: float32(v()), ResetWas: float32(v()), ResetNow: float32(v())}
 	s.Tune.LimitAt = p()
 	for k := range s.Marks {
-		s.Marks[k] = [2]mark{{float32(2*86400 + 60*rnd.IntN(1000)), float32(math.Exp(4 * rnd.NormFloat64()))}, {float32(86400 + 600*rnd.IntN(100)), float32(-math.Exp(3 * rnd.NormFloat64()))}}
+		s.Marks[k] = [2]mark{{momentOf(float64(2*86400 + 60*rnd.IntN(1000))), float32(math.Exp(4 * rnd.NormFloat64()))}, {momentOf(float64(86400 + 600*rnd.IntN(100))), float32(-math.Exp(3 * rnd.NormFloat64()))}}
 		if k == markLimit || k == markGap {
 			s.Marks[k][1].Size *= -1
 		}
@@ -59,7 +59,7 @@ func anyState(rnd *rand.Rand, l *configs.Loop) *Watch {
 			s.Marks[k][0].Size, s.Marks[k][1].Size = float32(1+(1+rnd.IntN(7))*16+1+rnd.IntN(7)), 0
 		}
 	}
-	s.Spell.OfP, s.Spell.At = float32(s.Osc.P), float32(w.in.t)
+	s.Spell.OfP, s.Spell.At = float32(s.Osc.P), momentOf(w.in.t)
 	s.Spell.WentOn, s.Spell.Died = uint8(rnd.IntN(2)), uint8(rnd.IntN(2))
 	if rnd.IntN(2) == 0 { // the track holds a few samples, or none
 		s.Track.On, s.Track.N, s.Track.Looks = true, uint8(rnd.IntN(trackLen)), uint32(rnd.IntN(3))

@@ -23,7 +23,7 @@ type tuneChange struct {
 	What     uint8   // 1 gain, 2 reset, 3 both
 	Maybe    uint8   // suspected: What now, of bank MaybeOf since MaybeAt; 0 none
 	MaybeOf  uint8
-	MaybeAt  float32 // s
+	MaybeAt  moment
 	TagGain  float32 // last read from tags
 	TagReset float32
 }
@@ -76,12 +76,12 @@ func (w *Watch) tuneCheck(k int) {
 		return
 	}
 	if c.Maybe == 0 {
-		c.Maybe, c.MaybeOf, c.MaybeAt = what, uint8(k), float32(oldest)
+		c.Maybe, c.MaybeOf, c.MaybeAt = what, uint8(k), momentOf(oldest)
 	}
 	if int(c.MaybeOf) == k {
-		oldest = float64(c.MaybeAt)
+		oldest = c.MaybeAt.s()
 	}
-	if !w.changeLasts(oldest, float64(b.newest().T0), tn) {
+	if !w.changeLasts(oldest, b.newest().T0.s(), tn) {
 		return
 	}
 	w.tellChange(k, oldest, what, [2]float64{b.BaseK.Value(), kn}, [2]float64{b.BaseT.Value(), tn})
@@ -102,7 +102,7 @@ func (w *Watch) left(k, m int) (n leaving, what uint8) {
 		ks[i], ts[i] = math.Abs(float64(f.Kc)), float64(f.Ti)
 		dk[i], dt[i] = w.strays(k, f), math.Log(ts[i]/b.BaseT.Value())
 		pv += float64(f.PV) / float64(m)
-		n.Since, least = min(n.Since, float64(f.T0)), min(least, f.R2)
+		n.Since, least = min(n.Since, f.T0.s()), min(least, f.R2)
 	}
 	wasK, wasT := b.BaseK.Value(), b.BaseT.Value()
 	kn, tn := num.Median(ks[:m]), num.Median(ts[:m])
@@ -130,18 +130,27 @@ func (w *Watch) left(k, m int) (n leaving, what uint8) {
 // changeLasts: what is read since a time, s, is no passing thing. newest is the begin of
 // the newest block that says so, s, reset the newest reset time, s.
 func (w *Watch) changeLasts(since, newest, reset float64) bool {
-	// It must outlast one disturbance, whose length is guessed to be under half a day before
-	// some were seen.
-	lasts := 2 * w.anyRecovery()
-	if lasts == 0 {
-		lasts = changeShownS
-	}
+	lasts := w.changeOutlasts()
 	// A set point ramped inside the controller looks like another tuning: two
 	// set-point changes, or none, must lie in the span, or the newest block well behind it.
 	if m := &w.s.Motion; m.SPStep > since && m.SPPrevStep < since && newest < m.SPStep+2*lasts {
 		return false
 	}
-	return w.in.t-since >= max(600, min(3*reset, 4*3600), lasts)
+	return w.in.t-since >= w.changeLongS(reset)
+}
+
+// changeLongS is how long, s, a change to a reset time, s, must last to be told.
+func (w *Watch) changeLongS(reset float64) float64 {
+	return max(600, min(3*reset, 4*3600), w.changeOutlasts())
+}
+
+// changeOutlasts is what a change must outlast, s: one disturbance, whose length is guessed
+// to be under half a day before some were seen.
+func (w *Watch) changeOutlasts() float64 {
+	if t := w.anyRecovery(); t > 0 {
+		return 2 * t
+	}
+	return changeShownS
 }
 
 // tellChange notes a change that began at a time, s. From here on the new tuning is the
@@ -176,6 +185,13 @@ func (w *Watch) moved(d []float64, n int, dev *num.Quantile) bool {
 		}
 		lo, hi = min(lo, v), max(hi, v)
 	}
+	each, mean := w.movedAsked(n, dev)
+	least, most := min(math.Abs(lo), math.Abs(hi)), max(math.Abs(lo), math.Abs(hi))
+	return lo*hi > 0 && hi-lo < max(math.Log(changeSpread), (least+most)/4) && least > each && (least+most)/2 > mean
+}
+
+// movedAsked is how far off, ln, each of n newest values must lie and their mean.
+func (w *Watch) movedAsked(n int, dev *num.Quantile) (each, mean float64) {
 	strays := dev.Value()
 	if dev.N < changeOld {
 		strays = max(strays, changeGuess)
@@ -183,9 +199,7 @@ func (w *Watch) moved(d []float64, n int, dev *num.Quantile) bool {
 			strays = max(strays, w.s.Fits[k].DevK.Value())
 		}
 	}
-	least, most := min(math.Abs(lo), math.Abs(hi)), max(math.Abs(lo), math.Abs(hi))
-	return lo*hi > 0 && hi-lo < max(math.Log(changeSpread), (least+most)/4) && least > 1.2*strays &&
-		(least+most)/2 > max(math.Log(changeRatio), 1.8*changeFits/float64(min(n, changeFits))*strays)*w.strict
+	return 1.2 * strays, max(math.Log(changeRatio), 1.8*changeFits/float64(min(n, changeFits))*strays) * w.strict
 }
 
 // apart: two laws, gains in %/% and reset times in s, answer an error like that of the
@@ -219,7 +233,7 @@ func (w *Watch) contradicted(k int, since float64, what uint8, was, now float64)
 	for j := range w.s.Fits {
 		b := &w.s.Fits[j]
 		f := &b.Last
-		if j == k || b.BaseK.N < 4 || f.R2 < changeR2 || f.X < fitX || float64(f.T0) < since {
+		if j == k || b.BaseK.N < 4 || f.R2 < changeR2 || f.X < fitX || f.T0.s() < since {
 			continue
 		}
 		off, usual := w.strays(j, f), b.BaseK.Value()
@@ -244,7 +258,7 @@ func (w *Watch) borneOut(k int, since float64, what uint8, was, now float64) boo
 		if what == 2 {
 			v, dev = float64(f.Ti), b.DevT.Value()
 		}
-		if j != k && f.ok() && f.R2 > changeR2 && float64(f.At) > since && dev < math.Log(changeSpread) &&
+		if j != k && f.ok() && f.R2 > changeR2 && f.At.s() > since && dev < math.Log(changeSpread) &&
 			within(v, now, changeSpread) && math.Abs(math.Log(v/now)) < math.Abs(math.Log(v/was)) {
 			return true
 		}
@@ -278,7 +292,7 @@ func (w *Watch) readTuning(f *collector.Frame, t float64) {
 // lasts. Of what did not change Was and Now are 0.
 type tuningMove struct {
 	At       float64 // s, since when at the earliest it was read so
-	Onset    float32 // s, of the trouble
+	Onset    moment  // of the trouble
 	GainWas  float32
 	GainNow  float32
 	ResetWas float32 // s
@@ -318,7 +332,7 @@ func (w *Watch) tuningBefore(onset float64) tuningMove {
 	switch {
 	case told && c.At <= onset+w.vagueS():
 		return c.move()
-	case kept.Onset == float32(onset):
+	case kept.Onset == momentOf(onset):
 		return *kept
 	case told: // what is usual by now, was not before it
 		return tuningMove{}
@@ -340,12 +354,12 @@ func (w *Watch) keepMove(k int, onset float64) {
 	}
 	kept := &w.s.Moved
 	for i := range w.s.Open {
-		if o := &w.s.Open[i]; o.On && float32(o.Since) == kept.Onset && o.Since != onset && kept.words() != "" {
+		if o := &w.s.Open[i]; o.On && momentOf(o.Since) == kept.Onset && o.Since != onset && kept.words() != "" {
 			return
 		}
 	}
 	if m := w.tuningBefore(onset); m.words() != "" {
-		m.Onset = float32(onset)
+		m.Onset = momentOf(onset)
 		*kept = m
 	}
 }

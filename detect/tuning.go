@@ -63,8 +63,8 @@ type fit struct {
 	Ti float32 // s; negative or huge: no integral action seen
 	R2 float32
 	X  float32
-	At float32 // s
-	T0 float32 // s, begin of its block
+	At moment  // end of its block
+	T0 moment  // and begin
 	PV float32 // %, mean over the block
 }
 
@@ -84,7 +84,7 @@ type fitBank struct {
 	E, OP        [3]float32 // filter states: low pass, low pass again, high pass
 	S            [3]float64 // of Int e, which grows large
 	Sums         num.Sums
-	Start        float32 // s, of the block
+	Start        moment  // of the block
 	PVSum        float32 // %, of the block
 	Lag          float32 // s, of the last good block; 0 none
 	Warm         uint16  // samples since the restart, up to fitWarm
@@ -195,7 +195,7 @@ func pass(f *[3]float32, v float64) float64 {
 }
 
 func (b *fitBank) clear(t float64) {
-	b.Sums, b.PVSum, b.N, b.Start = num.Sums{}, 0, 0, float32(t)
+	b.Sums, b.PVSum, b.N, b.Start = num.Sums{}, 0, 0, momentOf(t)
 }
 
 func (w *Watch) keepFit(k int, r fit, lag float64, better bool) {
@@ -253,7 +253,7 @@ func (w *Watch) solveFit(k int) (r fit, lag float64, better bool) {
 	}
 	h := w.levelS(2 * k)
 	s := max(w.s.Noise.sigma(), 0.01)
-	r.At, r.T0, r.PV = float32(w.in.t), b.Start, b.PVSum/float32(b.N)
+	r.At, r.T0, r.PV = momentOf(w.in.t), b.Start, b.PVSum/float32(b.N)
 	r.X = float32(b.Sums.A11 / float64(b.N) / (s * s * w.s.Grid.DT * h * fitNoise))
 	// OP logged late, PV filtered in the controller: OP + L dOP/dt = law. What is
 	// faster than eight samples of the log is not seen well enough for it.

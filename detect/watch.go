@@ -20,7 +20,7 @@ import (
 
 // Engine is the version of the detection; memories of another engine are not
 // loaded whole.
-const Engine = 3
+const Engine = 4
 
 // Options of a watch.
 type Options struct {
@@ -104,7 +104,7 @@ func (w *Watch) Through() int64 { return w.s.Through }
 
 func (w *Watch) frame(f *collector.Frame) {
 	s := &w.s
-	if f.Time <= s.Through {
+	if f.Time <= s.Through && (s.Through != 0 || s.Grid.Begun) { // 0: nothing was seen yet, or the first frame is of 1970
 		return
 	}
 	s.Through = f.Time

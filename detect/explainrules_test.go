@@ -1,0 +1,159 @@
+package detect
+
+import (
+	"regexp"
+	"strconv"
+	"strings"
+	"testing"
+
+	"midwatch/configs"
+)
+
+var heldAsked = regexp.MustCompile(`(-?[0-9.]+)[^0-9(]*\(asked (under )?([0-9.]+)`)
+
+// passes reads a line of evidence as an engineer does: are all numbers held beyond those asked?
+// n is how many there are.
+func passes(t *testing.T, line string) (all bool, n int) {
+	t.Helper()
+	all = true
+	for _, m := range heldAsked.FindAllStringSubmatch(line, -1) {
+		held, err1 := strconv.ParseFloat(m[1], 64)
+		asked, err2 := strconv.ParseFloat(m[3], 64)
+		if err1 != nil || err2 != nil {
+			t.Fatalf("no numbers: %q", m[0])
+		}
+		if m[2] != "" {
+			held, asked = -held, -asked
+		}
+		all = all && held >= asked
+		n++
+	}
+	return all, n
+}
+
+func lineWith(lines []string, what string) string {
+	for _, x := range lines {
+		if strings.Contains(x, what) {
+			return x
+		}
+	}
+	return ""
+}
+
+// swingWatch is a watch of a minute's data, noise of 0.1 %, a usual size of 0.2 % at level 2,
+// with half-cycles of the lengths, samples, and peaks, %.
+func swingWatch(length func(i int) float64, peaks []float64) (*Watch, *cycleBank) {
+	w := New(configs.NewLoop("LIC-310"), 0, Options{})
+	w.s.Grid.DT, w.s.Grid.Begun = 60, true
+	w.s.Motion.first()
+	b := &w.s.Cycles[2]
+	for range 200 {
+		w.s.Noise.Long.Add(0.1, 0.3, 0.03, leastNoise)
+		b.Usual.Add(0.2, 0.75, 0.006, 1e-3)
+	}
+	for i, p := range peaks {
+		swingOf(b, 1, func(int) float64 { return length(i) }, p)
+	}
+	return w, b
+}
+
+func even(p float64, n int) (x []float64) {
+	for range n {
+		x = append(x, p)
+	}
+	return
+}
+
+// The evidence of a lasting swing passes what it shows to be asked where the rule holds, and
+// only there: it fails by its size, its beat, or sizes as scattered as those of noise.
+func TestExplainOfALastingSwing(t *testing.T) {
+	steady := func(int) float64 { return 8 }
+	for _, x := range []struct {
+		name   string
+		length func(int) float64
+		peaks  []float64
+		want   bool
+	}{
+		{"three times the usual", steady, even(0.7, 18), true},
+		{"the usual size", steady, even(0.3, 18), false},
+		{"no beat", func(i int) float64 { return 3 + float64(i*7%18) }, even(0.9, 18), false},
+		{"sizes of noise", steady, []float64{1, .1, .1, 3, 3, .1, 1, .1, .1, 3, 3, .1, 3, .1, .1, 4, 3, 1}, false},
+	} {
+		w, b := swingWatch(x.length, x.peaks)
+		for range keptRaise {
+			w.countKept(2, b, false)
+		}
+		if got := w.kept(2, b); got != x.want {
+			t.Fatalf("%s: the rule holds: %v", x.name, got)
+		}
+		line := lineWith(w.explainKept(2), "does it last")
+		if all, n := passes(t, line); all != x.want || n != 4 {
+			t.Errorf("%s: want %v by four numbers: %s", x.name, x.want, line)
+		}
+	}
+}
+
+// So does that of a violent one: it fails by one large step out of calm, by a peak that is no
+// larger, by its beat, or by its size.
+func TestExplainOfAViolentSwing(t *testing.T) {
+	steady := func(int) float64 { return 8 }
+	for _, x := range []struct {
+		name   string
+		length func(int) float64
+		peaks  []float64
+		want   bool
+	}{
+		{"1.6 times each", steady, []float64{1, 1.6, 2.6, 4.1, 6.6}, true},
+		{"out of calm", steady, []float64{1, 1.3, 7, 9, 12}, false},
+		{"one no larger", steady, []float64{1, 1.6, 2.6, 2.7, 6.6}, false},
+		{"no beat", func(i int) float64 { return []float64{8, 3, 24, 18, 5}[i] }, []float64{1, 1.6, 2.6, 4.1, 6.6}, false},
+		{"small", steady, []float64{0.3, 0.5, 0.8, 1.3, 2.1}, false},
+	} {
+		w, b := swingWatch(x.length, x.peaks)
+		if got := w.violent(2, b); got != x.want {
+			t.Fatalf("%s: the rule holds: %v", x.name, got)
+		}
+		line := lineWith(w.explainCycle(2), "is it violent")
+		if all, n := passes(t, line); all != x.want || n != 4 {
+			t.Errorf("%s: want %v by four numbers: %s", x.name, x.want, line)
+		}
+	}
+}
+
+// And that of a valve that slips now and then, which the shape of the cycle tells.
+func TestExplainOfASlippingValve(t *testing.T) {
+	for _, x := range []struct {
+		name              string
+		index, third, fif float64
+		peak              float64
+		looks             uint32
+		want              bool
+	}{
+		{"a triangle of OP, jumps of PV", 0.8, 0.12, 0.6, 1, 8, true},
+		{"a sine", 0.4, 0.02, 0.6, 1, 8, false},
+		{"a square", 0.8, 0.33, 0.6, 1, 8, false},
+		{"PV moves steadily", 0.8, 0.12, 0.25, 1, 8, false},
+		{"small", 0.8, 0.12, 0.6, 0.4, 8, false},
+		{"hardly looked at", 0.8, 0.12, 0.6, 1, 2, false},
+	} {
+		slip := func(i int) float64 { return []float64{8, 9, 14, 4}[i%4] } // lengths that no other rule takes for a cycle
+		w, _ := swingWatch(slip, even(x.peak, 12))
+		k := &w.s.Track
+		*k = track{On: true, Bank: 2, Looks: x.looks, PVSwing: 2}
+		wt := k.weight()
+		k.SinSum, k.TriSum, k.H3, k.Stick = x.index*wt, (1-x.index)*wt, x.third*wt, x.fif*wt
+		w.s.Motion.LawSeen = true
+		b := &w.s.Cycles[2]
+		st, _ := b.stat(2, 8)
+		w.in.t = 1e6
+		w.judgeSustained(2, b, st)
+		if got := w.s.Osc.Sus; got != x.want {
+			t.Fatalf("%s: the rule holds: %v", x.name, got)
+		}
+		*k = track{On: true, Bank: 2, Looks: x.looks, PVSwing: 2, SinSum: x.index * wt, TriSum: (1 - x.index) * wt, H3: x.third * wt, Stick: x.fif * wt}
+		line := lineWith(w.explainSlips(2, 0.1), "slip")
+		if all, n := passes(t, line); all != x.want || n != 7 {
+			t.Errorf("%s: want %v by seven numbers: %s", x.name, x.want, line)
+		}
+	}
+}

@@ -1,0 +1,46 @@
+package detect
+
+import "testing"
+
+// A controller that is sound leaves its limit when e changes sign; one that stays is wound
+// up, at once where it is for longer than its reset time (200 s) and a fifth, else where it is
+// time after time within a week.
+func TestWindUp(t *testing.T) {
+	const day = 86400
+	for _, x := range []struct {
+		name  string
+		over  float64 // s that OP stays past the change of sign
+		times int
+		rest  float64 // s between
+		want  Cause
+	}{
+		{"once, for long", 400, 1, 1800, WindUp},
+		{"once, not so long", 120, 1, 1800, NoCause},
+		{"three times", 120, 3, 1800, WindUp},
+		{"three times, more than a week between", 120, 3, 8 * day, NoCause},
+		{"three times, but it leaves at once", 20, 3, 1800, NoCause},
+	} {
+		w := offsetWatch(nil)
+		var fs []Finding
+		for range x.times {
+			fs = append(fs, feed(w, 1000, func(float64) (float64, float64) { return 4, 100 })...)
+			fs = append(fs, feed(w, x.over, func(float64) (float64, float64) { return -4, 100 })...)
+			fs = append(fs, feed(w, x.rest, func(float64) (float64, float64) { return 0, 60 })...)
+		}
+		if c := said(fs, OutputSaturation); c != x.want {
+			t.Errorf("%s: said %q, want %q", x.name, c, x.want)
+		}
+	}
+}
+
+// Two short stays at a limit, a day of rest between them, are no long one.
+func TestShortStaysDoNotAddUp(t *testing.T) {
+	w := offsetWatch(nil)
+	stay := func() []Finding { return feed(w, 800, func(float64) (float64, float64) { return 4, 100 }) }
+	fs := stay()
+	fs = append(fs, feed(w, 20*3600, func(float64) (float64, float64) { return 0, 60 })...)
+	fs = append(fs, stay()...)
+	if c := said(fs, OutputSaturation); c != NoCause {
+		t.Errorf("said %q", c)
+	}
+}

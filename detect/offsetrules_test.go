@@ -1,0 +1,234 @@
+package detect
+
+import (
+	"math"
+	"testing"
+
+	"midwatch/collector"
+	"midwatch/configs"
+)
+
+// A run of an error by hand: frames of 10 s, of a loop whose gain of 1 %/% and reset time of
+// 200 s were seen for long.
+const (
+	runDT = 10.0
+	runTi = 200.0
+)
+
+// offsetWatch is such a watch, after six hours at rest; SP is 50 %.
+func offsetWatch(change func(l *configs.Loop)) *Watch {
+	l := configs.NewLoop("FIC-341")
+	l.PVRangeGiven, l.Action, l.Process, l.SampleS = true, configs.Reverse, configs.SelfRegulating, runDT
+	if change != nil {
+		change(l)
+	}
+	w := New(l, 0, Options{})
+	feed(w, 6*3600, func(t float64) (e, op float64) { return 0, 50 + 0.05*math.Sin(t/40) })
+	b := &w.s.Fits[1]
+	b.BaseK.V, b.BaseK.N, b.BaseT.V, b.BaseT.N = 1, 50, runTi, 50
+	b.DevK.V, b.DevK.N, b.DevT.V, b.DevT.N = 0.02, 50, 0.02, 50
+	w.usual.known = false
+	return w
+}
+
+// feed gives frames for so many seconds; law has the seconds since their begin. PV has a
+// dither of 0.1 %.
+func feed(w *Watch, seconds float64, law func(t float64) (e, op float64)) (fs []Finding) {
+	return feedAt(w, seconds, func(t float64, f *collector.Frame) {
+		e, op := law(t)
+		f.PV, f.OP = float32(50-e), float32(op)
+	})
+}
+
+func feedAt(w *Watch, seconds float64, frame func(t float64, f *collector.Frame)) (fs []Finding) {
+	const begin = 1767225600000 // 2026-01-01
+	from := max(w.s.Through, begin)
+	for i := 1; i <= int(seconds/runDT); i++ {
+		f := collector.Frame{Time: from + int64(i)*int64(runDT*1000), SP: 50, Mode: collector.Auto, Feedforward: collector.NaN32, Position: collector.NaN32}
+		frame(float64(i)*runDT, &f)
+		f.PV += float32(0.1 * math.Sin(float64(i)*2.399))
+		w.Step(&f, func(x *Finding) { fs = append(fs, *x) })
+	}
+	return
+}
+
+// said is the causes that findings of a kind name, in their order; Undetermined where none is
+// named, NoCause where nothing is said.
+func said(fs []Finding, k Kind) (c Cause) {
+	for _, x := range fs {
+		if x.Kind != k || x.Event == Cleared || x.Cause == c {
+			continue
+		}
+		switch {
+		case c == NoCause || c == Undetermined:
+			c = x.Cause
+		case x.Cause != Undetermined:
+			c += " " + x.Cause
+		}
+	}
+	return c
+}
+
+// wander is an error of 5 % that a load moves about, and its integral, % s.
+func wander(t float64) (e, integral float64) {
+	const wave = 1700 / (2 * math.Pi)
+	return 5 + math.Sin(t/wave), 5*t + wave*(1-math.Cos(t/wave))
+}
+
+// wandering is what a controller of that gain and reset time makes of it.
+func wandering(kc, ti float64) func(t float64) (e, op float64) {
+	return func(t float64) (float64, float64) {
+		e, i := wander(t)
+		return e, 30 + kc*e + kc/ti*i
+	}
+}
+
+// An error that stays, and what OP makes of it: OP = c + Kc e + Kc/Ti Int e names the cause.
+func TestCauseOfAnOffset(t *testing.T) {
+	outrun := func(t float64) (float64, float64) { return 1.5, 30 + 1.5*t/runTi } // OP goes and e stays
+	for _, x := range []struct {
+		name  string
+		list  func(l *configs.Loop)
+		law   func(t float64) (e, op float64)
+		cause Cause
+	}{
+		{"the gain alone acts", nil, wandering(1, 1e12), IntegralMissing},
+		{"the reset is fifty times too long", nil, wandering(1, 50*runTi), ResetTooLong},
+		{"gain and integral are a fiftieth", nil, wandering(0.02, 0.8*runTi), GainTooLow},
+		{"OP answers nothing", nil, func(t float64) (float64, float64) { e, _ := wander(t); return e, 55 }, Undetermined},
+		{"it is worked off", nil, func(t float64) (float64, float64) { e := 5 * math.Exp(-t/1200); return e, 50 + e }, NoCause},
+		{"a load that grows as fast as OP goes", nil, outrun, Undetermined},
+		{"over the change-over of a split range", func(l *configs.Loop) { l.OPSplit = 65 }, outrun, NoCause},
+		{"more than the loop list allows", func(l *configs.Loop) { l.OffsetOK = 3 }, wandering(1, 1e12), IntegralMissing},
+		{"no more than the loop list allows", func(l *configs.Loop) { l.OffsetOK = 8 }, wandering(1, 1e12), NoCause},
+		{"P-only by design", func(l *configs.Loop) { l.PropOnly = true }, wandering(1, 1e12), NoCause},
+	} {
+		w := offsetWatch(x.list)
+		w.s.Motion.OPMin, w.s.Motion.OPMax = 5, 95
+		if c := said(feed(w, 7000, x.law), SustainedOffset); c != x.cause {
+			t.Errorf("%s: said %q, want %q", x.name, c, x.cause)
+		}
+	}
+}
+
+// OP that stands at the farthest it ever went, with e pushing on, is at a limit that nobody
+// listed; inside of that it is not, and where e pushes back neither.
+func TestLimitThatNobodyListed(t *testing.T) {
+	for _, x := range []struct {
+		name     string
+		farthest float32
+		e        float64
+		want     Cause
+	}{
+		{"at the farthest", 55, 5, OutputLimit},
+		{"inside of it", 95, 5, NoCause},
+		{"pushed back", 55, -5, NoCause},
+	} {
+		w := offsetWatch(nil)
+		w.s.Motion.OPMin, w.s.Motion.OPMax = 5, x.farthest
+		if c := said(feed(w, 7000, func(float64) (float64, float64) { return x.e, 55 }), OutputSaturation); c != x.want {
+			t.Errorf("%s: said %q, want %q", x.name, c, x.want)
+		}
+	}
+}
+
+// The position of the final element, far from OP for long, is the cause of an offset by
+// itself.
+func TestElementAstrayExplainsAnOffset(t *testing.T) {
+	for _, x := range []struct {
+		off  float64 // %, of the position from OP
+		want Cause
+	}{{0.5, IntegralMissing}, {20, FinalElementNotFollowing}} {
+		w := offsetWatch(nil)
+		w.s.Motion.PosN, w.s.Motion.Astray, w.s.Motion.AstrayUsual = 1000, 0.5, 0.5
+		law := wandering(1, 1e12)
+		fs := feedAt(w, 5400, func(t float64, f *collector.Frame) {
+			e, op := law(t)
+			f.PV, f.OP, f.Position = float32(50-e), float32(op), float32(op-x.off)
+		})
+		if c := said(fs, SustainedOffset); c != x.want {
+			t.Errorf("%g %% astray: said %q, want %q", x.off, c, x.want)
+		}
+	}
+}
+
+// An element that does not follow is shown by OP that goes far up and far down again with e
+// as large as before, both within days. One way may be a load that grows; and where e falls
+// with OP the element acts.
+func TestTravelUpAndDownInVain(t *testing.T) {
+	run := func(w *Watch, e, from, falls float64) {
+		feed(w, 6000, func(t float64) (float64, float64) { return e - falls*e*t/6000, from + e*t/runTi })
+	}
+	for _, x := range []struct {
+		name  string
+		back  bool
+		rest  float64 // days between
+		falls float64 // share by which e falls on the way
+		want  bool
+	}{
+		{"up", false, 0, 0, false},
+		{"up and down", true, 0, 0, true},
+		{"down four days later", true, 4, 0, false},
+		{"e falls on the way", true, 0, 0.5, false},
+	} {
+		w := offsetWatch(nil)
+		run(w, 1.5, 30, x.falls)
+		feed(w, x.rest*86400, func(t float64) (float64, float64) { return 0, 75 + 0.05*math.Sin(t/40) })
+		if x.back {
+			run(w, -1.5, 75, x.falls)
+		}
+		if w.deaf() != x.want {
+			t.Errorf("%s: the element is held to be deaf: %v", x.name, w.deaf())
+		}
+		feed(w, 1.1*86400, func(t float64) (float64, float64) { return 0, 50 + 0.05*math.Sin(t/40) })
+		if w.deaf() {
+			t.Errorf("%s: a day later, when somebody can have seen to it, it still is", x.name)
+		}
+	}
+}
+
+// saidAfter is when, s, a kind is raised first; 0 never.
+func saidAfter(fs []Finding, k Kind, from int64) float64 {
+	for _, x := range fs {
+		if x.Kind == k && x.Event == Raised {
+			return float64(x.At-from) / 1000
+		}
+	}
+	return 0
+}
+
+// Where PV came back by itself from what was said, the integral does work: the next time it
+// must stay away three times as long.
+func TestOffsetThatCameBack(t *testing.T) {
+	w := offsetWatch(nil)
+	var after [2]float64
+	for i := range after {
+		from := w.s.Through
+		after[i] = saidAfter(feed(w, 9000, wandering(1, 1e12)), SustainedOffset, from)
+		if fs := feed(w, 6*3600, func(t float64) (float64, float64) { return 0, 35 + 0.05*math.Sin(t/40) }); after[i] > 0 && (len(fs) == 0 || fs[0].Event != Cleared) {
+			t.Fatal("PV is back and the finding stands")
+		}
+	}
+	if r := after[1] / after[0]; !(r > 2.8 && r < 3.2) {
+		t.Errorf("said after %.0f s, and the next time after %.0f s", after[0], after[1])
+	}
+}
+
+// With OP at its limit a step of the set point that leaves e pushing on is the same question
+// as before; off it each step begins anew.
+func TestSetPointStepsAtALimit(t *testing.T) {
+	steps := func(op float64) func(float64, *collector.Frame) {
+		return func(t float64, f *collector.Frame) {
+			f.SP = float32(50 + 0.5*math.Floor(t/900))
+			f.PV, f.OP = f.SP-6, float32(op)
+		}
+	}
+	if c := said(feedAt(offsetWatch(nil), 7000, steps(100)), OutputSaturation); c != OutputLimit {
+		t.Errorf("at the limit: said %q", c)
+	}
+	w := offsetWatch(nil)
+	w.s.Motion.OPMax = 95
+	if fs := feedAt(w, 7000, steps(60)); len(fs) > 0 {
+		t.Errorf("off the limit: said %s", fs[0].Kind)
+	}
+}

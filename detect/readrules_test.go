@@ -1,0 +1,183 @@
+package detect
+
+import (
+	"math"
+	"testing"
+
+	"midwatch/configs"
+)
+
+// A change that few blocks of one scale tell counts where another scale, read steadily, has
+// read it since then; what it reads must be nearer to now than to what was.
+func TestBorneOutByAnotherScale(t *testing.T) {
+	for _, x := range []struct {
+		name     string
+		bank     int
+		was, now float64 // gain at the scale in question, or reset time
+		reads    float64 // at the other
+		at       float64 // s; the change is of 4000
+		r2, x    float32
+		strays   float32 // ln, usual deviation there
+		want     bool
+	}{
+		{"it reads the same", 2, 1, 2, 1.9, 5000, 0.99, 1000, 0.02, true},
+		{"it reads what was", 2, 1, 2, 1, 5000, 0.99, 1000, 0.02, false},
+		{"between, nearer to what was", 2, 1.3, 1.7, 1.4, 5000, 0.99, 1000, 0.02, false},
+		{"between, nearer to now", 2, 1.3, 1.7, 1.6, 5000, 0.99, 1000, 0.02, true},
+		{"before the change", 2, 1, 2, 1.9, 3000, 0.99, 1000, 0.02, false},
+		{"the law explains it badly", 2, 1, 2, 1.9, 5000, 0.93, 1000, 0.02, false},
+		{"hardly excited", 2, 1, 2, 1.9, 5000, 0.99, 10, 0.02, false},
+		{"it strays by itself", 2, 1, 2, 1.9, 5000, 0.99, 1000, 0.5, false},
+		{"the same scale", 0, 1, 2, 1.9, 5000, 0.99, 1000, 0.02, false},
+	} {
+		for what := uint8(1); what <= 2; what++ {
+			w := New(configs.NewLoop("PIC-342"), 0, Options{})
+			b := &w.s.Fits[x.bank]
+			b.Last = fit{Kc: -77, Ti: 77e3, R2: x.r2, X: x.x, At: momentOf(x.at)}
+			b.DevK.V, b.DevT.V = 9, 9
+			if what == 1 {
+				b.Last.Kc, b.DevK.V = float32(-x.reads), x.strays // of direct action
+			} else {
+				b.Last.Ti, b.DevT.V = float32(x.reads), x.strays
+			}
+			if got := w.borneOut(0, 4000, what, x.was, x.now); got != x.want {
+				t.Errorf("%s, %d: %v", x.name, what, got)
+			}
+		}
+	}
+}
+
+// The reset time to reckon with is the one seen; where the loop list has a longer one, within
+// reason, that: a filter or a late OP makes the reading too short, never too long.
+func TestResetTimeToReckonWith(t *testing.T) {
+	for _, x := range []struct {
+		name               string
+		list, usual, wants float64
+		seen               bool
+	}{
+		{"seen", 0, 200, 200, true},
+		{"listed and longer", 1000, 200, 1000, true},
+		{"listed and shorter", 100, 200, 200, true},
+		{"listed beyond reason", 5000, 200, 200, true},
+		{"listed alone", 300, 0, 300, false},
+		{"neither", 0, 0, 0, false},
+	} {
+		l := configs.NewLoop("FIC-343")
+		l.IdealReset = x.list
+		w := New(l, 0, Options{})
+		if x.usual > 0 {
+			b := &w.s.Fits[1]
+			b.BaseK.V, b.BaseK.N, b.BaseT.V, b.BaseT.N = 1, 50, float32(x.usual), 50
+		}
+		if ti, seen := w.resetS(); math.Abs(ti-x.wants) > 1e-3 || seen != x.seen {
+			t.Errorf("%s: %g s, seen %v", x.name, ti, seen)
+		}
+	}
+}
+
+// The rise to the peak of a recovery is seen from the threshold on only. A straight one of
+// 100 s that the threshold halves is taken for longer than the 50 s seen, and one that it
+// hardly touches for what it is. With a fall of 850 s the loop is as slow as a sound one.
+func TestRiseBelowTheThreshold(t *testing.T) {
+	for _, x := range []struct{ thr, least, most float64 }{
+		{1, 0.9, 1.5}, // 1.96 as seen
+		{0.1, 0.95, 1.05},
+	} {
+		l := configs.NewLoop("TIC-344")
+		l.Process = configs.SelfRegulating
+		w := New(l, 0, Options{})
+		w.in = input{dt: 1, op: 55, hasOP: true}
+		const peak, rise, fall = 2.0, 100, 850
+		r := &w.s.Recov
+		r.OP0, r.Peak, r.Sign, r.IntPeak = 50, peak, 1, peak*rise/2
+		r.IntE = r.IntPeak + 0.415*peak*fall // an exponential from the peak to 12 % of it
+		seen := rise * (1 - x.thr/peak)
+		e := recovery{Rise: float32(seen), Dur: float32(seen + fall), Peak: peak, Prop: 0.5}
+		if got := w.forItsProcess(&e, x.thr); !(got > x.least && got < x.most) {
+			t.Errorf("threshold %g %%: %.2f times what a sound loop takes, want %g to %g", x.thr, got, x.least, x.most)
+		}
+	}
+}
+
+// slowWatch has six recoveries of a load, newest last, as ratios to the usual.
+func slowWatch(prop float32, ratios ...float32) *Watch {
+	w := New(configs.NewLoop("TIC-345"), 0, Options{})
+	r := &w.s.Recov
+	for i := range recRing {
+		r.Ring[i] = recovery{T0: momentOf(float64(i) * 5000), Dur: 500, Ratio: 1, Prop: prop}
+	}
+	for i, v := range ratios {
+		r.Ring[recRing-len(ratios)+i].Ratio = v
+	}
+	r.Count = recRing
+	return w
+}
+
+// A sluggish loop is over with two recoveries on end of the usual length, seen to their end.
+func TestSluggishIsOver(t *testing.T) {
+	for _, x := range []struct {
+		name   string
+		ratios [2]float32
+		cut    bool
+		over   bool
+	}{
+		{"both as usual", [2]float32{1.1, 1.2}, false, true},
+		{"the newest slow", [2]float32{1.1, 2.5}, false, false},
+		{"the one before slow", [2]float32{2.5, 1.1}, false, false},
+		{"the newest not seen to its end", [2]float32{1.1, 1.2}, true, false},
+	} {
+		w := slowWatch(0.7, x.ratios[:]...)
+		r := &w.s.Recov
+		r.Slow, r.By = true, byHistory
+		r.Ring[recRing-1].Cut = x.cut
+		if w.slowCause(0, 0); r.Slow == x.over {
+			t.Errorf("%s: sluggish still %v", x.name, r.Slow)
+		}
+	}
+}
+
+// Where the tuning cannot be read the share of proportional action in the recoveries names
+// what is wrong: high, the reset is too long; low, the gain.
+func TestShareNamesTheCauseOfSluggishness(t *testing.T) {
+	for _, x := range []struct {
+		prop float32
+		by   uint8
+		want Cause
+	}{
+		{0.7, byHistory, ResetTooLong},
+		{0.3, byHistory, Undetermined},
+		{0.3, byProcess, ResetTooLong},
+		{0.05, byHistory, GainTooLow},
+		{float32(math.NaN()), byHistory, Undetermined},
+	} {
+		w := slowWatch(x.prop, 5, 5, 5)
+		w.slowCause(x.by, 3)
+		if r := &w.s.Recov; !r.Slow || causes[r.Cause] != x.want {
+			t.Errorf("a share of %g: sluggish %v by %q, want %q", x.prop, r.Slow, causes[r.Cause], x.want)
+		}
+	}
+}
+
+// Each of four recoveries is to take three times the usual and their median four times; one
+// that is not so takes the proof away, and so does a yardstick that rests on little.
+func TestSlowAgainstItsOwnHistory(t *testing.T) {
+	for _, x := range []struct {
+		name   string
+		ratios []float32
+		known  uint32 // recoveries behind the usual
+		want   int
+	}{
+		{"four slow ones", []float32{4.2, 5, 4.5, 6}, 20, 3},
+		{"one of them as usual", []float32{4.2, 5, 1.2, 6}, 20, 0},
+		{"slow by less than four in the median", []float32{3.2, 3.4, 3.1, 3.3}, 20, 0},
+		{"three slow ones", []float32{5, 4.5, 6}, 20, 0},
+		{"the usual hardly known", []float32{4.2, 5, 4.5, 6}, 5, 0},
+	} {
+		w := slowWatch(0.7, x.ratios...)
+		u := &w.s.Recov.Usual[0]
+		u.V, u.N = 100, x.known
+		if got := w.slowForItself(recRing); got != x.want {
+			t.Errorf("%s: proven by %d, want %d", x.name, got, x.want)
+		}
+	}
+}
