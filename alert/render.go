@@ -185,7 +185,7 @@ func timeLeft(at int64, limit string, seen int64, zone *time.Location) string {
 	if at <= seen {
 		return sentence(limit) + " is reached."
 	}
-	return fmt.Sprintf("about %s until %s (%s), if it goes on like this", duration(time.Duration(at-seen)*time.Millisecond), limit, short(at, zone))
+	return fmt.Sprintf("about %s until %s (%s), if it goes on like this", detect.Duration(float64(at-seen)/1000), limit, short(at, zone))
 }
 
 func (d *Desk) subject(u Urgency, old bool, s string) string {
@@ -301,7 +301,7 @@ func (d *Desk) itemLines(items []Item, n int) []string {
 				s += "; " + limit + " expected " + short(at, d.set.Zone)
 			}
 			if w := causeWords[it.Finding.Cause]; w != "" {
-				s += "; perhaps " + w
+				s += "; " + detect.Likely(it.Finding.Confidence) + " " + w
 			}
 		}
 		out = append(out, s)

@@ -144,7 +144,7 @@ func measureLines(f *detect.Finding, unit string) []string {
 		if math.IsNaN(m.Value) || math.IsInf(m.Value, 0) || strings.HasPrefix(m.Name, "time_to_") {
 			continue
 		}
-		name, value := m.Name, string(detect.AppendSig(nil, m.Value))
+		name, value := m.Name, few(m.Value)
 		for _, u := range []struct{ suffix, unit string }{{"_pct", " %"}, {"_deg", "°"}, {"_pv", " " + clean(unit)}, {"_per_cycle", " per cycle"}} {
 			if n, ok := strings.CutSuffix(name, u.suffix); ok {
 				name, value = n, strings.TrimSpace(value+u.unit)
@@ -152,12 +152,14 @@ func measureLines(f *detect.Finding, unit string) []string {
 			}
 		}
 		if n, ok := strings.CutSuffix(name, "_s"); ok {
-			name, value = n, duration(time.Duration(m.Value*float64(time.Second)))
+			name, value = n, detect.Duration(m.Value) // as in the text
 		}
 		name = strings.ReplaceAll(name, "_", " ")
 		switch m.Name {
 		case "amplitude_pct", "offset_pct":
 			value += " of range"
+		case "gain", "gain_before":
+			value += " %/%"
 		case "pi_lag_deg":
 			name = "lag of the controller"
 		case "direct_lag_deg":
@@ -166,6 +168,12 @@ func measureLines(f *detect.Finding, unit string) []string {
 		out = append(out, name+" "+value)
 	}
 	return out
+}
+
+// few is a number of three digits, for people.
+func few(v float64) string {
+	r, _ := strconv.ParseFloat(strconv.FormatFloat(v, 'g', 3, 64), 64)
+	return strconv.FormatFloat(r, 'f', -1, 64)
 }
 
 // duration in the words of a person: two units at most.

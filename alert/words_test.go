@@ -187,8 +187,8 @@ func TestMessageHelpsTheWoken(t *testing.T) {
 	m := r.mail.take()[0]
 	flat := strings.Join(strings.Fields(m.Text), " ")
 	for _, want := range []string{"swings with a period", "chlorine residual (north)", "Why now: OP limit expected before the next working hour",
-		"Mon 5 Jan 2026 21:41 +00:00 (estimated onset)", "period 6 min", "growth 1.23 per cycle", "amplitude 1.9 % of range", "amplitude 0.038 mg/l", "lag of the controller 66°",
-		"about 90 min until OP limit (6 Jan 00:30 +00:00)", "Likely cause: the reset time is too short. Also possible: the gain is too high.",
+		"Mon 5 Jan 2026 21:41 +00:00 (estimated onset)", "period 6.2 min", "growth 1.23 per cycle", "amplitude 1.9 % of range", "amplitude 0.038 mg/l", "lag of the controller 66°",
+		"about 1.5 h until OP limit (6 Jan 00:30 +00:00)", "Likely cause: the reset time is too short. Also possible: the gain is too high.",
 		"First check:", "final element and the measurement first", "https://10.1.0.9/midwatch/loops/AIC-204"} {
 		if !strings.Contains(flat, want) {
 			t.Errorf("the text lacks %q", want)
@@ -197,7 +197,7 @@ func TestMessageHelpsTheWoken(t *testing.T) {
 	if want := "[Kestrel Fen] NOW AIC-204: swing that grows"; m.Subject != want {
 		t.Errorf("subject %q, want %q", m.Subject, want)
 	}
-	if !strings.Contains(m.TextShort, "AIC-204") || !strings.Contains(m.TextShort, "90 min until OP limit") {
+	if !strings.Contains(m.TextShort, "AIC-204") || !strings.Contains(m.TextShort, "1.5 h until OP limit") {
 		t.Errorf("short text %q", m.TextShort)
 	}
 	if m.Picture == nil || m.Picture.Onset != x.Since || m.Picture.From >= x.Since || m.Picture.To <= x.At {

@@ -113,7 +113,8 @@ func TestWhatChangedBefore(t *testing.T) {
 }
 
 // Where a whole day was seen and nothing changed, that is said; a change two days
-// before is none.
+// before is none. Of the tuning nothing is vouched for before a reading follows the onset:
+// here it was spoilt.
 func TestNothingChangedBefore(t *testing.T) {
 	g := changedRig(42)
 	g.sp = 54
@@ -122,13 +123,27 @@ func TestNothingChangedBefore(t *testing.T) {
 	g.run(3600)
 	l := loopOf("AIC-204", g)
 	f, ok := first(replay(l, g.out), detect.GrowingOscillation)
-	if !ok || len(f.Changed) != 0 || !strings.Contains(f.Text, "No change of mode, SP") {
+	if !ok || len(f.Changed) != 0 || !strings.Contains(f.Text, "No change of mode or SP was seen") {
 		t.Errorf("found %v, changes %+v: %s", ok, f.Changed, f.Text)
 	}
 	// Of a loop seen for less than a day nothing is claimed.
 	f, ok = first(replay(l, g.out[len(g.out)-4*720:]), detect.GrowingOscillation)
 	if ok && strings.Contains(f.Text, "No change") {
 		t.Errorf("an unseen day is vouched for: %s", f.Text)
+	}
+}
+
+// A reading that follows the onset and is that of before does vouch for the tuning.
+func TestTuningVouchedFor(t *testing.T) {
+	g := changedRig(46)
+	g.each = nil
+	g.run(3600)
+	g.each = func(t float64) { g.load = 10 * math.Sin(2*math.Pi*t/500) }
+	g.run(8 * 3600)
+	l := loopOf("AIC-204", g)
+	f, ok := last(replay(l, g.out), detect.SustainedOscillation)
+	if !ok || !strings.Contains(f.Text, "No change of mode, SP or tuning was seen") {
+		t.Errorf("found %v: %s", ok, f.Text)
 	}
 }
 

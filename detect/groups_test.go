@@ -1,6 +1,7 @@
 package detect_test
 
 import (
+	"strings"
 	"testing"
 
 	"midwatch/collector"
@@ -115,5 +116,23 @@ func TestGroupsGrowTogether(t *testing.T) {
 	}
 	if len(open) != 1 || open["FIC-1"] != 4 {
 		t.Errorf("open %v:%s", open, brief(fs))
+	}
+}
+
+// A group says since when, how wide it swings and what to do first; the short text names
+// the root before the loops, which may not all fit.
+func TestGroupSaysWhatTheWokenNeeds(t *testing.T) {
+	fs := groupSite([]string{"FIC-1", "TIC-2"}, 6, func(_, loop int, e *detect.Evidence) {
+		e.Amp = 2 + float64(loop)
+		e.Growing, e.Cause = true, detect.ResetTooShort
+	})
+	f := newest(fs)
+	for _, want := range []string{"For ", "2 loops have been cycling together every 60 s: FIC-1, TIC-2; widest in TIC-2, ±3", "Candidate root: TIC-2", "First check its measurement and final element, then its tuning"} {
+		if !strings.Contains(f.Text, want) {
+			t.Errorf("%q lacks %q", f.Text, want)
+		}
+	}
+	if root, list := strings.Index(f.TextShort, "possibly from TIC-2"), strings.Index(f.TextShort, ": FIC-1"); root < 0 || list < root {
+		t.Errorf("%q", f.TextShort)
 	}
 }

@@ -234,6 +234,20 @@ func (w *Watch) tuningMoved(onset float64) (m tuningMove, same bool) {
 	return m, near(gain, k0) && near(reset, t0)
 }
 
+// readSame: a reading from after an onset is that of before. What was read before says
+// nothing of a change that made the trouble.
+func (w *Watch) readSame(onset float64) bool {
+	k0, t0, ok := w.usualTuning(onset - 2*w.s.Osc.P)
+	for k := range w.s.Fits {
+		for _, r := range [...]*fit{w.s.Fits[k].newest(), &w.s.Fits[k].Last} {
+			if ok && r.ok() && float64(r.T0) >= onset && near(math.Abs(float64(r.Kc)), k0) && r.hasReset() && near(float64(r.Ti), t0) {
+				return true
+			}
+		}
+	}
+	return false
+}
+
 // markWords says a mark; the text is empty where it is too small for a word.
 func (w *Watch) markWords(kind int, size float64) (ChangeWhat, string) {
 	switch kind {
@@ -310,7 +324,7 @@ func (w *Watch) nothingBefore(k int, f *Finding) string {
 	// A change found since is the usual tuning by now: what is read agrees with that, and an
 	// onset can lie before it by mistake.
 	changed := s.Change.Seen > 0 && s.Change.At > onset-markBeforeS
-	if _, same := w.tuningMoved(onset); changed || !same || f.Cause == IntegralMissing {
+	if _, same := w.tuningMoved(onset); changed || !same || !w.readSame(onset) || f.Cause == IntegralMissing {
 		return " No change of mode or SP was seen in the 24 h before."
 	}
 	return " No change of mode, SP or tuning was seen in the 24 h before."

@@ -1,6 +1,7 @@
 package detect
 
 import (
+	"math"
 	"strings"
 	"testing"
 
@@ -151,4 +152,113 @@ func TestDutyTable(t *testing.T) {
 	l := configs.NewLoop("FIC-201")
 	l.PropOnly = true
 	check(l, stray)
+}
+
+// A cycle keeps the onset it was first said with when it goes on as another kind; what
+// grows began to grow when it did.
+func TestOnsetStaysWithTheCycle(t *testing.T) {
+	for _, x := range []struct {
+		was, now int
+		since    float64
+		osc      func(*oscState)
+	}{
+		{kSustained, kSticking, 70000, func(o *oscState) { o.Sus, o.Sticking, o.Cause = true, true, causeIndex(ValveSticking) }},
+		{kSticking, kSustained, 70000, func(o *oscState) { o.Sus = true }},
+		{kGrowing, kSustained, 70000, func(o *oscState) { o.Sus = true }},
+		{kSustained, kGrowing, 80000, func(o *oscState) { o.Grow = true }},
+	} {
+		w := swinging(x.was)
+		w.s.Open[x.was].Since = 70000
+		x.osc(&w.s.Osc)
+		w.emit = func(*Finding) {}
+		w.verdict()
+		if o := w.s.Open[x.now]; !o.On || o.Since != x.since {
+			t.Errorf("%s to %s: open %v since %.0f s, want %.0f s", table[x.was].Kind, table[x.now].Kind, o.On, o.Since, x.since)
+		}
+	}
+}
+
+// A swing that reaches the end of the range explains half a cycle there, and no more; a
+// small one explains nothing.
+func TestSwingThatReachesTheEndOfTheRange(t *testing.T) {
+	for _, x := range []struct {
+		amp, there float64
+		said       bool
+	}{{40, 25, false}, {40, 35, true}, {2, 25, true}} {
+		w := swinging(kGrowing)
+		o, m := &w.s.Osc, &w.s.Misc
+		o.Grow, o.Amp, w.s.Motion.SP = true, x.amp, 50
+		m.Pegged, m.EndSince = true, w.in.t-x.there
+		w.emit = func(*Finding) {}
+		w.verdict()
+		if w.s.Open[kRangeEnd].On != x.said {
+			t.Errorf("swing ±%g %% of 60 s, PV at the end for %g s: said %v", x.amp, x.there, !x.said)
+		}
+	}
+}
+
+// What comes first is said first, and alone in the short text.
+func TestWhatAGrowingSwingMeetsFirst(t *testing.T) {
+	nan := math.NaN()
+	for _, x := range []struct {
+		op, alarm   float64
+		long, brief string
+	}{
+		{600, 1320, "; OP meets a limit in about 10 min, PV alarm in about 22 min", ", OP limit in 10 min"},
+		{1320, 600, "; PV alarm in about 10 min, OP meets a limit in about 22 min", ", PV alarm in 10 min"},
+		{0, nan, "; OP already meets a limit", ", OP limit reached"},
+		{nan, 0, "; it reaches a PV alarm", ", PV alarm reached"},
+		{nan, nan, "", ""},
+	} {
+		if long, brief := timeWords(x.op, x.alarm); long != x.long || brief != x.brief {
+			t.Errorf("%g, %g: %q, %q", x.op, x.alarm, long, brief)
+		}
+	}
+}
+
+// Slow against its process or the list: what it did before is no measure.
+func TestUsualRecoveryIsSaidWhereItProves(t *testing.T) {
+	w := swinging(kSluggish)
+	w.s.Recov.Now, w.s.Recov.Was = 96, 102
+	for by, want := range map[uint8]string{byProcess: "takes about 1.6 min, several times what this process needs", byHistory: "where 1.7 min was usual",
+		byList: "many times that of the loop list"} {
+		w.s.Recov.By = by
+		f := w.finding(kSluggish, Raised, w.in.t, "")
+		if usual := strings.Contains(f.Text+f.TextShort, "usual"); !strings.Contains(f.Text, want) || usual != (by == byHistory) {
+			t.Errorf("%q, %q", f.Text, f.TextShort)
+		}
+	}
+}
+
+// A loop whose list does not fit any more is not said to need nothing.
+func TestTuningChangedSaysWhenAndTheList(t *testing.T) {
+	w := swinging(kTuning)
+	w.s.Change = tuneChange{Seen: 82000, At: 80000, What: 2, ResetWas: 40, ResetNow: 8}
+	f := w.finding(kTuning, Raised, w.in.t, "")
+	if want := "The tuning in service changed 1.8 h ago: reset time from about 40 s to 8 s. Nothing to do if it was meant."; f.Text != want {
+		t.Errorf("%q, want %q", f.Text, want)
+	}
+	if !strings.HasPrefix(f.TextShort, "FIC-118: tuning in service changed 1.8 h ago: reset") {
+		t.Errorf("%q", f.TextShort)
+	}
+}
+
+// A gap controller acts with less inside its gap, by design; with more than entered it does not.
+func TestGapGainIsNoMistakeOfTheList(t *testing.T) {
+	for _, x := range []struct {
+		duty configs.Duty
+		seen float32
+		said bool
+	}{{configs.GapDuty, 0.56, false}, {configs.GapDuty, 3, true}, {configs.Tight, 0.56, true}} {
+		l := configs.NewLoop("LIC-320")
+		l.GainPct, l.IdealReset, l.Duty = 1.2, 1800, x.duty
+		w := New(l, 0, Options{})
+		w.s.Grid.DT = 1
+		b := &w.s.Fits[0]
+		b.Count, b.ByLaw = 1, 2
+		b.Ring[0] = fit{T0: 10, At: 100, Kc: x.seen, Ti: 1800, R2: 0.99, X: 100}
+		if n := w.tuningNote(); strings.Contains(n, "gain entered") != x.said {
+			t.Errorf("duty %v, gain %g: %q", x.duty, x.seen, n)
+		}
+	}
 }

@@ -33,7 +33,9 @@ type sharedGroup struct {
 	Cause  Cause
 	Root   string
 	Period float64
-	Next   string // a root and cause that differ from what is said, and slots running with them
+	Widest string  // the loop that swings over the largest part of its range
+	Amp    float64 // of Widest, in units of its PV
+	Next   string  // a root and cause that differ from what is said, and slots running with them
 	NextN  int
 }
 
@@ -143,13 +145,16 @@ func (s *shared) Judge(end int64, live []SiteEvidence, emit func(*Finding)) {
 func (s *shared) group(live []SiteEvidence, g []int) sharedGroup {
 	var out sharedGroup
 	out.Since = math.MaxInt64
-	best, second := -1, -1
+	best, second, widest := -1, -1, 0.0
 	for _, i := range g {
 		e := &live[i]
 		l := s.loops[e.ID]
 		out.Loops = append(out.Loops, l.Name)
 		out.Since = min(out.Since, e.Since)
 		out.Period += e.PeriodS / float64(len(g))
+		if span := l.PVSpan(); e.Amp > widest && span > 0 {
+			widest, out.Widest, out.Amp = e.Amp, l.Name, e.Amp/100*span
+		}
 		switch {
 		case best < 0 || e.Shape > live[best].Shape || live[best].Shape != live[best].Shape:
 			best, second = i, best
@@ -261,7 +266,7 @@ func (s *shared) tell(end int64, seen []sharedGroup, emit func(*Finding)) {
 // join adds what was seen of one group in parts; the part with a root tells it.
 func (g *sharedGroup) join(o *sharedGroup) {
 	if g.Loops == nil || g.Root == "" && o.Root != "" {
-		g.Cause, g.Root, g.Key, g.Period = o.Cause, o.Root, o.Key, o.Period
+		g.Cause, g.Root, g.Key, g.Period, g.Widest, g.Amp = o.Cause, o.Root, o.Key, o.Period, o.Widest, o.Amp
 	}
 	g.Loops = append(g.Loops, o.Loops...)
 	g.Since = min(g.Since, o.Since)
@@ -298,9 +303,13 @@ func (g *sharedGroup) follow(old *sharedGroup) (news bool) {
 func (s *shared) finding(end int64, g *sharedGroup, e Event) *Finding {
 	f := &Finding{Subject: Subject{Loop: g.Key}, Loop: g.Key, Loops: g.Loops, Kind: SharedOscillation, Event: e, At: end, Since: g.Since,
 		Cause: g.Cause, Confidence: 0.7}
+	widest := ""
 	for i, l := range s.loops {
 		if l.Name == g.Key {
 			f.ID = collector.LoopID(i)
+		}
+		if l.Name == g.Widest && g.Amp > 0 {
+			widest = "; widest in " + l.Name + ", ±" + sig2(g.Amp) + unitOf(l.Unit)
 		}
 	}
 	list := strings.Join(g.Loops, ", ")
@@ -311,26 +320,28 @@ func (s *shared) finding(end int64, g *sharedGroup, e Event) *Finding {
 		return f
 	}
 	f.Measures = Measures{{"period_s", g.Period}, {"loops", float64(len(g.Loops))}}
-	what := fmt.Sprintf("%d loops cycle together every %s: %s.", len(g.Loops), duration(g.Period), list)
+	lasts, from := duration(float64(f.At-f.Since)/1000), ""
+	what := fmt.Sprintf("For %s %d loops have been cycling together every %s: %s%s.", lasts, len(g.Loops), duration(g.Period), list, widest)
 	switch {
 	case g.Root != "" && g.Cause == ValveSticking:
 		f.AlsoPossible = []Cause{OutsideDisturbance}
-		what += " Candidate root: " + g.Root + ", whose output looks like that of a sticking final element."
+		what += " Candidate root: " + g.Root + ", whose output looks like that of a sticking final element." +
+			" First stroke it when operations agree, before anything at the other loops."
 	case g.Root != "":
-		what += " Candidate root: " + g.Root + ", which grew by its own tuning."
+		what += " Candidate root: " + g.Root + ", which grew by its own tuning." +
+			" First check its measurement and final element, then its tuning, before anything at the other loops."
 	default:
 		f.Confidence = 0.6
 		if g.Cause != OutsideDisturbance {
 			f.AlsoPossible = []Cause{OutsideDisturbance}
 		}
-		what += " No root stands out: it may come from outside all of them."
+		what += " No root stands out: it may come from outside all of them." +
+			" First look upstream for what they share (supply, header, feed), then for a loop of the group that cycles by itself."
 	}
 	if g.Root != "" {
-		what += " Judge the root before any other loop of the group."
-	} else {
-		what += " First look upstream for what they share (supply, header, feed), then for a loop of the group that cycles by itself."
+		from = ", " + likely(f.Confidence) + " from " + g.Root
 	}
 	f.Text = what
-	f.TextShort = shorten(fmt.Sprintf("%d loops cycle every %s: %s.", len(g.Loops), duration(g.Period), list))
+	f.TextShort = shorten(fmt.Sprintf("%d loops cycle every %s for %s%s: %s.", len(g.Loops), duration(g.Period), lasts, from, list))
 	return f
 }

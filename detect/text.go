@@ -69,15 +69,15 @@ func likely(conf float64) string {
 var firstCheck = map[Cause]string{
 	ResetTooShort:            "First check the measurement and the final element, then the reset time",
 	GainTooHigh:              "First check the measurement and the final element, then the gain",
-	ResetTooLong:             "First check that the final element moves freely, then the reset time",
-	GainTooLow:               "First check that the final element moves freely, then the gain",
-	IntegralMissing:          "First check whether integral action is switched off or held, and the measurement",
+	ResetTooLong:             "First check the measurement and that the final element moves freely, then the reset time",
+	GainTooLow:               "First check the measurement and that the final element moves freely, then the gain",
+	IntegralMissing:          "First check the measurement, then whether integral action is switched off or held",
 	ValveSticking:            "First stroke the final element when operations agree; compare stem with OP",
 	ValveDeadBand:            "First check linkage and positioner for play when operations agree",
 	FinalElementNotFollowing: "First check the final element: stem, air supply, drive, isolation valves",
 	ProcessNonlinear:         "First compare the swing at other operating points",
 	OutsideDisturbance:       "First look upstream for what moves with the same cycle or came at the same time",
-	OutputLimit:              "First check whether the demand is beyond the final element, and the measurement",
+	OutputLimit:              "First check the measurement, then the final element, then whether the demand is beyond it",
 	WindUp:                   "First check the anti-wind-up and output limits of the controller",
 	MeasurementCause:         "First check the transmitter, its impulse lines and the signal path",
 	Undetermined:             "First check the measurement, then the final element, then what changed outside, then the tuning",
@@ -149,8 +149,9 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 		if f.Cause == ResetTooShort {
 			what += part(" (reset in service about %s)", get("reset_s"), duration)
 		}
-		what += w.timeWords(get("time_to_op_limit_s"), get("time_to_pv_alarm_s"))
-		brief = "growing swing" + part(" ±%s", s.Osc.Amp, pv) + part(", cycle %s", s.Osc.P, duration) + comma(since)
+		left, leftBrief := timeWords(get("time_to_op_limit_s"), get("time_to_pv_alarm_s"))
+		what += left
+		brief = "growing swing" + part(" ±%s", s.Osc.Amp, pv) + part(", cycle %s", s.Osc.P, duration) + comma(since) + leftBrief
 	case kSustained:
 		what = cycles + part(" ±%s", s.Osc.Amp, pv) + part(" with a period of %s", s.Osc.P, duration) + " without settling"
 		brief = "cycles" + part(" ±%s", s.Osc.Amp, pv) + part(" every %s", s.Osc.P, duration) + since
@@ -160,23 +161,27 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 			part(" by about %s %%", swing, sig2) + " before PV answers: apparent sticking, from OP and PV"
 		brief = "apparent sticking" + part(", cycle %s", s.Osc.P, duration) + part(", OP swing %s %%", swing, sig2) + comma(since)
 	case kOffset:
-		side := "below"
-		if s.OffPast.Offset.Mean < 0 {
-			side = "above"
-		}
+		side := below(s.OffPast.Offset.Mean)
 		lasts := part(" for %s", get("duration_s"), duration)
 		what = "PV stays" + part(" %s", s.OffPast.Offset.Mean, pv) + " " + side + " its set point" + lasts + " with room left in OP" + part(" (%s %%)", s.Motion.OP, sig2)
 		brief = "PV" + part(" %s", s.OffPast.Offset.Mean, pv) + " " + side + " SP" + lasts + ", OP free"
 	case kSaturation:
 		what, brief = w.limitText(f, get)
 	case kSluggish:
-		what = creeps + " back after disturbances" + part(": about %s", get("recovery_s"), duration)
-		if u := part(" where %s was usual", get("usual_s"), duration); u != "" {
-			what += u
-		} else if s.Recov.By == byProcess {
-			what += ", several times what this process needs"
+		takes, usual := get("recovery_s"), get("usual_s")
+		if s.Recov.By != byHistory { // it was as slow before: what was usual says nothing
+			usual = math.NaN()
 		}
-		brief = "slow to recover" + part(": about %s", get("recovery_s"), duration) + part(", usual %s", get("usual_s"), duration) + comma(since)
+		what = creeps + " back after disturbances" + part(": it takes about %s", takes, duration)
+		switch u := part(" where %s was usual", usual, duration); {
+		case u != "":
+			what += u
+		case s.Recov.By == byProcess:
+			what += ", several times what this process needs"
+		case s.Recov.By == byList:
+			what += ", for the reset time in service is many times that of the loop list"
+		}
+		brief = "slow to recover" + part(": takes about %s", takes, duration) + part(", usual %s", usual, duration) + comma(since)
 	case kFrozen:
 		what = "PV has not changed at all" + part(" for %s", get("still_s"), duration)
 		if tr := get("op_travel_pct"); tr > 1 {
@@ -199,20 +204,26 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 		lasts := part(" for %s", get("duration_s"), duration)
 		what = "The loop has been in " + m + lasts + "; normal is " + w.loop.NormalMode
 		brief = "in " + m + lasts
-		return what + ". Nobody may know that the law does not act." + w.beforeSentence(k, f) + " First ask operations whether it is meant, and until when.", w.short(f, brief)
+		return what + ". Nobody may know that the controller does not act." + w.beforeSentence(k, f) + " First ask operations whether it is meant, and until when.", w.short(f, brief)
 	case kTuning:
-		what = "The tuning in service changed"
+		changed := "tuning in service changed"
+		if d := float64(f.At-f.Since) / 1000; d > 0 {
+			changed += part(" %s ago", d, duration)
+		}
 		m := s.Change.move()
 		if x := m.words(); x != "" {
-			what += ": " + x
+			changed += ": " + x
 		}
+		what = "The " + changed + "."
 		if n := w.tuningNote(); n != "" {
-			return what + ". The loop list does not fit: " + n + ". Nothing to do if it was meant." + w.beforeSentence(k, f), w.short(f, what)
+			what += " The loop list does not fit: " + n + ". If it was meant, enter it in the loop list."
+		} else {
+			what += " Nothing to do if it was meant."
 		}
-		return what + ". Nothing to do if it was meant." + w.beforeSentence(k, f), w.short(f, what)
+		return what + w.beforeSentence(k, f), w.short(f, changed)
 	case kStale:
 		what = "No usable value" + part(" for %s", get("duration_s"), duration) + "; the loop cannot be watched"
-		return what + "." + w.beforeSentence(k, f) + " First check whether the source and the network deliver, then the transmitter and the signal path.", w.short(f, what)
+		return what + "." + w.beforeSentence(k, f) + " First check whether the source and the network deliver, then the transmitter and the signal path.", w.short(f, lower(what))
 	}
 	check, ok := firstCheck[f.Cause]
 	if !ok {
@@ -239,6 +250,9 @@ func (w *Watch) limitText(f *Finding, get func(string) float64) (what, brief str
 	if f.Cause == WindUp {
 		over := part(" %s", get("overhang_s"), duration)
 		what = "OP stays at its limit" + over + " after PV has crossed the set point, then PV overshoots" + part(" by %s", get("overshoot_pct"), w.pvText)
+		if d := float64(f.At-f.Since) / 1000; d > 0 {
+			what += ", seen for " + duration(d)
+		}
 		return what, "wind-up: OP late" + strings.Replace(over, " ", " by ", 1) + " at its limit"
 	}
 	lasts := part(" for %s", get("duration_s"), duration)
@@ -255,22 +269,46 @@ func (w *Watch) limitText(f *Finding, get func(string) float64) (what, brief str
 	what = "OP lies at its limit" + part(" (%s %%)", s.Motion.OP, sig2) + lasts
 	brief = "OP at limit" + part(" %s %%", s.Motion.OP, sig2) + lasts
 	if off != "" {
-		what, brief = what+" while PV misses the set point by "+off, brief+", PV off by "+off
+		side := below(s.OffPast.Sat.Mean)
+		what, brief = what+" while PV is "+off+" "+side+" its set point", brief+", PV "+off+" "+side+" SP"
 	}
 	return what, brief
 }
 
-// timeWords say how long a growing swing leaves, s; 0 is reached.
-func (w *Watch) timeWords(op, alarm float64) string {
-	switch {
-	case alarm == 0:
-		return "; it reaches a PV alarm"
-	case alarm == alarm:
-		return part("; PV alarm in about %s", alarm, duration)
-	case op == 0:
-		return "; OP already meets a limit"
+// below says on which side of its set point PV is, by the mean of SP less PV.
+func below(mean float64) string {
+	if mean < 0 {
+		return "above"
 	}
-	return part("; OP meets a limit in about %s", op, duration)
+	return "below"
+}
+
+func lower(t string) string { return strings.ToLower(t[:1]) + t[1:] }
+
+// timeWords say how long a growing swing leaves, s; 0 is reached. In brief, what comes first.
+func timeWords(op, alarm float64) (long, brief string) {
+	type due struct {
+		at                    float64
+		reached, ahead, short string
+	}
+	first, second := due{op, "OP already meets a limit", "OP meets a limit in about %s", "OP limit"}, due{alarm, "it reaches a PV alarm", "PV alarm in about %s", "PV alarm"}
+	if alarm < op || op != op {
+		first, second = second, first
+	}
+	for _, d := range [...]due{first, second} {
+		t, short := part(d.ahead, d.at, duration), d.short+part(" in %s", d.at, duration)
+		if d.at == 0 {
+			t, short = d.reached, d.short+" reached"
+		}
+		switch {
+		case t == "":
+		case long == "":
+			long, brief = "; "+t, ", "+short
+		default:
+			long += ", " + t
+		}
+	}
+	return long, brief
 }
 
 // direction says in which direction the remedy lies, where that is safe to say: how
@@ -331,4 +369,4 @@ func (w *Watch) textOver(k int, reason string) (long, short string) {
 
 // over says by kind what came to an end.
 var over = [kinds]string{"the growing swing is over", "the cycle is over", "the sticking cycle is over", "PV is back at its set point", "OP is off its limit",
-	"recoveries are usual again", "PV moves again", "PV is back inside its range", "the law acts as planned again", "the tuning change is old news", "values arrive again"}
+	"recoveries are usual again", "PV moves again", "PV is back inside its range", "the controller acts as planned again", "the tuning change is old news", "values arrive again"}

@@ -3,6 +3,8 @@ package detect
 import (
 	"fmt"
 	"math"
+
+	"midwatch/configs"
 )
 
 // The tuning in service against the loop list: a difference is worth a word, and a
@@ -83,7 +85,8 @@ func (w *Watch) tuningNote() string {
 	}
 	kc, ti, _ := w.served()
 	rk, rt := w.listRatio()
-	if rk > 0 && !within(rk, 1, differs) {
+	byDesign := w.loop.Duty == configs.GapDuty && rk < 1 // inside its gap a controller acts with less
+	if rk > 0 && !within(rk, 1, differs) && !byDesign {
 		s := fmt.Sprintf("gain entered %s, the data say about %s", sig2(w.loop.GainPct), sig2(math.Abs(kc)))
 		switch {
 		case near(float64(w.s.Change.GainWas), w.loop.GainPct): // rightly entered, and changed since

@@ -41,6 +41,17 @@ func (w *Watch) verdictAt(t float64) {
 			rejudge[k] = rejudge[k] || other != k && c[other].On
 		}
 	}
+	// It keeps the onset it was first said with, unless it is now said to grow.
+	for _, k := range [...]int{kSustained, kSticking} {
+		for _, other := range swings {
+			if o := &s.Open[other]; other != k && o.On && !s.Open[k].On {
+				c[k].Since = min(c[k].Since, o.Since)
+			}
+		}
+	}
+	if !s.Open[kRangeEnd].On && w.swingsToEnd(t) {
+		c[kRangeEnd].On = false
+	}
 	if c[kFrozen].On {
 		fold(kOffset)
 		fold(kSluggish)
@@ -54,6 +65,17 @@ func (w *Watch) verdictAt(t float64) {
 
 // swings are the kinds of which one cycle is one at a time.
 var swings = [...]int{kGrowing, kSustained, kSticking}
+
+// swingsToEnd: PV is at the end of its range because it swings that far, and no longer
+// than half a cycle of that takes. Half as much again as the swing is its next cycles.
+func (w *Watch) swingsToEnd(t float64) bool {
+	o, x := &w.s.Osc, &w.s.Misc
+	room := w.s.Motion.SP
+	if x.EndHigh {
+		room = 100 - room
+	}
+	return (o.Grow || o.Sus) && room < 1.5*o.Amp && t-x.EndSince < o.P/2
+}
 
 // claim is what a detector claims, after what manual spells and the loop list say to it.
 func (w *Watch) claim(k int) claim {

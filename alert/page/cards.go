@@ -25,6 +25,7 @@ type card struct {
 	Text    string
 	Since   string
 	UTC     string
+	AsOf    string // when its numbers were true, where not now
 	Left    string
 	Sure    string
 	Loop    string   // subject, where it is a loop
@@ -72,15 +73,16 @@ func (p *Page) card(ctx context.Context, l *look, e *alert.Episode, byName map[s
 	how := lookOf(f.Kind)
 	u, why := p.o.House.Urgency(e)
 	c := card{ID: e.ID, Class: string(u), Mark: how.Mark, Urgency: u, Why: why, State: e.State(), Text: f.Text, Sure: sure(&f),
-		Since: clock(f.Since, l.now, l.zone), UTC: utc(f.Since), Count: e.Count}
+		Since: clock(f.Since, l.now, l.zone), UTC: utc(f.Since), AsOf: asOf(&f, l.now, l.zone), Count: e.Count}
 	if c.Text == "" {
 		c.Text = capital(how.Word) + "."
 	}
 	if e.Hold != nil {
 		c.Hold = "cannot be seen since " + clock(e.Hold.Since, l.now, l.zone) + ": " + e.Hold.Why
 	}
-	if at, what, ok := (&trouble{Finding: f}).meets(); ok {
-		c.Left = what + dueWord(at, l.now) + clock(at, l.now, l.zone)
+	t := trouble{Finding: f}
+	if at, what, ok := t.meets(); ok {
+		c.Left = what + t.dueWord(at, l.now) + clock(at, l.now, l.zone)
 		if left := float64(at-l.now.UnixMilli()) / 1000; left > 60 {
 			c.Left += ", " + seconds(left) + " left"
 		}

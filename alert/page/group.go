@@ -160,7 +160,7 @@ func (p *Page) serveEpisode(w http.ResponseWriter, r *http.Request) {
 		v.Order = "cascade: outer over inner; PV full, SP dashed"
 		v.sayOf(t.loops, &l)
 	case t.periodS > 0:
-		v.Order = "in order of phase: who swings first stands first"
+		v.Order = "in order of phase, from the loop that leads; the order alone names no root"
 		fallthrough
 	default:
 		p.fillGroup(&v, e, journal, &l)

@@ -64,6 +64,7 @@ type said struct {
 	Rest      string
 	SinceWord string
 	UTC       string
+	AsOf      string // when its numbers were true, where not now
 	Measures  []measureLine
 	Changed   []line // before the onset, oldest first
 	Also      []detect.Cause
@@ -308,6 +309,7 @@ func (p *Page) fillSaid(r *http.Request, v *loopPage, ts []trouble, notes []aler
 		t := ts[i]
 		x := said{trouble: t, Class: t.class(), Text: t.Finding.Text, Open: t.open(), SinceWord: clock(t.Since, l.now, l.zone), UTC: utc(t.Since),
 			Cause: sure(&t.Finding), Also: t.Finding.AlsoPossible, Measures: measureLines(&t.Finding, v.Loop.Unit), Group: t.Kind == detect.SharedOscillation}
+		x.AsOf = asOf(&t.Finding, l.now, l.zone)
 		x.Changed = changedLines(t.Finding.Changed, l)
 		x.Strong, x.Rest = t.say(l.now, l.zone)
 		e, entries, err := p.o.House.Episode(t.Episode)

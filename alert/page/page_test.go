@@ -375,6 +375,16 @@ func TestWords(t *testing.T) {
 	if _, rest := x.say(now.Add(time.Hour), london); rest != "PV alarm was due about 03:31" {
 		t.Errorf("an hour later: %q", rest)
 	}
+	// What was met when it was said is no forecast, and old numbers are said to be old.
+	x = trouble{Finding: detect.Finding{At: now.UnixMilli(), Measures: detect.Measures{{Name: "time_to_op_limit_s", Value: 0}}}}
+	if _, rest := x.say(now.Add(time.Hour), london); rest != "OP limit reached by 03:30" {
+		t.Errorf("a limit that was reached: %q", rest)
+	}
+	for later, want := range map[time.Duration]string{time.Minute: "", time.Hour: "numbers as of 03:30"} {
+		if got := asOf(&x.Finding, now.Add(later), london); got != want {
+			t.Errorf("%s later: %q, want %q", later, got, want)
+		}
+	}
 	for _, k := range kindLooks {
 		if !strings.Contains(string(marks), `id="m-`+k.Mark+`"`) {
 			t.Errorf("%s has no drawing", k.Kind)

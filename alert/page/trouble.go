@@ -121,7 +121,7 @@ func (t *trouble) say(now time.Time, zone *time.Location) (strong, rest string) 
 		more = append(more, quantity(float64(len(f.Loops)), "loops"))
 	}
 	if at, what, ok := t.meets(); ok && t.open() {
-		more = append(more, what+dueWord(at, now)+clock(at, now, zone))
+		more = append(more, what+t.dueWord(at, now)+clock(at, now, zone))
 	} else if w := sure(f); w != "" && t.Kind != detect.NotInNormalMode && !strings.HasPrefix(w, t.Word) {
 		more = append(more, w)
 	} else if v, ok := f.Measures.Get("period_s"); ok {
@@ -146,10 +146,24 @@ func (t *trouble) meets() (at int64, what string, ok bool) {
 	return 0, "", false
 }
 
-// dueWord joins what is met and when: a time that has passed is said to have.
-func dueWord(at int64, now time.Time) string {
-	if at < now.UnixMilli() {
+// dueWord joins what is met and when: a time that has passed is said to have, and what
+// was met when it was said is no forecast.
+func (t *trouble) dueWord(at int64, now time.Time) string {
+	switch {
+	case at == t.Finding.At:
+		return " reached by "
+	case at < now.UnixMilli():
 		return " was due about "
 	}
 	return " about "
+}
+
+// asOf is when a finding was last said, where that is a while ago: its durations and
+// sizes are those of then. Empty where they are of now.
+func asOf(f *detect.Finding, now time.Time, zone *time.Location) string {
+	const fresh = 5 * 60 * 1000 // ms; texts round to minutes
+	if now.UnixMilli()-f.At < fresh {
+		return ""
+	}
+	return "numbers as of " + clock(f.At, now, zone)
 }

@@ -82,9 +82,9 @@ func printStatus(w io.Writer, s *api.Status, rows []api.Loop, loops bool) error 
 	case !s.Running:
 		fmt.Fprintf(w, "%s: no watch is running; this is what the data folder says\n", s.Site)
 	case s.Well:
-		fmt.Fprintf(w, "%s: watching since %s, all well\n", s.Site, s.Started)
+		fmt.Fprintf(w, "%s: watching since %s; the watch itself is well\n", s.Site, s.Started)
 	default:
-		fmt.Fprintf(w, "%s: watching since %s, not well: %s\n", s.Site, s.Started, strings.Join(s.Unwell, "; "))
+		fmt.Fprintf(w, "%s: watching since %s; the watch itself is not well: %s\n", s.Site, s.Started, strings.Join(s.Unwell, "; "))
 	}
 	l := s.Loops
 	fmt.Fprintf(w, "%d loops: judged %d, cannot judge %d, not in normal mode %d, held %d", l.Total, l.Judged, l.CannotJudge, l.NotNormal, l.Held)
@@ -130,7 +130,7 @@ func printStatus(w io.Writer, s *api.Status, rows []api.Loop, loops bool) error 
 		for _, x := range rows {
 			fmt.Fprintf(t, "%s\t%s\t%s\t%s\n", x.Loop, x.State, x.Why, x.Service)
 			for _, b := range x.Blind {
-				fmt.Fprintf(t, "\t%s\n", b)
+				fmt.Fprintf(t, "\t\t\tblind spot: %s\n", b) // all cells, or the columns break here
 			}
 		}
 	}

@@ -17,6 +17,7 @@ import (
 func TestSummariesSayWhatIsNotSeen(t *testing.T) {
 	const spot = "no OP: saturation cannot be seen"
 	fic, lic := configs.NewLoop("FIC-118"), configs.NewLoop("LIC-310")
+	fic.Service, lic.Service = "filter 3 outlet flow", "clear well level"
 	rows := api.Loops([]api.LoopState{{Loop: fic, State: detect.CannotJudge, Why: spot, Blind: []string{spot, "no mode"}}, {Loop: lic, State: detect.Judged}})
 	var check, status, replay bytes.Buffer
 	c := &configs.Config{File: "midwatch.yaml", Loops: []*configs.Loop{fic, lic}}
@@ -34,6 +35,17 @@ func TestSummariesSayWhatIsNotSeen(t *testing.T) {
 			if !strings.Contains(out, want) {
 				t.Errorf("%s does not say %q:\n%s", verb, want, out)
 			}
+		}
+	}
+
+	// A blind spot breaks no column: services stand below each other.
+	at := -1
+	for line := range strings.SplitSeq(status.String(), "\n") {
+		if i := max(strings.Index(line, "SERVICE"), strings.Index(line, "filter 3"), strings.Index(line, "clear well"), strings.Index(line, "blind spot: no mode")); i >= 0 {
+			if at >= 0 && i != at {
+				t.Errorf("columns are broken:\n%s", status.String())
+			}
+			at = i
 		}
 	}
 
