@@ -10,7 +10,8 @@ export CGO_ENABLED := 0
 
 GO    ?= go
 TIMED := .ci/timed
-TEST  := $(GO) test -timeout 600s
+# Of a package: a guard against what hangs, far beyond what a slow machine needs.
+TEST  := $(GO) test -timeout 1200s
 
 # Packages with goroutines are tested under the race detector, all others
 # without it. cmd/internal/house checks that none is missing here.

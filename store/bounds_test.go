@@ -46,10 +46,10 @@ func TestFillBound(t *testing.T) {
 
 // TestSizeCap fills a window far beyond its cap: the oldest slices go.
 func TestSizeCap(t *testing.T) {
-	const limit = 3 << 20
+	const limit = 1 << 20
 	w := open(t, t.TempDir(), Options{SliceFlushes: 1000, ChunkFlushes: 10, SizeBytes: limit}, loopList(100))
 	r := rand.New(rand.NewPCG(1, 1))
-	for i := range 600 {
+	for i := range 240 {
 		for l := range 100 {
 			for k := range 8 {
 				w.Append(collector.LoopID(l), plain(int64(i*8+k)*1000, r.Float32()))
@@ -63,7 +63,7 @@ func TestSizeCap(t *testing.T) {
 		t.Errorf("%d slices with %d bytes from %d on, want at least 3 with about %d", st.Slices, st.Bytes, st.Oldest, limit)
 	}
 	got := read(t, w, loopName(7), 0, math.MaxInt64)
-	if got[0].Time != st.Oldest || got[len(got)-1].Time != 4799000 || int64(len(got)) != (4800000-st.Oldest)/1000 {
+	if got[0].Time != st.Oldest || got[len(got)-1].Time != 1919000 || int64(len(got)) != (1920000-st.Oldest)/1000 {
 		t.Errorf("%d frames from %d to %d, oldest %d", len(got), got[0].Time, got[len(got)-1].Time, st.Oldest)
 	}
 	checkAll(t, w)

@@ -19,6 +19,15 @@ import (
 	"midwatch/collector"
 )
 
+// times says how often a test tries chance: a few times in the one test command,
+// whose machine may be slow and under the race detector, and many in a soak.
+func times(few, many int) int {
+	if os.Getenv("MIDWATCH_SOAK") != "" {
+		return many
+	}
+	return few
+}
+
 const (
 	crashLoops  = 200
 	crashFrames = 8 // a loop and flush
@@ -81,10 +90,7 @@ func childWrite(dir string) {
 // TestKill kills a writer at random times: nothing acknowledged is lost, files
 // are sound, and the next start goes on.
 func TestKill(t *testing.T) {
-	kills := 8
-	if os.Getenv("MIDWATCH_SOAK") != "" {
-		kills = 200
-	}
+	kills := times(8, 200)
 	dir := t.TempDir()
 	r := rand.New(rand.NewPCG(1, 9))
 	lastW, lastS := -1, -1
@@ -266,10 +272,7 @@ func TestDamages(t *testing.T) {
 	if len(paths) != 3 {
 		t.Fatalf("%d slices, want 3", len(paths))
 	}
-	per := 15
-	if os.Getenv("MIDWATCH_SOAK") != "" {
-		per = 400
-	}
+	per := times(5, 400)
 	for _, d := range damages {
 		t.Run(d.name, func(t *testing.T) {
 			r := rand.New(rand.NewPCG(11, 12))
@@ -312,7 +315,7 @@ func spoilOne(t *testing.T, d damage, paths []string, r *rand.Rand, noticed, los
 	// As a daemon does after an unclean stop: a spoiled free list shows nowhere
 	// else before new frames are written over old ones.
 	if newest := filepath.Join(dir, filepath.Base(paths[len(paths)-1])); victim == len(paths)-1 {
-		ctx, cancel := context.WithTimeout(context.Background(), 10*time.Second)
+		ctx, cancel := context.WithTimeout(context.Background(), 2*time.Minute)
 		defer cancel()
 		err := CheckInChild(ctx, os.Args[:1], newest)
 		if errors.Is(err, ErrDamaged) {
@@ -410,10 +413,7 @@ func TestCheckInChild(t *testing.T) {
 		t.Fatal(err)
 	}
 	b, _ := io.ReadAll(f)
-	found, tried, stride := 0, 0, 17 // a child for each page is slow
-	if os.Getenv("MIDWATCH_SOAK") != "" {
-		stride = 1
-	}
+	found, tried, stride := 0, 0, times(67, 1) // a child for each page is slow
 	for p := 2; p < len(b)/pageBytes; p += stride {
 		tried++
 		old := append([]byte{}, b[p*pageBytes:(p+1)*pageBytes]...)

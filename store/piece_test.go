@@ -174,7 +174,7 @@ func randomFrames(r *rand.Rand, n int) []collector.Frame {
 
 func TestPieceRoundTrip(t *testing.T) {
 	r := rand.New(rand.NewPCG(1, 2))
-	for range 4000 {
+	for range times(1000, 4000) {
 		roundTrip(t, randomFrames(r, 1+r.IntN(200)), t2026-r.Int64N(100000))
 	}
 	for _, n := range []int{1, 2, 3, 63, 64, 65, 128, 129, 600, maxPiece} {
@@ -297,7 +297,7 @@ func TestDecodeDamaged(t *testing.T) {
 	r := rand.New(rand.NewPCG(7, 8))
 	var e encoder
 	var d decoder
-	for range 3000 {
+	for range times(1000, 3000) {
 		b := e.append(nil, randomFrames(r, 1+r.IntN(100)), 0)
 		for range 1 + r.IntN(4) {
 			b[r.IntN(len(b))] ^= 1 << r.IntN(8)

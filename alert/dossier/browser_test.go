@@ -95,7 +95,7 @@ func TestRendersInABrowser(t *testing.T) {
 
 func render(t *testing.T, bin string, args ...string) {
 	t.Helper()
-	ctx, cancel := context.WithTimeout(t.Context(), 2*time.Minute)
+	ctx, cancel := context.WithTimeout(t.Context(), 5*time.Minute)
 	defer cancel()
 	file, err := filepath.Abs(args[len(args)-1])
 	if err != nil {

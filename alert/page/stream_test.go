@@ -20,7 +20,7 @@ func TestStream(t *testing.T) {
 	t.Cleanup(func() { goleak.VerifyNone(t, had) })
 	h := newFake()
 	_, addr := serve(t, h, configs.Page{})
-	ctx, cancel := context.WithTimeout(t.Context(), 20*time.Second)
+	ctx, cancel := context.WithTimeout(t.Context(), hang)
 	defer cancel()
 	r, err := http.NewRequestWithContext(ctx, "GET", addr+"api/stream?loop=AIC-204&after="+strconv.FormatInt(h.clock().UnixMilli()-30000, 10), nil)
 	if err != nil {

@@ -74,7 +74,7 @@ func newBroker(t *testing.T) *broker {
 // wait gives the first packet that fits.
 func (b *broker) wait(t *testing.T, fits func(packets.Packet) bool) packets.Packet {
 	t.Helper()
-	deadline := time.After(10 * time.Second)
+	deadline := time.After(hang)
 	for {
 		b.mu.Lock()
 		for _, p := range b.got {
@@ -145,7 +145,7 @@ func TestMQTTComesBack(t *testing.T) {
 	}
 	c, _ := b.Clients.Get("x")
 	c.Stop(io.ErrUnexpectedEOF)
-	deadline := time.Now().Add(20 * time.Second)
+	deadline := time.Now().Add(hang)
 	for {
 		if err := s.Send(t.Context(), advisory()); err == nil {
 			break

@@ -60,7 +60,7 @@ func TestSyslogOverUDP(t *testing.T) {
 	conforms(t, s, nil)
 	buf := make([]byte, 65536)
 	read := func() []byte {
-		if err := l.SetReadDeadline(time.Now().Add(10 * time.Second)); err != nil {
+		if err := l.SetReadDeadline(time.Now().Add(hang)); err != nil {
 			t.Fatal(err)
 		}
 		n, _, err := l.ReadFrom(buf)
@@ -149,7 +149,7 @@ func TestSyslogOverTCPAndTLS(t *testing.T) {
 					if n != 1 {
 						t.Errorf("%d messages in one connection", n)
 					}
-				case <-time.After(10 * time.Second):
+				case <-time.After(hang):
 					t.Fatal("nothing came")
 				}
 			}
@@ -174,7 +174,7 @@ func script(t *testing.T, body string) string {
 func TestCommand(t *testing.T) {
 	out := filepath.Join(t.TempDir(), "out")
 	run := func(path string, args ...string) alert.Sender {
-		s, err := New(configs.Sender{Name: "c", Command: &configs.Command{Path: path, Args: args, Timeout: 5 * time.Second}}, env())
+		s, err := New(configs.Sender{Name: "c", Command: &configs.Command{Path: path, Args: args, Timeout: hang}}, env())
 		if err != nil {
 			t.Fatal(err)
 		}
@@ -219,10 +219,11 @@ func TestCommand(t *testing.T) {
 	ctx, cancel := context.WithTimeout(t.Context(), 200*time.Millisecond)
 	defer cancel()
 	began := time.Now()
-	if err := run(script(t, "sleep 60 & sleep 60")).Send(ctx, advisory()); alert.ReasonOf(err) != alert.ReasonTimeout {
+	// Both sleep for far longer than hang, and hold what the command writes to.
+	if err := run(script(t, "sleep 600 & sleep 600")).Send(ctx, advisory()); alert.ReasonOf(err) != alert.ReasonTimeout {
 		t.Errorf("hanging: %v", err)
 	}
-	if d := time.Since(began); d > 10*time.Second {
+	if d := time.Since(began); d > hang {
 		t.Errorf("ended after %v only", d)
 	}
 	if _, err := New(configs.Sender{Name: "c", Command: &configs.Command{Path: "tell"}}, env()); err == nil {

@@ -58,7 +58,7 @@ func TestSyslogReadByRsyslog(t *testing.T) {
 	defer func() { _ = cmd.Process.Kill(); _ = cmd.Wait() }()
 	wait := func(what string, ok func() bool) {
 		t.Helper()
-		for deadline := time.Now().Add(20 * time.Second); !ok(); time.Sleep(20 * time.Millisecond) {
+		for deadline := time.Now().Add(hang); !ok(); time.Sleep(20 * time.Millisecond) {
 			if time.Now().After(deadline) {
 				_ = cmd.Process.Kill()
 				_ = cmd.Wait()

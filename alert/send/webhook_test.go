@@ -3,8 +3,8 @@ package send
 import (
 	"context"
 	"encoding/pem"
+	"fmt"
 	"io"
-	"net"
 	"net/http"
 	"net/http/httptest"
 	"os"
@@ -18,6 +18,7 @@ import (
 	cehttp "github.com/cloudevents/sdk-go/v2/protocol/http"
 
 	"midwatch/alert"
+	"midwatch/collector/porttest"
 	"midwatch/configs"
 )
 
@@ -33,12 +34,7 @@ func hook(t *testing.T, w configs.Webhook) alert.Sender {
 
 // closedPort is an address at which nothing listens.
 func closedPort(t *testing.T) string {
-	l, err := net.Listen("tcp", "127.0.0.1:0")
-	if err != nil {
-		t.Fatal(err)
-	}
-	defer l.Close()
-	return l.Addr().String()
+	return fmt.Sprintf("127.0.0.1:%d", porttest.Hold(t))
 }
 
 // TestWebhook reads what is sent back with the official library, and checks the
@@ -73,7 +69,7 @@ func TestWebhook(t *testing.T) {
 		w.WriteHeader(http.StatusNoContent)
 	}))
 	defer srv.Close()
-	conforms(t, hook(t, configs.Webhook{URL: srv.URL, Key: key}), hook(t, configs.Webhook{URL: "http://" + closedPort(t), Timeout: time.Second}))
+	conforms(t, hook(t, configs.Webhook{URL: srv.URL, Key: key}), hook(t, configs.Webhook{URL: "http://" + closedPort(t), Timeout: hang}))
 
 	got = nil
 	s := hook(t, configs.Webhook{URL: srv.URL, Key: key})
@@ -225,7 +221,7 @@ func TestReceiverWithAWrongCertificate(t *testing.T) {
 }
 
 func TestReceiverWithoutAName(t *testing.T) {
-	err := hook(t, configs.Webhook{URL: "http://no-such-host.invalid/?token=secret", Timeout: 5 * time.Second}).Send(t.Context(), advisory())
+	err := hook(t, configs.Webhook{URL: "http://no-such-host.invalid/?token=secret", Timeout: hang}).Send(t.Context(), advisory())
 	if alert.ReasonOf(err) != alert.ReasonDNS || strings.Contains(err.Error(), "secret") {
 		t.Errorf("%v, want reason dns and no secret", err)
 	}

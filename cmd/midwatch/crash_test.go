@@ -149,7 +149,7 @@ func (w *watch) kill(sig syscall.Signal) {
 func (w *watch) until(what string, ok func(*api.Status) bool) *api.Status {
 	w.t.Helper()
 	var s api.Status
-	for deadline := time.Now().Add(30 * time.Second); time.Now().Before(deadline); time.Sleep(10 * time.Millisecond) {
+	for deadline := time.Now().Add(hang); time.Now().Before(deadline); time.Sleep(10 * time.Millisecond) {
 		if err := w.cl.get(context.Background(), "/api/status", &s); err == nil && ok(&s) {
 			return &s
 		}
@@ -201,7 +201,7 @@ func TestKilledInAnEpisode(t *testing.T) {
 	if got := string(episode.Finding.Kind); got != "output-saturation" {
 		t.Fatalf("episode of kind %s", got)
 	}
-	deadline := time.Now().Add(20 * time.Second)
+	deadline := time.Now().Add(hang)
 	for len(messages(t, dir)) == 0 {
 		if time.Now().After(deadline) {
 			t.Fatalf("nothing was told\n%s", w.log)

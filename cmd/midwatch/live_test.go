@@ -102,7 +102,7 @@ func TestHangupReloads(t *testing.T) {
 	put(t, dir, "loops.csv", loopList+"FIC-118,gateway,a,a,a,,sideways,1,30,0,100,1\n")
 	hangup()
 	hangup() // several at once are one
-	deadline := time.Now().Add(20 * time.Second)
+	deadline := time.Now().Add(hang)
 	for !strings.Contains(w.log.String(), "not reloaded") {
 		if time.Now().After(deadline) {
 			t.Fatalf("the mistake was not told\n%s", w.log)
@@ -133,7 +133,7 @@ func TestServiceManager(t *testing.T) {
 	await := func(word string) {
 		t.Helper()
 		b := make([]byte, 4096)
-		if err := l.SetReadDeadline(time.Now().Add(20 * time.Second)); err != nil {
+		if err := l.SetReadDeadline(time.Now().Add(hang)); err != nil {
 			t.Fatal(err)
 		}
 		for {

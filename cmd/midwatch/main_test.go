@@ -48,7 +48,7 @@ func await(ts *testscript.TestScript, neg bool, args []string) {
 		ts.Fatalf("usage: await FILE")
 	}
 	path := ts.MkAbs(args[0])
-	for deadline := time.Now().Add(20 * time.Second); time.Now().Before(deadline); time.Sleep(5 * time.Millisecond) {
+	for deadline := time.Now().Add(hang); time.Now().Before(deadline); time.Sleep(5 * time.Millisecond) {
 		if _, err := os.Stat(path); err == nil {
 			return
 		}

@@ -20,6 +20,8 @@ import (
 	"syscall"
 	"testing"
 	"time"
+
+	"midwatch/collector/porttest"
 )
 
 const peersDir = "../../testdata/peers"
@@ -46,19 +48,10 @@ func needPeers(t *testing.T) {
 	}
 }
 
-func freePort(t *testing.T) int {
-	t.Helper()
-	l, err := net.Listen("tcp", "127.0.0.1:0")
-	if err != nil {
-		t.Fatal(err)
-	}
-	defer l.Close()
-	return l.Addr().(*net.TCPAddr).Port
-}
-
 // child is another program, ended with the test if it still runs.
 type child struct {
 	cmd       *exec.Cmd
+	in        io.WriteCloser
 	out, errs bytes.Buffer
 }
 
@@ -67,6 +60,10 @@ func startChild(t *testing.T, dir, name string, args ...string) *child {
 	c := &child{cmd: exec.Command(name, args...)}
 	c.cmd.Dir = dir
 	c.cmd.Stdout, c.cmd.Stderr = &c.out, &c.errs
+	var err error
+	if c.in, err = c.cmd.StdinPipe(); err != nil {
+		t.Fatal(err)
+	}
 	c.cmd.SysProcAttr = &syscall.SysProcAttr{Pdeathsig: syscall.SIGKILL}
 	if err := c.cmd.Start(); err != nil {
 		t.Fatal(err)
@@ -84,9 +81,13 @@ func (c *child) end(sig syscall.Signal) int {
 	return c.cmd.ProcessState.ExitCode()
 }
 
+// hang is when a test gives up on something that must come: far beyond what the
+// slowest machine needs, so that no test hangs on how fast it is.
+const hang = 5 * time.Minute
+
 func soon(t *testing.T, what string, ok func() bool) {
 	t.Helper()
-	for deadline := time.Now().Add(60 * time.Second); !ok(); time.Sleep(20 * time.Millisecond) {
+	for deadline := time.Now().Add(hang); !ok(); time.Sleep(20 * time.Millisecond) {
 		if time.Now().After(deadline) {
 			t.Fatalf("waited in vain: %s", what)
 		}
@@ -111,17 +112,20 @@ func startMosquitto(t *testing.T, port int) *child {
 	return c
 }
 
-// startFeed publishes four loops, one scan a second, and counts what others
-// publish. It goes on, unheard, when the broker dies.
-func startFeed(t *testing.T, port, seconds int, truth string) *child {
+// startFeed publishes four loops, one scan a second, until alone, and counts what
+// others publish. It goes on, unheard, when the broker dies.
+func startFeed(t *testing.T, port int, truth string) *child {
 	t.Helper()
 	return startChild(t, filepath.Join(peersDir, "mqtt"), "node", "feed.mjs", "--port", strconv.Itoa(port), "--loops", "4", "--rate", "1",
-		"--form", "object", "--time", "ms", "--seconds", strconv.Itoa(seconds), "--truth", truth, "--quiet")
+		"--form", "object", "--time", "ms", "--seconds", "3600", "--told", "--truth", truth, "--quiet")
 }
 
-// alone waits for the end of a feed: it has heard nobody else publish.
+// alone ends a feed: it has heard nobody else publish.
 func (c *child) alone(t *testing.T) {
 	t.Helper()
+	if _, err := fmt.Fprintln(c.in, "end"); err != nil {
+		t.Error(err)
+	}
 	err := c.cmd.Wait()
 	var r struct{ Published, Foreign int }
 	if err := json.Unmarshal(c.out.Bytes(), &r); err != nil {
@@ -141,29 +145,37 @@ type opcuaPeer struct {
 
 func startOPCUA(t *testing.T, port int, pki string) *opcuaPeer {
 	t.Helper()
-	p := &opcuaPeer{control: freePort(t)}
+	p := &opcuaPeer{control: porttest.Hold(t)}
 	p.child = startChild(t, filepath.Join(peersDir, "opcua"), "node", "server.mjs", "--loops", "5", "--rate", "2", "--policies", "None",
 		"--port", strconv.Itoa(port), "--control", strconv.Itoa(p.control), "--pki", pki)
 	soon(t, "the OPC UA server listens", func() bool { return answers(port) })
 	return p
 }
 
+// ask has the server answer a question of tests.
+func (p *opcuaPeer) ask(t *testing.T, path string, into any) {
+	t.Helper()
+	c := http.Client{Timeout: hang, Transport: &http.Transport{DisableKeepAlives: true}}
+	res, err := c.Get(fmt.Sprintf("http://127.0.0.1:%d%s", p.control, path))
+	if err != nil {
+		t.Fatalf("asking the OPC UA server for %s: %v", path, err)
+	}
+	defer res.Body.Close()
+	if err := json.NewDecoder(res.Body).Decode(into); err != nil {
+		t.Fatalf("the answer of the OPC UA server to %s: %v", path, err)
+	}
+}
+
 // readOnly fails the test if the server was asked to change anything.
 func (p *opcuaPeer) readOnly(t *testing.T) {
 	t.Helper()
-	c := http.Client{Timeout: 10 * time.Second, Transport: &http.Transport{DisableKeepAlives: true}}
-	res, err := c.Get(fmt.Sprintf("http://127.0.0.1:%d/counts", p.control))
-	if err != nil {
-		t.Errorf("asking the OPC UA server for its counts: %v", err)
-		return
-	}
-	defer res.Body.Close()
 	var n struct {
 		Mutating *int
 		Counts   map[string]int
 	}
-	if err := json.NewDecoder(res.Body).Decode(&n); err != nil || n.Mutating == nil || n.Counts["PublishRequest"] == 0 {
-		t.Errorf("the counts of the OPC UA server: %v: %+v", err, n)
+	p.ask(t, "/counts", &n)
+	if n.Mutating == nil || n.Counts["PublishRequest"] == 0 {
+		t.Errorf("the counts of the OPC UA server: %+v", n)
 	} else if *n.Mutating != 0 {
 		t.Errorf("the OPC UA server counted %d requests that change something: %v", *n.Mutating, n.Counts)
 	}
@@ -290,6 +302,17 @@ func (w *watch) trendOf(loop string) []trendRow {
 	}
 	defer resp.Body.Close()
 	return readTrend(w.t, resp.Body)[loop]
+}
+
+// newest is the time of the newest frame with values of a loop, ms UTC; 0 before any.
+func (w *watch) newest(loop string) (at int64) {
+	w.t.Helper()
+	for _, r := range w.trendOf(loop) {
+		if r.pv != "" {
+			at = r.at
+		}
+	}
+	return at
 }
 
 // flows waits until a loop has n more frames with values.

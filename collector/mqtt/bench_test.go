@@ -126,7 +126,7 @@ func feedOnce(b *testing.B, form string) {
 	ctx, cancel := context.WithCancel(context.Background())
 	done := make(chan error, 1)
 	go func() { done <- s.Run(ctx, nowhere{}) }()
-	within(b, time.Minute, "watching", watching(s))
+	eventually(b, "watching", watching(s))
 	var before, after syscall.Rusage
 	syscall.Getrusage(syscall.RUSAGE_SELF, &before)
 	rep, _ := startFeed(b, m, "UTC", "--loops", fmt.Sprint(loops), "--rate", "1", "--form", form, "--time", "ms", "--seconds", "10").end()

@@ -24,7 +24,6 @@ const slice = 500
 
 // A client id used twice shows as connections that end soon after they began.
 const (
-	clashLife   = 15 * time.Second
 	clashLosses = 3
 	clashMemory = 10 * time.Minute
 )
@@ -37,7 +36,7 @@ type link struct {
 	problem  string
 	hint     string
 	refused  map[string]bool // filters that the broker refused
-	short    []time.Time     // ends of connections that lived less than clashLife
+	short    []time.Time     // ends of connections that lived less than pace.clash
 	clash    bool
 	attempts uint64
 	losses   uint64
@@ -76,7 +75,7 @@ func (s *source) stayConnected(ctx context.Context) {
 		if ctx.Err() != nil {
 			break
 		}
-		if watched && time.Since(began) > clashLife {
+		if watched && time.Since(began) > s.pace.clash {
 			wait = s.pace.backoff
 		}
 		if refusedByBroker(err) {
@@ -287,7 +286,7 @@ func (s *source) explain(err error, watched bool, lived time.Duration) (problem,
 	}
 	byEOF := errors.Is(err, io.EOF) || errors.Is(err, io.ErrUnexpectedEOF) || errors.Is(err, syscall.ECONNRESET) ||
 		err != nil && strings.HasSuffix(err.Error(), "EOF")
-	if s.clashing(watched && byEOF && lived < clashLife) {
+	if s.clashing(watched && byEOF && lived < s.pace.clash) {
 		return fmt.Sprintf("the broker ended %d connections soon after they began: another client uses this client id", clashLosses),
 			"give each program its own client_id; is a second midwatch running with a copy of this data folder?"
 	}

@@ -91,12 +91,13 @@ type pace struct {
 	connect                time.Duration
 	backoff, ceiling       time.Duration
 	tick                   time.Duration
+	clash                  time.Duration // a connection ended sooner may be another client's doing
 	silentPV, silentOther  time.Duration // never seen for so long: said
 }
 
 var usualPace = pace{
 	keepAlive: 10 * time.Second, pingTimeout: 5 * time.Second, connect: 15 * time.Second,
-	backoff: time.Second, ceiling: 30 * time.Second, tick: 500 * time.Millisecond,
+	backoff: time.Second, ceiling: 30 * time.Second, tick: 500 * time.Millisecond, clash: 15 * time.Second,
 	silentPV: time.Minute, silentOther: 10 * time.Minute,
 }
 

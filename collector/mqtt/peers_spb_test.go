@@ -1,11 +1,11 @@
 package mqtt
 
 import (
+	"context"
 	"strconv"
 	"strings"
 	"sync"
 	"testing"
-	"time"
 
 	"midwatch/collector"
 	"midwatch/configs"
@@ -152,13 +152,13 @@ func TestSparkplugLateJoiner(t *testing.T) {
 	store := &kept{}
 	cfg := configs.MQTT{Broker: m.url(), Payload: "sparkplug"}
 	first := build(t, cfg, Options{Births: store}, feedBindings("sparkplug", n)...)
-	ctx, cancel := contextWithin(time.Minute)
+	ctx, cancel := context.WithCancel(t.Context())
 	defer cancel()
 	done := make(chan error, 1)
 	r1 := &recorder{}
 	go func() { done <- first.Run(ctx, r1) }()
 	eventually(t, "watching", watching(first))
-	f := startFeed(t, m, "UTC", "--loops", strconv.Itoa(n), "--rate", "4", "--form", "sparkplug", "--seconds", "12", "--fault", "realias@8")
+	f := startFeed(t, m, "UTC", "--loops", strconv.Itoa(n), "--rate", "4", "--form", "sparkplug", "--seconds", "600", "--told")
 	eventually(t, "values by alias", func() bool { return len(r1.of(0, collector.RolePV)) > 3 })
 	cancel()
 	<-done
@@ -178,10 +178,12 @@ func TestSparkplugLateJoiner(t *testing.T) {
 		got := rw.of(0, collector.RolePV)
 		return len(got) > 2 && got[0].Unconfirmed && len(rw.tickList()) > 0
 	})
+	f.tell("realias")
 	eventually(t, "both know the names after the birth", func() bool {
 		b, w := rb.of(0, collector.RolePV), rw.of(0, collector.RolePV)
 		return len(b) > 2 && !b[len(b)-1].Unconfirmed && !w[len(w)-1].Unconfirmed
 	})
+	f.tell("end")
 	_, tr := f.end()
 	name, _ := feedLoop(0)
 	rows := map[int64]truthRow{}

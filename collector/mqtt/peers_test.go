@@ -5,6 +5,7 @@ import (
 	"encoding/csv"
 	"encoding/json"
 	"fmt"
+	"io"
 	"math"
 	"net"
 	"os"
@@ -16,6 +17,7 @@ import (
 	"time"
 
 	"midwatch/collector"
+	"midwatch/collector/porttest"
 	"midwatch/configs"
 )
 
@@ -55,12 +57,7 @@ type mosquitto struct {
 func newMosquitto(t testing.TB, lines ...string) *mosquitto {
 	t.Helper()
 	needPeers(t)
-	l, err := net.Listen("tcp", "127.0.0.1:0")
-	if err != nil {
-		t.Fatal(err)
-	}
-	m := &mosquitto{t: t, port: l.Addr().(*net.TCPAddr).Port, conf: filepath.Join(t.TempDir(), "mosquitto.conf")}
-	l.Close()
+	m := &mosquitto{t: t, port: porttest.Hold(t), conf: filepath.Join(t.TempDir(), "mosquitto.conf")}
 	if len(lines) == 0 {
 		lines = []string{"allow_anonymous true"}
 	}
@@ -121,6 +118,7 @@ type feed struct {
 	cmd   *exec.Cmd
 	out   bytes.Buffer
 	errs  bytes.Buffer
+	in    io.WriteCloser // faults and the end, with --told
 	truth string
 }
 
@@ -132,6 +130,10 @@ func startFeed(t testing.TB, m *mosquitto, zone string, args ...string) *feed {
 	f.cmd.Dir = feedDir
 	f.cmd.Env = append(os.Environ(), "TZ="+zone)
 	f.cmd.Stdout, f.cmd.Stderr = &f.out, &f.errs
+	var err error
+	if f.in, err = f.cmd.StdinPipe(); err != nil {
+		t.Fatal(err)
+	}
 	if err := f.cmd.Start(); err != nil {
 		t.Fatal(err)
 	}
@@ -142,6 +144,14 @@ func startFeed(t testing.TB, m *mosquitto, zone string, args ...string) *feed {
 		}
 	})
 	return f
+}
+
+// tell has the feed do something before its next scan: a fault, or "end".
+func (f *feed) tell(what string) {
+	f.t.Helper()
+	if _, err := fmt.Fprintln(f.in, what); err != nil {
+		f.t.Fatal(err)
+	}
 }
 
 // end waits for the feed. Its exit code proves that nobody else published.
@@ -254,7 +264,7 @@ func TestTextFormsAgainstFeed(t *testing.T) {
 				if len(rows) < 20 {
 					t.Fatalf("%s: only %d rows of truth", name, len(rows))
 				}
-				within(t, 5*time.Second, name+" is complete", func() bool { return len(r.of(collector.LoopID(i), collector.RolePV)) >= len(rows) })
+				eventually(t, name+" is complete", func() bool { return len(r.of(collector.LoopID(i), collector.RolePV)) >= len(rows) })
 				for role, of := range map[collector.Role]func(truthRow) float64{
 					collector.RolePV: func(x truthRow) float64 { return x.pv },
 					collector.RoleSP: func(x truthRow) float64 { return x.sp },

@@ -1,6 +1,8 @@
 package mqtt
 
 import (
+	"context"
+	"fmt"
 	"math"
 	"strings"
 	"testing"
@@ -315,8 +317,6 @@ func TestSparkplugBirthSaysRange(t *testing.T) {
 	t.Parallel()
 	b := newBroker(t, nil)
 	s := build(t, configs.MQTT{Broker: b.url(), Payload: "sparkplug"}, Options{}, bind(1, collector.RolePV, "KestrelFen/edge-1/bay1#LIC-310/PV"), bind(1, collector.RoleSP, "KestrelFen/edge-1/bay1#LIC-310/SetPoint"))
-	ctx, cancel := contextWithin(2 * time.Second)
-	defer cancel()
 	props := spb{}.text(1, "engUnit").text(1, "engLow").text(1, "engHigh").
 		bytes(2, spb{}.varint(1, spbString).text(8, "m")).bytes(2, spb{}.varint(1, spbDouble).double(6, 0.5)).bytes(2, spb{}.varint(1, spbDouble).double(6, 4.5))
 	stop := make(chan struct{})
@@ -333,16 +333,18 @@ func TestSparkplugBirthSaysRange(t *testing.T) {
 			}
 		}
 	}()
-	got, err := s.Probe(ctx)
-	close(stop)
-	<-stopped
-	if err != nil {
-		t.Fatal(err)
-	}
-	if g := got[0]; g.Err != nil || g.Text != "2" || g.EULow != 0.5 || g.EUHigh != 4.5 || g.Unit != "m" {
-		t.Errorf("%+v", g)
-	}
-	if g := got[1]; g.Err == nil || !strings.Contains(g.Err.Error(), `no metric "LIC-310/SetPoint"`) {
-		t.Errorf("%+v", g)
-	}
+	defer func() { close(stop); <-stopped }()
+	listening(t, func(ctx context.Context) string {
+		got, err := s.Probe(ctx)
+		if err != nil {
+			return err.Error()
+		}
+		if g := got[0]; g.Err != nil || g.Text != "2" || g.EULow != 0.5 || g.EUHigh != 4.5 || g.Unit != "m" {
+			return fmt.Sprintf("%+v", g)
+		}
+		if g := got[1]; g.Err == nil || !strings.Contains(g.Err.Error(), `no metric "LIC-310/SetPoint"`) {
+			return fmt.Sprintf("%+v", g)
+		}
+		return ""
+	})
 }

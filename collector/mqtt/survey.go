@@ -68,7 +68,7 @@ func (s *source) Survey(ctx context.Context) ([]*configs.Loop, error) {
 	defer p.mu.Unlock()
 	switch {
 	case p.watched == 0:
-		return nil, fmt.Errorf("source %s: %s; hint: %s", s.name, orElse(state.Problem, "no connection in the time given"), orElse(state.Hint, "check address, port and firewall"))
+		return nil, fmt.Errorf("source %s: %s; hint: %s", s.name, orElse(state.Problem, "no connection to "+s.target.addr+" in the time given"), orElse(state.Hint, "check address, port and firewall"))
 	case refused[p.filters[0]]:
 		return nil, fmt.Errorf("source %s: the broker refuses to let this login read %s; hint: a survey needs that permission, watching does not", s.name, p.filters[0])
 	case len(topics) == 0:

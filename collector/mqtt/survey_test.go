@@ -1,9 +1,10 @@
 package mqtt
 
 import (
+	"context"
+	"fmt"
 	"strings"
 	"testing"
-	"time"
 
 	"midwatch/configs"
 )
@@ -21,33 +22,35 @@ func TestSurvey(t *testing.T) {
 		b.publish(topic, payload, true)
 	}
 	s := build(t, configs.MQTT{Broker: b.url()}, Options{})
-	ctx, cancel := contextWithin(700 * time.Millisecond)
-	defer cancel()
-	got, err := s.Survey(ctx)
-	if err != nil {
-		t.Fatal(err)
-	}
 	want := []string{
 		"LIC-310 kestrelfen/bay1/LIC-310/pv kestrelfen/bay1/LIC-310/sp kestrelfen/bay1/LIC-310/OUT kestrelfen/bay1/LIC-310/mode",
 		"bay2.LIC-310 kestrelfen/bay2/LIC-310/pv#value kestrelfen/bay2/LIC-310/sp#value  ",
 		"FIC-7 kestrelfen/bay3/FIC-7#pv kestrelfen/bay3/FIC-7#sp kestrelfen/bay3/FIC-7#mv ",
 		"AIC-204 kestrelfen/bay4/all#['AIC-204.PV'] kestrelfen/bay4/all#['AIC-204.SP'] kestrelfen/bay4/all#['AIC-204.OP'] ",
 	}
-	lines := map[string]bool{}
-	for _, l := range got {
-		lines[strings.Join([]string{l.Name, l.PV, l.SP, l.OP, l.ModeTag}, " ")] = true
-		if l.Source != "gateway" {
-			t.Errorf("source %q", l.Source)
+	var got []*configs.Loop
+	listening(t, func(ctx context.Context) string {
+		var err error
+		if got, err = s.Survey(ctx); err != nil {
+			return err.Error()
 		}
-	}
-	for _, w := range want {
-		if !lines[w] {
-			t.Errorf("missing %q in %v", w, lines)
+		lines := map[string]bool{}
+		for _, l := range got {
+			lines[strings.Join([]string{l.Name, l.PV, l.SP, l.OP, l.ModeTag}, " ")] = true
+			if l.Source != "gateway" {
+				t.Errorf("source %q", l.Source)
+			}
 		}
-	}
-	if len(got) != len(want) {
-		t.Errorf("%d loops, want %d: %v", len(got), len(want), lines)
-	}
+		for _, w := range want {
+			if !lines[w] {
+				return fmt.Sprintf("missing %q in %v", w, lines)
+			}
+		}
+		if len(got) != len(want) {
+			return fmt.Sprintf("%d loops, want %d: %v", len(got), len(want), lines)
+		}
+		return ""
+	})
 	// The draft can be watched as it is.
 	for _, l := range got {
 		for _, a := range []string{l.PV, l.SP} {
@@ -67,11 +70,12 @@ func TestSurveyFailsInWords(t *testing.T) {
 		"no broker": {"mqtt://127.0.0.1:1", "nothing listens", false},
 	} {
 		t.Run(name, func(t *testing.T) {
-			ctx, cancel := contextWithin(300 * time.Millisecond)
-			defer cancel()
-			if _, err := build(t, configs.MQTT{Broker: c.broker}, Options{}).Survey(ctx); err == nil || !strings.Contains(err.Error(), c.want) {
-				t.Errorf("%v", err)
-			}
+			listening(t, func(ctx context.Context) string {
+				if _, err := build(t, configs.MQTT{Broker: c.broker}, Options{}).Survey(ctx); err == nil || !strings.Contains(err.Error(), c.want) {
+					return fmt.Sprint(err)
+				}
+				return ""
+			})
 		})
 	}
 }
@@ -83,12 +87,14 @@ func TestSurveySparkplug(t *testing.T) {
 	if err := b.srv.Publish("$sparkplug/certificates/"+db, spbMessage(noon, 1, named("LIC-310/PV").double(13, 2).bytes(9, props), named("LIC-310/SP").double(13, 2), named("Uptime").double(13, 2)), true, 0); err != nil {
 		t.Fatal(err)
 	}
-	ctx, cancel := contextWithin(500 * time.Millisecond)
-	defer cancel()
-	got, err := build(t, configs.MQTT{Broker: b.url(), Payload: "sparkplug"}, Options{}).Survey(ctx)
-	if err != nil || len(got) != 1 {
-		t.Fatalf("%v, %d loops", err, len(got))
-	}
+	var got []*configs.Loop
+	listening(t, func(ctx context.Context) string {
+		var err error
+		if got, err = build(t, configs.MQTT{Broker: b.url(), Payload: "sparkplug"}, Options{}).Survey(ctx); err != nil || len(got) != 1 {
+			return fmt.Sprintf("%v, %d loops", err, len(got))
+		}
+		return ""
+	})
 	if l := got[0]; l.Name != "LIC-310" || l.PV != "KestrelFen/edge-1/bay1#LIC-310/PV" || l.PVLow != 0.5 || l.PVHigh != 4.5 || !l.PVRangeGiven {
 		t.Errorf("%+v", l)
 	}

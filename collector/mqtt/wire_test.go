@@ -102,7 +102,7 @@ func TestGuardStopsTheClient(t *testing.T) {
 		o := paho.NewClientOptions().AddBroker("tcp://" + b.addr).SetClientID("guarded").SetProtocolVersion(4).
 			SetAutoReconnect(false).SetCustomOpenConnectionFn(guardedDial(b.addr))
 		c := paho.NewClient(o)
-		if tok := c.Connect(); !tok.WaitTimeout(5*time.Second) || tok.Error() != nil {
+		if tok := c.Connect(); !tok.WaitTimeout(hang) || tok.Error() != nil {
 			t.Fatal(tok.Error())
 		}
 		tok := c.Publish("spBv1.0/KestrelFen/NCMD/edge-1", qos, false, "x")
@@ -112,7 +112,7 @@ func TestGuardStopsTheClient(t *testing.T) {
 	o := paho.NewClientOptions().AddBroker("tcp://"+b.addr).SetClientID("guarded").SetProtocolVersion(4).
 		SetAutoReconnect(false).SetWill("kestrelfen/gone", "x", 1, false).SetCustomOpenConnectionFn(guardedDial(b.addr))
 	c := paho.NewClient(o)
-	if tok := c.Connect(); !tok.WaitTimeout(5*time.Second) || tok.Error() == nil {
+	if tok := c.Connect(); !tok.WaitTimeout(hang) || tok.Error() == nil {
 		t.Error("a connection with a will was made")
 	}
 	// A message by the broker itself comes behind anything that slipped through.

@@ -53,7 +53,7 @@ func (s *Source) build(ctx context.Context, sess *session) error {
 }
 
 func (s *Source) buildOne(ctx context.Context, sess *session, sub *subscription) error {
-	lifetime := max(60, 10*s.cfg.KeepAliveCount)
+	lifetime := max(s.pace.lifetime, 10*s.cfg.KeepAliveCount)
 	res, err := sess.subscribe(ctx, &ua.CreateSubscriptionRequest{
 		RequestedPublishingInterval: float64(s.cfg.Publish.Milliseconds()),
 		RequestedMaxKeepAliveCount:  uint32(s.cfg.KeepAliveCount),

@@ -39,6 +39,7 @@ type pace struct {
 	refused                  time.Duration // between tries of refused tags
 	slack                    time.Duration // added to two keep-alives before the link is called dead
 	look                     time.Duration // between looks of the watchdog
+	lifetime                 int           // of a subscription without its client, in publishing intervals, at least
 	sessionLife              time.Duration // asked of the server; short, so that a lost session frees its place soon
 	token                    time.Duration // lifetime of the secure channel's key; 0 = an hour
 	queue                    time.Duration // what the server's queues are asked to cover
@@ -52,7 +53,7 @@ func usualPace() pace {
 		backoffMin: 500 * time.Millisecond, backoffMax: 30 * time.Second,
 		lockout: 5 * time.Minute, distrust: time.Minute, stable: 10 * time.Second,
 		refused: 3 * time.Minute, slack: time.Second, look: 250 * time.Millisecond,
-		sessionLife: time.Minute, queue: time.Minute,
+		lifetime: 60, sessionLife: time.Minute, queue: time.Minute,
 		sessionsPerMinute: 10, maxItems: 1000, maxOutstanding: 4,
 	}
 }

@@ -43,7 +43,7 @@ func TestAgainstPlant(t *testing.T) {
 		}
 	}
 	w := run(t, plainConfig(srv.Endpoint()), bindings, nil)
-	eventually(t, 15*time.Second, "PVs, modes and ticks of all loops", func() bool {
+	eventually(t, "PVs, modes and ticks of all loops", func() bool {
 		for i := range list {
 			if len(w.in.of(collector.LoopID(i), collector.RolePV)) < 3 || len(w.in.of(collector.LoopID(i), collector.RoleMode)) == 0 {
 				return false

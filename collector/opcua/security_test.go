@@ -69,10 +69,10 @@ func TestSecuredPolicies(t *testing.T) {
 		c := user("Aes256_Sha256_RsaPss", "SignAndEncrypt")
 		c.Endpoint = x.url()
 		w := run(t, c, bind(1), func(s *Source) { s.keys = keys })
-		w.flows(t, 20*time.Second)
+		w.flows(t)
 		x.cut()
-		eventually(t, 10*time.Second, "resumed", func() bool { return w.State().Counts["resumed"] == 1 })
-		w.flows(t, 10*time.Second)
+		eventually(t, "resumed", func() bool { return w.State().Counts["resumed"] > 0 })
+		w.flows(t)
 		if st := w.State(); st.ServerCertDays <= 0 {
 			t.Errorf("days left of the server's certificate: %d", st.ServerCertDays)
 		}
@@ -81,7 +81,7 @@ func TestSecuredPolicies(t *testing.T) {
 		c := user("Basic256Sha256", "SignAndEncrypt")
 		c.Password = "wrong"
 		w := run(t, c, bind(1), func(s *Source) { s.keys = keys })
-		eventually(t, 10*time.Second, "refused", func() bool { return w.State().Problem != "" })
+		eventually(t, "refused", func() bool { return w.State().Problem != "" })
 		time.Sleep(1500 * time.Millisecond) // in which a hasty client would try again
 		st := w.State()
 		if st.Counts["sessions"] != 1 || !strings.Contains(st.Problem, "midwatch") || !strings.Contains(st.Hint, "password_file") {
@@ -109,7 +109,7 @@ func TestSecuredPolicies(t *testing.T) {
 			{Endpoint: p.url, Security: "Basic256Sha256", User: "midwatch", Password: "secret", CAFile: file},
 		} {
 			w := run(t, c, bind(1), func(s *Source) { s.keys = keys })
-			eventually(t, 10*time.Second, "refused", func() bool { return w.State().Problem != "" })
+			eventually(t, "refused", func() bool { return w.State().Problem != "" })
 			time.Sleep(time.Second) // in which a hasty client would try again
 			st := w.State()
 			if st.Counts["sessions"] != 0 || st.Counts["attempts"] != 1 || !strings.Contains(st.Problem, "not trusted") || st.Hint == "" {

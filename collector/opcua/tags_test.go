@@ -101,7 +101,7 @@ func oddTypes(t *testing.T, p *peer) {
 		t.Fatalf("the plant's namespace is %d, this test wants 2", p.index)
 	}
 	// The last round over the server's own values: everything that will come has.
-	eventually(t, 15*time.Second, "values of all tags that have one", func() bool { return w.in.len() >= len(tests)-2+len(paths) })
+	eventually(t, "values of all tags that have one", func() bool { return w.in.len() >= len(tests)-2+len(paths) })
 	refusals := map[string]string{}
 	for _, r := range w.State().Refused {
 		refusals[r.Address] = r.Why
@@ -114,7 +114,8 @@ func oddTypes(t *testing.T, p *peer) {
 			}
 			continue
 		}
-		if len(got) != 1 {
+		// What cannot be read is said each time it is asked for again.
+		if len(got) == 0 || len(got) > 1 && (got[0].Quality != collector.Bad || w.State().Counts["asked_again"] == 0) {
 			t.Errorf("%s: %d samples, want 1", c.name, len(got))
 			continue
 		}
@@ -134,10 +135,10 @@ func oddTypes(t *testing.T, p *peer) {
 	}
 	// Unknown nodes and a cut link: all others go on.
 	x.cut()
-	eventually(t, 10*time.Second, "resumed", func() bool { return w.State().Counts["resumed"] == 1 })
+	eventually(t, "resumed", func() bool { return w.State().Counts["resumed"] > 0 })
 	tick := w.in.lastTick().Through
-	eventually(t, 5*time.Second, "ticks go on", func() bool { return w.in.lastTick().Through > tick })
-	eventually(t, 5*time.Second, "refused tags are asked for again", func() bool { return w.State().Counts["asked_again"] > 0 })
+	eventually(t, "ticks go on", func() bool { return w.in.lastTick().Through > tick })
+	eventually(t, "refused tags are asked for again", func() bool { return w.State().Counts["asked_again"] > 0 })
 
 	results, err := w.Probe(t.Context())
 	if err != nil {
@@ -161,8 +162,8 @@ func TestLimitsProbeSurveyHistory(t *testing.T) {
 	p := startPeer(t, "--loops", "30", "--rate", "2", "--max-per-call", "7", "--max-browse", "2", "--history", "--flat", "--host", "plc-7.kestrel-fen.example")
 	// Six subscriptions of five loops each: five times four tags, and two of the server.
 	w := run(t, plainConfig(p.url), bind(30), func(s *Source) { s.subs = plan(bind(30), 3, 22) })
-	w.flows(t, 20*time.Second)
-	eventually(t, 10*time.Second, "each life group ticks", func() bool {
+	w.flows(t)
+	eventually(t, "each life group ticks", func() bool {
 		w.in.mu.Lock()
 		defer w.in.mu.Unlock()
 		ticking := map[collector.Group]bool{}
@@ -209,7 +210,7 @@ func TestLimitsProbeSurveyHistory(t *testing.T) {
 			}
 		}
 	}
-	eventually(t, 10*time.Second, "six values of a PV", func() bool { return len(w.in.of(2, collector.RolePV)) >= 6 })
+	eventually(t, "six values of a PV", func() bool { return len(w.in.of(2, collector.RolePV)) >= 6 })
 	live := w.in.of(2, collector.RolePV)
 	var old []collector.Sample
 	from, to := live[1].Time, live[5].Time
@@ -233,7 +234,7 @@ func TestLimitsProbeSurveyHistory(t *testing.T) {
 	if len(pv) != 4 {
 		t.Errorf("history has %d values of a PV, want 4", len(pv))
 	}
-	eventually(t, 5*time.Second, "only the watch's session is left", func() bool { return p.counts().Sessions == 1 })
+	eventually(t, "only the watch's session is left", func() bool { return p.counts().Sessions == 1 })
 }
 
 // TestRefusingServer holds the promise that a server in trouble is not flooded.
@@ -255,15 +256,15 @@ func TestRefusingServer(t *testing.T) {
 			c.Close()
 		}
 	}()
+	start := time.Now()
 	w := run(t, plainConfig("opc.tcp://"+l.Addr().String()), bind(1), func(s *Source) {
 		s.pace.backoffMin, s.pace.backoffMax = 100*time.Millisecond, 400*time.Millisecond
 	})
-	eventually(t, 10*time.Second, "four attempts", func() bool { return w.State().Counts["attempts"] >= 4 })
-	start, first := time.Now(), dials.Load()
 	time.Sleep(4 * time.Second) // the span over which attempts are counted
-	n, span := dials.Load()-first, time.Since(start)
-	if most := int32(span/(300*time.Millisecond)) + 1; n > most || n < 4 { // 400 ms less a quarter
-		t.Errorf("%d connections within %s, want 4 to %d", n, span, most)
+	eventually(t, "eight attempts", func() bool { return w.State().Counts["attempts"] >= 8 })
+	n, span := dials.Load(), time.Since(start)
+	if most := int32(span/(300*time.Millisecond)) + 4; n > most { // 400 ms less a quarter, after three that come sooner
+		t.Errorf("%d connections within %s, want %d at most", n, span, most)
 	}
 	if st := w.State(); st.Link == "watching" || st.Problem == "" {
 		t.Errorf("state %+v", st)

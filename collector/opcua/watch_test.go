@@ -18,7 +18,7 @@ func TestAgainstPeer(t *testing.T) {
 	t.Parallel()
 	p := startPeer(t, "--loops", "5", "--rate", "2", "--odd", "--flat")
 	t.Cleanup(func() {
-		eventually(t, 5*time.Second, "all sessions are closed on the server", func() bool { return p.counts().Sessions == 0 })
+		eventually(t, "all sessions are closed on the server", func() bool { return p.counts().Sessions == 0 })
 	})
 	for _, c := range []struct {
 		name string
@@ -38,7 +38,7 @@ func TestAgainstPeer(t *testing.T) {
 
 func valuesModesAndTicks(t *testing.T, p *peer) {
 	w := run(t, plainConfig(p.url), bind(5), nil)
-	eventually(t, 15*time.Second, "ten PVs of each loop", func() bool {
+	eventually(t, "ten PVs of each loop", func() bool {
 		for i := range 5 {
 			if len(w.in.of(collector.LoopID(i), collector.RolePV)) < 10 {
 				return false
@@ -52,7 +52,7 @@ func valuesModesAndTicks(t *testing.T, p *peer) {
 			t.Errorf("PVs of loop %d are not in the order of their times", i)
 		}
 		for _, s := range pv {
-			if s.Quality != collector.Good || s.Lost || s.Arrived-s.Time > 10_000 || s.Arrived < s.Time-1000 {
+			if s.Quality != collector.Good || s.Lost || s.Arrived-s.Time > hang.Milliseconds() || s.Arrived < s.Time-1000 {
 				t.Fatalf("sample %+v", s)
 			}
 		}
@@ -70,7 +70,7 @@ func valuesModesAndTicks(t *testing.T, p *peer) {
 		t.Errorf("group %v joined loops %v, want 5", g, got)
 	}
 	tick := w.in.lastTick()
-	if late := time.Now().UnixMilli() - tick.Through; tick.Group != g || late < 0 || late > 10_000 {
+	if late := time.Now().UnixMilli() - tick.Through; tick.Group != g || late < 0 || late > hang.Milliseconds() {
 		t.Errorf("last tick %+v is %d ms behind", tick, late)
 	}
 	st := w.State()
@@ -78,12 +78,12 @@ func valuesModesAndTicks(t *testing.T, p *peer) {
 		t.Errorf("state %+v", st)
 	}
 	p.ask("/mode?loop="+tagName(3)+"&value=2", nil)
-	eventually(t, 5*time.Second, "mode change", func() bool {
+	eventually(t, "mode change", func() bool {
 		m := w.in.of(3, collector.RoleMode)
 		return (&collector.ModeMap{}).Mode(m[len(m)-1].Value, 0) == collector.Cascade
 	})
 	p.ask("/state?loop="+tagName(4)+"&code=BadSensorFailure", nil)
-	eventually(t, 5*time.Second, "bad PV", func() bool {
+	eventually(t, "bad PV", func() bool {
 		pv := w.in.of(4, collector.RolePV)
 		last := pv[len(pv)-1]
 		return last.Quality == collector.Bad && last.Value != last.Value
@@ -97,23 +97,21 @@ func cutLink(t *testing.T, p *peer) {
 	x := startProxy(t, p.port)
 	whole := run(t, plainConfig(p.url), bind(3), nil)
 	w := run(t, plainConfig(x.url()), bind(3), nil)
-	whole.flows(t, 15*time.Second)
-	w.flows(t, 15*time.Second)
+	whole.flows(t)
+	w.flows(t)
 	for i := range 5 {
 		x.cut()
-		eventually(t, 10*time.Second, "resumed", func() bool { return w.State().Counts["resumed"] > uint64(i) })
-		w.flows(t, 10*time.Second)
+		eventually(t, "resumed", func() bool { return w.State().Counts["resumed"] > uint64(i) })
+		w.flows(t)
 	}
 	x.refuse.Store(true)
 	x.cut()
-	eventually(t, 5*time.Second, "down", func() bool { return w.State().Link != "watching" })
+	eventually(t, "down", func() bool { return w.State().Link != "watching" })
 	time.Sleep(3 * time.Second) // the outage itself, not a wait for something
+	again := time.Now().UnixMilli()
 	x.refuse.Store(false)
-	w.flows(t, 10*time.Second)
-	eventually(t, 5*time.Second, "caught up", func() bool {
-		pv := w.in.of(0, collector.RolePV)
-		return time.Now().UnixMilli()-pv[len(pv)-1].Time < 3000
-	})
+	w.flows(t)
+	eventually(t, "caught up", func() bool { return w.in.newest(0).Time > again })
 	st := w.State()
 	if st.Counts["fresh"] != 1 || st.Counts["sessions"] != 1 || st.Counts["resumed"] < 6 || st.Counts["gaps"] != 0 {
 		t.Errorf("counts %v, want one fresh session, all else resumed, no gap", st.Counts)
@@ -121,13 +119,7 @@ func cutLink(t *testing.T, p *peer) {
 	for i := range 3 {
 		nothingLost(t, w, whole, collector.LoopID(i))
 	}
-	dead := 0
-	for _, tick := range w.in.ticks {
-		if !tick.Alive {
-			dead++
-		}
-	}
-	if dead < 6 {
+	if dead := w.in.dead(); dead < 6 {
 		t.Errorf("%d ticks said that the link is lost, want one for each outage", dead)
 	}
 }
@@ -138,23 +130,21 @@ func stalledLink(t *testing.T, p *peer) {
 	cfg.KeepAliveCount = 4 // dead after 2 * 4 * 0.5 s + 1 s
 	whole := run(t, plainConfig(p.url), bind(2), nil)
 	w := run(t, cfg, bind(2), func(s *Source) {
-		s.pace.dial, s.pace.call = time.Second, 2*time.Second
-		s.pace.token = 4 * time.Second // the key of the channel falls due while the link is stalled
+		s.pace.dial, s.pace.call = 10*time.Second, 10*time.Second // within the stall, so that it is tried again behind it
+		s.pace.token = 4 * time.Second                            // the key of the channel falls due while the link is stalled
 	})
-	w.flows(t, 15*time.Second)
+	w.flows(t)
 	x.stalled.Store(true)
 	start := time.Now()
-	eventually(t, 10*time.Second, "the watchdog fires", func() bool { return w.State().Link != "watching" })
-	if d := time.Since(start); d < 4*time.Second || d > 14*time.Second {
-		t.Errorf("the watchdog fired after %s, want two keep-alives and a second: 5 s", d)
+	eventually(t, "the watchdog fires", func() bool { return w.State().Link != "watching" })
+	if d := time.Now().UnixMilli() - w.in.newest(0).Arrived; d < 5000 {
+		t.Errorf("the watchdog fired %d ms after a value, want two keep-alives and a second: 5 s", d)
 	}
 	time.Sleep(time.Until(start.Add(15 * time.Second)))
+	again := time.Now().UnixMilli()
 	x.stalled.Store(false)
-	w.flows(t, 15*time.Second)
-	eventually(t, 8*time.Second, "caught up", func() bool {
-		pv := w.in.of(0, collector.RolePV)
-		return time.Now().UnixMilli()-pv[len(pv)-1].Time < 3000
-	})
+	w.flows(t)
+	eventually(t, "caught up", func() bool { return w.in.newest(0).Time > again })
 	st := w.State()
 	if st.Counts["resumed"] == 0 || st.Counts["fresh"] != 1 {
 		t.Errorf("counts %v, want a resumed session", st.Counts)
@@ -166,20 +156,20 @@ func TestServerForgets(t *testing.T) {
 	t.Parallel()
 	p := startPeer(t, "--loops", "2", "--rate", "2")
 	w := run(t, plainConfig(p.url), bind(2), nil)
-	w.flows(t, 15*time.Second)
+	w.flows(t)
 	p.ask("/drop-subscriptions", nil)
-	eventually(t, 10*time.Second, "a new subscription", func() bool { return w.State().Counts["fresh"] == 2 })
-	w.flows(t, 10*time.Second)
+	eventually(t, "a new subscription", func() bool { return w.State().Counts["fresh"] == 2 })
+	w.flows(t)
 	p.ask("/drop-sessions", nil)
-	eventually(t, 10*time.Second, "a new session", func() bool { return w.State().Counts["fresh"] == 3 })
-	w.flows(t, 10*time.Second)
-	eventually(t, 5*time.Second, "no session is left behind", func() bool { return p.counts().Sessions == 1 })
+	eventually(t, "a new session", func() bool { return w.State().Counts["fresh"] == 3 })
+	w.flows(t)
+	eventually(t, "no session is left behind", func() bool { return p.counts().Sessions == 1 })
 	w.stop()
 
 	// Sessions that break at once are made at a bounded rate.
-	before := p.counts().Counts["CreateSessionRequest"]
+	before, begin := p.counts().Counts["CreateSessionRequest"], time.Now()
 	w = run(t, plainConfig(p.url), bind(1), func(s *Source) { s.pace.sessionsPerMinute = 3; s.pace.stable = time.Hour })
-	eventually(t, 30*time.Second, "the ceiling is met", func() bool {
+	eventually(t, "the ceiling is met", func() bool {
 		p.ask("/drop-sessions", nil)
 		return w.State().Counts["throttled"] > 0
 	})
@@ -187,11 +177,12 @@ func TestServerForgets(t *testing.T) {
 		p.ask("/drop-sessions", nil)
 		time.Sleep(100 * time.Millisecond) // the server's trouble goes on
 	}
-	if st := w.State(); st.Counts["sessions"] != 3 {
-		t.Errorf("counts %v, want 3 sessions", st.Counts)
+	n, most := p.counts().Counts["CreateSessionRequest"]-before, 3*(1+int(time.Since(begin)/time.Minute))
+	if n < 3 || n > most {
+		t.Errorf("the server counted %d sessions, want 3 to %d", n, most)
 	}
-	if n := p.counts().Counts["CreateSessionRequest"] - before; n != 3 {
-		t.Errorf("the server counted %d sessions, want 3", n)
+	if st := w.State(); st.Counts["sessions"] < uint64(n) || st.Counts["sessions"] > uint64(3*(1+int(time.Since(begin)/time.Minute))) {
+		t.Errorf("counts %v, the server counted %d sessions", st.Counts, n)
 	}
 }
 
@@ -200,13 +191,13 @@ func TestRestartMovesNamespaceAndClock(t *testing.T) {
 	p := startPeer(t, "--loops", "2", "--rate", "2")
 	bindings := bind(2)
 	w := run(t, plainConfig(p.url), bindings, nil)
-	w.flows(t, 15*time.Second)
+	w.flows(t)
 	was := p.index
 	p.readOnly()
 	p.stop()
-	eventually(t, 10*time.Second, "down", func() bool { st := w.State(); return st.Link != "watching" && st.Problem != "" && st.Hint != "" })
+	eventually(t, "down", func() bool { st := w.State(); return st.Link != "watching" && st.Problem != "" && st.Hint != "" })
 	p.start("--loops", "2", "--rate", "2", "--shift-ns", "3", "--skew-ms=-3600000")
-	w.flows(t, 20*time.Second)
+	w.flows(t)
 	if p.index == was {
 		t.Fatalf("the namespace did not move: %d", p.index)
 	}
@@ -214,7 +205,7 @@ func TestRestartMovesNamespaceAndClock(t *testing.T) {
 		t.Errorf("state after the restart: %+v", st)
 	}
 	// The server came back with a wrong time zone: said, never mended silently.
-	eventually(t, 60*time.Second, "the zone fault is named", func() bool { return strings.Contains(w.State().Problem, "time zone") })
+	eventually(t, "the zone fault is named", func() bool { return strings.Contains(w.State().Problem, "time zone") })
 	pv := w.in.of(0, collector.RolePV)
 	if last := pv[len(pv)-1]; last.Arrived-last.Time < 3_590_000 {
 		t.Errorf("the source's time was shifted: %+v", last)

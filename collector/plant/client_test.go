@@ -40,7 +40,7 @@ func TestClientsComeAndGo(t *testing.T) {
 	}
 	first := &seen{times: map[string][]int64{}}
 	stop := watch(t, cut, first, 50*time.Millisecond, pvTags(8))
-	wait(t, "values for the first client", 5*time.Second, func() bool { return first.newest(pvTags(1)[0]) > 0 })
+	wait(t, "values for the first client", func() bool { return first.newest(pvTags(1)[0]) > 0 })
 	cutLine()
 	stop()
 	_ = cut.Close(context.Background())
@@ -49,17 +49,17 @@ func TestClientsComeAndGo(t *testing.T) {
 	c := client(t, s)
 	got := &seen{times: map[string][]int64{}}
 	stop = watch(t, c, got, 20*time.Millisecond, pvTags(8))
-	wait(t, "a minute of plant time after the cut", 10*time.Second, func() bool { return s.PlantTime().Sub(at) > time.Minute })
+	wait(t, "a minute of plant time after the cut", func() bool { return s.PlantTime().Sub(at) > time.Minute })
 	to := s.PlantTime().UnixMilli()
 	for _, tag := range pvTags(8) {
-		wait(t, tag, 5*time.Second, func() bool { return got.newest(tag) >= to })
+		wait(t, tag, func() bool { return got.newest(tag) >= to })
 		got.complete(t, tag, 1000, to)
 	}
 	stop()
 	if err := c.Close(context.Background()); err != nil {
 		t.Error(err)
 	}
-	wait(t, "subscriptions of sessions that are gone", 15*time.Second, func() bool {
+	wait(t, "subscriptions of sessions that are gone", func() bool {
 		s.ua.subs.mu.Lock()
 		defer s.ua.subs.mu.Unlock()
 		return len(s.ua.subs.subs) <= 1 // the session that was cut off lives on: it could come back
@@ -109,7 +109,7 @@ func TestOverflow(t *testing.T) {
 	}
 	c := client(t, s)
 	var create ua.CreateSubscriptionResponse
-	err = c.Send(t.Context(), &ua.CreateSubscriptionRequest{RequestedPublishingInterval: 50, RequestedLifetimeCount: 1000, RequestedMaxKeepAliveCount: 5, PublishingEnabled: true},
+	err = c.Send(t.Context(), &ua.CreateSubscriptionRequest{RequestedPublishingInterval: 50, RequestedLifetimeCount: uint32(hang / (50 * time.Millisecond)), RequestedMaxKeepAliveCount: 5, PublishingEnabled: true},
 		func(r ua.Response) error { create = *r.(*ua.CreateSubscriptionResponse); return nil })
 	if err != nil {
 		t.Fatal(err)
@@ -120,7 +120,7 @@ func TestOverflow(t *testing.T) {
 	if err != nil {
 		t.Fatal(err)
 	}
-	wait(t, "a queue that has overflown", 10*time.Second, func() bool { return s.Dropped() > 100 })
+	wait(t, "a queue that has overflown", func() bool { return s.Dropped() > 100 })
 	publish := func(ack ...*ua.SubscriptionAcknowledgement) *ua.PublishResponse {
 		t.Helper()
 		var p ua.PublishResponse
@@ -196,7 +196,7 @@ func TestInjectedClock(t *testing.T) {
 	if h := s.ua.subs.header(&ua.PublishRequest{RequestHeader: &ua.RequestHeader{}}, ua.StatusOK); !h.Timestamp.Equal(base.Add(3 * time.Second)) {
 		t.Errorf("an answer is stamped %s, the clock says %s", h.Timestamp, base.Add(3*time.Second))
 	}
-	wait(t, "three minutes of plant time", 5*time.Second, func() bool { return s.PlantTime().UnixMilli() == from+180000 })
+	wait(t, "three minutes of plant time", func() bool { return s.PlantTime().UnixMilli() == from+180000 })
 	if err := s.Close(); err != nil {
 		t.Error(err)
 	}

@@ -59,7 +59,9 @@ func (g *gate) OnWillSent(*mqtt.Client, packets.Packet) { g.foreign.Add(1) }
 
 func serveMQTT() (*broker, error) {
 	b := &broker{done: make(chan struct{})}
-	b.srv = mqtt.New(&mqtt.Options{InlineClient: true, Logger: slog.New(slog.NewTextHandler(io.Discard, nil))})
+	caps := mqtt.NewDefaultServerCapabilities()
+	caps.MaximumClientWritesPending = 1 << 16 // a minute of a works 60 times as fast as real: readers may pause
+	b.srv = mqtt.New(&mqtt.Options{InlineClient: true, Capabilities: caps, Logger: slog.New(slog.NewTextHandler(io.Discard, nil))})
 	if err := b.srv.AddHook(&gate{foreign: &b.foreign}, nil); err != nil {
 		return nil, fmt.Errorf("mqtt broker: %w", err)
 	}

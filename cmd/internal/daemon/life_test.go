@@ -9,7 +9,6 @@ import (
 	"slices"
 	"strings"
 	"testing"
-	"time"
 
 	"midwatch/collector"
 	"midwatch/configs"
@@ -131,19 +130,29 @@ func TestShutdownOrder(t *testing.T) {
 	}
 }
 
-// stubborn is a source that does not end when told to.
-type stubborn struct{ release chan struct{} }
+// stubborn is a source that does not end when told to, and says that it was told.
+type stubborn struct {
+	told    func()
+	release chan struct{}
+}
 
-func (s stubborn) Run(context.Context, collector.Intake) error { <-s.release; return nil }
-func (s stubborn) State() collector.SourceState                { return collector.SourceState{Link: linkWatching} }
+func (s stubborn) Run(ctx context.Context, _ collector.Intake) error {
+	<-ctx.Done()
+	s.told()
+	<-s.release
+	return nil
+}
+func (s stubborn) State() collector.SourceState { return collector.SourceState{Link: linkWatching} }
 
 // Stop is bounded, and what can be stopped is: the data folder is free again.
 func TestStopIsBounded(t *testing.T) {
 	r := newRig(t, newMill().loops)
 	o := r.options()
 	release := make(chan struct{})
+	over := errors.New("the time is over")
+	ctx, cancel := context.WithCancelCause(context.Background())
 	o.Sources = []SourceKind{{"stubborn", func(*configs.Source) bool { return true }, func(configs.Source, SourceEnv) (collector.Source, error) {
-		return stubborn{release}, nil
+		return stubborn{func() { cancel(over) }, release}, nil
 	}}}
 	d, err := New(o)
 	if err != nil {
@@ -152,10 +161,8 @@ func TestStopIsBounded(t *testing.T) {
 	if err := d.Start(); err != nil {
 		t.Fatal(err)
 	}
-	ctx, cancel := context.WithTimeout(context.Background(), 300*time.Millisecond)
-	defer cancel()
 	err = d.Stop(ctx)
-	if !errors.Is(err, context.DeadlineExceeded) || !strings.Contains(err.Error(), "works") {
+	if !errors.Is(err, over) || !strings.Contains(err.Error(), "works") {
 		t.Errorf("Stop: %v, want one that names the source", err)
 	}
 	if again := d.Stop(context.Background()); again == nil || again.Error() != err.Error() {

@@ -46,7 +46,7 @@ func TestReadsOnly(t *testing.T) {
 		}
 		return names
 	}
-	for deadline := time.Now().Add(20 * time.Second); len(unseen()) > 0; time.Sleep(10 * time.Millisecond) {
+	for deadline := time.Now().Add(hang); len(unseen()) > 0; time.Sleep(10 * time.Millisecond) {
 		if time.Now().After(deadline) {
 			t.Errorf("not seen: %v of %+v", unseen(), d.Status())
 			break

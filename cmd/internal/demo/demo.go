@@ -141,7 +141,7 @@ func (s *show) live(ctx context.Context, o Options) (err error) {
 		return err
 	}
 	defer func() {
-		stop, cancel := context.WithTimeout(context.WithoutCancel(ctx), 20*time.Second)
+		stop, cancel := context.WithTimeout(context.WithoutCancel(ctx), time.Minute)
 		defer cancel()
 		err = errors.Join(err, s.watch.Stop(stop))
 	}()

@@ -96,7 +96,7 @@ for (let i = 0; i < N; i++) {
     return n;
   };
   const sp = lo + (hi - lo) * (0.3 + 0.4 * ((i * 7919 % 97) / 97));
-  const L = { tag, lo, hi, sp, op: 50, pv: sp, state: StatusCodes.Good, frozen: false,
+  const L = { tag, lo, hi, sp, op: 50, pv: sp, state: StatusCodes.Good, frozen: false, times: [],
     PV: analog("PV", [lo, hi], UNITS[a], sp), SP: analog("SP", [lo, hi], UNITS[a], sp),
     OP: analog("OP", [0, 100], standardUnits.percent, 50) };
   const m = { componentOf: obj, browseName: "MODE", nodeId: `${id}.MODE` };
@@ -168,6 +168,7 @@ function tick() {
     L.pv = L.sp + (L.hi - L.lo) * (0.01 * Math.sin(t / 20 + i) + 0.002 * (Math.random() - 0.5));
     L.op = Math.min(100, Math.max(0, 50 - 20 * Math.sin(t / 20 + i + 1) + (Math.random() - 0.5)));
     L.PV.setValueFromSource({ dataType: DataType.Double, value: L.pv }, L.state, at);
+    if (at && L.times.push(at.getTime()) > 10000) L.times.shift();
     L.OP.setValueFromSource({ dataType: DataType.Double, value: L.op }, StatusCodes.Good, at);
     updates += 2;
     if (Math.random() < 1 / (RATE * +o["sp-every"])) {
@@ -185,6 +186,7 @@ if (+o.control) http.createServer((q, r) => {
   const done = (v) => { r.setHeader("content-type", "application/json"); r.end(JSON.stringify(v) + "\n"); };
   switch (u.pathname) {
     case "/counts": return done(snapshot());
+    case "/times": return done(Object.fromEntries(loops.map((l) => [l.tag, l.times])));   // when each PV was set, ms
     case "/reset": for (const k of Object.keys(counts)) delete counts[k]; updates = 0; return done({});
     case "/freeze": if (L) L.frozen = p.get("on") !== "0"; else frozenAll = p.get("on") !== "0"; return done({});
     case "/state": L.state = StatusCodes[p.get("code")]; return done({});
