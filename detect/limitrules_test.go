@@ -1,6 +1,12 @@
 package detect
 
-import "testing"
+import (
+	"math"
+	"testing"
+
+	"midwatch/collector"
+	"midwatch/configs"
+)
 
 // A controller that is sound leaves its limit when e changes sign; one that stays is wound
 // up, at once where it is for longer than its reset time (200 s) and a fifth, else where it is
@@ -29,6 +35,27 @@ func TestWindUp(t *testing.T) {
 		}
 		if c := said(fs, OutputSaturation); c != x.want {
 			t.Errorf("%s: said %q, want %q", x.name, c, x.want)
+		}
+		fs = feed(w, 1.1*day, func(float64) (float64, float64) { return 0, 60 })
+		if n := len(fs); x.want != NoCause && (n != 1 || fs[0].Event != Cleared) {
+			t.Errorf("%s: a day later it is not over", x.name)
+		}
+	}
+}
+
+// Where a feedforward adds to OP the limit is one of OP, not of what the law makes of it.
+func TestLimitUnderAFeedforward(t *testing.T) {
+	for _, x := range []struct {
+		op   float32
+		want Cause
+	}{{100, OutputLimit}, {70, NoCause}} {
+		w := offsetWatch(func(l *configs.Loop) { l.FeedforwardKind = "add" })
+		w.s.Motion.OPMin, w.s.Motion.OPMax = 0, 100
+		fs := feedAt(w, 7000, func(t float64, f *collector.Frame) { // OP moves, or it were a limit that nobody listed
+			f.PV, f.OP, f.Feedforward = 45, x.op-0.25+0.25*float32(math.Sin(t/40)), 40
+		})
+		if c := said(fs, OutputSaturation); c != x.want {
+			t.Errorf("OP at %g %%: said %q, want %q", x.op, c, x.want)
 		}
 	}
 }

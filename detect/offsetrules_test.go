@@ -232,3 +232,84 @@ func TestSetPointStepsAtALimit(t *testing.T) {
 		t.Errorf("off the limit: said %s", fs[0].Kind)
 	}
 }
+
+// Where set points change often several short runs in which the integral was missing tell what
+// a long one would; runs too short to judge tell nothing, and one in which the integral
+// acted takes them back.
+func TestShortRunsOfAMissingIntegral(t *testing.T) {
+	for _, x := range []struct {
+		name       string
+		last, acts float64 // s, of the runs without it and of those with it between them; 0 none
+		want       Cause
+	}{
+		{"runs of 20 min", 1200, 0, IntegralMissing},
+		{"runs of 5 min", 300, 0, NoCause},
+		{"the integral acts between them", 1200, 1400, NoCause},
+	} {
+		w := offsetWatch(nil)
+		w.s.Motion.OPMin, w.s.Motion.OPMax = 5, 95
+		var fs []Finding
+		sp := 50.0
+		for range 6 {
+			for _, run := range []struct{ seconds, ki float64 }{{x.last, 0}, {x.acts, 1. / 1500}} {
+				if run.seconds == 0 {
+					continue
+				}
+				sp = 102 - sp // between 50 and 52 %
+				fs = append(fs, feedAt(w, run.seconds, func(t float64, f *collector.Frame) {
+					e, i := wander(t)
+					f.SP, f.PV, f.OP = float32(sp), float32(sp-e), float32(30+e+run.ki*i)
+				})...)
+			}
+		}
+		if c := said(fs, SustainedOffset); c != x.want {
+			t.Errorf("%s: said %q, want %q", x.name, c, x.want)
+		}
+	}
+}
+
+// The integral is missing where OP followed e and moved by next to nothing beside it; not where
+// a hand held OP in the part of the run that is looked at, where OP rests, lay at a limit, or
+// hardly had to move, and not where little speaks for it.
+func TestIntegralMissing(t *testing.T) {
+	for _, x := range []struct {
+		name   string
+		change func(w *Watch, t *travel)
+		want   bool
+	}{
+		{"as it should show", func(*Watch, *travel) {}, true},
+		{"held by a hand in the later part", func(w *Watch, _ *travel) { w.s.Off.StillAt = 400 }, false},
+		{"held by a hand before that", func(w *Watch, _ *travel) { w.s.Off.StillAt = 200 }, true},
+		{"OP rests", func(w *Watch, _ *travel) { w.s.Motion.OPBusy = 0.1 }, false},
+		{"OP was at a limit", func(_ *Watch, t *travel) { t.clipped = true }, false},
+		{"hardly had to move", func(_ *Watch, t *travel) { t.expect = 1 }, false},
+		{"it moved by a third of what it must", func(_ *Watch, t *travel) { t.resid = 3 }, false},
+		{"the implied reset time is the own one", func(_ *Watch, t *travel) { t.implied = 220 }, false},
+		{"the implied reset time is four times the own one", func(_ *Watch, t *travel) { t.implied = 800 }, false},
+		{"OP goes against the integral", func(_ *Watch, t *travel) { t.implied = -3000 }, true},
+		{"OP moved far more than e explains", func(_ *Watch, t *travel) { t.hi = 60 }, false},
+	} {
+		w := New(configs.NewLoop("FIC-346"), 0, Options{})
+		w.s.Motion.OPBusy, w.s.Motion.OPBusyUsual, w.s.Tune.Law = 0.9, 0.9, 1
+		tr := travel{d: 1000, span: 700, kc: 1, rt: 200, learned: true, expect: 10, implied: 3000, resid: 0.1, lo: 40, hi: 42, eRange: 2}
+		x.change(w, &tr)
+		if got := w.integralMissing(&tr); got != x.want {
+			t.Errorf("%s: %v", x.name, got)
+		}
+	}
+}
+
+// OP at the low end with PV above its set point asks for nothing: by habit it is a pump at
+// rest, else a loop out of room.
+func TestIdleAtTheLowEnd(t *testing.T) {
+	for _, x := range []struct {
+		share float32 // of the time there
+		want  Cause
+	}{{0, OutputLimit}, {0.2, NoCause}} {
+		w := offsetWatch(nil)
+		w.s.Sat.LowShare = x.share
+		if c := said(feed(w, 7000, func(float64) (float64, float64) { return -2, 0 }), OutputSaturation); c != x.want {
+			t.Errorf("there for %g of the time: said %q, want %q", x.share, c, x.want)
+		}
+	}
+}

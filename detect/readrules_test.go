@@ -24,6 +24,7 @@ func TestBorneOutByAnotherScale(t *testing.T) {
 		{"it reads what was", 2, 1, 2, 1, 5000, 0.99, 1000, 0.02, false},
 		{"between, nearer to what was", 2, 1.3, 1.7, 1.4, 5000, 0.99, 1000, 0.02, false},
 		{"between, nearer to now", 2, 1.3, 1.7, 1.6, 5000, 0.99, 1000, 0.02, true},
+		{"far beyond now", 2, 1, 2, 3, 5000, 0.99, 1000, 0.02, false},
 		{"before the change", 2, 1, 2, 1.9, 3000, 0.99, 1000, 0.02, false},
 		{"the law explains it badly", 2, 1, 2, 1.9, 5000, 0.93, 1000, 0.02, false},
 		{"hardly excited", 2, 1, 2, 1.9, 5000, 0.99, 10, 0.02, false},
@@ -178,6 +179,31 @@ func TestSlowAgainstItsOwnHistory(t *testing.T) {
 		u.V, u.N = 100, x.known
 		if got := w.slowForItself(recRing); got != x.want {
 			t.Errorf("%s: proven by %d, want %d", x.name, got, x.want)
+		}
+	}
+}
+
+// Where the tuning is read it names the cause, whatever the share says.
+func TestTuningNamesTheCauseOfSluggishness(t *testing.T) {
+	for _, x := range []struct {
+		name     string
+		kc, ti   float32 // in service; usual are 2 %/% and 100 s
+		share    float32
+		wantedBy Cause
+	}{
+		{"a third of the gain", 0.66, 100, 0.7, GainTooLow},
+		{"four times the reset time", 2, 400, 0.05, ResetTooLong},
+		{"as usual", 2, 100, 0.3, Undetermined},
+		{"both, as one knob would not", 0.66, 400, 0.3, Undetermined},
+	} {
+		w := slowWatch(x.share, 5, 5, 5)
+		b := &w.s.Fits[1]
+		b.BaseK.V, b.BaseK.N, b.BaseT.V, b.BaseT.N = 2, 50, 100, 50
+		b.Last = fit{Kc: x.kc, Ti: x.ti, R2: 0.99, X: 1000, At: momentOf(26000), T0: momentOf(25000)}
+		w.in.t = 27000
+		w.slowCause(byHistory, 3)
+		if r := &w.s.Recov; causes[r.Cause] != x.wantedBy {
+			t.Errorf("%s: %q, want %q", x.name, causes[r.Cause], x.wantedBy)
 		}
 	}
 }
