@@ -35,12 +35,60 @@ type offsetState struct {
 	AtEnd     bool    // PV was at an end of its range: e says nothing of the process
 	NotFollow bool    // OP travelled and then stopped, and PV made nothing of either
 	Checked   float64 // s, last decision
-	PrevDur   float64 // s, length of the run before, of the other sign; 0 none
-	Missed    bool    // in this run the integral did not do what it must
-	Acts      bool    // it did, or may have, when last judged
+	PrevDur   float32 // s, length of the run before, of the other sign; 0 none
+	Top       stop
+	Missed    bool // in this run the integral did not do what it must
+	Acts      bool // it did, or may have, when last judged
 }
 
 func (o *offsetState) restart() { *o = offsetState{} }
+
+// stop is the farthest OP, towards where e pushes it, of a run.
+type stop struct {
+	OP   float32 // %, positive where e pushes OP up
+	At   float32 // s since T0, when it was come to
+	Mass float32 // share of the last hundred slots or so that OP lay there
+}
+
+// stopWide, %, is a difference that is none: single precision and half the finest resolution.
+const stopWide = 1e-3
+
+// step takes an OP, %, of the run at age d, s.
+func (p *stop) step(op, d float64) {
+	if p.At == 0 || op > float64(p.OP)+stopWide {
+		*p = stop{OP: float32(op), At: float32(d)}
+	}
+	there := 0.0
+	if op > float64(p.OP)-stopWide {
+		there = 1
+	}
+	p.Mass += float32((there - float64(p.Mass)) / 100)
+}
+
+// leastMass is the share of slots at one and the same farthest OP from which something
+// stops OP there: what noise and loads make of OP has its extremes seldom, and hardly twice
+// alike (three deviations come once in a thousand).
+const leastMass = 0.08
+
+// heldBack: e pushes OP on, and short of the limits known it comes back again and again to the
+// farthest place it ever was at, where the noise alone would have the law spread it. A
+// controller that holds OP at a limit lets noise move it off, to one side and not far; the
+// mean of OP then follows e as if nothing were integrated.
+func (w *Watch) heldBack() bool {
+	o, p, s := &w.s.Off, &w.s.Off.Top, &w.s
+	push, top := w.sign()*o.Sign, float64(p.OP)
+	lo, hi := w.opLimits()
+	ever, limit := float64(s.Motion.OPMax), hi
+	if push < 0 {
+		ever, limit = -float64(s.Motion.OPMin), -lo
+	}
+	kc, ok := w.gainPct()
+	if push == 0 || p.Mass < leastMass || top < ever-0.05 || top >= limit-opAtLimit || o.Es*o.Sign < 0 || !ok || s.Noise.OPLeast.N <= 20 {
+		return false
+	}
+	spread := math.Abs(kc) * s.Noise.sigma() * math.Sqrt(min(1, w.in.dt/max(2*w.lag(), w.in.dt))) // through the filter of the law
+	return spread > s.Noise.OPLeast.Value() && top-push*o.OPs < 4*spread
+}
 
 // offsetPast outlives the runs.
 type offsetPast struct {
@@ -156,10 +204,10 @@ func stepOffset(w *Watch) {
 	if sign != 0 && sign != o.Sign {
 		prev := 0.0
 		if o.Sign != 0 {
-			prev = max(in.t-o.T0, 0.5*o.PrevDur)
+			prev = max(in.t-o.T0, 0.5*float64(o.PrevDur))
 			w.endOfRun(true)
 		}
-		*o = offsetState{PrevDur: prev, Sign: sign, T0: in.t, In: in.t, OP0: in.trim, OPs: in.trim, Es: in.e, Checked: in.t}
+		*o = offsetState{PrevDur: float32(prev), Sign: sign, T0: in.t, In: in.t, OP0: in.trim, OPs: in.trim, Es: in.e, Checked: in.t}
 	}
 	if o.Sign == 0 {
 		return
@@ -180,6 +228,9 @@ func stepOffset(w *Watch) {
 	o.Dur += in.dt
 	o.OPs += (in.trim - o.OPs) / 20
 	o.Es += (in.e - o.Es) / 20
+	if in.hasOP {
+		o.Top.step(w.sign()*o.Sign*in.op, d)
+	}
 	if k := int(o.AnchorN); k < anchors && d >= in.dt*20*float64(int(1)<<k) {
 		o.Anchors[k] = anchor{float32(d), float32(o.OPs), float32(o.Es), float32(o.Int)}
 		o.AnchorN++
@@ -211,7 +262,7 @@ func (w *Watch) offsetLeast() float64 {
 func (w *Watch) offsetWaitS() float64 {
 	rt, _ := w.resetS()
 	need := max(max(8*60, 100*w.in.dt), max(4*rt, 2.5*w.timeScale())) * w.strict
-	return max(need, 3*w.s.Off.PrevDur) // PV that comes and goes is a cycle, not an offset
+	return max(need, 3*float64(w.s.Off.PrevDur)) // PV that comes and goes is a cycle, not an offset
 }
 
 // limitWaitS is how long, s, OP must lie at a limit that e pushes to. The evidence is plain
@@ -355,16 +406,21 @@ func (w *Watch) judgeOffset(thr float64) {
 	// listed).
 	own := flat && in.t-m.OPSame > ownLimitS(in.dt) && m.OPRunMax < (in.t-m.OPSame)/2 &&
 		in.e*o.Sign > 0 && w.atOwnLimit() && w.barred()
+	back := w.heldBack() && d-float64(o.Top.At) > ownLimitS(in.dt)
 	at := o.OPs
 	if w.loop.FeedforwardKind != "" {
 		at = in.op // the limit is one of OP, not of the trim
 	}
 	listed := !in.frozen && (push > 0 && at >= l1-1 || push < 0 && at <= l0+1)
-	if own || listed {
+	if own || listed || back {
 		if s.Sat.AtSince == 0 {
 			s.Sat.AtSince = in.t
 		}
-		w.limitTest(listed)
+		if back && !listed {
+			w.limitTest(false, float64(o.Top.At))
+		} else {
+			w.limitTest(listed, m.OPSame-o.T0)
+		}
 		if in.t-s.Sat.AtSince > w.limitWaitS() {
 			conf := 0.9
 			if !listed {

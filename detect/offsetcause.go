@@ -44,7 +44,7 @@ func (w *Watch) offsetTravel(push, lo, hi float64) (t travel, ok bool) {
 			t.rt = float64(c.ResetWas)
 		}
 	}
-	t.clipped = s.Tune.LimitAt > o.T0+float64(a.T)
+	t.clipped = s.Tune.LimitAt > o.T0+float64(a.T) || w.heldBack()
 	ie := o.Int - float64(a.Int)
 	t.rate, t.before = ie/t.span, float64(a.Int/a.T)
 	t.dop = o.OPs - float64(a.OP)
@@ -276,11 +276,12 @@ func (w *Watch) deaf() bool {
 // load that grows. While OP travels both can hold e constant: OP makes good what the
 // load takes, or nothing at all. Once OP stops at its limit a growing load has its way
 // with PV at once, and where there is no effect to lose e stays what it was. Until that is
-// read, and where it cannot be, the travel leaves a doubt.
-func (w *Watch) limitTest(listed bool) {
+// read, and where it cannot be, the travel leaves a doubt. since is the age of the run, s, at
+// which OP came to rest.
+func (w *Watch) limitTest(listed bool, since float64) {
 	in, o, p := &w.in, &w.s.Off, &w.s.OffPast
 	if o.LimT == 0 && !listed { // a limit that nobody listed is noticed late
-		if a := o.anchorAt(w.s.Motion.OPSame - o.T0); a != nil {
+		if a := o.anchorAt(since); a != nil {
 			if w.arrive(); o.LimE > 0 {
 				o.LimE = float32(float64(a.E) * o.Sign)
 			}

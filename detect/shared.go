@@ -23,6 +23,8 @@ type shared struct {
 type sharedMemory struct {
 	Pairs  map[string]int // slots running in which the pair kept its phase
 	Groups []sharedGroup
+
+	Elements map[string]ownElement // by loop: what it says of its final element
 }
 
 type sharedGroup struct {
@@ -39,18 +41,19 @@ type sharedGroup struct {
 	NextN  int
 }
 
-// Slots in which a pair must keep its phase before it is said, and slots after
-// which a group that is not seen is over.
+// Slots in which a pair must keep its phase before it is said; slots, and periods of the
+// cycle, after which a group that is not seen is over.
 const (
 	sharedSlots = 2
 	sharedGone  = 6
+	goneCycles  = 6
 )
 
 // Periods nearer than this, as a logarithm, may be one: what decides is the phase.
 const samePeriod = 0.12
 
 func newShared(loops []*configs.Loop) Site {
-	return &shared{loops: loops, m: sharedMemory{Pairs: map[string]int{}}}
+	return &shared{loops: loops, m: sharedMemory{Pairs: map[string]int{}, Elements: map[string]ownElement{}}}
 }
 
 func (s *shared) Save() ([]byte, error) { return json.Marshal(s.m) }
@@ -61,6 +64,13 @@ func (s *shared) Load(b []byte) error {
 	}
 	if m.Pairs == nil {
 		m.Pairs = map[string]int{}
+	}
+	if m.Elements == nil {
+		m.Elements = map[string]ownElement{}
+	}
+	for name, x := range m.Elements { // numbers of loops are those of the list in force
+		x.Said.ID = s.id(name)
+		m.Elements[name] = x
 	}
 	s.m = m
 	return nil
@@ -140,12 +150,14 @@ func (s *shared) Judge(end int64, live []SiteEvidence, emit func(*Finding)) {
 		}
 	}
 	s.tell(end, seen, emit)
+	s.rejudge(end, emit)
 }
 
 func (s *shared) group(live []SiteEvidence, g []int) sharedGroup {
 	var out sharedGroup
 	out.Since = math.MaxInt64
 	best, second, widest := -1, -1, 0.0
+	beat, sticks := false, false
 	for _, i := range g {
 		e := &live[i]
 		l := s.loops[e.ID]
@@ -155,6 +167,8 @@ func (s *shared) group(live []SiteEvidence, g []int) sharedGroup {
 		if span := l.PVSpan(); e.Amp > widest && span > 0 {
 			widest, out.Widest, out.Amp = e.Amp, l.Name, e.Amp/100*span
 		}
+		beat = beat || e.Beat
+		sticks = sticks || e.Cause == ValveSticking
 		switch {
 		case best < 0 || e.Shape > live[best].Shape || live[best].Shape != live[best].Shape:
 			best, second = i, best
@@ -176,7 +190,9 @@ func (s *shared) group(live []SiteEvidence, g []int) sharedGroup {
 	case x.Shape > 0.68 && leads && x.Cause == ValveSticking:
 		out.Root = s.loops[x.ID].Name
 		out.Cause, out.Key = ValveSticking, out.Root
-	case x.Shape >= 0 && x.Shape < 0.52:
+	case beat && !sticks:
+		// Members share their beat, and a sticking element has none. A loop without corners
+		// proves nothing: a slow process leaves none of its own element's.
 		out.Cause, out.Key = OutsideDisturbance, out.Loops[0]
 	default:
 		out.Cause, out.Key = Undetermined, out.Loops[0]
@@ -229,7 +245,7 @@ func (s *shared) tell(end int64, seen []sharedGroup, emit func(*Finding)) {
 		}
 		if now.Loops == nil {
 			old.Gone++
-			if old.Gone >= sharedGone {
+			if float64(old.Gone) >= max(sharedGone, goneCycles*old.Period*1000/SiteSlotMs) {
 				emit(s.finding(end, &old, Cleared))
 				continue
 			}
@@ -256,6 +272,7 @@ func (s *shared) tell(end int64, seen []sharedGroup, emit func(*Finding)) {
 	}
 	for i := range seen {
 		if !taken[i] {
+			seen[i].follow(&sharedGroup{Key: seen[i].Loops[0], Cause: Undetermined})
 			emit(s.finding(end, &seen[i], Raised))
 			keep = append(keep, seen[i])
 		}
@@ -272,8 +289,8 @@ func (g *sharedGroup) join(o *sharedGroup) {
 	g.Since = min(g.Since, o.Since)
 }
 
-// follow takes over what was said of the group before. A root must be seen for some
-// cycles before it is named, and for more before it takes the place of a cause named
+// follow takes over what was said of the group before. A cause must be seen twice, and a
+// root for a cycle, before it is named, and for more before it takes the place of a cause named
 // already; no cause found is no news. It reports whether cause or root is new.
 func (g *sharedGroup) follow(old *sharedGroup) (news bool) {
 	if g.Cause != Undetermined && (g.Cause != old.Cause || g.Root != old.Root) {
@@ -282,32 +299,36 @@ func (g *sharedGroup) follow(old *sharedGroup) (news bool) {
 		case old.Cause != Undetermined:
 			cycles = 4
 		case g.Root != "":
-			cycles = 2
+			cycles = 1
 		}
 		next, n := g.Root+" "+string(g.Cause), 1
 		if old.Next == next {
 			n = old.NextN + 1
 		}
-		if float64(n)*SiteSlotMs/1000 >= cycles*g.Period {
+		if n >= sharedSlots && float64(n)*SiteSlotMs/1000 >= cycles*g.Period {
 			if g.Root == "" {
 				g.Key = old.Key
 			}
 			return true
 		}
 		g.Next, g.NextN = next, n
+	} else if g.Cause == Undetermined {
+		g.Next, g.NextN = old.Next, old.NextN
 	}
 	g.Key, g.Cause, g.Root = old.Key, old.Cause, old.Root
 	return false
 }
 
+func (s *shared) id(loop string) collector.LoopID {
+	return collector.LoopID(max(0, slices.IndexFunc(s.loops, func(l *configs.Loop) bool { return l.Name == loop })))
+}
+
 func (s *shared) finding(end int64, g *sharedGroup, e Event) *Finding {
 	f := &Finding{Subject: Subject{Loop: g.Key}, Loop: g.Key, Loops: g.Loops, Kind: SharedOscillation, Event: e, At: end, Since: g.Since,
 		Cause: g.Cause, Confidence: 0.7}
+	f.ID = s.id(g.Key)
 	widest := ""
-	for i, l := range s.loops {
-		if l.Name == g.Key {
-			f.ID = collector.LoopID(i)
-		}
+	for _, l := range s.loops {
 		if l.Name == g.Widest && g.Amp > 0 {
 			widest = "; widest in " + l.Name + ", ±" + sig2(g.Amp) + unitOf(l.Unit)
 		}

@@ -29,6 +29,7 @@ type Evidence struct {
 	Jumps     float64 // share of PV's travel in the busiest fifth of the cycle; 0 unknown
 	Since     int64   // ms UTC
 	Cause     Cause
+	Beat      bool // it keeps time, judged over so many periods that chance is out
 	N         int
 	Cross     [evidenceCrossings]float64 // s since 1970, zero crossings, newest first
 }
@@ -59,6 +60,8 @@ func (w *Watch) TakeEvidence() (Evidence, bool) {
 		if w.led() { // it follows: not its own growth, whatever it looks like
 			e.Growing, e.Cause = false, Undetermined
 		}
+		keeps, _ := s.Clock.beat()
+		e.Beat = keeps && s.Clock.long() && s.Clock.Bank == o.Bank
 		sh := w.shapes()
 		e.Shape = w.stickIndex(sh)
 		if sh.stick == sh.stick {
@@ -88,9 +91,11 @@ type Sites struct {
 }
 
 // Site is one detector across loops. Judge sees the live evidence of one slot,
-// sorted by loop, and emits findings; its state is what Save returns.
+// sorted by loop, and emits findings; Hear passes on a finding of a loop as it stands
+// beside those; its state is what Save returns.
 type Site interface {
 	Judge(end int64, live []SiteEvidence, emit func(*Finding))
+	Hear(f *Finding, emit func(*Finding))
 	Save() ([]byte, error)
 	Load([]byte) error
 }
@@ -153,6 +158,17 @@ func (s *Sites) Slot(end int64, emit func(*Finding)) {
 	for _, d := range s.sites {
 		d.Judge(end, live, emit)
 	}
+}
+
+// Hear passes on a finding of a loop, or what is left of it beside what the site
+// detectors know. It is called after the slots that end at or before the finding's time
+// were judged, and before later ones.
+func (s *Sites) Hear(f *Finding, emit func(*Finding)) {
+	for _, d := range slices.Backward(s.sites) {
+		next := emit
+		emit = func(f *Finding) { d.Hear(f, next) }
+	}
+	emit(f)
 }
 
 type sitesMemory struct {

@@ -359,12 +359,12 @@ func (w *Watch) short(f *Finding, brief string) string {
 	return shorten(t + ".")
 }
 
-func (w *Watch) textOver(k int, reason string) (long, short string) {
+func textOver(loop string, k int, reason string) (long, short string) {
 	t := over[k]
 	if reason == Rejudged {
 		t = "judged anew: what is seen now is said as another finding"
 	}
-	return strings.ToUpper(t[:1]) + t[1:] + ".", shorten(w.loop.Name + ": " + t + ".")
+	return strings.ToUpper(t[:1]) + t[1:] + ".", shorten(loop + ": " + t + ".")
 }
 
 // over says by kind what came to an end.

@@ -193,7 +193,7 @@ func (w *Watch) finding(k int, e Event, t float64, reason string) Finding {
 	if e == Cleared {
 		f.Confidence = 0
 		f.Reason = reason
-		f.Text, f.TextShort = w.textOver(k, reason)
+		f.Text, f.TextShort = textOver(w.loop.Name, k, reason)
 		return f
 	}
 	m := make([]float64, len(row.Measures))

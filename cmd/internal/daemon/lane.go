@@ -35,6 +35,7 @@ type said struct {
 	detect.Finding
 	why   []string
 	again bool // a restatement of what was said before
+	last  bool // its watch is gone
 }
 
 // record is the evidence of one loop at the end of a slot of data time.

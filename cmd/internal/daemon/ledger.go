@@ -119,7 +119,7 @@ func (l *ledger) work() bool {
 	for _, t := range l.limits {
 		least = min(least, t)
 	}
-	l.gather.advance(least, func(f *detect.Finding) { l.hold(&said{Finding: *f}) })
+	l.gather.advance(least, l.hold)
 	if n := len(l.held) - heldMost; n > 0 {
 		l.held = slices.Delete(l.held, 0, n)
 		l.lost.Add(uint64(n))
@@ -130,7 +130,7 @@ func (l *ledger) work() bool {
 func (l *ledger) take(p *post) {
 	l.gather.record(p.news.evidence)
 	for i := range p.news.findings {
-		l.hold(&p.news.findings[i])
+		l.gather.hear(&p.news.findings[i], l.hold)
 	}
 	l.sights = append(l.sights, p.sights...)
 	if p.sites >= 0 {

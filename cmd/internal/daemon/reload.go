@@ -302,7 +302,7 @@ func endings(w *detect.Watch, why string) (out []said) {
 		f.Cause, f.AlsoPossible, f.Measures = detect.NoCause, nil, nil
 		f.At = w.Through() + 1
 		f.Text, f.TextShort = "The loop is no longer watched as it was: this is no longer judged.", "no longer judged: the loop list changed"
-		out = append(out, said{Finding: f})
+		out = append(out, said{Finding: f, last: true})
 	}
 	return out
 }

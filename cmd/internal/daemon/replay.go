@@ -153,7 +153,9 @@ func (p *replay) done(l *lane, newest, rows int64) error {
 	defer p.mu.Unlock()
 	p.rows += rows
 	p.gather.record(n.evidence)
-	p.held = append(p.held, n.findings...)
+	for i := range n.findings {
+		p.gather.hear(&n.findings[i], p.hold)
+	}
 	k := p.at[l.n]
 	p.at[l.n]++
 	if k == len(p.rounds) {
@@ -172,9 +174,11 @@ func (p *replay) done(l *lane, newest, rows int64) error {
 	if p.o.Progress != nil {
 		p.o.Progress(p.rows)
 	}
-	p.gather.advance(r.sites, func(f *detect.Finding) { p.held = append(p.held, said{Finding: *f}) })
+	p.gather.advance(r.sites, p.hold)
 	return p.release(min(r.order, r.sites))
 }
+
+func (p *replay) hold(s *said) { p.held = append(p.held, *s) }
 
 // release writes the findings up to a time, in order.
 func (p *replay) release(upTo int64) error {
@@ -199,6 +203,7 @@ func (p *replay) release(upTo int64) error {
 
 // end writes what is left, and what is held of the loop to be explained.
 func (p *replay) end() error {
+	p.gather.rest(p.hold)
 	err := p.release(math.MaxInt64)
 	for _, l := range p.lanes {
 		if l.explain != nil && p.o.Evidence != nil {

@@ -5,6 +5,8 @@ import (
 	"compress/flate"
 	"encoding/gob"
 	"fmt"
+	"math"
+	"slices"
 
 	"midwatch/collector"
 	"midwatch/configs"
@@ -13,11 +15,13 @@ import (
 
 // gathering hands the evidence of all lanes to the site detectors, slot by slot
 // of data time, when the lanes have all passed the end of the slot. Evidence of
-// later slots waits here, so that a lane that is ahead changes nothing.
+// later slots waits here, so that a lane that is ahead changes nothing. So does what
+// loops say of their swings, which the groups have a say in.
 type gathering struct {
 	loops   []*configs.Loop // by id; nil: gone
 	sites   *detect.Sites
 	waiting map[int64][]record // by end of the slot
+	said    []said             // of swings, not passed on yet
 	done    int64              // end of the last slot judged, ms UTC; 0 none
 }
 
@@ -44,9 +48,41 @@ func (g *gathering) record(rs []record) {
 	}
 }
 
+// hear takes what a loop says. It is passed on at once where groups have no say in it, and
+// where it is the last word of a watch: of that loop no data may come any more.
+func (g *gathering) hear(s *said, emit func(*said)) {
+	if s.Kind != detect.ValveStickingKind && s.Kind != detect.SustainedOscillation {
+		emit(s)
+		return
+	}
+	g.said = append(g.said, *s)
+	if s.last {
+		g.pass(s.At+1, s.Loop, emit)
+	}
+}
+
+// pass hands on what waits from before t, of one loop or of all, as it stands beside the
+// groups of now.
+func (g *gathering) pass(t int64, loop string, emit func(*said)) {
+	slices.SortStableFunc(g.said, func(a, b said) int { return less(&a.Finding, &b.Finding) })
+	g.said = slices.DeleteFunc(g.said, func(x said) bool {
+		if x.At >= t || loop != "" && x.Loop != loop {
+			return false
+		}
+		g.sites.Hear(&x.Finding, func(f *detect.Finding) {
+			x.Finding = *f
+			emit(&x)
+		})
+		return true
+	})
+}
+
+// rest hands on all that waits still.
+func (g *gathering) rest(emit func(*said)) { g.pass(math.MaxInt64, "", emit) }
+
 // advance judges every slot that ends at or before t, the time up to which the
 // evidence is complete.
-func (g *gathering) advance(t int64, emit func(*detect.Finding)) {
+func (g *gathering) advance(t int64, emit func(*said)) {
 	if g.done == 0 {
 		first := int64(0)
 		for end := range g.waiting {
@@ -55,18 +91,21 @@ func (g *gathering) advance(t int64, emit func(*detect.Finding)) {
 			}
 		}
 		if first == 0 || first > t {
+			g.pass(t+1, "", emit)
 			return
 		}
 		g.done = first - detect.SiteSlotMs
 	}
 	for end := g.done + detect.SiteSlotMs; end <= t; end += detect.SiteSlotMs {
+		g.pass(end, "", emit)
 		for _, r := range g.waiting[end] {
 			g.sites.Record(r.id, r.Evidence)
 		}
 		delete(g.waiting, end)
-		g.sites.Slot(end, emit)
+		g.sites.Slot(end, func(f *detect.Finding) { emit(&said{Finding: *f}) })
 		g.done = end
 	}
+	g.pass(t+1, "", emit)
 }
 
 // gatheringMemory is what a gathering keeps over a restart; loops by name.
@@ -74,6 +113,7 @@ type gatheringMemory struct {
 	Done    int64
 	Sites   []byte
 	Waiting []waitingEvidence
+	Said    []detect.Finding
 }
 
 type waitingEvidence struct {
@@ -89,6 +129,9 @@ const mostSitesBytes = 60 << 10
 // hundreds of loops swing at once, the evidence of one slot is left out.
 func (g *gathering) save() ([]byte, error) {
 	m := gatheringMemory{Done: g.done, Sites: g.sites.Save(nil)}
+	for i := range g.said {
+		m.Said = append(m.Said, g.said[i].Finding)
+	}
 	for _, rs := range g.waiting {
 		for _, r := range rs {
 			if l := g.loops[r.id]; l != nil && r.Live {
@@ -133,6 +176,12 @@ func (g *gathering) load(b []byte) error {
 	for i, l := range g.loops {
 		if l != nil {
 			ids[l.Name] = collector.LoopID(i)
+		}
+	}
+	for _, f := range m.Said {
+		if id, ok := ids[f.Loop]; ok {
+			f.ID = id
+			g.said = append(g.said, said{Finding: f})
 		}
 	}
 	g.done = m.Done

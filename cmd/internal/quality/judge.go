@@ -98,9 +98,10 @@ func Judge(c *Case, nuisance float64) Result {
 	sites := detect.NewSites(c.Rows)
 	slot := int64(0)
 	lag := int64(slices.Max(c.EveryS)*2000) + 1
+	say := func(f *detect.Finding) { sites.Hear(f, heard.hear) }
 	c.Frames(func(i int, f *collector.Frame) {
 		res.Frames++
-		watches[i].Step(f, heard.hear)
+		watches[i].Step(f, say)
 		if ev, ok := watches[i].TakeEvidence(); ok {
 			sites.Record(collector.LoopID(i), ev)
 		}

@@ -262,7 +262,7 @@ func Recorded(dir string) (*RecordedScore, error) {
 					atEnd[k] = f.Time
 				}
 			}
-			watches[k].Step(f, heard.hear)
+			watches[k].Step(f, func(f *detect.Finding) { sites.Hear(f, heard.hear) })
 			if ev, ok := watches[k].TakeEvidence(); ok {
 				sites.Record(k, ev)
 			}
