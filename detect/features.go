@@ -91,6 +91,8 @@ type motion struct {
 	SPStep              float64 // s, last step of SP over 0.3 %
 	SPPrevStep          float64 // s, the one before
 	SPBusy              float32 // share of slots in which SP moved, slow mean
+	SPMoves             float32 // the same over days, from 0 on
+	SPRamp              moment  // when an SP that rests for most of the time was last on a ramp
 	Active              bool
 	ActiveSince         float64
 	LawSeen             bool       // OP was seen answering e
@@ -101,7 +103,7 @@ type motion struct {
 	ELo, EHi            [2]float32
 	HalfAt              float64 // s, when the running half window began
 	EStillLo, EStillHi  float32
-	EStill0, EStillInt  float32      // %, % s: e when OP last moved, and its integral since
+	EStill0, EStillInt  float32      // %, % s: smoothed e when OP came to rest, and its integral since
 	Update              num.Quantile // median interval between changes of PV, slots
 	Frozen              bool
 	Manual              bool    // inferred from OP, where there is no mode tag
@@ -204,6 +206,15 @@ func (n *noise) sigma() float64 {
 		return n.now()
 	}
 	return 0.3
+}
+
+// resolution is the step, %, in which PV comes: its dead band or that of its digits; under
+// noise little of that.
+func (n *noise) resolution() float64 {
+	if n.Least.N > 20 {
+		return n.Least.Value()
+	}
+	return 0
 }
 
 // known says whether the noise level rests on enough data.

@@ -240,7 +240,7 @@ func (w *Watch) readSame(onset float64) bool {
 	k0, t0, ok := w.usualTuning(onset - 2*w.s.Osc.P)
 	for k := range w.s.Fits {
 		for _, r := range [...]*fit{w.s.Fits[k].newest(), &w.s.Fits[k].Last} {
-			if ok && r.ok() && float64(r.T0) >= onset && near(math.Abs(float64(r.Kc)), k0) && r.hasReset() && near(float64(r.Ti), t0) {
+			if ok && r.ok() && r.T0.s() >= onset && near(math.Abs(float64(r.Kc)), k0) && r.hasReset() && near(float64(r.Ti), t0) {
 				return true
 			}
 		}

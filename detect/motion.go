@@ -38,6 +38,13 @@ func (m *motion) eRange() float64 {
 // efStep is the step of a lag of three slots.
 var efStep = 1 - math.Exp(-1./3)
 
+// stillFrom is after how many slots at rest of OP its smoothed e counts: four such lags.
+const stillFrom = 12
+
+// stillNoise is the range, noise levels, beyond which the smoothed e has moved: a hundred
+// thousand values of it, of 0.41 noise levels, lie within 9 of those.
+const stillNoise = 4.0
+
 // Tolerances of OP, %.
 const (
 	opAtLimit = 0.5  // nearer to a limit than this is at it (methods section 8)
@@ -85,10 +92,10 @@ func (w *Watch) stepMotion(flags collector.Flags) {
 		m.Mode, m.ModeSince = in.mode, in.t
 	}
 	in.spStep = in.sp - m.SP
+	m.EF += efStep * (in.e - m.EF)
 	w.stepSP()
 	w.stepStill()
 	w.stepPosition()
-	m.EF += efStep * (in.e - m.EF)
 
 	half := max(1800, 60*in.dt)
 	if in.t-m.HalfAt >= half {
@@ -143,6 +150,9 @@ func (w *Watch) elementAstray() bool {
 	return m.PosN > 300 && m.Astray > max(5, 3*m.AstrayUsual)
 }
 
+// spRests is the share of slots in which SP moves under which it is one that rests.
+const spRests = 0.5
+
 func (w *Watch) stepSP() {
 	m, in := &w.s.Motion, &w.in
 	d := math.Abs(in.spStep)
@@ -151,8 +161,13 @@ func (w *Watch) stepSP() {
 		moved = 1
 	}
 	m.SPBusy += (moved - m.SPBusy) / 60
-	if moved > 0 && m.SPBusy < 0.2 {
+	m.SPMoves += (moved - m.SPMoves) * float32(min(in.dt/shareS, 1))
+	switch {
+	case moved == 0:
+	case m.SPBusy < 0.2:
 		w.s.Tune.SPAt = in.t
+	case m.SPMoves < spRests: // one that an outer loop moves never rests
+		m.SPRamp = momentOf(in.t)
 	}
 	if d > 0.3 {
 		if in.t-m.SPStep > 60*in.dt {
@@ -196,11 +211,16 @@ func (w *Watch) stepStill() {
 			m.OPRunMax = in.t - m.OPSame
 		}
 		m.OPSame = in.t
-		m.EStillLo, m.EStillHi = float32(in.e), float32(in.e)
-		m.EStill0, m.EStillInt = float32(in.e), 0
 	}
-	m.EStillInt += float32(in.e * in.dt)
-	m.EStillLo, m.EStillHi = min(m.EStillLo, float32(in.e)), max(m.EStillHi, float32(in.e))
+	// The extremes of noise grow with the time looked at, so that e is taken smooth, from when
+	// the smoothing has forgotten what was before.
+	if ef := float32(m.EF); in.t-m.OPSame < stillFrom*in.dt {
+		m.EStillLo, m.EStillHi = ef, ef
+		m.EStill0, m.EStillInt = ef, 0
+	} else {
+		m.EStillInt += ef * float32(in.dt)
+		m.EStillLo, m.EStillHi = min(m.EStillLo, ef), max(m.EStillHi, ef)
+	}
 	inside := in.pv > 0.1 && in.pv < 99.9
 	in.frozen = inside && (m.Changes > 30 && in.t-m.PVSame > max(10*in.dt, 2*m.PVRunMax) || m.Changes == 0 && in.t-m.PVSame > max(600, 60*in.dt))
 	m.Frozen = in.frozen
@@ -248,13 +268,13 @@ func (w *Watch) deafOP(times float64) bool {
 	if kc, ok := w.gainPct(); ok {
 		least := w.leastOP()
 		// The integral may take back what the proportional action does, for a while.
-		both := w.in.e - float64(m.EStill0)
+		both := m.EF - float64(m.EStill0)
 		if rt, _ := w.resetS(); rt > 0 {
 			both += float64(m.EStillInt) / rt
 		}
-		return moved > 6*w.s.Noise.sigma() && math.Abs(kc)*min(moved, math.Abs(both)) > times*least
+		return moved > stillNoise*w.s.Noise.sigma() && math.Abs(kc)*min(moved, math.Abs(both)) > times*least
 	}
-	return times <= 1 && moved > 6*w.s.Noise.sigma()+1
+	return times <= 1 && moved > stillNoise*w.s.Noise.sigma()+1
 }
 
 // leastOP is the move of OP, %, that its resolution does not hide.
@@ -273,7 +293,7 @@ func (w *Watch) barred() bool {
 	if !ok {
 		return w.deafOP(1)
 	}
-	by := w.in.e - float64(m.EStill0)
+	by := m.EF - float64(m.EStill0)
 	if rt, seen := w.resetS(); seen {
 		by += float64(m.EStillInt) / rt
 	}

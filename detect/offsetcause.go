@@ -357,6 +357,7 @@ func (w *Watch) stepAsk() {
 	case !ok || kc == 0:
 	case math.Abs(left) < 0.4:
 		p.Deaf, p.Vain, p.Doubt = 0, [2]moment{}, 0
+	case math.Abs(w.s.Motion.EF-p.EF) > 0.25*math.Abs(float64(a.By)): // on its way: another load
 	case left > 0.75 && left < 1.25 && went > 4: // of which an element that acts makes 4*0.2 of the step
 		p.Deaf = in.t
 	}

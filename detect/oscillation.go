@@ -147,6 +147,10 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 	o.Evals++
 	o.P, o.Amp, o.Regular = st.period*w.levelS(level), st.amp, st.regular
 	o.Growth, _ = b.growth(st.n)
+	if !o.Grow && w.ofTheDay(b, o.P) { // how long it is, is the surer the longer it lasts
+		w.endOsc()
+		return
+	}
 	if o.Evals == fewest { // told early, it may still have been on its way to its beat
 		s.Clock.begin(level, b.Zero, o.P)
 	}

@@ -3,6 +3,7 @@ package detect
 import (
 	"math"
 
+	"midwatch/configs"
 	"midwatch/detect/num"
 )
 
@@ -40,7 +41,7 @@ const quietLost = 3 * changeFits
 func (w *Watch) stepQuiet(k int, r *fit) {
 	s := &w.s
 	q := &s.Quiet
-	if r.R2 < quietLeast || q.Base.N > 0 && (k > int(q.Bank) || k < int(q.Bank) && r.R2 < min(q.R2, quietR2)) {
+	if w.loop.Duty == configs.GapDuty || r.R2 < quietLeast || q.Base.N > 0 && (k > int(q.Bank) || k < int(q.Bank) && r.R2 < min(q.R2, quietR2)) {
 		return
 	}
 	gain, pv := math.Abs(float64(r.Kc)), r.PV

@@ -21,6 +21,10 @@ const unresolved = 2.0
 // recoveredAt is the share of its peak at which a deviation is over.
 const recoveredAt = 0.12
 
+// overAt is the share of its peak at which a deviation is over where noise or the
+// resolution of PV hide what is less.
+const overAt = 0.3
+
 // recovery is one finished event.
 type recovery struct {
 	At    moment  // its end
@@ -73,6 +77,13 @@ func kindOf(sp bool) int {
 	return 0
 }
 
+// recoveryLeast is the deviation, %, from which an event is seen: out of the noise, and
+// beyond what PV by exception or in coarse steps may be off for any time with nothing wrong.
+func (w *Watch) recoveryLeast() float64 {
+	n := &w.s.Noise
+	return max(3*n.sigma(), 0.3, 2*n.resolution())
+}
+
 func stepRecovery(w *Watch) {
 	s, in := &w.s, &w.in
 	r := &s.Recov
@@ -80,7 +91,7 @@ func stepRecovery(w *Watch) {
 		return
 	}
 	sigma := max(s.Noise.sigma(), 0.02)
-	thr := max(3*sigma, 0.3)
+	thr := w.recoveryLeast()
 	a := math.Abs(s.Motion.EF)
 	if r.On && math.Abs(in.spStep) > 0.2 && in.t-r.T0 > 2*in.dt {
 		w.cutRecovery()
@@ -131,7 +142,7 @@ func stepRecovery(w *Watch) {
 		r.Peak, r.TPeak = x, in.t
 		r.OPPeak, r.IntPeak = in.op-r.OP0, r.IntE
 	}
-	if x < recoveredAt*r.Peak || x < 0.7*sigma && x < 0.3*r.Peak {
+	if x < recoveredAt*r.Peak || x < max(0.7*sigma, s.Noise.resolution()) && x < overAt*r.Peak {
 		w.endRecovery(thr)
 		r.On = false
 	}
@@ -201,7 +212,7 @@ func (w *Watch) residences(dop, dpv float64) float64 {
 func (w *Watch) cutRecovery() {
 	s, in := &w.s, &w.in
 	r := &s.Recov
-	thr := max(3*max(s.Noise.sigma(), 0.02), 0.3)
+	thr := w.recoveryLeast()
 	if u, _ := w.usualRecovery(r.SP); u == 0 || r.Sat || in.t-r.T0 < 3*u || w.smallEvent(thr) {
 		return
 	}
@@ -251,13 +262,14 @@ func (w *Watch) keepRecovery(e recovery) {
 	w.judgeSlow()
 }
 
-// smallEvent: hardly out of the noise, or far smaller than what usually upsets the loop:
-// the usual wandering, which has a length of its own.
+// smallEvent: hardly out of the noise, so small that the resolution of PV hides its end, or
+// far smaller than what usually upsets the loop: the usual wandering, which has a length of
+// its own.
 func (w *Watch) smallEvent(thr float64) bool {
 	r := &w.s.Recov
 	b := &r.Big[kindOf(r.SP)]
 	*b = max(0.97**b, float32(r.Peak))
-	return r.Peak < max(1.2*thr, 0.3*float64(*b))
+	return r.Peak < max(1.2*thr, w.s.Noise.resolution()/overAt, 0.3*float64(*b))
 }
 
 // usualRecovery is how long this loop takes to recover, s: as listed, else as seen, for

@@ -124,6 +124,8 @@ func stepSaturation(w *Watch) {
 	} else if side != 0 {
 		if a*in.e*side > sigma {
 			z.Side = side // e pushes OP towards this limit
+		} else if z.Side == side && s.Motion.spMoved(in) {
+			z.Side = 0 // SP crossed PV: of that P may see nothing
 		} else if z.Side == side && a*s.Motion.EF*side < 0 {
 			z.CrossAt, z.Frames, z.Peak, z.IntPast, z.Due = in.t, 0, 0, 0, 0
 		}
@@ -133,6 +135,11 @@ func stepSaturation(w *Watch) {
 	if z.WindUp && in.t-z.LastWind > 86400 {
 		z.WindUp, z.WindUps = false, 0
 	}
+}
+
+// spMoved: SP stepped within the lag of the smoothed e, or is on its way.
+func (m *motion) spMoved(in *input) bool {
+	return in.t-m.SPStep < stillFrom*in.dt || m.SPBusy > 0.05
 }
 
 // stepStretch counts visits to a limit that each outlast a recovery: short overloads

@@ -202,17 +202,11 @@ func (w *Watch) scheduled(b *cycleBank, period float64) bool {
 			return true
 		}
 	}
-	// A day with peaks of its own shape gives half-cycles of many lengths, and what is so far
-	// beyond the loop's dynamics is followed, not made.
-	if rt > 0 && period > 20*rt && period > 43200 && period < 1.5*86400 {
+	if w.ofTheDay(b, period) {
 		return true
 	}
-	// The mean of the half-cycles is as uncertain as they are irregular, and a daily load
-	// has shapes of its own.
-	_, regular, _ := b.lengths(int(b.N))
-	day := min(0.15, 2/(regular*math.Sqrt(max(float64(b.N), 1))))
-	for k := 1.; k <= 3; k++ {
-		if off := math.Abs(period*k/86400 - 1); off < 0.05 || k == 1 && off < day {
+	for k := 2.; k <= 3; k++ {
+		if math.Abs(period*k/86400-1) < 0.05 {
 			return true
 		}
 	}
@@ -222,6 +216,26 @@ func (w *Watch) scheduled(b *cycleBank, period float64) bool {
 		even += b.at(i + 1).length()
 	}
 	return max(odd, even) > 1.4*min(odd, even)
+}
+
+// ofTheDay: a period, s, far slower than the loop's own dynamics that is a day as far as
+// the half-cycles can tell: a load that the people it serves make.
+func (w *Watch) ofTheDay(b *cycleBank, period float64) bool {
+	rt, _ := w.resetS()
+	if period < 43200 || period < 6*rt {
+		return false
+	}
+	// A day with peaks of its own shape gives half-cycles of many lengths, and what is so far
+	// beyond the loop's dynamics is followed, not made.
+	if rt > 0 && period > 20*rt && period < 1.5*86400 {
+		return true
+	}
+	// The mean of half-cycles is as uncertain as they are irregular, and a daily load has
+	// shapes of its own. That of all in the ring is the surest.
+	all, regular, _ := b.lengths(int(b.N))
+	day := max(0.05, min(0.15, 2/(regular*math.Sqrt(max(float64(b.N), 1)))))
+	newest, _, _ := b.lengths(min(int(b.N), 8))
+	return math.Abs(period/86400-1) < day || math.Abs(period*all/newest/86400-1) < day
 }
 
 // steadySP: SP has not stepped for so long, s, and is not ramped.

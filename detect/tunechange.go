@@ -75,6 +75,10 @@ func (w *Watch) tuneCheck(k int) {
 	if what == 0 || c.On && w.in.t-c.Seen < 3600 {
 		return
 	}
+	// P that sees less of SP than the integral does makes another law of a ramp.
+	if s.Motion.SPRamp.s() > n.Since {
+		return
+	}
 	if c.Maybe == 0 {
 		c.Maybe, c.MaybeOf, c.MaybeAt = what, uint8(k), momentOf(oldest)
 	}
@@ -225,15 +229,15 @@ func paced(ratio, r float64) bool {
 	return r > 0 && (r > changeNot || r < 1/changeNot) && within(ratio, r, changeSpread)
 }
 
-// contradicted: another scale, in a block that began after the first of the new fits,
-// reads gain (what 1) or reset (2) as it was. A tuning that changed does so at all scales;
+// contradicted: another scale, in a block most of which is after the begin of the first of
+// the new fits, reads gain (what 1) or reset (2) as it was. A tuning that changed does so at all scales;
 // what moves OP beside the law (a load that paces it, an operator) shows at one. A scale
 // whose usual value is nearer to now than to was has begun after the change.
 func (w *Watch) contradicted(k int, since float64, what uint8, was, now float64) bool {
 	for j := range w.s.Fits {
 		b := &w.s.Fits[j]
 		f := &b.Last
-		if j == k || b.BaseK.N < 4 || f.R2 < changeR2 || f.X < fitX || f.T0.s() < since {
+		if j == k || b.BaseK.N < 4 || f.R2 < changeR2 || f.X < fitX || (f.T0.s()+f.At.s())/2 < since {
 			continue
 		}
 		off, usual := w.strays(j, f), b.BaseK.Value()

@@ -46,7 +46,7 @@ type Case struct {
 	Truth   func() Truth
 	Law     func() Law // of the loop the fault is in, at the end
 	Subtle  func() bool
-	Clipped func(detect.Kind) bool // OP or PV really sat at an end, so that this kind is no false one
+	Clipped func(loop string, k detect.Kind) bool // OP or PV of the loop really sat at an end, so that this kind is no false one
 	// Forbid says that a cause must not be named of a loop (nil: no such rule).
 	Forbid func(loop string, c detect.Cause) bool
 }
@@ -86,10 +86,11 @@ func (s *scenario) asCase() *Case {
 // trulyClipped: OP really sat at its limit for longer than a recovery takes, or PV
 // at an end of its range, so a finding about that is no false one, whatever the
 // family.
-func (s *scenario) trulyClipped(k detect.Kind) bool {
-	l := s.rigs[0]
-	return l.clipLongest > 2*l.recovery && (k == detect.OutputSaturation || k == detect.SustainedOffset) ||
-		l.endLongest > 60 && k == detect.PVAtRangeEnd
+func (s *scenario) trulyClipped(loop string, k detect.Kind) bool {
+	return slices.ContainsFunc(s.rigs, func(l *rig) bool {
+		return l.name == loop && (l.clipLongest > 2*l.recovery && (k == detect.OutputSaturation || k == detect.SustainedOffset) ||
+			l.endLongest > 60 && k == detect.PVAtRangeEnd)
+	})
 }
 
 // JudgeAll makes and judges n cases on all cores; the order is that of their numbers.

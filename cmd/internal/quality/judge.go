@@ -202,7 +202,7 @@ func scoreFindings(c *Case, t *Truth, h *listener, res *Result) {
 			}
 		}
 		switch {
-		case (res.Healthy || e.raised >= onset && !own) && (slices.Contains(t.Also, k) || c.Clipped(k)):
+		case (res.Healthy || e.raised >= onset && !own) && (slices.Contains(t.Also, k) || c.Clipped(e.last.Loop, k)):
 		case res.Healthy || e.raised < onset || !own && !slices.Contains(t.Also, k):
 			f := e.last
 			f.At = e.raised

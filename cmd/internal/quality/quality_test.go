@@ -157,7 +157,7 @@ func TestEpisodes(t *testing.T) {
 // A family scored by hand.
 func TestScoreCounts(t *testing.T) {
 	mk := func(findings ...detect.Finding) Result {
-		c := &Case{Rows: []*configs.Loop{configs.NewLoop("a")}, Clipped: func(detect.Kind) bool { return false }}
+		c := &Case{Rows: []*configs.Loop{configs.NewLoop("a")}, Clipped: func(string, detect.Kind) bool { return false }}
 		truth := &Truth{Kinds: kinds{detect.GrowingOscillation}, Also: kinds{detect.SustainedOscillation}, Causes: causes{detect.ResetTooShort},
 			Soft: causes{detect.GainTooHigh}, OnsetS: 100, EndS: 1000, UnitS: 10}
 		h := newListener()

@@ -50,6 +50,7 @@ type rig struct {
 	turns       int // reversals of the stem after the onset
 	turnDir     float64
 	clipRun     float64 // s, of the stretch now
+	clipOff     float64 // s, off the limit since: noise interrupts a stretch, and ends none
 	clipLongest float64 // s, over the whole run, law active
 	clipLoud    float64 // s, after the onset, all together
 	endRun      float64 // s, of PV at an end of its range now
@@ -150,12 +151,12 @@ func (l *rig) step(epoch int64, t float64) (collector.Frame, bool) {
 		}
 	}
 	if !l.law.manual && (u <= l.law.lo || u >= l.law.hi) {
-		l.clipRun += l.h
+		l.clipRun, l.clipOff = l.clipRun+l.h, 0
 		l.clipLongest = math.Max(l.clipLongest, l.clipRun)
 		if t >= l.onsetS {
 			l.clipLoud += l.h
 		}
-	} else {
+	} else if l.clipOff += l.h; l.clipOff > l.recovery/10 {
 		l.clipRun = 0
 	}
 	if l.y <= 0.05 || l.y >= 99.95 {

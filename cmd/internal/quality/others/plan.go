@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"math"
 	"math/rand/v2"
+	"slices"
 	"strings"
 
 	"midwatch/cmd/internal/quality"
@@ -77,9 +78,11 @@ func (f *family) make(seed uint64, index int, days float64) *quality.Case {
 		grew := own.onset == 0 || own.loud.rms() >= 1.5*own.quiet.rms()
 		return !p.clear && (!grew || own.loud.rms() < p.floor)
 	}
-	c.Clipped = func(k detect.Kind) bool {
-		return own.clipMax > 2*own.recovery && (k == detect.OutputSaturation || k == detect.SustainedOffset) ||
-			own.edgeMax > 60 && k == detect.PVAtRangeEnd
+	c.Clipped = func(name string, k detect.Kind) bool {
+		return slices.ContainsFunc(p.loops, func(l *loop) bool {
+			return l.name == name && (l.clipMax > 2*l.recovery && (k == detect.OutputSaturation || k == detect.SustainedOffset) ||
+				l.edgeMax > 60 && k == detect.PVAtRangeEnd)
+		})
 	}
 	c.Forbid = p.forbid
 	return c
