@@ -48,6 +48,10 @@ func familyOf(k detect.Kind) string {
 	return string(k)
 }
 
+// Trouble names what a finding is about: findings of one subject that are of one family
+// are one trouble, however often it comes back.
+func Trouble(f *detect.Finding) string { return place(subjectKey(f.Subject), familyOf(f.Kind)) }
+
 // momentary kinds are events, not states: they are over as soon as they are said.
 func momentary(k detect.Kind) bool { return k == detect.TuningChanged || k == detect.ClockStepKind }
 

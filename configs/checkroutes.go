@@ -116,8 +116,17 @@ func warnings(c *Config) []string {
 	if c.Heartbeat.URL+c.Heartbeat.File+c.Heartbeat.MQTT == "" {
 		w = append(w, "there is no heartbeat: nobody is told when the watch itself stops")
 	}
+	w = append(w, LoopWarnings(c.Loops)...)
+	for i, r := range c.Advise.Routes {
+		w = append(w, unmatched(c, fmt.Sprintf("advise.routes[%d]", i+1), &r)...)
+	}
+	return w
+}
+
+// LoopWarnings is what is allowed in a loop list but worth saying.
+func LoopWarnings(loops []*Loop) (w []string) {
 	var guessed, indexed []string
-	for _, l := range c.Loops {
+	for _, l := range loops {
 		if !l.PVRangeGiven {
 			guessed = append(guessed, l.Name)
 		}
@@ -131,10 +140,23 @@ func warnings(c *Config) []string {
 	if len(indexed) > 0 {
 		w = append(w, "tags by ns=: "+some(indexed)+"; the number may change when the server restarts, nsu=URI stays")
 	}
-	for i, r := range c.Advise.Routes {
-		w = append(w, unmatched(c, fmt.Sprintf("advise.routes[%d]", i+1), &r)...)
-	}
 	return w
+}
+
+// ConditionsUnread says whose conditions a trend without flags does not hold; it is empty
+// where no loop has any.
+func ConditionsUnread(loops []*Loop) string {
+	var names []string
+	for _, l := range loops {
+		if l.ActiveWhen.Text+l.SuppressWhen.Text != "" {
+			names = append(names, l.Name)
+		}
+	}
+	if names == nil {
+		return ""
+	}
+	return "active_when and suppress_when of " + some(names) + " cannot be read from a trend: it is judged as if the law could always act and nothing were suppressed; " +
+		"hint: write inactive and suppressed into its column flags, as export does"
 }
 
 // some names the first of many.

@@ -31,7 +31,7 @@ func (w *Watch) Explain() []string {
 	if k, k0, k1, t, t0, t1 := w.tuningRange(); k == k {
 		out = append(out, fmt.Sprintf("tuning in service: gain %s, reset %s", readText(k, k0, k1, ""), readText(t, t0, t1, " s")))
 	} else {
-		out = append(out, "tuning in service: not excited enough to read")
+		out = append(out, "tuning in service: "+w.unread())
 	}
 	if l := w.lag(); l > 0 {
 		out = append(out, fmt.Sprintf("OP logged late or PV filtered in the controller: a lag of about %s s", sig2(l)))
@@ -47,8 +47,12 @@ func (w *Watch) Explain() []string {
 	}
 	if s.Osc.Grow || s.Osc.Sus {
 		sh := w.shapes()
-		out = append(out, fmt.Sprintf("live oscillation since %s: period %s, lag of the controller %.0f degrees (asked of a reset too short over %.0f, of a gain too high under %.0f)",
-			FormatTime(w.ms(s.Osc.Since)), duration(s.Osc.P), s.Osc.PhiDeg, phiReset, phiGain)+part(", read directly %s degrees (asked within 15 of that)", sh.phiDeg, sig2))
+		lag := "not read"
+		if s.Osc.Kc != 0 { // no lag without a law
+			lag = fmt.Sprintf("%.0f degrees", s.Osc.PhiDeg)
+		}
+		out = append(out, fmt.Sprintf("live oscillation since %s: period %s, lag of the controller %s (asked of a reset too short over %.0f, of a gain too high under %.0f)",
+			FormatTime(w.ms(s.Osc.Since)), duration(s.Osc.P), lag, phiReset, phiGain)+part(", read directly %s degrees (asked within 15 of that)", sh.phiDeg, sig2))
 		if s.Osc.ByChange {
 			out = append(out, "what changed in the tuning before it is held to be plainer than that lag")
 		}
@@ -94,6 +98,17 @@ func (w *Watch) Explain() []string {
 		}
 	}
 	return out
+}
+
+// unread says why the tuning in service is not read.
+func (w *Watch) unread() string {
+	switch law := w.s.Tune.Law; {
+	case law == 0:
+		return "not excited enough to read"
+	case law < 0.5:
+		return "not read: e moves, but a PI law alone does not explain what OP does (derivative action, noise, or another signal that moves it)"
+	}
+	return "not read: the readings are not sharp enough, disagree, or are from before its last change"
 }
 
 func (w *Watch) recoveryOf(sp bool) string {

@@ -6,6 +6,7 @@ import (
 	"strings"
 	"testing"
 
+	"midwatch/collector"
 	"midwatch/configs"
 )
 
@@ -155,5 +156,39 @@ func TestExplainOfASlippingValve(t *testing.T) {
 		if all, n := passes(t, line); all != x.want || n != 7 {
 			t.Errorf("%s: want %v by seven numbers: %s", x.name, x.want, line)
 		}
+	}
+}
+
+// What was not read is said to be so, and why: a loop that does not move is another matter
+// than one that moves by another law.
+func TestExplainSaysWhatWasNotRead(t *testing.T) {
+	w, _ := swingWatch(func(int) float64 { return 8 }, even(0.7, 18))
+	w.s.Osc.Sus, w.s.Osc.P = true, 480
+	says := func(what string) {
+		t.Helper()
+		if all := w.Explain(); lineWith(all, what) == "" {
+			t.Errorf("no %q in\n%s", what, strings.Join(all, "\n"))
+		}
+	}
+	says("lag of the controller not read (asked")
+	w.s.Osc.Kc, w.s.Osc.PhiDeg = 1.2, 50
+	says("lag of the controller 50 degrees (asked")
+
+	says("tuning in service: not excited enough to read")
+	w.s.Tune.Law = 0.1
+	says("tuning in service: not read: e moves, but a PI law alone does not explain")
+	if v := w.View(); !strings.Contains(v.Unread, "e moves") {
+		t.Errorf("the view says %q", v.Unread)
+	}
+	w.s.Tune.Law = 0.9
+	says("tuning in service: not read: the readings are not sharp enough")
+}
+
+// One row says nothing of the mode: it is not called manual.
+func TestFirstRowIsNotManual(t *testing.T) {
+	w := New(configs.NewLoop("LIC-310"), 0, Options{})
+	w.Step(&collector.Frame{Time: 1767225600000, PV: 50, SP: 50, OP: 50, Mode: collector.Auto}, func(*Finding) {})
+	if v := w.View(); v.State != Learning || v.Why != "learning the interval of its samples" {
+		t.Errorf("%s: %s", v.State, v.Why)
 	}
 }

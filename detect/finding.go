@@ -61,6 +61,15 @@ const (
 	Undetermined             Cause = "undetermined"
 )
 
+// HasCause says whether a kind has a cause to be named; the others are facts.
+func HasCause(k Kind) bool {
+	switch k {
+	case NotInNormalMode, StaleData, TuningChanged, SourceDown, SourceLate, SamplesLost, StoreFailing, SenderFailing, ClockStepKind, CertificateExpiring:
+		return false
+	}
+	return true
+}
+
 // Event of a finding: findings are statements of state.
 type Event string
 

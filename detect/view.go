@@ -35,6 +35,7 @@ type View struct {
 	PeriodS             float64 // s, of a live oscillation
 	GainPct             float64 // tuning in service, %/%
 	GainLow, GainHigh   float64
+	Unread              string  // why there is no gain in service; empty: there is
 	ResetS              float64 // s
 	ResetLow, ResetHigh float64
 	TagGain, TagReset   float64     // last read from tags, %/% and s; 0: not read
@@ -64,6 +65,9 @@ func (w *Watch) View() View {
 		v.PeriodS = s.Osc.P
 	}
 	v.GainPct, v.GainLow, v.GainHigh, v.ResetS, v.ResetLow, v.ResetHigh = w.tuningRange()
+	if v.GainPct != v.GainPct {
+		v.Unread = w.unread()
+	}
 	v.TagGain, v.TagReset = float64(s.Change.TagGain), float64(s.Change.TagReset)
 	v.TuningNote, v.Schedule = w.tuningNote(), w.schedulePoints()
 	if l := w.lag(); l > 0 {
@@ -78,6 +82,8 @@ func (w *Watch) View() View {
 		}
 	}
 	switch {
+	case s.Grid.DT == 0:
+		v.State, v.Why = Learning, "learning the interval of its samples"
 	case s.Misc.Stale:
 		v.State, v.Why = NoData, "no usable value"
 	case held:

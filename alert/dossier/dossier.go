@@ -11,7 +11,6 @@
 package dossier
 
 import (
-	"fmt"
 	"iter"
 	"strings"
 	"time"
@@ -163,18 +162,19 @@ type Episode struct {
 	Text       string          `json:"text"`
 
 	since, end int64
+	told       int64   // time of the text, ms
 	growth     float64 // the largest heard of, a cycle; 0 none
 }
 
 // Says is the cause in words; empty where none is named.
 func (e Episode) Says() string {
 	switch {
-	case e.Cause == detect.NoCause || e.Cause == detect.Undetermined && e.Kind == detect.TuningChanged:
+	case e.Cause == detect.NoCause, e.Cause == detect.Undetermined && !detect.HasCause(e.Kind):
 		return ""
 	case e.Cause == detect.Undetermined:
 		return "the cause cannot be told"
 	}
-	return fmt.Sprintf("%s, confidence %s", strings.ReplaceAll(string(e.Cause), "-", " "), short(e.Confidence))
+	return strings.ReplaceAll(string(e.Cause), "-", " ") + ", " + detect.Likely(e.Confidence)
 }
 
 // Cycle is a spell in which the loop swung.

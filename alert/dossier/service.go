@@ -132,7 +132,7 @@ func (s *series) tuning(in *Input, w watched, cs []tuningChange) []Fact {
 			say("faceplate", "as the faceplate would show it", "about "+faceplate(l, about(r.Gain.Value), about(r.Reset.Value))))
 		out = append(out, against(l, r)...)
 	} else {
-		why := "not excited enough to be read: it needs moves of the error well above noise, with the law acting off its limits"
+		why := cmp.Or(v.Unread, "not read") + "; a reading needs moves of the error well above noise, with the law acting off its limits"
 		for _, b := range v.BlindSpots {
 			if strings.Contains(b, "no OP") {
 				why = b

@@ -99,11 +99,7 @@ func (d *Dossier) whereFirst() string {
 		}
 		return text + "; begin with the checks by hand, see 3." + over
 	}
-	sure := "possibly"
-	if e.Confidence >= 0.8 {
-		sure = "likely"
-	}
-	text := fmt.Sprintf("%s, %s: %s (confidence %s).", capital(place), sure, said(e.Cause), short(e.Confidence))
+	text := fmt.Sprintf("%s, %s: %s.", capital(place), detect.Likely(e.Confidence), said(e.Cause))
 	if len(e.Also) > 0 {
 		var also []string
 		for _, c := range e.Also {
@@ -247,7 +243,8 @@ func (d *Dossier) summary() []Line {
 	add := func(about, text string) { out = append(out, Line{about, text}) }
 	add("where to look first", d.whereFirst())
 	if e := d.leading(); e != nil {
-		text := cmp.Or(e.Text, strings.ReplaceAll(string(e.Kind), "-", " ")+".")
+		// What it says of the time since the onset counts from when it was told.
+		text := "Told " + time.UnixMilli(e.told).In(d.zone).Format("2 Jan 2006 15:04") + ": " + cmp.Or(e.Text, strings.ReplaceAll(string(e.Kind), "-", " ")+".")
 		if n := len(d.Episodes); n > 1 {
 			text += fmt.Sprintf(" %d episodes in all.", n)
 		}

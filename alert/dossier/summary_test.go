@@ -3,6 +3,7 @@ package dossier_test
 import (
 	"strings"
 	"testing"
+	"time"
 
 	"midwatch/alert"
 	"midwatch/alert/dossier"
@@ -33,8 +34,8 @@ func TestHeadSaysWhereToLook(t *testing.T) {
 		numbers string
 	}{
 		{"", "", 0, nil, "Nothing was found in the span: these data give no reason", "These data hold no model good enough"},
-		{detect.GrowingOscillation, detect.ResetTooShort, 0.92, []detect.Cause{detect.GainTooHigh}, "Tuning, likely: reset too short (confidence 0.92). Also possible: gain too high.", "By the cause alone a first move would be to gain 1"},
-		{detect.ValveStickingKind, detect.ValveSticking, 0.7, nil, "Final element, possibly: valve sticking (confidence 0.7).", "None for this: first what is named above."},
+		{detect.GrowingOscillation, detect.ResetTooShort, 0.92, []detect.Cause{detect.GainTooHigh}, "Tuning, likely: reset too short. Also possible: gain too high.", "By the cause alone a first move would be to gain 1"},
+		{detect.ValveStickingKind, detect.ValveSticking, 0.7, nil, "Final element, possibly: valve sticking.", "None for this: first what is named above."},
 		{detect.SustainedOscillation, detect.Undetermined, 0.6, []detect.Cause{detect.OutsideDisturbance, detect.ValveSticking}, "It cannot be told from these data whether it is measurement, final element, outside or tuning (possible: outside disturbance, valve sticking)", "These data hold no model"},
 		{detect.FrozenPV, detect.MeasurementCause, 1, nil, "Measurement: frozen pv.", "None for this"},
 		{detect.NotInNormalMode, detect.Undetermined, 1, nil, "Operation: the loop is not in its normal mode (auto)", "These data"},
@@ -52,6 +53,10 @@ func TestHeadSaysWhereToLook(t *testing.T) {
 		}
 		if got := line(d, "where to look first"); !strings.HasPrefix(got, c.first) || d.Summary[0].About != "where to look first" {
 			t.Errorf("%s, %s: %q, want %q", c.kind, c.cause, got, c.first)
+		}
+		told := "Told " + time.UnixMilli(startMs+7200_000).UTC().Format("2 Jan 2006 15:04") + ": It is seen."
+		if got := line(d, "seen"); c.kind != "" && got != told {
+			t.Errorf("%s: seen %q, want %q", c.kind, got, told)
 		}
 		if got := line(d, "numbers to tune from"); !strings.HasPrefix(got, c.numbers) {
 			t.Errorf("%s, %s: numbers %q, want %q", c.kind, c.cause, got, c.numbers)

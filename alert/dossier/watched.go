@@ -181,6 +181,7 @@ func episodes(loop string, fs []detect.Finding, from, to int64) []Episode {
 		}
 		e := &out[i]
 		e.Cause, e.Confidence, e.Also, e.Text = f.Cause, math.Round(f.Confidence*100)/100, f.AlsoPossible, f.Text
+		e.told = f.At
 		if len(f.Measures) > 0 {
 			e.Measures = f.Measures
 		}

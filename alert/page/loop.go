@@ -264,9 +264,9 @@ func (p *Page) fillState(v *loopPage, s *LoopState, view *detect.View, known boo
 	}
 	add("range of PV", number(lp.PVLow, 5)+" to "+quantity(lp.PVHigh, unit))
 	tune := func(name, value string) { v.Tuning = append(v.Tuning, measureLine{name, value}) }
-	tune("gain in service", ranged(view.GainPct, view.GainLow, view.GainHigh, "%/%"))
+	tune("gain in service", ranged(view.GainPct, view.GainLow, view.GainHigh, "%/%", view.Unread))
 	tune("gain in the list", quantity(lp.GainPct, "%/%"))
-	tune("reset in service", ranged(view.ResetS, view.ResetLow, view.ResetHigh, "s"))
+	tune("reset in service", ranged(view.ResetS, view.ResetLow, view.ResetHigh, "s", view.Unread))
 	list := quantity(lp.IdealReset, "s")
 	if lp.PropOnly {
 		list = "none, P-only by design"
@@ -287,8 +287,11 @@ func (p *Page) fillState(v *loopPage, s *LoopState, view *detect.View, known boo
 	}
 }
 
-func ranged(v, low, high float64, unit string) string {
-	if math.IsNaN(v) {
+func ranged(v, low, high float64, unit, unread string) string {
+	if math.IsNaN(v) && unread != "" {
+		return unread
+	}
+	if math.IsNaN(v) { // the gain shows in noise alone, the reset does not
 		return "not excited enough to read"
 	}
 	s := number(v, 3) + "\u00a0" + unit

@@ -58,14 +58,10 @@ var stateWords = map[detect.State]string{
 	detect.NotNormal: "not in normal mode", detect.HeldState: "held", detect.NoData: "no data",
 }
 
-// plainKinds are facts: nobody asks for their cause.
-var plainKinds = map[detect.Kind]bool{detect.NotInNormalMode: true, detect.StaleData: true, detect.TuningChanged: true, detect.SourceDown: true,
-	detect.SourceLate: true, detect.SamplesLost: true, detect.StoreFailing: true, detect.SenderFailing: true, detect.ClockStepKind: true, detect.CertificateExpiring: true}
-
 // sure says how sure a cause is, in words.
 func sure(f *detect.Finding) string {
 	switch {
-	case f.Cause == detect.NoCause, f.Cause == detect.Undetermined && plainKinds[f.Kind]:
+	case f.Cause == detect.NoCause, f.Cause == detect.Undetermined && !detect.HasCause(f.Kind):
 		return ""
 	case f.Cause == detect.Undetermined:
 		return "cause cannot be told"

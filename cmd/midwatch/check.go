@@ -24,7 +24,7 @@ import (
 
 // checkFlags are the flags of check.
 type checkFlags struct {
-	config                       string
+	config, loops                string
 	connect, trial, show, asJSON bool
 	within                       time.Duration
 }
@@ -32,13 +32,19 @@ type checkFlags struct {
 func checkVerb(h *house) *cobra.Command {
 	var f checkFlags
 	c := &cobra.Command{
-		Use:   "check -c FILE",
+		Use:   "check -c FILE | --loops LOOPS.csv",
 		Short: "says whether the configuration stands",
 		Long: `Reads the configuration, the loop list and the secrets they name, and reports
 every mistake with file, line and column. When there is none it shows what was
 understood: the tuning of each loop in both usual forms, to be read against the
 faceplate, cascades, and what loops share; and, where a watch has run on the data
 folder, how many loops it can judge and the blind spots of each.
+
+With --loops a loop list is checked alone, without sources and tags: enough for
+replay.
+
+  midwatch check -c midwatch.yaml
+  midwatch check --loops loops.csv
 
   --connect  also reads every tag once, and shows its value, range and unit
   --send     also sends a marked trial advisory through every sender
@@ -49,6 +55,7 @@ It changes nothing on any server.`,
 		RunE: func(*cobra.Command, []string) error { return h.check(&f) },
 	}
 	configFlag(c, &f.config)
+	c.Flags().StringVar(&f.loops, "loops", "", "loop list, CSV, to be checked alone")
 	c.Flags().BoolVar(&f.connect, "connect", false, "read every tag once")
 	c.Flags().BoolVar(&f.trial, "send", false, "send a trial advisory through every sender")
 	c.Flags().BoolVar(&f.show, "show", false, "print the settings in force")
@@ -108,7 +115,36 @@ func onlyCredentials(err error) bool {
 	return true
 }
 
+// checkList checks a loop list alone, as replay reads it.
+func (h *house) checkList(f *checkFlags) error {
+	if f.config != "" || f.connect || f.trial || f.show {
+		return usagef("--loops checks a loop list alone; hint: -c, --connect, --send and --show go with a configuration")
+	}
+	list, err := configs.LoadLoopList(f.loops)
+	if err != nil {
+		return usage{err}
+	}
+	r := checked{File: f.loops, Warnings: configs.LoopWarnings(list), Loops: loopsChecked(list, nil), Links: links(list)}
+	if s := configs.ConditionsUnread(list); s != "" {
+		r.Warnings = append(r.Warnings, s)
+	}
+	if f.asJSON {
+		return json.NewEncoder(h.stdout).Encode(r)
+	}
+	return r.print(h.stdout, nil)
+}
+
+func links(loops []*configs.Loop) (out []string) {
+	for _, l := range configs.Structure(loops) {
+		out = append(out, l.String())
+	}
+	return out
+}
+
 func (h *house) check(f *checkFlags) error {
+	if f.loops != "" {
+		return h.checkList(f)
+	}
 	c, err := loadConfig(f.config)
 	if err != nil && !f.connect && !f.trial && onlyCredentials(err) {
 		// On an engineer's shell the service manager's folder is not there; all else
@@ -124,15 +160,12 @@ func (h *house) check(f *checkFlags) error {
 		return c.Show(h.stdout)
 	}
 	rows := h.loopRows(c)
-	r := checked{File: c.File, Warnings: c.Warnings, Loops: loopsChecked(c, rows)}
+	r := checked{File: c.File, Warnings: c.Warnings, Loops: loopsChecked(c.Loops, rows), Links: links(c.Loops)}
 	if len(rows) > 0 {
 		r.States = &api.LoopCounts{}
 		for _, x := range rows {
 			r.States.Add(x.State)
 		}
-	}
-	for _, l := range configs.Structure(c.Loops) {
-		r.Links = append(r.Links, l.String())
 	}
 	failed := false
 	if f.connect {
@@ -176,13 +209,13 @@ func (h *house) loopRows(c *configs.Config) []api.Loop {
 
 // loopsChecked shows the tuning, and what keeps a watch on this data folder from seeing
 // the loop, a tuning that its data contradict among it.
-func loopsChecked(c *configs.Config, rows []api.Loop) []loopChecked {
+func loopsChecked(loops []*configs.Loop, rows []api.Loop) []loopChecked {
 	blind := map[string][]string{}
 	for _, x := range rows {
 		blind[x.Loop] = x.Blind
 	}
 	var out []loopChecked
-	for _, l := range c.Loops {
+	for _, l := range loops {
 		out = append(out, loopChecked{Loop: l.Name, Tuning: l.DescribeTuning(), Blind: blind[l.Name]})
 	}
 	return out
@@ -258,12 +291,17 @@ func (h *house) trials(c *configs.Config) (out []trialSent, failed bool, err err
 	return out, failed, nil
 }
 
+const checkedConfig = "%s: %d loops, %d sources, %d senders: no mistakes\n"
+
+// print writes it for people; c is nil where a loop list was checked alone.
 func (r *checked) print(w io.Writer, c *configs.Config) error {
-	fmt.Fprintf(w, "%s: %d loops, %d sources, %d senders: no mistakes\n", r.File, len(c.Loops), len(c.Sources), len(c.Advise.Senders))
-	if n := r.States; n != nil {
-		fmt.Fprintf(w, "loops as the watch sees them: judged %d, cannot judge %d, not in normal mode %d, held %d\n", n.Judged, n.CannotJudge, n.NotNormal, n.Held)
-	} else {
-		fmt.Fprintln(w, "no watch of this data folder answers and none has left anything there: how many loops are judged is not known")
+	switch n := r.States; {
+	case c == nil:
+		fmt.Fprintf(w, "%s: %d loops: no mistakes\n", r.File, len(r.Loops))
+	case n != nil:
+		fmt.Fprintf(w, checkedConfig+"loops as the watch sees them: judged %d, cannot judge %d, not in normal mode %d, held %d\n", r.File, len(c.Loops), len(c.Sources), len(c.Advise.Senders), n.Judged, n.CannotJudge, n.NotNormal, n.Held)
+	default:
+		fmt.Fprintf(w, checkedConfig+"no watch of this data folder answers and none has left anything there: how many loops are judged is not known\n", r.File, len(c.Loops), len(c.Sources), len(c.Advise.Senders))
 	}
 	for _, s := range r.Warnings {
 		fmt.Fprintf(w, "note: %s\n", s)

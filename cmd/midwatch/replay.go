@@ -10,6 +10,7 @@ import (
 	"os"
 	"strings"
 	"time"
+	"unicode/utf8"
 
 	"github.com/spf13/cobra"
 
@@ -21,25 +22,47 @@ import (
 
 func replayVerb(h *house) *cobra.Command {
 	var config, loops, memory, explain string
-	workers, asJSON := 0, false
+	workers, asJSON, asText, whole := 0, false, false, false
 	c := &cobra.Command{
 		Use:   "replay [-c FILE | --loops LOOPS.csv] TREND.csv...|-",
 		Short: "judges recorded trends as the live watch would",
 		Long: `Judges recorded trends by the same steps as the live watch. Findings go to
-standard output, one JSON object a line, in order of time, subject and kind; what
-was read and judged goes to standard error at the end.
+standard output in order of time, subject and kind: one JSON object a line, for
+programs, or with --text a line to read of each: time (UTC), loop, what, in short.
+What was read and judged goes to standard error at the end.
 
-A trend CSV has the columns time, loop, pv, sp, op, and if there are any mode,
-flags, gain, reset_s. Several files are merged by time, gzip is unpacked, "-" is
-standard input. The loop list is that of -c or --loops.
+Several files are merged by time, gzip is unpacked, "-" is standard input. The loop
+list is that of -c or --loops; a list alone will do, without sources and tags, and
+check --loops says whether it stands.
 
-  midwatch replay --loops loops.csv january.csv.gz february.csv.gz
+  midwatch replay --text --loops loops.csv january.csv.gz february.csv.gz
   midwatch export -c midwatch.yaml --trend | midwatch replay -c midwatch.yaml -
   midwatch replay --loops loops.csv --explain AIC-204 january.csv.gz 2> evidence.txt
 
+--explain prints the evidence of one loop to standard error, where notes and the
+summary go, too: at each decision what is new in it, or went past its limit since the
+one before (--whole: all of it each time), and all of it at the end. On a terminal it
+stands between the findings; "2> evidence.txt" keeps them apart.
+
+The summary counts troubles, and how often they were raised: one that comes back is
+the same trouble. Beside them it sets the false ones that the budget
+(nuisance_per_loop_year) allows for healthy loops over as long a time. That is what
+was asked for, not a measured rate; what faults there are comes on top.
+
 The findings are the same bytes for any number of workers. With --memory the
 loops begin with what they had learned (export --memory writes it); without it
-they learn from the beginning of the files.`,
+they learn from the beginning of the files.
+
+A trend CSV is separated by commas and has these columns, by name, in any order:
+
+` + trend.Help(80) + `
+A row is a frame. With flags, only they say what was missed. Without them a loop
+without a row that has a pv for longer than silence_s is out of sight, be its report
+periodic or exception; where silence_s is empty, for longer than 40 of its usual
+intervals, 2.5 times its longest gap before, and 30 min (exception: 6 h). A loop
+reported by exception needs a row for each change, with all of its values in it. The
+conditions active_when and suppress_when have no columns: the flags inactive and
+suppressed say whether they hold.`,
 		Args: cobra.MinimumNArgs(1),
 		RunE: func(_ *cobra.Command, files []string) error {
 			list, budget, err := loadLoops(config, loops)
@@ -49,7 +72,10 @@ they learn from the beginning of the files.`,
 			if explain != "" && !hasLoop(list, explain) {
 				return usagef("loop %q is not in the loop list; hint: --explain takes the name of one loop", explain)
 			}
-			o := daemon.ReplayOptions{Loops: list, Detect: detect.Options{NuisancePerLoopYear: budget}, Workers: workers, Explain: explain}
+			o := daemon.ReplayOptions{Loops: list, Detect: detect.Options{NuisancePerLoopYear: budget}, Workers: workers, Explain: explain, Whole: whole}
+			if asText {
+				o.Write = textLine(list)
+			}
 			if memory != "" {
 				if o.Memories, err = readMemories(memory); err != nil {
 					return err
@@ -63,8 +89,28 @@ they learn from the beginning of the files.`,
 	c.Flags().StringVar(&memory, "memory", "", "memories to start from")
 	c.Flags().IntVar(&workers, "workers", 0, "cores to use; 0 is all")
 	c.Flags().StringVar(&explain, "explain", "", "loop whose evidence is printed to standard error at each decision")
-	c.Flags().BoolVar(&asJSON, "json", false, "print the summary as JSON")
+	c.Flags().BoolVar(&whole, "whole", false, "with --explain: print the whole evidence at each decision")
+	c.Flags().BoolVar(&asText, "text", false, "print findings as lines to read instead of JSON")
+	c.Flags().BoolVar(&asJSON, "json", false, "print the summary as JSON (findings are JSON without --text)")
 	return c
+}
+
+// textLine writes findings as lines to read. They go out one by one, so the width of the
+// columns is settled by the list.
+func textLine(list []*configs.Loop) func(io.Writer, *detect.Finding) error {
+	widest, kind := len("LOOP"), 0
+	for _, l := range list {
+		widest = max(widest, utf8.RuneCountInString(l.Name))
+	}
+	for _, k := range configs.Kinds {
+		kind = max(kind, len(k))
+	}
+	return func(w io.Writer, f *detect.Finding) error {
+		subject := f.Subject.Loop + f.Subject.Source + f.Subject.Part
+		_, err := fmt.Fprintf(w, "%s  %-*s  %-7s  %-*s  %s\n", time.UnixMilli(f.At).UTC().Format(time.RFC3339), widest, subject, f.Event,
+			kind, strings.ReplaceAll(string(f.Kind), "-", " "), strings.TrimPrefix(f.TextShort, subject+": "))
+		return err
+	}
 }
 
 // loadLoops gives the loop list of a configuration or of a file of its own, and
@@ -144,8 +190,9 @@ func printSummary(w io.Writer, s daemon.ReplaySummary, asJSON bool) {
 	fmt.Fprintf(w, `%s
 loops      %d: judged %d, cannot judge %d, not in normal mode %d, held %d
 rows       %d: malformed %d, late %d, of unknown loops %d; %.0f rows/s
-findings   %d raised in %.3g loop-years; false ones accepted on healthy loops: %.2g
-`, span, s.Loops, s.Judged, s.CannotJudge, s.NotInNormal, s.Held, s.Rows, s.Malformed, s.Late, s.Foreign, s.RowsPerS, s.Raised, s.LoopYears, s.ExpectFalse)
+findings   %d troubles, raised %d times, in %.3g loop-years
+budget     %.2g false ones expected on healthy loops in that time (%g a loop-year, as set: not measured)
+`, span, s.Loops, s.Judged, s.CannotJudge, s.NotInNormal, s.Held, s.Rows, s.Malformed, s.Late, s.Foreign, s.RowsPerS, s.Troubles, s.Raised, s.LoopYears, s.ExpectFalse, s.Nuisance)
 	const most = 10 // loops of a reason that are listed
 	for _, u := range s.Unseen {
 		names, more := u.Loops, ""

@@ -21,7 +21,7 @@ func TestSummariesSayWhatIsNotSeen(t *testing.T) {
 	rows := api.Loops([]api.LoopState{{Loop: fic, State: detect.CannotJudge, Why: spot, Blind: []string{spot, "no mode"}}, {Loop: lic, State: detect.Judged}})
 	var check, status, replay bytes.Buffer
 	c := &configs.Config{File: "midwatch.yaml", Loops: []*configs.Loop{fic, lic}}
-	r := checked{File: c.File, Loops: loopsChecked(c, rows), States: &api.LoopCounts{Total: 2, Judged: 1, CannotJudge: 1}}
+	r := checked{File: c.File, Loops: loopsChecked(c.Loops, rows), States: &api.LoopCounts{Total: 2, Judged: 1, CannotJudge: 1}}
 	if err := r.print(&check, c); err != nil {
 		t.Fatal(err)
 	}
@@ -70,5 +70,27 @@ func TestSummariesSayWhatIsNotSeen(t *testing.T) {
 	printSummary(&replay, sum, false)
 	if !strings.Contains(replay.String(), "not judged FIC-118: no value yet") {
 		t.Errorf("replay does not say why:\n%s", replay.String())
+	}
+}
+
+// Kinds that are facts have no cause: status leaves it empty, and says of the others that
+// it is undetermined.
+func TestStatusNamesNoCauseOfAFact(t *testing.T) {
+	s := api.Status{Site: "Kestrel Fen"}
+	for _, k := range []detect.Kind{detect.NotInNormalMode, detect.SluggishRecovery} {
+		s.Episodes = append(s.Episodes, api.Episode{ID: string(k), Finding: detect.Finding{Subject: detect.Subject{Loop: "AIC-204"}, Kind: k, Cause: detect.Undetermined}})
+	}
+	var b bytes.Buffer
+	if err := printStatus(&b, &s, nil, false); err != nil {
+		t.Fatal(err)
+	}
+	for line := range strings.Lines(b.String()) {
+		if strings.HasPrefix(line, string(detect.NotInNormalMode)) && strings.Contains(line, "undetermined") ||
+			strings.HasPrefix(line, string(detect.SluggishRecovery)) && !strings.Contains(line, "undetermined") {
+			t.Errorf("%s", line)
+		}
+	}
+	if !strings.Contains(b.String(), "undetermined") {
+		t.Error(b.String())
 	}
 }

@@ -1,6 +1,5 @@
-// Package trend reads and writes recorded trends as CSV: the columns time, loop,
-// pv, sp, op, and if they are there mode, flags, gain, reset_s, feedforward,
-// position; by name, in any order. A row is a frame.
+// Package trend reads and writes recorded trends as CSV, with columns by name, in any
+// order; [Help] describes them. A row is a frame.
 package trend
 
 import (
@@ -149,6 +148,9 @@ func (r *Reader) add(path string) error {
 	if f.infer && !r.sum.Inferred {
 		r.sum.Inferred = true
 		r.o.Say(name + ": no column flags: gaps are inferred from the times of the rows")
+		if unread := configs.ConditionsUnread(r.roster.loops); unread != "" {
+			r.o.Say(name + ": no column flags: " + unread)
+		}
 	}
 	return nil
 }

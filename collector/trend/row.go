@@ -242,7 +242,7 @@ func (p *parser) slow(line []byte, f *collector.Frame) (id uint32, name []byte, 
 		case fieldPV, fieldSP, fieldOP, fieldGain, fieldReset, fieldFeedforward, fieldPosition:
 			v, ok := parseNumber(text)
 			if !ok {
-				return noLoop, nil, fmt.Errorf("%s %q is no number", columnNames[kind], clip(raw, 40))
+				return noLoop, nil, fmt.Errorf("%s %q is no number", columns[kind].Name, clip(raw, 40))
 			}
 			set(f, kind, clean(v))
 		case fieldMode:

@@ -11,6 +11,7 @@ import (
 	"slices"
 	"sync"
 
+	"midwatch/alert"
 	"midwatch/collector"
 	"midwatch/collector/trend"
 	"midwatch/configs"
@@ -21,11 +22,13 @@ import (
 type ReplayOptions struct {
 	Loops    []*configs.Loop
 	Detect   detect.Options
-	Memories *Memories // starting memories; nil: none
-	Workers  int       // 0: one per processor
-	Findings io.Writer // JSON lines, in order of at, subject, kind
-	Explain  string    // name of a loop whose evidence is wanted at each decision
-	Evidence io.Writer // takes it
+	Memories *Memories                              // starting memories; nil: none
+	Workers  int                                    // 0: one per processor
+	Findings io.Writer                              // one a line, in order of at, subject, kind
+	Write    func(io.Writer, *detect.Finding) error // how one is written; nil: as JSON
+	Explain  string                                 // name of a loop whose evidence is wanted at each decision
+	Whole    bool                                   // the whole of it each time, not what changed since the decision before
+	Evidence io.Writer                              // takes it; nil: nobody
 	Progress func(rows int64)
 	Say      func(string) // takes what people should know about memories; nil: nobody
 }
@@ -44,6 +47,8 @@ type ReplaySummary struct {
 	Late         int64    `json:"late"`
 	Foreign      int64    `json:"of_unknown_loops"`
 	Raised       int      `json:"raised"`
+	Troubles     int      `json:"troubles"` // raised ones that are one trouble count once
+	Nuisance     float64  `json:"nuisance_per_loop_year"`
 	LoopYears    float64  `json:"loop_years"`
 	ExpectFalse  float64  `json:"expected_false"`
 	From         string   `json:"from,omitempty"`
@@ -67,8 +72,15 @@ func Replay(ctx context.Context, r *trend.Reader, o ReplayOptions) (ReplaySummar
 	if n <= 0 {
 		n = runtime.GOMAXPROCS(0)
 	}
-	p := &replay{o: o, gather: newGathering(o.Loops), out: json.NewEncoder(o.Findings), at: make([]int, n)}
-	p.out.SetEscapeHTML(false)
+	if o.Write == nil {
+		out := json.NewEncoder(o.Findings)
+		out.SetEscapeHTML(false)
+		o.Write = func(_ io.Writer, f *detect.Finding) error { return out.Encode(*f) }
+	}
+	if o.Evidence == nil {
+		o.Evidence = io.Discard
+	}
+	p := &replay{o: o, gather: newGathering(o.Loops), evidence: evidenceLog{w: o.Evidence, whole: o.Whole}, troubles: map[string]bool{}, at: make([]int, n)}
 	for w := range n {
 		p.lanes = append(p.lanes, newLane(o.Loops, w, n, o.Detect))
 	}
@@ -90,17 +102,18 @@ func Replay(ctx context.Context, r *trend.Reader, o ReplayOptions) (ReplaySummar
 
 // replay joins what the lanes say.
 type replay struct {
-	o      ReplayOptions
-	lanes  []*lane
-	gather *gathering
-	out    *json.Encoder
+	o        ReplayOptions
+	lanes    []*lane
+	gather   *gathering
+	evidence evidenceLog
 
-	mu     sync.Mutex // all below
-	rounds []*round   // not settled yet, in order
-	at     []int      // by lane: rounds it has finished since the first of rounds
-	held   []said     // findings whose place in the order is not settled
-	raised int
-	rows   int64
+	mu       sync.Mutex // all below
+	rounds   []*round   // not settled yet, in order
+	at       []int      // by lane: rounds it has finished since the first of rounds
+	held     []said     // findings whose place in the order is not settled
+	raised   int
+	troubles map[string]bool // that were raised
+	rows     int64
 }
 
 // round is one batch of every lane.
@@ -188,13 +201,13 @@ func (p *replay) release(upTo int64) error {
 		s := &p.held[k]
 		if s.Event == detect.Raised {
 			p.raised++
+			p.troubles[alert.Trouble(&s.Finding)] = true
 		}
-		if err := p.out.Encode(s.Finding); err != nil {
+		if err := p.o.Write(p.o.Findings, &s.Finding); err != nil {
 			return fmt.Errorf("writing findings: %w", err)
 		}
-		if len(s.why) > 0 && p.o.Evidence != nil {
-			fmt.Fprintf(p.o.Evidence, "%s %s %s %s\n", detect.FormatTime(s.At), s.Loop, s.Kind, s.Event)
-			writeLines(p.o.Evidence, s.why)
+		if len(s.why) > 0 {
+			p.evidence.decided(fmt.Sprintf("%s %s %s %s", detect.FormatTime(s.At), s.Loop, s.Kind, s.Event), s.why)
 		}
 	}
 	p.held = slices.Delete(p.held, 0, k)
@@ -206,26 +219,20 @@ func (p *replay) end() error {
 	p.gather.rest(p.hold)
 	err := p.release(math.MaxInt64)
 	for _, l := range p.lanes {
-		if l.explain != nil && p.o.Evidence != nil {
+		if l.explain != nil {
 			if l.explain.Through() == 0 {
 				fmt.Fprintf(p.o.Evidence, "%s: no frame was read; hint: see whether the name is that of the trend files\n", p.o.Explain)
 				continue
 			}
 			fmt.Fprintf(p.o.Evidence, "%s %s at the end\n", detect.FormatTime(l.explain.Through()), p.o.Explain)
-			writeLines(p.o.Evidence, l.explain.Explain())
+			p.evidence.write(l.explain.Explain())
 		}
 	}
 	return err
 }
 
-func writeLines(w io.Writer, lines []string) {
-	for _, line := range lines {
-		fmt.Fprintln(w, "  "+line)
-	}
-}
-
 func (p *replay) summary(t trend.Summary) ReplaySummary {
-	s := ReplaySummary{Loops: len(p.o.Loops), Rows: t.Rows, Frames: t.Frames, Malformed: t.Malformed, Late: t.Late, Foreign: t.Foreign, Raised: p.raised}
+	s := ReplaySummary{Loops: len(p.o.Loops), Rows: t.Rows, Frames: t.Frames, Malformed: t.Malformed, Late: t.Late, Foreign: t.Foreign, Raised: p.raised, Troubles: len(p.troubles)}
 	if t.Frames > 0 {
 		s.From, s.To = detect.FormatTime(t.From), detect.FormatTime(t.To)
 	}
@@ -244,7 +251,7 @@ func (p *replay) summary(t trend.Summary) ReplaySummary {
 	if !(budget > 0) {
 		budget = DefaultNuisance
 	}
-	s.ExpectFalse = s.LoopYears * budget // accepted, not foretold: the quality bench measures what comes
+	s.Nuisance, s.ExpectFalse = budget, s.LoopYears*budget // accepted, not foretold: the quality bench measures what comes
 	return s
 }
 

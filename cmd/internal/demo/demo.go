@@ -68,7 +68,7 @@ func Run(ctx context.Context, o Options) (err error) {
 		return stopped(ctx, err)
 	}
 	s.begin = time.UnixMilli(works.Now()).UTC()
-	s.clock = daemon.Faster(s.begin, factor)
+	s.clock, s.start = daemon.Held(s.begin, factor)
 	srv, err := plant.Serve(context.WithoutCancel(ctx), works, plant.ServeOptions{Factor: 1, Clock: s.clock.Now})
 	if err != nil {
 		return err
@@ -148,6 +148,8 @@ func (s *show) live(ctx context.Context, o Options) (err error) {
 	if err := s.watch.Start(); err != nil {
 		return err
 	}
+	s.await(ctx)
+	s.start()
 	if a := s.watch.Addr(); a != "" && o.Serve.Page != nil {
 		s.screen.print("the page: http://" + a + "/\n\n")
 	}
@@ -169,6 +171,24 @@ func (s *show) live(ctx context.Context, o Options) (err error) {
 			if err := s.refresh(ctx); err != nil {
 				return stopped(ctx, err)
 			}
+		}
+	}
+}
+
+// connectIn is how long the works waits for its watch.
+const connectIn = 20 * time.Second
+
+// await waits until every source is connected: on a busy machine that takes seconds, in
+// which the works would go on unseen for minutes. One that does not come is shown as any
+// other that is down.
+func (s *show) await(ctx context.Context) {
+	for deadline := time.Now().Add(connectIn); ctx.Err() == nil && time.Now().Before(deadline); time.Sleep(10 * time.Millisecond) {
+		connected := true
+		for _, x := range s.watch.Status().Sources {
+			connected = connected && x.Link == "watching"
+		}
+		if connected {
+			return
 		}
 	}
 }

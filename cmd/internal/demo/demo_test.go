@@ -79,7 +79,7 @@ func TestDemo(t *testing.T) {
 	if len(troubles) > 0 {
 		t.Errorf("sources in trouble: %q", troubles)
 	}
-	for _, bad := range []string{"note:", "\x1b", "stale data"} {
+	for _, bad := range []string{"note:", "\x1b", "stale data", "no data for"} {
 		if strings.Contains(out.String(), bad) {
 			t.Errorf("the demo says %q", bad)
 		}

@@ -23,8 +23,9 @@ type show struct {
 	dir    string
 	loops  []*configs.Loop
 	truth  []plant.Truth
-	clock  daemon.Clock
-	begin  time.Time // plant time of the start of the live part
+	clock  daemon.Clock // of the works and its watch
+	start  func()       // lets the clock run
+	begin  time.Time    // plant time of the start of the live part
 	wall   time.Time
 	plant  *plant.Server
 	watch  *daemon.Daemon

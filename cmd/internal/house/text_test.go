@@ -9,6 +9,7 @@ import (
 	"testing"
 
 	"midwatch/alert"
+	"midwatch/collector/trend"
 	"midwatch/configs"
 )
 
@@ -149,6 +150,9 @@ func TestReadmeExamples(t *testing.T) {
 	}
 	if len(c.Loops) != 2 || len(c.Warnings) > 0 {
 		t.Errorf("%d loops, warnings %q", len(c.Loops), c.Warnings)
+	}
+	if want := trend.Markdown(); !strings.Contains(readme, want) {
+		t.Errorf("README.md describes the trend CSV otherwise than the program, which says:\n%s", want)
 	}
 	for _, k := range configs.Kinds {
 		if !strings.Contains(readme, "`"+k+"`") {
