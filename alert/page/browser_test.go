@@ -347,7 +347,7 @@ func TestScreens(t *testing.T) {
 	shot("lanes-svg", picture(t, url+"episodes/20260106-0004-kfen/loops.svg"), 1280, 360, false, "")
 	shot("cascade-svg", picture(t, url+"episodes/cascade:AIC-201/loops.svg?hours=4"), 1280, 300, false, "")
 	shot("none", url+"loops/XX-1", 1000, 500, false, "")
-	shot("readme-list", url, 1200, 1020, false, "")
+	shot("readme-list", url, 1200, 1140, false, "")
 	shot("readme-loop", url+"loops/AIC-204", 1000, 640, false, chart)
 	shot("readme-phone", url, 390, 760, true, "")
 	t.Log("pictures are in", dir)

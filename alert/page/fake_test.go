@@ -141,8 +141,8 @@ func (h *fakeHouse) kestrelFen() {
 	f := detect.Finding{Kind: detect.GrowingOscillation, Cause: detect.ResetTooShort, Confidence: 0.93, AlsoPossible: []detect.Cause{detect.GainTooHigh},
 		Changed:   []detect.Change{{What: detect.ChangedTuning, At: h.ms(1.7), Text: "reset time from about 4 min to 24.6 s"}},
 		Measures:  m("period_s", 372.0, "growth_per_cycle", 1.16, "amplitude_pct", 4.0, "amplitude_pv", 0.08, "gain", 1.02, "reset_s", 24.6, "pi_lag_deg", 66.0, "time_to_op_limit_s", 5340.0),
-		Text:      "Swings ±0.08 mg/l, cycle 6.2 min, 1.16 times larger each cycle since 01:12. The reset time (25 s) is short for this cycle, likely. OP meets its high limit about 04:10. First check the measurement and the final element, then the reset time.",
-		TextShort: "AIC-204 swings and grows"}
+		Text:      "For 89 min PV has been swinging ±0.08 mg/l with a cycle of 6.2 min, about 1.2 times larger each cycle (reset in service about 25 s); OP meets a limit in about 89 min. The reset time is too short for this process, likely. What changed before: reset time from about 4 min to 24.6 s, 10 min before. First check the measurement and the final element, then the reset time. Direction: a longer reset time.",
+		TextShort: "AIC-204: growing swing ±0.08 mg/l, cycle 6.2 min, for 89 min, OP limit in 89 min; likely the reset time is too short for this process. Advisory only."}
 	e0 := h.episode("AIC-204", alert.Now, f, 1.53, -1)
 	e0.Members[0].Finding.At = h.ms(0.05)
 	h.add("LIC-310", "clear-well level", "clear well", "m", 0, 6, 5000, detect.Judged, "", func(t float64, n func() float64) (float64, float64, float64, collector.Mode, collector.Flags) {
@@ -150,8 +150,8 @@ func (h *fakeHouse) kestrelFen() {
 		e := 1.4 * math.Exp(-u*2.6)
 		return 3.5 + e + 0.01*n(), 3.5, 50 - 14*e + 0.2*n(), collector.Auto, 0
 	})
-	h.episode("LIC-310", alert.Morning, detect.Finding{Kind: detect.SluggishRecovery, Cause: detect.ResetTooLong, Confidence: 0.82, Measures: m("recovery_s", 3120.0, "usual_s", 720.0, "reset_s", 1080.0),
-		Text: "Creeps back after each pump change: 52 min where 12 min was usual, since Monday. Reset (18 min) is long, likely. First check that the final element moves freely."}, 31, -1)
+	h.episode("LIC-310", alert.Morning, detect.Finding{Kind: detect.SluggishRecovery, Cause: detect.ResetTooLong, Confidence: 0.85, Measures: m("recovery_s", 3120.0, "usual_s", 720.0, "reset_s", 1080.0),
+		Text: "For 24 min PV has been creeping back after disturbances: it takes about 52 min where 12 min was usual. The reset time is too long for this process, likely. First check the measurement and that the final element moves freely, then the reset time. Direction: a shorter reset time."}, 31, -1)
 	saw := func(amp, lag float64) func(float64, func() float64) (float64, float64, float64, collector.Mode, collector.Flags) {
 		return func(t float64, n func() float64) (float64, float64, float64, collector.Mode, collector.Flags) {
 			if t < -5.7*fakeHour {
@@ -169,12 +169,12 @@ func (h *fakeHouse) kestrelFen() {
 	h.add("PIC-107", "booster header pressure", "boosters", "bar", 0, 250, 1000, detect.Judged, "", saw(2.5, 6))
 	h.add("FIC-119", "filter 4 outlet flow", "filters", "m³/h", 0, 250, 1000, detect.Judged, "", saw(1.8, 14))
 	h.episode("FIC-118", alert.Morning, detect.Finding{Kind: detect.ValveStickingKind, Cause: detect.ValveSticking, Confidence: 0.9, Measures: m("period_s", 42.0, "amplitude_pct", 2.4, "amplitude_pv", 6.0, "op_swing_pct", 1.6),
-		Text: "Saw-tooth of 42 s, OP moves 1.6 % before the flow answers. The valve sticks, likely; apparent band 1.6 % of OP. First stroke the final element when operations agree."}, 5.7, -1)
+		Text: "For 24 min PV has been cycling ±6 m³/h every 42 s while OP ramps to and fro by about 1.6 % before PV answers: apparent sticking, from OP and PV. The final element sticks, likely. No change of mode or SP was seen in the 24 h before. First stroke the final element when operations agree; compare stem with OP."}, 5.7, -1)
 	g := h.episode("PIC-107", alert.Morning, detect.Finding{Kind: detect.SharedOscillation, Cause: detect.ValveSticking, Confidence: 0.7, Loops: []string{"FIC-118", "PIC-107", "FIC-119"}, Measures: m("period_s", 42.0, "loops", 3.0),
-		Text: "Three loops swing together at 42 s. It likely starts at FIC-118, whose valve sticks."}, 5.2, -1)
+		Text: "For 24 min 3 loops have been cycling together every 42 s: FIC-118, PIC-107, FIC-119; widest in FIC-118, ±6 m³/h. Candidate root: FIC-118, whose output looks like that of a sticking final element. First stroke it when operations agree, before anything at the other loops."}, 5.2, -1)
 	g.Group = []string{"FIC-118", "PIC-107", "FIC-119"}
 	h.add("TIC-221", "digester 1 temperature", "digesters", "°C", 20, 60, 5000, detect.Judged, "", quiet(36, 0.1, 41))
-	h.episode("TIC-221", alert.Note, detect.Finding{Kind: detect.TuningChanged, Confidence: 0.95, Measures: m("reset_s", 1200.0, "reset_before_s", 720.0), Text: "The reset time was changed from 12 to 20 min at 23:10 (read from the tag)."}, 3.57, -1)
+	h.episode("TIC-221", alert.Note, detect.Finding{Kind: detect.TuningChanged, Confidence: 0.95, Measures: m("reset_s", 1200.0, "reset_before_s", 720.0), Text: "The tuning in service changed 24 min ago: reset time from about 12 min to 20 min. Nothing to do if it was meant."}, 3.57, -1)
 	h.add("AIC-212", "coagulation pH", "coagulation", "pH", 4, 10, 5000, detect.Judged, "", func(t float64, n func() float64) (float64, float64, float64, collector.Mode, collector.Flags) {
 		off := 0.0
 		if t > -9.6*fakeHour && t < -6.5*fakeHour {
@@ -182,7 +182,7 @@ func (h *fakeHouse) kestrelFen() {
 		}
 		return 6.8 - off + 0.02*n(), 6.8, 38 + 0.4*n() - 20*off, collector.Auto, 0
 	})
-	h.episode("AIC-212", alert.Note, detect.Finding{Kind: detect.SustainedOffset, Cause: detect.OutsideDisturbance, Confidence: 0.6, Measures: m("offset_pct", 2.5, "offset_pv", 0.15, "duration_s", 11160.0), Text: "PV stayed 0.15 pH below SP for 3 h."}, 9.6, 6.5)
+	h.episode("AIC-212", alert.Note, detect.Finding{Kind: detect.SustainedOffset, Cause: detect.OutsideDisturbance, Confidence: 0.6, Measures: m("offset_pct", 2.5, "offset_pv", 0.15, "duration_s", 11160.0), Text: "PV is back at its set point."}, 9.6, 6.5)
 	h.add("FIC-131", "backwash flow", "filters", "m³/h", 0, 400, 5000, detect.Judged, "", func(t float64, n func() float64) (float64, float64, float64, collector.Mode, collector.Flags) {
 		if t > -7.8*fakeHour && t < -4.57*fakeHour {
 			return 160 + n(), 180, 33, collector.Manual, 0
@@ -207,7 +207,7 @@ func (h *fakeHouse) kestrelFen() {
 		}
 		return 92 + n(), 100, 100, collector.Auto, 0
 	})
-	e := h.episode("FIC-140", alert.Morning, detect.Finding{Kind: detect.OutputSaturation, Cause: detect.OutputLimit, Confidence: 0.8, Measures: m("offset_pct", 4.0, "offset_pv", 8.0, "op_pct", 100.0, "duration_s", 9000.0), Text: "OP lies at its high limit and PV stays 8 l/h below SP."}, 3.1, -1)
+	e := h.episode("FIC-140", alert.Morning, detect.Finding{Kind: detect.OutputSaturation, Cause: detect.OutputLimit, Confidence: 0.9, Measures: m("offset_pct", 4.0, "offset_pv", 8.0, "op_pct", 100.0, "duration_s", 1440.0), Text: "OP lies at its limit (100 %) for 24 min while PV is 8 l/h below its set point. OP has no room left, likely. First check the measurement, then the final element, then whether the demand is beyond it."}, 3.1, -1)
 	e.Hold = &alert.Hold{Since: h.ms(0.6), Why: "manual"}
 	o := h.add("AIC-201", "chlorine after contact", "contact tank", "mg/l", 0, 2, 5000, detect.Judged, "", quiet(1.1, 0.01, 50))
 	o.Inner = "FIC-202"
@@ -323,7 +323,7 @@ func (h *fakeHouse) Explain(loop string) ([]string, error) {
 	if h.find(loop) == nil {
 		return nil, ErrUnknownLoop
 	}
-	return []string{"sample interval 2 s; noise level 0.004 mg/l (0.200 % of range)", "tuning in service: gain 1.02 (0.97 to 1.07), reset 24.6 s (23.4 to 25.9)", "live oscillation since 2026-01-06T01:12:00.000Z: period 6.2 min, lag of the controller 66 degrees"}, nil
+	return []string{"sample interval 2 s; noise level 0.004 mg/l (0.200 % of range)", "tuning in service: gain 1.02 (0.97 to 1.07), reset 24.6 s (23.4 to 25.9)", "live oscillation since 2026-01-06T01:12:00.000Z: period 6.2 min, lag of the controller 66 degrees (asked of a reset too short over 45, of a gain too high under 35)"}, nil
 }
 
 func (h *fakeHouse) Frames(ctx context.Context, loop string, from, to int64) iter.Seq2[collector.Frame, error] {

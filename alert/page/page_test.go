@@ -47,10 +47,10 @@ func TestReadableWithoutScripts(t *testing.T) {
 	h.frozen = true
 	p := newPage(t, h)
 	for path, wants := range map[string][]string{
-		"/": {"judged <strong data-k=\"judged\">14</strong>", "What needs a look", "Swings ±0.08\u00a0mg/l", "growing since 01:12", "OP limit about 04:10", "swinging together since 21:32",
+		"/": {"judged <strong data-k=\"judged\">14</strong>", "What needs a look", "swinging ±0.08\u00a0mg/l", "growing since 01:12", "OP limit about 04:10", "swinging together since 21:32",
 			"tuning changed at 23:09", "was off its set point 17:08 – 20:14", "in manual 18:5", "no data 00:", "cannot judge: sampled every 5 min", "held since 02:08: manual", "data 2 s old", "3 of 3 sources alive",
 			`href="loops/AIC-204?from=`, "2026-01-06 01:12:12 UTC"},
-		"/loops/AIC-204": {"chlorine residual", "Swings ±0.08\u00a0mg/l", "reset too short, likely", "gain too high", "1.16 times a cycle", "66°", "24.6\u00a0s (23.4 to 25.9)", "told to on-call by mail", "lag of the controller 66 degrees",
+		"/loops/AIC-204": {"chlorine residual", "swinging ±0.08\u00a0mg/l", "reset too short, likely", "gain too high", "1.16 times a cycle", "66°", "24.6\u00a0s (23.4 to 25.9)", "told to on-call by mail", "lag of the controller 66 degrees",
 			"AIC-204/trend.svg?hours=4", "Acknowledge", "Shelve", "0.004\u00a0mg/l", "api/loops/AIC-204/dossier"},
 		"/loops/TIC-224":                  {"not in normal mode: in manual", "it is not judged now"},
 		"/loops/AIC-201":                  {"episodes/cascade:AIC-201"},
