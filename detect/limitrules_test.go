@@ -71,3 +71,47 @@ func TestShortStaysDoNotAddUp(t *testing.T) {
 		t.Errorf("said %q", c)
 	}
 }
+
+// Nor are stays that PV's way over to the other side of SP parts, as a swing has them.
+func TestStaysOfASwingDoNotAddUp(t *testing.T) {
+	w := offsetWatch(nil)
+	var fs []Finding
+	for range 6 {
+		fs = append(fs, feed(w, 1000, func(float64) (float64, float64) { return 4, 100 })...)
+		fs = append(fs, feed(w, 200, func(float64) (float64, float64) { return -12, 98.5 })...)
+	}
+	if c := said(fs, OutputSaturation); c != NoCause {
+		t.Errorf("said %q", c)
+	}
+}
+
+// OP that comes to its limit again and again is one trouble, until there was none for a day;
+// and while it rests it explains no offset.
+func TestVisitsAreOneTrouble(t *testing.T) {
+	w := offsetWatch(nil)
+	var fs []Finding
+	for range 6 {
+		fs = append(fs, feed(w, 2000, func(float64) (float64, float64) { return 4, 100 })...)
+		fs = append(fs, feed(w, 3*3600, func(t float64) (float64, float64) { return 0, 60 + 0.05*math.Sin(t/40) })...)
+	}
+	count := func(e Event) (n int) {
+		for _, f := range fs {
+			if f.Kind == OutputSaturation && f.Event == e {
+				n++
+			}
+		}
+		return
+	}
+	// What is said after one long stay and after two is over in between.
+	if r, c := count(Raised), count(Cleared); r > visitsAsked || c != r-1 {
+		t.Errorf("raised %d times, cleared %d", r, c)
+	}
+	open := count(Raised)
+	if !w.rests(&w.s.OffPast.Sat) || !w.s.OffPast.Sat.On {
+		t.Error("it does not rest three hours after the last visit")
+	}
+	fs = append(fs, feed(w, 1.1*86400, func(t float64) (float64, float64) { return 0, 60 + 0.05*math.Sin(t/40) })...)
+	if r, c := count(Raised), count(Cleared); r != open || c != r {
+		t.Errorf("a day later: raised %d times, cleared %d", r, c)
+	}
+}

@@ -243,7 +243,7 @@ func TestAskOfAnErrorAtRest(t *testing.T) {
 		w.s.OffPast.Ask = ask{T: momentOf(1000), By: 2, E: 0, OP: 40}
 		w.in = input{t: 1500, dt: 1, e: ef, trim: 60, op: 60, hasOP: true, active: true}
 		w.stepAsk()
-		if got := w.s.OffPast.Deaf > 0; got != want {
+		if got := w.s.OffPast.Deaf; got != want {
 			t.Errorf("e at %.1f %%, its mean at 2 %%: deaf %v", ef, got)
 		}
 	}

@@ -28,6 +28,7 @@ type offsetState struct {
 	Stuck     bool
 	AnchorN   uint8
 	Anchors   [anchors]anchor
+	Most      float32 // %, largest e so far, without its sign and but for most of the noise
 	LimT      float64 // s, when OP came to rest at its limit; 0 not yet
 	LimInt    float32 // % s, Int by then
 	LimE      float32 // %, e by then, without its sign; 0 no test, or it was read
@@ -99,9 +100,10 @@ type offsetPast struct {
 	Since   float64   // s, begin of the first run on end in which the integral was missing
 	Missed  float32   // s, length of those runs together
 	Came    uint8     // findings from which PV came back by itself
-	Deaf    float64   // s, when the final element was last shown not to follow; 0 never
+	Answers uint8     // recoveries on end in the usual time since the final element was shown not to follow
+	Deaf    bool      // it was shown not to follow
+	Doubt   bool      // OP came to its limit by a travel that PV made nothing of
 	Vain    [2]moment // when OP last travelled far, down and up, and PV made nothing of it; 0 never
-	Doubt   moment    // when OP last lay at its limit after such a travel; 0 never
 	Ask     ask
 }
 
@@ -128,25 +130,34 @@ func (d *stand) support(since, mean float64, c Cause, conf float64) {
 	d.On, d.Calm, d.Mean, d.Cause, d.Conf = true, 0, mean, causeIndex(c), float32(conf)
 }
 
-// rest counts time without support; after twice the time to come back, and half an
-// hour, it is over.
+// calmS is how long, s, PV must be back for a trouble to rest: twice the time to come back,
+// and half an hour.
+func (w *Watch) calmS() float64 { return max(max(1800, 120*w.in.dt), 2*w.timeScale()) }
+
+// rests: the trouble has no support any more.
+func (w *Watch) rests(d *stand) bool { return !d.On || d.Calm > w.calmS() }
+
+// rest counts time without support; a trouble that rests is over, but visits to a limit go on
+// while the next may come.
 func (w *Watch) rest(d *stand) {
 	if !d.On {
 		return
 	}
-	if d.Calm += w.in.dt; d.Calm > max(max(1800, 120*w.in.dt), 2*w.timeScale()) {
-		if d == &w.s.OffPast.Offset {
-			w.s.OffPast.Came = min(w.s.OffPast.Came+1, 3)
-		}
-		*d = stand{}
+	p := &w.s.OffPast
+	if d.Calm += w.in.dt; !w.rests(d) || d == &p.Sat && w.visits() {
+		return
 	}
+	if d == &p.Offset {
+		p.Came = min(p.Came+1, 3)
+	}
+	*d = stand{}
 }
 
 // endOfRun remembers a run: how long runs last is the loop's own yardstick, and
 // where set points change often several short runs tell what a long one would.
 func (w *Watch) endOfRun(back bool) { // back: PV came back by itself
 	o, p := &w.s.Off, &w.s.OffPast
-	if o.Sign == 0 || p.Offset.On || p.Sat.On {
+	if o.Sign == 0 || p.Offset.On || !w.rests(&p.Sat) {
 		return
 	}
 	d := w.in.t - o.T0
@@ -192,7 +203,7 @@ func stepOffset(w *Watch) {
 		past.EF += in.spStep // the step itself is no matter of the lag
 		if o.Sign != 0 && !w.pushesAtLimit() {
 			if o.LimT == 0 && w.vainWay() {
-				past.Doubt = momentOf(in.t)
+				past.Doubt = true
 			}
 			w.endOfRun(false)
 			o.restart() // a new set point is a new question
@@ -231,6 +242,7 @@ func stepOffset(w *Watch) {
 	if in.hasOP {
 		o.Top.step(w.sign()*o.Sign*in.op, d)
 	}
+	o.Most = max(o.Most, float32(s.Motion.EF*o.Sign))
 	if k := int(o.AnchorN); k < anchors && d >= in.dt*20*float64(int(1)<<k) {
 		o.Anchors[k] = anchor{float32(d), float32(o.OPs), float32(o.Es), float32(o.Int)}
 		o.AnchorN++
@@ -413,7 +425,7 @@ func (w *Watch) judgeOffset(thr float64) {
 	}
 	listed := !in.frozen && (push > 0 && at >= l1-1 || push < 0 && at <= l0+1)
 	if own || listed || back {
-		if s.Sat.AtSince == 0 {
+		if s.Sat.AtSince < o.T0 || s.Sat.AtSince == 0 { // a stay of another run is another stay
 			s.Sat.AtSince = in.t
 		}
 		if back && !listed {

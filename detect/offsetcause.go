@@ -248,12 +248,12 @@ func (w *Watch) vainTravel(mean, recent float64) {
 	d := in.t - o.T0
 	a := o.anchorAt(0.3 * d)
 	kc, ok := w.gainPct()
-	if a == nil || !ok || d-float64(a.T) < 2*w.timeScale() || math.Abs(recent) < 0.8*math.Abs(mean) {
+	if a == nil || !ok || o.AtEnd || d-float64(a.T) < 2*w.timeScale() || math.Abs(recent) < 0.8*math.Abs(mean) {
 		return
 	}
 	way := o.OPs - float64(a.OP)
 	fell := (float64(a.E) - o.Es) * o.Sign // by which e fell
-	if way*kc*o.Sign < 2*leastTravel*math.Abs(kc) || fell > 0.1*math.Abs(way/kc) || fell > 0.3*math.Abs(mean) {
+	if way*kc*o.Sign < 2*leastTravel*math.Abs(kc) || fell > 0.1*math.Abs(way/kc) || w.tookBack() {
 		return
 	}
 	side, other := 0, 1
@@ -261,15 +261,41 @@ func (w *Watch) vainTravel(mean, recent float64) {
 		side, other = 1, 0
 	}
 	p.Vain[side] = momentOf(in.t)
-	if p.Vain[other] > 0 && in.t-p.Vain[other].s() < 3*deafFor {
-		p.Deaf = in.t
+	if p.Vain[other] > 0 && in.t-p.Vain[other].s() < vainApart {
+		w.unmoved()
 	}
 }
 
-// deaf: the final element was shown not to follow, and not long ago.
-func (w *Watch) deaf() bool {
+// vainApart is how long apart, s, travels up and down may be that together show an element
+// which does not follow (common practice, no source).
+const vainApart = 3 * 86400.0
+
+// deaf: the final element was shown not to follow, and PV has not answered since. An element
+// does not come loose by waiting.
+func (w *Watch) deaf() bool { return w.s.OffPast.Deaf }
+
+// unmoved notes that the final element was shown not to follow.
+func (w *Watch) unmoved() {
 	p := &w.s.OffPast
-	return p.Deaf > 0 && w.in.t-p.Deaf < deafFor
+	p.Deaf, p.Answers = true, 0
+}
+
+// answersAsked is how many recoveries in the usual time, one after the other, show that an
+// element follows of which the contrary was shown: of one alone the load may be the reason,
+// as many as the trouble takes to be sure of a change (common practice, no source).
+const answersAsked = 3
+
+// cameBack takes a recovery that OP was free for, in the usual time or not.
+func (w *Watch) cameBack(usual bool) {
+	p := &w.s.OffPast
+	if !usual {
+		p.Answers = 0
+		return
+	}
+	p.Vain, p.Doubt = [2]moment{}, false
+	if p.Answers++; p.Answers >= answersAsked {
+		p.Deaf, p.Answers = false, 0
+	}
 }
 
 // limitTest reads the one experiment that tells an element which does not move from a
@@ -298,7 +324,7 @@ func (w *Watch) limitTest(listed bool, since float64) {
 	switch {
 	case at < soon:
 	case e > limitGrows*was && (at < late || e > 1.1*mean):
-		p.Doubt, o.LimE = 0, 0
+		p.Doubt, o.LimE = false, 0
 	case at > max(late, w.timeScale()):
 		sigma := max(w.s.Noise.sigma(), 0.02)
 		o.NotFollow = listed && !o.AtEnd && math.Abs(mean-was) < max(0.12*was, sigma/2) && math.Abs(e-was) < max(0.2*was, sigma)
@@ -317,7 +343,7 @@ func (w *Watch) arrive() {
 	o.LimT, o.LimInt = in.t, float32(o.Int)
 	if w.vainWay() {
 		o.LimE = float32(o.Es * o.Sign)
-		w.s.OffPast.Doubt = momentOf(in.t)
+		w.s.OffPast.Doubt = true
 	}
 }
 
@@ -325,7 +351,16 @@ func (w *Watch) arrive() {
 // answer, and e is there yet.
 func (w *Watch) vainWay() bool {
 	o := &w.s.Off
-	return (w.in.trim-o.OP0)*w.sign()*o.Sign > leastTravel && w.in.t-o.T0 > 2*w.timeScale() && o.Es*o.Sign > w.offsetLeast()
+	return (w.in.trim-o.OP0)*w.sign()*o.Sign > leastTravel && w.in.t-o.T0 > 2*w.timeScale() && o.Es*o.Sign > w.offsetLeast() && !w.tookBack()
+}
+
+// tookBack: e is clearly less than the largest of the run. A step of load beyond what OP can
+// make good leaves an e for good, too, but OP took some of it back on its way, as nothing does
+// where no element moves.
+func (w *Watch) tookBack() bool {
+	o := &w.s.Off
+	e := o.Es * o.Sign
+	return float64(o.Most)-e > 0.3*e+2*w.s.Noise.sigma()
 }
 
 // askSP begins the test that a set-point step is: an element that acts brings e back to
@@ -356,18 +391,12 @@ func (w *Watch) stepAsk() {
 	switch {
 	case !ok || kc == 0:
 	case math.Abs(left) < 0.4:
-		p.Deaf, p.Vain, p.Doubt = 0, [2]moment{}, 0
+		p.Deaf, p.Vain, p.Doubt = false, [2]moment{}, false
 	case math.Abs(w.s.Motion.EF-p.EF) > 0.25*math.Abs(float64(a.By)): // on its way: another load
 	case left > 0.75 && left < 1.25 && went > 4: // of which an element that acts makes 4*0.2 of the step
-		p.Deaf = in.t
+		w.unmoved()
 	}
 	a.T = 0
-}
-
-// doubts: OP came to its limit by a travel that PV made nothing of.
-func (w *Watch) doubts() bool {
-	p := &w.s.OffPast
-	return p.Doubt > 0 && w.in.t-p.Doubt.s() < deafFor
 }
 
 // crossesSplit: OP has been on both sides of the change-over of a split range,

@@ -180,9 +180,61 @@ func TestTravelUpAndDownInVain(t *testing.T) {
 		if w.deaf() != x.want {
 			t.Errorf("%s: the element is held to be deaf: %v", x.name, w.deaf())
 		}
-		feed(w, 1.1*86400, func(t float64) (float64, float64) { return 0, 50 + 0.05*math.Sin(t/40) })
-		if w.deaf() {
-			t.Errorf("%s: a day later, when somebody can have seen to it, it still is", x.name)
+	}
+}
+
+// An element that was shown not to follow does not come loose by waiting: until PV has come
+// back three times on end in the usual time, it is held to be the reason.
+func TestDeafUntilPVAnswers(t *testing.T) {
+	w := offsetWatch(func(l *configs.Loop) { l.RecoveryS = 300 })
+	w.unmoved()
+	feed(w, 3*86400, func(t float64) (float64, float64) { return 0, 50 + 0.05*math.Sin(t/40) })
+	back := func(dur float32) {
+		w.keepRecovery(recovery{At: momentOf(w.in.t), T0: momentOf(w.in.t - float64(dur)), Dur: dur, Peak: 2})
+	}
+	for i, x := range []struct {
+		dur  float32
+		want bool
+	}{{300, true}, {300, true}, {1200, true}, {300, true}, {300, true}, {300, false}} {
+		if back(x.dur); w.deaf() != x.want {
+			t.Errorf("after recovery %d: the element is held to be deaf: %v", i+1, w.deaf())
+		}
+	}
+}
+
+// A step of load beyond what OP can make good leaves an e for good, as an element does that
+// does not move; but OP took some of the largest e back on its way, up and down again. Nor
+// says it anything of the element where PV lay at an end of its range meanwhile.
+func TestLoadStepsAreNoDeafElement(t *testing.T) {
+	for _, x := range []struct {
+		name string
+		back float64 // % of e that OP takes back
+		end  bool    // PV lies at an end of its range when OP goes down
+		deaf bool
+		want Cause
+	}{
+		{"nothing moves", 0, false, true, FinalElementNotFollowing},
+		{"taken back", 2, false, false, OutputLimit},
+		{"PV at the end of its range on the way down", 0, true, false, FinalElementNotFollowing},
+	} {
+		w := offsetWatch(nil)
+		run := func(sign, from float64) []Finding {
+			return feed(w, 4000, func(t float64) (float64, float64) {
+				e := sign * (3 + x.back*math.Exp(-math.Pow(t/600, 2)))
+				if x.end && sign < 0 {
+					e = -49.9
+				}
+				return e, max(0, min(100, from+sign*t/25))
+			})
+		}
+		run(-1, 95)
+		fs := run(1, 0)
+		if w.deaf() != x.deaf {
+			t.Errorf("%s: the element is held to be deaf: %v", x.name, w.deaf())
+		}
+		fs = append(fs, feed(w, 3000, func(float64) (float64, float64) { return 3, 100 })...)
+		if c := said(fs, OutputSaturation); c != x.want {
+			t.Errorf("%s: said %q, want %q", x.name, c, x.want)
 		}
 	}
 }

@@ -114,20 +114,21 @@ func slowWatch(prop float32, ratios ...float32) *Watch {
 	return w
 }
 
-// A sluggish loop is over with two recoveries on end of the usual length, seen to their end.
+// A sluggish loop is over with as many recoveries on end of the usual length, seen to their
+// end, as would raise it.
 func TestSluggishIsOver(t *testing.T) {
 	for _, x := range []struct {
 		name   string
-		ratios [2]float32
+		ratios []float32
 		cut    bool
 		over   bool
 	}{
-		{"both as usual", [2]float32{1.1, 1.2}, false, true},
-		{"the newest slow", [2]float32{1.1, 2.5}, false, false},
-		{"the one before slow", [2]float32{2.5, 1.1}, false, false},
-		{"the newest not seen to its end", [2]float32{1.1, 1.2}, true, false},
+		{"all as usual", []float32{3, 3, 1.1, 1.2, 1.1, 1.2}, false, true},
+		{"the newest slow", []float32{1.1, 1.2, 1.1, 2.5}, false, false},
+		{"the oldest slow", []float32{2.5, 1.1, 1.2, 1.1}, false, false},
+		{"the newest not seen to its end", []float32{1.1, 1.2, 1.1, 1.2}, true, false},
 	} {
-		w := slowWatch(0.7, x.ratios[:]...)
+		w := slowWatch(0.7, x.ratios...)
 		r := &w.s.Recov
 		r.Slow, r.By = true, byHistory
 		r.Ring[recRing-1].Cut = x.cut

@@ -241,8 +241,8 @@ func (w *Watch) keepRecovery(e recovery) {
 	}
 	// OP brought PV back in the usual time: the element follows. Out of an episode the load
 	// may have done so, as it brought PV there.
-	if p := &w.s.OffPast; !e.Cut && e.Ratio > 0 && e.Ratio < 1.75 && !p.Sat.On && !p.Offset.On {
-		p.Deaf, p.Vain, p.Doubt = 0, [2]moment{}, 0
+	if p := &w.s.OffPast; e.Ratio > 0 && w.rests(&p.Sat) && !p.Offset.On {
+		w.cameBack(!e.Cut && e.Ratio < 1.75)
 	}
 	i := r.Count % recRing
 	if r.Count >= recRing {

@@ -54,6 +54,10 @@ const (
 	windUpOnce   = 1.2
 )
 
+// visitsApart is how far apart, s, visits to a limit may be that are one trouble (common
+// practice, no source).
+const visitsApart = 86400.0
+
 // overhangS is how long, s, OP must stay at its limit past the change of sign, with a reset
 // time, s, to count.
 func (w *Watch) overhangS(rt float64) float64 { return max(8*w.in.dt, 0.25*rt) }
@@ -160,7 +164,7 @@ func (w *Watch) stepStretch(side, sigma float64) {
 	}
 	d := in.t - z.From
 	if d > max(2*w.timeScale(), max(30*in.dt, 60)) && math.Abs(z.IntE)/d > max(3*sigma, 0.8) {
-		if z.Stretches == 0 || in.t-z.LastEnd > 86400 {
+		if z.Stretches == 0 || in.t-z.LastEnd > visitsApart {
 			z.Stretches, z.FirstFrom = 0, z.From
 		}
 		z.Stretches, z.LastEnd = min(z.Stretches+1, 200), in.t
@@ -177,24 +181,26 @@ func (w *Watch) comesAndGoes() bool {
 	return o.On && z.Stretches >= visitsAsked && o.Since == z.FirstFrom
 }
 
+// visits: OP comes to its limit again and again; between visits that is not over.
+func (w *Watch) visits() bool {
+	z := &w.s.Sat
+	return z.Stretches >= visitsAsked && w.in.t-z.LastEnd < visitsApart
+}
+
 // sayLimit supports the claim that OP lies at its limit. What an episode was shown with
 // the better evidence stands: an element that did not follow, and the higher confidence.
 func (w *Watch) sayLimit(since, mean, conf float64) {
 	o, p := &w.s.Off, &w.s.OffPast
 	if o.NotFollow {
-		p.Deaf = w.in.t
+		w.unmoved()
 	}
 	cause := OutputLimit
 	if w.deaf() {
-		cause, conf, p.Deaf = FinalElementNotFollowing, 0.85, w.in.t // until it has been calm for long
-	} else if w.doubts() {
-		cause, conf, p.Doubt = Undetermined, 0.6, momentOf(w.in.t)
+		cause, conf = FinalElementNotFollowing, 0.85
+	} else if p.Doubt {
+		cause, conf = Undetermined, 0.6
 	} else if p.Sat.On && p.Sat.Cause == causeIndex(OutputLimit) {
 		conf = max(conf, float64(p.Sat.Conf))
 	}
 	p.Sat.support(since, mean, cause, conf)
 }
-
-// deafFor is how long, s, an element that was shown not to follow is held to be the
-// reason where OP comes to its limit again: until somebody can have seen to it.
-const deafFor = 86400.0

@@ -124,16 +124,13 @@ func (w *Watch) slowCause(by uint8, proof int) {
 	r := &w.s.Recov
 	if by == 0 {
 		if r.Slow && !(r.By == byList && w.resetOverList()) {
-			// Over once the newest recoveries are the usual ones again.
-			ok := 0
-			for i := range 2 {
-				if e := r.recent(i); !e.Cut && (e.Ratio > 0 && e.Ratio < 1.75 || e.Ratio == 0) {
-					ok++
-				}
+			// Over once as many of the newest recoveries are the usual ones again as would
+			// raise it: a small upset is over soon with any tuning.
+			usual := 0
+			for usual < int(min(r.Count, slowFewest)) && !r.recent(usual).Cut && r.recent(usual).Ratio < 1.75 {
+				usual++
 			}
-			if ok == 2 {
-				r.Slow = false
-			}
+			r.Slow = usual < slowFewest
 		}
 		return
 	}

@@ -29,7 +29,7 @@ func (w *Watch) verdictAt(t float64) {
 	// PV explains what the controller makes of it.
 	rejudge := [kinds]bool{}
 	fold := func(child int) { c[child].On, rejudge[child] = false, true }
-	if c[kSaturation].On && causes[c[kSaturation].Cause] != WindUp {
+	if c[kSaturation].On && causes[c[kSaturation].Cause] != WindUp && !w.rests(&s.OffPast.Sat) {
 		fold(kOffset)
 	}
 	if c[kSticking].On {
