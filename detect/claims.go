@@ -106,7 +106,8 @@ func claimStale(w *Watch) claim {
 
 func (w *Watch) pvUnits(pct float64) float64 { return pct * w.s.Scale.PVSpan / 100 }
 
-// tuningNow is the tuning to show with a finding: at the cycle where there is one.
+// tuningNow is the tuning to show with a finding: at the cycle where there is one. NaN:
+// not read, or not since that began.
 func (w *Watch) tuningNow() (gain, reset float64) {
 	gain, reset = math.NaN(), math.NaN()
 	kc, ti, ok := w.s.Osc.Kc, w.s.Osc.Ti, w.s.Osc.Kc != 0
@@ -119,6 +120,19 @@ func (w *Watch) tuningNow() (gain, reset float64) {
 	gain = math.Abs(kc)
 	if ti > 0 && ti < 1e5 {
 		reset = ti
+	}
+	if o := &w.s.Osc; o.Grow || o.Sus {
+		// OP is the integral of e and little else: a filter of a few degrees that the law does
+		// not know makes any gain and reset time of it.
+		const unseenDeg = 80.0
+		if o.PhiDeg > unseenDeg {
+			return math.NaN(), math.NaN()
+		}
+		// The usual tuning, read before the swing, may be what was changed to make it.
+		_, since := w.readFrom(gain, reset, o.Since-o.P)
+		if k0, t0, ok := w.usualTuning(o.Since - 2*o.P); !since && !(ok && (!within(gain, k0, tuningDiffers) || !within(reset, t0, tuningDiffers))) {
+			return math.NaN(), math.NaN()
+		}
 	}
 	return
 }
@@ -241,7 +255,7 @@ func measureSaturation(w *Watch, m []float64) {
 func measureSluggish(w *Watch, m []float64) {
 	r := &w.s.Recov
 	m[0] = float64(r.Now)
-	if r.Was > 0 {
+	if r.Was > 0 && r.By == byHistory { // else it was as slow before: what was usual says nothing
 		m[1] = float64(r.Was)
 	}
 	if p := float64(r.recent(0).Prop); p > 0 && p < 50 {

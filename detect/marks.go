@@ -149,15 +149,21 @@ func (c *Change) UnmarshalJSON(b []byte) error {
 	return nil
 }
 
-// stands: such a change is a fact of its own finding, not of what came before.
-func stands(k int, what ChangeWhat) bool {
+// unrelated: such a change is a fact of its own finding, not of what came before, or can
+// have nothing to do with it. A measurement that fails does not know of SP or the law, and
+// values fail to arrive for nothing that the controller does.
+func unrelated(k int, what ChangeWhat) bool {
 	switch what {
 	case ChangedTuning:
-		return k == kTuning
-	case ChangedMode, ChangedByHand:
+		return k == kTuning || k == kFrozen || k == kRangeEnd || k == kStale
+	case ChangedSetPoint:
+		return k == kFrozen || k == kRangeEnd || k == kStale
+	case ChangedMode:
 		return k == kMode
+	case ChangedByHand:
+		return k == kMode || k == kStale
 	case ChangedAtLimit:
-		return k == kSaturation
+		return k == kSaturation || k == kStale
 	case ChangedDataGap:
 		return k == kStale
 	}
@@ -169,7 +175,7 @@ func stands(k int, what ChangeWhat) bool {
 func (w *Watch) before(k int, onset float64, now int64) (out []Change) {
 	s := &w.s
 	add := func(what ChangeWhat, at, slack float64, text string) {
-		if text != "" && at <= onset+slack && onset-at <= markBeforeS && !stands(k, what) {
+		if text != "" && at <= onset+slack && onset-at <= markBeforeS && !unrelated(k, what) {
 			out = append(out, Change{what, min(w.ms(at), now), text})
 		}
 	}
@@ -202,35 +208,29 @@ func (w *Watch) before(k int, onset float64, now int64) (out []Change) {
 	return out
 }
 
+// tuningDiffers is by how much the tuning read in a trouble is another one. Readings at two
+// scales of time differ by more than those of one: a fifth more than a change asks for.
+const tuningDiffers = 1.2 * changeRatio
+
 // tuningMoved compares the tuning in service with the usual one before an onset, for a
 // trouble that was found before the change itself was sure. same: both are known and agree.
 func (w *Watch) tuningMoved(onset float64) (m tuningMove, same bool) {
 	s := &w.s
-	// Readings at two scales of time differ by more than those of one: a fifth more than
-	// a change of the tuning asks for.
-	const differs = 1.2 * changeRatio
 	gain, reset := w.tuningNow()
 	k0, t0, ok := w.usualTuning(onset - 2*s.Osc.P)
 	if !ok || !(gain > 0) || !(reset > 0) || !(k0 > 0) || !(t0 > 0) || t0 >= noTi {
 		return m, false
 	}
-	if !within(gain, k0, differs) {
+	if !within(gain, k0, tuningDiffers) {
 		m.GainWas, m.GainNow = float32(k0), float32(gain)
 	}
-	if !within(reset, t0, differs) {
+	if !within(reset, t0, tuningDiffers) {
 		m.ResetWas, m.ResetNow = float32(t0), float32(reset)
 	}
-	at := onset
-	for i := range s.Fits {
-		b := &s.Fits[i]
-		for j := range min(int(b.Count), fitRing) {
-			f := &b.Ring[j]
-			if f.R2 > changeR2 && f.hasReset() && near(math.Abs(float64(f.Kc)), gain) && near(float64(f.Ti), reset) {
-				at = min(at, f.T0.s())
-			}
-		}
+	// Without a reading that tells since when, nothing is said of a time.
+	if m.At, ok = w.readFrom(gain, reset, 0); !ok {
+		return tuningMove{}, false
 	}
-	m.At = at
 	return m, near(gain, k0) && near(reset, t0)
 }
 
@@ -238,14 +238,33 @@ func (w *Watch) tuningMoved(onset float64) (m tuningMove, same bool) {
 // nothing of a change that made the trouble.
 func (w *Watch) readSame(onset float64) bool {
 	k0, t0, ok := w.usualTuning(onset - 2*w.s.Osc.P)
+	if ok {
+		_, ok = w.readFrom(k0, t0, onset)
+	}
+	return ok
+}
+
+// readFrom is the begin, s, of the earliest reading held that agrees with a gain and a reset
+// time, s (NaN: any), and began at or after a time, s; the running blocks read, too.
+func (w *Watch) readFrom(gain, reset, after float64) (at float64, ok bool) {
+	at = math.Inf(1)
 	for k := range w.s.Fits {
-		for _, r := range [...]*fit{w.s.Fits[k].newest(), &w.s.Fits[k].Last} {
-			if ok && r.ok() && r.T0.s() >= onset && near(math.Abs(float64(r.Kc)), k0) && r.hasReset() && near(float64(r.Ti), t0) {
-				return true
+		b := &w.s.Fits[k]
+		look := func(f *fit) {
+			if t := f.T0.s(); f.ok() && t >= after && near(math.Abs(float64(f.Kc)), gain) && (reset != reset || f.hasReset() && near(float64(f.Ti), reset)) {
+				at = min(at, t)
 			}
 		}
+		for i := range min(b.Count, fitRing) {
+			look(&b.Ring[i])
+		}
+		look(&b.Last)
+		if float64(b.N) > 3*fitTh {
+			r, _, _ := w.solveFit(k)
+			look(&r)
+		}
 	}
-	return false
+	return at, !math.IsInf(at, 1)
 }
 
 // markWords says a mark; the text is empty where it is too small for a word.
@@ -299,9 +318,12 @@ func (w *Watch) beforeSentence(k int, f *Finding) string {
 	var t []string
 	for _, c := range near[:min(len(near), most)] {
 		ahead := float64(f.Since-c.At) / 1000
-		if ahead < max(60, 2*w.s.Grid.DT) {
+		switch slack := max(60, 2*w.s.Grid.DT); {
+		case ahead < -slack: // a change read from the data: its begin and the onset are vague
+			t = append(t, c.Text+", as read from "+duration(-ahead)+" after it began")
+		case ahead < slack:
 			t = append(t, c.Text+", as it began")
-		} else {
+		default:
 			t = append(t, c.Text+", "+duration(ahead)+" before")
 		}
 	}

@@ -18,6 +18,14 @@ const recRing = 6
 // the step was (common practice, no source).
 const unresolved = 2.0
 
+// restSamples is how long PV is at rest, samples, before an event begins.
+const restSamples = 20.0
+
+// kickFall is the time of an event from its peak over that to it under which it may be a
+// kick the wrong way: the action that follows is the stronger, and turns it at least as
+// fast (a third for when the rise is first seen, common practice, no source).
+const kickFall = 3.0
+
 // recoveredAt is the share of its peak at which a deviation is over.
 const recoveredAt = 0.12
 
@@ -41,6 +49,8 @@ type recovery struct {
 
 type recoveryState struct {
 	On, SP, Sat, Late bool
+	Pending           bool    // over, but PV may be on its way through SP
+	Kept              bool    // and in the slot of the next one of Ring, not counted yet
 	T0, TPeak         float64 // s
 	Peak              float64 // %
 	Sign              float64
@@ -98,7 +108,11 @@ func stepRecovery(w *Watch) {
 		r.On = false
 		r.Quiet = 0
 	}
+	if r.Pending {
+		w.throughSP(thr)
+	}
 	if s.Motion.SPBusy > 0.5 || s.Osc.Grow || s.Osc.Sus { // ramps, following loops, cycles: no rest to start from
+		w.settled()
 		r.abandon()
 		return
 	}
@@ -120,12 +134,13 @@ func stepRecovery(w *Watch) {
 			return
 		}
 		if a > thr {
-			if r.Quiet > 20*in.dt {
+			if r.Quiet > restSamples*in.dt {
+				w.settled()
 				sp := in.t-s.Motion.SPStep < 8*in.dt
 				usual, count, ring := r.Usual, r.Count, r.Ring
 				keep := *r
 				*r = recoveryState{On: true, SP: sp, T0: in.t, TPeak: in.t, Peak: a, Sign: math.Copysign(1, s.Motion.EF),
-					OP0: keep.OPMean, PV0: keep.PVMean, Ring: ring, Count: count, Usual: usual,
+					OP0: keep.OPMean, PV0: keep.PVMean, OPPeak: in.op - keep.OPMean, Ring: ring, Count: count, Usual: usual,
 					Slow: keep.Slow, SlowSince: keep.SlowSince, Cause: keep.Cause, Conf: keep.Conf, By: keep.By, Now: keep.Now, Was: keep.Was, Hold: keep.Hold, Own: keep.Own, OwnFrom: keep.OwnFrom, Big: keep.Big}
 				r.DSP = in.sp - keep.PVMean
 			}
@@ -133,14 +148,10 @@ func stepRecovery(w *Watch) {
 		}
 		return
 	}
-	r.Sat = r.Sat || in.limit
-	r.IntE += in.e * in.dt
-	r.IntOP += (in.op - r.OP0) * in.dt
-	r.IntPV += (in.pv - r.PV0) * in.dt
+	r.add(in)
 	x := s.Motion.EF * r.Sign
 	if x > r.Peak {
-		r.Peak, r.TPeak = x, in.t
-		r.OPPeak, r.IntPeak = in.op-r.OP0, r.IntE
+		r.peak(x, in)
 	}
 	if x < recoveredAt*r.Peak || x < max(0.7*sigma, s.Noise.resolution()) && x < overAt*r.Peak {
 		w.endRecovery(thr)
@@ -148,9 +159,60 @@ func stepRecovery(w *Watch) {
 	}
 }
 
+// add goes on with the areas of an event.
+func (r *recoveryState) add(in *input) {
+	r.Sat = r.Sat || in.limit
+	r.IntE += in.e * in.dt
+	r.IntOP += (in.op - r.OP0) * in.dt
+	r.IntPV += (in.pv - r.PV0) * in.dt
+}
+
+// peak notes the largest deviation so far, x in %.
+func (r *recoveryState) peak(x float64, in *input) {
+	r.Peak, r.TPeak = x, in.t
+	r.OPPeak, r.IntPeak = in.op-r.OP0, r.IntE
+}
+
+// throughSP follows PV after an event that ended as fast as it began: a process with
+// inverse response goes the wrong way first, and what runs from there straight through SP
+// into a much larger excursion is no recovery, but its begin (Åström & Hägglund 1995).
+func (w *Watch) throughSP(thr float64) {
+	s, in := &w.s, &w.in
+	r := &s.Recov
+	r.add(in)
+	x := -s.Motion.EF * r.Sign
+	switch {
+	case x > clearPeak*max(r.Peak, thr):
+		if r.Kept {
+			r.Ring[r.Count%recRing].Cut = true // teaches nothing where it goes out of the ring
+		}
+		r.On, r.Pending, r.Kept, r.Sign = true, false, false, -r.Sign
+		r.peak(x, in)
+	case r.Quiet > restSamples*in.dt || in.t-r.TPeak > 2*w.kickS() || math.Abs(in.spStep) > 0.2:
+		w.settled()
+	}
+}
+
+// kickS is the time, s, from its peak on in which an event may be a kick the wrong way.
+func (w *Watch) kickS() float64 {
+	r := &w.s.Recov
+	return kickFall * max(r.TPeak-r.T0, 3*w.in.dt)
+}
+
+// settled: an event that was pending is over, and counts where it was kept.
+func (w *Watch) settled() {
+	r := &w.s.Recov
+	kept := r.Kept
+	r.Pending, r.Kept = false, false
+	if kept {
+		w.countRecovery(r.Ring[r.Count%recRing])
+	}
+}
+
 func (w *Watch) endRecovery(thr float64) {
 	s, in := &w.s, &w.in
 	r := &s.Recov
+	r.Pending = in.t-r.TPeak < w.kickS()
 	if w.smallEvent(thr) || r.Late || in.t-r.T0 < 3*w.updateS() && w.updateS() > 3*in.dt || r.Sat || !in.hasOP {
 		return
 	}
@@ -158,6 +220,10 @@ func (w *Watch) endRecovery(thr float64) {
 	e.Prop = w.share()
 	e.Own = float32(w.forItsProcess(&e, thr))
 	w.keepRecovery(e)
+	r.Kept = true
+	if !r.Pending {
+		w.settled()
+	}
 }
 
 // share is the share of proportional action in what OP did up to the peak, theory
@@ -186,6 +252,11 @@ func (w *Watch) residences(dop, dpv float64) float64 {
 	if !ok || !(ti > 0 && ti < noTi) || dpv*r.DSP <= 0 {
 		return 0
 	}
+	// Where P does not see SP (P on PV, or a filter of SP) the law is another one, and what
+	// fits this one fits by the help of a load. At the peak PV has hardly moved.
+	if p := (r.OPPeak - kc/ti*r.IntPeak) / (kc * r.Peak * r.Sign); !(p > 0.5) {
+		return 0
+	}
 	left := r.DSP - dpv
 	// Where another hand, or a feedforward, moves OP or the load meanwhile, the law does
 	// not explain OP (methods section 3: it does within 6 %; here with tuning as read).
@@ -203,7 +274,7 @@ func (w *Watch) residences(dop, dpv float64) float64 {
 	if own < unresolved*w.in.dt {
 		return 0
 	}
-	// Of the closed loop by the law, not by its area: the same where P does not see SP.
+	// Of the closed loop by the law, not by its area.
 	return dop / r.DSP * ti / kc / own
 }
 
@@ -219,11 +290,23 @@ func (w *Watch) cutRecovery() {
 	e := recovery{At: momentOf(in.t), T0: momentOf(r.T0), Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP, Cut: true}
 	e.Prop = w.share()
 	w.keepRecovery(e)
+	w.countRecovery(e)
 }
 
+// keepRecovery puts an event into the slot of the next one.
 func (w *Watch) keepRecovery(e recovery) {
 	r := &w.s.Recov
-	q := &r.Usual[kindOf(e.SP)]
+	old := &r.Ring[r.Count%recRing]
+	// What is old enough not to be the trouble at hand is the usual.
+	if r.Count >= recRing && !r.Slow && !old.Cut && r.Hold == 0 {
+		r.Usual[kindOf(old.SP)].Mean(float64(old.Dur), 0.05, 1e-3)
+	}
+	*old = e
+}
+
+// countRecovery judges by an event that was kept.
+func (w *Watch) countRecovery(e recovery) {
+	r := &w.s.Recov
 	u, _ := w.usualRecovery(e.SP)
 	switch {
 	case u > 0:
@@ -244,16 +327,10 @@ func (w *Watch) keepRecovery(e recovery) {
 	if p := &w.s.OffPast; e.Ratio > 0 && w.rests(&p.Sat) && !p.Offset.On {
 		w.cameBack(!e.Cut && e.Ratio < 1.75)
 	}
-	i := r.Count % recRing
-	if r.Count >= recRing {
-		// What is old enough not to be the trouble at hand is the usual.
-		if old := &r.Ring[i]; !r.Slow && !old.Cut && r.Hold == 0 {
-			r.Usual[kindOf(old.SP)].Mean(float64(old.Dur), 0.05, 1e-3)
-		}
-	} else if r.Count < recRing-2 && !e.Cut {
-		q.Mean(float64(e.Dur), 0.05, 1e-3) // the first ones teach at once
+	if r.Count < recRing-2 && !e.Cut {
+		r.Usual[kindOf(e.SP)].Mean(float64(e.Dur), 0.05, 1e-3) // the first ones teach at once
 	}
-	r.Ring[i] = e
+	r.Ring[r.Count%recRing] = e
 	r.Count++
 	r.weigh(&e)
 	if r.Hold > 0 {

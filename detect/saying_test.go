@@ -2,6 +2,7 @@ package detect
 
 import (
 	"math"
+	"slices"
 	"strings"
 	"testing"
 
@@ -259,6 +260,82 @@ func TestGapGainIsNoMistakeOfTheList(t *testing.T) {
 		b.Ring[0] = fit{T0: 10, At: 100, Kc: x.seen, Ti: 1800, R2: 0.99, X: 100}
 		if n := w.tuningNote(); strings.Contains(n, "gain entered") != x.said {
 			t.Errorf("duty %v, gain %g: %q", x.duty, x.seen, n)
+		}
+	}
+}
+
+// twoLaws is a swing since 80000 s of a loop whose gain was 0.3 for long, with one reading of
+// another gain, of a block from one time to another, s.
+func twoLaws(gain float32, from, to float64) *Watch {
+	w := swinging(kGrowing)
+	w.s.Osc.Grow = true
+	b := &w.s.Fits[1]
+	b.BaseK.V, b.BaseK.N, b.BaseT.V, b.BaseT.N = 0.3, 50, 140, 50
+	b.Last = fit{Kc: gain, Ti: 140, R2: 0.99, X: 100, T0: momentOf(from), At: momentOf(to)}
+	w.s.Osc.Kc, w.s.Osc.Ti = float64(gain), 140
+	return w
+}
+
+// The gain that is shown with a swing is one that held in it, and its change is dated by the
+// reading that shows it.
+func TestTuningOfASwingIsReadInIt(t *testing.T) {
+	for _, x := range []struct {
+		name     string
+		gain     float32
+		from, to float64
+		shown    bool
+		dated    string
+	}{
+		{"the old gain, read before", 0.31, 79000, 80500, false, ""},
+		{"the same gain, read since", 0.31, 80100, 81000, true, ""},
+		{"a new one, read since", 1.8, 80500, 81500, true, "gain from about 0.3 to 1.8, as read from 8.3 min after it began"},
+		{"a new one, read as it began", 1.8, 79990, 81000, true, "gain from about 0.3 to 1.8, as it began"},
+		{"a new one, read across the onset", 1.8, 79400, 80500, true, "gain from about 0.3 to 1.8, 10 min before"},
+	} {
+		w := twoLaws(x.gain, x.from, x.to)
+		f := w.finding(kGrowing, Raised, w.in.t, "")
+		if _, shown := f.Measures.Get("gain"); shown != x.shown {
+			t.Errorf("%s: gain shown %v", x.name, shown)
+		}
+		if said := strings.Contains(f.Text, "gain from"); said != (x.dated != "") || !strings.Contains(f.Text, x.dated) {
+			t.Errorf("%s: %s", x.name, f.Text)
+		}
+	}
+}
+
+// What can have nothing to do with a finding is not among what changed before it.
+func TestWhatIsUnrelatedIsNotSaid(t *testing.T) {
+	for _, x := range []struct {
+		kind int
+		want []ChangeWhat
+	}{
+		{kGrowing, []ChangeWhat{ChangedSetPoint, ChangedMode}},
+		{kStale, []ChangeWhat{ChangedMode}},
+		{kRangeEnd, []ChangeWhat{ChangedMode}},
+		{kFrozen, []ChangeWhat{ChangedMode}},
+	} {
+		w := swinging(x.kind)
+		w.note(markSP, 78000, 4)
+		w.note(markMode, 79000, 2*16+1+1)
+		var got []ChangeWhat
+		for _, c := range w.finding(x.kind, Raised, w.in.t, "").Changed {
+			got = append(got, c.What)
+		}
+		if !slices.Equal(got, x.want) {
+			t.Errorf("%s: %v, want %v", table[x.kind].Kind, got, x.want)
+		}
+	}
+}
+
+// Where OP is the integral of e and little else, a filter that the law does not know makes
+// any gain and reset time of it: none is told of a swing.
+func TestTuningThatIsNotSeenIsNotTold(t *testing.T) {
+	for phi, told := range map[float64]bool{70: true, 88: false} {
+		w := twoLaws(0.06, 80500, 81500)
+		w.s.Osc.PhiDeg = phi
+		f := w.finding(kGrowing, Raised, w.in.t, "")
+		if _, shown := f.Measures.Get("gain"); shown != told {
+			t.Errorf("a lag of %g degrees: gain shown %v", phi, shown)
 		}
 	}
 }

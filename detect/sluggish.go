@@ -176,13 +176,29 @@ func (w *Watch) slowCause(by uint8, proof int) {
 	}
 	r.Cause, r.Conf = causeIndex(cause), float32(conf)
 	r.By = by
-	var durs [recRing]float64
-	for i := range proof {
-		durs[i] = float64(r.recent(i).Dur)
+	w.slowTimes(proof)
+}
+
+// slowTimes notes how long recoveries take now and usually, s, by those that prove it: the
+// newest so many, and against the process those that told something of it. Load and
+// set-point events differ in what is usual, so that the median ratio gives the usual.
+func (w *Watch) slowTimes(proof int) {
+	r := &w.s.Recov
+	var durs, ratios [recRing]float64
+	n := 0
+	for i := range int(min(r.Count, recRing)) {
+		if e := r.recent(i); n < proof && (r.By != byProcess || e.Own > 0) {
+			durs[n], ratios[n] = float64(e.Dur), float64(e.Ratio)
+			n++
+		}
 	}
-	r.Now = float32(num.Median(durs[:proof]))
-	u, _ := w.usualRecovery(r.recent(0).SP)
-	r.Was = float32(u)
+	if n == 0 { // none of them is held any more: as it was said
+		return
+	}
+	r.Now, r.Was = float32(num.Median(durs[:n])), 0
+	if m := num.Median(ratios[:n]); r.By == byHistory && m > 0 {
+		r.Was = r.Now / float32(m)
+	}
 }
 
 // shareOf is the median share of proportional action of the newest n recoveries, NaN where

@@ -169,9 +169,6 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 		what, brief = w.limitText(f, get)
 	case kSluggish:
 		takes, usual := get("recovery_s"), get("usual_s")
-		if s.Recov.By != byHistory { // it was as slow before: what was usual says nothing
-			usual = math.NaN()
-		}
 		what = creeps + " back after disturbances" + part(": it takes about %s", takes, duration)
 		switch u := part(" where %s was usual", usual, duration); {
 		case u != "":

@@ -353,7 +353,7 @@ func (w *Watch) vagueS() float64 { return max(2*w.s.Grid.DT, 5, 10*w.s.Osc.P) }
 // keepMove holds what a finding is about to say of the tuning before its onset, s, for as
 // long as that trouble stands.
 func (w *Watch) keepMove(k int, onset float64) {
-	if stands(k, ChangedTuning) {
+	if unrelated(k, ChangedTuning) {
 		return
 	}
 	kept := &w.s.Moved
