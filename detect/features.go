@@ -36,6 +36,7 @@ type input struct {
 	held   bool // PV was held, not measured
 	active bool // the law acts: mode, active_when, not suppressed, PV known
 	limit  bool // OP at a limit of its range
+	hand   bool // OP stepped by far more than the law explains
 	frozen bool // PV stands suspiciously still: it teaches nothing
 	first  bool // first slot after a gap or a spell in which the law did not act
 }

@@ -31,6 +31,7 @@ func TestWindUp(t *testing.T) {
 		for range x.times {
 			fs = append(fs, feed(w, 1000, func(float64) (float64, float64) { return 4, 100 })...)
 			fs = append(fs, feed(w, x.over, func(float64) (float64, float64) { return -4, 100 })...)
+			fs = append(fs, feed(w, 400, func(t float64) (float64, float64) { return -4, 99.5 - 4*t/runTi })...)
 			fs = append(fs, feed(w, x.rest, func(float64) (float64, float64) { return 0, 60 })...)
 		}
 		if c := said(fs, OutputSaturation); c != x.want {
@@ -113,5 +114,38 @@ func TestVisitsAreOneTrouble(t *testing.T) {
 	fs = append(fs, feed(w, 1.1*86400, func(t float64) (float64, float64) { return 0, 60 + 0.05*math.Sin(t/40) })...)
 	if r, c := count(Raised), count(Cleared); r != open || c != r {
 		t.Errorf("a day later: raised %d times, cleared %d", r, c)
+	}
+}
+
+// A loop that rests at zero each night, PV a little beyond, idles; with far more than a little
+// it lacks room, and so it does where the visits are short or the limit is none of the range.
+func TestIdlesEachNight(t *testing.T) {
+	for _, x := range []struct {
+		name string
+		e    float64
+		low  float32 // %, limit of OP
+		want Cause
+	}{
+		{"a little beyond", -2, 0, NoCause},
+		{"far beyond", -8, 0, OutputLimit},
+		{"at a limit above zero", -2, 20, OutputLimit},
+	} {
+		w := offsetWatch(func(l *configs.Loop) {
+			if x.low > 0 {
+				l.OPLimitLow = float64(x.low)
+			}
+		})
+		w.s.Sat.LowShare = 0.2 // as it was seen to be
+		var fs []Finding
+		for range 5 {
+			for range 12 { // e changes its sign now and then: many stays
+				fs = append(fs, feed(w, 2400, func(float64) (float64, float64) { return x.e, float64(x.low) })...)
+				fs = append(fs, feed(w, 600, func(float64) (float64, float64) { return 0.2, float64(x.low) })...)
+			}
+			fs = append(fs, feed(w, 14*3600, func(t float64) (float64, float64) { return 0, 60 + 0.05*math.Sin(t/40) })...)
+		}
+		if c := said(fs, OutputSaturation); c != x.want {
+			t.Errorf("%s: said %q, want %q", x.name, c, x.want)
+		}
 	}
 }

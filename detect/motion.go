@@ -112,6 +112,7 @@ func (w *Watch) stepMotion(flags collector.Flags) {
 
 	lo, hi := w.opLimits()
 	in.limit = in.hasOP && (in.op <= lo+opAtLimit || in.op >= hi-opAtLimit)
+	in.hand = w.handStep()
 	active := in.mode.LawActive() && flags&(collector.Suppressed|collector.Inactive|collector.Unconfirmed) == 0 && !w.inferredManual()
 	if active != m.Active {
 		m.Active, m.ActiveSince = active, in.t
@@ -126,6 +127,23 @@ func (w *Watch) stepMotion(flags collector.Flags) {
 	}
 	w.stepMarks(was)
 	m.PV, m.SP, m.OP, m.E = in.pv, in.sp, in.op, in.e
+}
+
+// handStep: OP went by a hand, or a program, in one slot: far, and three times as far as the
+// tuning makes of what e did.
+func (w *Watch) handStep() bool {
+	m, in := &w.s.Motion, &w.in
+	by := math.Abs(in.op - m.OP)
+	if !in.hasOP || !(by > leastTravel) {
+		return false
+	}
+	kc, ok := w.gainPct()
+	rt, _ := w.resetS()
+	law := math.Abs(in.e - m.E)
+	if rt > 0 {
+		law += math.Abs(in.e) * in.dt / rt
+	}
+	return ok && by > 3*math.Abs(kc)*law
 }
 
 // stepPosition follows how far the final element is from OP, where its position is

@@ -33,6 +33,7 @@ type offsetState struct {
 	LimInt    float32 // % s, Int by then
 	LimE      float32 // %, e by then, without its sign; 0 no test, or it was read
 	StillAt   float32 // s, age of the run when OP last stood as if a hand held it; 0 never
+	FreeAt    float32 // s, age of the run when OP was last seen at its limit: the part before says nothing of the integral
 	AtEnd     bool    // PV was at an end of its range: e says nothing of the process
 	NotFollow bool    // OP travelled and then stopped, and PV made nothing of either
 	Checked   float64 // s, last decision
@@ -104,6 +105,7 @@ type offsetPast struct {
 	Deaf    bool      // it was shown not to follow
 	Doubt   bool      // OP came to its limit by a travel that PV made nothing of
 	Vain    [2]moment // when OP last travelled far, down and up, and PV made nothing of it; 0 never
+	Lacks   moment    // when the integral was last said to be missing; 0 never, or it was shown to act
 	Ask     ask
 }
 
@@ -148,9 +150,17 @@ func (w *Watch) rest(d *stand) {
 		return
 	}
 	if d == &p.Offset {
+		w.s.Off.Missed = false // it was told
 		p.Came = min(p.Came+1, 3)
 	}
 	*d = stand{}
+}
+
+// begin is that of a run.
+func (w *Watch) begin(sign float64) {
+	in := &w.in
+	w.s.Sat.AtSince = 0
+	w.s.Off = offsetState{Sign: sign, T0: in.t, In: in.t, OP0: in.trim, OPs: in.trim, Es: in.e, Checked: in.t}
 }
 
 // endOfRun remembers a run: how long runs last is the loop's own yardstick, and
@@ -218,13 +228,17 @@ func stepOffset(w *Watch) {
 			prev = max(in.t-o.T0, 0.5*float64(o.PrevDur))
 			w.endOfRun(true)
 		}
-		*o = offsetState{PrevDur: float32(prev), Sign: sign, T0: in.t, In: in.t, OP0: in.trim, OPs: in.trim, Es: in.e, Checked: in.t}
+		w.begin(sign)
+		o.PrevDur = float32(prev)
 	}
 	if o.Sign == 0 {
 		return
 	}
+	if in.hand { // what was before was not the law's doing
+		w.begin(o.Sign)
+	}
 	d := in.t - o.T0
-	if calm := in.t - o.In; calm > 60*in.dt && calm > 0.15*d && calm > min(1200, 3*w.timeScale()) {
+	if calm := in.t - o.In; calm > 60*in.dt && calm > min(1200, 3*w.timeScale()) {
 		w.endOfRun(true)
 		o.restart()
 		return
@@ -378,11 +392,12 @@ func (w *Watch) idleAtLow() bool {
 	if !(o.OP0 < 12 || w.sign() == 0 || in.t-o.T0 > 3600 || o.Zero) {
 		return false
 	}
-	if !o.Zero && math.Abs(o.Int)/max(o.Dur, 1) > 3 {
+	if !o.Zero && math.Abs(o.Int)/max(o.Dur, 1) > idleMost {
 		o.Stuck = true
 		return false
 	}
-	*o = offsetState{Sign: o.Sign, T0: in.t, In: in.t, Zero: true, Checked: in.t, OPs: in.trim, Es: in.e}
+	w.begin(o.Sign)
+	o.Zero = true
 	return true
 }
 
@@ -423,9 +438,10 @@ func (w *Watch) judgeOffset(thr float64) {
 	if w.loop.FeedforwardKind != "" {
 		at = in.op // the limit is one of OP, not of the trim
 	}
-	listed := !in.frozen && (push > 0 && at >= l1-1 || push < 0 && at <= l0+1)
+	// With the action unknown either limit: an integral that e pushed away would have left it.
+	listed := !in.frozen && (push >= 0 && at >= l1-1 || push <= 0 && at <= l0+1)
 	if own || listed || back {
-		if s.Sat.AtSince < o.T0 || s.Sat.AtSince == 0 { // a stay of another run is another stay
+		if s.Sat.AtSince == 0 {
 			s.Sat.AtSince = in.t
 		}
 		if back && !listed {
@@ -433,7 +449,11 @@ func (w *Watch) judgeOffset(thr float64) {
 		} else {
 			w.limitTest(listed, m.OPSame-o.T0)
 		}
-		if in.t-s.Sat.AtSince > w.limitWaitS() {
+		wait := w.limitWaitS()
+		if past.Sat.On {
+			wait /= 4 // PV that came back for a moment
+		}
+		if in.t-s.Sat.AtSince > wait {
 			conf := 0.9
 			if !listed {
 				conf = 0.75
@@ -443,7 +463,9 @@ func (w *Watch) judgeOffset(thr float64) {
 		}
 		return
 	}
-	s.Sat.AtSince = 0
+	if s.Sat.AtSince > 0 {
+		s.Sat.AtSince, o.FreeAt = 0, float32(d)
+	}
 	if at > l0+2*leastTravel/3 && at < l1-2*leastTravel/3 {
 		o.LimE = 0
 	}
@@ -474,7 +496,14 @@ func (w *Watch) judgeOffset(thr float64) {
 	// Where PV came back from what was said before, the integral does work: such a
 	// loop must stay away for longer to be news.
 	need *= 1 + 2*float64(past.Came)
-	if d > need && !s.Osc.Grow && !s.Osc.Sus {
+	away := m.EF*o.Sign > 0.5*thr // PV that is back is no news
+	if d-float64(o.FreeAt) > need && away && !s.Osc.Grow && !s.Osc.Sus {
 		past.Offset.support(since, mean, cause, conf)
+		switch cause {
+		case IntegralMissing:
+			past.Lacks = momentOf(in.t)
+		case ResetTooLong, GainTooLow:
+			past.Lacks = 0
+		}
 	}
 }

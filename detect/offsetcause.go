@@ -44,7 +44,7 @@ func (w *Watch) offsetTravel(push, lo, hi float64) (t travel, ok bool) {
 			t.rt = float64(c.ResetWas)
 		}
 	}
-	t.clipped = s.Tune.LimitAt > o.T0+float64(a.T) || w.heldBack()
+	t.clipped = s.Tune.LimitAt > o.T0+float64(a.T) || o.FreeAt > a.T || w.heldBack()
 	ie := o.Int - float64(a.Int)
 	t.rate, t.before = ie/t.span, float64(a.Int/a.T)
 	t.dop = o.OPs - float64(a.OP)

@@ -190,7 +190,7 @@ func TestDeafUntilPVAnswers(t *testing.T) {
 	w.unmoved()
 	feed(w, 3*86400, func(t float64) (float64, float64) { return 0, 50 + 0.05*math.Sin(t/40) })
 	back := func(dur float32) {
-		w.keepRecovery(recovery{At: momentOf(w.in.t), T0: momentOf(w.in.t - float64(dur)), Dur: dur, Peak: 2})
+		w.countRecovery(recovery{At: momentOf(w.in.t), T0: momentOf(w.in.t - float64(dur)), Dur: dur, Peak: 2})
 	}
 	for i, x := range []struct {
 		dur  float32
@@ -363,5 +363,114 @@ func TestIdleAtTheLowEnd(t *testing.T) {
 		if c := said(feed(w, 7000, func(float64) (float64, float64) { return -2, 0 }), OutputSaturation); c != x.want {
 			t.Errorf("there for %g of the time: said %q, want %q", x.share, c, x.want)
 		}
+	}
+}
+
+// OP lay at its limit for a day; PV comes back and OP leaves it: what is over is no news, nor
+// is it that PV was away for as long with OP free.
+func TestOffsetOfALimitThatIsOver(t *testing.T) {
+	for _, x := range []struct {
+		name string
+		loop func(l *configs.Loop)
+	}{
+		{"the action is known", nil},
+		{"and where it is not", func(l *configs.Loop) { l.Action = configs.ActionUnknown }},
+	} {
+		w := offsetWatch(x.loop)
+		fs := feed(w, 86400, func(float64) (float64, float64) { return 5, 100 })
+		if c := said(fs, OutputSaturation); c != OutputLimit {
+			t.Errorf("%s: at the limit: said %q", x.name, c)
+		}
+		fs = feed(w, 6*3600, func(t float64) (float64, float64) {
+			e := 5 * math.Exp(-t/600)
+			return e, 70 + 6*e + 0.05*math.Sin(t/40)
+		})
+		if c := said(fs, SustainedOffset); c != NoCause {
+			t.Errorf("%s: PV is back: said %q", x.name, c)
+		}
+	}
+}
+
+// What is over when it could be said is not said, and once it is over the next error, short as
+// it is, is not the old one.
+func TestOffsetThatIsOver(t *testing.T) {
+	away := func(t float64) (float64, float64) { e, _ := wander(t); return e, 55 }
+	back := func(float64) (float64, float64) { return 0, 55 }
+	watch := func() *Watch {
+		w := offsetWatch(nil)
+		w.s.Motion.OPMin, w.s.Motion.OPMax = 5, 95
+		return w
+	}
+	w := watch()
+	feed(w, 1380, away)
+	if fs := feed(w, 3600, back); len(fs) > 0 {
+		t.Errorf("PV is back: said %s", fs[0].Kind)
+	}
+	w = watch()
+	fs := feed(w, 20*3600, away)
+	if c := said(fs, SustainedOffset); c != Undetermined {
+		t.Errorf("PV is away for a day: said %q", c)
+	}
+	feed(w, 2*3600, back)
+	if c := said(feed(w, 500, away), SustainedOffset); c != NoCause {
+		t.Errorf("for some minutes, hours later: said %q", c)
+	}
+}
+
+// PV that comes back for some minutes ends no stay at the limit.
+func TestBackForAMoment(t *testing.T) {
+	w := offsetWatch(nil)
+	stay := func(float64) (float64, float64) { return 5, 100 }
+	fs := feed(w, 7200, stay)
+	fs = append(fs, feed(w, 400, func(float64) (float64, float64) { return -5, 90 })...)
+	fs = append(fs, feed(w, 7200, stay)...)
+	if len(fs) == 0 || fs[0].Kind != OutputSaturation {
+		t.Fatal("nothing was said of the limit")
+	}
+	for _, f := range fs[1:] {
+		if f.Event != Updated {
+			t.Errorf("%s %s again", f.Kind, f.Event)
+		}
+	}
+}
+
+// A hand stops the plant: OP goes to zero in one slot, stays there for hours and comes back
+// in one. What PV makes of it is neither wind-up nor an offset that OP cannot work off.
+func TestStopByHand(t *testing.T) {
+	w := offsetWatch(nil)
+	step := func(seconds float64, law func(t float64) (e, op float64)) []Finding {
+		return feedAt(w, seconds, func(t float64, f *collector.Frame) {
+			e, op := law(t)
+			f.PV, f.OP, f.Mode = float32(50-e), float32(op), collector.ModeUnknown
+		})
+	}
+	fs := step(10, func(float64) (float64, float64) { return -1, 0 })
+	fs = append(fs, step(14*3600, func(t float64) (float64, float64) { return min(24, t/100), 0 })...)
+	fs = append(fs, step(20*3600, func(t float64) (float64, float64) {
+		e := 24 * math.Exp(-t/1800)
+		return e, 50 + e + 0.05*math.Sin(t/40)
+	})...)
+	for _, f := range fs {
+		t.Errorf("said %s, %s", f.Kind, f.Cause)
+	}
+}
+
+// An integral that was said to be missing makes every recovery a slow one: one trouble.
+func TestSlowForWantOfTheIntegral(t *testing.T) {
+	w := offsetWatch(nil)
+	if c := said(feed(w, 9000, wandering(1, 1e12)), SustainedOffset); c != IntegralMissing {
+		t.Fatalf("said %q", c)
+	}
+	slow := func() Cause {
+		w.s.Recov.Slow, w.s.Recov.Cause = true, causeIndex(ResetTooLong)
+		return said(feed(w, 60, func(t float64) (float64, float64) { return 0, 35 + 0.05*math.Sin(t/40) }), SluggishRecovery)
+	}
+	if c := slow(); c != NoCause {
+		t.Errorf("in the same day: said %q", c)
+	}
+	w.s.Recov.Slow = false
+	feed(w, 1.1*86400, func(t float64) (float64, float64) { return 0, 35 + 0.05*math.Sin(t/40) })
+	if c := slow(); c != ResetTooLong {
+		t.Errorf("when somebody can have seen to it: said %q", c)
 	}
 }

@@ -45,6 +45,10 @@ const limitAlways = 0.9
 // day (common practice, no source).
 const usualLow = 0.04
 
+// idleMost is the largest error, %, mean of a stay, of a loop that idles: OP that rests at
+// the low end with more has a load to shed (common practice, no source).
+const idleMost = 3.0
+
 // visitsAsked is how many visits to a limit are a lack of room; windUpsAsked how many times OP
 // must stay there past the change of sign to be wound up, and windUpOnce for how many reset
 // times where it is once (common practice, no source).
@@ -93,6 +97,9 @@ func stepSaturation(w *Watch) {
 	z.LimitShare += (math.Abs(side) - z.LimitShare) * in.dt / shareS
 	a := w.sign()
 	sigma := max(s.Noise.sigma(), 0.02)
+	if in.hand {
+		z.CrossAt, z.Side = 0, 0 // a stay that a hand began or ended says nothing of the integral
+	}
 	w.stepStretch(side, sigma)
 	// Wind-up: a sound controller leaves the limit at or before the change of sign
 	// of e (with conditional integration or tracking OP = limit needs Kc e + I >=
@@ -126,7 +133,7 @@ func stepSaturation(w *Watch) {
 			z.CrossAt, z.Side, z.Frames = 0, 0, 0
 		}
 	} else if side != 0 {
-		if a*in.e*side > sigma {
+		if a*s.Motion.EF*side > sigma { // for some slots: one is chance
 			z.Side = side // e pushes OP towards this limit
 		} else if z.Side == side && s.Motion.spMoved(in) {
 			z.Side = 0 // SP crossed PV: of that P may see nothing
@@ -163,13 +170,16 @@ func (w *Watch) stepStretch(side, sigma float64) {
 		return
 	}
 	d := in.t - z.From
-	if d > max(2*w.timeScale(), max(30*in.dt, 60)) && math.Abs(z.IntE)/d > max(3*sigma, 0.8) {
+	mean := z.IntE / d
+	l0, _ := w.opLimits()
+	idle := mean*w.sign() < 0 && l0 < opAtLimit && math.Abs(mean) < idleMost && z.LowShare >= usualLow
+	if d > max(2*w.timeScale(), max(30*in.dt, 60)) && math.Abs(mean) > max(3*sigma, 0.8) && !idle {
 		if z.Stretches == 0 || in.t-z.LastEnd > visitsApart {
 			z.Stretches, z.FirstFrom = 0, z.From
 		}
 		z.Stretches, z.LastEnd = min(z.Stretches+1, 200), in.t
 		if z.Stretches >= visitsAsked {
-			w.sayLimit(z.FirstFrom, z.IntE/d, 0.75)
+			w.sayLimit(z.FirstFrom, mean, 0.75)
 		}
 	}
 	z.From = 0

@@ -32,6 +32,9 @@ func (w *Watch) verdictAt(t float64) {
 	if c[kSaturation].On && causes[c[kSaturation].Cause] != WindUp && !w.rests(&s.OffPast.Sat) {
 		fold(kOffset)
 	}
+	if p := &s.OffPast; p.Lacks > 0 && t-p.Lacks.s() < lackFor { // without it no recovery is ever whole
+		fold(kSluggish)
+	}
 	if c[kSticking].On {
 		fold(kSustained)
 	}
@@ -62,6 +65,10 @@ func (w *Watch) verdictAt(t float64) {
 		}
 	}
 }
+
+// lackFor is how long, s, after the integral was said to be missing that explains slow
+// recoveries (common practice, no source: a day).
+const lackFor = 86400.0
 
 // swings are the kinds of which one cycle is one at a time.
 var swings = [...]int{kGrowing, kSustained, kSticking}
