@@ -282,6 +282,18 @@ func (b *cycleBank) growth(n int) (perCycle, t float64) {
 	return math.Exp(2 * beta), beta / max(se, 1e-9)
 }
 
+// scatter is the deviation of the ln of the newest n peaks about their growth.
+func (b *cycleBank) scatter(n int) float64 {
+	var buf [ringLen]float64
+	h := b.heights(n, &buf)
+	for i, v := range h {
+		h[i] = math.Log(v)
+	}
+	_, se := num.Slope(h)
+	k := float64(len(h))
+	return se * math.Sqrt(k*(k*k-1)/12)
+}
+
 // tip is the mean of the newest two peaks, %.
 func (b *cycleBank) tip() float64 { return (b.at(0).peak() + b.at(1).peak()) / 2 }
 

@@ -77,7 +77,7 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 	case phi < phiGain:
 		byPhi, also = GainTooHigh, [2]Cause{ResetTooShort}
 	}
-	k0, t0, okb := w.usualTuning(o.Since - 2*p)
+	k0, t0, okb := float64(o.WasK), float64(o.WasT), o.WasK > 0
 	if c := &s.Change; c.Seen > 0 && c.At > o.Since-max(50*p, 86400) {
 		// The change was noticed and is the usual tuning by now: before it, it was not.
 		if c.What&1 != 0 {
@@ -136,14 +136,23 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 	if o.Grow {
 		// Once OP is clipped the fit fails: the cause found before stands.
 		early := o.Evals < 25 && o.Growth > 1.01
-		sure := (phi < phiGain-4 || phi > phiReset+5) && o.Evals < 120 && w.in.t-s.Tune.LimitAt > 6*p
+		// A rate limit or the ends of OP stretch the cycle, and with it the lag.
+		stretched := o.GrowCause != 0 && p > stretch*float64(o.GrowP)
+		sure := (phi < phiGain-4 || phi > phiReset+5) && o.Evals < 120 && !stretched && w.in.t-s.Tune.LimitAt > 6*p
 		if o.ByChange && !byChange || !byChange && o.Evals < 4 && o.GrowCause == 0 && phi > 15 && phi < 60 {
 			ok = false // named once by what changed, or too early to name
 		}
 		if o.GrowCause == 0 && o.Sus && o.Evals >= 60 && !byChange {
 			ok = false // an irregular cycle that has long been there also swells at times
 		}
-		if ok && (o.GrowCause == 0 || (byPhi != Undetermined || o.Evals < 10) && (early || sure)) {
+		uneven := !byChange && !changed && !slack && b.scatter(min(int(o.Evals)+8, int(b.N))) > unevenGrowth
+		if uneven {
+			ok = false // what chance drives grows for a while, too
+		}
+		if ok && (o.GrowCause == 0 || (byPhi != Undetermined || o.Evals < 10) && (early && !stretched || sure)) {
+			if o.GrowCause == 0 || o.GrowCause != causeIndex(byPhi) {
+				o.GrowP = float32(p)
+			}
 			o.GrowCause = causeIndex(byPhi)
 			o.ByChange = byChange
 			conf := phiConfidence(phi, ok)
@@ -155,10 +164,23 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 			}
 			o.setCause(byPhi, also, conf)
 		} else if o.GrowCause == 0 {
+			if uneven {
+				also = [2]Cause{OutsideDisturbance, byPhi}
+			}
 			o.setCause(Undetermined, also, 0.5)
 		}
 		if !o.Sus || o.Evals < 60 {
 			return
+		}
+	}
+	if !ok && byPhi == Undetermined && sh.looks >= 3 {
+		// A law with derivative, or one of PV, is none of PI: what OP does directly makes one
+		// more likely than the other.
+		switch {
+		case sh.phiDeg < phiGain:
+			byPhi = GainTooHigh
+		case sh.phiDeg > phiReset:
+			byPhi = ResetTooShort
 		}
 	}
 	if o.Sus {
@@ -343,6 +365,14 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	play := w.loop.Process != configs.SelfRegulating && strays && sh.looks >= shapeLooks && si > least && sh.peaked > corners && phi > phiDeadBand && phi < phiDeadBandMost
 	clipped := s.Tune.LimitAt > 0 && w.in.t-s.Tune.LimitAt < 1.5*o.P // a cycle between the limits of OP is as even as a clock's
 	unchanged := near(rk, 1) && near(rt, 1)
+	bolder := changed || w.bolder()
+	open := [2]Cause{OutsideDisturbance, byPhi}
+	if bolder && byPhi != Undetermined {
+		open = [2]Cause{byPhi, OutsideDisturbance}
+	}
+	// What a drive makes of a sound loop is there at once and stays of its size; an instability
+	// climbs, and what then holds it, a rate limit or the ends of a valve, may give it a beat.
+	swelled := o.Climb > atOnce && (o.Climb != unseen || move > evenSize)
 	// There at once, even ever since, and yet without a beat of its own: an instability climbs
 	// to its size and keeps it only where something clips, which leaves its crossings no jitter.
 	drive := o.Climb <= atOnce && q.regular > evenBeat && spread < steady && move < evenSize && sh.looks >= shapeLooks && s.Clock.jitters(causes[o.Cause] == OutsideDisturbance)
@@ -353,12 +383,14 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	case lately && !stuckBefore:
 		o.setCause(causes[o.LastCause], also, 0.8)
 		o.LastAt, o.LastP = w.in.t, o.P
+	case o.waxes() && !changed && !slack:
+		o.setCause(Undetermined, open, 0.5)
 	case slack && !(keeps && s.Clock.long()):
 		o.setCause(GainTooLow, [2]Cause{ResetTooShort}, 0.92)
-	case keeps && (changed || slack || clipped || !s.Clock.long() && spread > steady):
+	case keeps && (bolder || o.Grow || swelled || slack || clipped || !s.Clock.long() && max(spread, o.uneven()) > steady):
 		// A beat speaks for outside, a tuning changed for the loop itself; a swing that
 		// loads keep up wanders in size, and its phase strays slowly when it rings long.
-		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, byPhi}, 0.5)
+		o.setCause(Undetermined, open, 0.5)
 	case keeps && tri && !s.Clock.long():
 		// Shape against a beat that is young.
 		if !o.Sticking {
@@ -379,8 +411,9 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		o.setCause(ValveDeadBand, [2]Cause{ValveSticking}, 0.8)
 	case (tri || o.Sticking) && !integrating && !changed && smoothed(phi, sh, o.Sticking):
 		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, ValveSticking}, 0.6)
-	case o.Sticking && !integrating && si > shapeStuck && spread < alike:
-		// A shape once plain is not taken back because noise blurs it for a while.
+	case o.Sticking && !integrating && si > shapeStuck-2*shapeScatter/math.Sqrt(shapeLooks):
+		// A shape once plain is taken back when it is as plainly none, not because noise or a
+		// load blurs it for a while.
 	case lately && !integrating && si > shapeStuck && spread < alike && !follows:
 		o.setCause(ValveSticking, [2]Cause{OutsideDisturbance, ProcessNonlinear}, 0.8)
 	case tri && sh.h3OP > 0.25 && !strays:
@@ -397,7 +430,7 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		o.setCause(Undetermined, [2]Cause{ValveSticking, ProcessNonlinear}, 0.6)
 	case tri && !changed && w.propOnlySeen():
 		o.setCause(Undetermined, [2]Cause{ValveSticking, OutsideDisturbance}, 0.5)
-	case drive && (unchanged || !integrating) && !changed && !clipped && sh.siOP < mostSine && (w.loop.Process == configs.SelfRegulating || sh.siPV < mostSine):
+	case drive && (unchanged || !integrating) && !bolder && !clipped && sh.siOP < mostSine && (w.loop.Process == configs.SelfRegulating || sh.siPV < mostSine):
 		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.8)
 	case integrating && phi > phiValve && si < 0.78 && !changed && q.regular > 2*ownBeat:
 		// With the product k Kc Ti too small alone the swing would lose four fifths a cycle
@@ -427,16 +460,40 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		// to its beat; but a swing of the loop's own neither grows nor dies only at one
 		// value of its tuning.
 		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.75)
-	case si < 0.5 && strays && q.regular > ownBeat && (move > 1.7 || phi < 25 && move > 1.5 || phi > 60 && spread > 0.14 && move > 1.4):
+	case !unchanged && phi == phi && si < 0.5 && strays && q.regular > ownBeat && (move > 1.7 || phi < 25 && move > 1.5 || phi > 60 && spread > 0.14 && move > 1.4):
 		o.setCause(byPhi, [2]Cause{OutsideDisturbance}, 0.75)
 	default:
-		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, byPhi}, 0.5)
+		o.setCause(Undetermined, open, 0.5)
 	}
 	o.Sticking = causes[o.Cause] == ValveSticking
 	if o.Sticking && o.Grow {
 		o.Grow = false
 	}
 }
+
+// unevenGrowth is the deviation of the ln of peaks about their growth from which on that is not
+// of an instability, which grows by the same factor each cycle. The envelope of a resonance of
+// quality Q that chance drives changes by sqrt(pi/Q), of its usual size, from peak to peak: by
+// half at 10, by a fifth at 80.
+const unevenGrowth = 0.2
+
+// stretch is the factor on the period of the first naming from which on a lag says nothing of
+// the tuning.
+const stretch = 1.3
+
+// bolder: the tuning became more aggressive in the day before the cycle began.
+func (w *Watch) bolder() bool {
+	m := w.tuningBefore(w.s.Osc.Since)
+	up := m.GainWas > 0 && m.GainNow > boldGain*m.GainWas
+	cut := m.ResetWas > 0 && m.ResetNow < boldReset*m.ResetWas
+	return up && !(m.ResetWas > 0 && m.ResetNow > 2*m.ResetWas) || cut && !(m.GainWas > 0 && m.GainNow < m.GainWas)
+}
+
+// boldGain and boldReset are the factors from which on a gain was raised and a reset time cut.
+const (
+	boldGain  = 1.4
+	boldReset = 0.65
+)
 
 // led: the cycle comes with the set point, from an outer loop or a program.
 func (w *Watch) led() bool {

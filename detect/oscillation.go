@@ -4,35 +4,39 @@ import "math"
 
 // oscState is the loop's live oscillation, if any.
 type oscState struct {
+	Bad       uint16 // half-cycles running without the cycle
 	Grow, Sus bool
 	Bank      uint8
-	Climb     uint8   // half-cycles on the way to its size when it began; unseen: not seen
-	Evals     uint32  // half-cycles of the bank since the episode began
-	Bad       uint16  // half-cycles running without the cycle
-	Since     float64 // s
-	Seen      float64 // s, when the cycle was last there
-	P         float64 // s, period
-	Amp       float64 // %, mean peak of e
-	AmpHi     float64
-	AmpLo     float64
+	Climb     uint8 // half-cycles on the way to its size when it began; unseen: not seen
 	AmpOn     bool
-	Grown     float32 // %, largest amplitude at which growth stopped in this episode; 0 never
-	Growth    float64 // per cycle, newest
-	GrowCause uint8   // cause found while growing
+	GrowCause uint8 // cause found while growing
 	Cause     uint8
 	Next      uint8 // a differing judgement, and how often running
 	NextN     uint8
 	Always    bool // slow, and as large as what the loop was seen to do from the start
 	ByChange  bool // the cause rests on a change of the loop's own tuning: later fits cannot overturn it
 	Also      [2]uint8
+	Sticking  bool
+	Evals     uint32  // half-cycles of the bank since the episode began
+	Grown     float32 // %, largest amplitude at which growth stopped in this episode; 0 never
+	GrowP     float32 // s, period when GrowCause was found
 	Conf      float32
+	WasK      float32 // usual gain and reset time, s, when it began; 0 unknown
+	WasT      float32
+	Mean, Sq  float32 // %, %^2, means of peak and its square, over the newest hundred or so
+	Since     float64 // s
+	Seen      float64 // s, when the cycle was last there
+	P         float64 // s, period
+	Amp       float64 // %, mean peak of e
+	AmpHi     float64
+	AmpLo     float64
+	Growth    float64 // per cycle, newest
 	PhiDeg    float64
 	Kc, Ti    float64 // in service at the cycle, signed; 0 unknown
 	Regular   float64
-	Sticking  bool
 	// The last growing episode, in case it comes back as a sustained one.
-	LastAt, LastP float64
 	LastCause     uint8
+	LastAt, LastP float64
 }
 
 // planSlow is the period, reset times, over which a loop has time to come to rest between
@@ -127,6 +131,9 @@ func (w *Watch) beginOsc(level int, b *cycleBank, back int) {
 	}
 	*o = oscState{Grow: keep.Grow, Sus: keep.Sus, Bank: uint8(level), Seen: w.in.t, Since: b.Zero - len*w.levelS(level),
 		LastAt: keep.LastAt, LastP: keep.LastP, LastCause: keep.LastCause, Climb: b.climb(back)}
+	if k, t, ok := w.usualTuning(o.Since); ok { // later on what is usual is of the swing itself
+		o.WasK, o.WasT = float32(k), float32(t)
+	}
 	rt, _ := w.resetS()
 	period := 2 * len / float64(back) * w.levelS(level)
 	size := b.Usual.Value()
@@ -147,6 +154,7 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 	o.Evals++
 	o.P, o.Amp, o.Regular = st.period*w.levelS(level), st.amp, st.regular
 	o.Growth, _ = b.growth(st.n)
+	o.learnSize(b.at(0).peak())
 	if !o.Grow && w.ofTheDay(b, o.P) { // how long it is, is the surer the longer it lasts
 		w.endOsc()
 		return
@@ -163,7 +171,7 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 	}
 	// Growth that stops early with OP off its limits was no instability: a linear one
 	// goes on until something clips, be it a limit further down a cascade.
-	if o.Grow && o.Evals > 12 && (o.Evals < 40 || st.amp < 3*o.AmpLo) && w.in.t-s.Tune.LimitAt > 8*o.P && w.stopped(level, b) {
+	if o.Grow && o.Evals > 12 && w.in.t-s.Tune.LimitAt > 8*o.P && (w.waned(level, b) || (o.Evals < 40 || st.amp < 3*o.AmpLo) && w.stopped(level, b)) {
 		o.Grow, o.GrowCause, o.Sus = false, 0, true
 		o.Grown = max(o.Grown, float32(o.AmpHi))
 		b.Conf = 0
@@ -191,6 +199,31 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 	}
 }
 
+// sizes is how many half-cycles the spread of the sizes of a swing is taken over.
+const sizes = 100
+
+// learnSize takes the peak of a half-cycle, %.
+func (o *oscState) learnSize(peak float64) {
+	rate := min(1, max(2/float32(o.Evals+1), 1.0/sizes)) // how it grew to its size fades first
+	p := float32(peak)
+	o.Mean += (p - o.Mean) * rate
+	o.Sq += (p*p - o.Sq) * rate
+}
+
+// uneven is the deviation of the sizes of the swing over their mean.
+func (o *oscState) uneven() float64 {
+	m := float64(o.Mean)
+	return math.Sqrt(max(float64(o.Sq)-m*m, 0)) / max(m, 1e-9)
+}
+
+// waxing is the deviation of its sizes over their mean from which on a swing waxes and wanes
+// as what is driven by chance: Rayleigh's law has 0.52; what a hundred half-cycles of that show
+// is a little less.
+const waxing = 0.44
+
+// waxes: the swing is of no size of its own.
+func (o *oscState) waxes() bool { return o.Evals > sizes/4 && o.uneven() > waxing }
+
 // stopped: the newest half-cycles neither grow nor are near the ends of the range.
 func (w *Watch) stopped(level int, b *cycleBank) bool {
 	q, ok := b.stat(level, 12)
@@ -200,6 +233,16 @@ func (w *Watch) stopped(level int, b *cycleBank) bool {
 	by, _ := b.growth(q.n)
 	return by < 1.012
 }
+
+// waned: the newest half-cycles are much smaller than the swing was.
+func (w *Watch) waned(level int, b *cycleBank) bool {
+	q, ok := b.stat(level, 12)
+	return ok && q.amp < wane*w.s.Osc.AmpHi
+}
+
+// wane is the share of its largest size under which a swing has waned: an instability off the
+// ends of OP only grows.
+const wane = 0.6
 
 // oscGone: the bank of the live oscillation has nothing regular now.
 func (w *Watch) oscGone(level int) {
