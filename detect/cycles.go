@@ -273,25 +273,26 @@ func (b *cycleBank) spread(n int) float64 {
 
 // growth is that of the newest n half-cycles, a factor a cycle, and its t value.
 func (b *cycleBank) growth(n int) (perCycle, t float64) {
-	var buf [ringLen]float64
-	h := b.heights(n, &buf)
-	for i, v := range h {
-		h[i] = math.Log(v)
-	}
-	beta, se := num.Slope(h)
+	beta, se, _ := b.slope(n)
 	return math.Exp(2 * beta), beta / max(se, 1e-9)
 }
 
 // scatter is the deviation of the ln of the newest n peaks about their growth.
 func (b *cycleBank) scatter(n int) float64 {
+	_, se, k := b.slope(n)
+	return se * math.Sqrt(k*(k*k-1)/12)
+}
+
+// slope is that of the ln of the newest n peaks, a half-cycle, with its standard error and
+// the number of heights that it is read from.
+func (b *cycleBank) slope(n int) (beta, se, k float64) {
 	var buf [ringLen]float64
 	h := b.heights(n, &buf)
 	for i, v := range h {
 		h[i] = math.Log(v)
 	}
-	_, se := num.Slope(h)
-	k := float64(len(h))
-	return se * math.Sqrt(k*(k*k-1)/12)
+	beta, se = num.Slope(h)
+	return beta, se, float64(len(h))
 }
 
 // tip is the mean of the newest two peaks, %.

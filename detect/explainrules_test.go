@@ -32,6 +32,14 @@ func passes(t *testing.T, line string) (all bool, n int) {
 	return all, n
 }
 
+// shows asks of a line that its numbers, n of them, pass where the rule holds, and only there.
+func shows(t *testing.T, name, line string, holds bool, numbers int) {
+	t.Helper()
+	if all, n := passes(t, line); all != holds || n != numbers {
+		t.Errorf("%s: want %v by %d numbers: %s", name, holds, numbers, line)
+	}
+}
+
 func lineWith(lines []string, what string) string {
 	for _, x := range lines {
 		if strings.Contains(x, what) {
@@ -87,10 +95,7 @@ func TestExplainOfALastingSwing(t *testing.T) {
 		if got := w.kept(2, b); got != x.want {
 			t.Fatalf("%s: the rule holds: %v", x.name, got)
 		}
-		line := lineWith(w.explainKept(2), "does it last")
-		if all, n := passes(t, line); all != x.want || n != 4 {
-			t.Errorf("%s: want %v by four numbers: %s", x.name, x.want, line)
-		}
+		shows(t, x.name, lineWith(w.explainKept(2), "does it last"), x.want, 4)
 	}
 }
 
@@ -114,10 +119,7 @@ func TestExplainOfAViolentSwing(t *testing.T) {
 		if got := w.violent(2, b); got != x.want {
 			t.Fatalf("%s: the rule holds: %v", x.name, got)
 		}
-		line := lineWith(w.explainCycle(2), "is it violent")
-		if all, n := passes(t, line); all != x.want || n != 4 {
-			t.Errorf("%s: want %v by four numbers: %s", x.name, x.want, line)
-		}
+		shows(t, x.name, lineWith(w.explainCycle(2), "is it violent"), x.want, 4)
 	}
 }
 
@@ -152,10 +154,7 @@ func TestExplainOfASlippingValve(t *testing.T) {
 			t.Fatalf("%s: the rule holds: %v", x.name, got)
 		}
 		*k = track{On: true, Bank: 2, Looks: x.looks, PVSwing: 2, SinSum: x.index * wt, TriSum: (1 - x.index) * wt, H3: x.third * wt, Stick: x.fif * wt}
-		line := lineWith(w.explainSlips(2, 0.1), "slip")
-		if all, n := passes(t, line); all != x.want || n != 7 {
-			t.Errorf("%s: want %v by seven numbers: %s", x.name, x.want, line)
-		}
+		shows(t, x.name, lineWith(w.explainSlips(2, 0.1), "slip"), x.want, 7)
 	}
 }
 

@@ -61,13 +61,16 @@ const (
 	Undetermined             Cause = "undetermined"
 )
 
-// HasCause says whether a kind has a cause to be named; the others are facts.
-func HasCause(k Kind) bool {
+// ToTell is the cause of a finding of a kind as it is shown: none where nothing is named of a
+// kind that has no cause to be named, being a fact.
+func (c Cause) ToTell(k Kind) Cause {
 	switch k {
 	case NotInNormalMode, StaleData, TuningChanged, SourceDown, SourceLate, SamplesLost, StoreFailing, SenderFailing, ClockStepKind, CertificateExpiring:
-		return false
+		if c == Undetermined {
+			return NoCause
+		}
 	}
-	return true
+	return c
 }
 
 // Event of a finding: findings are statements of state.

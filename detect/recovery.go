@@ -209,6 +209,12 @@ func (w *Watch) settled() {
 	}
 }
 
+// event is the running one, as it ends now.
+func (w *Watch) event() recovery {
+	t, r := w.in.t, &w.s.Recov
+	return recovery{At: momentOf(t), T0: momentOf(r.T0), Dur: float32(t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP, Prop: w.share()}
+}
+
 func (w *Watch) endRecovery(thr float64) {
 	s, in := &w.s, &w.in
 	r := &s.Recov
@@ -216,8 +222,7 @@ func (w *Watch) endRecovery(thr float64) {
 	if w.smallEvent(thr) || r.Late || in.t-r.T0 < 3*w.updateS() && w.updateS() > 3*in.dt || r.Sat || !in.hasOP {
 		return
 	}
-	e := recovery{At: momentOf(in.t), T0: momentOf(r.T0), Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP}
-	e.Prop = w.share()
+	e := w.event()
 	e.Own = float32(w.forItsProcess(&e, thr))
 	w.keepRecovery(e)
 	r.Kept = true
@@ -287,8 +292,8 @@ func (w *Watch) cutRecovery() {
 	if u, _ := w.usualRecovery(r.SP); u == 0 || r.Sat || in.t-r.T0 < 3*u || w.smallEvent(thr) {
 		return
 	}
-	e := recovery{At: momentOf(in.t), T0: momentOf(r.T0), Dur: float32(in.t - r.T0), Rise: float32(r.TPeak - r.T0), Peak: float32(r.Peak), SP: r.SP, Cut: true}
-	e.Prop = w.share()
+	e := w.event()
+	e.Cut = true
 	w.keepRecovery(e)
 	w.countRecovery(e)
 }

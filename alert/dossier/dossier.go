@@ -168,10 +168,10 @@ type Episode struct {
 
 // Says is the cause in words; empty where none is named.
 func (e Episode) Says() string {
-	switch {
-	case e.Cause == detect.NoCause, e.Cause == detect.Undetermined && !detect.HasCause(e.Kind):
+	switch e.Cause.ToTell(e.Kind) {
+	case detect.NoCause:
 		return ""
-	case e.Cause == detect.Undetermined:
+	case detect.Undetermined:
 		return "the cause cannot be told"
 	}
 	return strings.ReplaceAll(string(e.Cause), "-", " ") + ", " + detect.Likely(e.Confidence)

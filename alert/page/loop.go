@@ -288,11 +288,8 @@ func (p *Page) fillState(v *loopPage, s *LoopState, view *detect.View, known boo
 }
 
 func ranged(v, low, high float64, unit, unread string) string {
-	if math.IsNaN(v) && unread != "" {
-		return unread
-	}
-	if math.IsNaN(v) { // the gain shows in noise alone, the reset does not
-		return "not excited enough to read"
+	if math.IsNaN(v) { // without a reason: the gain shows in noise alone, the reset does not
+		return cmp.Or(unread, "not excited enough to read")
 	}
 	s := number(v, 3) + "\u00a0" + unit
 	if !math.IsNaN(low) && !math.IsNaN(high) {

@@ -60,10 +60,10 @@ var stateWords = map[detect.State]string{
 
 // sure says how sure a cause is, in words.
 func sure(f *detect.Finding) string {
-	switch {
-	case f.Cause == detect.NoCause, f.Cause == detect.Undetermined && !detect.HasCause(f.Kind):
+	switch c := f.Cause.ToTell(f.Kind); {
+	case c == detect.NoCause:
 		return ""
-	case f.Cause == detect.Undetermined:
+	case c == detect.Undetermined:
 		return "cause cannot be told"
 	case f.Confidence >= 0.8:
 		return strings.ReplaceAll(string(f.Cause), "-", " ") + ", likely"

@@ -291,17 +291,17 @@ func (h *house) trials(c *configs.Config) (out []trialSent, failed bool, err err
 	return out, failed, nil
 }
 
-const checkedConfig = "%s: %d loops, %d sources, %d senders: no mistakes\n"
-
 // print writes it for people; c is nil where a loop list was checked alone.
 func (r *checked) print(w io.Writer, c *configs.Config) error {
-	switch n := r.States; {
-	case c == nil:
-		fmt.Fprintf(w, "%s: %d loops: no mistakes\n", r.File, len(r.Loops))
-	case n != nil:
-		fmt.Fprintf(w, checkedConfig+"loops as the watch sees them: judged %d, cannot judge %d, not in normal mode %d, held %d\n", r.File, len(c.Loops), len(c.Sources), len(c.Advise.Senders), n.Judged, n.CannotJudge, n.NotNormal, n.Held)
-	default:
-		fmt.Fprintf(w, checkedConfig+"no watch of this data folder answers and none has left anything there: how many loops are judged is not known\n", r.File, len(c.Loops), len(c.Sources), len(c.Advise.Senders))
+	fmt.Fprintf(w, "%s: %d loops", r.File, len(r.Loops))
+	if c != nil {
+		fmt.Fprintf(w, ", %d sources, %d senders", len(c.Sources), len(c.Advise.Senders))
+	}
+	fmt.Fprintln(w, ": no mistakes")
+	if n := r.States; n != nil {
+		fmt.Fprintf(w, "loops as the watch sees them: judged %d, cannot judge %d, not in normal mode %d, held %d\n", n.Judged, n.CannotJudge, n.NotNormal, n.Held)
+	} else if c != nil {
+		fmt.Fprintln(w, "no watch of this data folder answers and none has left anything there: how many loops are judged is not known")
 	}
 	for _, s := range r.Warnings {
 		fmt.Fprintf(w, "note: %s\n", s)

@@ -13,7 +13,6 @@ import (
 	"github.com/spf13/cobra"
 
 	"midwatch/alert/page/api"
-	"midwatch/detect"
 )
 
 func statusVerb(h *house) *cobra.Command {
@@ -105,7 +104,7 @@ func printStatus(w io.Writer, s *api.Status, rows []api.Loop, loops bool) error 
 		if n := len(e.Loops); n > 1 {
 			subject += fmt.Sprintf(" and %d more", n-1)
 		}
-		fmt.Fprintf(t, "%s\t%s\t%s\t%s\t%s\t%s\t%s\n", e.ID, e.Urgency, e.State, subject, f.Kind, likelyCause(&f), e.Since)
+		fmt.Fprintf(t, "%s\t%s\t%s\t%s\t%s\t%s\t%s\n", e.ID, e.Urgency, e.State, subject, f.Kind, f.Cause.ToTell(f.Kind), e.Since)
 	}
 	if len(s.Sources) > 0 {
 		fmt.Fprintln(t, "\nSOURCE\tKIND\tLINK\tLAST SIGN OF LIFE\tLAG\tCLOCK OFFSET\tPROBLEM")
@@ -144,14 +143,6 @@ func printStatus(w io.Writer, s *api.Status, rows []api.Loop, loops bool) error 
 	}
 	fmt.Fprintln(t)
 	return t.Flush()
-}
-
-// likelyCause is the cause of a finding; empty where its kind has none that could be told.
-func likelyCause(f *detect.Finding) detect.Cause {
-	if f.Cause == detect.Undetermined && !detect.HasCause(f.Kind) {
-		return detect.NoCause
-	}
-	return f.Cause
 }
 
 func wallTime(ms int64) string {

@@ -67,15 +67,14 @@ const emptyNumber = "Numbers have a decimal point; an empty pv, sp or op is of b
 
 const required = 5
 
-var columnHint = "hint: columns are " + columnNames(0, required) + " (required), " +
-	columnNames(required, len(columns)) + " (optional), separated by commas, in any order"
+var columnHint = "hint: columns are " + strings.Join(columnNames(0, required), ", ") + " (required), " +
+	strings.Join(columnNames(required, len(columns)), ", ") + " (optional), separated by commas, in any order"
 
-func columnNames(from, to int) string {
-	var names []string
+func columnNames(from, to int) (names []string) {
 	for _, c := range columns[from:to] {
 		names = append(names, c.Name)
 	}
-	return strings.Join(names, ", ")
+	return names
 }
 
 func flagColumns() (out []Column) {

@@ -31,7 +31,7 @@ const writeBytes = 64 << 10
 // NewWriter writes to w; the header goes first. Flush ends it.
 func NewWriter(w io.Writer, c Columns) *Writer {
 	wr := &Writer{w: w, c: c, buf: make([]byte, 0, writeBytes+1024)}
-	wr.buf = append(wr.buf, strings.ReplaceAll(columnNames(0, required), ", ", ",")...)
+	wr.buf = append(wr.buf, strings.Join(columnNames(0, required), ",")...)
 	for _, o := range []struct {
 		on    bool
 		names string

@@ -88,9 +88,14 @@ func (s *scenario) asCase() *Case {
 // family.
 func (s *scenario) trulyClipped(loop string, k detect.Kind) bool {
 	return slices.ContainsFunc(s.rigs, func(l *rig) bool {
-		return l.name == loop && (l.clipLongest > 2*l.recovery && (k == detect.OutputSaturation || k == detect.SustainedOffset) ||
-			l.endLongest > 60 && k == detect.PVAtRangeEnd)
+		return l.name == loop && ReallyAtEnd(k, l.clipLongest, l.recovery, l.endLongest)
 	})
+}
+
+// ReallyAtEnd: a finding of a kind is true of a loop whose OP sat at its limit for clip s, of
+// recoveries of so many s, and whose PV sat at an end of its range for end s.
+func ReallyAtEnd(k detect.Kind, clip, recovery, end float64) bool {
+	return clip > 2*recovery && (k == detect.OutputSaturation || k == detect.SustainedOffset) || end > 60 && k == detect.PVAtRangeEnd
 }
 
 // JudgeAll makes and judges n cases on all cores; the order is that of their numbers.

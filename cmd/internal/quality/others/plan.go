@@ -80,8 +80,7 @@ func (f *family) make(seed uint64, index int, days float64) *quality.Case {
 	}
 	c.Clipped = func(name string, k detect.Kind) bool {
 		return slices.ContainsFunc(p.loops, func(l *loop) bool {
-			return l.name == name && (l.clipMax > 2*l.recovery && (k == detect.OutputSaturation || k == detect.SustainedOffset) ||
-				l.edgeMax > 60 && k == detect.PVAtRangeEnd)
+			return l.name == name && quality.ReallyAtEnd(k, l.clipMax, l.recovery, l.edgeMax)
 		})
 	}
 	c.Forbid = p.forbid
