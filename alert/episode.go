@@ -95,6 +95,7 @@ type toldState struct {
 	Loops      int          `json:"loops,omitempty"`
 	Urgent     bool         `json:"urgent,omitempty"`
 	LimitAt    int64        `json:"limit_at,omitempty"` // predicted, data time
+	Reached    bool         `json:"reached,omitempty"`  // the limit was
 }
 
 // Open says whether any of its findings stands.

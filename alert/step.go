@@ -55,8 +55,8 @@ func (b *batch) step(e *Episode, event detect.Event, at int64, quiet, worse bool
 	e.Steps++
 	b.touch(e)
 	lead := e.Lead()
-	limit, _, _ := limitAt(&lead)
-	e.Told = toldState{LimitAt: limit, Event: event, Cause: lead.Cause, Kind: lead.Kind, Confidence: lead.Confidence, Strength: strength(&lead),
+	limit, reached, _ := limitOf(&lead)
+	e.Told = toldState{LimitAt: limit, Reached: reached, Event: event, Cause: lead.Cause, Kind: lead.Kind, Confidence: lead.Confidence, Strength: strength(&lead),
 		Loops: len(e.Loops()), Urgent: urgentSoon(&lead)}
 	s := step{Item: b.d.item(e), Wall: b.d.wall(), Quiet: quiet, Worse: worse}
 	s.Event, s.At = event, at
@@ -81,11 +81,15 @@ func (b *batch) dropSteps(id string) (n uint32, err error) {
 func (e *Episode) news() (news, worse, quiet bool) {
 	lead, told := e.Lead(), e.Told
 	s := strength(&lead)
-	doubled := s > 0 && s >= 2*told.Strength
-	urgent := urgentSoon(&lead) && !told.Urgent
+	at, reached, ok := limitOf(&lead)
+	// One that was told to grow, and when it meets a limit, is no news before it has: there
+	// it is, once.
+	foretold := lead.Kind == detect.GrowingOscillation && told.Kind == lead.Kind && told.LimitAt != 0 && !told.Reached
+	doubled := s > 0 && s >= 2*told.Strength && !foretold
+	urgent := urgentSoon(&lead) && !told.Urgent || foretold && reached
 	// A limit that comes in half the time told before is news: it may fall into
 	// the night now.
-	if at, _, ok := limitAt(&lead); ok && told.LimitAt != 0 && at-lead.At <= (told.LimitAt-lead.At)/2 {
+	if ok && !reached && told.LimitAt != 0 && at-lead.At <= (told.LimitAt-lead.At)/2 {
 		urgent = true
 	}
 	grew := len(e.Loops()) >= 2*max(told.Loops, 1)
@@ -122,6 +126,12 @@ func limitAt(f *detect.Finding) (at int64, what string, ok bool) {
 		}
 	}
 	return at, what, ok
+}
+
+// limitOf is the same without the words, and whether it is reached.
+func limitOf(f *detect.Finding) (at int64, reached, ok bool) {
+	at, _, ok = limitAt(f)
+	return at, ok && at <= f.At, ok
 }
 
 func limitWords(w string) string {

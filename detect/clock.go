@@ -18,7 +18,7 @@ type clock struct {
 	L, LL            float32 // sums of the lengths of single periods, less the nominal one, in periods
 	N, LN            uint16
 	K                uint16  // periods since T0
-	Was              float32 // ratio of the last full block, 0 none
+	Was              float32 // ratio of the full blocks, the newest weighing most, 0 none
 	Bank             uint8
 	On               bool
 }
@@ -26,7 +26,8 @@ type clock struct {
 const (
 	clockBlock = 60   // periods after which the line begins anew: no source is steady for ever
 	clockLeast = 16   // periods at least for a judgement
-	clockKeeps = 1.12 // ratio under which a cycle keeps time
+	clockKeeps = 1.12 // ratio under which a cycle of up to clockLong periods keeps time
+	clockLong  = 40   // periods that make chance small
 	// Jitter of a crossing, periods, that sampling and interpolation make by themselves:
 	// under it nothing is known.
 	clockBlur = 0.0015
@@ -94,7 +95,8 @@ func (c *clock) cross(t float64) {
 	c.YY += float32(y * y)
 	if c.K >= clockBlock {
 		n := clock{Bank: c.Bank, P0: c.period(), Last: t, On: true, T0: t, N: 1}
-		if r, jitter, ok := c.running(); ok && jitter > clockBlur {
+		if _, jitter, ok := c.running(); ok && jitter > clockBlur {
+			r, _ := c.known()
 			n.Was = float32(r)
 		}
 		*c = n
@@ -114,18 +116,41 @@ func (c *clock) running() (r, jitter float64, ok bool) {
 	return math.Sqrt(ms) / jitter, jitter, true
 }
 
+// known is the ratio as the running block has it along with those before, weighed (of its
+// logarithm) by their periods, and the periods of a block for which it stands; 0 unknown.
+// One block of chance may look like a beat, several do not.
+func (c *clock) known() (r, n float64) {
+	r, _, ok := c.running()
+	switch n = float64(c.N); {
+	case c.Was == 0 && !ok:
+		return 0, 0
+	case c.Was == 0:
+		return r, n
+	case !ok:
+		return float64(c.Was), clockBlock
+	}
+	f := n / (n + clockBlock)
+	return math.Pow(float64(c.Was), 1-f) * math.Pow(r, f), math.Pow(clockBlock, 1-f) * math.Pow(n, f)
+}
+
 // beat says whether the cycle keeps time, or surely does not; neither where it is
 // not known yet.
 func (c *clock) beat() (keeps, strays bool) {
-	r, jitter, ok := c.running()
-	n := float64(c.N)
-	if c.Was > 0 && (!ok || n < clockBlock/2) {
-		r, n, jitter = float64(c.Was), clockBlock, 1
-	} else if !ok {
+	r, n := c.known()
+	if n == 0 {
 		return false, false
 	}
-	// Between the two laws, on the scale of ratios, lies the root of the second.
-	return r < clockKeeps && jitter > clockBlur, r > math.Sqrt(math.Sqrt(2*n/15))
+	_, jitter, ok := c.running()
+	// Between the two laws, on the scale of ratios, lies the root of the second. That of a
+	// random walk grows with the root of the periods, and so does what it stays under by chance.
+	keeps = r < clockKeeps*math.Sqrt(max(n/clockLong, 1)) && !(ok && jitter <= clockBlur)
+	return keeps, r > math.Sqrt(math.Sqrt(2*n/15))
+}
+
+// plain: the ratio is that of a clock without regard to how many periods it rests on.
+func (c *clock) plain() bool {
+	r, n := c.known()
+	return n > 0 && r < clockKeeps
 }
 
 // ringJitter is the jitter of a crossing, periods, that noise and loads do not give a loop
@@ -150,7 +175,7 @@ func (c *clock) judged() bool {
 
 // long says whether the judgement rests on so many periods that chance is out: a random
 // walk of 40 stays under the limit of a clock in fewer than one of a hundred cases.
-func (c *clock) long() bool { return c.Was > 0 || c.N >= 40 }
+func (c *clock) long() bool { return c.Was > 0 || c.N >= clockLong }
 
 // exact: the crossings lie on the line as well as sampling can show.
 func (c *clock) exact() bool {

@@ -27,7 +27,7 @@ func TestEpisodeDoesNotFlap(t *testing.T) {
 			if i%2 == 1 {
 				c = x.b
 			}
-			w.settle(kOffset, float64(i), &c, false)
+			w.settle(kOffset, float64(i), &c, false, &openFinding{})
 		}
 		if n < 2 || n > 10 {
 			t.Errorf("%s: said %d times", name, n)

@@ -66,6 +66,13 @@ func (w *Watch) explainCycle(l int) (out []string) {
 			out = append(out, fmt.Sprintf("  is it a cycle beyond doubt, over %d half-cycles: evidence %.1f (asked %.1f), ±%.3g %% (asked %.3g)", n, plain, certain*w.strict, amp, large))
 		}
 	}
+	if k, rt := &w.s.Track, 0.0; size > 0 && k.On && int(k.Bank) == l && k.Looks >= 2 {
+		rt, _ = w.resetS()
+		if q, plain := b.evenest(l, largeInFew(size, sigma)); q.n > 0 && st.period*w.levelS(l) < ownSlowest*rt {
+			out = append(out, fmt.Sprintf("  is it one that loads outgrow, over %d half-cycles: evidence %.1f (asked %.1f), length %.1f times its scatter (asked %.1f), ±%.3g %% (asked %.3g), e rests for %.2f of the time (asked under %.2f)",
+				q.n, plain, aloneCertain*w.strict, q.regular, plainBeat, q.amp, aloneLarge(sigma), k.Rests, aloneRests))
+		}
+	}
 	if q, ok := b.stat(l, steadyHalves); ok {
 		r := steadyNew
 		if w.usualKnown(b) && b.Usual.N >= keptUsual {
@@ -75,7 +82,6 @@ func (w *Watch) explainCycle(l int) (out []string) {
 			q.n, q.regular, r.regular*w.strict, q.least, r.least, q.amp, r.size(sigma, usual)))
 	}
 	out = append(out, w.explainKept(l)...)
-	out = append(out, w.explainSlips(l, sigma)...)
 	return append(out, w.explainViolent(l)...)
 }
 
@@ -96,21 +102,6 @@ func (w *Watch) explainKept(l int) []string {
 	}
 	return []string{fmt.Sprintf("  does it last, over %d half-cycles: ±%.3g %% (asked %.3g), middle lengths %.1f times their scatter (asked %.1f)%s, at %d half-cycles more than not (asked %d)",
 		q.n, q.amp, a.size, b.middleRegular(), a.regular, even, min(b.Kept, keptRaise), keptRaise)}
-}
-
-// explainSlips shows whether the shape speaks of sticking that leaves cycles out.
-func (w *Watch) explainSlips(l int, sigma float64) []string {
-	b, k := &w.s.Cycles[l], &w.s.Track
-	q, ok := b.stat(l, slipHalves)
-	if !ok || !k.On || int(k.Bank) != l || k.Looks == 0 {
-		return nil
-	}
-	sh, size := w.shapes(), slipAsked.size(sigma, 0)
-	if w.usualKnown(b) {
-		size = slipAsked.size(sigma, b.Usual.Value())
-	}
-	return []string{fmt.Sprintf("  does a valve slip now and then, over %d half-cycles: length %.1f times its scatter (asked %.1f), smallest peak %.2f of the mean (asked %.1f), ±%.3g %% (asked %.3g); shape over %d looks (asked %d): index %.2f (asked %.2f), third harmonic of OP %.2f (asked under %.2f), PV in its busiest fifth %.2f of its travel (asked %.2f)",
-		q.n, q.regular, slipAsked.regular, q.least, slipAsked.least, q.amp, size, sh.looks, slipLooks, w.stickIndex(sh), slipShape, sh.h3OP, slipThird, sh.stick, slipJumps)}
 }
 
 // explainViolent shows whether a slow swing outgrows itself each time.

@@ -123,41 +123,6 @@ func TestExplainOfAViolentSwing(t *testing.T) {
 	}
 }
 
-// And that of a valve that slips now and then, which the shape of the cycle tells.
-func TestExplainOfASlippingValve(t *testing.T) {
-	for _, x := range []struct {
-		name              string
-		index, third, fif float64
-		peak              float64
-		looks             uint32
-		want              bool
-	}{
-		{"a triangle of OP, jumps of PV", 0.8, 0.12, 0.6, 1, 8, true},
-		{"a sine", 0.4, 0.02, 0.6, 1, 8, false},
-		{"a square", 0.8, 0.33, 0.6, 1, 8, false},
-		{"PV moves steadily", 0.8, 0.12, 0.25, 1, 8, false},
-		{"small", 0.8, 0.12, 0.6, 0.4, 8, false},
-		{"hardly looked at", 0.8, 0.12, 0.6, 1, 2, false},
-	} {
-		slip := func(i int) float64 { return []float64{8, 9, 14, 4}[i%4] } // lengths that no other rule takes for a cycle
-		w, _ := swingWatch(slip, even(x.peak, 12))
-		k := &w.s.Track
-		*k = track{On: true, Bank: 2, Looks: x.looks, PVSwing: 2}
-		wt := k.weight()
-		k.SinSum, k.TriSum, k.H3, k.Stick = x.index*wt, (1-x.index)*wt, x.third*wt, x.fif*wt
-		w.s.Motion.LawSeen = true
-		b := &w.s.Cycles[2]
-		st, _ := b.stat(2, 8)
-		w.in.t = 1e6
-		w.judgeSustained(2, b, st)
-		if got := w.s.Osc.Sus; got != x.want {
-			t.Fatalf("%s: the rule holds: %v", x.name, got)
-		}
-		*k = track{On: true, Bank: 2, Looks: x.looks, PVSwing: 2, SinSum: x.index * wt, TriSum: (1 - x.index) * wt, H3: x.third * wt, Stick: x.fif * wt}
-		shows(t, x.name, lineWith(w.explainSlips(2, 0.1), "slip"), x.want, 7)
-	}
-}
-
 // What was not read is said to be so, and why: a loop that does not move is another matter
 // than one that moves by another law.
 func TestExplainSaysWhatWasNotRead(t *testing.T) {

@@ -49,7 +49,7 @@ func (s *shared) Hear(f *Finding, emit func(*Finding)) {
 			x.Told = ""
 			s.m.Elements[f.Loop] = x
 		}
-		if g := s.follows(f.Loop); g != nil && f.Cause == ValveDeadBand {
+		if g := s.with(f.Loop); g != nil && f.Cause == ValveDeadBand {
 			f = asFollower(f, g)
 		}
 	case f.Kind != ValveStickingKind:
@@ -65,6 +65,9 @@ func (s *shared) Hear(f *Finding, emit func(*Finding)) {
 		g := s.follows(f.Loop)
 		x.learn(g)
 		if !was {
+			if g == nil {
+				g = s.with(f.Loop)
+			}
 			x.Told = f.Kind
 			if g != nil {
 				x.Told = SustainedOscillation
@@ -102,6 +105,11 @@ func (s *shared) alone(x *ownElement) bool {
 	return true
 }
 
+// root: the loop is the root of a group.
+func (s *shared) root(name string) bool {
+	return slices.ContainsFunc(s.m.Groups, func(g sharedGroup) bool { return g.Root == name })
+}
+
 // rejudge takes back what was said before the groups were known as they are now. What a loop
 // said of its element stands again where it is the root itself, or where its group is over,
 // never had one, and this loop alone says so.
@@ -116,7 +124,7 @@ func (s *shared) rejudge(end int64, emit func(*Finding)) {
 		switch {
 		case x.Told == ValveStickingKind && g != nil:
 			now = *asFollower(&now, g)
-		case x.Told == SustainedOscillation && g == nil && (x.Root == "" && s.alone(&x) || slices.ContainsFunc(s.m.Groups, func(g sharedGroup) bool { return g.Root == name })):
+		case x.Told == SustainedOscillation && (g == nil && s.root(name) || s.with(name) == nil && x.Root == "" && s.alone(&x)):
 		default:
 			continue
 		}
@@ -157,7 +165,14 @@ func asFollower(f *Finding, g *sharedGroup) *Finding {
 	if v, ok := f.Measures.Get("period_s"); ok {
 		period = v
 	}
-	what := "cycles" + part(" every %s", period, duration) + fmt.Sprintf(" with %d loops of a group", len(g.Loops)-1)
+	with := fmt.Sprintf("%d loops of a group", len(g.Loops)-1)
+	if len(g.Loops) == 2 {
+		with = g.Loops[0]
+		if with == f.Loop {
+			with = g.Loops[1]
+		}
+	}
+	what := "cycles" + part(" every %s", period, duration) + " with " + with
 	c.Text, c.TextShort = "PV "+what+". Its output looks like that of a sticking final element, which the cycle of another loop can make it, too. ", f.Loop+": "+what
 	if g.Root == "" {
 		c.Text += "First judge the group: no root stands out yet."

@@ -136,3 +136,45 @@ func TestGroupSaysWhatTheWokenNeeds(t *testing.T) {
 		t.Errorf("%q", f.TextShort)
 	}
 }
+
+// Loops of a group that go on cycling at nearly its period, but out of step, are one trouble
+// still, for a day; once they rest it is over.
+func TestGroupOutOfStep(t *testing.T) {
+	apart := func(from, to, rest int, period float64) func(slot, loop int, e *detect.Evidence) {
+		return func(slot, loop int, e *detect.Evidence) {
+			e.Live = slot < rest
+			if loop == 0 && slot >= from && slot < to {
+				e.PeriodS *= period
+				for i := range e.Cross {
+					e.Cross[i] += 13 * float64(i*i%7)
+				}
+			}
+		}
+	}
+	for name, x := range map[string]struct {
+		slots, rest int
+		period      float64
+		raised      int
+		over        bool
+	}{
+		"out of step for ten hours": {140, 1000, 1.4, 1, false},
+		"another pace":              {60, 1000, 3, 1, true},
+		"at rest":                   {60, 50, 1.4, 1, true},
+		"out of step for good":      {320, 1000, 1.4, 1, true},
+	} {
+		to := 130
+		if x.over {
+			to = 1000
+		}
+		raised, over := 0, false
+		for _, f := range groupSite([]string{"FIC-1", "FIC-2"}, x.slots, apart(10, to, x.rest, x.period)) {
+			if f.Event == detect.Raised {
+				raised++
+			}
+			over = f.Event == detect.Cleared
+		}
+		if raised != x.raised || over != x.over {
+			t.Errorf("%s: raised %d times, over: %v", name, raised, over)
+		}
+	}
+}

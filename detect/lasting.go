@@ -82,7 +82,7 @@ func (w *Watch) keptAsked(level int, period float64) (a lasting, ok bool) {
 // P = 2 pi sqrt(Ti/(k Kc)) its damping sqrt(k Kc Ti)/2 is pi Ti/P (Skogestad 2003 for
 // the slow swing of a small k Kc Ti). Within a gap the gain is low by design.
 func (w *Watch) loosened(period float64) bool {
-	kc, ti, ok := w.tuning(0, 0)
+	kc, ti, ok := w.served()
 	if !ok || !(ti > 0) || period < keptSlack*ti || w.loop.Process == configs.SelfRegulating || w.loop.Duty == configs.GapDuty {
 		return false
 	}

@@ -130,16 +130,19 @@ func TestLoosened(t *testing.T) {
 		gain, periods float64 // in service, of that listed; of the swing, reset times
 		process       configs.Process
 		was, want     bool
+		sample        float64 // s
 	}{
 		{name: "a quarter of the gain", gain: 0.25, periods: 10, process: configs.Integrating, want: true},
 		{name: "half of the gain", gain: 0.5, periods: 10, process: configs.Integrating},
 		{name: "faster", gain: 0.25, periods: 6, process: configs.Integrating},
 		{name: "not integrating", gain: 0.25, periods: 10, process: configs.SelfRegulating},
 		{name: "as set up, but once more", gain: 1, periods: 10, process: configs.Integrating, was: true, want: true},
+		{name: "not read so coarsely", gain: 0.25, periods: 10, process: configs.Integrating, sample: 400},
 	} {
 		l := configs.NewLoop("LIC-312")
 		l.GainPct, l.Process = 2, x.process
 		w := New(l, 0, Options{})
+		w.s.Grid.DT = x.sample
 		w.s.Fits[0].Last = fit{Kc: float32(2 * x.gain), Ti: 600, R2: 0.99, X: 1000, At: 1}
 		if x.was {
 			w.s.Change = tuneChange{Seen: 1, What: 1, GainWas: 8, GainNow: 2}

@@ -16,18 +16,22 @@ func TestDayToldLate(t *testing.T) {
 	const day = 86400.0
 	for name, x := range map[string]struct {
 		older, newest float64 // s, half-cycles
+		reset         float64 // s
 		want          bool
 	}{
-		"as long as ever":      {0.5 * day, 0.5 * day, true},
-		"the newest stray":     {0.53 * day, 0.41 * day, true},
-		"the newest find it":   {0.6 * day, 0.5 * day, true},
-		"another beat":         {0.36 * day, 0.36 * day, false},
-		"another, growing old": {0.4 * day, 0.36 * day, false},
+		"as long as ever":           {0.5 * day, 0.5 * day, 5000, true},
+		"the newest stray":          {0.53 * day, 0.41 * day, 5000, true},
+		"the newest find it":        {0.6 * day, 0.5 * day, 5000, true},
+		"another beat":              {0.36 * day, 0.36 * day, 5000, false},
+		"a slow loop, to the day":   {0.5 * day, 0.5 * day, 30000, true},
+		"a slow loop, nearly":       {0.48 * day, 0.48 * day, 30000, false},
+		"a loop as slow as its own": {0.5 * day, 0.5 * day, 50000, false},
+		"another, growing old":      {0.4 * day, 0.36 * day, 5000, false},
 	} {
 		t.Run(name, func(t *testing.T) {
 			const level = 6
 			l := configs.NewLoop("LIC-310")
-			l.IdealReset = 5000
+			l.IdealReset = x.reset
 			w := New(l, 0, Options{})
 			w.s.Grid.DT, w.in.dt, w.in.t = 60, 60, 30*day
 			w.s.Motion.first()

@@ -99,7 +99,7 @@ func (w *Watch) rest(d *stand) {
 		return
 	}
 	p := &w.s.OffPast
-	if d.Calm += w.in.dt; !w.rests(d) || d == &p.Sat && w.visits() {
+	if d.Calm += w.in.dt; !w.rests(d) || d == &p.Sat && w.visits() || w.unmended(d) {
 		return
 	}
 	if d == &p.Offset {
@@ -108,6 +108,26 @@ func (w *Watch) rest(d *stand) {
 	}
 	*d = stand{}
 }
+
+// unmended: PV is back, but by its load: an integral that is missing or an element that does
+// not follow is missing there as well. It is over once it is seen to act, or after a shift.
+func (w *Watch) unmended(d *stand) bool {
+	if d.Calm > shiftS {
+		return false
+	}
+	switch causes[d.Cause] {
+	case FinalElementNotFollowing:
+		return w.deaf()
+	case IntegralMissing:
+		_, ti, read := w.tuning(w.in.t-d.Calm, 0)
+		return !(read && ti > 0 && ti < noTi)
+	}
+	return false
+}
+
+// shiftS is a shift, s: for longer nobody is told that PV is off which is not (common practice,
+// no source).
+const shiftS = 8 * 3600.0
 
 // begin is that of a run.
 func (w *Watch) begin(sign float64) {
@@ -249,7 +269,7 @@ func (w *Watch) offsetWaitS() float64 {
 // they take to recover, by plan or by an upset that passes, but not for a shift; and not
 // where PV answers nothing.
 func (w *Watch) limitWaitS() float64 {
-	longest := 8 * 3600.0
+	longest := shiftS
 	if w.s.Off.NotFollow || w.deaf() {
 		longest = 2 * 3600
 	}

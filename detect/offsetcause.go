@@ -167,11 +167,12 @@ func (w *Watch) integralActs(t *travel) (c Cause, conf float64, known, acts bool
 	return Undetermined, 0.6, true, true
 }
 
-// standsMissing: an integral that was shown to be missing in this run is missing until the
-// contrary is shown: that OP rests with an e that rests says nothing new.
+// standsMissing: an integral that was shown to be missing is missing until the contrary is
+// shown: that OP rests with an e that rests says nothing new, nor does a later run that is not
+// being worked off.
 func (w *Watch) standsMissing(t *travel) bool {
 	p := &w.s.OffPast.Offset
-	if !p.On || p.Cause != causeIndex(IntegralMissing) || p.Since != w.s.Off.T0 {
+	if !p.On || p.Cause != causeIndex(IntegralMissing) || p.Since != w.s.Off.T0 && math.Abs(t.rate) < 0.6*math.Abs(t.before) {
 		return false
 	}
 	_, _, known, acts := w.integralActs(t)

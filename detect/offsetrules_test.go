@@ -257,7 +257,7 @@ func TestOffsetThatCameBack(t *testing.T) {
 	for i := range after {
 		from := w.s.Through
 		after[i] = saidAfter(feed(w, 9000, wandering(1, 1e12)), SustainedOffset, from)
-		if fs := feed(w, 6*3600, func(t float64) (float64, float64) { return 0, 35 + 0.05*math.Sin(t/40) }); after[i] > 0 && (len(fs) == 0 || fs[0].Event != Cleared) {
+		if fs := feed(w, 10*3600, func(t float64) (float64, float64) { return 0, 35 + 0.05*math.Sin(t/40) }); after[i] > 0 && (len(fs) == 0 || fs[0].Event != Cleared) {
 			t.Fatal("PV is back and the finding stands")
 		}
 	}
@@ -470,7 +470,12 @@ func TestSlowForWantOfTheIntegral(t *testing.T) {
 	}
 	w.s.Recov.Slow = false
 	feed(w, 1.1*86400, func(t float64) (float64, float64) { return 0, 35 + 0.05*math.Sin(t/40) })
+	if c := slow(); c != NoCause {
+		t.Errorf("days later, and no integral was read: said %q", c)
+	}
+	w.s.Recov.Slow = false
+	w.s.Fits[3].Last = fit{Kc: 1, Ti: 300, R2: 0.99, X: 100, T0: momentOf(w.in.t - 3600), At: momentOf(w.in.t)}
 	if c := slow(); c != ResetTooLong {
-		t.Errorf("when somebody can have seen to it: said %q", c)
+		t.Errorf("an integral is read again: said %q", c)
 	}
 }

@@ -91,6 +91,9 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 	byChange := false
 	if okb && ok && ti > 0 && t0 > 0 {
 		rk, rt = math.Abs(kc)/k0, ti/t0
+		if rt < 1 && rt > 1.0/lateFactor && phi < w.lateLag(t0, p) {
+			rt = 1
+		}
 	}
 	slack := w.slack(rk, rt, phi, p) || ok && w.loop.GainPct > 0 && w.loop.IdealReset > 0 && w.slack(math.Abs(kc)/w.loop.GainPct, ti/w.loop.IdealReset, phi, p)
 	// Between the bands what changed before the growth decides.
@@ -111,6 +114,15 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 			byPhi, also = ResetTooShort, [2]Cause{GainTooHigh}
 		}
 	}
+	plain := phi < phiGain-4 || phi > phiReset+5
+	if rk == 0 && !plain && byPhi != GainTooLow {
+		// At the edge of the bands, with nothing known of the tuning before.
+		byPhi, also = Undetermined, [2]Cause{GainTooHigh, ResetTooShort}
+	}
+	kept := w.keptTuning(rk, rt, p)
+	if kept && byPhi != GainTooLow {
+		byPhi, also = GainTooHigh, [2]Cause{ResetTooShort, ProcessNonlinear}
+	}
 	if w.loop.Process == configs.Runaway && byPhi == GainTooHigh {
 		// A runaway process also cycles with too little gain: no direction is given.
 		byPhi, also = Undetermined, [2]Cause{GainTooHigh, GainTooLow}
@@ -125,9 +137,10 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 	sh := w.shapes()
 	si := w.stickIndex(sh)
 	hidden := math.Atan(2*math.Pi*w.lag()/p) * 180 / math.Pi // a lag that was read along with the law is no disagreement
-	if d := math.Abs(sh.phiDeg - phi - hidden); sh.looks >= 3 && !slack && o.Grow && d > 15 && byPhi != Undetermined {
-		// Directly read and fitted lag disagree: a hidden filter or late OP; the fit
-		// cannot be trusted to name a knob.
+	if d := sh.phiDeg - phi - hidden; sh.looks >= 3 && !slack && o.Grow && (d > 15 && byPhi != ResetTooShort || d < -15 && byPhi != GainTooHigh) && byPhi != Undetermined {
+		// Directly read and fitted lag disagree: a hidden filter or late OP; the fit cannot be
+		// trusted to name a knob. One that is the more so by what is read directly, as with
+		// a derivative, stands.
 		byPhi, also = Undetermined, [2]Cause{GainTooHigh, ResetTooShort}
 	}
 	// Where both moved alike the integral is as it was, and the gain not seen beside it.
@@ -138,14 +151,14 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 		early := o.Evals < 25 && o.Growth > 1.01
 		// A rate limit or the ends of OP stretch the cycle, and with it the lag.
 		stretched := o.GrowCause != 0 && p > stretch*float64(o.GrowP)
-		sure := (phi < phiGain-4 || phi > phiReset+5) && o.Evals < 120 && !stretched && w.in.t-s.Tune.LimitAt > 6*p
+		sure := plain && o.Evals < 120 && !stretched && w.in.t-s.Tune.LimitAt > 6*p
 		if o.ByChange && !byChange || !byChange && o.Evals < 4 && o.GrowCause == 0 && phi > 15 && phi < 60 {
 			ok = false // named once by what changed, or too early to name
 		}
-		if o.GrowCause == 0 && o.Sus && o.Evals >= 60 && !byChange {
+		if o.GrowCause == 0 && o.Sus && o.Evals >= 60 && !byChange && o.Regular < 2*ownBeat {
 			ok = false // an irregular cycle that has long been there also swells at times
 		}
-		uneven := !byChange && !changed && !slack && b.scatter(min(int(o.Evals)+8, int(b.N))) > unevenGrowth
+		uneven := !byChange && !changed && !slack && !w.violent(int(o.Bank), b) && b.scatter(min(int(o.Evals)+8, int(b.N))) > unevenGrowth
 		if uneven {
 			ok = false // what chance drives grows for a while, too
 		}
@@ -161,6 +174,8 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 				conf = 0.5
 			case byPhi == GainTooLow && !slack:
 				conf = min(conf, 0.85)
+			case kept && !(phi < phiGain):
+				conf = keptConfidence
 			}
 			o.setCause(byPhi, also, conf)
 		} else if o.GrowCause == 0 {
@@ -187,30 +202,6 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 		w.judgeSustainedCause(b, phi, byPhi, also, si, sh, rk, rt, changed, slack)
 	}
 }
-
-// resetCut: plainly the reset was shortened, and only it; lk and lt are the ln of what became
-// of gain and reset.
-func resetCut(lk, lt, phi float64) bool {
-	return lt < -0.7 && math.Abs(lk) < 0.25 && !(phi < phiNoReset)
-}
-
-// slack: the gain fell, and the loop swings as an integrating one does whose product
-// k Kc Ti has become too small: s^2 + k Kc s + k Kc/Ti has the damping sqrt(k Kc Ti)/2 and
-// the period 2 pi sqrt(Ti/(k Kc)), the lag of OP at it 90 degrees less atan of twice the damping
-// (Skogestad 2003). The product is taken to have been 4 before, as its published
-// rules have it; rk and rt are what became of gain and reset. A self-regulating process
-// with less gain is only better damped.
-func (w *Watch) slack(rk, rt, phi, period float64) bool {
-	if w.loop.Process == configs.SelfRegulating || !(rk > 0 && rk < 1/changeRatio && rk < rt && rk*rt < 0.3) || !(phi > phiValve) {
-		return false
-	}
-	natural := math.Pi * w.s.Osc.Ti / math.Sqrt(rk*rt)
-	return math.Abs(math.Log(period/natural)) < slackNear
-}
-
-// slackNear is how near, ln, the period must be to the natural one: the product before may
-// have been a fifth of what is taken or five times it.
-const slackNear = 0.8
 
 func phiConfidence(phi float64, ok bool) float64 {
 	if !ok || math.IsNaN(phi) {
@@ -338,11 +329,22 @@ const steady = 0.15
 
 // peakedLeast is the third harmonic of e in phase with the first, over it, above which
 // the corners of a cycle are those of a valve: 1/9 for a triangle; a linear loop, ringing
-// or driven by a sine, stays under 0.02.
-const peakedLeast = 0.03
+// or driven by a sine, stays under peakedSine.
+const (
+	peakedLeast = 0.03
+	peakedSine  = 0.02
+)
 
-// squareLeast is the same of a cycle that is plainly no sine.
-const squareLeast = 0.1
+// peakedMost is the most of it that friction makes: that of a triangle, and how the mean over
+// some cycles scatters.
+const peakedMost = 1./9 + 0.02
+
+// squareLeast is the same of a cycle that is plainly no sine; of spikes, four times the
+// corners of a triangle, no valve and no loop is the maker.
+const (
+	squareLeast = 0.1
+	spikesLeast = 4 * squareLeast
+)
 
 func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also [2]Cause, si float64, sh shapes, rk, rt float64, changed, slack bool) {
 	s := &w.s
@@ -362,7 +364,7 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	if causes[o.Cause] == ValveDeadBand {
 		least, corners = 0.52, 0.7*peakedLeast
 	}
-	play := w.loop.Process != configs.SelfRegulating && strays && sh.looks >= shapeLooks && si > least && sh.peaked > corners && phi > phiDeadBand && phi < phiDeadBandMost
+	play := w.loop.Process != configs.SelfRegulating && strays && sh.looks >= shapeLooks && si > least && sh.peaked > corners && sh.peaked < peakedMost && phi > phiDeadBand && phi < phiDeadBandMost
 	clipped := s.Tune.LimitAt > 0 && w.in.t-s.Tune.LimitAt < 1.5*o.P // a cycle between the limits of OP is as even as a clock's
 	unchanged := near(rk, 1) && near(rt, 1)
 	bolder := changed || w.bolder()
@@ -372,10 +374,15 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	}
 	// What a drive makes of a sound loop is there at once and stays of its size; an instability
 	// climbs, and what then holds it, a rate limit or the ends of a valve, may give it a beat.
-	swelled := o.Climb > atOnce && (o.Climb != unseen || move > evenSize)
+	swelled := o.Climb > atOnce && move > evenSize
 	// There at once, even ever since, and yet without a beat of its own: an instability climbs
 	// to its size and keeps it only where something clips, which leaves its crossings no jitter.
-	drive := o.Climb <= atOnce && q.regular > evenBeat && spread < steady && move < evenSize && sh.looks >= shapeLooks && s.Clock.jitters(causes[o.Cause] == OutsideDisturbance)
+	drive := o.Climb <= atOnce && q.regular > evenBeat && spread < steady && move < evenSize && sh.looks >= shapeLooks
+	// No tuning of the loop's own makes a swing quite even from its first cycle on, so that a
+	// change read along with it is rather an error of reading.
+	doubt := drive && changed && !w.bolder() && !clipped && spread < plainSteady && move < plainEven
+	drive = drive && s.Clock.jitters(causes[o.Cause] == OutsideDisturbance)
+	retuned := integrating && !(near(rk, 1) && rt > 1/1.25) // a longer reset makes no loop swing
 	follows := s.Motion.PosN > 300 && s.Motion.Astray < 0.3 // the position shows that the element does
 	switch {
 	case o.GrowCause != 0 && causes[o.GrowCause] != Undetermined:
@@ -383,7 +390,9 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	case lately && !stuckBefore:
 		o.setCause(causes[o.LastCause], also, 0.8)
 		o.LastAt, o.LastP = w.in.t, o.P
-	case o.waxes() && !changed && !slack:
+	case sh.looks >= shapeLooks && sh.peaked > spikesLeast:
+		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.85)
+	case o.waxes() && !changed && !slack && !(integrating && (tri || play)) && !(keeps && s.Clock.long()): // of what chance drives PV has no corners
 		o.setCause(Undetermined, open, 0.5)
 	case slack && !(keeps && s.Clock.long()):
 		o.setCause(GainTooLow, [2]Cause{ResetTooShort}, 0.92)
@@ -391,15 +400,15 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		// A beat speaks for outside, a tuning changed for the loop itself; a swing that
 		// loads keep up wanders in size, and its phase strays slowly when it rings long.
 		o.setCause(Undetermined, open, 0.5)
-	case keeps && tri && !s.Clock.long():
-		// Shape against a beat that is young.
+	case keeps && tri && !(s.Clock.long() && s.Clock.plain()):
+		// Shape against a beat that is young, or blurred.
 		if !o.Sticking {
 			o.setCause(Undetermined, [2]Cause{OutsideDisturbance, ValveSticking}, 0.5)
 		}
 	case keeps:
 		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.93)
-	case !strays && s.Clock.judged() && math.Abs(sh.peaked) > squareLeast && sh.siOP < 0.55:
-		// A linear loop alone makes a sine, and its valve makes OP a triangle and strays:
+	case !strays && !o.Grow && !clipped && s.Clock.judged() && math.Abs(sh.peaked) > squareLeast && sh.siOP < 0.55:
+		// A linear loop alone makes a sine off the ends of OP, and its valve makes OP a triangle and strays:
 		// what is left for spikes or steps is a drive that has them.
 		o.setCause(OutsideDisturbance, [2]Cause{ValveSticking}, 0.85)
 	case s.Clock.judged() && sh.peaked > 2*squareLeast && sh.siOP < 0.55:
@@ -407,7 +416,7 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		o.setCause(OutsideDisturbance, [2]Cause{ValveSticking}, 0.8)
 	case sh.looks == 0 && o.Cause != 0:
 		// A gap or a spell in manual took the record of the shape: nothing new is known.
-	case play && !changed && !follows:
+	case play && !changed && !follows && (integrating || !o.Sticking): // play cycles only beside two integrals
 		o.setCause(ValveDeadBand, [2]Cause{ValveSticking}, 0.8)
 	case (tri || o.Sticking) && !integrating && !changed && smoothed(phi, sh, o.Sticking):
 		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, ValveSticking}, 0.6)
@@ -430,7 +439,7 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		o.setCause(Undetermined, [2]Cause{ValveSticking, ProcessNonlinear}, 0.6)
 	case tri && !changed && w.propOnlySeen():
 		o.setCause(Undetermined, [2]Cause{ValveSticking, OutsideDisturbance}, 0.5)
-	case drive && (unchanged || !integrating) && !bolder && !clipped && sh.siOP < mostSine && (w.loop.Process == configs.SelfRegulating || sh.siPV < mostSine):
+	case drive && !retuned && !bolder && !clipped && w.cornerless(sh):
 		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.8)
 	case integrating && phi > phiValve && si < 0.78 && !changed && q.regular > 2*ownBeat:
 		// With the product k Kc Ti too small alone the swing would lose four fifths a cycle
@@ -440,16 +449,22 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		// A slow swing far beyond the reset time: an integrating loop with too little
 		// gain is poorly damped for any reset (Skogestad 2003).
 		o.setCause(GainTooLow, [2]Cause{ResetTooShort}, 0.75)
+	case integrating && tri && !changed && sh.peaked > peakedMost:
+		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, ValveSticking}, 0.6)
 	case integrating && tri && !changed && phi > phiDeadBand && phi < phiValve:
 		o.setCause(Undetermined, [2]Cause{ValveSticking, ValveDeadBand}, 0.6)
 	case integrating && tri && !changed:
 		o.setCause(ValveSticking, [2]Cause{ValveDeadBand, OutsideDisturbance}, 0.8)
+	case tri && !changed && !(phi > phiIntegral) && sh.siPV > shapeStuck && q.regular > 2*evenBeat && sh.looks >= shapeLooks:
+		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, ValveSticking}, 0.6)
 	case tri && !changed && !(phi > phiIntegral):
 		// OP and PV are of one shape, so only one of them speaks: a slow process makes a
 		// triangle of the steps of its own valve as of those of another loop's.
 		o.setCause(ValveSticking, [2]Cause{OutsideDisturbance, ProcessNonlinear}, 0.8)
 	case tri && !changed:
 		o.setCause(ValveSticking, [2]Cause{ProcessNonlinear}, min(0.95, 0.86+0.6*(si-0.64)))
+	case doubt:
+		o.setCause(Undetermined, open, 0.5)
 	case changed && (byPhi == ResetTooShort && rt < 0.8 || byPhi == GainTooHigh && rk > 1.25):
 		o.setCause(byPhi, also, 0.85)
 	case changed:

@@ -109,10 +109,15 @@ func TestDrivenFromOutside(t *testing.T) {
 		{"climbed to its size", 0, 1.5, 5, 1, 0.3, jittering(), Undetermined},
 		{"how it began was not seen", 0, 1.5, unseen, 1, 0.3, jittering(), Undetermined},
 		{"without jitter", 0, 1.5, 1, 1, 0.3, ticking(), Undetermined},
-		{"corners in OP", 0, 1.5, 1, 1, 0.58, jittering(), Undetermined},
-		{"gain raised before", 0, 1.5, 1, 3, 0.3, jittering(), Undetermined},
+		{"corners in OP", 0.025, 1.5, 1, 1, 0.58, jittering(), Undetermined},
+		{"a sine blurred by noise", 0.01, 1.5, 1, 1, 0.58, jittering(), OutsideDisturbance},
+		{"spikes of any shape of OP", 0.5, 1.9, 5, 1, 0.65, clock{}, OutsideDisturbance},
+		{"half as sharp", 0.25, 1.9, 5, 1, 0.65, clock{}, Undetermined},
+		{"gain raised before", 0, 1.5, 1, 3, 0.3, jittering(), ResetTooShort},
+		{"gain read higher in a swing quite even from the first", 0, 1.1, 1, 3, 0.3, jittering(), Undetermined},
 	} {
 		w := New(configs.NewLoop("TIC-315"), 0, Options{})
+		w.loop.Process = configs.SelfRegulating
 		s := &w.s
 		s.Clock = c.beat
 		k := &s.Track
@@ -124,7 +129,7 @@ func TestDrivenFromOutside(t *testing.T) {
 		}
 		s.Osc = oscState{Sus: true, P: 100, AmpHi: c.size, AmpLo: 1, Evals: 100, Climb: c.climb}
 		for range 4 {
-			w.judgeSustainedCause(b, 50, ResetTooShort, [2]Cause{GainTooHigh}, c.sine, w.shapes(), c.rk, min(c.rk, 1), c.rk > 1, false)
+			w.judgeSustainedCause(b, 50, ResetTooShort, [2]Cause{GainTooHigh}, c.sine, w.shapes(), c.rk, min(c.rk, 1)/max(c.rk, 1), c.rk > 1, false)
 		}
 		if got := causes[s.Osc.Cause]; got != c.want {
 			t.Errorf("%s: %s, want %s", c.what, got, c.want)

@@ -1,6 +1,9 @@
 package detect
 
-import "math"
+import (
+	"math"
+	"slices"
+)
 
 // oscState is the loop's live oscillation, if any.
 type oscState struct {
@@ -36,6 +39,7 @@ type oscState struct {
 	Regular   float64
 	// The last growing episode, in case it comes back as a sustained one.
 	LastCause     uint8
+	Hidden        moment // since when it goes on but is not claimed; 0 it is
 	LastAt, LastP float64
 }
 
@@ -78,7 +82,7 @@ func (w *Watch) judgeCycles(level int, b *cycleBank) {
 		return // irregular: nothing to judge yet
 	}
 	own := o.Grow || o.Sus
-	if !own && st.regular > 3 && st.period > bankLowP && st.amp > max(1.3*s.Noise.sigma(), 0.08) && (!w.usualKnown(b) || st.amp > 1.2*b.Usual.Value()) && w.betterTrack(level, st) {
+	if !own && st.regular > 3 && st.period > bankLowP && st.amp > max(1.3*s.Noise.sigma(), 0.08) && (!w.usualKnown(b) || st.amp > 1.2*b.Usual.Value() || st.regular > plainBeat) && w.betterTrack(level, st) {
 		w.startTrack(level)
 	}
 	if s.Track.On && int(s.Track.Bank) == level {
@@ -129,8 +133,8 @@ func (w *Watch) beginOsc(level int, b *cycleBank, back int) {
 		o.Bank, o.Bad, o.Seen = uint8(level), 0, w.in.t
 		return
 	}
-	*o = oscState{Grow: keep.Grow, Sus: keep.Sus, Bank: uint8(level), Seen: w.in.t, Since: b.Zero - len*w.levelS(level),
-		LastAt: keep.LastAt, LastP: keep.LastP, LastCause: keep.LastCause, Climb: b.climb(back)}
+	*o = keep.past(w.in.t)
+	o.Grow, o.Sus, o.Bank, o.Seen, o.Since, o.Climb = keep.Grow, keep.Sus, uint8(level), w.in.t, b.Zero-len*w.levelS(level), b.climb(back)
 	if k, t, ok := w.usualTuning(o.Since); ok { // later on what is usual is of the swing itself
 		o.WasK, o.WasT = float32(k), float32(t)
 	}
@@ -182,7 +186,7 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 		floor = max(1.6*s.Noise.sigma(), 0.12)
 	}
 	switch few := fast(level, st.period); {
-	case st.amp < 0.5*floor || few && st.regular < fastKeeps || w.usualKnown(b) && st.amp < 1.2*b.Usual.Value():
+	case st.amp < 0.5*floor || few && st.regular < fastKeeps || w.usualKnown(b) && st.amp < 1.2*b.Usual.Value() && st.regular < plainBeat:
 		o.Bad++
 	case few: // noise is as regular now and then, never most of the time
 		o.Bad = min(max(o.Bad, 1)-1, fastBad)
@@ -266,20 +270,50 @@ func (o *oscState) away() bool { return o.Bad > 8 }
 
 // endGone ends a cycle that has stayed away.
 func (w *Watch) endGone() {
-	if w.in.t-w.s.Osc.Seen > clearHold {
+	o := &w.s.Osc
+	if w.swingsOn() {
+		o.Seen = w.in.t
+	}
+	if w.in.t-o.Seen > clearHold {
 		w.endOsc()
 	}
 }
 
-func (w *Watch) endOsc() {
+// goneHalves are the half-cycles on end, half as large as the cycle was, that are its going on.
+const goneHalves = 8
+
+// swingsOn: half-cycles of the size of the live cycle follow each other without rest, at its
+// pace or an octave beside. That they are irregular for a while ends nothing: friction and
+// loads set a cycle anew, and as long as PV swings as far it is the same trouble.
+func (w *Watch) swingsOn() bool {
 	o := &w.s.Osc
-	keep := *o
-	*o = oscState{LastAt: keep.LastAt, LastP: keep.LastP, LastCause: keep.LastCause}
-	if keep.Grow && keep.GrowCause != 0 {
-		o.LastAt, o.LastP, o.LastCause = w.in.t, keep.P, keep.GrowCause
-	} else if keep.Sticking {
-		o.LastAt, o.LastP, o.LastCause = w.in.t, keep.P, keep.Cause
+	if !slices.ContainsFunc(swings[:], func(k int) bool { return w.s.Open[k].On }) {
+		return false // one that nobody was told of would only keep other troubles from being seen
 	}
+	for l := max(int(o.Bank), 1) - 1; l <= min(int(o.Bank)+1, w.levels()-1); l++ {
+		b := &w.s.Cycles[l]
+		known := w.usualKnown(b)
+		q, ok := b.stat(l, goneHalves)
+		if ok && (known || l == int(o.Bank)) && q.amp > 0.5*float64(o.Mean) && !(known && q.amp < 1.2*b.Usual.Value()) {
+			return true
+		}
+	}
+	return false
+}
+
+// past is what is kept of a cycle once it is over or seen anew, at t, s.
+func (o *oscState) past(t float64) oscState {
+	k := oscState{LastAt: o.LastAt, LastP: o.LastP, LastCause: o.LastCause}
+	if o.Grow && o.GrowCause != 0 {
+		k.LastAt, k.LastP, k.LastCause = t, o.P, o.GrowCause
+	} else if o.Sticking {
+		k.LastAt, k.LastP, k.LastCause = t, o.P, o.Cause
+	}
+	return k
+}
+
+func (w *Watch) endOsc() {
+	w.s.Osc = w.s.Osc.past(w.in.t)
 	for i := range w.s.Cycles {
 		w.s.Cycles[i].Conf = 0
 	}

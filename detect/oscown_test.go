@@ -48,6 +48,103 @@ func TestUnevenGrowthNamesNoTuning(t *testing.T) {
 	}
 }
 
+// A slow loop's violent swing is told by the few half-cycles that each outgrow the last by one
+// factor; what was before them says nothing of its evenness.
+func TestViolentSwingIsEven(t *testing.T) {
+	for _, c := range []struct {
+		grows float64 // from peak to peak
+		want  Cause
+	}{{1.6, ResetTooShort}, {1.1, Undetermined}} {
+		w, b := cyclingLoop(func(i int) float64 {
+			if n := i - (ringLen - 6); n > 0 {
+				return 3 * math.Pow(c.grows, float64(n))
+			}
+			return []float64{0.3, 1.2, 0.5}[i%3]
+		})
+		w.in.t = 1e6
+		w.s.Grid.DT = 100 // s, and 1700 s a period
+		w.s.Fits[0].Last.At, w.s.Fits[0].Last.T0, w.s.Fits[0].Last.Ti = momentOf(999000), momentOf(990000), 5
+		w.s.Osc.Evals, w.s.Osc.WasK, w.s.Osc.WasT = 1, 2, 5
+		w.judgeOscCause(b)
+		if got := causes[w.s.Osc.Cause]; got != c.want {
+			t.Errorf("%.1f times from peak to peak: %s, want %s", c.grows, got, c.want)
+		}
+	}
+}
+
+// OP that comes a sample late in the record makes a reset time read shorter; one cut to less
+// than a third is seen none the less.
+func TestResetReadShortByALateSample(t *testing.T) {
+	for _, c := range []struct {
+		what   string
+		was    float32 // s, reset time before, 80 s now: its lag at 100 s is 11 degrees
+		sample float64 // s
+		want   Cause
+	}{{"halved, slow record", 170, 10, GainTooHigh}, {"halved, fast record", 170, 1, ResetTooShort}, {"a quarter, slow record", 320, 10, ResetTooShort}} {
+		w, b := cyclingLoop(grows)
+		o := &w.s.Osc
+		w.s.Grid.DT = c.sample
+		o.WasK, o.WasT = 2, c.was
+		w.judgeOscCause(b)
+		if got := causes[o.Cause]; got != c.want {
+			t.Errorf("%s: %s, want %s", c.what, got, c.want)
+		}
+	}
+}
+
+// What OP does directly takes a knob back where it speaks for the other one, not where it
+// speaks for it all the more, as under a derivative.
+func TestDirectLagTakesBackTheOtherKnob(t *testing.T) {
+	for _, c := range []struct {
+		lag  float64 // degrees, of OP as seen; 11 as the law has it
+		want Cause
+	}{{11, GainTooHigh}, {-20, GainTooHigh}, {40, Undetermined}} {
+		w, b := cyclingLoop(grows)
+		w.loop.Action = configs.Reverse
+		k := &w.s.Track
+		k.On, k.Looks = true, 10
+		k.PhRe, k.PhIm = math.Cos(c.lag*math.Pi/180), -math.Sin(c.lag*math.Pi/180)
+		w.judgeOscCause(b)
+		if got := causes[w.s.Osc.Cause]; got != c.want {
+			t.Errorf("OP %.0f degrees behind: %s, want %s", c.lag, got, c.want)
+		}
+	}
+}
+
+// An irregular cycle that has long been there swells at times; a regular one grows.
+func TestLongRegularSwingThatGrowsIsNamed(t *testing.T) {
+	for _, c := range []struct {
+		regular float64
+		want    Cause
+	}{{40, GainTooHigh}, {10, Undetermined}} {
+		w, b := cyclingLoop(grows)
+		o := &w.s.Osc
+		o.Sus, o.Evals, o.Regular, o.WasK, o.WasT = true, 70, c.regular, 2, 80
+		w.judgeOscCause(b)
+		if got := causes[o.GrowCause]; got != c.want && !(c.want == Undetermined && o.GrowCause == 0) {
+			t.Errorf("regularity %.0f: %s, want %s", c.regular, got, c.want)
+		}
+	}
+}
+
+// At the edge of the bands the lag names a knob only where it is known what the tuning was.
+func TestEdgeOfTheBandsNeedsTheTuningBefore(t *testing.T) {
+	for _, c := range []struct {
+		ti   float32 // s, at a period of 100 s
+		was  float32 // gain before, 0 unknown
+		want Cause
+	}{{24, 2, GainTooHigh}, {24, 0, Undetermined}, {80, 0, GainTooHigh}} {
+		w, b := cyclingLoop(grows)
+		o := &w.s.Osc
+		w.s.Fits[0].Last.Ti = c.ti
+		o.WasK, o.WasT = c.was, c.ti
+		w.judgeOscCause(b)
+		if got := causes[o.Cause]; got != c.want {
+			t.Errorf("reset %.0f s, gain %.0f before: %s, want %s (lag %.0f degrees)", c.ti, c.was, got, c.want, o.PhiDeg)
+		}
+	}
+}
+
 // What a rate limit makes of the cycle says nothing of the tuning that made it grow.
 func TestStretchedCycleNamesNothing(t *testing.T) {
 	for _, c := range []struct {
@@ -130,11 +227,15 @@ func TestBeatOfOwnRinging(t *testing.T) {
 	if got, _ := sustainedOf(beat, 0.3, 1); got != OutsideDisturbance {
 		t.Errorf("there at once: %s", got)
 	}
-	if got, _ := sustainedOf(func(w *Watch) { beat(w); w.s.Osc.Climb = 5 }, 0.3, 1); got != Undetermined {
-		t.Errorf("climbed: %s", got)
-	}
-	if got, _ := sustainedOf(func(w *Watch) { beat(w); w.s.Osc.Climb, w.s.Osc.AmpHi = unseen, 2 }, 0.3, 1); got != Undetermined {
-		t.Errorf("swollen: %s", got)
+	for _, c := range []struct {
+		climb uint8
+		most  float64 // % of the smallest size, 1
+		want  Cause
+	}{{5, 1.2, OutsideDisturbance}, {1, 2, OutsideDisturbance}, {5, 2, Undetermined}, {unseen, 2, Undetermined}} {
+		got, _ := sustainedOf(func(w *Watch) { beat(w); w.s.Osc.Climb, w.s.Osc.AmpHi = c.climb, c.most }, 0.3, 1)
+		if got != c.want {
+			t.Errorf("climb %d, %.1f times as large since: %s, want %s", c.climb, c.most, got, c.want)
+		}
 	}
 	got, also := sustainedOf(func(w *Watch) {
 		beat(w)
@@ -142,6 +243,60 @@ func TestBeatOfOwnRinging(t *testing.T) {
 	}, 0.3, 1)
 	if got != Undetermined || also != GainTooHigh {
 		t.Errorf("gain raised before: %s, %s", got, also)
+	}
+}
+
+// A beat that lasted over many periods is none of chance, however its size waxes.
+func TestBeatOfAWaxingSwing(t *testing.T) {
+	for _, c := range []struct {
+		was  float32 // ratio of the clock's full blocks
+		want Cause
+	}{{1, OutsideDisturbance}, {2.5, Undetermined}} {
+		got, _ := sustainedOf(func(w *Watch) {
+			w.s.Clock = clock{Was: c.was}
+			w.s.Osc.Mean, w.s.Osc.Sq = 1, 1.25
+		}, 0.3, 1)
+		if got != c.want {
+			t.Errorf("ratio %.1f: %s, want %s", c.was, got, c.want)
+		}
+	}
+}
+
+// A swing that grew, or that the ends of OP clip, is no sine and yet of the loop's own.
+func TestClippedSwingIsNotDriven(t *testing.T) {
+	flat := func(w *Watch) {
+		w.s.Clock = clock{Was: 1.5}
+		w.s.Osc.Mean, w.s.Osc.Sq, w.s.Osc.Climb = 1, 1, 1
+		w.s.Track.Peaked = -0.15 * w.s.Track.weight()
+	}
+	for _, c := range []struct {
+		what string
+		set  func(w *Watch)
+		want Cause
+	}{
+		{"off the ends of OP", func(*Watch) {}, OutsideDisturbance},
+		{"at the ends of OP", func(w *Watch) { w.s.Tune.LimitAt = w.in.t }, Undetermined},
+		{"it grew", func(w *Watch) { w.s.Osc.Grow = true }, Undetermined},
+	} {
+		if got, _ := sustainedOf(func(w *Watch) { flat(w); c.set(w) }, 0.3, 1); got != c.want {
+			t.Errorf("%s: %s, want %s", c.what, got, c.want)
+		}
+	}
+}
+
+// Against the shape of a valve stands only a beat without blur.
+func TestBlurredBeatAgainstShape(t *testing.T) {
+	for _, c := range []struct {
+		was  float32
+		want Cause
+	}{{1.05, OutsideDisturbance}, {1.3, Undetermined}} {
+		got, _ := sustainedOf(func(w *Watch) {
+			w.s.Clock = clock{Was: c.was}
+			w.s.Osc.Mean, w.s.Osc.Sq = 1, 1
+		}, 0.85, 1)
+		if got != c.want {
+			t.Errorf("ratio %.2f: %s, want %s", c.was, got, c.want)
+		}
 	}
 }
 
@@ -156,5 +311,36 @@ func TestStickingIsKept(t *testing.T) {
 	}
 	if got, _ := sustainedOf(said, 0.4, 1); got == ValveSticking {
 		t.Errorf("a sine: %s", got)
+	}
+}
+
+// A tuning that was kept over a long calm is not what made a swing grow, whatever its lag: the
+// loop has become too lively for it. Where it was not calm before, or the tuning moved, the lag
+// and what moved decide.
+func TestKeptTuningLeavesTheProcess(t *testing.T) {
+	for _, c := range []struct {
+		what    string
+		since   float64 // s
+		wasGain float32
+		wasT    float32 // s; 10 s now
+		want    Cause
+	}{
+		{"kept, long calm", 150 * 100, 2, 10, GainTooHigh},
+		{"kept, swings from the start", 50 * 100, 2, 10, ResetTooShort},
+		{"reset cut", 150 * 100, 2, 30, ResetTooShort},
+		{"no usual tuning known", 150 * 100, 0, 0, ResetTooShort},
+	} {
+		w, b := cyclingLoop(grows)
+		f, o := &w.s.Fits[0].Last, &w.s.Osc
+		w.in.t = c.since + 1000
+		f.At, f.T0, f.Ti = momentOf(c.since+900), momentOf(c.since+500), 10
+		o.Since, o.WasK, o.WasT = c.since, c.wasGain, c.wasT
+		w.judgeOscCause(b)
+		if got := causes[o.Cause]; got != c.want {
+			t.Errorf("%s: %s, want %s (lag %.0f degrees)", c.what, got, c.want, o.PhiDeg)
+		}
+		if c.want == GainTooHigh && (o.Conf >= surely || causes[o.Also[0]] != ResetTooShort) {
+			t.Errorf("%s: said with %.2f, first possible %s", c.what, o.Conf, causes[o.Also[0]])
+		}
 	}
 }

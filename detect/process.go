@@ -20,19 +20,25 @@ const (
 	ownMost = 0.8
 )
 
-// The time of a recovery from the peak over that to it, simulated noise-free for SIMC
-// (Skogestad 2003), AMIGO (Åström & Hägglund 2004) and lambda tunings up to three dead
-// times, dead times of 0.03 to 3 lags, loads before and behind the dead time: 2 to 7; a
-// reset four times too long 10 to 35. Where hardly any of the action is proportional:
-// 3.6 to 5.8, a gain four times too low 6 to 27.
+// The time constant of the tail of a recovery over lag and dead time of the process, as the
+// recovery itself shows them (see processTime). Simulated noise-free for SIMC (Skogestad
+// 2003), AMIGO (Åström & Hägglund 2004) and lambda tunings up to three dead times, dead
+// times of 0.03 to 8 lags, loads before and behind the dead time: 0.3 to 4.3; a gain so low
+// that Ti/(Kc K) is over four times lag and dead time 4 to 90, a reset four times too long
+// 7 to 30.
+const soundTail = 4.0
+
+// Where much of the action is proportional the process is integrating, or as good as that,
+// and its lag is hard to tell: there the tail is held against the lag of the closed loop. By
+// the same simulations up to 11, with lambda tunings of long lags up to 24 and with the long
+// reset of Tyreus & Luyben (1992) up to 16; a reset four times too long 15 to 60. A share
+// over 1 may be of a runaway process, where a longer reset is sound.
 const (
-	soundFall    = 8.5
-	soundFallLow = 5.0
-	lowShare     = 0.13
-	// Near 1 the process is integrating: a long reset is sound there. Over 1 it may be
-	// runaway, where a longer one is.
-	highShare     = 0.9
-	soundFallHigh = 11.0
+	propShare     = 0.4
+	soundTailProp = 18.0
+	// riseLag is the time to the peak of a slow recovery over its lag. Where only dead time
+	// is before the peak there is no lag, and this stands for it.
+	riseLag = 4.0
 )
 
 // soundResidence is the residence time of the closed loop over that of its process: a
@@ -59,9 +65,12 @@ func (w *Watch) forItsProcess(e *recovery, thr float64) float64 {
 		return 0
 	}
 	// A ramp of the load, or a second one in the tail, makes another curve than a slow pole
-	// does, whose area from the peak to 12 % is 0.415 of peak and time.
+	// does, of which the area from the peak on goes with what it fell and the logarithm of it.
+	// Noise brings it under its end for the first time when it is a noise level over it.
 	fall := float64(e.Dur - e.Rise)
-	if fill := (r.IntE - r.IntPeak) * r.Sign / (r.Peak * fall); !(fill > 0.33 && fill < 0.52) {
+	left := max((w.s.Motion.EF*r.Sign+w.s.Noise.sigma())/r.Peak, recoveredAt/2)
+	tail := (r.IntE - r.IntPeak) * r.Sign / (r.Peak * (1 - left))
+	if fits := tail * math.Log(1/left) / fall; !(fits > 0.8 && fits < 1.25) {
 		return 0
 	}
 	// What moves OP beside the law says that it is not this load that PV recovers from.
@@ -72,17 +81,30 @@ func (w *Watch) forItsProcess(e *recovery, thr float64) float64 {
 	}
 	// The rise began below the threshold, on average of a straight and a sudden one half
 	// the way of a straight line, and within the sample before.
-	rise := float64(e.Rise)*(1+0.5*thr/(r.Peak-thr)) + w.in.dt
-	ratio := fall / max(rise, 3*w.in.dt)
+	below := thr / r.Peak
+	rise := float64(e.Rise)*(1+0.5*below/(1-below)) + w.in.dt
+	lag := (float64(e.Rise)-r.IntPeak*r.Sign/r.Peak)/(1-below) + w.in.dt/2
 	switch p := float64(e.Prop); {
-	case p > 1 && w.loop.Process == configs.Integrating, p > highShare && p <= 1:
-		return ratio / soundFallHigh
-	case p > lowShare && p <= highShare:
-		return ratio / soundFall
-	case p > -0.05 && p <= lowShare:
-		return ratio / soundFallLow
+	case p > 1 && w.loop.Process == configs.Integrating, p > propShare && p <= 1:
+		return tail / max(lag, max(rise, 3*w.in.dt)/riseLag) / soundTailProp
+	case p > -0.05 && p <= propShare:
+		p = max(p, 0)
+		// Of the tail Ti/(Kc K) is what the share leaves over; it alone is the residence time
+		// of the closed loop.
+		return tail / processTime(rise, lag, tail, p, 3*w.in.dt) * min(1/soundTail, (1-p)/soundResidence)
 	}
 	return 0
+}
+
+// processTime is lag and dead time of a process, s, from a recovery that is slow: PV goes
+// from a step of the load with the lag of the closed loop, lag of the process times 1 - p,
+// to the peak, where the tail takes over, and all that the rise to there takes longer than
+// that is dead time. least is what the samples tell, s.
+func processTime(rise, lag, tail, p, least float64) float64 {
+	lag = max(lag, least/10)
+	q := min(lag/tail, 0.8)
+	dead := max(0, rise+lag*math.Log(q)/(1-q))
+	return max(dead+lag/(1-p), least/2)
 }
 
 // clearPeak is the least peak of a recovery whose shape is read, in thresholds (six

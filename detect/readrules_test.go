@@ -5,6 +5,7 @@ import (
 	"testing"
 
 	"midwatch/configs"
+	"midwatch/detect/num"
 )
 
 // A change that few blocks of one scale tell counts where another scale, read steadily, has
@@ -76,28 +77,60 @@ func TestResetTimeToReckonWith(t *testing.T) {
 	}
 }
 
-// The rise to the peak of a recovery is seen from the threshold on only. A straight one of
-// 100 s that the threshold halves is taken for longer than the 50 s seen, and one that it
-// hardly touches for what it is. With a fall of 850 s the loop is as slow as a sound one.
+// The rise to the peak of a recovery is seen from the threshold on only, and is taken for
+// nearly what it is where the threshold is half of the peak.
 func TestRiseBelowTheThreshold(t *testing.T) {
-	for _, x := range []struct{ thr, least, most float64 }{
-		{1, 0.9, 1.5}, // 1.96 as seen
-		{0.1, 0.95, 1.05},
-	} {
-		l := configs.NewLoop("TIC-344")
-		l.Process = configs.SelfRegulating
-		w := New(l, 0, Options{})
-		w.in = input{dt: 1, op: 55, hasOP: true}
-		const peak, rise, fall = 2.0, 100, 850
-		r := &w.s.Recov
-		r.OP0, r.Peak, r.Sign, r.IntPeak = 50, peak, 1, peak*rise/2
-		r.IntE = r.IntPeak + 0.415*peak*fall // an exponential from the peak to 12 % of it
-		seen := rise * (1 - x.thr/peak)
-		e := recovery{Rise: float32(seen), Dur: float32(seen + fall), Peak: peak, Prop: 0.5}
-		if got := w.forItsProcess(&e, x.thr); !(got > x.least && got < x.most) {
-			t.Errorf("threshold %g %%: %.2f times what a sound loop takes, want %g to %g", x.thr, got, x.least, x.most)
+	for _, prop := range []float32{0.2, 0.6} {
+		all := slowness(0.1, prop, 2, 100, 1200, 0.02)
+		if half := slowness(1, prop, 2, 100, 1200, 0.02); !(half > 0.6*all && half < 1.1*all) {
+			t.Errorf("share %g: %.2f times what a sound loop takes, without a threshold %.2f", prop, half, all)
 		}
 	}
+}
+
+// Noise ends a recovery early, when it is a noise level over its end. What is seen by then is
+// as slow as the whole.
+func TestRecoveryThatNoiseEnds(t *testing.T) {
+	whole := slowness(0.3, 0.2, 3, 60, 1200, 0.02)
+	if !(whole > 1.2) {
+		t.Fatalf("whole: %.2f times what a sound loop takes", whole)
+	}
+	if early := slowness(0.3, 0.2, 3, 60, 640, 0.45); !(early > 0.8*whole && early < 1.25*whole) {
+		t.Errorf("ended early by noise: %.2f times what a sound loop takes, whole %.2f", early, whole)
+	}
+}
+
+// Less than half of the action is proportional, so that lag and dead time show: the tail is
+// held against both. A dead time that is long counts as a lag does.
+func TestTailAgainstLagAndDeadTime(t *testing.T) {
+	const lag, tail = 20.0, 200.0
+	for _, dead := range []float64{0, 30, 100} {
+		rise := dead + lag*math.Log(tail/lag)/(1-lag/tail)
+		if got, want := processTime(rise, lag, tail, 0.2, 3), dead+lag/0.8; math.Abs(got/want-1) > 0.01 {
+			t.Errorf("dead time %g s: process time %.1f s, want %.1f", dead, got, want)
+		}
+	}
+}
+
+// slowness is what forItsProcess makes of a recovery with a rise, s, of five of its lags to a
+// peak, %, and an exponential from there that would be down to 12 % of it in 1200 s: fall, s, is how
+// long it is seen, noise, %, what it ends over.
+func slowness(thr float64, prop float32, peak, rise, fall, noise float64) float64 {
+	l := configs.NewLoop("TIC-344")
+	l.Process = configs.SelfRegulating
+	w := New(l, 0, Options{})
+	w.in = input{dt: 1, op: 55, hasOP: true}
+	w.s.Noise.Long = num.Quantile{V: float32(noise), N: 3}
+	lag, below := rise/5, thr/peak
+	seen := rise + lag*math.Log(1-below)
+	tau := 1200 / -math.Log(recoveredAt)
+	end := peak * math.Exp(-fall/tau)
+	w.s.Motion.EF = end - noise
+	r := &w.s.Recov
+	r.OP0, r.Peak, r.Sign, r.IntPeak = 50, peak, 1, peak*(seen-lag*(1-below))
+	r.IntE = r.IntPeak + tau*(peak-end)
+	e := recovery{Rise: float32(seen), Dur: float32(seen + fall), Peak: float32(peak), Prop: prop}
+	return w.forItsProcess(&e, thr)
 }
 
 // slowWatch has six recoveries of a load, newest last, as ratios to the usual.

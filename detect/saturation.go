@@ -103,7 +103,8 @@ func stepSaturation(w *Watch) {
 	w.stepStretch(side, sigma)
 	// Wind-up: a sound controller leaves the limit at or before the change of sign
 	// of e (with conditional integration or tracking OP = limit needs Kc e + I >=
-	// limit and I <= limit); one that stays is wound up.
+	// limit and I <= limit); one that stays is wound up, unless OP goes by another law than
+	// that of e, as where a flow paces it: that may hold it there.
 	if z.CrossAt > 0 {
 		if side == z.Side && a*s.Motion.EF*side < -max(3*sigma, 0.3) {
 			if z.Frames < 250 {
@@ -119,7 +120,7 @@ func stepSaturation(w *Watch) {
 		if side != z.Side {
 			over := in.t - z.CrossAt
 			rt, _ := w.resetS()
-			if z.Frames >= 5 && z.Due > dueLeast && over > w.overhangS(rt) && rt > 0 && z.WindUps < 250 {
+			if z.Frames >= 5 && z.Due > dueLeast && over > w.overhangS(rt) && rt > 0 && z.WindUps < 250 && !w.otherLaw() {
 				if z.WindUps == 0 || in.t-z.LastWind > 7*86400 {
 					z.WindUps, z.WindSince, z.Over = 0, z.CrossAt, 0
 				}
@@ -174,7 +175,7 @@ func (w *Watch) stepStretch(side, sigma float64) {
 	l0, _ := w.opLimits()
 	idle := mean*w.sign() < 0 && l0 < opAtLimit && math.Abs(mean) < idleMost && z.LowShare >= usualLow
 	if d > max(2*w.timeScale(), max(30*in.dt, 60)) && math.Abs(mean) > max(3*sigma, 0.8) && !idle {
-		if z.Stretches == 0 || in.t-z.LastEnd > visitsApart {
+		if z.Stretches == 0 || z.From-z.LastEnd > visitsApart {
 			z.Stretches, z.FirstFrom = 0, z.From
 		}
 		z.Stretches, z.LastEnd = min(z.Stretches+1, 200), in.t
@@ -191,10 +192,14 @@ func (w *Watch) comesAndGoes() bool {
 	return o.On && z.Stretches >= visitsAsked && o.Since == z.FirstFrom
 }
 
-// visits: OP comes to its limit again and again; between visits that is not over.
+// visits: OP comes to its limit again and again; between visits that is not over, nor while
+// the next one lasts: those of a daily load are a day apart.
 func (w *Watch) visits() bool {
-	z := &w.s.Sat
-	return z.Stretches >= visitsAsked && w.in.t-z.LastEnd < visitsApart
+	z, until := &w.s.Sat, w.in.t
+	if z.From > 0 {
+		until = z.From
+	}
+	return z.Stretches >= visitsAsked && until-z.LastEnd < visitsApart
 }
 
 // sayLimit supports the claim that OP lies at its limit. What an episode was shown with

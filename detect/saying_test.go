@@ -31,7 +31,7 @@ func TestWhatGoesOnUnderAnotherKindIsNotOver(t *testing.T) {
 		osc      func(*oscState)
 	}{
 		{kSustained, kSticking, func(o *oscState) { o.Sus, o.Sticking, o.Cause = true, true, causeIndex(ValveSticking) }},
-		{kSticking, kSustained, func(o *oscState) { o.Sus = true }},
+		{kSticking, kSustained, func(o *oscState) { o.Sus, o.Cause = true, causeIndex(Undetermined) }},
 		{kSustained, kGrowing, func(o *oscState) { o.Grow = true }},
 		{kGrowing, kSustained, func(o *oscState) { o.Sus = true }},
 		{kSustained, -1, func(o *oscState) {}},
@@ -164,7 +164,7 @@ func TestOnsetStaysWithTheCycle(t *testing.T) {
 		osc      func(*oscState)
 	}{
 		{kSustained, kSticking, 70000, func(o *oscState) { o.Sus, o.Sticking, o.Cause = true, true, causeIndex(ValveSticking) }},
-		{kSticking, kSustained, 70000, func(o *oscState) { o.Sus = true }},
+		{kSticking, kSustained, 70000, func(o *oscState) { o.Sus, o.Cause = true, causeIndex(Undetermined) }},
 		{kGrowing, kSustained, 70000, func(o *oscState) { o.Sus = true }},
 		{kSustained, kGrowing, 80000, func(o *oscState) { o.Grow = true }},
 	} {

@@ -25,13 +25,15 @@ type sharedMemory struct {
 	Groups []sharedGroup
 
 	Elements map[string]ownElement // by loop: what it says of its final element
+	Beside   map[string]string     // by loop: another that may swing with it
 }
 
 type sharedGroup struct {
 	Key    string // loop the finding is about
 	Loops  []string
 	Since  int64
-	Gone   int // slots running without the group
+	Gone   int // slots running in which it was not seen, nor two of its loops cycling
+	Apart  int // slots running in which two of its loops cycle, but do not keep their phase
 	Cause  Cause
 	Root   string
 	Period float64
@@ -42,11 +44,15 @@ type sharedGroup struct {
 }
 
 // Slots in which a pair must keep its phase before it is said; slots, and periods of the
-// cycle, after which a group that is not seen is over.
+// cycle, after which a group whose loops have come to rest is over. While they go on at
+// nearly one period (within a factor of two, as a swing that comes and goes reads), a phase
+// that is not kept for a while is no end: a valve that slips sets it anew. A day of it is.
 const (
-	sharedSlots = 2
-	sharedGone  = 6
-	goneCycles  = 6
+	sharedSlots  = 2
+	sharedGone   = 6
+	goneCycles   = 6
+	sharedApart  = 86400 * 1000 / SiteSlotMs
+	apartPeriods = 2.0
 )
 
 // Periods nearer than this, as a logarithm, may be one: what decides is the phase.
@@ -149,7 +155,8 @@ func (s *shared) Judge(end int64, live []SiteEvidence, emit func(*Finding)) {
 			seen = append(seen, s.group(live, g))
 		}
 	}
-	s.tell(end, seen, emit)
+	s.tell(end, live, seen, emit)
+	s.m.Beside = s.beside(end, live)
 	s.rejudge(end, emit)
 }
 
@@ -226,7 +233,18 @@ func (g *sharedGroup) same(o *sharedGroup) bool {
 	return n >= 2 || n == 1 && math.Abs(math.Log(g.Period/o.Period)) < samePeriod
 }
 
-func (s *shared) tell(end int64, seen []sharedGroup, emit func(*Finding)) {
+// goOn: two of its loops or more still cycle, at a period that may be that of the group.
+func (g *sharedGroup) goOn(loops []*configs.Loop, live []SiteEvidence) bool {
+	n := 0
+	for i := range live {
+		if e := &live[i]; slices.Contains(g.Loops, loops[e.ID].Name) && e.PeriodS < apartPeriods*g.Period && g.Period < apartPeriods*e.PeriodS {
+			n++
+		}
+	}
+	return n >= 2
+}
+
+func (s *shared) tell(end int64, live []SiteEvidence, seen []sharedGroup, emit func(*Finding)) {
 	var keep []sharedGroup
 	taken := make([]bool, len(seen))
 	for _, old := range s.m.Groups {
@@ -244,8 +262,12 @@ func (s *shared) tell(end int64, seen []sharedGroup, emit func(*Finding)) {
 			}
 		}
 		if now.Loops == nil {
-			old.Gone++
-			if float64(old.Gone) >= max(sharedGone, goneCycles*old.Period*1000/SiteSlotMs) {
+			if old.goOn(s.loops, live) {
+				old.Gone, old.Apart = 0, old.Apart+1
+			} else {
+				old.Gone++
+			}
+			if float64(old.Gone) >= max(sharedGone, goneCycles*old.Period*1000/SiteSlotMs) || old.Apart >= sharedApart {
 				emit(s.finding(end, &old, Cleared))
 				continue
 			}

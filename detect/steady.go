@@ -71,6 +71,11 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 		w.beginOsc(level, b, fewest)
 		return
 	}
+	if size > 0 && s.Noise.known() && !w.drowned(level, b, st) && w.alone(level, b, period, size, sigma) {
+		o.Sus = true
+		w.beginOsc(level, b, ringLen)
+		return
+	}
 	q, ok := b.stat(level, n)
 	if ok && s.Noise.known() && !(b.Kept < fastHold && w.drowned(level, b, st)) {
 		// Batches and shifts have a slow beat of sorts, which a loop not watched for long
@@ -90,28 +95,7 @@ func (w *Watch) judgeSustained(level int, b *cycleBank, st ringStat) {
 			return
 		}
 	}
-	// Irregular sticking leaves cycles out: the shape of OP makes up for it.
-	if q, ok := b.stat(level, slipHalves); ok && s.Noise.known() && s.Track.On && int(s.Track.Bank) == level && s.Track.Looks >= slipLooks &&
-		q.regular > slipAsked.regular && q.least > slipAsked.least && q.amp > slipAsked.size(sigma, 0) && slots > 20 &&
-		s.Motion.LawSeen && !w.propOnlySeen() && w.steadySP(7*period) && (known && q.amp > slipAsked.usual*usual || !known && b.certain(slipHalves, w.strict)) {
-		sh := w.shapes()
-		if si := w.stickIndex(sh); si > slipShape && sh.h3OP < slipThird && sh.stick > slipJumps {
-			o.Sus = true
-			w.beginOsc(level, b, slipHalves)
-		}
-	}
 }
-
-// What is asked of sticking that leaves cycles out (common practice, no source).
-const (
-	slipHalves = 10   // half-cycles looked at
-	slipLooks  = 4    // at its shape
-	slipShape  = 0.66 // index of the shape, 0 a sine and 1 a triangle
-	slipThird  = 0.25 // third harmonic of OP, at most
-	slipJumps  = 0.38 // share of the travel of PV in the busiest fifth of the cycle
-)
-
-var slipAsked = stays{1.6, 0.2, 1.6, 3.4, 0.55}
 
 // A sequential test (Wald 1945) tells a plain cycle in few half-cycles. Lengths and
 // sizes of what merely wanders scatter by a third of their mean or more (Rayleigh's law
@@ -222,7 +206,7 @@ func (w *Watch) scheduled(b *cycleBank, period float64) bool {
 // the half-cycles can tell: a load that the people it serves make.
 func (w *Watch) ofTheDay(b *cycleBank, period float64) bool {
 	rt, _ := w.resetS()
-	if period < 43200 || period < 6*rt {
+	if period < 43200 || period < 2*rt {
 		return false
 	}
 	// A day with peaks of its own shape gives half-cycles of many lengths, and what is so far
@@ -234,9 +218,19 @@ func (w *Watch) ofTheDay(b *cycleBank, period float64) bool {
 	// shapes of its own. That of all in the ring is the surest.
 	all, regular, _ := b.lengths(int(b.N))
 	day := max(0.05, min(0.15, 2/(regular*math.Sqrt(max(float64(b.N), 1)))))
-	newest, _, _ := b.lengths(min(int(b.N), 8))
+	newest, steady, _ := b.lengths(min(int(b.N), 8))
+	if period < 6*rt { // it may be its own, but few loops swing with just the day
+		return max(regular, steady) > dayBeat && (math.Abs(period/86400-1) < dayNear || math.Abs(period*all/newest/86400-1) < dayNear)
+	}
 	return math.Abs(period/86400-1) < day || math.Abs(period*all/newest/86400-1) < day
 }
+
+// dayBeat is the regularity of half-cycles which only what a clock drives has for days, and
+// dayNear how near such a period is to a day.
+const (
+	dayBeat = 10
+	dayNear = 0.03
+)
 
 // steadySP: SP has not stepped for so long, s, and is not ramped.
 func (w *Watch) steadySP(span float64) bool {

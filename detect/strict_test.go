@@ -9,13 +9,13 @@ import (
 // within its bounds, and never less for a smaller budget.
 func TestStrictness(t *testing.T) {
 	for budget, want := range map[float64]float64{0: 1, math.NaN(): 1, 0.1: 1, 0.01: 1.15, 0.001: 1.3, 1: 0.85, 10: 0.7, 1000: 0.7, 1e-9: 1.6} {
-		if got := strictness(budget); math.Abs(got-want) > 1e-9 {
+		if got := Strictness(budget); math.Abs(got-want) > 1e-9 {
 			t.Errorf("budget %g: factor %g, want %g", budget, got, want)
 		}
 	}
 	last := math.Inf(1)
 	for b := 1e-6; b < 1e3; b *= 1.3 {
-		if f := strictness(b); f > last {
+		if f := Strictness(b); f > last {
 			t.Fatalf("budget %g: factor %g, more than of a smaller budget", b, f)
 		} else {
 			last = f

@@ -25,6 +25,7 @@ func (w *Watch) verdictAt(t float64) {
 			c[k].On = c[k].On && w.judges(k)
 		}
 	}
+	before := w.oneCycle(&c, t)
 	// Saturation explains the offset; growth explains the swing; pegged or frozen
 	// PV explains what the controller makes of it.
 	rejudge := [kinds]bool{}
@@ -32,7 +33,7 @@ func (w *Watch) verdictAt(t float64) {
 	if c[kSaturation].On && causes[c[kSaturation].Cause] != WindUp && !w.rests(&s.OffPast.Sat) {
 		fold(kOffset)
 	}
-	if p := &s.OffPast; p.Lacks > 0 && t-p.Lacks.s() < lackFor { // without it no recovery is ever whole
+	if w.lacks(t) { // without it no recovery is ever whole
 		fold(kSluggish)
 	}
 	if c[kSticking].On {
@@ -61,14 +62,66 @@ func (w *Watch) verdictAt(t float64) {
 	}
 	for k := range table {
 		if suspect[k] || s.Open[k].On {
-			w.settle(k, t, &c[k], rejudge[k])
+			w.settle(k, t, &c[k], rejudge[k], &before)
 		}
 	}
 }
 
+// oneCycle makes one story of what is claimed of the live cycle, and gives what was said of
+// it, not On where that is nothing. A claim that lapses while the cycle goes on, as where the
+// set point seems to lead it for a while, stands for as long as a cycle must stay away to be
+// over. An element that was blamed, given up and blamed again, and then once more, is not
+// blamed any more: see [openFinding.weigh].
+func (w *Watch) oneCycle(c *[kinds]claim, t float64) (before openFinding) {
+	o, said := &w.s.Osc, -1
+	claimed := false
+	for _, k := range swings {
+		claimed = claimed || c[k].On
+		if w.s.Open[k].On {
+			said = k
+		}
+	}
+	if claimed || said < 0 || !(o.Grow || o.Sus) {
+		o.Hidden = 0
+	} else if o.Hidden == 0 {
+		o.Hidden = momentOf(t)
+	}
+	if said < 0 {
+		return before
+	}
+	f := w.s.Open[said]
+	if c[kSustained].On && o.Cause == 0 { // not judged anew yet
+		c[kSustained].On = said != kSticking
+		c[max(said, kSustained)] = claim{On: true, Since: f.Since, Cause: f.Cause, Also: o.Also, Conf: f.Conf, Strength: c[kSustained].Strength}
+	}
+	if o.Hidden > 0 && t-o.Hidden.s() < max(clearHold, goneHalves/2*o.P) {
+		c[said] = claim{On: true, Since: f.Since, Cause: f.Cause, Also: o.Also, Conf: f.Conf, Strength: f.Strength}
+	}
+	if v := &c[kSticking]; said == kSustained && v.On && f.Said&(1<<v.Cause) != 0 && f.Returns+1 >= mostReturns {
+		c[kSustained] = *v
+		v.On = false
+	}
+	return f
+}
+
 // lackFor is how long, s, after the integral was said to be missing that explains slow
-// recoveries (common practice, no source: a day).
+// recoveries whatever is read of the law (common practice, no source: a day).
 const lackFor = 86400.0
+
+// lacks: the integral was said to be missing by a time t, s, and no later reading of the law
+// has one. An integral does not come back by waiting.
+func (w *Watch) lacks(t float64) bool {
+	since := w.s.OffPast.Lacks
+	if since == 0 || t-since.s() < lackFor {
+		return since > 0
+	}
+	for k := range w.s.Fits {
+		if f := w.s.Fits[k].newest(); f.ok() && f.T0 > since && f.hasReset() {
+			return false
+		}
+	}
+	return true
+}
 
 // swings are the kinds of which one cycle is one at a time.
 var swings = [...]int{kGrowing, kSustained, kSticking}
@@ -92,14 +145,20 @@ func (w *Watch) claim(k int) claim {
 	return c
 }
 
-// settle compares what is claimed with what was said.
-func (w *Watch) settle(k int, t float64, c *claim, rejudged bool) {
+// settle compares what is claimed with what was said; before is what was said of the live
+// cycle.
+func (w *Watch) settle(k int, t float64, c *claim, rejudged bool, before *openFinding) {
 	s := &w.s
 	o := &s.Open[k]
 	switch {
 	case c.On && !o.On:
 		s.OpenN++
 		*o = openFinding{On: true, Cause: c.Cause, Said: 1 << c.Cause, Conf: c.Conf, Since: c.Since, Strength: c.Strength}
+		if before.On && slices.Contains(swings[:], k) { // the same cycle under another name
+			f := *before
+			f.weigh(c)
+			o.Said, o.Returns, o.Moves, o.Cause, o.Conf = f.Said|1<<c.Cause, f.Returns, f.Moves, c.Cause, c.Conf
+		}
 		w.keepMove(k, o.Since)
 		w.say(k, Raised, t, "")
 	case c.On:
@@ -235,11 +294,11 @@ func (w *Watch) Restate(emit func(*Finding)) {
 	w.emit = nil
 }
 
-// strictness turns the nuisance budget into a factor on persistence: the default
+// Strictness turns the nuisance budget into a factor on persistence: the default
 // of 0.1 false findings per loop and year is 1. Times between false decisions
 // grow exponentially with the evidence asked for (as with the CUSUM of Page
 // 1954, Siegmund's formula), so a tenfold budget moves the factor by 0.15.
-func strictness(perLoopYear float64) float64 {
+func Strictness(perLoopYear float64) float64 {
 	if !(perLoopYear > 0) {
 		return 1
 	}

@@ -20,7 +20,7 @@ import (
 
 // Engine is the version of the detection; memories of another engine are not
 // loaded whole.
-const Engine = 4
+const Engine = 5
 
 // Options of a watch.
 type Options struct {
@@ -78,7 +78,7 @@ type state struct {
 // New makes the watch of a loop. id is put into its findings.
 func New(l *configs.Loop, id collector.LoopID, o Options) *Watch {
 	normal, _ := collector.ParseMode(l.NormalMode)
-	return &Watch{loop: l, id: id, normal: normal, strict: strictness(o.NuisancePerLoopYear)}
+	return &Watch{loop: l, id: id, normal: normal, strict: Strictness(o.NuisancePerLoopYear)}
 }
 
 // Step takes the next frame and emits what it makes of it. A frame not newer

@@ -55,7 +55,7 @@ func Run(ctx context.Context, o Options) (err error) {
 		return fmt.Errorf("folder of the demo: %w; hint: TMPDIR names another place", err)
 	}
 	defer func() { err = errors.Join(err, os.RemoveAll(dir)) }()
-	s := &show{screen: newScreen(o.Out, o.Terminal), dir: dir, shown: map[string]bool{}}
+	s := &show{screen: newScreen(o.Out, o.Terminal), dir: dir, shown: map[string]string{}}
 	s.screen.print(opening)
 
 	works := plant.Demo(seed, start)

@@ -203,3 +203,25 @@ func TestNumbers(t *testing.T) {
 		}
 	}
 }
+
+// What goes on as it was said is not put on the screen again.
+func TestAnnouncedOnce(t *testing.T) {
+	var out bytes.Buffer
+	s := &show{screen: newScreen(&out, false), shown: map[string]string{}}
+	f := detect.Finding{Subject: detect.Subject{Loop: "AIC-204"}, Kind: detect.GrowingOscillation, Event: detect.Updated,
+		Cause: detect.ResetTooShort, Confidence: 0.93, Text: "PV swings."}
+	for range 3 {
+		s.announce(f, "06:14")
+	}
+	f.Measures = detect.Measures{{Name: "time_to_op_limit_s", Value: 0}}
+	s.announce(f, "06:20")
+	f.Event = detect.Cleared
+	s.announce(f, "07:00")
+	s.announce(f, "07:01")
+	want := "06:14   AIC-204   growing oscillation, likely reset too short\n                  PV swings.\n" +
+		"06:20   AIC-204   still: growing oscillation, likely reset too short; OP has met its limit\n" +
+		"07:00   AIC-204   growing oscillation is over\n"
+	if out.String() != want {
+		t.Errorf("\n%s\nwant\n%s", &out, want)
+	}
+}

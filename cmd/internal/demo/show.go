@@ -38,7 +38,7 @@ type show struct {
 	mu   sync.Mutex
 	said []detect.Finding // by the sender, in order
 
-	shown map[string]bool // topics that stand on the screen
+	shown map[string]string // topics that stand on the screen, as they were last put
 }
 
 // advisories takes the lines of the log sender.
@@ -113,36 +113,47 @@ func topic(f *detect.Finding) string { return subject(f) + " " + string(f.Kind) 
 func (s *show) known(f *detect.Finding) bool {
 	s.mu.Lock()
 	defer s.mu.Unlock()
-	return s.shown[topic(f)]
+	return s.shown[topic(f)] != ""
 }
 
-// announce prints a finding: whole the first time, in short when it goes on, and
-// the end only of what was shown.
+// announce prints a finding: whole the first time, in short when something else is to be
+// said of it, and the end only of what was shown.
 func (s *show) announce(f detect.Finding, at string) {
 	s.mu.Lock()
-	before := s.shown[topic(&f)]
-	s.shown[topic(&f)] = f.Event != detect.Cleared
+	before, now := s.shown[topic(&f)], put(&f)
+	if s.shown[topic(&f)] = now; f.Event == detect.Cleared {
+		s.shown[topic(&f)] = ""
+	}
 	s.mu.Unlock()
-	if f.Event == detect.Updated && !before {
+	if f.Event == detect.Updated && before == "" {
 		f.Event = detect.Raised
 	}
-	if before || f.Event != detect.Cleared {
+	if before != now && (before != "" || f.Event != detect.Cleared) {
 		s.screen.print(advisory(&f, at))
 	}
 }
 
-// advisory is a finding as the screen tells it: one line, and what the watch says
-// about it the first time.
-func advisory(f *detect.Finding, at string) string {
+// put is what the screen says of a finding in a line.
+func put(f *detect.Finding) string {
 	what := words(string(f.Kind))
 	switch {
 	case f.Event == detect.Cleared:
-		what += " is over"
+		return what + " is over"
 	case string(f.Cause) == string(f.Kind):
 		what += ", " + detect.Likely(f.Confidence)
 	case f.Cause != "" && f.Cause != detect.Undetermined:
 		what += ", " + detect.Likely(f.Confidence) + " " + words(string(f.Cause))
 	}
+	if left, ok := f.Measures.Get("time_to_op_limit_s"); ok && left == 0 {
+		what += "; OP has met its limit"
+	}
+	return what
+}
+
+// advisory is a finding as the screen tells it: one line, and what the watch says
+// about it the first time.
+func advisory(f *detect.Finding, at string) string {
+	what := put(f)
 	if f.Event == detect.Updated {
 		return fmt.Sprintf("%-6s  %-8s  still: %s\n", at, subject(f), what)
 	}

@@ -9,6 +9,7 @@ import (
 	"math"
 	"os"
 	"path/filepath"
+	"slices"
 	"strconv"
 	"strings"
 	"text/tabwriter"
@@ -31,6 +32,11 @@ func List(w io.Writer) {
 		}
 	}
 	t.Flush()
+}
+
+// IsHealthy says whether a family is one of healthy loops.
+func IsHealthy(name string) bool {
+	return slices.ContainsFunc(healthyFamilies, func(f family) bool { return f.name == name })
 }
 
 // Details writes a line for all that went wrong: how to see it again, what was true

@@ -44,6 +44,7 @@ type Result struct {
 	Extra         []detect.Finding // raised without being in the truth, before the onset ones included
 	Early         int              // of them raised before the onset
 	Named         []Claim          // what was said with a cause, for the calibration
+	Raised        []float64        // of a fault: how often each kind of each loop was raised from the onset on
 	Findings      []detect.Finding
 
 	HasTuning              bool // the law is a PI one that can be read
@@ -114,6 +115,9 @@ func Judge(c *Case, nuisance float64) Result {
 	res.Findings = heard.all
 	res.Subtle = c.Subtle()
 	scoreFindings(c, &t, heard, &res)
+	if !c.Healthy {
+		res.Raised = timesRaised(heard.all, c.Epoch+int64(t.OnsetS*1000))
+	}
 	scoreTuning(c, &t, heard, watches, &res)
 	return res
 }
@@ -243,6 +247,26 @@ func scoreFindings(c *Case, t *Truth, h *listener, res *Result) {
 	case open:
 		res.Cause = "undetermined"
 	}
+}
+
+// timesRaised counts how often each kind of each loop was raised from a time on, ms UTC: a
+// trouble that lasts should be raised once.
+func timesRaised(fs []detect.Finding, from int64) (n []float64) {
+	at := map[string]int{}
+	for i := range fs {
+		f := &fs[i]
+		if f.Event != detect.Raised || f.At < from || aboutData(f.Kind) {
+			continue
+		}
+		key := f.Loop + "|" + string(f.Kind)
+		k, ok := at[key]
+		if !ok {
+			k = len(n)
+			at[key], n = k, append(n, 0)
+		}
+		n[k]++
+	}
+	return n
 }
 
 func scoreTuning(c *Case, t *Truth, h *listener, watches []*detect.Watch, res *Result) {

@@ -29,6 +29,7 @@ type Score struct {
 	LoopsWithFalse           int
 	extraKinds, saidWrong    map[string]int
 	delays, gErrors, rErrors []float64
+	raised                   []float64
 }
 
 // Rate is false findings per loop-year and its 95 % upper bound (exact, Poisson).
@@ -98,6 +99,7 @@ func (s *Score) add(r *Result) {
 				s.Open++
 			}
 		}
+		s.raised = append(s.raised, r.Raised...)
 		s.Extra += len(r.Extra)
 		s.Early += r.Early
 		for _, f := range r.Extra {
@@ -213,17 +215,18 @@ func Table(w io.Writer, results []Result) {
 	sort.SliceStable(faults, func(i, j int) bool { return badness(faults[i]) > badness(faults[j]) })
 	t := tabwriter.NewWriter(w, 0, 0, 2, ' ', 0)
 	if len(faults) > 0 {
-		fmt.Fprintln(w, "Faults. Delay in cycles of the swing, else in recovery times. Cause: share of those found. Extra: findings not in the truth, (early) before the onset.")
-		fmt.Fprintln(t, "family\tloops\tfound %\tmissed\tsubtle (found)\tdelay p50\tp90\tcause right %\twrong\tundet.\textra (early)\tgain err %\treset err %\tread %\twrongly said; extra kinds")
+		fmt.Fprintln(w, "Faults. Delay in cycles of the swing, else in recovery times. Cause: share of those found. Extra: findings not in the truth, (early) before the onset. Raised: how often one kind of one loop was, once being best: median, 90 % quantile, most.")
+		fmt.Fprintln(t, "family\tloops\tfound %\tmissed\tsubtle (found)\tdelay p50\tp90\tcause right %\twrong\tundet.\textra (early)\traised p50/p90/most\tgain err %\treset err %\tread %\twrongly said; extra kinds")
 		for _, s := range append(faults, all) {
 			named := s.Right + s.Wrong + s.Open
 			notes := counts(s.saidWrong)
 			if x := counts(s.extraKinds); x != "" {
 				notes = strings.TrimPrefix(notes+"; + "+x, "; ")
 			}
-			fmt.Fprintf(t, "%s\t%d\t%s\t%d\t%d (%d)\t%s\t%s\t%s\t%s\t%s\t%d (%d)\t%s\t%s\t%s\t%s\n", s.Family, s.Loops, percent(s.Found, s.Loops-s.Subtle),
+			fmt.Fprintf(t, "%s\t%d\t%s\t%d\t%d (%d)\t%s\t%s\t%s\t%s\t%s\t%d (%d)\t%s/%s/%s\t%s\t%s\t%s\t%s\n", s.Family, s.Loops, percent(s.Found, s.Loops-s.Subtle),
 				s.Loops-s.Subtle-s.Found, s.Subtle, s.SubtleFound, number(s.DelayMedian, "%.1f"), number(s.Delay90, "%.1f"),
 				percent(s.Right, named), percent(s.Wrong, named), percent(s.Open, named), s.Extra, s.Early,
+				number(quantile(s.raised, 0.5), "%.0f"), number(quantile(s.raised, 0.9), "%.0f"), number(quantile(s.raised, 1), "%.0f"),
 				number(100*s.GainError, "%.1f"), number(100*s.ResetError, "%.1f"), percent(s.GainRead, s.Readable), notes)
 		}
 		t.Flush()

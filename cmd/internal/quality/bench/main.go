@@ -24,6 +24,7 @@ func main() {
 	dump := flag.String("dump", "", "write one scenario (-family, -index) as trend CSV and loop list into this folder")
 	index := flag.Int("index", 0, "of the scenario for -dump or -one")
 	one := flag.Bool("one", false, "run only the scenario -index of each family and print its findings")
+	budgets := flag.Bool("budgets", false, "false findings on healthy loops of both benches at several nuisance budgets, the same loops at each (-n, -d, -seed)")
 	list := flag.Bool("list", false, "list the families")
 	flag.Parse()
 	if flag.NArg() > 0 {
@@ -37,6 +38,8 @@ func main() {
 	}
 	o := quality.Options{Loops: *n, Days: *days, Seed: *seed, Hold: *hold, Nuisance: *nuisance, Match: re.MatchString}
 	switch {
+	case *budgets:
+		writeBudgets(os.Stdout, *n, *days, *seed)
 	case *list:
 		quality.List(os.Stdout)
 	case *te != "":

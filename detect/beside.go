@@ -1,0 +1,52 @@
+package detect
+
+import "math"
+
+// A swing of a loop that another shares may be the other's, long before a group of both is
+// known: their periods as read are apart while it is irregular, and one may not be seen live
+// all the time. What a loop says of its own element in that time waits.
+
+// besideBegan and besideKnown are periods: within the first the swings of two loops began
+// together, which one fault makes of both sooner than two do, and after the second their phase
+// has shown it.
+const (
+	besideBegan = 20.0
+	besideKnown = 60.0
+)
+
+// besideKept is the mean resultant length over which crossings may be of one swing: of those
+// of loops apart once in a thousand times (Rayleigh's test of 8 up and 8 down, see together).
+const besideKept = 0.75
+
+// beside gives for each loop that swings another, not of its cascade, whose crossings keep to
+// its own or whose swing began with its own lately; periods that differ by less than two may be of one swing that comes and goes.
+func (s *shared) beside(end int64, live []SiteEvidence) map[string]string {
+	out := map[string]string{}
+	for i := range live {
+		a := &live[i]
+		name := s.loops[a.ID].Name
+		for j := range live {
+			b := &live[j]
+			if other := s.loops[b.ID].Name; i != j && math.Abs(math.Log(a.PeriodS/b.PeriodS)) < math.Ln2 && !s.cascaded(name, other) {
+				period := 1000 * max(a.PeriodS, b.PeriodS) // ms
+				began := math.Abs(float64(a.Since-b.Since)) < besideBegan*period && float64(end-max(a.Since, b.Since)) < besideKnown*period
+				if r, n := phaseKept(&a.Evidence, &b.Evidence); began || n >= 10 && r > besideKept {
+					out[name] = other
+					break
+				}
+			}
+		}
+	}
+	return out
+}
+
+// with is the group in which a loop may follow another, as far as is known; nil: it swings alone.
+func (s *shared) with(name string) *sharedGroup {
+	if g := s.follows(name); g != nil {
+		return g
+	}
+	if other := s.m.Beside[name]; other != "" && !s.root(name) {
+		return &sharedGroup{Loops: []string{name, other}}
+	}
+	return nil
+}
