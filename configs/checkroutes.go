@@ -135,7 +135,7 @@ func LoopWarnings(loops []*Loop) (w []string) {
 		}
 	}
 	if len(guessed) > 0 {
-		w = append(w, "no pv_low and pv_high: "+some(guessed)+"; the range is taken as 0 to 100, and gain in %/% is a guess")
+		w = append(w, "no pv_low and pv_high: "+some(guessed)+"; the range is taken as 0 to 100: small faults are not seen where PV uses little of it, and gain in %/% is a guess")
 	}
 	if len(indexed) > 0 {
 		w = append(w, "tags by ns=: "+some(indexed)+"; the number may change when the server restarts, nsu=URI stays")

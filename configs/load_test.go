@@ -198,7 +198,7 @@ advise:
 	}
 	want := []string{
 		"there is no heartbeat: nobody is told when the watch itself stops",
-		"no pv_low and pv_high: AIC-204; the range is taken as 0 to 100, and gain in %/% is a guess",
+		"no pv_low and pv_high: AIC-204; the range is taken as 0 to 100: small faults are not seen where PV uses little of it, and gain in %/% is a guess",
 		"tags by ns=: AIC-204; the number may change when the server restarts, nsu=URI stays",
 		`advise.routes[1] names the area "south", which no loop matches`,
 		`advise.routes[1] names the loop "LIC-*", which no loop matches`,

@@ -1,6 +1,9 @@
 package configs
 
-import "math"
+import (
+	"fmt"
+	"math"
+)
 
 // Loop is one loop of the loop list, as written and as understood. Numbers that
 // were not given are NaN; texts that were not given are empty. Every column of
@@ -182,6 +185,14 @@ func (l *Loop) Sign() float64 {
 // PVSpan and OPSpan are the spans of the scale in the units of the source.
 func (l *Loop) PVSpan() float64 { return l.PVHigh - l.PVLow }
 func (l *Loop) OPSpan() float64 { return l.OPHigh - l.OPLow }
+
+// RangeTaken says which range PV is taken to have where none was given; empty: one was.
+func (l *Loop) RangeTaken() string {
+	if l.PVRangeGiven {
+		return ""
+	}
+	return fmt.Sprintf("no PV range: %s to %s taken", formatNumber(l.PVLow), formatNumber(l.PVHigh))
+}
 
 // NewLoop is a loop with the defaults of the loop list and only a name.
 func NewLoop(name string) *Loop {

@@ -60,6 +60,10 @@ type scale struct {
 	Guessed                      bool // no range was given and the values do not fit the default
 }
 
+// outsideScale is how far outside a range that was not given a value can lie and still fit it,
+// spans (common practice, no source).
+const outsideScale = 0.2
+
 func (s *scale) init(l *configs.Loop, f *collector.Frame) {
 	s.PVLow, s.PVSpan = l.PVLow, l.PVSpan()
 	s.OPLow, s.OPSpan = l.OPLow, l.OPSpan()
@@ -67,7 +71,9 @@ func (s *scale) init(l *configs.Loop, f *collector.Frame) {
 		s.OPLow, s.OPSpan = 0, 100
 	}
 	pv, sp := float64(f.PV), float64(f.SP)
-	outside := func(v float64) bool { return v < s.PVLow-0.2*s.PVSpan || v > s.PVLow+1.2*s.PVSpan }
+	outside := func(v float64) bool {
+		return v < s.PVLow-outsideScale*s.PVSpan || v > s.PVLow+(1+outsideScale)*s.PVSpan
+	}
 	if !(s.PVSpan > 0) || !l.PVRangeGiven && (outside(pv) || outside(sp)) {
 		ref := max(math.Abs(pv), math.Abs(sp))
 		if math.IsNaN(ref) || ref == 0 {
@@ -95,10 +101,11 @@ type motion struct {
 	SPMoves             float32 // the same over days, from 0 on
 	SPRamp              moment  // when an SP that rests for most of the time was last on a ramp
 	Active              bool
+	LawSeen             bool // OP was seen answering e
 	ActiveSince         float64
-	LawSeen             bool       // OP was seen answering e
 	EF                  float64    // e through a lag of three slots
 	OPMin, OPMax        float32    // while active
+	UsedLo, UsedHi      float32    // extremes of PV and SP, %, where no range is given
 	HalfLo, HalfHi      [2]float32 // OP extremes of the running and the last half hour (or 60 slots)
 	SPLo, SPHi          [2]float32
 	ELo, EHi            [2]float32

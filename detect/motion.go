@@ -8,7 +8,7 @@ import (
 )
 
 func (m *motion) first() {
-	*m = motion{PV: math.NaN(), SP: math.NaN(), OP: math.NaN(), SPStep: -1e12, SPPrevStep: -1e12, OPMin: 1e9, OPMax: -1e9}
+	*m = motion{PV: math.NaN(), SP: math.NaN(), OP: math.NaN(), SPStep: -1e12, SPPrevStep: -1e12, OPMin: 1e9, OPMax: -1e9, UsedLo: 1e9, UsedHi: -1e9}
 	m.clearHalf()
 	m.HalfLo[1], m.HalfHi[1] = m.HalfLo[0], m.HalfHi[0]
 	m.SPLo[1], m.SPHi[1] = m.SPLo[0], m.SPHi[0]
@@ -125,8 +125,20 @@ func (w *Watch) stepMotion(flags collector.Flags) {
 	if active && in.hasOP {
 		m.OPMin, m.OPMax = min(m.OPMin, op), max(m.OPMax, op)
 	}
+	if !w.loop.PVRangeGiven {
+		m.use(in.pv)
+		m.use(in.sp)
+	}
 	w.stepMarks(was)
 	m.PV, m.SP, m.OP, m.E = in.pv, in.sp, in.op, in.e
+}
+
+// use takes v, %, into what is used of the range. What lies far outside is the code of a
+// failure, not a value of the loop.
+func (m *motion) use(v float64) {
+	if v > -100*outsideScale && v < 100+100*outsideScale {
+		m.UsedLo, m.UsedHi = min(m.UsedLo, float32(v)), max(m.UsedHi, float32(v))
+	}
 }
 
 // handStep: OP went by a hand, or a program, in one slot: far, and three times as far as the

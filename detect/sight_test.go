@@ -148,3 +148,61 @@ func TestBlindSpotsOfTheRecord(t *testing.T) {
 		}
 	}
 }
+
+// Where nobody gave a PV range and PV and SP use little of the one that is taken, that is said
+// in the loop's unit; where they use enough of it, or a range is given, it is not. A code of a
+// failure far outside uses nothing.
+func TestPVRangeThatNobodyGave(t *testing.T) {
+	g := newRig(plantA, 2, 20, 5)
+	g.noise, g.opLo, g.opHi = 0.1, 0, 100
+	g.bumps(6, 300)
+	g.run(4 * 3600)
+	for _, c := range []struct {
+		name       string
+		low, scale float64 // of the rig's %, units
+		given      bool
+		spoil      bool
+		want       string // of the blind spot, whole
+	}{
+		{"a level of 5 m", 0, 0.05, false, false, "no PV range: 0 to 100 taken, PV and SP have moved within 2.3 to 2.7 m: small faults (an offset under 0.8 m) are not seen; enter pv_low and pv_high"},
+		{"the same with a failure's code", 0, 0.05, false, true, "no PV range: 0 to 100 taken, PV and SP have moved within 2.3 to 2.7 m: small faults (an offset under 0.8 m) are not seen; enter pv_low and pv_high"},
+		{"the same, its range given", 0, 0.05, true, false, ""},
+		{"enough of the range", -150, 4, false, false, ""},
+		{"outside, little used", 200, 0.5, false, false, "no PV range: 0 to 450 taken after the first values, PV and SP have moved within 223 to 227 m: small faults (an offset under 3.6 m) are not seen; enter pv_low and pv_high"},
+		{"outside, enough used", -2500, 60, false, false, "no PV range: 0 to 1000 taken after the first values: percentages and gain are guesses"},
+	} {
+		l := loopOf("LIC-310", g)
+		l.Unit, l.PVRangeGiven = "m", c.given
+		if c.given {
+			l.PVHigh = 5
+		}
+		w := detect.New(l, 0, detect.Options{})
+		spot := func() string {
+			for _, b := range w.View().BlindSpots {
+				if strings.Contains(b, "PV range") {
+					return b
+				}
+			}
+			return ""
+		}
+		if got := spot(); (got == "no PV range: 0 to 100 taken") == c.given {
+			t.Errorf("%s, no data: %q", c.name, got)
+		}
+		for i, f := range g.out {
+			f.PV, f.SP = float32(c.low+c.scale*float64(f.PV)), float32(c.low+c.scale*float64(f.SP))
+			if c.spoil && i == 2000 {
+				f.PV = -9999
+			}
+			w.Step(&f, func(*detect.Finding) {})
+			if i == 30 && strings.HasPrefix(spot(), "no PV range: ") == c.given { // its noise is not known yet
+				t.Errorf("%s, at the begin: %q", c.name, spot())
+			}
+		}
+		if got := spot(); got != c.want {
+			t.Errorf("%s: %q", c.name, got)
+		}
+		if c.want != "" && !slices.Contains(w.Explain(), "blind spot: "+c.want) {
+			t.Errorf("%s: explain does not say it", c.name)
+		}
+	}
+}

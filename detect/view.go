@@ -3,6 +3,7 @@ package detect
 import (
 	"fmt"
 	"math"
+	"strconv"
 
 	"midwatch/collector"
 	"midwatch/configs"
@@ -52,7 +53,7 @@ func (w *Watch) View() View {
 	v := View{State: Judged, Last: s.Last, SampleS: s.Grid.DT, NoisePV: nan, TimeScaleS: nan, PeriodS: nan,
 		GainPct: nan, GainLow: nan, GainHigh: nan, ResetS: nan, ResetLow: nan, ResetHigh: nan, LagS: nan}
 	if !s.Grid.Begun {
-		v.State, v.Why = NoData, "no value yet"
+		v.State, v.Why, v.BlindSpots = NoData, "no value yet", w.blindSpots()
 		return v
 	}
 	if s.Noise.known() {
@@ -153,7 +154,7 @@ func (w *Watch) blindSpots() (b []string) {
 	s := &w.s
 	m := &s.Motion
 	if !s.Grid.Begun || s.Grid.DT == 0 {
-		return nil
+		return w.rangeSpot(nil)
 	}
 	if s.Last.OP != s.Last.OP && m.OPMin > m.OPMax {
 		b = append(b, "no OP: saturation, sticking, tuning and most causes cannot be seen")
@@ -196,10 +197,49 @@ func (w *Watch) blindSpots() (b []string) {
 	if n := w.tuningNote(); n != "" {
 		b = append(b, "the loop list does not fit: "+n)
 	}
-	if s.Scale.Guessed {
-		b = append(b, "no range given: percentages and gain are guesses")
+	return w.rangeSpot(b)
+}
+
+// littleUsed is the share of a range, %, that PV and SP use at least of one made for them: less
+// is that of another measurement more likely (common practice, no source).
+const littleUsed = 20.0
+
+// rangeSpot appends what a PV range that nobody gave hides: every limit in % of it is as much
+// too wide as the range is.
+func (w *Watch) rangeSpot(b []string) []string {
+	sc, m := &w.s.Scale, &w.s.Motion
+	if !w.s.Grid.Begun {
+		if n := w.loop.RangeTaken(); n != "" {
+			b = append(b, n)
+		}
+		return b
 	}
-	return b
+	if w.loop.PVRangeGiven && !sc.Guessed {
+		return b
+	}
+	said := fmt.Sprintf("no PV range: %.4g to %.4g taken", sc.PVLow, sc.PVLow+sc.PVSpan)
+	if sc.Guessed {
+		said += " after the first values"
+	}
+	switch used := float64(m.UsedHi - m.UsedLo); {
+	case w.s.Noise.known() && used > 0 && used < littleUsed:
+		low, high := roundedOut(sc.PVLow+w.pvUnits(float64(m.UsedLo)), sc.PVLow+w.pvUnits(float64(m.UsedHi)))
+		said += fmt.Sprintf(", PV and SP have moved within %s to %s%s: small faults (an offset under %s) are not seen; enter pv_low and pv_high",
+			low, high, unitOf(w.loop.Unit), w.pvText(w.offsetLeast()))
+	case sc.Guessed:
+		said += ": percentages and gain are guesses"
+	case w.s.Noise.known():
+		return b
+	}
+	return append(b, said)
+}
+
+// roundedOut gives the ends of a span to the first digit of its width, outwards.
+func roundedOut(low, high float64) (string, string) {
+	digits := -math.Floor(math.Log10(high - low))
+	step := math.Pow(10, -digits)
+	text := func(v float64) string { return strconv.FormatFloat(v*step, 'f', max(0, int(digits)), 64) }
+	return text(math.Floor(low/step + 1e-3)), text(math.Ceil(high/step - 1e-3))
 }
 
 // blind: a blind spot that hides the loop whole.

@@ -262,7 +262,11 @@ func (p *Page) fillState(v *loopPage, s *LoopState, view *detect.View, known boo
 	if view.PeriodS > 0 {
 		add("cycle now", seconds(view.PeriodS))
 	}
-	add("range of PV", number(lp.PVLow, 5)+" to "+quantity(lp.PVHigh, unit))
+	if of := number(lp.PVLow, 5) + " to " + quantity(lp.PVHigh, unit); lp.PVRangeGiven {
+		add("range of PV", of)
+	} else {
+		add("range of PV", "not in the loop list; drawn over "+of)
+	}
 	tune := func(name, value string) { v.Tuning = append(v.Tuning, measureLine{name, value}) }
 	tune("gain in service", ranged(view.GainPct, view.GainLow, view.GainHigh, "%/%", view.Unread))
 	tune("gain in the list", quantity(lp.GainPct, "%/%"))

@@ -20,6 +20,7 @@ import (
 	"midwatch/cmd/internal/daemon"
 	"midwatch/collector"
 	"midwatch/configs"
+	"midwatch/detect"
 )
 
 // checkFlags are the flags of check.
@@ -37,8 +38,8 @@ func checkVerb(h *house) *cobra.Command {
 		Long: `Reads the configuration, the loop list and the secrets they name, and reports
 every mistake with file, line and column. When there is none it shows what was
 understood: the tuning of each loop in both usual forms, to be read against the
-faceplate, cascades, and what loops share; and, where a watch has run on the data
-folder, how many loops it can judge and the blind spots of each.
+faceplate, cascades, what loops share, and which have no PV range; and, where a watch
+has run on the data folder, how many loops it can judge and the blind spots of each.
 
 With --loops a loop list is checked alone, without sources and tags: enough for
 replay.
@@ -78,7 +79,7 @@ type checked struct {
 type loopChecked struct {
 	Loop   string   `json:"loop"`
 	Tuning string   `json:"tuning,omitempty"`
-	Blind  []string `json:"blind_spots,omitempty"` // as a watch on this data folder sees it
+	Blind  []string `json:"blind_spots,omitempty"` // as a watch on this data folder sees it, or the list alone
 }
 
 type probed struct {
@@ -208,15 +209,22 @@ func (h *house) loopRows(c *configs.Config) []api.Loop {
 }
 
 // loopsChecked shows the tuning, and what keeps a watch on this data folder from seeing
-// the loop, a tuning that its data contradict among it.
+// the loop, a tuning that its data contradict among it. What the list alone shows is said
+// where there is no watch.
 func loopsChecked(loops []*configs.Loop, rows []api.Loop) []loopChecked {
 	blind := map[string][]string{}
 	for _, x := range rows {
-		blind[x.Loop] = x.Blind
+		if x.State != detect.NoData || x.Blind != nil {
+			blind[x.Loop] = x.Blind
+		}
 	}
 	var out []loopChecked
 	for _, l := range loops {
-		out = append(out, loopChecked{Loop: l.Name, Tuning: l.DescribeTuning(), Blind: blind[l.Name]})
+		spots, seen := blind[l.Name]
+		if s := l.RangeTaken(); s != "" && !seen { // the watch has not come to it yet
+			spots = []string{s}
+		}
+		out = append(out, loopChecked{Loop: l.Name, Tuning: l.DescribeTuning(), Blind: spots})
 	}
 	return out
 }
