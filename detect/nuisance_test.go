@@ -24,7 +24,7 @@ func TestDayToldLate(t *testing.T) {
 		"the newest find it":        {0.6 * day, 0.5 * day, 5000, true},
 		"another beat":              {0.36 * day, 0.36 * day, 5000, false},
 		"a slow loop, to the day":   {0.5 * day, 0.5 * day, 30000, true},
-		"a slow loop, nearly":       {0.48 * day, 0.48 * day, 30000, false},
+		"a slow loop, not a day":    {0.4 * day, 0.4 * day, 30000, false},
 		"a loop as slow as its own": {0.5 * day, 0.5 * day, 50000, false},
 		"another, growing old":      {0.4 * day, 0.36 * day, 5000, false},
 	} {

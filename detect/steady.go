@@ -206,7 +206,7 @@ func (w *Watch) scheduled(b *cycleBank, period float64) bool {
 // the half-cycles can tell: a load that the people it serves make.
 func (w *Watch) ofTheDay(b *cycleBank, period float64) bool {
 	rt, _ := w.resetS()
-	if period < 43200 || period < 2*rt {
+	if period < 43200 || period < 2*rt { // slower swings than that may be its own, but few are as long as a day
 		return false
 	}
 	// A day with peaks of its own shape gives half-cycles of many lengths, and what is so far
@@ -218,19 +218,9 @@ func (w *Watch) ofTheDay(b *cycleBank, period float64) bool {
 	// shapes of its own. That of all in the ring is the surest.
 	all, regular, _ := b.lengths(int(b.N))
 	day := max(0.05, min(0.15, 2/(regular*math.Sqrt(max(float64(b.N), 1)))))
-	newest, steady, _ := b.lengths(min(int(b.N), 8))
-	if period < 6*rt { // it may be its own, but few loops swing with just the day
-		return max(regular, steady) > dayBeat && (math.Abs(period/86400-1) < dayNear || math.Abs(period*all/newest/86400-1) < dayNear)
-	}
+	newest, _, _ := b.lengths(min(int(b.N), 8))
 	return math.Abs(period/86400-1) < day || math.Abs(period*all/newest/86400-1) < day
 }
-
-// dayBeat is the regularity of half-cycles which only what a clock drives has for days, and
-// dayNear how near such a period is to a day.
-const (
-	dayBeat = 10
-	dayNear = 0.03
-)
 
 // steadySP: SP has not stepped for so long, s, and is not ramped.
 func (w *Watch) steadySP(span float64) bool {
