@@ -154,3 +154,38 @@ func TestIdlesEachNight(t *testing.T) {
 		}
 	}
 }
+
+// PV that creeps to the end of its range with OP at its limit all the while is what the limit
+// does; one that jumps there, before OP is at its limit or later, is a failed measurement, and
+// so is one that stays there once OP is free.
+func TestRangeEndByTheLimit(t *testing.T) {
+	creep := func(t float64) float64 { return min(50, t/40) }
+	for _, x := range []struct {
+		name string
+		law  func(t float64) (e, op float64)
+		want Cause
+	}{
+		{"creeps, OP at its limit", func(t float64) (float64, float64) { return creep(t), 100 }, NoCause},
+		{"creeps, OP in its range", func(t float64) (float64, float64) { return creep(t), 50 + min(45, t/400) }, MeasurementCause},
+		{"jumps, then OP goes to its limit", func(t float64) (float64, float64) { return 50, min(100, 50+t/4) }, MeasurementCause},
+		{"jumps, OP at its limit", func(t float64) (float64, float64) {
+			if t < 1000 {
+				return 4, 100
+			}
+			return 50, 100
+		}, MeasurementCause},
+		{"creeps, then OP is free", func(t float64) (float64, float64) {
+			if t < 3000 {
+				return creep(t), 100
+			}
+			return 50, max(30, 100-(t-3000)/20)
+		}, MeasurementCause},
+	} {
+		w := offsetWatch(nil)
+		w.s.Motion.OPMin, w.s.Motion.OPMax = 0, 100
+		fs := feed(w, 6000, x.law)
+		if c := said(fs, PVAtRangeEnd); c != x.want {
+			t.Errorf("%s: said %q, want %q", x.name, c, x.want)
+		}
+	}
+}

@@ -27,6 +27,7 @@ type miscState struct {
 	// PV at the end of its range.
 	EndSince float64 // s; 0 not there
 	EndHigh  bool
+	EndSpent bool   // OP was at its limit before PV crept there, and is yet
 	InsideN  uint32 // slots inside the range, saturating
 	OutsideN uint32
 	Pegged   bool
@@ -74,7 +75,7 @@ func stepFrozen(w *Watch) {
 	x, m := &s.Misc, &s.Motion
 	if m.PVSame != x.StillFrom {
 		*x = miscState{GoodAt: x.GoodAt, BadN: x.BadN, BadFor: x.BadFor, BadWas: x.BadWas, Stale: x.Stale, OPAtStill: in.op, OPLast: float32(in.trim), StillFrom: m.PVSame,
-			EndSince: x.EndSince, EndHigh: x.EndHigh, InsideN: x.InsideN, OutsideN: x.OutsideN, Pegged: x.Pegged,
+			EndSince: x.EndSince, EndHigh: x.EndHigh, EndSpent: x.EndSpent, InsideN: x.InsideN, OutsideN: x.OutsideN, Pegged: x.Pegged,
 			OffNormal: x.OffNormal, OffNormalSince: x.OffNormalSince}
 		return
 	}
@@ -186,6 +187,13 @@ func stepRangeEnd(w *Watch) {
 	usual := float64(x.InsideN) > 5*float64(x.OutsideN)
 	if x.EndSince == 0 || x.EndHigh != high {
 		x.EndSince, x.EndHigh = in.t, high
+		x.EndSpent = w.spent() && math.Abs(s.Motion.EF) > math.Abs(in.e)/2 // by a jump e is new
+	}
+	// A process that OP can hold no longer goes to the end by itself: that the limit is at
+	// fault is said elsewhere. Once OP is free again PV must come back.
+	if x.EndSpent {
+		x.EndSpent, x.EndSince = w.spent(), in.t
+		return
 	}
 	asks := low && in.sp > 3 || high && in.sp < 97
 	// There from the start: the controller has done what it can, for long, and PV knows no
@@ -197,6 +205,12 @@ func stepRangeEnd(w *Watch) {
 	if in.active && asks && (usual || x.Pegged) && x.InsideN > 200 && in.t-x.EndSince > max(max(300, 60*in.dt), 2*w.s.Motion.PVRunMax) {
 		x.Pegged = true
 	}
+}
+
+// spent: OP lies at the limit that e pushes it towards, or stands where it ever stopped.
+func (w *Watch) spent() bool {
+	z, m := &w.s.Sat, &w.s.Motion
+	return z.From > 0 || z.AtSince > 0 || w.in.hasOP && w.in.t-m.OPSame > ownLimitS(w.in.dt) && w.atOwnLimit()
 }
 
 // restsByPlan: the loop's duty lets its equipment stand still.
