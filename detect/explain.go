@@ -16,6 +16,14 @@ func readText(v, low, high float64, unit string) string {
 	return fmt.Sprintf("%.3g%s (%.3g to %.3g)", v, unit, low, high)
 }
 
+// lastValue is the newest value, or that there is none of use.
+func lastValue(format string, v float64) string {
+	if v != v {
+		return "unknown"
+	}
+	return fmt.Sprintf(format, v)
+}
+
 // Explain gives the evidence held now, a line each, readable by an engineer: every number
 // with the limit it is held against, in the words "asked". Where a kind has several tests
 // the first is shown.
@@ -24,9 +32,13 @@ func (w *Watch) Explain() []string {
 	if !s.Grid.Begun {
 		return []string{"no usable frame yet"}
 	}
+	op := s.Motion.OP
+	if s.Last.OP != s.Last.OP {
+		op = math.NaN()
+	}
 	out := []string{
 		fmt.Sprintf("sample interval %s; noise level %s (%.3f %% of range)", duration(s.Grid.DT), w.pvText(s.Noise.sigma()), s.Noise.sigma()),
-		fmt.Sprintf("PV %.4g, SP %.4g, OP %.1f %%, mode %q, law acting: %v", s.Last.PV, s.Last.SP, s.Motion.OP, s.Motion.Mode.String(), s.Motion.Active),
+		fmt.Sprintf("PV %s, SP %s, OP %s, mode %q, law acting: %v", lastValue("%.4g", float64(s.Last.PV)), lastValue("%.4g", float64(s.Last.SP)), lastValue("%.1f %%", op), s.Motion.Mode.String(), s.Motion.Active),
 	}
 	if k, k0, k1, t, t0, t1 := w.tuningRange(); k == k {
 		out = append(out, fmt.Sprintf("tuning in service: gain %s, reset %s", readText(k, k0, k1, ""), readText(t, t0, t1, " s")))

@@ -1,6 +1,7 @@
 package detect
 
 import (
+	"math"
 	"regexp"
 	"strconv"
 	"strings"
@@ -146,6 +147,18 @@ func TestExplainSaysWhatWasNotRead(t *testing.T) {
 	}
 	w.s.Tune.Law = 0.9
 	says("tuning in service: not read: the readings are not sharp enough")
+}
+
+// A loop without OP is explained in words, not in numbers that are none.
+func TestExplainOfNoValue(t *testing.T) {
+	w := New(configs.NewLoop("LIC-310"), 0, Options{})
+	for i := range 40 {
+		w.Step(&collector.Frame{Time: 1767225600000 + int64(i)*1000, PV: 50, SP: 50, OP: float32(math.NaN())}, func(*Finding) {})
+	}
+	all := strings.Join(w.Explain(), "\n")
+	if strings.Contains(all, "NaN") || !strings.Contains(all, "OP unknown") {
+		t.Error(all)
+	}
 }
 
 // One row says nothing of the mode: it is not called manual.
