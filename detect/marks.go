@@ -349,7 +349,7 @@ func (w *Watch) nothingBefore(k int, f *Finding) string {
 	if _, same := w.tuningMoved(onset); changed || !same || !w.readSame(onset) || f.Cause == IntegralMissing {
 		return " No change of mode or SP was seen in the 24 h before."
 	}
-	if k == kGrowing && (f.Cause == GainTooHigh || f.Cause == ResetTooShort) {
+	if k == kGrowing && f.Cause != OutsideDisturbance {
 		return " No change of mode, SP or tuning was seen in the 24 h before: the process, its final element or the measurement may have changed."
 	}
 	return " No change of mode, SP or tuning was seen in the 24 h before."

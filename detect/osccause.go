@@ -120,7 +120,11 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 		byPhi, also = Undetermined, [2]Cause{GainTooHigh, ResetTooShort}
 	}
 	kept := w.keptTuning(rk, rt, p)
-	if kept && byPhi != GainTooLow {
+	switch {
+	case !kept || byPhi == GainTooLow:
+	case phi > phiReset+5: // a shorter lag would cure it, too: which knob is for who tunes
+		byPhi, also = Undetermined, [2]Cause{GainTooHigh, ResetTooShort}
+	default:
 		byPhi, also = GainTooHigh, [2]Cause{ResetTooShort, ProcessNonlinear}
 	}
 	if w.loop.Process == configs.Runaway && byPhi == GainTooHigh {

@@ -91,8 +91,8 @@ const keptConfidence = 0.75
 // keptTuning: gain and reset in service, of what was usual before a growing swing of a period,
 // s, are what they were while the loop was long calm. Not the tuning changed but the process, and
 // of what changes there (the gain of an element with its opening, of a heat exchanger with its
-// flow, of a titration with its buffer) most is gain, whatever the lag: a loop of much dead time
-// has a short reset and a large lag all its sound life.
+// flow, of a titration with its buffer) most is gain. A loop of much dead time has a short reset
+// and a large lag all its sound life: its lag does not make the reset the one at fault.
 func (w *Watch) keptTuning(rk, rt, period float64) bool {
 	o := &w.s.Osc
 	return o.Grow && o.Since > calmPeriods*period && near(rk, 1) && near(rt, 1)

@@ -322,18 +322,20 @@ func TestKeptTuningLeavesTheProcess(t *testing.T) {
 		what    string
 		since   float64 // s
 		wasGain float32
-		wasT    float32 // s; 10 s now
+		wasT    float32 // s
+		now     float32 // s; 13 s is a lag of 47 degrees at the period of 100 s, 8 s one of 59
 		want    Cause
 	}{
-		{"kept, long calm", 150 * 100, 2, 10, GainTooHigh},
-		{"kept, swings from the start", 50 * 100, 2, 10, ResetTooShort},
-		{"reset cut", 150 * 100, 2, 30, ResetTooShort},
-		{"no usual tuning known", 150 * 100, 0, 0, ResetTooShort},
+		{"kept, long calm", 150 * 100, 2, 13, 13, GainTooHigh},
+		{"kept, swings from the start", 50 * 100, 2, 13, 13, ResetTooShort},
+		{"reset cut", 150 * 100, 2, 39, 13, ResetTooShort},
+		{"no usual tuning known", 150 * 100, 0, 0, 8, ResetTooShort},
+		{"kept, long calm, a large lag", 150 * 100, 2, 8, 8, Undetermined},
 	} {
 		w, b := cyclingLoop(grows)
 		f, o := &w.s.Fits[0].Last, &w.s.Osc
 		w.in.t = c.since + 1000
-		f.At, f.T0, f.Ti = momentOf(c.since+900), momentOf(c.since+500), 10
+		f.At, f.T0, f.Ti = momentOf(c.since+900), momentOf(c.since+500), c.now
 		o.Since, o.WasK, o.WasT = c.since, c.wasGain, c.wasT
 		w.judgeOscCause(b)
 		if got := causes[o.Cause]; got != c.want {
