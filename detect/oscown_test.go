@@ -323,7 +323,7 @@ func TestKeptTuningLeavesTheProcess(t *testing.T) {
 		since   float64 // s
 		wasGain float32
 		wasT    float32 // s
-		now     float32 // s; 13 s is a lag of 47 degrees at the period of 100 s, 8 s one of 59
+		now     float32 // s; 13 s is a lag of 49 degrees at the period of 100 s, 8 s one of 61
 		want    Cause
 	}{
 		{"kept, long calm", 150 * 100, 2, 13, 13, GainTooHigh},
