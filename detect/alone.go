@@ -28,11 +28,17 @@ func (b *cycleBank) evenest(level int, large float64) (best ringStat, plain floa
 	return
 }
 
-// alone: by its evenness alone it is a cycle, within what the loop's own dynamics may make.
-func (w *Watch) alone(level int, b *cycleBank, period, usual, sigma float64) bool {
+// aloneAsked: a cycle of a period, s, at a level may be one by its evenness alone: its shape was
+// looked at, and it is within what the loop's own dynamics may make.
+func (w *Watch) aloneAsked(level int, period float64) bool {
 	k := &w.s.Track
 	rt, _ := w.resetS()
-	if !(period < ownSlowest*rt) || b.tip() < aloneLarge(sigma)/2 || !k.On || int(k.Bank) != level || k.Looks < 2 || k.Rests > aloneRests {
+	return k.On && int(k.Bank) == level && k.Looks >= 2 && period < ownSlowest*rt
+}
+
+// alone: by its evenness alone it is a cycle.
+func (w *Watch) alone(level int, b *cycleBank, period, usual, sigma float64) bool {
+	if !w.aloneAsked(level, period) || b.tip() < aloneLarge(sigma)/2 || w.s.Track.Rests > aloneRests {
 		return false
 	}
 	q, plain := b.evenest(level, largeInFew(usual, sigma))

@@ -18,8 +18,8 @@ const (
 // of loops apart once in a thousand times (Rayleigh's test of 8 up and 8 down, see together).
 const besideKept = 0.75
 
-// beside gives for each loop that swings another, not of its cascade, whose crossings keep to
-// its own or whose swing began with its own lately; periods that differ by less than two may be of one swing that comes and goes.
+// beside gives for each loop that swings another, not of its cascade, at a period that may be
+// its own, whose crossings keep to its own or whose swing began with its own lately.
 func (s *shared) beside(end int64, live []SiteEvidence) map[string]string {
 	out := map[string]string{}
 	for i := range live {
@@ -27,17 +27,23 @@ func (s *shared) beside(end int64, live []SiteEvidence) map[string]string {
 		name := s.loops[a.ID].Name
 		for j := range live {
 			b := &live[j]
-			if other := s.loops[b.ID].Name; i != j && math.Abs(math.Log(a.PeriodS/b.PeriodS)) < math.Ln2 && !s.cascaded(name, other) {
-				period := 1000 * max(a.PeriodS, b.PeriodS) // ms
-				began := math.Abs(float64(a.Since-b.Since)) < besideBegan*period && float64(end-max(a.Since, b.Since)) < besideKnown*period
-				if r, n := phaseKept(&a.Evidence, &b.Evidence); began || n >= 10 && r > besideKept {
-					out[name] = other
-					break
-				}
+			if other := s.loops[b.ID].Name; i != j && mayBeOne(a.PeriodS, b.PeriodS) && !s.cascaded(name, other) && mayShare(end, a, b) {
+				out[name] = other
+				break
 			}
 		}
 	}
 	return out
+}
+
+// mayShare: their swings began together lately, or their crossings keep to each other.
+func mayShare(end int64, a, b *SiteEvidence) bool {
+	period := 1000 * max(a.PeriodS, b.PeriodS) // ms
+	if math.Abs(float64(a.Since-b.Since)) < besideBegan*period && float64(end-max(a.Since, b.Since)) < besideKnown*period {
+		return true
+	}
+	r, n := phaseKept(&a.Evidence, &b.Evidence)
+	return n >= 10 && r > besideKept
 }
 
 // with is the group in which a loop may follow another, as far as is known; nil: it swings alone.

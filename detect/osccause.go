@@ -114,17 +114,15 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 			byPhi, also = ResetTooShort, [2]Cause{GainTooHigh}
 		}
 	}
-	plain := phi < phiGain-4 || phi > phiReset+5
-	if rk == 0 && !plain && byPhi != GainTooLow {
-		// At the edge of the bands, with nothing known of the tuning before.
-		byPhi, also = Undetermined, [2]Cause{GainTooHigh, ResetTooShort}
-	}
+	large := phi > phiReset+5
+	plain := phi < phiGain-4 || large
 	kept := w.keptTuning(rk, rt, p)
 	switch {
-	case !kept || byPhi == GainTooLow:
-	case phi > phiReset+5: // a shorter lag would cure it, too: which knob is for who tunes
+	case byPhi == GainTooLow:
+	case rk == 0 && !plain, // at the edge of the bands, with nothing known of the tuning before
+		kept && large: // a shorter lag would cure it, too: which knob is for who tunes
 		byPhi, also = Undetermined, [2]Cause{GainTooHigh, ResetTooShort}
-	default:
+	case kept:
 		byPhi, also = GainTooHigh, [2]Cause{ResetTooShort, ProcessNonlinear}
 	}
 	if w.loop.Process == configs.Runaway && byPhi == GainTooHigh {
@@ -371,7 +369,8 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	play := w.loop.Process != configs.SelfRegulating && strays && sh.looks >= shapeLooks && si > least && sh.peaked > corners && sh.peaked < peakedMost && phi > phiDeadBand && phi < phiDeadBandMost
 	clipped := s.Tune.LimitAt > 0 && w.in.t-s.Tune.LimitAt < 1.5*o.P // a cycle between the limits of OP is as even as a clock's
 	unchanged := near(rk, 1) && near(rt, 1)
-	bolder := changed || w.bolder()
+	bold := w.bolder()
+	bolder := changed || bold
 	open := [2]Cause{OutsideDisturbance, byPhi}
 	if bolder && byPhi != Undetermined {
 		open = [2]Cause{byPhi, OutsideDisturbance}
@@ -384,7 +383,7 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	drive := o.Climb <= atOnce && q.regular > evenBeat && spread < steady && move < evenSize && sh.looks >= shapeLooks
 	// No tuning of the loop's own makes a swing quite even from its first cycle on, so that a
 	// change read along with it is rather an error of reading.
-	doubt := drive && changed && !w.bolder() && !clipped && spread < plainSteady && move < plainEven
+	doubt := drive && changed && !bold && !clipped && spread < plainSteady && move < plainEven
 	drive = drive && s.Clock.jitters(causes[o.Cause] == OutsideDisturbance)
 	retuned := integrating && !(near(rk, 1) && rt > 1/1.25) // a longer reset makes no loop swing
 	follows := s.Motion.PosN > 300 && s.Motion.Astray < 0.3 // the position shows that the element does

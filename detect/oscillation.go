@@ -82,7 +82,7 @@ func (w *Watch) judgeCycles(level int, b *cycleBank) {
 		return // irregular: nothing to judge yet
 	}
 	own := o.Grow || o.Sus
-	if !own && st.regular > 3 && st.period > bankLowP && st.amp > max(1.3*s.Noise.sigma(), 0.08) && (!w.usualKnown(b) || st.amp > 1.2*b.Usual.Value() || st.regular > plainBeat) && w.betterTrack(level, st) {
+	if !own && st.regular > 3 && st.period > bankLowP && st.amp > max(1.3*s.Noise.sigma(), 0.08) && (!w.ordinary(b, st.amp) || st.regular > plainBeat) && w.betterTrack(level, st) {
 		w.startTrack(level)
 	}
 	if s.Track.On && int(s.Track.Bank) == level {
@@ -112,6 +112,11 @@ func (w *Watch) betterTrack(level int, st ringStat) bool {
 }
 
 func (w *Watch) usualKnown(b *cycleBank) bool { return b.Usual.N >= 40 }
+
+// ordinary: a mean peak, %, is hardly over the usual one.
+func (w *Watch) ordinary(b *cycleBank, amp float64) bool {
+	return w.usualKnown(b) && amp < 1.2*b.Usual.Value()
+}
 
 func (w *Watch) beginOsc(level int, b *cycleBank, back int) {
 	o := &w.s.Osc
@@ -186,7 +191,7 @@ func (w *Watch) followOsc(level int, b *cycleBank, st ringStat) {
 		floor = max(1.6*s.Noise.sigma(), 0.12)
 	}
 	switch few := fast(level, st.period); {
-	case st.amp < 0.5*floor || few && st.regular < fastKeeps || w.usualKnown(b) && st.amp < 1.2*b.Usual.Value() && st.regular < plainBeat:
+	case st.amp < 0.5*floor || few && st.regular < fastKeeps || w.ordinary(b, st.amp) && st.regular < plainBeat:
 		o.Bad++
 	case few: // noise is as regular now and then, never most of the time
 		o.Bad = min(max(o.Bad, 1)-1, fastBad)
@@ -292,9 +297,8 @@ func (w *Watch) swingsOn() bool {
 	}
 	for l := max(int(o.Bank), 1) - 1; l <= min(int(o.Bank)+1, w.levels()-1); l++ {
 		b := &w.s.Cycles[l]
-		known := w.usualKnown(b)
 		q, ok := b.stat(l, goneHalves)
-		if ok && (known || l == int(o.Bank)) && q.amp > 0.5*float64(o.Mean) && !(known && q.amp < 1.2*b.Usual.Value()) {
+		if ok && (w.usualKnown(b) || l == int(o.Bank)) && q.amp > 0.5*float64(o.Mean) && !w.ordinary(b, q.amp) {
 			return true
 		}
 	}

@@ -246,18 +246,27 @@ func TestBeatOfOwnRinging(t *testing.T) {
 	}
 }
 
-// A beat that lasted over many periods is none of chance, however its size waxes.
-func TestBeatOfAWaxingSwing(t *testing.T) {
+// A beat that lasted over many periods is none of chance, however its size waxes; against the
+// shape of a valve stands only one without blur.
+func TestBeatThatOutweighs(t *testing.T) {
 	for _, c := range []struct {
+		what string
 		was  float32 // ratio of the clock's full blocks
+		sq   float32 // mean square of the sizes, of a mean of 1
+		si   float64 // index of the shape, 0 a sine and 1 a triangle
 		want Cause
-	}{{1, OutsideDisturbance}, {2.5, Undetermined}} {
+	}{
+		{"waxing", 1, 1.25, 0.3, OutsideDisturbance},
+		{"waxing, no beat", 2.5, 1.25, 0.3, Undetermined},
+		{"shape of a valve", 1.05, 1, 0.85, OutsideDisturbance},
+		{"shape of a valve, blurred", 1.3, 1, 0.85, Undetermined},
+	} {
 		got, _ := sustainedOf(func(w *Watch) {
 			w.s.Clock = clock{Was: c.was}
-			w.s.Osc.Mean, w.s.Osc.Sq = 1, 1.25
-		}, 0.3, 1)
+			w.s.Osc.Mean, w.s.Osc.Sq = 1, c.sq
+		}, c.si, 1)
 		if got != c.want {
-			t.Errorf("ratio %.1f: %s, want %s", c.was, got, c.want)
+			t.Errorf("%s: %s, want %s", c.what, got, c.want)
 		}
 	}
 }
@@ -280,22 +289,6 @@ func TestClippedSwingIsNotDriven(t *testing.T) {
 	} {
 		if got, _ := sustainedOf(func(w *Watch) { flat(w); c.set(w) }, 0.3, 1); got != c.want {
 			t.Errorf("%s: %s, want %s", c.what, got, c.want)
-		}
-	}
-}
-
-// Against the shape of a valve stands only a beat without blur.
-func TestBlurredBeatAgainstShape(t *testing.T) {
-	for _, c := range []struct {
-		was  float32
-		want Cause
-	}{{1.05, OutsideDisturbance}, {1.3, Undetermined}} {
-		got, _ := sustainedOf(func(w *Watch) {
-			w.s.Clock = clock{Was: c.was}
-			w.s.Osc.Mean, w.s.Osc.Sq = 1, 1
-		}, 0.85, 1)
-		if got != c.want {
-			t.Errorf("ratio %.2f: %s, want %s", c.was, got, c.want)
 		}
 	}
 }

@@ -45,15 +45,18 @@ type sharedGroup struct {
 
 // Slots in which a pair must keep its phase before it is said; slots, and periods of the
 // cycle, after which a group whose loops have come to rest is over. While they go on at
-// nearly one period (within a factor of two, as a swing that comes and goes reads), a phase
-// that is not kept for a while is no end: a valve that slips sets it anew. A day of it is.
+// what may be one period, a phase that is not kept for a while is no end: a valve that slips
+// sets it anew. A day of it is.
 const (
-	sharedSlots  = 2
-	sharedGone   = 6
-	goneCycles   = 6
-	sharedApart  = 86400 * 1000 / SiteSlotMs
-	apartPeriods = 2.0
+	sharedSlots = 2
+	sharedGone  = 6
+	goneCycles  = 6
+	sharedApart = 86400 * 1000 / SiteSlotMs
 )
+
+// mayBeOne: two periods, s, are within a factor of two, as those of a swing that comes and goes
+// read.
+func mayBeOne(p, q float64) bool { return p < 2*q && q < 2*p }
 
 // Periods nearer than this, as a logarithm, may be one: what decides is the phase.
 const samePeriod = 0.12
@@ -237,7 +240,7 @@ func (g *sharedGroup) same(o *sharedGroup) bool {
 func (g *sharedGroup) goOn(loops []*configs.Loop, live []SiteEvidence) bool {
 	n := 0
 	for i := range live {
-		if e := &live[i]; slices.Contains(g.Loops, loops[e.ID].Name) && e.PeriodS < apartPeriods*g.Period && g.Period < apartPeriods*e.PeriodS {
+		if e := &live[i]; slices.Contains(g.Loops, loops[e.ID].Name) && mayBeOne(e.PeriodS, g.Period) {
 			n++
 		}
 	}

@@ -90,12 +90,14 @@ func (w *Watch) oneCycle(c *[kinds]claim, t float64) (before openFinding) {
 		return before
 	}
 	f := w.s.Open[said]
-	if c[kSustained].On && o.Cause == 0 { // not judged anew yet
-		c[kSustained].On = said != kSticking
-		c[max(said, kSustained)] = claim{On: true, Since: f.Since, Cause: f.Cause, Also: o.Also, Conf: f.Conf, Strength: c[kSustained].Strength}
-	}
+	stands := claim{On: true, Since: f.Since, Cause: f.Cause, Also: o.Also, Conf: f.Conf, Strength: f.Strength}
 	if o.Hidden > 0 && t-o.Hidden.s() < max(clearHold, goneHalves/2*o.P) {
-		c[said] = claim{On: true, Since: f.Since, Cause: f.Cause, Also: o.Also, Conf: f.Conf, Strength: f.Strength}
+		c[said] = stands
+	}
+	if c[kSustained].On && o.Cause == 0 { // not judged anew yet
+		stands.Strength = c[kSustained].Strength
+		c[kSustained].On = said != kSticking
+		c[max(said, kSustained)] = stands
 	}
 	if v := &c[kSticking]; said == kSustained && v.On && f.Said&(1<<v.Cause) != 0 && f.Returns+1 >= mostReturns {
 		c[kSustained] = *v

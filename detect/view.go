@@ -208,18 +208,12 @@ const littleUsed = 20.0
 // too wide as the range is.
 func (w *Watch) rangeSpot(b []string) []string {
 	sc, m := &w.s.Scale, &w.s.Motion
-	if !w.s.Grid.Begun {
-		if n := w.loop.RangeTaken(); n != "" {
-			b = append(b, n)
-		}
-		return b
-	}
-	if w.loop.PVRangeGiven && !sc.Guessed {
-		return b
-	}
-	said := fmt.Sprintf("no PV range: %.4g to %.4g taken", sc.PVLow, sc.PVLow+sc.PVSpan)
+	said := w.loop.RangeTaken()
 	if sc.Guessed {
-		said += " after the first values"
+		said = fmt.Sprintf("no PV range: %.4g to %.4g taken after the first values", sc.PVLow, sc.PVLow+sc.PVSpan)
+	}
+	if said == "" {
+		return b
 	}
 	switch used := float64(m.UsedHi - m.UsedLo); {
 	case w.s.Noise.known() && used > 0 && used < littleUsed:

@@ -120,9 +120,10 @@ func (s *show) known(f *detect.Finding) bool {
 // said of it, and the end only of what was shown.
 func (s *show) announce(f detect.Finding, at string) {
 	s.mu.Lock()
-	before, now := s.shown[topic(&f)], put(&f)
-	if s.shown[topic(&f)] = now; f.Event == detect.Cleared {
-		s.shown[topic(&f)] = ""
+	key, now := topic(&f), put(&f)
+	before := s.shown[key]
+	if s.shown[key] = now; f.Event == detect.Cleared {
+		delete(s.shown, key)
 	}
 	s.mu.Unlock()
 	if f.Event == detect.Updated && before == "" {

@@ -3,7 +3,6 @@ package main
 import (
 	"fmt"
 	"io"
-	"slices"
 
 	"midwatch/cmd/internal/quality"
 	"midwatch/cmd/internal/quality/others"
@@ -13,18 +12,10 @@ import (
 // writeBudgets writes the table of detect/QUALITY.md: what detect.nuisance_per_loop_year does
 // to the false findings on healthy loops of both benches, the same loops at each budget.
 func writeBudgets(w io.Writer, n int, days float64, seed uint64) {
-	var healthy []string
-	names, _, is := others.Families()
-	for i, name := range names {
-		if is[i] {
-			healthy = append(healthy, name)
-		}
-	}
 	fmt.Fprint(w, "| budget | factor on limits | own bench | other models |\n| --- | --- | --- | --- |\n")
 	for _, b := range []float64{0.01, 0.1, 1, 10} {
 		own := quality.Run(quality.Options{Loops: n, Days: days, Seed: seed, Nuisance: b, Match: quality.IsHealthy})
-		other := others.Run(others.Options{Loops: n, Days: days, Seed: seed, Nuisance: b,
-			Match: func(name string) bool { return slices.Contains(healthy, name) }})
+		other := others.Run(others.Options{Loops: n, Days: days, Seed: seed, Nuisance: b, Match: others.IsHealthy})
 		fmt.Fprintf(w, "| %g | %.2f | %s | %s |\n", b, detect.Strictness(b), falseRate(own), falseRate(other))
 	}
 }

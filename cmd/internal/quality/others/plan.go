@@ -177,6 +177,11 @@ func Families() (names, what []string, healthy []bool) {
 	return names, what, healthy
 }
 
+// IsHealthy says whether a family is one of healthy loops.
+func IsHealthy(name string) bool {
+	return slices.ContainsFunc(healthyOnes, func(f family) bool { return f.name == name })
+}
+
 // matching families, faults first.
 func (o *Options) matching() []*family {
 	var out []*family
