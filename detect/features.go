@@ -60,6 +60,12 @@ type scale struct {
 	Guessed                      bool // no range was given and the values do not fit the default
 }
 
+// A range that was not given is taken to be twice what the values are where they lie outside
+// the default, or in the lowest part of it: a level of 3 m or a residual of 0.8 mg/L is no 3
+// or 0.8 %. Loops are set up to work near the middle of their range (common practice, no
+// source); from a quarter of the default on the two differ by no more than a factor of two.
+const lowInScale = 0.25
+
 // outsideScale is how far outside a range that was not given a value can lie and still fit it,
 // spans (common practice, no source).
 const outsideScale = 0.2
@@ -74,7 +80,8 @@ func (s *scale) init(l *configs.Loop, f *collector.Frame) {
 	outside := func(v float64) bool {
 		return v < s.PVLow-outsideScale*s.PVSpan || v > s.PVLow+(1+outsideScale)*s.PVSpan
 	}
-	if !(s.PVSpan > 0) || !l.PVRangeGiven && (outside(pv) || outside(sp)) {
+	low := func() bool { return sp != 0 && math.Max(math.Abs(pv), math.Abs(sp)) < lowInScale*s.PVSpan }
+	if !(s.PVSpan > 0) || !l.PVRangeGiven && (outside(pv) || outside(sp) || low()) {
 		ref := max(math.Abs(pv), math.Abs(sp))
 		if math.IsNaN(ref) || ref == 0 {
 			ref = 50
@@ -82,6 +89,33 @@ func (s *scale) init(l *configs.Loop, f *collector.Frame) {
 		s.PVLow, s.PVSpan, s.Guessed = 0, 2*ref, true
 	}
 }
+
+// misjudged: a range that was not given was taken after values at which the loop does not work,
+// as those of a plant at rest. SP lies spans beyond it, or was zero until now, and does so in
+// two frames that follow each other: one may be broken.
+func (w *Watch) misjudged(f *collector.Frame) bool {
+	const far = 2 // spans
+	if w.loop.PVRangeGiven || !w.s.Grid.Begun || !within(float64(f.SP/w.s.Last.SP), 1, 1.1) {
+		return false
+	}
+	sc, sp := &w.s.Scale, math.Abs(float64(f.SP))
+	if sc.Guessed {
+		return sp > far*sc.PVSpan
+	}
+	return max(sp, float64(w.s.Motion.UsedHi)/100*sc.PVSpan) < lowInScale*sc.PVSpan
+}
+
+// perList is what a gain, %/% of this scale, is in %/% of the range that the loop list gives or
+// stands for, over it: texts and numbers are of that, as are gains entered and read from tags.
+func (w *Watch) perList() float64 {
+	if l := w.loop.PVSpan(); l > 0 && w.s.Scale.PVSpan > 0 {
+		return l / w.s.Scale.PVSpan
+	}
+	return 1
+}
+
+// listedGain is the gain of the loop list, %/% of this scale; NaN where none is entered.
+func (w *Watch) listedGain() float64 { return w.loop.GainPct / w.perList() }
 
 // motion is what PV, SP and OP have been doing: stillness, steps, extremes.
 type motion struct {

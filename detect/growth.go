@@ -157,7 +157,7 @@ func (b *cycleBank) steps(n int) (least, most float64) {
 // says, or the gain more than twice, with no other knob the other way.
 func (w *Watch) aggressive() bool {
 	kc, ti, ok := w.tuning(0, 0)
-	g, r := w.loop.GainPct, w.loop.IdealReset
+	g, r := w.listedGain(), w.loop.IdealReset
 	if !ok || !(g > 0) || !(r > 0) || !(ti > 0) {
 		return false
 	}

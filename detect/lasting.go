@@ -86,7 +86,7 @@ func (w *Watch) loosened(period float64) bool {
 	if !ok || !(ti > 0) || period < keptSlack*ti || w.loop.Process == configs.SelfRegulating || w.loop.Duty == configs.GapDuty {
 		return false
 	}
-	was := w.loop.GainPct
+	was := w.listedGain()
 	if c := &w.s.Change; w.slowed() && c.What&1 != 0 {
 		was = float64(c.GainWas)
 	}

@@ -180,8 +180,8 @@ func (w *Watch) before(k int, onset float64, now int64) (out []Change) {
 		}
 	}
 	slack := max(2*s.Grid.DT, 5)
-	if m := w.tuningBefore(onset); m.words() != "" {
-		add(ChangedTuning, m.At, w.vagueS(), m.words())
+	if m := w.tuningBefore(onset); w.words(&m) != "" {
+		add(ChangedTuning, m.At, w.vagueS(), w.words(&m))
 	}
 	for kind := range s.Marks {
 		for _, x := range s.Marks[kind] {

@@ -347,7 +347,7 @@ func (w *Watch) gainPct() (kc float64, ok bool) {
 		}
 		return k, true
 	}
-	if g := w.loop.GainPct; g > 0 && a != 0 {
+	if g := w.listedGain(); g > 0 && a != 0 {
 		return a * g, true
 	}
 	return 0, false

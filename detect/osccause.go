@@ -95,7 +95,7 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 			rt = 1
 		}
 	}
-	slack := w.slack(rk, rt, phi, p) || ok && w.loop.GainPct > 0 && w.loop.IdealReset > 0 && w.slack(math.Abs(kc)/w.loop.GainPct, ti/w.loop.IdealReset, phi, p)
+	slack := w.slack(rk, rt, phi, p) || ok && w.loop.GainPct > 0 && w.loop.IdealReset > 0 && w.slack(math.Abs(kc)/w.listedGain(), ti/w.loop.IdealReset, phi, p)
 	// Between the bands what changed before the growth decides.
 	switch {
 	case slack:

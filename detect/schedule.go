@@ -168,7 +168,7 @@ func (w *Watch) schedulePoints() (p []GainPoint) {
 	}
 	for i := range c.Gain {
 		if q := &c.Gain[i]; q.N >= schedLeast {
-			p = append(p, GainPoint{w.s.Scale.PVLow + w.pvUnits(c.centre(i)), q.Value(), int(q.N)})
+			p = append(p, GainPoint{w.s.Scale.PVLow + w.pvUnits(c.centre(i)), q.Value() * w.perList(), int(q.N)})
 		}
 	}
 	return p

@@ -164,12 +164,12 @@ func TestPVRangeThatNobodyGave(t *testing.T) {
 		spoil      bool
 		want       string // of the blind spot, whole
 	}{
-		{"a level of 5 m", 0, 0.05, false, false, "no PV range: 0 to 100 taken, PV and SP have moved within 2.3 to 2.7 m: small faults (an offset under 0.8 m) are not seen; enter pv_low and pv_high"},
-		{"the same with a failure's code", 0, 0.05, false, true, "no PV range: 0 to 100 taken, PV and SP have moved within 2.3 to 2.7 m: small faults (an offset under 0.8 m) are not seen; enter pv_low and pv_high"},
+		{"a level of 5 m", 0, 0.05, false, false, "no PV range: 0 to 5 taken after the first values, PV and SP have moved within 2.3 to 2.7 m: small faults (an offset under 0.04 m) are not seen; enter pv_low and pv_high"},
+		{"the same with a failure's code", 0, 0.05, false, true, "no PV range: 0 to 5 taken after the first values, PV and SP have moved within 2.3 to 2.7 m: small faults (an offset under 0.04 m) are not seen; enter pv_low and pv_high"},
 		{"the same, its range given", 0, 0.05, true, false, ""},
 		{"enough of the range", -150, 4, false, false, ""},
 		{"outside, little used", 200, 0.5, false, false, "no PV range: 0 to 450 taken after the first values, PV and SP have moved within 223 to 227 m: small faults (an offset under 3.6 m) are not seen; enter pv_low and pv_high"},
-		{"outside, enough used", -2500, 60, false, false, "no PV range: 0 to 1000 taken after the first values: percentages and gain are guesses"},
+		{"outside, enough used", -2500, 60, false, false, "no PV range: 0 to 1000 taken after the first values: percentages are of that, the gain is of 0 to 100; enter pv_low and pv_high"},
 	} {
 		l := loopOf("LIC-310", g)
 		l.Unit, l.PVRangeGiven = "m", c.given

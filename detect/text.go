@@ -208,7 +208,7 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 			changed += part(" %s ago", d, duration)
 		}
 		m := s.Change.move()
-		if x := m.words(); x != "" {
+		if x := w.words(&m); x != "" {
 			changed += ": " + x
 		}
 		what = "The " + changed + "."

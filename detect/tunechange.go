@@ -273,7 +273,7 @@ func (w *Watch) borneOut(k int, since float64, what uint8, was, now float64) boo
 // readTuning follows tuning tags: a change there is a fact, not an estimate.
 func (w *Watch) readTuning(f *collector.Frame, t float64) {
 	c := &w.s.Change
-	note := func(last *float32, now float32, what uint8, was, is *float32) {
+	note := func(last *float32, now float32, what uint8, was, is *float32, per float32) {
 		if !(now > 0) {
 			return
 		}
@@ -283,12 +283,12 @@ func (w *Watch) readTuning(f *collector.Frame, t float64) {
 			}
 			c.On, c.At, c.Seen = true, t, t
 			c.What |= what
-			*was, *is = *last, now
+			*was, *is = *last/per, now/per
 		}
 		*last = now
 	}
-	note(&c.TagGain, f.Gain, 1, &c.GainWas, &c.GainNow)
-	note(&c.TagReset, f.Reset, 2, &c.ResetWas, &c.ResetNow)
+	note(&c.TagGain, f.Gain, 1, &c.GainWas, &c.GainNow, float32(w.perList()))
+	note(&c.TagReset, f.Reset, 2, &c.ResetWas, &c.ResetNow, 1)
 }
 
 // tuningMove is a change of the tuning before the onset of a trouble, as it was first
@@ -303,12 +303,12 @@ type tuningMove struct {
 	ResetNow float32 // s
 }
 
-// words say what moved; empty where nothing did.
-func (m *tuningMove) words() string {
+// words say what moved, gains in %/% of the list; empty where nothing did.
+func (w *Watch) words(m *tuningMove) string {
 	var p []string
 	known := func(v float32) bool { return v > 0 && v <= math.MaxFloat32 }
 	if known(m.GainNow) && known(m.GainWas) {
-		p = append(p, fmt.Sprintf("gain from about %s to %s", sig2(float64(m.GainWas)), sig2(float64(m.GainNow))))
+		p = append(p, fmt.Sprintf("gain from about %s to %s", sig2(float64(m.GainWas)*w.perList()), sig2(float64(m.GainNow)*w.perList())))
 	}
 	if known(m.ResetNow) && known(m.ResetWas) {
 		p = append(p, fmt.Sprintf("reset time from about %s to %s", duration(float64(m.ResetWas)), duration(float64(m.ResetNow))))
@@ -358,11 +358,11 @@ func (w *Watch) keepMove(k int, onset float64) {
 	}
 	kept := &w.s.Moved
 	for i := range w.s.Open {
-		if o := &w.s.Open[i]; o.On && momentOf(o.Since) == kept.Onset && o.Since != onset && kept.words() != "" {
+		if o := &w.s.Open[i]; o.On && momentOf(o.Since) == kept.Onset && o.Since != onset && w.words(kept) != "" {
 			return
 		}
 	}
-	if m := w.tuningBefore(onset); m.words() != "" {
+	if m := w.tuningBefore(onset); w.words(&m) != "" {
 		m.Onset = momentOf(onset)
 		*kept = m
 	}

@@ -32,7 +32,7 @@ func (w *Watch) listRatio() (gain, reset float64) {
 	if !ok {
 		return 0, 0
 	}
-	if g := w.loop.GainPct; g > 0 {
+	if g := w.listedGain(); g > 0 {
 		gain = math.Abs(kc) / g
 	}
 	if r := w.loop.IdealReset; r > 0 && ti > 0 && ti < noTi {
@@ -84,12 +84,13 @@ func (w *Watch) tuningNote() string {
 		note += s
 	}
 	kc, ti, _ := w.served()
+	kc *= w.perList() // as entered
 	rk, rt := w.listRatio()
 	byDesign := w.loop.Duty == configs.GapDuty && rk < 1 // inside its gap a controller acts with less
 	if rk > 0 && !within(rk, 1, differs) && !byDesign {
 		s := fmt.Sprintf("gain entered %s, the data say about %s", sig2(w.loop.GainPct), sig2(math.Abs(kc)))
 		switch {
-		case near(float64(w.s.Change.GainWas), w.loop.GainPct): // rightly entered, and changed since
+		case near(float64(w.s.Change.GainWas), w.listedGain()): // rightly entered, and changed since
 		case near(w.loop.GainPct*math.Abs(kc), 100):
 			s += ": proportional band?"
 		case near(w.loop.GainPct*math.Abs(kc), 1):

@@ -271,7 +271,11 @@ func (w *Watch) finding(k int, e Event, t float64, reason string) Finding {
 	row.measure(w, m)
 	for i, v := range m {
 		if v == v && !math.IsInf(v, 0) {
-			f.Measures = append(f.Measures, Measure{row.Measures[i], v})
+			name := row.Measures[i]
+			if name == "gain" || name == "gain_before" {
+				v *= w.perList()
+			}
+			f.Measures = append(f.Measures, Measure{name, v})
 		}
 	}
 	for _, a := range w.claim(k).Also {

@@ -146,6 +146,8 @@ func (w *Watch) tuningRange() (k, k0, k1, t, t0, t1 float64) {
 			}
 		}
 	}
+	per := w.perList()
+	k, k0, k1 = k*per, k0*per, k1*per
 	return
 }
 
@@ -221,7 +223,7 @@ func (w *Watch) rangeSpot(b []string) []string {
 		said += fmt.Sprintf(", PV and SP have moved within %s to %s%s: small faults (an offset under %s) are not seen; enter pv_low and pv_high",
 			low, high, unitOf(w.loop.Unit), w.pvText(w.offsetLeast()))
 	case sc.Guessed:
-		said += ": percentages and gain are guesses"
+		said += fmt.Sprintf(": percentages are of that, the gain is of %.4g to %.4g; enter pv_low and pv_high", w.loop.PVLow, w.loop.PVHigh)
 	case w.s.Noise.known():
 		return b
 	}

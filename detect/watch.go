@@ -108,6 +108,10 @@ func (w *Watch) frame(f *collector.Frame) {
 		return
 	}
 	s.Through = f.Time
+	if w.misjudged(f) {
+		w.anew()
+		s.Scale.init(w.loop, &collector.Frame{PV: f.SP, SP: f.SP}) // PV may be on its way yet
+	}
 	s.Last = *f
 	if w.absurd(f) {
 		clean := *f
@@ -227,13 +231,17 @@ func (w *Watch) relearn(k int) bool {
 	if fast < 80 && (slow < 200 || w.loop.Report == configs.Exception) {
 		return false
 	}
-	// Filters and rings count in slots: they begin anew, the noise level too.
+	w.anew() // filters and rings count in slots, the noise level too
+	return true
+}
+
+// anew begins to learn again; what was told, and facts that hold whatever was learnt, stay.
+func (w *Watch) anew() {
 	keep := w.s
 	w.s = state{Through: keep.Through, Grid: grid{T0: keep.Grid.T0, Begun: true, At: keep.Grid.At, LastFrame: keep.Grid.LastFrame},
 		Scale: keep.Scale, Last: keep.Last, Misc: keep.Misc, Change: keep.Change, Marks: keep.Marks, Moved: keep.Moved, Spell: keep.Spell.found(), Open: keep.Open, OpenN: keep.OpenN, Slot: keep.Slot}
 	w.usual.known = false
 	w.s.Motion.first()
-	return true
 }
 
 // stepGrid turns the frame into slots of the grid.
