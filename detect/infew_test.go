@@ -80,6 +80,27 @@ func TestDayOfItsOwnShape(t *testing.T) {
 	}
 }
 
+// Shifts keep the clock. A swing of 8.2 h whose half-cycles are as even as those of a clock keeps
+// another; one that is uneven may be theirs.
+func TestBeatOfShifts(t *testing.T) {
+	uneven := func(i int) float64 { return 8 + float64(i*5%7)/2 }
+	even := func(i int) float64 { return 8 + float64(i%2)/16 }
+	for _, x := range []struct {
+		length func(int) float64
+		period float64 // h
+		want   bool
+	}{{even, 8.2, false}, {even, 8.02, true}, {uneven, 8.2, true}, {uneven, 9, false}, {even, 12, true}} {
+		l := configs.NewLoop("TIC-1")
+		l.IdealReset = 1200
+		w := New(l, 0, Options{})
+		var b cycleBank
+		swingOf(&b, 18, x.length, 1)
+		if got := w.scheduled(&b, x.period*3600); got != x.want {
+			t.Errorf("a swing of %.2f h: of shifts %v", x.period, got)
+		}
+	}
+}
+
 // A slow swing was always there, or may have been, unless the faster levels, which know what
 // is usual long before its own does, say that it is news.
 func TestNotAlwaysThere(t *testing.T) {

@@ -189,8 +189,11 @@ func (w *Watch) scheduled(b *cycleBank, period float64) bool {
 	if w.ofTheDay(b, period) {
 		return true
 	}
+	// Shifts keep the clock: what is more even than far from it is something else.
+	newest, near := b.over(8, period)
+	all, off := b.over(ringLen, period)
 	for k := 2.; k <= 3; k++ {
-		if math.Abs(period*k/86400-1) < 0.05 {
+		if math.Abs(period*k/86400-1) < 0.05 && math.Abs(newest*k/86400-1) < max(0.01, near) && math.Abs(all*k/86400-1) < max(0.01, off) {
 			return true
 		}
 	}
@@ -216,10 +219,18 @@ func (w *Watch) ofTheDay(b *cycleBank, period float64) bool {
 	}
 	// The mean of half-cycles is as uncertain as they are irregular, and a daily load has
 	// shapes of its own. That of all in the ring is the surest.
-	all, regular, _ := b.lengths(int(b.N))
-	day := max(0.05, min(0.15, 2/(regular*math.Sqrt(max(float64(b.N), 1)))))
+	all, off := b.over(ringLen, period)
+	day := max(0.05, min(0.15, off))
+	return math.Abs(period/86400-1) < day || math.Abs(all/86400-1) < day
+}
+
+// over is a period, s, of the newest 8 half-cycles as the newest n have it, and twice its standard
+// error as a share of it.
+func (b *cycleBank) over(n int, period float64) (p, off float64) {
+	n = min(n, int(b.N))
+	length, regular, _ := b.lengths(n)
 	newest, _, _ := b.lengths(min(int(b.N), 8))
-	return math.Abs(period/86400-1) < day || math.Abs(period*all/newest/86400-1) < day
+	return period * length / newest, 2 / (regular * math.Sqrt(max(float64(n), 1)))
 }
 
 // steadySP: SP has not stepped for so long, s, and is not ramped.
