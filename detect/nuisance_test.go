@@ -236,16 +236,21 @@ func TestNoWindUpByTheSetPoint(t *testing.T) {
 }
 
 // A set-point step asks whether the element follows. An e that is as far away as the step
-// and at rest says no; one that passes there on its way says nothing.
+// and at rest says no; one that passes there on its way says nothing, nor does an OP that a low
+// gain moved by little.
 func TestAskOfAnErrorAtRest(t *testing.T) {
-	for ef, want := range map[float64]bool{2: true, 0.8: false} {
+	for _, c := range []struct {
+		ef, gain, op float64
+		want         bool
+	}{{2, 1, 60, true}, {0.8, 1, 60, false}, {2, 0.2, 43, false}} {
+		ef, want := c.ef, c.want
 		l := configs.NewLoop("TIC-319")
-		l.Action, l.GainPct, l.IdealReset, l.RecoveryS = configs.Reverse, 1, 60, 200
+		l.Action, l.GainPct, l.IdealReset, l.RecoveryS = configs.Reverse, c.gain, 60, 200
 		w := New(l, 0, Options{})
 		w.s.Motion.first()
 		w.s.OffPast.EF, w.s.Motion.EF = 2, ef
 		w.s.OffPast.Ask = ask{T: momentOf(1000), By: 2, E: 0, OP: 40}
-		w.in = input{t: 1500, dt: 1, e: ef, trim: 60, op: 60, hasOP: true, active: true}
+		w.in = input{t: 1500, dt: 1, e: ef, trim: c.op, op: c.op, hasOP: true, active: true}
 		w.stepAsk()
 		if got := w.s.OffPast.Deaf; got != want {
 			t.Errorf("e at %.1f %%, its mean at 2 %%: deaf %v", ef, got)

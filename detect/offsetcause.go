@@ -394,7 +394,7 @@ func (w *Watch) stepAsk() {
 	case math.Abs(left) < 0.4:
 		p.Deaf, p.Vain, p.Doubt = false, [2]moment{}, false
 	case math.Abs(w.s.Motion.EF-p.EF) > 0.25*math.Abs(float64(a.By)): // on its way: another load
-	case left > 0.75 && left < 1.25 && went > 4: // of which an element that acts makes 4*0.2 of the step
+	case left > 0.75 && left < 1.25 && went > 4 && math.Abs(in.trim-float64(a.OP)) > leastTravel/3: // of which an element that acts makes 4*0.2 of the step
 		w.unmoved()
 	}
 	a.T = 0
