@@ -156,7 +156,7 @@ func (w *Watch) explainLimit() (out []string) {
 		out = append(out, fmt.Sprintf("OP at the limit to which e pushes it for %s (asked longer than %s)", duration(w.in.t-z.AtSince), duration(w.limitWaitS())))
 	}
 	if z.Stretches > 0 {
-		out = append(out, fmt.Sprintf("visits to a limit that each outlast a recovery: %d without a day between them (asked %d), the last until %s", z.Stretches, visitsAsked, FormatTime(w.ms(z.LastEnd))))
+		out = append(out, fmt.Sprintf("visits to a limit that each outlast a recovery: %d with no more than %s between them (asked %d), the last until %s", z.Stretches, duration(z.apartS()), visitsAsked, FormatTime(w.ms(z.LastEnd.s()))))
 	}
 	rt, _ := w.resetS()
 	if z.CrossAt > 0 {

@@ -180,12 +180,109 @@ func TestRangeEndByTheLimit(t *testing.T) {
 			}
 			return 50, max(30, 100-(t-3000)/20)
 		}, MeasurementCause},
+		{"is driven there by an OP that is wound up", func(t float64) (float64, float64) { return 20 - min(70, t/20), 100 }, NoCause},
+		{"stands with OP where a sequence shuts both", func(t float64) (float64, float64) { return 50, 0 }, NoCause},
+		{"fails, OP goes to the other limit", func(t float64) (float64, float64) { return -50, max(0, 50-t/4) }, MeasurementCause},
 	} {
 		w := offsetWatch(nil)
 		w.s.Motion.OPMin, w.s.Motion.OPMax = 0, 100
 		fs := feed(w, 6000, x.law)
 		if c := said(fs, PVAtRangeEnd); c != x.want {
 			t.Errorf("%s: said %q, want %q", x.name, c, x.want)
+		}
+	}
+}
+
+// OP at its limit names the limit only where PV answered OP on the way: by much of what that way
+// makes of it, or by following a step of the set point. A load that wanders makes e a little
+// smaller, too, where the element does not move.
+func TestTheWayToTheLimit(t *testing.T) {
+	for _, x := range []struct {
+		name     string
+		from, to float64 // %, e as the way begins and as it ends
+		sp       float32 // %, step of the set point half the way, which PV follows
+		way      float64 // s, of a time scale of 600
+		want     Cause
+	}{
+		{"PV answers nothing", 4, 4, 0, 6000, FinalElementNotFollowing},
+		{"e falls by a little", 6, 3.5, 0, 6000, Undetermined},
+		{"e falls by a little, fast", 6, 3.5, 0, 900, Undetermined},
+		{"before PV can answer", 6, 3.5, 0, 500, OutputLimit},
+		{"e falls by much of the way", 12, 4, 0, 6000, OutputLimit},
+		{"PV follows its set point", 4, 3.5, 5, 6000, OutputLimit},
+	} {
+		w, way := offsetWatch(nil), x.way
+		fs := feedAt(w, way+8000, func(t float64, f *collector.Frame) {
+			e, op := x.from+(x.to-x.from)*min(t/way, 1), 30+70*min(t/way, 1)
+			if t > way { // the load wanders on
+				e *= 1.2
+			}
+			if t > way/2 {
+				f.SP += x.sp
+				e += float64(x.sp) * math.Exp(-(t-way/2)/60)
+			}
+			if x.name == "PV answers nothing" {
+				e = x.from
+			}
+			f.PV, f.OP = f.SP-float32(e), float32(op)
+		})
+		if c := said(fs, OutputSaturation); c != x.want {
+			t.Errorf("%s: said %q, want %q", x.name, c, x.want)
+		}
+	}
+}
+
+// e that is clearly larger once OP stands at its limit shows a load that goes on, also where
+// that is read after it has come to rest.
+func TestGrowthAtTheLimitIsReadLate(t *testing.T) {
+	for _, x := range []struct {
+		mean, e float64 // %, since OP came to its limit, with 4 % then
+		doubt   bool
+	}{{12, 12, false}, {5.5, 5.8, true}} {
+		w := offsetWatch(nil)
+		o, since := &w.s.Off, 2000.0 // s
+		*o = offsetState{Sign: 1, T0: w.in.t - 2*since, LimT: w.in.t - since, LimE: 4, Int: x.mean * since, Es: x.e}
+		w.s.OffPast.Doubt = true
+		if w.limitTest(true, since); w.s.OffPast.Doubt != x.doubt {
+			t.Errorf("%g %%: doubted %v", x.e, w.s.OffPast.Doubt)
+		}
+	}
+}
+
+// An overload that comes every few days is one trouble from its return on, with wind-up and
+// without, and over once it has stayed away for clearly longer than it did before.
+func TestOverloadsThatReturnAreOneTrouble(t *testing.T) {
+	const day = 86400
+	calm := func(t float64) (float64, float64) { return 0, 60 + 0.05*math.Sin(t/40) }
+	for _, over := range []float64{0, 400} { // s that OP stays past the change of sign
+		w := offsetWatch(nil)
+		var fs []Finding
+		for range 6 {
+			fs = append(fs, feed(w, 3000, func(float64) (float64, float64) { return 4, 100 })...)
+			if over > 0 {
+				fs = append(fs, feed(w, over, func(float64) (float64, float64) { return -4, 100 })...)
+				fs = append(fs, feed(w, 400, func(t float64) (float64, float64) { return -4, 99.5 - 4*t/runTi })...)
+			}
+			fs = append(fs, feed(w, 4*day, calm)...)
+		}
+		count := func(e Event) (n int) {
+			for _, f := range fs {
+				if f.Kind == OutputSaturation && f.Event == e {
+					n++
+				}
+			}
+			return
+		}
+		if r, c := count(Raised), count(Cleared); r != 2 || c != 1 {
+			t.Errorf("over %g s: raised %d times, cleared %d", over, r, c)
+		}
+		w.emit = func(f *Finding) { fs = append(fs, *f) }
+		if w.say(kSaturation, Updated, w.in.t, ""); !strings.Contains(fs[len(fs)-1].Text, "5 times in 20 days") {
+			t.Errorf("over %g s: %s", over, fs[len(fs)-1].Text)
+		}
+		fs = append(fs, feed(w, 3*day, calm)...)
+		if c := count(Cleared); c != 2 {
+			t.Errorf("over %g s, seven days later: cleared %d times", over, c)
 		}
 	}
 }

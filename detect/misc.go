@@ -189,10 +189,15 @@ func stepRangeEnd(w *Watch) {
 		x.EndSince, x.EndHigh = in.t, high
 		x.EndSpent = w.spent() && math.Abs(s.Motion.EF) > math.Abs(in.e)/2 // by a jump e is new
 	}
-	// A process that OP can hold no longer goes to the end by itself: that the limit is at
-	// fault is said elsewhere. Once OP is free again PV must come back.
+	// A process that OP can hold no longer goes to the end by itself, and one that OP drives
+	// there goes with it: that the limit is at fault is said elsewhere. Once OP is free again PV
+	// must come back.
 	if x.EndSpent {
 		x.EndSpent, x.EndSince = w.spent(), in.t
+		return
+	}
+	if !x.Pegged && w.drivenTo(high) {
+		x.EndSince = in.t
 		return
 	}
 	asks := low && in.sp > 3 || high && in.sp < 97
@@ -211,6 +216,19 @@ func stepRangeEnd(w *Watch) {
 func (w *Watch) spent() bool {
 	z, m := &w.s.Sat, &w.s.Motion
 	return z.From > 0 || z.AtSince > 0 || w.in.hasOP && w.in.t-m.OPSame > ownLimitS(w.in.dt) && w.atOwnLimit()
+}
+
+// drivenTo: OP lies at the limit that drives PV to this end of its range, though e asks for the
+// other one: it is wound up, or a sequence or a hand holds it there. To a failed measurement
+// the controller answers by going to the other limit.
+func (w *Watch) drivenTo(high bool) bool {
+	l0, l1 := w.opLimits()
+	if a := w.sign(); a == 0 || !w.in.hasOP {
+		return false
+	} else if high == (a > 0) {
+		return w.in.op >= l1-opAtLimit
+	}
+	return w.in.op <= l0+opAtLimit
 }
 
 // restsByPlan: the loop's duty lets its equipment stand still.

@@ -36,6 +36,7 @@ type offsetState struct {
 	FreeAt    float32 // s, age of the run when OP was last seen at its limit: the part before says nothing of the integral
 	AtEnd     bool    // PV was at an end of its range: e says nothing of the process
 	NotFollow bool    // OP travelled and then stopped, and PV made nothing of either
+	Answered  bool    // PV followed a step of the set point
 	Checked   float64 // s, last decision
 	PrevDur   float32 // s, length of the run before, of the other sign; 0 none
 	Top       stop

@@ -253,8 +253,14 @@ func (w *Watch) vainTravel(mean, recent float64) {
 		return
 	}
 	way := o.OPs - float64(a.OP)
-	fell := (float64(a.E) - o.Es) * o.Sign // by which e fell
-	if way*kc*o.Sign < 2*leastTravel*math.Abs(kc) || fell > 0.1*math.Abs(way/kc) || w.tookBack() {
+	later := (o.Int - float64(a.Int)) * o.Sign / (d - float64(a.T))
+	square := max(0.12*later, w.s.Noise.sigma()/2) // a sine strays by 0.14 at least over such a part
+	was, is := float64(a.E)*o.Sign, o.Es*o.Sign
+	if math.Abs(was-later) > square || math.Abs(is-later) > square { // as in a cycle
+		return
+	}
+	fell := was - is
+	if way*kc*o.Sign < 2*leastTravel*math.Abs(kc) || fell > 0.1*math.Abs(way/kc) || w.tookBack(0) {
 		return
 	}
 	side, other := 0, 1
@@ -324,7 +330,7 @@ func (w *Watch) limitTest(listed bool, since float64) {
 	mean := (o.Int - float64(o.LimInt)) * o.Sign / at
 	switch {
 	case at < soon:
-	case e > limitGrows*was && (at < late || e > 1.1*mean):
+	case e > limitGrows*was && (at < late || e > 1.1*mean || mean > limitGrows*was):
 		p.Doubt, o.LimE = false, 0
 	case at > max(late, w.timeScale()):
 		sigma := max(w.s.Noise.sigma(), 0.02)
@@ -349,19 +355,23 @@ func (w *Watch) arrive() {
 }
 
 // vainWay: over the run OP went far the way e pushes it, for longer than a process takes to
-// answer, and e is there yet.
+// answer, and e is there yet, and neither it nor a step of the set point shows that PV answered.
 func (w *Watch) vainWay() bool {
 	o := &w.s.Off
-	return (w.in.trim-o.OP0)*w.sign()*o.Sign > leastTravel && w.in.t-o.T0 > 2*w.timeScale() && o.Es*o.Sign > w.offsetLeast() && !w.tookBack()
+	way := (w.in.trim - o.OP0) * w.sign() * o.Sign
+	return way > leastTravel && w.in.t-o.T0 > w.timeScale() && o.Es*o.Sign > w.offsetLeast() && !o.Answered && !w.tookBack(way)
 }
 
 // tookBack: e is clearly less than the largest of the run. A step of load beyond what OP can
-// make good leaves an e for good, too, but OP took some of it back on its way, as nothing does
-// where no element moves.
-func (w *Watch) tookBack() bool {
+// make good leaves an e for good, too, but OP took some of it back on its way, %, as nothing
+// does where no element moves: half at least of what that way makes of PV (SIMC tunings,
+// Skogestad 2003, have Kc K of 0.2 or more). A load that wanders gives and takes a little.
+func (w *Watch) tookBack(way float64) bool {
 	o := &w.s.Off
 	e := o.Es * o.Sign
-	return float64(o.Most)-e > 0.3*e+2*w.s.Noise.sigma()
+	kc, _ := w.gainPct()
+	back := float64(o.Most) - e
+	return back > 0.3*e+2*w.s.Noise.sigma() && back*math.Abs(kc) > 0.1*way
 }
 
 // askSP begins the test that a set-point step is: an element that acts brings e back to
@@ -392,9 +402,9 @@ func (w *Watch) stepAsk() {
 	switch {
 	case !ok || kc == 0:
 	case math.Abs(left) < 0.4:
-		p.Deaf, p.Vain, p.Doubt = false, [2]moment{}, false
+		p.Deaf, p.Vain, p.Doubt, w.s.Off.Answered = false, [2]moment{}, false, true
 	case math.Abs(w.s.Motion.EF-p.EF) > 0.25*math.Abs(float64(a.By)): // on its way: another load
-	case left > 0.75 && left < 1.25 && went > 4 && math.Abs(in.trim-float64(a.OP)) > leastTravel/3: // of which an element that acts makes 4*0.2 of the step
+	case left > 0.75 && left < 1.25 && went > 4 && math.Abs(in.trim-float64(a.OP)) > leastTravel/2: // of which an element that acts makes 4*0.2 of the step, and a load that is usual does not make it by chance
 		w.unmoved()
 	}
 	a.T = 0

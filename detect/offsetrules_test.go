@@ -183,6 +183,37 @@ func TestTravelUpAndDownInVain(t *testing.T) {
 	}
 }
 
+// A slow cycle has OP go far up and down with a large e, too, but its e is not as square as an
+// element makes it that does not move.
+func TestSlowCycleIsNoDeafElement(t *testing.T) {
+	w := offsetWatch(nil)
+	const p = 15000.0 // s
+	feed(w, 4*p, func(t float64) (float64, float64) {
+		x := 2 * math.Pi * t / p
+		return 3 * math.Sin(x), 50 + 3*math.Sin(x) + 3*p/(2*math.Pi*runTi)*(1-math.Cos(x)) - 18
+	})
+	if w.deaf() {
+		t.Error("the element is held to be deaf")
+	}
+}
+
+// Nor does a step of SP ask it that OP answers by less than a load makes it go by chance.
+func TestSmallTravelAsksNoElement(t *testing.T) {
+	for _, x := range []struct {
+		step float32
+		want bool
+	}{{1, false}, {4, true}} {
+		w := offsetWatch(nil)
+		feedAt(w, 2500, func(t float64, f *collector.Frame) { // PV does not answer
+			f.SP += x.step
+			f.PV, f.OP = 50, 50+x.step*float32(1+min(t, 1200)/runTi)
+		})
+		if w.deaf() != x.want {
+			t.Errorf("step of %g %%: the element is held to be deaf: %v", x.step, w.deaf())
+		}
+	}
+}
+
 // An element that was shown not to follow does not come loose by waiting: until PV has come
 // back three times on end in the usual time, it is held to be the reason.
 func TestDeafUntilPVAnswers(t *testing.T) {
@@ -214,7 +245,7 @@ func TestLoadStepsAreNoDeafElement(t *testing.T) {
 		want Cause
 	}{
 		{"nothing moves", 0, false, true, FinalElementNotFollowing},
-		{"taken back", 2, false, false, OutputLimit},
+		{"taken back", 12, false, false, OutputLimit},
 		{"PV at the end of its range on the way down", 0, true, false, FinalElementNotFollowing},
 	} {
 		w := offsetWatch(nil)

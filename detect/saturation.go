@@ -5,7 +5,6 @@ import "math"
 // OP at the limit that e pushes towards, and what it does once e has changed sign.
 
 type saturationState struct {
-	LastWind   float64 // s
 	Over       float64 // s, longest overhang
 	Peak       float64 // %, overshoot after it
 	CrossAt    float64 // s, e changed sign with OP at the limit; 0 none
@@ -21,7 +20,10 @@ type saturationState struct {
 	LowShare   float32 // share of time with OP at the low end of its range, mean of days, of stays that are over
 	LowFor     float32 // s, how long the running stay there has lasted
 	From, IntE float64 // s, begin of the running stretch, 0 none; % s, integral of e over it
-	LastEnd    float64 // s, end of the last stretch
+	LastWind   moment
+	LastEnd    moment  // end of the last stretch
+	Told       moment  // when the trouble of a limit that is or was told was last seen
+	Apart      float32 // s, longest time between two of its returns; forgets a tenth with each; 0 none
 	FirstFrom  float64 // s, begin of the first that counts
 	// Share of time with OP at either limit while the law acts, mean of days from 0 on: a
 	// slot of a fast loop adds less than a float32 holds.
@@ -58,9 +60,32 @@ const (
 	windUpOnce   = 1.2
 )
 
-// visitsApart is how far apart, s, visits to a limit may be that are one trouble (common
-// practice, no source).
-const visitsApart = 86400.0
+// visitsApart is how far apart, s, visits to a limit may be that are one trouble, before
+// more is known of it; returnsWithin within what time a trouble that was over is the same one,
+// and staysAway how many times the longest such pause it must have stayed away to be over
+// (common practice, no source).
+const (
+	visitsApart   = 86400.0
+	returnsWithin = 14 * 86400.0
+	staysAway     = 1.5
+)
+
+// apartS is how long, s, OP must have stayed off its limit for a trouble that is told to be over:
+// an overload that comes with the shift, the week or the batch is one trouble that comes and
+// goes.
+func (z *saturationState) apartS() float64 { return max(visitsApart, staysAway*float64(z.Apart)) }
+
+// told notes that a trouble of the limit is told, or still seen, at a time t, s; calm is how
+// long, s, PV must be back for it to have been away.
+func (z *saturationState) told(t, calm float64) {
+	if away := t - z.Told.s(); z.Told > 0 && away > calm {
+		z.Apart *= 0.9
+		if away < returnsWithin {
+			z.Apart = max(z.Apart, float32(away))
+		}
+	}
+	z.Told = momentOf(t)
+}
 
 // overhangS is how long, s, OP must stay at its limit past the change of sign, with a reset
 // time, s, to count.
@@ -121,14 +146,15 @@ func stepSaturation(w *Watch) {
 			over := in.t - z.CrossAt
 			rt, _ := w.resetS()
 			if z.Frames >= 5 && z.Due > dueLeast && over > w.overhangS(rt) && rt > 0 && z.WindUps < 250 && !w.otherLaw() {
-				if z.WindUps == 0 || in.t-z.LastWind > 7*86400 {
+				if z.WindUps == 0 || in.t-z.LastWind.s() > max(7*86400, z.apartS()) {
 					z.WindUps, z.WindSince, z.Over = 0, z.CrossAt, 0
 				}
 				z.WindUps++
-				z.LastWind = in.t
+				z.LastWind = momentOf(in.t)
 				z.Over = max(z.Over, over)
 				if z.WindUps >= windUpsAsked || over > windUpOnce*rt {
 					z.WindUp = true
+					z.told(in.t, w.calmS())
 				}
 			}
 			z.CrossAt, z.Side, z.Frames = 0, 0, 0
@@ -144,7 +170,7 @@ func stepSaturation(w *Watch) {
 	} else {
 		z.Side = 0
 	}
-	if z.WindUp && in.t-z.LastWind > 86400 {
+	if z.WindUp && in.t-z.Told.s() > z.apartS() {
 		z.WindUp, z.WindUps = false, 0
 	}
 }
@@ -175,10 +201,14 @@ func (w *Watch) stepStretch(side, sigma float64) {
 	l0, _ := w.opLimits()
 	idle := mean*w.sign() < 0 && l0 < opAtLimit && math.Abs(mean) < idleMost && z.LowShare >= usualLow
 	if d > max(2*w.timeScale(), max(30*in.dt, 60)) && math.Abs(mean) > max(3*sigma, 0.8) && !idle {
-		if z.Stretches == 0 || z.From-z.LastEnd > visitsApart {
+		apart := visitsApart
+		if s.OffPast.Sat.On {
+			apart = z.apartS()
+		}
+		if z.Stretches == 0 || z.From-z.LastEnd.s() > apart {
 			z.Stretches, z.FirstFrom = 0, z.From
 		}
-		z.Stretches, z.LastEnd = min(z.Stretches+1, 200), in.t
+		z.Stretches, z.LastEnd = min(z.Stretches+1, 200), momentOf(in.t)
 		if z.Stretches >= visitsAsked {
 			w.sayLimit(z.FirstFrom, mean, 0.75)
 		}
@@ -189,7 +219,7 @@ func (w *Watch) stepStretch(side, sigma float64) {
 // comesAndGoes: what is said of the limit rests on visits to it, not on one long stay.
 func (w *Watch) comesAndGoes() bool {
 	z, o := &w.s.Sat, &w.s.OffPast.Sat
-	return o.On && z.Stretches >= visitsAsked && o.Since == z.FirstFrom
+	return o.On && z.Stretches >= visitsAsked && (o.Since == z.FirstFrom || z.From == 0)
 }
 
 // visits: OP comes to its limit again and again; between visits that is not over, nor while
@@ -199,7 +229,7 @@ func (w *Watch) visits() bool {
 	if z.From > 0 {
 		until = z.From
 	}
-	return z.Stretches >= visitsAsked && until-z.LastEnd < visitsApart
+	return (z.Stretches >= visitsAsked || z.Apart > 0) && until-z.Told.s() < z.apartS()
 }
 
 // sayLimit supports the claim that OP lies at its limit. What an episode was shown with
@@ -217,5 +247,10 @@ func (w *Watch) sayLimit(since, mean, conf float64) {
 	} else if p.Sat.On && p.Sat.Cause == causeIndex(OutputLimit) {
 		conf = max(conf, float64(p.Sat.Conf))
 	}
+	z := &w.s.Sat
+	if !p.Sat.On && since-z.LastEnd.s() > visitsApart { // its visits are counted from its own begin
+		z.Stretches = 0
+	}
+	z.told(w.in.t, w.calmS())
 	p.Sat.support(since, mean, cause, conf)
 }

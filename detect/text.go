@@ -247,7 +247,10 @@ func (w *Watch) limitText(f *Finding, get func(string) float64) (what, brief str
 	if f.Cause == WindUp {
 		over := part(" %s", get("overhang_s"), duration)
 		what = "OP stays at its limit" + over + " after PV has crossed the set point, then PV overshoots" + part(" by %s", get("overshoot_pct"), w.pvText)
-		if d := float64(f.At-f.Since) / 1000; d > 0 {
+		switch d := float64(f.At-f.Since) / 1000; {
+		case d > 0 && s.Sat.WindUps > 1:
+			what += fmt.Sprintf(", seen %d times in %s", s.Sat.WindUps, duration(d))
+		case d > 0:
 			what += ", seen for " + duration(d)
 		}
 		return what, "wind-up: OP late" + strings.Replace(over, " ", " by ", 1) + " at its limit"
