@@ -77,3 +77,17 @@ func TestNoTuningWhereMostBlocksDenyTheLaw(t *testing.T) {
 		}
 	}
 }
+
+// Where e only decays, its integral is of one shape with it: the blocks that ended with such a
+// one tell no other tuning, though they read one.
+func TestNoTuningChangeWhereErrorAndIntegralAreOneShape(t *testing.T) {
+	for turn, want := range map[float64]bool{0.5: true, 0.998: false} { // correlation of the two
+		w := bankThatLeft(configs.Tight)
+		b := &w.s.Fits[0]
+		b.Sums.A01 = -turn * math.Sqrt(b.Sums.A00*b.Sums.A11)
+		w.keepFit(0, b.Ring[0], 0, false)
+		if w.s.Change.On != want {
+			t.Errorf("correlation %g: told %v", turn, w.s.Change.On)
+		}
+	}
+}

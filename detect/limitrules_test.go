@@ -183,6 +183,14 @@ func TestRangeEndByTheLimit(t *testing.T) {
 		{"is driven there by an OP that is wound up", func(t float64) (float64, float64) { return 20 - min(70, t/20), 100 }, NoCause},
 		{"stands with OP where a sequence shuts both", func(t float64) (float64, float64) { return 50, 0 }, NoCause},
 		{"fails, OP goes to the other limit", func(t float64) (float64, float64) { return -50, max(0, 50-t/4) }, MeasurementCause},
+		{"OP shut, and PV with it", func(t float64) (float64, float64) { return 50, max(0, 50-t) }, NoCause},
+		{"OP shut, PV at the other end", func(t float64) (float64, float64) { return -50, max(0, 50-t) }, MeasurementCause},
+		{"OP shut, PV with it, and opened", func(t float64) (float64, float64) {
+			if t < 3000 {
+				return 50, 0
+			}
+			return 50, min(60, (t-3000)/20)
+		}, MeasurementCause},
 	} {
 		w := offsetWatch(nil)
 		w.s.Motion.OPMin, w.s.Motion.OPMax = 0, 100

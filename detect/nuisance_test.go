@@ -69,6 +69,17 @@ func TestGapHasNoQuietGain(t *testing.T) {
 	}
 }
 
+// Readings of a quiet loop that stray by a third are of noise: a run of lower ones is no change.
+func TestNoChangeAmongStrayingQuietGains(t *testing.T) {
+	for strays, want := range map[float32]bool{0.1: true, 0.25: true, 0.38: false} {
+		w := New(configs.NewLoop("FIC-512"), 0, Options{})
+		w.s.Quiet = quietGain{Base: num.Quantile{V: 4, N: 30}, Dev: num.Quantile{V: strays, N: 30}, Low: 1, High: 1.2, R2: 0.9, RunR2: 0.9, Run: -5}
+		if got := w.quietMoved(1.1); got != want {
+			t.Errorf("readings that stray by %g: moved %v", strays, got)
+		}
+	}
+}
+
 // bankOf has a history of 4 %/% and 60 s and newest fits of another gain, the first of which
 // counts begins at a time, s.
 func bankOf(w *Watch, k int, gain float32, from float64) *fitBank {

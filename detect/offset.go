@@ -463,6 +463,9 @@ func (w *Watch) judgeOffset(thr float64) {
 		}
 	} else if cause == Undetermined { // a gain that was seen to have fallen has no history
 		need = max(need, 3*past.Longest)
+		if rt, _ := w.resetS(); rt == 0 && w.anyRecovery() == 0 { // nothing is known yet of how long this loop takes
+			need = max(need, shiftS/2)
+		}
 	}
 	if past.Offset.On {
 		need /= 4
@@ -470,7 +473,10 @@ func (w *Watch) judgeOffset(thr float64) {
 	// Where PV came back from what was said before, the integral does work: such a
 	// loop must stay away for longer to be news.
 	need *= 1 + 2*float64(past.Came)
-	away := m.EF*o.Sign > 0.5*thr // PV that is back is no news
+	away := m.EF*o.Sign > 0.5*thr                    // PV that is back is no news
+	if cause != IntegralMissing && !past.Offset.On { // nor is one that comes back, whatever brings it
+		away = away && m.EF*o.Sign > math.Abs(mean)/2
+	}
 	if d-float64(o.FreeAt) > need && away && !s.Osc.Grow && !s.Osc.Sus {
 		past.Offset.support(since, mean, cause, conf)
 		switch cause {

@@ -97,6 +97,7 @@ func TestCauseOfAnOffset(t *testing.T) {
 		{"gain and integral are a fiftieth", nil, wandering(0.02, 0.8*runTi), GainTooLow},
 		{"OP answers nothing", nil, func(t float64) (float64, float64) { e, _ := wander(t); return e, 55 }, Undetermined},
 		{"it is worked off", nil, func(t float64) (float64, float64) { e := 5 * math.Exp(-t/1200); return e, 50 + e }, NoCause},
+		{"it goes, though not by OP", nil, func(t float64) (float64, float64) { return 8 * math.Exp(-t/1200), 55 }, NoCause},
 		{"a load that grows as fast as OP goes", nil, outrun, Undetermined},
 		{"over the change-over of a split range", func(l *configs.Loop) { l.OPSplit = 65 }, outrun, NoCause},
 		{"more than the loop list allows", func(l *configs.Loop) { l.OffsetOK = 3 }, wandering(1, 1e12), IntegralMissing},

@@ -308,6 +308,7 @@ const (
 	phiDeadBand     = 26.0 // over it the valve may have play, under it it jumps
 	phiDeadBandMost = 42.0
 	phiValve        = 55.0 // over it neither explains the cycle
+	phiCopy         = 6.0  // under it the integral is a tenth of the proportional part: OP has the shape of PV, whatever moves that
 )
 
 // evenSize is the ratio of the largest to the smallest size within which a cycle from outside
@@ -440,7 +441,7 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		o.setCause(Undetermined, [2]Cause{ProcessNonlinear, OutsideDisturbance}, 0.6)
 	case tri && !changed && sh.looks < 4:
 		o.setCause(Undetermined, [2]Cause{ValveSticking, ProcessNonlinear}, 0.6)
-	case tri && !changed && w.propOnlySeen():
+	case tri && !changed && (w.propOnlySeen() || integrating && phi < phiCopy):
 		o.setCause(Undetermined, [2]Cause{ValveSticking, OutsideDisturbance}, 0.5)
 	case drive && !retuned && !bolder && !clipped && w.cornerless(sh):
 		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.8)

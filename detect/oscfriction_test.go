@@ -26,6 +26,7 @@ func TestCornersOfAValve(t *testing.T) {
 		{"sticking under loads", level, 15, 0.7, 0.75, 0.08, true, 60, ValveSticking},
 		{"sharper, at the lag of play", level, 33, 0.6, 0.86, 0.19, false, 60, Undetermined},
 		{"sharper, at the lag of a jump", level, 15, 0.6, 0.86, 0.19, false, 60, Undetermined},
+		{"OP a copy of PV", level, 4, 0.7, 0.75, 0.08, false, 60, Undetermined},
 		{"a pure triangle", level, 15, 0.6, 0.86, 0.11, false, 60, ValveSticking},
 		{"OP as PV is, uneven", flow, 25, 0.8, 0.7, 0.07, false, 60, ValveSticking},
 		{"OP as PV is, even", flow, 25, 0.8, 0.7, 0.07, false, 5, Undetermined},

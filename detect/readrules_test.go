@@ -217,6 +217,36 @@ func TestSlowAgainstItsOwnHistory(t *testing.T) {
 	}
 }
 
+// Recoveries much longer than the usual are no slow loop where their shape is that of a sound
+// one, nor where the tuning is known to be as it was, unless all are as long as else their median.
+func TestLongRecoveriesOfASoundLoop(t *testing.T) {
+	for _, x := range []struct {
+		name   string
+		ratios []float32
+		own    float32 // of one of them, against what the process bears; 0 not read
+		kc     float32 // in service; usual are 2 %/% and 10 s; 0 not read
+		want   int
+	}{
+		{"slow for its process too", []float32{4.2, 5, 4.5, 6}, 0.7, 0, 3},
+		{"fast for its process", []float32{4.2, 5, 4.5, 6}, 0.2, 0, 0},
+		{"the tuning known as it was", []float32{4.6, 3.2, 5, 4.5, 3.1}, 0, 2, 0},
+		{"and all of them very long", []float32{4.6, 4.2, 5, 4.5, 5}, 0, 2, 3},
+		{"the gain less", []float32{1, 4.2, 5, 4.5, 3.1}, 0, 1, 3},
+	} {
+		w := slowWatch(0.7, x.ratios...)
+		r := &w.s.Recov
+		r.Usual[0].V, r.Usual[0].N = 100, 20
+		r.Ring[recRing-2].Own = x.own
+		if b := &w.s.Fits[1]; x.kc > 0 {
+			b.BaseK.V, b.BaseK.N, b.BaseT.V, b.BaseT.N = 2, 50, 10, 50
+			b.Last = fit{Kc: x.kc, Ti: 10, R2: 0.99, X: 100, T0: momentOf(26000), At: momentOf(27000)}
+		}
+		if got := w.slowForItself(recRing); got != x.want {
+			t.Errorf("%s: proven by %d, want %d", x.name, got, x.want)
+		}
+	}
+}
+
 // Where the tuning is read it names the cause, whatever the share says.
 func TestTuningNamesTheCauseOfSluggishness(t *testing.T) {
 	for _, x := range []struct {

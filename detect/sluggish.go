@@ -86,18 +86,22 @@ const (
 	slowMedian = 4.0 // times the usual, their median
 	slowFewest = 4   // recoveries
 	slowSure   = 5   // and where the tuning is known not to have changed
+	// soundOwn is how much slower than a sound tuning of its process makes it, as a ratio, a
+	// recovery of a slow loop is at least. Longer than usual with less of it is one of a load
+	// that comes seldom, among small ones that are over soon.
+	soundOwn = 0.5
 )
 
 // slowByHistory compares with the loop's own usual recovery. Where the tuning in
-// service is known not to have changed, ramps and second disturbances are the
-// likelier reason, and all of the last five must agree.
+// service is known not to have changed, ramps, waves and second disturbances are the
+// likelier reason, and all of the last five must be as slow as else their median.
 func (w *Watch) slowByHistory(n int) bool {
 	r := &w.s.Recov
 	need, over := slowFewest, slowEach
 	k0, t0, okb := w.usualTuning(r.recent(min(n, 5) - 1).T0.s())
 	kc, ti, ok := w.tuning(r.recent(2).T0.s(), 0)
 	if ok && okb && ti > 0 && t0 > 0 && math.Abs(math.Log(math.Abs(kc)/k0)) < 0.35 && math.Abs(math.Log(ti/t0)) < 0.35 {
-		need, over = slowSure, 2.5
+		need, over = slowSure, slowMedian*w.strict
 	}
 	if n < need {
 		return false
@@ -111,7 +115,7 @@ func (w *Watch) slowByHistory(n int) bool {
 	var ratios [5]float64
 	for i := range need {
 		e := r.recent(i)
-		if _, sure := w.usualRecovery(e.SP); e.Ratio == 0 || !sure || float64(e.Dur) < floor || float64(e.Ratio) < over {
+		if _, sure := w.usualRecovery(e.SP); e.Own > 0 && e.Own < soundOwn || e.Ratio == 0 || !sure || float64(e.Dur) < floor || float64(e.Ratio) < over {
 			return false
 		}
 		ratios[i] = float64(e.Ratio)

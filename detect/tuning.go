@@ -89,7 +89,7 @@ type fitBank struct {
 	Lag          float32 // s, of the last good block; 0 none
 	Warm         uint16  // samples since the restart, up to fitWarm
 	N            uint16  // samples in the block
-	Run          int8    // excited blocks in a row that the law explains; negative: that it does not
+	Run          int8    // excited blocks in a row that the law explains, and that could tell another; negative: that it does not
 	ByLag        int8    // good blocks that took the lag less those that did not, -lagVotes to lagVotes
 	ByLaw        int8    // excited blocks that the law explains less those that it does not, -lawVotes to lawVotes
 	Last         fit
@@ -170,8 +170,6 @@ func (w *Watch) stepFit(k, level int, e, si, op float64) {
 		}
 	}
 	if good {
-		b.Run = max(b.Run, 0)
-		b.Run = min(b.Run+1, 100)
 		w.keepFit(k, r, lag, better)
 	} else if r.R2 > fitR2 {
 		b.Last = r
@@ -201,6 +199,10 @@ func (b *fitBank) clear(t float64) {
 func (w *Watch) keepFit(k int, r fit, lag float64, better bool) {
 	b := &w.s.Fits[k]
 	b.Lag = float32(lag)
+	b.Run = min(max(b.Run, 0)+1, 100)
+	if b.oneShape() {
+		b.Run = 0
+	}
 	had := b.ByLag > 0
 	if better {
 		b.ByLag = min(b.ByLag+1, lagVotes)
@@ -295,6 +297,15 @@ func (b *fitBank) sharp(r *fit) bool {
 	kc := float64(r.Kc)
 	gain, integral := b.errors(kc, kc/float64(r.Ti), (1-float64(r.R2))*b.Sums.YY)
 	return gain < fitSharp && (r.Ti == noTi || integral < fitSharp)
+}
+
+// oneShape: e and its integral are one shape in the running block, as where e only decays after
+// steps of SP: what OP made of either cannot be told apart, and the least of what the law does
+// not know, such as OP logged late or in coarse steps, moves gain and reset time together by
+// any factor (variance inflation of 100; Marquardt 1970, Technometrics 12, 591).
+func (b *fitBank) oneShape() bool {
+	m := &b.Sums
+	return m.A01*m.A01 > 0.99*m.A00*m.A11
 }
 
 // newest is the newest sharp fit; the last of all before there is one.

@@ -34,3 +34,23 @@ func TestUnmendedIsNotOver(t *testing.T) {
 		}
 	}
 }
+
+// Before anything is known of how long a loop takes, an error that nothing explains is given half
+// a shift; one whose reset time is known is told sooner.
+func TestOffsetOfALoopNotKnownYet(t *testing.T) {
+	for _, x := range []struct {
+		known bool
+		hours float64
+		want  Cause
+	}{{true, 2, Undetermined}, {false, 2, NoCause}, {false, 6, Undetermined}} {
+		w := offsetWatch(nil)
+		w.s.Motion.OPMin, w.s.Motion.OPMax = 5, 95
+		if !x.known {
+			w.s.Fits[1] = fitBank{}
+		}
+		law := func(t float64) (e, op float64) { e, _ = wander(t); return e, 55 }
+		if c := said(feed(w, x.hours*3600, law), SustainedOffset); c != x.want {
+			t.Errorf("known %v, after %.0f h: said %q, want %q", x.known, x.hours, c, x.want)
+		}
+	}
+}
