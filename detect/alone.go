@@ -9,6 +9,7 @@ const (
 	aloneCertain = 2 * certain // twice as many nats: a chance of 4e-11
 	aloneLeast   = 0.3         // %
 	aloneNoise   = 2.5         // noise levels
+	aloneShaped  = 4           // looks at a shape that tell it before a cause is judged
 	aloneRests   = 0.4         // share of the time in which e rests, at most: a sine has 0.16, a triangle 0.25
 	plainBeat    = 8.0         // regularity that nothing but a cycle has for long
 )
@@ -28,19 +29,35 @@ func (b *cycleBank) evenest(level int, large float64) (best ringStat, plain floa
 	return
 }
 
-// aloneAsked: a cycle of a period, s, at a level may be one by its evenness alone: its shape was
-// looked at, and it is within what the loop's own dynamics may make.
-func (w *Watch) aloneAsked(level int, period float64) bool {
+// aloneAsked is the evidence, nats, by which a cycle of a period, s, at a level may be one by its
+// evenness alone: its shape was looked at, and it is within what the loop's own dynamics may make
+// or of a valve's shape, which counts for a part of it.
+func (w *Watch) aloneAsked(level int, period float64) (nats float64, ok bool) {
 	k := &w.s.Track
 	rt, _ := w.resetS()
-	return k.On && int(k.Bank) == level && k.Looks >= 2 && period < ownSlowest*rt
+	switch {
+	case !k.On || int(k.Bank) != level || k.Looks < 2:
+		return 0, false
+	case w.ofAValve(level):
+		return 1.5 * certain * w.strict, true
+	}
+	return aloneCertain * w.strict, period < ownSlowest*rt
+}
+
+// ofAValve: the cycle that the track follows at a level has the shape that a sticking valve gives
+// it. How long OP takes through its band is not bounded by the loop's own dynamics.
+func (w *Watch) ofAValve(level int) bool {
+	sh := w.shapes()
+	_, regular, ok := w.s.Cycles[level].lengths(8)
+	return ok && sh.looks >= aloneShaped && w.triangle(w.stickIndex(sh), sh, regular, false)
 }
 
 // alone: by its evenness alone it is a cycle.
 func (w *Watch) alone(level int, b *cycleBank, period, usual, sigma float64) bool {
-	if !w.aloneAsked(level, period) || b.tip() < aloneLarge(sigma)/2 || w.s.Track.Rests > aloneRests {
+	nats, ok := w.aloneAsked(level, period)
+	if !ok || b.tip() < aloneLarge(sigma)/2 || w.s.Track.Rests > aloneRests {
 		return false
 	}
 	q, plain := b.evenest(level, largeInFew(usual, sigma))
-	return q.n > 0 && q.amp > aloneLarge(sigma) && q.regular > plainBeat && plain > aloneCertain*w.strict && w.steadySP(float64(q.n)/2*period)
+	return q.n > 0 && q.amp > aloneLarge(sigma) && q.regular > plainBeat && plain > nats && w.steadySP(float64(q.n)/2*period)
 }

@@ -15,14 +15,19 @@ func TestCycleThatLoadsOutgrow(t *testing.T) {
 		rests  float32
 		reset  float64
 		want   bool
+		shape  float64 // sine-triangle index of OP
 	}{
-		{"plain", 16, even8, 1.1, 0.2, 600, true},
-		{"too few", fewest - 1, even8, 1.1, 0.2, 600, false},
-		{"uneven", 20, func(i int) float64 { return 8 + float64(i*7%5) }, 1.1, 0.2, 600, false},
-		{"near even, within the usual", 20, func(i int) float64 { return 8 + float64(i*7%3) }, 1.1, 0.2, 600, true},
-		{"near even, far within", 14, func(i int) float64 { return 8 + float64(i*7%3) }, 20, 0.2, 600, false},
-		{"batches", 20, even8, 1.1, 0.7, 600, false},
-		{"far slower than the loop", 20, even8, 1.1, 0.2, 100, false},
+		{"plain", 16, even8, 1.1, 0.2, 600, true, 0.3},
+		{"too few", fewest - 1, even8, 1.1, 0.2, 600, false, 0.3},
+		{"uneven", 20, func(i int) float64 { return 8 + float64(i*7%5) }, 1.1, 0.2, 600, false, 0.3},
+		{"near even, within the usual", 20, func(i int) float64 { return 8 + float64(i*7%3) }, 1.1, 0.2, 600, true, 0.3},
+		{"near even, far within", 14, func(i int) float64 { return 8 + float64(i*7%3) }, 20, 0.2, 600, false, 0.3},
+		{"batches", 20, even8, 1.1, 0.7, 600, false, 0.3},
+		{"far slower than the loop", 20, even8, 1.1, 0.2, 100, false, 0.3},
+		{"far slower, of a valve", 20, even8, 1.1, 0.2, 100, true, 0.85},
+		{"far slower, of a valve, batches", 20, even8, 1.1, 0.7, 100, false, 0.85},
+		{"younger", 10, func(i int) float64 { return 8 + float64(i*7%3) }, 1.3, 0.2, 600, false, 0.3},
+		{"younger, of a valve", 10, func(i int) float64 { return 8 + float64(i*7%3) }, 1.3, 0.2, 600, true, 0.85},
 	} {
 		w, b := swingWatch(x.length, even(1, x.n))
 		w.loop.GainPct, w.loop.IdealReset = 1, x.reset
@@ -30,7 +35,7 @@ func TestCycleThatLoadsOutgrow(t *testing.T) {
 		for range 400 {
 			b.Usual.Add(x.usual, 0.75, 0.05, 1e-3)
 		}
-		w.s.Track = track{On: true, Bank: 2, Looks: 3, Rests: x.rests}
+		w.s.Track = track{On: true, Bank: 2, Looks: 6, Rests: x.rests, SinSum: x.shape, TriSum: 1 - x.shape}
 		usual := b.Usual.Value()
 		st, _ := b.stat(2, 8)
 		period := st.period * w.levelS(2)

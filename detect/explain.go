@@ -211,7 +211,7 @@ func (w *Watch) explainMoved(name string, reset bool) []string {
 	best, line := 0.0, ""
 	for k := range w.s.Fits {
 		b := &w.s.Fits[k]
-		if b.Count < fitRing || b.BaseK.N < 4 || b.ByLaw <= 0 {
+		if b.Count < fitRing || b.BaseK.N < changeYoung || b.ByLaw <= 0 {
 			continue
 		}
 		lo, hi, dev := math.Inf(1), math.Inf(-1), &b.DevK

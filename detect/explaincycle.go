@@ -66,10 +66,10 @@ func (w *Watch) explainCycle(l int) (out []string) {
 			out = append(out, fmt.Sprintf("  is it a cycle beyond doubt, over %d half-cycles: evidence %.1f (asked %.1f), ±%.3g %% (asked %.3g)", n, plain, certain*w.strict, amp, large))
 		}
 	}
-	if size > 0 && w.aloneAsked(l, st.period*w.levelS(l)) {
+	if nats, ok := w.aloneAsked(l, st.period*w.levelS(l)); size > 0 && ok {
 		if q, plain := b.evenest(l, largeInFew(size, sigma)); q.n > 0 {
 			out = append(out, fmt.Sprintf("  is it one that loads outgrow, over %d half-cycles: evidence %.1f (asked %.1f), length %.1f times its scatter (asked %.1f), ±%.3g %% (asked %.3g), e rests for %.2f of the time (asked under %.2f)",
-				q.n, plain, aloneCertain*w.strict, q.regular, plainBeat, q.amp, aloneLarge(sigma), w.s.Track.Rests, aloneRests))
+				q.n, plain, nats, q.regular, plainBeat, q.amp, aloneLarge(sigma), w.s.Track.Rests, aloneRests))
 		}
 	}
 	if q, ok := b.stat(l, steadyHalves); ok {

@@ -120,7 +120,7 @@ func (w *Watch) standsSince() (t float64) {
 	}
 	for k := range w.s.Fits {
 		b := &w.s.Fits[k]
-		if b.Count < fitRing || b.BaseK.N < 4 {
+		if b.Count < fitRing || b.BaseK.N < changeYoung {
 			continue
 		}
 		if b.Run <= -fitBad && b.Last.At >= newest {

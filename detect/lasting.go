@@ -44,7 +44,7 @@ func (w *Watch) countKept(level int, b *cycleBank, few bool) {
 }
 
 func (w *Watch) kept(level int, b *cycleBank) bool {
-	if b.tip() < 0.5*max(keptLeast, 2.5*w.s.Noise.sigma()*w.strict) { // most are small: no more is worked out
+	if b.tip() < 0.5*max(keptLeast, w.s.Noise.sigma()*w.strict) { // most are small: no more is worked out
 		return false
 	}
 	q, _ := b.stat(level, keptHalves)
@@ -59,7 +59,7 @@ type lasting struct{ size, regular, even float64 }
 // keptAsked is that of a swing of a period, s, at a level; ok is false where no swing is
 // told by lasting.
 func (w *Watch) keptAsked(level int, period float64) (a lasting, ok bool) {
-	over, regular := 2.5, 4.0
+	over, noise, regular := 2.5, 2.5, 4.0
 	usual, young := w.usualBelow(level)
 	if young { // its usual size rests on little: more is asked for
 		over, regular = 3, 6
@@ -69,11 +69,12 @@ func (w *Watch) keptAsked(level int, period float64) (a lasting, ok bool) {
 		usual, a.even = 0, math.Inf(1)
 		if w.loop.Process == configs.Integrating {
 			regular = keptLoose
+			noise = max(1, noise/math.Sqrt(float64(int(1)<<level))) // a mean of so many samples has less of it
 		}
 	} else if young && (usual == 0 || w.loop.Duty == configs.Batch || w.loop.Duty == configs.StartStop) || period > keptSlow {
 		return a, false
 	}
-	a.size, a.regular = max(keptLeast, 2.5*w.s.Noise.sigma()*w.strict, over*usual*w.strict), regular*w.strict
+	a.size, a.regular = max(keptLeast, noise*w.s.Noise.sigma()*w.strict, over*usual*w.strict), regular*w.strict
 	return a, true
 }
 

@@ -362,12 +362,7 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	integrating := w.loop.Process == configs.Integrating
 	stuckBefore := o.LastCause != 0 && causes[o.LastCause] == ValveSticking
 	lately := o.LastCause != 0 && w.in.t-o.LastAt < 60*o.P && math.Abs(math.Log(o.P/o.LastP)) < 0.75
-	// Play has to be plain once; then it is not taken back because noise blurs it.
-	least, corners := shapeStuck, 1.4*peakedLeast
-	if causes[o.Cause] == ValveDeadBand {
-		least, corners = 0.52, 0.7*peakedLeast
-	}
-	play := w.loop.Process != configs.SelfRegulating && strays && sh.looks >= shapeLooks && si > least && sh.peaked > corners && sh.peaked < peakedMost && phi > phiDeadBand && phi < phiDeadBandMost
+	play := w.play(sh, phi, strays)
 	clipped := s.Tune.LimitAt > 0 && w.in.t-s.Tune.LimitAt < 1.5*o.P // a cycle between the limits of OP is as even as a clock's
 	unchanged := near(rk, 1) && near(rt, 1)
 	bold := w.bolder()
@@ -396,7 +391,7 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		o.LastAt, o.LastP = w.in.t, o.P
 	case sh.looks >= shapeLooks && sh.peaked > spikesLeast:
 		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.85)
-	case o.waxes() && !changed && !slack && !(integrating && (tri || play)) && !(keeps && s.Clock.long()): // of what chance drives PV has no corners
+	case o.waxes() && !changed && !slack && !(integrating && tri || play) && !(keeps && s.Clock.long()): // of what chance drives PV has no corners
 		o.setCause(Undetermined, open, 0.5)
 	case slack && !(keeps && s.Clock.long()):
 		o.setCause(GainTooLow, [2]Cause{ResetTooShort}, 0.92)
@@ -420,7 +415,7 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		o.setCause(OutsideDisturbance, [2]Cause{ValveSticking}, 0.8)
 	case sh.looks == 0 && o.Cause != 0:
 		// A gap or a spell in manual took the record of the shape: nothing new is known.
-	case play && !changed && !follows && (integrating || !o.Sticking): // play cycles only beside two integrals
+	case play && !changed && !follows: // play cycles only beside two integrals
 		o.setCause(ValveDeadBand, [2]Cause{ValveSticking}, 0.8)
 	case (tri || o.Sticking) && !integrating && !changed && smoothed(phi, sh, o.Sticking):
 		o.setCause(Undetermined, [2]Cause{OutsideDisturbance, ValveSticking}, 0.6)

@@ -97,3 +97,20 @@ func (w *Watch) keptTuning(rk, rt, period float64) bool {
 	o := &w.s.Osc
 	return o.Grow && o.Since > calmPeriods*period && near(rk, 1) && near(rt, 1)
 }
+
+// playKept is by how much, degrees, the lag may leave its bounds once play was plain.
+const playKept = 4.0
+
+// play: shape and lag of a cycle that the dead band of an element makes beside two integrals,
+// the corners of its e (third harmonic) included. Of a process that nobody listed e must be more
+// of a triangle than OP is, and OP no sine: the element of one that settles makes its triangle of
+// OP (He et al. 2007), a drive from outside a sine. Play has to be plain once; then it is taken
+// back when it is as plainly none, not because noise or a load blurs it for a while.
+func (w *Watch) play(sh shapes, phi float64, strays bool) bool {
+	least, corners, kept := shapeStuck, 1.4*peakedLeast, 0.0
+	integrates := w.loop.Process == configs.Integrating || sh.siPV > sh.siOP && sh.siOP > mostSine
+	if causes[w.s.Osc.Cause] == ValveDeadBand {
+		least, corners, kept, integrates = shapeStuck-2*shapeScatter/math.Sqrt(shapeLooks), 0, playKept, true
+	}
+	return integrates && w.loop.Process != configs.SelfRegulating && strays && sh.looks >= shapeLooks && sh.siPV > least && sh.peaked > corners && sh.peaked < peakedMost && phi > phiDeadBand-kept && phi < phiDeadBandMost+kept
+}

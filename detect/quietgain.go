@@ -89,10 +89,15 @@ func (w *Watch) stepQuiet(k int, r *fit) {
 			*q = quietGain{}
 		}
 	case w.changeLasts(q.Since.s(), r.T0.s(), 0):
-		// How far it moved is known better than where it stands: whole fits tell that.
+		// How far it moved is known better than where it stands: whole fits tell that, of the
+		// gain that was or, after long, of the one that is.
 		was := q.Base.Value()
 		if kc, _, ok := w.usualTuning(math.Inf(1)); ok {
-			now, was = now*kc/was, kc
+			by := kc / was
+			if math.Abs(math.Log(kc/now)) < math.Abs(math.Log(by)) {
+				by = kc / now
+			}
+			now, was = now*by, was*by
 		}
 		w.tellChange(-1, q.Since.s(), 1, [2]float64{was, now}, [2]float64{})
 	}

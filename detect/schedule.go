@@ -129,15 +129,15 @@ func (c *schedule) at(pv float64) float64 {
 	return math.Exp((1-u)*math.Log(c.Gain[below].Value()) + u*math.Log(c.Gain[above].Value()))
 }
 
-// knows: fits were seen at pv, %, or beside it. What the gain is elsewhere, only a
+// knows: so many fits were seen at pv, %, or beside it. What the gain is elsewhere, only a
 // curve could say.
-func (c *schedule) knows(pv float64) bool {
+func (c *schedule) knows(pv float64, fits uint32) bool {
 	if c.Step == 0 {
 		return false
 	}
 	i := c.bin(pv)
 	for j := i - 1; j <= i+1; j++ {
-		if j >= 0 && j < schedBins && c.Gain[j].N >= 2 {
+		if j >= 0 && j < schedBins && c.Gain[j].N >= fits {
 			return true
 		}
 	}

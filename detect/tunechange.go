@@ -35,6 +35,7 @@ const (
 	changeSpread = 1.35
 	changeLeast  = 2 // fits that can tell a change, where they moved far
 	changeFits   = 4
+	changeYoung  = 4    // readings from which on a history is known
 	changeOld    = 6    // deviations known before: four beyond them all come by chance once in 210
 	changeGuess  = 0.15 // 80 % quantile of the deviations, ln, before so many are known: twice what readings stray
 	changeR2     = 0.95
@@ -54,7 +55,8 @@ func (w *Watch) tuneCheck(k int) {
 	if w.loop.Duty == configs.GapDuty { // two gains by design: which is read goes with the size of e
 		return
 	}
-	if b.Count < fitRing || b.BaseK.N < 4 || s.Osc.Sus && s.Osc.Grow {
+	// Of a young history only another law altogether is a change.
+	if b.Count < fitRing || b.BaseK.N < 2 || b.young() && !b.outvoted() || s.Osc.Sus && s.Osc.Grow {
 		return
 	}
 	// Where something else than the law moves OP between the blocks that pass for it, these
@@ -111,8 +113,12 @@ func (w *Watch) left(k, m int) (n leaving, what uint8) {
 	wasK, wasT := b.BaseK.Value(), b.BaseT.Value()
 	kn, tn := num.Median(ks[:m]), num.Median(ts[:m])
 	n.Kc, n.Ti = kn, tn
+	fits := uint32(2)
+	if b.young() { // and as far off as no curve goes beside one of its points
+		fits = 1
+	}
 	alone := m < changeFits // too few to tell it without another scale
-	if w.moved(dk[:m], m, &b.DevK) && (!alone || w.borneOut(k, n.Since, 1, wasK, kn)) && !paced(kn/wasK, s.Tune.OPMean/s.Tune.OPUsual) && s.Sched.knows(pv) && !(s.Sched.is() && int(s.Sched.Bank) != k) && !w.contradicted(k, n.Since, 1, wasK, kn) {
+	if w.moved(dk[:m], m, &b.DevK) && (!alone || w.borneOut(k, n.Since, 1, wasK, kn)) && !paced(kn/wasK, s.Tune.OPMean/s.Tune.OPUsual) && s.Sched.knows(pv, fits) && !(s.Sched.is() && int(s.Sched.Bank) != k) && !w.contradicted(k, n.Since, 1, wasK, kn) {
 		what |= 1
 	}
 	// The scale must see the reset: not far above the filter.
@@ -237,7 +243,7 @@ func (w *Watch) contradicted(k int, since float64, what uint8, was, now float64)
 	for j := range w.s.Fits {
 		b := &w.s.Fits[j]
 		f := &b.Last
-		if j == k || b.BaseK.N < 4 || f.R2 < changeR2 || f.X < fitX || (f.T0.s()+f.At.s())/2 < since {
+		if j == k || b.BaseK.N < changeYoung || f.R2 < changeR2 || f.X < fitX || (f.T0.s()+f.At.s())/2 < since {
 			continue
 		}
 		off, usual := w.strays(j, f), b.BaseK.Value()

@@ -219,7 +219,7 @@ func (w *Watch) keepFit(k int, r fit, lag float64, better bool) {
 	if b.Count >= fitRing {
 		old := &b.Ring[i]
 		// Like with like; what is suspected to be new does not teach what is usual.
-		if c := &w.s.Change; old.R2 > changeR2 && !(c.Maybe > 0 && int(c.MaybeOf) == k && old.T0 >= c.MaybeAt) {
+		if c := &w.s.Change; old.R2 > changeR2 && !(c.Maybe > 0 && int(c.MaybeOf) == k && old.T0 >= c.MaybeAt) && !(b.young() && b.denied(old)) {
 			if b.BaseK.N > 2 {
 				b.DevK.Add(math.Abs(w.strays(k, old)), 0.8, 0.05, 0.01)
 			}
@@ -242,6 +242,31 @@ func (w *Watch) keepFit(k int, r fit, lag float64, better bool) {
 	}
 	w.s.Motion.LawSeen = true
 	w.tuneCheck(k)
+	if c := &w.s.Change; b.young() && b.outvoted() && !(c.Maybe > 0 && int(c.MaybeOf) == k) { // nor is a change suspected
+		b.BaseK, b.BaseT, b.DevK, b.DevT = num.Quantile{}, num.Quantile{}, num.Quantile{}, num.Quantile{}
+	}
+}
+
+// deniedBy is the factor on the gain over which two readings are not of one law: twice is as
+// much as any stray.
+const deniedBy = 3.0
+
+// young: the history is of so few readings that another law would soon make a mean of both.
+func (b *fitBank) young() bool { return b.BaseK.N > 0 && b.BaseK.N < changeYoung }
+
+// denied: a reading is of another law than the history.
+func (b *fitBank) denied(f *fit) bool {
+	return !within(math.Abs(float64(f.Kc)), b.BaseK.Value(), deniedBy)
+}
+
+// outvoted: none of the readings in the ring is of the law of the history.
+func (b *fitBank) outvoted() bool {
+	for i := range b.Ring {
+		if !b.denied(&b.Ring[i]) {
+			return false
+		}
+	}
+	return b.Count >= fitRing
 }
 
 // solveFit solves the normal equations of the running block. lag, s, is that of the
