@@ -52,6 +52,7 @@ type Options struct {
 
 	Settle      time.Duration // a step waits so long for what folds it into another; 0: 30 s, negative: none
 	SettleStale time.Duration // the same for stale-data, so that a dead source speaks once; 0: 2 min
+	SettleSwing time.Duration // the most for a swing that may be that of other loops; 0: 4 h
 	OldNews     time.Duration // older news is said to be old; 0: 1 h
 	SendTimeout time.Duration // of one attempt; 0: 30 s
 	RetryFirst  time.Duration // upper bound of the first pause; doubled with each attempt; 0: 5 s
@@ -90,7 +91,7 @@ func New(o Options) (*Desk, error) {
 	for _, d := range []struct {
 		p *time.Duration
 		v time.Duration
-	}{{&o.Settle, 30 * time.Second}, {&o.SettleStale, 2 * time.Minute}, {&o.OldNews, time.Hour}, {&o.SendTimeout, 30 * time.Second},
+	}{{&o.Settle, 30 * time.Second}, {&o.SettleStale, 2 * time.Minute}, {&o.SettleSwing, 4 * time.Hour}, {&o.OldNews, time.Hour}, {&o.SendTimeout, 30 * time.Second},
 		{&o.RetryFirst, 5 * time.Second}, {&o.RetryMost, 10 * time.Minute}, {&o.GiveUp, 72 * time.Hour}} {
 		if *d.p == 0 {
 			*d.p = d.v

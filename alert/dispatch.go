@@ -126,7 +126,7 @@ func (d *Desk) nextWake(now time.Time) time.Time {
 // settled is when a step may be routed: until then another finding may fold it
 // away.
 func (d *Desk) settled(s *step) int64 {
-	wait := d.o.Settle
+	wait := max(d.o.Settle, time.Duration(s.Wait)*time.Millisecond)
 	if s.Finding.Kind == detect.StaleData {
 		wait = max(wait, d.o.SettleStale)
 	}
@@ -235,6 +235,9 @@ func (b *batch) routeStep(s *step, local time.Time, people map[string][]candidat
 func (b *batch) routePerson(s *step, it Item, to string, r *configs.Route, local time.Time, people map[string][]candidate) error {
 	d := b.d
 	if e := d.mem.episodes[it.Episode]; e != nil {
+		if s.Wait > 0 && e.Ack != nil { // seen on the page while it waited
+			return b.markTold(it.Episode, it.Step, to, string(Acknowledged))
+		}
 		switch state := e.State(); state {
 		case Shelved, SuppressedByDesign, OutOfService, Held, Folded:
 			// Somebody decided that, or nobody can act on it. The digest lists it

@@ -3,6 +3,7 @@ package alert
 import (
 	"crypto/sha256"
 	"encoding/base32"
+	"math"
 	"slices"
 	"strings"
 	"time"
@@ -30,7 +31,8 @@ const (
 type Member struct {
 	Finding detect.Finding `json:"finding"`
 	Open    bool           `json:"open"`
-	Depth   int            `json:"depth,omitempty"` // in its cascade: 0 outermost, or none
+	Depth   int            `json:"depth,omitempty"`  // in its cascade: 0 outermost, or none
+	Within  bool           `json:"within,omitempty"` // a group of one cascade, of which its loops tell more
 }
 
 // Mark says who did something, when and why. Times are ms UTC.
@@ -93,6 +95,8 @@ type toldState struct {
 	Confidence float64      `json:"confidence,omitempty"`
 	Strength   float64      `json:"strength,omitempty"` // amplitude or offset, %
 	Loops      int          `json:"loops,omitempty"`
+	Root       string       `json:"root,omitempty"` // of a group
+	Loop       string       `json:"loop,omitempty"` // that led
 	Urgent     bool         `json:"urgent,omitempty"`
 	LimitAt    int64        `json:"limit_at,omitempty"` // predicted, data time
 	Reached    bool         `json:"reached,omitempty"`  // the limit was
@@ -151,7 +155,35 @@ func (e *Episode) Lead() detect.Finding {
 			best = i
 		}
 	}
-	return e.Members[best].Finding
+	return e.withLimit(e.Members[best].Finding)
+}
+
+// withLimit adds to what is said of a group the limit that the first of its loops meets: the
+// group tells nothing of growth, and its loops make no messages of their own.
+func (e *Episode) withLimit(f detect.Finding) detect.Finding {
+	if f.Kind != detect.SharedOscillation {
+		return f
+	}
+	soonest, first := int64(0), (*detect.Finding)(nil)
+	for i := range e.Members {
+		if m := &e.Members[i]; m.Open && m.Finding.Kind == detect.GrowingOscillation {
+			if at, _, ok := limitAt(&m.Finding); ok && (first == nil || at < soonest) {
+				soonest, first = at, &m.Finding
+			}
+		}
+	}
+	if first == nil {
+		return f
+	}
+	for _, m := range first.Measures {
+		if w, ok := limitName(m.Name); ok && first.At+int64(m.Value*1000) == soonest {
+			left := math.Max(0, float64(soonest-f.At)/1000)
+			f.Measures = append(slices.Clone(f.Measures), detect.Measure{Name: m.Name, Value: left})
+			f.Text += " Of these " + first.Loop + " meets its " + limitWords(w) + " first."
+			break
+		}
+	}
+	return f
 }
 
 func leads(a, b *Member) bool {
@@ -159,8 +191,11 @@ func leads(a, b *Member) bool {
 		return a.Open
 	}
 	fa, fb := &a.Finding, &b.Finding
-	if x, y := collects(fa.Kind), collects(fb.Kind); x != y {
+	if x, y := a.collects(), b.collects(); x != y {
 		return x
+	}
+	if a.collects() && fa.At != fb.At {
+		return fa.At > fb.At // a group is about another loop from now on
 	}
 	if x, y := named(fa.Cause), named(fb.Cause); x != y {
 		return x
@@ -181,6 +216,9 @@ func leads(a, b *Member) bool {
 	}
 	return memberKey(fa) < memberKey(fb)
 }
+
+// collects: it tells of the whole of an episode.
+func (m *Member) collects() bool { return collects(m.Finding.Kind) && !m.Within }
 
 func collects(k detect.Kind) bool { return k == detect.SourceDown || k == detect.SharedOscillation }
 

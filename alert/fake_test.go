@@ -203,6 +203,7 @@ type rig struct {
 	mail  *fakeSender
 	set   Settings
 	desk  *Desk
+	swing time.Duration // Options.SettleSwing
 }
 
 func newRig(t testing.TB, edit ...func(*Settings)) *rig {
@@ -210,7 +211,7 @@ func newRig(t testing.TB, edit ...func(*Settings)) *rig {
 	if err != nil {
 		t.Fatal(err)
 	}
-	r := &rig{t: t, store: newStore(), clock: &clock{t: start}, hook: &fakeSender{}, mail: &fakeSender{}}
+	r := &rig{t: t, store: newStore(), clock: &clock{t: start}, hook: &fakeSender{}, mail: &fakeSender{}, swing: -1}
 	r.set = Settings{Site: "Kestrel Fen", Zone: london, Standing: -1,
 		Loops: []*configs.Loop{
 			loop("AIC-204"), loop("LIC-310", func(l *configs.Loop) { l.Inner, l.Area = "FIC-311", "south" }), loop("FIC-311"),
@@ -233,7 +234,7 @@ func (r *rig) open() {
 	if r.desk != nil {
 		r.desk.Stop()
 	}
-	d, err := New(Options{Store: On(r.store), Settings: r.set, Clock: r.clock.now, Seed: 1, Settle: -1, SettleStale: -1})
+	d, err := New(Options{Store: On(r.store), Settings: r.set, Clock: r.clock.now, Seed: 1, Settle: -1, SettleStale: -1, SettleSwing: r.swing})
 	if err != nil {
 		r.t.Fatal(err)
 	}

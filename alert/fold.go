@@ -1,6 +1,8 @@
 package alert
 
 import (
+	"cmp"
+	"slices"
 	"strings"
 
 	"midwatch/configs"
@@ -126,6 +128,9 @@ func (d *Desk) home(f *detect.Finding, family string) *Episode {
 	if e := m.resolve(m.heard[memberKey(f)].Episode); e != nil && e.Open() && e.member(f) != nil && e.member(f).Open {
 		return e
 	}
+	if e := d.groupHome(f); e != nil {
+		return e
+	}
 	own := m.episodes[m.index[place(subjectKey(f.Subject), family)]]
 	if own != nil && own.Open() && (own.has(f.Subject) || own.compatible(f)) {
 		return own
@@ -142,12 +147,53 @@ func (d *Desk) home(f *detect.Finding, family string) *Episode {
 			}
 		}
 	}
-	// Only what the subject itself had comes back: a loop that was once part of
-	// another's episode starts one of its own.
-	if own != nil && own.Into == "" && own.Subject == f.Subject && f.At-own.Cleared <= day {
+	// Only what the subject itself had comes back, or the swing of its group: a loop that
+	// was once part of another's episode starts one of its own.
+	if own != nil && own.Into == "" && (own.Subject == f.Subject || family == familySwing && own.groupSwing(f)) && f.At-own.Cleared <= day {
 		return own
 	}
 	return nil
+}
+
+// groupHome finds where a group goes on that is first heard of: in the episode that was open
+// first of those of its loops, so that who was told of one is told of all, or in that of the
+// same group which ended less than a day ago.
+func (d *Desk) groupHome(f *detect.Finding) (e *Episode) {
+	if f.Kind != detect.SharedOscillation {
+		return nil
+	}
+	rank := func(o *Episode) (open int, at int64) {
+		if o.Open() {
+			return 1, -o.Raised
+		}
+		return 0, o.Cleared
+	}
+	for _, l := range f.Loops {
+		o := d.mem.resolve(d.mem.index[place("loop:"+l, familySwing)])
+		if o == nil || o == e || o.Open() && !o.compatible(f) || !o.Open() && (!share(o.Group, f.Loops) || f.At-o.Cleared > day) {
+			continue
+		}
+		if e == nil {
+			e = o
+			continue
+		}
+		a, x := rank(o)
+		if b, y := rank(e); cmp.Or(cmp.Compare(a, b), cmp.Compare(x, y), strings.Compare(e.ID, o.ID)) > 0 {
+			e = o
+		}
+	}
+	return e
+}
+
+// share says whether two lists have two loops in common.
+func share(a, b []string) bool {
+	n := 0
+	for _, l := range a {
+		if slices.Contains(b, l) {
+			n++
+		}
+	}
+	return n > 1
 }
 
 // resolve follows folded episodes to where they went on.
@@ -184,6 +230,13 @@ func (e *Episode) compatible(f *detect.Finding) bool {
 		}
 	}
 	return false
+}
+
+// groupSwing: the swing of a loop may be that of the group which had the episode.
+func (e *Episode) groupSwing(f *detect.Finding) bool {
+	return slices.Contains(e.Group, f.Loop) && slices.ContainsFunc(e.Members, func(m Member) bool {
+		return m.Finding.Kind == detect.SharedOscillation && samePeriod(&m.Finding, f)
+	})
 }
 
 func (e *Episode) openKind(k detect.Kind) bool {

@@ -182,7 +182,7 @@ func TestPruningThatFails(t *testing.T) {
 func TestPruningOnceADay(t *testing.T) {
 	synctest.Test(t, func(t *testing.T) {
 		s := newStore()
-		d, err := New(Options{Store: On(s), Clock: time.Now, Settle: -1, SettleStale: -1, Settings: Settings{Site: "Kestrel Fen", Standing: -1, Keep: 40 * aDay,
+		d, err := New(Options{Store: On(s), Clock: time.Now, Settle: -1, SettleStale: -1, SettleSwing: -1, Settings: Settings{Site: "Kestrel Fen", Standing: -1, Keep: 40 * aDay,
 			Senders: map[string]Sender{"log": &fakeSender{}},
 			Advise:  configs.Advise{Senders: []configs.Sender{{Name: "log", Log: &configs.LogSender{}}}, Routes: []configs.Route{{To: []string{"log"}}}}}})
 		if err != nil {

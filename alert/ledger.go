@@ -165,12 +165,12 @@ func (b *batch) hear(f *detect.Finding) error {
 		}
 	}
 	if t := e.member(f); t != nil {
-		*t = Member{Finding: *f, Open: true, Depth: b.d.set.depth[f.Loop]}
+		*t = b.d.newMember(f)
 	} else {
 		if what == "updated" {
 			what = "folded in"
 		}
-		e.Members = append(e.Members, Member{Finding: *f, Open: true, Depth: b.d.set.depth[f.Loop]})
+		e.Members = append(e.Members, b.d.newMember(f))
 	}
 	if f.Kind == detect.SharedOscillation {
 		e.Group = f.Loops
@@ -183,7 +183,9 @@ func (b *batch) hear(f *detect.Finding) error {
 		e.Shelf = &s
 	}
 	b.touch(e)
-	m.index[place(subjectKey(f.Subject), family)] = e.ID
+	if f.Kind != detect.SharedOscillation || f.Loop == "" { // else see gather
+		m.index[place(subjectKey(f.Subject), family)] = e.ID
+	}
 	if err := b.hearIn(f, e.ID); err != nil {
 		return err
 	}

@@ -107,7 +107,7 @@ func (m *memory) claim(e *Episode) {
 			set(place(subjectKey(f.Subject), familyOf(f.Kind)))
 		}
 	}
-	if e.Open() {
+	if e.Into == "" {
 		for _, l := range e.Group {
 			set(place("loop:"+l, familySwing))
 		}

@@ -19,7 +19,7 @@ func TestOnTheStore(t *testing.T) {
 		if err != nil {
 			t.Fatal(err)
 		}
-		d, err := New(Options{Store: On(s), Settings: r.set, Clock: r.clock.now, Settle: -1, SettleStale: -1})
+		d, err := New(Options{Store: On(s), Settings: r.set, Clock: r.clock.now, Settle: -1, SettleStale: -1, SettleSwing: -1})
 		if err != nil {
 			t.Fatal(err)
 		}

@@ -15,6 +15,7 @@ type step struct {
 	Wall  int64 `json:"wall"`            // when it was written down
 	Quiet bool  `json:"quiet,omitempty"` // of no interest to people: programs only
 	Worse bool  `json:"worse,omitempty"` // a standing trouble that got worse
+	Wait  int64 `json:"wait,omitempty"`  // ms of wall time in which its group may show, see joinWait
 }
 
 // Item is what a message says of one episode, kept as it was when it happened:
@@ -56,10 +57,13 @@ func (b *batch) step(e *Episode, event detect.Event, at int64, quiet, worse bool
 	b.touch(e)
 	lead := e.Lead()
 	limit, reached, _ := limitOf(&lead)
-	e.Told = toldState{LimitAt: limit, Reached: reached, Event: event, Cause: lead.Cause, Kind: lead.Kind, Confidence: lead.Confidence, Strength: strength(&lead),
+	e.Told = toldState{Root: root(&lead), Loop: lead.Loop, LimitAt: limit, Reached: reached, Event: event, Cause: lead.Cause, Kind: lead.Kind, Confidence: lead.Confidence, Strength: strength(&lead),
 		Loops: len(e.Loops()), Urgent: urgentSoon(&lead)}
-	s := step{Item: b.d.item(e), Wall: b.d.wall(), Quiet: quiet, Worse: worse}
+	s := step{Item: b.d.item(e), Wall: b.d.wall(), Quiet: quiet, Worse: worse, Wait: b.d.joinWait(e, event)}
 	s.Event, s.At = event, at
+	if err := b.instead(e, &s); err != nil {
+		return err
+	}
 	b.d.mem.steps[e.ID] = append(b.d.mem.steps[e.ID], s)
 	return put(b.tx, bucketSteps, key2(e.ID, e.Steps), s)
 }
@@ -93,11 +97,23 @@ func (e *Episode) news() (news, worse, quiet bool) {
 		urgent = true
 	}
 	grew := len(e.Loops()) >= 2*max(told.Loops, 1)
-	cause := lead.Cause != told.Cause && named(lead.Cause)
-	kind := lead.Kind != told.Kind
-	surer := math.Abs(lead.Confidence-told.Confidence) >= 0.1-1e-9
+	if lead.Loop == told.Loop && lead.Kind != detect.SharedOscillation && len(e.Group) > 0 {
+		grew = false // the other loop of a cascade swings along
+	}
+	cause := named(lead.Cause) && (lead.Cause != told.Cause || root(&lead) != "" && root(&lead) != told.Root)
+	// What a loop of a group says once the group is no more seen is the same trouble.
+	kind := lead.Kind != told.Kind && told.Kind != detect.SharedOscillation
+	surer := kind || lead.Kind == told.Kind && math.Abs(lead.Confidence-told.Confidence) >= 0.1-1e-9
 	news = doubled || urgent || grew || cause || kind || surer
 	return news, doubled && told.Strength > 0 || urgent, !doubled && !urgent && !grew && !cause
+}
+
+// root is the loop from which a group swings, as far as it is named.
+func root(f *detect.Finding) string {
+	if f.Kind == detect.SharedOscillation && named(f.Cause) {
+		return f.Loop
+	}
+	return ""
 }
 
 // strength is how bad it is in % of span, 0 where the finding does not say.
@@ -115,9 +131,8 @@ func strength(f *detect.Finding) float64 {
 // prediction: data time, ms UTC.
 func limitAt(f *detect.Finding) (at int64, what string, ok bool) {
 	for _, m := range f.Measures {
-		w, found := strings.CutPrefix(m.Name, "time_to_")
-		w, unit := strings.CutSuffix(w, "_s")
-		if !found || !unit || m.Value < 0 || m.Value > 30*86400 {
+		w, found := limitName(m.Name)
+		if !found || m.Value < 0 || m.Value > 30*86400 {
 			continue
 		}
 		t := f.At + int64(m.Value*1000)
@@ -126,6 +141,13 @@ func limitAt(f *detect.Finding) (at int64, what string, ok bool) {
 		}
 	}
 	return at, what, ok
+}
+
+// limitName cuts the name of the limit out of that of the measure which says when it is met.
+func limitName(measure string) (string, bool) {
+	w, found := strings.CutPrefix(measure, "time_to_")
+	w, unit := strings.CutSuffix(w, "_s")
+	return w, found && unit
 }
 
 // limitOf is the same without the words, and whether it is reached.

@@ -19,18 +19,28 @@ const (
 const besideKept = 0.75
 
 // beside gives for each loop that swings another, not of its cascade, at a period that may be
-// its own, whose crossings keep to its own or whose swing began with its own lately.
-func (s *shared) beside(end int64, live []SiteEvidence) map[string]string {
+// its own, whose crossings keep to its own or whose swing began with its own lately: the first
+// of them by name. order is that of the periods; only neighbours in it are compared.
+func (s *shared) beside(end int64, live []SiteEvidence, order []int) map[string]string {
 	out := map[string]string{}
-	for i := range live {
+	low := 0
+	for _, i := range order {
 		a := &live[i]
-		name := s.loops[a.ID].Name
-		for j := range live {
+		for order[low] != i && !mayBeOne(a.PeriodS, live[order[low]].PeriodS) {
+			low++
+		}
+		first := len(live)
+		for _, j := range order[low:] {
 			b := &live[j]
-			if other := s.loops[b.ID].Name; i != j && mayBeOne(a.PeriodS, b.PeriodS) && !s.cascaded(name, other) && mayShare(end, a, b) {
-				out[name] = other
+			if !mayBeOne(a.PeriodS, b.PeriodS) {
 				break
 			}
+			if j < first && i != j && !cascaded(s.loops[a.ID], s.loops[b.ID]) && mayShare(end, a, b) {
+				first = j
+			}
+		}
+		if first < len(live) {
+			out[s.loops[a.ID].Name] = s.loops[live[first].ID].Name
 		}
 	}
 	return out
@@ -42,7 +52,7 @@ func mayShare(end int64, a, b *SiteEvidence) bool {
 	if math.Abs(float64(a.Since-b.Since)) < besideBegan*period && float64(end-max(a.Since, b.Since)) < besideKnown*period {
 		return true
 	}
-	r, n := phaseKept(&a.Evidence, &b.Evidence)
+	r, n := phaseKept(&a.Evidence, &b.Evidence, besideKept)
 	return n >= 10 && r > besideKept
 }
 

@@ -37,7 +37,7 @@ func TestBeside(t *testing.T) {
 			live[1].Cross[i] = live[0].Cross[i] + x.jitter*p*float64(i*7%5-2)/2
 		}
 		live[0].N, live[1].N = evidenceCrossings, evidenceCrossings
-		if got := s.beside(end, live)["FIC-1"]; got != x.want {
+		if got := s.beside(end, live, byPeriod(live))["FIC-1"]; got != x.want {
 			t.Errorf("%s: %q", x.name, got)
 		}
 	}

@@ -37,17 +37,26 @@ func (s *shared) follows(name string) *sharedGroup {
 
 // cascaded: one of the two sets the set point of the other.
 func (s *shared) cascaded(a, b string) bool {
-	return slices.ContainsFunc(s.loops, func(l *configs.Loop) bool { return l.Name == a && l.Inner == b || l.Name == b && l.Inner == a })
+	return cascaded(s.loops[s.id(a)], s.loops[s.id(b)])
 }
 
-// Hear passes on what a loop says of itself, or what is left of it in its group.
+func cascaded(a, b *configs.Loop) bool { return a.Inner == b.Name || b.Inner == a.Name }
+
+// Hear passes on what a loop says of itself, or what is left of it in its group. Where a loop
+// gives up one word for another of which the same is left, the finding goes on; the new word
+// is heard before the end of the old.
 func (s *shared) Hear(f *Finding, emit func(*Finding)) {
 	x, was := s.m.Elements[f.Loop]
 	switch {
-	case f.Kind == SustainedOscillation && f.Event != Cleared:
+	case f.Kind == SustainedOscillation && f.Event == Cleared:
+		if was && x.Told == f.Kind && f.At == x.Said.At && f.Reason == Rejudged {
+			return // it goes on as what is left of its newer word
+		}
+	case f.Kind == SustainedOscillation:
 		if was && x.Told == f.Kind {
 			x.Told = ""
 			s.m.Elements[f.Loop] = x
+			f = goesOn(f)
 		}
 		if g := s.with(f.Loop); g != nil && f.Cause == ValveDeadBand {
 			f = asFollower(f, g)
@@ -79,11 +88,26 @@ func (s *shared) Hear(f *Finding, emit func(*Finding)) {
 		case x.Told == f.Kind:
 		case g == nil:
 			return // see rejudge
+		case s.m.Cycles[f.Loop]:
+			f = goesOn(asFollower(f, g))
 		default:
 			f = asFollower(f, g)
 		}
 	}
+	if f.Kind == SustainedOscillation {
+		s.m.Cycles[f.Loop] = true
+		if f.Event == Cleared {
+			delete(s.m.Cycles, f.Loop)
+		}
+	}
 	emit(f)
+}
+
+// goesOn: what was told before, said anew.
+func goesOn(f *Finding) *Finding {
+	c := *f
+	c.Event = Updated
+	return &c
 }
 
 func (x *ownElement) learn(g *sharedGroup) {
@@ -127,6 +151,9 @@ func (s *shared) rejudge(end int64, emit func(*Finding)) {
 		case x.Told == SustainedOscillation && (g == nil && s.root(name) || s.with(name) == nil && x.Root == "" && s.alone(&x)):
 		default:
 			continue
+		}
+		if delete(s.m.Cycles, name); now.Kind == SustainedOscillation {
+			s.m.Cycles[name] = true
 		}
 		emit(taken(&x.Said, x.Told, end, Rejudged))
 		emit(&now)

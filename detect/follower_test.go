@@ -27,6 +27,7 @@ type word struct {
 	kind  detect.Kind
 	event detect.Event
 	cause detect.Cause
+	anew  bool // judged anew, not over
 }
 
 func (c company) play(t *testing.T) (out []detect.Finding) {
@@ -50,7 +51,9 @@ func (c company) play(t *testing.T) (out []detect.Finding) {
 			f := detect.Finding{ID: collector.LoopID(x.loop), Subject: detect.Subject{Loop: c.names[x.loop]}, Loop: c.names[x.loop],
 				Kind: x.kind, Event: x.event, At: end - 60_000, Since: t0, Cause: x.cause, Text: "It cycles.", TextShort: c.names[x.loop] + ": cycles. Advisory only."}
 			if x.event == detect.Cleared {
-				f.Reason = detect.Over
+				if f.Reason = detect.Over; x.anew {
+					f.Reason = detect.Rejudged
+				}
 			} else {
 				f.Confidence, f.Measures = 0.8, detect.Measures{{Name: "period_s", Value: 60}, {Name: "amplitude_pct", Value: 2}}
 			}
@@ -86,8 +89,8 @@ func told(fs []detect.Finding) (out []string) {
 }
 
 var (
-	sticks = word{0, detect.ValveStickingKind, detect.Raised, detect.ValveSticking}
-	over   = word{0, detect.ValveStickingKind, detect.Cleared, detect.ValveSticking}
+	sticks = word{0, detect.ValveStickingKind, detect.Raised, detect.ValveSticking, false}
+	over   = word{0, detect.ValveStickingKind, detect.Cleared, detect.ValveSticking, false}
 )
 
 func by(loop int, w word) word { w.loop = loop; return w }
@@ -106,19 +109,24 @@ func TestFollowerDoesNotStick(t *testing.T) {
 				"FIC-3" + stick + "raised valve-sticking"}},
 		"said before the group is known, beside another swing": {company{names: names, root: 2, from: 4, until: 30, slots: 12, says: map[int][]word{2: {sticks}}},
 			[]string{"FIC-1" + cycle + "raised undetermined"}},
-		"play beside another swing is none": {company{names: names, root: 2, from: 4, until: 30, slots: 3, says: map[int][]word{2: {{0, detect.SustainedOscillation, detect.Raised, detect.ValveDeadBand}}}},
+		"play beside another swing is none": {company{names: names, root: 2, from: 4, until: 30, slots: 3, says: map[int][]word{2: {{0, detect.SustainedOscillation, detect.Raised, detect.ValveDeadBand, false}}}},
 			[]string{"FIC-1" + cycle + "raised undetermined"}},
 		"no root: a loop alone with it sticks when the group is over": {company{names: names, root: -1, until: 8, slots: 20, says: map[int][]word{5: {sticks}}},
 			[]string{"FIC-1" + cycle + "raised undetermined", "FIC-1" + cycle + "cleared undetermined", "FIC-1" + stick + "raised valve-sticking"}},
 		"no root: of two that say so neither is believed": {company{names: names, root: -1, until: 8, slots: 20, says: map[int][]word{5: {sticks, by(1, sticks)}}},
 			[]string{"FIC-1" + cycle + "raised undetermined", "FIC-2" + cycle + "raised undetermined"}},
-		"play of a follower is none": {company{names: names, root: 2, from: 1, until: 30, slots: 14, says: map[int][]word{12: {{0, detect.SustainedOscillation, detect.Raised, detect.ValveDeadBand}}}},
+		"play of a follower is none": {company{names: names, root: 2, from: 1, until: 30, slots: 14, says: map[int][]word{12: {{0, detect.SustainedOscillation, detect.Raised, detect.ValveDeadBand, false}}}},
 			[]string{"FIC-1" + cycle + "raised undetermined"}},
 		"the inner loop is the element of the outer": {company{names: []string{"FIC-1", "TIC-2"}, inner: "FIC-1", root: 1, from: 1, until: 30, slots: 14, says: map[int][]word{12: {sticks}}},
 			[]string{"FIC-1" + stick + "raised valve-sticking"}},
 		"its watch tells the cycle itself by now": {company{names: names, root: 2, from: 1, until: 30, slots: 20,
-			says: map[int][]word{12: {sticks}, 14: {{0, detect.SustainedOscillation, detect.Raised, detect.Undetermined}, over}}},
-			[]string{"FIC-1" + cycle + "raised undetermined", "FIC-1" + cycle + "raised undetermined"}},
+			says: map[int][]word{12: {sticks}, 14: {{0, detect.SustainedOscillation, detect.Raised, detect.Undetermined, false}, over}}},
+			[]string{"FIC-1" + cycle + "raised undetermined", "FIC-1" + cycle + "updated undetermined"}},
+		"it was told to cycle before, and is after": {company{names: names, root: 2, from: 1, until: 30, slots: 20,
+			says: map[int][]word{11: {{0, detect.SustainedOscillation, detect.Raised, detect.Undetermined, false}}, 12: {sticks, {0, detect.SustainedOscillation, detect.Cleared, detect.Undetermined, true}},
+				14: {{0, detect.SustainedOscillation, detect.Raised, detect.Undetermined, false}, {0, detect.ValveStickingKind, detect.Cleared, detect.ValveSticking, true}},
+				16: {{0, detect.SustainedOscillation, detect.Cleared, detect.Undetermined, false}}, 18: {sticks}}},
+			[]string{"FIC-1" + cycle + "raised undetermined", "FIC-1" + cycle + "updated undetermined", "FIC-1" + cycle + "updated undetermined", "FIC-1" + cycle + "cleared undetermined", "FIC-1" + cycle + "raised undetermined"}},
 	} {
 		if got := told(x.play(t)); !slices.Equal(got, x.want) {
 			t.Errorf("%s:\n got %q\nwant %q", name, got, x.want)

@@ -383,13 +383,14 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 	drive = drive && s.Clock.jitters(causes[o.Cause] == OutsideDisturbance)
 	retuned := integrating && !(near(rk, 1) && rt > 1/1.25) // a longer reset makes no loop swing
 	follows := s.Motion.PosN > 300 && s.Motion.Astray < 0.3 // the position shows that the element does
+	stepped := float64(s.Motion.SPMoves)*o.P > 2*w.in.dt    // SP moves in every cycle, as an outer loop sets it: its steps are spikes of e
 	switch {
 	case o.GrowCause != 0 && causes[o.GrowCause] != Undetermined:
 		o.setCause(causes[o.GrowCause], also, 0.85)
 	case lately && !stuckBefore:
 		o.setCause(causes[o.LastCause], also, 0.8)
 		o.LastAt, o.LastP = w.in.t, o.P
-	case sh.looks >= shapeLooks && sh.peaked > spikesLeast:
+	case sh.looks >= shapeLooks && sh.peaked > spikesLeast && !stepped:
 		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.85)
 	case o.waxes() && !changed && !slack && !(integrating && tri || play) && !(keeps && s.Clock.long()): // of what chance drives PV has no corners
 		o.setCause(Undetermined, open, 0.5)
@@ -406,11 +407,11 @@ func (w *Watch) judgeSustainedCause(b *cycleBank, phi float64, byPhi Cause, also
 		}
 	case keeps:
 		o.setCause(OutsideDisturbance, [2]Cause{byPhi}, 0.93)
-	case !strays && !o.Grow && !clipped && s.Clock.judged() && math.Abs(sh.peaked) > squareLeast && sh.siOP < 0.55:
+	case !stepped && !strays && !o.Grow && !clipped && s.Clock.judged() && math.Abs(sh.peaked) > squareLeast && sh.siOP < 0.55:
 		// A linear loop alone makes a sine off the ends of OP, and its valve makes OP a triangle and strays:
 		// what is left for spikes or steps is a drive that has them.
 		o.setCause(OutsideDisturbance, [2]Cause{ValveSticking}, 0.85)
-	case s.Clock.judged() && sh.peaked > 2*squareLeast && sh.siOP < 0.55:
+	case !stepped && s.Clock.judged() && sh.peaked > 2*squareLeast && sh.siOP < 0.55:
 		// Spikes far beyond the corners of a triangle, 1/9, are of no valve's making.
 		o.setCause(OutsideDisturbance, [2]Cause{ValveSticking}, 0.8)
 	case sh.looks == 0 && o.Cause != 0:

@@ -90,6 +90,39 @@ func TestUnsureCauseMustLast(t *testing.T) {
 	}
 }
 
+// drivenLoop cycles with a third harmonic of e and an OP that is this much of a sine.
+func drivenLoop(peaked, sine float64) (*Watch, *cycleBank) {
+	w := New(configs.NewLoop("TIC-315"), 0, Options{})
+	w.loop.Process = configs.SelfRegulating
+	k := &w.s.Track
+	k.On, k.Looks = true, 40
+	k.SinSum, k.TriSum, k.SinPV, k.TriPV, k.Peaked = sine, 1-sine, 0.3, 0.7, peaked*k.weight()
+	b := &w.s.Cycles[0]
+	for range ringLen {
+		b.push(halfCycle{8 * 64, 0})
+	}
+	return w, b
+}
+
+// The steps of a set point that an outer loop moves in every cycle are spikes of e: they say nothing
+// of a drive from outside. One that an operator moves now and then gives a cycle none.
+func TestSpikesOfAMovingSetPointProveNothing(t *testing.T) {
+	for moves, want := range map[float32]Cause{0: OutsideDisturbance, 0.005: OutsideDisturbance, 0.03: Undetermined, 0.9: Undetermined} {
+		for peaked, ratio := range map[float64]float32{0.5: 2.5, 0.25: 2.5, 0.15: 1.5} {
+			w, b := drivenLoop(peaked, 0.3)
+			w.in.dt, w.s.Motion.SPMoves = 1, moves
+			w.s.Clock = clock{Was: ratio}
+			w.s.Osc = oscState{Sus: true, P: 100, AmpHi: 1.2, AmpLo: 1, Evals: 100, Climb: unseen}
+			for range 4 {
+				w.judgeSustainedCause(b, 50, ResetTooShort, [2]Cause{GainTooHigh}, 0.3, w.shapes(), 1, 1, false, false)
+			}
+			if got := causes[w.s.Osc.Cause]; got != want {
+				t.Errorf("SP moves in %v of all slots, peaked %v: %s, want %s", moves, peaked, got, want)
+			}
+		}
+	}
+}
+
 // What only a drive from outside explains: spikes beyond the corners of a triangle, and an
 // even cycle without the corners of a valve that was there at once and jitters.
 func TestDrivenFromOutside(t *testing.T) {
@@ -116,17 +149,9 @@ func TestDrivenFromOutside(t *testing.T) {
 		{"gain raised before", 0, 1.5, 1, 3, 0.3, jittering(), ResetTooShort},
 		{"gain read higher in a swing quite even from the first", 0, 1.1, 1, 3, 0.3, jittering(), Undetermined},
 	} {
-		w := New(configs.NewLoop("TIC-315"), 0, Options{})
-		w.loop.Process = configs.SelfRegulating
+		w, b := drivenLoop(c.peaked, c.sine)
 		s := &w.s
 		s.Clock = c.beat
-		k := &s.Track
-		k.On, k.Looks = true, 40
-		k.SinSum, k.TriSum, k.SinPV, k.TriPV, k.Peaked = c.sine, 1-c.sine, 0.3, 0.7, c.peaked*k.weight()
-		b := &s.Cycles[0]
-		for range ringLen {
-			b.push(halfCycle{8 * 64, 0})
-		}
 		s.Osc = oscState{Sus: true, P: 100, AmpHi: c.size, AmpLo: 1, Evals: 100, Climb: c.climb}
 		for range 4 {
 			w.judgeSustainedCause(b, 50, ResetTooShort, [2]Cause{GainTooHigh}, c.sine, w.shapes(), c.rk, min(c.rk, 1)/max(c.rk, 1), c.rk > 1, false)

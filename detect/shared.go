@@ -1,6 +1,7 @@
 package detect
 
 import (
+	"cmp"
 	"encoding/json"
 	"fmt"
 	"math"
@@ -17,15 +18,18 @@ import (
 // IEEE Trans. Control Syst. Technol. 13, 434), never the earliest phase.
 type shared struct {
 	loops []*configs.Loop
+	ids   map[string]collector.LoopID
 	m     sharedMemory
 }
 
 type sharedMemory struct {
 	Pairs  map[string]int // slots running in which the pair kept its phase
 	Groups []sharedGroup
+	Past   []sharedGroup // with a root, that ended less than a day ago
 
 	Elements map[string]ownElement // by loop: what it says of its final element
 	Beside   map[string]string     // by loop: another that may swing with it
+	Cycles   map[string]bool       // loops that are told to cycle
 }
 
 type sharedGroup struct {
@@ -39,6 +43,8 @@ type sharedGroup struct {
 	Period float64
 	Widest string  // the loop that swings over the largest part of its range
 	Amp    float64 // of Widest, in units of its PV
+	Grew   int64   // onset of the swing of a root that grew by its own tuning, ms UTC; 0: none did
+	Ended  int64   // ms UTC
 	Next   string  // a root and cause that differ from what is said, and slots running with them
 	NextN  int
 }
@@ -54,6 +60,10 @@ const (
 	sharedApart = 86400 * 1000 / SiteSlotMs
 )
 
+// grewBefore, periods, is how much earlier a swing must have begun to be the one that carries the
+// other: the onset of a growing swing is read to about that.
+const grewBefore = 2.0
+
 // mayBeOne: two periods, s, are within a factor of two, as those of a swing that comes and goes
 // read.
 func mayBeOne(p, q float64) bool { return p < 2*q && q < 2*p }
@@ -62,7 +72,11 @@ func mayBeOne(p, q float64) bool { return p < 2*q && q < 2*p }
 const samePeriod = 0.12
 
 func newShared(loops []*configs.Loop) Site {
-	return &shared{loops: loops, m: sharedMemory{Pairs: map[string]int{}, Elements: map[string]ownElement{}}}
+	ids := map[string]collector.LoopID{}
+	for i, l := range loops {
+		ids[l.Name] = collector.LoopID(i)
+	}
+	return &shared{loops: loops, ids: ids, m: sharedMemory{Pairs: map[string]int{}, Elements: map[string]ownElement{}, Cycles: map[string]bool{}}}
 }
 
 func (s *shared) Save() ([]byte, error) { return json.Marshal(s.m) }
@@ -76,6 +90,9 @@ func (s *shared) Load(b []byte) error {
 	}
 	if m.Elements == nil {
 		m.Elements = map[string]ownElement{}
+	}
+	if m.Cycles == nil {
+		m.Cycles = map[string]bool{}
 	}
 	for name, x := range m.Elements { // numbers of loops are those of the list in force
 		x.Said.ID = s.id(name)
@@ -99,25 +116,12 @@ func together(a, b *Evidence, were bool) bool {
 	if math.Abs(math.Log(a.PeriodS/b.PeriodS)) > tol {
 		return false
 	}
-	r, n := phaseKept(a, b)
+	r, n := phaseKept(a, b, kept)
 	return n >= min(need, a.N) && n >= 10 && r > kept
 }
 
 func (s *shared) Judge(end int64, live []SiteEvidence, emit func(*Finding)) {
-	// Neighbours in period only: n log n over oscillating loops.
-	order := make([]int, len(live))
-	for i := range order {
-		order[i] = i
-	}
-	slices.SortStableFunc(order, func(a, b int) int {
-		switch {
-		case live[a].PeriodS < live[b].PeriodS:
-			return -1
-		case live[a].PeriodS > live[b].PeriodS:
-			return 1
-		}
-		return 0
-	})
+	order := byPeriod(live) // neighbours in period only
 	root := make([]int, len(live))
 	for i := range root {
 		root[i] = i
@@ -159,15 +163,25 @@ func (s *shared) Judge(end int64, live []SiteEvidence, emit func(*Finding)) {
 		}
 	}
 	s.tell(end, live, seen, emit)
-	s.m.Beside = s.beside(end, live)
+	s.m.Beside = s.beside(end, live, order)
 	s.rejudge(end, emit)
+}
+
+// byPeriod gives the numbers of the records in the order of their periods.
+func byPeriod(live []SiteEvidence) []int {
+	order := make([]int, len(live))
+	for i := range order {
+		order[i] = i
+	}
+	slices.SortStableFunc(order, func(a, b int) int { return cmp.Compare(live[a].PeriodS, live[b].PeriodS) })
+	return order
 }
 
 func (s *shared) group(live []SiteEvidence, g []int) sharedGroup {
 	var out sharedGroup
 	out.Since = math.MaxInt64
 	best, second, widest := -1, -1, 0.0
-	beat, sticks := false, false
+	beat, sticks, grows := false, false, false
 	for _, i := range g {
 		e := &live[i]
 		l := s.loops[e.ID]
@@ -179,15 +193,17 @@ func (s *shared) group(live []SiteEvidence, g []int) sharedGroup {
 		}
 		beat = beat || e.Beat
 		sticks = sticks || e.Cause == ValveSticking
+		grows = grows || e.Growing
 		switch {
 		case best < 0 || e.Shape > live[best].Shape || live[best].Shape != live[best].Shape:
 			best, second = i, best
 		case second < 0 || e.Shape > live[second].Shape || live[second].Shape != live[second].Shape:
 			second = i
 		}
-		if e.Growing && (e.Cause == ResetTooShort || e.Cause == GainTooHigh) && !s.driven(l.Name, live, g) {
-			// A loop that grew by its own tuning carries the others with it.
-			out.Cause, out.Key = e.Cause, l.Name
+		if e.Growing && tuning(e.Cause) && !s.driven(l.Name, live, g) && (out.Grew == 0 || e.Since < out.Grew) {
+			// A loop that grew by its own tuning carries the others with it: of several that
+			// look so the one that began, since what is driven begins later.
+			out.Cause, out.Key, out.Grew = e.Cause, l.Name, e.Since
 		}
 	}
 	x, y := &live[best], &live[second]
@@ -200,8 +216,9 @@ func (s *shared) group(live []SiteEvidence, g []int) sharedGroup {
 	case x.Shape > 0.68 && leads && x.Cause == ValveSticking:
 		out.Root = s.loops[x.ID].Name
 		out.Cause, out.Key = ValveSticking, out.Root
-	case beat && !sticks:
-		// Members share their beat, and a sticking element has none. A loop without corners
+	case beat && !sticks && !grows:
+		// Members share their beat, and a sticking element has none; nor does a load that
+		// keeps its size make a swing that grows. A loop without corners
 		// proves nothing: a slow process leaves none of its own element's.
 		out.Cause, out.Key = OutsideDisturbance, out.Loops[0]
 	default:
@@ -209,6 +226,9 @@ func (s *shared) group(live []SiteEvidence, g []int) sharedGroup {
 	}
 	return out
 }
+
+// tuning: of a loop that grows, too little damping.
+func tuning(c Cause) bool { return c == ResetTooShort || c == GainTooHigh }
 
 // driven: another loop of the group sets the set point of this one.
 func (s *shared) driven(name string, live []SiteEvidence, g []int) bool {
@@ -230,10 +250,10 @@ func overlap(a, b []string) int {
 	return n
 }
 
-// same: both hold two loops, or one that cycles with one period in both.
+// same: both hold two loops, or one at what may be one period; a loop has one cycle at a time.
 func (g *sharedGroup) same(o *sharedGroup) bool {
 	n := overlap(g.Loops, o.Loops)
-	return n >= 2 || n == 1 && math.Abs(math.Log(g.Period/o.Period)) < samePeriod
+	return n >= 2 || n == 1 && mayBeOne(g.Period, o.Period)
 }
 
 // goOn: two of its loops or more still cycle, at a period that may be that of the group.
@@ -272,11 +292,13 @@ func (s *shared) tell(end int64, live []SiteEvidence, seen []sharedGroup, emit f
 			}
 			if float64(old.Gone) >= max(sharedGone, goneCycles*old.Period*1000/SiteSlotMs) || old.Apart >= sharedApart {
 				emit(s.finding(end, &old, Cleared))
+				s.past(end, old)
 				continue
 			}
 			keep = append(keep, old)
 			continue
 		}
+		news := now.follow(&old)
 		more := overlap(old.Loops, now.Loops) < len(now.Loops)
 		for _, l := range old.Loops { // a loop that pauses stays listed
 			if !slices.Contains(now.Loops, l) {
@@ -284,7 +306,6 @@ func (s *shared) tell(end int64, live []SiteEvidence, seen []sharedGroup, emit f
 			}
 		}
 		slices.Sort(now.Loops)
-		news := now.follow(&old)
 		if now.Key != old.Key {
 			f := s.finding(end, &old, Cleared)
 			f.Reason = Rejudged // it is about another loop from now on
@@ -297,7 +318,8 @@ func (s *shared) tell(end int64, live []SiteEvidence, seen []sharedGroup, emit f
 	}
 	for i := range seen {
 		if !taken[i] {
-			seen[i].follow(&sharedGroup{Key: seen[i].Loops[0], Cause: Undetermined})
+			was := s.before(end, &seen[i], keep)
+			seen[i].follow(&was)
 			emit(s.finding(end, &seen[i], Raised))
 			keep = append(keep, seen[i])
 		}
@@ -305,20 +327,59 @@ func (s *shared) tell(end int64, live []SiteEvidence, seen []sharedGroup, emit f
 	s.m.Groups = keep
 }
 
+const pastMs = 86400 * 1000
+
+// past keeps a group that ended, with its root, for a day.
+func (s *shared) past(end int64, g sharedGroup) {
+	s.m.Past = slices.DeleteFunc(s.m.Past, func(p sharedGroup) bool { return p.Ended < end-pastMs || p.same(&g) })
+	if g.Root != "" {
+		g.Ended, g.Next, g.NextN = end, "", 0
+		s.m.Past = append(s.m.Past, g)
+	}
+}
+
+// before is what was said of a group that comes back with its root. Of others nothing was: it
+// is about the first of its loops that no other group is about.
+func (s *shared) before(end int64, g *sharedGroup, others []sharedGroup) sharedGroup {
+	about := func(l string) bool {
+		return slices.ContainsFunc(others, func(o sharedGroup) bool { return o.Key == l })
+	}
+	for _, p := range s.m.Past {
+		if p.Ended >= end-pastMs && p.same(g) && slices.Contains(g.Loops, p.Root) && !about(p.Root) {
+			return p
+		}
+	}
+	key := g.Loops[0]
+	for _, l := range slices.Backward(g.Loops) {
+		if !about(l) {
+			key = l
+		}
+	}
+	return sharedGroup{Key: key, Cause: Undetermined}
+}
+
 // join adds what was seen of one group in parts; the part with a root tells it.
 func (g *sharedGroup) join(o *sharedGroup) {
 	if g.Loops == nil || g.Root == "" && o.Root != "" {
-		g.Cause, g.Root, g.Key, g.Period, g.Widest, g.Amp = o.Cause, o.Root, o.Key, o.Period, o.Widest, o.Amp
+		g.Cause, g.Root, g.Key, g.Grew, g.Period, g.Widest, g.Amp = o.Cause, o.Root, o.Key, o.Grew, o.Period, o.Widest, o.Amp
 	}
 	g.Loops = append(g.Loops, o.Loops...)
 	g.Since = min(g.Since, o.Since)
+}
+
+// stays: the group swings on with the loop from which it grew. Growth once seen is not undone by
+// what the loops look like at their limits, but by another that began plainly before.
+func (g *sharedGroup) stays(old *sharedGroup) bool {
+	return old.Grew != 0 && old.Root != "" && slices.Contains(g.Loops, old.Root) && !(g.Grew != 0 && float64(old.Grew-g.Grew) > grewBefore*1000*g.Period)
 }
 
 // follow takes over what was said of the group before. A cause must be seen twice, and a
 // root for a cycle, before it is named, and for more before it takes the place of a cause named
 // already; no cause found is no news. It reports whether cause or root is new.
 func (g *sharedGroup) follow(old *sharedGroup) (news bool) {
-	if g.Cause != Undetermined && (g.Cause != old.Cause || g.Root != old.Root) {
+	if g.stays(old) {
+		g.Next, g.NextN = "", 0
+	} else if g.Cause != Undetermined && (g.Cause != old.Cause || g.Root != old.Root) {
 		cycles := 0.0
 		switch {
 		case old.Cause != Undetermined:
@@ -340,13 +401,12 @@ func (g *sharedGroup) follow(old *sharedGroup) (news bool) {
 	} else if g.Cause == Undetermined {
 		g.Next, g.NextN = old.Next, old.NextN
 	}
-	g.Key, g.Cause, g.Root = old.Key, old.Cause, old.Root
+	g.Key, g.Cause, g.Root, g.Grew = old.Key, old.Cause, old.Root, old.Grew
 	return false
 }
 
-func (s *shared) id(loop string) collector.LoopID {
-	return collector.LoopID(max(0, slices.IndexFunc(s.loops, func(l *configs.Loop) bool { return l.Name == loop })))
-}
+// id is the number of a loop; 0 of one that is gone.
+func (s *shared) id(loop string) collector.LoopID { return s.ids[loop] }
 
 func (s *shared) finding(end int64, g *sharedGroup, e Event) *Finding {
 	f := &Finding{Subject: Subject{Loop: g.Key}, Loop: g.Key, Loops: g.Loops, Kind: SharedOscillation, Event: e, At: end, Since: g.Since,

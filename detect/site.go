@@ -231,31 +231,42 @@ func (s *Sites) Load(b []byte) error {
 
 // phaseKept is the mean resultant length of b's crossings against a's, up and down
 // ones apart (a cycle need not be symmetric), for the better of the two signs, and
-// how many of a's crossings were compared.
-func phaseKept(a, b *Evidence) (r float64, n int) {
+// how many of a's crossings were compared. Where it is not over least, it is not worked
+// out to the end.
+func phaseKept(a, b *Evidence, least float64) (r float64, n int) {
 	for sign := range 2 {
-		if q, m := phaseOfSign(a, b, sign); q > r {
+		if q, m := phaseOfSign(a, b, sign, least); q > r {
 			r, n = q, m
 		}
 	}
 	return
 }
 
-func phaseOfSign(a, b *Evidence, sign int) (r float64, n int) {
+func phaseOfSign(a, b *Evidence, sign int, least float64) (r float64, n int) {
 	p := a.PeriodS
 	var re, im [2]float64
+	near := [2]int{sign, 1 - sign} // by kind of a's crossing: b's nearest to the one before
 	for i := range a.N {
 		best := math.Inf(1)
-		for j := (i + sign) % 2; j < b.N; j += 2 {
-			if d := a.Cross[i] - b.Cross[j]; math.Abs(d) < math.Abs(best) {
-				best = d
+		for j := near[i&1]; j < b.N; j += 2 {
+			d := math.Abs(a.Cross[i] - b.Cross[j])
+			if d > math.Abs(best) {
+				break // both go back in time: the farther ones are farther still
+			}
+			if d < math.Abs(best) {
+				best, near[i&1] = a.Cross[i]-b.Cross[j], j
 			}
 		}
 		if math.Abs(best) < p {
-			x := 4 * math.Pi * best / p // against half the period: stricter by two
-			re[i&1] += math.Cos(x)
-			im[i&1] += math.Sin(x)
+			sin, cos := math.Sincos(4 * math.Pi * best / p) // against half the period: stricter by two
+			re[i&1] += cos
+			im[i&1] += sin
 			n++
+		}
+		// All that are left in phase would not do: two lengths are at most the root of twice their squares.
+		left := float64(a.N - 1 - i)
+		if math.Sqrt(2*(re[0]*re[0]+im[0]*im[0]+re[1]*re[1]+im[1]*im[1]))+left < (least-1e-9)*(float64(n)+left) {
+			return 0, n
 		}
 	}
 	if n == 0 {

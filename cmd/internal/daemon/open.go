@@ -170,7 +170,7 @@ func (d *Daemon) openDesk() error {
 	d.senders = senders
 	d.made.add("senders", func(context.Context) error { return send.Close(d.senders) })
 	d.desk, err = alert.New(alert.Options{Store: alert.On(d.state), Settings: d.deskSettings(d.cfg, senders), Clock: d.clock.Now,
-		Seed: uint64(d.clock.Now().UnixNano()), Log: d.log, Settle: d.o.Settle, SettleStale: d.o.Settle})
+		Seed: uint64(d.clock.Now().UnixNano()), Log: d.log, Settle: d.o.Settle, SettleStale: d.o.Settle, SettleSwing: d.o.Settle})
 	if err != nil {
 		return err
 	}

@@ -2,11 +2,13 @@ package daemon
 
 import (
 	"bytes"
+	"cmp"
 	"compress/flate"
 	"encoding/gob"
 	"fmt"
 	"math"
 	"slices"
+	"strings"
 
 	"midwatch/collector"
 	"midwatch/configs"
@@ -64,7 +66,9 @@ func (g *gathering) hear(s *said, emit func(*said)) {
 // pass hands on what waits from before t, of one loop or of all, as it stands beside the
 // groups of now.
 func (g *gathering) pass(t int64, loop string, emit func(*said)) {
-	slices.SortStableFunc(g.said, func(a, b said) int { return less(&a.Finding, &b.Finding) })
+	slices.SortStableFunc(g.said, func(a, b said) int {
+		return cmp.Or(cmp.Compare(a.At, b.At), strings.Compare(a.Loop, b.Loop), anew(&a)-anew(&b), less(&a.Finding, &b.Finding))
+	})
 	g.said = slices.DeleteFunc(g.said, func(x said) bool {
 		if x.At >= t || loop != "" && x.Loop != loop {
 			return false
@@ -75,6 +79,14 @@ func (g *gathering) pass(t int64, loop string, emit func(*said)) {
 		})
 		return true
 	})
+}
+
+// anew orders the end of a word after the newer one that takes its place.
+func anew(s *said) int {
+	if s.Event == detect.Cleared && s.Reason == detect.Rejudged {
+		return 1
+	}
+	return 0
 }
 
 // rest hands on all that waits still.

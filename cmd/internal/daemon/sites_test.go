@@ -54,3 +54,18 @@ func TestWordsOfSwingsWaitForTheGroups(t *testing.T) {
 		t.Errorf("%d findings of a loop that is gone, want both", len(out))
 	}
 }
+
+// Of what a loop says at one time the word that ends for a newer one is passed on last.
+func TestWordThatEndsForANewerOneIsLast(t *testing.T) {
+	at := int64(1767225600000)
+	g := newGathering([]*configs.Loop{configs.NewLoop("FIC-1")})
+	var out []detect.Event
+	emit := func(s *said) { out = append(out, s.Event) }
+	f := detect.Finding{Subject: detect.Subject{Loop: "FIC-1"}, Loop: "FIC-1", Kind: detect.SustainedOscillation, Event: detect.Cleared, Reason: detect.Rejudged, At: at}
+	g.hear(&said{Finding: f}, emit)
+	f.Kind, f.Event, f.Reason = detect.ValveStickingKind, detect.Raised, ""
+	g.hear(&said{Finding: f}, emit)
+	if g.advance(at, emit); !slices.Equal(out, []detect.Event{detect.Raised, detect.Cleared}) {
+		t.Errorf("passed on as %q", out)
+	}
+}
