@@ -158,7 +158,7 @@ func measureLines(f *detect.Finding, unit string) []string {
 		switch m.Name {
 		case "amplitude_pct", "offset_pct":
 			value += " of range"
-		case "gain", "gain_before":
+		case "gain", "gain_before", "gain_at_least":
 			value += " %/%"
 		case "pi_lag_deg":
 			name = "lag of the controller"

@@ -281,8 +281,12 @@ func measureTuning(w *Watch, m []float64) {
 			m[i] = float64(v)
 		}
 	}
-	if c.What&1 != 0 {
-		set(0, c.GainNow)
+	if c.What&changedGain != 0 {
+		now := 0
+		if c.What&changedAtLeast != 0 {
+			now = 4
+		}
+		set(now, c.GainNow)
 		set(1, c.GainWas)
 	}
 	if c.What&2 != 0 {

@@ -41,7 +41,11 @@ func (w *Watch) Explain() []string {
 		fmt.Sprintf("PV %s, SP %s, OP %s, mode %q, law acting: %v", lastValue("%.4g", float64(s.Last.PV)), lastValue("%.4g", float64(s.Last.SP)), lastValue("%.1f %%", op), s.Motion.Mode.String(), s.Motion.Active),
 	}
 	if k, k0, k1, t, t0, t1 := w.tuningRange(); k == k {
-		out = append(out, fmt.Sprintf("tuning in service: gain %s, reset %s", readText(k, k0, k1, ""), readText(t, t0, t1, " s")))
+		name := "tuning in service"
+		if at := w.lastRead(k, t); at > 0 {
+			name = "tuning last read at " + FormatTime(w.ms(at)) + ", before OP met its limits"
+		}
+		out = append(out, fmt.Sprintf("%s: gain %s, reset %s", name, readText(k, k0, k1, ""), readText(t, t0, t1, " s")))
 	} else {
 		out = append(out, "tuning in service: "+w.unread())
 	}
@@ -114,6 +118,9 @@ func (w *Watch) Explain() []string {
 
 // unread says why the tuning in service is not read.
 func (w *Watch) unread() string {
+	if c := &w.s.Change; c.What&changedAtLeast != 0 {
+		return fmt.Sprintf("not read: OP goes from limit to limit; the gain is at least about %s", sig2(float64(c.GainNow)))
+	}
 	switch law := w.s.Tune.Law; {
 	case law == 0:
 		return "not excited enough to read"

@@ -40,13 +40,44 @@ func (w *Watch) tuning(since, period float64) (kc, ti float64, ok bool) {
 	return
 }
 
+// readBy is the bank and the fit of a gain, %/%, as it was read; nil: none holds it.
+func (w *Watch) readBy(kc float64) (*fitBank, *fit) {
+	for k := range w.s.Fits {
+		b := &w.s.Fits[k]
+		for _, f := range [...]*fit{b.newest(), &b.Last} {
+			if math.Abs(float64(f.Kc)) == math.Abs(kc) {
+				return b, f
+			}
+		}
+	}
+	return nil, nil
+}
+
 // lag is that of the law, s, as the tuning in service was read with it; 0 none.
 func (w *Watch) lag() float64 {
-	kc, _, ok := w.served()
-	for k := range w.s.Fits {
-		if b := &w.s.Fits[k]; ok && float64(b.newest().Kc) == kc {
+	if kc, _, ok := w.served(); ok {
+		if b, f := w.readBy(kc); b != nil && f == b.newest() {
 			return float64(b.Lag)
 		}
+	}
+	return 0
+}
+
+// lastRead is when, s, a gain, %/%, with its reset time, s, was read, where nothing since
+// could have confirmed it: OP was at a limit, and no block of the law came of many reset
+// times. 0: it stands.
+func (w *Watch) lastRead(kc, ti float64) float64 {
+	const many = 20.0
+	b, f := w.readBy(kc)
+	if b == nil {
+		return 0
+	}
+	if !(ti > 0) {
+		ti = 0
+	}
+	at := max(f.At, b.Last.At).s()
+	if w.s.Tune.LimitAt > at && w.in.t-at > max(600, many*min(ti, 4*3600)) {
+		return at
 	}
 	return 0
 }

@@ -16,7 +16,7 @@ var designKinds = []detect.Kind{detect.SustainedOffset, detect.GrowingOscillatio
 	detect.SharedOscillation, detect.StaleData, detect.TuningChanged}
 
 // Measures without a unit: ratios, counts and %/%.
-var unitless = []string{"growth_per_cycle", "gain", "gain_before", "regularity", "shape_index", "third_harmonic", "pv_jump_share",
+var unitless = []string{"growth_per_cycle", "gain", "gain_before", "gain_at_least", "regularity", "shape_index", "third_harmonic", "pv_jump_share",
 	"proportional_share", "pv", "loops"}
 
 var unitSuffix = regexp.MustCompile(`_(s|pct|pv|deg)$`)

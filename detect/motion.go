@@ -123,6 +123,7 @@ func (w *Watch) stepMotion(flags collector.Flags) {
 	}
 	in.active = active
 	if active && in.hasOP {
+		w.stepStrokes(lo, hi)
 		m.OPMin, m.OPMax = min(m.OPMin, op), max(m.OPMax, op)
 	}
 	if !w.loop.PVRangeGiven {

@@ -69,6 +69,13 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 		o.PhiDeg = phi
 	}
 	byPhi, also := Undetermined, [2]Cause{ResetTooShort, GainTooHigh}
+	if w.struck(o.Since) {
+		o.setCause(GainTooHigh, [2]Cause{ResetTooShort}, struckConfidence)
+		if o.Grow {
+			o.GrowCause, o.GrowP = o.Cause, float32(p)
+		}
+		return
+	}
 	switch {
 	case phi > phiSlack && w.loop.Process == configs.Integrating && !(o.Grow && o.Growth > plainGrowth) && (o.GrowCause == 0 || causes[o.GrowCause] == GainTooLow):
 		byPhi, also = GainTooLow, [2]Cause{ResetTooShort}

@@ -85,7 +85,7 @@ func init() {
 		kMode: {NotInNormalMode, "the law has not acted as planned for hours", "common practice, no source",
 			[]string{"duration_s"}, stepMode, claimMode, measureMode},
 		kTuning: {TuningChanged, "gain or reset in service changed: from tags, or from fits before and after",
-			"methods section 9", []string{"gain", "gain_before", "reset_s", "reset_before_s"}, stepTuneChange, claimTuning, measureTuning},
+			"methods section 9", []string{"gain", "gain_before", "reset_s", "reset_before_s", "gain_at_least"}, stepTuneChange, claimTuning, measureTuning},
 		kStale: {StaleData, "no usable value for longer than the loop's silence limit", "common practice, no source",
 			[]string{"duration_s"}, stepNone, claimStale, measureStale},
 	}

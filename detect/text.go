@@ -205,7 +205,11 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 	case kTuning:
 		changed := "tuning in service changed"
 		if d := float64(f.At-f.Since) / 1000; d > 0 {
-			changed += part(" %s ago", d, duration)
+			ago := " %s ago"
+			if s.Change.What&changedAtLeast != 0 { // the strokes date it at the latest
+				ago = " at least %s ago"
+			}
+			changed += part(ago, d, duration)
 		}
 		m := s.Change.move()
 		if x := w.words(&m); x != "" {

@@ -13,20 +13,28 @@ import (
 // tuneChange is a change of the tuning in service, noticed by comparing the
 // newest fits of one scale with the older ones.
 type tuneChange struct {
-	On       bool
 	At       float64 // s, begin of the first fit with the new tuning
 	Seen     float64 // s, decided
 	GainWas  float32
 	GainNow  float32
 	ResetWas float32 // s
 	ResetNow float32 // s
-	What     uint8   // 1 gain, 2 reset, 3 both
-	Maybe    uint8   // suspected: What now, of bank MaybeOf since MaybeAt; 0 none
-	MaybeOf  uint8
-	MaybeAt  moment
 	TagGain  float32 // last read from tags
 	TagReset float32
+	Strokes  strokes
+	MaybeAt  moment
+	Maybe    uint8 // suspected: What now, of bank MaybeOf since MaybeAt; 0 none
+	MaybeOf  uint8
+	What     uint8 // changedGain, changedReset and changedAtLeast
+	On       bool
 }
+
+// What changed, as bits.
+const (
+	changedGain    = 1
+	changedReset   = 2
+	changedAtLeast = 4 // the gain is at least GainNow: OP met its limits
+)
 
 // Limits: the newest fits agree within 1.35 and differ from the usual by 1.5
 // (methods section 9).
@@ -169,7 +177,7 @@ func (w *Watch) tellChange(keep int, at float64, what uint8, gain, reset [2]floa
 	s := &w.s
 	c := &s.Change
 	*c = tuneChange{On: true, At: at, Seen: w.in.t, GainWas: float32(gain[0]), GainNow: float32(gain[1]),
-		ResetWas: float32(reset[0]), ResetNow: float32(reset[1]), What: what, TagGain: c.TagGain, TagReset: c.TagReset}
+		ResetWas: float32(reset[0]), ResetNow: float32(reset[1]), What: what, TagGain: c.TagGain, TagReset: c.TagReset, Strokes: c.Strokes}
 	if w.madeSlower(w.in.t) {
 		s.Recov.Hold = 12 // the recoveries to come are compared with those before
 	}
@@ -307,6 +315,7 @@ type tuningMove struct {
 	GainNow  float32
 	ResetWas float32 // s
 	ResetNow float32 // s
+	AtLeast  bool    // GainNow is the least that it can be
 }
 
 // words say what moved, gains in %/% of the list; empty where nothing did.
@@ -314,7 +323,11 @@ func (w *Watch) words(m *tuningMove) string {
 	var p []string
 	known := func(v float32) bool { return v > 0 && v <= math.MaxFloat32 }
 	if known(m.GainNow) && known(m.GainWas) {
-		p = append(p, fmt.Sprintf("gain from about %s to %s", sig2(float64(m.GainWas)*w.perList()), sig2(float64(m.GainNow)*w.perList())))
+		least := ""
+		if m.AtLeast {
+			least = "at least about "
+		}
+		p = append(p, fmt.Sprintf("gain from about %s to %s%s", sig2(float64(m.GainWas)*w.perList()), least, sig2(float64(m.GainNow)*w.perList())))
 	}
 	if known(m.ResetNow) && known(m.ResetWas) {
 		p = append(p, fmt.Sprintf("reset time from about %s to %s", duration(float64(m.ResetWas)), duration(float64(m.ResetNow))))
@@ -325,8 +338,8 @@ func (w *Watch) words(m *tuningMove) string {
 // move is the last change that was told of.
 func (c *tuneChange) move() (m tuningMove) {
 	m.At = c.At
-	if c.What&1 != 0 {
-		m.GainWas, m.GainNow = c.GainWas, c.GainNow
+	if c.What&changedGain != 0 {
+		m.GainWas, m.GainNow, m.AtLeast = c.GainWas, c.GainNow, c.What&changedAtLeast != 0
 	}
 	if c.What&2 != 0 {
 		m.ResetWas, m.ResetNow = c.ResetWas, c.ResetNow

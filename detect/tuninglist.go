@@ -17,10 +17,15 @@ func within(v, ref, factor float64) bool { return math.Abs(math.Log(v/ref)) < ma
 
 // served is the tuning in service to be told. When within a sample the controller acts
 // on the integral is not known: the gain is uncertain by dt/(2 Ti) of itself, so nothing
-// is told of a reset shorter than leastReset samples.
+// is told of a reset shorter than leastReset samples; and where the law leaves much of OP
+// open, another law may be at work.
 func (w *Watch) served() (kc, ti float64, ok bool) {
 	kc, ti, ok = w.tuning(0, 0)
-	return kc, ti, ok && !(ti > 0 && ti < leastReset*w.s.Grid.DT)
+	if !ok || !(ti >= leastReset*w.s.Grid.DT) {
+		return kc, ti, false
+	}
+	_, f := w.readBy(kc)
+	return kc, ti, f != nil && f.R2 > changeR2
 }
 
 const leastReset = 2.0

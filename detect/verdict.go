@@ -272,7 +272,7 @@ func (w *Watch) finding(k int, e Event, t float64, reason string) Finding {
 	for i, v := range m {
 		if v == v && !math.IsInf(v, 0) {
 			name := row.Measures[i]
-			if name == "gain" || name == "gain_before" {
+			if name == "gain" || name == "gain_before" || name == "gain_at_least" {
 				v *= w.perList()
 			}
 			f.Measures = append(f.Measures, Measure{name, v})

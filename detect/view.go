@@ -36,6 +36,7 @@ type View struct {
 	PeriodS             float64 // s, of a live oscillation
 	GainPct             float64 // tuning in service, %/%
 	GainLow, GainHigh   float64
+	LastReadAt          int64   // ms UTC, when that was read, where OP at its limits has hidden the law since; 0: it stands
 	Unread              string  // why there is no gain in service; empty: there is
 	ResetS              float64 // s
 	ResetLow, ResetHigh float64
@@ -68,6 +69,8 @@ func (w *Watch) View() View {
 	v.GainPct, v.GainLow, v.GainHigh, v.ResetS, v.ResetLow, v.ResetHigh = w.tuningRange()
 	if v.GainPct != v.GainPct {
 		v.Unread = w.unread()
+	} else if at := w.lastRead(v.GainPct, v.ResetS); at > 0 {
+		v.LastReadAt = w.ms(at)
 	}
 	v.TagGain, v.TagReset = float64(s.Change.TagGain), float64(s.Change.TagReset)
 	v.TuningNote, v.Schedule = w.tuningNote(), w.schedulePoints()
@@ -110,45 +113,6 @@ func (w *Watch) whyInactive() string {
 		return "in " + s.Motion.Mode.String()
 	}
 	return "OP stands still while PV moves: looks like manual"
-}
-
-// tuningRange gives the best estimate in service with the spread of the newest
-// fits of its scale.
-func (w *Watch) tuningRange() (k, k0, k1, t, t0, t1 float64) {
-	n := math.NaN()
-	k, k0, k1, t, t0, t1 = n, n, n, n, n, n
-	kc, ti, ok := w.served()
-	if !ok {
-		// The noise alone shows the gain, never the reset.
-		kc, ok = w.gainAlone()
-		ti = n
-	}
-	if !ok {
-		return
-	}
-	k, t = math.Abs(kc), ti
-	if !(ti > 0 && ti < 1e6) {
-		t = n
-	}
-	for i := range w.s.Fits {
-		b := &w.s.Fits[i]
-		if float64(b.newest().Kc) != kc && float64(b.Last.Kc) != kc {
-			continue
-		}
-		// Five per cent for what the interval of the fit does not cover.
-		k0, k1, t0, t1 = k/1.05, k*1.05, t/1.05, t*1.05
-		for j := range min(int(b.Count), fitRing) {
-			f := &b.Ring[j]
-			g := math.Abs(float64(f.Kc))
-			k0, k1 = min(k0, g), max(k1, g)
-			if t == t && f.hasReset() {
-				t0, t1 = min(t0, float64(f.Ti)), max(t1, float64(f.Ti))
-			}
-		}
-	}
-	per := w.perList()
-	k, k0, k1 = k*per, k0*per, k1*per
-	return
 }
 
 // blindSpots says what keeps the watch from seeing, in words.

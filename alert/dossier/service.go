@@ -122,7 +122,10 @@ func (s *series) tuning(in *Input, w watched, cs []tuningChange) []Fact {
 	v := w.view
 	if n := len(w.readings); n > 0 {
 		r := w.readings[n-1]
-		out = append(out, fact("gain", "gain in service, newest reading", r.Gain, "read from how OP follows the error; the range includes 5 % for what such a reading does not cover"),
+		if v.LastReadAt > 0 {
+			out = append(out, say("last_read", "last read at", in.at(v.LastReadAt).Format("2 Jan 2006 15:04")+"; OP at its limits has hidden the law since, so that another tuning may be in service"))
+		}
+		out = append(out, fact("gain", "gain in service, newest reading", r.Gain, "read from how OP follows the error; the range includes what the interval of the data, a PV filter and the part of OP that the law leaves open may make of it"),
 			fact("reset_s", "reset in service, newest reading", r.Reset, ""),
 			say("faceplate", "as the faceplate would show it", "about "+faceplate(l, about(r.Gain.Value), about(r.Reset.Value))))
 		out = append(out, against(l, r)...)

@@ -117,7 +117,7 @@ func (p *Page) serveLoop(w http.ResponseWriter, r *http.Request) {
 	v.FromUTC, v.ToUTC = utc(span.From), utc(span.To)
 	v.Query = spanQuery(span)
 	view, known := p.o.House.View(s.Loop.Name)
-	p.fillState(&v, s, &view, known)
+	p.fillState(&v, s, &view, known, l)
 	record, err := p.o.House.Record(s.Loop.Name)
 	if err != nil {
 		p.once("record", err)
@@ -225,7 +225,7 @@ func spanLinks(s wanted, l *look, ts []trouble) []spanLink {
 	return out
 }
 
-func (p *Page) fillState(v *loopPage, s *LoopState, view *detect.View, known bool) {
+func (p *Page) fillState(v *loopPage, s *LoopState, view *detect.View, known bool, l *look) {
 	lp := s.Loop
 	v.State, v.Why = stateWords[s.State], s.Why
 	v.Blind = view.BlindSpots
@@ -268,9 +268,13 @@ func (p *Page) fillState(v *loopPage, s *LoopState, view *detect.View, known boo
 		add("range of PV", "not in the loop list; drawn over "+of)
 	}
 	tune := func(name, value string) { v.Tuning = append(v.Tuning, measureLine{name, value}) }
-	tune("gain in service", ranged(view.GainPct, view.GainLow, view.GainHigh, "%/%", view.Unread))
+	service := "in service"
+	if at := view.LastReadAt; at > 0 {
+		service = "last read at " + clock(at, l.now, l.zone)
+	}
+	tune("gain "+service, ranged(view.GainPct, view.GainLow, view.GainHigh, "%/%", view.Unread))
 	tune("gain in the list", quantity(lp.GainPct, "%/%"))
-	tune("reset in service", ranged(view.ResetS, view.ResetLow, view.ResetHigh, "s", view.Unread))
+	tune("reset "+service, ranged(view.ResetS, view.ResetLow, view.ResetHigh, "s", view.Unread))
 	list := quantity(lp.IdealReset, "s")
 	if lp.PropOnly {
 		list = "none, P-only by design"

@@ -51,29 +51,33 @@ func tuningRows(l *configs.Loop) []tuningRow {
 
 // tuningOver makes the view of readings, oldest first, and of what is known now.
 func tuningOver(rs []api.TuningReading, v *detect.View, lp *configs.Loop, l *look) tuningView {
-	now := l.now.UnixMilli()
+	now, word := l.now.UnixMilli(), "in service"
 	if v.TagGain > 0 || v.TagReset > 0 {
 		n := math.NaN()
 		rs = append(rs, api.TuningReading{Time: now, Gain: orNaN(v.TagGain), GainLow: n, GainHigh: n, ResetS: orNaN(v.TagReset), ResetLow: n, ResetHigh: n, Read: true})
 	} else if v.ResetS > 0 || v.GainPct > 0 {
-		rs = append(rs, api.TuningReading{Time: now, Gain: v.GainPct, GainLow: v.GainLow, GainHigh: v.GainHigh, ResetS: v.ResetS, ResetLow: v.ResetLow, ResetHigh: v.ResetHigh})
+		at := now
+		if v.LastReadAt > 0 {
+			at, word = v.LastReadAt, "last read"
+		}
+		rs = append(rs, api.TuningReading{Time: at, Gain: v.GainPct, GainLow: v.GainLow, GainHigh: v.GainHigh, ResetS: v.ResetS, ResetLow: v.ResetLow, ResetHigh: v.ResetHigh})
 	}
 	if len(rs) == 0 {
 		return tuningView{}
 	}
 	from := max(min(rs[0].Time, now-tuningLeast.Milliseconds()), now-tuningFor.Milliseconds())
-	word := number(math.Round(float64(now-from)/86400e3), 3) + " days"
+	span := number(math.Round(float64(now-from)/86400e3), 3) + " days"
 	if now-from < 3*86400e3 {
-		word = number(math.Round(float64(now-from)/3600e3), 3) + " hours"
+		span = number(math.Round(float64(now-from)/3600e3), 3) + " hours"
 	}
-	out := tuningView{Word: word, Count: len(rs)}
+	out := tuningView{Word: span, Count: len(rs)}
 	d := &drawing{}
-	d.f(`<svg viewBox="0 0 400 250" role="img" aria-label="gain and reset time in service over %s, with the ranges the data allow, and what the list says">`, word)
+	d.f(`<svg viewBox="0 0 400 250" role="img" aria-label="gain and reset time in service over %s, with the ranges the data allow, and what the list says">`, span)
 	x := scale{float64(from), float64(now), 52, 388}
 	var moved []tuningChange
 	for i, row := range tuningRows(lp) {
 		top := 20.0 + 116*float64(i)
-		d.tuningRow(rs, row, x, top, top+84)
+		d.tuningRow(rs, row, word, x, top, top+84)
 		moved = append(moved, row.changes(rs)...)
 	}
 	for i := range moved {
@@ -208,8 +212,8 @@ func (t *tuningRow) changes(rs []api.TuningReading) (out []tuningChange) {
 }
 
 // tuningRow draws one quantity: the value in service as steps, the range the
-// data allow as a band about it, the list's value dashed.
-func (d *drawing) tuningRow(rs []api.TuningReading, t tuningRow, x scale, top, bottom float64) {
+// data allow as a band about it, the list's value dashed; word is said of the newest value.
+func (d *drawing) tuningRow(rs []api.TuningReading, t tuningRow, word string, x scale, top, bottom float64) {
 	low, high := math.Inf(1), math.Inf(-1)
 	last := math.NaN()
 	take := func(vs ...float64) {
@@ -274,5 +278,5 @@ func (d *drawing) tuningRow(rs []api.TuningReading, t tuningRow, x scale, top, b
 	if ly < top+10 {
 		ly = at(last) + 17
 	}
-	d.text(x.p1-8, ly, "labn", "end", number(last, 3)+"\u00a0"+t.unit+" in service")
+	d.text(x.p1-8, ly, "labn", "end", number(last, 3)+"\u00a0"+t.unit+" "+word)
 }
