@@ -29,7 +29,7 @@ COUNTED := Alloc|Garbage
 # Fuzz targets are found, not listed.
 FUZZTIME ?= 30s
 
-.PHONY: check start install format vet lint build cross house test short-bench race demo soak fuzz quality bench clean
+.PHONY: check start install format vet lint build cross house test short-bench race demo soak fuzz quality bench dist dist-check clean
 
 check: start install
 	@$(TIMED) "format"       $(MAKE) -s format
@@ -118,5 +118,13 @@ quality:
 bench:
 	@$(GO) test -run '^$$' -bench . -benchmem -count 6 ./...
 
+# Release archives for Linux, of what is committed.
+dist:
+	@.ci/dist
+
+# The archives twice, byte by byte, and tried where there is nothing else.
+dist-check:
+	@.ci/dist-check
+
 clean:
-	@rm -rf .build testdata/peers/*/node_modules
+	@rm -rf .build dist testdata/peers/*/node_modules

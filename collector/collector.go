@@ -12,6 +12,7 @@ import (
 	"context"
 	"iter"
 	"math"
+	"time"
 )
 
 // LoopID is the index of a loop in the loop list in force. It is not stable
@@ -130,6 +131,19 @@ type SourceState struct {
 
 	ClockOffsetMs  int64 `json:"clock_offset_ms"`            // arrival minus the server's own time, running median
 	ServerCertDays int   `json:"server_cert_days,omitempty"` // days until the server's certificate expires; negative: it has
+}
+
+// DaysLeft is how long a certificate is valid yet, in days: at least 1 while it is,
+// at most -1 after. Zero stands for a certificate that is not there.
+func DaysLeft(until, now time.Time) int {
+	if until.IsZero() {
+		return 0
+	}
+	d := until.Sub(now).Hours() / 24
+	if d > 0 {
+		return int(math.Ceil(d))
+	}
+	return min(-1, int(math.Floor(d)))
 }
 
 // RefusedTag is a tag that the source cannot deliver, and why.

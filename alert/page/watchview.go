@@ -189,7 +189,12 @@ func sign(v float64) float64 {
 func absF(v float64) float64 { return max(v, -v) }
 
 func daysWord(n int) string {
-	if n < 0 {
+	switch {
+	case n == -1:
+		return "expired within the last day"
+	case n == 1:
+		return "good for less than a day"
+	case n < 0:
 		return fmt.Sprintf("expired %d days ago", -n)
 	}
 	return fmt.Sprintf("good for %d days", n)

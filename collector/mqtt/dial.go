@@ -127,15 +127,15 @@ func (t *target) password() (string, error) {
 	return strings.TrimSuffix(s, "\r"), nil
 }
 
-// certDays is the number of whole days until the client certificate expires; 0
-// when there is none or it cannot be read.
-func (t *target) certDays(now time.Time) int {
+// certUntil is when the client certificate expires; zero when there is none or it
+// cannot be read.
+func (t *target) certUntil() time.Time {
 	if t.cfg.CertFile == "" {
-		return 0
+		return time.Time{}
 	}
 	pair, err := tls.LoadX509KeyPair(t.cfg.CertFile, t.cfg.KeyFile)
 	if err != nil || pair.Leaf == nil {
-		return 0
+		return time.Time{}
 	}
-	return int(pair.Leaf.NotAfter.Sub(now) / (24 * time.Hour))
+	return pair.Leaf.NotAfter
 }

@@ -44,8 +44,8 @@ type link struct {
 	cutSize  int
 	cutAt    int64
 	cuts     uint64
-	certDays int
-	read     *wire // of the connection under way
+	cert     time.Time // when the client certificate expires
+	read     *wire     // of the connection under way
 }
 
 func (l *link) set(word, problem, hint string, now time.Time) {
@@ -112,7 +112,7 @@ func (s *source) session(ctx context.Context, id string) (watched bool, err erro
 	s.link.set("connecting", s.link.lastProblem(), s.link.lastHint(), s.now())
 	s.link.mu.Lock()
 	s.link.attempts++
-	s.link.certDays = s.target.certDays(s.now())
+	s.link.cert = s.target.certUntil()
 	s.link.mu.Unlock()
 
 	password, err := s.target.password()

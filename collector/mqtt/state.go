@@ -26,7 +26,7 @@ func (s *source) State() collector.SourceState {
 	dropped := s.ring.droppedCount()
 	l := &s.link
 	l.mu.Lock()
-	st := collector.SourceState{Name: s.name, Kind: "mqtt", Link: l.word, Since: l.since, Problem: l.problem, Hint: l.hint, CertDays: l.certDays}
+	st := collector.SourceState{Name: s.name, Kind: "mqtt", Link: l.word, Since: l.since, Problem: l.problem, Hint: l.hint, CertDays: collector.DaysLeft(l.cert, s.now())}
 	if st.Link == "" {
 		st.Link = "down"
 	}

@@ -48,7 +48,7 @@ func (a *authority) issue(name string, ip net.IP, days int) (*x509.Certificate, 
 		a.t.Fatal(err)
 	}
 	tpl := &x509.Certificate{SerialNumber: big.NewInt(time.Now().UnixNano()), Subject: pkix.Name{CommonName: name}, NotBefore: time.Now().Add(-time.Hour),
-		NotAfter: time.Now().Add(time.Duration(days)*24*time.Hour + time.Hour), ExtKeyUsage: []x509.ExtKeyUsage{x509.ExtKeyUsageServerAuth, x509.ExtKeyUsageClientAuth}}
+		NotAfter: time.Now().Add(time.Duration(days)*24*time.Hour - time.Hour), ExtKeyUsage: []x509.ExtKeyUsage{x509.ExtKeyUsageServerAuth, x509.ExtKeyUsageClientAuth}}
 	if ip != nil {
 		tpl.IPAddresses = []net.IP{ip}
 	}

@@ -66,19 +66,6 @@ func (m *median) value() int64 {
 
 type certDays struct{ own, server time.Time }
 
-// daysLeft is at least 1 while a certificate is valid, and negative after: zero
-// stands for "there is none".
-func daysLeft(until, now time.Time) int {
-	if until.IsZero() {
-		return 0
-	}
-	d := until.Sub(now).Hours() / 24
-	if d <= 0 {
-		return int(math.Floor(d)) - 1
-	}
-	return int(math.Ceil(d))
-}
-
 // gauge notes the lag of the newest value of a message and how far the server's
 // clock is off. newest is math.MinInt64 when the message held no PV.
 func (s *Source) gauge(arrived, newest int64, published time.Time) {
@@ -121,7 +108,7 @@ func (s *Source) State() collector.SourceState {
 	now := s.now()
 	st := collector.SourceState{Name: s.name, Kind: "opcua", Link: s.link, Since: s.since, LastData: s.last,
 		Counts: s.counts.all(), LagMs: s.lag.value(), ClockOffsetMs: s.skew.value(),
-		CertDays: daysLeft(s.certs.own, now), ServerCertDays: daysLeft(s.certs.server, now)}
+		CertDays: collector.DaysLeft(s.certs.own, now), ServerCertDays: collector.DaysLeft(s.certs.server, now)}
 	for _, sub := range s.subs {
 		for _, it := range sub.items {
 			if it.refusal == nil {

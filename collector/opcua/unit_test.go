@@ -383,8 +383,8 @@ func TestClockAndZoneFaults(t *testing.T) {
 	for _, c := range []struct {
 		until time.Time
 		want  int
-	}{{time.Time{}, 0}, {now.Add(time.Hour), 1}, {now.AddDate(0, 0, 60), 60}, {now.Add(-time.Hour), -2}} {
-		if got := daysLeft(c.until, now); got != c.want {
+	}{{time.Time{}, 0}, {now.Add(time.Hour), 1}, {now.AddDate(0, 0, 60), 60}, {now, -1}, {now.Add(-time.Hour), -1}, {now.AddDate(0, 0, -3), -3}} {
+		if got := collector.DaysLeft(c.until, now); got != c.want {
 			t.Errorf("until %v: %d days, want %d", c.until, got, c.want)
 		}
 	}

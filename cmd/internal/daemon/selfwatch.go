@@ -182,7 +182,7 @@ func (s *selfWatch) sourceTroubles(st *collector.SourceState) (out []trouble) {
 	}
 	if late := st.LagMs - max(0, st.ClockOffsetMs); late > lateMs {
 		out = append(out, trouble{selfKey: selfKey{of, detect.SourceLate}, after: tellAfter, measures: detect.Measures{{Name: "late_s", Value: float64(late) / 1000}},
-			text:  fmt.Sprintf("Values of source %s arrive about %s late. What is found on its loops is as late.", st.Name, (time.Duration(late) * time.Millisecond).Round(time.Second)),
+			text:  fmt.Sprintf("Values of source %s arrive about %s late. What is found on its loops is as late.", st.Name, detect.Duration(float64(late)/1000)),
 			short: fmt.Sprintf("values of source %s arrive late", st.Name)})
 	}
 	for _, c := range []struct {
@@ -193,8 +193,11 @@ func (s *selfWatch) sourceTroubles(st *collector.SourceState) (out []trouble) {
 			continue
 		}
 		left := fmt.Sprintf("expires in %d days", c.days)
-		if c.days < 0 {
+		switch {
+		case c.days < 0:
 			left = "has expired"
+		case c.days == 1:
+			left = "expires within a day"
 		}
 		out = append(out, trouble{selfKey: selfKey{of, detect.CertificateExpiring}, measures: detect.Measures{{Name: "days", Value: float64(c.days)}},
 			text:  fmt.Sprintf("The certificate: %s %s. Renew it before the server refuses it.", c.what, left),
@@ -283,8 +286,12 @@ func (s *selfWatch) clockTroubles(now time.Time) (out []trouble) {
 	if !s.seen.IsZero() {
 		// Between two looks about selfEvery passes; a busy machine makes it more.
 		if d := now.Round(0).Sub(s.seen); d < 0 || d > selfEvery+wallStepMost {
+			way := "ahead"
+			if d < selfEvery {
+				way = "back"
+			}
 			out = append(out, trouble{selfKey: selfKey{detect.Subject{Part: "clock"}, detect.ClockStepKind}, measures: detect.Measures{{Name: "step_s", Value: (d - selfEvery).Seconds()}},
-				text:  fmt.Sprintf("The clock of this machine stepped by about %s, or the machine slept.", (d - selfEvery).Round(time.Second)),
+				text:  fmt.Sprintf("The clock of this machine stepped %s by about %s, or the machine slept.", way, detect.Duration((d - selfEvery).Abs().Seconds())),
 				short: "the clock of this machine stepped"})
 		}
 	}

@@ -135,3 +135,13 @@ func TestSelfWatchAfterRestart(t *testing.T) {
 	r.pass(3 * time.Minute)
 	r.until("it is taken back", func() bool { return !r.told("source-down") })
 }
+
+// A person reads the texts: times in words, and a certificate in its last day.
+func TestSelfWatchTexts(t *testing.T) {
+	late := (&selfWatch{}).sourceTroubles(&collector.SourceState{Name: "works", Link: linkWatching, LagMs: 237_000, CertDays: 1})
+	for i, want := range []string{"arrive about 4 min late", "expires within a day"} {
+		if i >= len(late) || !strings.Contains(late[i].text, want) {
+			t.Errorf("trouble %d of %v does not say %q", i, late, want)
+		}
+	}
+}
