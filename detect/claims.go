@@ -289,7 +289,7 @@ func measureTuning(w *Watch, m []float64) {
 		set(now, c.GainNow)
 		set(1, c.GainWas)
 	}
-	if c.What&2 != 0 {
+	if c.What&changedReset != 0 {
 		set(2, c.ResetNow)
 		set(3, c.ResetWas)
 	}

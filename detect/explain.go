@@ -119,7 +119,7 @@ func (w *Watch) Explain() []string {
 // unread says why the tuning in service is not read.
 func (w *Watch) unread() string {
 	if c := &w.s.Change; c.What&changedAtLeast != 0 {
-		return fmt.Sprintf("not read: OP goes from limit to limit; the gain is at least about %s", sig2(float64(c.GainNow)))
+		return fmt.Sprintf("not read: OP goes from limit to limit; the gain is at least about %s", sig2(float64(c.GainNow)*w.perList()))
 	}
 	switch law := w.s.Tune.Law; {
 	case law == 0:
@@ -206,7 +206,7 @@ func (w *Watch) explainChange() (out []string) {
 			}
 			return fmt.Sprintf(" %s %.2f times what it was (asked %.2f times up or down),", name, now/was, math.Exp(math.Log(changeRatio)*w.strict))
 		}
-		out = append(out, fmt.Sprintf("a change of the tuning was told:%s%s seen for %s (asked %s or longer)", by(1, "gain", c.GainWas, c.GainNow), by(2, "reset time", c.ResetWas, c.ResetNow),
+		out = append(out, fmt.Sprintf("a change of the tuning was told:%s%s seen for %s (asked %s or longer)", by(changedGain, "gain", c.GainWas, c.GainNow), by(changedReset, "reset time", c.ResetWas, c.ResetNow),
 			duration(c.Seen-c.At), duration(w.changeLongS(float64(c.ResetNow)))))
 	}
 	return out

@@ -88,7 +88,7 @@ func (w *Watch) loosened(period float64) bool {
 		return false
 	}
 	was := w.listedGain()
-	if c := &w.s.Change; w.slowed() && c.What&1 != 0 {
+	if c := &w.s.Change; w.slowed() && c.What&changedGain != 0 {
 		was = float64(c.GainWas)
 	}
 	return was > 3*math.Abs(kc)

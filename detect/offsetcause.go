@@ -36,11 +36,11 @@ func (w *Watch) offsetTravel(push, lo, hi float64) (t travel, ok bool) {
 	t = travel{d: d, span: d - float64(a.T), kc: kc, push: push, lo: lo, hi: hi, eRange: s.Motion.eRange()}
 	t.rt, t.learned = w.resetS()
 	if c := &s.Change; w.slowed() { // what is usual since is the trouble itself
-		if c.What&1 != 0 {
+		if c.What&changedGain != 0 {
 			kc = math.Copysign(float64(c.GainWas), kc)
 			t.kc = kc
 		}
-		if c.What&2 != 0 {
+		if c.What&changedReset != 0 {
 			t.rt = float64(c.ResetWas)
 		}
 	}

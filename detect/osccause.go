@@ -87,10 +87,10 @@ func (w *Watch) judgeOscCause(b *cycleBank) {
 	k0, t0, okb := float64(o.WasK), float64(o.WasT), o.WasK > 0
 	if c := &s.Change; c.Seen > 0 && c.At > o.Since-max(50*p, 86400) {
 		// The change was noticed and is the usual tuning by now: before it, it was not.
-		if c.What&1 != 0 {
+		if c.What&changedGain != 0 {
 			k0 = float64(c.GainWas)
 		}
-		if c.What&2 != 0 {
+		if c.What&changedReset != 0 {
 			t0 = float64(c.ResetWas)
 		}
 	}

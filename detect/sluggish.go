@@ -150,10 +150,10 @@ func (w *Watch) slowCause(by uint8, proof int) {
 	kb, tb, okb := w.usualTuning(since - 2*float64(first.Dur))
 	if c := &w.s.Change; w.madeSlower(first.T0.s()) {
 		okb = true
-		if c.What&1 != 0 {
+		if c.What&changedGain != 0 {
 			kb = float64(c.GainWas)
 		}
-		if c.What&2 != 0 {
+		if c.What&changedReset != 0 {
 			tb = float64(c.ResetWas)
 		}
 	}
@@ -234,5 +234,5 @@ func (w *Watch) slowed() bool {
 	if c.Seen == 0 || w.in.t-c.Seen > 30*86400 {
 		return false
 	}
-	return c.What&1 != 0 && c.GainNow < c.GainWas/1.5 || c.What&2 != 0 && c.ResetNow > c.ResetWas*1.5
+	return c.What&changedGain != 0 && c.GainNow < c.GainWas/1.5 || c.What&changedReset != 0 && c.ResetNow > c.ResetWas*1.5
 }

@@ -301,8 +301,8 @@ func (w *Watch) readTuning(f *collector.Frame, t float64) {
 		}
 		*last = now
 	}
-	note(&c.TagGain, f.Gain, 1, &c.GainWas, &c.GainNow, float32(w.perList()))
-	note(&c.TagReset, f.Reset, 2, &c.ResetWas, &c.ResetNow, 1)
+	note(&c.TagGain, f.Gain, changedGain, &c.GainWas, &c.GainNow, float32(w.perList()))
+	note(&c.TagReset, f.Reset, changedReset, &c.ResetWas, &c.ResetNow, 1)
 }
 
 // tuningMove is a change of the tuning before the onset of a trouble, as it was first
@@ -341,7 +341,7 @@ func (c *tuneChange) move() (m tuningMove) {
 	if c.What&changedGain != 0 {
 		m.GainWas, m.GainNow, m.AtLeast = c.GainWas, c.GainNow, c.What&changedAtLeast != 0
 	}
-	if c.What&2 != 0 {
+	if c.What&changedReset != 0 {
 		m.ResetWas, m.ResetNow = c.ResetWas, c.ResetNow
 	}
 	return m

@@ -20,7 +20,7 @@ import (
 
 // Engine is the version of the detection; memories of another engine are not
 // loaded whole.
-const Engine = 5
+const Engine = 6
 
 // Options of a watch.
 type Options struct {
