@@ -153,19 +153,18 @@ func (c *Change) UnmarshalJSON(b []byte) error {
 // have nothing to do with it. A measurement that fails does not know of SP or the law, and
 // values fail to arrive for nothing that the controller does.
 func unrelated(k int, what ChangeWhat) bool {
+	if k == kStale {
+		return true
+	}
 	switch what {
 	case ChangedTuning:
-		return k == kTuning || k == kFrozen || k == kRangeEnd || k == kStale
+		return k == kTuning || k == kFrozen || k == kRangeEnd
 	case ChangedSetPoint:
-		return k == kFrozen || k == kRangeEnd || k == kStale
-	case ChangedMode:
+		return k == kFrozen || k == kRangeEnd
+	case ChangedMode, ChangedByHand:
 		return k == kMode
-	case ChangedByHand:
-		return k == kMode || k == kStale
 	case ChangedAtLimit:
-		return k == kSaturation || k == kStale
-	case ChangedDataGap:
-		return k == kStale
+		return k == kSaturation
 	}
 	return false
 }

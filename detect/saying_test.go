@@ -310,7 +310,7 @@ func TestWhatIsUnrelatedIsNotSaid(t *testing.T) {
 		want []ChangeWhat
 	}{
 		{kGrowing, []ChangeWhat{ChangedSetPoint, ChangedMode}},
-		{kStale, []ChangeWhat{ChangedMode}},
+		{kStale, nil},
 		{kRangeEnd, []ChangeWhat{ChangedMode}},
 		{kFrozen, []ChangeWhat{ChangedMode}},
 	} {
@@ -336,6 +336,22 @@ func TestTuningThatIsNotSeenIsNotTold(t *testing.T) {
 		f := w.finding(kGrowing, Raised, w.in.t, "")
 		if _, shown := f.Measures.Get("gain"); shown != told {
 			t.Errorf("a lag of %g degrees: gain shown %v", phi, shown)
+		}
+	}
+}
+
+// A gap that was announced is told at once: that it has lasted for half a second is no news.
+func TestStaleSaysNoSeconds(t *testing.T) {
+	for _, x := range []struct {
+		age  float64 // s, of the last good value
+		want string
+	}{{0.5, "No usable value; the loop cannot be watched."}, {300, "No usable value for 5 min; the loop cannot be watched."}} {
+		w := New(configs.NewLoop("LIC-310"), 0, Options{})
+		w.s.Grid, w.s.Through = grid{Begun: true}, int64(1000*(1000+x.age))
+		w.s.Misc.Stale, w.s.Misc.GoodAt = true, 1000
+		f := Finding{Kind: StaleData, Measures: Measures{{"duration_s", x.age}}}
+		if text, _ := w.text(kStale, &f); !strings.HasPrefix(text, x.want) || strings.Contains(text, "before") {
+			t.Errorf("%g s: %s", x.age, text)
 		}
 	}
 }

@@ -223,7 +223,11 @@ func (w *Watch) text(k int, f *Finding) (long, short string) {
 		}
 		return what + w.beforeSentence(k, f), w.short(f, changed)
 	case kStale:
-		what = "No usable value" + part(" for %s", get("duration_s"), duration) + "; the loop cannot be watched"
+		long := get("duration_s")
+		if long < 60 { // of an end that was announced: how long ago that was says nothing yet
+			long = math.NaN()
+		}
+		what = "No usable value" + part(" for %s", long, duration) + "; the loop cannot be watched"
 		return what + "." + w.beforeSentence(k, f) + " First check whether the source and the network deliver, then the transmitter and the signal path.", w.short(f, lower(what))
 	}
 	check, ok := firstCheck[f.Cause]
