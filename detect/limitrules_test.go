@@ -240,6 +240,31 @@ func TestTheWayToTheLimit(t *testing.T) {
 	}
 }
 
+// A process that integrates shows what OP does in the pace of PV, at once. One that goes on at the
+// limit as it did on the way there has no element that acts, or a load to match; where the pace
+// rises or falls by much OP acts.
+func TestPaceOfALevelAtTheLimit(t *testing.T) {
+	for _, x := range []struct {
+		name    string
+		way, at float64 // % an hour, pace of e on the way of OP to its limit and there
+		want    Cause
+	}{
+		{"nothing acts", 8, 8, Undetermined},
+		{"a load goes on beyond what OP can take back", 3, 12, OutputLimit},
+		{"OP took back the most of a load", 12, 3, OutputLimit},
+	} {
+		const way = 900.0 // s, where the loop takes 600 to recover
+		w := offsetWatch(func(l *configs.Loop) { l.Process, l.RecoveryS = configs.Integrating, 1200 })
+		fs := feed(w, way+6*3600, func(t float64) (float64, float64) {
+			e := x.way*min(t, way)/3600 + x.at*max(t-way, 0)/3600
+			return e, 50 + 50*min(t/way, 1)
+		})
+		if c := said(fs, OutputSaturation); c != x.want {
+			t.Errorf("%s: said %q, want %q", x.name, c, x.want)
+		}
+	}
+}
+
 // e that is clearly larger once OP stands at its limit shows a load that goes on, also where
 // that is read after it has come to rest.
 func TestGrowthAtTheLimitIsReadLate(t *testing.T) {

@@ -331,7 +331,12 @@ func (w *Watch) limitTest(listed bool, since float64) {
 	switch {
 	case at < soon:
 	case e > limitGrows*was && (at < late || e > 1.1*mean || mean > limitGrows*was):
-		p.Doubt, o.LimE = false, 0
+		// Where nothing acts a process that integrates goes on as it did: that shows nothing.
+		before := (was - w.offsetLeast()/2) / (o.LimT - o.T0) // a run begins at half of what counts
+		if w.loop.Process != configs.Integrating || !within((e-was)/at, before, samePace) {
+			p.Doubt = false
+		}
+		o.LimE = 0
 	case at > max(late, w.timeScale()):
 		sigma := max(w.s.Noise.sigma(), 0.02)
 		o.NotFollow = listed && !o.AtEnd && math.Abs(mean-was) < max(0.12*was, sigma/2) && math.Abs(e-was) < max(0.2*was, sigma)
@@ -343,6 +348,10 @@ func (w *Watch) limitTest(listed bool, since float64) {
 // by e Kc/Ti a second, each Ti in which OP cannot adds Kc K of e: 0.2 and more in SIMC
 // tunings (Skogestad 2003), in the three that are waited for 0.6.
 const limitGrows = 1.4
+
+// samePace is the factor within which the pace of e at the limit is that on the way there
+// (common practice, no source).
+const samePace = 2.0
 
 // arrive notes how OP came to its limit.
 func (w *Watch) arrive() {
@@ -359,7 +368,8 @@ func (w *Watch) arrive() {
 func (w *Watch) vainWay() bool {
 	o := &w.s.Off
 	way := (w.in.trim - o.OP0) * w.sign() * o.Sign
-	return way > leastTravel && w.in.t-o.T0 > w.timeScale() && o.Es*o.Sign > w.offsetLeast() && !o.Answered && !w.tookBack(way)
+	soon := w.loop.Process == configs.Integrating // what OP does shows in the pace of PV at once
+	return way > leastTravel && (soon || w.in.t-o.T0 > w.timeScale()) && o.Es*o.Sign > w.offsetLeast() && !o.Answered && !w.tookBack(way)
 }
 
 // tookBack: e is clearly less than the largest of the run. A step of load beyond what OP can
