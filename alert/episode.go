@@ -164,25 +164,20 @@ func (e *Episode) withLimit(f detect.Finding) detect.Finding {
 	if f.Kind != detect.SharedOscillation {
 		return f
 	}
-	soonest, first := int64(0), (*detect.Finding)(nil)
+	soonest, loop, measure := int64(0), "", ""
 	for i := range e.Members {
 		if m := &e.Members[i]; m.Open && m.Finding.Kind == detect.GrowingOscillation {
-			if at, _, ok := limitAt(&m.Finding); ok && (first == nil || at < soonest) {
-				soonest, first = at, &m.Finding
+			if at, name, ok := firstLimit(&m.Finding); ok && (loop == "" || at < soonest) {
+				soonest, loop, measure = at, m.Finding.Loop, name
 			}
 		}
 	}
-	if first == nil {
+	if loop == "" {
 		return f
 	}
-	for _, m := range first.Measures {
-		if w, ok := limitName(m.Name); ok && first.At+int64(m.Value*1000) == soonest {
-			left := math.Max(0, float64(soonest-f.At)/1000)
-			f.Measures = append(slices.Clone(f.Measures), detect.Measure{Name: m.Name, Value: left})
-			f.Text += " Of these " + first.Loop + " meets its " + limitWords(w) + " first."
-			break
-		}
-	}
+	left := math.Max(0, float64(soonest-f.At)/1000)
+	f.Measures = append(slices.Clone(f.Measures), detect.Measure{Name: measure, Value: left})
+	f.Text += " Of these " + loop + " meets its " + limitWords(measure) + " first."
 	return f
 }
 

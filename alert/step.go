@@ -130,24 +130,22 @@ func strength(f *detect.Finding) float64 {
 // limitAt is when a limit or PV alarm is reached by the finding's own
 // prediction: data time, ms UTC.
 func limitAt(f *detect.Finding) (at int64, what string, ok bool) {
+	at, measure, ok := firstLimit(f)
+	return at, limitWords(measure), ok
+}
+
+// firstLimit is the same with the name of the measure that says when.
+func firstLimit(f *detect.Finding) (at int64, measure string, ok bool) {
 	for _, m := range f.Measures {
-		w, found := limitName(m.Name)
-		if !found || m.Value < 0 || m.Value > 30*86400 {
+		if !strings.HasPrefix(m.Name, "time_to_") || !strings.HasSuffix(m.Name, "_s") || m.Value < 0 || m.Value > 30*86400 {
 			continue
 		}
 		t := f.At + int64(m.Value*1000)
 		if !ok || t < at {
-			at, what, ok = t, limitWords(w), true
+			at, measure, ok = t, m.Name, true
 		}
 	}
-	return at, what, ok
-}
-
-// limitName cuts the name of the limit out of that of the measure which says when it is met.
-func limitName(measure string) (string, bool) {
-	w, found := strings.CutPrefix(measure, "time_to_")
-	w, unit := strings.CutSuffix(w, "_s")
-	return w, found && unit
+	return at, measure, ok
 }
 
 // limitOf is the same without the words, and whether it is reached.
@@ -156,8 +154,9 @@ func limitOf(f *detect.Finding) (at int64, reached, ok bool) {
 	return at, ok && at <= f.At, ok
 }
 
-func limitWords(w string) string {
-	w = strings.ReplaceAll(w, "_", " ")
+// limitWords is the limit of which a measure says when it is met.
+func limitWords(measure string) string {
+	w := strings.ReplaceAll(strings.TrimSuffix(strings.TrimPrefix(measure, "time_to_"), "_s"), "_", " ")
 	for _, r := range [][2]string{{"op limit", "OP limit"}, {"pv alarm", "PV alarm"}, {"pv limit", "PV limit"}} {
 		w = strings.ReplaceAll(w, r[0], r[1])
 	}

@@ -80,9 +80,9 @@ func (s *scale) init(l *configs.Loop, f *collector.Frame) {
 	outside := func(v float64) bool {
 		return v < s.PVLow-outsideScale*s.PVSpan || v > s.PVLow+(1+outsideScale)*s.PVSpan
 	}
-	low := func() bool { return sp != 0 && math.Max(math.Abs(pv), math.Abs(sp)) < lowInScale*s.PVSpan }
-	if !(s.PVSpan > 0) || !l.PVRangeGiven && (outside(pv) || outside(sp) || low()) {
-		ref := max(math.Abs(pv), math.Abs(sp))
+	ref := max(math.Abs(pv), math.Abs(sp))
+	low := sp != 0 && ref < lowInScale*s.PVSpan
+	if !(s.PVSpan > 0) || !l.PVRangeGiven && (outside(pv) || outside(sp) || low) {
 		if math.IsNaN(ref) || ref == 0 {
 			ref = 50
 		}
@@ -95,18 +95,20 @@ func (s *scale) init(l *configs.Loop, f *collector.Frame) {
 // two frames that follow each other: one may be broken.
 func (w *Watch) misjudged(f *collector.Frame) bool {
 	const far = 2 // spans
-	if w.loop.PVRangeGiven || !w.s.Grid.Begun || !within(float64(f.SP/w.s.Last.SP), 1, 1.1) {
+	if w.loop.PVRangeGiven || !w.s.Grid.Begun {
 		return false
 	}
 	sc, sp := &w.s.Scale, math.Abs(float64(f.SP))
-	if sc.Guessed {
-		return sp > far*sc.PVSpan
+	fits := sp <= far*sc.PVSpan
+	if !sc.Guessed {
+		fits = max(sp, float64(w.s.Motion.UsedHi)/100*sc.PVSpan) >= lowInScale*sc.PVSpan
 	}
-	return max(sp, float64(w.s.Motion.UsedHi)/100*sc.PVSpan) < lowInScale*sc.PVSpan
+	return !fits && within(float64(f.SP/w.s.Last.SP), 1, 1.1)
 }
 
-// perList is what a gain, %/% of this scale, is in %/% of the range that the loop list gives or
-// stands for, over it: texts and numbers are of that, as are gains entered and read from tags.
+// perList is the factor from a gain in %/% of this scale to one in %/% of the range that the loop
+// list gives or, where it has none, stands for. Gains that are entered, read from tags or told
+// are of that range.
 func (w *Watch) perList() float64 {
 	if l := w.loop.PVSpan(); l > 0 && w.s.Scale.PVSpan > 0 {
 		return l / w.s.Scale.PVSpan

@@ -88,7 +88,7 @@ func (w *Watch) listSentence(k int, f *Finding) string {
 		t += fmt.Sprintf(" OP travels %s %% in half a cycle, which takes the final element %s: it is too slow for this swing.", sig2(hi-lo), duration((hi-lo)/100*w.loop.StrokeS))
 	}
 	// The lag of the filter at the cycle; 15 degrees are a third of a usual margin.
-	if lag := math.Atan(2*math.Pi*w.loop.PVFilterS/o.P) * 180 / math.Pi; lag > 15 && (f.Cause == GainTooHigh || f.Cause == ResetTooShort) {
+	if lag := math.Atan(2*math.Pi*w.loop.PVFilterS/o.P) * 180 / math.Pi; lag > 15 && tooLively(f.Cause) {
 		t += fmt.Sprintf(" The PV filter of %s is a large part of the lag at this cycle: look at it before the tuning.", duration(w.loop.PVFilterS))
 	}
 	return t

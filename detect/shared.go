@@ -200,7 +200,7 @@ func (s *shared) group(live []SiteEvidence, g []int) sharedGroup {
 		case second < 0 || e.Shape > live[second].Shape || live[second].Shape != live[second].Shape:
 			second = i
 		}
-		if e.Growing && tuning(e.Cause) && !s.driven(l.Name, live, g) && (out.Grew == 0 || e.Since < out.Grew) {
+		if e.Growing && tooLively(e.Cause) && !s.driven(l.Name, live, g) && (out.Grew == 0 || e.Since < out.Grew) {
 			// A loop that grew by its own tuning carries the others with it: of several that
 			// look so the one that began, since what is driven begins later.
 			out.Cause, out.Key, out.Grew = e.Cause, l.Name, e.Since
@@ -227,8 +227,8 @@ func (s *shared) group(live []SiteEvidence, g []int) sharedGroup {
 	return out
 }
 
-// tuning: of a loop that grows, too little damping.
-func tuning(c Cause) bool { return c == ResetTooShort || c == GainTooHigh }
+// tooLively: a tuning that leaves a loop too little damping.
+func tooLively(c Cause) bool { return c == ResetTooShort || c == GainTooHigh }
 
 // driven: another loop of the group sets the set point of this one.
 func (s *shared) driven(name string, live []SiteEvidence, g []int) bool {

@@ -331,7 +331,7 @@ func (w *Watch) direction(k int, f *Finding) string {
 	switch {
 	case w.loop.Process == configs.Runaway:
 		return ""
-	case integrating && slow && (f.Cause == GainTooHigh || f.Cause == ResetTooShort):
+	case integrating && slow && tooLively(f.Cause):
 		return "Direction: a longer reset time or more gain; on an integrating process a slow swing is never cured by less gain."
 	case f.Cause == ResetTooShort:
 		return "Direction: a longer reset time."
