@@ -42,7 +42,7 @@ func (w *Watch) Explain() []string {
 	}
 	if k, k0, k1, t, t0, t1 := w.tuningRange(); k == k {
 		name := "tuning in service"
-		if at := w.lastRead(k, t); at > 0 {
+		if at := w.lastRead(); at > 0 {
 			name = "tuning last read at " + FormatTime(w.ms(at)) + ", before OP met its limits"
 		}
 		out = append(out, fmt.Sprintf("%s: gain %s, reset %s", name, readText(k, k0, k1, ""), readText(t, t0, t1, " s")))

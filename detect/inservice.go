@@ -63,16 +63,20 @@ func (w *Watch) lag() float64 {
 	return 0
 }
 
-// lastRead is when, s, a gain, %/%, with its reset time, s, was read, where nothing since
-// could have confirmed it: OP was at a limit, and no block of the law came of many reset
-// times. 0: it stands.
-func (w *Watch) lastRead(kc, ti float64) float64 {
+// lastRead is when, s, the tuning in service was read, where nothing since could have
+// confirmed it: OP was at a limit, and no block of the law came of many reset times. 0: it
+// stands, or is not read.
+func (w *Watch) lastRead() float64 {
 	const many = 20.0
+	kc, ti, ok := w.inService()
+	if !ok {
+		return 0
+	}
 	b, f := w.readBy(kc)
 	if b == nil {
 		return 0
 	}
-	if !(ti > 0) {
+	if !(ti > 0 && ti < 1e6) {
 		ti = 0
 	}
 	at := max(f.At, b.Last.At).s()

@@ -90,4 +90,12 @@ func TestTuningBehindALimitIsLastRead(t *testing.T) {
 	if x := strings.Join(w.Explain(), "\n"); !strings.Contains(x, "tuning last read at") {
 		t.Error(x)
 	}
+	at, l := w.View().LastReadAt, loopOf("FIC-112", g) // no less where nobody gave a range
+	l.PVRangeGiven = false
+	for i := range g.out {
+		g.out[i].PV, g.out[i].SP = g.out[i].PV*0.05, g.out[i].SP*0.05
+	}
+	if w, _ := watchOver(l, g.out); w.View().LastReadAt != at {
+		t.Errorf("without a range last read at %d, with one at %d", w.View().LastReadAt, at)
+	}
 }

@@ -8,40 +8,44 @@ import "math"
 // rangeLeast is what remains of the best of readings (common practice, no source).
 const rangeLeast = 0.03
 
-// tuningRange gives the best estimate in service with its range.
+// inService is the best estimate of gain, %/%, and reset time, s. The noise alone shows the gain,
+// never the reset: NaN.
+func (w *Watch) inService() (kc, ti float64, ok bool) {
+	if kc, ti, ok = w.served(); !ok {
+		kc, ok = w.gainAlone()
+		ti = math.NaN()
+	}
+	return
+}
+
+// tuningRange gives the best estimate in service with its range, the gain in %/% of the loop
+// list's range.
 func (w *Watch) tuningRange() (k, k0, k1, t, t0, t1 float64) {
 	n := math.NaN()
 	k, k0, k1, t, t0, t1 = n, n, n, n, n, n
-	kc, ti, ok := w.served()
-	if !ok {
-		// The noise alone shows the gain, never the reset.
-		kc, ok = w.gainAlone()
-		ti = n
-	}
+	kc, ti, ok := w.inService()
 	if !ok {
 		return
 	}
-	k, t = math.Abs(kc), ti
+	per := w.perList()
+	k, t = math.Abs(kc)*per, ti
 	if !(ti > 0 && ti < 1e6) {
 		t = n
 	}
 	b, f := w.readBy(kc)
 	if b == nil {
-		k *= w.perList()
 		return
 	}
 	low, high := w.readingErrors(b, f, ti)
 	k0, k1, t0, t1 = k/low, k*high, t/low, t*high
 	for j := range min(int(b.Count), fitRing) {
 		f := &b.Ring[j]
-		g := math.Abs(float64(f.Kc))
+		g := math.Abs(float64(f.Kc)) * per
 		k0, k1 = min(k0, g), max(k1, g)
 		if t == t && f.hasReset() {
 			t0, t1 = min(t0, float64(f.Ti)), max(t1, float64(f.Ti))
 		}
 	}
-	per := w.perList()
-	k, k0, k1 = k*per, k0*per, k1*per
 	return
 }
 

@@ -69,7 +69,7 @@ func (w *Watch) View() View {
 	v.GainPct, v.GainLow, v.GainHigh, v.ResetS, v.ResetLow, v.ResetHigh = w.tuningRange()
 	if v.GainPct != v.GainPct {
 		v.Unread = w.unread()
-	} else if at := w.lastRead(v.GainPct, v.ResetS); at > 0 {
+	} else if at := w.lastRead(); at > 0 {
 		v.LastReadAt = w.ms(at)
 	}
 	v.TagGain, v.TagReset = float64(s.Change.TagGain), float64(s.Change.TagReset)
