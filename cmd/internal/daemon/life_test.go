@@ -181,7 +181,7 @@ func TestOverloadIsTold(t *testing.T) {
 	defer r.stop()
 	m.run(r, 0, 60)
 	at := func() int64 { return r.clock.Now().UnixMilli() }
-	r.d.self.turn()
+	r.pass(selfEvery)
 	// Hold the shards so that the rings run over.
 	for _, s := range r.d.shards {
 		s.mu.Lock()
@@ -205,7 +205,7 @@ func TestOverloadIsTold(t *testing.T) {
 	if r.d.intake.Counts().Dropped == 0 {
 		t.Fatal("nothing was dropped")
 	}
-	r.d.self.turn()
+	r.pass(selfEvery)
 	r.until("it is told", func() bool { return r.told("samples-lost") })
 }
 
